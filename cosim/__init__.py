@@ -1,0 +1,1 @@
+"""From circuit netlists to qubit dynamics."""

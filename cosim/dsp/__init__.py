@@ -1,0 +1,1 @@
+"""The signal wing: arrays over time; it knows neither netlists nor qubits."""

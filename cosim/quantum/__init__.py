@@ -1,0 +1,1 @@
+"""The quantum wing: matrices and rad/s; it knows nothing of volts."""
