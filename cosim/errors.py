@@ -7,7 +7,7 @@
     │   ├── ProbeError                         a probe expression that cannot be read
     │   ├── DeckError                          the deck, with file and line
     │   │   ├── MissingFileError (FileNotFoundError)   an include or data file is not there
-    │   │   ├── ForbiddenDeckError (PermissionError)   the deck would run, read or write what it must not
+    │   │   ├── ForbiddenDeckError (PermissionError)   would run, read or write what it must not
     │   │   ├── UnknownNameError (LookupError)         a node, parameter, instance, section or model
     │   │   └── UnsupportedDeckError                   encrypted, Verilog-A and the like
     │   ├── WaveformError                      too short, too coarse, not finite, no carrier

@@ -54,7 +54,8 @@ class Waveform:
         if not (steps > 0).all():
             bad = int(np.flatnonzero(steps <= 0)[0])
             raise WaveformError(
-                f"the time must rise, but sample {bad + 1} is at {t[bad + 1]:.6g} s after {t[bad]:.6g} s"
+                f"the time must rise, but sample {bad + 1} is at {t[bad + 1]:.6g} s "
+                f"after {t[bad]:.6g} s"
             )
 
 
