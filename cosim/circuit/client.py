@@ -1,0 +1,348 @@
+"""The caller's side of the simulator's host: start it, ask it for runs, end it."""
+
+import atexit
+import contextlib
+import ctypes.util
+import importlib.util
+import os
+import select
+import shutil
+import subprocess
+import sys
+import tempfile
+import threading
+import time
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from cosim.circuit import host
+from cosim.errors import MissingDependencyError, SimulationError, SimulatorCrashError
+from cosim.waveform import FloatArray
+
+INSTALL_HINT = "type: apt-get install ngspice libngspice0"
+START_LIMIT = 60.0  # s; loading takes 0.2 s, on a network file system under load much more
+ANSWER_MARGIN = 30.0  # s beyond the run's own limit, which the host itself enforces
+CLOSE_LIMIT = 5.0  # s for the host to remove its folder
+
+# Nothing else of the caller's environment reaches the simulator: no SPICE_* search path, no HOME
+# with a start file, no PYTHONPATH that would shadow a module.
+_PASSED_VARIABLES = ("PATH", "TMPDIR", "LD_LIBRARY_PATH")
+_FOLDERS = (
+    "/usr/local/lib",
+    "/usr/local/lib64",
+    "/usr/lib/x86_64-linux-gnu",
+    "/usr/lib/aarch64-linux-gnu",
+    "/usr/lib64",
+    "/usr/lib",
+    "/lib64",
+)
+_LIBRARY_NAMES = ("libngspice.so.0", "libngspice.so")
+
+
+@dataclass(slots=True)
+class Answer:
+    """All that the host sent about one run.
+
+    Parameters
+    ----------
+    log : list of str
+        Lines of ngspice, each with "stdout " or "stderr " in front.
+    vectors : dict of ndarray
+        Plot key -> values; "time" in s, the others in V or A.
+    done : dict or None
+        Faults of load and run, names of new plots and vectors, wall time in s; None when the
+        child did not come that far.
+    end : dict
+        Exit code (negative: signal), whether the time limit ran out, peak memory in bytes.
+    part : float
+        The simulated part of the run as last reported, from 0 to 1.
+    overhead_time : float
+        Time in s of the exchange beyond ngspice's own.
+    """
+
+    log: list[str] = field(default_factory=list)
+    vectors: dict[str, FloatArray] = field(default_factory=dict)
+    done: dict[str, Any] | None = None
+    end: dict[str, Any] = field(default_factory=dict)
+    part: float = 0.0
+    overhead_time: float = 0.0
+
+
+def find_simulator() -> str:
+    """Find ngspice's shared library.
+
+    Returns
+    -------
+    str
+        The value of the environment variable NGSPICE_LIBRARY_PATH if it is set, else the path of
+        the library found beside this Python and in the system's folders.
+
+    Raises
+    ------
+    MissingDependencyError
+        If there is none; the message says what to type.
+    """
+    wanted = os.environ.get("NGSPICE_LIBRARY_PATH", "")
+    if wanted:
+        if os.sep in wanted and not Path(wanted).is_file():
+            raise MissingDependencyError(
+                f"NGSPICE_LIBRARY_PATH names {wanted!r}, which is not a file",
+                hint=f"unset it to search the system's folders, or {INSTALL_HINT}",
+            )
+        return wanted
+    listed = os.environ.get("LD_LIBRARY_PATH", "").split(os.pathsep)
+    for folder in (*filter(None, listed), os.path.join(sys.prefix, "lib"), *_FOLDERS):
+        for name in _LIBRARY_NAMES:
+            path = os.path.join(folder, name)
+            if os.path.isfile(path):
+                return path
+    found = ctypes.util.find_library("ngspice")
+    if found is None:
+        raise MissingDependencyError(
+            "ngspice's shared library (libngspice.so.0) was not found on this system",
+            hint=f"{INSTALL_HINT}; or set NGSPICE_LIBRARY_PATH to the library's full path",
+        )
+    return found
+
+
+def _temporary_folder() -> str:
+    """Make a fresh folder with a path in lower case, for ngspice lowers the names of data files."""
+    for parent in (tempfile.gettempdir(), "/tmp", "/var/tmp"):
+        if parent == parent.lower() and os.access(parent, os.W_OK):
+            return tempfile.mkdtemp(prefix="qcosim-", dir=parent)
+    raise SimulationError(
+        f"no temporary folder with a path in lower case: {tempfile.gettempdir()!r} has capitals, "
+        "/tmp and /var/tmp cannot be written",
+        hint="set TMPDIR to a folder in lower case",
+    )
+
+
+class Client:
+    """One host process and the pipes to it; for one process, one run at a time."""
+
+    def __init__(self) -> None:
+        self._lock = threading.Lock()
+        self._owner = os.getpid()
+        self._process: subprocess.Popen[bytes] | None = None
+        self._scratch = ""
+        self.ready: dict[str, Any] = {}
+
+    def start(self) -> None:
+        """Start the host unless it runs."""
+        with self._lock:
+            self._start()
+
+    def run(
+        self,
+        lines: Sequence[str],
+        commands: Sequence[str],
+        keys: Sequence[str],
+        data: Mapping[str, bytes],
+        time_limit: float,
+        memory_limit: int,
+        progress: Callable[[float], None] | None,
+    ) -> Answer:
+        """Let the host run a deck; parameters as in `PreparedDeck` and `TransientRequest`.
+
+        Raises
+        ------
+        MissingDependencyError
+            If there is no ngspice or no PySpice.
+        SimulatorCrashError
+            If the host itself died; the next run gets a new one.
+        """
+        request = {
+            "kind": "run",
+            "lines": list(lines),
+            "commands": list(commands),
+            "keys": list(keys),
+            "data": [[name, len(content)] for name, content in data.items()],
+            "time_limit": time_limit,
+            "memory_limit": memory_limit,
+        }
+        frame = host.pack(request, b"".join(data.values()))
+        with self._lock:
+            began = time.perf_counter()
+            try:
+                self._ask(frame)
+                answer = self._collect(time.monotonic() + time_limit + ANSWER_MARGIN, progress)
+            except BaseException:
+                # An interrupt or a fault in the middle leaves a run going on and half a frame in
+                # the pipe: the host goes, and the next run starts another.
+                self._stop()
+                raise
+            elapsed = time.perf_counter() - began
+        answer.overhead_time = elapsed - (answer.done["wall_time"] if answer.done else 0.0)
+        return answer
+
+    def close(self) -> None:
+        """End the host and remove its scratch folder."""
+        self._stop()
+
+    def abandon(self) -> None:
+        """Let go of a host that belongs to the process this one was forked from."""
+        process, self._process = self._process, None
+        if process is not None and process.stdin is not None and process.stdout is not None:
+            process.stdin.close()
+            process.stdout.close()
+            process.returncode = 0  # It is not our child, so that there is nothing to wait for.
+
+    def _start(self) -> None:
+        if self._process is not None and self._process.poll() is None:
+            return
+        self._stop()
+        library = find_simulator()
+        spec = importlib.util.find_spec("PySpice")
+        if spec is None or spec.origin is None:
+            raise MissingDependencyError(
+                "PySpice is not installed", hint="type: pip install PySpice"
+            )
+        self._scratch = _temporary_folder()
+        Path(self._scratch, ".spiceinit").touch()
+        environment = {name: os.environ[name] for name in _PASSED_VARIABLES if name in os.environ}
+        environment |= {name: text for name, text in os.environ.items() if name[:9] == "OPENBLAS_"}
+        environment |= {
+            "HOME": self._scratch,
+            "LC_ALL": "C",
+            "OMP_NUM_THREADS": "1",
+            "OPENBLAS_NUM_THREADS": "1",
+            "NGSPICE_LIBRARY_PATH": library,
+        }
+        site = str(Path(spec.origin).parents[1])
+        with open(os.path.join(self._scratch, "host.err"), "wb") as errors:
+            self._process = subprocess.Popen(
+                [sys.executable, "-P", os.path.abspath(host.__file__), str(os.getpid()), site],
+                stdin=subprocess.PIPE,
+                stdout=subprocess.PIPE,
+                stderr=errors,
+                bufsize=0,
+                pipesize=host.PIPE_SIZE,
+                cwd=self._scratch,
+                env=environment,
+                start_new_session=True,
+            )
+        atexit.register(self.close)
+        try:
+            header, _ = self._receive(time.monotonic() + START_LIMIT)
+            if header["kind"] == "failed":
+                raise MissingDependencyError(
+                    f"ngspice's shared library {library!r} does not load: {header['reason']}",
+                    hint=INSTALL_HINT,
+                )
+        except BaseException:
+            self._stop()
+            raise
+        self.ready = header
+
+    def _ask(self, frame: bytes) -> None:
+        self._start()
+        try:
+            self._write(frame)
+        except BrokenPipeError:
+            # Somebody ended the host while it was idle. Nothing has run, so another one may try.
+            self._stop()
+            self._start()
+            self._write(frame)
+
+    def _write(self, frame: bytes) -> None:
+        assert self._process is not None
+        assert self._process.stdin is not None
+        host.send(self._process.stdin.fileno(), frame)
+
+    def _collect(self, deadline: float, progress: Callable[[float], None] | None) -> Answer:
+        answer = Answer()
+        while not answer.end:
+            header, payload = self._receive(deadline)
+            match header.pop("kind"):
+                case "log":
+                    answer.log.append(header["text"])
+                case "progress":
+                    answer.part = header["part"]
+                    if progress is not None:
+                        progress(answer.part)
+                case "vector":
+                    answer.vectors[header["name"]] = payload
+                case "done":
+                    answer.done = header
+                case "end":
+                    answer.end = header
+        return answer
+
+    def _receive(self, deadline: float) -> tuple[dict[str, Any], FloatArray]:
+        sizes = host.FRAME.unpack(self._read(bytearray(host.FRAME.size), deadline))
+        header, _ = host.unpack(host.FRAME.pack(*sizes) + self._read(bytearray(sizes[0]), deadline))
+        payload = np.empty(sizes[1] // 8)
+        self._read(payload.view(np.uint8), deadline)
+        return header, payload
+
+    def _read(self, buffer: Any, deadline: float) -> Any:
+        """Fill a buffer from the host."""
+        assert self._process is not None
+        assert self._process.stdout is not None
+        pipe = self._process.stdout
+        watched = select.poll()
+        watched.register(pipe, select.POLLIN)
+        view = memoryview(buffer)
+        while view:
+            if not watched.poll(max(0.0, 1000 * (deadline - time.monotonic()))):
+                raise SimulatorCrashError("the simulator's host process does not answer")
+            size = os.readv(pipe.fileno(), [view])
+            if size == 0:
+                code = self._process.wait()
+                raise SimulatorCrashError(
+                    f"the simulator's host process ended unexpectedly with code {code}",
+                    hint="the next run starts a new one",
+                    log=self._errors(),
+                )
+            view = view[size:]
+        return buffer
+
+    def _errors(self) -> list[str]:
+        with contextlib.suppress(OSError):
+            text = Path(self._scratch, "host.err").read_text(errors="replace")
+            return text.splitlines()[-20:]
+        return []
+
+    def _stop(self) -> None:
+        if self._owner != os.getpid():
+            self.abandon()
+            return
+        process, self._process = self._process, None
+        scratch, self._scratch = self._scratch, ""
+        if process is None:
+            shutil.rmtree(scratch, ignore_errors=True)
+            return
+        assert process.stdin is not None
+        assert process.stdout is not None
+        try:
+            # End of file tells the host to kill its child and to remove its folder.
+            process.stdin.close()
+            with contextlib.suppress(subprocess.TimeoutExpired):
+                process.wait(CLOSE_LIMIT)
+        finally:
+            process.stdout.close()
+            process.kill()
+            process.wait()
+            shutil.rmtree(scratch, ignore_errors=True)
+            atexit.unregister(self.close)
+
+
+# By process id, because a forked child must not talk to the host of its parent.
+_clients: dict[int, Client] = {}
+
+
+def client_of_this_process() -> Client:
+    """Give the one client of the running process, new after a fork."""
+    process = os.getpid()
+    client = _clients.get(process)
+    if client is None:
+        client = _clients.setdefault(process, Client())
+        for other in [key for key in _clients if key != process]:
+            stale = _clients.pop(other, None)
+            if stale is not None:
+                stale.abandon()
+    return client
