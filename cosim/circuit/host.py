@@ -112,7 +112,10 @@ def load_library() -> Any:
                 self.listener.status(message)
             return 0
 
-    return Simulator.new_instance()
+    simulator = Simulator.new_instance()
+    # ngspice gives BSIM models two OpenMP threads, which spin and take a core from another run.
+    simulator.exec_command("set num_threads=1")
+    return simulator
 
 
 class Listener:

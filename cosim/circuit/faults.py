@@ -1,0 +1,219 @@
+"""What ngspice's log means: an error with the author's file and line, or named warnings."""
+
+import re
+from collections.abc import Sequence
+from typing import TYPE_CHECKING, NoReturn
+
+from cosim.circuit.client import INSTALL_HINT
+from cosim.circuit.location import locate
+from cosim.errors import (
+    ConvergenceError,
+    DeckError,
+    MissingDependencyError,
+    MissingFileError,
+    UnknownNameError,
+    UnsupportedDeckError,
+)
+
+if TYPE_CHECKING:
+    from cosim.circuit.preparation import PreparedDeck
+
+LOG_SHOWN = 12  # lines of the log that an error carries
+WARNINGS_SHOWN = 50  # a kit's model checks can repeat a warning for each of its devices
+
+_FATAL = re.compile(
+    r"simulation\(s\) aborted|simulation interrupted|simulation not started|circuit not parsed"
+    r"|aren't any circuits loaded|cannot recover|^stderr (?:Error|Fatal)",
+    re.IGNORECASE,
+)
+# An argument out of range is reported for each rejected Newton try as well; the run recovers from
+# it or says in another line that it did not.
+_RANGE = re.compile(r"out of range for \w+", re.IGNORECASE)
+_NO_FILE = re.compile(
+    r"could not find (?:include|library) file|library file \S+ not found|cannot open file",
+    re.IGNORECASE,
+)
+_NO_CONVERGENCE = re.compile(r"timestep too small|iteration limit|no convergence", re.IGNORECASE)
+_NO_NAME = re.compile(
+    r"can't find model|could not find a valid modelname|unknown subckt|undefined parameter"
+    r"|unable to find definition of model|non-existant|no data saved",
+    re.IGNORECASE,
+)
+_NO_DEVICE = re.compile(r"unknown device type", re.IGNORECASE)
+_COMPLAINT = re.compile(
+    r"(?:Error|Fatal|Warning|Netlist line|Undefined|MIF|Too (?:few|many))", re.IGNORECASE
+)
+_ECHO = re.compile(
+    r"circuit not parsed|circuits loaded|simulation\(s\) aborted|doAnalyses|detached"
+)
+_TIME = re.compile(r"timestep too small; time = ([-+.\deE]+)", re.IGNORECASE)
+_SINGULAR = re.compile(r"singular matrix:\s+check node\s+(\S+)", re.IGNORECASE)
+_WARNING = re.compile(r"\bwarning\b|unrecognized parameter|set to 1 mOhm", re.IGNORECASE)
+_STEPPING = re.compile(
+    r"Starting dynamic gmin stepping|Starting true gmin stepping|Starting source stepping"
+    r"|Transient op started"
+)
+_STEPPING_DETAIL = re.compile(
+    r"gmin (?:step|increment)|source step|Trying gmin|Transient op|Supplies reduced"
+)
+
+
+def clean(log: Sequence[str]) -> tuple[str, ...]:
+    """Take the names of the streams off ngspice's lines."""
+    return tuple(re.sub(r"^(?:stdout|stderr) ", "", line).strip() for line in log)
+
+
+def raise_for_log(prepared: "PreparedDeck", log: Sequence[str], models: bool) -> None:
+    """Raise what a log says that makes a run worthless.
+
+    Parameters
+    ----------
+    prepared : PreparedDeck
+        The deck as sent, for its origins.
+    log : sequence of str
+        Lines as they came, with the stream's name in front.
+    models : bool
+        Whether ngspice found its start file, which loads the code models of A devices.
+
+    Raises
+    ------
+    MissingFileError, UnknownNameError, UnsupportedDeckError, DeckError
+        If the deck is at fault; with the author's file and line.
+    ConvergenceError
+        With the simulated time in s.
+    MissingDependencyError
+        If the deck uses code models and they are not installed.
+    """
+    words = clean(log)
+    lost = [place for place, line in enumerate(words) if _NO_FILE.search(line)]
+    if lost:
+        # After a data file that is not there the run may go on, on memory that nobody set.
+        cause = [words[lost[0]]]
+        _raise_deck(MissingFileError, prepared, cause, "a file that the deck reads is not there")
+    if not any(_FATAL.search(line) and not _RANGE.search(line) for line in log):
+        return
+    if any(_NO_CONVERGENCE.search(line) for line in words):
+        _raise_convergence(prepared, words)
+    said = _complaint(words)
+    text = " ".join(said)
+    if "definition of model" in text and not models:
+        raise MissingDependencyError(
+            f"the deck uses a code model, and ngspice's code models are not installed: {text}",
+            hint=INSTALL_HINT,
+            log=said,
+        )
+    if _NO_DEVICE.search(text):
+        hint = "Verilog-A (OSDI) devices do not run in this ngspice; import their waveform instead"
+        _raise_deck(UnsupportedDeckError, prepared, said, "an unknown kind of device", hint)
+    if "no data saved" in text:
+        saves = ", ".join(prepared.keys)
+        raise UnknownNameError(f"none of the requested vectors exists: {saves}", log=said)
+    if _NO_NAME.search(text):
+        _raise_deck(UnknownNameError, prepared, said, "a name that the deck uses does not exist")
+    _raise_deck(DeckError, prepared, said, "ngspice does not accept the deck")
+
+
+def findings(prepared: "PreparedDeck", log: Sequence[str]) -> tuple[str, ...]:
+    """Collect what belongs on a result that counts.
+
+    Parameters
+    ----------
+    prepared : PreparedDeck
+        The deck as sent, for its origins.
+    log : sequence of str
+        Lines as they came, with the stream's name in front.
+
+    Returns
+    -------
+    tuple of str
+        Each warning once, with the author's file and line where it names one.
+
+    Raises
+    ------
+    DeckError
+        If a resistor has no value: ngspice takes 1 mOhm, and that is a wrong number.
+    """
+    words = clean(log)
+    found: dict[str, None] = {}
+    for node in dict.fromkeys(match[1] for line in words if (match := _SINGULAR.search(line))):
+        found[f"singular matrix at node {node}: has it a path for direct current to ground?"] = None
+    steps = [match[0] for line in words if (match := _STEPPING.search(line))]
+    if steps:
+        way = steps[-1].removeprefix("Starting ").removesuffix(" started")
+        found[f"the operating point was found by {way} only; is it the wanted one?"] = None
+    for function in dict.fromkeys(match[0] for line in words if (match := _RANGE.search(line))):
+        found[f"ngspice rejected steps in which an argument was {function}"] = None
+    for place, line in enumerate(words):
+        detail = _STEPPING_DETAIL.search(line) or _SINGULAR.search(line)
+        if not _WARNING.search(line) or detail:
+            continue
+        said = list(words[place : place + 1 + _continuation(line)])
+        file, number, text = _origin(prepared, said)
+        if "set to 1 mOhm" in line and text and len(text.split()) < 4:
+            _raise_deck(DeckError, prepared, said, "a resistor without a value")
+        message = " ".join(said)
+        found[f"{file}:{number}: {message}" if file else message] = None
+    listed = list(found)
+    if len(listed) > WARNINGS_SHOWN:
+        rest = len(listed) - WARNINGS_SHOWN
+        listed = [*listed[:WARNINGS_SHOWN], f"{rest} further warnings stand in the log"]
+    return tuple(listed)
+
+
+def _continuation(line: str) -> int:
+    """Count the lines that belong to a warning and follow it."""
+    if "Model issue" in line:
+        return 2
+    return 1 if re.search(r"from line$|non-existent node|Version not specified", line) else 0
+
+
+def _complaint(words: Sequence[str]) -> list[str]:
+    """Give the lines that say what is wrong, from the first complaint on, without its echoes."""
+    first = next((place for place, line in enumerate(words) if _COMPLAINT.match(line)), 0)
+    said = [line for line in words[first:] if line and not _ECHO.search(line)]
+    return said[:LOG_SHOWN] or list(words[-LOG_SHOWN:])
+
+
+def _origin(prepared: "PreparedDeck", said: Sequence[str]) -> tuple[str, int, str]:
+    index = locate(prepared.lines, said)
+    if index is None:
+        return "", 0, ""
+    file, line = prepared.origins[index]
+    return file, line, prepared.lines[index]
+
+
+def _raise_deck(
+    kind: type[DeckError],
+    prepared: "PreparedDeck",
+    said: Sequence[str],
+    what: str,
+    hint: str = "",
+) -> NoReturn:
+    file, line, text = _origin(prepared, said)
+    quoted = f": {text!r}" if text else ""
+    words = "; ".join(said[:6])
+    raise kind(f"{what}{quoted} (ngspice: {words})", hint=hint, log=said, file=file, line=line)
+
+
+def _raise_convergence(prepared: "PreparedDeck", words: Sequence[str]) -> NoReturn:
+    times = [match[1] for line in words if (match := _TIME.search(line))]
+    time = float(times[-1]) if times else 0.0
+    place = f"at t = {time:.6g} s" if times else "at the operating point (t = 0)"
+    causes = [line for line in words if _NO_CONVERGENCE.search(line)][-1:]
+    ranges = [i for i, line in enumerate(words) if _RANGE.search(line)]
+    said = list(words[ranges[-1] : ranges[-1] + 2]) if ranges else causes
+    if ranges:
+        causes.append(" ".join(said))
+    nodes = dict.fromkeys(match[1] for line in words if (match := _SINGULAR.search(line)))
+    if nodes:
+        causes.append("singular matrix, check node " + ", ".join(list(nodes)[:5]))
+    file, line, text = _origin(prepared, said)
+    where = f"{file}:{line}: " if file else ""
+    element = f" in {text!r}" if text else ""
+    raise ConvergenceError(
+        f"{where}ngspice found no solution {place}{element} ({'; '.join(causes)})",
+        hint="look at the named nodes and elements: a floating node, a loop of sources, a jump "
+        "without capacitance; or take initial conditions and initial = 'uic'",
+        log=words[-2 * LOG_SHOWN :],
+        time=time,
+    )

@@ -1,0 +1,81 @@
+"""Runs a deck in a child process; a crash, a hang or a bad deck becomes a clear error."""
+
+from collections.abc import Callable
+from typing import TYPE_CHECKING
+
+from cosim.circuit.analysis import TransientRequest, TransientResult
+from cosim.circuit.client import client_of_this_process
+from cosim.circuit.verdict import judge
+from cosim.errors import ForbiddenDeckError
+
+if TYPE_CHECKING:
+    from cosim.circuit.preparation import PreparedDeck
+
+
+def simulate_prepared(
+    prepared: "PreparedDeck",
+    request: TransientRequest,
+    *,
+    progress: Callable[[float], None] | None = None,
+) -> TransientResult:
+    """Run a deck that is ready to be sent.
+
+    Runs of one process follow one another, whatever threads they come from; more at a time need
+    more processes.
+
+    Parameters
+    ----------
+    prepared : PreparedDeck
+        The lines as they are sent. What they do is not checked here: that is the work of
+        `cosim.circuit.preparation.prepare`.
+    request : TransientRequest
+        The request that the deck was prepared for.
+    progress : callable or None
+        Called with the simulated time in s, at most ten times a second; it must not simulate.
+
+    Returns
+    -------
+    TransientResult
+        Times of shape (n,) in s, vectors of shape (n,) in V or A.
+
+    Raises
+    ------
+    SimulationError
+        Or one of its kinds: no convergence, crash, time limit, memory limit.
+    DeckError
+        Or one of its kinds, with the author's file and line.
+    MissingDependencyError
+        If ngspice or PySpice is not installed.
+    """
+    for line, (file, number) in zip(prepared.lines, prepared.origins, strict=True):
+        # The library counts lines, and a line that it splits again could hold a command.
+        if not line or line.splitlines() != [line] or "\0" in line:
+            raise ForbiddenDeckError(
+                f"an empty line or a control character in {line!r}", file=file, line=number
+            )
+    client = client_of_this_process()
+    part_done = None if progress is None else lambda part: progress(part * request.stop)
+    answer = client.run(
+        lines=prepared.lines,
+        commands=prepared.commands,
+        keys=sorted({key.lower() for key in prepared.keys.values()}),
+        data=prepared.data,
+        time_limit=request.time_limit,
+        memory_limit=request.memory_limit,
+        progress=part_done,
+    )
+    version = f"ngspice-{client.ready['version']}"
+    return judge(prepared, request, answer, version, client.ready["models"])
+
+
+def simulator_version() -> str:
+    """Give the simulator's name and version, for example "ngspice-39"; starts the host.
+
+    Raises
+    ------
+    MissingDependencyError
+        If ngspice or PySpice is not installed.
+    """
+    client = client_of_this_process()
+    client.start()
+    return f"ngspice-{client.ready['version']}"
