@@ -7,6 +7,11 @@ from cosim.errors import InputError
 from cosim.waveform import FloatArray
 
 
+def _positive(name: str, value: float) -> None:
+    if not (math.isfinite(value) and value > 0):
+        raise InputError(f"{name} must be a positive finite number, got {value!r}")
+
+
 @dataclass(frozen=True, slots=True)
 class Tolerances:
     """Newton tolerances of a run, sent as `.options`.
@@ -138,8 +143,3 @@ class TransientResult:
     wall_time: float = field(metadata={"unit": "s"})
     overhead_time: float = field(metadata={"unit": "s"})
     simulator_version: str
-
-
-def _positive(name: str, value: float) -> None:
-    if not (math.isfinite(value) and value > 0):
-        raise InputError(f"{name} must be a positive finite number, got {value!r}")
