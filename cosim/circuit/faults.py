@@ -1,5 +1,6 @@
 """What ngspice's log means: an error with the author's file and line, or named warnings."""
 
+import itertools
 import re
 from collections.abc import Sequence
 from typing import TYPE_CHECKING, NoReturn
@@ -49,6 +50,8 @@ _ECHO = re.compile(
 _TIME = re.compile(r"timestep too small; time = ([-+.\deE]+)", re.IGNORECASE)
 _SINGULAR = re.compile(r"singular matrix:\s+check node\s+(\S+)", re.IGNORECASE)
 _WARNING = re.compile(r"\bwarning\b|unrecognized parameter|set to 1 mOhm", re.IGNORECASE)
+# A literal zero is taken for 1 mOhm without a word.
+_ZERO = re.compile(r"r\S*\s+\S+\s+\S+\s+(?:r\s*=\s*)?0*\.?0*(?:e[+-]?\d+)?\s*$", re.IGNORECASE)
 _STEPPING = re.compile(
     r"Starting dynamic gmin stepping|Starting true gmin stepping|Starting source stepping"
     r"|Transient op started"
@@ -139,25 +142,35 @@ def findings(prepared: "PreparedDeck", log: Sequence[str]) -> tuple[str, ...]:
         found[f"singular matrix at node {node}: has it a path for direct current to ground?"] = None
     steps = [match[0] for line in words if (match := _STEPPING.search(line))]
     if steps:
-        way = steps[-1].removeprefix("Starting ").removesuffix(" started")
+        way = steps[-1].removeprefix("Starting ").replace("Transient op started", "a ramp in time")
         found[f"the operating point was found by {way} only; is it the wanted one?"] = None
-    for function in dict.fromkeys(match[0] for line in words if (match := _RANGE.search(line))):
-        found[f"ngspice rejected steps in which an argument was {function}"] = None
-    for place, line in enumerate(words):
-        detail = _STEPPING_DETAIL.search(line) or _SINGULAR.search(line)
-        if not _WARNING.search(line) or detail:
+    for line, element in itertools.pairwise(words):
+        if match := _RANGE.search(line):
+            found[f"ngspice rejected trial steps: an argument {match[0]} {element}"] = None
+    for index, line in enumerate(prepared.lines):
+        if _ZERO.match(line):
+            file, number = prepared.origins[index]
+            found[f"{_place(file, number)}ngspice takes 1 mOhm for the 0 ohm of {line!r}"] = None
+    place = 0
+    while place < len(words):
+        said = list(words[place : place + 1 + _continuation(words[place])])
+        place += len(said)
+        line = said[0]
+        if not _WARNING.search(line) or _STEPPING_DETAIL.search(line) or _SINGULAR.search(line):
             continue
-        said = list(words[place : place + 1 + _continuation(line)])
         file, number, text = _origin(prepared, said)
         if "set to 1 mOhm" in line and text and len(text.split()) < 4:
             _raise_deck(DeckError, prepared, said, "a resistor without a value")
-        message = " ".join(said)
-        found[f"{file}:{number}: {message}" if file else message] = None
+        found[f"{_place(file, number)}{' '.join(said)}"] = None
     listed = list(found)
     if len(listed) > WARNINGS_SHOWN:
         rest = len(listed) - WARNINGS_SHOWN
         listed = [*listed[:WARNINGS_SHOWN], f"{rest} further warnings stand in the log"]
     return tuple(listed)
+
+
+def _place(file: str, line: int) -> str:
+    return f"{file}:{line}: " if file else ""
 
 
 def _continuation(line: str) -> int:
@@ -170,7 +183,7 @@ def _continuation(line: str) -> int:
 def _complaint(words: Sequence[str]) -> list[str]:
     """Give the lines that say what is wrong, from the first complaint on, without its echoes."""
     first = next((place for place, line in enumerate(words) if _COMPLAINT.match(line)), 0)
-    said = [line for line in words[first:] if line and not _ECHO.search(line)]
+    said = [line for line in dict.fromkeys(words[first:]) if line and not _ECHO.search(line)]
     return said[:LOG_SHOWN] or list(words[-LOG_SHOWN:])
 
 
@@ -208,10 +221,9 @@ def _raise_convergence(prepared: "PreparedDeck", words: Sequence[str]) -> NoRetu
     if nodes:
         causes.append("singular matrix, check node " + ", ".join(list(nodes)[:5]))
     file, line, text = _origin(prepared, said)
-    where = f"{file}:{line}: " if file else ""
     element = f" in {text!r}" if text else ""
     raise ConvergenceError(
-        f"{where}ngspice found no solution {place}{element} ({'; '.join(causes)})",
+        f"{_place(file, line)}ngspice found no solution {place}{element} ({'; '.join(causes)})",
         hint="look at the named nodes and elements: a floating node, a loop of sources, a jump "
         "without capacitance; or take initial conditions and initial = 'uic'",
         log=words[-2 * LOG_SHOWN :],

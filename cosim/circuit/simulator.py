@@ -4,9 +4,11 @@ from collections.abc import Callable
 from typing import TYPE_CHECKING
 
 from cosim.circuit.analysis import TransientRequest, TransientResult
-from cosim.circuit.client import client_of_this_process
+from cosim.circuit.client import client_of_this_process, find_simulator
 from cosim.circuit.verdict import judge
 from cosim.errors import ForbiddenDeckError
+
+__all__ = ["find_simulator", "simulate_prepared", "simulator_version"]
 
 if TYPE_CHECKING:
     from cosim.circuit.preparation import PreparedDeck

@@ -89,7 +89,7 @@ def judge(
 
 
 def _check_process(request: TransientRequest, answer: Answer, log: tuple[str, ...]) -> None:
-    reached = f"it had come to about {answer.part * request.stop:.4g} s of {request.stop:g} s"
+    reached = f"it had come to about {answer.part * request.stop:.3g} s of {request.stop:g} s"
     code, tail = answer.end["code"], log[-LOG_SHOWN:]
     if answer.end["timeout"]:
         raise SimulatorTimeoutError(
