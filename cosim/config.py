@@ -9,8 +9,9 @@ import dataclasses
 import tomllib
 from collections.abc import Mapping
 from pathlib import Path
-from typing import Any, TypeVar, get_type_hints
+from typing import Any, TypeVar, get_args, get_type_hints
 
+import tomli_w
 from pydantic import GetCoreSchemaHandler, TypeAdapter, ValidationError
 from pydantic_core import CoreSchema, core_schema
 
@@ -83,14 +84,53 @@ class Parameter:
         return core_schema.no_info_plain_validator_function(parse_parameter)
 
 
-def read_toml(path: Path) -> tuple[str, dict[str, Any]]:
+@dataclasses.dataclass(frozen=True, slots=True)
+class NameOrTable:
+    """Marks a field that takes a name, or a table of its own.
+
+    Parameters
+    ----------
+    cls : type
+        The frozen dataclass of the table.
+    """
+
+    cls: type[Any]
+
+    def read(self, value: object) -> Any:
+        """Read one value of the file.
+
+        Raises
+        ------
+        TestbenchError
+            If the table does not fit its dataclass.
+        """
+        if isinstance(value, (str, self.cls)):
+            return value
+        if not isinstance(value, Mapping):
+            raise UnitError(f"wanted a name or a table, got {value!r}")
+        fields = _field_names(self.cls)
+        for key in value:
+            if key not in fields:
+                raise UnitError(f"unknown key '{key}'; {near_names(key, fields)}")
+        hints = get_type_hints(self.cls, include_extras=True)
+        values = {key: _read_value(hints[key], item, "here", key) for key, item in value.items()}
+        missing = [key for key in fields if key not in value]
+        if missing:
+            raise UnitError(f"the key '{missing[0]}' is missing")
+        return self.cls(**values)
+
+    def __get_pydantic_core_schema__(
+        self, source: object, handler: GetCoreSchemaHandler
+    ) -> CoreSchema:
+        return core_schema.no_info_plain_validator_function(self.read)
+
+
+def read_toml(path: Path) -> dict[str, Any]:
     """Read a TOML file.
 
     Returns
     -------
-    text : str
-        The file as it stands.
-    tables : dict
+    dict
         Its tables.
 
     Raises
@@ -105,7 +145,7 @@ def read_toml(path: Path) -> tuple[str, dict[str, Any]]:
     except (OSError, UnicodeDecodeError) as error:
         raise TestbenchError(f"the testbench {path} cannot be read: {error}") from None
     try:
-        return text, tomllib.loads(text)
+        return tomllib.loads(text)
     except tomllib.TOMLDecodeError as error:
         raise TestbenchError(f"{path} is not a TOML file: {error}") from None
 
@@ -148,12 +188,11 @@ def read_table(table: object, cls: type[T], *, file: str, name: str) -> T:
     where = f"{file}, table [{name}]"
     if not isinstance(table, Mapping):
         raise TestbenchError(f"{where}: wanted a table, got {table!r}")
-    fields = {item.name: item for item in dataclasses.fields(cls) if item.init}  # type: ignore[arg-type]
-    check_keys(table, list(fields), where)
-    for key, item in fields.items():
-        required = item.default is dataclasses.MISSING
-        if required and item.default_factory is dataclasses.MISSING and key not in table:
-            raise TestbenchError(f"{where}: the key '{key}' is missing")
+    check_keys(table, _field_names(cls), where)
+    for item in dataclasses.fields(cls):  # type: ignore[arg-type]
+        required = item.default is item.default_factory is dataclasses.MISSING
+        if required and item.name not in table:
+            raise TestbenchError(f"{where}: the key '{item.name}' is missing")
     hints = get_type_hints(cls, include_extras=True)
     values = {key: _read_value(hints[key], value, where, key) for key, value in table.items()}
     try:
@@ -183,6 +222,58 @@ def _frozen(value: object) -> object:
     if isinstance(value, dict):
         return {key: _frozen(item) for key, item in value.items()}
     return value
+
+
+def write_tables(title: str, tables: Mapping[str, object]) -> str:
+    """Write frozen dataclasses as the TOML text that reads back as the same ones.
+
+    Parameters
+    ----------
+    title : str
+        Value of the key `title`.
+    tables : mapping
+        Table name to frozen dataclass.
+
+    Returns
+    -------
+    str
+        Quantities as text in SI units, with all digits.
+    """
+    written: dict[str, Any] = {"title": title}
+    for name, table in tables.items():
+        written[name] = _written_table(table)
+    return tomli_w.dumps(written)
+
+
+def _written_table(table: object) -> dict[str, Any]:
+    hints = get_type_hints(type(table), include_extras=True)
+    written = {}
+    for item in dataclasses.fields(table):  # type: ignore[arg-type]
+        value = getattr(table, item.name)
+        default = item.default if item.default_factory is dataclasses.MISSING else None
+        if value is not None and value != default and value != {}:
+            written[item.name] = _written(value, _unit_of(hints[item.name]))
+    return written
+
+
+def _unit_of(hint: Any) -> str:
+    found = [mark.unit for mark in getattr(hint, "__metadata__", ()) if isinstance(mark, Quantity)]
+    inner = [unit for part in get_args(hint) if (unit := _unit_of(part))]
+    return (found + inner + [""])[0]
+
+
+def _written(value: Any, unit: str) -> Any:
+    if dataclasses.is_dataclass(value):
+        return _written_table(value)
+    if isinstance(value, tuple):
+        return [_written(item, unit) for item in value]
+    if isinstance(value, float) and unit:
+        return f"{value!r} {unit}"
+    return value
+
+
+def _field_names(cls: type[Any]) -> list[str]:
+    return [item.name for item in dataclasses.fields(cls)]
 
 
 def _is_branch(part: int | str) -> bool:

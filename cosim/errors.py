@@ -30,8 +30,8 @@ from typing import Any
 
 
 def _rebuild(cls: type["CosimError"], args: tuple[Any, ...], state: dict[str, Any]) -> "CosimError":
-    error = cls.__new__(cls)
-    error.args = args
+    # The message is complete, so it is given alone; what stood beside it is in the state.
+    error = cls(*args)
     error.__dict__.update(state)
     return error
 

@@ -1,6 +1,6 @@
 """Waveforms and envelopes: the arrays that travel between the wings."""
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 import numpy.typing as npt
@@ -31,8 +31,8 @@ class Waveform:
         time does not rise.
     """
 
-    t: FloatArray
-    v: FloatArray
+    t: FloatArray = field(metadata={"unit": "s", "axes": ("t",)})
+    v: FloatArray = field(metadata={"unit_from": "unit", "axes": ("t",)})
     unit: str = "V"
 
     def __post_init__(self) -> None:
@@ -77,10 +77,12 @@ class Envelope:
         Unit of `iq`, "V" or "A".
     """
 
-    t0: float
-    dt: float
-    iq: ComplexArray
-    carrier_frequency: float
+    t0: float = field(metadata={"unit": "s"})
+    dt: float = field(metadata={"unit": "s"})
+    iq: ComplexArray = field(
+        metadata={"unit_from": "unit", "axes": ("t",), "axis_units": {"t": "s"}}
+    )
+    carrier_frequency: float = field(metadata={"unit": "Hz"})
     unit: str = "V"
 
     @property

@@ -1,0 +1,166 @@
+"""What a laboratory's own calibration would absorb: frame, amplitude, carrier offset."""
+
+import math
+from collections.abc import Callable
+from dataclasses import dataclass, replace
+
+import numpy as np
+from scipy.optimize import minimize, minimize_scalar
+
+from cosim.quantum.evolution import DriveSpline, evolve
+from cosim.quantum.fidelity import FreeFrame, free_frame
+from cosim.quantum.qubit import Qubit
+from cosim.waveform import ComplexArray
+
+# The range of the one real amplitude scale.
+SCALE_RANGE = (0.8, 1.25)
+
+# Half-width of the first bracket of the scale search; the infidelity is a parabola there.
+_BRACKET = 0.01
+
+
+@dataclass(frozen=True, slots=True)
+class Pulse:
+    """A drive on a qubit within the window of the gate.
+
+    Parameters
+    ----------
+    qubit : Qubit
+        The qubit.
+    drive : DriveSpline
+        Drive rate in rad/s.
+    start, stop : float
+        Window in s.
+    """
+
+    qubit: Qubit
+    drive: DriveSpline
+    start: float
+    stop: float
+
+    def channel(self, *, scale: float = 1.0, detuning: float = 0.0) -> ComplexArray:
+        """Evolve, with the drive scaled and the carrier offset.
+
+        An offset of the carrier by x seen from the qubit is an offset of the qubit by -x, and
+        the frame of the target goes with it.
+
+        Parameters
+        ----------
+        scale : float
+            Factor on the drive.
+        detuning : float
+            Offset of the carrier in Hz.
+
+        Returns
+        -------
+        ndarray of complex, shape (levels^2, levels^2)
+            Superoperator, column-stacking.
+
+        Raises
+        ------
+        InputError
+            If the window does not lie within the drive.
+        """
+        qubit = replace(self.qubit, frequency=self.qubit.frequency - detuning)
+        return evolve(qubit, self.drive, self.start, self.stop, scale=scale)
+
+
+@dataclass(frozen=True, slots=True)
+class Calibration:
+    """The best scale and carrier offset, with the channel and frame that belong to them.
+
+    Parameters
+    ----------
+    scale : float
+        Factor on the drive.
+    detuning : float
+        Offset of the carrier in Hz.
+    channel : ndarray of complex, shape (levels^2, levels^2)
+        Superoperator at these.
+    frame : FreeFrame
+        Best virtual Z angles at these.
+    """
+
+    scale: float
+    detuning: float
+    channel: ComplexArray
+    frame: FreeFrame
+
+
+def calibrate_pulse(
+    pulse: Pulse,
+    target: ComplexArray,
+    *,
+    guess: float = 1.0,
+    with_detuning: bool = False,
+) -> Calibration:
+    """Find the amplitude scale, and on request the carrier offset, of best free-frame fidelity.
+
+    Parameters
+    ----------
+    pulse : Pulse
+        Drive, qubit and window.
+    target : ndarray of complex, shape (2, 2)
+        Target unitary.
+    guess : float
+        Scale to start from, such as wanted angle over angle found.
+    with_detuning : bool
+        Also adjust one constant carrier offset.
+
+    Returns
+    -------
+    Calibration
+        The scale lies in `SCALE_RANGE`.
+
+    Raises
+    ------
+    InputError
+        If the window does not lie within the drive.
+    """
+
+    def infidelity(scale: float, detuning: float = 0.0) -> float:
+        channel = pulse.channel(scale=scale, detuning=detuning)
+        return 1.0 - free_frame(channel, target).average_gate_fidelity
+
+    scale = _best_scale(infidelity, guess)
+    detuning = 0.0
+    if with_detuning:
+        scale, detuning = _best_pair(infidelity, scale, pulse.stop - pulse.start)
+    channel = pulse.channel(scale=scale, detuning=detuning)
+    return Calibration(scale, detuning, channel, free_frame(channel, target))
+
+
+def _best_scale(infidelity: Callable[[float], float], guess: float) -> float:
+    # Two vertices of a parabola through three points reach the optimum from a good guess; a
+    # pulse far from its target gets the bounded search over the whole range.
+    scale = guess
+    for bracket in (_BRACKET, _BRACKET / 10.0):
+        if not SCALE_RANGE[0] + bracket <= scale <= SCALE_RANGE[1] - bracket:
+            break
+        low, middle, high = (infidelity(scale + step) for step in (-bracket, 0.0, bracket))
+        curvature = low - 2.0 * middle + high
+        step = 0.5 * bracket * (low - high) / curvature if curvature > 0.0 else math.inf
+        if abs(step) > 2.0 * bracket:
+            break
+        scale += step
+    else:
+        return scale
+    found = minimize_scalar(
+        infidelity, bounds=SCALE_RANGE, method="bounded", options={"xatol": 1e-6}
+    )
+    return float(found.x)
+
+
+def _best_pair(
+    infidelity: Callable[[float, float], float], scale: float, duration: float
+) -> tuple[float, float]:
+    # The offset is scaled by the inverse duration, so that both steps matter alike.
+    unit = 0.01 / duration
+    corners = np.array([[scale, 0.0], [scale + 0.005, 0.0], [scale, 1.0]])
+    found = minimize(
+        lambda x: infidelity(float(np.clip(x[0], *SCALE_RANGE)), float(x[1]) * unit),
+        corners[0],
+        method="Nelder-Mead",
+        options={"initial_simplex": corners, "xatol": 1e-5, "fatol": 1e-12, "maxiter": 200},
+    )
+    return float(np.clip(found.x[0], *SCALE_RANGE)), float(found.x[1]) * unit

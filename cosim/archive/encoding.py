@@ -1,0 +1,309 @@
+"""Values to HDF5: a dataclass becomes a group, its fields become datasets and subgroups."""
+
+import dataclasses
+import json
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from typing import Any
+
+import h5py
+import numpy as np
+import numpy.typing as npt
+
+from cosim.archive.layout import TEXT, member_name, storage_options
+from cosim.errors import ArchiveError
+
+_NO_METADATA: Mapping[str, Any] = {}
+_WORD = np.iinfo(np.int64)
+_ARRAY_TYPES = "?efdFD" + np.typecodes["AllInteger"]
+
+
+@dataclass(frozen=True, slots=True)
+class _Context:
+    """What the declaration of a field says about its value, and the object it belongs to."""
+
+    owner: Any
+    metadata: Mapping[str, Any]
+    unit: str
+
+
+def field_unit(owner: object, metadata: Mapping[str, Any]) -> str:
+    """Give the unit that a field's metadata declares for it.
+
+    Parameters
+    ----------
+    owner : object
+        The dataclass instance, asked for the unit when the metadata has `unit_from`.
+    metadata : mapping
+        The field's metadata.
+
+    Returns
+    -------
+    str
+        The unit, "1" when none is declared.
+    """
+    if "unit_from" in metadata:
+        return str(getattr(owner, metadata["unit_from"]))
+    return str(metadata.get("unit", "1"))
+
+
+def is_instance(value: object) -> bool:
+    """Tell whether a value is an instance of a dataclass (and not such a class itself)."""
+    return dataclasses.is_dataclass(value) and not isinstance(value, type)
+
+
+def fits_word(value: int) -> bool:
+    """Tell whether an integer fits 64 bits with sign."""
+    return int(_WORD.min) <= value <= int(_WORD.max)
+
+
+def is_plain_text(text: str) -> bool:
+    """Tell whether HDF5 can hold a text as it is: no NUL, no lone surrogate."""
+    if "\0" in text:
+        return False
+    try:
+        text.encode("utf-8")
+    except UnicodeEncodeError:
+        return False
+    return True
+
+
+def write_object(group: Any, value: Any) -> None:
+    """Write a dataclass instance into a fresh HDF5 group.
+
+    Parameters
+    ----------
+    group : h5py.Group
+        Empty group that receives the fields.
+    value : object
+        Instance of a dataclass.
+
+    Raises
+    ------
+    ArchiveError
+        If a field holds a value that has no place in an archive; the message names it.
+    """
+    fields = dataclasses.fields(value)
+    group.attrs["kind"] = type(value).__name__
+    contexts = {
+        field.name: _Context(value, field.metadata, field_unit(value, field.metadata))
+        for field in fields
+    }
+    # Scales come first, so that the arrays along them find them.
+    ordered = sorted(fields, key=lambda field: field.metadata.get("axes") != (field.name,))
+    members = {field.name: getattr(value, field.name) for field in ordered}
+    _write_members(group, members, contexts)
+
+
+def _write_members(
+    group: Any, members: Mapping[str, object], contexts: Mapping[str, _Context]
+) -> None:
+    """Write named values into a group; which of them are None stands in an attribute."""
+    reserved = frozenset(members)
+    for name, value in members.items():
+        if value is not None:
+            _write_value(group, name, value, contexts[name], reserved)
+    absent = [name for name, value in members.items() if value is None]
+    if absent:
+        group.attrs.create("none", absent, dtype=TEXT)
+
+
+def _write_value(
+    group: Any, name: str, value: object, context: _Context, reserved: frozenset[str]
+) -> None:
+    if is_instance(value):
+        write_object(group.create_group(name, track_order=True), value)
+    elif isinstance(value, np.ndarray):
+        _write_array(group, name, value, context, reserved)
+    elif isinstance(value, str):
+        _write_text(group, name, value)
+    elif isinstance(value, (bool, np.bool_)):
+        group.create_dataset(name, data=bool(value), dtype=np.bool_)
+    elif isinstance(value, (int, np.integer)):
+        _write_integer(group, name, int(value), context)
+    elif isinstance(value, (float, np.floating)):
+        _write_number(group, name, float(value), np.float64, context)
+    elif isinstance(value, (complex, np.complexfloating)):
+        _write_number(group, name, complex(value), np.complex128, context)
+    elif isinstance(value, (tuple, list)):
+        _write_sequence(group, name, value, context, reserved)
+    elif isinstance(value, Mapping):
+        _write_mapping(group, name, value, context)
+    else:
+        raise ArchiveError(
+            f"{group.name}/{name}: a value of type {type(value).__name__} cannot be archived",
+            hint="wanted float, int, complex, bool, str, None, tuple, list, dict with text keys, "
+            "a numeric ndarray or a dataclass of these",
+        )
+
+
+def _write_number(
+    group: Any, name: str, value: complex, dtype: npt.DTypeLike, context: _Context
+) -> None:
+    group.create_dataset(name, data=value, dtype=dtype).attrs["units"] = context.unit
+
+
+def _write_integer(group: Any, name: str, value: int, context: _Context) -> None:
+    if fits_word(value):
+        _write_number(group, name, value, np.int64, context)
+        return
+    dataset = group.create_dataset(name, data=str(value), dtype=TEXT)
+    dataset.attrs["kind"] = "int"
+    dataset.attrs["units"] = context.unit
+
+
+def _write_text(group: Any, name: str, value: str) -> None:
+    plain = is_plain_text(value)
+    dataset = group.create_dataset(name, data=value if plain else json.dumps(value), dtype=TEXT)
+    if not plain:
+        dataset.attrs["quoting"] = "json"
+
+
+def _write_array(
+    group: Any,
+    name: str,
+    value: npt.NDArray[Any],
+    context: _Context,
+    reserved: frozenset[str],
+) -> None:
+    if value.dtype.char not in _ARRAY_TYPES:
+        raise ArchiveError(
+            f"{group.name}/{name}: an array of type {value.dtype} cannot be archived",
+            hint="wanted bool, integers, float64 or complex128; texts go into a tuple",
+        )
+    options = storage_options(value.size)
+    dataset = group.create_dataset(name, data=value, dtype=value.dtype, **options)
+    if value.dtype.kind != "b":
+        dataset.attrs["units"] = context.unit
+    if value.ndim == 0:
+        dataset.attrs["kind"] = "ndarray"
+    elif value.ndim == 1 and context.metadata.get("axes") == (name,):
+        dataset.make_scale(name)
+    else:
+        _attach_scales(group, dataset, name, context, reserved)
+
+
+def _write_sequence(
+    group: Any,
+    name: str,
+    value: Sequence[object],
+    context: _Context,
+    reserved: frozenset[str],
+) -> None:
+    """Write a tuple or list: one dataset when its items are scalars of one type, else a group."""
+    kind = "list" if isinstance(value, list) else "tuple"
+    packed = _packed(value)
+    if packed is None:
+        subgroup = group.create_group(name, track_order=True)
+        subgroup.attrs["kind"] = kind
+        subgroup.attrs["length"] = len(value)
+        members = {f"{index:06d}": item for index, item in enumerate(value)}
+        _write_members(subgroup, members, dict.fromkeys(members, context))
+        return
+    items, dtype, quoted = packed
+    options = {} if dtype is TEXT else storage_options(len(items))
+    dataset = group.create_dataset(name, data=items, dtype=dtype, **options)
+    dataset.attrs["kind"] = kind
+    if quoted:
+        dataset.attrs["quoting"] = "json"
+    if dtype is not TEXT and dtype is not np.bool_:
+        dataset.attrs["units"] = context.unit
+    _attach_scales(group, dataset, name, context, reserved)
+
+
+def _packed(value: Sequence[object]) -> tuple[Sequence[object], npt.DTypeLike, bool] | None:
+    """Give items, type and whether quoted, for scalars of one type; None for anything else."""
+    if not value:
+        return None
+    if all(isinstance(item, str) for item in value):
+        if all(is_plain_text(str(item)) for item in value):
+            return value, TEXT, False
+        return [json.dumps(item) for item in value], TEXT, True
+    if all(isinstance(item, bool) for item in value):
+        return value, np.bool_, False
+    if all(isinstance(item, float) for item in value):
+        return value, np.float64, False
+    if all(isinstance(item, int) and type(item) is not bool and fits_word(item) for item in value):
+        return value, np.int64, False
+    return None
+
+
+def _write_mapping(group: Any, name: str, value: Mapping[Any, object], context: _Context) -> None:
+    wrong = [key for key in value if not isinstance(key, str)]
+    if wrong:
+        raise ArchiveError(
+            f"{group.name}/{name}: the keys of a dict must be texts, got {wrong[0]!r}",
+            hint="write the keys as str",
+        )
+    subgroup = group.create_group(name, track_order=True)
+    subgroup.attrs["kind"] = "dict"
+    members = {member_name(key): item for key, item in value.items()}
+    _write_members(subgroup, members, dict.fromkeys(members, context))
+
+
+def _attach_scales(
+    group: Any, dataset: Any, name: str, context: _Context, reserved: frozenset[str]
+) -> None:
+    """Give each dimension of an array a scale of its own name in the array's own group.
+
+    Readers find a scale only in the group of its array, and take one name on two dimensions of
+    an array for a mistake; hence the copies and the underscores.
+    """
+    axes: tuple[str, ...] = tuple(context.metadata.get("axes", ()))
+    if len(axes) != dataset.ndim:
+        # Items of a dict or sequence may have dimensions that the declaration does not speak of.
+        axes = tuple(f"{name}_index{k}" for k in range(dataset.ndim))
+        axes = (f"{name}_index",) if dataset.ndim == 1 else axes
+    used: list[str] = []
+    for dimension, axis in enumerate(axes):
+        scale = _scale(group, axis, dataset.shape[dimension], context, reserved, used)
+        dataset.dims[dimension].attach_scale(scale)
+        used.append(scale.name)
+
+
+def _scale(
+    group: Any,
+    axis: str,
+    length: int,
+    context: _Context,
+    reserved: frozenset[str],
+    used: Sequence[str],
+) -> Any:
+    """Find or make the scale of an axis in a group."""
+    if axis in group and h5py.h5ds.is_scale(group[axis].id) and group[axis].shape == (length,):
+        if group[axis].name not in used:
+            return group[axis]
+    name = axis
+    while name in reserved or name in group:
+        fits = name in group and group[name].attrs.get("derived") and group[name].shape == (length,)
+        if name not in reserved and fits and group[name].name not in used:
+            return group[name]
+        name += "_"
+    values, unit = _scale_values(axis, length, context)
+    text = isinstance(values, tuple)
+    dtype = TEXT if isinstance(values, tuple) else values.dtype
+    options = {} if text else storage_options(length)
+    dataset = group.create_dataset(name, data=values, dtype=dtype, **options)
+    dataset.attrs["derived"] = True
+    if not text:
+        dataset.attrs["units"] = unit
+    dataset.make_scale(name)
+    return dataset
+
+
+def _scale_values(
+    axis: str, length: int, context: _Context
+) -> tuple[tuple[str, ...] | npt.NDArray[Any], str]:
+    """Give the values along an axis: its labels, an attribute of the owner, or an index."""
+    labels = tuple(context.metadata.get("labels", {}).get(axis, ()))
+    if labels and len(labels) == length:
+        return labels, ""
+    values = getattr(context.owner, axis, None)
+    if isinstance(values, np.ndarray) and values.shape == (length,) and values.dtype.kind in "iuf":
+        unit = context.metadata.get("axis_units", {}).get(axis)
+        if unit is None:
+            fields = dataclasses.fields(context.owner)
+            declared = {field.name: field.metadata for field in fields}
+            unit = field_unit(context.owner, declared.get(axis, _NO_METADATA))
+        return values, str(unit)
+    return np.arange(length, dtype=np.int64), "1"

@@ -1,0 +1,152 @@
+"""What a deck is: lines with their origin, files as written, and the list that is sent."""
+
+from collections.abc import Iterable
+from dataclasses import dataclass, field
+
+
+@dataclass(frozen=True, slots=True)
+class SourceLine:
+    """One logical line: continuations joined, comments gone.
+
+    Parameters
+    ----------
+    text : str
+        The line, without leading and trailing space.
+    file : str
+        File in which it stands; empty for lines that the bridge adds.
+    line : int
+        Number of its first physical line, from 1; 0 for lines that the bridge adds.
+    """
+
+    text: str
+    file: str
+    line: int
+
+
+@dataclass(frozen=True, slots=True)
+class DeckFile:
+    """A file that was read, as its author wrote it.
+
+    Parameters
+    ----------
+    path : str
+        Path under which it was found.
+    text : str
+        Its text, decoded as UTF-8 or, failing that, Latin-1.
+    sha256 : str
+        SHA-256 of its bytes, in hexadecimal.
+    """
+
+    path: str
+    text: str
+    sha256: str
+
+
+@dataclass(frozen=True, slots=True)
+class DataFile:
+    """A data file of an A-device.
+
+    Parameters
+    ----------
+    path : str
+        Path under which it was found.
+    name : str
+        Lower-case name under which it is put into the simulator's scratch folder.
+    content : bytes
+        Its bytes.
+    sha256 : str
+        SHA-256 of its bytes, in hexadecimal.
+    """
+
+    path: str
+    name: str
+    content: bytes
+    sha256: str
+
+
+@dataclass(frozen=True, slots=True)
+class TransientCard:
+    """The deck's own `.tran`, times in s; `max_step` is None when the card leaves it out."""
+
+    step: float = field(metadata={"unit": "s"})
+    stop: float = field(metadata={"unit": "s"})
+    start: float = field(metadata={"unit": "s"})
+    max_step: float | None = field(metadata={"unit": "s"})
+    uic: bool
+
+
+@dataclass(frozen=True, slots=True)
+class Deck:
+    """A deck with its includes, ready to be altered and prepared.
+
+    Parameters
+    ----------
+    path : str
+        Path of the deck, or the name given to `deck_from_text`.
+    title : str
+        Title as the author wrote it; it is not sent.
+    lines : tuple of SourceLine
+        Circuit, `.param`, `.options`, `.tran` and `.temp` lines. Comments, output cards, other
+        analyses and command blocks are gone; `prepare` replaces the analysis and the settings.
+    files : tuple of DeckFile
+        Every file that was read, the deck first.
+    data_files : tuple of DataFile
+        Data files of A-devices.
+    notices : tuple of str
+        What was left out or read otherwise than written, with file and line.
+    tran : TransientCard or None
+        The deck's `.tran`, or None when there is none whose values can be told.
+    temperature : float or None
+        Device temperature in K from `.temp` or `.options temp`, or None.
+    compatibility : str or None
+        ngspice compatibility mode ("hsa", "psa", ...), or None.
+    """
+
+    path: str
+    title: str
+    lines: tuple[SourceLine, ...]
+    files: tuple[DeckFile, ...]
+    data_files: tuple[DataFile, ...]
+    notices: tuple[str, ...]
+    tran: TransientCard | None
+    temperature: float | None = field(metadata={"unit": "K"})
+    compatibility: str | None
+
+
+@dataclass(frozen=True, slots=True)
+class PreparedDeck:
+    """The exact list of lines that ngspice gets.
+
+    Parameters
+    ----------
+    lines : tuple of str
+        Title, options, circuit, `.save`, `.tran` and `.end`. A line with a data file holds
+        "{scratch}/name"; the host fills in its scratch folder.
+    origins : tuple of (str, int)
+        File and line of each line; ("", 0) for the bridge's own.
+    keys : dict of str
+        Save expression as requested, in lower case -> name of the vector in ngspice's plot.
+    commands : tuple of str
+        ngspice commands to give before the deck is loaded.
+    data : dict of bytes
+        Name in the scratch folder -> content.
+    notices : tuple of str
+        The deck's notices and those of the preparation.
+    """
+
+    lines: tuple[str, ...]
+    origins: tuple[tuple[str, int], ...]
+    keys: dict[str, str]
+    commands: tuple[str, ...]
+    data: dict[str, bytes]
+    notices: tuple[str, ...]
+
+
+def where(line: SourceLine) -> str:
+    """Give "file:line" of a line."""
+    return f"{line.file}:{line.line}"
+
+
+def unique(items: Iterable[str]) -> tuple[str, ...]:
+    """Give the items once each, in the order of their first appearance."""
+    return tuple(dict.fromkeys(items))

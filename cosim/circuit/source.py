@@ -1,0 +1,215 @@
+"""Reading one file of a deck: bytes to text to logical lines, comments and command blocks gone.
+
+Logical lines are kept per file in a bounded cache, so that a process kit is read once in a
+process. The rules on comments and continuations are ngspice's own, found by experiment.
+"""
+
+import hashlib
+import os
+import re
+import stat
+from collections import OrderedDict
+from dataclasses import dataclass
+
+from cosim.circuit.deck import DeckFile, SourceLine
+from cosim.errors import DeckError, ForbiddenDeckError, MissingFileError, UnsupportedDeckError
+
+LARGEST_FILE = 64 * 2**20  # byte; the largest process kits seen hold about 10 MB per file.
+_CACHED_FILES = 256
+_CACHED_CHARACTERS = 256 * 2**20
+
+_SPACE = " \t\r\f\v"
+# ngspice cuts at ";" and "//" anywhere, and at "$" after a space, a tab or a comma.
+_COMMENT = re.compile(r";|//|(?<=[ \t,])\$")
+_COMMENT_PSPICE = re.compile(r";|//")
+_COMMENT_PATH = re.compile(r";|(?<=[ \t])\$(?=[ \t]|$)")
+# What stands for a space, and the micro sign, which ngspice reads as "u".
+_TRANSLATION = str.maketrans({"\t": " ", "\f": " ", "\v": " ", "\xa0": " ", "µ": "u", "μ": "u"})
+_READABLE = re.compile(r"[*+.$;]|[A-Za-z]\S*\s+\S")
+_ENCRYPTED = re.compile(r"\**\s*\$?(\$ENCRYPTED|\$CDNENCSTART)", re.IGNORECASE)
+_CARD_WITH_PATH = (".inc", ".lib")
+ENCRYPTED_CARD = ".encrypted"
+"""Card that stands for an encrypted region; no ngspice card bears this name."""
+
+
+@dataclass(frozen=True, slots=True)
+class Source:
+    """One file as logical lines.
+
+    Parameters
+    ----------
+    file : DeckFile
+        The file as written.
+    title : str
+        Its first physical line.
+    lines : tuple of SourceLine
+        Logical lines; from the second physical line on when the file is a deck.
+    marks : tuple of int
+        Indices of the lines that are `.include`, `.lib` or `.endl` cards.
+    sections : dict of str to (int, int)
+        Library section in lower case -> first index and end index of its lines.
+    notices : tuple of str
+        Command blocks that were left out.
+    """
+
+    file: DeckFile
+    title: str
+    lines: tuple[SourceLine, ...]
+    marks: tuple[int, ...]
+    sections: dict[str, tuple[int, int]]
+    notices: tuple[str, ...]
+
+
+_Key = tuple[str, bool, bool, int, int, int]
+_cache: OrderedDict[_Key, Source] = OrderedDict()
+
+
+def read_source(path: str, *, is_deck: bool, pspice: bool = False) -> Source:
+    """Read a file of a deck, or take it from the cache when it has not changed.
+
+    Parameters
+    ----------
+    path : str
+        The file.
+    is_deck : bool
+        Whether its first line is a title.
+    pspice : bool
+        Whether "$" starts no comment, as in ngspice's "ps" mode.
+
+    Returns
+    -------
+    Source
+
+    Raises
+    ------
+    MissingFileError
+        If the file is not there.
+    ForbiddenDeckError
+        If it is no regular file, or larger than `LARGEST_FILE`.
+    UnsupportedDeckError
+        If it is binary.
+    """
+    try:
+        status = os.stat(path)
+    except (OSError, ValueError) as error:
+        raise _missing(path, error) from error
+    key = (path, is_deck, pspice, status.st_mtime_ns, status.st_size, status.st_ino)
+    source = _cache.get(key)
+    if source is None:
+        content = read_bytes(path)
+        text = decode(content)
+        file = DeckFile(path, text, hashlib.sha256(content).hexdigest())
+        source = split_source(file, is_deck=is_deck, pspice=pspice)
+        _cache[key] = source
+        kept = sum(entry[4] for entry in _cache)
+        while len(_cache) > _CACHED_FILES or (kept > _CACHED_CHARACTERS and len(_cache) > 1):
+            kept -= _cache.popitem(last=False)[0][4]
+    else:
+        _cache.move_to_end(key)
+    return source
+
+
+def read_bytes(path: str) -> bytes:
+    """Read a regular file of bounded size; nothing else is ever opened for reading.
+
+    Parameters
+    ----------
+    path : str
+        The file.
+
+    Returns
+    -------
+    bytes
+
+    Raises
+    ------
+    MissingFileError
+        If the file cannot be opened.
+    ForbiddenDeckError
+        If it is a folder, a device or a pipe, or larger than `LARGEST_FILE`.
+    """
+    try:
+        # Without O_NONBLOCK a pipe without a writer would stop the program here.
+        handle = os.open(path, os.O_RDONLY | os.O_NONBLOCK | os.O_NOCTTY | os.O_CLOEXEC)
+    except (OSError, ValueError) as error:
+        raise _missing(path, error) from error
+    with os.fdopen(handle, "rb") as stream:
+        status = os.fstat(handle)
+        if not stat.S_ISREG(status.st_mode):
+            raise ForbiddenDeckError(
+                "a deck is made of regular files, but this is a folder, a device or a pipe",
+                file=path,
+            )
+        if status.st_size > LARGEST_FILE:
+            raise ForbiddenDeckError(
+                f"the file holds {status.st_size} byte, at most {LARGEST_FILE} are read",
+                hint="Split the file, or include only the part that the deck needs.",
+                file=path,
+            )
+        return stream.read(LARGEST_FILE)
+
+
+def _missing(path: str, error: Exception) -> MissingFileError:
+    return MissingFileError(
+        f"the file cannot be read: {getattr(error, 'strerror', None) or error}", file=path
+    )
+
+
+def decode(content: bytes) -> str:
+    """Decode a deck file: UTF-8 (with or without mark), UTF-16 with mark, else Latin-1."""
+    if content.startswith((b"\xff\xfe", b"\xfe\xff")):
+        return content.decode("utf-16", errors="replace")
+    try:
+        return content.decode("utf-8-sig")
+    except UnicodeDecodeError:
+        return content.decode("latin-1")
+
+
+def split_source(file: DeckFile, *, is_deck: bool, pspice: bool = False) -> Source:
+    """Cut a file into logical lines.
+
+    Parameters
+    ----------
+    file : DeckFile
+        The file.
+    is_deck : bool
+        Whether its first line is a title.
+    pspice : bool
+        Whether "$" starts no comment.
+
+    Returns
+    -------
+    Source
+
+    Raises
+    ------
+    UnsupportedDeckError
+        If the file is binary or a command script.
+    """
+    if "\0" in file.text:
+        raise UnsupportedDeckError(
+            "the file holds NUL characters: it is binary or encrypted",
+            hint="Export a waveform from the program that can read it, and run on that waveform.",
+            file=file.path,
+        )
+    physical = file.text.split("\n")
+    title = physical[0].strip(_SPACE) if is_deck else ""
+    if title.lower().startswith("*ng_script"):
+        raise UnsupportedDeckError(
+            "the file is a script of ngspice commands, not a deck", file=file.path, line=1
+        )
+    splitter = _Splitter(file.path, pspice)
+    for number in range(1 if is_deck else 0, len(physical)):
+        if not splitter.take(physical[number], number + 1):
+            break
+    splitter.finish()
+    lines = tuple(splitter.lines)
+    marks = tuple(
+        index
+        for index, line in enumerate(lines)
+        if line.text[0] == "." and line.text[:4].lower() in (".inc", ".lib", ".end")
+        and not line.text[:5].lower() in (".end", ".ends", ".endi")
+    )
+    return Source(
+        file, title, lines, marks, _sections(lines, marks), tuple(splitter.notices)
+    )

@@ -1,0 +1,90 @@
+"""What stands behind `cosim.run`, `cosim.save` and `cosim.load`."""
+
+import os
+from collections.abc import Callable
+
+from cosim import archive
+from cosim.errors import ArchiveError
+from cosim.gate import run_gate
+from cosim.result import KINDS, GateResult
+from cosim.testbench import Testbench, load_testbench
+
+
+def run(
+    bench: Testbench | str | os.PathLike[str],
+    *,
+    progress: Callable[[float], None] | None = None,
+) -> GateResult:
+    """Run a testbench: netlist, waveform, qubit, fidelity.
+
+    Parameters
+    ----------
+    bench : Testbench or path
+        A testbench, or the TOML file of one.
+    progress : callable or None
+        Called with the simulated time in s now and then.
+
+    Returns
+    -------
+    GateResult
+        A design estimate, with error bars for the numerical errors.
+
+    Raises
+    ------
+    InputError
+        If the testbench, the deck or the waveform cannot be used.
+    SimulationError
+        If ngspice or the evolution fails.
+    """
+    if not isinstance(bench, Testbench):
+        bench = load_testbench(bench)
+    return run_gate(bench, progress=progress)
+
+
+def save(result: GateResult, path: str | os.PathLike[str]) -> int:
+    """Add a result to an archive, which is made if it does not exist.
+
+    Parameters
+    ----------
+    result : GateResult
+        The result of a run.
+    path : path
+        The HDF5 file.
+
+    Returns
+    -------
+    int
+        Number of the run in the archive, from 1.
+
+    Raises
+    ------
+    ArchiveError
+        If the file is something else or cannot be written; what was there is untouched.
+    """
+    return archive.append(path, result)
+
+
+def load(path: str | os.PathLike[str], *, run: int | None = None) -> GateResult:
+    """Read a result from an archive.
+
+    Parameters
+    ----------
+    path : path
+        The HDF5 file.
+    run : int or None
+        Number of the run; default: the last.
+
+    Returns
+    -------
+    GateResult
+        Equal to the one that was saved.
+
+    Raises
+    ------
+    ArchiveError
+        If the file or the run cannot be read.
+    """
+    result = archive.read(path, KINDS, run=run)
+    if not isinstance(result, GateResult):
+        raise ArchiveError(f"{os.fspath(path)}: the run is not one that this version knows")
+    return result

@@ -1,0 +1,131 @@
+"""Results as figures."""
+
+import os
+
+import numpy as np
+from matplotlib.axes import Axes
+from matplotlib.backends.backend_agg import FigureCanvasAgg
+from matplotlib.figure import Figure
+
+from cosim.errors import InputError
+from cosim.result import GateResult
+from cosim.tables import CAUTION
+
+_LABELS = ("I", "X", "Y", "Z")
+
+
+def plot_gate(result: GateResult, path: str | os.PathLike[str]) -> None:
+    """Draw a gate: waveform and envelope, phase, Pauli transfer matrix, fidelities.
+
+    Parameters
+    ----------
+    result : GateResult
+        The result of a run.
+    path : path
+        File to write; its ending says the format.
+
+    Raises
+    ------
+    InputError
+        If the file cannot be written.
+    """
+    figure = Figure(figsize=(10.5, 6.5), layout="constrained")
+    FigureCanvasAgg(figure)
+    grid = figure.add_gridspec(2, 3)
+    envelope = figure.add_subplot(grid[0, :2])
+    _draw_envelope(envelope, result)
+    _draw_phase(figure.add_subplot(grid[1, :2], sharex=envelope), result)
+    _draw_matrix(figure.add_subplot(grid[0, 2]), result)
+    _draw_infidelities(figure.add_subplot(grid[1, 2]), result)
+    figure.suptitle(result.title or f"gate {result.target}")
+    figure.text(0.995, 0.002, CAUTION, ha="right", va="bottom", fontsize=6, color="0.45")
+    figure.get_layout_engine().set(rect=(0, 0.02, 1, 0.98))  # type: ignore[union-attr, call-arg]
+    try:
+        figure.savefig(path, dpi=150)
+    except (OSError, ValueError) as error:
+        raise InputError(f"the figure {os.fspath(path)} cannot be written: {error}") from None
+
+
+def _draw_envelope(axes: Axes, result: GateResult) -> None:
+    # The carrier is far too dense to be seen: its outline over a few periods says the same.
+    t = result.waveform.t * 1e9
+    scale, unit = _milli(result.pulse.amplitude, result.waveform.unit)
+    low, high, centre = _outline(t, result.waveform.v * scale)
+    axes.fill_between(centre, low, high, color="0.85", lw=0, label="waveform at the probe")
+    iq = result.envelope.iq * scale
+    axes.plot(result.envelope.t * 1e9, iq.real, color="C0", lw=1.4, label="I")
+    axes.plot(result.envelope.t * 1e9, iq.imag, color="C1", lw=1.4, label="Q")
+    _mark_window(axes, result)
+    axes.set_ylabel(f"amplitude ({unit})")
+    axes.set_xlim(t[0], t[-1])
+    axes.legend(loc="upper right", fontsize=8)
+
+
+def _outline(t: np.ndarray, v: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    count = max(1, t.size // 600)
+    usable = t.size // count * count
+    blocks = v[:usable].reshape(-1, count)
+    return blocks.min(axis=1), blocks.max(axis=1), t[:usable].reshape(-1, count).mean(axis=1)
+
+
+def _draw_phase(axes: Axes, result: GateResult) -> None:
+    iq = result.envelope.iq
+    strong = np.abs(iq) > 0.05 * result.pulse.amplitude
+    phase = np.degrees(np.unwrap(np.angle(iq[strong])))
+    axes.plot(result.envelope.t[strong] * 1e9, phase, color="C2", lw=1.2)
+    _mark_window(axes, result)
+    axes.set_ylabel("carrier phase (degrees)")
+    axes.set_xlabel("time (ns)")
+    # A flat phase is drawn flat: the axis never shows less than two degrees.
+    middle = 0.5 * (phase.min() + phase.max())
+    half = max(1.0, 0.6 * np.ptp(phase))
+    axes.set_ylim(middle - half, middle + half)
+
+
+def _mark_window(axes: Axes, result: GateResult) -> None:
+    for edge in result.window:
+        axes.axvline(edge * 1e9, color="0.4", lw=0.8, ls="--")
+
+
+def _draw_matrix(axes: Axes, result: GateResult) -> None:
+    matrix = result.channel.pauli_transfer_matrix
+    axes.imshow(matrix, cmap="RdBu", vmin=-1, vmax=1)
+    for (row, column), value in np.ndenumerate(matrix):
+        shade = "white" if abs(value) > 0.6 else "black"
+        text = f"{value:.3f}" if abs(value) >= 5e-4 else f"{value:.0e}"
+        axes.text(column, row, text, ha="center", va="center", fontsize=7, color=shade)
+    axes.set_xticks(range(4), _LABELS)
+    axes.set_yticks(range(4), _LABELS)
+    axes.set_title(f"Pauli transfer matrix, target {result.target}", fontsize=9)
+    axes.set_xlabel("in")
+    axes.set_ylabel("out")
+
+
+def _draw_infidelities(axes: Axes, result: GateResult) -> None:
+    views = {
+        "as simulated": result.as_simulated,
+        "free frame": result.free_frame,
+        "calibrated": result.calibrated,
+    }
+    for index, view in enumerate(views.values()):
+        bar = 0.0 if np.isnan(view.error_bar) else view.error_bar
+        # On a logarithmic axis a bar that reaches zero goes down to a tenth of the value.
+        down = min(bar, 0.9 * view.infidelity)
+        axes.errorbar(index, view.infidelity, yerr=[[down], [bar]], fmt="o", capsize=4, color="C0")
+    for value, label, style in (
+        (result.numerical_floor, "numerical floor", "--"),
+        (result.rotating_wave_error, "rotating-wave error", ":"),
+        (result.leakage, "leakage", "-."),
+    ):
+        if value > 1e-12:
+            axes.axhline(value, color="0.4", lw=1, ls=style, label=label)
+    axes.set_yscale("log")
+    axes.set_xlim(-0.5, 2.5)
+    axes.set_xticks(range(3), list(views), fontsize=8)
+    axes.set_ylabel("infidelity 1 - F_avg")
+    if axes.get_legend_handles_labels()[1]:
+        axes.legend(fontsize=7)
+
+
+def _milli(amplitude: float, unit: str) -> tuple[float, str]:
+    return (1.0, unit) if amplitude >= 1.0 else (1e3, f"m{unit}")

@@ -1,0 +1,284 @@
+"""The declared results of a run, as they are shown, archived and read back."""
+
+from dataclasses import dataclass, field
+from typing import Any
+
+from cosim.circuit.netlist import DeckFile
+from cosim.dsp.pulse import PulseMeasures
+from cosim.errors import InputError
+from cosim.waveform import ComplexArray, Envelope, FloatArray, Waveform
+
+_PAULI = ("I", "X", "Y", "Z")
+
+
+def _unit(unit: str) -> dict[str, Any]:
+    return {"unit": unit}
+
+
+@dataclass(frozen=True, slots=True)
+class Fidelity:
+    """One of the three fidelities of a gate, with what was adjusted for it.
+
+    Parameters
+    ----------
+    average_gate_fidelity : float
+        F_avg = (d F_pro + 1 - L1)/(d + 1).
+    process_fidelity : float
+        F_pro = Tr(S_U^dag S_E)/d^2 over the computational subspace.
+    error_bar : float
+        Bound on the error of `average_gate_fidelity` from the circuit simulator's step and
+        tolerances; NaN when the floor run was left out.
+    process_error_bar : float
+        The same for `process_fidelity`.
+    z_before, z_after : float
+        Angles in rad of the virtual Z before and after the gate; 0 where nothing is adjusted.
+    amplitude_scale : float
+        Factor on the drive; 1 where nothing is adjusted.
+    detuning : float
+        Offset added to the carrier in Hz; 0 where nothing is adjusted.
+    """
+
+    average_gate_fidelity: float = field(metadata=_unit("1"))
+    process_fidelity: float = field(metadata=_unit("1"))
+    error_bar: float = field(default=float("nan"), metadata=_unit("1"))
+    process_error_bar: float = field(default=float("nan"), metadata=_unit("1"))
+    z_before: float = field(default=0.0, metadata=_unit("rad"))
+    z_after: float = field(default=0.0, metadata=_unit("rad"))
+    amplitude_scale: float = field(default=1.0, metadata=_unit("1"))
+    detuning: float = field(default=0.0, metadata=_unit("Hz"))
+
+    @property
+    def infidelity(self) -> float:
+        """1 - F_avg."""
+        return 1.0 - self.average_gate_fidelity
+
+
+@dataclass(frozen=True, slots=True)
+class RotationFound:
+    """The rotation nearest to the simulated channel.
+
+    Parameters
+    ----------
+    axis : tuple of three floats
+        Unit vector (x, y, z).
+    angle : float
+        Angle in rad, 0 to pi.
+    """
+
+    axis: tuple[float, float, float] = field(metadata=_unit("1"))
+    angle: float = field(metadata=_unit("rad"))
+
+
+@dataclass(frozen=True, slots=True)
+class Channel:
+    """The simulated channel in the qubit's own frame.
+
+    Parameters
+    ----------
+    superoperator : ndarray of complex, shape (levels^2, levels^2)
+        Column-stacking convention.
+    pauli_transfer_matrix : ndarray, shape (4, 4)
+        R_ij = Tr(P_i E(P_j))/2 on the computational subspace.
+    """
+
+    superoperator: ComplexArray = field(
+        metadata={"unit": "1", "axes": ("operator_out", "operator_in")}
+    )
+    pauli_transfer_matrix: FloatArray = field(
+        metadata={
+            "unit": "1",
+            "axes": ("pauli_out", "pauli_in"),
+            "labels": {"pauli_out": _PAULI, "pauli_in": _PAULI},
+        }
+    )
+
+
+@dataclass(frozen=True, slots=True)
+class RunRecord:
+    """What is needed to check a run in two years.
+
+    Parameters
+    ----------
+    started : str
+        Start as ISO 8601 with UTC offset.
+    host : str
+        Name of the machine and its operating system.
+    versions : dict of str
+        Package or program to version.
+    seed : int
+        Seed of the deck's random functions.
+    wall_times : dict of float
+        Stage to wall-clock time in s.
+    testbench : str
+        The testbench as TOML, complete.
+    deck_files : tuple of DeckFile
+        Every file of the deck as its author wrote it.
+    deck_sent : str
+        The deck exactly as it was sent to the simulator.
+    log : tuple of str
+        The simulator's log.
+    points : int
+        Time points of the transient.
+    step : float
+        Time step in s.
+    steps_per_period : float
+        Carrier period over step.
+    status : str
+        "done".
+    """
+
+    started: str
+    host: str
+    versions: dict[str, str]
+    seed: int
+    wall_times: dict[str, float] = field(metadata=_unit("s"))
+    testbench: str
+    deck_files: tuple[DeckFile, ...]
+    deck_sent: str
+    log: tuple[str, ...]
+    points: int = field(metadata=_unit("1"))
+    step: float = field(metadata=_unit("s"))
+    steps_per_period: float = field(metadata=_unit("1"))
+    status: str = "done"
+
+
+@dataclass(frozen=True, slots=True)
+class GateResult:
+    """A gate as the netlist plays it.
+
+    Parameters
+    ----------
+    title : str
+        Title of the testbench.
+    target : str
+        The target rotation in words.
+    as_simulated, free_frame, calibrated : Fidelity
+        Nothing adjusted; best over virtual Z before and after; also over one amplitude scale
+        (and one carrier offset if the testbench lists it).
+    leakage : float
+        L1, population that leaves the computational subspace, averaged over its states.
+    seepage : float
+        L2, population that comes back from the other levels; 0 for two levels.
+    numerical_floor : float
+        1 - F_avg between the channel and that of a second run at half the step and tighter
+        tolerances; NaN when that run was left out.
+    rotating_wave_error : float
+        1 - F_avg between the headline channel and that of the rotating-wave path, which is
+        solved by an independent solver on the demodulated envelope.
+    phase_slip : float
+        Z rotation in rad that a phase reference must absorb per gate, the sum of the two
+        angles of `free_frame`, in (-pi, pi].
+    rotation : RotationFound
+        Axis and angle of the unitary nearest to the channel.
+    unitarity : float
+        1 for a unitary channel.
+    carrier_frequency : float
+        In Hz, given or estimated.
+    qubit_frequency : float
+        In Hz.
+    window : tuple of two floats
+        Start and end of the gate in s.
+    pulse : PulseMeasures
+        The pulse at the probe.
+    waveform : Waveform
+        At the probe, on the simulator's own grid.
+    envelope : Envelope
+        I + jQ at the probe.
+    channel : Channel
+        As simulated.
+    extra : dict of Waveform
+        Further vectors that the testbench asked to keep.
+    warnings : tuple of str
+        What the reader must know before using the numbers.
+    run : RunRecord
+        Deck, testbench, versions, times, log.
+    """
+
+    title: str
+    target: str
+    as_simulated: Fidelity
+    free_frame: Fidelity
+    calibrated: Fidelity
+    leakage: float = field(metadata=_unit("1"))
+    seepage: float = field(metadata=_unit("1"))
+    numerical_floor: float = field(metadata=_unit("1"))
+    rotating_wave_error: float = field(metadata=_unit("1"))
+    phase_slip: float = field(metadata=_unit("rad"))
+    rotation: RotationFound
+    unitarity: float = field(metadata=_unit("1"))
+    carrier_frequency: float = field(metadata=_unit("Hz"))
+    qubit_frequency: float = field(metadata=_unit("Hz"))
+    window: tuple[float, float] = field(metadata=_unit("s"))
+    pulse: PulseMeasures
+    waveform: Waveform
+    envelope: Envelope
+    channel: Channel
+    extra: dict[str, Waveform]
+    warnings: tuple[str, ...]
+    run: RunRecord
+
+
+# Classes by the tag that the archive keeps.
+KINDS: dict[str, type] = {
+    cls.__name__: cls
+    for cls in (
+        GateResult,
+        Fidelity,
+        RotationFound,
+        Channel,
+        RunRecord,
+        PulseMeasures,
+        Waveform,
+        Envelope,
+        DeckFile,
+    )
+}
+
+# What `--json` prints of a gate, in this order.
+GATE_FIELDS = (
+    "as_simulated",
+    "free_frame",
+    "calibrated",
+    "leakage",
+    "seepage",
+    "numerical_floor",
+    "rotating_wave_error",
+    "phase_slip",
+    "rotation",
+    "unitarity",
+    "carrier_frequency",
+    "warnings",
+)
+
+
+def as_numbers(result: object) -> dict[str, Any]:
+    """Turn a gate result into plain numbers for machines.
+
+    Parameters
+    ----------
+    result : GateResult
+        The result of a run.
+
+    Returns
+    -------
+    dict
+        The fields of `GATE_FIELDS`; a number that does not exist is None.
+
+    Raises
+    ------
+    InputError
+        If the result is of another kind.
+    """
+    if not isinstance(result, GateResult):
+        raise InputError(f"wanted a gate result, got {type(result).__name__}")
+    return {name: _plain(getattr(result, name)) for name in GATE_FIELDS}
+
+
+def _plain(value: Any) -> Any:
+    if isinstance(value, float):
+        return value if value == value else None
+    if isinstance(value, tuple):
+        return [_plain(item) for item in value]
+    if isinstance(value, (Fidelity, RotationFound)):
+        return {name: _plain(getattr(value, name)) for name in value.__slots__}
+    return value

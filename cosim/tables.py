@@ -1,0 +1,202 @@
+"""Results as tables for a terminal."""
+
+import math
+from collections.abc import Mapping, Sequence
+
+import numpy as np
+from rich.console import Group
+from rich.table import Table
+from rich.text import Text
+
+from cosim.checks import Finding
+from cosim.result import Fidelity, GateResult
+from cosim.units import format_quantity
+
+CAUTION = (
+    "Design estimate from simulation: measured data, the laboratory's cryogenic and electrical "
+    "safety rules and local codes decide."
+)
+
+
+def check_table(findings: Sequence[Finding]) -> Table:
+    """Lay out what `check` found.
+
+    Parameters
+    ----------
+    findings : sequence of Finding
+        Name and text of each.
+
+    Returns
+    -------
+    rich.table.Table
+        One row each.
+    """
+    table = _plain_table()
+    for item in findings:
+        table.add_row(item.label, item.text)
+    return table
+
+
+def result_table(result: GateResult) -> Group:
+    """Lay out a gate result.
+
+    Parameters
+    ----------
+    result : GateResult
+        The result of a run.
+
+    Returns
+    -------
+    rich.console.Group
+        Heading, fidelities, further numbers, the pulse, warnings and the caution.
+    """
+    parts = [
+        Text(result.title or "gate", style="bold"),
+        Text(_heading(result)),
+        _fidelity_table(result),
+        _number_table(result),
+    ]
+    parts += [Text(f"warning: {line}", style="yellow") for line in result.warnings]
+    parts.append(Text(CAUTION, style="dim"))
+    return Group(*parts)
+
+
+def _heading(result: GateResult) -> str:
+    start, stop = result.window
+    return (
+        f"target {result.target}, window {format_quantity(start, 's')} to "
+        f"{format_quantity(stop, 's')}, carrier {format_quantity(result.carrier_frequency, 'Hz', 7)}"
+        f", step {format_quantity(result.run.step, 's', 5)} "
+        f"({result.run.steps_per_period:.4g} per period), {result.run.points} points"
+    )
+
+
+def _fidelity_table(result: GateResult) -> Table:
+    views = (result.as_simulated, result.free_frame, result.calibrated)
+    table = Table(box=None, pad_edge=False, header_style="bold")
+    table.add_column("")
+    for name in ("as simulated", "free frame", "calibrated"):
+        table.add_column(name, justify="right")
+
+    def row(label: str, texts: Sequence[str]) -> None:
+        table.add_row(label, *texts)
+
+    row("process fidelity", [f"{view.process_fidelity:.7f}" for view in views])
+    row("average gate fidelity", [f"{view.average_gate_fidelity:.7f}" for view in views])
+    row("infidelity 1 - F_avg", [_infidelity(view) for view in views])
+    row("virtual Z before, after", [_degrees(view.z_before, view.z_after) for view in views])
+    row("amplitude scale", [f"{view.amplitude_scale:.5f}" for view in views])
+    if result.calibrated.detuning != 0.0:
+        row("carrier offset", [format_quantity(view.detuning, "Hz") for view in views])
+    return table
+
+
+def _infidelity(view: Fidelity) -> str:
+    bar = "" if math.isnan(view.error_bar) else f" ± {view.error_bar:.1e}"
+    return f"{view.infidelity:.3e}{bar}"
+
+
+def _degrees(before: float, after: float) -> str:
+    if before == after == 0.0:
+        return "-"
+    return f"{math.degrees(before):+.3f}°, {math.degrees(after):+.3f}°"
+
+
+def _number_table(result: GateResult) -> Table:
+    table = _plain_table()
+    axis = ", ".join(f"{part:+.5f}" for part in result.rotation.axis)
+    pulse = result.pulse
+    unit = result.waveform.unit
+    table.add_row("rotation", f"{math.degrees(result.rotation.angle):.4f}° about ({axis})")
+    table.add_row("phase slip per gate", f"{math.degrees(result.phase_slip):+.4f}°")
+    table.add_row("leakage, seepage", f"{result.leakage:.2e}, {result.seepage:.2e}")
+    table.add_row("unitarity", f"{result.unitarity:.7f}")
+    table.add_row("numerical floor", _or_dash(result.numerical_floor, "run with --floor"))
+    table.add_row("rotating-wave error", f"{result.rotating_wave_error:.2e}")
+    table.add_row(
+        "pulse at the probe",
+        f"{format_quantity(pulse.amplitude, unit)} peak, "
+        f"{format_quantity(pulse.duration, 's')} at half height, rise "
+        f"{format_quantity(pulse.rise_time, 's')}, fall {format_quantity(pulse.fall_time, 's')}",
+    )
+    table.add_row(
+        "carrier at the probe",
+        f"phase {math.degrees(pulse.phase_error):+.3f}°, "
+        f"off by {format_quantity(pulse.frequency_error, 'Hz')}, "
+        f"extinction {pulse.extinction:.1f} dB",
+    )
+    return table
+
+
+def _or_dash(value: float, otherwise: str) -> str:
+    return f"- ({otherwise})" if math.isnan(value) else f"{value:.2e}"
+
+
+def record_table(result: GateResult) -> Table:
+    """Lay out where a result comes from.
+
+    Parameters
+    ----------
+    result : GateResult
+        The result of a run.
+
+    Returns
+    -------
+    rich.table.Table
+        Start, host, versions, times and files.
+    """
+    table = _plain_table()
+    record = result.run
+    table.add_row("started", record.started)
+    table.add_row("host", record.host)
+    table.add_row("versions", ", ".join(f"{k} {v}" for k, v in record.versions.items()))
+    table.add_row(
+        "wall time", ", ".join(f"{name} {1e3 * t:.0f} ms" for name, t in record.wall_times.items())
+    )
+    table.add_row("deck files", "\n".join(file.path for file in record.deck_files))
+    return table
+
+
+def runs_table(columns: Mapping[str, np.ndarray]) -> Table:
+    """Lay out the runs of an archive.
+
+    Parameters
+    ----------
+    columns : mapping of ndarray, each of shape (runs,)
+        From `cosim.archive.read_table`.
+
+    Returns
+    -------
+    rich.table.Table
+        One row per run.
+    """
+    table = Table(box=None, pad_edge=False, header_style="bold")
+    shown = {
+        "run": "id",
+        "status": "status",
+        "started": "start_time",
+        "target": "target",
+        "title": "title",
+        "process fidelity": "free_frame.process_fidelity",
+        "1 - F_avg": "free_frame.average_gate_fidelity",
+    }
+    present = {label: name for label, name in shown.items() if name in columns}
+    for label in present:
+        table.add_column(label)
+    count = len(next(iter(columns.values()))) if columns else 0
+    for index in range(count):
+        table.add_row(*(_cell(label, columns[name][index]) for label, name in present.items()))
+    return table
+
+
+def _cell(label: str, value: object) -> str:
+    if isinstance(value, (float, np.floating)):
+        return f"{1.0 - value:.3e}" if label.startswith("1 -") else f"{value:.7f}"
+    return value.decode() if isinstance(value, bytes) else str(value)
+
+
+def _plain_table() -> Table:
+    table = Table(box=None, pad_edge=False, show_header=False)
+    table.add_column(style="bold", no_wrap=True)
+    table.add_column()
+    return table

@@ -1,0 +1,125 @@
+"""Oracle: Python's own parser reading every import of the package."""
+
+import ast
+from pathlib import Path
+
+import pytest
+
+import cosim
+
+PACKAGE = Path(cosim.__file__).parent
+FILES = sorted(PACKAGE.rglob("*.py"))
+
+# Floor of each room; imports go downwards, or sideways only within the same room.
+FLOORS = {
+    "errors": 0,
+    "units": 0,
+    "config": 0,
+    "waveform": 0,
+    "archive": 1,
+    "circuit": 1,
+    "dsp": 1,
+    "quantum": 1,
+    "coupling": 2,
+    "testbench": 3,
+    "result": 3,
+    "capture": 4,
+    "adjust": 4,
+    "gate": 4,
+    "dispatch": 4,
+    "checks": 6,
+    "tables": 6,
+    "figures": 6,
+    "cli": 6,
+    "__main__": 6,
+}
+WINGS = {"circuit", "dsp", "quantum", "archive"}
+
+# Imports inside functions that start-up time asks for, and no others.
+LATE = {"cli.py", "units.py"}
+
+
+def room(file: Path) -> str:
+    return file.relative_to(PACKAGE).parts[0].removesuffix(".py")
+
+
+def imported_rooms(file: Path) -> set[str]:
+    found = set()
+    for node in ast.walk(ast.parse(file.read_text(encoding="utf-8"))):
+        if isinstance(node, ast.ImportFrom):
+            assert node.level == 0, f"{file}: relative import in line {node.lineno}"
+            names = [node.module or ""]
+            if node.module == "cosim":
+                names = [f"cosim.{alias.name}" for alias in node.names]
+        elif isinstance(node, ast.Import):
+            names = [alias.name for alias in node.names]
+        else:
+            continue
+        found |= {name.split(".")[1] for name in names if name.startswith("cosim.")}
+    return found
+
+
+@pytest.mark.parametrize("file", FILES, ids=lambda file: str(file.relative_to(PACKAGE)))
+def test_imports_go_downwards(file: Path) -> None:
+    if file == PACKAGE / "__init__.py":
+        return  # The door names all rooms, for type checkers only; the next tests see to it.
+    here = room(file)
+    for other in imported_rooms(file):
+        assert FLOORS[other] <= FLOORS[here], f"{here} imports {other}, which is above it"
+        if here != other and here in WINGS:
+            assert other not in WINGS, f"the wings {here} and {other} import one another"
+
+
+def test_rooms_of_one_floor_do_not_import_in_circles() -> None:
+    edges = {name: set() for name in FLOORS}
+    for file in FILES:
+        if room(file) in edges:
+            edges[room(file)] |= imported_rooms(file) - {room(file)}
+    done: set[str] = set()
+    while len(done) < len(edges):
+        ready = {name for name, others in edges.items() if name not in done and others <= done}
+        assert ready, f"a circle among {sorted(set(edges) - done)}"
+        done |= ready
+
+
+def test_every_room_has_a_floor() -> None:
+    assert {room(file) for file in FILES} - {"__init__"} == set(FLOORS)
+
+
+@pytest.mark.parametrize("wing", ["circuit", "dsp", "quantum"])
+def test_a_wings_init_holds_a_docstring_only(wing: str) -> None:
+    body = ast.parse((PACKAGE / wing / "__init__.py").read_text(encoding="utf-8")).body
+    assert len(body) == 1
+    assert isinstance(body[0], ast.Expr)
+
+
+@pytest.mark.parametrize("file", FILES, ids=lambda file: str(file.relative_to(PACKAGE)))
+def test_imports_stand_at_the_top(file: Path) -> None:
+    if file.name in LATE:
+        return
+    tree = ast.parse(file.read_text(encoding="utf-8"))
+    for function in ast.walk(tree):
+        if isinstance(function, (ast.FunctionDef, ast.AsyncFunctionDef)):
+            for node in ast.walk(function):
+                assert not isinstance(node, (ast.Import, ast.ImportFrom)), (
+                    f"{file}:{node.lineno}: import inside {function.name}"
+                )
+
+
+@pytest.mark.parametrize("file", FILES, ids=lambda file: str(file.relative_to(PACKAGE)))
+def test_modules_stay_readable(file: Path) -> None:
+    # A module over this length is split by noun (a rule of the house, see DEVELOPERS.md).
+    assert len(file.read_text(encoding="utf-8").splitlines()) <= 420
+
+
+@pytest.mark.parametrize("file", FILES, ids=lambda file: str(file.relative_to(PACKAGE)))
+def test_no_keyword_catch_all_and_no_function_named_like_its_module(file: Path) -> None:
+    tree = ast.parse(file.read_text(encoding="utf-8"))
+    for node in ast.walk(tree):
+        if isinstance(node, ast.FunctionDef):
+            assert node.args.kwarg is None, f"{file}:{node.lineno}: **{node.args.kwarg.arg}"
+    names = {path.stem for path in FILES}
+    for node in tree.body:
+        if isinstance(node, ast.FunctionDef) and not node.name.startswith("_"):
+            clash = node.name in names and (file.parent / f"{node.name}.py").exists()
+            assert not clash, f"{file}: importing the module {node.name} shadows the function"
