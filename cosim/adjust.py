@@ -8,7 +8,7 @@ import numpy as np
 from scipy.optimize import minimize, minimize_scalar
 
 from cosim.quantum.evolution import DriveSpline, evolve
-from cosim.quantum.fidelity import FreeFrame, free_frame
+from cosim.quantum.frame import FreeFrame, free_frame
 from cosim.quantum.qubit import Qubit
 from cosim.waveform import ComplexArray
 

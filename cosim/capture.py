@@ -90,7 +90,7 @@ def make_plan(bench: Testbench) -> Plan:
     Returns
     -------
     Plan
-        Ready for `capture`.
+        Ready for `capture_probe`.
 
     Raises
     ------
@@ -220,7 +220,7 @@ def check_steps(count: float, period: float) -> tuple[str, ...]:
     return ()
 
 
-def capture(plan: Plan, *, progress: Callable[[float], None] | None = None) -> Capture:
+def capture_probe(plan: Plan, *, progress: Callable[[float], None] | None = None) -> Capture:
     """Simulate the deck and read the probe.
 
     Parameters

@@ -12,7 +12,7 @@ import numpy as np
 from scipy.interpolate import CubicSpline
 
 from cosim.adjust import Calibration, Pulse, calibrate_pulse
-from cosim.capture import Capture, Plan, capture, check_steps, make_plan
+from cosim.capture import Capture, Plan, capture_probe, check_steps, make_plan
 from cosim.coupling import DriveLine, drive_rate, rotating_rate
 from cosim.dsp.carrier import estimate_carrier
 from cosim.dsp.demodulate import demodulate
@@ -21,21 +21,21 @@ from cosim.dsp.resample import interpolant
 from cosim.quantum.channel import check_channel, nearest_unitary, pauli_transfer_matrix
 from cosim.quantum.evolution import DriveSpline
 from cosim.quantum.fidelity import (
-    FreeFrame,
-    apply_frame,
+    Rotation,
     average_gate_fidelity,
     channel_distance,
-    free_frame,
     leakage,
     process_fidelity,
     rotation_of,
     seepage,
+    target_unitary,
     unitarity,
 )
 from cosim.quantum.qubit import Qubit
 from cosim.quantum.reference import evolve_rotating_wave
-from cosim.quantum.targets import Target, named_target, rotation_target
-from cosim.result import Channel, Fidelity, GateResult, RotationFound, RunRecord
+from cosim.quantum.frame import FreeFrame, free_frame, phase_frame
+from cosim.quantum.targets import target_rotation
+from cosim.result import Channel, Fidelity, GateResult, RunRecord
 from cosim.testbench import Testbench
 from cosim.waveform import ComplexArray, Envelope, Waveform
 
@@ -60,6 +60,25 @@ class _Frame:
     target: Target
 
 
+@dataclass(frozen=True, slots=True)
+class Target:
+    """What the gate is meant to do.
+
+    Parameters
+    ----------
+    name : str
+        In words.
+    angle : float
+        Angle of the rotation in rad.
+    unitary : ndarray of complex, shape (2, 2)
+        R_n(angle) = exp(-i angle n.sigma/2).
+    """
+
+    name: str
+    angle: float
+    unitary: ComplexArray
+
+
 def gate_target(bench: Testbench) -> Target:
     """Read the target of a testbench.
 
@@ -71,17 +90,22 @@ def gate_target(bench: Testbench) -> Target:
     Returns
     -------
     Target
-        Name, axis, angle and unitary.
+        Name, angle and unitary.
 
     Raises
     ------
     InputError
         If a rotation of that name does not exist, or an axis has no length.
     """
-    target = bench.gate.target
-    if isinstance(target, str):
-        return named_target(target)
-    return rotation_target(target.axis, target.angle)
+    wanted = bench.gate.target
+    if isinstance(wanted, str):
+        rotation = target_rotation(wanted)
+        name = wanted
+    else:
+        rotation = Rotation(wanted.axis, wanted.angle)
+        axis = ", ".join(f"{part:g}" for part in wanted.axis)
+        name = f"{math.degrees(wanted.angle):g}° about ({axis})"
+    return Target(name, rotation.angle, target_unitary(rotation.axis, rotation.angle))
 
 
 def run_gate(bench: Testbench, *, progress: Callable[[float], None] | None = None) -> GateResult:
@@ -110,7 +134,7 @@ def run_gate(bench: Testbench, *, progress: Callable[[float], None] | None = Non
     target = gate_target(bench)
     plan = make_plan(bench)
     clock.lap("deck")
-    shot = capture(plan, progress=progress)
+    shot = capture_probe(plan, progress=progress)
     clock.lap_simulation(shot)
     frame, notices = _fix_frame(bench, plan, shot.waveform, target)
     pulse = _pulse(frame, shot.waveform)
@@ -119,7 +143,7 @@ def run_gate(bench: Testbench, *, progress: Callable[[float], None] | None = Non
     check_channel(channel)
     clock.lap("evolution")
     envelope = demodulate(shot.waveform, frame.carrier_frequency)
-    measures = measure_pulse(shot.waveform, frame.carrier_frequency)
+    measures = measure_pulse(shot.waveform, frame.carrier_frequency, envelope=envelope)
     clock.lap("demodulation")
     twin = _rotating_wave_twin(frame, envelope)
     clock.lap("rotating-wave twin")
@@ -153,7 +177,7 @@ def run_gate(bench: Testbench, *, progress: Callable[[float], None] | None = Non
         numerical_floor=floor,
         rotating_wave_error=channel_distance(channel, twin),
         phase_slip=math.remainder(free.before + free.after, 2.0 * math.pi),
-        rotation=RotationFound(axis=rotation.axis, angle=rotation.angle),
+        rotation=rotation,
         unitarity=unitarity(channel),
         carrier_frequency=frame.carrier_frequency,
         qubit_frequency=frame.qubit.frequency,
@@ -259,7 +283,7 @@ def _second_pulse(
     """Simulate once more at half the step, in the frame that the first run fixed."""
     if not bench.accuracy.floor:
         return None
-    shot = capture(plan.half_step(), progress=progress)
+    shot = capture_probe(plan.half_step(), progress=progress)
     clock.lap_simulation(shot, "floor ")
     return _pulse(frame, shot.waveform)
 
@@ -299,10 +323,10 @@ class _Views:
     def _fidelity(
         self, channel: ComplexArray, frame: FreeFrame, other: ComplexArray | None
     ) -> Fidelity:
-        average, process = self._pair(apply_frame(channel, frame.before, frame.after))
+        average, process = self._pair(phase_frame(channel, frame.before, frame.after))
         bars = (math.nan, math.nan)
         if other is not None:
-            again = self._pair(apply_frame(other, frame.before, frame.after))
+            again = self._pair(phase_frame(other, frame.before, frame.after))
             distance = channel_distance(channel, other)
             bars = (
                 error_bar(average, again[0], distance),

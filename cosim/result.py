@@ -6,6 +6,7 @@ from typing import Any
 from cosim.circuit.netlist import DeckFile
 from cosim.dsp.pulse import PulseMeasures
 from cosim.errors import InputError
+from cosim.quantum.fidelity import Rotation
 from cosim.waveform import ComplexArray, Envelope, FloatArray, Waveform
 
 _PAULI = ("I", "X", "Y", "Z")
@@ -51,22 +52,6 @@ class Fidelity:
     def infidelity(self) -> float:
         """1 - F_avg."""
         return 1.0 - self.average_gate_fidelity
-
-
-@dataclass(frozen=True, slots=True)
-class RotationFound:
-    """The rotation nearest to the simulated channel.
-
-    Parameters
-    ----------
-    axis : tuple of three floats
-        Unit vector (x, y, z).
-    angle : float
-        Angle in rad, 0 to pi.
-    """
-
-    axis: tuple[float, float, float] = field(metadata=_unit("1"))
-    angle: float = field(metadata=_unit("rad"))
 
 
 @dataclass(frozen=True, slots=True)
@@ -168,7 +153,7 @@ class GateResult:
     phase_slip : float
         Z rotation in rad that a phase reference must absorb per gate, the sum of the two
         angles of `free_frame`, in (-pi, pi].
-    rotation : RotationFound
+    rotation : Rotation
         Axis and angle of the unitary nearest to the channel.
     unitarity : float
         1 for a unitary channel.
@@ -204,7 +189,7 @@ class GateResult:
     numerical_floor: float = field(metadata=_unit("1"))
     rotating_wave_error: float = field(metadata=_unit("1"))
     phase_slip: float = field(metadata=_unit("rad"))
-    rotation: RotationFound
+    rotation: Rotation
     unitarity: float = field(metadata=_unit("1"))
     carrier_frequency: float = field(metadata=_unit("Hz"))
     qubit_frequency: float = field(metadata=_unit("Hz"))
@@ -224,7 +209,7 @@ KINDS: dict[str, type] = {
     for cls in (
         GateResult,
         Fidelity,
-        RotationFound,
+        Rotation,
         Channel,
         RunRecord,
         PulseMeasures,
@@ -279,6 +264,6 @@ def _plain(value: Any) -> Any:
         return value if value == value else None
     if isinstance(value, tuple):
         return [_plain(item) for item in value]
-    if isinstance(value, (Fidelity, RotationFound)):
+    if isinstance(value, (Fidelity, Rotation)):
         return {name: _plain(getattr(value, name)) for name in value.__slots__}
     return value
