@@ -165,8 +165,8 @@ def pauli_transfer_matrix(superop: ComplexArray, levels: int | None = None) -> F
     equation (2.8).
     """
     _check_levels(superop, levels)
-    vectors = PAULI.reshape(4, 4, order="C").conj()
-    # Row-stacking the conjugate equals column-stacking the Hermitian matrix itself.
+    # Row-stacking the conjugate of a Hermitian matrix column-stacks the matrix itself.
+    vectors = PAULI.reshape(4, 4).conj()
     block = restrict(superop, (0, 1))
     return np.ascontiguousarray((vectors.conj() @ block @ vectors.T).real / 2)
 

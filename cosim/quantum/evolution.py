@@ -93,7 +93,7 @@ class StepPlan:
 
     begin: FloatArray
     length: FloatArray
-    piece: FloatArray
+    piece: kernel.IndexArray
     kick: FloatArray
 
 

@@ -20,8 +20,11 @@ import math
 
 import numba
 import numpy as np
+import numpy.typing as npt
 
 from cosim.waveform import ComplexArray, FloatArray
+
+IndexArray = npt.NDArray[np.int64]
 
 GAUSS_OFFSET = math.sqrt(15) / 10  # Outer Gauss nodes from the middle, in units of the step.
 UNIFORM = 1e-6  # Two steps count as equal when their lengths differ by less than this part.
@@ -48,9 +51,7 @@ def _nodes(
 
 
 @numba.njit(cache=True, nogil=True)
-def _step_two(
-    u: ComplexArray, b1: complex, b2: complex, b3: complex, h: float
-) -> None:
+def _step_two(u: ComplexArray, b1: complex, b2: complex, b3: complex, h: float) -> None:
     """Advance a two-level unitary by one step; the generator is -i (x sigma_x + ...)/2."""
     # b multiplies |0><1|, so the Bloch vector of the generator is 2 (Re b, -Im b, 0).
     x1, y1 = 2 * h * b2.real, -2 * h * b2.imag
@@ -191,7 +192,7 @@ def _set_identity(u: ComplexArray) -> None:
 def unitary_product(
     begin: FloatArray,
     length: FloatArray,
-    piece: FloatArray,
+    piece: IndexArray,
     t: FloatArray,
     c: FloatArray,
     omega: float,
@@ -287,7 +288,7 @@ def _dissipate(
 def channel_product(
     begin: FloatArray,
     length: FloatArray,
-    piece: FloatArray,
+    piece: IndexArray,
     kick: FloatArray,
     t: FloatArray,
     c: FloatArray,
@@ -350,8 +351,8 @@ def channel_product(
 
 @numba.njit(cache=True, nogil=True)
 def place_kicks(
-    begin: FloatArray, length: FloatArray, piece: FloatArray, half: float
-) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
+    begin: FloatArray, length: FloatArray, piece: IndexArray, half: float
+) -> tuple[FloatArray, FloatArray, IndexArray, FloatArray]:
     """Form Simpson panels of equal steps and place the dissipation in them.
 
     Parameters
