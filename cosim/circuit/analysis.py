@@ -16,6 +16,21 @@ def _positive(name: str, value: float) -> None:
 class Tolerances:
     """Newton tolerances of a run, sent as `.options`.
 
+    The time step stays fixed whatever they are (`trtol=1e6`). Measured on the 52-MOSFET pulse
+    modulator, 64500 points, at T/80; error of the complex area of v(t) exp(-j omega t) against
+    reltol 1e-7 on the same grid, cost against reltol 1e-3:
+
+        reltol   error    cost
+        1e-3     4e-4     1.00
+        1e-4     1.6e-5   1.03    the default
+        1e-5     1.5e-6   1.11    its `tighter()`; 4e-7 at half the step
+        1e-6     5e-7     1.20
+
+    Halving the step itself moves the area by 1.1e-3, so the default leaves the step in charge. A
+    gated BSIM4 mixer gave 2e-5, 4e-6, 2e-7 and 4e-10. `vntol` from 1e-6 V to 1e-10 V changed
+    none of these digits: 1e-8 V serves decks whose signals are microvolts. An `abstol` of 1e-15 A
+    lies below the rounding of a supply's current and let a run fail, so `tighter()` keeps it.
+
     Parameters
     ----------
     reltol : float
@@ -42,8 +57,8 @@ class Tolerances:
             raise InputError(f"Tolerances.reltol must be below 1, got {self.reltol:g}")
 
     def tighter(self) -> "Tolerances":
-        """Give the tolerances of the half-step run, each ten times smaller."""
-        return Tolerances(self.reltol / 10, self.vntol / 10, self.abstol / 10)
+        """Give the tolerances of the half-step run: `reltol` and `vntol` ten times smaller."""
+        return Tolerances(self.reltol / 10, self.vntol / 10, self.abstol)
 
 
 @dataclass(frozen=True, slots=True)
