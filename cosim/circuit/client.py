@@ -7,6 +7,7 @@ import importlib.util
 import os
 import select
 import shutil
+import site
 import subprocess
 import sys
 import tempfile
@@ -29,7 +30,7 @@ ANSWER_MARGIN = 30.0  # s beyond the run's own limit, which the host itself enfo
 CLOSE_LIMIT = 5.0  # s for the host to remove its folder
 
 # Nothing else of the caller's environment reaches the simulator: no SPICE_* search path, no HOME
-# with a start file, no PYTHONPATH that would shadow a module.
+# with a start file.
 _PASSED_VARIABLES = ("PATH", "TMPDIR", "LD_LIBRARY_PATH")
 _FOLDERS = (
     "/usr/local/lib",
@@ -121,6 +122,27 @@ def _temporary_folder() -> str:
     )
 
 
+def _environment(library: str, scratch: str) -> dict[str, str]:
+    """Give the host's environment: an allow-list, so that no start file or search path gets in."""
+    spec = importlib.util.find_spec("PySpice")
+    if spec is None or spec.origin is None:
+        raise MissingDependencyError("PySpice is not installed", hint="type: pip install PySpice")
+    environment = {name: os.environ[name] for name in _PASSED_VARIABLES if name in os.environ}
+    environment |= {name: text for name, text in os.environ.items() if name[:9] == "OPENBLAS_"}
+    environment |= {
+        "HOME": scratch,
+        "LC_ALL": "C",
+        "OMP_NUM_THREADS": "1",
+        "OPENBLAS_NUM_THREADS": "1",
+        "NGSPICE_LIBRARY_PATH": library,
+    }
+    folder = str(Path(spec.origin).parents[1])
+    if folder not in site.getsitepackages():
+        # Installed for one user, or found through PYTHONPATH, neither of which the host inherits.
+        environment["PYTHONPATH"] = folder
+    return environment
+
+
 class Client:
     """One host process and the pipes to it; for one process, one run at a time."""
 
@@ -196,37 +218,9 @@ class Client:
             return
         self._stop()
         library = find_simulator()
-        spec = importlib.util.find_spec("PySpice")
-        if spec is None or spec.origin is None:
-            raise MissingDependencyError(
-                "PySpice is not installed", hint="type: pip install PySpice"
-            )
         self._scratch = _temporary_folder()
-        Path(self._scratch, ".spiceinit").touch()
-        environment = {name: os.environ[name] for name in _PASSED_VARIABLES if name in os.environ}
-        environment |= {name: text for name, text in os.environ.items() if name[:9] == "OPENBLAS_"}
-        environment |= {
-            "HOME": self._scratch,
-            "LC_ALL": "C",
-            "OMP_NUM_THREADS": "1",
-            "OPENBLAS_NUM_THREADS": "1",
-            "NGSPICE_LIBRARY_PATH": library,
-        }
-        site = str(Path(spec.origin).parents[1])
-        with open(os.path.join(self._scratch, "host.err"), "wb") as errors:
-            self._process = subprocess.Popen(
-                [sys.executable, "-P", os.path.abspath(host.__file__), str(os.getpid()), site],
-                stdin=subprocess.PIPE,
-                stdout=subprocess.PIPE,
-                stderr=errors,
-                bufsize=0,
-                pipesize=host.PIPE_SIZE,
-                cwd=self._scratch,
-                env=environment,
-                start_new_session=True,
-            )
-        atexit.register(self.close)
         try:
+            self._process = self._launch(library)
             header, _ = self._receive(time.monotonic() + START_LIMIT)
             if header["kind"] == "failed":
                 raise MissingDependencyError(
@@ -237,6 +231,23 @@ class Client:
             self._stop()
             raise
         self.ready = header
+
+    def _launch(self, library: str) -> "subprocess.Popen[bytes]":
+        environment = _environment(library, self._scratch)
+        Path(self._scratch, ".spiceinit").touch()
+        atexit.register(self.close)
+        with open(os.path.join(self._scratch, "host.err"), "wb") as errors:
+            return subprocess.Popen(
+                [sys.executable, "-P", os.path.abspath(host.__file__), str(os.getpid())],
+                stdin=subprocess.PIPE,
+                stdout=subprocess.PIPE,
+                stderr=errors,
+                bufsize=0,
+                pipesize=host.PIPE_SIZE,
+                cwd=self._scratch,
+                env=environment,
+                start_new_session=True,
+            )
 
     def _ask(self, frame: bytes) -> None:
         self._start()
@@ -293,10 +304,12 @@ class Client:
             size = os.readv(pipe.fileno(), [view])
             if size == 0:
                 code = self._process.wait()
+                log = self._errors()
                 raise SimulatorCrashError(
-                    f"the simulator's host process ended unexpectedly with code {code}",
+                    f"the simulator's host process ended unexpectedly with code {code}"
+                    + (f": {log[-1]}" if log else ""),
                     hint="the next run starts a new one",
-                    log=self._errors(),
+                    log=log,
                 )
             view = view[size:]
         return buffer
@@ -313,6 +326,7 @@ class Client:
             return
         process, self._process = self._process, None
         scratch, self._scratch = self._scratch, ""
+        atexit.unregister(self.close)
         if process is None:
             shutil.rmtree(scratch, ignore_errors=True)
             return
@@ -328,7 +342,6 @@ class Client:
             process.kill()
             process.wait()
             shutil.rmtree(scratch, ignore_errors=True)
-            atexit.unregister(self.close)
 
 
 # By process id, because a forked child must not talk to the host of its parent.
@@ -336,7 +349,13 @@ _clients: dict[int, Client] = {}
 
 
 def client_of_this_process() -> Client:
-    """Give the one client of the running process, new after a fork."""
+    """Give the one client of the running process, new after a fork.
+
+    Returns
+    -------
+    Client
+        Its host starts with the first run.
+    """
     process = os.getpid()
     client = _clients.get(process)
     if client is None:

@@ -17,7 +17,7 @@ from cosim.errors import (
 )
 
 if TYPE_CHECKING:
-    from cosim.circuit.preparation import PreparedDeck
+    from cosim.circuit.deck import PreparedDeck
 
 LOG_SHOWN = 12  # lines of the log that an error carries
 WARNINGS_SHOWN = 50  # a kit's model checks can repeat a warning for each of its devices
@@ -62,7 +62,18 @@ _STEPPING_DETAIL = re.compile(
 
 
 def clean(log: Sequence[str]) -> tuple[str, ...]:
-    """Take the names of the streams off ngspice's lines."""
+    """Take the names of the streams off ngspice's lines.
+
+    Parameters
+    ----------
+    log : sequence of str
+        Lines as they came, with "stdout " or "stderr " in front.
+
+    Returns
+    -------
+    tuple of str
+        The lines without it.
+    """
     return tuple(re.sub(r"^(?:stdout|stderr) ", "", line).strip() for line in log)
 
 

@@ -1,6 +1,6 @@
 """The program that hosts libngspice: it loads the library once and forks one child per deck.
 
-Run as `python -P host.py PARENT_PID SITE_FOLDER` in an empty scratch folder; `client.py` starts it.
+Run as `python -P host.py PARENT_PID` in an empty scratch folder; `client.py` starts it.
 The host itself runs no deck: whatever a deck does to the library dies with its child. Requests come
 on standard input and answers leave on standard output as frames: a JSON header and raw bytes.
 
@@ -14,7 +14,7 @@ on standard input and answers leave on standard output as frames: a JSON header 
 
 End of file on standard input, or another parent process, means that the caller is gone: the host
 kills the child, removes the scratch folder and leaves. PySpice is imported here and nowhere else.
-The module itself imports the standard library only, because the client reads its frame functions.
+The file imports nothing of this package, so that it runs wherever the caller found the package.
 """
 
 import ctypes
@@ -34,6 +34,10 @@ import traceback
 from collections import deque
 from pathlib import Path
 from typing import Any, NoReturn
+
+if __name__ == "__main__":
+    # The client takes the frame functions from here and must not load PySpice by that.
+    from PySpice.Spice.NgSpice.Shared import NgSpiceShared
 
 FRAME = struct.Struct("<IQ")  # bytes of the JSON header, bytes of the payload
 PIPE_SIZE = 2**20  # bytes; a waveform then crosses a pipe in a few system calls
@@ -91,9 +95,6 @@ def unpack(frame: bytes) -> tuple[dict[str, Any], memoryview]:
 
 def load_library() -> Any:
     """Load libngspice through PySpice; give the instance, whose callbacks do nothing yet."""
-    # PySpice reads NGSPICE_LIBRARY_PATH when it is imported, so the import has to wait for `main`.
-    from PySpice.Spice.NgSpice.Shared import NgSpiceShared
-
     # PySpice logs each line of ngspice as an error; the callback below collects them instead.
     logging.getLogger("PySpice").setLevel(logging.CRITICAL + 1)
 
@@ -310,8 +311,8 @@ class Host:
 
 
 def main(arguments: list[str]) -> None:
-    """Serve the process with the given id; PySpice may lie in a folder of its own."""
-    parent, site = int(arguments[0]), arguments[1]
+    """Serve the process whose id is the only argument."""
+    parent = int(arguments[0])
     # ngspice writes to the standard streams itself; the frames keep descriptors of their own.
     source, target = os.dup(0), os.dup(1)
     nothing = os.open(os.devnull, os.O_RDWR)
@@ -320,7 +321,8 @@ def main(arguments: list[str]) -> None:
     # A SIGTERM to the whole job must not keep the host from removing its folder: the caller ends
     # by it, and then the host leaves by itself.
     signal.signal(signal.SIGTERM, signal.SIG_IGN)
-    sys.path.append(site)
+    # A caller that ignores the end of its children passes that on, and the host must wait for its.
+    signal.signal(signal.SIGCHLD, signal.SIG_DFL)
     scratch = os.getcwd()
     try:
         try:

@@ -11,7 +11,7 @@ from cosim.errors import ForbiddenDeckError
 __all__ = ["find_simulator", "simulate_prepared", "simulator_version"]
 
 if TYPE_CHECKING:
-    from cosim.circuit.preparation import PreparedDeck
+    from cosim.circuit.deck import PreparedDeck
 
 
 def simulate_prepared(

@@ -24,7 +24,7 @@ from cosim.errors import (
 from cosim.waveform import FloatArray
 
 if TYPE_CHECKING:
-    from cosim.circuit.preparation import PreparedDeck
+    from cosim.circuit.deck import PreparedDeck
 
 STOP_TOLERANCE = 1e-6  # of the stop time: ngspice ends on it to rounding, a truncated run far off
 MEMORY_MARGIN = 0.8  # of the limit; a child that dies by a signal above it ran out of memory
