@@ -133,7 +133,7 @@ def plan_steps(
     WaveformError
         If the window leaves the drive's time range.
     """
-    start, stop = _check_window(drive, start, stop)
+    start, stop = check_window(drive, start, stop)
     if refine < 1 or not phase_step > 0:
         raise InputError(
             f"wanted refine >= 1 and phase_step > 0, got {refine!r} and {phase_step!r}"
@@ -374,7 +374,7 @@ def _largest_rate(drive: DriveSpline, first: int, last: int) -> float:
     return float((((c[0] * h + c[1]) * h + c[2]) * h + c[3]).max())
 
 
-def _check_window(drive: DriveSpline, start: float, stop: float) -> tuple[float, float]:
+def check_window(drive: DriveSpline, start: float, stop: float) -> tuple[float, float]:
     if not (math.isfinite(start) and math.isfinite(stop) and stop > start):
         raise InputError(
             f"evolution window: wanted finite start < stop in s, got {start!r} and {stop!r}"

@@ -66,8 +66,8 @@ def process_fidelity(
     target = _check_target(target)
     m = target.shape[0]
     block = restrict(superop, _subspace(superop, m, subspace))
-    overlap = complex(np.vdot(unitary_superoperator(target), block))
-    return overlap.real / m**2
+    overlap = np.vdot(unitary_superoperator(target), block)
+    return float(overlap.real / m**2)
 
 
 def average_gate_fidelity(
@@ -95,7 +95,7 @@ def average_gate_fidelity(
     L. H. Pedersen, N. M. Moller, K. Molmer, "Fidelity of quantum operations", Phys. Lett. A 367,
     47 (2007), with the leakage L1 of a channel in place of that of a unitary.
     """
-    m = np.shape(target)[0]
+    m = len(target)
     process = process_fidelity(superop, target, subspace=subspace)
     lost = leakage(superop, _subspace(superop, m, subspace))
     return (m * process + 1 - lost) / (m + 1)

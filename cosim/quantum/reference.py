@@ -1,0 +1,173 @@
+"""QuTiP's solvers: the rotating-wave twin of every run, and the kernel's reference."""
+
+import math
+
+import numpy as np
+import qutip
+from scipy.interpolate import PPoly
+
+from cosim.errors import EvolutionError, InputError, WaveformError
+from cosim.quantum.channel import unitary_superoperator
+from cosim.quantum.evolution import DriveSpline, check_window
+from cosim.quantum.hamiltonian import anharmonic_energies
+from cosim.quantum.qubit import Qubit
+from cosim.waveform import ComplexArray, FloatArray
+
+# Verner's ninth-order pair: of QuTiP's integrators the most accurate for its time here.
+METHOD = "vern9"
+
+
+def evolve_rotating_wave(
+    qubit: Qubit, rate: ComplexArray, t: FloatArray, *, rtol: float = 1e-9
+) -> ComplexArray:
+    """Evolve a qubit in the rotating-wave approximation with QuTiP and give the channel.
+
+    Parameters
+    ----------
+    qubit : Qubit
+    rate : ndarray of complex, shape (n,)
+        Envelope of the drive rate in the qubit's frame in rad/s,
+        2 pi k (I + jQ) exp(j (omega_c - omega_q) t).
+    t : ndarray, shape (n,)
+        Times in s, a uniform rising grid, n >= 4. The channel is that from the first to the last.
+    rtol : float
+        Relative tolerance of the solver, 1e-13 to 1e-3; the absolute one is a hundredth of it.
+
+    Returns
+    -------
+    ndarray, shape (levels**2, levels**2)
+        Column-stacking superoperator in the frame rotating at the qubit's frequency, phase zero
+        at t = 0, as that of `cosim.quantum.evolution.evolve`.
+
+    Raises
+    ------
+    WaveformError
+        If the envelope is too short, not finite or not on a uniform rising grid.
+    InputError
+        If `rtol` is out of range.
+    EvolutionError
+        If the solver fails.
+
+    Notes
+    -----
+    H/hbar = (rate a + rate^* a^dag)/2 + anharmonic part; between samples the envelope is a cubic
+    spline. Measured at the default tolerance on a 120 ns pulse of 10 MHz: error 3e-10 for the
+    elements of the computational subspace, up to 2e-7 for those of the sixth level; 5 ms with 2
+    levels, 20 ms with 3, 120 ms with 4, 2.4 s with 6 (0.1 s with 6 and no loss).
+    """
+    rate, t = _check_envelope(rate, t)
+    a = qutip.Qobj(qubit.annihilation())
+    static = qutip.Qobj(np.diag(anharmonic_energies(qubit)))
+    envelope = qutip.coefficient(rate, tlist=t)
+    hamiltonian = qutip.QobjEvo([static, [a / 2, envelope], [a.dag() / 2, envelope.conj()]])
+    # The fastest of the drive's own rotation, the anharmonic phases and the envelope's changes;
+    # without the last the solver could step over a pulse that follows a long wait.
+    largest = float(np.abs(rate).max())
+    change = float(np.abs(np.diff(rate)).max() / (t[1] - t[0]) / largest) if largest > 0 else 0.0
+    fastest = max(
+        math.sqrt(qubit.levels - 1) * largest,
+        abs(2 * math.pi * qubit.anharmonicity) * (qubit.levels - 2),
+        change,
+    )
+    return _propagate(qubit, hamiltonian, float(t[0]), float(t[-1]), fastest, rtol)
+
+
+def evolve_reference(
+    qubit: Qubit, drive: DriveSpline, start: float, stop: float, *, rtol: float = 1e-11
+) -> ComplexArray:
+    """Evolve a qubit under the full drive with QuTiP and give the channel.
+
+    Parameters
+    ----------
+    qubit, drive, start, stop
+        As in `cosim.quantum.evolution.evolve`.
+    rtol : float
+        Relative tolerance of the solver, 1e-13 to 1e-3; the absolute one is a hundredth of it.
+
+    Returns
+    -------
+    ndarray, shape (levels**2, levels**2)
+        Column-stacking superoperator in the frame rotating at the qubit's frequency, phase zero
+        at t = 0.
+
+    Raises
+    ------
+    InputError
+        If the window is empty or `rtol` is out of range.
+    WaveformError
+        If the window leaves the drive's time range.
+    EvolutionError
+        If the solver fails.
+
+    Notes
+    -----
+    Solved in the laboratory frame, which the compiled kernel never uses, and turned into the
+    rotating frame at both ends.
+    """
+    start, stop = check_window(drive, start, stop)
+    d = qubit.levels
+    n = np.arange(float(d))
+    energies = qubit.omega * n + anharmonic_energies(qubit)
+    a = qutip.Qobj(qubit.annihilation())
+    rate = qutip.coefficient(PPoly(drive.c, drive.t))
+    hamiltonian = qutip.QobjEvo([qutip.Qobj(np.diag(energies)), [a + a.dag(), rate]])
+    fastest = float(np.ptp(energies))
+    channel = _propagate(qubit, hamiltonian, start, stop, fastest, rtol)
+    into = np.kron(np.exp(-1j * qubit.omega * stop * n), np.exp(1j * qubit.omega * stop * n))
+    back = np.kron(np.exp(1j * qubit.omega * start * n), np.exp(-1j * qubit.omega * start * n))
+    return np.asarray(into[:, None] * channel * back[None, :])
+
+
+def _propagate(
+    qubit: Qubit,
+    hamiltonian: qutip.QobjEvo,
+    start: float,
+    stop: float,
+    fastest: float,
+    rtol: float,
+) -> ComplexArray:
+    """Run QuTiP's propagator from start to stop; `fastest` in rad/s bounds its steps."""
+    if not 1e-13 <= rtol <= 1e-3:
+        raise InputError(f"solver tolerance: wanted rtol from 1e-13 to 1e-3, got {rtol!r}")
+    step = (stop - start) / 4
+    if fastest > 0:
+        step = min(step, math.pi / (2 * fastest))
+    options = {
+        "method": METHOD,
+        "rtol": rtol,
+        "atol": rtol / 100,
+        "max_step": step,
+        "nsteps": 10**8,
+        "progress_bar": "",
+    }
+    collapse = [qutip.Qobj(operator) for operator in qubit.collapse_operators()]
+    try:
+        propagators = qutip.propagator(hamiltonian, [start, stop], collapse, options=options)
+    except (qutip.IntegratorException, ValueError, ArithmeticError) as error:
+        raise EvolutionError(
+            f"QuTiP's solver failed between {start:.6g} s and {stop:.6g} s: {error}",
+            hint="loosen the tolerance or shorten the window",
+        ) from error
+    last = np.asarray(propagators[-1].full())
+    return unitary_superoperator(last) if qubit.lossless else last
+
+
+def _check_envelope(rate: ComplexArray, t: FloatArray) -> tuple[ComplexArray, FloatArray]:
+    rate = np.ascontiguousarray(rate, dtype=np.complex128)
+    t = np.ascontiguousarray(t, dtype=np.float64)
+    if t.ndim != 1 or rate.shape != t.shape or t.size < 4:
+        raise WaveformError(
+            f"envelope: wanted rate and time of one shape (n,) with n >= 4, got {rate.shape} and "
+            f"{t.shape}"
+        )
+    if not (np.isfinite(t).all() and np.isfinite(rate).all()):
+        bad = int(np.flatnonzero(~(np.isfinite(t) & np.isfinite(rate)))[0])
+        raise WaveformError(f"envelope: sample {bad} of {t.size} is not finite")
+    steps = np.diff(t)
+    mean = float(t[-1] - t[0]) / (t.size - 1)
+    if not (mean > 0 and np.abs(steps - mean).max() <= 1e-6 * mean):
+        raise WaveformError(
+            f"envelope: wanted a uniform rising time grid, got steps from {steps.min():.6g} s to "
+            f"{steps.max():.6g} s"
+        )
+    return rate, t
