@@ -228,7 +228,7 @@ def unitary_product(
         h = length[k]
         b1, b2, b3 = _nodes(begin[k], h, t[piece[k]], c, piece[k], omega)
         if d == 2:
-            _step_two(u, b1, b2, b3, h)
+            _step_two(u, ladder[0] * b1, ladder[0] * b2, ladder[0] * b3, h)
         else:
             _step_many(u, b1, b2, b3, h, ladder, energies, work)
     return u
@@ -340,7 +340,7 @@ def channel_product(
         h = length[k]
         b1, b2, b3 = _nodes(begin[k], h, t[piece[k]], c, piece[k], omega)
         if d == 2:
-            _step_two(u, b1, b2, b3, h)
+            _step_two(u, ladder[0] * b1, ladder[0] * b2, ladder[0] * b3, h)
         else:
             _step_many(u, b1, b2, b3, h, ladder, energies, work)
     for i in range(d):
