@@ -12,7 +12,7 @@ from collections import OrderedDict
 from dataclasses import dataclass
 
 from cosim.circuit.deck import DeckFile, SourceLine
-from cosim.errors import DeckError, ForbiddenDeckError, MissingFileError, UnsupportedDeckError
+from cosim.errors import ForbiddenDeckError, MissingFileError, UnsupportedDeckError
 
 LARGEST_FILE = 64 * 2**20  # byte; the largest process kits seen hold about 10 MB per file.
 _CACHED_FILES = 256
@@ -207,9 +207,151 @@ def split_source(file: DeckFile, *, is_deck: bool, pspice: bool = False) -> Sour
     marks = tuple(
         index
         for index, line in enumerate(lines)
-        if line.text[0] == "." and line.text[:4].lower() in (".inc", ".lib", ".end")
-        and not line.text[:5].lower() in (".end", ".ends", ".endi")
+        if line.text[0] == "."
+        and (line.text[:4].lower() in _CARD_WITH_PATH or line.text[:5].lower() == ".endl")
     )
-    return Source(
-        file, title, lines, marks, _sections(lines, marks), tuple(splitter.notices)
-    )
+    return Source(file, title, lines, marks, _sections(lines, marks), tuple(splitter.notices))
+
+
+def card_arguments(text: str) -> list[str]:
+    """Give the arguments of a `.include`, `.lib` or `.endl` card, quotes taken off."""
+    found = re.findall(r'"([^"]*)"|\'([^\']*)\'|([^\s"\']+)', text.partition(" ")[2])
+    return [first or second or third for first, second, third in found]
+
+
+def _sections(lines: tuple[SourceLine, ...], marks: tuple[int, ...]) -> dict[str, tuple[int, int]]:
+    sections: dict[str, tuple[int, int]] = {}
+    name, start = "", -1
+    for index in marks:
+        card = lines[index].text[:5].lower()
+        arguments = card_arguments(lines[index].text)
+        if card == ".endl":
+            if start >= 0:
+                sections.setdefault(name, (start, index))  # ngspice takes the first of two.
+            start = -1
+        elif card[:4] == ".lib" and len(arguments) == 1 and start < 0:
+            name, start = arguments[0].lower(), index + 1
+    return sections
+
+
+class _Splitter:
+    """Joins physical lines to logical ones; one per file."""
+
+    def __init__(self, path: str, pspice: bool) -> None:
+        self.path = path
+        self.lines: list[SourceLine] = []
+        self.notices: list[str] = []
+        self._comment = _COMMENT_PSPICE if pspice else _COMMENT
+        self._pieces: list[str] = []  # of the logical line that may still be continued
+        self._first = 0
+        self._glue = False  # The last line ended with two backslashes.
+        self._commands: list[str] | None = None  # of the command block that is open
+        self._block = 0
+        self._hidden: list[tuple[str, int]] | None = None  # lines between .prot and .unprot
+
+    def take(self, raw: str, number: int) -> bool:
+        """Take one physical line; False when ngspice would read no further."""
+        line = raw.strip(_SPACE)
+        if not line:
+            return True
+        first = line[0]
+        if self._commands is not None:
+            self._inside_block(line)
+        elif self._hidden is not None and not line.lower().startswith(".unprot"):
+            self._hidden.append((line, number))
+        elif first == "*" or first == "$" or line.startswith("//"):
+            self._comment_line(line, number)
+        elif first == ";":
+            pass
+        elif first == "@":
+            self.notices.append(
+                f"{self.path}:{number}: a line that starts with '@' ends the file for ngspice; "
+                "the rest is left out"
+            )
+            return False
+        else:
+            self._text(line, number)
+        return True
+
+    def _comment_line(self, line: str, number: int) -> None:
+        if _ENCRYPTED.match(line):
+            self._close()
+            self.lines.append(SourceLine(ENCRYPTED_CARD, self.path, number))
+        elif line.startswith("*#"):
+            self.notices.append(
+                f"{self.path}:{number}: command comment left out, it is never run: "
+                f"{_words([line[2:]])}"
+            )
+
+    def _text(self, line: str, number: int) -> None:
+        glued, self._glue = self._glue, line.endswith("\\\\")
+        if self._glue:
+            line = line[:-2]
+        card = line[:8].lower() if line[0] == "." and not glued else ""
+        if ";" in line or "$" in line or "//" in line:
+            rule = _COMMENT_PATH if card[:4] in _CARD_WITH_PATH else self._comment
+            found = rule.search(line)
+            if found:
+                line = line[: found.start()]
+        line = line.translate(_TRANSLATION).strip()
+        if line.startswith("+") or glued:
+            if not self._pieces:
+                self._first = number
+            elif line.startswith("+"):
+                line = line[1:].strip()
+            self._pieces.append(line)
+            return
+        self._close()
+        if card == ".control":
+            self._commands, self._block = [], number
+        elif card[:5] == ".prot":
+            self._hidden = []
+        elif card[:7] == ".unprot":
+            self._reveal(number)
+        elif line:
+            self._pieces, self._first = [line], number
+
+    def _inside_block(self, line: str) -> None:
+        assert self._commands is not None
+        if line.lower().startswith(".endc"):
+            self._end_block("")
+        elif line[0] not in "*$;+":
+            self._commands.append(line)
+
+    def _end_block(self, remark: str) -> None:
+        assert self._commands is not None
+        words = _words(self._commands) or "empty"
+        self.notices.append(
+            f"{self.path}:{self._block}: .control block left out, it is never run: {words}{remark}"
+        )
+        self._commands = None
+
+    def _reveal(self, number: int) -> None:
+        hidden, self._hidden = self._hidden or [], None
+        if all(_READABLE.match(line) and line.isprintable() for line, _ in hidden):
+            for line, at in hidden:
+                self.take(line, at)
+        else:
+            self.lines.append(SourceLine(ENCRYPTED_CARD, self.path, number))
+
+    def _close(self) -> None:
+        if self._pieces:
+            text = " ".join(self._pieces) if len(self._pieces) > 1 else self._pieces[0]
+            self.lines.append(SourceLine(text, self.path, self._first))
+            self._pieces = []
+
+    def finish(self) -> None:
+        """Close what is still open at the end of the file."""
+        if self._hidden is not None:
+            self._reveal(0)
+        if self._commands is not None:
+            self._end_block(
+                "; without .endc, so that everything to the end of the file is left out"
+            )
+        self._close()
+
+
+def _words(commands: list[str], most: int = 12) -> str:
+    words = [line.split(None, 1)[0] for line in commands if line.split()]
+    names = list(dict.fromkeys(words))
+    return ", ".join(names[:most]) + (", ..." if len(names) > most else "")

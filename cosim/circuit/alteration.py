@@ -1,0 +1,273 @@
+"""Altered copies of a deck: parameters, single instances, terminations."""
+
+import math
+import re
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field, replace
+
+from cosim.circuit.cards import assignments, masked, number_text, words
+from cosim.circuit.deck import Deck, SourceLine
+from cosim.circuit.hierarchy import Structure, structure_of, top_level_cards
+from cosim.circuit.lookup import find_node
+from cosim.circuit.scope import Scope, element_of
+from cosim.circuit.settings import with_settings
+from cosim.errors import InputError, UnknownNameError, near_names
+
+_VALUE_NAMES = {
+    "r": ("value", "r", "resistance"),
+    "c": ("value", "c", "capacitance"),
+    "l": ("value", "l", "inductance"),
+    "v": ("value", "dc"),
+    "i": ("value", "dc"),
+}
+"""Element letter -> names under which its value in the fourth place can be given."""
+
+
+def with_parameters(deck: Deck, parameters: Mapping[str, float]) -> Deck:
+    """Set top-level parameters of a deck.
+
+    Parameters
+    ----------
+    deck : Deck
+        The deck.
+    parameters : mapping of str to float
+        Name of a `.param` or `.csparam` in any case -> value in the deck's units.
+
+    Returns
+    -------
+    Deck
+        Every top-level assignment of these names has the new value; what is worked out from
+        them follows, and so do `tran` and `temperature`.
+
+    Raises
+    ------
+    UnknownNameError
+        If the deck has no such parameter at its top level.
+    InputError
+        If a value is not finite.
+    """
+    if not parameters:
+        return deck
+    wanted = {name.strip().lower(): _finite(name, value) for name, value in parameters.items()}
+    lines = list(deck.lines)
+    known: set[str] = set()
+    for index, line, card in top_level_cards(deck.lines):
+        if card not in (".param", ".csparam"):
+            continue
+        found = assignments(line.text)
+        known.update(item.name for item in found if "(" not in item.name)
+        text = line.text
+        for item in reversed(found):
+            if item.name in wanted:
+                value = number_text(wanted[item.name])
+                text = text[: item.value_start] + value + text[item.stop :]
+        if text != line.text:
+            lines[index] = SourceLine(text, line.file, line.line)
+    for name in wanted:
+        if name not in known:
+            raise UnknownNameError(
+                f"the deck has no top-level parameter '{name}'",
+                hint=near_names(name, known),
+                file=deck.path,
+            )
+    return with_settings(replace(deck, lines=tuple(lines)))
+
+
+def _finite(name: str, value: float) -> float:
+    if isinstance(value, bool | str) or not math.isfinite(value):
+        raise InputError(f"'{name}' must be a finite number, got {value!r}")
+    return float(value)
+
+
+def with_terminations(deck: Deck, nodes: Sequence[str], resistance: float) -> Deck:
+    """Tie nodes to ground with resistors.
+
+    Parameters
+    ----------
+    deck : Deck
+        The deck.
+    nodes : sequence of str
+        Node names in any case, hierarchical ones with dots.
+    resistance : float
+        Each resistor in ohm.
+
+    Returns
+    -------
+    Deck
+        With one resistor per node; its name collides with none of the deck.
+
+    Raises
+    ------
+    UnknownNameError
+        If a node does not exist.
+    InputError
+        If the resistance is not positive and finite, or a node is the ground.
+    """
+    if not (math.isfinite(resistance) and resistance > 0):
+        raise InputError(f"a termination must be positive and finite, got {resistance!r} ohm")
+    taken = structure_of(deck.lines).root.elements
+    added: list[SourceLine] = []
+    number = 0
+    for node in dict.fromkeys(find_node(deck, name) for name in nodes):
+        if node == "0":
+            raise InputError("the ground needs no termination")
+        number += 1
+        while f"rtermination{number}" in taken:
+            number += 1
+        added.append(SourceLine(f"rtermination{number} {node} 0 {number_text(resistance)}", "", 0))
+    return replace(deck, lines=(*deck.lines, *added))
+
+
+def with_instances(deck: Deck, instances: Mapping[str, Mapping[str, float]]) -> Deck:
+    """Set parameters of single instances, all others of the same kind unchanged.
+
+    Parameters
+    ----------
+    deck : Deck
+        The deck.
+    instances : mapping of str to mapping of str to float
+        Instance ("x1.xdac", or a device inside, "x1.m3") -> parameter -> value. The value of a
+        resistor, capacitor, inductor or DC source is its parameter "value".
+
+    Returns
+    -------
+    Deck
+        The definitions on the way to an instance are copied under names of their own.
+
+    Raises
+    ------
+    UnknownNameError
+        If an instance does not exist, or its subcircuit declares no such parameter.
+    InputError
+        If a value is not finite.
+    """
+    if not instances:
+        return deck
+    structure = structure_of(deck.lines)
+    tree = _Wish()
+    for path, parameters in instances.items():
+        at = tree
+        for part in path.strip().lower().split("."):
+            at = at.inner.setdefault(part, _Wish())
+        for name, value in parameters.items():
+            at.parameters[name.strip().lower()] = _finite(f"{path}.{name}", value)
+    change = _Change(structure, deck.path)
+    change.apply(structure.root, tree, "")
+    return with_settings(replace(deck, lines=change.render(0, len(deck.lines))))
+
+
+@dataclass(slots=True)
+class _Wish:
+    """Parameters wanted for an instance, and for what is inside it."""
+
+    parameters: dict[str, float] = field(default_factory=dict)
+    inner: dict[str, "_Wish"] = field(default_factory=dict)
+
+
+class _Change:
+    """Replaced and inserted lines, by index in the deck."""
+
+    def __init__(self, structure: Structure, path: str) -> None:
+        self.structure = structure
+        self.path = path
+        self.replaced: dict[int, SourceLine] = {}
+        self.inserted: dict[int, list[SourceLine]] = {}
+        self.copies = 0
+
+    def render(self, start: int, stop: int) -> tuple[SourceLine, ...]:
+        lines: list[SourceLine] = []
+        for index in range(start, stop):
+            lines.extend(self.inserted.get(index, ()))
+            lines.append(self.replaced.get(index, self.structure.lines[index]))
+        return tuple(lines)
+
+    def apply(self, scope: Scope, wish: _Wish, prefix: str) -> None:
+        """Alter the elements of a scope in place."""
+        for name, inner in wish.inner.items():
+            index = scope.elements.get(name)
+            if index is None:
+                raise UnknownNameError(
+                    f"instance '{prefix}{name}' does not exist",
+                    hint=near_names(prefix + name, [prefix + item for item in scope.elements]),
+                    file=self.path,
+                )
+            line = self.replaced.get(index, self.structure.lines[index])
+            text = line.text
+            for parameter, value in inner.parameters.items():
+                text = self._with_parameter(scope, name, line, text, parameter, value)
+            if inner.inner:
+                text = self._with_copy(scope, f"{prefix}{name}", line, text, inner)
+            self.replaced[index] = SourceLine(text, line.file, line.line)
+
+    def _with_parameter(
+        self, scope: Scope, name: str, line: SourceLine, text: str, parameter: str, value: float
+    ) -> str:
+        if name[0] == "x":
+            definition = scope.subcircuit(element_of(scope, line.text).reference)
+            declared = definition.parameters if definition else ()
+            if parameter not in declared and parameter != "m":
+                raise UnknownNameError(
+                    f"subcircuit '{definition.name if definition else '?'}' of '{name}' declares "
+                    f"no parameter '{parameter}'",
+                    hint=near_names(parameter, declared),
+                    file=line.file,
+                    line=line.line,
+                )
+        for item in assignments(text):
+            if item.name == parameter:
+                return text[: item.value_start] + number_text(value) + text[item.stop :]
+        if parameter in _VALUE_NAMES.get(name[0], ()):
+            return _with_value(text, value)
+        return f"{text} {parameter}={number_text(value)}"
+
+    def _with_copy(self, scope: Scope, path: str, line: SourceLine, text: str, wish: _Wish) -> str:
+        """Copy the definition that an instance uses, alter the copy, and use it."""
+        definition = scope.subcircuit(element_of(scope, line.text).reference)
+        if definition is None:
+            raise UnknownNameError(
+                f"'{path}' is a device and holds no '{next(iter(wish.inner))}'",
+                file=line.file,
+                line=line.line,
+            )
+        self.copies += 1
+        copy_name = f"{definition.name}_copy{self.copies}"
+        while scope.subcircuit(copy_name) is not None:
+            self.copies += 1
+            copy_name = f"{definition.name}_copy{self.copies}"
+        inner = _Change(self.structure, self.path)
+        inner.copies = self.copies
+        inner.apply(definition, wish, f"{path}.")
+        self.copies = inner.copies
+        copied = list(inner.render(definition.first, definition.stop))
+        header = copied[0]
+        copied[0] = replace(header, text=_with_word(header.text, definition.name, copy_name))
+        copied[-1] = replace(copied[-1], text=".ends")
+        for index, lines in inner.inserted.items():
+            if not definition.first < index < definition.stop:
+                self.inserted.setdefault(index, []).extend(lines)
+        self.inserted.setdefault(definition.first, []).extend(copied)
+        return _with_word(text, definition.name, copy_name, last=True)
+
+
+def _with_word(text: str, word: str, new: str, *, last: bool = False) -> str:
+    """Replace a subcircuit's name: the second word of a header, the last one of an instance."""
+    head = text
+    assigned = assignments(text)
+    if assigned:
+        head = text[: assigned[0].start]
+    pattern = re.compile(rf"(?<![^\s(),]){re.escape(word)}(?![^\s(),])", re.IGNORECASE)
+    found = list(pattern.finditer(masked(head) if not last else head))
+    match = found[-1] if last else found[0]
+    return text[: match.start()] + new + text[match.end() :]
+
+
+def _with_value(text: str, value: float) -> str:
+    """Replace the value in an element's fourth place, or the one after "dc"."""
+    covered = masked(text)
+    match = re.search(r"(?<![\w.])dc(?:\s*=\s*|\s+)([^\s,]+)", covered, re.IGNORECASE)
+    if match is None or text[0].lower() not in "vi":
+        match = re.match(r"\S+\s+\S+\s+\S+\s+([^\s,=]+)(?!\s*=)", covered)
+    if match is None:
+        name = words(text)[0]
+        raise UnknownNameError(f"'{name}' has no value that could be replaced in '{text}'")
+    return text[: match.start(1)] + number_text(value) + text[match.end(1) :]

@@ -1,0 +1,298 @@
+"""Subcircuits, instances, nodes and models of a deck, told from its lines.
+
+Which branch of an `.if` is there is worked out where the condition depends on top-level
+parameters alone; elsewhere all branches count, so that nothing that may exist is refused.
+"""
+
+import re
+from collections import OrderedDict
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass, field
+
+from cosim.circuit.cards import (
+    assignments,
+    card_word,
+    leading_words,
+    model_card,
+    words,
+)
+from cosim.circuit.deck import SourceLine
+from cosim.circuit.expression import Parameters
+from cosim.circuit.scope import MODEL_PLACE, Element, Scope, element_of
+from cosim.errors import DeckError, UnknownNameError, near_names
+
+_DEEPEST = 100  # levels of subcircuits
+
+
+@dataclass(slots=True, eq=False)
+class Structure:
+    """The scopes of a deck.
+
+    Parameters
+    ----------
+    lines : tuple of SourceLine
+        The deck's lines, to which all indices refer.
+    root : Scope
+        The top level.
+    global_nodes : frozenset of str
+        Nodes of `.global` cards.
+    parameters : Parameters
+        Values of the top-level parameters.
+    settings : tuple of int
+        Indices of the `.tran`, `.temp` and `.options` cards that are in force.
+    devices : dict of str to SourceLine
+        Element letter -> the first element of that kind that is used.
+    """
+
+    lines: tuple[SourceLine, ...]
+    root: Scope
+    global_nodes: frozenset[str]
+    parameters: Parameters
+    settings: tuple[int, ...]
+    devices: dict[str, SourceLine] = field(default_factory=dict)
+
+
+_recent: OrderedDict[int, Structure] = OrderedDict()
+_MOST_RECENT = 4
+
+
+def structure_of(lines: tuple[SourceLine, ...]) -> Structure:
+    """Find the scopes of a deck's lines and check what can be told of them.
+
+    Parameters
+    ----------
+    lines : tuple of SourceLine
+        The lines.
+
+    Returns
+    -------
+    Structure
+
+    Raises
+    ------
+    DeckError
+        If `.subckt` and `.ends` or `.if` and `.endif` do not match, or an instance has a wrong
+        number of nodes, or a subcircuit holds itself.
+    UnknownNameError
+        If a subcircuit or model does not exist.
+    """
+    known = _recent.get(id(lines))
+    if known is not None and known.lines is lines:  # The kept reference keeps the id valid.
+        return known
+    structure = _Builder(lines).build()
+    _check(structure)
+    _recent[id(lines)] = structure
+    while len(_recent) > _MOST_RECENT:
+        _recent.popitem(last=False)
+    return structure
+
+
+def top_level_parameters(lines: Sequence[SourceLine]) -> Parameters:
+    """Collect `.param`, `.csparam` and `.func` definitions outside of subcircuits."""
+    expressions: dict[str, str] = {}
+    functions: dict[str, tuple[tuple[str, ...], str]] = {}
+    for _, line, card in top_level_cards(lines):
+        if card in (".param", ".csparam"):
+            for item in assignments(line.text):
+                name, bracket, names = item.name.partition("(")
+                if bracket:
+                    functions[name] = _arguments(names), item.value
+                else:
+                    expressions[name] = item.value
+        elif card == ".func":
+            match = re.match(r"\.func\s+(\w+)\s*\(([^()]*)\)\s*=?\s*(.*)", line.text, re.I)
+            if match:
+                functions[match[1].lower()] = _arguments(match[2]), match[3]
+    return Parameters(expressions, functions)
+
+
+def _arguments(text: str) -> tuple[str, ...]:
+    return tuple(name.strip().lower() for name in text.rstrip(")").split(","))
+
+
+def top_level_cards(lines: Sequence[SourceLine]) -> Iterator[tuple[int, SourceLine, str]]:
+    """Give index, line and card of the dot cards outside of subcircuits."""
+    depth = 0
+    for index, line in enumerate(lines):
+        if line.text[0] == ".":
+            card = card_word(line.text)
+            if card == ".subckt":
+                depth += 1
+            elif card == ".ends":
+                depth -= 1
+            elif depth == 0:
+                yield index, line, card
+
+
+@dataclass(slots=True)
+class _Branch:
+    """One `.if` that is open: the value of the branch (None: cannot be told), what went before."""
+
+    value: bool | None
+    taken: bool | None
+    line: SourceLine
+
+
+class _Builder:
+    def __init__(self, lines: tuple[SourceLine, ...]) -> None:
+        self.lines = lines
+        self.parameters = top_level_parameters(lines)
+        self.root = Scope("", (), (), None, 0, len(lines))
+        self.scope = self.root
+        self.global_nodes: set[str] = set()
+        self.settings: list[int] = []
+        self.branches: list[_Branch] = []
+
+    def build(self) -> Structure:
+        for index, line in enumerate(self.lines):
+            if line.text[0] == ".":
+                self._card(index, line)
+            elif self._state() is not False:
+                name = line.text.split(None, 1)[0].lower()
+                self.scope.elements.setdefault(name, index)
+                if self._state() is None:
+                    self.scope.uncertain.add(index)
+        if self.scope is not self.root:
+            header = self.lines[self.scope.first]
+            raise DeckError(
+                f"subcircuit '{self.scope.name}' has no .ends",
+                file=header.file,
+                line=header.line,
+            )
+        if self.branches:
+            start = self.branches[-1].line
+            raise DeckError(".if without .endif", file=start.file, line=start.line)
+        return Structure(
+            self.lines,
+            self.root,
+            frozenset(self.global_nodes),
+            self.parameters,
+            tuple(self.settings),
+        )
+
+    def _state(self) -> bool | None:
+        """Whether the present line is there: yes, no, or cannot be told."""
+        values = [branch.value for branch in self.branches]
+        return False if False in values else None if None in values else True
+
+    def _card(self, index: int, line: SourceLine) -> None:
+        card = card_word(line.text)
+        if card in (".if", ".elseif", ".else", ".endif"):
+            self._condition(card, line)
+        elif card == ".subckt":
+            self._open(index, line)
+        elif card == ".ends":
+            if self.scope.parent is None:
+                raise DeckError(".ends without .subckt", file=line.file, line=line.line)
+            self.scope.stop = index + 1
+            self.scope = self.scope.parent
+        elif self._state() is False:
+            return
+        elif card == ".model":
+            name, kind = model_card(line.text)
+            self.scope.models.setdefault(name, kind)
+            stem, dot, bin_number = name.rpartition(".")
+            if dot and bin_number.isdigit():
+                self.scope.models.setdefault(stem, kind)
+        elif card == ".global":
+            self.global_nodes.update(words(line.text)[1:])
+        elif card in (".tran", ".temp", ".options"):
+            self.settings.append(index)
+
+    def _condition(self, card: str, line: SourceLine) -> None:
+        if card == ".if":
+            value = self._value(line)
+            self.branches.append(_Branch(value, value, line))
+            return
+        if not self.branches:
+            raise DeckError(f"{card} without .if", file=line.file, line=line.line)
+        if card == ".endif":
+            self.branches.pop()
+            return
+        branch = self.branches[-1]
+        value = True if card == ".else" else self._value(line)
+        before = branch.taken
+        if before is True:
+            branch.value = False
+        elif before is None:
+            branch.value = None if value is not False else False
+        else:
+            branch.value, branch.taken = value, value
+
+    def _value(self, line: SourceLine) -> bool | None:
+        if self.scope is not self.root:
+            return None  # It may depend on the parameters of each instance.
+        text = re.sub(r"^\.\w+", "", line.text)
+        value = self.parameters.value(text)
+        return None if value is None else bool(value)
+
+    def _open(self, index: int, line: SourceLine) -> None:
+        found = leading_words(line.text)
+        if len(found) < 2:
+            raise DeckError(".subckt without a name", file=line.file, line=line.line)
+        declared = tuple(item.name for item in assignments(line.text))
+        scope = Scope(found[1], found[2:], declared, self.scope, index, -1)
+        if self._state() is not False:
+            self.scope.inner.setdefault(found[1], scope)  # ngspice takes the first of two.
+        self.scope = scope
+
+
+def _check(structure: Structure) -> None:
+    """Check the references of all scopes that are used."""
+    done: set[Scope] = set()
+
+    def visit(scope: Scope, way: tuple[Scope, ...]) -> None:
+        if scope in done:
+            return
+        if scope in way or len(way) > _DEEPEST:
+            header = structure.lines[scope.first]
+            names = " > ".join(item.name for item in (*way[1:], scope))
+            problem = "a subcircuit holds itself" if scope in way else "too many levels"
+            raise DeckError(f"{problem}: {names}", file=header.file, line=header.line)
+        for index in scope.elements.values():
+            line = structure.lines[index]
+            element = element_of(scope, line.text)
+            structure.devices.setdefault(element.letter, line)
+            definition = _check_element(scope, element, line, index in scope.uncertain)
+            if definition is not None:
+                visit(definition, (*way, scope))
+        done.add(scope)
+
+    visit(structure.root, ())
+
+
+def _check_element(
+    scope: Scope, element: Element, line: SourceLine, uncertain: bool
+) -> Scope | None:
+    """Check one element; give the definition that an X element uses."""
+    if element.letter == "x":
+        definition = scope.subcircuit(element.reference)
+        if definition is None:
+            if uncertain:
+                return None
+            raise UnknownNameError(
+                f"subcircuit '{element.reference}' of '{element.name}' is not defined",
+                hint=near_names(element.reference, scope.visible_subcircuits()),
+                file=line.file,
+                line=line.line,
+            )
+        if len(definition.ports) != len(element.nodes):
+            raise DeckError(
+                f"'{element.name}' gives {len(element.nodes)} nodes to subcircuit "
+                f"'{definition.name}', which has {len(definition.ports)}: "
+                f"{' '.join(definition.ports)}",
+                file=line.file,
+                line=line.line,
+            )
+        return definition
+    needs_model = element.letter in MODEL_PLACE or element.letter in "ap"
+    if not needs_model or uncertain or element.reference[:1] in ("{", "'", '"'):
+        return None
+    if scope.model(element.reference) is None:
+        raise UnknownNameError(
+            f"model '{element.reference}' of '{element.name}' is not defined",
+            hint=near_names(element.reference, scope.visible_models()),
+            file=line.file,
+            line=line.line,
+        )
+    return None

@@ -1,0 +1,288 @@
+"""Finding nodes and devices by their hierarchical names, and the vectors that ngspice saves."""
+
+import re
+from collections.abc import Sequence
+from dataclasses import dataclass
+from itertools import islice
+
+from cosim.circuit.deck import Deck
+from cosim.circuit.hierarchy import Structure, structure_of
+from cosim.circuit.scope import GROUND, Scope, element_of
+from cosim.errors import DeckError, ProbeError, UnknownNameError, near_names
+
+_MOST_NODES = 5_000_000
+_MOST_OFFERED = 2000
+_BRANCH_LETTERS = frozenset("vleh")
+_CURRENT = {
+    "r": "i", "c": "i", "g": "i", "f": "i", "s": "i", "w": "i", "d": "id", "m": "id", "j": "id",
+    "z": "id", "q": "ic", "i": "current",
+}  # fmt: skip
+_SAVE = re.compile(r"([vi])\s*\((.*)\)", re.DOTALL)
+_PARAMETER = re.compile(r"@(.+)\[([^\[\]]+)\]", re.DOTALL)
+
+
+def own_nodes(structure: Structure, scope: Scope) -> frozenset[str]:
+    """Nodes that the elements of one scope name, ground left out."""
+    if scope.nodes is None:
+        found: set[str] = set()
+        for index in scope.elements.values():
+            found.update(element_of(scope, structure.lines[index].text).nodes)
+        scope.nodes = frozenset(found - GROUND)
+    return scope.nodes
+
+
+def node_names(deck: Deck) -> frozenset[str]:
+    """Give the nodes of a deck, flattened.
+
+    Parameters
+    ----------
+    deck : Deck
+        The deck.
+
+    Returns
+    -------
+    frozenset of str
+        Names in lower case as ngspice has them ("out", "x1.x2.mid"), ground left out.
+
+    Raises
+    ------
+    DeckError
+        If the deck's structure is wrong, or it has more than five million nodes.
+    """
+    structure = structure_of(deck.lines)
+    names: set[str] = set()
+
+    def add(scope: Scope, prefix: str) -> None:
+        skip = structure.global_nodes | set(scope.ports)
+        inner = own_nodes(structure, scope)
+        if not prefix:
+            names.update(inner)
+        else:
+            names.update(prefix + name for name in inner - skip)
+            names.update(inner & structure.global_nodes)
+        if len(names) > _MOST_NODES:
+            raise DeckError(f"the deck has more than {_MOST_NODES} nodes", file=deck.path)
+        for name, definition in instances(structure, scope):
+            add(definition, f"{prefix}{name}.")
+
+    add(structure.root, "")
+    return frozenset(names)
+
+
+def instances(structure: Structure, scope: Scope) -> list[tuple[str, Scope]]:
+    """Give name and definition of the subcircuit instances of a scope."""
+    found = []
+    for name, index in scope.elements.items():
+        if name[0] == "x":
+            element = element_of(scope, structure.lines[index].text)
+            definition = scope.subcircuit(element.reference)
+            if definition is not None:
+                found.append((name, definition))
+    return found
+
+
+def find_node(deck: Deck, name: str) -> str:
+    """Find a node by its hierarchical name.
+
+    Parameters
+    ----------
+    deck : Deck
+        The deck.
+    name : str
+        Node name, in any case: "out", "x1.x2.mid"; a subcircuit's port seen from inside counts.
+
+    Returns
+    -------
+    str
+        The node as ngspice has it; the outer net for a port, "0" for ground.
+
+    Raises
+    ------
+    UnknownNameError
+        If there is no such node.
+    """
+    structure = structure_of(deck.lines)
+    rest = name.strip().lower()
+    frame = _Frame(structure.root, "", {})
+    while True:
+        node = frame.net(structure, rest)
+        if rest in GROUND or rest in structure.global_nodes or rest in frame.outer:
+            return node
+        if rest in own_nodes(structure, frame.scope):
+            return node
+        head, dot, tail = rest.partition(".")
+        inner = frame.enter(structure, head) if dot else None
+        if inner is None:
+            raise UnknownNameError(
+                f"node '{frame.prefix}{rest}' does not exist",
+                hint=near_names(frame.prefix + rest, frame.names(structure)),
+                file=deck.path,
+            )
+        frame, rest = inner, tail
+
+
+@dataclass(frozen=True, slots=True)
+class _Frame:
+    """One instance: its definition, the prefix of its names, and where its ports are tied to."""
+
+    scope: Scope
+    prefix: str
+    outer: dict[str, str]
+
+    def net(self, structure: Structure, node: str) -> str:
+        """Give ngspice's name of a node of this instance."""
+        if node in GROUND:
+            return "0"
+        if node in structure.global_nodes:
+            return node
+        return self.outer.get(node, self.prefix + node)
+
+    def enter(self, structure: Structure, name: str) -> "_Frame | None":
+        """Go into a subcircuit instance; None when there is none of that name."""
+        index = self.scope.elements.get(name)
+        if name[:1] != "x" or index is None:
+            return None
+        element = element_of(self.scope, structure.lines[index].text)
+        definition = self.scope.subcircuit(element.reference)
+        if definition is None:
+            return None
+        nets = [self.net(structure, node) for node in element.nodes]
+        ports = dict(zip(definition.ports, nets, strict=False))
+        return _Frame(definition, f"{self.prefix}{name}.", ports)
+
+    def names(self, structure: Structure) -> list[str]:
+        """Names to offer when one was not found here."""
+        known = list(islice(own_nodes(structure, self.scope) | set(self.outer), _MOST_OFFERED))
+        inner: list[str] = []
+        for name, definition in islice(instances(structure, self.scope), 50):
+            nodes = islice(own_nodes(structure, definition), 50)
+            inner.extend(f"{name}.{node}" for node in nodes)
+        return [self.prefix + name for name in known + inner]
+
+
+@dataclass(frozen=True, slots=True)
+class Device:
+    """A device: its name in ngspice ("l.x1.l3"), its letter and its line."""
+
+    name: str
+    letter: str
+    text: str
+
+
+def find_device(deck: Deck, name: str) -> Device:
+    """Find a device by its hierarchical name.
+
+    Parameters
+    ----------
+    deck : Deck
+        The deck.
+    name : str
+        "l1", "x1.l3", or as ngspice has it, "l.x1.l3".
+
+    Returns
+    -------
+    Device
+
+    Raises
+    ------
+    UnknownNameError
+        If there is no such device.
+    """
+    structure = structure_of(deck.lines)
+    wanted = name.strip().lower()
+    parts = wanted.split(".")
+    if len(parts) > 2 and len(parts[0]) == 1 and parts[-1][:1] == parts[0]:
+        parts = parts[1:]
+    frame = _Frame(structure.root, "", {})
+    for part in parts[:-1]:
+        inner = frame.enter(structure, part)
+        if inner is None:
+            offered = [f"{frame.prefix}{item}" for item, _ in instances(structure, frame.scope)]
+            raise UnknownNameError(
+                f"instance '{frame.prefix}{part}' of '{wanted}' does not exist",
+                hint=near_names(frame.prefix + part, offered),
+                file=deck.path,
+            )
+        frame = inner
+    index = frame.scope.elements.get(parts[-1])
+    if index is None:
+        offered = [frame.prefix + item for item in islice(frame.scope.elements, _MOST_OFFERED)]
+        raise UnknownNameError(
+            f"device '{wanted}' does not exist",
+            hint=near_names(frame.prefix + parts[-1], offered),
+            file=deck.path,
+        )
+    letter = parts[-1][0]
+    flat = f"{letter}.{frame.prefix}{parts[-1]}" if frame.prefix else parts[-1]
+    return Device(flat, letter, structure.lines[index].text)
+
+
+def resolve_saves(deck: Deck, saves: Sequence[str]) -> dict[str, str]:
+    """Give the name in ngspice's plot of each vector that is asked for.
+
+    Parameters
+    ----------
+    deck : Deck
+        The deck.
+    saves : sequence of str
+        "v(node)", "i(device)" or "@device[parameter]", hierarchical names with dots. The current
+        of a device without a branch of its own is read from the device: i(r1) is @r1[i].
+
+    Returns
+    -------
+    dict of str
+        Expression in lower case -> name of the vector in ngspice's plot.
+
+    Raises
+    ------
+    UnknownNameError
+        If a node or device does not exist.
+    ProbeError
+        If an expression cannot be read, or a device has no current that ngspice saves.
+    """
+    return {save.strip().lower(): _vector(deck, save.strip().lower()) for save in saves}
+
+
+def _vector(deck: Deck, save: str) -> str:
+    match = _SAVE.fullmatch(save)
+    if match and match[1] == "v":
+        node = find_node(deck, match[2])
+        if node == "0":
+            raise ProbeError(f"'{save}' is the ground, which is 0 V and not saved")
+        # ngspice names the vector of a node that starts with a digit "V(3)".
+        return f"V({node})" if node[0].isdigit() else node
+    if match:
+        return _current(find_device(deck, match[2]), save)
+    match = _PARAMETER.fullmatch(save)
+    if match:
+        return f"@{find_device(deck, match[1]).name}[{match[2].strip()}]"
+    raise ProbeError(
+        f"'{save}' is nothing that ngspice saves",
+        hint="Write v(node), i(device) or @device[parameter].",
+    )
+
+
+def _current(device: Device, save: str) -> str:
+    behavioural = re.search(r"(?<![\w.])[vi]\s*\(", device.text, re.IGNORECASE)
+    polynomial = re.search(r"\bpoly\b", device.text, re.IGNORECASE)
+    if device.letter == "b":
+        voltage = re.search(r"(?<![\w.])v\s*=", device.text, re.IGNORECASE)
+        return f"{device.name}#branch" if voltage else f"@{device.name}[i]"
+    if not polynomial:
+        if device.letter in _BRANCH_LETTERS and not (device.letter == "l" and behavioural):
+            return f"{device.name}#branch"
+        if device.letter in _CURRENT and not (device.letter in "rcl" and behavioural):
+            return f"@{device.name}[{_CURRENT[device.letter]}]"
+    raise ProbeError(
+        f"ngspice saves no current for '{save}'",
+        hint="Put a source of 0 V in series in the deck and probe its current.",
+    )
+
+
+def save_expression(vector: str) -> str:
+    """Give the `.save` item for the name of a vector."""
+    if vector.endswith("#branch"):
+        return f"i({vector.removesuffix('#branch')})"
+    if vector.startswith("@"):
+        return vector
+    return vector.lower() if vector.startswith("V(") else f"v({vector})"

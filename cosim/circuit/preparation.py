@@ -1,0 +1,151 @@
+"""The exact list of lines that ngspice gets for one run."""
+
+from cosim.circuit.analysis import TransientRequest
+from cosim.circuit.cards import SETTING_CARDS, card_word, number_text
+from cosim.circuit.deck import Deck, PreparedDeck, SourceLine, unique, where
+from cosim.circuit.hierarchy import Structure, structure_of
+from cosim.circuit.lookup import resolve_saves, save_expression
+from cosim.circuit.safety import check_lines
+from cosim.circuit.settings import CELSIUS, filtered_options
+from cosim.errors import DeckError
+
+_TITLE = "transient run"
+_COLDEST_JUNCTION = 20.0  # K; below it, measured, ngspice's diode and BJT do not converge.
+_FIXED_GRID = 1e6  # trtol and xtrtol: error control never moves a step.
+
+
+def prepare(deck: Deck, request: TransientRequest) -> PreparedDeck:
+    """Write the list of lines for one transient run.
+
+    Parameters
+    ----------
+    deck : Deck
+        The deck.
+    request : TransientRequest
+        Times in s, temperature in K, tolerances, vectors to save.
+
+    Returns
+    -------
+    PreparedDeck
+        The deck's circuit, with the bridge's title, options, temperature, analysis and saves.
+
+    Raises
+    ------
+    ForbiddenDeckError
+        If a line would run a command, or read or write a file.
+    UnsupportedDeckError
+        If ngspice does not know a line, or the deck has diodes or bipolar transistors below 20 K.
+    UnknownNameError
+        If a node or device to save does not exist.
+    ProbeError
+        If a save expression cannot be read.
+    """
+    structure = structure_of(deck.lines)
+    keys = resolve_saves(deck, request.saves)
+    own: dict[str, float | str] = {
+        "reltol": request.tolerances.reltol,
+        "vntol": request.tolerances.vntol,
+        "abstol": request.tolerances.abstol,
+        "method": "trap",
+        "trtol": _FIXED_GRID,
+        "xtrtol": _FIXED_GRID,
+    }
+    notices: list[str] = []
+    body: list[SourceLine] = [_own_line(_options_text(own))]
+    in_force = set(structure.settings)
+    temperature = _temperature_cards(deck, request, structure, notices)
+    body.extend(temperature)
+    for index, line in enumerate(deck.lines):
+        card = card_word(line.text)
+        if card not in SETTING_CARDS:
+            body.append(line)
+        elif card == ".options" and index in in_force:
+            filtered = filtered_options(line, own)
+            notices.extend(filtered.notices)
+            if filtered.line.text:
+                body.append(filtered.line)
+    if keys:
+        items = unique(save_expression(vector) for vector in keys.values())
+        body.append(_own_line(".save " + " ".join(items)))
+    body.append(_own_line(_transient_text(request)))
+    body.append(_own_line(".end"))
+    check_lines(body)
+    mode = _flat_mode(deck.compatibility)
+    return PreparedDeck(
+        lines=(_TITLE, *(line.text for line in body)),
+        origins=(("", 0), *((line.file, line.line) for line in body)),
+        keys=keys,
+        commands=(*((f"set ngbehavior={mode}",) if mode else ()), f"setseed {request.seed}"),
+        data={file.name: file.content for file in deck.data_files},
+        notices=unique((*deck.notices, *notices)),
+    )
+
+
+def _own_line(text: str) -> SourceLine:
+    return SourceLine(text, "", 0)
+
+
+def _options_text(own: dict[str, float | str]) -> str:
+    return ".options " + " ".join(
+        f"{name}={value if isinstance(value, str) else number_text(value)}"
+        for name, value in own.items()
+    )
+
+
+def _transient_text(request: TransientRequest) -> str:
+    step, stop, start = (number_text(t) for t in (request.step, request.stop, request.start))
+    return f".tran {step} {stop} {start} {step}" + (" uic" if request.initial == "uic" else "")
+
+
+def _flat_mode(compatibility: str | None) -> str:
+    """Give the mode that applies to the whole list.
+
+    Without the "a" behind, ngspice applies its dialects to included files only, and the list
+    that is sent includes none.
+    """
+    mode = compatibility or ""
+    return (
+        mode + "a" if mode and mode != "spe" and not mode.endswith("a") and mode != "all" else mode
+    )
+
+
+def _temperature_cards(
+    deck: Deck, request: TransientRequest, structure: Structure, notices: list[str]
+) -> list[SourceLine]:
+    """Give the temperature cards, and look whether the models reach that low."""
+    temperature = request.temperature
+    if temperature is None:
+        temperature = deck.temperature
+    elif deck.temperature is not None and abs(temperature - deck.temperature) > 1e-9:
+        notices.append(
+            f"the testbench's device temperature of {temperature:g} K replaces the deck's "
+            f"{deck.temperature:g} K"
+        )
+    if temperature is None:
+        # A card whose value only ngspice can work out stays; without one the default is 27 C.
+        lines = (structure.lines[index] for index in structure.settings)
+        return [line for line in lines if card_word(line.text) == ".temp"]
+    if temperature < _COLDEST_JUNCTION:
+        _check_cold(structure, temperature, notices)
+    return [_own_line(f".temp {temperature - CELSIUS:.12g}")]
+
+
+def _check_cold(structure: Structure, temperature: float, notices: list[str]) -> None:
+    for letter in ("d", "q"):
+        line = structure.devices.get(letter)
+        if line is not None:
+            raise DeckError(
+                f"ngspice's diode and bipolar models do not converge below "
+                f"{_COLDEST_JUNCTION:g} K, the device temperature is {temperature:g} K",
+                hint="Give the temperature at which the cards were fitted as the device "
+                "temperature; the noise temperature is set apart from it.",
+                file=line.file,
+                line=line.line,
+            )
+    line = structure.devices.get("m")
+    if line is not None:
+        notices.append(
+            f"{where(line)}: MOS models are uncalibrated at {temperature:g} K: below "
+            f"{_COLDEST_JUNCTION:g} K they converge to unphysical mobilities unless their cards "
+            "were fitted there"
+        )
