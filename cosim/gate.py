@@ -18,6 +18,7 @@ from cosim.dsp.carrier import estimate_carrier
 from cosim.dsp.demodulate import demodulate
 from cosim.dsp.pulse import measure_pulse
 from cosim.dsp.resample import interpolant
+from cosim.fidelities import Views
 from cosim.quantum.channel import check_channel, nearest_unitary, pauli_transfer_matrix
 from cosim.quantum.evolution import DriveSpline
 from cosim.quantum.fidelity import (
@@ -25,15 +26,14 @@ from cosim.quantum.fidelity import (
     average_gate_fidelity,
     channel_distance,
     leakage,
-    process_fidelity,
     rotation_of,
     seepage,
     target_unitary,
     unitarity,
 )
+from cosim.quantum.frame import FreeFrame, free_frame
 from cosim.quantum.qubit import Qubit
 from cosim.quantum.reference import evolve_rotating_wave
-from cosim.quantum.frame import FreeFrame, free_frame, phase_frame
 from cosim.quantum.targets import target_rotation
 from cosim.result import Channel, Fidelity, GateResult, RunRecord
 from cosim.testbench import Testbench
@@ -47,17 +47,6 @@ LEVELS_TOLERANCE = 1e-6
 EDGE_TOLERANCE = 1e-3
 
 PACKAGES = ("qcosim", "numpy", "scipy", "qutip", "PySpice", "numba", "h5py")
-
-
-@dataclass(frozen=True, slots=True)
-class _Frame:
-    """What the first run fixes for both: carrier, qubit, line, window, target."""
-
-    carrier_frequency: float
-    qubit: Qubit
-    line: DriveLine
-    window: tuple[float, float]
-    target: Target
 
 
 @dataclass(frozen=True, slots=True)
@@ -108,6 +97,16 @@ def gate_target(bench: Testbench) -> Target:
     return Target(name, rotation.angle, target_unitary(rotation.axis, rotation.angle))
 
 
+@dataclass(frozen=True, slots=True)
+class _Frame:
+    """What the first run fixes for both: carrier, qubit, line, window."""
+
+    carrier_frequency: float
+    qubit: Qubit
+    line: DriveLine
+    window: tuple[float, float]
+
+
 def run_gate(bench: Testbench, *, progress: Callable[[float], None] | None = None) -> GateResult:
     """Run a testbench with a gate from the netlist to its fidelity.
 
@@ -136,7 +135,7 @@ def run_gate(bench: Testbench, *, progress: Callable[[float], None] | None = Non
     clock.lap("deck")
     shot = capture_probe(plan, progress=progress)
     clock.lap_simulation(shot)
-    frame, notices = _fix_frame(bench, plan, shot.waveform, target)
+    frame, notices = _fix_frame(bench, plan, shot.waveform)
     pulse = _pulse(frame, shot.waveform)
     clock.lap("interpolation")
     channel = pulse.channel()
@@ -152,7 +151,7 @@ def run_gate(bench: Testbench, *, progress: Callable[[float], None] | None = Non
     calibration = _calibrate(bench, pulse, free, channel, rotation.angle, target)
     clock.lap("calibration")
     second = _second_pulse(bench, plan, frame, progress, clock)
-    views = _Views(channel, free, calibration, target.unitary)
+    views = Views(channel, free, calibration, target.unitary)
     as_simulated, in_free_frame, calibrated = views.fidelities(second)
     floor = views.floor(second)
     clock.lap("floor")
@@ -213,9 +212,7 @@ class _Clock:
         self.laps[prefix + "simulator overhead"] -= shot.result.wall_time
 
 
-def _fix_frame(
-    bench: Testbench, plan: Plan, waveform: Waveform, target: Target
-) -> tuple[_Frame, tuple[str, ...]]:
+def _fix_frame(bench: Testbench, plan: Plan, waveform: Waveform) -> tuple[_Frame, tuple[str, ...]]:
     notices: tuple[str, ...] = ()
     carrier = bench.drive.carrier
     if isinstance(carrier, str):
@@ -240,7 +237,7 @@ def _fix_frame(
     )
     last = float(waveform.t[-1])
     window = bench.gate.window or (float(waveform.t[0]), last)
-    return _Frame(carrier, qubit, line, (window[0], min(window[1], last)), target), notices
+    return _Frame(carrier, qubit, line, (window[0], min(window[1], last))), notices
 
 
 def _pulse(frame: _Frame, waveform: Waveform) -> Pulse:
@@ -286,75 +283,6 @@ def _second_pulse(
     shot = capture_probe(plan.half_step(), progress=progress)
     clock.lap_simulation(shot, "floor ")
     return _pulse(frame, shot.waveform)
-
-
-@dataclass(frozen=True, slots=True)
-class _Views:
-    """The channel as simulated, in its free frame and calibrated."""
-
-    channel: ComplexArray
-    free: FreeFrame
-    calibration: Calibration
-    target: ComplexArray
-
-    def fidelities(self, second: Pulse | None) -> tuple[Fidelity, Fidelity, Fidelity]:
-        """Give the three fidelities, with error bars when there is a second run."""
-        still = FreeFrame(0.0, 0.0, *self._pair(self.channel))
-        best = self.calibration
-        other = None if second is None else second.channel()
-        tuned = None if second is None else second.channel(scale=best.scale, detuning=best.detuning)
-        return (
-            self._fidelity(self.channel, still, other),
-            self._fidelity(self.channel, self.free, other),
-            replace(
-                self._fidelity(best.channel, best.frame, tuned),
-                amplitude_scale=best.scale,
-                detuning=best.detuning,
-            ),
-        )
-
-    def floor(self, second: Pulse | None) -> float:
-        """Distance of the two runs' channels; NaN without a second run."""
-        return math.nan if second is None else channel_distance(self.channel, second.channel())
-
-    def _pair(self, channel: ComplexArray) -> tuple[float, float]:
-        return average_gate_fidelity(channel, self.target), process_fidelity(channel, self.target)
-
-    def _fidelity(
-        self, channel: ComplexArray, frame: FreeFrame, other: ComplexArray | None
-    ) -> Fidelity:
-        average, process = self._pair(phase_frame(channel, frame.before, frame.after))
-        bars = (math.nan, math.nan)
-        if other is not None:
-            again = self._pair(phase_frame(other, frame.before, frame.after))
-            distance = channel_distance(channel, other)
-            bars = (
-                error_bar(average, again[0], distance),
-                # 1 - F_pro is (d + 1)/d = 3/2 of 1 - F_avg for one qubit.
-                error_bar(process, again[1], 1.5 * distance),
-            )
-        return Fidelity(average, process, *bars, z_before=frame.before, z_after=frame.after)
-
-
-def error_bar(fidelity: float, again: float, distance: float) -> float:
-    """Bound the error of a fidelity from two runs of the circuit simulator.
-
-    Parameters
-    ----------
-    fidelity, again : float
-        Of the first run, and of the one at half the step and tighter tolerances, in one frame.
-    distance : float
-        1 - F between the channels of the two runs.
-
-    Returns
-    -------
-    float
-        max(|change of F|, 2 sqrt(r d) + d), r the infidelity and d the distance: the change
-        alone is blind where errors cancel. The second term is the triangle inequality for the
-        angle arccos(sqrt(F)) to first order.
-    """
-    infidelity = max(0.0, 1.0 - fidelity)
-    return max(abs(again - fidelity), 2.0 * math.sqrt(infidelity * distance) + distance)
 
 
 def _edge_warnings(frame: _Frame, envelope: Envelope, amplitude: float) -> tuple[str, ...]:

@@ -4,7 +4,7 @@ import math
 from collections.abc import Mapping, Sequence
 
 import numpy as np
-from rich.console import Group
+from rich.console import Group, RenderableType
 from rich.table import Table
 from rich.text import Text
 
@@ -50,7 +50,7 @@ def result_table(result: GateResult) -> Group:
     rich.console.Group
         Heading, fidelities, further numbers, the pulse, warnings and the caution.
     """
-    parts = [
+    parts: list[RenderableType] = [
         Text(result.title or "gate", style="bold"),
         Text(_heading(result)),
         _fidelity_table(result),
@@ -62,11 +62,11 @@ def result_table(result: GateResult) -> Group:
 
 
 def _heading(result: GateResult) -> str:
-    start, stop = result.window
+    start, stop = (format_quantity(edge, "s") for edge in result.window)
+    carrier = format_quantity(result.carrier_frequency, "Hz", 7)
     return (
-        f"target {result.target}, window {format_quantity(start, 's')} to "
-        f"{format_quantity(stop, 's')}, carrier {format_quantity(result.carrier_frequency, 'Hz', 7)}"
-        f", step {format_quantity(result.run.step, 's', 5)} "
+        f"target {result.target}, window {start} to {stop}, carrier {carrier}, "
+        f"step {format_quantity(result.run.step, 's', 5)} "
         f"({result.run.steps_per_period:.4g} per period), {result.run.points} points"
     )
 

@@ -25,6 +25,7 @@ FLOORS = {
     "result": 3,
     "capture": 4,
     "adjust": 4,
+    "fidelities": 4,
     "gate": 4,
     "dispatch": 4,
     "checks": 6,

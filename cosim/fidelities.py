@@ -1,0 +1,102 @@
+"""The three fidelities of a gate, and their error bars from a second run of the circuit."""
+
+import math
+from dataclasses import dataclass, replace
+
+from cosim.adjust import Calibration, Pulse
+from cosim.quantum.fidelity import average_gate_fidelity, channel_distance, process_fidelity
+from cosim.quantum.frame import FreeFrame, phase_frame
+from cosim.result import Fidelity
+from cosim.waveform import ComplexArray
+
+
+@dataclass(frozen=True, slots=True)
+class Views:
+    """The channel of the first run as simulated, in its free frame and calibrated.
+
+    Parameters
+    ----------
+    channel : ndarray of complex, shape (levels^2, levels^2)
+        As simulated.
+    free : FreeFrame
+        Its best virtual Z angles.
+    calibration : Calibration
+        Its best amplitude scale and carrier offset.
+    target : ndarray of complex, shape (2, 2)
+        Target unitary.
+    """
+
+    channel: ComplexArray
+    free: FreeFrame
+    calibration: Calibration
+    target: ComplexArray
+
+    def fidelities(self, second: Pulse | None) -> tuple[Fidelity, Fidelity, Fidelity]:
+        """Give the three fidelities.
+
+        Parameters
+        ----------
+        second : Pulse or None
+            The pulse of a run at half the step; its channels are seen through the frame and the
+            calibration of the first run.
+
+        Returns
+        -------
+        tuple of three Fidelity
+            As simulated, free frame, calibrated; error bars are NaN without a second run.
+        """
+        best = self.calibration
+        still = FreeFrame(0.0, 0.0, *self._pair(self.channel))
+        other = tuned = None
+        if second is not None:
+            other = second.channel()
+            tuned = second.channel(scale=best.scale, detuning=best.detuning)
+        calibrated = self._fidelity(best.channel, best.frame, tuned)
+        return (
+            self._fidelity(self.channel, still, other),
+            self._fidelity(self.channel, self.free, other),
+            replace(calibrated, amplitude_scale=best.scale, detuning=best.detuning),
+        )
+
+    def floor(self, second: Pulse | None) -> float:
+        """Give the distance of the channels of the two runs; NaN without a second run."""
+        return math.nan if second is None else channel_distance(self.channel, second.channel())
+
+    def _pair(self, channel: ComplexArray) -> tuple[float, float]:
+        return average_gate_fidelity(channel, self.target), process_fidelity(channel, self.target)
+
+    def _fidelity(
+        self, channel: ComplexArray, frame: FreeFrame, other: ComplexArray | None
+    ) -> Fidelity:
+        average, process = self._pair(phase_frame(channel, frame.before, frame.after))
+        bars = (math.nan, math.nan)
+        if other is not None:
+            again = self._pair(phase_frame(other, frame.before, frame.after))
+            distance = channel_distance(channel, other)
+            bars = (
+                error_bar(average, again[0], distance),
+                # 1 - F_pro is (d + 1)/d = 3/2 of 1 - F_avg for one qubit.
+                error_bar(process, again[1], 1.5 * distance),
+            )
+        return Fidelity(average, process, *bars, z_before=frame.before, z_after=frame.after)
+
+
+def error_bar(fidelity: float, again: float, distance: float) -> float:
+    """Bound the error of a fidelity from two runs of the circuit simulator.
+
+    Parameters
+    ----------
+    fidelity, again : float
+        Of the first run, and of the one at half the step and tighter tolerances, in one frame.
+    distance : float
+        1 - F between the channels of the two runs.
+
+    Returns
+    -------
+    float
+        max(|change of F|, 2 sqrt(r d) + d), r the infidelity and d the distance: the change
+        alone is blind where errors cancel. The second term is the triangle inequality for the
+        angle arccos(sqrt(F)) to first order.
+    """
+    infidelity = max(0.0, 1.0 - fidelity)
+    return max(abs(again - fidelity), 2.0 * math.sqrt(infidelity * distance) + distance)
