@@ -23,7 +23,7 @@ IntArray = npt.NDArray[np.intp]
 # would be rounding noise.
 _MERGE = 1e-6
 # A step that is the start of a restart is smaller than a neighbour two steps away by this ratio.
-_RESTART = 2.0
+_RESTART = 1.9
 # Weights in the estimate of the interpolation error, chosen by measurement; see `resample`.
 _SAFETY, _ROUGHNESS, _END = 1.5, 20.0, 8.0
 # This part of a record is faded in and out before its spectrum is taken for the alias bound.
@@ -188,17 +188,22 @@ def _restarts(t: FloatArray) -> IntArray:
     """Indices of the interior samples at which the step has collapsed and grows again."""
     if t.size < 6:
         return np.empty(0, dtype=np.intp)
-    h = np.diff(t)
-    here, before, after = h[2:-2], h[1:-3], h[3:-1]
+    h = np.append(np.diff(t), [0.0, 0.0])
+    before, here, after = h[1:-4], h[2:-3], h[3:-2]
     # The step in front of a corner is cut to land on it and may be shorter than the restart's
     # own first step; hence the factor 1.5, and the look two steps back and forth.
     valley = (
         (here <= 1.5 * before)
         & (here < 0.75 * after)
-        & (h[4:] >= _RESTART * here)
-        & (np.maximum(before, h[:-4]) >= _RESTART * here)
+        & (np.maximum(after, h[4:-1]) >= _RESTART * here)
+        & (np.maximum(before, h[:-5]) >= _RESTART * here)
     )
-    return np.flatnonzero(valley) + 2
+    found = np.flatnonzero(valley) + 2
+    # A restart doubles its steps. When the doubling starts one step later, the shortest step is
+    # the cut one in front of the corner, and the corner is at its end.
+    first, second = h[found + 1] / h[found], h[found + 2] / h[found + 1]
+    late = (np.abs(second - 2) < 0.1) & (np.abs(first - 2) >= 0.1)
+    return np.unique(found + late)
 
 
 def _coefficients(t: FloatArray, v: FloatArray, cuts: IntArray) -> FloatArray:
