@@ -3,9 +3,10 @@
 import itertools
 import re
 from collections.abc import Sequence
-from typing import TYPE_CHECKING, NoReturn
+from typing import NoReturn
 
 from cosim.circuit.client import INSTALL_HINT
+from cosim.circuit.deck import PreparedDeck
 from cosim.circuit.location import locate
 from cosim.errors import (
     ConvergenceError,
@@ -15,9 +16,6 @@ from cosim.errors import (
     UnknownNameError,
     UnsupportedDeckError,
 )
-
-if TYPE_CHECKING:
-    from cosim.circuit.deck import PreparedDeck
 
 LOG_SHOWN = 12  # lines of the log that an error carries
 WARNINGS_SHOWN = 50  # a kit's model checks can repeat a warning for each of its devices
@@ -77,7 +75,7 @@ def clean(log: Sequence[str]) -> tuple[str, ...]:
     return tuple(re.sub(r"^(?:stdout|stderr) ", "", line).strip() for line in log)
 
 
-def raise_for_log(prepared: "PreparedDeck", log: Sequence[str], models: bool) -> None:
+def raise_for_log(prepared: PreparedDeck, log: Sequence[str], models: bool) -> None:
     """Raise what a log says that makes a run worthless.
 
     Parameters
@@ -127,7 +125,7 @@ def raise_for_log(prepared: "PreparedDeck", log: Sequence[str], models: bool) ->
     _raise_deck(DeckError, prepared, said, "ngspice does not accept the deck")
 
 
-def findings(prepared: "PreparedDeck", log: Sequence[str]) -> tuple[str, ...]:
+def findings(prepared: PreparedDeck, log: Sequence[str]) -> tuple[str, ...]:
     """Collect what belongs on a result that counts.
 
     Parameters
@@ -198,7 +196,7 @@ def _complaint(words: Sequence[str]) -> list[str]:
     return said[:LOG_SHOWN] or list(words[-LOG_SHOWN:])
 
 
-def _origin(prepared: "PreparedDeck", said: Sequence[str]) -> tuple[str, int, str]:
+def _origin(prepared: PreparedDeck, said: Sequence[str]) -> tuple[str, int, str]:
     index = locate(prepared.lines, said)
     if index is None:
         return "", 0, ""
@@ -208,7 +206,7 @@ def _origin(prepared: "PreparedDeck", said: Sequence[str]) -> tuple[str, int, st
 
 def _raise_deck(
     kind: type[DeckError],
-    prepared: "PreparedDeck",
+    prepared: PreparedDeck,
     said: Sequence[str],
     what: str,
     hint: str = "",
@@ -219,7 +217,7 @@ def _raise_deck(
     raise kind(f"{what}{quoted} (ngspice: {words})", hint=hint, log=said, file=file, line=line)
 
 
-def _raise_convergence(prepared: "PreparedDeck", words: Sequence[str]) -> NoReturn:
+def _raise_convergence(prepared: PreparedDeck, words: Sequence[str]) -> NoReturn:
     times = [match[1] for line in words if (match := _TIME.search(line))]
     time = float(times[-1]) if times else 0.0
     place = f"at t = {time:.6g} s" if times else "at the operating point (t = 0)"

@@ -1,21 +1,52 @@
 """Runs a deck in a child process; a crash, a hang or a bad deck becomes a clear error."""
 
 from collections.abc import Callable
-from typing import TYPE_CHECKING
 
 from cosim.circuit.analysis import TransientRequest, TransientResult
 from cosim.circuit.client import client_of_this_process, find_simulator
+from cosim.circuit.deck import Deck, PreparedDeck
+from cosim.circuit.preparation import prepare
 from cosim.circuit.verdict import judge
 from cosim.errors import ForbiddenDeckError
 
-__all__ = ["find_simulator", "simulate_prepared", "simulator_version"]
+__all__ = ["find_simulator", "simulate", "simulate_prepared", "simulator_version"]
 
-if TYPE_CHECKING:
-    from cosim.circuit.deck import PreparedDeck
+
+def simulate(
+    deck: Deck, request: TransientRequest, *, progress: Callable[[float], None] | None = None
+) -> TransientResult:
+    """Run a transient of a deck.
+
+    Parameters
+    ----------
+    deck : Deck
+        The deck.
+    request : TransientRequest
+        Times in s, vectors to save, temperature in K, tolerances and limits.
+    progress : callable or None
+        Called with the simulated time in s, at most ten times a second; it must not simulate.
+
+    Returns
+    -------
+    TransientResult
+        Times of shape (n,) in s, vectors of shape (n,) in V or A.
+
+    Raises
+    ------
+    SimulationError
+        Or one of its kinds: no convergence, crash, time limit, memory limit.
+    DeckError
+        Or one of its kinds, with the author's file and line.
+    ProbeError
+        If a save expression cannot be read.
+    MissingDependencyError
+        If ngspice or PySpice is not installed.
+    """
+    return simulate_prepared(prepare(deck, request), request, progress=progress)
 
 
 def simulate_prepared(
-    prepared: "PreparedDeck",
+    prepared: PreparedDeck,
     request: TransientRequest,
     *,
     progress: Callable[[float], None] | None = None,

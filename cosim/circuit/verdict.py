@@ -6,12 +6,12 @@ all requested vectors are there, of one length and finite.
 """
 
 import signal
-from typing import TYPE_CHECKING
 
 import numpy as np
 
 from cosim.circuit.analysis import TransientRequest, TransientResult
 from cosim.circuit.client import Answer
+from cosim.circuit.deck import PreparedDeck
 from cosim.circuit.faults import LOG_SHOWN, clean, findings, raise_for_log
 from cosim.errors import (
     ConvergenceError,
@@ -23,16 +23,13 @@ from cosim.errors import (
 )
 from cosim.waveform import FloatArray
 
-if TYPE_CHECKING:
-    from cosim.circuit.deck import PreparedDeck
-
 STOP_TOLERANCE = 1e-6  # of the stop time: ngspice ends on it to rounding, a truncated run far off
 MEMORY_MARGIN = 0.8  # of the limit; a child that dies by a signal above it ran out of memory
 _MEMORY_WORDS = ("can't allocate", "out of memory", "bad_alloc", "MemoryError")
 
 
 def judge(
-    prepared: "PreparedDeck", request: TransientRequest, answer: Answer, version: str, models: bool
+    prepared: PreparedDeck, request: TransientRequest, answer: Answer, version: str, models: bool
 ) -> TransientResult:
     """Turn the host's answer into a result, or raise what went wrong.
 
