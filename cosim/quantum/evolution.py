@@ -368,10 +368,14 @@ def _longest_half_panel(qubit: Qubit, rate: float) -> float:
 
 
 def _largest_rate(drive: DriveSpline, first: int, last: int) -> float:
-    """Bound the size of the rate on some pieces by the sum of the terms of each cubic."""
-    c = np.abs(drive.c[:, first:last])
+    """Give the largest size of the rate at four points of each of some pieces, in rad/s."""
+    c = drive.c[:, first:last]
     h = np.diff(drive.t[first : last + 1])
-    return float((((c[0] * h + c[1]) * h + c[2]) * h + c[3]).max())
+    largest = 0.0
+    for part in (0.0, 1 / 3, 2 / 3, 1.0):
+        x = part * h
+        largest = max(largest, float(np.abs(((c[0] * x + c[1]) * x + c[2]) * x + c[3]).max()))
+    return largest
 
 
 def check_window(drive: DriveSpline, start: float, stop: float) -> tuple[float, float]:

@@ -30,7 +30,7 @@ GAUSS_OFFSET = math.sqrt(15) / 10  # Outer Gauss nodes from the middle, in units
 UNIFORM = 1e-6  # Two steps count as equal when their lengths differ by less than this part.
 
 
-@numba.njit(cache=True, nogil=True)
+@numba.njit(cache=True, nogil=True, error_model="numpy")
 def _nodes(
     begin: float, h: float, origin: float, c: FloatArray, piece: int, omega: float
 ) -> tuple[complex, complex, complex]:
@@ -50,7 +50,7 @@ def _nodes(
     return r1 * centre * turn.conjugate(), r2 * centre, r3 * centre * turn
 
 
-@numba.njit(cache=True, nogil=True)
+@numba.njit(cache=True, nogil=True, error_model="numpy")
 def _step_two(u: ComplexArray, b1: complex, b2: complex, b3: complex, h: float) -> None:
     """Advance a two-level unitary by one step; the generator is -i (x sigma_x + ...)/2."""
     # b multiplies |0><1|, so the Bloch vector of the generator is 2 (Re b, -Im b, 0).
@@ -88,7 +88,7 @@ def _step_two(u: ComplexArray, b1: complex, b2: complex, b3: complex, h: float) 
         u[1, j] = diagonal.conjugate() * bottom - upper.conjugate() * top
 
 
-@numba.njit(cache=True, nogil=True)
+@numba.njit(cache=True, nogil=True, error_model="numpy")
 def _commutator(x: ComplexArray, y: ComplexArray, out: ComplexArray) -> None:
     """Write [x, y] of two anti-Hermitian matrices into `out`; y x is the adjoint of x y."""
     d = x.shape[0]
@@ -106,7 +106,7 @@ def _commutator(x: ComplexArray, y: ComplexArray, out: ComplexArray) -> None:
             out[j, i] = -value.conjugate()
 
 
-@numba.njit(cache=True, nogil=True)
+@numba.njit(cache=True, nogil=True, error_model="numpy")
 def _generator(b: complex, ladder: FloatArray, out: ComplexArray) -> None:
     """Write -i (b a + b^* a^dag) into the off-diagonals of `out`, zero elsewhere."""
     d = out.shape[0]
@@ -118,7 +118,7 @@ def _generator(b: complex, ladder: FloatArray, out: ComplexArray) -> None:
         out[n + 1, n] = -1j * b.conjugate() * ladder[n]
 
 
-@numba.njit(cache=True, nogil=True)
+@numba.njit(cache=True, nogil=True, error_model="numpy")
 def _apply_exponential(x: ComplexArray, u: ComplexArray, w: ComplexArray) -> None:
     """Replace u by exp(x) u with the Taylor series; `w` holds two matrices of work space."""
     d = x.shape[0]
@@ -128,7 +128,9 @@ def _apply_exponential(x: ComplexArray, u: ComplexArray, w: ComplexArray) -> Non
         for j in range(d):
             row += abs(x[i, j].real) + abs(x[i, j].imag)
         bound = max(bound, row)
-    w[0, :, :] = u
+    for i in range(d):
+        for j in range(d):
+            w[0, i, j] = u[i, j]
     size = 1.0
     order = 0
     # The rest of the series is below 1e-17 when the bound on its last term is.
@@ -146,7 +148,7 @@ def _apply_exponential(x: ComplexArray, u: ComplexArray, w: ComplexArray) -> Non
                 u[i, j] += total
 
 
-@numba.njit(cache=True, nogil=True)
+@numba.njit(cache=True, nogil=True, error_model="numpy")
 def _step_many(
     u: ComplexArray,
     b1: complex,
@@ -181,14 +183,14 @@ def _step_many(
     _apply_exponential(a1, u, work[6:8])
 
 
-@numba.njit(cache=True, nogil=True)
+@numba.njit(cache=True, nogil=True, error_model="numpy")
 def _set_identity(u: ComplexArray) -> None:
-    u[:, :] = 0
-    for n in range(u.shape[0]):
-        u[n, n] = 1
+    for i in range(u.shape[0]):
+        for j in range(u.shape[0]):
+            u[i, j] = 1.0 if i == j else 0.0
 
 
-@numba.njit(cache=True, nogil=True)
+@numba.njit(cache=True, nogil=True, error_model="numpy")
 def unitary_product(
     begin: FloatArray,
     length: FloatArray,
@@ -234,7 +236,7 @@ def unitary_product(
     return u
 
 
-@numba.njit(cache=True, nogil=True)
+@numba.njit(cache=True, nogil=True, error_model="numpy")
 def _conjugate(rho: ComplexArray, u: ComplexArray, half: ComplexArray) -> None:
     """Replace rho by u rho u^dag."""
     d = u.shape[0]
@@ -252,7 +254,7 @@ def _conjugate(rho: ComplexArray, u: ComplexArray, half: ComplexArray) -> None:
             rho[i, j] = total
 
 
-@numba.njit(cache=True, nogil=True)
+@numba.njit(cache=True, nogil=True, error_model="numpy")
 def _dissipate(
     rho: ComplexArray,
     time: float,
@@ -264,7 +266,9 @@ def _dissipate(
 ) -> None:
     """Replace rho by exp(D time) rho with the Taylor series; `size` bounds the rates in 1/s."""
     d = rho.shape[0]
-    w[0, :, :] = rho
+    for i in range(d):
+        for j in range(d):
+            w[0, i, j] = rho[i, j]
     bound = 1.0
     order = 0
     while bound > 1e-17 and order < 60:
@@ -284,7 +288,7 @@ def _dissipate(
                 rho[i, j] += value
 
 
-@numba.njit(cache=True, nogil=True)
+@numba.njit(cache=True, nogil=True, error_model="numpy")
 def channel_product(
     begin: FloatArray,
     length: FloatArray,
@@ -345,11 +349,13 @@ def channel_product(
             _step_many(u, b1, b2, b3, h, ladder, energies, work)
     for i in range(d):
         for j in range(i):
-            images[i, j] = images[j, i].conj().T
+            for m in range(d):
+                for n in range(d):
+                    images[i, j, m, n] = images[j, i, n, m].conjugate()
     return images
 
 
-@numba.njit(cache=True, nogil=True)
+@numba.njit(cache=True, nogil=True, error_model="numpy")
 def place_kicks(
     begin: FloatArray, length: FloatArray, piece: IndexArray, half: float
 ) -> tuple[FloatArray, FloatArray, IndexArray, FloatArray]:
@@ -392,7 +398,7 @@ def place_kicks(
             for j in range(used):
                 new_begin[m + j], new_length[m + j] = begin[k + j], length[k + j]
                 new_piece[m + j] = piece[k + j]
-        s = new_length[m : m + made].sum() / 2
+        s = 0.5 * (new_begin[m + made - 1] + new_length[m + made - 1] - new_begin[m])
         kick[m] += s / 3
         kick[m + made // 2] += 4 * s / 3
         kick[m + made] += s / 3
