@@ -158,11 +158,11 @@ def plateau_amplitude(envelope: Envelope, burst: Burst) -> float:
     -------
     float
         Carrier peak amplitude in the envelope's unit: the largest value of a least-squares
-        parabola through ln |I + jQ| over the middle half of the plateau. On a flat pulse that is
+        parabola through ln |I + jQ| over the middle third of the plateau. On a flat pulse that is
         its mean level without the edges' overshoot, on a Gaussian exactly its peak.
     """
-    quarter = (burst.plateau_last - burst.plateau_first) // 4
-    part = slice(burst.plateau_first + quarter, burst.plateau_last - quarter + 1)
+    third = (burst.plateau_last - burst.plateau_first) // 3
+    part = slice(burst.plateau_first + third, burst.plateau_last - third + 1)
     size = np.abs(envelope.iq[part])
     if size.size < 4:
         return float(np.abs(envelope.iq[burst.first : burst.last + 1]).max())

@@ -21,9 +21,8 @@ MIN_SAMPLES_PER_PERIOD = 20
 # Ripple in the pass band and rejection in the stop band, as a ratio of amplitudes, are
 # 10**(-_ATTENUATION/20) = 3e-7.
 _ATTENUATION = 130.0
-# The waveform is averaged over cells of at most 1/_MIN_CELLS and at least 1/_MAX_CELLS of a
-# carrier period.
-_MIN_CELLS, _MAX_CELLS = 64, 512
+# The waveform is averaged over cells of at most this part of a carrier period.
+_CELLS = 80
 # Output samples per second, in units of the bandwidth.
 _RATE = 8
 # Cell averages back to values at the centres, to sixth order: 1 - d2/24 + 3 d4/640 with the
@@ -165,9 +164,7 @@ def _filtered(
     waveform: Waveform, carrier: float, width: float, start: float, dt: float, count: int
 ) -> ComplexArray:
     """Envelope at the times start + dt * arange(count)."""
-    period = 1 / carrier
-    wanted = min(float(np.median(np.diff(waveform.t))), period / _MIN_CELLS)
-    cells = int(np.ceil(dt / max(wanted, period / _MAX_CELLS) - 1e-6))  # per output interval
+    cells = int(np.ceil(dt * carrier * _CELLS - 1e-6))  # per output interval
     cell = dt / cells
     taps, reach = _taps(carrier, width, cell)
     # `blocks` rows of one output interval each are needed on top of the output's own, so that
