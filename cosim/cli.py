@@ -36,10 +36,10 @@ JsonFlag = Annotated[bool, typer.Option("--json", help="Print numbers for machin
 
 @app.callback()
 def _common(
-    context: typer.Context,
     debug: Annotated[bool, typer.Option("--debug", help="Show tracebacks.")] = False,
 ) -> None:
-    context.obj = debug
+    # `main` has read the option already; here it is for the help.
+    del debug
 
 
 @app.command(epilog="Example: qcosim check examples/x90_spin.toml")
@@ -121,8 +121,7 @@ def show(
     if run is None and not log:
         table = read_table(archive)
         if json_output:
-            columns = {name: values.tolist() for name, values in table.items()}
-            typer.echo(json.dumps(columns, indent=2))
+            typer.echo(json.dumps(as_columns(table), indent=2))
         else:
             console.print(runs_table(table))
         return
@@ -166,9 +165,10 @@ def _progress(bench: "Testbench") -> Iterator[Callable[[float], None] | None]:
 
 def main() -> None:
     """Run the command line and turn errors into messages and exit codes."""
+    # The option may stand before or behind the command.
     debug = "--debug" in sys.argv[1:]
     try:
-        app(standalone_mode=True)
+        app(args=[word for word in sys.argv[1:] if word != "--debug"])
     except BrokenPipeError:
         # The reader of the output has gone; there is nobody to tell.
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())

@@ -61,7 +61,11 @@ def save(result: GateResult, path: str | os.PathLike[str]) -> int:
     ArchiveError
         If the file is something else or cannot be written; what was there is untouched.
     """
-    return archive.append(path, result)
+    record = result.run
+    info = archive.RunInfo(
+        status="done", start_time=record.started, wall_time=sum(record.wall_times.values())
+    )
+    return archive.append(path, result, info=info)
 
 
 def load(path: str | os.PathLike[str], *, run: int | None = None) -> GateResult:

@@ -58,7 +58,7 @@ def _draw_envelope(axes: Axes, result: GateResult) -> None:
     _mark_window(axes, result)
     axes.set_ylabel(f"amplitude ({unit})")
     axes.set_xlim(t[0], t[-1])
-    axes.legend(loc="upper right", fontsize=8)
+    axes.legend(loc="center", ncols=3, fontsize=8)
 
 
 def _outline(t: np.ndarray, v: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
@@ -70,7 +70,7 @@ def _outline(t: np.ndarray, v: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.n
 
 def _draw_phase(axes: Axes, result: GateResult) -> None:
     iq = result.envelope.iq
-    strong = np.abs(iq) > 0.05 * result.pulse.amplitude
+    strong = np.abs(iq) > 0.1 * result.pulse.amplitude
     phase = np.degrees(np.unwrap(np.angle(iq[strong])))
     axes.plot(result.envelope.t[strong] * 1e9, phase, color="C2", lw=1.2)
     _mark_window(axes, result)

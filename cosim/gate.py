@@ -145,7 +145,7 @@ def run_gate(bench: Testbench, *, progress: Callable[[float], None] | None = Non
     measures = measure_pulse(shot.waveform, frame.carrier_frequency, envelope=envelope)
     clock.lap("demodulation")
     twin = _rotating_wave_twin(frame, envelope)
-    clock.lap("rotating-wave twin")
+    clock.lap("rotating_wave_twin")
     free = free_frame(channel, target.unitary)
     rotation = rotation_of(nearest_unitary(channel))
     calibration = _calibrate(bench, pulse, free, channel, rotation.angle, target)
@@ -154,7 +154,7 @@ def run_gate(bench: Testbench, *, progress: Callable[[float], None] | None = Non
     views = Views(channel, free, calibration, target.unitary)
     as_simulated, in_free_frame, calibrated = views.fidelities(second)
     floor = views.floor(second)
-    clock.lap("floor")
+    clock.lap("fidelities")
     warnings = (
         *plan.deck.notices,
         *plan.notices,
@@ -171,8 +171,8 @@ def run_gate(bench: Testbench, *, progress: Callable[[float], None] | None = Non
         as_simulated=as_simulated,
         free_frame=in_free_frame,
         calibrated=calibrated,
-        leakage=leakage(channel),
-        seepage=seepage(channel),
+        leakage=max(0.0, leakage(channel)),
+        seepage=max(0.0, seepage(channel)),
         numerical_floor=floor,
         rotating_wave_error=channel_distance(channel, twin),
         phase_slip=math.remainder(free.before + free.after, 2.0 * math.pi),
@@ -207,9 +207,9 @@ class _Clock:
 
     def lap_simulation(self, shot: Capture, prefix: str = "") -> None:
         """End a simulation; ngspice's own time is told from everything else around it."""
-        self.lap(prefix + "simulator overhead")
+        self.lap(prefix + "simulator_overhead")
         self.laps[prefix + "ngspice"] = shot.result.wall_time
-        self.laps[prefix + "simulator overhead"] -= shot.result.wall_time
+        self.laps[prefix + "simulator_overhead"] -= shot.result.wall_time
 
 
 def _fix_frame(bench: Testbench, plan: Plan, waveform: Waveform) -> tuple[_Frame, tuple[str, ...]]:
@@ -281,7 +281,7 @@ def _second_pulse(
     if not bench.accuracy.floor:
         return None
     shot = capture_probe(plan.half_step(), progress=progress)
-    clock.lap_simulation(shot, "floor ")
+    clock.lap_simulation(shot, "floor_")
     return _pulse(frame, shot.waveform)
 
 
@@ -326,7 +326,7 @@ def _floor_warnings(calibrated: Fidelity, floor: float) -> tuple[str, ...]:
 def _record(bench: Testbench, plan: Plan, frame: _Frame, shot: Capture, clock: _Clock) -> RunRecord:
     versions = {name: version(name) for name in PACKAGES}
     versions["python"] = platform.python_version()
-    versions["ngspice"] = shot.result.simulator_version
+    versions["ngspice"] = shot.result.simulator_version.removeprefix("ngspice-")
     return RunRecord(
         started=clock.started,
         host=f"{platform.node()} ({platform.platform()})",

@@ -1,5 +1,6 @@
 """The declared results of a run, as they are shown, archived and read back."""
 
+from collections.abc import Mapping
 from dataclasses import dataclass, field
 from typing import Any
 
@@ -108,8 +109,6 @@ class RunRecord:
         Time step in s.
     steps_per_period : float
         Carrier period over step.
-    status : str
-        "done".
     """
 
     started: str
@@ -124,7 +123,6 @@ class RunRecord:
     points: int = field(metadata=_unit("1"))
     step: float = field(metadata=_unit("s"))
     steps_per_period: float = field(metadata=_unit("1"))
-    status: str = "done"
 
 
 @dataclass(frozen=True, slots=True)
@@ -257,6 +255,22 @@ def as_numbers(result: object) -> dict[str, Any]:
     if not isinstance(result, GateResult):
         raise InputError(f"wanted a gate result, got {type(result).__name__}")
     return {name: _plain(getattr(result, name)) for name in GATE_FIELDS}
+
+
+def as_columns(table: Mapping[str, Any]) -> dict[str, list[Any]]:
+    """Turn the table of an archive into plain lists for machines.
+
+    Parameters
+    ----------
+    table : mapping of ndarray, each of shape (runs,)
+        From `cosim.archive.read_table`.
+
+    Returns
+    -------
+    dict of list
+        The same columns; a number that does not exist is None.
+    """
+    return {name: _plain(tuple(column.tolist())) for name, column in table.items()}
 
 
 def _plain(value: Any) -> Any:

@@ -9,7 +9,7 @@ from rich.table import Table
 from rich.text import Text
 
 from cosim.checks import Finding
-from cosim.result import Fidelity, GateResult
+from cosim.result import GateResult
 from cosim.units import format_quantity
 
 CAUTION = (
@@ -74,26 +74,23 @@ def _heading(result: GateResult) -> str:
 def _fidelity_table(result: GateResult) -> Table:
     views = (result.as_simulated, result.free_frame, result.calibrated)
     table = Table(box=None, pad_edge=False, header_style="bold")
-    table.add_column("")
+    table.add_column("", no_wrap=True, style="bold")
     for name in ("as simulated", "free frame", "calibrated"):
-        table.add_column(name, justify="right")
+        table.add_column(name, justify="right", no_wrap=True)
 
     def row(label: str, texts: Sequence[str]) -> None:
         table.add_row(label, *texts)
 
     row("process fidelity", [f"{view.process_fidelity:.7f}" for view in views])
     row("average gate fidelity", [f"{view.average_gate_fidelity:.7f}" for view in views])
-    row("infidelity 1 - F_avg", [_infidelity(view) for view in views])
+    row("infidelity, 1 - F_avg", [f"{view.infidelity:.3e}" for view in views])
+    if not math.isnan(result.numerical_floor):
+        row("its error bar", [f"± {view.error_bar:.1e}" for view in views])
     row("virtual Z before, after", [_degrees(view.z_before, view.z_after) for view in views])
     row("amplitude scale", [f"{view.amplitude_scale:.5f}" for view in views])
     if result.calibrated.detuning != 0.0:
         row("carrier offset", [format_quantity(view.detuning, "Hz") for view in views])
     return table
-
-
-def _infidelity(view: Fidelity) -> str:
-    bar = "" if math.isnan(view.error_bar) else f" ± {view.error_bar:.1e}"
-    return f"{view.infidelity:.3e}{bar}"
 
 
 def _degrees(before: float, after: float) -> str:
@@ -177,12 +174,12 @@ def runs_table(columns: Mapping[str, np.ndarray]) -> Table:
         "started": "start_time",
         "target": "target",
         "title": "title",
-        "process fidelity": "free_frame.process_fidelity",
+        "F_pro, free": "free_frame.process_fidelity",
         "1 - F_avg": "free_frame.average_gate_fidelity",
     }
     present = {label: name for label, name in shown.items() if name in columns}
     for label in present:
-        table.add_column(label)
+        table.add_column(label, no_wrap=label != "title")
     count = len(next(iter(columns.values()))) if columns else 0
     for index in range(count):
         table.add_row(*(_cell(label, columns[name][index]) for label, name in present.items()))
@@ -192,7 +189,9 @@ def runs_table(columns: Mapping[str, np.ndarray]) -> Table:
 def _cell(label: str, value: object) -> str:
     if isinstance(value, (float, np.floating)):
         return f"{1.0 - value:.3e}" if label.startswith("1 -") else f"{value:.7f}"
-    return value.decode() if isinstance(value, bytes) else str(value)
+    text = value.decode() if isinstance(value, bytes) else str(value)
+    # A date without its zone is enough in a list; the detailed view has all of it.
+    return text[:19].replace("T", " ") if label == "started" else text
 
 
 def _plain_table() -> Table:
