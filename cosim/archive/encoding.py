@@ -48,17 +48,50 @@ def field_unit(owner: object, metadata: Mapping[str, Any]) -> str:
 
 
 def is_instance(value: object) -> bool:
-    """Tell whether a value is an instance of a dataclass (and not such a class itself)."""
+    """Tell whether a value is an instance of a dataclass (and not such a class itself).
+
+    Parameters
+    ----------
+    value : object
+        Any value.
+
+    Returns
+    -------
+    bool
+        True for an instance.
+    """
     return dataclasses.is_dataclass(value) and not isinstance(value, type)
 
 
 def fits_word(value: int) -> bool:
-    """Tell whether an integer fits 64 bits with sign."""
+    """Tell whether an integer fits 64 bits with sign.
+
+    Parameters
+    ----------
+    value : int
+        Any integer.
+
+    Returns
+    -------
+    bool
+        True if it does.
+    """
     return int(_WORD.min) <= value <= int(_WORD.max)
 
 
 def is_plain_text(text: str) -> bool:
-    """Tell whether HDF5 can hold a text as it is: no NUL, no lone surrogate."""
+    """Tell whether HDF5 can hold a text as it is.
+
+    Parameters
+    ----------
+    text : str
+        Any text.
+
+    Returns
+    -------
+    bool
+        False if there is a NUL or a lone surrogate in it.
+    """
     if "\0" in text:
         return False
     try:
@@ -257,8 +290,9 @@ def _attach_scales(
     used: list[str] = []
     for dimension, axis in enumerate(axes):
         scale = _scale(group, axis, dataset.shape[dimension], context, reserved, used)
-        dataset.dims[dimension].attach_scale(scale)
-        used.append(scale.name)
+        dataset.dims[dimension].attach_scale(group[scale])
+        dataset.dims[dimension].label = scale
+        used.append(scale)
 
 
 def _scale(
@@ -268,17 +302,16 @@ def _scale(
     context: _Context,
     reserved: frozenset[str],
     used: Sequence[str],
-) -> Any:
-    """Find or make the scale of an axis in a group."""
-    if axis in group and h5py.h5ds.is_scale(group[axis].id) and group[axis].shape == (length,):
-        if group[axis].name not in used:
-            return group[axis]
+) -> str:
+    """Find or make the scale of an axis in a group, and give its name."""
+    if axis in reserved and axis in group and axis not in used:
+        if h5py.h5ds.is_scale(group[axis].id) and group[axis].shape == (length,):
+            return axis
     name = axis
-    while name in reserved or name in group:
-        fits = name in group and group[name].attrs.get("derived") and group[name].shape == (length,)
-        if name not in reserved and fits and group[name].name not in used:
-            return group[name]
+    while name in reserved or name in used or (name in group and group[name].shape != (length,)):
         name += "_"
+    if name in group:
+        return name
     values, unit = _scale_values(axis, length, context)
     text = isinstance(values, tuple)
     dtype = TEXT if isinstance(values, tuple) else values.dtype
@@ -288,7 +321,7 @@ def _scale(
     if not text:
         dataset.attrs["units"] = unit
     dataset.make_scale(name)
-    return dataset
+    return name
 
 
 def _scale_values(

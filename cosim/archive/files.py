@@ -32,16 +32,45 @@ T = TypeVar("T")
 
 
 def parts_folder(path: Path) -> Path:
-    """Give the folder that holds the parts of an archive."""
+    """Give the folder that holds the parts of an archive.
+
+    Parameters
+    ----------
+    path : path
+        NAME.h5.
+
+    Returns
+    -------
+    Path
+        NAME.h5.parts, which need not exist.
+    """
     return path.with_name(path.name + ".parts")
 
 
 def list_parts(path: Path) -> tuple[Path, ...]:
-    """List the parts of an archive, in the order in which they were published."""
+    """List the parts of an archive.
+
+    Parameters
+    ----------
+    path : path
+        NAME.h5.
+
+    Returns
+    -------
+    tuple of Path
+        In the order in which they were published.
+
+    Raises
+    ------
+    ArchiveError
+        If their folder may not be read.
+    """
     try:
         names = os.listdir(parts_folder(path))
     except (FileNotFoundError, NotADirectoryError):
         return ()
+    except OSError as error:
+        raise _unreadable(parts_folder(path), error) from error
     return tuple(
         parts_folder(path) / name
         for name in sorted(names)
@@ -50,7 +79,18 @@ def list_parts(path: Path) -> tuple[Path, ...]:
 
 
 def new_part_path(path: Path) -> Path:
-    """Give a name for a part that was never used before and sorts behind the others."""
+    """Give a name for a part that was never used before and sorts behind the others.
+
+    Parameters
+    ----------
+    path : path
+        NAME.h5.
+
+    Returns
+    -------
+    Path
+        A file in the folder of the parts.
+    """
     # A name that came back would hide the loss of the first part of that name from a reader.
     name = f"{time.time_ns():020d}-{uuid.uuid4().hex[:8]}.h5"
     return parts_folder(path) / name
@@ -68,6 +108,11 @@ def snapshot(path: Path, action: Callable[[tuple[Path, ...]], T]) -> T:
         NAME.h5.
     action : callable
         Gets NAME.h5 and the parts in the order of their publication, and reads them.
+
+    Returns
+    -------
+    object
+        What `action` returned.
 
     Raises
     ------
@@ -103,6 +148,16 @@ def _missing(path: Path) -> ArchiveError:
 @contextlib.contextmanager
 def opened(path: Path) -> Iterator[Any]:
     """Open a file of an archive for reading.
+
+    Parameters
+    ----------
+    path : Path
+        NAME.h5 or a part.
+
+    Yields
+    ------
+    h5py.File
+        The open file.
 
     Raises
     ------
@@ -167,6 +222,11 @@ def edited(image: io.BytesIO, path: Path) -> Iterator[Any]:
     path : Path
         The name that stands in messages.
 
+    Yields
+    ------
+    h5py.File
+        The open file.
+
     Raises
     ------
     ArchiveError
@@ -191,6 +251,16 @@ def edited(image: io.BytesIO, path: Path) -> Iterator[Any]:
 def locked(path: Path) -> Iterator[None]:
     """Keep other writers of an archive out, and clear away what killed ones have left.
 
+    Parameters
+    ----------
+    path : path
+        NAME.h5.
+
+    Yields
+    ------
+    None
+        While the lock is held.
+
     Raises
     ------
     ArchiveError
@@ -211,7 +281,8 @@ def locked(path: Path) -> Iterator[None]:
         # Removed while it is still held: whoever waits for it sees that its file is gone.
         with contextlib.suppress(OSError):
             os.unlink(side)
-        os.close(handle)
+        with contextlib.suppress(OSError):
+            os.close(handle)
 
 
 def _take_lock(side: Path) -> int:
@@ -288,7 +359,20 @@ def _sync_folder(folder: Path) -> None:
 
 
 def unwritable(path: Path, error: OSError) -> ArchiveError:
-    """Give the error that says why a file cannot be written, and what to do."""
+    """Give the error that says why a file cannot be written, and what to do.
+
+    Parameters
+    ----------
+    path : Path
+        The file.
+    error : OSError
+        What the system said.
+
+    Returns
+    -------
+    ArchiveError
+        The error to raise.
+    """
     if isinstance(error, ArchiveError):
         return error
     if error.errno in _NO_SPACE:

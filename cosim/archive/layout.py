@@ -73,7 +73,18 @@ class NumberedRun:
 
 
 def run_group_name(number: int) -> str:
-    """Give the name of a run's group below /runs: six digits, more when they do not suffice."""
+    """Give the name of a run's group below /runs.
+
+    Parameters
+    ----------
+    number : int
+        Run number.
+
+    Returns
+    -------
+    str
+        Six digits, more when they do not suffice.
+    """
     return f"{number:06d}"
 
 
@@ -83,25 +94,69 @@ _ESCAPED = re.compile(r"%([0-9A-F]+);")
 
 
 def member_name(key: str) -> str:
-    """Give the HDF5 link name of a dictionary's key or a table's column."""
+    """Give the HDF5 link name of a dictionary's key or a table's column.
+
+    Parameters
+    ----------
+    key : str
+        Any text.
+
+    Returns
+    -------
+    str
+        The key itself, with "%", "/" and what HDF5 cannot hold as "%" + hexadecimal code + ";".
+    """
     return _UNSAFE.sub(lambda match: f"%{ord(match[0]):X};", key) or "%"
 
 
 def member_key(name: str) -> str:
-    """Give the key back from its HDF5 link name."""
+    """Give the key back from its HDF5 link name.
+
+    Parameters
+    ----------
+    name : str
+        A name that `member_name` gave.
+
+    Returns
+    -------
+    str
+        The key.
+    """
     if name == "%":
         return ""
     return _ESCAPED.sub(lambda match: chr(int(match[1], 16)), name)
 
 
 def members(group: Any) -> Iterator[tuple[str, Any]]:
-    """Walk the members of a group; h5py's own walk gives None for one that is damaged."""
+    """Walk the members of a group; h5py's own walk gives None for one that is damaged.
+
+    Parameters
+    ----------
+    group : h5py.Group
+        The group.
+
+    Yields
+    ------
+    tuple of str and h5py object
+        Link name and member.
+    """
     for name in group:
         yield name, group[name]
 
 
 def storage_options(size: int) -> dict[str, Any]:
-    """Give the filters of a numeric dataset with `size` elements; none for a small one."""
+    """Give the filters of a numeric dataset.
+
+    Parameters
+    ----------
+    size : int
+        Number of its elements.
+
+    Returns
+    -------
+    dict
+        Arguments of h5py's create_dataset; empty for a small dataset.
+    """
     # gzip-1 with shuffle gives 0.64 of the size of a waveform and gzip-4 no less than 0.63, at a
     # fraction of the speed; the checksum makes a damaged block an error and not a wrong number.
     if size <= 1000:
@@ -116,7 +171,13 @@ def storage_options(size: int) -> dict[str, Any]:
 
 
 def write_root(file: Any) -> None:
-    """Write the root attributes and the empty group of runs into a new file."""
+    """Write the root attributes and the empty group of runs into a new file.
+
+    Parameters
+    ----------
+    file : h5py.File
+        The open file.
+    """
     try:
         package_version = version("qcosim")
     except PackageNotFoundError:
@@ -130,6 +191,13 @@ def write_root(file: Any) -> None:
 
 def check_root(file: Any, name: str) -> None:
     """Check that an open HDF5 file is an archive which this version can read.
+
+    Parameters
+    ----------
+    file : h5py.File
+        The open file.
+    name : str
+        Its name in messages.
 
     Raises
     ------

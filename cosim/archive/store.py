@@ -264,7 +264,17 @@ def read_table(path: str | os.PathLike[str]) -> dict[str, npt.NDArray[Any]]:
 
 
 def read_units(path: str | os.PathLike[str]) -> dict[str, str]:
-    """Read the units of the table's columns, "" for text and bool.
+    """Read the units of the table's columns.
+
+    Parameters
+    ----------
+    path : path
+        NAME.h5; its parts are found beside it.
+
+    Returns
+    -------
+    dict of str to str
+        Unit by column; "" for text and bool, "mixed" where the runs differ.
 
     Raises
     ------
@@ -283,7 +293,17 @@ def _load_tables(files: Iterable[Path]) -> dict[str, Column]:
 
 
 def run_numbers(path: str | os.PathLike[str]) -> tuple[int, ...]:
-    """List the numbers of the runs in an archive, rising.
+    """List the numbers of the runs in an archive.
+
+    Parameters
+    ----------
+    path : path
+        NAME.h5; its parts are found beside it.
+
+    Returns
+    -------
+    tuple of int
+        Rising.
 
     Raises
     ------
@@ -327,26 +347,25 @@ def _copy_runs(source: Any, file: Any) -> None:
         if name in file["runs"]:
             del file["runs"][name]
         source.copy(group, file["runs"], name=name)
-        _attach_copied_scales(group, file["runs"][name])
+        _attach_copied_scales(file["runs"][name])
 
 
-def _attach_copied_scales(original: Any, copied: Any) -> None:
+def _attach_copied_scales(copied: Any) -> None:
     """Give the arrays of a copied group their scales again.
 
     HDF5 copies the references between arrays and scales as they are, addresses in the old file,
-    with or without its option to expand references.
+    with or without its option to expand references. The labels of the dimensions name the scales.
     """
-    arrays = {}
-    for name, member in members(original):
+    arrays = []
+    for _, member in members(copied):
         if isinstance(member, h5py.Group):
-            _attach_copied_scales(member, copied[name])
-            continue
-        arrays[name] = member
-        for attribute in ("DIMENSION_LIST", "REFERENCE_LIST"):
-            if attribute in copied[name].attrs:
-                del copied[name].attrs[attribute]
-    for name, member in arrays.items():
-        if not h5py.h5ds.is_scale(member.id):
-            for index, dimension in enumerate(member.dims):
-                own = copied[dimension[0].name.rpartition("/")[2]]
-                copied[name].dims[index].attach_scale(own)
+            _attach_copied_scales(member)
+        elif member.ndim:
+            arrays.append(member)
+            for attribute in ("DIMENSION_LIST", "REFERENCE_LIST"):
+                if attribute in member.attrs:
+                    del member.attrs[attribute]
+    for array in arrays:
+        if not h5py.h5ds.is_scale(array.id):
+            for dimension in array.dims:
+                dimension.attach_scale(copied[dimension.label])

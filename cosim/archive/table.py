@@ -42,7 +42,16 @@ class Column:
 def row_of(entry: NumberedRun) -> dict[str, Column]:
     """Give the table of one row that stands for a run.
 
-    A run's own field `status`, `start_time` or `wall_time` takes the place of what `info` says.
+    Parameters
+    ----------
+    entry : NumberedRun
+        The run. Its own field `status`, `start_time` or `wall_time` takes the place of what its
+        `info` says.
+
+    Returns
+    -------
+    dict of str to Column
+        The row.
     """
     info = entry.info
     row = {
@@ -94,7 +103,18 @@ def _cell(value: bool | int | float | str, unit: str) -> Column:
 
 
 def row_count(table: Mapping[str, Column]) -> int:
-    """Give the number of rows."""
+    """Give the number of rows.
+
+    Parameters
+    ----------
+    table : mapping of str to Column
+        A table.
+
+    Returns
+    -------
+    int
+        Number of rows; 0 for a table without columns.
+    """
     return table["id"].values.size if table else 0
 
 
@@ -150,7 +170,15 @@ def _join(pieces: Sequence[tuple[Column | None, int]]) -> Column:
 
 
 def write_table(file: Any, table: Mapping[str, Column]) -> None:
-    """Write the table into an open file, in place of the one that is there."""
+    """Write the table into an open file, in place of the one that is there.
+
+    Parameters
+    ----------
+    file : h5py.File
+        The open file.
+    table : mapping of str to Column
+        A table.
+    """
     if "table" in file:
         del file["table"]
     group = file.create_group("table", track_order=True)
@@ -170,7 +198,18 @@ def write_table(file: Any, table: Mapping[str, Column]) -> None:
 
 
 def load_table(file: Any) -> dict[str, Column]:
-    """Read the table of an open file; empty when there are no rows."""
+    """Read the table of an open file.
+
+    Parameters
+    ----------
+    file : h5py.File
+        The open file.
+
+    Returns
+    -------
+    dict of str to Column
+        The table; empty when there are no rows.
+    """
     table: dict[str, Column] = {}
     for name, dataset in members(file["table"]) if "table" in file else ():
         text = h5py.check_string_dtype(dataset.dtype) is not None
@@ -180,7 +219,18 @@ def load_table(file: Any) -> dict[str, Column]:
 
 
 def load_ids(file: Any) -> list[int]:
-    """Read the run numbers of an open file."""
+    """Read the run numbers of an open file.
+
+    Parameters
+    ----------
+    file : h5py.File
+        The open file.
+
+    Returns
+    -------
+    list of int
+        In the order of the rows.
+    """
     if "table" not in file or "id" not in file["table"]:
         return []
     return [int(number) for number in file["table"]["id"][()]]
