@@ -114,7 +114,7 @@ def show(
     """Show what is in an archive."""
     from cosim.archive import read_table
     from cosim.dispatch import load
-    from cosim.result import as_numbers
+    from cosim.result import as_columns, as_numbers
     from cosim.tables import record_table, result_table, runs_table
 
     console = Console(highlight=False)

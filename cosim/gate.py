@@ -175,7 +175,7 @@ def run_gate(bench: Testbench, *, progress: Callable[[float], None] | None = Non
         seepage=max(0.0, seepage(channel)),
         numerical_floor=floor,
         rotating_wave_error=channel_distance(channel, twin),
-        phase_slip=math.remainder(free.before + free.after, 2.0 * math.pi),
+        phase_slip=_phase_slip(free, target),
         rotation=rotation,
         unitarity=unitarity(channel),
         carrier_frequency=frame.carrier_frequency,
@@ -283,6 +283,14 @@ def _second_pulse(
     shot = capture_probe(plan.half_step(), progress=progress)
     clock.lap_simulation(shot, "floor_")
     return _pulse(frame, shot.waveform)
+
+
+def _phase_slip(free: FreeFrame, target: Target) -> float:
+    # A half turn about an axis in the xy-plane turns a Z before it into its inverse behind it,
+    # so that only the difference of the two angles is determined.
+    half_turn = abs(target.unitary[0, 0]) < 1e-9
+    slip = free.after - free.before if half_turn else free.after + free.before
+    return math.remainder(slip, 2.0 * math.pi)
 
 
 def _edge_warnings(frame: _Frame, envelope: Envelope, amplitude: float) -> tuple[str, ...]:

@@ -149,8 +149,9 @@ class GateResult:
         1 - F_avg between the headline channel and that of the rotating-wave path, which is
         solved by an independent solver on the demodulated envelope.
     phase_slip : float
-        Z rotation in rad that a phase reference must absorb per gate, the sum of the two
-        angles of `free_frame`, in (-pi, pi].
+        Z rotation in rad that a phase reference must absorb per gate, in [-pi, pi]: the sum of
+        the two angles of `free_frame`; for a half turn about an axis in the xy-plane, where only
+        their difference is determined, after minus before.
     rotation : Rotation
         Axis and angle of the unitary nearest to the channel.
     unitarity : float
