@@ -3,6 +3,7 @@
 from dataclasses import dataclass, field
 
 import numpy as np
+from scipy.integrate import trapezoid
 from scipy.interpolate import CubicSpline
 
 from cosim.dsp.carrier import Burst, burst_weights, find_burst, phase_slope, plateau_amplitude
@@ -153,8 +154,8 @@ def _check_power(waveform: Waveform, envelope: Envelope, burst: Burst) -> None:
             f"{shortest:.3g} s, half the demodulator's filter, are needed",
         )
     t, v = waveform.t[inside], waveform.v[inside]
-    mean = float(np.trapezoid(v, t)) / float(t[-1] - t[0])
-    power = float(np.trapezoid((v - mean) ** 2, t)) / float(t[-1] - t[0])
+    mean = float(trapezoid(v, t)) / float(t[-1] - t[0])
+    power = float(trapezoid((v - mean) ** 2, t)) / float(t[-1] - t[0])
     in_band = float((np.abs(envelope.iq[burst.first : burst.last + 1]) ** 2).mean()) / 2
     if in_band < _MIN_POWER * power or in_band < 1e-12 * mean**2:
         share = in_band / power if power > 0 else 0.0
