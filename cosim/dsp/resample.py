@@ -215,21 +215,18 @@ def _coefficients(t: FloatArray, v: FloatArray, cuts: IntArray) -> FloatArray:
     scale = (t[-1] - t[0]) / (t.size - 1)  # Steps of order one keep the rows comparable.
     h = np.diff(t) / scale
     slope = np.diff(v) / h
-    index = np.sort(np.concatenate((np.arange(t.size), cuts)), kind="stable")
-    real = np.diff(index) > 0  # False between the two copies of a cut sample.
-    left = np.zeros(index.size)
-    right = np.zeros(index.size)
-    d_left = np.zeros(index.size)
-    d_right = np.zeros(index.size)
+    count = t.size + cuts.size
+    ends = np.append(cuts + np.arange(cuts.size), count - 1)
+    starts = np.append(0, ends[:-1] + 1)
+    size = ends - starts + 1
+    real = np.ones(count - 1, dtype=bool)
+    real[ends[:-1]] = False  # Between the two copies of a cut sample lies no interval.
+    left, right, d_left, d_right = np.zeros((4, count))
     right[:-1][real], left[1:][real] = h, h
     d_right[:-1][real], d_left[1:][real] = slope, slope
 
     lower, diagonal, upper = right.copy(), 2 * (left + right), left.copy()
     rhs = 3 * (right * d_left + left * d_right)
-    ends = np.append(np.flatnonzero(~real), index.size - 1)
-    starts = np.append(0, ends[:-1] + 1)
-    size = ends - starts + 1
-
     long, three, two = size >= 4, size == 3, size == 2
     i = starts[long]
     h0, h1 = right[i], right[i + 1]
@@ -245,7 +242,7 @@ def _coefficients(t: FloatArray, v: FloatArray, cuts: IntArray) -> FloatArray:
         diagonal[i[two]], other[i[two]], rhs[i[two]] = 1.0, 0.0, d[i[two]]
     lower[starts], upper[ends] = 0.0, 0.0
 
-    banded = np.zeros((3, index.size))
+    banded = np.zeros((3, count))
     banded[0, 1:], banded[1], banded[2, :-1] = upper[:-1], diagonal, lower[1:]
     s = solve_banded((1, 1), banded, rhs, overwrite_ab=True, overwrite_b=True, check_finite=False)
     s0, s1 = s[:-1][real], s[1:][real]
