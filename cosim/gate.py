@@ -15,9 +15,9 @@ from cosim.adjust import Calibration, Pulse, calibrate_pulse
 from cosim.capture import Capture, Plan, capture_probe, check_steps, make_plan
 from cosim.coupling import DriveLine, drive_rate, rotating_rate
 from cosim.dsp.carrier import estimate_carrier
-from cosim.dsp.demodulate import demodulate
+from cosim.dsp.demodulation import demodulate
 from cosim.dsp.pulse import measure_pulse
-from cosim.dsp.resample import interpolant
+from cosim.dsp.resampling import interpolant
 from cosim.fidelities import Views
 from cosim.quantum.channel import check_channel, nearest_unitary, pauli_transfer_matrix
 from cosim.quantum.evolution import DriveSpline

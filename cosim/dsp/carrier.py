@@ -5,8 +5,8 @@ from dataclasses import dataclass, field
 import numpy as np
 from scipy.fft import next_fast_len, rfft
 
-from cosim.dsp.demodulate import demodulate
-from cosim.dsp.resample import coarsest_step, interpolant
+from cosim.dsp.demodulation import demodulate
+from cosim.dsp.resampling import coarsest_step, interpolant
 from cosim.errors import WaveformError
 from cosim.waveform import ComplexArray, Envelope, FloatArray, Waveform
 

@@ -7,7 +7,7 @@ from scipy.integrate import trapezoid
 from scipy.interpolate import CubicSpline
 
 from cosim.dsp.carrier import Burst, burst_weights, find_burst, phase_slope, plateau_amplitude
-from cosim.dsp.demodulate import demodulate, half_length
+from cosim.dsp.demodulation import demodulate, half_length
 from cosim.errors import WaveformError
 from cosim.waveform import ComplexArray, Envelope, FloatArray, Waveform
 

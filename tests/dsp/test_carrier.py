@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 
 from cosim.dsp.carrier import estimate_carrier, find_burst, plateau_amplitude
-from cosim.dsp.demodulate import demodulate
+from cosim.dsp.demodulation import demodulate
 from cosim.errors import WaveformError
 from cosim.waveform import FloatArray, Waveform
 

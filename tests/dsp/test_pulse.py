@@ -8,7 +8,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from cosim.dsp.demodulate import demodulate
+from cosim.dsp.demodulation import demodulate
 from cosim.dsp.pulse import PulseMeasures, measure_pulse
 from cosim.errors import WaveformError
 from cosim.waveform import FloatArray, Waveform

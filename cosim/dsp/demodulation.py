@@ -12,7 +12,7 @@ module; the tests compare the filter with it.
 import numpy as np
 from scipy.interpolate import PPoly
 
-from cosim.dsp.resample import coarsest_step, interpolant
+from cosim.dsp.resampling import coarsest_step, interpolant
 from cosim.errors import WaveformError
 from cosim.waveform import ComplexArray, Envelope, FloatArray, Waveform
 

@@ -7,7 +7,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from scipy.signal import fftconvolve, firwin, hilbert
 
-from cosim.dsp.demodulate import demodulate, half_length
+from cosim.dsp.demodulation import demodulate, half_length
 from cosim.errors import WaveformError
 from cosim.waveform import ComplexArray, Envelope, FloatArray, Waveform
 from tests.dsp.signals import CARRIER, STEP, simulator_grid, trapezoid, trapezoid_corners

@@ -7,7 +7,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from scipy.interpolate import CubicSpline
 
-from cosim.dsp.resample import coarsest_step, interpolant, resample
+from cosim.dsp.resampling import coarsest_step, interpolant, resample
 from cosim.errors import WaveformError
 from cosim.waveform import FloatArray, Waveform
 from tests.dsp.signals import CARRIER, STEP, simulator_grid, trapezoid, trapezoid_corners
