@@ -62,7 +62,7 @@ def check_testbench(path: str | os.PathLike[str]) -> tuple[Finding, ...]:
     resolve_saves(plan.deck, request.saves)
     prepared = prepare(plan.deck, request)
     points = round(request.stop / request.step) + 1
-    notices = [*plan.deck.notices, *prepared.notices, *plan.notices]
+    notices = dict.fromkeys([*plan.deck.notices, *prepared.notices, *plan.notices])
     runs = 2 if bench.accuracy.floor else 1
     found = [
         Finding("testbench", f"{path}: {bench.title}", "testbench", str(path)),

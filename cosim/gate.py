@@ -161,7 +161,7 @@ def run_gate(bench: Testbench, *, progress: Callable[[float], None] | None = Non
         *shot.result.warnings,
         *notices,
         *_edge_warnings(frame, envelope, measures.amplitude),
-        *_level_warnings(pulse, channel, target),
+        *_level_warnings(pulse, target),
         *_floor_warnings(calibrated, floor),
     )
     clock.lap("checks")
@@ -306,13 +306,16 @@ def _edge_warnings(frame: _Frame, envelope: Envelope, amplitude: float) -> tuple
     return tuple(found)
 
 
-def _level_warnings(pulse: Pulse, channel: ComplexArray, target: Target) -> tuple[str, ...]:
+def _level_warnings(pulse: Pulse, target: Target) -> tuple[str, ...]:
     qubit = pulse.qubit
     if qubit.levels == 2:
         return ()
-    more = replace(pulse, qubit=replace(qubit, levels=qubit.levels + 1)).channel()
+    # What more levels change is coherent, so the quick lossless path tells it.
+    pulse = pulse.lossless()
+    more = replace(pulse, qubit=replace(pulse.qubit, levels=qubit.levels + 1))
     change = abs(
-        average_gate_fidelity(more, target.unitary) - average_gate_fidelity(channel, target.unitary)
+        average_gate_fidelity(more.channel(), target.unitary)
+        - average_gate_fidelity(pulse.channel(), target.unitary)
     )
     if change <= LEVELS_TOLERANCE:
         return ()

@@ -10,6 +10,9 @@ from cosim.errors import InputError
 from cosim.quantum.fidelity import Rotation
 from cosim.waveform import ComplexArray, Envelope, FloatArray, Waveform
 
+# What varies little from run to run has no column of its own in an archive's table.
+_NOT_IN_TABLE = {"table": False}
+
 _PAULI = ("I", "X", "Y", "Z")
 
 
@@ -194,12 +197,12 @@ class GateResult:
     qubit_frequency: float = field(metadata=_unit("Hz"))
     window: tuple[float, float] = field(metadata=_unit("s"))
     pulse: PulseMeasures
-    waveform: Waveform
-    envelope: Envelope
+    waveform: Waveform = field(metadata=_NOT_IN_TABLE)
+    envelope: Envelope = field(metadata=_NOT_IN_TABLE)
     channel: Channel
-    extra: dict[str, Waveform]
+    extra: dict[str, Waveform] = field(metadata=_NOT_IN_TABLE)
     warnings: tuple[str, ...]
-    run: RunRecord
+    run: RunRecord = field(metadata=_NOT_IN_TABLE)
 
 
 # Classes by the tag that the archive keeps.

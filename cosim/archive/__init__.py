@@ -20,6 +20,7 @@ dimension scales, which fields declare in their metadata:
                   dimensional and of the right length, has that as its scale; others get an index
     labels        axis name -> labels along it, ("I", "X", "Y", "Z")
     axis_units    axis name -> unit of a scale that is a property rather than a field
+    table         False keeps a field, and all that is in it, out of /table
 
 The rooms: layout (names and root attributes), encoding, decoding, table, files (publishing,
 locking, opening), store (the functions below).

@@ -66,8 +66,13 @@ def row_of(entry: NumberedRun) -> dict[str, Column]:
 
 
 def _cells(value: Any, prefix: str) -> Iterator[tuple[str, Column]]:
-    """Walk the scalar fields of a dataclass, of those in it, and of its dictionaries."""
+    """Walk the scalar fields of a dataclass, of those in it, and of its dictionaries.
+
+    A field whose metadata says `table: False` stays out, with all that is in it.
+    """
     for field in dataclasses.fields(value):
+        if not field.metadata.get("table", True):
+            continue
         unit = field_unit(value, field.metadata)
         yield from _walk(prefix + field.name, getattr(value, field.name), unit)
 

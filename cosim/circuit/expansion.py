@@ -18,7 +18,9 @@ from cosim.errors import (
 )
 
 _DEEPEST = 60  # files inside one another
-_MOST_LINES = 4_000_000  # A few short files that include one another many times fill any memory.
+# A few short files that include one another many times would fill any memory or take for ever.
+_MOST_LINES = 4_000_000
+_MOST_FILES = 100_000
 
 
 @dataclass(frozen=True, slots=True)
@@ -150,6 +152,7 @@ class Expansion:
     files: dict[str, DeckFile] = field(default_factory=dict)
     used_sections: set[str] = field(default_factory=set)
     libraries: set[str] = field(default_factory=set)
+    entered: int = 0
 
     def add_source(self, source: Source, chain: tuple[tuple[str, str], ...] = ()) -> None:
         """Append a whole file. `chain` holds (file or file and section, place that names it)."""
@@ -161,8 +164,13 @@ class Expansion:
     def _add(
         self, source: Source, start: int, stop: int, chain: tuple[tuple[str, str], ...]
     ) -> None:
-        if len(chain) > _DEEPEST:
-            raise DeckError(f"files include one another {_DEEPEST} deep{_way(chain)}")
+        self.entered += 1
+        if len(chain) > _DEEPEST or self.entered > _MOST_FILES:
+            raise DeckError(
+                f"files include one another more than {_DEEPEST} deep or {_MOST_FILES} times"
+                f"{_way(chain)}",
+                file=source.file.path,
+            )
         at = start
         for index in source.marks:
             if index < at or index >= stop:
@@ -271,7 +279,7 @@ class Expansion:
         if not folder or os.path.isabs(name):
             return
         other = os.path.normpath(os.path.join(folder, name))
-        if other != os.path.normpath(path) and os.path.exists(other):
+        if os.path.exists(other) and os.path.realpath(other) != os.path.realpath(path):
             self.notices.append(f"{where(line)}: '{name}' is taken from {path}, not from {other}")
 
     def check_sections(self, deck: str) -> None:
