@@ -9,9 +9,9 @@ from scipy.interpolate import PPoly
 
 from cosim.errors import EvolutionError, InputError, WaveformError
 from cosim.quantum.channel import unitary_superoperator
-from cosim.quantum.evolution import DriveSpline, check_window
 from cosim.quantum.hamiltonian import anharmonic_energies
 from cosim.quantum.qubit import Qubit
+from cosim.quantum.steps import DriveSpline, check_window
 from cosim.waveform import ComplexArray, FloatArray
 
 # Verner's ninth-order pair: of QuTiP's integrators the most accurate for its time here.
