@@ -3,6 +3,7 @@
 import re
 from dataclasses import dataclass
 from functools import lru_cache
+from itertools import islice
 
 CIRCUIT_CARDS = frozenset(
     {
@@ -95,7 +96,12 @@ def card_word(text: str) -> str:
     if text[:1] != ".":
         return ""
     match = _CARD.match(text)
-    word = match[0].lower() if match else "."
+    return _usual(match[0]) if match else "."
+
+
+@lru_cache(maxsize=1024)
+def _usual(word: str) -> str:
+    word = word.lower()
     if word.startswith(".opt"):
         return ".options"
     if word.startswith(".param"):
@@ -106,7 +112,7 @@ def card_word(text: str) -> str:
 def with_usual_word(text: str) -> str:
     """Give a card line with its card in the usual spelling ("`.MACRO a b`" -> "`.subckt a b`")."""
     match = _CARD.match(text)
-    return card_word(text) + text[match.end() :] if match else text
+    return _usual(match[0]) + text[match.end() :] if match else text
 
 
 @dataclass(frozen=True, slots=True)
@@ -194,7 +200,7 @@ def model_card(text: str) -> tuple[str, str]:
 
     `ako:base type` is understood: the type is the one that is written.
     """
-    found = words(text)
+    found = [match[0].lower() for match in islice(_WORD.finditer(text), 4)]
     name = found[1] if len(found) > 1 else ""
     kinds = [word for word in found[2:4] if not word.startswith("ako:")]
     return name, kinds[0] if kinds else ""

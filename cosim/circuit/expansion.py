@@ -20,7 +20,7 @@ from cosim.errors import (
 _DEEPEST = 60  # files inside one another
 # A few short files that include one another many times would fill any memory or take for ever.
 _MOST_LINES = 4_000_000
-_MOST_FILES = 100_000
+_MOST_FILES = 10_000
 
 
 @dataclass(frozen=True, slots=True)

@@ -18,7 +18,7 @@ _CURRENT = {
     "z": "id", "q": "ic", "i": "current",
 }  # fmt: skip
 _SAVE = re.compile(r"([vi])\s*\((.*)\)", re.DOTALL)
-_PARAMETER = re.compile(r"@(.+)\[([^\[\]]+)\]", re.DOTALL)
+_PARAMETER = re.compile(r"@([^\s@]+)\[(\w+)\]")
 
 
 def own_nodes(structure: Structure, scope: Scope) -> frozenset[str]:
@@ -255,7 +255,7 @@ def _vector(deck: Deck, save: str) -> str:
         return _current(find_device(deck, match[2]), save)
     match = _PARAMETER.fullmatch(save)
     if match:
-        return f"@{find_device(deck, match[1]).name}[{match[2].strip()}]"
+        return f"@{find_device(deck, match[1]).name}[{match[2]}]"
     raise ProbeError(
         f"'{save}' is nothing that ngspice saves",
         hint="Write v(node), i(device) or @device[parameter].",

@@ -4,6 +4,7 @@ are sorted out here, and each that changes what is simulated leaves a notice.
 
 import re
 from collections.abc import Sequence
+from dataclasses import replace
 
 from cosim.circuit.cards import (
     ANALYSIS_CARDS,
@@ -32,7 +33,9 @@ _WAVEFORM_HINT = "Export the waveform from a simulator that can read it, and run
 # Measured on ngspice 39: lines that start with these are passed over without a word.
 _PASSED_OVER = frozenset('!%&():=?[],"')
 _LOOKS_LIKE_CIRCUIT = re.compile(
-    r"\.(inc|lib|param|model|subckt|opt|tran|temp|global)|[rclvid]\w*\s+\S+\s+\S+\s+\S+\s*$", re.I
+    r"\.(inc|lib|param|model|subckt|opt|tran|temp|global)"
+    r"|[rclvi]\w*\s+\S+\s+\S+\s+(dc\s+)?[\d.]+(e-?\d+)?[a-z]*\s*$",
+    re.IGNORECASE,
 )
 
 
@@ -169,12 +172,11 @@ class CardReader:
             text = "".join(
                 " " if char == "," else own for char, own in zip(covered, text, strict=True)
             )
-        elif card == ".model" and model_card(text)[1] in MODELS_WITH_FILE:
-            text = self._with_data_file(text, line)
         self._keep(text, line)
         if card == ".model" and model_card(text)[1] in MODELS_WITH_FILE:
-            # `_keep` has hidden the host's mark like any other text; this one is meant.
-            self.lines[-1] = SourceLine(text, line.file, line.line)
+            # Only now, as `_keep` hides the host's mark where a deck happens to hold it.
+            kept = self.lines[-1]
+            self.lines[-1] = replace(kept, text=self._with_data_file(kept.text, line))
 
     def _with_data_file(self, text: str, line: SourceLine) -> str:
         name, kind = model_card(text)

@@ -31,8 +31,11 @@ _CARDS = CIRCUIT_CARDS | {".options", ".temp", ".save", ".tran", ".end"}
 _LETTERS = frozenset("abcdefghijklmopqrstuvwxyz")
 _OWN_OPTIONS = frozenset({"reltol", "vntol", "abstol", "method", "trtol", "xtrtol"})
 _OPTION = re.compile(r"([a-z_]\w*)\s*(?:=\s*(\{[^{}]*\}|'[^']*'|[-+\w.]+))?\s*,?\s*", re.I)
-_FILE = re.compile(r"file\s*=?\s*(\"[^\"]*\"|\S*)", re.I)
-_SCRATCH_FILE = re.compile(r"\"\{scratch\}/[a-z0-9_]+(\.[a-z0-9_.]+)?\"")
+# ngspice takes "=" for a space, so that a file can also be named without it.
+_FILE = re.compile(
+    r"(?<!\w)(?:input_|state_)?file(?!\w)\s*=?\s*(\"[^\"]*\"[^\s,)]*|[^\s,)]*)", re.IGNORECASE
+)
+_SCRATCH_FILE = re.compile(r"\"\{scratch\}/[a-z0-9_]+(\.[a-z0-9]+)?\"")
 _EXTERNAL = re.compile(r"(?<![\w.])external(?![\w.])", re.I)
 _POINTS_FROM_FILE = re.compile(r"(?<![\w.])pwl\s*\(?\s*file(?![\w.])", re.I)
 

@@ -176,6 +176,11 @@ def filtered_options(line: SourceLine, own: dict[str, float | str]) -> OptionCar
             kept.append(f"{name}={item.value}")
         elif not item and name in FLAG_OPTIONS:
             kept.append(name)
+        elif name == "seed":
+            notices.append(
+                f"{where(line)}: option {text[match.start() : at]} left out: the run has a seed of "
+                "its own"
+            )
         elif name == "cshunt":
             notices.append(
                 f"{where(line)}: option cshunt left out: ngspice keeps it for later decks; write "

@@ -12,7 +12,7 @@ from collections import OrderedDict
 from dataclasses import dataclass
 
 from cosim.circuit.deck import DeckFile, SourceLine
-from cosim.errors import ForbiddenDeckError, MissingFileError, UnsupportedDeckError
+from cosim.errors import DeckError, ForbiddenDeckError, MissingFileError, UnsupportedDeckError
 
 LARGEST_FILE = 64 * 2**20  # byte; the largest process kits seen hold about 10 MB per file.
 _CACHED_FILES = 256
@@ -129,24 +129,33 @@ def read_bytes(path: str) -> bytes:
         If it is a folder, a device or a pipe, or larger than `LARGEST_FILE`.
     """
     try:
-        # Without O_NONBLOCK a pipe without a writer would stop the program here.
+        _check_status(path, os.stat(path))
+        # Looked at again once open, as the name may point elsewhere by then. Without O_NONBLOCK
+        # a pipe without a writer would stop the program here.
         handle = os.open(path, os.O_RDONLY | os.O_NONBLOCK | os.O_NOCTTY | os.O_CLOEXEC)
     except (OSError, ValueError) as error:
+        if isinstance(error, DeckError):
+            raise
         raise _missing(path, error) from error
-    with os.fdopen(handle, "rb") as stream:
-        status = os.fstat(handle)
-        if not stat.S_ISREG(status.st_mode):
-            raise ForbiddenDeckError(
-                "a deck is made of regular files, but this is a folder, a device or a pipe",
-                file=path,
-            )
-        if status.st_size > LARGEST_FILE:
-            raise ForbiddenDeckError(
-                f"the file holds {status.st_size} byte, at most {LARGEST_FILE} are read",
-                hint="Split the file, or include only the part that the deck needs.",
-                file=path,
-            )
-        return stream.read(LARGEST_FILE)
+    try:
+        _check_status(path, os.fstat(handle))
+        with open(handle, "rb", closefd=False) as stream:
+            return stream.read(LARGEST_FILE)
+    finally:
+        os.close(handle)
+
+
+def _check_status(path: str, status: os.stat_result) -> None:
+    if not stat.S_ISREG(status.st_mode):
+        raise ForbiddenDeckError(
+            "a deck is made of regular files, but this is a folder, a device or a pipe", file=path
+        )
+    if status.st_size > LARGEST_FILE:
+        raise ForbiddenDeckError(
+            f"the file holds {status.st_size} byte, at most {LARGEST_FILE} are read",
+            hint="Split the file, or include only the part that the deck needs.",
+            file=path,
+        )
 
 
 def _missing(path: str, error: Exception) -> MissingFileError:
@@ -293,7 +302,9 @@ class _Splitter:
             found = rule.search(line)
             if found:
                 line = line[: found.start()]
-        line = line.translate(_TRANSLATION).strip()
+        if not (line.isascii() and line.isprintable()):
+            line = line.translate(_TRANSLATION)
+        line = line.strip()
         if line.startswith("+") or glued:
             if not self._pieces:
                 self._first = number
