@@ -114,7 +114,7 @@ def _temporary_folder() -> str:
     """Make a fresh folder with a path in lower case, for ngspice lowers the names of data files."""
     for parent in (tempfile.gettempdir(), "/tmp", "/var/tmp"):
         if parent == parent.lower() and os.access(parent, os.W_OK):
-            return tempfile.mkdtemp(prefix="qcosim-", dir=parent)
+            return tempfile.mkdtemp(prefix=host.SCRATCH_PREFIX, dir=parent)
     raise SimulationError(
         f"no temporary folder with a path in lower case: {tempfile.gettempdir()!r} has capitals, "
         "/tmp and /var/tmp cannot be written",
@@ -238,13 +238,12 @@ class Client:
         atexit.register(self.close)
         with open(os.path.join(self._scratch, "host.err"), "wb") as errors:
             return subprocess.Popen(
-                [sys.executable, "-P", os.path.abspath(host.__file__), str(os.getpid())],
+                [sys.executable, "-P", host.__file__, str(os.getpid()), self._scratch],
                 stdin=subprocess.PIPE,
                 stdout=subprocess.PIPE,
                 stderr=errors,
                 bufsize=0,
                 pipesize=host.PIPE_SIZE,
-                cwd=self._scratch,
                 env=environment,
                 start_new_session=True,
             )

@@ -1,6 +1,7 @@
 """The program that hosts libngspice: it loads the library once and forks one child per deck.
 
-Run as `python -P host.py PARENT_PID` in an empty scratch folder; `client.py` starts it.
+Run as `python -P host.py PARENT_PID SCRATCH_FOLDER` with a fresh folder that the host may remove;
+`client.py` starts it.
 The host itself runs no deck: whatever a deck does to the library dies with its child. Requests come
 on standard input and answers leave on standard output as frames: a JSON header and raw bytes.
 
@@ -39,6 +40,7 @@ if __name__ == "__main__":
     # The client takes the frame functions from here and must not load PySpice by that.
     from PySpice.Spice.NgSpice.Shared import NgSpiceShared
 
+SCRATCH_PREFIX = "qcosim-"
 FRAME = struct.Struct("<IQ")  # bytes of the JSON header, bytes of the payload
 PIPE_SIZE = 2**20  # bytes; a waveform then crosses a pipe in a few system calls
 FILE_LIMIT = 2**26  # bytes that a child may write into one file: model checks, no more
@@ -311,8 +313,12 @@ class Host:
 
 
 def main(arguments: list[str]) -> None:
-    """Serve the process whose id is the only argument."""
-    parent = int(arguments[0])
+    """Serve the process with the given id from the given scratch folder."""
+    parent, scratch = int(arguments[0]), arguments[1]
+    # The folder will be removed, so that a call by hand must not name any other.
+    if not os.path.basename(scratch).startswith(SCRATCH_PREFIX):
+        raise SystemExit(f"{scratch!r} is not a scratch folder of this program")
+    os.chdir(scratch)
     # ngspice writes to the standard streams itself; the frames keep descriptors of their own.
     source, target = os.dup(0), os.dup(1)
     nothing = os.open(os.devnull, os.O_RDWR)
@@ -323,7 +329,6 @@ def main(arguments: list[str]) -> None:
     signal.signal(signal.SIGTERM, signal.SIG_IGN)
     # A caller that ignores the end of its children passes that on, and the host must wait for its.
     signal.signal(signal.SIGCHLD, signal.SIG_DFL)
-    scratch = os.getcwd()
     try:
         try:
             simulator = load_library()
