@@ -1,6 +1,7 @@
 """The first half of the drive path: from a testbench to the waveform at the probe."""
 
 import math
+import os
 from collections.abc import Callable
 from dataclasses import dataclass, replace
 from pathlib import Path
@@ -111,7 +112,7 @@ def make_plan(bench: Testbench) -> Plan:
         )
     else:
         deck = load_deck(
-            folder / Path(table.file).expanduser(),
+            _short(folder / Path(table.file).expanduser()),
             include_paths=include_paths,
             sections=table.sections,
             compatibility=table.compatibility,
@@ -139,6 +140,12 @@ def make_plan(bench: Testbench) -> Plan:
         time_limit=table.time_limit,
     )
     return Plan(deck, probe, request, steps_per_period, notices)
+
+
+def _short(path: Path) -> Path:
+    # "examples/../netlists/a.cir" reads better as "netlists/a.cir", where that is the same file.
+    short = Path(os.path.normpath(path))
+    return short if os.path.realpath(short) == os.path.realpath(path) else path
 
 
 def _stop(bench: Testbench, deck: Deck) -> float:

@@ -128,6 +128,11 @@ class NameOrTable:
 def read_toml(path: Path) -> dict[str, Any]:
     """Read a TOML file.
 
+    Parameters
+    ----------
+    path : Path
+        The file.
+
     Returns
     -------
     dict
@@ -152,6 +157,15 @@ def read_toml(path: Path) -> dict[str, Any]:
 
 def check_keys(table: Mapping[str, Any], valid: list[str], where: str) -> None:
     """Refuse a key that a table does not have.
+
+    Parameters
+    ----------
+    table : mapping
+        The table.
+    valid : list of str
+        Keys that it has.
+    where : str
+        File and table, for the message.
 
     Raises
     ------

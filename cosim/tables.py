@@ -197,5 +197,5 @@ def _cell(label: str, value: object) -> str:
 def _plain_table() -> Table:
     table = Table(box=None, pad_edge=False, show_header=False)
     table.add_column(style="bold", no_wrap=True)
-    table.add_column()
+    table.add_column(overflow="fold")
     return table

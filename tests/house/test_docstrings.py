@@ -26,7 +26,8 @@ def public_objects() -> Iterator[tuple[str, object]]:
     for module in modules():
         for name, item in vars(module).items():
             home = getattr(item, "__module__", None) == module.__name__
-            if not name.startswith("_") and home and (inspect.isfunction(item) or inspect.isclass(item)):
+            known = inspect.isfunction(item) or inspect.isclass(item)
+            if home and known and not name.startswith("_"):
                 yield f"{module.__name__}.{name}", item
 
 
