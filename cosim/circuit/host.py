@@ -95,8 +95,9 @@ def unpack(frame: bytes) -> tuple[dict[str, Any], memoryview]:
     return header, memoryview(frame)[FRAME.size + size :]
 
 
-def load_library() -> Any:
-    """Load libngspice through PySpice; give the instance, whose callbacks do nothing yet."""
+def load_library() -> tuple[Any, bool]:
+    """Load libngspice through PySpice; give the instance and whether it found its code models."""
+    said: list[str] = []
     # PySpice logs each line of ngspice as an error; the callback below collects them instead.
     logging.getLogger("PySpice").setLevel(logging.CRITICAL + 1)
 
@@ -108,6 +109,8 @@ def load_library() -> Any:
         def send_char(self, message: str, ngspice_id: int) -> int:
             if self.listener is not None:
                 self.listener.line(message)
+            else:
+                said.append(message)
             return 0
 
         def send_stat(self, message: str, ngspice_id: int) -> int:
@@ -118,7 +121,8 @@ def load_library() -> Any:
     simulator = Simulator.new_instance()
     # ngspice gives BSIM models two OpenMP threads, which spin and take a core from another run.
     simulator.exec_command("set num_threads=1")
-    return simulator
+    # Its start file loads the code models of A devices, and comes in a package of its own.
+    return simulator, not any("can't find the initialization file" in line for line in said)
 
 
 class Listener:
@@ -331,7 +335,7 @@ def main(arguments: list[str]) -> None:
     signal.signal(signal.SIGCHLD, signal.SIG_DFL)
     try:
         try:
-            simulator = load_library()
+            simulator, models = load_library()
         except Exception as error:
             reason = f"{type(error).__name__}: {error}"
             send(target, pack({"kind": "failed", "reason": reason}))
@@ -340,7 +344,7 @@ def main(arguments: list[str]) -> None:
         gc.collect()
         gc.freeze()
         gc.disable()
-        ready = {"version": simulator.ngspice_version, "models": not simulator.spinit_not_found}
+        ready = {"version": simulator.ngspice_version, "models": models}
         send(target, pack({"kind": "ready", **ready}))
         Host(simulator, source, target, parent).serve()
     except (CallerGoneError, BrokenPipeError):

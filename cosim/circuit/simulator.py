@@ -102,7 +102,12 @@ def simulate_prepared(
 
 
 def simulator_version() -> str:
-    """Give the simulator's name and version, for example "ngspice-39"; starts the host.
+    """Give the simulator's name and version; starts the host.
+
+    Returns
+    -------
+    str
+        For example "ngspice-39".
 
     Raises
     ------

@@ -2,11 +2,15 @@
 
 import math
 import pickle
+from pathlib import Path
 
 import numpy as np
 import pytest
 
+from cosim.circuit.analysis import TransientRequest
 from cosim.circuit.location import locate
+from cosim.circuit.netlist import load_deck
+from cosim.circuit.simulator import simulate
 from cosim.errors import (
     ConvergenceError,
     CosimError,
@@ -308,3 +312,14 @@ r7 q 0
 def test_words_of_ngspice_lead_to_their_line(words: list[str], line: str | None) -> None:
     index = locate(HIERARCHY, words)
     assert (None if index is None else HIERARCHY[index]) == line
+
+
+def test_a_fault_in_an_included_file_is_named_by_that_file(tmp_path: Path) -> None:
+    (tmp_path / "parts.inc").write_text("* parts\n\n.subckt half a b\nr1 a b 1k\nr2 b 0\n.ends\n")
+    deck = tmp_path / "top.cir"
+    deck.write_text("Divider\n.include parts.inc\nv1 in 0 1\nx1 in out half\n.end\n")
+    request = TransientRequest(stop=1e-9, step=1e-11, saves=("v(out)",))
+    with pytest.raises(DeckError, match="without a value") as caught:
+        simulate(load_deck(deck), request)
+    assert Path(caught.value.file).name == "parts.inc"
+    assert caught.value.line == 5
