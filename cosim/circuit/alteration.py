@@ -5,7 +5,7 @@ import re
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field, replace
 
-from cosim.circuit.cards import assignments, masked, number_text, words
+from cosim.circuit.cards import assignments, masked, number_text
 from cosim.circuit.deck import Deck, SourceLine
 from cosim.circuit.hierarchy import Structure, structure_of, top_level_cards
 from cosim.circuit.lookup import find_node
@@ -184,20 +184,20 @@ class _Change:
     def apply(self, scope: Scope, wish: _Wish, prefix: str) -> None:
         """Alter the elements of a scope in place."""
         for name, inner in wish.inner.items():
-            index = scope.elements.get(name)
-            if index is None:
+            if name not in scope.elements:
                 raise UnknownNameError(
                     f"instance '{prefix}{name}' does not exist",
                     hint=near_names(prefix + name, [prefix + item for item in scope.elements]),
                     file=self.path,
                 )
-            line = self.replaced.get(index, self.structure.lines[index])
-            text = line.text
-            for parameter, value in inner.parameters.items():
-                text = self._with_parameter(scope, name, line, text, parameter, value)
-            if inner.inner:
-                text = self._with_copy(scope, f"{prefix}{name}", line, text, inner)
-            self.replaced[index] = SourceLine(text, line.file, line.line)
+            for index in scope.elements[name]:
+                line = self.structure.lines[index]
+                text = line.text
+                for parameter, value in inner.parameters.items():
+                    text = self._with_parameter(scope, name, line, text, parameter, value)
+                if inner.inner:
+                    text = self._with_copy(scope, f"{prefix}{name}", line, text, inner)
+                self.replaced[index] = SourceLine(text, line.file, line.line)
 
     def _with_parameter(
         self, scope: Scope, name: str, line: SourceLine, text: str, parameter: str, value: float
@@ -213,10 +213,12 @@ class _Change:
                     file=line.file,
                     line=line.line,
                 )
+        value_names = _VALUE_NAMES.get(name[0], ())
+        same = value_names if parameter in value_names else (parameter,)
         for item in assignments(text):
-            if item.name == parameter:
+            if item.name in same:
                 return text[: item.value_start] + number_text(value) + text[item.stop :]
-        if parameter in _VALUE_NAMES.get(name[0], ()):
+        if parameter in value_names:
             return _with_value(text, value)
         return f"{text} {parameter}={number_text(value)}"
 
@@ -264,10 +266,14 @@ def _with_word(text: str, word: str, new: str, *, last: bool = False) -> str:
 def _with_value(text: str, value: float) -> str:
     """Replace the value in an element's fourth place, or the one after "dc"."""
     covered = masked(text)
-    match = re.search(r"(?<![\w.])dc(?:\s*=\s*|\s+)([^\s,]+)", covered, re.IGNORECASE)
-    if match is None or text[0].lower() not in "vi":
-        match = re.match(r"\S+\s+\S+\s+\S+\s+([^\s,=]+)(?!\s*=)", covered)
+    match = None
+    if text[0] in "vViI":
+        match = re.search(r"(?<![\w.])dc(?:\s*=\s*|\s+)([^\s,]+)", covered, re.IGNORECASE)
     if match is None:
-        name = words(text)[0]
-        raise UnknownNameError(f"'{name}' has no value that could be replaced in '{text}'")
-    return text[: match.start(1)] + number_text(value) + text[match.end(1) :]
+        match = re.match(r"\S+[\s,]+\S+[\s,]+\S+[\s,]+([^\s,=]+)(?!\s*=)", covered)
+    if match is None:
+        return f"{text} {number_text(value)}"
+    if text[match.start(1)] in "{'-+." or text[match.start(1)].isdigit():
+        return text[: match.start(1)] + number_text(value) + text[match.end(1) :]
+    # A model or a waveform stands there; a value goes before it.
+    return f"{text[: match.start(1)]}{number_text(value)} {text[match.start(1) :]}"

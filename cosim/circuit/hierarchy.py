@@ -149,7 +149,7 @@ class _Builder:
                 self._card(index, line)
             elif self._state() is not False:
                 name = line.text.split(None, 1)[0].lower()
-                self.scope.elements.setdefault(name, index)
+                self.scope.elements.setdefault(name, []).append(index)
                 if self._state() is None:
                     self.scope.uncertain.add(index)
         if self.scope is not self.root:
@@ -249,7 +249,7 @@ def _check(structure: Structure) -> None:
             names = " > ".join(item.name for item in (*way[1:], scope))
             problem = "a subcircuit holds itself" if scope in way else "too many levels"
             raise DeckError(f"{problem}: {names}", file=header.file, line=header.line)
-        for index in scope.elements.values():
+        for index in (index for found in scope.elements.values() for index in found):
             line = structure.lines[index]
             element = element_of(scope, line.text)
             structure.devices.setdefault(element.letter, line)

@@ -10,7 +10,7 @@ from cosim.circuit.hierarchy import Structure, structure_of
 from cosim.circuit.scope import GROUND, Scope, element_of
 from cosim.errors import DeckError, ProbeError, UnknownNameError, near_names
 
-_MOST_NODES = 5_000_000
+_MOST_NODES = 1_000_000
 _MOST_OFFERED = 2000
 _BRANCH_LETTERS = frozenset("vleh")
 _CURRENT = {
@@ -25,8 +25,9 @@ def own_nodes(structure: Structure, scope: Scope) -> frozenset[str]:
     """Nodes that the elements of one scope name, ground left out."""
     if scope.nodes is None:
         found: set[str] = set()
-        for index in scope.elements.values():
-            found.update(element_of(scope, structure.lines[index].text).nodes)
+        for indices in scope.elements.values():
+            for index in indices:
+                found.update(element_of(scope, structure.lines[index].text).nodes)
         scope.nodes = frozenset(found - GROUND)
     return scope.nodes
 
@@ -47,7 +48,7 @@ def node_names(deck: Deck) -> frozenset[str]:
     Raises
     ------
     DeckError
-        If the deck's structure is wrong, or it has more than five million nodes.
+        If the deck's structure is wrong, or it has more than a million nodes.
     """
     structure = structure_of(deck.lines)
     names: set[str] = set()
@@ -72,8 +73,10 @@ def node_names(deck: Deck) -> frozenset[str]:
 def instances(structure: Structure, scope: Scope) -> list[tuple[str, Scope]]:
     """Give name and definition of the subcircuit instances of a scope."""
     found = []
-    for name, index in scope.elements.items():
-        if name[0] == "x":
+    for name, indices in scope.elements.items():
+        if name[0] != "x":
+            continue
+        for index in indices:
             element = element_of(scope, structure.lines[index].text)
             definition = scope.subcircuit(element.reference)
             if definition is not None:
@@ -139,16 +142,16 @@ class _Frame:
 
     def enter(self, structure: Structure, name: str) -> "_Frame | None":
         """Go into a subcircuit instance; None when there is none of that name."""
-        index = self.scope.elements.get(name)
-        if name[:1] != "x" or index is None:
+        if name[:1] != "x":
             return None
-        element = element_of(self.scope, structure.lines[index].text)
-        definition = self.scope.subcircuit(element.reference)
-        if definition is None:
-            return None
-        nets = [self.net(structure, node) for node in element.nodes]
-        ports = dict(zip(definition.ports, nets, strict=False))
-        return _Frame(definition, f"{self.prefix}{name}.", ports)
+        for index in self.scope.elements.get(name, ()):
+            element = element_of(self.scope, structure.lines[index].text)
+            definition = self.scope.subcircuit(element.reference)
+            if definition is not None:
+                nets = [self.net(structure, node) for node in element.nodes]
+                ports = dict(zip(definition.ports, nets, strict=False))
+                return _Frame(definition, f"{self.prefix}{name}.", ports)
+        return None
 
     def names(self, structure: Structure) -> list[str]:
         """Names to offer when one was not found here."""
@@ -204,8 +207,8 @@ def find_device(deck: Deck, name: str) -> Device:
                 file=deck.path,
             )
         frame = inner
-    index = frame.scope.elements.get(parts[-1])
-    if index is None:
+    indices = frame.scope.elements.get(parts[-1])
+    if not indices:
         offered = [frame.prefix + item for item in islice(frame.scope.elements, _MOST_OFFERED)]
         raise UnknownNameError(
             f"device '{wanted}' does not exist",
@@ -214,7 +217,7 @@ def find_device(deck: Deck, name: str) -> Device:
         )
     letter = parts[-1][0]
     flat = f"{letter}.{frame.prefix}{parts[-1]}" if frame.prefix else parts[-1]
-    return Device(flat, letter, structure.lines[index].text)
+    return Device(flat, letter, structure.lines[indices[0]].text)
 
 
 def resolve_saves(deck: Deck, saves: Sequence[str]) -> dict[str, str]:

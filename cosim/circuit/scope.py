@@ -15,7 +15,7 @@ _FIXED_NODES = {
 MODEL_PLACE = {"d": 3, "j": 4, "z": 4, "q": 4, "m": 5, "s": 5, "o": 5, "y": 5, "u": 4, "w": 4}
 _MOST_EXTRA_NODES = {"d": 1, "q": 2, "m": 3}
 _IN_EXPRESSION = re.compile(r"(?<![\w.])v\s*\(\s*([^\s,()]+)\s*(?:,\s*([^\s,()]+)\s*)?\)", re.I)
-_PORT = re.compile(r"%\w+\s*\([^()]*\)|%?\w*\s*\[[^\[\]]*\]|[^\s\[\]()%]+|%\w+")
+_PORT = re.compile(r"(?:%\w+\s*)?\[[^\[\]]*\]|%\w+\s*\([^()]*\)|%\w+|[^\s\[\]()%]+")
 _EVENT_ONLY = frozenset({"d_to_real", "real_delay", "real_gain"})
 _ANALOG_PORT = {"adc_bridge": 0, "bidi_bridge": 0, "dac_bridge": -1, "real_to_v": -1}
 
@@ -44,7 +44,7 @@ class Scope:
     parent: "Scope | None"
     first: int
     stop: int
-    elements: dict[str, int] = field(default_factory=dict)
+    elements: dict[str, list[int]] = field(default_factory=dict)
     uncertain: set[int] = field(default_factory=set)
     models: dict[str, str] = field(default_factory=dict)
     inner: dict[str, "Scope"] = field(default_factory=dict)

@@ -1,0 +1,262 @@
+"""Oracle: `ngspice -b` on decks edited by hand, number by number."""
+
+from collections.abc import Callable
+from pathlib import Path
+
+import numpy as np
+import pytest
+
+from cosim.circuit.netlist import (
+    Deck,
+    deck_from_text,
+    load_deck,
+    with_instances,
+    with_parameters,
+    with_terminations,
+)
+from cosim.errors import InputError, UnknownNameError
+from tests.circuit.batch import DECKS, ROUNDING, copy_decks, original, output
+
+# Deck, how it is altered, and the same edit by hand: (old text, new text) pairs.
+Edit = tuple[str, Callable[[Deck], Deck], list[tuple[str, str]]]
+EDITS: dict[str, Edit] = {
+    "one of several on a line": (
+        "parameters",
+        lambda deck: with_parameters(deck, {"FREQ": 0.7e9}),
+        [("freq=1g", "freq=0.7g")],
+    ),
+    "in braces": (
+        "parameters",
+        lambda deck: with_parameters(deck, {"rhalf": 300.0}),
+        [("rhalf={500}", "rhalf=300")],
+    ),
+    "in quotes": (
+        "parameters",
+        lambda deck: with_parameters(deck, {"rload": 1234.5}),
+        [("rload='2*rhalf'", "rload=1234.5")],
+    ),
+    "given twice": (
+        "parameters",
+        lambda deck: with_parameters(deck, {"amp": 0.25}),
+        [(".param amp=1", ".param amp=0.25")],
+    ),
+    "a condition": (
+        "parameters",
+        lambda deck: with_parameters(deck, {"choice": 1}),
+        [("choice=2", "choice=1")],
+    ),
+    "in an include": (
+        "includes",
+        lambda deck: with_parameters(deck, {"cload": 0.05e-12}),
+        [('.INC "parts/two words.inc"', ".param cload=0.05p")],
+    ),
+    "in a section": (
+        "includes",
+        lambda deck: with_parameters(deck, {"rbase": 350}),
+        [(".lib parts/corners.lib TT", ".param rbase=350 rcorner={rbase}")],
+    ),
+    "drawn at random": (
+        "random",
+        lambda deck: with_parameters(deck, {"spread": 0.0, "other": 2e3}),
+        [("spread=agauss(0,0.1,1) other={aunif(1k,100)}", "spread=0 other=2k")],
+    ),
+    "an instance": (
+        "hierarchy",
+        lambda deck: with_instances(deck, {"x2": {"W": 1e-6}}),
+        [("w=4u rl", "w=1u rl")],
+    ),
+    "an instance that took the default": (
+        "hierarchy",
+        lambda deck: with_instances(deck, {"X1": {"rl": 500}}),
+        [("stage w=2u", "stage w=2u rl=500")],
+    ),
+    "a multiplier": (
+        "hierarchy",
+        lambda deck: with_instances(deck, {"xd": {"m": 5}}),
+        [("half m=2", "half m=5")],
+    ),
+    "an inner instance of one of two": (
+        "hierarchy",
+        lambda deck: with_instances(deck, {"x1.xb": {"w": 9e-6}}),
+        [
+            ("x1 in net<3> stage w=2u", "x1 in net<3> other w=2u"),
+            (".subckt deep", OTHER := """.subckt other in out w=1u rl=2k
+xa in mid deep r={rl} w={w}
+xb mid out deep r={rl} w=9u
+.subckt local a b
+r1 a b rmod
+.model rmod r r=10k
+.ends local
+xl mid vdd! local
+.ends other
+.subckt deep"""),
+        ],
+    ),
+    "devices of two instances": (
+        "hierarchy",
+        lambda deck: with_instances(
+            deck, {"x1.xb.m1": {"w": 9e-6}, "x1.xa.rd": {"value": 700.0}, "r1": {"value": 5e3}}
+        ),
+        [
+            ("x1 in net<3> stage w=2u", "x1 in net<3> other w=2u"),
+            ("r1 bus[2] out+ 1k", "r1 bus[2] out+ 5k"),
+            (".subckt deep", OTHER.replace("xb mid out deep r={rl} w=9u", "xb mid out deepb r={rl}")
+             .replace("xa in mid deep", "xa in mid deepa")
+             .replace(".subckt deep", """.subckt deepa g d r=1k w=1u
+m1 d g 0 0 nch w={w} l=0.1u
+rd vdd! d 700
+cd d 0 5f
+.model nch nmos level=1 vto=0.3 kp=300u lambda=0.1
+.ends
+.subckt deepb g d r=1k w=1u
+m1 d g 0 0 nch w=9u l=0.1u
+rd vdd! d {r}
+cd d 0 5f
+.model nch nmos level=1 vto=0.3 kp=300u lambda=0.1
+.ends
+.subckt deep""")),
+        ],
+    ),
+    "inside a definition inside a definition": (
+        "hierarchy",
+        lambda deck: with_instances(deck, {"x2.xl.r1": {"value": 2000.0}}),
+        [
+            ("x2 net<3> out stage params: w=4u rl=1.5k", "x2 net<3> out other w=4u rl=1.5k"),
+            (".subckt deep", OTHER.replace("w=9u", "w={2*w}").replace("a b rmod", "a b 2k rmod")),
+        ],
+    ),
+    "a value and a coefficient": (
+        "start",
+        lambda deck: with_instances(deck, {"r1": {"tc1": 5e-3, "value": 200.0}}),
+        [("r1 out 0 500 tc1=2e-3", "r1 out 0 200 tc1=5e-3")],
+    ),
+    "values of a capacitor and a coil": (
+        "start",
+        lambda deck: with_instances(deck, {"c1": {"value": 2e-12}, "L1": {"l": 2e-9}}),
+        [("l1 out 0 1n", "l1 out 0 2n"), ("c1 out 0 1p", "c1 out 0 2p")],
+    ),
+    "a termination": (
+        "hierarchy",
+        lambda deck: with_terminations(deck, ["OUT", "net<3>", "x2.xb.d"], 5000.0),
+        [(".tran", "ra out 0 5k\nrb net<3> 0 5k\n.tran")],
+    ),
+}  # fmt: skip
+
+
+@pytest.mark.ngspice
+@pytest.mark.parametrize("name", EDITS)
+def test_an_altered_deck_is_the_deck_edited_by_hand(tmp_path: Path, name: str) -> None:
+    stem, alter, edits = EDITS[name]
+    folder = copy_decks(tmp_path)
+    deck = load_deck(folder / f"{stem}.cir")
+    initial = "uic" if deck.tran and deck.tran.uic else "op"
+    got = output(alter(deck), initial=initial)
+    assert np.max(np.abs(got - output(deck, initial=initial))) > 1e-3  # It has an effect at all.
+    text = (folder / f"{stem}.cir").read_text(encoding="utf-8")
+    for old, new in edits:
+        assert old in text
+        text = text.replace(old, new, 1)
+    (folder / "edited.cir").write_text(text, encoding="utf-8")
+    wanted = original("edited.cir", folder)
+    np.testing.assert_allclose(got, wanted, rtol=0, atol=ROUNDING)
+
+
+@pytest.mark.ngspice
+@pytest.mark.parametrize("key", ["parts/corners.lib", "corners.lib"])
+def test_a_section_chosen_is_the_section_written(tmp_path: Path, key: str) -> None:
+    folder = copy_decks(tmp_path)
+    got = output(load_deck(folder / "includes.cir", sections={key: "SS"}))
+    text = (folder / "includes.cir").read_text(encoding="utf-8")
+    (folder / "edited.cir").write_text(text.replace(" TT", " ss"), encoding="utf-8")
+    wanted = original("edited.cir", folder)
+    np.testing.assert_allclose(got, wanted, rtol=0, atol=ROUNDING)
+
+
+def test_what_depends_on_a_parameter_follows() -> None:
+    text = "t\n.param f=1g\nv1 a 0 sin(0 1 {f})\nr1 a 0 1\n.temp {f/1e7}\n.tran {1/(10*f)} '20/f'\n"
+    deck = deck_from_text(text)
+    assert deck.tran is not None
+    assert (deck.tran.step, deck.tran.stop) == pytest.approx((1e-10, 2e-8))
+    assert deck.temperature == pytest.approx(373.15)
+    altered = with_parameters(deck, {"f": 2e9})
+    assert altered.tran is not None
+    assert (altered.tran.step, altered.tran.stop) == pytest.approx((5e-11, 1e-8))
+    assert altered.temperature == pytest.approx(473.15)
+    assert deck.lines[0].text == ".param f=1g"
+
+
+@pytest.mark.parametrize(
+    ("line", "parameter", "wanted"),
+    [
+        ("r1 a 0 1k", "value", "r1 a 0 5.0"),
+        ("r1 a 0 {x*(1 + 2)} tc1=1m", "r", "r1 a 0 5.0 tc1=1m"),
+        ("r1 a 0 R = 1k", "value", "r1 a 0 R = 5.0"),
+        ("r1 (a,0) resistance='2*x' m=2", "r", "r1 (a,0) resistance=5.0 m=2"),
+        ("r1 a 0 mod w=1u", "value", "r1 a 0 5.0 mod w=1u"),
+        ("r1 a 0 1k ac=2k", "ac", "r1 a 0 1k ac=5.0"),
+        ("r1 a 0 1k", "tc1", "r1 a 0 1k tc1=5.0"),
+        ("v1 a 0 sin(0 1 1g)", "dc", "v1 a 0 5.0 sin(0 1 1g)"),
+        ("v1 a 0 sin(0 1 1g) DC 1", "dc", "v1 a 0 sin(0 1 1g) DC 5.0"),
+        ("v1 a 0", "value", "v1 a 0 5.0"),
+        ("i1 a 0 -1m", "dc", "i1 a 0 5.0"),
+    ],
+)
+def test_values_are_replaced_where_they_stand(line: str, parameter: str, wanted: str) -> None:
+    deck = deck_from_text(f"t\n{line}\nr2 a 0 1\n.model mod r rsh=1\n")
+    name = line.split()[0]
+    assert with_instances(deck, {name: {parameter: 5}}).lines[0].text == wanted
+
+
+def test_all_digits_of_a_value_reach_the_deck() -> None:
+    deck = deck_from_text("t\n.param a=1 b={a}\nr1 x 0 {a}\n")
+    value = 0.1 + 0.2
+    assert with_parameters(deck, {"a": value}).lines[0].text == ".param a=0.30000000000000004 b={a}"
+
+
+@pytest.mark.parametrize(
+    ("alter", "words"),
+    [
+        (lambda d: with_parameters(d, {"chioce": 1}), ["chioce", "'choice'"]),
+        (lambda d: with_parameters(d, {"gain": 1}), ["gain", "top-level"]),
+        (lambda d: with_parameters(d, {"twice": 1}), ["twice"]),
+        (lambda d: with_instances(d, {"x2": {"gain": 1}}), ["x2", "'x1'"]),
+        (lambda d: with_instances(d, {"x1": {"gian": 1}}), ["gian", "'gain'", "parameters.cir:"]),
+        (lambda d: with_instances(d, {"x1.r9": {"r": 1}}), ["x1.r9", "'x1.r1'"]),
+        (lambda d: with_instances(d, {"r1.m1": {"w": 1}}), ["r1", "device"]),
+        (lambda d: with_instances(d, {"x1.e1": {"value": 1.0}, "x1.": {"a": 1}}), ["x1."]),
+        (lambda d: with_terminations(d, ["owt"], 50), ["owt", "'out'"]),
+    ],
+)
+def test_wrong_names_are_errors_with_near_names(
+    alter: Callable[[Deck], Deck], words: list[str]
+) -> None:
+    deck = load_deck(DECKS / "parameters.cir")
+    with pytest.raises(UnknownNameError) as caught:
+        alter(deck)
+    assert all(word in str(caught.value) for word in words)
+
+
+@pytest.mark.parametrize("value", [float("nan"), float("inf"), True, "1k"])
+def test_values_are_finite_numbers(value: float) -> None:
+    deck = load_deck(DECKS / "parameters.cir")
+    with pytest.raises(InputError, match="finite"):
+        with_parameters(deck, {"amp": value})
+    with pytest.raises(InputError, match="finite"):
+        with_instances(deck, {"x1": {"gain": value}})
+
+
+@pytest.mark.parametrize("resistance", [0.0, -1.0, float("nan"), float("inf")])
+def test_a_termination_is_a_positive_resistance_at_a_node(resistance: float) -> None:
+    deck = load_deck(DECKS / "parameters.cir")
+    with pytest.raises(InputError, match="positive"):
+        with_terminations(deck, ["out"], resistance)
+    with pytest.raises(InputError, match="ground"):
+        with_terminations(deck, ["gnd"], 50.0)
+
+
+def test_the_names_of_terminations_are_free() -> None:
+    deck = deck_from_text("t\nrtermination1 a 0 1\nRTERMINATION2 a b 1\nr1 b 0 1\n")
+    lines = with_terminations(with_terminations(deck, ["a", "A", "b"], 50), ["a"], 75).lines
+    names = [line.text.split()[0].lower() for line in lines]
+    assert len(set(names)) == len(names) == 6
+    assert lines[-1].text == "rtermination5 a 0 75.0"
