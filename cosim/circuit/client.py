@@ -243,7 +243,6 @@ class Client:
                 stdout=subprocess.PIPE,
                 stderr=errors,
                 bufsize=0,
-                pipesize=host.PIPE_SIZE,
                 env=environment,
                 start_new_session=True,
             )

@@ -19,7 +19,6 @@ The file imports nothing of this package, so that it runs wherever the caller fo
 """
 
 import ctypes
-import fcntl
 import gc
 import json
 import logging
@@ -42,7 +41,7 @@ if __name__ == "__main__":
 
 SCRATCH_PREFIX = "qcosim-"
 FRAME = struct.Struct("<IQ")  # bytes of the JSON header, bytes of the payload
-PIPE_SIZE = 2**20  # bytes; a waveform then crosses a pipe in a few system calls
+CHUNK = 2**16  # bytes read at a time: what a pipe holds; larger pipes count against a user limit
 FILE_LIMIT = 2**26  # bytes that a child may write into one file: model checks, no more
 LOG_LIMIT = 20_000  # lines of a run's log that are passed on at once
 LOG_TAIL = 200  # lines after these that are kept for the end of the run
@@ -271,12 +270,12 @@ class Host:
                 raise CallerGoneError
             # The caller sends nothing while a run goes on, so that its pipe has only an end.
             if self._source in ready:
-                data = os.read(self._source, PIPE_SIZE)
+                data = os.read(self._source, CHUNK)
                 if not data or child_output is not None:
                     raise CallerGoneError
                 return data
             if ready:
-                return os.read(ready[0], PIPE_SIZE)
+                return os.read(ready[0], CHUNK)
 
     def _run(self, request: dict[str, Any], data: memoryview) -> None:
         self._runs += 1
@@ -285,7 +284,6 @@ class Host:
             line.replace("{scratch}", request["folder"]) for line in request["lines"]
         ]
         source, output = os.pipe()
-        fcntl.fcntl(output, fcntl.F_SETPIPE_SZ, PIPE_SIZE)
         process = os.fork()
         if process == 0:
             os.close(source)
