@@ -40,7 +40,7 @@ def main() -> None:
                 "title": f"x180 through a filter of {bandwidth / 1e6:g} MHz",
                 "netlist": {"file": filtered_drive(bandwidth), "stop": "60 ns"},
                 "drive": {"probe": "v(out)", "termination": "50 ohm", "carrier": "5 GHz"},
-                "qubit": {"kind": "spin", "frequency": "5 GHz", "rabi_per_volt": "122 MHz/V"},
+                "qubit": {"kind": "spin", "frequency": "5 GHz", "rabi_per_volt": "125 MHz/V"},
                 "gate": {"target": "x", "window": ["4 ns", "50 ns"]},
                 "accuracy": {"floor": False},
             }
