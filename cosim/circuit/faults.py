@@ -22,14 +22,16 @@ WARNINGS_SHOWN = 50  # a kit's model checks can repeat a warning for each of its
 
 _FATAL = re.compile(
     r"simulation\(s\) aborted|simulation interrupted|simulation not started|circuit not parsed"
-    r"|aren't any circuits loaded|cannot recover|^stderr (?:Error|Fatal)",
+    r"|aren't any circuits loaded|cannot recover|^stderr (?:Error|Fatal)"
+    r"|^stdout [*\s]*error[*\s]*$|^stdout error\(",  # code models, which then go on
     re.IGNORECASE,
 )
 # An argument out of range is reported for each rejected Newton try as well; the run recovers from
 # it or says in another line that it did not.
 _RANGE = re.compile(r"out of range for \w+", re.IGNORECASE)
 _NO_FILE = re.compile(
-    r"could not find (?:include|library) file|library file \S+ not found|cannot open file",
+    r"could not (?:find|open) (?:include|library) file|library file \S+ not found|cannot open file"
+    r"|failed to open state file|error reading data file|unable to open file",
     re.IGNORECASE,
 )
 _NO_CONVERGENCE = re.compile(r"timestep too small|iteration limit|no convergence", re.IGNORECASE)
@@ -40,7 +42,7 @@ _NO_NAME = re.compile(
 )
 _NO_DEVICE = re.compile(r"unknown device type", re.IGNORECASE)
 _COMPLAINT = re.compile(
-    r"(?:Error|Fatal|Warning|Netlist line|Undefined|MIF|Too (?:few|many))", re.IGNORECASE
+    r"(?:Instance:|Error|Fatal|Warning|Netlist line|Undefined|MIF|Too (?:few|many))", re.IGNORECASE
 )
 _ECHO = re.compile(
     r"circuit not parsed|circuits loaded|simulation\(s\) aborted|doAnalyses|detached"
@@ -100,7 +102,9 @@ def raise_for_log(prepared: PreparedDeck, log: Sequence[str], models: bool) -> N
     lost = [place for place, line in enumerate(words) if _NO_FILE.search(line)]
     if lost:
         # After a data file that is not there the run may go on, on memory that nobody set.
-        cause = [words[lost[0]]]
+        near = range(max(0, lost[0] - 2), lost[0] + 1)
+        first = next((place for place in near if words[place].startswith("Instance:")), lost[0])
+        cause = words[first : lost[0] + 1]
         _raise_deck(MissingFileError, prepared, cause, "a file that the deck reads is not there")
     if not any(_FATAL.search(line) and not _RANGE.search(line) for line in log):
         return

@@ -1,16 +1,16 @@
 """The program that hosts libngspice: it loads the library once and forks one child per deck.
 
 Run as `python -P host.py PARENT_PID SCRATCH_FOLDER` with a fresh folder that the host may remove;
-`client.py` starts it.
-The host itself runs no deck: whatever a deck does to the library dies with its child. Requests come
-on standard input and answers leave on standard output as frames: a JSON header and raw bytes.
+`client.py` starts it. The host itself runs no deck: whatever a deck does to the library dies with
+its child. Requests come on standard input and answers leave on standard output as frames: a JSON
+header and raw bytes.
 
     caller -> host   run       lines, commands, data files, plot keys, limits
     host -> caller   ready     the library is loaded; or `failed` with the reason
                      log       a line of ngspice
                      progress  the simulated part of the run, from 0 to 1
                      vector    name; its float64 values follow
-                     done      load and run fault, missing vectors, wall time
+                     done      faults of load and run, names of new plots and vectors, wall time
                      end       how the child ended; always the last frame of a run
 
 End of file on standard input, or another parent process, means that the caller is gone: the host
@@ -280,9 +280,9 @@ class Host:
     def _run(self, request: dict[str, Any], data: memoryview) -> None:
         self._runs += 1
         request["folder"] = os.path.join(os.getcwd(), f"run{self._runs}")
-        request["lines"] = [
-            line.replace("{scratch}", request["folder"]) for line in request["lines"]
-        ]
+        if request["data"]:  # Without data files a parameter may well be named scratch.
+            lines = request["lines"]
+            request["lines"] = [line.replace("{scratch}", request["folder"]) for line in lines]
         source, output = os.pipe()
         process = os.fork()
         if process == 0:

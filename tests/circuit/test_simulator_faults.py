@@ -93,6 +93,16 @@ FAULTS = {
         1,
         "cannot open file",
     ),
+    "state file": (
+        [
+            *["v1 in 0 1", "a1 [in in in in] [d1 d2 k r] adc", ".model adc adc_bridge"],
+            *["a2 [d1 d2] k r [q1 q2] st", '.model st d_state(state_file="/nowhere/s.txt")'],
+            *["a3 [q1] [out] dac", ".model dac dac_bridge", "r1 out 0 1k"],
+        ],
+        MissingFileError,
+        4,
+        "failed to open state file",
+    ),
     "no value": (["v1 in 0 1", "r1 in out", "r2 out 0 1k"], DeckError, 2, "1 mOhm"),
     "no value in an instance": (
         ["v1 in 0 1", "x1 in out s", ".subckt s a b", "r1 a b", "r2 b 0 1", ".ends"],
