@@ -137,6 +137,7 @@ def make_plan(bench: Testbench) -> Plan:
         initial=initial,
         saves=saves,
         temperature=table.temperature,
+        seed=table.seed,
         time_limit=table.time_limit,
     )
     return Plan(deck, probe, request, steps_per_period, notices)

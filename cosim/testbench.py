@@ -57,6 +57,8 @@ class NetlistTable:
         The simulator's compatibility mode (its ngbehavior), such as "ps" or "hs".
     save : tuple of str
         Further vectors to keep in the archive, such as "v(x1.out)".
+    seed : int
+        Seed of the deck's random functions (agauss and the like), from 1 to 2**31 - 1.
     time_limit : float
         Wall-clock limit of one simulation in s.
     """
@@ -73,6 +75,7 @@ class NetlistTable:
     include_paths: tuple[str, ...] = ()
     compatibility: str | None = None
     save: tuple[str, ...] = ()
+    seed: int = 1
     time_limit: PositiveTime = 600.0
 
     def __post_init__(self) -> None:
