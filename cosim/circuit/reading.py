@@ -27,6 +27,7 @@ _FILE_PARAMETER = re.compile(
     r"(?<!\w)(file|input_file|state_file)(\s*=\s*|\s+)(\"[^\"]*\"|'[^']*'|[^\s,()]+)", re.I
 )
 _NOISE_SOURCE = re.compile(r"(?<![\w.])(trnoise|trrandom)(?![\w.])", re.I)
+_NAME_AND_NODES = re.compile(r"\S+[\s,(]+\S+[\s,]+\S+")
 _NEXT_KEYWORD = re.compile(r"(?<![\w.])(dc|ac|distof1|distof2)(?![\w.])", re.I)
 _VERILOG_CARDS = frozenset({".hdl", ".va", ".verilog", ".osdi", ".pre_osdi"})
 _WAVEFORM_HINT = "Export the waveform from a simulator that can read it, and run on that waveform."
@@ -129,7 +130,9 @@ class CardReader:
     def _without_noise(self, line: SourceLine) -> str:
         """Take a random waveform off a source: ngspice cannot seed it."""
         text = line.text
-        match = _NOISE_SOURCE.search(text)
+        nodes = _NAME_AND_NODES.match(text)
+        start = nodes.end() if nodes else len(text)  # A node may be named like the waveform.
+        match = _NOISE_SOURCE.search(text, start)
         while match:
             rest = masked(text[match.end() :])
             bracket = re.match(r"\s*\([^()]*\)", rest)
@@ -140,7 +143,7 @@ class CardReader:
                 "of a clean run; noise is added by the testbench"
             )
             text = text[: match.start()] + text[match.end() + stop :]
-            match = _NOISE_SOURCE.search(text)
+            match = _NOISE_SOURCE.search(text, start)
         return text.strip()
 
     def _card(self, line: SourceLine) -> None:

@@ -296,7 +296,7 @@ class _Splitter:
         glued, self._glue = self._glue, line.endswith("\\\\")
         if self._glue:
             line = line[:-2]
-        card = line[:8].lower() if line[0] == "." and not glued else ""
+        card = line[:8].lower() if line[:1] == "." and not glued else ""
         if ";" in line or "$" in line or "//" in line:
             rule = _COMMENT_PATH if card[:4] in _CARD_WITH_PATH else self._comment
             found = rule.search(line)
