@@ -60,7 +60,8 @@ class TestMetrics:
         for d, wanted in ((2, 0.9933333), (4, 0.992)):
             keep = (0.99 - 1 / d**2) / (1 - 1 / d**2)
             identity = np.eye(d).reshape(-1)
-            channel = keep * np.eye(d * d) + (1 - keep) * np.outer(identity, identity) / d
+            mix = np.outer(identity, identity) / d
+            channel = (keep * np.eye(d * d) + (1 - keep) * mix).astype(complex)
             target = np.eye(d, dtype=complex)
             assert process_fidelity(channel, target) == pytest.approx(0.99, abs=1e-14)
             assert average_gate_fidelity(channel, target) == pytest.approx(wanted, rel=DIGITS)

@@ -38,7 +38,8 @@ def square_burst(rabi: float, duration: float, step: float, *, phase: float = 0.
     after = [edge + 1e-15 * (2.0 ** np.arange(11) - 1) for edge in edges]
     t = np.unique(np.concatenate([grid, *after]))
     inside = (t >= edges[0]) & (t < edges[1])
-    return spline(t, 2 * np.pi * rabi * inside * np.cos(2 * np.pi * CARRIER * t + phase))
+    carrier = np.cos(2 * np.pi * CARRIER * t + phase)
+    return spline(t, np.where(inside, 2 * np.pi * rabi * carrier, 0.0))
 
 
 def constant(value: float, start: float, stop: float) -> DriveSpline:

@@ -20,7 +20,7 @@ from cosim.waveform import ComplexArray
 
 
 def kraus_superoperator(operators: list[ComplexArray]) -> ComplexArray:
-    return sum((np.kron(k.conj(), k) for k in operators), np.zeros(1))
+    return np.asarray(np.sum([np.kron(k.conj(), k) for k in operators], axis=0))
 
 
 def damping(gamma: float) -> ComplexArray:
@@ -42,7 +42,7 @@ class TestUnitarySuperoperator:
 
     def test_refuses_what_is_not_square(self) -> None:
         with pytest.raises(InputError, match=r"\(2, 3\)"):
-            unitary_superoperator(np.zeros((2, 3)))
+            unitary_superoperator(np.zeros((2, 3), dtype=complex))
 
 
 class TestApplyChannel:
@@ -51,7 +51,7 @@ class TestApplyChannel:
         rho = qutip.rand_dm(3, seed=3).full()
         assert np.allclose(apply_channel(unitary_superoperator(u), rho), u @ rho @ u.conj().T)
         with pytest.raises(InputError, match=r"\(3, 3\)"):
-            apply_channel(unitary_superoperator(u), np.eye(2))
+            apply_channel(unitary_superoperator(u), np.eye(2, dtype=complex))
 
 
 class TestPauliTransferMatrix:
@@ -127,7 +127,7 @@ class TestRestrict:
     @pytest.mark.parametrize("subspace", [(0,), (0, 0), (0, 3), (-1, 0)])
     def test_refuses_bad_indices(self, subspace: tuple[int, ...]) -> None:
         with pytest.raises(InputError, match="subspace"):
-            restrict(unitary_superoperator(np.eye(3)), subspace)
+            restrict(unitary_superoperator(np.eye(3, dtype=complex)), subspace)
 
 
 class TestNearestUnitary:

@@ -51,11 +51,11 @@ class TestAverageGateFidelity:
     def test_refuses_targets(self) -> None:
         superop = unitary_superoperator(X)
         with pytest.raises(InputError, match="not unitary"):
-            process_fidelity(superop, 1.1 * X)
+            process_fidelity(superop, np.asarray(1.1 * X, dtype=complex))
         with pytest.raises(InputError, match="out of 2 levels"):
-            process_fidelity(superop, np.eye(3))
+            process_fidelity(superop, np.eye(3, dtype=complex))
         with pytest.raises(InputError, match=r"\(2,\)"):
-            process_fidelity(superop, np.ones(2))
+            process_fidelity(superop, np.ones(2, dtype=complex))
 
 
 class TestLeakageAndSeepage:
@@ -108,7 +108,7 @@ class TestChannelDistance:
 class TestRotations:
     @pytest.mark.parametrize("angle", [1e-7, 0.3, math.pi / 2, 3.0])
     def test_round_trip_with_a_global_phase(self, angle: float) -> None:
-        axis = np.array([2.0, -1.0, 2.0]) / 3
+        axis = (2 / 3, -1 / 3, 2 / 3)
         found = rotation_of(np.exp(0.9j) * target_unitary(axis, angle))
         # The axis of a rotation by 1e-7 is known to 1e-16/1e-7.
         assert np.allclose(found.axis, axis, atol=1e-8)

@@ -89,4 +89,4 @@ class TestFreeFrame:
 
     def test_refuses_a_two_qubit_target(self) -> None:
         with pytest.raises(InputError, match="one-qubit"):
-            free_frame(np.eye(16, dtype=complex), np.eye(4))
+            free_frame(np.eye(16, dtype=complex), np.eye(4, dtype=complex))

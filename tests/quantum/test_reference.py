@@ -13,7 +13,7 @@ from cosim.quantum.reference import evolve_reference, evolve_rotating_wave
 from tests.quantum.drives import CARRIER, smooth_burst
 
 T = np.linspace(2e-9, 30e-9, 113)
-RATE = np.full(T.size, 2 * np.pi * 20e6 * np.exp(0.7j))
+RATE = np.full(T.size, 2 * np.pi * 20e6 * np.exp(0.7j), dtype=np.complex128)
 
 
 class TestEvolveRotatingWave:
@@ -36,7 +36,7 @@ class TestEvolveRotatingWave:
 
     def test_does_not_step_over_a_pulse_after_a_long_wait(self) -> None:
         t = np.linspace(0.0, 4e-6, 16001)
-        rate = 2 * np.pi * 50e6 * np.exp(-(((t - 3.8e-6) / 3e-9) ** 2) / 2) + 0j
+        rate = (2 * np.pi * 50e6 * np.exp(-(((t - 3.8e-6) / 3e-9) ** 2) / 2)).astype(complex)
         channel = evolve_rotating_wave(Qubit(CARRIER), rate, t)
         # Area theorem on resonance: the angle is the area of the envelope. The spline through
         # samples at a twelfth of the pulse's width is good to 1e-6.
@@ -44,7 +44,9 @@ class TestEvolveRotatingWave:
         assert pauli_transfer_matrix(channel)[3, 3] == pytest.approx(np.cos(area), abs=1e-6)
 
     def test_no_drive_at_all(self) -> None:
-        channel = evolve_rotating_wave(Qubit(CARRIER), np.zeros(5), np.linspace(0, 1e-8, 5))
+        channel = evolve_rotating_wave(
+            Qubit(CARRIER), np.zeros(5, dtype=complex), np.linspace(0, 1e-8, 5)
+        )
         assert np.abs(channel - np.eye(4)).max() < 1e-15
 
     def test_refuses_bad_envelopes_and_tolerances(self) -> None:
@@ -52,7 +54,7 @@ class TestEvolveRotatingWave:
         with pytest.raises(WaveformError, match="n >= 4"):
             evolve_rotating_wave(qubit, RATE[:3], T[:3])
         with pytest.raises(WaveformError, match="sample 5 of 113"):
-            evolve_rotating_wave(qubit, np.where(np.arange(113) == 5, np.nan, RATE), T)
+            evolve_rotating_wave(qubit, np.where(np.arange(113) == 5, np.nan + 0j, RATE), T)
         with pytest.raises(WaveformError, match="uniform"):
             evolve_rotating_wave(qubit, RATE, T**2)
         with pytest.raises(InputError, match="rtol"):
