@@ -4,6 +4,7 @@ Results go to standard output, everything else to standard error. Exit codes: 0 
 of the program, 2 the input is wrong, 3 the simulation failed, 130 interrupted.
 """
 
+import importlib.metadata
 import json
 import os
 import sys
@@ -34,12 +35,21 @@ ArchivePath = Annotated[Path, typer.Argument(metavar="ARCHIVE.h5", help="The arc
 JsonFlag = Annotated[bool, typer.Option("--json", help="Print numbers for machines, no table.")]
 
 
+def _print_version(wanted: bool) -> None:
+    if wanted:
+        typer.echo(f"qcosim {importlib.metadata.version('qcosim')}")
+        raise typer.Exit
+
+
 @app.callback()
 def _common(
     debug: Annotated[bool, typer.Option("--debug", help="Show tracebacks.")] = False,
+    version: Annotated[
+        bool, typer.Option("--version", callback=_print_version, is_eager=True, help="Show it.")
+    ] = False,
 ) -> None:
-    # `main` has read the option already; here it is for the help.
-    del debug
+    # `main` has read --debug already, and --version has ended the program.
+    del debug, version
 
 
 @app.command(epilog="Example: qcosim check examples/x90_spin.toml")

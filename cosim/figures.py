@@ -58,7 +58,7 @@ def _draw_envelope(axes: Axes, result: GateResult) -> None:
     _mark_window(axes, result)
     axes.set_ylabel(f"amplitude ({unit})")
     axes.set_xlim(t[0], t[-1])
-    axes.legend(loc="center", ncols=3, fontsize=8)
+    axes.legend(loc="lower center", ncols=3, fontsize=8)
 
 
 def _outline(t: np.ndarray, v: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
