@@ -92,7 +92,18 @@ SHOWING_OPTIONS = frozenset(
 
 
 def card_word(text: str) -> str:
-    """Give a line's card in lower case and in its usual spelling; "" for an element."""
+    """Give a line's card in lower case and in its usual spelling.
+
+    Parameters
+    ----------
+    text : str
+        A logical line.
+
+    Returns
+    -------
+    str
+        ".options" for `.opt`, ".param" for `.parameters`; "" for an element.
+    """
     if text[:1] != ".":
         return ""
     match = _CARD.match(text)
@@ -110,14 +121,37 @@ def _usual(word: str) -> str:
 
 
 def with_usual_word(text: str) -> str:
-    """Give a card line with its card in the usual spelling ("`.MACRO a b`" -> "`.subckt a b`")."""
+    """Give a card line with its card in the usual spelling.
+
+    Parameters
+    ----------
+    text : str
+        A logical line.
+
+    Returns
+    -------
+    str
+        ".subckt a b" for ".MACRO a b".
+    """
     match = _CARD.match(text)
     return _usual(match[0]) + text[match.end() :] if match else text
 
 
 @dataclass(frozen=True, slots=True)
 class Assignment:
-    """One "name = value" of a line, with the places of its name and value in the text."""
+    """One "name = value" of a line.
+
+    Parameters
+    ----------
+    name : str
+        Name in lower case; a function keeps its arguments, "f(x)".
+    value : str
+        Value as written.
+    start : int
+        Index of the name in the text.
+    value_start, stop : int
+        Index of the value, and of what follows it.
+    """
 
     name: str
     value: str
@@ -131,9 +165,17 @@ _CLOSING = {"{": "}", "(": ")", "'": "'", '"': '"', "[": "]"}
 
 
 def masked(text: str) -> str:
-    """Give the text with everything inside braces, brackets, parentheses and quotes as "_".
+    """Cover everything inside braces, brackets, parentheses and quotes with "_".
 
-    The brackets themselves stay, and so does the length.
+    Parameters
+    ----------
+    text : str
+        A logical line.
+
+    Returns
+    -------
+    str
+        As long as the text; the brackets themselves stay.
     """
     if not any(bracket in text for bracket in "{('\"["):
         return text
@@ -181,12 +223,34 @@ _WORD = re.compile(r"\{[^{}]*\}|'[^']*'|\"[^\"]*\"|[^\s(),={}'\"]+|=")
 
 @lru_cache(maxsize=2**16)
 def words(text: str) -> tuple[str, ...]:
-    """Cut an element or `.subckt` line into lower-case words; parentheses and commas are space."""
+    """Cut an element or `.subckt` line into words; parentheses and commas are space.
+
+    Parameters
+    ----------
+    text : str
+        A logical line.
+
+    Returns
+    -------
+    tuple of str
+        Words in lower case, "=" among them; what stands in braces or quotes is one word.
+    """
     return tuple(_WORD.findall(text.lower()))
 
 
 def leading_words(text: str) -> tuple[str, ...]:
-    """Give the words before the first assignment (and before "params:")."""
+    """Give the words before the first assignment (and before "params:").
+
+    Parameters
+    ----------
+    text : str
+        A logical line.
+
+    Returns
+    -------
+    tuple of str
+        Words in lower case, as `words` gives them.
+    """
     found = words(text)
     if "=" in found:
         found = found[: found.index("=") - 1]
@@ -196,9 +260,17 @@ def leading_words(text: str) -> tuple[str, ...]:
 
 
 def model_card(text: str) -> tuple[str, str]:
-    """Give name and type of a `.model` line in lower case, "" where it lacks one.
+    """Give name and type of a `.model` line.
 
-    `ako:base type` is understood: the type is the one that is written.
+    Parameters
+    ----------
+    text : str
+        A logical line.
+
+    Returns
+    -------
+    tuple of (str, str)
+        Both in lower case, "" where the line lacks one; "ako:base type" has the type "type".
     """
     found = [match[0].lower() for match in islice(_WORD.finditer(text), 4)]
     name = found[1] if len(found) > 1 else ""
@@ -207,5 +279,16 @@ def model_card(text: str) -> tuple[str, str]:
 
 
 def number_text(value: float) -> str:
-    """Write a number so that ngspice reads the same double."""
+    """Write a number so that ngspice reads the same double.
+
+    Parameters
+    ----------
+    value : float
+        A finite number.
+
+    Returns
+    -------
+    str
+        The shortest text that gives the number back.
+    """
     return repr(float(value))

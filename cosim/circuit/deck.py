@@ -66,7 +66,19 @@ class DataFile:
 
 @dataclass(frozen=True, slots=True)
 class TransientCard:
-    """The deck's own `.tran`, times in s; `max_step` is None when the card leaves it out."""
+    """The deck's own `.tran`.
+
+    Parameters
+    ----------
+    step : float
+        Step of the output in s.
+    stop, start : float
+        Last and first time in s.
+    max_step : float or None
+        Largest step in s; None when the card leaves it out.
+    uic : bool
+        Whether the run starts from the deck's initial conditions.
+    """
 
     step: float = field(metadata={"unit": "s"})
     stop: float = field(metadata={"unit": "s"})
@@ -143,10 +155,31 @@ class PreparedDeck:
 
 
 def where(line: SourceLine) -> str:
-    """Give "file:line" of a line."""
+    """Give the place of a line.
+
+    Parameters
+    ----------
+    line : SourceLine
+        The line.
+
+    Returns
+    -------
+    str
+        "file:line".
+    """
     return f"{line.file}:{line.line}"
 
 
 def unique(items: Iterable[str]) -> tuple[str, ...]:
-    """Give the items once each, in the order of their first appearance."""
+    """Give the items once each, in the order of their first appearance.
+
+    Parameters
+    ----------
+    items : iterable of str
+        The items.
+
+    Returns
+    -------
+    tuple of str
+    """
     return tuple(dict.fromkeys(items))

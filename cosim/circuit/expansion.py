@@ -87,7 +87,17 @@ class Places:
 
 
 def unique_folders(*folders: str) -> tuple[str, ...]:
-    """Give the folders once each, empty ones left out."""
+    """Give the folders once each, empty ones left out.
+
+    Parameters
+    ----------
+    *folders : str
+        The folders.
+
+    Returns
+    -------
+    tuple of str
+    """
     return tuple(dict.fromkeys(folder for folder in folders if folder))
 
 
@@ -142,6 +152,16 @@ class Expansion:
         that the deck names.
     pspice : bool
         Whether "$" starts no comment, and `.lib FILE` without a section is an include.
+    lines : list of SourceLine
+        The lines so far.
+    notices : list of str
+        What was left out or chosen so far.
+    files : dict of str to DeckFile
+        Path -> each file that was read.
+    libraries, used_sections : set of str
+        Last parts of the library files, and the keys of `sections` that found one.
+    entered : int
+        How many times a file or section was expanded.
     """
 
     places: Places

@@ -164,7 +164,17 @@ class Parameters:
 
 
 def strip_quotes(text: str) -> str:
-    """Take one pair of braces or quotes off an expression."""
+    """Take one pair of braces or quotes off an expression.
+
+    Parameters
+    ----------
+    text : str
+        The expression.
+
+    Returns
+    -------
+    str
+    """
     text = text.strip()
     if len(text) >= 2 and (text[0], text[-1]) in (("{", "}"), ("'", "'"), ('"', '"')):
         return text[1:-1].strip()

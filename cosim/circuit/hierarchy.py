@@ -88,7 +88,18 @@ def structure_of(lines: tuple[SourceLine, ...]) -> Structure:
 
 
 def top_level_parameters(lines: Sequence[SourceLine]) -> Parameters:
-    """Collect `.param`, `.csparam` and `.func` definitions outside of subcircuits."""
+    """Collect `.param`, `.csparam` and `.func` definitions outside of subcircuits.
+
+    Parameters
+    ----------
+    lines : sequence of SourceLine
+        The deck's lines.
+
+    Returns
+    -------
+    Parameters
+        The last of two definitions counts, as in ngspice.
+    """
     expressions: dict[str, str] = {}
     functions: dict[str, tuple[tuple[str, ...], str]] = {}
     for _, line, card in top_level_cards(lines):
@@ -111,7 +122,18 @@ def _arguments(text: str) -> tuple[str, ...]:
 
 
 def top_level_cards(lines: Sequence[SourceLine]) -> Iterator[tuple[int, SourceLine, str]]:
-    """Give index, line and card of the dot cards outside of subcircuits."""
+    """Give the dot cards outside of subcircuits.
+
+    Parameters
+    ----------
+    lines : sequence of SourceLine
+        The deck's lines.
+
+    Yields
+    ------
+    tuple of (int, SourceLine, str)
+        Index, line, and card in its usual spelling.
+    """
     depth = 0
     for index, line in enumerate(lines):
         if line.text[0] == ".":

@@ -22,7 +22,20 @@ _PARAMETER = re.compile(r"@([^\s@]+)\[(\w+)\]")
 
 
 def own_nodes(structure: Structure, scope: Scope) -> frozenset[str]:
-    """Nodes that the elements of one scope name, ground left out."""
+    """Give the nodes that the elements of one scope name.
+
+    Parameters
+    ----------
+    structure : Structure
+        The deck's structure.
+    scope : Scope
+        The scope.
+
+    Returns
+    -------
+    frozenset of str
+        Names in lower case without a prefix, ground left out.
+    """
     if scope.nodes is None:
         found: set[str] = set()
         for indices in scope.elements.values():
@@ -71,7 +84,20 @@ def node_names(deck: Deck) -> frozenset[str]:
 
 
 def instances(structure: Structure, scope: Scope) -> list[tuple[str, Scope]]:
-    """Give name and definition of the subcircuit instances of a scope."""
+    """Give the subcircuit instances of a scope.
+
+    Parameters
+    ----------
+    structure : Structure
+        The deck's structure.
+    scope : Scope
+        The scope.
+
+    Returns
+    -------
+    list of (str, Scope)
+        Name and definition of each.
+    """
     found = []
     for name, indices in scope.elements.items():
         if name[0] != "x":
@@ -165,7 +191,17 @@ class _Frame:
 
 @dataclass(frozen=True, slots=True)
 class Device:
-    """A device: its name in ngspice ("l.x1.l3"), its letter and its line."""
+    """A device.
+
+    Parameters
+    ----------
+    name : str
+        Its name in ngspice, "l.x1.l3".
+    letter : str
+        Its element letter.
+    text : str
+        Its line.
+    """
 
     name: str
     letter: str
@@ -283,7 +319,18 @@ def _current(device: Device, save: str) -> str:
 
 
 def save_expression(vector: str) -> str:
-    """Give the `.save` item for the name of a vector."""
+    """Give the `.save` item for the name of a vector.
+
+    Parameters
+    ----------
+    vector : str
+        Name in ngspice's plot.
+
+    Returns
+    -------
+    str
+        "v(out)", "i(l.x1.l3)" or "@r1[i]".
+    """
     if vector.endswith("#branch"):
         return f"i({vector.removesuffix('#branch')})"
     if vector.startswith("@"):

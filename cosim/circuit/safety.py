@@ -62,7 +62,18 @@ def check_line(line: SourceLine) -> None:
 
 
 def check_lines(lines: Sequence[SourceLine]) -> None:
-    """Hold all lines against the allow-list, as `check_line`."""
+    """Hold all lines against the allow-list.
+
+    Parameters
+    ----------
+    lines : sequence of SourceLine
+        The lines that are to be sent, other than the title.
+
+    Raises
+    ------
+    ForbiddenDeckError, UnsupportedDeckError
+        As `check_line`.
+    """
     for line in lines:
         if _fault(line.text) is not None:
             check_line(line)

@@ -36,6 +36,17 @@ class Scope:
         The scope in which it is defined.
     first, stop : int
         Index of its header and one past its `.ends`.
+    elements : dict of str to list of int
+        Element in lower case -> indices of its lines; more than one where branches of an `.if`
+        hold the same name.
+    uncertain : set of int
+        Indices of elements of which cannot be told whether they are there.
+    models : dict of str to str
+        Model -> type; a binned model "nch.1" also counts as "nch".
+    inner : dict of str to Scope
+        Definitions inside this one.
+    nodes : frozenset of str or None
+        Filled in when the nodes are first asked for.
     """
 
     name: str
@@ -79,7 +90,17 @@ class Scope:
 
 @dataclass(frozen=True, slots=True)
 class Element:
-    """An element line cut up: nodes, the word that names its model or subcircuit."""
+    """An element line cut up.
+
+    Parameters
+    ----------
+    name, letter : str
+        Name in lower case, and its first letter.
+    nodes : tuple of str
+        Nodes in lower case.
+    reference : str
+        The word that names its model or subcircuit; "" when it needs none.
+    """
 
     name: str
     letter: str

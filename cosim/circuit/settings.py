@@ -60,7 +60,20 @@ def _values(text: str) -> list[str]:
 
 
 def number_of(text: str, parameters: Parameters) -> float | None:
-    """Give the value of a number or of an expression in braces or quotes."""
+    """Give the value of a number or of an expression in braces or quotes.
+
+    Parameters
+    ----------
+    text : str
+        The number or expression.
+    parameters : Parameters
+        Values of the deck's parameters.
+
+    Returns
+    -------
+    float or None
+        None when the value cannot be told.
+    """
     if text[:1] in ("{", "'", '"', "("):
         return parameters.value(text)
     return spice_number(text)
@@ -134,7 +147,15 @@ def _temperature(structure: Structure, notices: list[str]) -> float | None:
 
 @dataclass(frozen=True, slots=True)
 class OptionCard:
-    """What is sent of one `.options` card (empty text: nothing) and what is said about the rest."""
+    """What becomes of one `.options` card.
+
+    Parameters
+    ----------
+    line : SourceLine
+        What is sent; its text is empty when nothing is.
+    notices : tuple of str
+        What is said about the rest.
+    """
 
     line: SourceLine
     notices: tuple[str, ...]

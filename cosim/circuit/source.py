@@ -165,7 +165,18 @@ def _missing(path: str, error: Exception) -> MissingFileError:
 
 
 def decode(content: bytes) -> str:
-    """Decode a deck file: UTF-8 (with or without mark), UTF-16 with mark, else Latin-1."""
+    """Decode a deck file.
+
+    Parameters
+    ----------
+    content : bytes
+        Its bytes.
+
+    Returns
+    -------
+    str
+        UTF-8 with or without a mark, UTF-16 with a mark, else Latin-1.
+    """
     if content.startswith((b"\xff\xfe", b"\xfe\xff")):
         return content.decode("utf-16", errors="replace")
     try:
@@ -223,7 +234,18 @@ def split_source(file: DeckFile, *, is_deck: bool, pspice: bool = False) -> Sour
 
 
 def card_arguments(text: str) -> list[str]:
-    """Give the arguments of a `.include`, `.lib` or `.endl` card, quotes taken off."""
+    """Give the arguments of a `.include`, `.lib` or `.endl` card.
+
+    Parameters
+    ----------
+    text : str
+        The card's line.
+
+    Returns
+    -------
+    list of str
+        Quotes are taken off.
+    """
     found = re.findall(r'"([^"]*)"|\'([^\']*)\'|([^\s"\']+)', text.partition(" ")[2])
     return [first or second or third for first, second, third in found]
 
