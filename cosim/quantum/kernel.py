@@ -214,7 +214,7 @@ def unitary_product(
     omega : float
         Angular frequency of the frame in rad/s.
     ladder : ndarray, shape (levels - 1,)
-        Matrix elements <n|a|n + 1>.
+        Matrix elements <n|a|n + 1> times the factor on the drive.
     energies : ndarray, shape (levels,)
         Level energies in the frame in rad/s.
 

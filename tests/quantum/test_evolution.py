@@ -35,19 +35,25 @@ class TestEvolve:
         # Rounding: the steps are so short that their errors vanish.
         assert np.abs(parts - evolve(LOSSY, DRIVE, first, last)).max() < 1e-13
 
-    def test_batch_equals_single_runs(self) -> None:
+    @pytest.mark.parametrize("levels", [2, 3])
+    def test_batch_equals_single_runs(self, levels: int) -> None:
+        qubit = LOSSY.with_levels(levels)
         scales = np.array([0.8, 1.0, 1.25])
-        batch = evolve(LOSSY, DRIVE, 0.0, 10e-9, scale=scales)
-        single = [evolve(LOSSY, DRIVE, 0.0, 10e-9, scale=float(value)) for value in scales]
-        assert batch.shape == (3, 9, 9)
+        batch = evolve(qubit, DRIVE, 0.0, 10e-9, scale=scales)
+        single = [evolve(qubit, DRIVE, 0.0, 10e-9, scale=float(value)) for value in scales]
+        assert batch.shape == (3, levels**2, levels**2)
         # The batch takes the steps of its largest scale, so up to the kernel's own error.
         assert np.abs(batch - np.array(single)).max() < 1e-10
 
-    def test_scale_multiplies_the_drive(self) -> None:
+    @pytest.mark.parametrize("levels", [2, 3])
+    @pytest.mark.parametrize("lossless", [False, True])
+    def test_scale_multiplies_the_drive(self, levels: int, lossless: bool) -> None:
+        qubit = Qubit(CARRIER, levels, -0.3e9) if lossless else LOSSY.with_levels(levels)
         half = DriveSpline(DRIVE.t, DRIVE.c / 2)
-        scaled = evolve(LOSSY, DRIVE, 0.0, 10e-9, scale=0.5)
-        # Equal but for rounding.
-        assert np.abs(scaled - evolve(LOSSY, half, 0.0, 10e-9)).max() < 1e-12
+        scaled = evolve(qubit, DRIVE, 0.0, 10e-9, scale=0.5)
+        # Equal but for rounding; the unscaled drive gives another channel.
+        assert np.abs(scaled - evolve(qubit, half, 0.0, 10e-9)).max() < 1e-12
+        assert np.abs(scaled - evolve(qubit, DRIVE, 0.0, 10e-9)).max() > 0.1
 
     def test_lossless_path_joins_the_lossy_one(self) -> None:
         nearly = Qubit(CARRIER, 3, -0.3e9, 1e3, 2e3)
