@@ -218,10 +218,10 @@ def assignments(text: str) -> tuple[Assignment, ...]:
     )
 
 
+LONGEST_KEPT = 500  # characters; longer lines are not kept in caches, so that these stay small
 _WORD = re.compile(r"\{[^{}]*\}|'[^']*'|\"[^\"]*\"|[^\s(),={}'\"]+|=")
 
 
-@lru_cache(maxsize=2**16)
 def words(text: str) -> tuple[str, ...]:
     """Cut an element or `.subckt` line into words; parentheses and commas are space.
 
@@ -235,7 +235,14 @@ def words(text: str) -> tuple[str, ...]:
     tuple of str
         Words in lower case, "=" among them; what stands in braces or quotes is one word.
     """
+    return _short_words(text) if len(text) <= LONGEST_KEPT else _cut(text)
+
+
+def _cut(text: str) -> tuple[str, ...]:
     return tuple(_WORD.findall(text.lower()))
+
+
+_short_words = lru_cache(maxsize=2**16)(_cut)
 
 
 def leading_words(text: str) -> tuple[str, ...]:

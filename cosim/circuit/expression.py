@@ -14,7 +14,7 @@ _SUFFIXES = {
     "f": 1e-15, "a": 1e-18,
 }  # fmt: skip
 _NUMBER = re.compile(
-    r"((?:\d+\.?\d*|\.\d+)(?:e[+-]?\d+)?)(meg|[tgkmunpfa])?[a-z_\u03a9\u2126]*", re.I
+    r"((?:\d+\.?\d*|\.\d+)(?:e[+-]?\d+)?)(meg|[tgkmunpfa])?[a-z_°\u03a9\u2126]*", re.I
 )
 _TOKEN = re.compile(
     r"\s*(?:(?P<number>(?:\d+\.?\d*|\.\d+)(?:e[+-]?\d+)?[a-z_]*)|(?P<name>[a-z_][\w.]*)"

@@ -5,6 +5,7 @@ parameters alone; elsewhere all branches count, so that nothing that may exist i
 """
 
 import re
+import threading
 from collections import OrderedDict
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, field
@@ -18,7 +19,7 @@ from cosim.circuit.cards import (
 )
 from cosim.circuit.deck import SourceLine
 from cosim.circuit.expression import Parameters
-from cosim.circuit.scope import MODEL_PLACE, Element, Scope, element_of
+from cosim.circuit.scope import FIXED_NODES, MODEL_PLACE, Element, Scope, element_of
 from cosim.errors import DeckError, UnknownNameError, near_names
 
 _DEEPEST = 100  # levels of subcircuits
@@ -53,6 +54,7 @@ class Structure:
 
 
 _recent: OrderedDict[int, Structure] = OrderedDict()
+_lock = threading.Lock()
 _MOST_RECENT = 4
 
 
@@ -76,14 +78,16 @@ def structure_of(lines: tuple[SourceLine, ...]) -> Structure:
     UnknownNameError
         If a subcircuit or model does not exist.
     """
-    known = _recent.get(id(lines))
+    with _lock:
+        known = _recent.get(id(lines))
     if known is not None and known.lines is lines:  # The kept reference keeps the id valid.
         return known
     structure = _Builder(lines).build()
     _check(structure)
-    _recent[id(lines)] = structure
-    while len(_recent) > _MOST_RECENT:
-        _recent.popitem(last=False)
+    with _lock:
+        _recent[id(lines)] = structure
+        while len(_recent) > _MOST_RECENT:
+            _recent.popitem(last=False)
     return structure
 
 
@@ -307,6 +311,13 @@ def _check_element(
                 line=line.line,
             )
         return definition
+    wanted = FIXED_NODES.get(element.letter, 0)
+    if len(leading_words(line.text)) - 1 < wanted:
+        raise DeckError(
+            f"'{element.name}' needs {wanted} nodes: '{line.text[:60]}'",
+            file=line.file,
+            line=line.line,
+        )
     needs_model = element.letter in MODEL_PLACE or element.letter in "ap"
     if not needs_model or uncertain or element.reference[:1] in ("{", "'", '"'):
         return None

@@ -6,7 +6,7 @@ from cosim.circuit.deck import Deck, PreparedDeck, SourceLine, unique, where
 from cosim.circuit.hierarchy import Structure, structure_of
 from cosim.circuit.lookup import resolve_saves, save_expression
 from cosim.circuit.safety import check_lines
-from cosim.circuit.settings import CELSIUS, filtered_options
+from cosim.circuit.settings import CELSIUS, filtered_options, written_temperature
 from cosim.errors import DeckError
 
 _TITLE = "transient run"
@@ -122,9 +122,11 @@ def _temperature_cards(
             f"{deck.temperature:g} K"
         )
     if temperature is None:
-        # A card whose value only ngspice can work out stays; without one the default is 27 C.
-        lines = (structure.lines[index] for index in structure.settings)
-        return [line for line in lines if card_word(line.text) == ".temp"]
+        # A value that only ngspice can work out stays as written; without one it takes 27 C.
+        written = written_temperature(structure, [])
+        if written is None:
+            return []
+        return [SourceLine(f".temp {written[0]}", written[1].file, written[1].line)]
     if temperature < _COLDEST_JUNCTION:
         _check_cold(structure, temperature, notices)
     return [_own_line(f".temp {temperature - CELSIUS:.12g}")]

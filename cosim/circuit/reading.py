@@ -125,6 +125,8 @@ class CardReader:
         text = line.text
         if text[0] in "vViI" and _NOISE_SOURCE.search(text):
             text = self._without_noise(line)
+        elif text[0] in "xX":
+            text = _without_commas(text)
         self._keep(text, line)
 
     def _without_noise(self, line: SourceLine) -> str:
@@ -169,12 +171,8 @@ class CardReader:
 
     def _circuit_card(self, card: str, line: SourceLine) -> None:
         text = with_usual_word(line.text)
-        if card == ".param" and "," in text:
-            # A comma between two parameters sends ngspice 39 into an endless loop.
-            covered = masked(text)
-            text = "".join(
-                " " if char == "," else own for char, own in zip(covered, text, strict=True)
-            )
+        if card in (".param", ".csparam", ".subckt"):
+            text = _without_commas(text)
         self._keep(text, line)
         if card == ".model" and model_card(text)[1] in MODELS_WITH_FILE:
             # Only now, as `_keep` hides the host's mark where a deck happens to hold it.
@@ -225,3 +223,11 @@ class CardReader:
             file=line.file,
             line=line.line,
         )
+
+
+def _without_commas(text: str) -> str:
+    """Turn commas between words into spaces: between two parameters ngspice 39 never ends."""
+    if "," not in text:
+        return text
+    pairs = zip(masked(text), text, strict=True)
+    return "".join(" " if covered == "," else char for covered, char in pairs)

@@ -14,6 +14,7 @@ from cosim.circuit.cards import (
     CODE_MODELS,
     DEVICE_MODELS,
     FLAG_OPTIONS,
+    LONGEST_KEPT,
     MODELS_WITH_FILE,
     VALUE_OPTIONS,
     card_word,
@@ -82,9 +83,12 @@ def check_lines(lines: Sequence[SourceLine]) -> None:
 _Fault = tuple[type[DeckError], str, str]
 
 
-@lru_cache(maxsize=2**18)
 def _fault(text: str) -> _Fault | None:
     """Say what is wrong with a line; the same text always has the same answer."""
+    return _short_fault(text) if len(text) <= LONGEST_KEPT else _any_fault(text)
+
+
+def _any_fault(text: str) -> _Fault | None:
     if not text or not text.isprintable():
         bad = next((char for char in text if not char.isprintable()), "")
         return ForbiddenDeckError, f"a line holds the character {bad!r}", "Delete it."
@@ -114,6 +118,9 @@ def _fault(text: str) -> _Fault | None:
             "Use an A-device with a 'filesource' model.",
         )
     return None
+
+
+_short_fault = lru_cache(maxsize=2**17)(_any_fault)
 
 
 def _card_fault(text: str) -> _Fault | None:

@@ -8,9 +8,9 @@ from cosim.circuit.cards import leading_words, words
 GROUND = frozenset({"0", "gnd"})
 
 # Letter -> number of nodes that must be there.
-_FIXED_NODES = {
+FIXED_NODES = {
     "r": 2, "c": 2, "l": 2, "v": 2, "i": 2, "b": 2, "e": 2, "f": 2, "g": 2, "h": 2, "d": 2,
-    "j": 3, "z": 3, "q": 3, "m": 4, "s": 4, "t": 4, "o": 4, "y": 4, "u": 3, "w": 2, "k": 0,
+    "j": 3, "z": 3, "q": 3, "m": 3, "s": 4, "t": 4, "o": 4, "y": 4, "u": 3, "w": 2, "k": 0,
 }  # fmt: skip
 MODEL_PLACE = {"d": 3, "j": 4, "z": 4, "q": 4, "m": 5, "s": 5, "o": 5, "y": 5, "u": 4, "w": 4}
 _MOST_EXTRA_NODES = {"d": 1, "q": 2, "m": 3}
@@ -133,14 +133,17 @@ def element_of(scope: Scope, text: str) -> Element:
     if letter == "p":
         return Element(name, letter, found[1:-1], found[-1] if len(found) > 1 else "")
     everything = words(text)
-    count = _FIXED_NODES.get(letter, 0)
+    count = FIXED_NODES.get(letter, 0)
+    if letter == "m" and len(everything) > 4 and scope.model(everything[4]) == "vdmos":
+        return Element(name, letter, everything[1:4], everything[4])
     nodes = everything[1 : 1 + count]
     reference = ""
     if letter in MODEL_PLACE:
         place = MODEL_PLACE[letter]
         most = place + _MOST_EXTRA_NODES.get(letter, 0)
         reference = everything[place] if len(everything) > place else ""
-        if letter != "w":
+        if letter != "w":  # Its third word is the source whose current it senses.
+            nodes = everything[1:place]
             for at in range(place, min(most, len(everything) - 1) + 1):
                 if scope.model(everything[at]) is not None:
                     reference, nodes = everything[at], everything[1:at]

@@ -108,8 +108,26 @@ def _transient(structure: Structure, notices: list[str]) -> TransientCard | None
     return TransientCard(step, stop, start, max_step, uic)
 
 
-def _temperature(structure: Structure, notices: list[str]) -> float | None:
-    """Give the device temperature in K; ngspice lets `.temp` win over `.options temp`."""
+def written_temperature(structure: Structure, notices: list[str]) -> tuple[str, SourceLine] | None:
+    """Find the temperature that is in force: ngspice lets `.temp` win over `.options temp`.
+
+    Parameters
+    ----------
+    structure : Structure
+        The deck's structure.
+    notices : list of str
+        Gets a notice when a card gives several temperatures.
+
+    Returns
+    -------
+    tuple of (str, SourceLine) or None
+        The temperature in degrees Celsius as written, and its card.
+
+    Raises
+    ------
+    DeckError
+        If a `.temp` has no value.
+    """
     written: tuple[str, SourceLine] | None = None
     for line in _cards(structure, ".options"):
         for item in assignments(line.text):
@@ -124,6 +142,12 @@ def _temperature(structure: Structure, notices: list[str]) -> float | None:
                 f"{where(line)}: .temp gives {len(words)} temperatures, the first is taken"
             )
         written = words[0], line
+    return written
+
+
+def _temperature(structure: Structure, notices: list[str]) -> float | None:
+    """Give the device temperature in K."""
+    written = written_temperature(structure, notices)
     if written is None:
         return None
     value = number_of(written[0], structure.parameters)

@@ -8,6 +8,7 @@ import hashlib
 import os
 import re
 import stat
+import threading
 from collections import OrderedDict
 from dataclasses import dataclass
 
@@ -62,6 +63,7 @@ class Source:
 
 _Key = tuple[str, bool, bool, int, int, int]
 _cache: OrderedDict[_Key, Source] = OrderedDict()
+_lock = threading.Lock()
 
 
 def read_source(path: str, *, is_deck: bool, pspice: bool = False) -> Source:
@@ -94,18 +96,19 @@ def read_source(path: str, *, is_deck: bool, pspice: bool = False) -> Source:
     except (OSError, ValueError) as error:
         raise _missing(path, error) from error
     key = (path, is_deck, pspice, status.st_mtime_ns, status.st_size, status.st_ino)
-    source = _cache.get(key)
-    if source is None:
-        content = read_bytes(path)
-        text = decode(content)
-        file = DeckFile(path, text, hashlib.sha256(content).hexdigest())
-        source = split_source(file, is_deck=is_deck, pspice=pspice)
+    with _lock:
+        source = _cache.get(key)
+        if source is not None:
+            _cache.move_to_end(key)
+            return source
+    content = read_bytes(path)
+    file = DeckFile(path, decode(content), hashlib.sha256(content).hexdigest())
+    source = split_source(file, is_deck=is_deck, pspice=pspice)
+    with _lock:
         _cache[key] = source
         kept = sum(entry[4] for entry in _cache)
         while len(_cache) > _CACHED_FILES or (kept > _CACHED_CHARACTERS and len(_cache) > 1):
             kept -= _cache.popitem(last=False)[0][4]
-    else:
-        _cache.move_to_end(key)
     return source
 
 

@@ -15,7 +15,7 @@ from cosim.circuit.netlist import (
     with_terminations,
 )
 from cosim.errors import InputError, UnknownNameError
-from tests.circuit.batch import DECKS, ROUNDING, copy_decks, original, output
+from tests.circuit.batch import DECKS, ROUNDING, copy_decks, original, output, run
 
 # Deck, how it is altered, and the same edit by hand: (old text, new text) pairs.
 Edit = tuple[str, Callable[[Deck], Deck], list[tuple[str, str]]]
@@ -170,6 +170,31 @@ def test_a_section_chosen_is_the_section_written(tmp_path: Path, key: str) -> No
     (folder / "edited.cir").write_text(text.replace(" TT", " ss"), encoding="utf-8")
     wanted = original("edited.cir", folder)
     np.testing.assert_allclose(got, wanted, rtol=0, atol=ROUNDING)
+
+
+@pytest.mark.ngspice
+def test_a_node_inside_can_be_terminated(tmp_path: Path) -> None:
+    deck = load_deck(copy_decks(tmp_path) / "hierarchy.cir")
+    loaded = with_terminations(deck, ["x1.mid"], 500.0)
+    v = run(loaded, "v(x1.mid)", "i(rtermination1)").vectors
+    assert np.ptp(v["v(x1.mid)"]) > 0.01
+    # ngspice works the current out from the same voltage; rounding alone differs.
+    np.testing.assert_allclose(v["i(rtermination1)"], v["v(x1.mid)"] / 500.0, rtol=1e-9)
+
+
+def test_commas_between_parameters_are_spaces() -> None:
+    # With the commas ngspice 39 never ends (.param, .subckt) or reports an error (x1).
+    body = (
+        ".param a=1, b={max(1,2)}, c=3\nx1 p,0 s w={a}, l=2\n.subckt s (m,n) w=1, l=3\nr1 m n 1\n"
+    )
+    deck = deck_from_text(f"t\n{body}.ends\n")
+    assert [line.text for line in deck.lines[:3]] == [
+        ".param a=1  b={max(1,2)}  c=3",
+        "x1 p 0 s w={a}  l=2",
+        ".subckt s (m,n) w=1  l=3",
+    ]
+    assert with_parameters(deck, {"b": 5}).lines[0].text == ".param a=1  b=5.0  c=3"
+    assert with_instances(deck, {"x1": {"l": 7}}).lines[1].text == "x1 p 0 s w={a}  l=7.0"
 
 
 def test_what_depends_on_a_parameter_follows() -> None:

@@ -91,6 +91,11 @@ def test_encodings_and_line_ends_change_nothing(tmp_path: Path, encode: object) 
         # Temperatures: .temp wins over .options, whichever comes last.
         ".temp 127\n.options temp=50\nv1 in 0 sin(0 1 1g)\nr1 in out 1k tc1=1m\nr2 out 0 1k\n",
         ".param t=100\n.temp {t+27}\nv1 in 0 sin(0 1 1g)\nr1 in out 1k\nr2 out 0 '10*temper'\n",
+        # A VDMOS has three nodes, and two thermal ones at will.
+        "v1 in 0 sin(0 1 1g)\nr1 in out 1k\nm1 out in 0 vm\nm2 out in 0 tj tc vm thermal\n"
+        "r2 tj 0 1\nr3 tc 0 1\n.model vm vdmos vto=0.5\n",
+        # A parenthesis that is never closed.
+        "v1 in 0 sin(0 1 1g\nr1 in out 1k\nr2 out 0 1k\n",
         # Values in units, as the programs that write decks give them.
         "v1 in 0 DC 0V AC 1V SIN(0V 1V 1GigHz 0s 0Hz)\nr1 in out 1kOhm\nc1 out 0 1pF\n",
     ],

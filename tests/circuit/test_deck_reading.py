@@ -107,6 +107,8 @@ def test_the_prepared_list_is_the_bridges_own_around_the_circuit() -> None:
         (".temp 20\n", 293.15, "for 20 K write"),
         (".temp 25 100\n", 298.15, "2 temperatures"),
         (".temp {agauss(1,2,3)}\n", None, "cannot be told"),
+        (".temp 25.5C\n", 298.65, ""),
+        (".temp 26\u00b0C\n", 299.15, ""),
         ("", None, ""),
     ],
 )
@@ -261,6 +263,9 @@ def test_a_circuit_in_the_title_is_noticed() -> None:
         ("x1 out 0 0 s\n.subckt s a b\nr1 a b 1\n.ends\n", DeckError, ["3 nodes", "which has 2"]),
         (".subckt s a\nr1 a 0 1\n", DeckError, ["circuit:5", "'s' has no .ends"]),
         ("r3 out 0 1\n.ends\n", DeckError, ["circuit:6", ".ends without .subckt"]),
+        ("c3 out\n", DeckError, ["circuit:5", "'c3' needs 2 nodes"]),
+        ("b3 out v=1\n", DeckError, ["'b3' needs 2 nodes"]),
+        ("m3 out in\n", DeckError, ["'m3' needs 3 nodes"]),
         (".if (1)\nr3 out 0 1\n", DeckError, [".if without .endif"]),
         (".endif\n", DeckError, [".endif without .if"]),
         (".else\n", DeckError, [".else without .if"]),
@@ -299,6 +304,15 @@ def test_models_of_bins_and_of_outer_scopes_are_found() -> None:
         "x1 out s\n.subckt s a\nx1 a t\nd1 a 0 dd\n.subckt t a\nd1 a 0 dd\nm1 a a 0 0 nch\n.ends\n"
         ".ends\n.model dd d\n"
     )
+
+
+def test_a_temperature_that_only_ngspice_can_work_out_is_sent_as_written() -> None:
+    deck = read(CIRCUIT + ".param t={agauss(27,5,1)}\n.options temp={t} gmin=1e-13\n")
+    assert deck.temperature is None
+    sent = prepare(deck, request())
+    assert sent.lines[2] == ".temp {t}"
+    assert sent.origins[2] == ("circuit", 6)
+    assert ".temp 26.85" in prepare(deck, request(temperature=300.0)).lines
 
 
 def test_a_missing_include_is_told_with_its_chain(tmp_path: Path) -> None:
