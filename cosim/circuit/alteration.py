@@ -7,7 +7,12 @@ from dataclasses import dataclass, field, replace
 
 from cosim.circuit.cards import assignments, masked, number_text
 from cosim.circuit.deck import Deck, SourceLine
-from cosim.circuit.hierarchy import Structure, structure_of, top_level_cards
+from cosim.circuit.hierarchy import (
+    Structure,
+    declared_parameters,
+    structure_of,
+    top_level_cards,
+)
 from cosim.circuit.lookup import find_node
 from cosim.circuit.scope import Scope, element_of
 from cosim.circuit.settings import with_settings
@@ -204,7 +209,7 @@ class _Change:
     ) -> str:
         if name[0] == "x":
             definition = scope.subcircuit(element_of(scope, line.text).reference)
-            declared = definition.parameters if definition else ()
+            declared = declared_parameters(self.structure, definition) if definition else ()
             if parameter not in declared and parameter != "m":
                 raise UnknownNameError(
                     f"subcircuit '{definition.name if definition else '?'}' of '{name}' declares "

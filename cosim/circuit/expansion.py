@@ -78,7 +78,8 @@ class Places:
         real = os.path.realpath(found)
         if not any(_below(real, root) for root in self.roots()):
             raise ForbiddenDeckError(
-                f"'{name}' is {real}, outside of the deck's folder and the include paths{chain}",
+                f"'{name}'{'' if name == real else f' is {real} and'} lies outside of the deck's "
+                f"folder and the include paths{chain}",
                 hint=f"If it may be read, add its folder to include_paths: {os.path.dirname(real)}",
                 file=line.file,
                 line=line.line,

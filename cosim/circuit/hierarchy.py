@@ -150,6 +150,31 @@ def top_level_cards(lines: Sequence[SourceLine]) -> Iterator[tuple[int, SourceLi
                 yield index, line, card
 
 
+def declared_parameters(structure: Structure, scope: Scope) -> tuple[str, ...]:
+    """Give the parameters that an instance of a subcircuit may set.
+
+    Parameters
+    ----------
+    structure : Structure
+        The deck's structure.
+    scope : Scope
+        The subcircuit.
+
+    Returns
+    -------
+    tuple of str
+        Those of its header, and those of `.param` cards in its body: ngspice takes both.
+    """
+    names = list(scope.parameters)
+    depth = 0
+    for line in structure.lines[scope.first : scope.stop]:
+        card = card_word(line.text)
+        depth += (card == ".subckt") - (card == ".ends")
+        if card == ".param" and depth == 1:
+            names.extend(item.name for item in assignments(line.text) if "(" not in item.name)
+    return tuple(names)
+
+
 @dataclass(slots=True)
 class _Branch:
     """One `.if` that is open: the value of the branch (None: cannot be told), what went before."""

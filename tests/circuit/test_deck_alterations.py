@@ -75,6 +75,16 @@ EDITS: dict[str, Edit] = {
         lambda deck: with_instances(deck, {"xd": {"m": 5}}),
         [("half m=2", "half m=5")],
     ),
+    "a parameter of the body": (
+        "hierarchy",
+        lambda deck: with_instances(deck, {"xd": {"rh": 5e3}}),
+        [("half m=2", "half m=2 rh=5k")],
+    ),
+    "a transistor of a kit": (
+        "kit_user",
+        lambda deck: with_instances(deck, {"xm2": {"w": 0.7}, "x1": {"mult": 2, "l": 0.2}}),
+        [("l=0.5 w=1 nf=1", "l=0.5 w=0.7 nf=1"), ("l=0.15", "l=0.2 mult=2")],
+    ),
     "an inner instance of one of two": (
         "hierarchy",
         lambda deck: with_instances(deck, {"x1.xb": {"w": 9e-6}}),
@@ -162,12 +172,23 @@ def test_an_altered_deck_is_the_deck_edited_by_hand(tmp_path: Path, name: str) -
 
 
 @pytest.mark.ngspice
-@pytest.mark.parametrize("key", ["parts/corners.lib", "corners.lib"])
-def test_a_section_chosen_is_the_section_written(tmp_path: Path, key: str) -> None:
+@pytest.mark.parametrize(
+    ("stem", "key", "section", "written"),
+    [
+        ("includes", "parts/corners.lib", "SS", " TT"),
+        ("includes", "corners.lib", "ss", " TT"),
+        ("kit_user", "top.lib.spice", "ff", " tt"),
+    ],
+)
+def test_a_section_chosen_is_the_section_written(
+    tmp_path: Path, stem: str, key: str, section: str, written: str
+) -> None:
     folder = copy_decks(tmp_path)
-    got = output(load_deck(folder / "includes.cir", sections={key: "SS"}))
-    text = (folder / "includes.cir").read_text(encoding="utf-8")
-    (folder / "edited.cir").write_text(text.replace(" TT", " ss"), encoding="utf-8")
+    deck = folder / f"{stem}.cir"
+    got = output(load_deck(deck, sections={key: section}))
+    assert np.max(np.abs(got - output(load_deck(deck)))) > 1e-3  # It has an effect at all.
+    text = deck.read_text(encoding="utf-8")
+    (folder / "edited.cir").write_text(text.replace(written, f" {section}", 1), encoding="utf-8")
     wanted = original("edited.cir", folder)
     np.testing.assert_allclose(got, wanted, rtol=0, atol=ROUNDING)
 

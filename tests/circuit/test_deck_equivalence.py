@@ -21,6 +21,7 @@ pytestmark = pytest.mark.ngspice
         ("devices", ""),
         ("code_models", ""),
         ("start", ""),
+        ("kit_user", ""),
         ("random", ""),  # The deck's own `seed=7` and the seed of the run draw the same numbers.
         ("dialect", "psa"),
     ],

@@ -26,7 +26,8 @@ def vectors_of_ngspice(folder: Path, name: str) -> set[str]:
 
 @pytest.mark.ngspice
 @pytest.mark.parametrize(
-    "name", ["lines", "includes", "parameters", "hierarchy", "devices", "code_models", "start"]
+    "name",
+    ["lines", "includes", "parameters", "hierarchy", "devices", "code_models", "start", "kit_user"],
 )
 def test_nodes_are_those_of_ngspice(tmp_path: Path, name: str) -> None:
     folder = copy_decks(tmp_path)
