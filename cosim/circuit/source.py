@@ -9,6 +9,7 @@ import os
 import re
 import stat
 import threading
+import time
 from collections import OrderedDict
 from dataclasses import dataclass
 
@@ -17,6 +18,9 @@ from cosim.errors import DeckError, ForbiddenDeckError, MissingFileError, Unsupp
 
 LARGEST_FILE = 64 * 2**20  # byte; the largest process kits seen hold about 10 MB per file.
 _CACHED_FILES = 256
+# A file that changes again within the clock tick of the file system (4 ms is common) keeps its
+# time, so that one that has just been written is not kept.
+_YOUNGEST_KEPT = 100_000_000  # ns
 _CACHED_CHARACTERS = 256 * 2**20
 
 _SPACE = " \t\r\f\v"
@@ -61,7 +65,7 @@ class Source:
     notices: tuple[str, ...]
 
 
-_Key = tuple[str, bool, bool, int, int, int]
+_Key = tuple[str, bool, bool, int, int, int, int]
 _cache: OrderedDict[_Key, Source] = OrderedDict()
 _lock = threading.Lock()
 
@@ -95,7 +99,7 @@ def read_source(path: str, *, is_deck: bool, pspice: bool = False) -> Source:
         status = os.stat(path)
     except (OSError, ValueError) as error:
         raise _missing(path, error) from error
-    key = (path, is_deck, pspice, status.st_mtime_ns, status.st_size, status.st_ino)
+    key = (path, is_deck, pspice, status.st_mtime_ns, status.st_size, status.st_ino, status.st_dev)
     with _lock:
         source = _cache.get(key)
         if source is not None:
@@ -104,6 +108,8 @@ def read_source(path: str, *, is_deck: bool, pspice: bool = False) -> Source:
     content = read_bytes(path)
     file = DeckFile(path, decode(content), hashlib.sha256(content).hexdigest())
     source = split_source(file, is_deck=is_deck, pspice=pspice)
+    if time.time_ns() - status.st_mtime_ns < _YOUNGEST_KEPT:
+        return source
     with _lock:
         _cache[key] = source
         kept = sum(entry[4] for entry in _cache)
