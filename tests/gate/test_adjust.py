@@ -66,6 +66,6 @@ def test_the_carrier_offset_finds_a_detuned_qubit() -> None:
     both = calibrate_pulse(pulse(3.0, qubit=qubit), X180, with_detuning=True)
     assert 1 - alone.frame.average_gate_fidelity > 1e-3
     assert 1 - both.frame.average_gate_fidelity < 1e-9
-    # The Bloch-Siegert shift belongs to the offset: 12 kHz on the mean at a peak of 25 MHz.
-    assert both.detuning == pytest.approx(2e6, abs=20e3)
+    # The Bloch-Siegert shift belongs to the offset: 31 kHz at the peak of 25 MHz.
+    assert both.detuning == pytest.approx(2e6, abs=31e3)
     assert both.scale == pytest.approx(math.pi / 3.0, rel=1e-4)
