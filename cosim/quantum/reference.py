@@ -1,6 +1,7 @@
 """QuTiP's solvers: the rotating-wave twin of every run, and the kernel's reference."""
 
 import math
+from collections.abc import Sequence
 from itertools import pairwise
 
 import numpy as np
@@ -10,6 +11,7 @@ from scipy.interpolate import PPoly
 from cosim.errors import EvolutionError, InputError, WaveformError
 from cosim.quantum.channel import unitary_superoperator
 from cosim.quantum.hamiltonian import anharmonic_energies
+from cosim.quantum.operators import OperatorSystem
 from cosim.quantum.qubit import Qubit
 from cosim.quantum.steps import DriveSpline, check_window
 from cosim.waveform import ComplexArray, FloatArray
@@ -70,7 +72,8 @@ def evolve_rotating_wave(
         abs(2 * math.pi * qubit.anharmonicity) * (qubit.levels - 2),
         change,
     )
-    return _propagate(qubit, hamiltonian, float(t[0]), float(t[-1]), fastest, rtol)
+    window = (float(t[0]), float(t[-1]))
+    return _propagate(hamiltonian, qubit.collapse_operators(), window, fastest, rtol)
 
 
 def evolve_reference(
@@ -106,21 +109,80 @@ def evolve_reference(
     rotating frame at both ends. The solver starts anew wherever the drive jumps and at the tiny
     intervals that a circuit simulator leaves after a breakpoint.
     """
+    n = np.arange(float(qubit.levels))
+    a = qubit.annihilation()
+    laboratory = OperatorSystem(
+        energies=qubit.omega * n + anharmonic_energies(qubit),
+        drive=np.asarray(a + a.conj().T, dtype=np.complex128),
+        collapse=tuple(qubit.collapse_operators()),
+    )
+    return _evolve(laboratory, drive, start, stop, qubit.omega * n, rtol)
+
+
+def evolve_operators(
+    system: OperatorSystem,
+    drive: DriveSpline,
+    start: float,
+    stop: float,
+    *,
+    scale: float = 1.0,
+    rtol: float = 1e-10,
+) -> ComplexArray:
+    """Evolve a user's own system under the full drive with QuTiP and give the channel.
+
+    Parameters
+    ----------
+    system : OperatorSystem
+    drive : DriveSpline
+        2 pi k v(t) in rad/s.
+    start, stop : float
+        Window in s on the drive's own time axis.
+    scale : float
+        Factor on the drive.
+    rtol : float
+        Relative tolerance of the solver, 1e-13 to 1e-3; the absolute one is a hundredth of it.
+
+    Returns
+    -------
+    ndarray, shape (levels**2, levels**2)
+        Column-stacking superoperator in the eigenbasis of the Hamiltonian, in the frame that
+        rotates with it, phase zero at t = 0.
+
+    Raises
+    ------
+    InputError
+        If the window is empty or `rtol` is out of range.
+    WaveformError
+        If the window leaves the drive's time range.
+    EvolutionError
+        If the solver fails.
+    """
+    scaled = DriveSpline(drive.t, scale * drive.c)
+    return _evolve(system, scaled, start, stop, system.energies, rtol)
+
+
+def _evolve(
+    system: OperatorSystem,
+    drive: DriveSpline,
+    start: float,
+    stop: float,
+    frame: FloatArray,
+    rtol: float,
+) -> ComplexArray:
+    """Solve in the laboratory frame; turn by the frame's energies in rad/s at both ends."""
     start, stop = check_window(drive, start, stop)
-    d = qubit.levels
-    n = np.arange(float(d))
-    energies = qubit.omega * n + anharmonic_energies(qubit)
-    a = qutip.Qobj(qubit.annihilation())
+    d = system.levels
     rate = qutip.coefficient(_searched(drive))
-    hamiltonian = qutip.QobjEvo([qutip.Qobj(np.diag(energies)), [a + a.dag(), rate]])
-    fastest = float(np.ptp(energies))
+    static = qutip.Qobj(np.diag(system.energies))
+    hamiltonian = qutip.QobjEvo([static, [qutip.Qobj(system.drive), rate]])
+    fastest = float(np.ptp(system.energies))
     channel = np.eye(d * d, dtype=np.complex128)
     edges = _restarts(drive, start, stop)
     for first, last in pairwise(edges):
-        part = _propagate(qubit, hamiltonian, float(first), float(last), fastest, rtol)
-        channel = part @ channel
-    into = np.kron(np.exp(-1j * qubit.omega * stop * n), np.exp(1j * qubit.omega * stop * n))
-    back = np.kron(np.exp(1j * qubit.omega * start * n), np.exp(-1j * qubit.omega * start * n))
+        window = (float(first), float(last))
+        channel = _propagate(hamiltonian, system.collapse, window, fastest, rtol) @ channel
+    into = np.kron(np.exp(-1j * frame * stop), np.exp(1j * frame * stop))
+    back = np.kron(np.exp(1j * frame * start), np.exp(-1j * frame * start))
     return np.asarray(into[:, None] * channel * back[None, :])
 
 
@@ -148,14 +210,14 @@ def _restarts(drive: DriveSpline, start: float, stop: float) -> FloatArray:
 
 
 def _propagate(
-    qubit: Qubit,
     hamiltonian: qutip.QobjEvo,
-    start: float,
-    stop: float,
+    collapse: Sequence[ComplexArray],
+    window: tuple[float, float],
     fastest: float,
     rtol: float,
 ) -> ComplexArray:
-    """Run QuTiP's propagator from start to stop; `fastest` in rad/s bounds its steps."""
+    """Run QuTiP's propagator over a window; `fastest` in rad/s bounds its steps."""
+    start, stop = window
     if not 1e-13 <= rtol <= 1e-3:
         raise InputError(f"solver tolerance: wanted rtol from 1e-13 to 1e-3, got {rtol!r}")
     step = (stop - start) / 4
@@ -169,16 +231,16 @@ def _propagate(
         "nsteps": 10**8,
         "progress_bar": "",
     }
-    collapse = [qutip.Qobj(operator) for operator in qubit.collapse_operators()]
+    operators = [qutip.Qobj(operator) for operator in collapse]
     try:
-        propagators = qutip.propagator(hamiltonian, [start, stop], collapse, options=options)
+        propagators = qutip.propagator(hamiltonian, [start, stop], operators, options=options)
     except (qutip.IntegratorException, ValueError, ArithmeticError) as error:
         raise EvolutionError(
             f"QuTiP's solver failed between {start:.6g} s and {stop:.6g} s: {error}",
             hint="loosen the tolerance or shorten the window",
         ) from error
     last = np.asarray(propagators[-1].full())
-    return unitary_superoperator(last) if qubit.lossless else last
+    return last if operators else unitary_superoperator(last)
 
 
 def _check_envelope(rate: ComplexArray, t: FloatArray) -> tuple[ComplexArray, FloatArray]:
