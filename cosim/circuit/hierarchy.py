@@ -43,6 +43,8 @@ class Structure:
         Indices of the `.tran`, `.temp` and `.options` cards that are in force.
     devices : dict of str to SourceLine
         Element letter -> the first element of that kind that is used.
+    transistors : dict of int to str
+        Index of a model card that MOS transistors use -> the model's name, without its bin.
     """
 
     lines: tuple[SourceLine, ...]
@@ -51,6 +53,7 @@ class Structure:
     parameters: Parameters
     settings: tuple[int, ...]
     devices: dict[str, SourceLine] = field(default_factory=dict)
+    transistors: dict[int, str] = field(default_factory=dict)
 
 
 _recent: OrderedDict[int, Structure] = OrderedDict()
@@ -241,10 +244,10 @@ class _Builder:
             return
         elif card == ".model":
             name, kind = model_card(line.text)
-            self.scope.models.setdefault(name, kind)
             stem, dot, bin_number = name.rpartition(".")
-            if dot and bin_number.isdigit():
-                self.scope.models.setdefault(stem, kind)
+            for known in (name, stem) if dot and bin_number.isdigit() else (name,):
+                self.scope.models.setdefault(known, kind)
+                self.scope.cards.setdefault(known, index)
         elif card == ".global":
             self.global_nodes.update(words(line.text)[1:])
         elif card in (".tran", ".temp", ".options"):
@@ -304,6 +307,9 @@ def _check(structure: Structure) -> None:
             line = structure.lines[index]
             element = element_of(scope, line.text)
             structure.devices.setdefault(element.letter, line)
+            card = scope.card(element.reference) if element.letter == "m" else None
+            if card is not None:
+                structure.transistors.setdefault(card, element.reference)
             definition = _check_element(scope, element, line, index in scope.uncertain)
             if definition is not None:
                 visit(definition, (*way, scope))

@@ -1,16 +1,24 @@
 """The exact list of lines that ngspice gets for one run."""
 
+import re
+
 from cosim.circuit.analysis import TransientRequest
 from cosim.circuit.cards import SETTING_CARDS, card_word, number_text
 from cosim.circuit.deck import Deck, PreparedDeck, SourceLine, unique, where
+from cosim.circuit.expression import spice_number
 from cosim.circuit.hierarchy import Structure, structure_of
 from cosim.circuit.lookup import resolve_saves, save_expression
 from cosim.circuit.safety import check_lines
-from cosim.circuit.settings import CELSIUS, filtered_options, written_temperature
+from cosim.circuit.settings import CELSIUS, filtered_options, gathered, written_temperature
 from cosim.errors import DeckError
 
 _TITLE = "transient run"
 _COLDEST_JUNCTION = 20.0  # K; below it, measured, ngspice's diode and BJT do not converge.
+_COLDEST_CARD, _HOTTEST_CARD = -40.0, 125.0  # degrees Celsius
+# BSIM3, BSIM4 and BSIM-SOI, as ngspice numbers them.
+_BSIM_LEVELS = frozenset({8, 49, 14, 54, 10, 55, 56, 57, 58})
+_LEVEL = re.compile(r"(?<![\w.])level\s*=?\s*([^\s,()]+)", re.IGNORECASE)
+_NAMES_SHOWN = 3
 _FIXED_GRID = 1e6  # trtol and xtrtol: error control never moves a step.
 
 
@@ -51,6 +59,7 @@ def prepare(deck: Deck, request: TransientRequest) -> PreparedDeck:
         "xtrtol": _FIXED_GRID,
     }
     notices: list[str] = []
+    left_out: list[tuple[SourceLine, str]] = []
     body: list[SourceLine] = [_own_line(_options_text(own))]
     in_force = set(structure.settings)
     temperature = _temperature_cards(deck, request, structure, notices)
@@ -61,9 +70,10 @@ def prepare(deck: Deck, request: TransientRequest) -> PreparedDeck:
             body.append(line)
         elif card == ".options" and index in in_force:
             filtered = filtered_options(line, own)
-            notices.extend(filtered.notices)
+            left_out.extend((line, text) for text in filtered.left_out)
             if filtered.line.text:
                 body.append(filtered.line)
+    notices.extend(gathered(left_out))
     if keys:
         items = unique(save_expression(vector) for vector in keys.values())
         body.append(_own_line(".save " + " ".join(items)))
@@ -112,7 +122,7 @@ def _flat_mode(compatibility: str | None) -> str:
 def _temperature_cards(
     deck: Deck, request: TransientRequest, structure: Structure, notices: list[str]
 ) -> list[SourceLine]:
-    """Give the temperature cards, and look whether the models reach that low."""
+    """Give the temperature cards, and look whether the models reach there."""
     temperature = request.temperature
     if temperature is None:
         temperature = deck.temperature
@@ -127,15 +137,15 @@ def _temperature_cards(
         if written is None:
             return []
         return [SourceLine(f".temp {written[0]}", written[1].file, written[1].line)]
-    if temperature < _COLDEST_JUNCTION:
-        _check_cold(structure, temperature, notices)
+    _check_junctions(structure, temperature)
+    notices.extend(_uncalibrated(structure, temperature))
     return [_own_line(f".temp {temperature - CELSIUS:.12g}")]
 
 
-def _check_cold(structure: Structure, temperature: float, notices: list[str]) -> None:
+def _check_junctions(structure: Structure, temperature: float) -> None:
     for letter in ("d", "q"):
         line = structure.devices.get(letter)
-        if line is not None:
+        if line is not None and temperature < _COLDEST_JUNCTION:
             raise DeckError(
                 f"ngspice's diode and bipolar models do not converge below "
                 f"{_COLDEST_JUNCTION:g} K, the device temperature is {temperature:g} K",
@@ -144,10 +154,40 @@ def _check_cold(structure: Structure, temperature: float, notices: list[str]) ->
                 file=line.file,
                 line=line.line,
             )
-    line = structure.devices.get("m")
-    if line is not None:
-        notices.append(
-            f"{where(line)}: MOS models are uncalibrated at {temperature:g} K: below "
-            f"{_COLDEST_JUNCTION:g} K they converge to unphysical mobilities unless their cards "
-            "were fitted there"
+
+
+def _uncalibrated(structure: Structure, temperature: float) -> list[str]:
+    """Warn of MOS models at a temperature that their cards do not reach, as a rule.
+
+    ngspice says nothing of it. That foundries extract BSIM cards for -40 to 125 degrees Celsius
+    is common practice; models of hand calculation (level 1 to 3) claim no range.
+    """
+    celsius = round(temperature - CELSIUS, 6)
+    cards = {index: structure.lines[index] for index in structure.transistors}
+    if temperature < _COLDEST_JUNCTION:
+        fault = (
+            f"uncalibrated at {temperature:g} K: below {_COLDEST_JUNCTION:g} K they converge to "
+            "unphysical mobilities unless their cards were fitted there"
         )
+    elif not _COLDEST_CARD <= celsius <= _HOTTEST_CARD:
+        cards = {index: card for index, card in cards.items() if _is_bsim(card.text)}
+        fault = (
+            f"extrapolated to {temperature:g} K: BSIM cards are commonly extracted for "
+            f"{_COLDEST_CARD:g} to {_HOTTEST_CARD:g} degrees Celsius "
+            f"({_COLDEST_CARD + CELSIUS:g} to {_HOTTEST_CARD + CELSIUS:g} K), and ngspice does not "
+            "say so; were these fitted there?"
+        )
+    else:
+        return []
+    names = list(dict.fromkeys(structure.transistors[index] for index in cards))
+    if not names:
+        return []
+    listed = ", ".join(names[:_NAMES_SHOWN])
+    if len(names) > _NAMES_SHOWN:
+        listed += f" and {len(names) - _NAMES_SHOWN} more"
+    return [f"{where(next(iter(cards.values())))}: MOS models {listed} are {fault}"]
+
+
+def _is_bsim(card: str) -> bool:
+    level = _LEVEL.search(card)
+    return level is not None and spice_number(level[1]) in _BSIM_LEVELS

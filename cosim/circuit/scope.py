@@ -43,6 +43,8 @@ class Scope:
         Indices of elements of which cannot be told whether they are there.
     models : dict of str to str
         Model -> type; a binned model "nch.1" also counts as "nch".
+    cards : dict of str to int
+        Model -> index of its (first) card.
     inner : dict of str to Scope
         Definitions inside this one.
     nodes : frozenset of str or None
@@ -58,6 +60,7 @@ class Scope:
     elements: dict[str, list[int]] = field(default_factory=dict)
     uncertain: set[int] = field(default_factory=set)
     models: dict[str, str] = field(default_factory=dict)
+    cards: dict[str, int] = field(default_factory=dict)
     inner: dict[str, "Scope"] = field(default_factory=dict)
     nodes: frozenset[str] | None = None
 
@@ -76,6 +79,15 @@ class Scope:
         while scope is not None:
             if name in scope.models:
                 return scope.models[name]
+            scope = scope.parent
+        return None
+
+    def card(self, name: str) -> int | None:
+        """Find the index of a model's card by its name, from here outwards."""
+        scope: Scope | None = self
+        while scope is not None:
+            if name in scope.cards:
+                return scope.cards[name]
             scope = scope.parent
         return None
 

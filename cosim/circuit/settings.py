@@ -1,6 +1,7 @@
 """What a deck says about its own run: `.tran`, `.temp` and `.options`."""
 
 import re
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
 from cosim.circuit.cards import (
@@ -177,12 +178,12 @@ class OptionCard:
     ----------
     line : SourceLine
         What is sent; its text is empty when nothing is.
-    notices : tuple of str
-        What is said about the rest.
+    left_out : tuple of str
+        What is said about the rest, without the place.
     """
 
     line: SourceLine
-    notices: tuple[str, ...]
+    left_out: tuple[str, ...]
 
 
 def filtered_options(line: SourceLine, own: dict[str, float | str]) -> OptionCard:
@@ -204,37 +205,54 @@ def filtered_options(line: SourceLine, own: dict[str, float | str]) -> OptionCar
     text = line.text
     covered = masked(text)
     kept: list[str] = []
-    notices: list[str] = []
+    left_out: list[str] = []
     at = len(".options")
     found = {item.start: item for item in assignments(text)}
     while match := _OPTION_WORD.search(covered, at):
         item = found.get(match.start())
         name = item.name if item else text[match.start() : match.end()].lower()
         at = item.stop if item else match.end()
+        written = text[match.start() : at]
         if name in own or name == "temp":
             if name in own and not _same(item.value if item else "", own[name]):
-                notices.append(
-                    f"{where(line)}: option {text[match.start() : at]} left out: the run sets "
-                    f"{name}={own[name]}"
-                )
+                left_out.append(f"option {written} left out: the run sets {name}={own[name]}")
         elif item and name in VALUE_OPTIONS:
             kept.append(f"{name}={item.value}")
         elif not item and name in FLAG_OPTIONS:
             kept.append(name)
         elif name == "seed":
-            notices.append(
-                f"{where(line)}: option {text[match.start() : at]} left out: the run has a seed of "
-                "its own"
-            )
+            left_out.append(f"option {written} left out: the run has a seed of its own")
         elif name == "cshunt":
-            notices.append(
-                f"{where(line)}: option cshunt left out: ngspice keeps it for later decks; write "
-                "the capacitors into the deck"
+            left_out.append(
+                "option cshunt left out: ngspice keeps it for later decks; write the capacitors "
+                "into the deck"
             )
         elif name not in SHOWING_OPTIONS:
-            notices.append(f"{where(line)}: option {text[match.start() : at]} left out")
+            left_out.append(f"option {written} left out")
     sent = f".options {' '.join(kept)}" if kept else ""
-    return OptionCard(SourceLine(sent, line.file, line.line), tuple(notices))
+    return OptionCard(SourceLine(sent, line.file, line.line), tuple(left_out))
+
+
+def gathered(left_out: Sequence[tuple[SourceLine, str]]) -> list[str]:
+    """Say each thing once, however often a deck and its process kit repeat it.
+
+    Parameters
+    ----------
+    left_out : sequence of (SourceLine, str)
+        Card, and what is said about it.
+
+    Returns
+    -------
+    list of str
+        Each text with its first place, and the number of the others.
+    """
+    places: dict[str, list[str]] = {}
+    for line, text in left_out:
+        places.setdefault(text, []).append(where(line))
+    return [
+        f"{found[0]}: {text}" + (f" (and in {len(found) - 1} further cards)" if found[1:] else "")
+        for text, found in places.items()
+    ]
 
 
 def _same(written: str, own: float | str) -> bool:

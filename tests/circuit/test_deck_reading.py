@@ -196,6 +196,17 @@ def test_options(line: str, sent: str, notice: str) -> None:
     assert bool(notice) == bool(prepared.notices)
 
 
+def test_an_option_that_a_kit_repeats_is_said_once() -> None:
+    body = ".options parser scale=1.0u\n" * 3 + ".options parser interp\n.options gmin\n"
+    prepared = prepare(read(CIRCUIT + body), request())
+    assert prepared.notices == (
+        "circuit:5: option parser left out (and in 3 further cards)",
+        "circuit:8: option interp left out",
+        "circuit:9: option gmin left out",
+    )
+    assert prepared.lines.count(".options scale=1.0u") == 3
+
+
 @pytest.mark.parametrize(
     ("line", "kept", "notice"),
     [
