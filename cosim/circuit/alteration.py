@@ -3,9 +3,10 @@
 import math
 import re
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field, replace
+from dataclasses import replace
 
 from cosim.circuit.cards import assignments, masked, number_text
+from cosim.circuit.copies import Edit, edited_lines
 from cosim.circuit.deck import Deck, SourceLine
 from cosim.circuit.hierarchy import (
     Structure,
@@ -148,124 +149,46 @@ def with_instances(deck: Deck, instances: Mapping[str, Mapping[str, float]]) -> 
     """
     if not instances:
         return deck
-    structure = structure_of(deck.lines)
-    tree = _Wish()
+    edits: dict[str, Edit] = {}
     for path, parameters in instances.items():
-        at = tree
-        for part in path.strip().lower().split("."):
-            at = at.inner.setdefault(part, _Wish())
+        values = {name: _finite(f"{path}.{name}", value) for name, value in parameters.items()}
+        edits[path] = _setter({name.strip().lower(): value for name, value in values.items()})
+    return with_settings(replace(deck, lines=edited_lines(deck, edits)))
+
+
+def _setter(parameters: Mapping[str, float]) -> Edit:
+    def edit(structure: Structure, scope: Scope, line: SourceLine) -> tuple[SourceLine, ...]:
+        text = line.text
         for name, value in parameters.items():
-            at.parameters[name.strip().lower()] = _finite(f"{path}.{name}", value)
-    change = _Change(structure, deck.path)
-    change.apply(structure.root, tree, "")
-    return with_settings(replace(deck, lines=change.render(0, len(deck.lines))))
+            text = _with_parameter(structure, scope, line, text, name, value)
+        return (SourceLine(text, line.file, line.line),)
+
+    return edit
 
 
-@dataclass(slots=True)
-class _Wish:
-    """Parameters wanted for an instance, and for what is inside it."""
-
-    parameters: dict[str, float] = field(default_factory=dict)
-    inner: dict[str, "_Wish"] = field(default_factory=dict)
-
-
-class _Change:
-    """Replaced and inserted lines, by index in the deck."""
-
-    def __init__(self, structure: Structure, path: str) -> None:
-        self.structure = structure
-        self.path = path
-        self.replaced: dict[int, SourceLine] = {}
-        self.inserted: dict[int, list[SourceLine]] = {}
-        self.copies = 0
-
-    def render(self, start: int, stop: int) -> tuple[SourceLine, ...]:
-        lines: list[SourceLine] = []
-        for index in range(start, stop):
-            lines.extend(self.inserted.get(index, ()))
-            lines.append(self.replaced.get(index, self.structure.lines[index]))
-        return tuple(lines)
-
-    def apply(self, scope: Scope, wish: _Wish, prefix: str) -> None:
-        """Alter the elements of a scope in place."""
-        for name, inner in wish.inner.items():
-            if name not in scope.elements:
-                raise UnknownNameError(
-                    f"instance '{prefix}{name}' does not exist",
-                    hint=near_names(prefix + name, [prefix + item for item in scope.elements]),
-                    file=self.path,
-                )
-            for index in scope.elements[name]:
-                line = self.structure.lines[index]
-                text = line.text
-                for parameter, value in inner.parameters.items():
-                    text = self._with_parameter(scope, name, line, text, parameter, value)
-                if inner.inner:
-                    text = self._with_copy(scope, f"{prefix}{name}", line, text, inner)
-                self.replaced[index] = SourceLine(text, line.file, line.line)
-
-    def _with_parameter(
-        self, scope: Scope, name: str, line: SourceLine, text: str, parameter: str, value: float
-    ) -> str:
-        if name[0] == "x":
-            definition = scope.subcircuit(element_of(scope, line.text).reference)
-            declared = declared_parameters(self.structure, definition) if definition else ()
-            if parameter not in declared and parameter != "m":
-                raise UnknownNameError(
-                    f"subcircuit '{definition.name if definition else '?'}' of '{name}' declares "
-                    f"no parameter '{parameter}'",
-                    hint=near_names(parameter, declared),
-                    file=line.file,
-                    line=line.line,
-                )
-        value_names = _VALUE_NAMES.get(name[0], ())
-        same = value_names if parameter in value_names else (parameter,)
-        for item in assignments(text):
-            if item.name in same:
-                return text[: item.value_start] + number_text(value) + text[item.stop :]
-        if parameter in value_names:
-            return _with_value(text, value)
-        return f"{text} {parameter}={number_text(value)}"
-
-    def _with_copy(self, scope: Scope, path: str, line: SourceLine, text: str, wish: _Wish) -> str:
-        """Copy the definition that an instance uses, alter the copy, and use it."""
-        definition = scope.subcircuit(element_of(scope, line.text).reference)
-        if definition is None:
+def _with_parameter(
+    structure: Structure, scope: Scope, line: SourceLine, text: str, parameter: str, value: float
+) -> str:
+    element = element_of(scope, line.text)
+    if element.letter == "x":
+        definition = scope.subcircuit(element.reference)
+        declared = declared_parameters(structure, definition) if definition else ()
+        if parameter not in declared and parameter != "m":
             raise UnknownNameError(
-                f"'{path}' is a device and holds no '{next(iter(wish.inner))}'",
+                f"subcircuit '{definition.name if definition else '?'}' of '{element.name}' "
+                f"declares no parameter '{parameter}'",
+                hint=near_names(parameter, declared),
                 file=line.file,
                 line=line.line,
             )
-        self.copies += 1
-        copy_name = f"{definition.name}_copy{self.copies}"
-        while scope.subcircuit(copy_name) is not None:
-            self.copies += 1
-            copy_name = f"{definition.name}_copy{self.copies}"
-        inner = _Change(self.structure, self.path)
-        inner.copies = self.copies
-        inner.apply(definition, wish, f"{path}.")
-        self.copies = inner.copies
-        copied = list(inner.render(definition.first, definition.stop))
-        header = copied[0]
-        copied[0] = replace(header, text=_with_word(header.text, definition.name, copy_name))
-        copied[-1] = replace(copied[-1], text=".ends")
-        for index, lines in inner.inserted.items():
-            if not definition.first < index < definition.stop:
-                self.inserted.setdefault(index, []).extend(lines)
-        self.inserted.setdefault(definition.first, []).extend(copied)
-        return _with_word(text, definition.name, copy_name, last=True)
-
-
-def _with_word(text: str, word: str, new: str, *, last: bool = False) -> str:
-    """Replace a subcircuit's name: the second word of a header, the last one of an instance."""
-    head = text
-    assigned = assignments(text)
-    if assigned:
-        head = text[: assigned[0].start]
-    pattern = re.compile(rf"(?<![^\s(),]){re.escape(word)}(?![^\s(),])", re.IGNORECASE)
-    found = list(pattern.finditer(masked(head) if not last else head))
-    match = found[-1] if last else found[0]
-    return text[: match.start()] + new + text[match.end() :]
+    value_names = _VALUE_NAMES.get(element.letter, ())
+    same = value_names if parameter in value_names else (parameter,)
+    for item in assignments(text):
+        if item.name in same:
+            return text[: item.value_start] + number_text(value) + text[item.stop :]
+    if parameter in value_names:
+        return _with_value(text, value)
+    return f"{text} {parameter}={number_text(value)}"
 
 
 def _with_value(text: str, value: float) -> str:
