@@ -52,6 +52,11 @@ _SINGULAR = re.compile(r"singular matrix:\s+check node\s+(\S+)", re.IGNORECASE)
 _WARNING = re.compile(r"\bwarning\b|unrecognized parameter|set to 1 mOhm", re.IGNORECASE)
 # A literal zero is taken for 1 mOhm without a word.
 _ZERO = re.compile(r"r\S*\s+\S+\s+\S+\s+(?:r\s*=\s*)?0*\.?0*(?:e[+-]?\d+)?\s*$", re.IGNORECASE)
+# "Checking parameters for BSIM 4.5 model xb.xn:nch.8", and then its warnings, for each device.
+_CHECK = re.compile(r"Checking parameters for .* model (?:\S*:)?(\S+)$")
+_REMARK = re.compile(r"warning:\s*", re.IGNORECASE)
+REMARKS_SHOWN = 4  # of one card
+_SCALE = re.compile(r"\.options .*?(?<![\w.])scale=(\S+)", re.IGNORECASE)
 _STEPPING = re.compile(
     r"Starting dynamic gmin stepping|Starting true gmin stepping|Starting source stepping"
     r"|Transient op started"
@@ -124,6 +129,8 @@ def raise_for_log(prepared: PreparedDeck, log: Sequence[str], models: bool) -> N
     if "no data saved" in text:
         saves = ", ".join(prepared.keys)
         raise UnknownNameError(f"none of the requested vectors exists: {saves}", log=said)
+    if "valid modelname" in text:
+        _raise_deck(UnknownNameError, prepared, said, "no model card fits", _bin_hint(prepared))
     if _NO_NAME.search(text):
         _raise_deck(UnknownNameError, prepared, said, "a name that the deck uses does not exist")
     _raise_deck(DeckError, prepared, said, "ngspice does not accept the deck")
@@ -164,8 +171,13 @@ def findings(prepared: PreparedDeck, log: Sequence[str]) -> tuple[str, ...]:
         if _ZERO.match(line):
             file, number = prepared.origins[index]
             found[f"{_place(file, number)}ngspice takes 1 mOhm for the 0 ohm of {line!r}"] = None
+    for text in _card_checks(prepared, words):
+        found[text] = None
     place = 0
     while place < len(words):
+        if _CHECK.match(words[place]):
+            place += 1 + _remarks(words, place + 1)
+            continue
         said = list(words[place : place + 1 + _continuation(words[place])])
         place += len(said)
         line = said[0]
@@ -180,6 +192,29 @@ def findings(prepared: PreparedDeck, log: Sequence[str]) -> tuple[str, ...]:
         rest = len(listed) - WARNINGS_SHOWN
         listed = [*listed[:WARNINGS_SHOWN], f"{rest} further warnings stand in the log"]
     return tuple(listed)
+
+
+def _remarks(words: Sequence[str], start: int) -> int:
+    """Count the warnings from a line on that follow one another."""
+    return sum(1 for _ in itertools.takewhile(_REMARK.match, words[start:]))
+
+
+def _card_checks(prepared: PreparedDeck, words: Sequence[str]) -> list[str]:
+    """Gather what ngspice's check says of each model card, once for all of its devices."""
+    checks: dict[str, dict[str, None]] = {}
+    for place, line in enumerate(words):
+        if match := _CHECK.match(line):
+            said = words[place + 1 : place + 1 + _remarks(words, place + 1)]
+            of_card = checks.setdefault(match[1], {})
+            of_card.update({_REMARK.sub("", text).rstrip("."): None for text in said})
+    found = []
+    for card, remarks in checks.items():
+        if remarks:
+            file, number, _ = _origin(prepared, [f"'{card}'"])
+            more = len(remarks) - REMARKS_SHOWN
+            listed = "; ".join(list(remarks)[:REMARKS_SHOWN]) + (f"; {more} more" * (more > 0))
+            found.append(f"{_place(file, number)}ngspice's check of the card {card}: {listed}")
+    return found
 
 
 def _place(file: str, line: int) -> str:
@@ -198,6 +233,17 @@ def _complaint(words: Sequence[str]) -> list[str]:
     first = next((place for place, line in enumerate(words) if _COMPLAINT.match(line)), 0)
     said = [line for line in dict.fromkeys(words[first:]) if line and not _ECHO.search(line)]
     return said[:LOG_SHOWN] or list(words[-LOG_SHOWN:])
+
+
+def _bin_hint(prepared: PreparedDeck) -> str:
+    scales = [match[1] for line in prepared.lines if (match := _SCALE.match(line))]
+    hint = "there is no such model of a level that ngspice has, or none of its bins covers w and l"
+    if scales:
+        hint += (
+            f"; the deck's .options scale={scales[-1]} multiplies all lengths, so that 2 um may "
+            "have to be given as 2, in the deck as in the testbench"
+        )
+    return hint
 
 
 def _origin(prepared: PreparedDeck, said: Sequence[str]) -> tuple[str, int, str]:

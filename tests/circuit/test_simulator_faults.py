@@ -232,6 +232,37 @@ def test_what_ngspice_passes_over_is_a_warning_with_its_line(
     assert any(text.startswith(words) for text in result.warnings), result.warnings
 
 
+def test_the_check_of_a_model_card_is_one_warning_for_all_of_its_devices(
+    run_lines: Runner,
+) -> None:
+    body = [
+        *["v1 in 0 1", "x1 in out s", "x2 in out s", ".subckt s a b", "m1 b a 0 0 nm w=1u l=1u"],
+        ".model nm.1 nmos level=54 version=4.5 eta0=-0.5 etab=-7 lmin=0.1u lmax=9u wmin=0.1u "
+        "wmax=9u",
+        *[".ends", "r1 in out 1k"],
+    ]
+    result = run_lines(body, OUT, 1e-9, 1e-11)
+    assert sum(line.startswith("Checking parameters") for line in result.log) >= 2
+    checks = [text for text in result.warnings if "check of the card" in text]
+    assert checks == ["deck.cir:6: ngspice's check of the card nm.1: Eta0 = -0.5 is negative"], (
+        result.warnings
+    )
+    assert not any(text.startswith("Warning: Eta0") for text in result.warnings)
+
+
+def test_a_width_in_the_wrong_unit_points_to_the_scale(run_lines: Runner) -> None:
+    body = [
+        *["v1 in 0 1", "r1 in out 1k", "m1 out in 0 0 nm w=2u l=1u", ".options scale=1u"],
+        ".model nm.1 nmos level=54 version=4.5 lmin=0.1u lmax=9u wmin=0.1u wmax=9u",
+    ]
+    with pytest.raises(UnknownNameError, match="no model card fits") as caught:
+        run_lines(body, OUT, 1e-9, 1e-11)
+    assert "scale=1u multiplies all lengths" in caught.value.hint
+    assert caught.value.line == 3
+    healthy = [line.replace("w=2u l=1u", "w=2 l=1") for line in body]
+    assert run_lines(healthy, OUT, 1e-9, 1e-11).vectors["v(out)"].size > 10
+
+
 @pytest.mark.parametrize(
     "body",
     [
