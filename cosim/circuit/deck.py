@@ -112,6 +112,8 @@ class Deck:
         Device temperature in K from `.temp` or `.options temp`, or None.
     compatibility : str or None
         ngspice compatibility mode ("hsa", "psa", ...), or None.
+    joined : tuple of str
+        Files of lines that go on in another file: such a line counts as the first file's.
     """
 
     path: str
@@ -123,6 +125,7 @@ class Deck:
     tran: TransientCard | None
     temperature: float | None = field(metadata={"unit": "K"})
     compatibility: str | None
+    joined: tuple[str, ...] = ()
 
 
 @dataclass(frozen=True, slots=True)

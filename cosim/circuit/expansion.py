@@ -80,11 +80,19 @@ class Places:
             raise ForbiddenDeckError(
                 f"'{name}'{'' if name == real else f' is {real} and'} lies outside of the deck's "
                 f"folder and the include paths{chain}",
-                hint=f"If it may be read, add its folder to include_paths: {os.path.dirname(real)}",
+                hint="If it may be read, add its folder to include_paths: "
+                + self._common_folder(real, line.file),
                 file=line.file,
                 line=line.line,
             )
         return found
+
+    def _common_folder(self, real: str, named_in: str) -> str:
+        """Give the folder to name: a kit's own, one level up, where its parts name one another."""
+        folder = os.path.dirname(real)
+        above = os.path.commonpath([folder, os.path.realpath(named_in)])
+        kits = {os.path.dirname(os.path.realpath(place)) for place in self.include_paths}
+        return above if above in kits and above != os.sep else folder
 
 
 def unique_folders(*folders: str) -> tuple[str, ...]:

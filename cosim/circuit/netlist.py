@@ -166,5 +166,6 @@ def _deck(
         tran=None,
         temperature=None,
         compatibility=mode or None,
+        joined=unique(reader.joined),
     )
     return with_settings(deck)

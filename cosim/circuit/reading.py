@@ -57,6 +57,7 @@ class CardReader:
         self.title = title
         self.lines: list[SourceLine] = []
         self.notices: list[str] = []
+        self.joined: list[str] = []
         self._places = places
         self._path = path
         self._end: SourceLine | None = None
@@ -120,6 +121,8 @@ class CardReader:
             last = self.lines.pop()
             text = f"{last.text} {line.text[1:].strip()}"
             self.lines.append(SourceLine(text, last.file, last.line))
+            if last.file != line.file:
+                self.joined += [last.file, line.file]
 
     def _element(self, line: SourceLine) -> None:
         text = line.text

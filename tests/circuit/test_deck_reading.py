@@ -15,6 +15,7 @@ from cosim.circuit.netlist import Deck, deck_from_text, load_deck, prepare
 from cosim.errors import (
     CosimError,
     DeckError,
+    ForbiddenDeckError,
     MissingFileError,
     UnknownNameError,
     UnsupportedDeckError,
@@ -375,6 +376,35 @@ def test_where_files_are_looked_for(tmp_path: Path, monkeypatch: pytest.MonkeyPa
         found(".include $NO_SUCH_KIT/only.inc")
     (work / "linked.inc").symlink_to(work / "sub" / "here.inc")
     assert texts(found(".include linked.inc")) == ["r9 sub 0 1"]
+
+
+def test_a_file_of_a_kit_outside_of_the_include_path_names_the_folder_above(tmp_path: Path) -> None:
+    for name in ("kit/corners", "kit/cells/nch", "work", "other"):
+        (tmp_path / name).mkdir(parents=True)
+    (tmp_path / "kit/corners/kit.lib").write_text(".include ../cells/nch/n.inc\n")
+    (tmp_path / "kit/cells/nch/n.inc").write_text("r9 out 0 1\n")
+    (tmp_path / "other/o.inc").write_text("r9 out 0 1\n")
+    deck = tmp_path / "work" / "deck.cir"
+    for line, folder in (
+        (".include kit.lib", tmp_path / "kit"),
+        (".include ../other/o.inc", tmp_path / "other"),
+    ):
+        deck.write_text(f"t\n{line}\n", encoding="utf-8")
+        with pytest.raises(ForbiddenDeckError) as caught:
+            load_deck(deck, include_paths=[tmp_path / "kit/corners"])
+        assert caught.value.hint.endswith(f"include_paths: {folder.resolve()}")
+
+
+def test_files_of_a_line_that_goes_over_from_one_to_another(tmp_path: Path) -> None:
+    (tmp_path / "rest.inc").write_text("* c\n+ 1k\nr3 out 0 1k\n", encoding="utf-8")
+    (tmp_path / "plain.inc").write_text("r4 out\n+ 0 1k\n", encoding="utf-8")
+    deck = tmp_path / "deck.cir"
+    deck.write_text("t\nv1 in 0 1\nr1 in out\n.include rest.inc\n.include plain.inc\n")
+    loaded = load_deck(deck)
+    assert texts(loaded) == ["v1 in 0 1", "r1 in out 1k", "r3 out 0 1k", "r4 out 0 1k"]
+    assert loaded.joined == (str(deck), str(tmp_path / "rest.inc"))
+    deck.write_text("t\n.include plain.inc\n+ x\n")
+    assert load_deck(deck).joined == ()
 
 
 def test_data_files_are_copied_under_lower_case_names(tmp_path: Path) -> None:
