@@ -25,6 +25,7 @@ if TYPE_CHECKING:
         TestbenchError,
         WaveformError,
     )
+    from cosim.quantum.operators import OperatorSystem, operator_system
     from cosim.result import Fidelity, GateResult
     from cosim.testbench import Testbench, load_testbench, make_testbench
     from cosim.waveform import Envelope, Waveform
@@ -37,6 +38,7 @@ __all__ = [
     "Fidelity",
     "GateResult",
     "InputError",
+    "OperatorSystem",
     "SimulationError",
     "Testbench",
     "TestbenchError",
@@ -45,6 +47,7 @@ __all__ = [
     "load",
     "load_testbench",
     "make_testbench",
+    "operator_system",
     "run",
     "save",
 ]
@@ -60,6 +63,7 @@ _HOMES = {
         "TestbenchError",
         "WaveformError",
     ),
+    "cosim.quantum.operators": ("OperatorSystem", "operator_system"),
     "cosim.result": ("Fidelity", "GateResult"),
     "cosim.testbench": ("Testbench", "load_testbench", "make_testbench"),
     "cosim.waveform": ("Envelope", "Waveform"),

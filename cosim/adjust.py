@@ -7,9 +7,12 @@ from dataclasses import dataclass, replace
 import numpy as np
 from scipy.optimize import minimize, minimize_scalar
 
+from cosim.errors import InputError
 from cosim.quantum.evolution import DriveSpline, evolve
-from cosim.quantum.frame import FreeFrame, free_frame
+from cosim.quantum.frame import FreeFrame, free_frame, phase_frame
+from cosim.quantum.operators import OperatorSystem
 from cosim.quantum.qubit import Qubit
+from cosim.quantum.reference import evolve_operators
 from cosim.waveform import ComplexArray
 
 # The range of the one real amplitude scale.
@@ -29,18 +32,21 @@ class Pulse:
 
     Parameters
     ----------
-    qubit : Qubit
-        The qubit.
+    qubit : Qubit or OperatorSystem
+        The qubit, or a system given by a user's own operators.
     drive : DriveSpline
         Drive rate in rad/s.
     start, stop : float
         Window in s.
+    phase : float
+        Phase of the drive in rad that is taken out of the channel.
     """
 
-    qubit: Qubit
+    qubit: Qubit | OperatorSystem
     drive: DriveSpline
     start: float
     stop: float
+    phase: float = 0.0
 
     def channel(self, *, scale: float = 1.0, detuning: float = 0.0) -> ComplexArray:
         """Evolve, with the drive scaled and the carrier offset.
@@ -63,13 +69,21 @@ class Pulse:
         Raises
         ------
         InputError
-            If the window does not lie within the drive.
+            If the window does not lie within the drive, or a system given by operators is to be
+            detuned.
         """
+        if isinstance(self.qubit, OperatorSystem):
+            if detuning != 0.0:
+                raise InputError("a system given by operators cannot be detuned")
+            return evolve_operators(self.qubit, self.drive, self.start, self.stop, scale=scale)
         qubit = replace(self.qubit, frequency=self.qubit.frequency - detuning)
-        return evolve(qubit, self.drive, self.start, self.stop, scale=scale)
+        channel = evolve(qubit, self.drive, self.start, self.stop, scale=scale)
+        return phase_frame(channel, self.phase, -self.phase) if self.phase else channel
 
     def lossless(self) -> "Pulse":
         """The same pulse on the same qubit without relaxation and dephasing."""
+        if isinstance(self.qubit, OperatorSystem):
+            return replace(self, qubit=self.qubit.without_collapse())
         return replace(self, qubit=replace(self.qubit, t1=math.inf, t2=math.inf))
 
 

@@ -2,13 +2,14 @@
 
 import math
 import os
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
 
 from cosim.circuit.analysis import TransientRequest, TransientResult
 from cosim.circuit.netlist import (
     Deck,
+    DeckFile,
     deck_from_text,
     load_deck,
     with_instances,
@@ -17,7 +18,9 @@ from cosim.circuit.netlist import (
 )
 from cosim.circuit.probe import Probe, evaluate_probe, parse_probe
 from cosim.circuit.simulator import simulate
+from cosim.dsp.upconversion import upconvert
 from cosim.errors import TestbenchError
+from cosim.schema import NetlistTable
 from cosim.testbench import Testbench
 from cosim.waveform import Waveform
 
@@ -35,20 +38,23 @@ class Plan:
     ----------
     deck : Deck
         With parameters, sections, instances and terminations applied.
-    probe : Probe
-        What is read.
+    probes : tuple of Probe
+        What is read: the probe, or I and Q of a baseband pair.
+    carrier_frequency : float
+        In Hz; NaN when it is to be estimated.
+    baseband : bool
+        Whether the probes are a baseband pair, which the bridge upconverts.
     request : TransientRequest
         The transient on the fixed grid.
-    steps_per_period : float
-        Carrier period over step; NaN when the carrier is to be estimated.
     notices : tuple of str
         What the reader must know.
     """
 
     deck: Deck
-    probe: Probe
+    probes: tuple[Probe, ...]
+    carrier_frequency: float
+    baseband: bool
     request: TransientRequest
-    steps_per_period: float
     notices: tuple[str, ...]
 
     def half_step(self) -> "Plan":
@@ -58,26 +64,35 @@ class Plan:
             step=self.request.step / 2.0,
             tolerances=self.request.tolerances.tighter(),
         )
-        return replace(self, request=request, steps_per_period=2.0 * self.steps_per_period)
+        return replace(self, request=request)
 
 
 @dataclass(frozen=True, slots=True)
 class Capture:
-    """The waveform at the probe and the run that made it.
+    """The waveform at the probe and where it comes from.
 
     Parameters
     ----------
     waveform : Waveform
-        Probe on the simulator's own grid, in V or A.
+        Probe on its own grid, in V or A; of a baseband pair the upconverted wave.
     extra : dict of Waveform
-        Further vectors that the testbench asked to keep.
-    result : TransientResult
-        The run.
+        Further vectors that the testbench asked to keep, and I and Q of a baseband pair.
+    step : float
+        Time step of the simulator in s; the median step of an imported waveform.
+    files : tuple of DeckFile
+        The files that were read.
+    notices : tuple of str
+        What the reader must know.
+    result : TransientResult or None
+        The simulator's run; None for an imported waveform.
     """
 
     waveform: Waveform
     extra: dict[str, Waveform]
-    result: TransientResult
+    step: float
+    files: tuple[DeckFile, ...]
+    notices: tuple[str, ...]
+    result: TransientResult | None
 
 
 def make_plan(bench: Testbench) -> Plan:
@@ -96,9 +111,9 @@ def make_plan(bench: Testbench) -> Plan:
     Raises
     ------
     DeckError, ProbeError, TestbenchError
-        If the deck, the probe or a time is wrong.
+        If the deck, the probe or a time is wrong, or the testbench has no netlist.
     """
-    table = bench.netlist
+    table = netlist_of(bench)
     folder = Path(bench.folder)
     include_paths = tuple(str(folder / Path(path).expanduser()) for path in table.include_paths)
     if bench.circuit:
@@ -118,29 +133,61 @@ def make_plan(bench: Testbench) -> Plan:
             compatibility=table.compatibility,
         )
     deck = with_instances(with_parameters(deck, table.parameters), table.instances)
-    probe = parse_probe(bench.drive.probe)
-    if isinstance(bench.drive.termination, float):
+    drive = bench.drive
+    probes = tuple(parse_probe(text) for text in (drive.probe, drive.i, drive.q) if text)
+    if isinstance(drive.termination, float):
+        deck = _terminated(deck, probes, drive.termination)
+    stop = _stop(table, deck)
+    check_window(bench, stop)
+    step, notices = _step(bench, table, deck)
+    terms = [name for probe in probes for _, name in probe.terms]
+    request = TransientRequest(
+        stop=stop,
+        step=step,
+        initial=table.initial or ("uic" if deck.tran is not None and deck.tran.uic else "op"),
+        saves=tuple(dict.fromkeys([*terms, *table.save])),
+        temperature=table.temperature,
+        seed=table.seed,
+        time_limit=table.time_limit,
+    )
+    carrier = drive.carrier if isinstance(drive.carrier, float) else math.nan
+    return Plan(deck, probes, carrier, drive.probe is None, request, notices)
+
+
+def netlist_of(bench: Testbench) -> NetlistTable:
+    """Give the table [netlist] of a testbench.
+
+    Parameters
+    ----------
+    bench : Testbench
+        The testbench.
+
+    Returns
+    -------
+    NetlistTable
+        The table.
+
+    Raises
+    ------
+    TestbenchError
+        If the testbench imports a waveform.
+    """
+    if bench.netlist is None:
+        raise TestbenchError(
+            f"{bench.source or 'the testbench'} imports a waveform: there is no netlist to simulate"
+        )
+    return bench.netlist
+
+
+def _terminated(deck: Deck, probes: Sequence[Probe], resistance: float) -> Deck:
+    for probe in probes:
         if not probe.nodes:
             raise TestbenchError(
                 f"the probe '{probe.text}' is a current, so no termination can be added to it",
                 hint='say termination = "in deck", and the impedance as "impedance"',
             )
-        deck = with_terminations(deck, probe.nodes, bench.drive.termination)
-    stop = _stop(bench, deck)
-    _check_window(bench, stop)
-    step, steps_per_period, notices = _step(bench, deck)
-    saves = tuple(dict.fromkeys([*(name for _, name in probe.terms), *table.save]))
-    initial = table.initial or ("uic" if deck.tran is not None and deck.tran.uic else "op")
-    request = TransientRequest(
-        stop=stop,
-        step=step,
-        initial=initial,
-        saves=saves,
-        temperature=table.temperature,
-        seed=table.seed,
-        time_limit=table.time_limit,
-    )
-    return Plan(deck, probe, request, steps_per_period, notices)
+    nodes = dict.fromkeys(node for probe in probes for node in probe.nodes)
+    return with_terminations(deck, tuple(nodes), resistance)
 
 
 def _short(path: Path) -> Path:
@@ -149,9 +196,9 @@ def _short(path: Path) -> Path:
     return short if os.path.realpath(short) == os.path.realpath(path) else path
 
 
-def _stop(bench: Testbench, deck: Deck) -> float:
-    if bench.netlist.stop is not None:
-        return bench.netlist.stop
+def _stop(table: NetlistTable, deck: Deck) -> float:
+    if table.stop is not None:
+        return table.stop
     if deck.tran is not None:
         return deck.tran.stop
     raise TestbenchError(
@@ -160,36 +207,51 @@ def _stop(bench: Testbench, deck: Deck) -> float:
     )
 
 
-def _check_window(bench: Testbench, stop: float) -> None:
+def check_window(bench: Testbench, stop: float, start: float = 0.0) -> None:
+    """Refuse a gate's window that does not lie within the run.
+
+    Parameters
+    ----------
+    bench : Testbench
+        The testbench.
+    stop, start : float
+        End and start of the run in s.
+
+    Raises
+    ------
+    TestbenchError
+        Naming both.
+    """
     window = bench.gate.window
-    if window is not None and (window[0] < 0.0 or window[1] > stop * (1.0 + 1e-9)):
+    slack = 1e-9 * (stop - start)
+    if window is not None and (window[0] < start - slack or window[1] > stop + slack):
         raise TestbenchError(
             f"table [gate], key 'window': {window[0] * 1e9:g} ns to {window[1] * 1e9:g} ns does "
-            f"not lie within the run of 0 ns to {stop * 1e9:g} ns"
+            f"not lie within the run of {start * 1e9:g} ns to {stop * 1e9:g} ns"
         )
 
 
-def _step(bench: Testbench, deck: Deck) -> tuple[float, float, tuple[str, ...]]:
-    table = bench.netlist
+def _step(bench: Testbench, table: NetlistTable, deck: Deck) -> tuple[float, tuple[str, ...]]:
     largest = table.max_step
     if largest is None and table.steps_per_period is None and deck.tran is not None:
         largest = deck.tran.max_step
-    if isinstance(bench.drive.carrier, str):
+    carrier = bench.drive.carrier
+    if isinstance(carrier, str) or bench.drive.probe is None:
+        why = "with a baseband pair" if bench.drive.probe is None else 'with carrier = "estimate"'
         if largest is None:
             raise TestbenchError(
-                'with carrier = "estimate" the time step cannot follow from the carrier',
+                f"{why} the time step cannot follow from the carrier",
                 hint='add to [netlist], for instance: max_step = "2 ps"',
             )
-        return largest, math.nan, ()
-    period = 1.0 / bench.drive.carrier
+        return largest, ()
+    period = 1.0 / carrier
     if table.steps_per_period is not None:
         count = table.steps_per_period
     elif largest is not None:
         count = math.ceil(period / largest * (1.0 - 1e-9))
     else:
         count = DEFAULT_STEPS_PER_PERIOD
-    notices = check_steps(count, period)
-    return period / count, float(count), notices
+    return period / count, check_steps(count, period)
 
 
 def check_steps(count: float, period: float) -> tuple[str, ...]:
@@ -249,11 +311,19 @@ def capture_probe(plan: Plan, *, progress: Callable[[float], None] | None = None
         If the simulator fails; the log is in the error.
     """
     result = simulate(plan.deck, plan.request, progress=progress)
-    values = evaluate_probe(plan.probe, result.vectors)
-    read = {name for _, name in plan.probe.terms}
+    read = {name for probe in plan.probes for _, name in probe.terms}
     extra = {
         name: Waveform(result.time, values, unit="V" if name.startswith("v(") else "A")
         for name, values in result.vectors.items()
         if name not in read
     }
-    return Capture(Waveform(result.time, values, unit=plan.probe.unit), extra, result)
+    waves = [
+        Waveform(result.time, evaluate_probe(probe, result.vectors), unit=probe.unit)
+        for probe in plan.probes
+    ]
+    wave = waves[0]
+    if plan.baseband:
+        extra |= dict(zip(("i", "q"), waves, strict=False))
+        wave = upconvert(wave, waves[1] if len(waves) > 1 else None, plan.carrier_frequency)
+    notices = (*plan.deck.notices, *plan.notices, *result.warnings)
+    return Capture(wave, extra, plan.request.step, plan.deck.files, notices, result)

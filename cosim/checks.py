@@ -72,7 +72,10 @@ def check_testbench(path: str | os.PathLike[str]) -> tuple[Finding, ...]:
             "deck_files",
             [file.path for file in plan.deck.files],
         ),
-        Finding("probe", f"{plan.probe.text} in {plan.probe.unit}", "probe", plan.probe.text),
+        *(
+            Finding("probe", f"{probe.text} in {probe.unit}", "probe", probe.text)
+            for probe in plan.probes
+        ),
         Finding("target", target.name, "target", target.name),
         Finding(
             "transient",

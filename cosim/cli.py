@@ -56,7 +56,7 @@ def _common(
 def check(testbench: TestbenchPath, json_output: JsonFlag = False) -> None:
     """Validate a testbench, its deck and the environment; nothing long is run."""
     from cosim.checks import check_testbench
-    from cosim.tables import check_table
+    from cosim.terminal import check_table
 
     findings = check_testbench(testbench)
     if json_output:
@@ -88,7 +88,7 @@ def run(
     from cosim.dispatch import run as run_testbench
     from cosim.dispatch import save
     from cosim.result import as_numbers
-    from cosim.tables import result_table
+    from cosim.terminal import result_table
     from cosim.testbench import load_testbench
 
     _check_output(archive, ".h5")
@@ -125,7 +125,7 @@ def show(
     from cosim.archive import read_table
     from cosim.dispatch import load
     from cosim.result import as_columns, as_numbers
-    from cosim.tables import record_table, result_table, runs_table
+    from cosim.terminal import record_table, result_table, runs_table
 
     console = Console(highlight=False)
     if run is None and not log:
@@ -164,7 +164,7 @@ def _progress(bench: "Testbench") -> Iterator[Callable[[float], None] | None]:
         return
     columns = (TextColumn("{task.description}"), BarColumn(), TimeElapsedColumn())
     with Progress(*columns, console=console, transient=True) as bar:
-        stop = bench.netlist.stop
+        stop = bench.netlist.stop if bench.netlist is not None else None
         task = bar.add_task("simulating", total=stop)
 
         def report(time: float) -> None:

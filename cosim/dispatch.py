@@ -6,6 +6,7 @@ from collections.abc import Callable
 from cosim import archive
 from cosim.errors import ArchiveError
 from cosim.gate import run_gate
+from cosim.quantum.operators import OperatorSystem
 from cosim.result import KINDS, GateResult
 from cosim.testbench import Testbench, load_testbench
 
@@ -13,6 +14,7 @@ from cosim.testbench import Testbench, load_testbench
 def run(
     bench: Testbench | str | os.PathLike[str],
     *,
+    system: OperatorSystem | None = None,
     progress: Callable[[float], None] | None = None,
 ) -> GateResult:
     """Run a testbench: netlist, waveform, qubit, fidelity.
@@ -21,6 +23,8 @@ def run(
     ----------
     bench : Testbench or path
         A testbench, or the TOML file of one.
+    system : OperatorSystem or None
+        A user's own system from `cosim.operator_system`, for kind = "operators" in [qubit].
     progress : callable or None
         Called with the simulated time in s now and then.
 
@@ -38,7 +42,7 @@ def run(
     """
     if not isinstance(bench, Testbench):
         bench = load_testbench(bench)
-    return run_gate(bench, progress=progress)
+    return run_gate(bench, system=system, progress=progress)
 
 
 def save(result: GateResult, path: str | os.PathLike[str]) -> int:

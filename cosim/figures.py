@@ -9,7 +9,7 @@ from matplotlib.figure import Figure
 
 from cosim.errors import InputError
 from cosim.result import GateResult
-from cosim.tables import CAUTION
+from cosim.terminal import CAUTION
 
 _LABELS = ("I", "X", "Y", "Z")
 

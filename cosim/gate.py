@@ -1,29 +1,19 @@
 """The drive path: testbench, netlist, waveform, Hamiltonian, channel, fidelity."""
 
 import math
-import platform
-import time
 from collections.abc import Callable
-from dataclasses import dataclass, replace
-from datetime import datetime
-from importlib.metadata import version
-
-import numpy as np
-from scipy.interpolate import CubicSpline
+from dataclasses import dataclass
 
 from cosim.adjust import Calibration, Pulse, calibrate_pulse
-from cosim.capture import Capture, Plan, capture_probe, check_steps, make_plan
-from cosim.coupling import DriveLine, drive_rate, rotating_rate
-from cosim.dsp.carrier import estimate_carrier
+from cosim.capture import Capture, Plan, capture_probe, make_plan
 from cosim.dsp.demodulation import demodulate
 from cosim.dsp.pulse import measure_pulse
-from cosim.dsp.resampling import interpolant
 from cosim.fidelities import Views
+from cosim.guards import edge_warnings, floor_warnings, level_warnings, step_warnings
+from cosim.imported import import_waveform
 from cosim.quantum.channel import check_channel, nearest_unitary, pauli_transfer_matrix
-from cosim.quantum.evolution import DriveSpline
 from cosim.quantum.fidelity import (
     Rotation,
-    average_gate_fidelity,
     channel_distance,
     leakage,
     rotation_of,
@@ -32,21 +22,16 @@ from cosim.quantum.fidelity import (
     unitarity,
 )
 from cosim.quantum.frame import FreeFrame, free_frame
-from cosim.quantum.qubit import Qubit
-from cosim.quantum.reference import evolve_rotating_wave
+from cosim.quantum.operators import OperatorSystem
+from cosim.quantum.reference import evolve_operators, evolve_reference
 from cosim.quantum.targets import target_rotation
-from cosim.result import Channel, Fidelity, GateResult, RunRecord
+from cosim.qubit_drive import QubitDrive, couple
+from cosim.record import Clock, make_record
+from cosim.result import Channel, GateResult
 from cosim.testbench import Testbench
-from cosim.waveform import ComplexArray, Envelope, Waveform
+from cosim.waveform import ComplexArray
 
-# A change of the average gate fidelity by one more level that is worth a warning.
-LEVELS_TOLERANCE = 1e-6
-
-# Carrier left at an edge of the window, over the plateau, that is worth a warning: a pulse cut
-# there by the window loses an angle of the same order.
-EDGE_TOLERANCE = 1e-3
-
-PACKAGES = ("qcosim", "numpy", "scipy", "qutip", "PySpice", "numba", "h5py")
+Progress = Callable[[float], None]
 
 
 @dataclass(frozen=True, slots=True)
@@ -97,23 +82,20 @@ def gate_target(bench: Testbench) -> Target:
     return Target(name, rotation.angle, target_unitary(rotation.axis, rotation.angle))
 
 
-@dataclass(frozen=True, slots=True)
-class _Frame:
-    """What the first run fixes for both: carrier, qubit, line, window."""
-
-    carrier_frequency: float
-    qubit: Qubit
-    line: DriveLine
-    window: tuple[float, float]
-
-
-def run_gate(bench: Testbench, *, progress: Callable[[float], None] | None = None) -> GateResult:
-    """Run a testbench with a gate from the netlist to its fidelity.
+def run_gate(
+    bench: Testbench,
+    *,
+    system: OperatorSystem | None = None,
+    progress: Progress | None = None,
+) -> GateResult:
+    """Run a testbench with a gate from the netlist, or from a waveform, to its fidelity.
 
     Parameters
     ----------
     bench : Testbench
         The testbench.
+    system : OperatorSystem or None
+        A user's own system, for a testbench with kind = "operators" in [qubit].
     progress : callable or None
         Called with the simulated time in s now and then, during both runs of the simulator.
 
@@ -129,40 +111,37 @@ def run_gate(bench: Testbench, *, progress: Callable[[float], None] | None = Non
     SimulationError
         If ngspice or the evolution fails.
     """
-    clock = _Clock()
+    clock = Clock()
     target = gate_target(bench)
-    plan = make_plan(bench)
-    clock.lap("deck")
-    shot = capture_probe(plan, progress=progress)
-    clock.lap_simulation(shot)
-    frame, notices = _fix_frame(bench, plan, shot.waveform)
-    pulse = _pulse(frame, shot.waveform)
+    plan, shot = _capture(bench, progress, clock)
+    drive = couple(bench, shot, system)
+    pulse = drive.pulse(shot.waveform)
     clock.lap("interpolation")
     channel = pulse.channel()
     check_channel(channel)
     clock.lap("evolution")
-    envelope = demodulate(shot.waveform, frame.carrier_frequency)
-    measures = measure_pulse(shot.waveform, frame.carrier_frequency, envelope=envelope)
+    envelope = demodulate(shot.waveform, drive.carrier_frequency)
+    measures = measure_pulse(shot.waveform, drive.carrier_frequency, envelope=envelope)
     clock.lap("demodulation")
-    twin = _rotating_wave_twin(frame, envelope)
+    twin = drive.rotating_wave_twin(envelope)
     clock.lap("rotating_wave_twin")
     free = free_frame(channel, target.unitary)
     rotation = rotation_of(nearest_unitary(channel))
     calibration = _calibrate(bench, pulse, free, channel, rotation.angle, target)
     clock.lap("calibration")
-    second = _second_pulse(bench, plan, frame, progress, clock)
+    second, carrier = _second_run(bench, plan, drive, shot, progress, clock)
     views = Views(channel, free, calibration, target.unitary)
     as_simulated, in_free_frame, calibrated = views.fidelities(second)
     floor = views.floor(second)
     clock.lap("fidelities")
+    reference = _reference_error(bench, pulse, channel)
+    clock.lap("reference")
     warnings = (
-        *plan.deck.notices,
-        *plan.notices,
-        *shot.result.warnings,
-        *notices,
-        *_edge_warnings(frame, envelope, measures.amplitude),
-        *_level_warnings(pulse, target),
-        *_floor_warnings(calibrated, floor),
+        *shot.notices,
+        *(step_warnings(shot.step, drive.carrier_frequency) if plan and not plan.baseband else ()),
+        *edge_warnings(drive.window, envelope, measures.amplitude),
+        *level_warnings(pulse, target.unitary),
+        *floor_warnings(calibrated, floor),
     )
     clock.lap("checks")
     return GateResult(
@@ -174,85 +153,37 @@ def run_gate(bench: Testbench, *, progress: Callable[[float], None] | None = Non
         leakage=max(0.0, leakage(channel)),
         seepage=max(0.0, seepage(channel)),
         numerical_floor=floor,
-        rotating_wave_error=channel_distance(channel, twin),
+        rotating_wave_error=math.nan if twin is None else channel_distance(channel, twin),
+        reference_error=reference,
         phase_slip=_phase_slip(free, target),
         rotation=rotation,
         unitarity=unitarity(channel),
-        carrier_frequency=frame.carrier_frequency,
-        qubit_frequency=frame.qubit.frequency,
-        window=frame.window,
+        carrier_frequency=carrier,
+        qubit_frequency=drive.qubit.frequency
+        + (carrier - drive.carrier_frequency if drive.follows else 0.0),
+        window=drive.window,
         pulse=measures,
         waveform=shot.waveform,
         envelope=envelope,
         channel=Channel(channel, pauli_transfer_matrix(channel)),
         extra=shot.extra,
         warnings=tuple(dict.fromkeys(warnings)),
-        run=_record(bench, plan, frame, shot, clock),
+        run=make_record(bench, shot, drive.carrier_frequency, clock),
     )
 
 
-class _Clock:
-    """Wall-clock times of the stages of a run, in s."""
-
-    def __init__(self) -> None:
-        self.started = datetime.now().astimezone().isoformat(timespec="seconds")
-        self.laps: dict[str, float] = {}
-        self._last = time.perf_counter()
-
-    def lap(self, name: str) -> None:
-        """End a stage; time since the last one is its own."""
-        now = time.perf_counter()
-        self.laps[name] = self.laps.get(name, 0.0) + now - self._last
-        self._last = now
-
-    def lap_simulation(self, shot: Capture, prefix: str = "") -> None:
-        """End a simulation; ngspice's own time is told from everything else around it."""
-        self.lap(prefix + "simulator_overhead")
-        self.laps[prefix + "ngspice"] = shot.result.wall_time
-        self.laps[prefix + "simulator_overhead"] -= shot.result.wall_time
-
-
-def _fix_frame(bench: Testbench, plan: Plan, waveform: Waveform) -> tuple[_Frame, tuple[str, ...]]:
-    notices: tuple[str, ...] = ()
-    carrier = bench.drive.carrier
-    if isinstance(carrier, str):
-        carrier = estimate_carrier(waveform).frequency
-        period = 1.0 / carrier
-        notices = check_steps(period / plan.request.step, period)
-    table = bench.qubit
-    nominal = table.frequency if isinstance(table.frequency, float) else carrier
-    levels = table.levels or (2 if table.kind == "spin" else 4)
-    qubit = Qubit(
-        frequency=nominal + table.detuning,
-        levels=levels,
-        anharmonicity=table.anharmonicity or 0.0,
-        t1=table.t1,
-        t2=table.t2,
-        thermal_population=table.thermal_population,
-    )
-    line = DriveLine(
-        rabi_per_volt=table.rabi_per_volt,
-        attenuation=bench.drive.attenuation,
-        impedance=bench.drive.reference_impedance,
-    )
-    last = float(waveform.t[-1])
-    window = bench.gate.window or (float(waveform.t[0]), last)
-    return _Frame(carrier, qubit, line, (window[0], min(window[1], last))), notices
-
-
-def _pulse(frame: _Frame, waveform: Waveform) -> Pulse:
-    spline = interpolant(drive_rate(waveform, frame.line))
-    return Pulse(frame.qubit, DriveSpline(spline.x, spline.c), *frame.window)
-
-
-def _rotating_wave_twin(frame: _Frame, envelope: Envelope) -> ComplexArray:
-    """Evolve the demodulated envelope with the independent solver."""
-    start, stop = frame.window
-    times = np.linspace(start, stop, max(2, round((stop - start) / envelope.dt) + 1))
-    iq = CubicSpline(envelope.t, envelope.iq)(times)
-    offset = frame.carrier_frequency - frame.qubit.frequency
-    rate = rotating_rate(iq, times, frame.line, envelope.unit, offset)
-    return evolve_rotating_wave(frame.qubit, rate, times)
+def _capture(
+    bench: Testbench, progress: Progress | None, clock: Clock
+) -> tuple[Plan | None, Capture]:
+    if bench.netlist is None:
+        shot = import_waveform(bench)
+        clock.lap_capture(shot)
+        return None, shot
+    plan = make_plan(bench)
+    clock.lap("deck")
+    shot = capture_probe(plan, progress=progress)
+    clock.lap_capture(shot)
+    return plan, shot
 
 
 def _calibrate(
@@ -270,19 +201,32 @@ def _calibrate(
     return calibrate_pulse(pulse, target.unitary, guess=guess, with_detuning=with_detuning)
 
 
-def _second_pulse(
+def _second_run(
     bench: Testbench,
-    plan: Plan,
-    frame: _Frame,
-    progress: Callable[[float], None] | None,
-    clock: _Clock,
-) -> Pulse | None:
-    """Simulate once more at half the step, in the frame that the first run fixed."""
-    if not bench.accuracy.floor:
-        return None
+    plan: Plan | None,
+    drive: QubitDrive,
+    first: Capture,
+    progress: Progress | None,
+    clock: Clock,
+) -> tuple[Pulse | None, float]:
+    """Simulate once more at half the step; give the pulse and the carrier in Hz."""
+    if plan is None or not bench.accuracy.floor:
+        return None, drive.carrier_frequency
     shot = capture_probe(plan.half_step(), progress=progress)
-    clock.lap_simulation(shot, "floor_")
-    return _pulse(frame, shot.waveform)
+    clock.lap_capture(shot, "floor_")
+    return drive.second_pulse(first.waveform, shot.waveform)
+
+
+def _reference_error(bench: Testbench, pulse: Pulse, channel: ComplexArray) -> float:
+    if not bench.accuracy.reference:
+        return math.nan
+    window = (pulse.start, pulse.stop)
+    if isinstance(pulse.qubit, OperatorSystem):
+        # This system is solved by QuTiP in the first place: a hundredth of the tolerance then.
+        again = evolve_operators(pulse.qubit, pulse.drive, *window, rtol=1e-12)
+    else:
+        again = evolve_reference(pulse.qubit, pulse.drive, *window)
+    return channel_distance(channel, again)
 
 
 def _phase_slip(free: FreeFrame, target: Target) -> float:
@@ -291,64 +235,3 @@ def _phase_slip(free: FreeFrame, target: Target) -> float:
     half_turn = abs(target.unitary[0, 0]) < 1e-9
     slip = free.after - free.before if half_turn else free.after + free.before
     return math.remainder(slip, 2.0 * math.pi)
-
-
-def _edge_warnings(frame: _Frame, envelope: Envelope, amplitude: float) -> tuple[str, ...]:
-    size = np.abs(envelope.iq)
-    found = []
-    for name, edge in zip(("start", "end"), frame.window, strict=True):
-        level = float(np.interp(edge, envelope.t, size)) / amplitude
-        if level > EDGE_TOLERANCE:
-            found.append(
-                f"the carrier is at {20 * math.log10(level):.0f} dB of the pulse at the {name} "
-                f"of the window ({edge * 1e9:g} ns): the window cuts the pulse"
-            )
-    return tuple(found)
-
-
-def _level_warnings(pulse: Pulse, target: Target) -> tuple[str, ...]:
-    qubit = pulse.qubit
-    if qubit.levels == 2:
-        return ()
-    # What more levels change is coherent, so the quick lossless path tells it.
-    pulse = pulse.lossless()
-    more = replace(pulse, qubit=replace(pulse.qubit, levels=qubit.levels + 1))
-    change = abs(
-        average_gate_fidelity(more.channel(), target.unitary)
-        - average_gate_fidelity(pulse.channel(), target.unitary)
-    )
-    if change <= LEVELS_TOLERANCE:
-        return ()
-    return (
-        f"{qubit.levels} levels are too few: with {qubit.levels + 1} the average gate fidelity "
-        f"changes by {change:.1e}; raise 'levels' in [qubit]",
-    )
-
-
-def _floor_warnings(calibrated: Fidelity, floor: float) -> tuple[str, ...]:
-    if floor > calibrated.infidelity:
-        return (
-            f"the calibrated infidelity {calibrated.infidelity:.1e} is below the numerical "
-            f"floor {floor:.1e}: a smaller step is needed to resolve it",
-        )
-    return ()
-
-
-def _record(bench: Testbench, plan: Plan, frame: _Frame, shot: Capture, clock: _Clock) -> RunRecord:
-    versions = {name: version(name) for name in PACKAGES}
-    versions["python"] = platform.python_version()
-    versions["ngspice"] = shot.result.simulator_version.removeprefix("ngspice-")
-    return RunRecord(
-        started=clock.started,
-        host=f"{platform.node()} ({platform.platform()})",
-        versions=versions,
-        seed=plan.request.seed,
-        wall_times=clock.laps,
-        testbench=bench.to_toml(),
-        deck_files=plan.deck.files,
-        deck_sent="\n".join(shot.result.deck) + "\n",
-        log=shot.result.log,
-        points=shot.waveform.t.size,
-        step=plan.request.step,
-        steps_per_period=1.0 / (plan.request.step * frame.carrier_frequency),
-    )

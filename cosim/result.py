@@ -1,5 +1,6 @@
 """The declared results of a run, as they are shown, archived and read back."""
 
+import math
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from typing import Any
@@ -104,6 +105,10 @@ class RunRecord:
         Every file of the deck as its author wrote it.
     deck_sent : str
         The deck exactly as it was sent to the simulator.
+    deck_data : dict of str
+        Name to content of the data files that the deck reads, where it says "{scratch}/".
+    deck_commands : tuple of str
+        Commands given to ngspice before the deck was loaded.
     log : tuple of str
         The simulator's log.
     points : int
@@ -122,6 +127,8 @@ class RunRecord:
     testbench: str
     deck_files: tuple[DeckFile, ...]
     deck_sent: str
+    deck_data: dict[str, str]
+    deck_commands: tuple[str, ...]
     log: tuple[str, ...]
     points: int = field(metadata=_unit("1"))
     step: float = field(metadata=_unit("s"))
@@ -151,6 +158,9 @@ class GateResult:
     rotating_wave_error : float
         1 - F_avg between the headline channel and that of the rotating-wave path, which is
         solved by an independent solver on the demodulated envelope.
+    reference_error : float
+        1 - F_avg between the channel and that of QuTiP on the full waveform; NaN unless the
+        testbench asks for it.
     phase_slip : float
         Z rotation in rad that a phase reference must absorb per gate, in [-pi, pi]: the sum of
         the two angles of `free_frame`; for a half turn about an axis in the xy-plane, where only
@@ -190,6 +200,7 @@ class GateResult:
     seepage: float = field(metadata=_unit("1"))
     numerical_floor: float = field(metadata=_unit("1"))
     rotating_wave_error: float = field(metadata=_unit("1"))
+    reference_error: float = field(metadata=_unit("1"))
     phase_slip: float = field(metadata=_unit("rad"))
     rotation: Rotation
     unitarity: float = field(metadata=_unit("1"))
@@ -249,7 +260,8 @@ def as_numbers(result: object) -> dict[str, Any]:
     Returns
     -------
     dict
-        The fields of `GATE_FIELDS`; a number that does not exist is None.
+        The fields of `GATE_FIELDS`, and `reference_error` if the testbench asked for it; a
+        number that does not exist is None.
 
     Raises
     ------
@@ -258,7 +270,8 @@ def as_numbers(result: object) -> dict[str, Any]:
     """
     if not isinstance(result, GateResult):
         raise InputError(f"wanted a gate result, got {type(result).__name__}")
-    return {name: _plain(getattr(result, name)) for name in GATE_FIELDS}
+    asked = () if math.isnan(result.reference_error) else ("reference_error",)
+    return {name: _plain(getattr(result, name)) for name in (*GATE_FIELDS, *asked)}
 
 
 def as_columns(table: Mapping[str, Any]) -> dict[str, list[Any]]:

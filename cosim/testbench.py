@@ -1,233 +1,23 @@
-"""The testbench: the tables of a TOML file as frozen dataclasses in SI units."""
+"""The testbench: a TOML file, or the same tables from Python, checked and in SI units."""
 
 import os
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from pathlib import Path
-from typing import Annotated, Any, Literal
+from typing import Any
 
-from cosim.config import (
-    NameOrTable,
-    Parameter,
-    Quantity,
-    check_keys,
-    read_table,
-    read_toml,
-    write_tables,
+from cosim.config import check_keys, read_table, read_toml, write_tables
+from cosim.errors import TestbenchError
+from cosim.schema import (
+    SOURCES,
+    TABLES,
+    AccuracyTable,
+    DriveTable,
+    GateTable,
+    NetlistTable,
+    QubitTable,
+    WaveformTable,
 )
-from cosim.errors import InputError, TestbenchError
-
-Time = Annotated[float, Quantity("s")]
-PositiveTime = Annotated[float, Quantity("s", above=0.0)]
-Frequency = Annotated[float, Quantity("Hz")]
-PositiveFrequency = Annotated[float, Quantity("Hz", above=0.0)]
-Resistance = Annotated[float, Quantity("ohm", above=0.0)]
-Temperature = Annotated[float, Quantity("K", above=0.0)]
-ParameterValue = Annotated[float, Parameter()]
-
-
-@dataclass(frozen=True, slots=True)
-class NetlistTable:
-    """Table [netlist]: the deck and how it is simulated.
-
-    Parameters
-    ----------
-    file : str
-        Path of the deck, relative to the testbench. In Python a PySpice `Circuit` may stand here.
-    stop : float or None
-        End of the transient in s; default: that of the deck's .tran.
-    max_step : float or None
-        Largest time step in s, rounded down to carrier period / N; default: that of the deck's
-        .tran, or what `steps_per_period` says.
-    steps_per_period : int or None
-        N itself, in place of `max_step`; 80 when neither the testbench nor the deck says more.
-    temperature : float or None
-        Device temperature of the simulator in K; default: that of the deck, else 300.15 K.
-    parameters : mapping
-        Values for the deck's .param, in SI units.
-    sections : mapping
-        Library file name to the .lib section used in place of the deck's.
-    instances : mapping
-        Instance path to parameters of that one instance, in SI units.
-    initial : "op", "uic" or None
-        Start from the operating point or from the initial conditions; default: as the deck.
-    include_paths : tuple of str
-        Folders that the deck may include from, besides its own, relative to the testbench.
-    compatibility : str or None
-        The simulator's compatibility mode (its ngbehavior), such as "ps" or "hs".
-    save : tuple of str
-        Further vectors to keep in the archive, such as "v(x1.out)".
-    seed : int
-        Seed of the deck's random functions (agauss and the like), from 1 to 2**31 - 1.
-    time_limit : float
-        Wall-clock limit of one simulation in s.
-    """
-
-    file: str
-    stop: PositiveTime | None = None
-    max_step: PositiveTime | None = None
-    steps_per_period: int | None = None
-    temperature: Temperature | None = None
-    parameters: dict[str, ParameterValue] = field(default_factory=dict)
-    sections: dict[str, str] = field(default_factory=dict)
-    instances: dict[str, dict[str, ParameterValue]] = field(default_factory=dict)
-    initial: Literal["op", "uic"] | None = None
-    include_paths: tuple[str, ...] = ()
-    compatibility: str | None = None
-    save: tuple[str, ...] = ()
-    seed: int = 1
-    time_limit: PositiveTime = 600.0
-
-    def __post_init__(self) -> None:
-        if self.max_step is not None and self.steps_per_period is not None:
-            raise InputError("give 'max_step' or 'steps_per_period', not both")
-        if self.steps_per_period is not None and self.steps_per_period < 20:
-            raise InputError(
-                f"key 'steps_per_period': wanted at least 20, got {self.steps_per_period}"
-            )
-
-
-@dataclass(frozen=True, slots=True)
-class DriveTable:
-    """Table [drive]: where the drive leaves the circuit, and the line to the qubit.
-
-    Parameters
-    ----------
-    probe : str
-        Linear combination of node voltages, or of currents: "v(rf_p) - v(rf_n)", "i(l1)".
-    termination : float or "in deck"
-        Resistance in ohm that the bridge adds from each probed node to ground, or "in deck".
-    carrier : float or "estimate"
-        Carrier frequency in Hz, or taken from the waveform itself.
-    attenuation : float
-        Between probe and qubit, in dB.
-    impedance : float or None
-        Reference impedance in ohm that turns a probe current into an incident voltage;
-        default: the termination, or 50 ohm when that is in the deck.
-    """
-
-    probe: str
-    termination: Annotated[float | str, Quantity("ohm", above=0.0, words=("in deck",))]
-    carrier: Annotated[float | str, Quantity("Hz", above=0.0, words=("estimate",))]
-    attenuation: Annotated[float, Quantity("dB")] = 0.0
-    impedance: Resistance | None = None
-
-    @property
-    def reference_impedance(self) -> float:
-        """The reference impedance in ohm."""
-        if self.impedance is not None:
-            return self.impedance
-        return self.termination if isinstance(self.termination, float) else 50.0
-
-
-@dataclass(frozen=True, slots=True)
-class QubitTable:
-    """Table [qubit]: the qubit at the end of the line.
-
-    Parameters
-    ----------
-    kind : "spin" or "transmon"
-        Two levels, or a weakly anharmonic ladder.
-    frequency : float or "carrier"
-        Qubit frequency in Hz, or the carrier's.
-    rabi_per_volt : float
-        Rabi frequency in Hz per volt of carrier peak amplitude, on resonance.
-    detuning : float
-        Added to `frequency`, in Hz.
-    levels : int or None
-        Levels kept for a transmon, 3 to 6; default 4.
-    anharmonicity : float or None
-        In Hz, negative; needed for a transmon.
-    t1, t2 : float
-        Relaxation and (Markovian) coherence time in s; default infinite.
-    thermal_population : float
-        Population of |1> in equilibrium, 0 to 0.5.
-    """
-
-    kind: Literal["spin", "transmon"]
-    frequency: Annotated[float | str, Quantity("Hz", above=0.0, words=("carrier",))]
-    rabi_per_volt: Annotated[float, Quantity("Hz/V", above=0.0)]
-    detuning: Frequency = 0.0
-    levels: int | None = None
-    anharmonicity: Frequency | None = None
-    t1: PositiveTime = float("inf")
-    t2: PositiveTime = float("inf")
-    thermal_population: float = 0.0
-
-    def __post_init__(self) -> None:
-        if self.kind == "spin":
-            if self.levels not in (None, 2) or self.anharmonicity is not None:
-                raise InputError(
-                    "a spin has two levels and no anharmonicity; for more levels "
-                    'say kind = "transmon"'
-                )
-        else:
-            if self.anharmonicity is None:
-                raise InputError("a transmon needs the key 'anharmonicity', such as \"-300 MHz\"")
-            if self.levels is not None and not 3 <= self.levels <= 6:
-                raise InputError(f"key 'levels': wanted 3 to 6, got {self.levels}")
-        if self.t2 > 2.0 * self.t1:
-            raise InputError(f"key 't2': at most twice t1 = {self.t1:g} s, got {self.t2:g} s")
-        if not 0.0 <= self.thermal_population <= 0.5:
-            raise InputError(
-                f"key 'thermal_population': wanted 0 to 0.5, got {self.thermal_population}"
-            )
-
-
-@dataclass(frozen=True, slots=True)
-class TargetTable:
-    """A target rotation as { axis, angle }.
-
-    Parameters
-    ----------
-    axis : tuple of three floats
-        Direction; its length does not matter.
-    angle : float
-        Angle in rad.
-    """
-
-    axis: tuple[float, float, float]
-    angle: Annotated[float, Quantity("rad")]
-
-
-@dataclass(frozen=True, slots=True)
-class GateTable:
-    """Table [gate]: what the pulse is meant to do.
-
-    Parameters
-    ----------
-    target : str or TargetTable
-        Name of a rotation ("x90", "-y90", "identity"), or { axis = [x, y, z], angle = "90 deg" }.
-    window : tuple of two floats or None
-        Start and end of the gate in s; default: the whole run.
-    calibrate : tuple of str
-        What the calibrated fidelity may adjust beside the frame: "amplitude", "detuning".
-    """
-
-    target: Annotated[str | TargetTable, NameOrTable(TargetTable)]
-    window: tuple[Time, Time] | None = None
-    calibrate: tuple[Literal["amplitude", "detuning"], ...] = ("amplitude",)
-
-    def __post_init__(self) -> None:
-        if self.window is not None and self.window[0] >= self.window[1]:
-            raise InputError(
-                f"key 'window': the end must come after the start, got {self.window[0]:g} s "
-                f"to {self.window[1]:g} s"
-            )
-
-
-@dataclass(frozen=True, slots=True)
-class AccuracyTable:
-    """Table [accuracy]: what is spent on error bars.
-
-    Parameters
-    ----------
-    floor : bool
-        Run the deck a second time at half the step and tighter tolerances, for the numerical
-        floor and the error bars. The two runs cost four to five times one.
-    """
-
-    floor: bool = True
 
 
 @dataclass(frozen=True, slots=True)
@@ -238,8 +28,10 @@ class Testbench:
     ----------
     title : str
         A line for people.
-    netlist, drive, qubit, gate, accuracy
-        The tables, in SI units.
+    netlist, waveform
+        Where the waveform comes from; one of the two is None.
+    drive, qubit, gate, accuracy
+        The other tables, in SI units.
     folder : str
         Folder that the paths in the tables are relative to.
     source : str
@@ -251,7 +43,8 @@ class Testbench:
     __test__ = False  # The name starts with "Test"; pytest must not collect it.
 
     title: str
-    netlist: NetlistTable
+    netlist: NetlistTable | None
+    waveform: WaveformTable | None
     drive: DriveTable
     qubit: QubitTable
     gate: GateTable
@@ -263,16 +56,8 @@ class Testbench:
     def to_toml(self) -> str:
         """Write the testbench as a TOML text that gives the same run again."""
         tables = {name: getattr(self, name) for name in TABLES}
-        return write_tables(self.title, tables)
-
-
-TABLES = {
-    "netlist": NetlistTable,
-    "drive": DriveTable,
-    "qubit": QubitTable,
-    "gate": GateTable,
-    "accuracy": AccuracyTable,
-}
+        given = {name: table for name, table in tables.items() if table is not None}
+        return write_tables(self.title, given)
 
 
 def load_testbench(path: str | os.PathLike[str]) -> Testbench:
@@ -327,9 +112,32 @@ def _build(tables: Mapping[str, Any], *, file: str, folder: str) -> Testbench:
     title = tables.get("title", "")
     if not isinstance(title, str):
         raise TestbenchError(f"{label}: 'title' is a text, got {title!r}")
-    for name in ("netlist", "drive", "qubit", "gate"):
+    for name in ("drive", "qubit", "gate"):
         if name not in tables:
             raise TestbenchError(f"{label}: the table [{name}] is missing")
+    sources = [name for name in SOURCES if name in tables]
+    if len(sources) != 1:
+        raise TestbenchError(
+            f"{label}: wanted one of the tables [netlist] and [waveform], got "
+            f"{'both' if sources else 'none'}"
+        )
+    given, circuit = _with_circuit(tables, label)
+    parts: dict[str, Any] = {name: None for name in SOURCES}
+    for name, cls in TABLES.items():
+        if name in sources or name not in SOURCES:
+            parts[name] = read_table(given.get(name, {}), cls, file=label, name=name)
+    if parts["netlist"] is not None and parts["drive"].termination is None:
+        raise TestbenchError(
+            f"{label}, table [drive]: the key 'termination' is missing",
+            hint='say termination = "50 ohm", or "in deck" where the deck has the load',
+        )
+    return Testbench(title=title, **parts, folder=folder, source=file, circuit=circuit)
+
+
+def _with_circuit(tables: Mapping[str, Any], label: str) -> tuple[Mapping[str, Any], str]:
+    """Take a PySpice circuit, or a path object, out of tables made in Python."""
+    if "netlist" not in tables:
+        return tables, ""
     if not isinstance(tables["netlist"], Mapping):
         raise TestbenchError(f"{label}: wanted a table [netlist], got {tables['netlist']!r}")
     netlist = dict(tables["netlist"])
@@ -341,9 +149,4 @@ def _build(tables: Mapping[str, Any], *, file: str, folder: str) -> Testbench:
         # A PySpice circuit writes itself as a deck; the package itself is not needed for that.
         circuit = str(deck)
         netlist["file"] = "circuit"
-    given = {**tables, "netlist": netlist}
-    parts: dict[str, Any] = {
-        name: read_table(given.get(name, {}), cls, file=label, name=name)
-        for name, cls in TABLES.items()
-    }
-    return Testbench(title=title, **parts, folder=folder, source=file, circuit=circuit)
+    return {**tables, "netlist": netlist}, circuit

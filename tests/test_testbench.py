@@ -9,7 +9,8 @@ from typing import Any
 import pytest
 
 from cosim.errors import TestbenchError
-from cosim.testbench import TargetTable, load_testbench, make_testbench
+from cosim.schema import TargetTable
+from cosim.testbench import load_testbench, make_testbench
 
 GOOD: dict[str, Any] = {
     "title": "a gate",

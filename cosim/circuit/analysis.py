@@ -148,6 +148,10 @@ class TransientResult:
         Everything else in s: starting the process, sending the deck and the vectors.
     simulator_version : str
         For example "ngspice-39".
+    commands : tuple of str
+        Commands given before the deck was loaded.
+    data : dict of bytes
+        Name in the scratch folder -> content, of the data files that the deck reads.
     """
 
     time: FloatArray = field(metadata={"unit": "s", "axes": ("time",)})
@@ -158,3 +162,5 @@ class TransientResult:
     wall_time: float = field(metadata={"unit": "s"})
     overhead_time: float = field(metadata={"unit": "s"})
     simulator_version: str
+    commands: tuple[str, ...] = ()
+    data: dict[str, bytes] = field(default_factory=dict)

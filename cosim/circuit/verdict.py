@@ -82,6 +82,8 @@ def judge(
         wall_time=answer.done["wall_time"],
         overhead_time=answer.overhead_time,
         simulator_version=version,
+        commands=prepared.commands,
+        data=prepared.data,
     )
 
 

@@ -109,7 +109,9 @@ def _number_table(result: GateResult) -> Table:
     table.add_row("leakage, seepage", f"{result.leakage:.2e}, {result.seepage:.2e}")
     table.add_row("unitarity", f"{result.unitarity:.7f}")
     table.add_row("numerical floor", _or_dash(result.numerical_floor, "run with --floor"))
-    table.add_row("rotating-wave error", f"{result.rotating_wave_error:.2e}")
+    table.add_row("rotating-wave error", _or_dash(result.rotating_wave_error, "none here"))
+    if not math.isnan(result.reference_error):
+        table.add_row("QuTiP, full waveform", f"{result.reference_error:.2e}")
     table.add_row(
         "pulse at the probe",
         f"{format_quantity(pulse.amplitude, unit)} peak, "

@@ -1,0 +1,113 @@
+"""Waveforms that were simulated or measured elsewhere, taken into the same path."""
+
+import hashlib
+from collections.abc import Mapping
+from pathlib import Path
+
+import numpy as np
+
+from cosim.capture import Capture, check_window
+from cosim.circuit.netlist import DeckFile
+from cosim.circuit.probe import Probe, parse_probe
+from cosim.dsp.resampling import resample
+from cosim.dsp.upconversion import upconvert
+from cosim.errors import TestbenchError, WaveformError, near_names
+from cosim.formats.columns import read_columns
+from cosim.formats.rawfile import read_raw
+from cosim.schema import WaveformTable
+from cosim.testbench import Testbench
+from cosim.waveform import Waveform
+
+# Interpolation error over the largest value that is worth a warning: it costs about its square.
+COARSE = 1e-3
+
+
+def import_waveform(bench: Testbench) -> Capture:
+    """Read the waveform that a testbench names; its own time grid is kept.
+
+    Parameters
+    ----------
+    bench : Testbench
+        With a table [waveform]. The probe is a combination of columns or vectors of the file.
+
+    Returns
+    -------
+    Capture
+        Without a run of the simulator.
+
+    Raises
+    ------
+    TestbenchError
+        If there is no such table, or the window does not lie within the waveform.
+    WaveformError, InputError
+        If the file cannot be read or a column does not exist.
+    """
+    table = bench.waveform
+    if table is None:
+        raise TestbenchError(f"{bench.source or 'the testbench'} has no table [waveform]")
+    path = Path(bench.folder) / Path(table.file).expanduser()
+    columns = _read(table, path)
+    drive = bench.drive
+    waves = [
+        _combine(parse_probe(text), columns, path)
+        for text in (drive.probe, drive.i, drive.q)
+        if text is not None
+    ]
+    wave, extra, notices = waves[0], dict[str, Waveform](), tuple[str, ...]()
+    step = float(np.median(np.diff(wave.t)))
+    if drive.probe is None:
+        assert isinstance(drive.carrier, float)  # DriveTable refuses anything else.
+        extra = dict(zip(("i", "q"), waves, strict=False))
+        wave = upconvert(wave, waves[1] if len(waves) > 1 else None, drive.carrier)
+    else:
+        notices = _coarse(wave, step)
+    check_window(bench, float(wave.t[-1]), float(wave.t[0]))
+    sha256 = hashlib.sha256(path.read_bytes()).hexdigest()
+    return Capture(wave, extra, step, (DeckFile(str(path), "", sha256),), notices, None)
+
+
+def _read(table: WaveformTable, path: Path) -> dict[str, Waveform]:
+    if path.suffix.lower() != ".raw":
+        return read_columns(path, time=table.time, time_unit=table.time_unit, unit=table.unit)
+    for key in ("time", "time_unit", "unit"):
+        if getattr(table, key) is not None:
+            raise TestbenchError(f"table [waveform], key '{key}': a raw file says that itself")
+    plot = read_raw(path, plot=table.plot)
+    if plot.axis != "time":
+        raise WaveformError(f"{path}: the plot '{plot.name}' is over {plot.axis}, wanted time")
+    time = plot.vectors[plot.axis]
+    return {
+        name: Waveform(time, values, unit=plot.units[name])
+        for name, values in plot.vectors.items()
+        if name != plot.axis and plot.units[name] in ("V", "A")
+    }
+
+
+def _combine(probe: Probe, columns: Mapping[str, Waveform], path: Path) -> Waveform:
+    """Add up columns by the weights of a probe; "ch1" and "v(ch1)" name the same column."""
+    lower = {name.lower(): wave for name, wave in columns.items()}
+    parts = []
+    for weight, name in probe.terms:
+        inner = name[name.find("(") + 1 : -1]
+        found = next((lower[key] for key in (name, inner, f"{inner}#branch") if key in lower), None)
+        if found is None:
+            raise TestbenchError(
+                f"table [drive], probe '{probe.text}': {path} has no column '{inner}'; "
+                f"{near_names(inner, columns)}"
+            )
+        parts.append((weight, found))
+    first = parts[0][1]
+    if len({wave.unit for _, wave in parts}) > 1:
+        raise TestbenchError(f"table [drive], probe '{probe.text}' mixes volts and amperes")
+    total = np.sum([weight * wave.v for weight, wave in parts], axis=0)
+    return Waveform(first.t, np.asarray(total), unit=first.unit)
+
+
+def _coarse(wave: Waveform, step: float) -> tuple[str, ...]:
+    error = resample(wave, step).interpolation_error / float(np.abs(wave.v).max() or 1.0)
+    if error <= COARSE:
+        return ()
+    return (
+        f"the imported samples are coarse: the curve between them may be off by {error:.1e} of "
+        "the largest value",
+    )
