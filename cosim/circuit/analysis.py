@@ -152,6 +152,10 @@ class TransientResult:
         Commands given before the deck was loaded.
     data : dict of bytes
         Name in the scratch folder -> content, of the data files that the deck reads.
+    origins : tuple of (str, int)
+        File and line of each line of the deck; ("", 0) for the bridge's own.
+    remarks : tuple of str
+        Those of the warnings that come from the simulator, and may quote the deck.
     """
 
     time: FloatArray = field(metadata={"unit": "s", "axes": ("time",)})
@@ -164,3 +168,5 @@ class TransientResult:
     simulator_version: str
     commands: tuple[str, ...] = ()
     data: dict[str, bytes] = field(default_factory=dict)
+    origins: tuple[tuple[str, int], ...] = ()
+    remarks: tuple[str, ...] = ()

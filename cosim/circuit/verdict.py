@@ -73,17 +73,20 @@ def judge(
     time = answer.vectors["time"]
     _check_time(request, time, log)
     vectors = {save.lower(): _vector(save, key, answer, log) for save, key in prepared.keys.items()}
+    remarks = findings(prepared, answer.log)
     return TransientResult(
         time=time,
         vectors=vectors,
         log=log,
-        warnings=(*prepared.notices, *findings(prepared, answer.log)),
+        warnings=(*prepared.notices, *remarks),
         deck=prepared.lines,
         wall_time=answer.done["wall_time"],
         overhead_time=answer.overhead_time,
         simulator_version=version,
         commands=prepared.commands,
         data=prepared.data,
+        origins=prepared.origins,
+        remarks=remarks,
     )
 
 

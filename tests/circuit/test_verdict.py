@@ -58,6 +58,17 @@ def test_notices_of_the_preparation_stand_on_the_result() -> None:
     deck = replace(DECK, notices=("deck.cir:7: a .control block was left out",))
     result = judge(deck, REQUEST, answer(), "ngspice-39", True)
     assert result.warnings == deck.notices
+    assert result.remarks == ()
+
+
+def test_what_ngspice_says_stands_apart_from_the_notices() -> None:
+    deck = replace(DECK, notices=("deck.cir:7: a .control block was left out",))
+    said = replace(answer(), log=["stderr Warning: something"])
+    result = judge(deck, REQUEST, said, "ngspice-39", True)
+    assert result.warnings == (*deck.notices, "Warning: something")
+    assert result.remarks == ("Warning: something",)
+    assert result.origins == deck.origins
+    assert len(result.origins) == len(result.deck)
 
 
 @pytest.mark.parametrize(
