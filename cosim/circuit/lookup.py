@@ -291,7 +291,7 @@ def _vector(deck: Deck, save: str) -> str:
         # ngspice names the vector of a node that starts with a digit "V(3)".
         return f"V({node})" if node[0].isdigit() else node
     if match:
-        return _current(find_device(deck, match[2]), save)
+        return _current(_current_carrier(deck, match[2]), save)
     match = _PARAMETER.fullmatch(save)
     if match:
         return f"@{find_device(deck, match[1]).name}[{match[2]}]"
@@ -299,6 +299,35 @@ def _vector(deck: Deck, save: str) -> str:
         f"'{save}' is nothing that ngspice saves",
         hint="Write v(node), i(device) or @device[parameter].",
     )
+
+
+def stimulus_meter(name: str) -> str:
+    """Give the 0 V source that carries the current of a current source with a stimulus.
+
+    Parameters
+    ----------
+    name : str
+        The current source without the instance it is in, "iin".
+
+    Returns
+    -------
+    str
+        Name of the source in series, in the same scope.
+    """
+    return f"vstimulus_{name}"
+
+
+def _current_carrier(deck: Deck, name: str) -> Device:
+    """Find the device whose current is asked for, or what carries it under a stimulus."""
+    try:
+        return find_device(deck, name)
+    except UnknownNameError:
+        path, dot, last = name.strip().lower().removeprefix("i.").rpartition(".")
+        try:
+            return find_device(deck, f"{path}{dot}{stimulus_meter(last)}")
+        except UnknownNameError:
+            pass
+        raise
 
 
 def _current(device: Device, save: str) -> str:
