@@ -53,12 +53,19 @@ def _common(
 
 
 @app.command(epilog="Example: qcosim check examples/x90_spin.toml")
-def check(testbench: TestbenchPath, json_output: JsonFlag = False) -> None:
+def check(
+    testbench: TestbenchPath,
+    probe: Annotated[
+        bool,
+        typer.Option("--probe", help="Run 200 points and estimate time, memory and disk space."),
+    ] = False,
+    json_output: JsonFlag = False,
+) -> None:
     """Validate a testbench, its deck and the environment; nothing long is run."""
     from cosim.checks import check_testbench
     from cosim.terminal import check_table
 
-    findings = check_testbench(testbench)
+    findings = check_testbench(testbench, probe=probe)
     if json_output:
         typer.echo(json.dumps({item.name: item.value for item in findings}, indent=2))
     else:
@@ -143,6 +150,60 @@ def show(
     else:
         console.print(result_table(result))
         console.print(record_table(result))
+
+
+@app.command(epilog="Example: qcosim export x90.h5 --run 1 --deck x90_deck")
+def export(
+    archive: ArchivePath,
+    run: Annotated[int | None, typer.Option(help="Which run; default: the last.")] = None,
+    deck: Annotated[
+        Path | None,
+        typer.Option(metavar="DIR", help="Write the exact deck, to be repeated by ngspice -b."),
+    ] = None,
+    csv: Annotated[
+        Path | None, typer.Option(metavar="FILE.csv", help="Write the waveforms as columns.")
+    ] = None,
+    envelope: Annotated[
+        Path | None, typer.Option(metavar="FILE.csv", help="Write I and Q as columns.")
+    ] = None,
+) -> None:
+    """Write what is in an archived run as files that other programs read."""
+    from cosim.dispatch import load
+    from cosim.export import export_csv, export_deck, export_envelope
+
+    if deck is csv is envelope is None:
+        raise InputError("say what to export: --deck DIR, --csv FILE or --envelope FILE")
+    result = load(archive, run=run)
+    if deck is not None:
+        export_deck(result, deck)
+        typer.echo(f"repeat the run with: cd {deck} && ngspice -b -r out.raw deck.cir", err=True)
+    if csv is not None:
+        typer.echo(f"{export_csv(result, csv)} rows in {csv}", err=True)
+    if envelope is not None:
+        typer.echo(f"{export_envelope(result, envelope)} rows in {envelope}", err=True)
+
+
+@app.command(epilog="Example: qcosim compare before.h5 after.h5")
+def compare(
+    first: ArchivePath,
+    second: ArchivePath,
+    run: Annotated[int | None, typer.Option(help="Run of the first; default: the last.")] = None,
+    with_run: Annotated[
+        int | None, typer.Option("--with", help="Run of the second; default: the last.")
+    ] = None,
+    json_output: JsonFlag = False,
+) -> None:
+    """Compare two archived runs: numbers, waveforms, and what went into them."""
+    from cosim.comparison import compare_runs
+    from cosim.dispatch import load
+    from cosim.result import as_plain
+    from cosim.terminal import comparison_table
+
+    found = compare_runs(load(first, run=run), load(second, run=with_run))
+    if json_output:
+        typer.echo(json.dumps(as_plain(found), indent=2))
+    else:
+        Console(highlight=False).print(comparison_table(found))
 
 
 def _check_output(path: Path | None, *endings: str) -> None:

@@ -2,7 +2,7 @@
 
 import math
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, fields, is_dataclass
 from typing import Any
 
 from cosim.circuit.netlist import DeckFile
@@ -271,7 +271,7 @@ def as_numbers(result: object) -> dict[str, Any]:
     if not isinstance(result, GateResult):
         raise InputError(f"wanted a gate result, got {type(result).__name__}")
     asked = () if math.isnan(result.reference_error) else ("reference_error",)
-    return {name: _plain(getattr(result, name)) for name in (*GATE_FIELDS, *asked)}
+    return {name: as_plain(getattr(result, name)) for name in (*GATE_FIELDS, *asked)}
 
 
 def as_columns(table: Mapping[str, Any]) -> dict[str, list[Any]]:
@@ -287,14 +287,26 @@ def as_columns(table: Mapping[str, Any]) -> dict[str, list[Any]]:
     dict of list
         The same columns; a number that does not exist is None.
     """
-    return {name: _plain(tuple(column.tolist())) for name, column in table.items()}
+    return {name: as_plain(tuple(column.tolist())) for name, column in table.items()}
 
 
-def _plain(value: Any) -> Any:
+def as_plain(value: Any) -> Any:
+    """Turn a declared dataclass into what JSON can hold.
+
+    Parameters
+    ----------
+    value : object
+        Dataclasses, tuples and lists of plain numbers and texts.
+
+    Returns
+    -------
+    object
+        Dictionaries and lists; a number that does not exist is None.
+    """
     if isinstance(value, float):
-        return value if value == value else None
-    if isinstance(value, tuple):
-        return [_plain(item) for item in value]
-    if isinstance(value, (Fidelity, Rotation)):
-        return {name: _plain(getattr(value, name)) for name in value.__slots__}
+        return None if math.isnan(value) else value
+    if isinstance(value, (tuple, list)):
+        return [as_plain(item) for item in value]
+    if is_dataclass(value):
+        return {item.name: as_plain(getattr(value, item.name)) for item in fields(value)}
     return value

@@ -9,6 +9,7 @@ from rich.table import Table
 from rich.text import Text
 
 from cosim.checks import Finding
+from cosim.comparison import Comparison
 from cosim.result import GateResult
 from cosim.units import format_quantity
 
@@ -16,6 +17,10 @@ CAUTION = (
     "Design estimate from simulation: measured data, the laboratory's cryogenic and electrical "
     "safety rules and local codes decide."
 )
+
+
+# Lines of differing inputs that a terminal shows.
+MOST_LINES = 40
 
 
 def check_table(findings: Sequence[Finding]) -> Table:
@@ -186,6 +191,41 @@ def runs_table(columns: Mapping[str, np.ndarray]) -> Table:
     for index in range(count):
         table.add_row(*(_cell(label, columns[name][index]) for label, name in present.items()))
     return table
+
+
+def comparison_table(comparison: Comparison) -> Group:
+    """Lay out two runs side by side.
+
+    Parameters
+    ----------
+    comparison : Comparison
+        From `cosim.comparison.compare_runs`.
+
+    Returns
+    -------
+    rich.console.Group
+        Numbers, largest difference of the waveforms, and the inputs that differ.
+    """
+    table = Table(box=None, pad_edge=False, header_style="bold")
+    table.add_column("", style="bold", no_wrap=True)
+    for name in ("first", "second", "change", ""):
+        table.add_column(name, justify="right", no_wrap=True)
+    for item in comparison.numbers:
+        words = {None: "", True: "beyond the error bars", False: "within the error bars"}
+        verdict = words[item.resolved] if item.change != 0.0 else "equal"
+        row = (f"{item.first:.8g}", f"{item.second:.8g}", f"{item.change:+.2e}", verdict)
+        table.add_row(item.name.replace("average_gate", "avg"), *row)
+    parts: list[RenderableType] = [
+        table,
+        Text(f"waveforms differ by {comparison.waveform_difference:.2e} of the largest value"),
+    ]
+    if not comparison.inputs:
+        parts.append(Text("testbench, deck and versions are equal"))
+    shown = comparison.inputs[:MOST_LINES]
+    parts += [Text(line, style="red" if line[0] == "-" else "green") for line in shown]
+    if len(comparison.inputs) > MOST_LINES:
+        parts.append(Text(f"... and {len(comparison.inputs) - MOST_LINES} more lines differ"))
+    return Group(*parts)
 
 
 def _cell(label: str, value: object) -> str:
