@@ -1,5 +1,6 @@
 """The declared results of a run, as they are shown, archived and read back."""
 
+import hashlib
 import math
 from collections.abc import Mapping
 from dataclasses import dataclass, field, fields, is_dataclass
@@ -102,9 +103,10 @@ class RunRecord:
     testbench : str
         The testbench as TOML, complete.
     deck_files : tuple of DeckFile
-        Every file of the deck as its author wrote it.
+        Every file of the deck as its author wrote it; without its text where it is confidential.
     deck_sent : str
-        The deck exactly as it was sent to the simulator.
+        The deck exactly as it was sent to the simulator; comments stand in place of the lines of
+        confidential files.
     deck_data : dict of str
         Name to content of the data files that the deck reads, where it says "{scratch}/".
     deck_commands : tuple of str
@@ -133,6 +135,14 @@ class RunRecord:
     points: int = field(metadata=_unit("1"))
     step: float = field(metadata=_unit("s"))
     steps_per_period: float = field(metadata=_unit("1"))
+
+    @property
+    def withheld(self) -> tuple[str, ...]:
+        """Paths of the confidential files, of which SHA-256 is kept and no text."""
+        empty = hashlib.sha256(b"").hexdigest()
+        return tuple(
+            file.path for file in self.deck_files if not file.text and file.sha256 != empty
+        )
 
 
 @dataclass(frozen=True, slots=True)

@@ -42,6 +42,9 @@ class NetlistTable:
         Start from the operating point or from the initial conditions; default: as the deck.
     include_paths : tuple of str
         Folders that the deck may include from, besides its own, relative to the testbench.
+    confidential : tuple of str
+        Folders, relative to the testbench, whose files the record of a run keeps as path and
+        SHA-256 only.
     compatibility : str or None
         The simulator's compatibility mode (its ngbehavior), such as "ps" or "hs".
     save : tuple of str
@@ -62,6 +65,7 @@ class NetlistTable:
     instances: dict[str, dict[str, ParameterValue]] = field(default_factory=dict)
     initial: Literal["op", "uic"] | None = None
     include_paths: tuple[str, ...] = ()
+    confidential: tuple[str, ...] = ()
     compatibility: str | None = None
     save: tuple[str, ...] = ()
     seed: int = 1

@@ -210,11 +210,17 @@ def _card_checks(prepared: PreparedDeck, words: Sequence[str]) -> list[str]:
     found = []
     for card, remarks in checks.items():
         if remarks:
-            file, number, _ = _origin(prepared, [f"'{card}'"])
             more = len(remarks) - REMARKS_SHOWN
             listed = "; ".join(list(remarks)[:REMARKS_SHOWN]) + (f"; {more} more" * (more > 0))
-            found.append(f"{_place(file, number)}ngspice's check of the card {card}: {listed}")
+            at = _place(*_card_place(prepared, card))
+            found.append(f"{at}ngspice's check of the card {card}: {listed}")
     return found
+
+
+def _card_place(prepared: PreparedDeck, name: str) -> tuple[str, int]:
+    card = re.compile(rf"\.model\s+{re.escape(name)}(?!\S)", re.IGNORECASE)
+    pairs = zip(prepared.lines, prepared.origins, strict=True)
+    return next((origin for line, origin in pairs if card.match(line)), ("", 0))
 
 
 def _place(file: str, line: int) -> str:
