@@ -7,7 +7,7 @@ bash .ci/setup
 select=()
 if [ "${1:-}" = quick ]; then
     shift
-    select=(-m "not full")
+    select=(-m "not full and not slow")
 fi
 .venv/bin/ruff check --quiet .
 .venv/bin/ruff format --quiet --check .
