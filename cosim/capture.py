@@ -21,6 +21,7 @@ from cosim.circuit.simulator import simulate
 from cosim.dsp.upconversion import upconvert
 from cosim.errors import TestbenchError
 from cosim.schema import NetlistTable
+from cosim.stimuli import apply_stimuli
 from cosim.testbench import Testbench
 from cosim.waveform import Waveform
 
@@ -37,7 +38,7 @@ class Plan:
     Parameters
     ----------
     deck : Deck
-        With parameters, sections, instances and terminations applied.
+        With parameters, sections, instances, stimuli and terminations applied.
     probes : tuple of Probe
         What is read: the probe, or I and Q of a baseband pair.
     carrier_frequency : float
@@ -133,13 +134,16 @@ def make_plan(bench: Testbench) -> Plan:
             compatibility=table.compatibility,
         )
     deck = with_instances(with_parameters(deck, table.parameters), table.instances)
+    stop = _stop(table, deck)
+    check_window(bench, stop)
+    step, notices = _step(bench, table, deck)
+    if bench.stimulus:
+        deck, coarse = apply_stimuli(deck, bench.stimulus, folder=folder, stop=stop, step=step)
+        notices += coarse
     drive = bench.drive
     probes = tuple(parse_probe(text) for text in (drive.probe, drive.i, drive.q) if text)
     if isinstance(drive.termination, float):
         deck = _terminated(deck, probes, drive.termination)
-    stop = _stop(table, deck)
-    check_window(bench, stop)
-    step, notices = _step(bench, table, deck)
     terms = [name for probe in probes for _, name in probe.terms]
     request = TransientRequest(
         stop=stop,

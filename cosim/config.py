@@ -75,6 +75,46 @@ class Quantity:
 
 
 @dataclasses.dataclass(frozen=True, slots=True)
+class Level:
+    """A voltage or a current, where another key says which of the two is due.
+
+    Parameters
+    ----------
+    value : float
+        In `unit`.
+    unit : "V" or "A"
+        Which of the two it is.
+    """
+
+    value: float
+    unit: str
+
+    @classmethod
+    def read(cls, value: object) -> "Level":
+        """Read one value of the file.
+
+        Raises
+        ------
+        UnitError
+            If it is neither a voltage nor a current.
+        """
+        if isinstance(value, Level):
+            return value
+        for unit in ("V", "A"):
+            try:
+                return cls(parse_quantity(value, unit), unit)
+            except UnitError:
+                continue
+        raise UnitError(f'wanted a voltage or a current, such as "1.1 V" or "10 uA", got {value!r}')
+
+    @classmethod
+    def __get_pydantic_core_schema__(
+        cls, source: object, handler: GetCoreSchemaHandler
+    ) -> CoreSchema:
+        return core_schema.no_info_plain_validator_function(cls.read)
+
+
+@dataclasses.dataclass(frozen=True, slots=True)
 class Parameter:
     """Marks a field that takes a deck's parameter: a number, or a number with a unit."""
 
@@ -177,7 +217,9 @@ def check_keys(table: Mapping[str, Any], valid: list[str], where: str) -> None:
             raise TestbenchError(f"{where}: unknown key '{key}'; {near_names(key, valid)}")
 
 
-def read_table(table: object, cls: type[T], *, file: str, name: str) -> T:
+def read_table(
+    table: object, cls: type[T], *, file: str, name: str, number: int | None = None
+) -> T:
     """Turn one TOML table into a frozen dataclass.
 
     Parameters
@@ -188,6 +230,8 @@ def read_table(table: object, cls: type[T], *, file: str, name: str) -> T:
         A frozen dataclass; its field names are the keys.
     file, name : str
         File and table, for messages.
+    number : int or None
+        Which table of an array of tables of this name it is, from 1.
 
     Returns
     -------
@@ -199,7 +243,7 @@ def read_table(table: object, cls: type[T], *, file: str, name: str) -> T:
     TestbenchError
         On an unknown key, a missing key, a wrong unit or an impossible value.
     """
-    where = f"{file}, table [{name}]"
+    where = f"{file}, table [{name}]" if number is None else numbered(file, name, number)
     if not isinstance(table, Mapping):
         raise TestbenchError(f"{where}: wanted a table, got {table!r}")
     check_keys(table, _field_names(cls), where)
@@ -213,6 +257,24 @@ def read_table(table: object, cls: type[T], *, file: str, name: str) -> T:
         return cls(**values)
     except InputError as error:
         raise TestbenchError(f"{where}: {error.message}", hint=error.hint) from None
+
+
+def numbered(file: str, name: str, number: int) -> str:
+    """Name one table of an array of tables, for messages.
+
+    Parameters
+    ----------
+    file, name : str
+        File and name of the tables.
+    number : int
+        Which one, from 1.
+
+    Returns
+    -------
+    str
+        "bench.toml, table [[stimulus]] number 2".
+    """
+    return f"{file}, table [[{name}]] number {number}"
 
 
 def _read_value(hint: Any, value: object, where: str, key: str) -> Any:
@@ -246,7 +308,7 @@ def write_tables(title: str, tables: Mapping[str, object]) -> str:
     title : str
         Value of the key `title`.
     tables : mapping
-        Table name to frozen dataclass.
+        Table name to frozen dataclass, or to a tuple of them for an array of tables.
 
     Returns
     -------
@@ -255,7 +317,10 @@ def write_tables(title: str, tables: Mapping[str, object]) -> str:
     """
     written: dict[str, Any] = {"title": title}
     for name, table in tables.items():
-        written[name] = _written_table(table)
+        if isinstance(table, tuple):
+            written[name] = [_written_table(item) for item in table]
+        else:
+            written[name] = _written_table(table)
     return tomli_w.dumps(written)
 
 
@@ -277,6 +342,8 @@ def _unit_of(hint: Any) -> str:
 
 
 def _written(value: Any, unit: str) -> Any:
+    if isinstance(value, Level):
+        return f"{value.value!r} {value.unit}"
     if dataclasses.is_dataclass(value):
         return _written_table(value)
     if isinstance(value, tuple):

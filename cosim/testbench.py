@@ -18,6 +18,7 @@ from cosim.schema import (
     QubitTable,
     WaveformTable,
 )
+from cosim.stimuli import Stimulus, read_stimuli
 
 
 @dataclass(frozen=True, slots=True)
@@ -32,6 +33,8 @@ class Testbench:
         Where the waveform comes from; one of the two is None.
     drive, qubit, gate, accuracy
         The other tables, in SI units.
+    stimulus : tuple of Stimulus
+        The tables [[stimulus]], in SI units; only with a netlist.
     folder : str
         Folder that the paths in the tables are relative to.
     source : str
@@ -49,14 +52,15 @@ class Testbench:
     qubit: QubitTable
     gate: GateTable
     accuracy: AccuracyTable
+    stimulus: tuple[Stimulus, ...] = ()
     folder: str = "."
     source: str = ""
     circuit: str = ""
 
     def to_toml(self) -> str:
         """Write the testbench as a TOML text that gives the same run again."""
-        tables = {name: getattr(self, name) for name in TABLES}
-        given = {name: table for name, table in tables.items() if table is not None}
+        tables = {name: getattr(self, name) for name in (*TABLES, "stimulus")}
+        given = {name: table for name, table in tables.items() if table not in (None, ())}
         return write_tables(self.title, given)
 
 
@@ -108,7 +112,7 @@ def make_testbench(tables: Mapping[str, Any], *, folder: str | os.PathLike[str] 
 
 def _build(tables: Mapping[str, Any], *, file: str, folder: str) -> Testbench:
     label = file or "the testbench"
-    check_keys(tables, ["title", *TABLES], label)
+    check_keys(tables, ["title", "stimulus", *TABLES], label)
     title = tables.get("title", "")
     if not isinstance(title, str):
         raise TestbenchError(f"{label}: 'title' is a text, got {title!r}")
@@ -131,7 +135,14 @@ def _build(tables: Mapping[str, Any], *, file: str, folder: str) -> Testbench:
             f"{label}, table [drive]: the key 'termination' is missing",
             hint='say termination = "50 ohm", or "in deck" where the deck has the load',
         )
-    return Testbench(title=title, **parts, folder=folder, source=file, circuit=circuit)
+    stimulus = read_stimuli(tables.get("stimulus", []), file=label)
+    if stimulus and parts["netlist"] is None:
+        raise TestbenchError(
+            f"{label}: a table [[stimulus]] drives a source of a deck, but there is no [netlist]"
+        )
+    return Testbench(
+        title=title, **parts, stimulus=stimulus, folder=folder, source=file, circuit=circuit
+    )
 
 
 def _with_circuit(tables: Mapping[str, Any], label: str) -> tuple[Mapping[str, Any], str]:

@@ -49,13 +49,13 @@ class DataFile:
     Parameters
     ----------
     path : str
-        Path under which it was found.
+        Path under which it was found; empty for samples that the bridge makes.
     name : str
         Lower-case name under which it is put into the simulator's scratch folder.
     content : bytes
-        Its bytes.
+        What is put there: its bytes, or the samples of a stimulus that was read from it.
     sha256 : str
-        SHA-256 of its bytes, in hexadecimal.
+        SHA-256 of the file's bytes, in hexadecimal.
     """
 
     path: str

@@ -29,7 +29,7 @@ import numpy as np
 
 from cosim.circuit.cards import number_text
 from cosim.circuit.copies import Edit, edited_lines
-from cosim.circuit.deck import DataFile, Deck, SourceLine
+from cosim.circuit.deck import DataFile, Deck, DeckFile, SourceLine
 from cosim.circuit.hierarchy import Structure, structure_of
 from cosim.circuit.lookup import find_device, instances, own_nodes, stimulus_meter
 from cosim.circuit.scope import Scope, element_of
@@ -66,7 +66,9 @@ def with_stimulus(deck: Deck, source: str, waveform: Waveform) -> Deck:
     return with_stimuli(deck, {source: waveform})
 
 
-def with_stimuli(deck: Deck, waveforms: Mapping[str, Waveform]) -> Deck:
+def with_stimuli(
+    deck: Deck, waveforms: Mapping[str, Waveform], *, files: Mapping[str, DeckFile] | None = None
+) -> Deck:
     """Let waveforms take the place of independent voltage and current sources.
 
     Parameters
@@ -78,6 +80,8 @@ def with_stimuli(deck: Deck, waveforms: Mapping[str, Waveform]) -> Deck:
         a voltage source, in A for a current source, with the source's polarity. Between samples
         the value is interpolated linearly; before the first and after the last sample it holds.
         The operating point takes the value at t = 0.
+    files : mapping of str to DeckFile, optional
+        Source as in `waveforms` -> file that its waveform was read from; it joins the deck's files.
 
     Returns
     -------
@@ -100,30 +104,31 @@ def with_stimuli(deck: Deck, waveforms: Mapping[str, Waveform]) -> Deck:
         return deck
     structure = structure_of(deck.lines)
     taken = {file.name for file in deck.data_files}
+    origins = dict(files or {})
     edits: dict[str, Edit] = {}
-    files: list[DataFile] = []
+    data: list[DataFile] = []
     models: list[SourceLine] = []
     number = 0
     for name, waveform in waveforms.items():
         path = _source_path(deck, name)
         if path in edits:
             raise InputError(f"the source '{path}' is given two stimuli")
-        letter = path.rpartition(".")[2][0]
-        if waveform.unit != _UNITS[letter]:
-            raise InputError(
-                f"the stimulus of '{path}' must be in {_UNITS[letter]}, got {waveform.unit}"
-            )
+        unit = _UNITS[path.rpartition(".")[2][0]]
+        if waveform.unit != unit:
+            raise InputError(f"the stimulus of '{path}' must be in {unit}, got {waveform.unit}")
         number += 1
         while f"stimulus{number}" in structure.root.models or f"stimulus{number}.txt" in taken:
             number += 1
         model = f"stimulus{number}"
         edits[path] = _replacement(model)
         models.append(SourceLine(_model_text(model), "", 0))
-        content = _rows(waveform)
-        digest = hashlib.sha256(content).hexdigest()
-        files.append(DataFile(f"stimulus of {path}", f"{model}.txt", content, digest))
-    lines = edited_lines(deck, edits)
-    return replace(deck, lines=(*lines, *models), data_files=(*deck.data_files, *files))
+        data.append(_data_file(f"{model}.txt", waveform, origins.get(name)))
+    return replace(
+        deck,
+        lines=(*edited_lines(deck, edits), *models),
+        files=(*deck.files, *origins.values()),
+        data_files=(*deck.data_files, *data),
+    )
 
 
 def source_names(deck: Deck) -> tuple[str, ...]:
@@ -234,6 +239,14 @@ def _model_text(model: str) -> str:
         f'.model {model} filesource(file="{{scratch}}/{model}.txt" timeoffset=0 timescale=1 '
         "timerelative=false amploffset=[0] amplscale=[1] amplstep=false)"
     )
+
+
+def _data_file(name: str, waveform: Waveform, origin: DeckFile | None) -> DataFile:
+    """Give the samples as the simulator reads them, under the path that they come from."""
+    content = _rows(waveform)
+    if origin is None:
+        return DataFile("", name, content, hashlib.sha256(content).hexdigest())
+    return DataFile(origin.path, name, content, origin.sha256)
 
 
 def _rows(waveform: Waveform) -> bytes:

@@ -7,7 +7,7 @@ import pytest
 from scipy.signal import lsim
 
 from cosim.circuit.analysis import Tolerances, TransientRequest, TransientResult
-from cosim.circuit.deck import Deck
+from cosim.circuit.deck import Deck, DeckFile
 from cosim.circuit.netlist import deck_from_text, node_names, with_instances
 from cosim.circuit.simulator import simulate
 from cosim.circuit.stimulus import sampling_error, with_stimuli, with_stimulus
@@ -237,8 +237,8 @@ def test_an_rc_answers_as_scipy_says() -> None:
     first = waveform.v[0]
     _, wanted, _ = lsim(([1.0], [tau, 1.0]), waveform.v - first, t)
     answer = np.interp(t, result.time, result.vectors["v(out)"]) - first
-    # Corners between time points err by slope h/4 at most: 0.1 V * 0.5 ps / 10 ps / 4 = 1.3e-3 V
-    # for one, and the RC of 100 steps takes a hundredth of it; about 4 of them add up.
+    # A corner between two time points changes the area by at most (change of slope) h^2/8, here
+    # 0.42 V/10 ps: 2.6e-5 V behind the RC, and a few of them add up.
     assert np.abs(answer - wanted).max() < 1e-4
     assert np.ptp(wanted) > 0.5
 
@@ -294,6 +294,21 @@ def test_files_get_names_of_their_own(tmp_path: Path) -> None:
     assert (result.vectors["v(in)"][-1], result.vectors["v(out)"][-1]) == (0.5, 2.0)
     assert len({file.name for file in loaded.data_files}) == 2
     assert {"in", "out", "stimulus_vin", "stimulus_vin_value"} == node_names(loaded)
+
+
+def test_the_file_of_a_waveform_joins_the_decks_files() -> None:
+    origin = DeckFile("wave.csv", "", "5e" * 32)
+    flat = wave((0.0, 0.5), (1e-9, 0.5))
+    loaded = with_stimuli(
+        deck("vin in 0 1", "r1 in 0 1k", "vy y 0 1", "r2 y 0 1k"),
+        {"VIN": flat, "vy": flat},
+        files={"VIN": origin},
+    )
+    assert loaded.files[1:] == (origin,)
+    assert [(file.path, file.sha256 == origin.sha256) for file in loaded.data_files] == [
+        ("wave.csv", True),
+        ("", False),
+    ]
 
 
 def test_no_stimulus_changes_nothing() -> None:

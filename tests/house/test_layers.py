@@ -23,6 +23,7 @@ FLOORS = {
     "quantum": 1,
     "coupling": 2,
     "schema": 3,
+    "stimuli": 3,
     "testbench": 3,
     "result": 3,
     "capture": 4,
