@@ -7,6 +7,13 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 
 from cosim.circuit.analysis import TransientRequest, TransientResult
+from cosim.circuit.confidential import (
+    Roots,
+    check_roots,
+    confidential_roots,
+    kept_files,
+    withhold,
+)
 from cosim.circuit.netlist import (
     Deck,
     DeckFile,
@@ -49,6 +56,8 @@ class Plan:
         The transient on the fixed grid.
     notices : tuple of str
         What the reader must know.
+    confidential : Roots
+        Folders whose files are kept as path and SHA-256 only.
     """
 
     deck: Deck
@@ -57,6 +66,7 @@ class Plan:
     baseband: bool
     request: TransientRequest
     notices: tuple[str, ...]
+    confidential: Roots
 
     def half_step(self) -> "Plan":
         """The same run at half the step and tighter tolerances, for the numerical floor."""
@@ -85,7 +95,7 @@ class Capture:
     notices : tuple of str
         What the reader must know.
     result : TransientResult or None
-        The simulator's run; None for an imported waveform.
+        The simulator's run, without what is confidential; None for an imported waveform.
     """
 
     waveform: Waveform
@@ -133,6 +143,8 @@ def make_plan(bench: Testbench) -> Plan:
             sections=table.sections,
             compatibility=table.compatibility,
         )
+    roots = confidential_roots([str(folder / Path(p).expanduser()) for p in table.confidential])
+    withheld = check_roots(deck, roots)
     deck = with_instances(with_parameters(deck, table.parameters), table.instances)
     stop = _stop(table, deck)
     check_window(bench, stop)
@@ -155,7 +167,8 @@ def make_plan(bench: Testbench) -> Plan:
         time_limit=table.time_limit,
     )
     carrier = drive.carrier if isinstance(drive.carrier, float) else math.nan
-    return Plan(deck, probes, carrier, drive.probe is None, request, notices)
+    notices = (*withheld, *notices)
+    return Plan(deck, probes, carrier, drive.probe is None, request, notices, roots)
 
 
 def netlist_of(bench: Testbench) -> NetlistTable:
@@ -315,6 +328,8 @@ def capture_probe(plan: Plan, *, progress: Callable[[float], None] | None = None
         If the simulator fails; the log is in the error.
     """
     result = simulate(plan.deck, plan.request, progress=progress)
+    result = withhold(result, plan.deck, plan.confidential)
+    files = kept_files(plan.deck.files, plan.confidential)
     read = {name for probe in plan.probes for _, name in probe.terms}
     extra = {
         name: Waveform(result.time, values, unit="V" if name.startswith("v(") else "A")
@@ -330,4 +345,4 @@ def capture_probe(plan: Plan, *, progress: Callable[[float], None] | None = None
         extra |= dict(zip(("i", "q"), waves, strict=False))
         wave = upconvert(wave, waves[1] if len(waves) > 1 else None, plan.carrier_frequency)
     notices = (*plan.deck.notices, *plan.notices, *result.warnings)
-    return Capture(wave, extra, plan.request.step, plan.deck.files, notices, result)
+    return Capture(wave, extra, plan.request.step, files, notices, result)
