@@ -38,14 +38,15 @@ def copy_decks(folder: Path) -> Path:
 def run_batch(deck: str, folder: Path, behaviour: str = "") -> str:
     """Run `ngspice -b` on a deck in its folder; give the log."""
     # A .spiceinit in the working folder is what ngspice runs before it reads the deck.
-    init = f"set ngbehavior={behaviour}\n" if behaviour else "\n"
+    # Several threads wait for one another on a busy machine.
+    init = "set num_threads=1\n" + (f"set ngbehavior={behaviour}\n" if behaviour else "")
     (folder / ".spiceinit").write_text(init, encoding="utf-8")
     done = subprocess.run(
         ["ngspice", "-b", deck],
         cwd=folder,
         stdin=subprocess.DEVNULL,
         capture_output=True,
-        timeout=60,
+        timeout=180,
         check=False,
     )
     return (done.stdout + done.stderr).decode("latin-1")
