@@ -41,6 +41,12 @@ def export_deck(result: GateResult, folder: str | os.PathLike[str]) -> tuple[Pat
     record = result.run
     if not record.deck_sent:
         raise InputError("the run imported a waveform: there is no deck to export")
+    if record.withheld:
+        raise InputError(
+            "the run keeps its deck without the lines of confidential files: "
+            + ", ".join(record.withheld),
+            hint="run the testbench again where these files are, to the same SHA-256",
+        )
     target = Path(folder)
     title, rest = record.deck_sent.replace(SCRATCH, "").split("\n", 1)
     modes = [line for line in record.deck_commands if not line.startswith("setseed")]

@@ -1,7 +1,7 @@
 """The declared results of a run, as they are shown, archived and read back."""
 
-import hashlib
 import math
+import re
 from collections.abc import Mapping
 from dataclasses import dataclass, field, fields, is_dataclass
 from typing import Any
@@ -11,6 +11,11 @@ from cosim.dsp.pulse import PulseMeasures
 from cosim.errors import InputError
 from cosim.quantum.fidelity import Rotation
 from cosim.waveform import ComplexArray, Envelope, FloatArray, Waveform
+
+# What `cosim.circuit.confidential` writes in place of lines, and of a data file.
+_LEFT_OUT = re.compile(
+    r"^\* (?:\d+ lines of )?(.+) \(SHA-256 [0-9a-f]{64}\) (?:are|is) left out here$", re.MULTILINE
+)
 
 # What varies little from run to run has no column of its own in an archive's table.
 _NOT_IN_TABLE = {"table": False}
@@ -138,11 +143,9 @@ class RunRecord:
 
     @property
     def withheld(self) -> tuple[str, ...]:
-        """Paths of the confidential files, of which SHA-256 is kept and no text."""
-        empty = hashlib.sha256(b"").hexdigest()
-        return tuple(
-            file.path for file in self.deck_files if not file.text and file.sha256 != empty
-        )
+        """Paths of the confidential files that are left out of the deck as sent."""
+        kept = "\n".join((self.deck_sent, *self.deck_data.values()))
+        return tuple(dict.fromkeys(_LEFT_OUT.findall(kept)))
 
 
 @dataclass(frozen=True, slots=True)

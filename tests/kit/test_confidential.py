@@ -11,7 +11,8 @@ from cosim.circuit.analysis import TransientRequest
 from cosim.circuit.confidential import confidential_roots, withhold
 from cosim.circuit.netlist import load_deck
 from cosim.circuit.simulator import simulate
-from cosim.errors import DeckError, TestbenchError
+from cosim.errors import DeckError, InputError, TestbenchError
+from cosim.export import export_deck
 from cosim.result import GateResult
 from cosim.testbench import Testbench, make_testbench
 
@@ -154,6 +155,13 @@ def test_a_link_into_a_confidential_folder_is_covered(kit: Path) -> None:
         result = cosim.run(bench(kit, folder))
         assert [bool(file.text) for file in result.run.deck_files] == [True, False, False]
         assert "0.4321" not in result.run.deck_sent
+
+
+def test_a_deck_that_is_kept_in_part_is_not_exported(kit: Path, tmp_path: Path) -> None:
+    with pytest.raises(InputError, match=r"confidential files: .*kit\.lib, .*more\.inc"):
+        export_deck(cosim.run(bench(kit, "../kits")), tmp_path / "export")
+    assert not (tmp_path / "export").exists()
+    export_deck(cosim.run(bench(kit)), tmp_path / "export")
 
 
 def test_a_folder_beside_is_not_covered(kit: Path) -> None:
