@@ -2,6 +2,7 @@
 
 import csv
 import re
+from functools import cache
 
 from cosim.errors import UnitError, WaveformError
 from cosim.units import parse_quantity
@@ -99,6 +100,7 @@ def decimal_comma_error(where: str, cell: str) -> WaveformError:
     )
 
 
+@cache
 def unit_kind(text: str) -> tuple[str, float] | None:
     """Read a unit.
 

@@ -252,7 +252,7 @@ def waveforms_or_error(path: Path, time_unit: str | None, unit: str | None) -> s
 
 
 class TestAnyText:
-    @settings(PROPERTY, max_examples=600)
+    @settings(PROPERTY, max_examples=300)
     @given(text=TEXTS, named=st.booleans())
     def test_gives_waveforms_or_an_error_of_the_package(
         self, folder: Path, text: str, named: bool
