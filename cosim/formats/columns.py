@@ -206,7 +206,8 @@ def _read_numbers(table: TextTable, wanted: list[_Wanted]) -> list[FloatArray]:
     kinds = [(f"c{i}", "f8" if i in used else "U1") for i in range(len(table.columns))]
     text = table.body
     try:
-        if any("\n" + mark in text for mark in COMMENT_MARKS):
+        # The look for a single character is fast, that for two is not.
+        if any(mark in text and "\n" + mark in text for mark in COMMENT_MARKS):
             raise ValueError("comments stand among the rows")
         rows = _load(text, table.separator, kinds)
     except ValueError:

@@ -35,7 +35,7 @@ def read_bytes(path: Path) -> bytes:
         raise
     except (OSError, ValueError) as error:  # A NUL in the path is a ValueError.
         raise InputError(f"{path}: the file cannot be read: {error}") from None
-    if not data.strip():
+    if not data or data.isspace():
         raise WaveformError(f"{path}: the file is empty")
     return data
 
@@ -71,7 +71,7 @@ def read_text(path: Path) -> str:
             text = data.decode("utf-8-sig")
         except UnicodeDecodeError:
             text = data.decode("latin-1")
-    if not text.strip():
+    if not text or text.isspace():
         raise WaveformError(f"{path}: the file is empty")
     return text.replace("\r\n", "\n").replace("\r", "\n") if "\r" in text else text
 
