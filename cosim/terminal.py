@@ -126,10 +126,14 @@ def _number_table(result: GateResult) -> Table:
     table.add_row(
         "carrier at the probe",
         f"phase {math.degrees(pulse.phase_error):+.3f}°, "
-        f"off by {format_quantity(pulse.frequency_error, 'Hz')}, "
+        f"off by {_frequency(pulse.frequency_error)}, "
         f"extinction {pulse.extinction:.1f} dB",
     )
     return table
+
+
+def _frequency(value: float) -> str:
+    return "less than 1 Hz" if abs(value) < 1.0 else format_quantity(value, "Hz")
 
 
 def _or_dash(value: float, otherwise: str) -> str:
