@@ -144,7 +144,6 @@ def make_plan(bench: Testbench) -> Plan:
             compatibility=table.compatibility,
         )
     roots = confidential_roots([str(folder / Path(p).expanduser()) for p in table.confidential])
-    withheld = check_roots(deck, roots)
     deck = with_instances(with_parameters(deck, table.parameters), table.instances)
     stop = _stop(table, deck)
     check_window(bench, stop)
@@ -152,6 +151,7 @@ def make_plan(bench: Testbench) -> Plan:
     if bench.stimulus:
         deck, coarse = apply_stimuli(deck, bench.stimulus, folder=folder, stop=stop, step=step)
         notices += coarse
+    withheld = check_roots(deck, roots)
     drive = bench.drive
     probes = tuple(parse_probe(text) for text in (drive.probe, drive.i, drive.q) if text)
     if isinstance(drive.termination, float):

@@ -212,7 +212,9 @@ def test_a_confidential_file_leaves_no_samples_in_the_record(rc: Path) -> None:
     (rc / "kit").mkdir()
     (rc / "kit" / "wave.csv").write_text("time (ns),a (V)\n0,0.12345\n1,0.54321\n")
     file = {"source": "vin", "file": "kit/wave.csv"}
-    shot = capture_probe(make_plan(bench(file, folder=rc, confidential=["kit"])))
+    plan = make_plan(bench(file, folder=rc, confidential=["kit"]))
+    assert plan.notices == ()  # The file is found to be one of the confidential ones.
+    shot = capture_probe(plan)
     assert shot.waveform.v[-1] == pytest.approx(0.54321, rel=1e-9)
     assert shot.result is not None
     (kept,) = shot.result.data.values()
