@@ -144,6 +144,7 @@ def make_plan(bench: Testbench) -> Plan:
             compatibility=table.compatibility,
         )
     roots = confidential_roots([str(folder / Path(p).expanduser()) for p in table.confidential])
+    check_roots(deck, roots)  # Before names are looked up in lines that are cut in two.
     deck = with_instances(with_parameters(deck, table.parameters), table.instances)
     stop = _stop(table, deck)
     check_window(bench, stop)
@@ -151,7 +152,7 @@ def make_plan(bench: Testbench) -> Plan:
     if bench.stimulus:
         deck, coarse = apply_stimuli(deck, bench.stimulus, folder=folder, stop=stop, step=step)
         notices += coarse
-    withheld = check_roots(deck, roots)
+    withheld = check_roots(deck, roots)  # With the files of the stimuli.
     drive = bench.drive
     probes = tuple(parse_probe(text) for text in (drive.probe, drive.i, drive.q) if text)
     if isinstance(drive.termination, float):
