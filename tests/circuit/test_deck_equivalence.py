@@ -92,6 +92,11 @@ def test_encodings_and_line_ends_change_nothing(tmp_path: Path, encode: object) 
         # Temperatures: .temp wins over .options, whichever comes last.
         ".temp 127\n.options temp=50\nv1 in 0 sin(0 1 1g)\nr1 in out 1k tc1=1m\nr2 out 0 1k\n",
         ".param t=100\n.temp {t+27}\nv1 in 0 sin(0 1 1g)\nr1 in out 1k\nr2 out 0 '10*temper'\n",
+        # Lengths in um: the scale holds for the whole deck, and the last of two counts.
+        "v1 in 0 sin(0.9 0.9 1g)\nr1 in out 1k\nm1 out in 0 0 mm w=10 l=1\nx1 out 0 kit\n"
+        ".model mm nmos level=1 kp=50u lambda=0.1 tox=5n\n.options scale=2u post parser\n"
+        ".subckt kit a b w=3\nm1 a a b b mm w={w} l=1 ad={w*2} pd={w}\n.ends\n"
+        ".include scale.inc\n",
         # A VDMOS has three nodes, and two thermal ones at will.
         "v1 in 0 sin(0 1 1g)\nr1 in out 1k\nm1 out in 0 vm\nm2 out in 0 tj tc vm thermal\n"
         "r2 tj 0 1\nr3 tc 0 1\n.model vm vdmos vto=0.5\n",
@@ -104,6 +109,7 @@ def test_encodings_and_line_ends_change_nothing(tmp_path: Path, encode: object) 
 def test_corner_cases_are_read_as_ngspice_reads_them(tmp_path: Path, body: str) -> None:
     (tmp_path / "rest.inc").write_text("+ 1k\n", encoding="utf-8")
     (tmp_path / "end.inc").write_text("r2 out 0 1k\n.end\nr3 out 0 2k\n", encoding="utf-8")
+    (tmp_path / "scale.inc").write_text(".option scale=1.0u\n.options parser scale=1.0u\n" * 2)
     text = f"title\n{OPTIONS}\n{body}{WRITING}"
     (tmp_path / "deck.cir").write_text(text, encoding="utf-8")
     wanted = original("deck.cir", tmp_path)
