@@ -169,7 +169,7 @@ def export(
 ) -> None:
     """Write what is in an archived run as files that other programs read."""
     from cosim.dispatch import load
-    from cosim.export import export_csv, export_deck, export_envelope
+    from cosim.exporting import export_csv, export_deck, export_envelope
 
     if deck is csv is envelope is None:
         raise InputError("say what to export: --deck DIR, --csv FILE or --envelope FILE")

@@ -11,6 +11,7 @@ from cosim.dsp.pulse import measure_pulse
 from cosim.fidelities import Views
 from cosim.guards import edge_warnings, floor_warnings, level_warnings, step_warnings
 from cosim.imported import import_waveform
+from cosim.line import through_line
 from cosim.quantum.channel import check_channel, nearest_unitary, pauli_transfer_matrix
 from cosim.quantum.fidelity import (
     Rotation,
@@ -176,12 +177,12 @@ def _capture(
     bench: Testbench, progress: Progress | None, clock: Clock
 ) -> tuple[Plan | None, Capture]:
     if bench.netlist is None:
-        shot = import_waveform(bench)
+        shot = through_line(bench, import_waveform(bench))
         clock.lap_capture(shot)
         return None, shot
     plan = make_plan(bench)
     clock.lap("deck")
-    shot = capture_probe(plan, progress=progress)
+    shot = through_line(bench, capture_probe(plan, progress=progress))
     clock.lap_capture(shot)
     return plan, shot
 
@@ -212,7 +213,7 @@ def _second_run(
     """Simulate once more at half the step; give the pulse and the carrier in Hz."""
     if plan is None or not bench.accuracy.floor:
         return None, drive.carrier_frequency
-    shot = capture_probe(plan.half_step(), progress=progress)
+    shot = through_line(bench, capture_probe(plan.half_step(), progress=progress))
     clock.lap_capture(shot, "floor_")
     return drive.second_pulse(first.waveform, shot.waveform)
 

@@ -1,7 +1,7 @@
 """Waveforms that were simulated or measured elsewhere, taken into the same path."""
 
 import hashlib
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping, Sequence
 from pathlib import Path
 
 import numpy as np
@@ -12,7 +12,7 @@ from cosim.circuit.probe import Probe, parse_probe
 from cosim.dsp.resampling import resample
 from cosim.dsp.upconversion import upconvert
 from cosim.errors import TestbenchError, WaveformError, near_names
-from cosim.formats.columns import read_columns
+from cosim.formats.columns import column_names, read_columns
 from cosim.formats.rawfile import read_raw
 from cosim.schema import WaveformTable
 from cosim.testbench import Testbench
@@ -46,13 +46,10 @@ def import_waveform(bench: Testbench) -> Capture:
     if table is None:
         raise TestbenchError(f"{bench.source or 'the testbench'} has no table [waveform]")
     path = Path(bench.folder) / Path(table.file).expanduser()
-    columns = _read(table, path)
     drive = bench.drive
-    waves = [
-        _combine(parse_probe(text), columns, path)
-        for text in (drive.probe, drive.i, drive.q)
-        if text is not None
-    ]
+    probes = [parse_probe(text) for text in (drive.probe, drive.i, drive.q) if text is not None]
+    columns = _read(table, path, probes)
+    waves = [_combine(probe, columns, path) for probe in probes]
     wave, extra, notices = waves[0], dict[str, Waveform](), tuple[str, ...]()
     step = float(np.median(np.diff(wave.t)))
     if drive.probe is None:
@@ -66,9 +63,20 @@ def import_waveform(bench: Testbench) -> Capture:
     return Capture(wave, extra, step, (DeckFile(str(path), "", sha256),), notices, None)
 
 
-def _read(table: WaveformTable, path: Path) -> dict[str, Waveform]:
+def _read(table: WaveformTable, path: Path, probes: Sequence[Probe]) -> dict[str, Waveform]:
     if path.suffix.lower() != ".raw":
-        return read_columns(path, time=table.time, time_unit=table.time_unit, unit=table.unit)
+        # Only what the probes name is read: other columns may hold text or decibels.
+        names = column_names(path)
+        wanted = dict.fromkeys(
+            _found(probe, term, names, path) for probe in probes for _, term in probe.terms
+        )
+        return read_columns(
+            path,
+            time=table.time,
+            values=tuple(wanted),
+            time_unit=table.time_unit,
+            unit=table.unit,
+        )
     for key in ("time", "time_unit", "unit"):
         if getattr(table, key) is not None:
             raise TestbenchError(f"table [waveform], key '{key}': a raw file says that itself")
@@ -85,22 +93,25 @@ def _read(table: WaveformTable, path: Path) -> dict[str, Waveform]:
 
 def _combine(probe: Probe, columns: Mapping[str, Waveform], path: Path) -> Waveform:
     """Add up columns by the weights of a probe; "ch1" and "v(ch1)" name the same column."""
-    lower = {name.lower(): wave for name, wave in columns.items()}
-    parts = []
-    for weight, name in probe.terms:
-        inner = name[name.find("(") + 1 : -1]
-        found = next((lower[key] for key in (name, inner, f"{inner}#branch") if key in lower), None)
-        if found is None:
-            raise TestbenchError(
-                f"table [drive], probe '{probe.text}': {path} has no column '{inner}'; "
-                f"{near_names(inner, columns)}"
-            )
-        parts.append((weight, found))
+    parts = [(weight, columns[_found(probe, term, columns, path)]) for weight, term in probe.terms]
     first = parts[0][1]
     if len({wave.unit for _, wave in parts}) > 1:
         raise TestbenchError(f"table [drive], probe '{probe.text}' mixes volts and amperes")
     total = np.sum([weight * wave.v for weight, wave in parts], axis=0)
     return Waveform(first.t, np.asarray(total), unit=first.unit)
+
+
+def _found(probe: Probe, term: str, names: Iterable[str], path: Path) -> str:
+    """Give the column that a term of a probe names."""
+    inner = term[term.find("(") + 1 : -1]
+    lower = {name.lower(): name for name in names}
+    for key in (term, inner, f"{inner}#branch"):
+        if key in lower:
+            return lower[key]
+    raise TestbenchError(
+        f"table [drive], probe '{probe.text}': {path} has no column '{inner}'; "
+        f"{near_names(inner, lower)}"
+    )
 
 
 def _coarse(wave: Waveform, step: float) -> tuple[str, ...]:

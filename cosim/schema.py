@@ -123,6 +123,11 @@ class DriveTable:
         It must be given when there is a netlist.
     attenuation : float
         Between probe and qubit, in dB.
+    line : str or None
+        Touchstone file of the line between probe and attenuator, relative to the testbench;
+        needs the extra `rf`. The window of the gate is then meant at the line's far end.
+    line_ports : two integers, or two pairs of them
+        Near and far port of the line, from 1; for a differential pair [[p, n], [p_far, n_far]].
     impedance : float or None
         Reference impedance in ohm that turns a probe current into an incident voltage;
         default: the termination, or 50 ohm when that is in the deck.
@@ -136,6 +141,8 @@ class DriveTable:
         None
     )
     attenuation: Annotated[float, Quantity("dB")] = 0.0
+    line: str | None = None
+    line_ports: tuple[int, int] | tuple[tuple[int, int], tuple[int, int]] = (1, 2)
     impedance: Resistance | None = None
 
     def __post_init__(self) -> None:

@@ -98,6 +98,27 @@ def read_columns(
     return waveforms
 
 
+def column_names(path: str | os.PathLike[str]) -> tuple[str, ...]:
+    """Give the names of the columns of a text file, without their units.
+
+    Parameters
+    ----------
+    path : path
+        The file.
+
+    Returns
+    -------
+    tuple of str
+        In the file's order; "column 2" where there is no name.
+
+    Raises
+    ------
+    MissingFileError, InputError, WaveformError
+        If there is no such file, or it cannot be read as a table.
+    """
+    return tuple(column.name for column in read_head(read_text(Path(path)), str(path)).columns)
+
+
 def _time_column(table: TextTable, name: str | None, given: str | None) -> _Wanted:
     index = 0 if name is None else _find(table, name)
     column = table.columns[index]

@@ -11,7 +11,7 @@ import cosim
 from cosim.capture import make_plan
 from cosim.comparison import compare_runs
 from cosim.errors import InputError, TestbenchError
-from cosim.export import export_csv, export_deck, export_envelope
+from cosim.exporting import export_csv, export_deck, export_envelope
 from cosim.formats.columns import read_columns
 from cosim.formats.rawfile import read_raw
 from cosim.probe_run import estimate_run
