@@ -12,7 +12,7 @@ from cosim.circuit.confidential import confidential_roots, withhold
 from cosim.circuit.netlist import load_deck
 from cosim.circuit.simulator import simulate
 from cosim.errors import DeckError, InputError, TestbenchError
-from cosim.export import export_deck
+from cosim.exporting import export_deck
 from cosim.result import GateResult
 from cosim.testbench import Testbench, make_testbench
 
