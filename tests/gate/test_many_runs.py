@@ -5,6 +5,7 @@ import os
 import subprocess
 import sys
 import tempfile
+from collections.abc import Iterator
 from dataclasses import replace
 from pathlib import Path
 
@@ -13,6 +14,7 @@ import pytest
 
 import cosim
 from cosim.capture import capture_probe, make_plan
+from cosim.circuit.client import client_of_this_process
 from cosim.errors import SimulationError
 
 EXAMPLES = Path(__file__).parents[2] / "examples"
@@ -22,13 +24,21 @@ def children() -> int:
     return len(psutil.Process().children(recursive=True))
 
 
-def scratch_folders() -> int:
-    return len(list(Path(tempfile.gettempdir()).glob("qcosim-*")))
+@pytest.fixture
+def own_folder(monkeypatch: pytest.MonkeyPatch) -> Iterator[Path]:
+    """A temporary folder that no other process writes to, for a new host."""
+    folder = Path(tempfile.mkdtemp(prefix="many-", dir=tempfile.gettempdir()))
+    client_of_this_process().close()
+    monkeypatch.setattr(tempfile, "tempdir", str(folder))
+    yield folder
+    client_of_this_process().close()
+    assert list(folder.iterdir()) == []
+    folder.rmdir()
 
 
 @pytest.mark.ngspice
 @pytest.mark.full
-def test_five_hundred_runs_leave_nothing_behind() -> None:
+def test_five_hundred_runs_leave_nothing_behind(own_folder: Path) -> None:
     """Transistor-level runs in a row, every tenth failing and every twentieth timing out."""
     bench = cosim.load_testbench(EXAMPLES / "x90_spin.toml")
     plan = make_plan(bench)
@@ -51,11 +61,21 @@ def test_five_hundred_runs_leave_nothing_behind() -> None:
     for number in range(20):
         run(number)
     gc.collect()
-    before = process.memory_info().rss, process.num_fds(), children(), scratch_folders()
+    before = (
+        process.memory_info().rss,
+        process.num_fds(),
+        children(),
+        len(list(own_folder.iterdir())),
+    )
     for number in range(500):
         run(number)
     gc.collect()
-    after = process.memory_info().rss, process.num_fds(), children(), scratch_folders()
+    after = (
+        process.memory_info().rss,
+        process.num_fds(),
+        children(),
+        len(list(own_folder.iterdir())),
+    )
     assert counts == {"good": 520 - 26 - 52, "failed": 26 + 52}
     # Less than 1 MB of growth in the caller, and nothing else more than before.
     assert after[0] - before[0] < 1e6
