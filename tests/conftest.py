@@ -8,6 +8,8 @@ import pytest
 
 from cosim.testbench import Testbench, make_testbench
 
+pytest_plugins = ["tests.validation"]
+
 Tables = dict[str, dict[str, Any]]
 BenchMaker = Callable[..., Testbench]
 
