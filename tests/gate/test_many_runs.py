@@ -24,6 +24,10 @@ def children() -> int:
     return len(psutil.Process().children(recursive=True))
 
 
+def entries(folder: Path) -> int:
+    return len(list(folder.iterdir()))
+
+
 @pytest.fixture
 def own_folder(monkeypatch: pytest.MonkeyPatch) -> Iterator[Path]:
     """A temporary folder that no other process writes to, for a new host."""
