@@ -66,7 +66,9 @@ class Views:
         return math.nan if second is None else channel_distance(self.channel, second.channel())
 
     def _pair(self, channel: ComplexArray) -> tuple[float, float]:
-        return average_gate_fidelity(channel, self.target), process_fidelity(channel, self.target)
+        # Rounding may carry a perfect gate past 1.
+        average = average_gate_fidelity(channel, self.target)
+        return min(1.0, average), min(1.0, process_fidelity(channel, self.target))
 
     def _fidelity(
         self, channel: ComplexArray, frame: FreeFrame, other: ComplexArray | None

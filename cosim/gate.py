@@ -10,7 +10,7 @@ from cosim.dsp.demodulation import demodulate
 from cosim.dsp.pulse import measure_pulse
 from cosim.fidelities import Views
 from cosim.guards import edge_warnings, floor_warnings, level_warnings, step_warnings
-from cosim.imported import import_waveform
+from cosim.imported import every_second, import_waveform
 from cosim.line import through_line
 from cosim.quantum.channel import check_channel, nearest_unitary, pauli_transfer_matrix
 from cosim.quantum.fidelity import (
@@ -210,9 +210,16 @@ def _second_run(
     progress: Progress | None,
     clock: Clock,
 ) -> tuple[Pulse | None, float]:
-    """Simulate once more at half the step; give the pulse and the carrier in Hz."""
-    if plan is None or not bench.accuracy.floor:
+    """Simulate once more at half the step; give the pulse and the carrier in Hz.
+
+    An imported waveform is taken once more by every second sample instead.
+    """
+    if not bench.accuracy.floor:
         return None, drive.carrier_frequency
+    if plan is None:
+        halved = every_second(first.waveform, drive.carrier_frequency)
+        second = None if halved is None else drive.pulse(halved)
+        return second, drive.carrier_frequency
     shot = through_line(bench, capture_probe(plan.half_step(), progress=progress))
     clock.lap_capture(shot, "floor_")
     return drive.second_pulse(first.waveform, shot.waveform)

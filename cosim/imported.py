@@ -9,7 +9,6 @@ import numpy as np
 from cosim.capture import Capture, check_window
 from cosim.circuit.netlist import DeckFile
 from cosim.circuit.probe import Probe, parse_probe
-from cosim.dsp.resampling import resample
 from cosim.dsp.upconversion import upconvert
 from cosim.errors import TestbenchError, WaveformError, near_names
 from cosim.formats.columns import column_names, read_columns
@@ -18,8 +17,8 @@ from cosim.schema import WaveformTable
 from cosim.testbench import Testbench
 from cosim.waveform import Waveform
 
-# Interpolation error over the largest value that is worth a warning: it costs about its square.
-COARSE = 1e-3
+# Samples per carrier period that every second sample must still have to tell the error.
+LEAST_HALVED = 20
 
 
 def import_waveform(bench: Testbench) -> Capture:
@@ -50,17 +49,43 @@ def import_waveform(bench: Testbench) -> Capture:
     probes = [parse_probe(text) for text in (drive.probe, drive.i, drive.q) if text is not None]
     columns = _read(table, path, probes)
     waves = [_combine(probe, columns, path) for probe in probes]
-    wave, extra, notices = waves[0], dict[str, Waveform](), tuple[str, ...]()
+    wave, extra = waves[0], dict[str, Waveform]()
     step = float(np.median(np.diff(wave.t)))
     if drive.probe is None:
         assert isinstance(drive.carrier, float)  # DriveTable refuses anything else.
         extra = dict(zip(("i", "q"), waves, strict=False))
         wave = upconvert(wave, waves[1] if len(waves) > 1 else None, drive.carrier)
-    else:
-        notices = _coarse(wave, step)
     check_window(bench, float(wave.t[-1]), float(wave.t[0]))
     sha256 = hashlib.sha256(path.read_bytes()).hexdigest()
-    return Capture(wave, extra, step, (DeckFile(str(path), "", sha256),), notices, None)
+    return Capture(wave, extra, step, (DeckFile(str(path), "", sha256),), (), None)
+
+
+def every_second(wave: Waveform, carrier_frequency: float) -> Waveform | None:
+    """Give a waveform by every second of its samples, to tell what lies between them.
+
+    The curve through half of the samples errs sixteen times as much where the samples resolve
+    the signal, so the change it makes bounds the error of the curve through all of them.
+
+    Parameters
+    ----------
+    wave : Waveform
+        Shape (n,).
+    carrier_frequency : float
+        In Hz.
+
+    Returns
+    -------
+    Waveform or None
+        The first, third, ... and the last sample; None when fewer than 20 would be left of each
+        carrier period.
+    """
+    keep = np.arange(0, wave.t.size, 2)
+    if keep[-1] != wave.t.size - 1:
+        keep[-1] = wave.t.size - 1
+    t = wave.t[keep]
+    if 1.0 / (carrier_frequency * float(np.median(np.diff(t)))) < LEAST_HALVED * (1 - 1e-9):
+        return None
+    return Waveform(t, wave.v[keep], wave.unit)
 
 
 def _read(table: WaveformTable, path: Path, probes: Sequence[Probe]) -> dict[str, Waveform]:
@@ -111,14 +136,4 @@ def _found(probe: Probe, term: str, names: Iterable[str], path: Path) -> str:
     raise TestbenchError(
         f"table [drive], probe '{probe.text}': {path} has no column '{inner}'; "
         f"{near_names(inner, lower)}"
-    )
-
-
-def _coarse(wave: Waveform, step: float) -> tuple[str, ...]:
-    error = resample(wave, step).interpolation_error / float(np.abs(wave.v).max() or 1.0)
-    if error <= COARSE:
-        return ()
-    return (
-        f"the imported samples are coarse: the curve between them may be off by {error:.1e} of "
-        "the largest value",
     )

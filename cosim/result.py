@@ -167,7 +167,8 @@ class GateResult:
         L2, population that comes back from the other levels; 0 for two levels.
     numerical_floor : float
         1 - F_avg between the channel and that of a second run at half the step and tighter
-        tolerances; NaN when that run was left out.
+        tolerances, or, for an imported waveform, of every second of its samples; NaN when that
+        was left out, or the waveform has under 40 samples per carrier period.
     rotating_wave_error : float
         1 - F_avg between the headline channel and that of the rotating-wave path, which is
         solved by an independent solver on the demodulated envelope.

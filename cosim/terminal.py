@@ -113,7 +113,9 @@ def _number_table(result: GateResult) -> Table:
     table.add_row("phase slip per gate", f"{math.degrees(result.phase_slip):+.4f}°")
     table.add_row("leakage, seepage", f"{result.leakage:.2e}, {result.seepage:.2e}")
     table.add_row("unitarity", f"{result.unitarity:.7f}")
-    table.add_row("numerical floor", _or_dash(result.numerical_floor, "run with --floor"))
+    table.add_row(
+        "numerical floor", _or_dash(result.numerical_floor, "not asked for, or too few samples")
+    )
     table.add_row("rotating-wave error", _or_dash(result.rotating_wave_error, "none here"))
     if not math.isnan(result.reference_error):
         table.add_row("QuTiP, full waveform", f"{result.reference_error:.2e}")
@@ -127,7 +129,7 @@ def _number_table(result: GateResult) -> Table:
         "carrier at the probe",
         f"phase {math.degrees(pulse.phase_error):+.3f}°, "
         f"off by {_frequency(pulse.frequency_error)}, "
-        f"extinction {pulse.extinction:.1f} dB",
+        f"extinction {'-' if math.isnan(pulse.extinction) else f'{pulse.extinction:.1f} dB'}",
     )
     return table
 
