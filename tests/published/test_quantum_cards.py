@@ -26,7 +26,9 @@ from cosim.quantum.qubit import Qubit
 from cosim.quantum.reference import evolve_rotating_wave
 from cosim.quantum.steps import DriveSpline
 from cosim.waveform import ComplexArray, FloatArray
+from tests import sources
 from tests.quantum.drives import CARRIER, constant, spline
+from tests.validation import Validate
 
 DIGITS = 1e-6  # Seven digits in the card.
 X = target_unitary((1, 0, 0), math.pi)
@@ -53,7 +55,9 @@ def infidelity(channel: ComplexArray, target: ComplexArray) -> float:
 
 
 class TestMetrics:
-    def test_average_and_process_fidelity(self) -> None:
+    TOPIC = "metrics"
+
+    def test_average_and_process_fidelity(self, validate: Validate) -> None:
         # A01: M. Horodecki et al., "General teleportation channel, singlet fraction, and
         # quasidistillation", Phys. Rev. A 60, 1888 (1999); M. A. Nielsen, Phys. Lett. A 303, 249
         # (2002); recalled from memory. A depolarising channel of F_pro = 0.99.
@@ -64,82 +68,131 @@ class TestMetrics:
             channel = (keep * np.eye(d * d) + (1 - keep) * mix).astype(complex)
             target = np.eye(d, dtype=complex)
             assert process_fidelity(channel, target) == pytest.approx(0.99, abs=1e-14)
-            assert average_gate_fidelity(channel, target) == pytest.approx(wanted, rel=DIGITS)
+            validate(
+                f"F_avg of a depolarising channel with F_pro = 0.99, d = {d}",
+                sources.HORODECKI_NIELSEN + ", F_avg = (d F_pro + 1)/(d + 1)",
+                wanted,
+                average_gate_fidelity(channel, target),
+                rel=DIGITS,
+                card="A01",
+            )
 
-    def test_average_fidelity_with_leakage(self) -> None:
+    def test_average_fidelity_with_leakage(self, validate: Validate) -> None:
         # A02: L. H. Pedersen, N. M. Moller, K. Molmer, "Fidelity of quantum operations", Phys.
         # Lett. A 367, 47 (2007), recalled from memory. L = 0.01, phase 0.05 rad.
         keep, leak, phase = math.sqrt(0.99), math.sqrt(0.01), np.exp(0.05j)
         u = np.array([[1, 0, 0], [0, keep * phase, -leak], [0, leak * phase, keep]])
         channel = unitary_superoperator(u)
-        assert average_gate_fidelity(channel, IDENTITY) == pytest.approx(0.9945813, rel=DIGITS)
-        assert infidelity(channel, IDENTITY) == pytest.approx(0.005418679, rel=DIGITS)
+        source = sources.PEDERSEN + ", F = (Tr M M^dag + |Tr M|^2)/(d (d + 1))"
+        fidelity = average_gate_fidelity(channel, IDENTITY)
+        validate(
+            "F_avg with 1 % leakage of |1>", source, 0.9945813, fidelity, rel=DIGITS, card="A02"
+        )
+        error = infidelity(channel, IDENTITY)
+        validate(
+            "1 - F_avg with 1 % leakage of |1>", source, 0.005418679, error, rel=DIGITS, card="A02"
+        )
 
-    def test_unitarity(self) -> None:
+    def test_unitarity(self, validate: Validate) -> None:
         # A11: J. Wallman et al., "Estimating the coherence of noise", New J. Phys. 17, 113020
         # (2015), recalled from memory. Amplitude damping of 0.02 comes from the kernel itself:
         # T1 = t/(-ln 0.98), T2 = 2 T1.
         t1 = 100e-9 / -math.log(0.98)
         idle = evolve(Qubit(CARRIER, t1=t1), constant(0.0, 0.0, 100e-9), 0.0, 100e-9)
-        assert unitarity(idle) == pytest.approx(0.9734667, rel=DIGITS)
-        assert infidelity(idle, IDENTITY) == pytest.approx(0.006683502, rel=DIGITS)
-        assert incoherent_infidelity(idle) == pytest.approx(0.006677928, rel=DIGITS)
         mix = np.outer([1, 0, 0, 1], [1, 0, 0, 1]) / 2
         depolarised = (0.99 * np.eye(4) + 0.01 * mix).astype(complex)
-        assert unitarity(depolarised) == pytest.approx(0.9801, rel=DIGITS)
-        assert unitarity(unitary_superoperator(X90)) == pytest.approx(1.0, rel=DIGITS)
+        for quantity, wanted, got in (
+            ("unitarity of amplitude damping of 0.02 from the kernel", 0.9734667, unitarity(idle)),
+            ("1 - F_avg of amplitude damping of 0.02", 0.006683502, infidelity(idle, IDENTITY)),
+            (
+                "incoherent part of 1 - F_avg of amplitude damping of 0.02",
+                0.006677928,
+                incoherent_infidelity(idle),
+            ),
+            ("unitarity of depolarisation by 1 %", 0.9801, unitarity(depolarised)),
+            ("unitarity of a rotation", 1.0, unitarity(unitary_superoperator(X90))),
+        ):
+            validate(quantity, sources.WALLMAN, wanted, got, rel=DIGITS, card="A11")
 
-    def test_conditional_phase_error(self) -> None:
+    def test_conditional_phase_error(self, validate: Validate) -> None:
         # A15: A01 with d = 4, computed from the formula. Conditional phase wrong by 0.05 rad.
         cz = np.diag([1, 1, 1, -1]).astype(complex)
         gate = np.diag([1, 1, 1, -np.exp(0.05j)])
-        assert infidelity(unitary_superoperator(gate), cz) == pytest.approx(
-            0.0003749219, rel=DIGITS
+        validate(
+            "1 - F_avg of a CZ with a conditional phase wrong by 0.05 rad",
+            sources.HORODECKI_NIELSEN + "; F_pro = (10 + 6 cos dphi)/16",
+            0.0003749219,
+            infidelity(unitary_superoperator(gate), cz),
+            rel=DIGITS,
+            card="A15",
         )
 
 
 class TestRectangularPulses:
     """SU(2) algebra; the channels come from the rotating-wave solver at rtol 1e-12."""
 
-    def test_over_rotation(self) -> None:
+    TOPIC = "dynamics in the rotating-wave approximation"
+
+    def test_over_rotation(self, validate: Validate) -> None:
         # A03: elementary SU(2) algebra, computed from the formula. Amplitude too large by 1 %.
         qubit = Qubit(CARRIER)
         half = rectangle(qubit, 10.1e6, 50e-9)
-        assert infidelity(half, X) == pytest.approx(0.0001644799, rel=DIGITS)
-        assert 1 - process_fidelity(half, X) == pytest.approx(0.0002467198, rel=DIGITS)
-        assert apply_channel(half, GROUND)[0, 0].real == pytest.approx(0.0002467198, rel=DIGITS)
         quarter = rectangle(qubit, 10.1e6, 25e-9)
-        assert infidelity(quarter, X90) == pytest.approx(4.112251e-05, rel=DIGITS)
+        left = apply_channel(half, GROUND)[0, 0].real
+        for quantity, wanted, got in (
+            ("1 - F_avg of X180 over-rotated by 1 %", 0.0001644799, infidelity(half, X)),
+            ("1 - F_pro of X180 over-rotated by 1 %", 0.0002467198, 1 - process_fidelity(half, X)),
+            ("population left in |0> by X180 over-rotated by 1 %", 0.0002467198, left),
+            ("1 - F_avg of X90 over-rotated by 1 %", 4.112251e-05, infidelity(quarter, X90)),
+        ):
+            source = sources.ALGEBRA + ", (2/3) sin^2(theta eps/2)"
+            validate(quantity, source, wanted, got, rel=DIGITS, card="A03")
 
-    def test_detuning(self) -> None:
+    def test_detuning(self, validate: Validate) -> None:
         # A04: elementary SU(2) algebra, computed from the formula. Delta/Omega = 0.05; either sign.
         qubit = Qubit(CARRIER)
         for sign in (1, -1):
             half = rectangle(qubit, 10e6, 50e-9, detuning=sign * 0.5e6)
-            assert infidelity(half, X) == pytest.approx(0.001665071, rel=DIGITS)
             quarter = rectangle(qubit, 10e6, 25e-9, detuning=sign * 0.5e6)
-            assert infidelity(quarter, X90) == pytest.approx(0.0008329712, rel=DIGITS)
+            for name, wanted, got in (
+                ("X180", 0.001665071, infidelity(half, X)),
+                ("X90", 0.0008329712, infidelity(quarter, X90)),
+            ):
+                quantity = f"1 - F_avg of {name} detuned by 5 % of the Rabi frequency"
+                validate(quantity, sources.ALGEBRA, wanted, got, rel=DIGITS, card="A04")
 
-    def test_phase(self) -> None:
+    def test_phase(self, validate: Validate) -> None:
         # A05: elementary SU(2) algebra, computed from the formula. Carrier phase of 0.02 rad.
         qubit = Qubit(CARRIER)
         half = rectangle(qubit, 10e6, 50e-9, phase=0.02)
-        assert infidelity(half, X) == pytest.approx(0.0002666311, rel=DIGITS)
         quarter = rectangle(qubit, 10e6, 25e-9, phase=0.02)
-        assert infidelity(quarter, X90) == pytest.approx(0.0001333222, rel=DIGITS)
+        for name, wanted, got in (
+            ("X180", 0.0002666311, infidelity(half, X)),
+            ("X90", 0.0001333222, infidelity(quarter, X90)),
+        ):
+            quantity = f"1 - F_avg of {name} with its axis off by 0.02 rad"
+            validate(quantity, sources.ALGEBRA, wanted, got, rel=DIGITS, card="A05")
 
-    def test_duration(self) -> None:
+    def test_duration(self, validate: Validate) -> None:
         # A06, static part: A03 with delta = Omega dt, computed from the formula. 50 ps of 20 ns.
         half = rectangle(Qubit(CARRIER), 25e6, 20.05e-9)
-        assert infidelity(half, X) == pytest.approx(1.028079e-05, rel=DIGITS)
+        validate(
+            "1 - F_avg of X180 of 20 ns that lasts 50 ps too long",
+            sources.ALGEBRA,
+            1.028079e-05,
+            infidelity(half, X),
+            rel=DIGITS,
+            card="A06",
+        )
 
-    def test_rabi_oscillation(self) -> None:
+    def test_rabi_oscillation(self, validate: Validate) -> None:
         # B01: I. I. Rabi, Phys. Rev. 51, 652 (1937), recalled from memory.
         channel = rectangle(Qubit(CARRIER), 10e6, 50e-9, detuning=5e6)
         excited = apply_channel(channel, GROUND)[1, 1].real
-        assert excited == pytest.approx(0.772813, rel=DIGITS)
+        quantity = "population of |1> at 10 MHz, detuned by 5 MHz, after 50 ns"
+        validate(quantity, sources.RABI, 0.772813, excited, rel=DIGITS, card="B01")
 
-    def test_off_resonant_neighbour(self) -> None:
+    def test_off_resonant_neighbour(self, validate: Validate) -> None:
         # B20: M. Russ et al., Phys. Rev. B 97, 085421 (2018), recalled from memory. A half turn at
         # 5 MHz, neighbour 20 MHz away; it comes back at sqrt(3) and sqrt(15) times 5 MHz.
         for detuning, wanted in (
@@ -150,58 +203,91 @@ class TestRectangularPulses:
             channel = rectangle(Qubit(CARRIER), 5e6, 100e-9, detuning=detuning)
             excited = apply_channel(channel, GROUND)[1, 1].real
             # The zero is a zero up to the solver's tolerance.
-            assert excited == pytest.approx(wanted, rel=DIGITS, abs=1e-10)
+            validate(
+                f"population of a neighbour {detuning / 5e6:.4g} Rabi frequencies away after X180",
+                sources.RUSS,
+                wanted,
+                excited,
+                rel=DIGITS,
+                abs=1e-10,
+                card="B20",
+            )
 
 
 class TestRelaxation:
-    def test_idle(self) -> None:
+    TOPIC = "dynamics without rotating wave"
+
+    def test_idle(self, validate: Validate) -> None:
         # A08: trace of the Pauli transfer matrix with A01, computed from the formula; the same at
         # any temperature. Seven digits of F, and a relative 1e-5 granted by the card.
         for population in (0.0, 0.2):
             qubit = Qubit(CARRIER, t1=30e-6, t2=20e-6, thermal_population=population)
             idle = evolve(qubit, constant(0.0, 0.0, 100e-9), 0.0, 100e-9)
-            assert process_fidelity(idle, IDENTITY) == pytest.approx(0.9966743, rel=DIGITS)
-            assert average_gate_fidelity(idle, IDENTITY) == pytest.approx(0.9977829, rel=DIGITS)
-            assert infidelity(idle, IDENTITY) == pytest.approx(0.002217138, rel=1e-5)
+            for quantity, wanted, got, rel in (
+                ("F_pro", 0.9966743, process_fidelity(idle, IDENTITY), DIGITS),
+                ("F_avg", 0.9977829, average_gate_fidelity(idle, IDENTITY), DIGITS),
+                ("1 - F_avg", 0.002217138, infidelity(idle, IDENTITY), 1e-5),
+            ):
+                quantity += f" of an idle of 100 ns, T1 30 us, T2 20 us, thermal {population}"
+                source = "trace of the Pauli transfer matrix, computed from the formula"
+                validate(quantity, source, wanted, got, rel=rel, card="A08")
 
-    def test_driven(self) -> None:
+    def test_driven(self, validate: Validate) -> None:
         # A09: T. Abad et al., "Universal fidelity reduction of quantum operations from weak
         # dissipation", Phys. Rev. Lett. 129, 150504 (2022), recalled from memory. The number was
         # found by two other solvers to five digits, the tolerance is the card's.
         channel = rectangle(Qubit(CARRIER, t1=30e-6, t2=20e-6), 10e6, 50e-9)
-        assert infidelity(channel, X) == pytest.approx(0.0011099, rel=1e-3)
+        quantity = "1 - F_avg of X180 of 50 ns, T1 30 us, T2 20 us, by the rotating-wave solver"
+        got = infidelity(channel, X)
+        validate(quantity, sources.ABAD, 0.0011099, got, rel=1e-3, card="A09", digits=5)
 
-    def test_driven_by_the_real_waveform(self) -> None:
+    def test_driven_by_the_real_waveform(self, validate: Validate) -> None:
         # A09 through the kernel. At 62 GHz the counter-rotating part costs less than 1e-6.
         qubit = Qubit(10 * CARRIER, t1=30e-6, t2=20e-6)
         t = np.arange(round(50e-9 * qubit.frequency * 64) + 1) / (qubit.frequency * 64)
         drive = spline(t, 2 * np.pi * 10e6 * np.cos(qubit.omega * t))
         channel = evolve(qubit, drive, 0.0, 50e-9)
-        assert infidelity(channel, X) == pytest.approx(0.0011099, rel=2e-3)
+        quantity = "1 - F_avg of X180 of 50 ns, T1 30 us, T2 20 us, by the kernel"
+        got = infidelity(channel, X)
+        validate(quantity, sources.ABAD, 0.0011099, got, rel=2e-3, card="A09", digits=5)
 
-    def test_frequency_offset_while_idle(self) -> None:
+    def test_frequency_offset_while_idle(self, validate: Validate) -> None:
         # A16: A03 about z, computed from the formula. 1 kHz for 1 us: a qubit 1 kHz below the
         # frame of the target falls behind it.
         idle = evolve(Qubit(1e9 - 1e3), constant(0.0, 0.0, 1e-6), 0.0, 1e-6)
         channel = phase_frame(idle, 0.0, 2 * np.pi * -1e3 * 1e-6)
-        assert infidelity(channel, IDENTITY) == pytest.approx(6.579715e-06, rel=DIGITS)
+        validate(
+            "1 - F_avg of an idle of 1 us, 1 kHz off the frame",
+            sources.ALGEBRA + ", (2/3) sin^2(pi df t)",
+            6.579715e-06,
+            infidelity(channel, IDENTITY),
+            rel=DIGITS,
+            card="A16",
+        )
 
-    def test_composition_of_t2(self) -> None:
+    def test_composition_of_t2(self, validate: Validate) -> None:
         # B21: P. Krantz et al., Appl. Phys. Rev. 6, 021318 (2019), section III, recalled from
         # memory. T1 = T2 = 50 us gives T_phi = 100 us.
         qubit = Qubit(CARRIER, t1=50e-6, t2=50e-6)
-        assert 1 / qubit.gamma_phi == pytest.approx(100e-6, rel=DIGITS)
-        dephasing = qubit.collapse_operators()[1]
-        assert dephasing[1, 1].real == pytest.approx(141.4214, rel=DIGITS)
+        source = sources.KRANTZ + ", section III, 1/T2 = 1/(2 T1) + 1/T_phi"
+        dephasing = qubit.collapse_operators()[1][1, 1].real
+        quantity = "collapse operator of pure dephasing, T1 = T2 = 50 us"
+        validate(quantity, source, 141.4214, dephasing, "s^-1/2", rel=DIGITS, card="B21")
+        t_phi = 1 / qubit.gamma_phi
+        validate("T_phi, T1 = T2 = 50 us", source, 100e-6, t_phi, "s", rel=DIGITS, card="B21")
         idle = evolve(qubit, constant(0.0, 0.0, 1e-6), 0.0, 1e-6)
         coherence = apply_channel(idle, np.full((2, 2), 0.5, dtype=complex))[0, 1].real
-        assert coherence == pytest.approx(0.5 * math.exp(-1 / 50), rel=DIGITS)
+        quantity = "coherence of an equal superposition after 1 us, T1 = T2 = 50 us"
+        wanted = 0.5 * math.exp(-1 / 50)
+        validate(quantity, source, wanted, coherence, rel=DIGITS, card="B21")
 
 
 class TestRealWaveform:
     """The kernel, without the rotating-wave approximation."""
 
-    def test_sign_of_the_drive_phase(self) -> None:
+    TOPIC = "dynamics without rotating wave"
+
+    def test_sign_of_the_drive_phase(self, validate: Validate) -> None:
         # B03 with s = -1 (|0> is the ground state): algebra of the rotating frame, computed from
         # the formula. phi = +90 degrees and a quarter turn take |0> to -x. The tolerance of 0.01
         # is the card's: the counter-rotating part acts as Rabi frequency over carrier, 1/400.
@@ -209,9 +295,11 @@ class TestRealWaveform:
         drive = spline(t, 2 * np.pi * 2.5e6 * np.cos(2 * np.pi * 1e9 * t + np.pi / 2))
         rho = apply_channel(evolve(Qubit(1e9), drive, 0.0, 100e-9), GROUND)
         bloch = [2 * rho[0, 1].real, -2 * rho[0, 1].imag, (rho[0, 0] - rho[1, 1]).real]
-        assert bloch == pytest.approx([-1, 0, 0], abs=0.01)
+        for name, wanted, got in zip("xyz", (-1.0, 0.0, 0.0), bloch, strict=True):
+            quantity = f"{name} of |0> after a quarter turn at a carrier phase of +90 degrees"
+            validate(quantity, sources.ROTATING_FRAME, wanted, got, abs=0.01, card="B03")
 
-    def test_bloch_siegert_shift(self) -> None:
+    def test_bloch_siegert_shift(self, validate: Validate) -> None:
         # B04: F. Bloch, A. Siegert, Phys. Rev. 57, 522 (1940); J. H. Shirley, Phys. Rev. 138, B979
         # (1965); recalled from memory. At resonance the quasienergy gap does not change with the
         # qubit's frequency (Shirley). Tolerance 1e-3 of the shift, as the card's.
@@ -228,11 +316,21 @@ class TestRealWaveform:
             return gap(1e9 + 2e5, drive_frequency) - gap(1e9 - 2e5, drive_frequency)
 
         resonance = brentq(slope, 1e9 - 1e6, 1e9 + 3e6, xtol=1.0)
-        assert resonance - 1e9 == pytest.approx(625097.7, rel=1e-3)
+        validate(
+            "Bloch-Siegert shift at a Rabi frequency of 50 MHz and 1 GHz",
+            sources.BLOCH_SIEGERT + ", Omega^2/(4 w0) + Omega^4/(64 w0^3)",
+            625097.7,
+            resonance - 1e9,
+            "Hz",
+            rel=1e-3,
+            card="B04",
+        )
 
 
 class TestTransmonShifts:
     """Dressed levels of the rotating-wave Hamiltonian; second-order formulas, 2 % as the cards."""
+
+    TOPIC = "dynamics in the rotating-wave approximation"
 
     @staticmethod
     def dressed(qubit: Qubit, rabi: float, detuning: float) -> tuple[FloatArray, FloatArray]:
@@ -242,7 +340,7 @@ class TestTransmonShifts:
         energies, states = np.linalg.eigh(hamiltonian)
         return energies / (2 * np.pi), np.abs(states[:2]) ** 2
 
-    def test_resonant(self) -> None:
+    def test_resonant(self, validate: Validate) -> None:
         # B11: second-order perturbation theory; L. S. Theis et al., EPL 123, 60001 (2018). The best
         # drive lies 666.7 kHz above f_01 for 20 MHz and -300 MHz.
         qubit = Qubit(CARRIER, 3, -0.3e9)
@@ -253,16 +351,20 @@ class TestTransmonShifts:
             return float(abs(energies[first] - energies[second]))
 
         best = minimize_scalar(gap, bounds=(-3e6, 3e6), method="bounded", options={"xatol": 10.0})
-        assert best.x == pytest.approx(666666.7, rel=0.02)
+        quantity = "best drive above f_01, Rabi frequency 20 MHz, anharmonicity -300 MHz"
+        source = sources.THEIS + ", -Omega^2/(2 alpha)"
+        validate(quantity, source, 666666.7, float(best.x), "Hz", rel=0.02, card="B11")
 
-    def test_off_resonant(self) -> None:
+    def test_off_resonant(self, validate: Validate) -> None:
         # B12: second-order perturbation theory; A. Schneider et al., Phys. Rev. A 97, 062334
         # (2018). 10 MHz, f_01 - f_d = -100 MHz, -330 MHz, seven levels.
         qubit = Qubit(CARRIER, 7, -0.33e9)
         energies, weights = self.dressed(qubit, 10e6, -100e6)
         zero, one = np.argmax(weights, axis=1)
         shift = energies[one] - energies[zero] + 100e6
-        assert shift == pytest.approx(-383720.9, rel=0.02)
+        quantity = "shift of f_01 by a drive of 10 MHz, f_01 - f_d = -100 MHz, alpha -330 MHz"
+        source = sources.SCHNEIDER + ", Omega^2 alpha/(2 Delta (Delta + alpha))"
+        validate(quantity, source, -383720.9, float(shift), "Hz", rel=0.02, card="B12")
 
 
 class Drag:
@@ -313,6 +415,8 @@ class TestDrag:
     B14: numbers by two other solvers to four digits; 2 % granted by the card. Five levels.
     """
 
+    TOPIC = "DRAG"
+
     def test_hamiltonian_of_the_paper(self) -> None:
         # B13: H = (E_x/2)(a + a^dag) + (E_y/2) i (a^dag - a).
         qubit = Qubit(CARRIER, 3)
@@ -321,16 +425,16 @@ class TestDrag:
         assert np.allclose(rotating_wave_hamiltonian(qubit, 3.0 - 4.0j), wanted, atol=1e-15)
 
     @pytest.mark.parametrize("kind", DRAG_CARDS)
-    def test_rotating_wave(self, kind: str) -> None:
+    def test_rotating_wave(self, validate: Validate, kind: str) -> None:
         t = np.linspace(0.0, Drag.duration, 3001)
         qubit = Qubit(CARRIER, 5, -300e6)
         channel = evolve_rotating_wave(qubit, Drag(kind, t).rate, t, rtol=1e-11)
-        lost, error = DRAG_CARDS[kind]
-        assert leakage(channel) == pytest.approx(lost, rel=0.02)
-        assert infidelity(channel, X) == pytest.approx(error, rel=0.02)
+        self.compare(
+            validate, kind, "rotating-wave solver", leakage(channel), infidelity(channel, X)
+        )
 
     @pytest.mark.parametrize("kind", DRAG_CARDS)
-    def test_real_waveform(self, kind: str) -> None:
+    def test_real_waveform(self, validate: Validate, kind: str) -> None:
         # What the counter-rotating part changes falls as one over the carrier (6 % of the smallest
         # leakage at 200 GHz); two carriers extrapolate to the card's rotating-wave approximation.
         found = []
@@ -341,9 +445,19 @@ class TestDrag:
             channel = evolve(qubit, drive, 0.0, float(t[-1]))
             found.append((leakage(channel), infidelity(channel, X)))
         limit = 2 * np.array(found[1]) - np.array(found[0])
-        assert limit == pytest.approx(DRAG_CARDS[kind], rel=0.02)
+        self.compare(validate, kind, "kernel, carrier to infinity", *limit)
 
-    def test_the_wrong_sign_leaks(self) -> None:
+    @staticmethod
+    def compare(validate: Validate, kind: str, how: str, lost: float, error: float) -> None:
+        """Compare leakage and infidelity with B14; four digits, and the card's 2 %."""
+        for name, wanted, got in zip(
+            ("L1", "1 - F_avg"), DRAG_CARDS[kind], (lost, error), strict=True
+        ):
+            quantity = f"{name} of X180 of 12 ns, {kind} DRAG, {how}"
+            source = sources.MOTZOI + "; numbers from two other solvers"
+            validate(quantity, source, wanted, got, rel=0.02, card="B14", digits=4)
+
+    def test_the_wrong_sign_leaks(self, validate: Validate) -> None:
         # Q = +(dI/dt)/alpha leaks 1.9e-8, the other sign 4.8e-4 (two digits, both solvers).
         t = np.arange(round(Drag.duration * CARRIER * 80) + 1) / (CARRIER * 80)
         qubit = Qubit(CARRIER, 5, -300e6)
@@ -356,5 +470,7 @@ class TestDrag:
             assert np.allclose(rate.imag[1:-1], sign * quadrature[1:-1], rtol=0, atol=1e3)
             drive: DriveSpline = spline(t, (rate * np.exp(1j * qubit.omega * t)).real)
             found[kind] = leakage(evolve(qubit, drive, 0.0, float(t[-1])))
-        assert found["wrong"] == pytest.approx(4.8e-4, rel=0.02)
+        quantity = "leakage of DRAG with the wrong sign"
+        source = "two other solvers on the Hamiltonian of Motzoi et al., two digits"
+        validate(quantity, source, 4.8e-4, found["wrong"], rel=0.02, digits=2)
         assert found["leak"] < 1e-6

@@ -1,0 +1,129 @@
+"""The works that the tests' expected values come from, as the validation table prints them.
+
+None of them was at hand when the tests were written: all are recalled from memory, and the numbers
+were computed anew from the formula named with each check.
+"""
+
+from tests.validation import MEMORY
+
+ABAD = (
+    'T. Abad et al., "Universal fidelity reduction of quantum operations from weak dissipation", '
+    f"Phys. Rev. Lett. 129, 150504 (2022), {MEMORY}"
+)
+ABRAGAM = f"A. Abragam, The Principles of Nuclear Magnetism (1961), chapter II, {MEMORY}"
+ALGEBRA = "SU(2) algebra with F_avg = (2 F_pro + 1)/3, computed from the formula"
+ALLEN_EBERLY = (
+    "L. Allen, J. H. Eberly, Optical Resonance and Two-Level Atoms (1975), area of a pulse, "
+    f"{MEMORY}"
+)
+BLOCH = f'F. Bloch, "Nuclear induction", Phys. Rev. 70, 460 (1946), {MEMORY}'
+BLOCH_SIEGERT = (
+    'F. Bloch, A. Siegert, "Magnetic resonance for nonrotating fields", Phys. Rev. 57, 522 (1940); '
+    'J. H. Shirley, "Solution of the Schroedinger equation with a Hamiltonian periodic in time", '
+    f"Phys. Rev. 138, B979 (1965), {MEMORY}"
+)
+CIRCUITS = "circuit theory, computed from the formula"
+CUMMINS = (
+    'S. Wimperis, "Broadband, narrowband, and passband composite pulses for use in advanced NMR '
+    'experiments", J. Magn. Reson. A 109, 221 (1994); H. K. Cummins, G. Llewellyn, J. A. Jones, '
+    '"Tackling systematic errors in quantum logic gates with composite rotations", Phys. Rev. A '
+    f"67, 042308 (2003), {MEMORY}"
+)
+FILTER_AREA = "linear filter and area theorem, computed from the formula"
+GAUSSIAN_INTEGRAL = "Gaussian integral, computed from the formula"
+GLAUBER = (
+    'R. J. Glauber, "Coherent and incoherent states of the radiation field", Phys. Rev. 131, 2766 '
+    f"(1963), {MEMORY}"
+)
+HANSON = (
+    'R. Hanson et al., "Spins in few-electron quantum dots", Rev. Mod. Phys. 79, 1217 (2007), '
+    f"section on T2*, {MEMORY}"
+)
+HORODECKI_NIELSEN = (
+    'M. Horodecki, P. Horodecki, R. Horodecki, "General teleportation channel, singlet fraction, '
+    'and quasidistillation", Phys. Rev. A 60, 1888 (1999); M. A. Nielsen, "A simple formula for '
+    'the average gate fidelity of a quantum dynamical operation", Phys. Lett. A 303, 249 (2002), '
+    f"{MEMORY}"
+)
+ITT = (
+    f"ITT, Reference Data for Radio Engineers, chapter on attenuators, {MEMORY}; computed from the "
+    "formula"
+)
+KRANTZ = (
+    'P. Krantz et al., "A quantum engineer\'s guide to superconducting qubits", Appl. Phys. Rev. '
+    f"6, 021318 (2019), {MEMORY}"
+)
+LOSS = (
+    'D. Loss, D. P. DiVincenzo, "Quantum computation with quantum dots", Phys. Rev. A 57, 120 '
+    '(1998); T. Meunier, V. E. Calado, L. M. K. Vandersypen, "Efficient controlled-phase gate for '
+    'single-spin qubits in quantum dots", Phys. Rev. B 83, 121403 (2011), '
+    f"{MEMORY}"
+)
+MAGESAN = (
+    'E. Magesan, J. M. Gambetta, J. Emerson, "Scalable and robust randomized benchmarking of '
+    f'quantum processes", Phys. Rev. Lett. 106, 180504 (2011), r = (d - 1)(1 - p)/d, {MEMORY}'
+)
+MIXER = "mixer algebra, computed from the formula"
+MOTZOI = (
+    'F. Motzoi, J. M. Gambetta, P. Rebentrost, F. K. Wilhelm, "Simple pulses for elimination of '
+    f'leakage in weakly nonlinear qubits", Phys. Rev. Lett. 103, 110501 (2009), {MEMORY}'
+)
+NAGEL = (
+    'L. W. Nagel, "SPICE2: a computer program to simulate semiconductor circuits", UCB/ERL M520 '
+    f"(1975), trapezoidal rule: tan(w_num h/2) = w h/2, {MEMORY}"
+)
+PAUL = (
+    "C. R. Paul, Introduction to Electromagnetic Compatibility, chapter on signal spectra, "
+    f"spectrum of a trapezoid, {MEMORY}"
+)
+PEDERSEN = (
+    'L. H. Pedersen, N. M. Moller, K. Molmer, "Fidelity of quantum operations", Phys. Lett. A 367, '
+    f"47 (2007), {MEMORY}"
+)
+POZAR = f"D. M. Pozar, Microwave Engineering, {MEMORY}"
+RABI = (
+    'I. I. Rabi, "Space quantization in a gyrating magnetic field", Phys. Rev. 51, 652 (1937), '
+    f"{MEMORY}"
+)
+RAMSEY = (
+    'N. F. Ramsey, "A molecular beam resonance method with separated oscillating fields", Phys. '
+    f"Rev. 78, 695 (1950), transition probability with two separated fields, {MEMORY}"
+)
+RAZAVI = f"B. Razavi, RF Microelectronics, section on image-reject receivers, {MEMORY}"
+RICHARDSON = (
+    'L. F. Richardson, "The approximate arithmetical solution by finite differences of physical '
+    f'problems", Phil. Trans. R. Soc. A 210, 307 (1911), {MEMORY}'
+)
+RUSS = (
+    'M. Russ et al., "High-fidelity quantum gates in Si/SiGe double quantum dots", Phys. Rev. B '
+    f"97, 085421 (2018), {MEMORY}"
+)
+ROTATING_FRAME = "algebra of the rotating frame, |0> the ground state, computed from the formula"
+SCHNEIDER = (
+    'A. Schneider et al., "Local sensing with the multilevel ac Stark effect", Phys. Rev. A 97, '
+    f"062334 (2018), second-order perturbation theory, {MEMORY}"
+)
+STRAUCH = (
+    'F. W. Strauch et al., "Quantum logic gates for coupled superconducting phase qubits", Phys. '
+    f"Rev. Lett. 91, 167005 (2003), {MEMORY}"
+)
+THEIS = (
+    'L. S. Theis et al., "Counteracting systems of diabaticities using DRAG controls: the status '
+    f'after 10 years", EPL 123, 60001 (2018), second-order perturbation theory, {MEMORY}'
+)
+WALLMAN = (
+    'J. Wallman, C. Granade, R. Harper, S. T. Flammia, "Estimating the coherence of noise", New J. '
+    f"Phys. 17, 113020 (2015), {MEMORY}"
+)
+WALLMAN_FLAMMIA = (
+    'J. J. Wallman, S. T. Flammia, "Randomized benchmarking with confidence", New J. Phys. 16, '
+    f"103032 (2014), {MEMORY}"
+)
+ZENER = (
+    'C. Zener, "Non-adiabatic crossing of energy levels", Proc. R. Soc. A 137, 696 (1932), '
+    f"{MEMORY}"
+)
+ZVEREV = (
+    f"A. I. Zverev, Handbook of Filter Synthesis, {MEMORY}; overshoot of the step response "
+    "computed from the poles"
+)
