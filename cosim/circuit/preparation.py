@@ -3,13 +3,19 @@
 import re
 
 from cosim.circuit.analysis import TransientRequest
-from cosim.circuit.cards import SETTING_CARDS, card_word, number_text
+from cosim.circuit.cards import SETTING_CARDS, assignments, card_word, number_text
 from cosim.circuit.deck import Deck, PreparedDeck, SourceLine, unique, where
 from cosim.circuit.expression import spice_number
 from cosim.circuit.hierarchy import Structure, structure_of
 from cosim.circuit.lookup import resolve_saves, save_expression
 from cosim.circuit.safety import check_lines
-from cosim.circuit.settings import CELSIUS, filtered_options, gathered, written_temperature
+from cosim.circuit.settings import (
+    CELSIUS,
+    filtered_options,
+    gathered,
+    number_of,
+    written_temperature,
+)
 from cosim.errors import DeckError
 
 _TITLE = "transient run"
@@ -18,6 +24,8 @@ _COLDEST_CARD, _HOTTEST_CARD = -40.0, 125.0  # degrees Celsius
 # BSIM3, BSIM4 and BSIM-SOI, as ngspice numbers them.
 _BSIM_LEVELS = frozenset({8, 49, 14, 54, 10, 55, 56, 57, 58})
 _LEVEL = re.compile(r"(?<![\w.])level\s*=?\s*([^\s,()]+)", re.IGNORECASE)
+_TNOM = re.compile(r"(?<![\w.])tnom\s*=?\s*(\{[^{}]*\}|'[^']*'|[^\s,()]+)", re.IGNORECASE)
+_USUAL_TNOM = 27.0  # degrees Celsius
 _NAMES_SHOWN = 3
 _FIXED_GRID = 1e6  # trtol and xtrtol: error control never moves a step.
 
@@ -160,32 +168,48 @@ def _uncalibrated(structure: Structure, temperature: float) -> list[str]:
     """Warn of MOS models at a temperature that their cards do not reach, as a rule.
 
     ngspice says nothing of it. That foundries extract BSIM cards for -40 to 125 degrees Celsius
-    is common practice; models of hand calculation (level 1 to 3) claim no range.
+    is common practice; a card that was fitted elsewhere says so by its tnom. Models of hand
+    calculation (level 1 to 3) claim no range, but do not work in the deep cold either.
     """
     celsius = round(temperature - CELSIUS, 6)
-    cards = {index: structure.lines[index] for index in structure.transistors}
-    if temperature < _COLDEST_JUNCTION:
+    cold = temperature < _COLDEST_JUNCTION
+    names: dict[str, SourceLine] = {}
+    for index, name in structure.transistors.items():
+        card = structure.lines[index]
+        tnom = _fitted_at(structure, card.text)
+        reached = min(_COLDEST_CARD, tnom) <= celsius <= max(_HOTTEST_CARD, tnom)
+        if not reached and (cold or _is_bsim(card.text)):
+            names.setdefault(name, card)
+    if not names:
+        return []
+    listed = ", ".join(list(names)[:_NAMES_SHOWN])
+    if len(names) > _NAMES_SHOWN:
+        listed += f" and {len(names) - _NAMES_SHOWN} more"
+    if cold:
         fault = (
             f"uncalibrated at {temperature:g} K: below {_COLDEST_JUNCTION:g} K they converge to "
-            "unphysical mobilities unless their cards were fitted there"
+            "unphysical mobilities unless their cards were fitted there, as tnom would say"
         )
-    elif not _COLDEST_CARD <= celsius <= _HOTTEST_CARD:
-        cards = {index: card for index, card in cards.items() if _is_bsim(card.text)}
+    else:
         fault = (
             f"extrapolated to {temperature:g} K: BSIM cards are commonly extracted for "
             f"{_COLDEST_CARD:g} to {_HOTTEST_CARD:g} degrees Celsius "
-            f"({_COLDEST_CARD + CELSIUS:g} to {_HOTTEST_CARD + CELSIUS:g} K), and ngspice does not "
-            "say so; were these fitted there?"
+            f"({_COLDEST_CARD + CELSIUS:g} to {_HOTTEST_CARD + CELSIUS:g} K) unless their tnom "
+            "says otherwise, and ngspice gives no warning"
         )
-    else:
-        return []
-    names = list(dict.fromkeys(structure.transistors[index] for index in cards))
-    if not names:
-        return []
-    listed = ", ".join(names[:_NAMES_SHOWN])
-    if len(names) > _NAMES_SHOWN:
-        listed += f" and {len(names) - _NAMES_SHOWN} more"
-    return [f"{where(next(iter(cards.values())))}: MOS models {listed} are {fault}"]
+    return [f"{where(next(iter(names.values())))}: MOS models {listed} are {fault}"]
+
+
+def _fitted_at(structure: Structure, card: str) -> float:
+    """Give a card's own temperature in degrees Celsius: its tnom, the deck's, or ngspice's."""
+    found = _TNOM.search(card)
+    written = found[1] if found else None
+    for index in structure.settings if found is None else ():
+        for item in assignments(structure.lines[index].text):
+            if item.name == "tnom":
+                written = item.value
+    value = number_of(written, structure.parameters) if written else None
+    return _USUAL_TNOM if value is None else round(value, 6)
 
 
 def _is_bsim(card: str) -> bool:

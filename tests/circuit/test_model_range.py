@@ -38,7 +38,7 @@ def test_one_warning_names_the_models_and_the_temperature(temperature: float) ->
     (said,) = notices(KIT + USED, temperature)
     assert said.startswith("circuit:6: MOS models nch_mac, pch_mac are extrapolated")
     assert f" {temperature:g} K" in said
-    assert "-40 to 125 degrees Celsius (233.15 to 398.15 K)" in said
+    assert "-40 to 125 degrees Celsius (233.15 to 398.15 K) unless their tnom" in said
 
 
 def test_the_decks_own_temperature_counts_as_well() -> None:
@@ -65,6 +65,23 @@ def test_models_of_hand_calculation_claim_no_range(card: str) -> None:
     assert notices(body, 100.0) == ()
     assert notices(body, 300.0) == ()
     assert "MOS models m are uncalibrated" in notices(body, 4.2)[0]
+
+
+@pytest.mark.parametrize(
+    "body",
+    [
+        "m1 out in 0 0 m\n.model m nmos level=54 tnom=-223.15\n",
+        "m1 out in 0 0 m\n.model m nmos(level=54 tnom = {t-200})\n.param t=-23.15\n",
+        "m1 out in 0 0 m\n.model m nmos level=54\n.options tnom=-223.15\n",
+    ],
+)
+def test_a_card_that_was_fitted_in_the_cold_says_so_by_tnom(body: str) -> None:
+    assert notices(body, 50.0) == ()
+    assert notices(body, 77.0) == ()
+    assert notices(body, 300.0) == ()
+    assert "extrapolated to 45 K" in notices(body, 45.0)[0]
+    assert "uncalibrated at 4.2 K" in notices(body, 4.2)[0]
+    assert notices(body.replace("-223.15", "-268.95").replace("-23.15", "-68.95"), 4.2) == ()
 
 
 def test_many_models_are_counted() -> None:
