@@ -9,15 +9,23 @@ from scipy import constants
 from cosim.coupling import DriveLine, drive_rate, rate_per_unit, rotating_rate, voltage_gain
 from cosim.errors import InputError
 from cosim.waveform import Waveform
+from tests import sources
+from tests.validation import Validate
+
+TOPIC = "coupling"
 
 
 @pytest.mark.parametrize(("decibels", "gain"), [(0, 1), (20, 0.1), (6.0206, 0.5), (-20, 10)])
-def test_attenuation_acts_on_the_amplitude(decibels: float, gain: float) -> None:
+def test_attenuation_acts_on_the_amplitude(
+    validate: Validate, decibels: float, gain: float
+) -> None:
     """Source: 20 dB are a factor of ten in amplitude (IEC 60027-3)."""
-    assert voltage_gain(decibels) == pytest.approx(gain, rel=1e-6)  # 6.0206 dB has six digits
+    quantity = f"factor on the amplitude of {decibels} dB of attenuation"
+    # 6.0206 dB has six digits.
+    validate(quantity, "IEC 60027-3, the decibel", gain, voltage_gain(decibels), rel=1e-6)
 
 
-def test_a_pi_pulse_of_known_power() -> None:
+def test_a_pi_pulse_of_known_power(validate: Validate) -> None:
     """0 dBm into 50 ohm is 0.3162278 V peak; behind 20 dB and with 100 MHz/V: 3.162278 MHz.
 
     Source: P = V_peak^2/(2 Z), circuit theory; the Rabi frequency is k times the peak.
@@ -25,7 +33,9 @@ def test_a_pi_pulse_of_known_power() -> None:
     peak = math.sqrt(2 * 50 * constants.milli)
     assert peak == pytest.approx(0.3162278, rel=1e-6)  # digits of the handbook value
     rate = rate_per_unit(DriveLine(100e6, 20.0), "V") * peak
-    assert rate / (2 * math.pi) == pytest.approx(3.162278e6, rel=1e-6)
+    quantity = "Rabi frequency from 0 dBm behind 20 dB at 100 MHz/V"
+    rabi = rate / (2 * math.pi)
+    validate(quantity, sources.CIRCUITS, 3.162278e6, rabi, "Hz", rel=1e-6, card="F08")
 
 
 def test_a_current_counts_by_the_impedance() -> None:

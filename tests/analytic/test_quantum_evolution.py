@@ -10,11 +10,15 @@ from cosim.quantum.evolution import evolve, propagate_unitary, run_plan
 from cosim.quantum.qubit import Qubit
 from cosim.quantum.steps import DriveSpline, StepPlan, plan_steps
 from cosim.waveform import ComplexArray
+from tests import sources
 from tests.quantum.drives import CARRIER, constant, smooth_burst
+from tests.validation import Validate
+
+TOPIC = "dynamics without rotating wave"
 
 
 class TestRelaxation:
-    def test_bloch_equations_without_a_drive(self) -> None:
+    def test_bloch_equations_without_a_drive(self, validate: Validate) -> None:
         t1, t2, p, time = 2e-6, 1.5e-6, 0.2, 0.4e-6
         qubit = Qubit(CARRIER, t1=t1, t2=t2, thermal_population=p)
         found = pauli_transfer_matrix(evolve(qubit, constant(0.0, 0.0, time), 0.0, time))
@@ -24,6 +28,10 @@ class TestRelaxation:
         wanted[3, 0] = (1 - 2 * p) * (1 - along)
         # Rounding of some 1e4 products.
         assert np.abs(found - wanted).max() < 1e-11
+        for name, (row, column) in (("along", (3, 3)), ("across", (1, 1)), ("towards", (3, 0))):
+            quantity = f"relaxation {name} the thermal state's axis after 0.4 us"
+            entry = wanted[row, column]
+            validate(quantity, sources.BLOCH, entry, found[row, column], abs=1e-11)
 
     def test_second_level_decays_twice_as_fast(self) -> None:
         qubit = Qubit(CARRIER, 3, -0.3e9, t1=1e-6, t2=2e-6)
@@ -51,7 +59,7 @@ class TestDrivenOscillator:
     """
 
     @pytest.mark.parametrize("t1", [math.inf, 0.2e-6])
-    def test_vacuum_becomes_a_coherent_state(self, t1: float) -> None:
+    def test_vacuum_becomes_a_coherent_state(self, validate: Validate, t1: float) -> None:
         levels = 8
         qubit = Qubit(CARRIER, levels, 0.0, t1=t1, t2=2 * t1)
         drive = smooth_burst(20e6, 10e-9)
@@ -67,6 +75,10 @@ class TestDrivenOscillator:
         # three lowest levels it acts back with further powers of |beta| only.
         assert abs(beta) > 0.25
         assert np.abs(found - np.outer(state, state.conj()))[:3, :3].max() < 1e-10
+        loss = "without loss" if t1 == math.inf else f"T1 {t1 * 1e6:g} us"
+        quantity = f"population of |1> of a driven oscillator, {loss}"
+        wanted = float(abs(state[1]) ** 2)
+        validate(quantity, sources.GLAUBER, wanted, found[1, 1].real, abs=1e-10)
 
     @staticmethod
     def _amplitude(drive: DriveSpline, stop: float, decay: float) -> complex:
@@ -83,7 +95,7 @@ class TestDrivenOscillator:
 
 class TestOrder:
     @pytest.mark.parametrize("levels", [2, 3, 5])
-    def test_unitary_steps_are_of_sixth_order(self, levels: int) -> None:
+    def test_unitary_steps_are_of_sixth_order(self, validate: Validate, levels: int) -> None:
         qubit = Qubit(1e9, levels, -0.1e9)
         # One cubic piece over one and a half carrier periods, a turn of about 2 rad.
         drive = DriveSpline(np.array([0.0, 1.5e-9]), np.array([[8e36], [-12e27], [4e18], [2e9]]))
@@ -99,7 +111,10 @@ class TestOrder:
         orders = np.log2(np.array(errors[:-1]) / np.array(errors[1:]))
         # The method is symmetric, so the next terms are of eighth order: a quarter at these steps.
         assert errors[-1] > 1e-12  # Well above rounding.
-        assert orders == pytest.approx([6, 6], abs=0.3)
+        for count, got in zip((16, 32), orders, strict=True):
+            quantity = f"order of the kernel's steps, {levels} levels, {count} to {2 * count} steps"
+            source = "order of the kernel's method, by step halving; " + sources.RICHARDSON
+            validate(quantity, source, 6.0, float(got), abs=0.3, digits=12)
 
     def test_step_estimate_falls_with_the_steps(self) -> None:
         qubit = Qubit(CARRIER, 3, -0.3e9, 10e-6, 10e-6)

@@ -10,7 +10,11 @@ from scipy.signal import fftconvolve, firwin, hilbert
 from cosim.dsp.demodulation import demodulate, half_length
 from cosim.errors import WaveformError
 from cosim.waveform import ComplexArray, Envelope, FloatArray, Waveform
+from tests import sources
 from tests.dsp.signals import CARRIER, STEP, simulator_grid, trapezoid, trapezoid_corners
+from tests.validation import Validate
+
+TOPIC = "signal"
 
 GUARD = half_length(CARRIER)
 
@@ -42,15 +46,17 @@ class TestTone:
         # 130 dB of the filter.
         assert np.abs(envelope.iq[inside(envelope, 20e-9)]).max() < 1e-6
 
-    def test_sign_of_phase(self) -> None:
+    def test_sign_of_phase(self, validate: Validate) -> None:
         # v = A cos(omega t + phi) has I = A cos(phi), Q = +A sin(phi): P. Krantz et al., Appl.
         # Phys. Rev. 6, 021318 (2019), section V (recalled from memory).
         t = np.arange(0, 1e-6, 1 / 50e6 / 80)
         envelope = demodulate(Waveform(t, np.cos(2 * np.pi * 50e6 * t + np.pi / 6)), 50e6)
         middle = envelope.iq[envelope.iq.size // 2]
         # A plain mean over 105 ns, not a multiple of half a period, is off by 3e-2 here.
-        assert middle.real == pytest.approx(0.8660254, abs=1e-6)
-        assert middle.imag == pytest.approx(0.5, abs=1e-6)
+        source = sources.KRANTZ + ", section V"
+        for name, wanted, got in (("I", 0.8660254, middle.real), ("Q", 0.5, middle.imag)):
+            quantity = f"{name} of a cosine of 1 V with a phase of 30 degrees"
+            validate(quantity, source, wanted, got, "V", abs=1e-6, card="F17")
         quadrature = demodulate(Waveform(t, np.cos(2 * np.pi * 50e6 * t + np.pi / 2)), 50e6)
         assert quadrature.iq[envelope.iq.size // 2].imag == pytest.approx(1.0, abs=1e-6)
 
@@ -115,7 +121,7 @@ class TestPulse:
         # cells, which the library's chain does not take, make no difference either.
         assert np.abs(envelope.iq[common] - full[::40][common]).max() < 1e-6
 
-    def test_trapezoidal_wave_with_corners_off_the_grid(self) -> None:
+    def test_trapezoidal_wave_with_corners_off_the_grid(self, validate: Validate) -> None:
         start, stop = 1.0301e-9, 12e-9
         t = simulator_grid(trapezoid_corners(start, stop), stop)
         envelope = demodulate(Waveform(t, trapezoid(t, start)), CARRIER)
@@ -129,6 +135,9 @@ class TestPulse:
         # Values on the grid instead of means over its cells would be off by up to 5e-4: the
         # harmonics 79 and 81 fold onto the carrier. Means suppress them 80-fold.
         assert np.abs(part - expected).max() < 5e-6
+        quantity = "carrier of a trapezoidal wave of 1 V, 45 % of the period high"
+        level = float(np.abs(part).mean())
+        validate(quantity, sources.PAUL, float(np.abs(expected)), level, "V", abs=5e-6)
 
     def test_window_is_a_part_of_the_whole(self) -> None:
         t = np.arange(0, 20e-9, STEP)

@@ -12,7 +12,11 @@ from cosim.dsp.demodulation import demodulate
 from cosim.dsp.pulse import PulseMeasures, measure_pulse
 from cosim.errors import WaveformError
 from cosim.waveform import FloatArray, Waveform
+from tests import sources
 from tests.dsp.signals import CARRIER, STEP
+from tests.validation import Validate
+
+TOPIC = "signal"
 
 
 def one_pole(t: FloatArray, start: float, length: float, tau: float) -> FloatArray:
@@ -31,7 +35,7 @@ def carrier(t: FloatArray, phase: float = 0.0, frequency: float = CARRIER) -> Fl
 
 
 class TestEdges:
-    def test_one_pole_pulse(self) -> None:
+    def test_one_pole_pulse(self, validate: Validate) -> None:
         # tau ln 9 from 10 to 90 %, 50 % after tau ln 2: "common practice"; amplitude 1 as the
         # pulse of 20 tau settles to 2e-9.
         t = np.arange(0, 400e-9, STEP)
@@ -41,8 +45,10 @@ class TestEdges:
         # The parabola over the middle third of the plateau still sees 6e-6 of settling, which is
         # 6e-5 tau at the crossing of 90 %.
         assert found.amplitude == pytest.approx(0.3, rel=2e-5)
-        assert found.rise_time == pytest.approx(tau * math.log(9), rel=1e-4)
-        assert found.fall_time == pytest.approx(tau * math.log(9), rel=1e-4)
+        for name, got in (("rise", found.rise_time), ("fall", found.fall_time)):
+            quantity = f"{name} time of a pulse behind one pole of 10 ns"
+            source = sources.CIRCUITS + ", tau ln 9"
+            validate(quantity, source, tau * math.log(9), got, "s", rel=1e-4, card="F01")
         assert found.start == pytest.approx(30e-9 + tau * math.log(2), abs=2e-13)
         assert found.stop == pytest.approx(230e-9 + tau * math.log(2), abs=2e-13)
         assert found.duration == pytest.approx(200e-9, abs=4e-13)
@@ -56,7 +62,7 @@ class TestEdges:
         # The crossing of 50 % is out of the filter's reach.
         assert found.start == pytest.approx(30e-9 + 1e-9 * math.log(2), abs=5e-13)
 
-    def test_missing_area_of_one_pole_pulse(self) -> None:
+    def test_missing_area_of_one_pole_pulse(self, validate: Validate) -> None:
         # A pi pulse cut at its nominal end is short by pi (tau/T)(1 - exp(-T/tau)), and exact
         # with its tail: linear filter and area theorem.
         t = np.arange(0, 60e-9, STEP)
@@ -68,11 +74,15 @@ class TestEdges:
         # Half a sample of 81 ps belongs to the sum up to the end. The end is a corner, which the
         # filter rounds: 4e-4 of the missing area.
         cut = angle[at_end] + 0.5 * (angle[at_end + 1] - angle[at_end])
-        assert np.pi - cut == pytest.approx(0.1570796, rel=1e-3)
-        assert np.pi - angle[-1] == pytest.approx(0.0, abs=1e-6 * np.pi)
+        quantity = "angle that X180 of 20 ns lacks behind 1 ns of RC, cut at its end"
+        source = sources.FILTER_AREA
+        validate(quantity, source, 0.1570796, float(np.pi - cut), "rad", rel=1e-3, card="F16")
+        quantity = "angle that X180 of 20 ns lacks behind 1 ns of RC, with its tail"
+        lacks = float(np.pi - angle[-1])
+        validate(quantity, source, 0.0, lacks, "rad", abs=1e-6 * np.pi, card="F16")
 
     @pytest.mark.parametrize("phase", [0.0, 0.8, -2.2])
-    def test_gaussian(self, phase: float) -> None:
+    def test_gaussian(self, validate: Validate, phase: float) -> None:
         t = np.arange(0, 100e-9, STEP)
         sigma, centre = 5e-9, 50e-9
         shape = np.exp(-(((t - centre) / sigma) ** 2) / 2)
@@ -85,7 +95,9 @@ class TestEdges:
         edge = sigma * (math.sqrt(2 * math.log(10)) - math.sqrt(2 * math.log(1 / 0.9)))
         assert found.start == pytest.approx(centre - half, abs=5e-14)
         assert found.stop == pytest.approx(centre + half, abs=5e-14)
-        assert found.rise_time == pytest.approx(edge, abs=2e-13)
+        quantity = "rise time of a Gaussian pulse of 5 ns standard deviation"
+        formula = sources.GAUSSIAN_INTEGRAL.replace("Gaussian integral", "Gaussian shape")
+        validate(quantity, formula, edge, found.rise_time, "s", abs=2e-13)
         assert found.fall_time == pytest.approx(edge, abs=2e-13)
         assert found.phase_error == pytest.approx(phase, abs=1e-6)
         assert abs(found.frequency_error) < 100
@@ -113,13 +125,14 @@ class TestEdges:
 
 
 class TestLevels:
-    def test_amplitude_is_the_peak(self) -> None:
+    def test_amplitude_is_the_peak(self, validate: Validate) -> None:
         # 0 dBm into 50 ohm is 0.3162278 V peak, 0.2236068 V rms: P = V_peak^2/(2 Z).
         t = np.arange(0, 60e-9, STEP)
         shape = raised_cosine(t, 10e-9, 50e-9, 5e-9)
         rms = math.sqrt(1e-3 * 50)
         found = measure_pulse(Waveform(t, math.sqrt(2) * rms * shape * carrier(t)), CARRIER)
-        assert found.amplitude == pytest.approx(0.3162278, rel=1e-6)
+        quantity = "peak voltage of 0 dBm in 50 ohm, as the pulse is measured"
+        validate(quantity, sources.CIRCUITS, 0.3162278, found.amplitude, "V", rel=1e-6, card="F08")
         power = 10 * math.log10(found.amplitude**2 / (2 * 50) / 1e-3)
         assert power == pytest.approx(0.0, abs=1e-5)
 
@@ -141,7 +154,7 @@ class TestLevels:
     )
     @pytest.mark.parametrize("baseband", [0.2e9, -0.35e9])
     def test_image_rejection(
-        self, gain_db: float, skew_deg: float, expected: float, baseband: float
+        self, validate: Validate, gain_db: float, skew_deg: float, expected: float, baseband: float
     ) -> None:
         # Gain ratio g and quadrature error p: (1 + g^2 + 2 g cos p)/(1 + g^2 - 2 g cos p) in
         # power; B. Razavi, "RF Microelectronics", image-reject receivers (recalled from memory).
@@ -152,7 +165,8 @@ class TestLevels:
         shape = raised_cosine(t, 10e-9, 120e-9, 5e-9)
         found = measure_pulse(Waveform(t, shape * wave), CARRIER, baseband_frequency=baseband)
         # 3e-7 of the filter against an image of 6e-3: 5e-5, or 4e-4 dB.
-        assert found.image == pytest.approx(-expected, abs=5e-4)
+        quantity = f"image of a modulator off by {gain_db} dB and {skew_deg:g} degrees"
+        validate(quantity, sources.RAZAVI, -expected, found.image, "dBc", abs=5e-4, card="F10")
         wanted = abs(1 + g * np.exp(1j * p)) / 2
         assert found.amplitude == pytest.approx(wanted, rel=1e-5)
         assert found.carrier_leakage < -100
@@ -168,7 +182,7 @@ class TestLevels:
         # The shape is followed by a polynomial of degree four.
         assert found.image == pytest.approx(-39.61402, abs=1e-2)
 
-    def test_carrier_leakage(self) -> None:
+    def test_carrier_leakage(self, validate: Validate) -> None:
         # Offset d on one input of a mixer with tones of peak A: 20 log10(d/A), mixer algebra.
         t = np.arange(0, 130e-9, STEP)
         low, high = 2 * np.pi * 0.25e9 * t, 2 * np.pi * CARRIER * t
@@ -177,7 +191,9 @@ class TestLevels:
         found = measure_pulse(Waveform(t, shape * wave), CARRIER, baseband_frequency=0.25e9)
         # 1e-6 of filter and spline is 1e-5 dB, and so are the digits of the expected value; the
         # image is the filter's ripple of -130 dB.
-        assert found.carrier_leakage == pytest.approx(-53.9794, abs=5e-5)
+        leak = found.carrier_leakage
+        quantity = "carrier of an offset of 1 mV beside tones of 0.5 V"
+        validate(quantity, sources.MIXER, -53.9794, leak, "dBc", abs=5e-5, card="F11", digits=6)
         assert found.image < -120
 
     def test_image_needs_periods_of_the_tone(self) -> None:

@@ -20,8 +20,11 @@ from cosim.circuit.simulator import simulate
 from cosim.dsp.carrier import estimate_carrier
 from cosim.dsp.demodulation import demodulate
 from cosim.waveform import Waveform
+from tests import sources
+from tests.validation import Validate
 
 pytestmark = pytest.mark.ngspice
+TOPIC = "circuit"
 
 NETLISTS = Path(__file__).parents[2] / "netlists"
 FOLDER = NETLISTS / "gated_oscillator"
@@ -58,7 +61,7 @@ def start_phase(shift: float) -> complex:
     return complex(mean / abs(mean))
 
 
-def test_frequency_follows_the_dispersion_of_the_time_step() -> None:
+def test_frequency_follows_the_dispersion_of_the_time_step(validate: Validate) -> None:
     steps = (4e-12, 2e-12, 1e-12)
     found = [frequency({}, step) for step in steps]
     exact = found[2] + (found[2] - found[1]) / 3
@@ -66,15 +69,19 @@ def test_frequency_follows_the_dispersion_of_the_time_step() -> None:
         ideal = (2 / step) * math.atan(2 * math.pi * exact * step / 2) / (2 * math.pi)
         # The law holds for a sine; harmonics, whose own frequencies the rule shifts more, take part
         # in setting the frequency of a real oscillator: 2.3 % of the shift was measured.
-        assert value - exact == pytest.approx(ideal - exact, rel=0.05)
+        quantity = f"shift of the gated oscillator by steps of {step * 1e12:.0f} ps"
+        shift, wanted = value - exact, ideal - exact
+        validate(quantity, sources.NAGEL, wanted, shift, "Hz", rel=0.05, card="F02", digits=4)
 
 
-def test_tuning_capacitance_moves_the_resonance() -> None:
+def test_tuning_capacitance_moves_the_resonance(validate: Validate) -> None:
     low, high = (frequency({"c_tune": c}, 2e-12) for c in (100e-15, -100e-15))
     slope = (low**-2 - high**-2) / 200e-15
     # 1/f^2 = 4 pi^2 L (C + c_tune), L = 0.4 nH per side. The finite Q and the harmonics pull by
     # about 1/Q^2 = 0.4 %.
-    assert slope == pytest.approx(4 * math.pi**2 * 0.4e-9, rel=1e-2)
+    quantity = "slope of 1/f^2 over the gated oscillator's tuning capacitance"
+    source = sources.CIRCUITS + ", 4 pi^2 L"
+    validate(quantity, source, 4 * math.pi**2 * 0.4e-9, slope, "H", rel=1e-2)
 
 
 def test_kick_fixes_the_phase_to_the_gate() -> None:

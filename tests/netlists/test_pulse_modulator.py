@@ -23,8 +23,11 @@ from cosim.circuit.netlist import (
 )
 from cosim.circuit.simulator import simulate
 from cosim.waveform import FloatArray
+from tests import sources
+from tests.validation import Validate
 
 pytestmark = pytest.mark.ngspice
+TOPIC = "circuit"
 
 FOLDER = Path(__file__).parents[2] / "netlists" / "pulse_modulator"
 DECK = FOLDER / "pulse_modulator.cir"
@@ -153,13 +156,14 @@ def test_carrier_vanishes_with_the_oscillator_off() -> None:
     assert off < 1e-2 * on
 
 
-def test_default_pulse_is_a_quarter_turn_about_x() -> None:
+def test_default_pulse_is_a_quarter_turn_about_x(validate: Validate) -> None:
     v = drive(load_deck(DECK), {}, 130e-9, 80)
     t = np.arange(v.size) / (80 * CARRIER)
     area = 2 * np.trapezoid(v * np.exp(-2j * np.pi * CARRIER * t), t)
     angle = 360 * 85e6 * 0.1 * abs(area)
     # Half a per cent is the trim of the deck's bias; half the step moves the angle by 0.08 %.
-    assert angle == pytest.approx(90.0, rel=5e-3)
+    quantity = "rotation angle from the area under the modulator's default pulse"
+    validate(quantity, sources.ALLEN_EBERLY, 90.0, angle, "degrees", rel=5e-3, digits=12)
     # The phase is trimmed at this step; fractions of a step move it by 0.03 degrees.
     assert abs(np.degrees(np.angle(area))) < 0.2
     plateau = abs(carrier(v, 80, 30e-9, 105e-9))
