@@ -114,7 +114,9 @@ def calibrate_pulse(
     target: ComplexArray,
     *,
     guess: float = 1.0,
+    with_amplitude: bool = True,
     with_detuning: bool = False,
+    resonance: float = 0.0,
 ) -> Calibration:
     """Find the amplitude scale, and on request the carrier offset, of best free-frame fidelity.
 
@@ -126,13 +128,17 @@ def calibrate_pulse(
         Target unitary.
     guess : float
         Scale to start from, such as wanted angle over angle found.
-    with_detuning : bool
-        Also adjust one constant carrier offset.
+    with_amplitude, with_detuning : bool
+        What to adjust: one amplitude scale, one constant carrier offset.
+
+    resonance : float
+        Offset in Hz that brings the carrier to the qubit, where the search of it begins.
 
     Returns
     -------
     Calibration
-        The scale lies in `SCALE_RANGE`.
+        The scale lies in `SCALE_RANGE`. Where scale and offset do the same (a quarter turn with
+        free Z angles), the pair next to resonance is given.
 
     Raises
     ------
@@ -148,10 +154,14 @@ def calibrate_pulse(
         channel = lossless.channel(scale=scale, detuning=detuning)
         return 1.0 - free_frame(channel, target).average_gate_fidelity
 
-    scale = _best_scale(infidelity, guess)
-    detuning = 0.0
-    if with_detuning:
-        scale, detuning = _best_pair(infidelity, scale, pulse.stop - pulse.start)
+    duration = pulse.stop - pulse.start
+    scale, detuning = 1.0, 0.0
+    if with_amplitude:
+        scale = _best_scale(infidelity, guess)
+    if with_detuning and with_amplitude:
+        scale, detuning = _best_pair(infidelity, scale, guess, duration, resonance)
+    elif with_detuning:
+        detuning = _best_detuning(infidelity, duration, resonance)
     channel = pulse.channel(scale=scale, detuning=detuning)
     return Calibration(scale, detuning, channel, free_frame(channel, target))
 
@@ -177,16 +187,47 @@ def _best_scale(infidelity: Callable[[float], float], guess: float) -> float:
     return float(found.x)
 
 
+def _best_detuning(
+    infidelity: Callable[[float, float], float], duration: float, resonance: float
+) -> float:
+    # From two turns over the pulse below resonance to two above.
+    found = minimize_scalar(
+        lambda x: infidelity(1.0, resonance + float(x) / duration),
+        bounds=(-2.0, 2.0),
+        method="bounded",
+        options={"xatol": 1e-7},
+    )
+    return resonance + float(found.x) / duration
+
+
 def _best_pair(
-    infidelity: Callable[[float, float], float], scale: float, duration: float
+    infidelity: Callable[[float, float], float],
+    scale: float,
+    guess: float,
+    duration: float,
+    resonance: float,
 ) -> tuple[float, float]:
-    # The offset is scaled by the inverse duration, so that both steps matter alike.
+    # At resonance first. The best scale without an offset, which may stand at the end of its
+    # range since no amplitude mends a detuned pulse, is tried too, and must be really better.
+    at_resonance = _best_scale(lambda value: infidelity(value, resonance), guess)
+    best = _simplex(infidelity, (at_resonance, resonance), duration)
+    other = _simplex(infidelity, (scale, 0.0), duration)
+    return other if infidelity(*other) < infidelity(*best) - 1e-9 else best
+
+
+def _simplex(
+    infidelity: Callable[[float, float], float], start: tuple[float, float], duration: float
+) -> tuple[float, float]:
+    # The offset is scaled by the inverse duration, so that both steps matter alike; the corners
+    # lie inside the range of the scale.
     unit = 0.01 / duration
-    corners = np.array([[scale, 0.0], [scale + 0.005, 0.0], [scale, 1.0]])
+    first = min(max(start[0], SCALE_RANGE[0]), SCALE_RANGE[1] - 0.005)
+    corners = np.array([[first, 0.0], [first + 0.005, 0.0], [first, 1.0]])
     found = minimize(  # type: ignore[call-overload]  # The stubs want no array in options.
-        lambda x: infidelity(float(np.clip(x[0], *SCALE_RANGE)), float(x[1]) * unit),
+        lambda x: infidelity(float(x[0]), start[1] + float(x[1]) * unit),
         corners[0],
         method="Nelder-Mead",
-        options={"initial_simplex": corners, "xatol": 1e-5, "fatol": 1e-12, "maxiter": 200},
+        bounds=[SCALE_RANGE, (None, None)],
+        options={"initial_simplex": corners, "xatol": 1e-5, "fatol": 1e-12, "maxiter": 300},
     )
-    return float(np.clip(found.x[0], *SCALE_RANGE)), float(found.x[1]) * unit
+    return float(found.x[0]), start[1] + float(found.x[1]) * unit

@@ -58,6 +58,8 @@ class Plan:
         What the reader must know.
     confidential : Roots
         Folders whose files are kept as path and SHA-256 only.
+    kept : tuple of str
+        Further vectors that the testbench asked to keep.
     """
 
     deck: Deck
@@ -67,6 +69,7 @@ class Plan:
     request: TransientRequest
     notices: tuple[str, ...]
     confidential: Roots
+    kept: tuple[str, ...]
 
     def half_step(self) -> "Plan":
         """The same run at half the step and tighter tolerances, for the numerical floor."""
@@ -169,7 +172,7 @@ def make_plan(bench: Testbench) -> Plan:
     )
     carrier = drive.carrier if isinstance(drive.carrier, float) else math.nan
     notices = (*withheld, *notices)
-    return Plan(deck, probes, carrier, drive.probe is None, request, notices, roots)
+    return Plan(deck, probes, carrier, drive.probe is None, request, notices, roots, table.save)
 
 
 def netlist_of(bench: Testbench) -> NetlistTable:
@@ -331,11 +334,11 @@ def capture_probe(plan: Plan, *, progress: Callable[[float], None] | None = None
     result = simulate(plan.deck, plan.request, progress=progress)
     result = withhold(result, plan.deck, plan.confidential)
     files = kept_files(plan.deck.files, plan.confidential)
-    read = {name for probe in plan.probes for _, name in probe.terms}
+    wanted = {name.lower() for name in plan.kept}
     extra = {
-        name: Waveform(result.time, values, unit="V" if name.startswith("v(") else "A")
+        name: Waveform(result.time, values, unit=_unit_of(name))
         for name, values in result.vectors.items()
-        if name not in read
+        if name.lower() in wanted
     }
     waves = [
         Waveform(result.time, evaluate_probe(probe, result.vectors), unit=probe.unit)
@@ -347,3 +350,9 @@ def capture_probe(plan: Plan, *, progress: Callable[[float], None] | None = None
         wave = upconvert(wave, waves[1] if len(waves) > 1 else None, plan.carrier_frequency)
     notices = (*plan.deck.notices, *plan.notices, *result.warnings)
     return Capture(wave, extra, plan.request.step, files, notices, result)
+
+
+def _unit_of(save: str) -> str:
+    """Unit of a saved vector: volts for nodes, amperes for currents, by name for a device's own."""
+    inner = save[save.rfind("[") + 1 :].lower() if save.startswith("@") else save
+    return {"v": "V", "i": "A"}.get(inner[:1].lower(), "1")

@@ -5,6 +5,7 @@ of the program, 2 the input is wrong, 3 the simulation failed, 130 interrupted.
 """
 
 import importlib.metadata
+import io
 import json
 import os
 import sys
@@ -92,6 +93,7 @@ def run(
     """Run a testbench from the netlist to the fidelity."""
     from dataclasses import replace
 
+    from cosim.archive import run_numbers
     from cosim.dispatch import run as run_testbench
     from cosim.dispatch import save
     from cosim.result import as_numbers
@@ -100,11 +102,18 @@ def run(
 
     _check_output(archive, ".h5")
     _check_output(plot, ".png", ".pdf", ".svg")
+    if archive is not None and archive.exists():
+        run_numbers(archive)  # Refuses what is no archive, before an hour of simulation.
     bench = load_testbench(testbench)
     if floor is not None:
         bench = replace(bench, accuracy=replace(bench.accuracy, floor=floor))
     with _progress(bench) as report:
         result = run_testbench(bench, progress=report)
+    # Numbers first: what goes wrong with a file must not take them away.
+    if json_output:
+        typer.echo(json.dumps(as_numbers(result), indent=2))
+    else:
+        Console(highlight=False).print(result_table(result))
     if archive is not None:
         number = save(result, archive)
         typer.echo(f"archived as run {number} of {archive}", err=True)
@@ -113,10 +122,6 @@ def run(
 
         plot_gate(result, plot)
         typer.echo(f"figure in {plot}", err=True)
-    if json_output:
-        typer.echo(json.dumps(as_numbers(result), indent=2))
-    else:
-        Console(highlight=False).print(result_table(result))
 
 
 @app.command(epilog="Example: qcosim show x90.h5 --run 1 --log")
@@ -144,7 +149,7 @@ def show(
         return
     result = load(archive, run=run)
     if log:
-        typer.echo("\n".join(result.run.log))
+        typer.echo(json.dumps(result.run.log) if json_output else "\n".join(result.run.log))
     elif json_output:
         typer.echo(json.dumps(as_numbers(result), indent=2))
     else:
@@ -212,8 +217,11 @@ def _check_output(path: Path | None, *endings: str) -> None:
         return
     if path.suffix.lower() not in endings:
         raise InputError(f"'{path}': wanted a name that ends in {' or '.join(endings)}")
-    if not path.absolute().parent.is_dir():
-        raise InputError(f"'{path}': the folder {path.absolute().parent} does not exist")
+    folder = path.absolute().parent
+    if not folder.is_dir():
+        raise InputError(f"'{path}': the folder {folder} does not exist")
+    if not os.access(folder, os.W_OK):
+        raise InputError(f"'{path}': the folder {folder} cannot be written to")
 
 
 @contextmanager
@@ -238,6 +246,10 @@ def main() -> None:
     """Run the command line and turn errors into messages and exit codes."""
     # The option may stand before or behind the command.
     debug = "--debug" in sys.argv[1:]
+    for stream in (sys.stdout, sys.stderr):
+        if isinstance(stream, io.TextIOWrapper):
+            # A terminal that knows no degree sign still gets its numbers.
+            stream.reconfigure(errors="replace")
     try:
         app(args=[word for word in sys.argv[1:] if word != "--debug"])
     except BrokenPipeError:

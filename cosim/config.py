@@ -184,14 +184,18 @@ def read_toml(path: Path) -> dict[str, Any]:
         If the file is missing, cannot be read or is not TOML.
     """
     try:
+        if path.exists() and not path.is_file():
+            raise TestbenchError(f"the testbench {path} is not a regular file")
         text = path.read_text(encoding="utf-8")
     except FileNotFoundError:
         raise TestbenchError(f"the testbench {path} does not exist") from None
-    except (OSError, UnicodeDecodeError) as error:
+    except TestbenchError:
+        raise
+    except (OSError, ValueError) as error:
         raise TestbenchError(f"the testbench {path} cannot be read: {error}") from None
     try:
         return tomllib.loads(text)
-    except tomllib.TOMLDecodeError as error:
+    except (ValueError, RecursionError) as error:
         raise TestbenchError(f"{path} is not a TOML file: {error}") from None
 
 

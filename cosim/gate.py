@@ -9,12 +9,21 @@ from cosim.capture import Capture, Plan, capture_probe, make_plan
 from cosim.dsp.demodulation import demodulate
 from cosim.dsp.pulse import measure_pulse
 from cosim.fidelities import Views
-from cosim.guards import edge_warnings, floor_warnings, level_warnings, step_warnings
+from cosim.guards import (
+    carrier_warnings,
+    edge_warnings,
+    floor_warnings,
+    level_warnings,
+    scale_warnings,
+    step_warnings,
+    twin_warnings,
+)
 from cosim.imported import every_second, import_waveform
 from cosim.line import through_line
 from cosim.quantum.channel import check_channel, nearest_unitary, pauli_transfer_matrix
 from cosim.quantum.fidelity import (
     Rotation,
+    average_gate_fidelity,
     channel_distance,
     leakage,
     rotation_of,
@@ -22,7 +31,7 @@ from cosim.quantum.fidelity import (
     target_unitary,
     unitarity,
 )
-from cosim.quantum.frame import FreeFrame, free_frame
+from cosim.quantum.frame import FreeFrame, free_frame, phase_frame
 from cosim.quantum.operators import OperatorSystem
 from cosim.quantum.reference import evolve_operators, evolve_reference
 from cosim.quantum.targets import target_rotation
@@ -125,10 +134,11 @@ def run_gate(
     measures = measure_pulse(shot.waveform, drive.carrier_frequency, envelope=envelope)
     clock.lap("demodulation")
     twin = drive.rotating_wave_twin(envelope)
+    rotating_wave_error = math.nan if twin is None else channel_distance(channel, twin)
     clock.lap("rotating_wave_twin")
     free = free_frame(channel, target.unitary)
     rotation = rotation_of(nearest_unitary(channel))
-    calibration = _calibrate(bench, pulse, free, channel, rotation.angle, target)
+    calibration = _calibrate(bench, drive, pulse, free, channel, rotation.angle, target)
     clock.lap("calibration")
     second, carrier = _second_run(bench, plan, drive, shot, progress, clock)
     views = Views(channel, free, calibration, target.unitary)
@@ -140,8 +150,11 @@ def run_gate(
     warnings = (
         *shot.notices,
         *(step_warnings(shot.step, drive.carrier_frequency) if plan and not plan.baseband else ()),
-        *edge_warnings(drive.window, envelope, measures.amplitude),
+        *edge_warnings(drive.window, shot.waveform, drive.carrier_frequency, measures.amplitude),
         *level_warnings(pulse, target.unitary),
+        *carrier_warnings(measures),
+        *scale_warnings(calibrated),
+        *twin_warnings(drive.carrier_frequency, drive.qubit.frequency, rotating_wave_error),
         *floor_warnings(calibrated, floor),
     )
     clock.lap("checks")
@@ -154,9 +167,9 @@ def run_gate(
         leakage=max(0.0, leakage(channel)),
         seepage=max(0.0, seepage(channel)),
         numerical_floor=floor,
-        rotating_wave_error=math.nan if twin is None else channel_distance(channel, twin),
+        rotating_wave_error=rotating_wave_error,
         reference_error=reference,
-        phase_slip=_phase_slip(free, target),
+        phase_slip=_phase_slip(channel, free, target, drive),
         rotation=rotation,
         unitarity=unitarity(channel),
         carrier_frequency=carrier,
@@ -189,17 +202,26 @@ def _capture(
 
 def _calibrate(
     bench: Testbench,
+    drive: QubitDrive,
     pulse: Pulse,
     free: FreeFrame,
     channel: ComplexArray,
     angle: float,
     target: Target,
 ) -> Calibration:
-    if target.angle == 0.0 or "amplitude" not in bench.gate.calibrate:
+    adjusted = bench.gate.calibrate
+    # No amplitude makes a gate that does nothing better.
+    with_amplitude = "amplitude" in adjusted and target.angle != 0.0
+    if not with_amplitude and "detuning" not in adjusted:
         return Calibration(1.0, 0.0, channel, free)
-    guess = target.angle / angle if angle > 0.0 else 1.0
-    with_detuning = "detuning" in bench.gate.calibrate
-    return calibrate_pulse(pulse, target.unitary, guess=guess, with_detuning=with_detuning)
+    return calibrate_pulse(
+        pulse,
+        target.unitary,
+        guess=target.angle / angle if angle > 0.0 else 1.0,
+        with_amplitude=with_amplitude,
+        with_detuning="detuning" in adjusted,
+        resonance=drive.qubit.frequency - drive.carrier_frequency,
+    )
 
 
 def _second_run(
@@ -237,9 +259,14 @@ def _reference_error(bench: Testbench, pulse: Pulse, channel: ComplexArray) -> f
     return channel_distance(channel, again)
 
 
-def _phase_slip(free: FreeFrame, target: Target) -> float:
-    # A half turn about an axis in the xy-plane turns a Z before it into its inverse behind it,
-    # so that only the difference of the two angles is determined.
-    half_turn = abs(target.unitary[0, 0]) < 1e-9
-    slip = free.after - free.before if half_turn else free.after + free.before
+def _phase_slip(channel: ComplexArray, free: FreeFrame, target: Target, drive: QubitDrive) -> float:
+    # For a half turn about an axis in the xy-plane only the difference of the two angles is
+    # determined, and near one their sum is of no weight: it counts only if it gains something.
+    half = 0.5 * (free.before + free.after)
+    without = phase_frame(channel, free.before - half, free.after - half)
+    loss = free.average_gate_fidelity - average_gate_fidelity(without, target.unitary)
+    counts = loss > 1e-8 + 0.01 * (1.0 - free.average_gate_fidelity)
+    start, stop = drive.window
+    detuning = drive.qubit.frequency - drive.carrier_frequency
+    slip = (2.0 * half if counts else 0.0) - 2.0 * math.pi * detuning * (stop - start)
     return math.remainder(slip, 2.0 * math.pi)

@@ -5,15 +5,26 @@ from dataclasses import replace
 
 import numpy as np
 
-from cosim.adjust import Pulse
+from cosim.adjust import SCALE_RANGE, Pulse
 from cosim.capture import check_steps
+from cosim.dsp.pulse import PulseMeasures
 from cosim.quantum.fidelity import average_gate_fidelity
 from cosim.quantum.operators import OperatorSystem
 from cosim.result import Fidelity
-from cosim.waveform import ComplexArray, Envelope
+from cosim.waveform import ComplexArray, Waveform
 
 # A change of the average gate fidelity by one more level that is worth a warning.
 LEVELS_TOLERANCE = 1e-6
+
+# Turns of the burst against the carrier over the pulse that are worth a warning; a quadrature
+# that shapes a pulse makes a few hundredths.
+CARRIER_TOLERANCE = 0.25
+
+# 1 - F_avg between the two runs of the circuit beyond which nothing holds.
+BROKEN = 0.01
+
+# 1 - F_avg between the two solvers that is worth a warning.
+TWIN_TOLERANCE = 1e-4
 
 # Carrier left at an edge of the window, over the plateau, that is worth a warning: a pulse cut
 # there by the window loses an angle of the same order.
@@ -39,7 +50,7 @@ def step_warnings(step: float, carrier_frequency: float) -> tuple[str, ...]:
 
 
 def edge_warnings(
-    window: tuple[float, float], envelope: Envelope, amplitude: float
+    window: tuple[float, float], waveform: Waveform, carrier_frequency: float, amplitude: float
 ) -> tuple[str, ...]:
     """Tell when the window cuts the pulse.
 
@@ -47,20 +58,22 @@ def edge_warnings(
     ----------
     window : tuple of two floats
         Start and end of the gate in s.
-    envelope : Envelope
-        At the probe.
+    waveform : Waveform
+        At the probe; the envelope would not do, for its filter smears the pulse over an edge.
+    carrier_frequency : float
+        In Hz.
     amplitude : float
-        Of the plateau, in the envelope's unit.
+        Of the plateau, in the waveform's unit.
 
     Returns
     -------
     tuple of str
         A warning per edge at which more than `EDGE_TOLERANCE` of the plateau is left.
     """
-    size = np.abs(envelope.iq)
     found = []
     for name, edge in zip(("start", "end"), window, strict=True):
-        level = float(np.interp(edge, envelope.t, size)) / amplitude
+        near = np.abs(waveform.t - edge) <= 0.5 / carrier_frequency
+        level = float(np.ptp(waveform.v[near])) / (2.0 * amplitude) if near.any() else 0.0
         if level > EDGE_TOLERANCE:
             found.append(
                 f"the carrier is at {20 * math.log10(level):.0f} dB of the pulse at the {name} "
@@ -104,6 +117,77 @@ def level_warnings(pulse: Pulse, target: ComplexArray) -> tuple[str, ...]:
     )
 
 
+def carrier_warnings(pulse: PulseMeasures) -> tuple[str, ...]:
+    """Tell when the burst is not at the carrier.
+
+    Parameters
+    ----------
+    pulse : PulseMeasures
+        The pulse at the probe.
+
+    Returns
+    -------
+    tuple of str
+        The warning, if any.
+    """
+    turns = pulse.frequency_error * pulse.duration
+    if abs(turns) <= CARRIER_TOLERANCE:
+        return ()
+    return (
+        f"the burst is off the carrier by {pulse.frequency_error:.4g} Hz, {abs(turns):.2g} turns "
+        "over the pulse: check 'carrier' in [drive]",
+    )
+
+
+def scale_warnings(calibrated: Fidelity) -> tuple[str, ...]:
+    """Tell when the calibrated fidelity is at the end of what may be adjusted.
+
+    Parameters
+    ----------
+    calibrated : Fidelity
+        The calibrated fidelity.
+
+    Returns
+    -------
+    tuple of str
+        The warning, if any.
+    """
+    scale = calibrated.amplitude_scale
+    if min(abs(scale - end) for end in SCALE_RANGE) > 1e-3:
+        return ()
+    return (
+        f"the amplitude scale of the calibrated fidelity stands at the end of its range, "
+        f"{scale:.4g}: the pulse is far from the target",
+    )
+
+
+def twin_warnings(
+    carrier_frequency: float, qubit_frequency: float, rotating_wave_error: float
+) -> tuple[str, ...]:
+    """Tell when the two solvers differ, or when the second could not be run.
+
+    Parameters
+    ----------
+    carrier_frequency, qubit_frequency : float
+        In Hz.
+    rotating_wave_error : float
+        1 - F_avg between the two channels; NaN without a second one.
+
+    Returns
+    -------
+    tuple of str
+        The warning, if any.
+    """
+    if rotating_wave_error > TWIN_TOLERANCE:
+        return (
+            f"the rotating-wave path differs from the full waveform by {rotating_wave_error:.1e}: "
+            "the drive is strong, or the carrier low, or the pulse wider than a quarter of it",
+        )
+    if math.isnan(rotating_wave_error) and abs(carrier_frequency - qubit_frequency) > 1e9:
+        return ("the qubit is too far from the carrier for the rotating-wave path to check it",)
+    return ()
+
+
 def floor_warnings(calibrated: Fidelity, floor: float) -> tuple[str, ...]:
     """Tell when the infidelity is below its numerical floor.
 
@@ -119,6 +203,11 @@ def floor_warnings(calibrated: Fidelity, floor: float) -> tuple[str, ...]:
     tuple of str
         The warning, if any.
     """
+    if floor > BROKEN:
+        return (
+            f"the two runs of the circuit differ by {floor:.1e}: the simulation has not converged, "
+            "and none of the numbers holds",
+        )
     if floor > calibrated.infidelity:
         return (
             f"the calibrated infidelity {calibrated.infidelity:.1e} is below the numerical "

@@ -11,7 +11,7 @@ from cosim.coupling import DriveLine, drive_rate, rotating_rate
 from cosim.dsp.carrier import estimate_carrier
 from cosim.dsp.pulse import measure_pulse
 from cosim.dsp.resampling import interpolant
-from cosim.errors import InputError
+from cosim.errors import InputError, TestbenchError
 from cosim.quantum.evolution import DriveSpline
 from cosim.quantum.operators import OperatorSystem
 from cosim.quantum.qubit import Qubit
@@ -19,6 +19,9 @@ from cosim.quantum.reference import evolve_rotating_wave
 from cosim.schema import QubitTable
 from cosim.testbench import Testbench
 from cosim.waveform import ComplexArray, Envelope, Waveform
+
+# Samples of the envelope up to which the rotating-wave twin is run; a second or so.
+MOST_SAMPLES = 50_000
 
 DEFAULT_LEVELS = {"spin": 2, "transmon": 4}
 
@@ -108,14 +111,21 @@ class QubitDrive:
         Returns
         -------
         ndarray of complex, shape (levels^2, levels^2), or None
-            Superoperator; None for a system of operators, which has no rotating-wave form.
+            Superoperator; None for a system of operators, which has no rotating-wave form, and
+            for a qubit so far from the carrier that its frame turns more than the solver can
+            follow.
         """
         if isinstance(self.qubit, OperatorSystem):
             return None
         start, stop = self.window
-        times = np.linspace(start, stop, max(4, round((stop - start) / envelope.dt) + 1))
-        iq = CubicSpline(envelope.t, envelope.iq)(times)
         offset = self.carrier_frequency - self.qubit.frequency
+        # The envelope turns by the offset in the qubit's frame: 20 samples per turn at least.
+        step = min(envelope.dt, 1.0 / (20.0 * abs(offset))) if offset else envelope.dt
+        count = max(4, round((stop - start) / step) + 1)
+        if count > MOST_SAMPLES:
+            return None
+        times = np.linspace(start, stop, count)
+        iq = CubicSpline(envelope.t, envelope.iq)(times)
         rate = rotating_rate(iq, times, self.line, envelope.unit, offset)
         return evolve_rotating_wave(self.qubit, rate, times)
 
@@ -164,6 +174,11 @@ def couple(bench: Testbench, shot: Capture, system: OperatorSystem | None = None
     )
     first, last = float(shot.waveform.t[0]), float(shot.waveform.t[-1])
     start, stop = bench.gate.window or (first, last)
+    if (stop - start) * frequency < 1.0:
+        raise TestbenchError(
+            f"table [gate], key 'window': {stop - start:.3g} s is less than one period of the "
+            f"carrier of {frequency:.6g} Hz"
+        )
     return QubitDrive(
         carrier_frequency=frequency,
         estimated=estimated,

@@ -176,9 +176,10 @@ class GateResult:
         1 - F_avg between the channel and that of QuTiP on the full waveform; NaN unless the
         testbench asks for it.
     phase_slip : float
-        Z rotation in rad that a phase reference must absorb per gate, in [-pi, pi]: the sum of
-        the two angles of `free_frame`; for a half turn about an axis in the xy-plane, where only
-        their difference is determined, after minus before.
+        What the free frame hides, in rad per gate, in [-pi, pi]: the sum of its two angles, as
+        far as it matters, less the angle 2 pi (f_qubit - f_carrier) T by which the qubit runs
+        ahead of the carrier over the window. A gate played again and again with a carrier that
+        runs on needs a virtual Z of this angle each time.
     rotation : Rotation
         Axis and angle of the unitary nearest to the channel.
     unitarity : float

@@ -1,5 +1,6 @@
 """The tables of a testbench file as frozen dataclasses in SI units."""
 
+import math
 from dataclasses import dataclass, field
 from typing import Annotated, Literal
 
@@ -8,9 +9,11 @@ from cosim.errors import InputError
 
 Time = Annotated[float, Quantity("s")]
 PositiveTime = Annotated[float, Quantity("s", above=0.0)]
+Step = Annotated[float, Quantity("s", least=1e-18)]
+DecayTime = Annotated[float, Quantity("s", least=1e-12)]
 Frequency = Annotated[float, Quantity("Hz")]
 PositiveFrequency = Annotated[float, Quantity("Hz", above=0.0)]
-Resistance = Annotated[float, Quantity("ohm", above=0.0)]
+Resistance = Annotated[float, Quantity("ohm", least=1e-3)]
 Temperature = Annotated[float, Quantity("K", above=0.0)]
 ParameterValue = Annotated[float, Parameter()]
 
@@ -57,7 +60,7 @@ class NetlistTable:
 
     file: str
     stop: PositiveTime | None = None
-    max_step: PositiveTime | None = None
+    max_step: Step | None = None
     steps_per_period: int | None = None
     temperature: Temperature | None = None
     parameters: dict[str, ParameterValue] = field(default_factory=dict)
@@ -74,9 +77,9 @@ class NetlistTable:
     def __post_init__(self) -> None:
         if self.max_step is not None and self.steps_per_period is not None:
             raise InputError("give 'max_step' or 'steps_per_period', not both")
-        if self.steps_per_period is not None and self.steps_per_period < 20:
+        if self.steps_per_period is not None and not 20 <= self.steps_per_period <= 100_000:
             raise InputError(
-                f"key 'steps_per_period': wanted at least 20, got {self.steps_per_period}"
+                f"key 'steps_per_period': wanted 20 to 100000, got {self.steps_per_period}"
             )
 
 
@@ -133,14 +136,14 @@ class DriveTable:
         default: the termination, or 50 ohm when that is in the deck.
     """
 
-    carrier: Annotated[float | str, Quantity("Hz", above=0.0, words=("estimate",))]
+    carrier: Annotated[float | str, Quantity("Hz", least=1.0, words=("estimate",))]
     probe: str | None = None
     i: str | None = None
     q: str | None = None
-    termination: Annotated[float | str | None, Quantity("ohm", above=0.0, words=("in deck",))] = (
+    termination: Annotated[float | str | None, Quantity("ohm", least=1e-3, words=("in deck",))] = (
         None
     )
-    attenuation: Annotated[float, Quantity("dB")] = 0.0
+    attenuation: Annotated[float, Quantity("dB", least=-200.0, most=1000.0)] = 0.0
     line: str | None = None
     line_ports: tuple[int, int] | tuple[tuple[int, int], tuple[int, int]] = (1, 2)
     impedance: Resistance | None = None
@@ -180,7 +183,7 @@ class QubitTable:
     anharmonicity : float or None
         In Hz, negative; needed for a transmon.
     t1, t2 : float
-        Relaxation and (Markovian) coherence time in s; default infinite.
+        Relaxation and (Markovian) coherence time in s; default infinite, and twice t1.
     thermal_population : float
         Population of |1> in equilibrium, 0 to 0.5.
     """
@@ -191,8 +194,8 @@ class QubitTable:
     detuning: Frequency = 0.0
     levels: int | None = None
     anharmonicity: Frequency | None = None
-    t1: PositiveTime = float("inf")
-    t2: PositiveTime = float("inf")
+    t1: DecayTime = math.inf
+    t2: DecayTime = math.inf
     thermal_population: float = 0.0
 
     def __post_init__(self) -> None:
@@ -213,7 +216,7 @@ class QubitTable:
                 raise InputError("a transmon needs the key 'anharmonicity', such as \"-300 MHz\"")
             if self.levels is not None and not 3 <= self.levels <= 6:
                 raise InputError(f"key 'levels': wanted 3 to 6, got {self.levels}")
-        if self.t2 > 2.0 * self.t1:
+        if math.isfinite(self.t2) and self.t2 > 2.0 * self.t1:
             raise InputError(f"key 't2': at most twice t1 = {self.t1:g} s, got {self.t2:g} s")
         if not 0.0 <= self.thermal_population <= 0.5:
             raise InputError(

@@ -128,7 +128,7 @@ def _number_table(result: GateResult) -> Table:
     table.add_row(
         "carrier at the probe",
         f"phase {math.degrees(pulse.phase_error):+.3f}°, "
-        f"off by {_frequency(pulse.frequency_error)}, "
+        f"slope {_frequency(pulse.frequency_error)}, "
         f"extinction {'-' if math.isnan(pulse.extinction) else f'{pulse.extinction:.1f} dB'}",
     )
     return table

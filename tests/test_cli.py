@@ -10,7 +10,7 @@ from pathlib import Path
 import pytest
 
 from cosim import cli
-from cosim.errors import InputError, SimulationError
+from cosim.errors import ArchiveError, InputError, SimulationError
 from cosim.result import GATE_FIELDS
 
 DECK = """a steady carrier
@@ -169,6 +169,32 @@ def test_a_failed_simulation_exits_with_3_and_shows_the_log(qcosim: Cli, bench: 
     assert code == 3
     assert out == ""
     assert "  | " in err
+
+
+@pytest.mark.ngspice
+def test_an_archive_that_is_none_is_refused_before_the_run(qcosim: Cli, bench: Path) -> None:
+    foreign = bench.parent / "foreign.h5"
+    foreign.write_bytes(b"something else")
+    (bench.parent / "deck.cir").write_text("no deck", encoding="utf-8")
+    code, out, err = qcosim("run", bench, "--archive", foreign)
+    assert code == 2
+    assert out == ""
+    assert "foreign.h5" in err  # and not the deck, which would fail later
+    assert foreign.read_bytes() == b"something else"
+
+
+@pytest.mark.ngspice
+def test_numbers_come_before_a_file_that_fails(
+    qcosim: Cli, bench: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    def fail(result: object, path: object) -> int:
+        raise ArchiveError("the disk is full")
+
+    monkeypatch.setattr("cosim.dispatch.save", fail)
+    code, out, err = qcosim("run", bench, "--json", "--archive", bench.parent / "a.h5")
+    assert code == 2
+    assert json.loads(out)["free_frame"]["process_fidelity"] > 0.99
+    assert "the disk is full" in err
 
 
 @pytest.mark.parametrize(

@@ -86,6 +86,10 @@ def test_defaults() -> None:
     assert bench.gate.calibrate == ("amplitude",)
 
 
+def test_a_relaxation_time_alone_is_enough() -> None:
+    assert math.isinf(make_testbench(changed("qubit/t2", None)).qubit.t2)
+
+
 def test_the_testbench_written_reads_back_as_the_same(tmp_path: Path) -> None:
     bench = make_testbench(changed("gate/target", {"axis": [1, 0, 1], "angle": "180 deg"}))
     assert bench.gate.target == TargetTable((1.0, 0.0, 1.0), math.pi)
@@ -116,6 +120,9 @@ def test_the_testbench_written_reads_back_as_the_same(tmp_path: Path) -> None:
         ("qubit/anharmonicity", None, ["transmon", "'anharmonicity'"]),
         ("qubit/kind", "spin", ["two levels"]),
         ("qubit/t2", "1 s", ["'t2'", "twice t1", "0.01"]),
+        ("qubit/t1", "1 fs", ["'t1'", "at least 1e-12"]),
+        ("drive/attenuation", "-10000 dB", ["'attenuation'", "at least -200"]),
+        ("netlist/max_step", "1e-320 s", ["'max_step'", "at least"]),
         ("qubit/thermal_population", 0.7, ["'thermal_population'", "0.7"]),
         ("gate/window", ["5 ns"], ["'window"]),
         ("gate/window", ["5 ns", "4 ns"], ["'window'", "after the start"]),
@@ -144,5 +151,8 @@ def test_a_fault_in_a_file_names_the_file(tmp_path: Path) -> None:
         load_testbench(file)
     with pytest.raises(TestbenchError, match="does not exist"):
         load_testbench(tmp_path / "none.toml")
-    with pytest.raises(TestbenchError, match="cannot be read"):
+    with pytest.raises(TestbenchError, match="not a regular file"):
         load_testbench(tmp_path)
+    file.write_text("a = " + "[" * 100_000, encoding="utf-8")
+    with pytest.raises(TestbenchError, match="not a TOML file"):
+        load_testbench(file)

@@ -160,9 +160,9 @@ def _check_power(waveform: Waveform, envelope: Envelope, burst: Burst) -> None:
     if in_band < _MIN_POWER * power or in_band < 1e-12 * mean**2:
         share = in_band / power if power > 0 else 0.0
         raise WaveformError(
-            f"there is no pulse at {envelope.carrier_frequency:.6g} Hz: only {100 * share:.2g} % "
-            f"of the power between {first:.6g} s and {last:.6g} s lies near this carrier, "
-            f"{np.sqrt(2 * in_band):.3g} {waveform.unit} peak",
+            f"there is no pulse at {envelope.carrier_frequency:.6g} Hz: "
+            f"{100 * min(share, 1.0):.2g} % of the power between {first:.6g} s and {last:.6g} s "
+            f"lies near this carrier, {np.sqrt(2 * in_band):.3g} {waveform.unit} peak",
             hint="check the carrier frequency and the probe",
         )
 

@@ -14,6 +14,8 @@ from cosim.waveform import FloatArray
 # Longest step in radians of the frame's rotation: 56 steps per carrier period. Measured error of
 # the channel after 120 ns at a Rabi frequency of 100 MHz: 2e-10, and 2e-11 with 80 steps.
 PHASE_STEP = 2 * math.pi / 56
+# Most steps of one evolution: 2 GB of memory, a minute with two levels.
+MOST_STEPS = 30_000_000
 # Longest step in radians of the drive's rotation, and in radians of the anharmonic energies.
 RATE_STEP = 0.02
 ENERGY_STEP = 0.4
@@ -127,7 +129,8 @@ def plan_steps(
     Raises
     ------
     InputError
-        If the window is empty or a number is not finite and positive.
+        If the window is empty, a number is not finite and positive, or there would be more than
+        `MOST_STEPS` steps.
     WaveformError
         If the window leaves the drive's time range.
     """
@@ -155,6 +158,13 @@ def plan_steps(
     # The slack keeps a step that equals the limit but for rounding from being cut.
     cuts = np.ceil(steps / limits * (1 - 1e-6))
     cuts = np.maximum(cuts, _edge_cuts(qubit, abs(scale) * drive.c[0, first:last], steps))
+    if not cuts.sum() * refine <= MOST_STEPS:
+        raise InputError(
+            f"the evolution from {start:.6g} s to {stop:.6g} s would take {cuts.sum():.3g} steps, "
+            f"at most {MOST_STEPS:.3g} are made: the drive rate comes up to {rates.max():.3g} "
+            f"rad/s, T1 is {qubit.t1:.3g} s and T2 {qubit.t2:.3g} s",
+            hint="check rabi_per_volt, attenuation, t1 and t2",
+        )
     cuts = cuts.astype(np.int64) * refine
     piece = np.repeat(np.arange(first, last, dtype=np.int64), cuts)
     length = np.repeat(steps / cuts, cuts)

@@ -69,3 +69,35 @@ def test_the_carrier_offset_finds_a_detuned_qubit() -> None:
     # The Bloch-Siegert shift belongs to the offset: 31 kHz at the peak of 25 MHz.
     assert both.detuning == pytest.approx(2e6, abs=31e3)
     assert both.scale == pytest.approx(math.pi / 3.0, rel=1e-4)
+
+
+@pytest.mark.parametrize("detuning", [3e6, -20e6, 40e6, -60e6])
+def test_the_pair_is_found_from_far_away(detuning: float) -> None:
+    """No amplitude mends a strongly detuned half turn, so the offset must come first."""
+    found = calibrate_pulse(
+        pulse(math.pi, qubit=Qubit(CARRIER + detuning)),
+        X180,
+        guess=1.2,
+        with_detuning=True,
+        resonance=detuning,
+    )
+    assert 1 - found.frame.average_gate_fidelity < 1e-9
+    assert found.detuning == pytest.approx(detuning, abs=40e3)  # the Bloch-Siegert shift
+    assert found.scale == pytest.approx(1.0, rel=1e-3)  # its second order
+
+
+def test_the_offset_alone() -> None:
+    detuned = pulse(math.pi, qubit=Qubit(CARRIER + 5e6))
+    found = calibrate_pulse(detuned, X180, with_amplitude=False, with_detuning=True, resonance=5e6)
+    assert found.scale == 1.0
+    assert found.detuning == pytest.approx(5e6, abs=40e3)  # the Bloch-Siegert shift
+    assert 1 - found.frame.average_gate_fidelity < 1e-9
+
+
+def test_a_quarter_turn_stays_at_resonance() -> None:
+    """Scale and offset do the same to it when Z is free: the pair next to resonance is told."""
+    found = calibrate_pulse(
+        pulse(math.pi / 2, qubit=Qubit(CARRIER - 8e6)), X90, with_detuning=True, resonance=-8e6
+    )
+    assert found.detuning == pytest.approx(-8e6, abs=0.2e6)  # two simplex steps of 0.01 turn/T
+    assert found.scale == pytest.approx(1.0, abs=0.01)  # likewise, its first step

@@ -9,7 +9,7 @@ import pytest
 import cosim
 from cosim.adjust import Pulse, calibrate_pulse
 from cosim.capture import Capture, capture_probe, make_plan
-from cosim.fidelities import RICHARDSON, Views, error_bar
+from cosim.fidelities import MARGIN, Views, error_bar
 from cosim.gate import gate_target
 from cosim.quantum.channel import nearest_unitary
 from cosim.quantum.fidelity import average_gate_fidelity, process_fidelity, rotation_of
@@ -81,12 +81,12 @@ def check(view: Fidelity, best: Pulse, target: ComplexArray) -> None:
 
 
 def test_the_bar_is_tight_for_an_error_along_the_over_rotation() -> None:
-    """Two rotations about one axis, off by delta and delta + eps: the bar is the change, times e.
+    """Two rotations about one axis, off by delta and delta + eps: the bar is the change at e eps.
 
-    Source: elementary SU(2) algebra, 1 - F_avg = (2/3) sin^2(delta/2), and Richardson's factor.
+    Source: elementary SU(2) algebra, 1 - F_avg = (2/3) sin^2(delta/2).
     """
     delta, eps = 1e-2, 1e-4
     infidelity = [2 / 3 * sin(angle / 2) ** 2 for angle in (delta, delta + eps, eps)]
     bar = error_bar(1 - infidelity[0], 1 - infidelity[1], infidelity[2])
-    change = 2 / 3 * (sin((delta + RICHARDSON * eps) / 2) ** 2 - sin(delta / 2) ** 2)
+    change = 2 / 3 * (sin((delta + MARGIN * eps) / 2) ** 2 - sin(delta / 2) ** 2)
     assert bar == pytest.approx(change, rel=1e-4)  # angles of 1e-2 against their sines
