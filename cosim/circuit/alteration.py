@@ -5,7 +5,7 @@ import re
 from collections.abc import Mapping, Sequence
 from dataclasses import replace
 
-from cosim.circuit.cards import assignments, masked, number_text
+from cosim.circuit.cards import assignments, masked, number_text, word_spans
 from cosim.circuit.copies import Edit, edited_lines
 from cosim.circuit.deck import Deck, SourceLine
 from cosim.circuit.hierarchy import (
@@ -15,18 +15,17 @@ from cosim.circuit.hierarchy import (
     top_level_cards,
 )
 from cosim.circuit.lookup import find_node
-from cosim.circuit.scope import Scope, element_of
+from cosim.circuit.scope import VALUE_NAMES, Scope, element_of, value_place
 from cosim.circuit.settings import with_settings
 from cosim.errors import InputError, UnknownNameError, near_names
 
-_VALUE_NAMES = {
-    "r": ("value", "r", "resistance"),
-    "c": ("value", "c", "capacitance"),
-    "l": ("value", "l", "inductance"),
-    "v": ("value", "dc"),
-    "i": ("value", "dc"),
-}
-"""Element letter -> names under which its value in the fourth place can be given."""
+_WAVEFORMS = frozenset(
+    {
+        "pulse", "sin", "exp", "pwl", "sffm", "am", "trnoise", "trrandom", "external", "ac",
+        "distof1", "distof2", "portnum", "z0",
+    }
+)  # fmt: skip
+"""Words of a source before which its DC value may be put."""
 
 
 def with_parameters(deck: Deck, parameters: Mapping[str, float]) -> Deck:
@@ -181,27 +180,27 @@ def _with_parameter(
                 file=line.file,
                 line=line.line,
             )
-    value_names = _VALUE_NAMES.get(element.letter, ())
+    value_names = VALUE_NAMES.get(element.letter, ())
     same = value_names if parameter in value_names else (parameter,)
     for item in assignments(text):
         if item.name in same:
             return text[: item.value_start] + number_text(value) + text[item.stop :]
     if parameter in value_names:
-        return _with_value(text, value)
+        return _with_value(scope, text, value)
     return f"{text} {parameter}={number_text(value)}"
 
 
-def _with_value(text: str, value: float) -> str:
-    """Replace the value in an element's fourth place, or the one after "dc"."""
-    covered = masked(text)
-    match = None
-    if text[0] in "vViI":
-        match = re.search(r"(?<![\w.])dc(?:\s*=\s*|\s+)([^\s,]+)", covered, re.IGNORECASE)
-    if match is None:
-        match = re.match(r"\S+[\s,]+\S+[\s,]+\S+[\s,]+([^\s,=]+)(?!\s*=)", covered)
-    if match is None:
-        return f"{text} {number_text(value)}"
-    if text[match.start(1)] in "{'-+." or text[match.start(1)].isdigit():
-        return text[: match.start(1)] + number_text(value) + text[match.end(1) :]
-    # A model or a waveform stands there; a value goes before it.
-    return f"{text[: match.start(1)]}{number_text(value)} {text[match.start(1) :]}"
+def _with_value(scope: Scope, text: str, value: float) -> str:
+    """Replace the value in an element's fourth place, or the one after "dc" or a model's name."""
+    number = number_text(value)
+    if text[0] not in "vViI":
+        start, stop = value_place(scope, text)
+    else:
+        match = re.search(r"(?<![\w.])dc(?:\s*=\s*|\s+)([^\s,]+)", masked(text), re.IGNORECASE)
+        spans = [match.span(1)] if match else word_spans(text)[3:4]
+        start, stop = spans[0] if spans else (len(text), len(text))
+        if text[start:stop].lower() in _WAVEFORMS:
+            stop = start
+    if start < stop:
+        return text[:start] + number + text[stop:]
+    return " ".join(part for part in (text[:start].rstrip(), number, text[start:].strip()) if part)

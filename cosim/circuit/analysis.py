@@ -87,6 +87,9 @@ class TransientRequest:
         Wall-clock limit of the run in s.
     memory_limit : int
         Limit of the simulator's address space in bytes.
+    output_step : float or None
+        What sources take for times that they leave out, in s, where the deck has no `.tran`; None:
+        the step. A run that is compared with another one must share it.
 
     Raises
     ------
@@ -104,6 +107,7 @@ class TransientRequest:
     seed: int = 1
     time_limit: float = field(default=600.0, metadata={"unit": "s"})
     memory_limit: int = field(default=8 * 2**30, metadata={"unit": "byte"})
+    output_step: float | None = field(default=None, metadata={"unit": "s"})
 
     def __post_init__(self) -> None:
         for name in ("stop", "step", "time_limit", "memory_limit"):
@@ -122,6 +126,8 @@ class TransientRequest:
             )
         if self.temperature is not None:
             _positive("TransientRequest.temperature", self.temperature)
+        if self.output_step is not None:
+            _positive("TransientRequest.output_step", self.output_step)
         if not 1 <= self.seed < 2**31:
             raise InputError(f"TransientRequest.seed must be from 1 to 2147483647, got {self.seed}")
 

@@ -238,6 +238,22 @@ def words(text: str) -> tuple[str, ...]:
     return _short_words(text) if len(text) <= LONGEST_KEPT else _cut(text)
 
 
+def word_spans(text: str) -> list[tuple[int, int]]:
+    """Give the places of the words of an element line, as `words` gives them.
+
+    Parameters
+    ----------
+    text : str
+        A logical line.
+
+    Returns
+    -------
+    list of (int, int)
+        Index of each word's first character and of what follows it.
+    """
+    return [match.span() for match in _WORD.finditer(text)]
+
+
 def _cut(text: str) -> tuple[str, ...]:
     return tuple(_WORD.findall(text.lower()))
 

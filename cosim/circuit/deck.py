@@ -147,6 +147,8 @@ class PreparedDeck:
         Name in the scratch folder -> content.
     notices : tuple of str
         The deck's notices and those of the preparation.
+    zeros : tuple of int
+        Indices of the lines of resistors of 0 ohm, as far as can be told.
     """
 
     lines: tuple[str, ...]
@@ -155,6 +157,7 @@ class PreparedDeck:
     commands: tuple[str, ...]
     data: dict[str, bytes]
     notices: tuple[str, ...]
+    zeros: tuple[int, ...] = ()
 
 
 def where(line: SourceLine) -> str:
@@ -171,6 +174,26 @@ def where(line: SourceLine) -> str:
         "file:line".
     """
     return f"{line.file}:{line.line}"
+
+
+def shortened(text: str, most: int = 120) -> str:
+    """Cut a text that is quoted in a message.
+
+    Parameters
+    ----------
+    text : str
+        The text.
+    most : int
+        Number of characters to keep.
+
+    Returns
+    -------
+    str
+        The text, or its head and how long it is.
+    """
+    if len(text) <= most:
+        return text
+    return f"{text[:most]}... ({len(text)} characters)"
 
 
 def unique(items: Iterable[str]) -> tuple[str, ...]:

@@ -6,7 +6,7 @@ from collections.abc import Sequence
 from typing import NoReturn
 
 from cosim.circuit.client import INSTALL_HINT
-from cosim.circuit.deck import PreparedDeck
+from cosim.circuit.deck import PreparedDeck, shortened
 from cosim.circuit.location import locate
 from cosim.errors import (
     ConvergenceError,
@@ -50,8 +50,6 @@ _ECHO = re.compile(
 _TIME = re.compile(r"timestep too small; time = ([-+.\deE]+)", re.IGNORECASE)
 _SINGULAR = re.compile(r"singular matrix:\s+check node\s+(\S+)", re.IGNORECASE)
 _WARNING = re.compile(r"\bwarning\b|unrecognized parameter|set to 1 mOhm", re.IGNORECASE)
-# A literal zero is taken for 1 mOhm without a word.
-_ZERO = re.compile(r"r\S*\s+\S+\s+\S+\s+(?:r\s*=\s*)?0*\.?0*(?:e[+-]?\d+)?\s*$", re.IGNORECASE)
 # "Checking parameters for BSIM 4.5 model xb.xn:nch.8", and then its warnings, for each device.
 _CHECK = re.compile(r"Checking parameters for .* model (?:\S*:)?(\S+)$")
 _REMARK = re.compile(r"warning:\s*", re.IGNORECASE)
@@ -167,10 +165,10 @@ def findings(prepared: PreparedDeck, log: Sequence[str]) -> tuple[str, ...]:
     for line, element in itertools.pairwise(words):
         if match := _RANGE.search(line):
             found[f"ngspice rejected trial steps: an argument {match[0]} {element}"] = None
-    for index, line in enumerate(prepared.lines):
-        if _ZERO.match(line):
-            file, number = prepared.origins[index]
-            found[f"{_place(file, number)}ngspice takes 1 mOhm for the 0 ohm of {line!r}"] = None
+    for index in prepared.zeros:
+        file, number = prepared.origins[index]
+        line = shortened(prepared.lines[index])
+        found[f"{_place(file, number)}ngspice takes 1 mOhm for the 0 ohm of {line!r}"] = None
     for text in _card_checks(prepared, words):
         found[text] = None
     place = 0

@@ -45,6 +45,8 @@ class Structure:
         Element letter -> the first element of that kind that is used.
     transistors : dict of int to str
         Index of a model card that MOS transistors use -> the model's name, without its bin.
+    used : list of Scope
+        The top level and the definitions that are used, once each.
     """
 
     lines: tuple[SourceLine, ...]
@@ -54,6 +56,7 @@ class Structure:
     settings: tuple[int, ...]
     devices: dict[str, SourceLine] = field(default_factory=dict)
     transistors: dict[int, str] = field(default_factory=dict)
+    used: list[Scope] = field(default_factory=list)
 
 
 _recent: OrderedDict[int, Structure] = OrderedDict()
@@ -314,6 +317,7 @@ def _check(structure: Structure) -> None:
             if definition is not None:
                 visit(definition, (*way, scope))
         done.add(scope)
+        structure.used.append(scope)
 
     visit(structure.root, ())
 

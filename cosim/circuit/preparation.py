@@ -5,6 +5,7 @@ import re
 from cosim.circuit.analysis import TransientRequest
 from cosim.circuit.cards import SETTING_CARDS, assignments, card_word, number_text
 from cosim.circuit.deck import Deck, PreparedDeck, SourceLine, unique, where
+from cosim.circuit.defaults import notices_on_times, output_step, zero_resistors
 from cosim.circuit.expression import spice_number
 from cosim.circuit.hierarchy import Structure, structure_of
 from cosim.circuit.lookup import resolve_saves, save_expression
@@ -69,6 +70,8 @@ def prepare(deck: Deck, request: TransientRequest) -> PreparedDeck:
     notices: list[str] = []
     left_out: list[tuple[SourceLine, str]] = []
     body: list[SourceLine] = [_own_line(_options_text(own))]
+    empty = set(zero_resistors(structure))
+    zeros: list[int] = []
     in_force = set(structure.settings)
     temperature = _temperature_cards(deck, request, structure, notices)
     body.extend(temperature)
@@ -76,6 +79,8 @@ def prepare(deck: Deck, request: TransientRequest) -> PreparedDeck:
         card = card_word(line.text)
         if card not in SETTING_CARDS:
             body.append(line)
+            if index in empty:
+                zeros.append(len(body))  # The title comes first.
         elif card == ".options" and index in in_force:
             filtered = filtered_options(line, own)
             left_out.extend((line, text) for text in filtered.left_out)
@@ -85,7 +90,8 @@ def prepare(deck: Deck, request: TransientRequest) -> PreparedDeck:
     if keys:
         items = unique(save_expression(vector) for vector in keys.values())
         body.append(_own_line(".save " + " ".join(items)))
-    body.append(_own_line(_transient_text(request)))
+    notices.extend(notices_on_times(deck, request, structure))
+    body.append(_own_line(_transient_text(request, output_step(deck, request))))
     body.append(_own_line(".end"))
     check_lines(body)
     mode = _flat_mode(deck.compatibility)
@@ -96,6 +102,7 @@ def prepare(deck: Deck, request: TransientRequest) -> PreparedDeck:
         commands=(*((f"set ngbehavior={mode}",) if mode else ()), f"setseed {request.seed}"),
         data={file.name: file.content for file in deck.data_files},
         notices=unique((*deck.notices, *notices)),
+        zeros=tuple(zeros),
     )
 
 
@@ -110,9 +117,9 @@ def _options_text(own: dict[str, float | str]) -> str:
     )
 
 
-def _transient_text(request: TransientRequest) -> str:
-    step, stop, start = (number_text(t) for t in (request.step, request.stop, request.start))
-    return f".tran {step} {stop} {start} {step}" + (" uic" if request.initial == "uic" else "")
+def _transient_text(request: TransientRequest, output: float) -> str:
+    times = (number_text(t) for t in (output, request.stop, request.start, request.step))
+    return f".tran {' '.join(times)}" + (" uic" if request.initial == "uic" else "")
 
 
 def _flat_mode(compatibility: str | None) -> str:

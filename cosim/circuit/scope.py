@@ -3,7 +3,7 @@
 import re
 from dataclasses import dataclass, field
 
-from cosim.circuit.cards import leading_words, words
+from cosim.circuit.cards import assignments, leading_words, word_spans, words
 
 GROUND = frozenset({"0", "gnd"})
 
@@ -16,6 +16,7 @@ MODEL_PLACE = {"d": 3, "j": 4, "z": 4, "q": 4, "m": 5, "s": 5, "o": 5, "y": 5, "
 _MOST_EXTRA_NODES = {"d": 1, "q": 2, "m": 3}
 _IN_EXPRESSION = re.compile(r"(?<![\w.])v\s*\(\s*([^\s,()]+)\s*(?:,\s*([^\s,()]+)\s*)?\)", re.I)
 _PORT = re.compile(r"(?:%\w+\s*)?\[[^\[\]]*\]|%\w+\s*\([^()]*\)|%\w+|[^\s\[\]()%]+")
+_MOST_DIGITS = 6  # of a number of controlling nodes; Python refuses to read 5000
 _EVENT_ONLY = frozenset({"d_to_real", "real_delay", "real_gain"})
 _ANALOG_PORT = {"adc_bridge": 0, "bidi_bridge": 0, "dac_bridge": -1, "real_to_v": -1}
 
@@ -170,7 +171,7 @@ def element_of(scope: Scope, text: str) -> Element:
 
 def _controlling_nodes(found: tuple[str, ...]) -> tuple[str, ...]:
     if len(found) > 4 and found[3] == "poly":
-        count = int(found[4]) if found[4].isdigit() else 0
+        count = int(found[4]) if found[4].isdecimal() and len(found[4]) <= _MOST_DIGITS else 0
         return found[5 : 5 + 2 * count]
     keyword = len(found) > 3 and found[3] in ("value", "vol", "cur", "table", "laplace", "freq")
     if keyword or "=" in found[3:5]:
@@ -195,3 +196,42 @@ def _code_model(scope: Scope, name: str, text: str) -> Element:
             if word != "null":
                 nodes.append(word)
     return Element(name, "a", tuple(nodes), reference)
+
+
+VALUE_NAMES = {
+    "r": ("value", "r", "resistance"),
+    "c": ("value", "c", "capacitance"),
+    "l": ("value", "l", "inductance"),
+    "v": ("value", "dc"),
+    "i": ("value", "dc"),
+}
+"""Element letter -> names under which its value in the fourth place can be given."""
+
+
+def value_place(scope: Scope, text: str) -> tuple[int, int]:
+    """Find the value of a resistor, capacitor or inductor.
+
+    Parameters
+    ----------
+    scope : Scope
+        Where it stands: a model's name may come before the value.
+    text : str
+        The line.
+
+    Returns
+    -------
+    tuple of (int, int)
+        Index of its first character and of what follows it; equal where there is none and one
+        may be put in.
+    """
+    found = assignments(text)
+    for item in found:
+        if item.name in VALUE_NAMES[text[0].lower()]:
+            return item.value_start, item.stop
+    spans = word_spans(text[: found[0].start] if found else text)
+    if len(spans) > 3 and scope.model(text[slice(*spans[3])].lower()) is not None:
+        return spans[4] if len(spans) > 4 else (spans[3][0], spans[3][0])
+    if len(spans) > 3:
+        return spans[3]
+    end = spans[2][1] if len(spans) == 3 else len(text)
+    return end, end

@@ -15,7 +15,7 @@ from cosim.circuit.netlist import (
     with_terminations,
 )
 from cosim.errors import InputError, UnknownNameError
-from tests.circuit.batch import DECKS, ROUNDING, copy_decks, original, output, run
+from tests.circuit.batch import DECKS, OPTIONS, ROUNDING, WRITING, copy_decks, original, output, run
 
 # Deck, how it is altered, and the same edit by hand: (old text, new text) pairs.
 Edit = tuple[str, Callable[[Deck], Deck], list[tuple[str, str]]]
@@ -245,12 +245,48 @@ def test_what_depends_on_a_parameter_follows() -> None:
         ("v1 a 0 sin(0 1 1g) DC 1", "dc", "v1 a 0 sin(0 1 1g) DC 5.0"),
         ("v1 a 0", "value", "v1 a 0 5.0"),
         ("i1 a 0 -1m", "dc", "i1 a 0 5.0"),
+        ("v1 a 0 vdd", "dc", "v1 a 0 5.0"),
+        ("v1 a 0 external", "dc", "v1 a 0 5.0 external"),
+        ("r1 a 0 mod 2k", "value", "r1 a 0 mod 5.0"),
+        ("r1 a 0 MOD {2*x} tc1=1m", "r", "r1 a 0 MOD 5.0 tc1=1m"),
+        ("r1 a 0 2k mod", "value", "r1 a 0 5.0 mod"),
+        ("r1 (a 0) 2k", "value", "r1 (a 0) 5.0"),
+        ("r1 a 0 tc1=1m", "value", "r1 a 0 5.0 tc1=1m"),
+        ("r1 a 0 rr", "value", "r1 a 0 5.0"),
+        ("c1 a 0 cc ic=1", "c", "c1 a 0 5.0 ic=1"),
+        ("l1 a 0 ll", "l", "l1 a 0 5.0"),
     ],
 )
 def test_values_are_replaced_where_they_stand(line: str, parameter: str, wanted: str) -> None:
     deck = deck_from_text(f"t\n{line}\nr2 a 0 1\n.model mod r rsh=1\n")
     name = line.split()[0]
     assert with_instances(deck, {name: {parameter: 5}}).lines[0].text == wanted
+
+
+@pytest.mark.ngspice
+@pytest.mark.parametrize(
+    ("line", "by_hand"),
+    [
+        ("r1 in out rm 2k", "r1 in out rm 3k"),
+        ("r1 in out rm {rr} tc1=0", "r1 in out rm 3k tc1=0"),
+        ("r1 in out rm", "r1 in out 3k rm"),
+        ("r1 in out rr", "r1 in out 3k"),
+        ("x1 in out s\n.subckt s a b\nr1 a b rl 2k\n.model rl r rsh=1\n.ends", "r1 in out 3k"),
+    ],
+)
+def test_a_value_beside_a_model_or_as_a_bare_parameter(
+    tmp_path: Path, line: str, by_hand: str
+) -> None:
+    def text(what: str) -> str:
+        cards = ".param rr=2k\n.model rm r rsh=100\nv1 in 0 sin(0 1 1g)\nr2 out 0 1k\n"
+        return f"t\n{cards}{what}\n{OPTIONS}\n{WRITING}"
+
+    (tmp_path / "deck.cir").write_text(text(by_hand))
+    wanted = original("deck.cir", tmp_path)
+    name = "x1.r1" if line[0] == "x" else "r1"
+    got = output(with_instances(deck_from_text(text(line)), {name: {"value": 3e3}}))
+    assert np.ptp(wanted) > 0.01
+    np.testing.assert_allclose(got, wanted, rtol=0, atol=ROUNDING)
 
 
 def test_all_digits_of_a_value_reach_the_deck() -> None:

@@ -82,7 +82,7 @@ def test_the_prepared_list_is_the_bridges_own_around_the_circuit() -> None:
     )
     assert prepared.lines[2] == ".temp -196.15"
     assert prepared.lines[3:5] == (".options tnom=20", ".options scale=1e-6 gmin=1e-13")
-    assert prepared.lines[-3:] == (".save v(out)", ".tran 1e-12 1e-09 5e-10 1e-12 uic", ".end")
+    assert prepared.lines[-3:] == (".save v(out)", ".tran 2e-12 1e-09 5e-10 1e-12 uic", ".end")
     assert prepared.commands == ("setseed 11",)
     assert prepared.keys == {"v(out)": "out"}
     assert len(prepared.origins) == len(prepared.lines)

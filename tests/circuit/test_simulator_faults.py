@@ -209,11 +209,6 @@ def test_a_floating_node_is_a_named_warning(run_lines: Runner) -> None:
 @pytest.mark.parametrize(
     ("body", "words"),
     [
-        (["v1 in 0 1", "r1 in out 0", "r2 out 0 1k"], "deck.cir:2: ngspice takes 1 mOhm"),
-        (
-            ["v1 in 0 1", "r1 in out 1k", "x1 out s", ".subckt s a", "r9 a 0 0", ".ends"],
-            "deck.cir:5: ngspice takes 1 mOhm",
-        ),
         (
             ["v1 in 0 1", "r1 in out 1k", "m1 out in 0 0 nm", ".model nm nmos level=1 foo=3"],
             "deck.cir:4: Warning: Model issue on line 6",
@@ -223,7 +218,7 @@ def test_a_floating_node_is_a_named_warning(run_lines: Runner) -> None:
             "deck.cir:4: Warning : IC on non-existent node - nowhere",
         ),
     ],
-    ids=["0 ohm", "0 ohm in an instance", "model parameter", "initial condition"],
+    ids=["model parameter", "initial condition"],
 )
 def test_what_ngspice_passes_over_is_a_warning_with_its_line(
     run_lines: Runner, body: list[str], words: str
