@@ -21,7 +21,7 @@ from tests.kit.install import LIBRARY, MODELS, PACKAGE, VERSION, install_kit
 pytestmark = [pytest.mark.ngspice, pytest.mark.full]
 
 CARRIER, STOP = 1.5e9, 25e-9
-STEP = 1.0 / CARRIER / 80
+STEP = 1.0 / CARRIER / 80  # Also the step of the deck's .tran, from which the first steps follow.
 
 # Lengths are numbers in um, since the kit sets `.option scale=1u` for the whole deck.
 DECK = f"""gated carrier buffer on the devices of an open process kit
@@ -48,7 +48,7 @@ vgate gate 0 pulse(0 {{vdd}} 7n 0.2n 0.2n 10n)
 xb lo gate pad vdd burst
 cblock pad out 10p
 rload out 0 50
-.tran 10p 25n 0 5p
+.tran {STEP!r} 25n
 .end
 """
 
