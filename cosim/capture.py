@@ -14,6 +14,7 @@ from cosim.circuit.confidential import (
     kept_files,
     withhold,
 )
+from cosim.circuit.deck import shortened
 from cosim.circuit.netlist import (
     Deck,
     DeckFile,
@@ -129,7 +130,9 @@ def make_plan(bench: Testbench) -> Plan:
     """
     table = netlist_of(bench)
     folder = Path(bench.folder)
-    include_paths = tuple(str(folder / Path(path).expanduser()) for path in table.include_paths)
+    include_paths = tuple(
+        str(_under(folder, path, "include_paths")) for path in table.include_paths
+    )
     if bench.circuit:
         deck = deck_from_text(
             bench.circuit,
@@ -141,12 +144,12 @@ def make_plan(bench: Testbench) -> Plan:
         )
     else:
         deck = load_deck(
-            _short(folder / Path(table.file).expanduser()),
+            _short(_under(folder, table.file, "file")),
             include_paths=include_paths,
             sections=table.sections,
             compatibility=table.compatibility,
         )
-    roots = confidential_roots([str(folder / Path(p).expanduser()) for p in table.confidential])
+    roots = confidential_roots([str(_under(folder, p, "confidential")) for p in table.confidential])
     check_roots(deck, roots)  # Before names are looked up in lines that are cut in two.
     deck = with_instances(with_parameters(deck, table.parameters), table.instances)
     stop = _stop(table, deck)
@@ -169,6 +172,7 @@ def make_plan(bench: Testbench) -> Plan:
         temperature=table.temperature,
         seed=table.seed,
         time_limit=table.time_limit,
+        output_step=step,
     )
     carrier = drive.carrier if isinstance(drive.carrier, float) else math.nan
     notices = (*withheld, *notices)
@@ -209,6 +213,20 @@ def _terminated(deck: Deck, probes: Sequence[Probe], resistance: float) -> Deck:
             )
     nodes = dict.fromkeys(node for probe in probes for node in probe.nodes)
     return with_terminations(deck, tuple(nodes), resistance)
+
+
+def _under(folder: Path, name: str, key: str) -> Path:
+    """Give the path that a key names, relative to the testbench's folder; "~" is expanded."""
+    try:
+        path = folder / Path(name).expanduser()
+        os.lstat(os.fsencode(path))
+    except OSError:
+        pass  # Whether it is there is said where it is read.
+    except (RuntimeError, ValueError) as error:  # no such user; NUL, or half a character
+        raise TestbenchError(
+            f"table [netlist], key '{key}': {shortened(repr(name))} is no path: {error}"
+        ) from None
+    return path
 
 
 def _short(path: Path) -> Path:

@@ -7,14 +7,17 @@ expression with anything else in it (random functions, node voltages) has no val
 
 import math
 import re
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Iterator, Mapping
+from contextlib import contextmanager
 
 _SUFFIXES = {
     "t": 1e12, "g": 1e9, "meg": 1e6, "k": 1e3, "m": 1e-3, "u": 1e-6, "n": 1e-9, "p": 1e-12,
-    "f": 1e-15, "a": 1e-18,
+    "f": 1e-15, "a": 1e-18, "mil": 25.4e-6,
 }  # fmt: skip
+# Measured on ngspice 39: in braces and quotes "5a" is 5, and "1mil" is 1e-3.
+_SUFFIXES_IN_EXPRESSION = {**_SUFFIXES, "a": 1.0, "mil": 1e-3}
 _NUMBER = re.compile(
-    r"((?:\d+\.?\d*|\.\d+)(?:e[+-]?\d+)?)(meg|[tgkmunpfa])?[a-z_°\u03a9\u2126]*", re.I
+    r"((?:\d+\.?\d*|\.\d+)(?:e[+-]?\d+)?)(meg|mil|[tgkmunpfa])?[a-z_°\u03a9\u2126]*", re.I
 )
 _TOKEN = re.compile(
     r"\s*(?:(?P<number>(?:\d+\.?\d*|\.\d+)(?:e[+-]?\d+)?[a-z_]*)|(?P<name>[a-z_][\w.]*)"
@@ -69,20 +72,24 @@ _FUNCTIONS: dict[str, tuple[int, Callable[..., float]]] = {
     "ternary_fcn": (3, lambda c, a, b: a if c else b),
 }
 _UNARY_LEVEL = 7
-_DEEPEST = 40  # Nesting beyond this is not met in decks; it would only exhaust Python's stack.
+# Calls of Python that one value may nest, in parentheses and from parameter to parameter; Python
+# itself allows a thousand for all that runs. Forty parameters in a chain take 320.
+_DEEPEST = 500
 
 
 class _NoValueError(Exception):
     """The value cannot be told."""
 
 
-def spice_number(text: str) -> float | None:
+def spice_number(text: str, *, in_expression: bool = False) -> float | None:
     """Read a number with an optional SPICE suffix ("1meg", "2.5u", "10kOhm").
 
     Parameters
     ----------
     text : str
         The number.
+    in_expression : bool
+        Whether it stands in braces or quotes, where ngspice knows fewer suffixes.
 
     Returns
     -------
@@ -94,7 +101,26 @@ def spice_number(text: str) -> float | None:
     match = _NUMBER.fullmatch(text[1:] if text[:1] in ("-", "+") else text)
     if match is None:
         return None
-    return sign * float(match[1]) * _SUFFIXES.get((match[2] or "").lower(), 1.0)
+    suffixes = _SUFFIXES_IN_EXPRESSION if in_expression else _SUFFIXES
+    return sign * float(match[1]) * suffixes.get((match[2] or "").lower(), 1.0)
+
+
+class _Depth:
+    """Counts the calls that one value nests, over all expressions that it leads through."""
+
+    def __init__(self) -> None:
+        self._calls = 0
+
+    @contextmanager
+    def of(self, calls: int) -> Iterator[None]:
+        """Count some calls for as long as a block lasts."""
+        if self._calls + calls > _DEEPEST:
+            raise _NoValueError
+        self._calls += calls
+        try:
+            yield
+        finally:
+            self._calls -= calls
 
 
 class Parameters:
@@ -116,7 +142,7 @@ class Parameters:
         self.expressions = expressions
         self._functions = functions
         self._known: dict[str, float | None] = {}
-        self._depth = 0
+        self._depth = _Depth()
 
     def value(self, text: str) -> float | None:
         """Work out an expression; None when its value cannot be told."""
@@ -127,13 +153,8 @@ class Parameters:
         return float(result) if math.isfinite(result) else None
 
     def _evaluate(self, text: str, local: Mapping[str, float]) -> float:
-        self._depth += 1
-        try:
-            if self._depth > _DEEPEST:
-                raise _NoValueError
-            return _Reader(text, lambda name: self._name(name, local), self._call).read()
-        finally:
-            self._depth -= 1
+        with self._depth.of(4):
+            return _Reader(text, lambda n: self._name(n, local), self._call, self._depth).read()
 
     def _name(self, name: str, local: Mapping[str, float]) -> float:
         if name in local:
@@ -189,12 +210,13 @@ class _Reader:
         text: str,
         name: Callable[[str], float],
         call: Callable[[str, list[float]], float],
+        depth: _Depth,
     ) -> None:
         self._tokens = _tokens(text)
         self._at = 0
         self._name = name
         self._call = call
-        self._depth = 0
+        self._depth = depth
 
     def read(self) -> float:
         value = self._ternary()
@@ -211,34 +233,32 @@ class _Reader:
         self._at += 1
 
     def _ternary(self) -> float:
-        self._depth += 1
-        if self._depth > _DEEPEST:
-            raise _NoValueError
-        value = self._binary(0)
-        if self._peek() == ("operator", "?"):
-            self._at += 1
-            first = self._ternary()
-            self._take(":")
-            second = self._ternary()
-            value = first if value else second
-        self._depth -= 1
-        return value
+        with self._depth.of(1):
+            value = self._binary(0)
+            if self._peek() == ("operator", "?"):
+                self._at += 1
+                first = self._ternary()
+                self._take(":")
+                second = self._ternary()
+                value = first if value else second
+            return value
 
     def _binary(self, lowest: int) -> float:
-        value = self._unary()
-        while True:
-            kind, text = self._peek()
-            level, function = _BINARY.get(text, (-1, max)) if kind == "operator" else (-1, max)
-            if level < max(lowest, 0):
-                return value
-            self._at += 1
-            value = function(value, self._binary(level + 1))
+        with self._depth.of(2):  # With the call of `_unary`, which has no other way in.
+            value = self._unary()
+            while True:
+                kind, text = self._peek()
+                level, function = _BINARY.get(text, (-1, max)) if kind == "operator" else (-1, max)
+                if level < max(lowest, 0):
+                    return value
+                self._at += 1
+                value = function(value, self._binary(level + 1))
 
     def _unary(self) -> float:
         kind, text = self._peek()
         self._at += 1
         if kind == "number":
-            number = spice_number(text)
+            number = spice_number(text, in_expression=True)
             if number is None:
                 raise _NoValueError
             return number
@@ -257,11 +277,7 @@ class _Reader:
             self._take(")")
             return value
         if text in ("-", "+", "!"):
-            self._depth += 1
-            if self._depth > _DEEPEST:
-                raise _NoValueError
             value = self._binary(_UNARY_LEVEL)
-            self._depth -= 1
             return -value if text == "-" else value if text == "+" else float(not value)
         raise _NoValueError
 

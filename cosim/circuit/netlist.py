@@ -17,6 +17,7 @@ from cosim.circuit.deck import (
     PreparedDeck,
     SourceLine,
     TransientCard,
+    shortened,
     unique,
 )
 from cosim.circuit.expansion import Expansion, Places
@@ -84,7 +85,7 @@ def load_deck(
     DeckError
         If the deck is wrong otherwise.
     """
-    name = os.fspath(path)
+    name = _checked_path(path)
     mode = _checked_mode(compatibility)
     source = read_source(name, is_deck=True, pspice="ps" in mode)
     folder = os.path.dirname(os.path.abspath(name))
@@ -123,11 +124,26 @@ def deck_from_text(
         As `load_deck`.
     """
     mode = _checked_mode(compatibility)
+    name = _checked_path(name)
     content = text.encode("utf-8", errors="replace")
     file = DeckFile(name, text, hashlib.sha256(content).hexdigest())
     source = split_source(file, is_deck=True, pspice="ps" in mode)
-    place = os.path.abspath(os.fspath(folder)) if folder is not None else ""
+    place = os.path.abspath(_checked_path(folder)) if folder is not None else ""
     return _deck(source, place, include_paths, sections, mode)
+
+
+def _checked_path(path: str | os.PathLike[str]) -> str:
+    """Refuse a text that no file can be named: it would end in errors of Python itself."""
+    name = os.fspath(path)
+    try:
+        wrong = b"\0" in os.fsencode(name)
+    except UnicodeEncodeError:
+        wrong = True
+    if wrong:
+        raise DeckError(
+            f"{shortened(repr(name))} is no path: it holds a NUL or half of a character pair"
+        )
+    return name
 
 
 def _checked_mode(compatibility: str | None) -> str:
@@ -147,7 +163,7 @@ def _deck(
     sections: Mapping[str, str] | None,
     mode: str,
 ) -> Deck:
-    further = tuple(os.path.abspath(os.path.expanduser(os.fspath(p))) for p in include_paths)
+    further = tuple(os.path.abspath(os.path.expanduser(_checked_path(p))) for p in include_paths)
     for place in further:
         if not os.path.isdir(place):
             raise DeckError(f"include path {place} is not a folder", file=source.file.path)

@@ -21,7 +21,7 @@ EXPRESSIONS = [
     "tanh(1)", "1==1 ? 5 : 6", "1!=1 ? 5 : 6", "2>1 ? (1>2 ? 3 : 4) : 5", "2>=2 ? 5 : 6",
     "1<>2 ? 5 : 6", "1&&0 ? 5 : 6", "1||0 ? 5 : 6", "!0 + 1", "!1 + 1", "ternary_fcn(0,5,6)", "aa",
     "AA*bb", "double(3)", "double(double(bb))", "sum(1,2)+aa", "2+-1", "2--1", "-(-3)", "1e3m",
-    "3mil", "5volt", "2kohm", "1 + 2 > 2 ? 5 : 6", "1<2==1 ? 5 : 6",
+    "3mil", "5volt", "5a", "5a*1e3", "2as+1", "2kohm", "1 + 2 > 2 ? 5 : 6", "1<2==1 ? 5 : 6",
 ]  # fmt: skip
 
 
@@ -52,12 +52,12 @@ def test_values_are_those_of_ngspice(tmp_path: Path) -> None:
         ("1", 1.0), ("-1.5", -1.5), ("+2", 2.0), ("1k", 1e3), ("1K", 1e3), ("1meg", 1e6),
         ("1MEGohm", 1e6), ("1m", 1e-3), ("1MHz", 1e-3), ("2.5u", 2.5e-6), ("3n", 3e-9),
         ("4p", 4e-12), ("5f", 5e-15), ("6a", 6e-18), ("7g", 7e9), ("8t", 8e12), ("1e-9", 1e-9),
-        (".5", 0.5), ("1.", 1.0), ("10s", 10.0), ("1e", 1.0), ("1k\u03a9", 1e3),
+        (".5", 0.5), ("1.", 1.0), ("10s", 10.0), ("1e", 1.0), ("1k\u03a9", 1e3), ("2mil", 50.8e-6),
     ],
 )  # fmt: skip
 def test_suffixes(text: str, value: float) -> None:
     # L. W. Nagel, SPICE2: A Computer Program to Simulate Semiconductor Circuits, 1975, on the
-    # input format; "a" for 1e-18 is ngspice's (recalled from memory).
+    # input format; "a" for 1e-18 is ngspice's (recalled from memory); a mil is 25.4 um.
     assert spice_number(text) == pytest.approx(value, rel=1e-15)
 
 
@@ -80,6 +80,19 @@ def test_what_has_no_value(text: str) -> None:
         {"double": (("x",), "x*2"), "recursive": (("x",), "recursive(x)")},
     )
     assert parameters.value(text) is None
+
+
+@pytest.mark.parametrize(
+    ("brackets", "wanted"), [(0, 40.0), (1, 40.0), (2, None), (35, None), (1000, None)]
+)
+def test_a_chain_of_parameters_never_exhausts_the_stack(
+    brackets: int, wanted: float | None
+) -> None:
+    chain = {
+        f"p{k}": "{" + "(" * brackets + f"p{k + 1}+1" + ")" * brackets + "}" for k in range(39)
+    }
+    parameters = Parameters({**chain, "p39": "1"}, {})
+    assert parameters.value("{p0}") == wanted
 
 
 @settings(derandomize=True, deadline=None)

@@ -1,0 +1,67 @@
+"""Oracle: an error of this package for what no deck holds, and work that grows with the text."""
+
+from collections.abc import Mapping
+from pathlib import Path
+
+import pytest
+
+from cosim.capture import make_plan
+from cosim.circuit.netlist import deck_from_text, load_deck, node_names
+from cosim.errors import DeckError, TestbenchError
+from cosim.testbench import Testbench, make_testbench
+
+NO_PATHS = ["a\0b.cir", "\ud800.cir"]
+
+
+@pytest.mark.parametrize("name", NO_PATHS)
+def test_names_that_no_file_can_have_are_named(name: str) -> None:
+    with pytest.raises(DeckError, match="is no path"):
+        load_deck(name)
+    with pytest.raises(DeckError, match="is no path"):
+        deck_from_text("t\nr1 a 0 1\n", name=name)
+    with pytest.raises(DeckError, match="is no path"):
+        deck_from_text("t\nr1 a 0 1\n", folder=name)
+    with pytest.raises(DeckError, match="is no path"):
+        deck_from_text("t\nr1 a 0 1\n", include_paths=[name])
+
+
+def bench_of(netlist: Mapping[str, object], folder: str = ".") -> Testbench:
+    return make_testbench(
+        {
+            "netlist": {"stop": "10 ns", **netlist},
+            "drive": {"probe": "v(out)", "termination": "50 ohm", "carrier": "5 GHz"},
+            "qubit": {"kind": "spin", "frequency": "5 GHz", "rabi_per_volt": "1 MHz/V"},
+            "gate": {"target": "x"},
+        },
+        folder=folder,
+    )
+
+
+@pytest.mark.parametrize("name", [*NO_PATHS, "~no-such-user-here/x.cir"])
+@pytest.mark.parametrize("key", ["file", "include_paths", "confidential"])
+def test_a_testbench_with_such_a_name_names_its_key(tmp_path: Path, name: str, key: str) -> None:
+    (tmp_path / "deck.cir").write_text("t\nv1 out 0 1\nr1 out 0 1k\n")
+    netlist = {"file": "deck.cir", key: name if key == "file" else [name]}
+    with pytest.raises(TestbenchError, match=f"key '{key}': .* is no path"):
+        make_plan(bench_of(netlist, folder=str(tmp_path)))
+
+
+def test_half_the_step_keeps_what_sources_take_for_it(tmp_path: Path) -> None:
+    (tmp_path / "deck.cir").write_text("t\nv1 out 0 pulse(0 1 1n 0)\nr1 out 0 1k\n")
+    plan = make_plan(bench_of({"file": "deck.cir"}, folder=str(tmp_path)))
+    half = plan.half_step().request
+    assert half.step == plan.request.step / 2
+    assert half.output_step == plan.request.output_step == plan.request.step
+
+
+@pytest.mark.parametrize("count", ["\u00b2", "9" * 5000, "1" * 7])
+def test_a_number_of_controlling_nodes_is_a_small_number(count: str) -> None:
+    deck = deck_from_text(f"t\nv1 a 0 1\nr1 a 0 1\ne1 b 0 poly({count}) a 0 1 2\nr2 b 0 1\n")
+    assert node_names(deck) == {"a", "b"}
+
+
+def test_a_deep_chain_of_parameters_gives_no_times() -> None:
+    chain = "".join(f".param p{k}={{{'(' * 35}p{k + 1}{')' * 35}}}\n" for k in range(39))
+    deck = deck_from_text(f"t\nv1 a 0 1\nr1 a 0 1\n{chain}.param p39=1n\n.tran {{p0}} 10n\n")
+    assert deck.tran is None
+    assert any("cannot be told" in notice for notice in deck.notices)
