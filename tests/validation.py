@@ -103,7 +103,7 @@ def line(row: Row) -> str:
         got = f"{row.got:.{SHOWN_DIGITS}g}"
         agrees = "exact" if found is None else str(found)
     quantity = f"{row.quantity} ({row.unit})" if row.unit else row.quantity
-    expected = f"{row.expected:.{SHOWN_DIGITS}g}"
+    expected = f"{row.expected + 0.0:.{SHOWN_DIGITS}g}"  # No minus before a zero.
     cells = (row.card, quantity, row.source, expected, got, agrees, row.test)
     return "| " + " | ".join(cell.replace("|", "\\|") for cell in cells) + " |"
 
@@ -151,7 +151,7 @@ def table(rows: Iterable[Row]) -> str:
         part = [row for row in kept if row.topic == topic]
         if part:
             text += ["", f"## {topic[0].upper()}{topic[1:]}", ""]
-            text += ["| value | quantity | source | expected | got | agreement | test |"]
+            text += ["| check value | quantity | source | expected | got | agreement | test |"]
             text += ["|---|---|---|---|---|---|---|"]
             text += [line(row) for row in part]
     return "\n".join(text) + "\n"

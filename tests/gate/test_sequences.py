@@ -8,8 +8,10 @@ import math
 from typing import Any
 
 import pytest
+from scipy.interpolate import CubicSpline
 
 import cosim
+from cosim.coupling import DriveLine, rotating_rate
 from cosim.result import GateResult
 from tests import sources
 from tests.conftest import BenchMaker
@@ -107,3 +109,38 @@ def test_bb1_from_a_behavioural_source(
         abs=1e-6,
         card="B08",
     )
+
+
+class TestDrag:
+    TOPIC = "DRAG"
+
+    def test_controls_of_a_gaussian(self, make_bench: BenchMaker, validate: Validate) -> None:
+        """B13: the first-order quadrature, from the deck's volts to the qubit's two controls.
+
+        Peak 30 MHz, standard deviation 4 ns, anharmonicity -300 MHz, seen one standard deviation
+        before the peak. H = (E_x/2)(a + a^dag) + (E_y/2) i (a^dag - a), so that I + jQ is
+        E_x - i E_y; v = I cos - Q sin.
+        """
+        sigma, alpha, middle = 4e-9, 2 * math.pi * -300e6, 30e-9
+        shape = f"exp(-(time-{middle})*(time-{middle})/(2*{sigma}*{sigma}))"
+        slope = f"(-(time-{middle})/({sigma}*{sigma}))*{shape}"
+        deck = (
+            f"gaussian\nb1 out 0 v={{0.3*({shape}*cos(2*pi*5g*time)"
+            f"-({slope})/({alpha!r})*sin(2*pi*5g*time))}}\n.tran 1n 60n\n.end\n"
+        )
+        qubit = {"kind": "transmon", "anharmonicity": "-300 MHz", "rabi_per_volt": "100 MHz/V"}
+        envelope = cosim.run(make_bench(deck, {"qubit": qubit})).envelope
+        rate = rotating_rate(envelope.iq, envelope.t, DriveLine(100e6), "V", 0.0) / (2 * math.pi)
+        curve = CubicSpline(envelope.t, rate)
+        control = complex(curve(middle - sigma))
+        # The demodulator is flat to 1e-6 of the peak, and the spline through its samples.
+        for name, wanted, got in (
+            ("E_x", 1.819592e7, control.real),
+            ("E_y", 2.413309e6, -control.imag),
+        ):
+            quantity = f"{name} of DRAG on a Gaussian, one standard deviation before its peak"
+            validate(quantity, sources.MOTZOI, wanted, got, "Hz", abs=100.0, card="B13")
+        # Q = +(dI/dt)/alpha with alpha < 0, as the testbench's conventions say; 1e-6 of the peak
+        # over the spacing of the samples is a few 1e-4 of the slope.
+        ahead = float(curve.derivative()(middle - sigma).real)
+        assert control.imag == pytest.approx(ahead / alpha, rel=1e-3)
