@@ -27,6 +27,7 @@ from cosim.waveform import FloatArray
 INSTALL_HINT = "type: apt-get install ngspice libngspice0"
 START_LIMIT = 60.0  # s; loading takes 0.2 s, on a network file system under load much more
 ANSWER_MARGIN = 30.0  # s beyond the run's own limit, which the host itself enforces
+LONGEST_WAIT = 3600.0  # s for one wait of a run that may last longer
 CLOSE_LIMIT = 5.0  # s for the host to remove its folder
 
 # Nothing else of the caller's environment reaches the simulator: no SPICE_* search path, no HOME
@@ -297,7 +298,11 @@ class Client:
         watched.register(pipe, select.POLLIN)
         view = memoryview(buffer)
         while view:
-            if not watched.poll(max(0.0, 1000 * (deadline - time.monotonic()))):
+            # A poll takes at most 2**31 ms.
+            wait = min(max(0.0, deadline - time.monotonic()), LONGEST_WAIT)
+            if not watched.poll(1000 * wait):
+                if time.monotonic() < deadline:
+                    continue
                 raise SimulatorCrashError("the simulator's host process does not answer")
             size = os.readv(pipe.fileno(), [view])
             if size == 0:

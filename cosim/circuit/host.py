@@ -202,6 +202,12 @@ def _quietly(function: Any, argument: str) -> str:
     return ""
 
 
+def allowed(kind: int, wanted: int) -> int:
+    """Give the wanted limit, or the hard one of this process, which it may not raise."""
+    _, hard = resource.getrlimit(kind)
+    return wanted if hard == resource.RLIM_INFINITY else min(wanted, hard)
+
+
 def child(simulator: Any, request: dict[str, Any], data: memoryview, output: int) -> NoReturn:
     """Be the forked child: one deck under limits in an own folder, then leave."""
     status = 1
@@ -216,8 +222,10 @@ def child(simulator: Any, request: dict[str, Any], data: memoryview, output: int
             (folder / name).write_bytes(data[:size])
             data = data[size:]
         resource.setrlimit(resource.RLIMIT_CORE, (0, 0))
-        resource.setrlimit(resource.RLIMIT_FSIZE, (FILE_LIMIT, FILE_LIMIT))
-        resource.setrlimit(resource.RLIMIT_AS, (request["memory_limit"],) * 2)
+        resource.setrlimit(resource.RLIMIT_FSIZE, (allowed(resource.RLIMIT_FSIZE, FILE_LIMIT),) * 2)
+        resource.setrlimit(
+            resource.RLIMIT_AS, (allowed(resource.RLIMIT_AS, request["memory_limit"]),) * 2
+        )
         run_deck(simulator, request, output)
         status = 0
     except MemoryError:
@@ -304,7 +312,8 @@ class Host:
             shutil.rmtree(request["folder"], ignore_errors=True)
         code = os.waitstatus_to_exitcode(status)
         end = {"kind": "end", "timeout": timeout, "code": code, "peak": 1024 * usage.ru_maxrss}
-        send(self._target, pack(end))
+        limit = allowed(resource.RLIMIT_AS, request["memory_limit"])
+        send(self._target, pack(end | {"memory_limit": limit}))
 
     def _forward(self, source: int, deadline: float) -> None:
         """Pass complete frames on, so that a child that dies in the middle spoils nothing."""

@@ -27,7 +27,8 @@ _FILE_PARAMETER = re.compile(
     r"(?<!\w)(file|input_file|state_file)(\s*=\s*|\s+)(\"[^\"]*\"|'[^']*'|[^\s,()]+)", re.I
 )
 _NOISE_SOURCE = re.compile(r"(?<![\w.])(trnoise|trrandom)(?![\w.])", re.I)
-_NAME_AND_NODES = re.compile(r"\S+[\s,(]+\S+[\s,]+\S+")
+# Possessive, so that a line of brackets takes no more than one pass.
+_NAME_AND_NODES = re.compile(r"[^\s,(]++[\s,(]++[^\s,]++[\s,]++\S+")
 _NEXT_KEYWORD = re.compile(r"(?<![\w.])(dc|ac|distof1|distof2)(?![\w.])", re.I)
 _VERILOG_CARDS = frozenset({".hdl", ".va", ".verilog", ".osdi", ".pre_osdi"})
 _WAVEFORM_HINT = "Export the waveform from a simulator that can read it, and run on that waveform."

@@ -99,12 +99,16 @@ def _check_process(request: TransientRequest, answer: Answer, log: tuple[str, ..
             hint="raise the time limit, or take a shorter stop time or a longer step",
             log=tail,
         )
-    full = code < 0 and answer.end["peak"] > MEMORY_MARGIN * request.memory_limit
+    limit = answer.end["memory_limit"]
+    full = code < 0 and answer.end["peak"] > MEMORY_MARGIN * limit
     if full or any(word in line for line in log for word in _MEMORY_WORDS):
+        own = limit == request.memory_limit
+        which = "memory limit" if own else "system's memory limit (ulimit -v)"
         raise SimulatorMemoryError(
-            f"ngspice needs more than the memory limit of {request.memory_limit / 2**20:.0f} MiB "
+            f"ngspice needs more than the {which} of {limit / 2**20:.0f} MiB "
             f"for {request.stop / request.step:.3g} time points",
-            hint="raise the memory limit, save fewer vectors, or take a longer step",
+            hint=f"raise {'the memory limit' if own else 'it'}, save fewer vectors, or take a "
+            "longer step",
             log=tail,
         )
     if code < 0:

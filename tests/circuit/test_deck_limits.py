@@ -6,7 +6,8 @@ from pathlib import Path
 import pytest
 
 from cosim.capture import make_plan
-from cosim.circuit.netlist import deck_from_text, load_deck, node_names
+from cosim.circuit.analysis import TransientRequest
+from cosim.circuit.netlist import deck_from_text, load_deck, node_names, prepare
 from cosim.errors import DeckError, TestbenchError
 from cosim.testbench import Testbench, make_testbench
 
@@ -65,3 +66,17 @@ def test_a_deep_chain_of_parameters_gives_no_times() -> None:
     deck = deck_from_text(f"t\nv1 a 0 1\nr1 a 0 1\n{chain}.param p39=1n\n.tran {{p0}} 10n\n")
     assert deck.tran is None
     assert any("cannot be told" in notice for notice in deck.notices)
+
+
+def test_a_source_line_of_brackets_is_read_in_one_pass() -> None:
+    # Backtracking over these brackets took a time that grew with the third power of their number.
+    line = "v" + "(" * 20_000 + "trnoise"
+    deck = deck_from_text(f"t\nv1 a 0 1\nr1 a 0 1\n.if (0)\n{line}\n.endif\n")
+    assert deck.lines[3].text == line
+
+
+def test_a_resistor_of_many_zeros_is_judged_in_one_pass() -> None:
+    # The same for zeros, which took the square.
+    deck = deck_from_text(f"t\nv1 a 0 1\nr1 a 0 1\nr9 a 0 {'0' * 100_000}x\n.tran 1n 2n\n")
+    prepared = prepare(deck, TransientRequest(stop=2e-9, step=1e-9))
+    assert len(prepared.zeros) == 1

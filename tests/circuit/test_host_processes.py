@@ -383,3 +383,15 @@ def test_a_missing_library_says_what_to_type(start: Starter, tmp_path: Path) -> 
         assert "apt-get install ngspice libngspice0" in text
     assert value == "1.5"
     assert_nothing_left(tmp_path)
+
+
+@pytest.mark.parametrize(("kind", "limit"), [("RLIMIT_AS", 2**32), ("RLIMIT_FSIZE", 2**20)])
+def test_a_hard_limit_of_the_system_is_kept_below(start: Starter, kind: str, limit: int) -> None:
+    process = start(
+        f"""
+        import resource
+        resource.setrlimit(resource.{kind}, ({limit}, {limit}))
+        say(divide(2.0))
+        """
+    )
+    assert output(process) == "1.0"

@@ -293,6 +293,11 @@ def test_too_much_memory_is_an_error(run_lines: Runner, stop: float) -> None:
     assert_healthy(run_lines)
 
 
+def test_a_time_limit_of_years_is_one(run_lines: Runner) -> None:
+    body = ["v1 in 0 1", "r1 in out 1k", "r2 out 0 1k"]
+    assert run_lines(body, OUT, 1e-9, 1e-11, time_limit=1e12).vectors["v(out)"][-1] > 0.4
+
+
 def test_a_run_cut_short_is_not_taken_for_a_result(run_lines: Runner) -> None:
     # The deck stops at 0.5 ns where 1 ns was asked for, as a run would that ends early.
     with pytest.raises(SimulatorCrashError, match=r"stopped at 5e-10 s of 1e-09 s"):

@@ -34,7 +34,7 @@ def answer() -> Answer:
             "wall_time": 0.1,
             "available": ["out", "time"],
         },
-        end={"timeout": False, "code": 0, "peak": 10**7},
+        end={"timeout": False, "code": 0, "peak": 10**7, "memory_limit": 10**9},
         part=1.0,
         overhead_time=0.01,
     )
@@ -129,10 +129,17 @@ def test_a_fault_of_the_library_is_no_result() -> None:
 def test_the_end_of_the_process_is_told_by_its_code(
     code: int, peak: int, kind: type[Exception]
 ) -> None:
-    end = {"timeout": False, "code": code, "peak": peak}
+    end = {"timeout": False, "code": code, "peak": peak, "memory_limit": 10**9}
     with pytest.raises(kind) as caught:
         judge(DECK, REQUEST, replace(answer(), done=None, end=end), "ngspice-39", True)
     assert type(caught.value) is kind
+
+
+@pytest.mark.parametrize(("limit", "words"), [(10**9, "the memory limit"), (10**8, "ulimit -v")])
+def test_the_memory_limit_that_was_in_force_is_named(limit: int, words: str) -> None:
+    end = {"timeout": False, "code": -6, "peak": 0.9 * limit, "memory_limit": limit}
+    with pytest.raises(SimulatorMemoryError, match=f"{words}.* of {limit / 2**20:.0f} MiB"):
+        judge(DECK, REQUEST, replace(answer(), done=None, end=end), "ngspice-39", True)
 
 
 @pytest.mark.ngspice
