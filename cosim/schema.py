@@ -38,7 +38,8 @@ class NetlistTable:
     parameters : mapping
         Values for the deck's .param, in SI units.
     sections : mapping
-        Library file name to the .lib section used in place of the deck's.
+        Library file name to the .lib section used in place of the deck's; where the deck reads
+        several sections of it, to a mapping from those to others.
     instances : mapping
         Instance path to parameters of that one instance, in SI units.
     initial : "op", "uic" or None
@@ -64,7 +65,7 @@ class NetlistTable:
     steps_per_period: int | None = None
     temperature: Temperature | None = None
     parameters: dict[str, ParameterValue] = field(default_factory=dict)
-    sections: dict[str, str] = field(default_factory=dict)
+    sections: dict[str, str | dict[str, str]] = field(default_factory=dict)
     instances: dict[str, dict[str, ParameterValue]] = field(default_factory=dict)
     initial: Literal["op", "uic"] | None = None
     include_paths: tuple[str, ...] = ()

@@ -17,6 +17,9 @@ from cosim.errors import (
     near_names,
 )
 
+Sections = Mapping[str, str | Mapping[str, str]]
+"""Library file -> section to read, or section that the deck names -> section to read."""
+
 _DEEPEST = 60  # files inside one another
 # A few short files that include one another many times would fill any memory or take for ever.
 _MOST_LINES = 4_000_000
@@ -156,9 +159,9 @@ class Expansion:
     ----------
     places : Places
         Where files may be read.
-    sections : mapping of str to str
+    sections : mapping of str to str, or to mapping of str to str
         Library file (path as written, or its last part) -> section to take instead of the one
-        that the deck names.
+        that the deck names, or of each that it names.
     pspice : bool
         Whether "$" starts no comment, and `.lib FILE` without a section is an include.
     lines : list of SourceLine
@@ -167,20 +170,23 @@ class Expansion:
         What was left out or chosen so far.
     files : dict of str to DeckFile
         Path -> each file that was read.
-    libraries, used_sections : set of str
-        Last parts of the library files, and the keys of `sections` that found one.
+    libraries : set of str
+        Last parts of the library files.
+    read_sections : dict of str to dict of str to str
+        Key of `sections` that found a library -> section that the deck reads from it, in lower
+        case -> the section as written.
     entered : int
         How many times a file or section was expanded.
     """
 
     places: Places
-    sections: Mapping[str, str]
+    sections: Sections
     pspice: bool
     lines: list[SourceLine] = field(default_factory=list)
     notices: list[str] = field(default_factory=list)
     files: dict[str, DeckFile] = field(default_factory=dict)
-    used_sections: set[str] = field(default_factory=set)
     libraries: set[str] = field(default_factory=set)
+    read_sections: dict[str, dict[str, str]] = field(default_factory=dict)
     entered: int = 0
 
     def add_source(self, source: Source, chain: tuple[tuple[str, str], ...] = ()) -> None:
@@ -267,8 +273,7 @@ class Expansion:
         inside = bool(chain) and chain[-1][0].partition(" section ")[0] == os.path.realpath(path)
         for key in (name, base):
             if key in self.sections and not inside:
-                self.used_sections.add(key)
-                section = self.sections[key]
+                section = self._chosen(key, section)
                 break
         bounds = source.sections.get(section.lower())
         if bounds is None:
@@ -282,6 +287,15 @@ class Expansion:
             self.files[source.file.path] = source.file
             self.notices.extend(source.notices)
         self._add(source, *bounds, self._enter(path, line, chain, section.lower()))
+
+    def _chosen(self, key: str, section: str) -> str:
+        """Give the section to read in place of one that the deck names."""
+        self.read_sections.setdefault(key, {}).setdefault(section.lower(), section)
+        chosen = self.sections[key]
+        if isinstance(chosen, str):
+            return chosen
+        by_name = {name.lower(): other for name, other in chosen.items()}
+        return by_name.get(section.lower(), section)
 
     def _read(self, path: str, line: SourceLine, chain: tuple[tuple[str, str], ...]) -> Source:
         try:
@@ -312,14 +326,30 @@ class Expansion:
             self.notices.append(f"{where(line)}: '{name}' is taken from {path}, not from {other}")
 
     def check_sections(self, deck: str) -> None:
-        """Refuse a section override that found no library."""
-        for key in self.sections:
-            if key not in self.used_sections:
+        """Refuse a choice of sections that found no library, or that would stand for several."""
+        for key, chosen in self.sections.items():
+            if key not in self.read_sections:
                 raise UnknownNameError(
                     f"no library '{key}' is read with .lib, so its section cannot be chosen",
                     hint=near_names(key, self.libraries),
                     file=deck,
                 )
+            found = self.read_sections[key]
+            if isinstance(chosen, str) and len(found) > 1:
+                first = next(iter(found.values()))
+                raise DeckError(
+                    f"the deck reads {len(found)} sections of '{key}' "
+                    f"({', '.join(found.values())}), and section '{chosen}' cannot stand for all",
+                    hint=f'Say which: sections = {{ "{key}" = {{ {first} = "{chosen}" }} }}',
+                    file=deck,
+                )
+            for name in [] if isinstance(chosen, str) else chosen:
+                if name.lower() not in found:
+                    raise UnknownNameError(
+                        f"no section '{name}' of '{key}' is read, so none can stand for it",
+                        hint=near_names(name, found.values()),
+                        file=deck,
+                    )
 
 
 def _way(chain: tuple[tuple[str, str], ...]) -> str:

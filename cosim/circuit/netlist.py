@@ -8,7 +8,7 @@ sent. None of them starts ngspice.
 import hashlib
 import os
 import re
-from collections.abc import Mapping, Sequence
+from collections.abc import Sequence
 
 from cosim.circuit.alteration import with_instances, with_parameters, with_terminations
 from cosim.circuit.deck import (
@@ -20,7 +20,7 @@ from cosim.circuit.deck import (
     shortened,
     unique,
 )
-from cosim.circuit.expansion import Expansion, Places
+from cosim.circuit.expansion import Expansion, Places, Sections
 from cosim.circuit.lookup import node_names, resolve_saves
 from cosim.circuit.preparation import prepare
 from cosim.circuit.reading import CardReader
@@ -51,7 +51,7 @@ def load_deck(
     path: str | os.PathLike[str],
     *,
     include_paths: Sequence[str | os.PathLike[str]] = (),
-    sections: Mapping[str, str] | None = None,
+    sections: Sections | None = None,
     compatibility: str | None = None,
 ) -> Deck:
     """Read an ngspice deck as its author wrote it, with everything that it includes.
@@ -62,9 +62,9 @@ def load_deck(
         The deck. Files under its folder may be included.
     include_paths : sequence of path
         Further folders whose files may be included.
-    sections : mapping of str to str, optional
+    sections : mapping of str to str, or to mapping of str to str, optional
         Library file, as the deck names it or by its last part -> section to read instead of
-        the one that the deck names.
+        the one that the deck names; where it reads several, a mapping from those to others.
     compatibility : str, optional
         ngspice's `ngbehavior`: "hsa", "psa", "lta" and the like.
 
@@ -98,7 +98,7 @@ def deck_from_text(
     name: str = "circuit",
     folder: str | os.PathLike[str] | None = None,
     include_paths: Sequence[str | os.PathLike[str]] = (),
-    sections: Mapping[str, str] | None = None,
+    sections: Sections | None = None,
     compatibility: str | None = None,
 ) -> Deck:
     """Read a deck from a text: a title line first, as in a file.
@@ -160,7 +160,7 @@ def _deck(
     source: Source,
     folder: str,
     include_paths: Sequence[str | os.PathLike[str]],
-    sections: Mapping[str, str] | None,
+    sections: Sections | None,
     mode: str,
 ) -> Deck:
     further = tuple(os.path.abspath(os.path.expanduser(_checked_path(p))) for p in include_paths)

@@ -1,5 +1,6 @@
 """Oracle: `ngspice -b` on decks edited by hand, number by number."""
 
+import tomllib
 from collections.abc import Callable
 from pathlib import Path
 
@@ -14,7 +15,9 @@ from cosim.circuit.netlist import (
     with_parameters,
     with_terminations,
 )
-from cosim.errors import InputError, UnknownNameError
+from cosim.config import read_table, write_tables
+from cosim.errors import DeckError, InputError, TestbenchError, UnknownNameError
+from cosim.schema import NetlistTable
 from tests.circuit.batch import DECKS, OPTIONS, ROUNDING, WRITING, copy_decks, original, output, run
 
 # Deck, how it is altered, and the same edit by hand: (old text, new text) pairs.
@@ -191,6 +194,70 @@ def test_a_section_chosen_is_the_section_written(
     (folder / "edited.cir").write_text(text.replace(written, f" {section}", 1), encoding="utf-8")
     wanted = original("edited.cir", folder)
     np.testing.assert_allclose(got, wanted, rtol=0, atol=ROUNDING)
+
+
+LIBRARY = """.lib tt
+.param rr=1k
+.endl
+.lib ff
+.param rr=500
+.endl
+.lib res_typ
+.param ll=1k
+.endl
+.lib res_max
+.param ll=3k
+.endl
+"""
+TWO_SECTIONS = "t\n.lib 'k.lib' tt\n.lib k.lib RES_typ\nv1 in 0 sin(0 1 1g)\n"
+TWO_SECTIONS += f"r1 in out {{rr}}\nr2 out 0 {{ll}}\n{OPTIONS}\n{WRITING}"
+
+
+@pytest.mark.ngspice
+@pytest.mark.parametrize(
+    ("chosen", "edits"),
+    [
+        ({"tt": "ff"}, [("' tt", "' ff")]),
+        ({"TT": "ff", "res_typ": "res_max"}, [("' tt", "' ff"), ("RES_typ", "res_max")]),
+        ({"res_typ": "res_max"}, [("RES_typ", "res_max")]),
+    ],
+)
+def test_each_of_several_sections_of_a_library_is_chosen(
+    tmp_path: Path, chosen: dict[str, str], edits: list[tuple[str, str]]
+) -> None:
+    by_hand = TWO_SECTIONS
+    for old, new in edits:
+        by_hand = by_hand.replace(old, new)
+    (tmp_path / "k.lib").write_text(LIBRARY)
+    (tmp_path / "by_hand.cir").write_text(by_hand)
+    wanted = original("by_hand.cir", tmp_path)
+    got = output(deck_from_text(TWO_SECTIONS, folder=tmp_path, sections={"k.lib": chosen}))
+    np.testing.assert_allclose(got, wanted, rtol=0, atol=ROUNDING)
+
+
+def test_one_section_cannot_stand_for_several(tmp_path: Path) -> None:
+    (tmp_path / "k.lib").write_text(LIBRARY)
+    with pytest.raises(DeckError, match=r"2 sections of 'k.lib' \(tt, RES_typ\)") as caught:
+        deck_from_text(TWO_SECTIONS, folder=tmp_path, sections={"k.lib": "ff"})
+    assert caught.value.hint.endswith('sections = { "k.lib" = { tt = "ff" } }')
+    with pytest.raises(UnknownNameError, match="no section 'res_tpy'") as unknown:
+        deck_from_text(TWO_SECTIONS, folder=tmp_path, sections={"k.lib": {"res_tpy": "res_max"}})
+    assert "RES_typ" in unknown.value.hint
+    # A section that is read twice is one.
+    twice = TWO_SECTIONS.replace("RES_typ", "Tt").replace("{ll}", "1k")
+    deck = deck_from_text(twice, folder=tmp_path, sections={"k.lib": "ff"})
+    assert [line.text for line in deck.lines[:2]] == [".param rr=500"] * 2
+
+
+def test_a_testbench_says_a_section_or_a_table_of_them() -> None:
+    sections = {"k.lib": {"tt": "ff"}, "b.lib": "ss"}
+    given = {"file": "a.cir", "sections": sections}
+    table = read_table(given, NetlistTable, file="b.toml", name="netlist")
+    assert table.sections == sections
+    written = tomllib.loads(write_tables("t", {"netlist": table}))["netlist"]
+    assert read_table(written, NetlistTable, file="b.toml", name="netlist") == table
+    with pytest.raises(TestbenchError, match=r"sections\.k\.lib"):
+        read_table({"file": "a", "sections": {"k.lib": 1}}, NetlistTable, file="b", name="netlist")
 
 
 @pytest.mark.ngspice
