@@ -123,6 +123,7 @@ def publish_everything(path: Path, pipe: int) -> None:
     consolidate(path)
 
 
+@pytest.mark.full
 def test_killed_at_every_call(tmp_path: Path) -> None:
     kills = 0
     for at in range(1, 1000):

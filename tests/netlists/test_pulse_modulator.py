@@ -112,6 +112,7 @@ def without(text: str, path: tuple[str, ...]) -> str:
     return changed.replace("\n.end\n", "\n" + "".join(copies) + ".end\n")
 
 
+@pytest.mark.full
 def test_every_transistor_carries_signal() -> None:
     text = DECK.read_text()
     devices = list(transistors(text))
@@ -156,6 +157,7 @@ def test_carrier_vanishes_with_the_oscillator_off() -> None:
     assert off < 1e-2 * on
 
 
+@pytest.mark.full
 def test_default_pulse_is_a_quarter_turn_about_x(validate: Validate) -> None:
     v = drive(load_deck(DECK), {}, 130e-9, 80)
     t = np.arange(v.size) / (80 * CARRIER)

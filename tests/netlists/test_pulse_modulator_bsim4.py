@@ -99,6 +99,7 @@ def test_cards_behave_like_cold_short_channel_devices(model: str, sign: int) -> 
     assert least < saturation["ss"] < saturation["tt"] < saturation["ff"] < most
 
 
+@pytest.mark.full
 def test_amplitude_code_is_monotonic() -> None:
     deck = load_deck(DECK)
     codes = [0, 1, 15, 16, 31, 32, 63, 64, 93, 127]
