@@ -1,11 +1,11 @@
 """Finding nodes and devices by their hierarchical names, and the vectors that ngspice saves."""
 
 import re
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from itertools import islice
 
-from cosim.circuit.deck import Deck
+from cosim.circuit.deck import Deck, shortened
 from cosim.circuit.hierarchy import Structure, structure_of
 from cosim.circuit.scope import GROUND, Scope, element_of
 from cosim.errors import DeckError, ProbeError, UnknownNameError, near_names
@@ -129,25 +129,48 @@ def find_node(deck: Deck, name: str) -> str:
     ------
     UnknownNameError
         If there is no such node.
+    DeckError
+        If it is a port of an instance that branches of an `.if` tie to different nets.
     """
     structure = structure_of(deck.lines)
-    rest = name.strip().lower()
-    frame = _Frame(structure.root, "", {})
-    while True:
+    found: dict[str, dict[str, None]] = {}
+    deepest, missing = _Frame(structure.root, "", {}), ""
+    for frame, rest in _ways(structure, name.strip().lower()):
         node = frame.net(structure, rest)
-        if rest in GROUND or rest in structure.global_nodes or rest in frame.outer:
-            return node
-        if rest in own_nodes(structure, frame.scope):
-            return node
-        head, dot, tail = rest.partition(".")
-        inner = frame.enter(structure, head) if dot else None
-        if inner is None:
-            raise UnknownNameError(
-                f"node '{frame.prefix}{rest}' does not exist",
-                hint=near_names(frame.prefix + rest, frame.names(structure)),
-                file=deck.path,
-            )
-        frame, rest = inner, tail
+        known = rest in GROUND or rest in structure.global_nodes or rest in frame.outer
+        if known or rest in own_nodes(structure, frame.scope):
+            found.setdefault(frame.prefix, {})[node] = None
+        if len(frame.prefix) >= len(deepest.prefix):
+            deepest, missing = frame, rest
+    if not found:
+        raise UnknownNameError(
+            f"node '{shortened(deepest.prefix + missing)}' does not exist",
+            hint=near_names(deepest.prefix + missing, deepest.names(structure)),
+            file=deck.path,
+        )
+    prefix, nodes = next(iter(found.items()))
+    if len(nodes) > 1:
+        raise DeckError(
+            f"node '{name}' is {' or '.join(nodes)}: '{prefix[:-1]}' stands in several branches of "
+            "an .if inside a subcircuit, and which of them is there is not told before the run",
+            hint=f"Name the net itself: {' or '.join(nodes)}.",
+            file=deck.path,
+        )
+    return next(iter(nodes))
+
+
+def _ways(structure: Structure, name: str) -> "Iterator[tuple[_Frame, str]]":
+    """Give every instance that a hierarchical name may lead into, and the name from there on.
+
+    An instance may hold dots in its own name, and stand in several branches of an `.if`.
+    """
+    todo = [(_Frame(structure.root, "", {}), name)]
+    for frame, rest in todo:  # It grows while it is gone through.
+        yield frame, rest
+        parts = rest.split(".")
+        for count in range(1, len(parts)) if rest[:1] == "x" else ():
+            inner = frame.enter(structure, ".".join(parts[:count]))
+            todo.extend((item, ".".join(parts[count:])) for item in inner)
 
 
 @dataclass(frozen=True, slots=True)
@@ -166,18 +189,19 @@ class _Frame:
             return node
         return self.outer.get(node, self.prefix + node)
 
-    def enter(self, structure: Structure, name: str) -> "_Frame | None":
-        """Go into a subcircuit instance; None when there is none of that name."""
-        if name[:1] != "x":
-            return None
+    def enter(self, structure: Structure, name: str) -> "list[_Frame]":
+        """Go into a subcircuit instance; several where branches of an `.if` tie it differently."""
+        found: list[_Frame] = []
         for index in self.scope.elements.get(name, ()):
             element = element_of(self.scope, structure.lines[index].text)
             definition = self.scope.subcircuit(element.reference)
-            if definition is not None:
+            if name[0] == "x" and definition is not None:
                 nets = [self.net(structure, node) for node in element.nodes]
                 ports = dict(zip(definition.ports, nets, strict=False))
-                return _Frame(definition, f"{self.prefix}{name}.", ports)
-        return None
+                frame = _Frame(definition, f"{self.prefix}{name}.", ports)
+                if frame not in found:
+                    found.append(frame)
+        return found
 
     def names(self, structure: Structure) -> list[str]:
         """Names to offer when one was not found here."""
@@ -229,31 +253,27 @@ def find_device(deck: Deck, name: str) -> Device:
     """
     structure = structure_of(deck.lines)
     wanted = name.strip().lower()
-    parts = wanted.split(".")
-    if len(parts) > 2 and len(parts[0]) == 1 and parts[-1][:1] == parts[0]:
-        parts = parts[1:]
-    frame = _Frame(structure.root, "", {})
-    for part in parts[:-1]:
-        inner = frame.enter(structure, part)
-        if inner is None:
-            offered = [f"{frame.prefix}{item}" for item, _ in instances(structure, frame.scope)]
-            raise UnknownNameError(
-                f"instance '{frame.prefix}{part}' of '{wanted}' does not exist",
-                hint=near_names(frame.prefix + part, offered),
-                file=deck.path,
-            )
-        frame = inner
-    indices = frame.scope.elements.get(parts[-1])
-    if not indices:
-        offered = [frame.prefix + item for item in islice(frame.scope.elements, _MOST_OFFERED)]
-        raise UnknownNameError(
-            f"device '{wanted}' does not exist",
-            hint=near_names(frame.prefix + parts[-1], offered),
-            file=deck.path,
-        )
-    letter = parts[-1][0]
-    flat = f"{letter}.{frame.prefix}{parts[-1]}" if frame.prefix else parts[-1]
-    return Device(flat, letter, structure.lines[indices[0]].text)
+    spellings = [wanted]
+    head, _, tail = wanted.partition(".")
+    if len(head) == 1 and "." in tail and tail.rpartition(".")[2][:1] == head:
+        spellings.append(tail)  # ngspice puts the device's letter in front of a flattened name.
+    deepest, missing = _Frame(structure.root, "", {}), ""
+    for spelling in spellings:
+        for frame, rest in _ways(structure, spelling):
+            if indices := frame.scope.elements.get(rest):
+                flat = f"{rest[0]}.{frame.prefix}{rest}" if frame.prefix else rest
+                return Device(flat, rest[0], structure.lines[indices[0]].text)
+            if len(frame.prefix) >= len(deepest.prefix):
+                deepest, missing = frame, rest
+    part, dot, _ = missing.partition(".")
+    what = f"instance '{deepest.prefix}{part}' of '{wanted}'" if dot else f"device '{wanted}'"
+    names = [item for item, _ in instances(structure, deepest.scope)] if dot else None
+    listed = islice(deepest.scope.elements if names is None else names, _MOST_OFFERED)
+    raise UnknownNameError(
+        f"{shortened(what)} does not exist",
+        hint=near_names(deepest.prefix + part, [deepest.prefix + item for item in listed]),
+        file=deck.path,
+    )
 
 
 def resolve_saves(deck: Deck, saves: Sequence[str]) -> dict[str, str]:
@@ -287,16 +307,16 @@ def _vector(deck: Deck, save: str) -> str:
     if match and match[1] == "v":
         node = find_node(deck, match[2])
         if node == "0":
-            raise ProbeError(f"'{save}' is the ground, which is 0 V and not saved")
+            raise ProbeError(f"'{shortened(save)}' is the ground, which is 0 V and not saved")
         # ngspice names the vector of a node that starts with a digit "V(3)".
-        return f"V({node})" if node[0].isdigit() else node
+        return f"V({node})" if node[0] in "0123456789" else node
     if match:
         return _current(_current_carrier(deck, match[2]), save)
     match = _PARAMETER.fullmatch(save)
     if match:
         return f"@{find_device(deck, match[1]).name}[{match[2]}]"
     raise ProbeError(
-        f"'{save}' is nothing that ngspice saves",
+        f"'{shortened(save)}' is nothing that ngspice saves",
         hint="Write v(node), i(device) or @device[parameter].",
     )
 

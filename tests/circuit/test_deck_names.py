@@ -9,7 +9,16 @@ import pytest
 from cosim.circuit import lookup
 from cosim.circuit.netlist import deck_from_text, load_deck, node_names, resolve_saves
 from cosim.errors import DeckError, ProbeError, UnknownNameError
-from tests.circuit.batch import DECKS, OPTIONS, copy_decks, run, run_batch
+from tests.circuit.batch import (
+    DECKS,
+    OPTIONS,
+    ROUNDING,
+    WRITING,
+    copy_decks,
+    original,
+    run,
+    run_batch,
+)
 
 
 def vectors_of_ngspice(folder: Path, name: str) -> set[str]:
@@ -192,3 +201,57 @@ def test_a_node_named_like_a_hierarchical_one_is_itself() -> None:
     body = "v1 in 0 sin(0 1 1g)\nr1 in x1.out 1k\nr2 x1.out 0 1k\n"
     result = run(deck_from_text(f"t\n{OPTIONS}\n{body}"), "v(x1.out)")
     assert np.max(result.vectors["v(x1.out)"]) == pytest.approx(0.5, rel=1e-4)  # sampled peak
+
+
+BRANCHES = """t
+v1 in 0 sin(0 1 1g)
+r1 in out 1k
+r2 out 0 1k
+xq in out q t=2
+.subckt q a b t=1
+.if (t==1)
+{first}
+.else
+{second}
+.endif
+.ends
+.subckt r p n
+r1 p m 1k
+r2 m n 1k
+.ends
+.subckt s p m
+r1 p m 1k
+.ends
+"""
+
+
+def test_a_port_that_branches_tie_to_different_nets_is_refused() -> None:
+    deck = deck_from_text(BRANCHES.format(first="X1 a b r", second="X1 b a r"))
+    for probe in ("v(xq.x1.p)", "v(XQ.X1.N)"):
+        with pytest.raises(DeckError, match="several branches") as caught:
+            resolve_saves(deck, [probe])
+        assert "in or out" in str(caught.value) or "out or in" in str(caught.value)
+    # The node inside has one name, whichever branch is there.
+    assert resolve_saves(deck, ["v(xq.x1.m)"]) == {"v(xq.x1.m)": "xq.x1.m"}
+    assert resolve_saves(deck, ["i(xq.x1.r2)"]) == {"i(xq.x1.r2)": "@r.xq.x1.r2[i]"}
+    mixed = deck_from_text(BRANCHES.format(first="X1 a b r", second="X1 a b s"))
+    assert resolve_saves(mixed, ["v(xq.x1.p)"]) == {"v(xq.x1.p)": "in"}
+    with pytest.raises(DeckError, match="several branches"):
+        resolve_saves(mixed, ["v(xq.x1.m)"])  # A port in one of them, a node inside in the other.
+    with pytest.raises(UnknownNameError, match=r"node 'xq\.x1\.k'"):
+        resolve_saves(deck, ["v(xq.x1.k)"])
+
+
+@pytest.mark.ngspice
+def test_an_instance_with_a_dot_in_its_name(tmp_path: Path) -> None:
+    body = "v1 in 0 sin(0 1 1g)\nX.1 in out s\nr2 out 0 1k\n"
+    body += ".subckt s a b\nx.y a mid h\nxz mid b h\n.ends\n.subckt h a b\nr1 a q 500\nr2 q b 1k\n"
+    text = f"t\n{body}.ends\n{OPTIONS}\n{WRITING}"
+    (tmp_path / "deck.cir").write_text(text.replace("v(out)", "v(x.1.x.y.q)"))
+    wanted = original("deck.cir", tmp_path)
+    saves = ("v(x.1.x.y.q)", "i(x.1.x.y.r1)", "v(x.1.mid)", "v(x.1.x.y.b)", "i(r.x.1.xz.r1)")
+    v = run(deck_from_text(text), *saves).vectors
+    np.testing.assert_allclose(v["v(x.1.x.y.q)"], wanted, rtol=0, atol=ROUNDING)
+    np.testing.assert_array_equal(v["v(x.1.x.y.b)"], v["v(x.1.mid)"])
+    # One current through both; ngspice works it out from voltages of up to 1 V over 500 ohm.
+    np.testing.assert_allclose(v["i(x.1.x.y.r1)"], v["i(r.x.1.xz.r1)"], rtol=0, atol=1e-15)
