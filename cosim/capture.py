@@ -2,7 +2,7 @@
 
 import math
 import os
-from collections.abc import Callable, Sequence
+from collections.abc import Callable
 from dataclasses import dataclass, replace
 from pathlib import Path
 
@@ -22,12 +22,12 @@ from cosim.circuit.netlist import (
     load_deck,
     with_instances,
     with_parameters,
-    with_terminations,
 )
-from cosim.circuit.probe import Probe, evaluate_probe, parse_probe
+from cosim.circuit.probe import Probe, evaluate_probe
 from cosim.circuit.simulator import simulate
 from cosim.dsp.upconversion import upconvert
 from cosim.errors import TestbenchError
+from cosim.port import open_port
 from cosim.schema import NetlistTable
 from cosim.stimuli import apply_stimuli
 from cosim.testbench import Testbench
@@ -160,9 +160,7 @@ def make_plan(bench: Testbench) -> Plan:
         notices += coarse
     withheld = check_roots(deck, roots)  # With the files of the stimuli.
     drive = bench.drive
-    probes = tuple(parse_probe(text) for text in (drive.probe, drive.i, drive.q) if text)
-    if isinstance(drive.termination, float):
-        deck = _terminated(deck, probes, drive.termination)
+    deck, probes, loaded = open_port(bench, deck)
     terms = [name for probe in probes for _, name in probe.terms]
     request = TransientRequest(
         stop=stop,
@@ -175,7 +173,7 @@ def make_plan(bench: Testbench) -> Plan:
         output_step=step,
     )
     carrier = drive.carrier if isinstance(drive.carrier, float) else math.nan
-    notices = (*withheld, *notices)
+    notices = (*withheld, *loaded, *notices)
     return Plan(deck, probes, carrier, drive.probe is None, request, notices, roots, table.save)
 
 
@@ -202,17 +200,6 @@ def netlist_of(bench: Testbench) -> NetlistTable:
             f"{bench.source or 'the testbench'} imports a waveform: there is no netlist to simulate"
         )
     return bench.netlist
-
-
-def _terminated(deck: Deck, probes: Sequence[Probe], resistance: float) -> Deck:
-    for probe in probes:
-        if not probe.nodes:
-            raise TestbenchError(
-                f"the probe '{probe.text}' is a current, so no termination can be added to it",
-                hint='say termination = "in deck", and the impedance as "impedance"',
-            )
-    nodes = dict.fromkeys(node for probe in probes for node in probe.nodes)
-    return with_terminations(deck, tuple(nodes), resistance)
 
 
 def _under(folder: Path, name: str, key: str) -> Path:
@@ -265,7 +252,8 @@ def check_window(bench: Testbench, stop: float, start: float = 0.0) -> None:
     slack = 1e-9 * (stop - start)
     if window is not None and (window[0] < start - slack or window[1] > stop + slack):
         raise TestbenchError(
-            f"table [gate], key 'window': {window[0] * 1e9:g} ns to {window[1] * 1e9:g} ns does "
+            f"{bench.source or 'the testbench'}, table [gate], key 'window': "
+            f"{window[0] * 1e9:g} ns to {window[1] * 1e9:g} ns does "
             f"not lie within the run of {start * 1e9:g} ns to {stop * 1e9:g} ns"
         )
 

@@ -11,7 +11,7 @@ from cosim.circuit.preparation import prepare
 from cosim.circuit.simulator import simulator_version
 from cosim.gate import gate_target
 from cosim.imported import import_waveform
-from cosim.probe_run import Estimate, estimate_run
+from cosim.probe_run import Estimate, estimate_run, try_deck
 from cosim.testbench import Testbench, load_testbench
 from cosim.units import format_quantity
 
@@ -51,12 +51,14 @@ def check_testbench(path: str | os.PathLike[str], *, probe: bool = False) -> tup
     Returns
     -------
     tuple of Finding
-        What was found; without `probe` nothing was simulated.
+        What was found. ngspice loads the deck and takes ten steps; without `probe`, no more.
 
     Raises
     ------
     InputError
         If the testbench, the deck or the probe is wrong.
+    SimulationError
+        If ngspice does not take the deck.
     MissingDependencyError
         If ngspice is not installed.
     """
@@ -110,6 +112,7 @@ def _deck_findings(bench: Testbench, probe: bool) -> list[Finding]:
         ),
         Finding("simulator", simulator_version(), "simulator", simulator_version()),
     ]
+    try_deck(plan)
     if probe:
         found += _estimates(estimate_run(plan, floor=bench.accuracy.floor))
     notices = (*plan.deck.notices, *prepared.notices, *plan.notices)

@@ -46,7 +46,8 @@ def _print_version(wanted: bool) -> None:
 def _common(
     debug: Annotated[bool, typer.Option("--debug", help="Show tracebacks.")] = False,
     version: Annotated[
-        bool, typer.Option("--version", callback=_print_version, is_eager=True, help="Show it.")
+        bool,
+        typer.Option("--version", callback=_print_version, is_eager=True, help="Show the version."),
     ] = False,
 ) -> None:
     # `main` has read --debug already, and --version has ended the program.

@@ -6,6 +6,7 @@ the table, the key, what was wanted, what was got, and the nearest valid name.
 """
 
 import dataclasses
+import math
 import tomllib
 from collections.abc import Mapping
 from pathlib import Path
@@ -59,7 +60,8 @@ class Quantity:
             if not self.words:
                 raise
             words = " or ".join(f'"{word}"' for word in self.words)
-            raise UnitError(f"{error.message}; {words} may stand here too") from None
+            message = f"{error.message}; {words} may stand here too"
+            raise UnitError(message, hint=error.hint) from None
         if self.least is not None and number < self.least:
             raise UnitError(f"wanted at least {self.least:g} {self.unit}, got {value!r}")
         if self.most is not None and number > self.most:
@@ -333,8 +335,8 @@ def _written_table(table: object) -> dict[str, Any]:
     written = {}
     for item in dataclasses.fields(table):  # type: ignore[arg-type]
         value = getattr(table, item.name)
-        default = item.default if item.default_factory is dataclasses.MISSING else None
-        if value is not None and value != default and value != {}:
+        # What is left out in TOML is what TOML cannot say: nothing, and infinity.
+        if value not in (None, {}, (), math.inf):
             written[item.name] = _written(value, _unit_of(hints[item.name]))
     return written
 

@@ -50,7 +50,8 @@ def _draw_envelope(axes: Axes, result: GateResult) -> None:
     # The carrier is far too dense to be seen: its outline over a few periods says the same.
     t = result.waveform.t * 1e9
     scale, unit = _milli(result.pulse.amplitude, result.waveform.unit)
-    low, high, centre = _outline(t, result.waveform.v * scale)
+    period = 1e9 / result.carrier_frequency
+    low, high, centre = _outline(t, result.waveform.v * scale, period)
     axes.fill_between(centre, low, high, color="0.85", lw=0, label="waveform at the probe")
     iq = result.envelope.iq * scale
     axes.plot(result.envelope.t * 1e9, iq.real, color="C0", lw=1.4, label="I")
@@ -58,11 +59,15 @@ def _draw_envelope(axes: Axes, result: GateResult) -> None:
     _mark_window(axes, result)
     axes.set_ylabel(f"amplitude ({unit})")
     axes.set_xlim(t[0], t[-1])
-    axes.legend(loc="lower center", ncols=3, fontsize=8)
+    axes.legend(loc="lower right", bbox_to_anchor=(1.0, 1.0), ncols=3, fontsize=8, frameon=False)
 
 
-def _outline(t: np.ndarray, v: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-    count = max(1, t.size // 600)
+def _outline(
+    t: np.ndarray, v: np.ndarray, period: float
+) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    # A block shorter than a period would show beats that are not there.
+    shortest = int(np.ceil(period / float(np.median(np.diff(t))))) + 1
+    count = min(max(shortest, t.size // 600), t.size)
     usable = t.size // count * count
     blocks = v[:usable].reshape(-1, count)
     return blocks.min(axis=1), blocks.max(axis=1), t[:usable].reshape(-1, count).mean(axis=1)

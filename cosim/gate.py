@@ -8,8 +8,10 @@ from cosim.adjust import Calibration, Pulse, calibrate_pulse
 from cosim.capture import Capture, Plan, capture_probe, make_plan
 from cosim.dsp.demodulation import demodulate
 from cosim.dsp.pulse import measure_pulse
+from cosim.errors import InputError, TestbenchError
 from cosim.fidelities import Views
 from cosim.guards import (
+    area_warnings,
     carrier_warnings,
     edge_warnings,
     floor_warnings,
@@ -52,14 +54,14 @@ class Target:
     ----------
     name : str
         In words.
-    angle : float
-        Angle of the rotation in rad.
+    rotation : Rotation
+        Axis, and angle in rad.
     unitary : ndarray of complex, shape (2, 2)
         R_n(angle) = exp(-i angle n.sigma/2).
     """
 
     name: str
-    angle: float
+    rotation: Rotation
     unitary: ComplexArray
 
 
@@ -74,7 +76,7 @@ def gate_target(bench: Testbench) -> Target:
     Returns
     -------
     Target
-        Name, angle and unitary.
+        Name, rotation and unitary.
 
     Raises
     ------
@@ -83,13 +85,17 @@ def gate_target(bench: Testbench) -> Target:
     """
     wanted = bench.gate.target
     if isinstance(wanted, str):
-        rotation = target_rotation(wanted)
+        try:
+            rotation = target_rotation(wanted)
+        except InputError as error:
+            where = f"{bench.source or 'the testbench'}, table [gate], key 'target'"
+            raise TestbenchError(f"{where}: {error.message}", hint=error.hint) from None
         name = wanted
     else:
         rotation = Rotation(wanted.axis, wanted.angle)
         axis = ", ".join(f"{part:g}" for part in wanted.axis)
         name = f"{math.degrees(wanted.angle):g}° about ({axis})"
-    return Target(name, rotation.angle, target_unitary(rotation.axis, rotation.angle))
+    return Target(name, rotation, target_unitary(rotation.axis, rotation.angle))
 
 
 def run_gate(
@@ -137,7 +143,7 @@ def run_gate(
     rotating_wave_error = math.nan if twin is None else channel_distance(channel, twin)
     clock.lap("rotating_wave_twin")
     free = free_frame(channel, target.unitary)
-    rotation = rotation_of(nearest_unitary(channel))
+    rotation = _unfolded(rotation_of(nearest_unitary(channel)), target.rotation)
     calibration = _calibrate(bench, drive, pulse, free, channel, rotation.angle, target)
     clock.lap("calibration")
     second, carrier = _second_run(bench, plan, drive, shot, progress, clock)
@@ -151,6 +157,7 @@ def run_gate(
         *shot.notices,
         *(step_warnings(shot.step, drive.carrier_frequency) if plan and not plan.baseband else ()),
         *edge_warnings(drive.window, shot.waveform, drive.carrier_frequency, measures.amplitude),
+        *area_warnings(drive.window, envelope, drive.line, target.rotation.angle),
         *level_warnings(pulse, target.unitary),
         *carrier_warnings(measures),
         *scale_warnings(calibrated),
@@ -211,13 +218,13 @@ def _calibrate(
 ) -> Calibration:
     adjusted = bench.gate.calibrate
     # No amplitude makes a gate that does nothing better.
-    with_amplitude = "amplitude" in adjusted and target.angle != 0.0
+    with_amplitude = "amplitude" in adjusted and target.rotation.angle != 0.0
     if not with_amplitude and "detuning" not in adjusted:
         return Calibration(1.0, 0.0, channel, free)
     return calibrate_pulse(
         pulse,
         target.unitary,
-        guess=target.angle / angle if angle > 0.0 else 1.0,
+        guess=target.rotation.angle / angle if angle > 0.0 else 1.0,
         with_amplitude=with_amplitude,
         with_detuning="detuning" in adjusted,
         resonance=drive.qubit.frequency - drive.carrier_frequency,
@@ -257,6 +264,15 @@ def _reference_error(bench: Testbench, pulse: Pulse, channel: ComplexArray) -> f
     else:
         again = evolve_reference(pulse.qubit, pulse.drive, *window)
     return channel_distance(channel, again)
+
+
+def _unfolded(found: Rotation, wanted: Rotation) -> Rotation:
+    """Tell 187 degrees about x as that, where x is wanted, and not as 173 degrees about -x."""
+    along = sum(one * two for one, two in zip(found.axis, wanted.axis, strict=True))
+    other = 2.0 * math.pi - found.angle
+    if along >= 0.0 or abs(other - wanted.angle) > abs(found.angle - wanted.angle):
+        return found
+    return Rotation((-found.axis[0], -found.axis[1], -found.axis[2]), other)
 
 
 def _phase_slip(channel: ComplexArray, free: FreeFrame, target: Target, drive: QubitDrive) -> float:

@@ -7,11 +7,12 @@ import numpy as np
 
 from cosim.adjust import SCALE_RANGE, Pulse
 from cosim.capture import check_steps
+from cosim.coupling import DriveLine, rate_per_unit
 from cosim.dsp.pulse import PulseMeasures
 from cosim.quantum.fidelity import average_gate_fidelity
 from cosim.quantum.operators import OperatorSystem
 from cosim.result import Fidelity
-from cosim.waveform import ComplexArray, Waveform
+from cosim.waveform import ComplexArray, Envelope, Waveform
 
 # A change of the average gate fidelity by one more level that is worth a warning.
 LEVELS_TOLERANCE = 1e-6
@@ -79,6 +80,45 @@ def edge_warnings(
                 f"the carrier is at {20 * math.log10(level):.0f} dB of the pulse at the {name} "
                 f"of the window ({edge * 1e9:g} ns): the window cuts the pulse"
             )
+    return tuple(found)
+
+
+def area_warnings(
+    window: tuple[float, float], envelope: Envelope, line: DriveLine, target_angle: float
+) -> tuple[str, ...]:
+    """Tell when the pulse lies outside the window, or turns the qubit round and round.
+
+    Parameters
+    ----------
+    window : tuple of two floats
+        Start and end of the gate in s.
+    envelope : Envelope
+        At the probe.
+    line : DriveLine
+        The way from the probe to the qubit.
+    target_angle : float
+        Angle of the target in rad.
+
+    Returns
+    -------
+    tuple of str
+        The warnings, if any.
+    """
+    size = np.abs(envelope.iq)
+    inside = (envelope.t >= window[0]) & (envelope.t <= window[1])
+    whole, part = float(size.sum()), float(size[inside].sum())
+    found = []
+    if part < 0.5 * whole:
+        found.append(
+            f"only {100 * part / whole:.0f} % of the pulse lies in the window of "
+            f"{window[0] * 1e9:g} ns to {window[1] * 1e9:g} ns: check 'window' in [gate]"
+        )
+    angle = rate_per_unit(line, envelope.unit) * part * envelope.dt
+    if angle > target_angle + math.pi:
+        found.append(
+            f"the pulse turns a resonant qubit by {math.degrees(angle):.0f} degrees, the target is "
+            f"{math.degrees(target_angle):g}: check 'attenuation' and 'rabi_per_volt'"
+        )
     return tuple(found)
 
 

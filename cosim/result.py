@@ -181,7 +181,8 @@ class GateResult:
         ahead of the carrier over the window. A gate played again and again with a carrier that
         runs on needs a virtual Z of this angle each time.
     rotation : Rotation
-        Axis and angle of the unitary nearest to the channel.
+        Axis and angle of the unitary nearest to the channel; the axis on the target's side where
+        that brings the angle nearer to the target's, which may then exceed a half turn.
     unitarity : float
         1 for a unitary channel.
     carrier_frequency : float

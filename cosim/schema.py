@@ -215,6 +215,10 @@ class QubitTable:
         else:
             if self.anharmonicity is None:
                 raise InputError("a transmon needs the key 'anharmonicity', such as \"-300 MHz\"")
+            if self.anharmonicity >= 0.0:
+                raise InputError(
+                    f"key 'anharmonicity': wanted a negative one, got {self.anharmonicity:g} Hz"
+                )
             if self.levels is not None and not 3 <= self.levels <= 6:
                 raise InputError(f"key 'levels': wanted 3 to 6, got {self.levels}")
         if math.isfinite(self.t2) and self.t2 > 2.0 * self.t1:

@@ -7,7 +7,7 @@ from pathlib import Path
 from typing import Any
 
 from cosim.config import check_keys, read_table, read_toml, write_tables
-from cosim.errors import TestbenchError
+from cosim.errors import TestbenchError, near_names
 from cosim.schema import (
     SOURCES,
     TABLES,
@@ -112,6 +112,9 @@ def make_testbench(tables: Mapping[str, Any], *, folder: str | os.PathLike[str] 
 
 def _build(tables: Mapping[str, Any], *, file: str, folder: str) -> Testbench:
     label = file or "the testbench"
+    for name in tables:
+        if isinstance(tables[name], Mapping) and name not in (*TABLES, "stimulus"):
+            raise TestbenchError(f"{label}: unknown table [{name}]; {near_names(name, TABLES)}")
     check_keys(tables, ["title", "stimulus", *TABLES], label)
     title = tables.get("title", "")
     if not isinstance(title, str):

@@ -3,4 +3,4 @@
 set -euo pipefail
 cd "$(dirname "$0")/.."
 bash .ci/setup
-exec .venv/bin/qcosim run examples/x90_spin.toml --archive x90.h5 --plot x90.png
+exec .venv/bin/python -m cosim run examples/x90_spin.toml --archive x90.h5 --plot x90.png

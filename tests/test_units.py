@@ -67,6 +67,15 @@ def test_a_missing_unit_is_told_with_an_example() -> None:
 
 
 @pytest.mark.parametrize(
+    ("text", "unit", "words"),
+    [("80n", "s", '"ns"'), ("6.2 Ghz", "Hz", '"GHz"'), ("1 v", "V", '"V"')],
+)
+def test_what_was_probably_meant_is_said(text: str, unit: str, words: str) -> None:
+    with pytest.raises(UnitError, match=f"did you mean {words}"):
+        parse_quantity(text, unit)
+
+
+@pytest.mark.parametrize(
     ("value", "number"), [(93, 93.0), (1.5, 1.5), ("1.1 V", 1.1), ("2 um", 2e-6), ("1e-6", 1e-6)]
 )
 def test_parameters(value: object, number: float) -> None:

@@ -79,18 +79,28 @@ def test_scripts_run_and_print_the_committed_lines(name: str, tmp_path: Path) ->
     )
     assert done.returncode == 0, done.stderr
     expected = tomllib.loads((HERE / "expected.toml").read_text(encoding="utf-8"))[name]
-    assert numbers(done.stdout) == [pytest.approx(row, rel=2e-3) for row in expected["rows"]]
+    found = numbers(done.stdout)
+    # Digits shown, and what is left of an infidelity that a calibration takes to its rounding.
+    assert found == [pytest.approx(row, rel=2e-3, abs=1e-11) for row in expected["rows"]]
+    assert len(found) > 2
 
 
 def numbers(text: str) -> list[list[float]]:
-    """The rows of numbers in a printed table; three or four digits are shown."""
+    """The numbers of each line of a printed table; three or four digits are shown.
+
+    Lines on run times are left out, for these are the machine's.
+    """
     rows = []
     for line in text.splitlines():
-        try:
-            rows.append([float(word) for word in line.split()])
-        except ValueError:
-            continue
-    return [row for row in rows if row]
+        found = []
+        for word in line.split():
+            try:
+                found.append(float(word))
+            except ValueError:
+                continue
+        if len(found) > 1 and "ngspice" not in line:
+            rows.append(found)
+    return rows
 
 
 @pytest.mark.parametrize("name", SCRIPTS)

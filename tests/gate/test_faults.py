@@ -131,7 +131,7 @@ def test_a_missing_include_three_levels_down_names_the_way(
 @pytest.mark.ngspice
 def test_a_hanging_run_is_ended(make_bench: BenchMaker) -> None:
     with pytest.raises(SimulatorTimeoutError, match="time"):
-        run(make_bench, netlist={"stop": "1 s", "time_limit": "0.5 s"})
+        run(make_bench, netlist={"stop": "200 us", "time_limit": "0.5 s"})
 
 
 @pytest.mark.ngspice

@@ -53,6 +53,34 @@ def test_a_window_that_cuts(make_bench: BenchMaker) -> None:
         run(make_bench, gate={"window": ["10 ns", "10.1 ns"]})
 
 
+def test_a_window_that_misses_the_pulse(make_bench: BenchMaker) -> None:
+    assert told(run(make_bench, gate={"window": ["41 ns", "49 ns"]}), "of the pulse lies in")
+
+
+def test_a_forgotten_attenuation(make_bench: BenchMaker) -> None:
+    """Five turns and a quarter look like a quarter turn."""
+    result = run(make_bench, qubit={"rabi_per_volt": "1457 MHz/V"})
+    assert told(result, "turns a resonant qubit by 188")
+
+
+def test_a_load_that_stands_twice(make_bench: BenchMaker) -> None:
+    deck = DECK.replace(".tran", "rload out 0 50\n.tran")
+    tables = {
+        "drive": {"carrier": "1 GHz", "termination": "50 ohm"},
+        "qubit": {"frequency": "1 GHz", "rabi_per_volt": "69.4 MHz/V"},
+        "gate": {"target": "x90", "window": ["1 ns", "48 ns"]},
+    }
+    assert told(cosim.run(make_bench(deck, tables)), "stands at the probed node 'out' already")
+    quiet = {**tables, "drive": {"carrier": "1 GHz", "termination": "in deck"}}
+    assert cosim.run(make_bench(deck, quiet)).warnings == ()
+
+
+def test_an_over_rotation_past_the_half_turn_is_told_as_one(make_bench: BenchMaker) -> None:
+    result = run(make_bench, qubit={"rabi_per_volt": "144.2 MHz/V"}, gate={"target": "x"})
+    assert math.degrees(result.rotation.angle) == pytest.approx(187.0, abs=0.5)
+    assert result.rotation.axis[0] == pytest.approx(1.0, abs=1e-2)
+
+
 def test_a_strong_drive_leaves_the_rotating_wave(make_bench: BenchMaker) -> None:
     result = run(make_bench, qubit={"rabi_per_volt": "5 GHz/V"})
     assert result.rotating_wave_error > 1e-4

@@ -35,6 +35,7 @@ FLOORS = {
     "record": 4,
     "gate": 4,
     "dispatch": 4,
+    "port": 4,
     "probe_run": 5,
     "comparison": 5,
     "exporting": 5,
