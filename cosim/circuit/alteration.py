@@ -7,7 +7,7 @@ from dataclasses import replace
 
 from cosim.circuit.cards import assignments, masked, number_text, word_spans
 from cosim.circuit.copies import Edit, edited_lines
-from cosim.circuit.deck import Deck, SourceLine
+from cosim.circuit.deck import Deck, SourceLine, shortened
 from cosim.circuit.hierarchy import (
     Structure,
     declared_parameters,
@@ -71,7 +71,7 @@ def with_parameters(deck: Deck, parameters: Mapping[str, float]) -> Deck:
     for name in wanted:
         if name not in known:
             raise UnknownNameError(
-                f"the deck has no top-level parameter '{name}'",
+                f"the deck has no top-level parameter '{shortened(name)}'",
                 hint=near_names(name, known),
                 file=deck.path,
             )
@@ -80,7 +80,7 @@ def with_parameters(deck: Deck, parameters: Mapping[str, float]) -> Deck:
 
 def _finite(name: str, value: float) -> float:
     if isinstance(value, bool | str) or not math.isfinite(value):
-        raise InputError(f"'{name}' must be a finite number, got {value!r}")
+        raise InputError(f"'{shortened(name)}' must be a finite number, got {value!r}")
     return float(value)
 
 

@@ -5,7 +5,7 @@ from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field, replace
 
 from cosim.circuit.cards import assignments, masked
-from cosim.circuit.deck import Deck, SourceLine
+from cosim.circuit.deck import Deck, SourceLine, shortened
 from cosim.circuit.hierarchy import Structure, structure_of
 from cosim.circuit.scope import Scope, element_of
 from cosim.errors import UnknownNameError, near_names
@@ -79,7 +79,7 @@ class _Change:
         for name, inner in wish.inner.items():
             if name not in scope.elements:
                 raise UnknownNameError(
-                    f"instance '{prefix}{name}' does not exist",
+                    f"instance '{shortened(prefix + name)}' does not exist",
                     hint=near_names(prefix + name, [prefix + item for item in scope.elements]),
                     file=self.path,
                 )

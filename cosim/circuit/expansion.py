@@ -7,7 +7,7 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
 
-from cosim.circuit.deck import DataFile, DeckFile, SourceLine, where
+from cosim.circuit.deck import DataFile, DeckFile, SourceLine, shortened, where
 from cosim.circuit.source import Source, card_arguments, read_bytes, read_source
 from cosim.errors import (
     DeckError,
@@ -81,8 +81,8 @@ class Places:
         real = os.path.realpath(found)
         if not any(_below(real, root) for root in self.roots()):
             raise ForbiddenDeckError(
-                f"'{name}'{'' if name == real else f' is {real} and'} lies outside of the deck's "
-                f"folder and the include paths{chain}",
+                f"'{shortened(name)}'{'' if name == real else f' is {real} and'} lies outside of "
+                f"the deck's folder and the include paths{chain}",
                 hint="If it may be read, add its folder to include_paths: "
                 + self._common_folder(real, line.file),
                 file=line.file,
@@ -130,7 +130,7 @@ def _not_found(
 ) -> MissingFileError:
     hint = ""
     if "$" in expanded:
-        hint = f"'{name}' holds a variable that is not set in the environment."
+        hint = f"'{shortened(name)}' holds a variable that is not set in the environment."
     elif folders and not os.path.isabs(expanded):
         looked = [os.path.dirname(os.path.join(folder, expanded)) for folder in folders]
         present = {entry for folder in looked for entry in _entries(folder)}
@@ -139,7 +139,7 @@ def _not_found(
         if near:
             hint += " Near names there: " + ", ".join(f"'{entry}'" for entry in near) + "."
     return MissingFileError(
-        f"file '{name}' not found{chain}", hint=hint, file=line.file, line=line.line
+        f"file '{shortened(name)}' not found{chain}", hint=hint, file=line.file, line=line.line
     )
 
 
@@ -246,13 +246,13 @@ class Expansion:
         start, stop = source.sections.get(name.lower(), (-1, -1))
         if start != index + 1:
             raise DeckError(
-                f"'{line.text}' names no section, and no .endl closes a section '{name}'",
+                f"'{shortened(line.text)}' names no section, and no .endl closes it",
                 hint="Read a library with '.lib FILE SECTION', a whole file with '.include FILE'.",
                 file=line.file,
                 line=line.line,
             )
         self.notices.append(
-            f"{where(line)}: section '{name}' is defined here but not used: only "
+            f"{where(line)}: section '{shortened(name)}' is defined here but not used: only "
             "'.lib FILE SECTION' reads a section"
         )
         return stop + 1
@@ -278,7 +278,7 @@ class Expansion:
         bounds = source.sections.get(section.lower())
         if bounds is None:
             raise UnknownNameError(
-                f"{path} has no section '{section}'{_way(chain)}",
+                f"{path} has no section '{shortened(section)}'{_way(chain)}",
                 hint=near_names(section, source.sections),
                 file=line.file,
                 line=line.line,

@@ -184,7 +184,7 @@ def findings(prepared: PreparedDeck, log: Sequence[str]) -> tuple[str, ...]:
         file, number, text = _origin(prepared, said)
         if "set to 1 mOhm" in line and text and len(text.split()) < 4:
             _raise_deck(DeckError, prepared, said, "a resistor without a value")
-        found[f"{_place(file, number)}{' '.join(said)}"] = None
+        found[f"{_place(file, number)}{' '.join(map(shortened, said))}"] = None
     listed = list(found)
     if len(listed) > WARNINGS_SHOWN:
         rest = len(listed) - WARNINGS_SHOWN
@@ -266,8 +266,8 @@ def _raise_deck(
     hint: str = "",
 ) -> NoReturn:
     file, line, text = _origin(prepared, said)
-    quoted = f": {text!r}" if text else ""
-    words = "; ".join(said[:6])
+    quoted = f": {shortened(text)!r}" if text else ""
+    words = "; ".join(shortened(line) for line in said[:6])
     raise kind(f"{what}{quoted} (ngspice: {words})", hint=hint, log=said, file=file, line=line)
 
 
@@ -284,9 +284,10 @@ def _raise_convergence(prepared: PreparedDeck, words: Sequence[str]) -> NoReturn
     if nodes:
         causes.append("singular matrix, check node " + ", ".join(list(nodes)[:5]))
     file, line, text = _origin(prepared, said)
-    element = f" in {text!r}" if text else ""
+    element = f" in {shortened(text)!r}" if text else ""
+    why = "; ".join(shortened(cause) for cause in causes)
     raise ConvergenceError(
-        f"{_place(file, line)}ngspice found no solution {place}{element} ({'; '.join(causes)})",
+        f"{_place(file, line)}ngspice found no solution {place}{element} ({why})",
         hint="look at the named nodes and elements: a floating node, a loop of sources, a jump "
         "without capacitance; or take initial conditions and initial = 'uic'",
         log=words[-2 * LOG_SHOWN :],

@@ -17,7 +17,7 @@ from cosim.circuit.cards import (
     model_card,
     words,
 )
-from cosim.circuit.deck import SourceLine
+from cosim.circuit.deck import SourceLine, shortened
 from cosim.circuit.expression import Parameters
 from cosim.circuit.scope import FIXED_NODES, MODEL_PLACE, Element, Scope, element_of
 from cosim.errors import DeckError, UnknownNameError, near_names
@@ -212,7 +212,7 @@ class _Builder:
         if self.scope is not self.root:
             header = self.lines[self.scope.first]
             raise DeckError(
-                f"subcircuit '{self.scope.name}' has no .ends",
+                f"subcircuit '{shortened(self.scope.name)}' has no .ends",
                 file=header.file,
                 line=header.line,
             )
@@ -305,7 +305,7 @@ def _check(structure: Structure) -> None:
             header = structure.lines[scope.first]
             names = " > ".join(item.name for item in (*way[1:], scope))
             problem = "a subcircuit holds itself" if scope in way else "too many levels"
-            raise DeckError(f"{problem}: {names}", file=header.file, line=header.line)
+            raise DeckError(f"{problem}: {shortened(names)}", file=header.file, line=header.line)
         for index in (index for found in scope.elements.values() for index in found):
             line = structure.lines[index]
             element = element_of(scope, line.text)
@@ -332,16 +332,17 @@ def _check_element(
             if uncertain:
                 return None
             raise UnknownNameError(
-                f"subcircuit '{element.reference}' of '{element.name}' is not defined",
+                f"subcircuit '{shortened(element.reference)}' of '{shortened(element.name)}' is "
+                "not defined",
                 hint=near_names(element.reference, scope.visible_subcircuits()),
                 file=line.file,
                 line=line.line,
             )
         if len(definition.ports) != len(element.nodes):
             raise DeckError(
-                f"'{element.name}' gives {len(element.nodes)} nodes to subcircuit "
-                f"'{definition.name}', which has {len(definition.ports)}: "
-                f"{' '.join(definition.ports)}",
+                f"'{shortened(element.name)}' gives {len(element.nodes)} nodes to subcircuit "
+                f"'{shortened(definition.name)}', which has {len(definition.ports)}: "
+                f"{shortened(' '.join(definition.ports))}",
                 file=line.file,
                 line=line.line,
             )
@@ -349,7 +350,7 @@ def _check_element(
     wanted = FIXED_NODES.get(element.letter, 0)
     if len(leading_words(line.text)) - 1 < wanted:
         raise DeckError(
-            f"'{element.name}' needs {wanted} nodes: '{line.text[:60]}'",
+            f"'{shortened(element.name)}' needs {wanted} nodes: '{shortened(line.text)}'",
             file=line.file,
             line=line.line,
         )
@@ -358,7 +359,7 @@ def _check_element(
         return None
     if scope.model(element.reference) is None:
         raise UnknownNameError(
-            f"model '{element.reference}' of '{element.name}' is not defined",
+            f"model '{shortened(element.reference)}' of '{shortened(element.name)}' is not defined",
             hint=near_names(element.reference, scope.visible_models()),
             file=line.file,
             line=line.line,

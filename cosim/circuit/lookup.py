@@ -151,8 +151,9 @@ def find_node(deck: Deck, name: str) -> str:
     prefix, nodes = next(iter(found.items()))
     if len(nodes) > 1:
         raise DeckError(
-            f"node '{name}' is {' or '.join(nodes)}: '{prefix[:-1]}' stands in several branches of "
-            "an .if inside a subcircuit, and which of them is there is not told before the run",
+            f"node '{shortened(name)}' is {' or '.join(nodes)}: '{prefix[:-1]}' stands in several "
+            "branches of an .if inside a subcircuit, and which of them is there is not told before "
+            "the run",
             hint=f"Name the net itself: {' or '.join(nodes)}.",
             file=deck.path,
         )
@@ -266,7 +267,7 @@ def find_device(deck: Deck, name: str) -> Device:
             if len(frame.prefix) >= len(deepest.prefix):
                 deepest, missing = frame, rest
     part, dot, _ = missing.partition(".")
-    what = f"instance '{deepest.prefix}{part}' of '{wanted}'" if dot else f"device '{wanted}'"
+    what = f"instance '{deepest.prefix}{part}'" if dot else f"device '{wanted}'"
     names = [item for item, _ in instances(structure, deepest.scope)] if dot else None
     listed = islice(deepest.scope.elements if names is None else names, _MOST_OFFERED)
     raise UnknownNameError(
@@ -362,7 +363,7 @@ def _current(device: Device, save: str) -> str:
         if device.letter in _CURRENT and not (device.letter in "rcl" and behavioural):
             return f"@{device.name}[{_CURRENT[device.letter]}]"
     raise ProbeError(
-        f"ngspice saves no current for '{save}'",
+        f"ngspice saves no current for '{shortened(save)}'",
         hint="Put a source of 0 V in series in the deck and probe its current.",
     )
 

@@ -150,7 +150,7 @@ def _checked_mode(compatibility: str | None) -> str:
     mode = (compatibility or "").strip().lower()
     if mode and not _COMPATIBILITY.fullmatch(mode):
         raise DeckError(
-            f"compatibility mode '{compatibility}' is not known",
+            f"compatibility mode '{shortened(compatibility or '')}' is not known",
             hint="ngspice has 'all', 'spe', and 'ps', 'hs', 'lt', 'ki', each also with 'a' behind.",
         )
     return mode

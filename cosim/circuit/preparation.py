@@ -95,6 +95,12 @@ def prepare(deck: Deck, request: TransientRequest) -> PreparedDeck:
     body.append(_own_line(".end"))
     check_lines(body)
     mode = _flat_mode(deck.compatibility)
+    if mode != (deck.compatibility or ""):
+        notices.append(
+            f"compatibility mode '{deck.compatibility}' is sent as '{mode}': one list without "
+            f"includes is sent, so ngspice reads all lines in the dialect, where in mode "
+            f"'{deck.compatibility}' it translates the lines of included files only"
+        )
     return PreparedDeck(
         lines=(_TITLE, *(line.text for line in body)),
         origins=(("", 0), *((line.file, line.line) for line in body)),

@@ -6,6 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from cosim.circuit.deck import shortened
 from cosim.errors import ProbeError
 from cosim.waveform import FloatArray
 
@@ -16,6 +17,7 @@ _PARAMETER = re.compile(r"@[^\s\[\]]+\[[^\[\]]+\]")
 _BARE = re.compile(r"[^\s(),*/+\-@]+")
 _CURRENT_PARAMETERS = re.compile(r"i|current|i[a-z]{1,2}|i[dbcges]\w*|c[dbg]")
 _DEEPEST = 40
+_LONGEST = 1_000_000  # characters
 _HINT = "Write for example 'v(rf_p) - v(rf_n)', 'v(a,b)', '0.5*v(out)' or 'i(l1)'."
 
 
@@ -75,21 +77,28 @@ def parse_probe(text: str) -> Probe:
     Raises
     ------
     ProbeError
-        If the text cannot be read (with the position), is not linear, has a constant part, has
-        nothing but the ground in it, or mixes voltages and currents.
+        If the text cannot be read (with the position), is longer than a million characters,
+        is not linear, has a constant part, has nothing but the ground in it, or mixes voltages
+        and currents.
     """
+    if len(text) > _LONGEST:
+        raise ProbeError(
+            f"probe '{shortened(text)}' is longer than {_LONGEST} characters", hint=_HINT
+        )
     value = _Reader(text).read()
     if value.is_number or value.constant != 0.0:
-        raise ProbeError(f"probe '{text}' has a part without a node or device", hint=_HINT)
+        raise ProbeError(
+            f"probe '{shortened(text)}' has a part without a node or device", hint=_HINT
+        )
     weights: dict[str, float] = {}
     for weight, name in value.terms:
         weights[name] = weights.get(name, 0.0) + weight
     terms = tuple((weight, name) for name, weight in weights.items() if weight != 0.0)
     if not terms:
-        raise ProbeError(f"probe '{text}' is always zero", hint=_HINT)
+        raise ProbeError(f"probe '{shortened(text)}' is always zero", hint=_HINT)
     units = {_unit(name, text) for _, name in terms}
     if len(units) > 1:
-        raise ProbeError(f"probe '{text}' mixes voltages and currents", hint=_HINT)
+        raise ProbeError(f"probe '{shortened(text)}' mixes voltages and currents", hint=_HINT)
     nodes = tuple(dict.fromkeys(name[2:-1] for _, name in terms if name.startswith("v(")))
     return Probe(text, terms, units.pop(), nodes)
 
@@ -104,7 +113,9 @@ def _unit(name: str, text: str) -> str:
         return "A"
     if parameter.startswith("v"):
         return "V"
-    raise ProbeError(f"'{name}' in probe '{text}' is neither a voltage nor a current")
+    raise ProbeError(
+        f"'{shortened(name)}' in probe '{shortened(text)}' is neither a voltage nor a current"
+    )
 
 
 def evaluate_probe(probe: Probe, vectors: Mapping[str, FloatArray]) -> FloatArray:
@@ -130,7 +141,8 @@ def evaluate_probe(probe: Probe, vectors: Mapping[str, FloatArray]) -> FloatArra
     missing = [name for _, name in probe.terms if name not in vectors]
     if missing:
         raise ProbeError(
-            f"probe '{probe.text}' needs {', '.join(missing)}, which the run did not save"
+            f"probe '{shortened(probe.text)}' needs {shortened(', '.join(missing))}, which the "
+            "run did not save"
         )
     total = np.zeros_like(vectors[probe.terms[0][1]], dtype=np.float64)
     for weight, name in probe.terms:
@@ -154,7 +166,7 @@ class _Reader:
 
     def _fault(self, problem: str) -> ProbeError:
         return ProbeError(
-            f"probe '{self._text}' cannot be read at position {self._at + 1}: {problem}",
+            f"probe '{shortened(self._text)}' cannot be read at position {self._at + 1}: {problem}",
             hint=_HINT,
         )
 
@@ -164,19 +176,19 @@ class _Reader:
         return self._text[self._at : self._at + 1]
 
     def _sum(self) -> _Value:
-        value = self._product()
+        parts = [self._product()]
         while (sign := self._peek()) in ("+", "-") and sign:
             self._at += 1
-            other = self._product().scaled(1.0 if sign == "+" else -1.0)
-            value = _Value(
-                value.constant + other.constant,
-                value.terms + other.terms,
-                value.touched + other.touched,
-            )
-        return value
+            parts.append(self._product().scaled(1.0 if sign == "+" else -1.0))
+        return _Value(
+            sum(part.constant for part in parts),
+            tuple(term for part in parts for term in part.terms),
+            tuple(name for part in parts for name in part.touched),
+        )
 
     def _product(self) -> _Value:
         value = self._unary()
+        factor = 1.0
         while (operator := self._peek()) in ("*", "/") and operator:
             self._at += 1
             other = self._unary()
@@ -185,14 +197,14 @@ class _Reader:
                     raise self._fault("only a number may divide")
                 if other.constant == 0.0:
                     raise self._fault("division by zero")
-                value = value.scaled(1.0 / other.constant)
+                factor *= 1.0 / other.constant
             elif other.is_number:
-                value = value.scaled(other.constant)
+                factor *= other.constant
             elif value.is_number:
-                value = other.scaled(value.constant)
+                value, factor = other, factor * value.constant
             else:
                 raise self._fault("a product of two signals is not linear")
-        return value
+        return value if factor == 1.0 else value.scaled(factor)
 
     def _unary(self) -> _Value:
         self._depth += 1

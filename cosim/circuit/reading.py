@@ -18,7 +18,7 @@ from cosim.circuit.cards import (
     model_card,
     with_usual_word,
 )
-from cosim.circuit.deck import DataFile, SourceLine, where
+from cosim.circuit.deck import DataFile, SourceLine, shortened, where
 from cosim.circuit.expansion import Places, read_data_file
 from cosim.circuit.source import ENCRYPTED_CARD
 from cosim.errors import DeckError, UnsupportedDeckError, near_names
@@ -29,6 +29,8 @@ _FILE_PARAMETER = re.compile(
 _NOISE_SOURCE = re.compile(r"(?<![\w.])(trnoise|trrandom)(?![\w.])", re.I)
 # Possessive, so that a line of brackets takes no more than one pass.
 _NAME_AND_NODES = re.compile(r"[^\s,(]++[\s,(]++[^\s,]++[\s,]++\S+")
+# "r1 in out = 2k", which ngspice reads as "r1 in out 2k".
+_VALUE_AFTER_SIGN = re.compile(r"^([^\s,(=]++[\s,(]++[^\s,=]++[\s,]++[^\s,=]++)[\s,]*=\s*")
 _NEXT_KEYWORD = re.compile(r"(?<![\w.])(dc|ac|distof1|distof2)(?![\w.])", re.I)
 _VERILOG_CARDS = frozenset({".hdl", ".va", ".verilog", ".osdi", ".pre_osdi"})
 _WAVEFORM_HINT = "Export the waveform from a simulator that can read it, and run on that waveform."
@@ -67,7 +69,8 @@ class CardReader:
             self._set_title(title)
         elif _LOOKS_LIKE_CIRCUIT.match(title):
             self.notices.append(
-                f"{path}:1: the first line is the title, so '{title}' is not part of the circuit"
+                f"{path}:1: the first line is the title, so '{shortened(title)}' is not "
+                "part of the circuit"
             )
 
     @property
@@ -131,6 +134,8 @@ class CardReader:
             text = self._without_noise(line)
         elif text[0] in "xX":
             text = _without_commas(text)
+        if "=" in text and text[0] in "rRcClLvViI":
+            text = _VALUE_AFTER_SIGN.sub(r"\1 ", text)
         self._keep(text, line)
 
     def _without_noise(self, line: SourceLine) -> str:
@@ -189,7 +194,8 @@ class CardReader:
         matches = [m for m in _FILE_PARAMETER.finditer(text) if m[1].lower() == wanted]
         if len(matches) != 1:
             raise DeckError(
-                f"model '{name}' of type {kind} must name its file once, with {wanted}=\"...\"",
+                f"model '{shortened(name)}' of type {kind} must name its file once, with "
+                f'{wanted}="..."',
                 file=line.file,
                 line=line.line,
             )
@@ -222,7 +228,7 @@ class CardReader:
             )
         known = CIRCUIT_CARDS | SETTING_CARDS | ANALYSIS_CARDS | {".include", ".lib", ".save"}
         return UnsupportedDeckError(
-            f"ngspice knows no card '{card}'",
+            f"ngspice knows no card '{shortened(card)}'",
             hint=near_names(card, known),
             file=line.file,
             line=line.line,

@@ -12,7 +12,7 @@ from cosim.circuit.cards import (
     card_word,
     masked,
 )
-from cosim.circuit.deck import Deck, SourceLine, TransientCard, unique, where
+from cosim.circuit.deck import Deck, SourceLine, TransientCard, shortened, unique, where
 from cosim.circuit.expression import Parameters, spice_number
 from cosim.circuit.hierarchy import Structure, structure_of
 from cosim.errors import DeckError
@@ -92,7 +92,7 @@ def _transient(structure: Structure, notices: list[str]) -> TransientCard | None
     uic = any(word.lower() == "uic" for word in written)
     if len(words) < 2:
         raise DeckError(
-            f".tran needs a step and a stop time, got '{line.text}'",
+            f".tran needs a step and a stop time, got '{shortened(line.text)}'",
             file=line.file,
             line=line.line,
         )
@@ -102,8 +102,8 @@ def _transient(structure: Structure, notices: list[str]) -> TransientCard | None
     max_step = values[3] if len(values) > 3 else None
     if step is None or stop is None or start is None or (len(values) > 3 and max_step is None):
         notices.append(
-            f"{where(line)}: the times of '{line.text}' cannot be told before the run, so they "
-            "give no defaults"
+            f"{where(line)}: the times of '{shortened(line.text)}' cannot be told before the "
+            "run, so they give no defaults"
         )
         return None
     return TransientCard(step, stop, start, max_step, uic)
@@ -154,7 +154,9 @@ def _temperature(structure: Structure, notices: list[str]) -> float | None:
     value = number_of(written[0], structure.parameters)
     line = written[1]
     if value is None:
-        notices.append(f"{where(line)}: the value of '{line.text}' cannot be told before the run")
+        notices.append(
+            f"{where(line)}: the value of '{shortened(line.text)}' cannot be told before the run"
+        )
         return None
     if value <= -CELSIUS:
         raise DeckError(
@@ -212,7 +214,7 @@ def filtered_options(line: SourceLine, own: dict[str, float | str]) -> OptionCar
         item = found.get(match.start())
         name = item.name if item else text[match.start() : match.end()].lower()
         at = item.stop if item else match.end()
-        written = text[match.start() : at]
+        written = shortened(text[match.start() : at])
         if name in own or name == "temp":
             if name in own and not _same(item.value if item else "", own[name]):
                 left_out.append(f"option {written} left out: the run sets {name}={own[name]}")

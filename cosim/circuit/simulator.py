@@ -4,7 +4,7 @@ from collections.abc import Callable
 
 from cosim.circuit.analysis import TransientRequest, TransientResult
 from cosim.circuit.client import client_of_this_process, find_simulator
-from cosim.circuit.deck import Deck, PreparedDeck
+from cosim.circuit.deck import Deck, PreparedDeck, shortened
 from cosim.circuit.preparation import prepare
 from cosim.circuit.verdict import judge
 from cosim.errors import ForbiddenDeckError
@@ -84,7 +84,9 @@ def simulate_prepared(
         # The library counts lines, and a line that it splits again could hold a command.
         if not line or line.splitlines() != [line] or "\0" in line:
             raise ForbiddenDeckError(
-                f"an empty line or a control character in {line!r}", file=file, line=number
+                f"an empty line or a control character in {shortened(line)!r}",
+                file=file,
+                line=number,
             )
     client = client_of_this_process()
     part_done = None if progress is None else lambda part: progress(part * request.stop)

@@ -11,7 +11,7 @@ import numpy as np
 
 from cosim.circuit.analysis import TransientRequest, TransientResult
 from cosim.circuit.client import Answer
-from cosim.circuit.deck import PreparedDeck
+from cosim.circuit.deck import PreparedDeck, shortened
 from cosim.circuit.faults import LOG_SHOWN, clean, findings, raise_for_log
 from cosim.errors import (
     ConvergenceError,
@@ -147,16 +147,18 @@ def _vector(save: str, key: str, answer: Answer, log: tuple[str, ...]) -> FloatA
         # quantity that does not exist as an empty vector.
         near = near_names(key, set(answer.done["available"]) - {"time", key.lower()})
         raise UnknownNameError(
-            f"ngspice gave no vector for {save!r}", hint=near, log=log[-LOG_SHOWN:]
+            f"ngspice gave no vector for {shortened(save)!r}", hint=near, log=log[-LOG_SHOWN:]
         )
     if values.size != time.size:
         raise SimulatorCrashError(
-            f"ngspice gave {values.size} values of {save!r} for {time.size} times",
+            f"ngspice gave {values.size} values of {shortened(save)!r} for {time.size} times",
             log=log[-LOG_SHOWN:],
         )
     if not np.isfinite(values).all():
         first = float(time[np.flatnonzero(~np.isfinite(values))[0]])
         raise ConvergenceError(
-            f"{save!r} is not finite from t = {first:.6g} s on", log=log[-LOG_SHOWN:], time=first
+            f"{shortened(save)!r} is not finite from t = {first:.6g} s on",
+            log=log[-LOG_SHOWN:],
+            time=first,
         )
     return values

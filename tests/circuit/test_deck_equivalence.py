@@ -85,6 +85,8 @@ def test_encodings_and_line_ends_change_nothing(tmp_path: Path, encode: object) 
         "v1 in 0 sin(0 1 1g)\nr1 in out\n.include rest.inc\nr2 out 0 1k\n",
         # An .end in an included file ends nothing.
         "v1 in 0 sin(0 1 1g)\nr1 in out 1k\n.include end.inc\n",
+        # A sign before the value.
+        "v1 in 0 sin(0 1 1g)\ni1 0 out = 1m\nr1 in out = 1k\nr2 out 0 =1k\nc1 out 0=1p\n",
         # .prot without encryption hides nothing from ngspice.
         "v1 in 0 sin(0 1 1g)\nr1 in out 1k\n.prot\nr2 out 0 1k\n.unprot\n",
         # A parameter in the text that the host fills in.

@@ -1,14 +1,24 @@
-"""Oracle: an error of this package for what no deck holds, and work that grows with the text."""
+"""Oracle: an error of this package, of bounded length, for what no deck and no probe holds."""
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from pathlib import Path
 
 import pytest
 
 from cosim.capture import make_plan
 from cosim.circuit.analysis import TransientRequest
-from cosim.circuit.netlist import deck_from_text, load_deck, node_names, prepare
-from cosim.errors import DeckError, TestbenchError
+from cosim.circuit.netlist import (
+    deck_from_text,
+    load_deck,
+    node_names,
+    prepare,
+    resolve_saves,
+    with_instances,
+    with_parameters,
+)
+from cosim.circuit.probe import evaluate_probe, parse_probe
+from cosim.circuit.simulator import simulate
+from cosim.errors import DeckError, InputError, ProbeError, TestbenchError
 from cosim.testbench import Testbench, make_testbench
 
 NO_PATHS = ["a\0b.cir", "\ud800.cir"]
@@ -80,3 +90,65 @@ def test_a_resistor_of_many_zeros_is_judged_in_one_pass() -> None:
     deck = deck_from_text(f"t\nv1 a 0 1\nr1 a 0 1\nr9 a 0 {'0' * 100_000}x\n.tran 1n 2n\n")
     prepared = prepare(deck, TransientRequest(stop=2e-9, step=1e-9))
     assert len(prepared.zeros) == 1
+
+
+LONG = "n" * 10_000
+CIRCUIT = "v1 a 0 1\nr1 a 0 1\n"
+
+
+@pytest.mark.parametrize(
+    "fault",
+    [
+        lambda: parse_probe(f"v({LONG}) *"),
+        lambda: parse_probe(f"v({LONG}) + i(r1)"),
+        lambda: parse_probe(f"@r1[{LONG}]"),
+        lambda: evaluate_probe(parse_probe(f"v({LONG})"), {}),
+        lambda: resolve_saves(deck_from_text(f"t\n{CIRCUIT}"), [f"v({LONG})"]),
+        lambda: resolve_saves(deck_from_text(f"t\n{CIRCUIT}"), [f"i({LONG}.{LONG})"]),
+        lambda: resolve_saves(deck_from_text(f"t\n{CIRCUIT}"), [LONG]),
+        lambda: with_parameters(deck_from_text(f"t\n{CIRCUIT}"), {LONG: 1.0}),
+        lambda: with_instances(deck_from_text(f"t\n{CIRCUIT}"), {LONG: {"r": 1.0}}),
+        lambda: deck_from_text(f"t\n{CIRCUIT}.tran {LONG}\n"),
+        lambda: deck_from_text(f"t\n{CIRCUIT}.{LONG}\n"),
+        lambda: deck_from_text(f"t\n{CIRCUIT}x{LONG} a {LONG}\n"),
+        lambda: deck_from_text(f"t\n{CIRCUIT}m{LONG} a a a a {LONG}\n"),
+        lambda: deck_from_text(f"t\n{CIRCUIT}r2{LONG} = \n"),
+        lambda: deck_from_text(f"t\n{CIRCUIT}.lib {LONG}\n"),
+        lambda: deck_from_text(f"t\n{CIRCUIT}.include {LONG}\n", folder="."),
+        lambda: deck_from_text(f"t\n{CIRCUIT}", compatibility=LONG),
+    ],
+)
+def test_no_message_quotes_a_long_text_in_full(fault: Callable[[], object]) -> None:
+    with pytest.raises(InputError) as caught:
+        fault()
+    assert len(str(caught.value)) < 1500
+    assert "characters)" in str(caught.value)
+
+
+@pytest.mark.ngspice
+def test_what_ngspice_says_of_a_long_line_is_cut_as_well() -> None:
+    deck = deck_from_text(f"t\n{CIRCUIT}r2 a 0 1 {' '.join(['foo'] * 30_000)}\n")
+    with pytest.raises(DeckError) as caught:
+        simulate(deck, TransientRequest(stop=1e-9, step=1e-11, saves=("v(a)",)))
+    assert len(str(caught.value)) < 1500
+
+
+def test_long_probes_take_one_pass_and_have_an_end() -> None:
+    # 20,000 terms, and a factor on each of them as often, took a time that grew with the square.
+    count = 20_000
+    probe = parse_probe("(" + " + ".join(f"v(n{k})" for k in range(count)) + ")" + " * -1" * count)
+    assert probe.terms[:: count - 1] == ((1.0, "v(n0)"), (1.0, f"v(n{count - 1})"))
+    assert len(probe.nodes) == count
+    with pytest.raises(ProbeError, match="longer than 1000000 characters"):
+        parse_probe("v(a)" + " " * 1_000_000)
+
+
+def test_a_dialect_for_includes_only_is_said_to_reach_further() -> None:
+    request = TransientRequest(stop=1e-9, step=1e-11)
+    for mode, sent in (("ps", "psa"), ("hs", "hsa")):
+        prepared = prepare(deck_from_text(f"t\n{CIRCUIT}", compatibility=mode), request)
+        assert prepared.commands[0] == f"set ngbehavior={sent}"
+        assert [note for note in prepared.notices if f"'{mode}' is sent as '{sent}'" in note]
+    for mode in ("psa", "all", "spe", None):
+        prepared = prepare(deck_from_text(f"t\n{CIRCUIT}", compatibility=mode), request)
+        assert prepared.notices == ()
