@@ -20,7 +20,7 @@ from cosim.circuit.cards import (
     card_word,
     model_card,
 )
-from cosim.circuit.deck import SourceLine
+from cosim.circuit.deck import SourceLine, shortened
 from cosim.errors import (
     DeckError,
     ForbiddenDeckError,
@@ -104,7 +104,7 @@ def _any_fault(text: str) -> _Fault | None:
             "Export the waveform from a simulator that can, and run on that waveform.",
         )
     if letter not in _LETTERS:
-        return UnsupportedDeckError, f"'{_short(text)}' starts with no element's letter", ""
+        return UnsupportedDeckError, f"'{shortened(text)}' starts with no element's letter", ""
     if letter in "vi" and _EXTERNAL.search(text):
         return (
             ForbiddenDeckError,
@@ -126,7 +126,11 @@ _short_fault = lru_cache(maxsize=2**17)(_any_fault)
 def _card_fault(text: str) -> _Fault | None:
     card = card_word(text)
     if card not in _CARDS:
-        return UnsupportedDeckError, f"card '{card}' is not sent", near_names(card, _CARDS)
+        return (
+            UnsupportedDeckError,
+            f"card '{shortened(card)}' is not sent",
+            near_names(card, _CARDS),
+        )
     if card == ".model":
         return _model_fault(text)
     if card == ".options":
@@ -135,7 +139,7 @@ def _card_fault(text: str) -> _Fault | None:
 
 
 def _model_fault(text: str) -> _Fault | None:
-    name, kind = model_card(text)
+    name, kind = (shortened(word) for word in model_card(text))
     if kind in MODELS_WITH_FILE:
         named = _FILE.findall(text)
         if named and all(_SCRATCH_FILE.fullmatch(item) for item in named):
@@ -161,14 +165,10 @@ def _options_fault(text: str) -> _Fault | None:
     while at < len(text):
         match = _OPTION.match(text, at)
         if match is None:
-            return ForbiddenDeckError, f"options '{_short(text[at:])}' cannot be read", ""
+            return ForbiddenDeckError, f"options '{shortened(text[at:])}' cannot be read", ""
         name = match[1].lower()
         known = name in FLAG_OPTIONS or name in VALUE_OPTIONS or name in _OWN_OPTIONS
         if not known or (match[2] is None) != (name in FLAG_OPTIONS):
-            return ForbiddenDeckError, f"option '{name}' is not sent", ""
+            return ForbiddenDeckError, f"option '{shortened(name)}' is not sent", ""
         at = match.end()
     return None
-
-
-def _short(text: str, most: int = 40) -> str:
-    return text if len(text) <= most else text[:most] + "..."

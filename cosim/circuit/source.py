@@ -13,7 +13,7 @@ import time
 from collections import OrderedDict
 from dataclasses import dataclass
 
-from cosim.circuit.deck import DeckFile, SourceLine
+from cosim.circuit.deck import DeckFile, SourceLine, shortened
 from cosim.errors import DeckError, ForbiddenDeckError, MissingFileError, UnsupportedDeckError
 
 LARGEST_FILE = 64 * 2**20  # byte; the largest process kits seen hold about 10 MB per file.
@@ -394,6 +394,6 @@ class _Splitter:
 
 
 def _words(commands: list[str], most: int = 12) -> str:
-    words = [line.split(None, 1)[0] for line in commands if line.split()]
+    words = [shortened(line.split(None, 1)[0]) for line in commands if line.split()]
     names = list(dict.fromkeys(words))
     return ", ".join(names[:most]) + (", ..." if len(names) > most else "")

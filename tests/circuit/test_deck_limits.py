@@ -93,6 +93,7 @@ def test_a_resistor_of_many_zeros_is_judged_in_one_pass() -> None:
 
 
 LONG = "n" * 10_000
+SHORT_RUN = TransientRequest(stop=1e-9, step=1e-11)
 CIRCUIT = "v1 a 0 1\nr1 a 0 1\n"
 
 
@@ -116,6 +117,7 @@ CIRCUIT = "v1 a 0 1\nr1 a 0 1\n"
         lambda: deck_from_text(f"t\n{CIRCUIT}.lib {LONG}\n"),
         lambda: deck_from_text(f"t\n{CIRCUIT}.include {LONG}\n", folder="."),
         lambda: deck_from_text(f"t\n{CIRCUIT}", compatibility=LONG),
+        lambda: prepare(deck_from_text(f"t\n{CIRCUIT}.model {LONG} {LONG}\n"), SHORT_RUN),
     ],
 )
 def test_no_message_quotes_a_long_text_in_full(fault: Callable[[], object]) -> None:
@@ -144,11 +146,10 @@ def test_long_probes_take_one_pass_and_have_an_end() -> None:
 
 
 def test_a_dialect_for_includes_only_is_said_to_reach_further() -> None:
-    request = TransientRequest(stop=1e-9, step=1e-11)
     for mode, sent in (("ps", "psa"), ("hs", "hsa")):
-        prepared = prepare(deck_from_text(f"t\n{CIRCUIT}", compatibility=mode), request)
+        prepared = prepare(deck_from_text(f"t\n{CIRCUIT}", compatibility=mode), SHORT_RUN)
         assert prepared.commands[0] == f"set ngbehavior={sent}"
         assert [note for note in prepared.notices if f"'{mode}' is sent as '{sent}'" in note]
     for mode in ("psa", "all", "spe", None):
-        prepared = prepare(deck_from_text(f"t\n{CIRCUIT}", compatibility=mode), request)
+        prepared = prepare(deck_from_text(f"t\n{CIRCUIT}", compatibility=mode), SHORT_RUN)
         assert prepared.notices == ()
