@@ -41,12 +41,29 @@ def edited_lines(deck: Deck, edits: Mapping[str, Edit]) -> tuple[SourceLine, ...
     tree = _Wish()
     for path, edit in edits.items():
         at = tree
-        for part in path.strip().lower().split("."):
+        for part in _parts(structure, path.strip().lower()):
             at = at.inner.setdefault(part, _Wish())
         at.edits.append(edit)
     change = _Change(structure, deck.path)
     change.apply(structure.root, tree, "")
     return change.render(0, len(deck.lines))
+
+
+def _parts(structure: Structure, path: str) -> list[str]:
+    """Cut a path at its dots, but for those that belong to the name of an element."""
+    scope: Scope | None = structure.root
+    parts: list[str] = []
+    rest = path.split(".")
+    while rest and scope is not None:
+        heads = (".".join(rest[:count]) for count in range(1, len(rest) + 1))
+        name = next((head for head in heads if head in scope.elements), None)
+        if name is None:
+            break
+        line = structure.lines[scope.elements[name][0]]
+        scope = scope.subcircuit(element_of(scope, line.text).reference)
+        parts.append(name)
+        rest = rest[name.count(".") + 1 :]
+    return parts + rest
 
 
 @dataclass(slots=True)

@@ -356,6 +356,17 @@ def test_a_value_beside_a_model_or_as_a_bare_parameter(
     np.testing.assert_allclose(got, wanted, rtol=0, atol=ROUNDING)
 
 
+def test_names_with_dots_lead_to_their_instances() -> None:
+    body = "X.1 a s\nxb a s\n.subckt s a\nr.2 a 0 1k\nx.y a h\n.ends\n"
+    body += ".subckt h a\nr1 a 0 1k\n.ends\n"
+    deck = deck_from_text(f"t\nv1 a 0 1\n{body}")
+    altered = with_instances(deck, {"x.1.R.2": {"r": 5}, "x.1.x.y.r1": {"r": 7}})
+    texts = {line.text for line in altered.lines}
+    assert {"r.2 a 0 5.0", "r1 a 0 7.0", "r.2 a 0 1k", "r1 a 0 1k"} <= texts
+    with pytest.raises(UnknownNameError, match=r"'x\.1\.r9' does not exist"):
+        with_instances(deck, {"x.1.r9": {"r": 5}})
+
+
 def test_all_digits_of_a_value_reach_the_deck() -> None:
     deck = deck_from_text("t\n.param a=1 b={a}\nr1 x 0 {a}\n")
     value = 0.1 + 0.2
