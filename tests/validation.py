@@ -144,7 +144,8 @@ def table(rows: Iterable[Row]) -> str:
         "Agreement is the number of digits, floor(-log10 |got/expected - 1|), at most "
         f"{MOST_DIGITS} and at most those that the expected value carries; the absolute "
         "difference where zero is expected. Where it is low, the comment beside the check in the "
-        "test names what the formula leaves out, mostly the counter-rotating part of the drive. "
+        "test names what the formula leaves out, mostly the counter-rotating part of the drive or the "
+        "next order of a series. "
         f"Numbers are rounded to {SHOWN_DIGITS} digits.",
     ]
     for topic in TOPICS:

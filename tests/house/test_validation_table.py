@@ -1,5 +1,6 @@
 """Oracle: rows and sessions whose table is known beforehand, through pytest-xdist as well."""
 
+import re
 import subprocess
 import sys
 from dataclasses import replace
@@ -102,3 +103,17 @@ def test_a_session_writes_its_table_only_if_it_passes(tmp_path: Path, workers: l
     text = path.read_text(encoding="utf-8")
     assert "| A01 | one | a book | 1 | 1.001 | 3 | test_module.py |" in text
     assert "|  | two | a book | 2 | 2 | exact | test_module.py |" in text
+
+
+def test_the_committed_table_names_every_check_value_of_the_tests() -> None:
+    """A table left over from before a check was added, renamed or removed."""
+    tests = Path(__file__).parents[1]
+    named = {
+        card
+        for path in tests.rglob("test_*.py")
+        if path != Path(__file__)
+        for card in re.findall(r'card="([A-Z]\d\d)"', path.read_text(encoding="utf-8"))
+    }
+    committed = (tests / "VALIDATION.md").read_text(encoding="utf-8")
+    assert named == set(re.findall(r"^\| ([A-Z]\d\d) \|", committed, re.MULTILINE))
+    assert len(named) > 40
