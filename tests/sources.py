@@ -16,6 +16,10 @@ ALLEN_EBERLY = (
     "L. Allen, J. H. Eberly, Optical Resonance and Two-Level Atoms (1975), area of a pulse, "
     f"{MEMORY}"
 )
+BLANES = (
+    'S. Blanes, F. Casas, J. Ros, "Improved high order integrators based on the Magnus expansion", '
+    f"BIT 40, 434 (2000), method of sixth order, {MEMORY}"
+)
 BLOCH = f'F. Bloch, "Nuclear induction", Phys. Rev. 70, 460 (1946), {MEMORY}'
 BLOCH_SIEGERT = (
     'F. Bloch, A. Siegert, "Magnetic resonance for nonrotating fields", Phys. Rev. 57, 522 (1940); '

@@ -137,15 +137,15 @@ def table(rows: Iterable[Row]) -> str:
         "",
         "Made by `bash tests/run.sh`, which runs every check below; do not edit by hand.",
         "",
-        f"{len(kept)} checks against numbers from outside the project, {len(cards)} of them named "
-        "check values (a letter and a number, which also stand in the test). "
+        f"{len(kept)} checks against numbers from outside the project, among them {len(cards)} "
+        "named check values (a letter and a number, which also stand in the test). "
         f"Lowest agreement: {lowest} digit{'s' * (lowest != 1)}.",
         "",
         "Agreement is the number of digits, floor(-log10 |got/expected - 1|), at most "
         f"{MOST_DIGITS} and at most those that the expected value carries; the absolute "
         "difference where zero is expected. Where it is low, the comment beside the check in the "
-        "test names what the formula leaves out, mostly the counter-rotating part of the drive or the "
-        "next order of a series. "
+        "test names what the formula leaves out, mostly the counter-rotating part of the drive or "
+        "the next order of a series. "
         f"Numbers are rounded to {SHOWN_DIGITS} digits.",
     ]
     for topic in TOPICS:

@@ -113,8 +113,7 @@ class TestOrder:
         assert errors[-1] > 1e-12  # Well above rounding.
         for count, got in zip((16, 32), orders, strict=True):
             quantity = f"order of the kernel's steps, {levels} levels, {count} to {2 * count} steps"
-            source = "order of the kernel's method, by step halving; " + sources.RICHARDSON
-            validate(quantity, source, 6.0, float(got), abs=0.3, digits=12)
+            validate(quantity, sources.BLANES, 6.0, float(got), abs=0.3, digits=12)
 
     def test_step_estimate_falls_with_the_steps(self) -> None:
         qubit = Qubit(CARRIER, 3, -0.3e9, 10e-6, 10e-6)
