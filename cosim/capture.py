@@ -15,6 +15,7 @@ from cosim.circuit.confidential import (
     withhold,
 )
 from cosim.circuit.deck import shortened
+from cosim.circuit.mismatch import Shift, with_mismatch
 from cosim.circuit.netlist import (
     Deck,
     DeckFile,
@@ -130,28 +131,10 @@ def make_plan(bench: Testbench) -> Plan:
     """
     table = netlist_of(bench)
     folder = Path(bench.folder)
-    include_paths = tuple(
-        str(_under(folder, path, "include_paths")) for path in table.include_paths
-    )
-    if bench.circuit:
-        deck = deck_from_text(
-            bench.circuit,
-            name=table.file,
-            folder=folder,
-            include_paths=include_paths,
-            sections=table.sections,
-            compatibility=table.compatibility,
-        )
-    else:
-        deck = load_deck(
-            _short(_under(folder, table.file, "file")),
-            include_paths=include_paths,
-            sections=table.sections,
-            compatibility=table.compatibility,
-        )
+    deck = read_deck(bench)
     roots = confidential_roots([str(_under(folder, p, "confidential")) for p in table.confidential])
     check_roots(deck, roots)  # Before names are looked up in lines that are cut in two.
-    deck = with_instances(with_parameters(deck, table.parameters), table.instances)
+    deck = altered_deck(bench, deck)
     stop = _stop(table, deck)
     check_window(bench, stop)
     step, notices = _step(bench, table, deck)
@@ -175,6 +158,75 @@ def make_plan(bench: Testbench) -> Plan:
     carrier = drive.carrier if isinstance(drive.carrier, float) else math.nan
     notices = (*withheld, *loaded, *notices)
     return Plan(deck, probes, carrier, drive.probe is None, request, notices, roots, table.save)
+
+
+def read_deck(bench: Testbench) -> Deck:
+    """Read the deck of a testbench with the sections that it names; nothing else is changed.
+
+    Parameters
+    ----------
+    bench : Testbench
+        The testbench.
+
+    Returns
+    -------
+    Deck
+        The deck with its includes.
+
+    Raises
+    ------
+    DeckError, TestbenchError
+        If it cannot be read, or the testbench has no netlist.
+    """
+    table = netlist_of(bench)
+    folder = Path(bench.folder)
+    include_paths = tuple(
+        str(_under(folder, path, "include_paths")) for path in table.include_paths
+    )
+    if bench.circuit:
+        return deck_from_text(
+            bench.circuit,
+            name=table.file,
+            folder=folder,
+            include_paths=include_paths,
+            sections=table.sections,
+            compatibility=table.compatibility,
+        )
+    return load_deck(
+        _short(_under(folder, table.file, "file")),
+        include_paths=include_paths,
+        sections=table.sections,
+        compatibility=table.compatibility,
+    )
+
+
+def altered_deck(bench: Testbench, deck: Deck) -> Deck:
+    """Apply a testbench's parameters, instances and mismatch to its deck.
+
+    Parameters
+    ----------
+    bench : Testbench
+        The testbench.
+    deck : Deck
+        From `read_deck`.
+
+    Returns
+    -------
+    Deck
+        The altered deck.
+
+    Raises
+    ------
+    DeckError, InputError
+        If a parameter, instance or transistor does not exist, or a value is impossible.
+    """
+    table = netlist_of(bench)
+    deck = with_instances(with_parameters(deck, table.parameters), table.instances)
+    shifts = {
+        path: Shift(values.get("threshold", 0.0), values.get("current_factor", 1.0))
+        for path, values in table.mismatch.items()
+    }
+    return with_mismatch(deck, shifts)
 
 
 def netlist_of(bench: Testbench) -> NetlistTable:

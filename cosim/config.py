@@ -62,13 +62,23 @@ class Quantity:
             words = " or ".join(f'"{word}"' for word in self.words)
             message = f"{error.message}; {words} may stand here too"
             raise UnitError(message, hint=error.hint) from None
-        if self.least is not None and number < self.least:
-            raise UnitError(f"wanted at least {self.least:g} {self.unit}, got {value!r}")
-        if self.most is not None and number > self.most:
-            raise UnitError(f"wanted at most {self.most:g} {self.unit}, got {value!r}")
-        if self.above is not None and number <= self.above:
-            raise UnitError(f"wanted more than {self.above:g} {self.unit}, got {value!r}")
+        self.check(number, repr(value))
         return number
+
+    def check(self, number: float, written: str) -> None:
+        """Hold a number against the limits; `written` is what the message quotes.
+
+        Raises
+        ------
+        UnitError
+            If it lies outside of them.
+        """
+        if self.least is not None and number < self.least:
+            raise UnitError(f"wanted at least {self.least:g} {self.unit}, got {written}")
+        if self.most is not None and number > self.most:
+            raise UnitError(f"wanted at most {self.most:g} {self.unit}, got {written}")
+        if self.above is not None and number <= self.above:
+            raise UnitError(f"wanted more than {self.above:g} {self.unit}, got {written}")
 
     def __get_pydantic_core_schema__(
         self, source: object, handler: GetCoreSchemaHandler
@@ -155,7 +165,7 @@ class NameOrTable:
             if key not in fields:
                 raise UnitError(f"unknown key '{key}'; {near_names(key, fields)}")
         hints = get_type_hints(self.cls, include_extras=True)
-        values = {key: _read_value(hints[key], item, "here", key) for key, item in value.items()}
+        values = {key: read_value(hints[key], item, "here", key) for key, item in value.items()}
         missing = [key for key in fields if key not in value]
         if missing:
             raise UnitError(f"the key '{missing[0]}' is missing")
@@ -258,7 +268,7 @@ def read_table(
         if required and item.name not in table:
             raise TestbenchError(f"{where}: the key '{item.name}' is missing")
     hints = get_type_hints(cls, include_extras=True)
-    values = {key: _read_value(hints[key], value, where, key) for key, value in table.items()}
+    values = {key: read_value(hints[key], value, where, key) for key, value in table.items()}
     try:
         return cls(**values)
     except InputError as error:
@@ -283,7 +293,28 @@ def numbered(file: str, name: str, number: int) -> str:
     return f"{file}, table [[{name}]] number {number}"
 
 
-def _read_value(hint: Any, value: object, where: str, key: str) -> Any:
+def read_value(hint: Any, value: object, where: str, key: str) -> Any:
+    """Turn one value of the file into what a field's annotation says.
+
+    Parameters
+    ----------
+    hint : type
+        The annotation, with its extras.
+    value : object
+        The value as tomllib gives it.
+    where, key : str
+        File and table, and key, for messages.
+
+    Returns
+    -------
+    object
+        In SI units.
+
+    Raises
+    ------
+    TestbenchError
+        If the value does not fit; it names the key.
+    """
     try:
         return TypeAdapter(hint).validate_python(_frozen(value), strict=True)
     except ValidationError as error:
@@ -314,7 +345,8 @@ def write_tables(title: str, tables: Mapping[str, object]) -> str:
     title : str
         Value of the key `title`.
     tables : mapping
-        Table name to frozen dataclass, or to a tuple of them for an array of tables.
+        Table name to frozen dataclass, or to a tuple of them for an array of tables; a mapping is
+        written as it stands.
 
     Returns
     -------
@@ -325,6 +357,8 @@ def write_tables(title: str, tables: Mapping[str, object]) -> str:
     for name, table in tables.items():
         if isinstance(table, tuple):
             written[name] = [_written_table(item) for item in table]
+        elif isinstance(table, Mapping):
+            written[name] = table
         else:
             written[name] = _written_table(table)
     return tomli_w.dumps(written)

@@ -16,6 +16,7 @@ PositiveFrequency = Annotated[float, Quantity("Hz", above=0.0)]
 Resistance = Annotated[float, Quantity("ohm", least=1e-3)]
 Temperature = Annotated[float, Quantity("K", above=0.0)]
 ParameterValue = Annotated[float, Parameter()]
+ShiftName = Literal["threshold", "current_factor"]
 
 
 @dataclass(frozen=True, slots=True)
@@ -42,6 +43,8 @@ class NetlistTable:
         several sections of it, to a mapping from those to others.
     instances : mapping
         Instance path to parameters of that one instance, in SI units.
+    mismatch : mapping
+        MOS transistor ("m1", "x1.m3") to its `threshold` shift in V and its `current_factor`.
     initial : "op", "uic" or None
         Start from the operating point or from the initial conditions; default: as the deck.
     include_paths : tuple of str
@@ -67,6 +70,7 @@ class NetlistTable:
     parameters: dict[str, ParameterValue] = field(default_factory=dict)
     sections: dict[str, str | dict[str, str]] = field(default_factory=dict)
     instances: dict[str, dict[str, ParameterValue]] = field(default_factory=dict)
+    mismatch: dict[str, dict[ShiftName, ParameterValue]] = field(default_factory=dict)
     initial: Literal["op", "uic"] | None = None
     include_paths: tuple[str, ...] = ()
     confidential: tuple[str, ...] = ()

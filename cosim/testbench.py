@@ -1,8 +1,9 @@
 """The testbench: a TOML file, or the same tables from Python, checked and in SI units."""
 
+import copy
 import os
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
@@ -20,6 +21,9 @@ from cosim.schema import (
 )
 from cosim.stimuli import Stimulus, read_stimuli
 
+# Tables of the studies: each study reads its own, when it is asked for.
+STUDIES = ("sweep",)
+
 
 @dataclass(frozen=True, slots=True)
 class Testbench:
@@ -35,6 +39,8 @@ class Testbench:
         The other tables, in SI units.
     stimulus : tuple of Stimulus
         The tables [[stimulus]], in SI units; only with a netlist.
+    sweep : mapping
+        The table [sweep] as it was given; `cosim.sweep.table` reads it.
     folder : str
         Folder that the paths in the tables are relative to.
     source : str
@@ -53,14 +59,15 @@ class Testbench:
     gate: GateTable
     accuracy: AccuracyTable
     stimulus: tuple[Stimulus, ...] = ()
+    sweep: Mapping[str, Any] = field(default_factory=dict)
     folder: str = "."
     source: str = ""
     circuit: str = ""
 
     def to_toml(self) -> str:
         """Write the testbench as a TOML text that gives the same run again."""
-        tables = {name: getattr(self, name) for name in (*TABLES, "stimulus")}
-        given = {name: table for name, table in tables.items() if table not in (None, ())}
+        tables = {name: getattr(self, name) for name in (*TABLES, "stimulus", *STUDIES)}
+        given = {name: table for name, table in tables.items() if table not in (None, (), {})}
         return write_tables(self.title, given)
 
 
@@ -112,10 +119,11 @@ def make_testbench(tables: Mapping[str, Any], *, folder: str | os.PathLike[str] 
 
 def _build(tables: Mapping[str, Any], *, file: str, folder: str) -> Testbench:
     label = file or "the testbench"
+    known = (*TABLES, "stimulus", *STUDIES)
     for name in tables:
-        if isinstance(tables[name], Mapping) and name not in (*TABLES, "stimulus"):
-            raise TestbenchError(f"{label}: unknown table [{name}]; {near_names(name, TABLES)}")
-    check_keys(tables, ["title", "stimulus", *TABLES], label)
+        if isinstance(tables[name], Mapping) and name not in known:
+            raise TestbenchError(f"{label}: unknown table [{name}]; {near_names(name, known)}")
+    check_keys(tables, ["title", *known], label)
     title = tables.get("title", "")
     if not isinstance(title, str):
         raise TestbenchError(f"{label}: 'title' is a text, got {title!r}")
@@ -143,8 +151,17 @@ def _build(tables: Mapping[str, Any], *, file: str, folder: str) -> Testbench:
         raise TestbenchError(
             f"{label}: a table [[stimulus]] drives a source of a deck, but there is no [netlist]"
         )
+    sweep = tables.get("sweep", {})
+    if not isinstance(sweep, Mapping):
+        raise TestbenchError(f"{label}: wanted a table [sweep], got {sweep!r}")
     return Testbench(
-        title=title, **parts, stimulus=stimulus, folder=folder, source=file, circuit=circuit
+        title=title,
+        **parts,
+        stimulus=stimulus,
+        sweep=copy.deepcopy(dict(sweep)),
+        folder=folder,
+        source=file,
+        circuit=circuit,
     )
 
 

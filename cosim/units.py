@@ -37,6 +37,8 @@ _WHAT = {
     "dB": ("a ratio in decibels", "20 dB"),
     "rad": ("an angle", "90 deg"),
     "m": ("a length", "2 um"),
+    "V m": ("a voltage times a length", "3.5 mV um"),
+    "1 m": ("a ratio times a length", "1 % um"),
 }
 
 
@@ -52,6 +54,14 @@ def _spellings(unit: str) -> Iterator[str]:
         for top in _spellings("Hz"):
             for bottom in _spellings("V"):
                 yield f"{top}/{bottom}"
+    elif unit == "V m":
+        # With a space, since "mVum" could be cut in more than one place.
+        for voltage in _spellings("V"):
+            for length in _spellings("m"):
+                yield f"{voltage} {length}"
+    elif unit == "1 m":
+        for length in _spellings("m"):
+            yield from (length, f"% {length}")
     elif unit == "rad":
         yield from ("rad", "mrad", "deg")
     else:
@@ -73,6 +83,11 @@ def _registry() -> "pint.UnitRegistry[float]":
 
 @cache
 def _factor(spelling: str, unit: str) -> float:
+    if unit in ("V m", "1 m"):
+        first, space, length = spelling.rpartition(" ")
+        if unit == "1 m":
+            return (0.01 if space else 1.0) * _factor(length, "m")
+        return _factor(first, "V") * _factor(length, "m")
     registry = _registry()
     quantity = registry.Quantity(1.0, registry.parse_units(spelling.replace("µ", "u")))
     return float(quantity.to(unit).magnitude)
@@ -106,7 +121,8 @@ def parse_quantity(text: object, unit: str) -> float:
     text : str
         For instance "10 ns". A bare number is an error unless `unit` is "1".
     unit : str
-        The unit wanted: "s", "Hz", "V", "A", "ohm", "K", "Hz/V", "dB", "rad", "m", or "1".
+        The unit wanted: "s", "Hz", "V", "A", "ohm", "K", "Hz/V", "dB", "rad", "m",
+        "V m", "1 m" (a ratio times a length), or "1".
 
     Returns
     -------

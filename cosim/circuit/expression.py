@@ -132,17 +132,25 @@ class Parameters:
         Parameter name in lower case -> the text of its value, without quotes or braces.
     functions : mapping of str to (tuple of str, str)
         Name in lower case -> names of the arguments, text of the body.
+    outer : Parameters or None
+        Where names are looked up that are not among these; None at the top level.
     """
 
     def __init__(
         self,
         expressions: Mapping[str, str],
         functions: Mapping[str, tuple[tuple[str, ...], str]],
+        outer: "Parameters | None" = None,
     ) -> None:
         self.expressions = expressions
         self._functions = functions
+        self._outer = outer
         self._known: dict[str, float | None] = {}
-        self._depth = _Depth()
+        self._depth: _Depth = _Depth() if outer is None else outer._depth
+
+    def inside(self, expressions: Mapping[str, str]) -> "Parameters":
+        """Give the parameters of a subcircuit instance, which also sees those around it."""
+        return Parameters(expressions, self._functions, self)
 
     def value(self, text: str) -> float | None:
         """Work out an expression; None when its value cannot be told."""
@@ -161,7 +169,9 @@ class Parameters:
             return local[name]
         if name not in self._known:
             if name not in self.expressions:
-                raise _NoValueError
+                if self._outer is None:
+                    raise _NoValueError
+                return self._outer._name(name, {})
             self._known[name] = None  # A parameter that needs itself has no value.
             try:
                 self._known[name] = self._evaluate(strip_quotes(self.expressions[name]), {})

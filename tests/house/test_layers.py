@@ -39,6 +39,7 @@ FLOORS = {
     "probe_run": 5,
     "comparison": 5,
     "exporting": 5,
+    "sweep": 5,
     "line": 4,
     "checks": 6,
     "terminal": 6,
@@ -99,7 +100,7 @@ def test_every_room_has_a_floor() -> None:
     assert {room(file) for file in FILES} - {"__init__"} == set(FLOORS)
 
 
-@pytest.mark.parametrize("wing", ["circuit", "dsp", "formats", "quantum"])
+@pytest.mark.parametrize("wing", ["circuit", "dsp", "formats", "quantum", "sweep"])
 def test_a_wings_init_holds_a_docstring_only(wing: str) -> None:
     body = ast.parse((PACKAGE / wing / "__init__.py").read_text(encoding="utf-8")).body
     assert len(body) == 1
