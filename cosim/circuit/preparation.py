@@ -95,7 +95,9 @@ def prepare(deck: Deck, request: TransientRequest) -> PreparedDeck:
     body.append(_own_line(".end"))
     check_lines(body)
     mode = _flat_mode(deck.compatibility)
-    if mode != (deck.compatibility or ""):
+    if mode != (deck.compatibility or "") and ("ps" in mode or "lt" in mode):
+        # The other dialects translate no lines: their "a" makes no difference (recalled from
+        # memory of ngspice's source).
         notices.append(
             f"compatibility mode '{deck.compatibility}' is sent as '{mode}': one list without "
             f"includes is sent, so ngspice reads all lines in the dialect, where in mode "

@@ -146,10 +146,10 @@ def test_long_probes_take_one_pass_and_have_an_end() -> None:
 
 
 def test_a_dialect_for_includes_only_is_said_to_reach_further() -> None:
-    for mode, sent in (("ps", "psa"), ("hs", "hsa")):
+    for mode, sent in (("ps", "psa"), ("lt", "lta")):
         prepared = prepare(deck_from_text(f"t\n{CIRCUIT}", compatibility=mode), SHORT_RUN)
         assert prepared.commands[0] == f"set ngbehavior={sent}"
         assert [note for note in prepared.notices if f"'{mode}' is sent as '{sent}'" in note]
-    for mode in ("psa", "all", "spe", None):
+    for mode in ("psa", "all", "spe", "hs", None):
         prepared = prepare(deck_from_text(f"t\n{CIRCUIT}", compatibility=mode), SHORT_RUN)
         assert prepared.notices == ()
