@@ -96,8 +96,8 @@ def prepare(deck: Deck, request: TransientRequest) -> PreparedDeck:
     check_lines(body)
     mode = _flat_mode(deck.compatibility)
     if mode != (deck.compatibility or "") and ("ps" in mode or "lt" in mode):
-        # The other dialects translate no lines: their "a" makes no difference (recalled from
-        # memory of ngspice's source).
+        # Measured on ngspice 39: of fourteen constructs the "a" changes three in "ps" and none in
+        # "hs", "ki" and "spe"; that "lt" translates lines too is recalled from memory.
         notices.append(
             f"compatibility mode '{deck.compatibility}' is sent as '{mode}': one list without "
             f"includes is sent, so ngspice reads all lines in the dialect, where in mode "
