@@ -55,7 +55,8 @@ def test_a_line_of_known_loss_and_delay(make_bench: BenchMaker, tmp_path: Path) 
     assert result.rotation.axis[0] == pytest.approx(-direct.rotation.axis[0], abs=1e-5)
     assert result.free_frame.average_gate_fidelity == pytest.approx(
         # The angle's own tolerance, at a gate that is off by some degrees.
-        direct.free_frame.average_gate_fidelity, abs=1e-6
+        direct.free_frame.average_gate_fidelity,
+        abs=1e-6,
     )
     assert result.pulse.start - direct.pulse.start == pytest.approx(DELAY, abs=1e-12)
     assert "probe" in result.extra
