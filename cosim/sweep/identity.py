@@ -1,0 +1,149 @@
+"""What a run is: hashes of all that determines its result, and of what determines its waveform.
+
+A hash is taken over a canonical JSON text: the flat testbench, the SHA-256 of every file that it
+reads, the mismatch by its constants, seed and sample, and the version of the archive's schema. It
+does not depend on the process, the folder, or on what else the sweep holds.
+"""
+
+import hashlib
+import json
+from collections.abc import Mapping
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+from cosim.archive.layout import SCHEMA_VERSION
+from cosim.circuit.deck import Deck
+from cosim.errors import TestbenchError
+from cosim.testbench import Testbench
+
+# Names and places of files, whose content counts, and what bears on no number: the wall-clock
+# limit of a run that ended, and how much of the deck its record keeps.
+_IGNORED = frozenset(
+    {
+        "netlist.file",
+        "netlist.include_paths",
+        "netlist.confidential",
+        "netlist.time_limit",
+        "waveform.file",
+        "drive.line",
+    }
+)
+# The keys besides those of the netlist, the stimuli and the imported waveform that say what is
+# simulated: the probe's load, the carrier, from which the time step follows, and whether there is
+# a second run.
+_OF_WAVEFORM = frozenset(
+    {
+        "drive.probe",
+        "drive.i",
+        "drive.q",
+        "drive.termination",
+        "drive.carrier",
+        "accuracy.floor",
+    }
+)
+_WAVEFORM_TABLES = frozenset({"netlist", "stimulus", "waveform"})
+
+
+@dataclass(frozen=True, slots=True)
+class Files:
+    """SHA-256 of the files that a testbench reads.
+
+    Parameters
+    ----------
+    waveform : mapping
+        Role -> SHA-256 of each, in order: the deck with its includes and data, the stimuli, an
+        imported waveform.
+    line : tuple of str
+        The Touchstone file of the line; empty without one.
+    """
+
+    waveform: Mapping[str, tuple[str, ...]]
+    line: tuple[str, ...]
+
+
+def files_of(bench: Testbench, deck: Deck | None) -> Files:
+    """Hash the files that a testbench reads.
+
+    Parameters
+    ----------
+    bench : Testbench
+        The testbench.
+    deck : Deck or None
+        Its deck as read; None when it imports a waveform.
+
+    Returns
+    -------
+    Files
+
+    Raises
+    ------
+    TestbenchError
+        If a file cannot be read.
+    """
+    waveform: dict[str, tuple[str, ...]] = {}
+    if deck is not None:
+        data = tuple(file.sha256 for file in deck.data_files)
+        waveform["deck"] = (*(file.sha256 for file in deck.files), *data)
+    if bench.waveform is not None:
+        waveform["waveform"] = (_sha256(bench, bench.waveform.file),)
+    for number, stimulus in enumerate(bench.stimulus, start=1):
+        name = getattr(stimulus, "file", None)
+        if name is not None:
+            waveform[f"stimulus.{number}"] = (_sha256(bench, name),)
+    line = () if bench.drive.line is None else (_sha256(bench, bench.drive.line),)
+    return Files(waveform, line)
+
+
+def _sha256(bench: Testbench, name: str) -> str:
+    path = Path(bench.folder) / Path(name).expanduser()
+    try:
+        return hashlib.sha256(path.read_bytes()).hexdigest()
+    except OSError as error:
+        raise TestbenchError(
+            f"{bench.source or 'the testbench'}: {path} cannot be read: {error.strerror}"
+        ) from None
+
+
+def identity_keys(
+    flat: Mapping[str, Any], files: Files, mismatch: Mapping[str, Any]
+) -> tuple[str, str, str]:
+    """Give the three hashes of a run.
+
+    Parameters
+    ----------
+    flat : mapping
+        The testbench, from `cosim.sweep.keys.flattened`, with the values of this run.
+    files : Files
+        The files that it reads.
+    mismatch : mapping
+        What the shifts of its transistors are drawn from; empty without mismatch.
+
+    Returns
+    -------
+    tuple of (str, str, str)
+        In hexadecimal: of all that determines the result; of what determines the waveform at the
+        probe; of the deck as read, without its parameters.
+    """
+    kept = {key: value for key, value in flat.items() if not _is_ignored(key)}
+    waveform = {key: value for key, value in kept.items() if _is_of_waveform(key)}
+    rest = {key: value for key, value in kept.items() if key not in waveform}
+    waveform_key = _hash([SCHEMA_VERSION, waveform, dict(files.waveform), dict(mismatch)])
+    identity = _hash([waveform_key, rest, files.line])
+    sections, mode = flat.get("netlist.sections"), flat.get("netlist.compatibility")
+    deck_key = _hash([SCHEMA_VERSION, files.waveform.get("deck", ()), sections, mode])
+    return identity, waveform_key, deck_key
+
+
+def _is_ignored(key: str) -> bool:
+    return key in _IGNORED or (key.startswith("stimulus.") and key.endswith(".file"))
+
+
+def _is_of_waveform(key: str) -> bool:
+    return key in _OF_WAVEFORM or key.partition(".")[0] in _WAVEFORM_TABLES
+
+
+def _hash(content: Any) -> str:
+    # Python writes the shortest digits that give a float back, the same on every platform.
+    text = json.dumps(content, sort_keys=True, separators=(",", ":"))
+    return hashlib.sha256(text.encode()).hexdigest()

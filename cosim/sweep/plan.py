@@ -1,0 +1,394 @@
+"""The plan of a sweep: the product of corners, grid and samples, run by run."""
+
+from collections.abc import Iterable, Iterator, Mapping
+from dataclasses import dataclass, field, replace
+from typing import Any
+
+import numpy as np
+
+from cosim.capture import altered_deck
+from cosim.circuit.deck import Deck
+from cosim.circuit.mismatch import Mosfet, mosfets
+from cosim.errors import TestbenchError, UnitError
+from cosim.sweep.axes import (
+    Axis,
+    Corner,
+    Perturbation,
+    read_axes,
+    read_corners,
+    read_perturbations,
+    read_variations,
+)
+from cosim.sweep.identity import identity_keys
+from cosim.sweep.keys import NumberKey, nominal, with_number
+from cosim.sweep.samples import (
+    Variation,
+    draw_mismatch,
+    mismatch_entries,
+    sample_seed,
+    unit_samples,
+)
+from cosim.sweep.table import SweepTable, read_sweep
+from cosim.testbench import Testbench
+from cosim.waveform import FloatArray
+
+# Functions whose values ngspice draws from the deck's seed.
+_RANDOM = ("gauss(", "unif(", "limit(")
+_SEED = NumberKey("netlist.seed", "netlist", "seed", whole=True)
+_MOST_KEPT = 64  # points of the grid and transistor lists that are kept for the next run
+
+Change = tuple[NumberKey, float]
+
+
+@dataclass(frozen=True, slots=True)
+class SweepRun:
+    """One run of a sweep.
+
+    Parameters
+    ----------
+    number : int
+        From 0, in the order of the plan.
+    identity : str
+        SHA-256 of all that determines its result, in hexadecimal: the same in every process, for
+        every sweep that holds the run.
+    seed : int
+        Its own seed, from the identity, 1 to 2^31 - 1.
+    values : mapping
+        "corner", dotted keys, "sample", "perturbed" -> name or number in SI units.
+    waveform_key : str
+        SHA-256 of what determines the circuit's waveform: runs that differ in the qubit, the line
+        behind the probe or the gate only share it.
+    deck_key : str
+        SHA-256 of the deck as read, without its parameters.
+    """
+
+    number: int
+    identity: str
+    seed: int
+    values: Mapping[str, float | str]
+    waveform_key: str
+    deck_key: str
+
+
+@dataclass(frozen=True, slots=True)
+class SweepPlan:
+    """All runs of a sweep; none of them is kept.
+
+    Samples are the same at every corner and every point of the grid, so that these differ by
+    nothing else.
+
+    Parameters
+    ----------
+    table : SweepTable
+        The table [sweep].
+    corners : tuple of Corner
+        The slowest axis.
+    axes : tuple of Axis
+        The grid, the last axis the fastest.
+    variations : tuple of Variation
+        What is drawn for each sample.
+    points : ndarray of float, shape (samples, len(variations))
+        The samples in the unit cube.
+    perturbations : tuple of Perturbation
+        What is moved one at a time in place of samples.
+    seeded : bool
+        Whether the deck has random functions of its own, which then get a seed per sample.
+    """
+
+    table: SweepTable
+    corners: tuple[Corner, ...]
+    axes: tuple[Axis, ...]
+    variations: tuple[Variation, ...]
+    points: FloatArray
+    perturbations: tuple[Perturbation, ...]
+    seeded: bool
+    _kept: dict[Any, Any] = field(default_factory=dict, compare=False, repr=False)
+
+    @property
+    def samples(self) -> int:
+        """Runs per point of corners and grid."""
+        if self.table.monte_carlo is not None:
+            return self.table.monte_carlo.runs
+        return 1 + 2 * len(self.perturbations)
+
+    @property
+    def columns(self) -> tuple[str, ...]:
+        """The keys of every run's `values`, in their order."""
+        return tuple(self.run(0).values)
+
+    def __len__(self) -> int:
+        count = len(self.corners) * self.samples
+        for axis in self.axes:
+            count *= len(axis.values)
+        return count
+
+    def __iter__(self) -> Iterator[SweepRun]:
+        return (self.run(number) for number in range(len(self)))
+
+    def run(self, number: int) -> SweepRun:
+        """Give one run.
+
+        Parameters
+        ----------
+        number : int
+            From 0 to the number of runs, not included.
+
+        Returns
+        -------
+        SweepRun
+
+        Raises
+        ------
+        IndexError
+            If there is no such run.
+        TestbenchError
+            If a drawn value lies outside of the limits of its number.
+        """
+        corner, grid, sample = self._place(number)
+        changes = [*grid, *self._changes(corner, grid, sample)]
+        values: dict[str, float | str] = {"corner": corner.name} if self.table.corners else {}
+        if self.perturbations:
+            centers = self._centers(corner, grid)
+            values |= {item.key.path: centers[item.key.path] for item in self.perturbations}
+            at = (sample - 1) // 2
+            values["perturbed"] = self.perturbations[at].key.path if sample else ""
+        values |= {key.path: value for key, value in changes}
+        mismatch: dict[str, Any] = {}
+        if self.table.monte_carlo is not None:
+            values["sample"] = sample
+            changes += self._seed(sample)
+            mismatch = self._mismatch(sample)
+        flat = {**corner.flat, **{key.path: value for key, value in changes}}
+        identity, waveform_key, deck_key = identity_keys(flat, corner.files, mismatch)
+        seed = 1 + int(identity[:16], 16) % (2**31 - 1)
+        return SweepRun(number, identity, seed, values, waveform_key, deck_key)
+
+    def testbench(self, run: SweepRun) -> Testbench:
+        """Give the testbench of one run, ready to be run.
+
+        Parameters
+        ----------
+        run : SweepRun
+            One of this plan.
+
+        Returns
+        -------
+        Testbench
+            With everything set and drawn; without [sweep].
+
+        Raises
+        ------
+        TestbenchError
+            If the values do not go together.
+        DeckError
+            If the size of a transistor cannot be told.
+        """
+        corner, grid, sample = self._place(run.number)
+        changes = [*grid, *self._changes(corner, grid, sample)]
+        if self.table.monte_carlo is not None:
+            changes += self._seed(sample)
+        bench = corner.bench
+        for key, value in changes:
+            bench = with_number(bench, key, value)
+        if self.table.mismatch is None or bench.netlist is None:
+            return bench
+        assert self.table.monte_carlo is not None  # `read_sweep` has seen to it.
+        shifts = draw_mismatch(
+            self.table.mismatch,
+            self._devices(corner, bench, changes),
+            self.table.monte_carlo.seed,
+            sample,
+        )
+        return replace(bench, netlist=replace(bench.netlist, mismatch=mismatch_entries(shifts)))
+
+    def groups(self, size: int, numbers: Iterable[int] | None = None) -> Iterator[tuple[int, ...]]:
+        """Put runs together that belong into one task.
+
+        Parameters
+        ----------
+        size : int
+            Runs per group at most.
+        numbers : iterable of int, optional
+            Which runs; default: all.
+
+        Yields
+        ------
+        tuple of int
+            Numbers of runs that share a deck; those that share a waveform stand side by side, and
+            in one group unless they are more than `size`.
+        """
+        decks: dict[str, dict[str, list[int]]] = {}
+        for number in range(len(self)) if numbers is None else numbers:
+            run = self.run(number)
+            decks.setdefault(run.deck_key, {}).setdefault(run.waveform_key, []).append(number)
+        for waveforms in decks.values():
+            group: list[int] = []
+            for members in waveforms.values():
+                if group and len(group) + len(members) > size:
+                    yield tuple(group)
+                    group = []
+                for start in range(0, len(members), size):
+                    group += members[start : start + size]
+                    if len(group) >= size:
+                        yield tuple(group)
+                        group = []
+            if group:
+                yield tuple(group)
+
+    def _place(self, number: int) -> tuple[Corner, tuple[Change, ...], int]:
+        """Give corner, values of the grid, and sample of a run."""
+        if not 0 <= number < len(self):
+            raise IndexError(f"the sweep has {len(self)} runs, there is no number {number}")
+        rest, sample = divmod(number, self.samples)
+        grid: list[Change] = []
+        for axis in reversed(self.axes):
+            rest, at = divmod(rest, len(axis.values))
+            grid.append((axis.key, axis.values[at]))
+        return self.corners[rest], tuple(reversed(grid)), sample
+
+    def _changes(self, corner: Corner, grid: tuple[Change, ...], sample: int) -> list[Change]:
+        """Give what a sample, or a perturbation, sets."""
+        centers = self._centers(corner, grid)
+        found: list[Change] = []
+        if self.perturbations and sample:
+            at, upward = divmod(sample - 1, 2)
+            moved = self.perturbations[at]
+            value = moved.moved(centers[moved.key.path], 1 if upward else -1)
+            found.append((moved.key, value))
+        for item, point in zip(self.variations, self.points[sample].tolist(), strict=True):
+            found.append((item.key, item.value(point, centers.get(item.key.path))))
+        try:
+            return [(key, key.checked(value)) for key, value in found]
+        except UnitError as error:
+            raise TestbenchError(
+                f"{corner.bench.source or 'the testbench'}, table [sweep], sample {sample}: "
+                f"{error.message}",
+                hint="narrow the distribution, or take one that keeps within the limits",
+            ) from None
+
+    def _centers(self, corner: Corner, grid: tuple[Change, ...]) -> dict[str, float]:
+        """Give the values at a point of the grid of what is drawn or moved around them."""
+        keys = [item.key for item in self.perturbations]
+        keys += [item.key for item in self.variations if item.center is None]
+        if not keys:
+            return {}
+        point = (corner.name, tuple(value for _, value in grid))
+        if point not in self._kept:
+            bench = corner.bench
+            for key, value in grid:
+                bench = with_number(bench, key, value)
+            found = {key.path: nominal(bench, corner.deck, key) for key in keys}
+            self._keep(point, {path: value for path, value in found.items() if value is not None})
+        centers: dict[str, float] = self._kept[point]
+        return centers
+
+    def _devices(
+        self, corner: Corner, bench: Testbench, changes: list[Change]
+    ) -> tuple[Mosfet, ...]:
+        """Give the transistors, whose sizes may follow from the parameters of the run."""
+        of_deck = [(key.path, value) for key, value in changes if key.item]
+        point = ("devices", corner.name, tuple(of_deck))
+        if point not in self._kept:
+            assert corner.deck is not None
+            self._keep(point, mosfets(altered_deck(bench, corner.deck)))
+        devices: tuple[Mosfet, ...] = self._kept[point]
+        return devices
+
+    def _keep(self, point: Any, content: Any) -> None:
+        if len(self._kept) >= _MOST_KEPT:
+            self._kept.clear()
+        self._kept[point] = content
+
+    def _seed(self, sample: int) -> list[Change]:
+        assert self.table.monte_carlo is not None
+        return [(_SEED, sample_seed(self.table.monte_carlo.seed, sample))] if self.seeded else []
+
+    def _mismatch(self, sample: int) -> dict[str, Any]:
+        """Give what the shifts of a sample follow from."""
+        if self.table.mismatch is None:
+            return {}
+        assert self.table.monte_carlo is not None
+        table = self.table.mismatch
+        return {
+            "threshold": table.threshold,
+            "current_factor": table.current_factor,
+            "per": table.per,
+            "seed": self.table.monte_carlo.seed,
+            "sample": sample,
+        }
+
+
+def make_sweep(bench: Testbench) -> SweepPlan:
+    """Make the plan of a testbench with a table [sweep]; nothing is simulated.
+
+    Parameters
+    ----------
+    bench : Testbench
+        The testbench.
+
+    Returns
+    -------
+    SweepPlan
+        The same testbench and files give the same plan in every process.
+
+    Raises
+    ------
+    TestbenchError
+        If a key or value of the table is wrong, or nothing would differ between runs.
+    DeckError
+        If a deck cannot be read, or a name in it does not exist.
+    """
+    table = read_sweep(bench)
+    where = f"{bench.source or 'the testbench'}, table [sweep]"
+    if bench.qubit.kind == "operators":
+        raise TestbenchError(
+            f"{where}: operators given in Python have no identity that a sweep could resume by",
+            hint="call cosim.run in a loop of your own",
+        )
+    corners = read_corners(bench, table)
+    axes = read_axes(corners, table)
+    variations = read_variations(corners, axes, table)
+    perturbations = read_perturbations(corners, axes, table)
+    seeded = any(_is_random(corner.deck) for corner in corners)
+    if table.mismatch is not None:
+        _check_mismatch(corners, where)
+    elif table.monte_carlo is not None and not variations and not seeded:
+        raise TestbenchError(
+            f"{where}: the samples of [sweep.monte_carlo] would all be the same",
+            hint="add [[sweep.monte_carlo.vary]] or [sweep.mismatch]",
+        )
+    points = np.empty((1 + 2 * len(perturbations), 0))
+    if table.monte_carlo is not None:
+        points = unit_samples(table.monte_carlo)
+    plan = SweepPlan(table, corners, axes, variations, points, perturbations, seeded)
+    _check_extremes(plan)
+    return plan
+
+
+def _is_random(deck: Deck | None) -> bool:
+    texts = (line.text.lower().replace(" ", "") for line in deck.lines) if deck else ()
+    return any(name in text for text in texts for name in _RANDOM)
+
+
+def _check_mismatch(corners: tuple[Corner, ...], where: str) -> None:
+    for corner in corners:
+        if corner.deck is None or corner.bench.netlist is None:
+            raise TestbenchError(f"{where}: there is no [netlist] whose transistors could mismatch")
+        if corner.bench.netlist.mismatch:
+            raise TestbenchError(
+                f"{where}: [netlist] has a mismatch of its own, which [sweep.mismatch] would undo"
+            )
+        if not mosfets(altered_deck(corner.bench, corner.deck)):
+            raise TestbenchError(f"{where}: {corner.deck.path} has no MOS transistors to mismatch")
+
+
+def _check_extremes(plan: SweepPlan) -> None:
+    """Look at the samples with the least and the greatest of each number, for their errors."""
+    if not plan.variations:
+        return
+    ends = {int(at) for at in (*plan.points.argmin(axis=0), *plan.points.argmax(axis=0))}
+    for start in range(0, len(plan), plan.samples):
+        for sample in sorted(ends):
+            plan.run(start + sample)
+        if start // plan.samples >= _MOST_KEPT:
+            break
