@@ -10,6 +10,7 @@ from collections.abc import Callable, Iterable, Iterator
 from concurrent.futures import BrokenExecutor, Executor, Future
 from contextlib import AbstractContextManager, ExitStack
 from dataclasses import dataclass
+from pickle import PicklingError
 from queue import Empty, SimpleQueue
 
 from cosim.errors import SimulationError
@@ -17,6 +18,8 @@ from cosim.sweep.batches import WORKER_DIED, Batch, Outcome, failed, perform
 
 # Enough that a worker never waits for the parent, and few enough that little is lost with it.
 PER_SLOT = 2
+
+RESUME_HINT = "see the scheduler's log; resume the sweep for what has not been reported"
 
 _Done = tuple[Outcome, ...]
 
@@ -138,10 +141,14 @@ class _Desk:
             # A worker died while nothing of ours was to blame; this batch has not been sent.
             (self.suspects if alone else self.again).appendleft(batch)
             return True
-        except Exception as error:
+        except (TypeError, AttributeError, PicklingError) as error:
             # Some executors pickle here. The fault then lands like one from a worker.
             future = Future()
             future.set_exception(error)
+        except Exception as error:
+            raise SimulationError(
+                f"the executor takes no more runs: {error}", hint=RESUME_HINT
+            ) from error
         self.flying[future] = batch
         future.add_done_callback(self.landed.put)
         return False
@@ -153,7 +160,7 @@ class _Desk:
             raise SimulationError(
                 f"the executor dropped {len(batch.tasks)} runs on their way, from run "
                 f"{batch.tasks[0].number} on: it was closed, or the connection to it was lost",
-                hint="see the scheduler's log; resume the sweep for what has not been reported",
+                hint=RESUME_HINT,
             )
         error = future.exception()
         if error is None:

@@ -5,7 +5,6 @@ import signal
 import subprocess
 import sys
 import textwrap
-import threading
 import time
 from collections.abc import Callable, Iterator
 from concurrent.futures import Executor, ThreadPoolExecutor
@@ -19,25 +18,10 @@ from cosim.errors import InputError, SimulationError
 from cosim.sweep.batches import Batch, Outcome
 from cosim.sweep.engine import PER_SLOT, Engine, run_batches
 from cosim.sweep.local import THREAD_VARIABLES, local_engine
-from tests.sweep.stubs import batches
+from tests.sweep.stubs import batches, sweep
 
 ROOT = Path(__file__).parents[2]
 PATIENCE = 60.0  # s to wait for an event of the system before the test fails
-
-
-def sweep(plan: list[Batch], engine: Engine) -> dict[int, Outcome]:
-    """Run a plan; every run is reported exactly once."""
-    seen: dict[int, Outcome] = {}
-    caller = threading.get_ident()
-
-    def note(outcome: Outcome) -> None:
-        assert threading.get_ident() == caller
-        assert outcome.number not in seen
-        seen[outcome.number] = outcome
-
-    run_batches(plan, engine, on_result=note)
-    assert sorted(seen) == sorted(task.number for batch in plan for task in batch.tasks)
-    return seen
 
 
 def statuses(outcomes: dict[int, Outcome]) -> list[str]:
@@ -70,6 +54,7 @@ def test_a_run_is_retried_before_it_is_blamed(tmp_path: Path) -> None:
     assert (tmp_path / "trace").read_text() == "xx"
 
 
+@pytest.mark.full
 def test_two_culprits_are_both_named() -> None:
     orders = [("kill", None), ("square", 2), ("square", 3), ("leave", None)]
     expected = ["worker_died", "done", "done", "worker_died"]
@@ -188,7 +173,7 @@ SCRIPT = """
     import signal
     from cosim.sweep.engine import run_batches
     from cosim.sweep.local import local_engine
-    from tests.sweep.stubs import batches
+    from tests.sweep.stubs import batches, sweep
 
     def note(outcome):
         print(outcome.number, outcome.status, flush=True)
