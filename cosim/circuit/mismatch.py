@@ -103,7 +103,8 @@ def mosfets(deck: Deck) -> tuple[Mosfet, ...]:
     Raises
     ------
     DeckError
-        If the size of a device cannot be told before the run.
+        If the size of a device cannot be told before the run, or a subcircuit instance with a
+        multiplier holds another one.
     """
     structure = structure_of(deck.lines)
     walk = _Walk(structure, _scale(structure))
@@ -186,6 +187,14 @@ class _Walk:
                     continue
                 definition = scope.subcircuit(element.reference)
                 if definition is not None:
+                    if multiplier is not None:
+                        raise DeckError(
+                            f"'{shortened(prefix[:-1])}' has a multiplier and holds a subcircuit "
+                            f"'{name}', which ngspice 39 multiplies in some decks only",
+                            hint="multiply the devices themselves, by a parameter",
+                            file=line.file,
+                            line=line.line,
+                        )
                     inner, units = self._inside(definition, line, parameters, multiplier)
                     yield from self.devices(definition, f"{prefix}{name}.", inner, units)
 
