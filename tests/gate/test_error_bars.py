@@ -48,7 +48,7 @@ def test_error_bars_cover_the_error(name: str) -> None:
     shots = [capture_probe(item) for item in (plan, half, half.half_step())]
     target = gate_target(bench)
     angle = rotation_of(nearest_unitary(pulses(bench, shots, 1.0)[0].channel())).angle
-    rough = target.angle / angle
+    rough = target.rotation.angle / angle
     perfect = rough * calibrate_pulse(pulses(bench, shots, rough)[0], target.unitary).scale
     for over_rotation in (1.0, 1.01):
         first, second, best = pulses(bench, shots, perfect * over_rotation)
