@@ -20,6 +20,9 @@ SYSTEMS = {"slurm": "SLURMCluster", "pbs": "PBSCluster", "lsf": "LSFCluster"}
 CONNECT_LIMIT = 30.0  # s for the scheduler to answer
 COUNT_INTERVAL = 2.0  # s after which the workers are counted again
 
+# Dask keeps the last thousand messages of every connection, decks included, for its developers.
+QUIET = {"distributed.admin.low-level-log-length": 0}
+
 # A run whose worker dies is repeated once by the scheduler, which then gives it up. Dask's own
 # default ends four workers before that.
 ALLOWED_FAILURES = 1
@@ -206,12 +209,13 @@ def _load(module: str) -> ModuleType:
 
 def _engine(where: Callable[[], AbstractContextManager[dict[str, Any]]], name: str) -> Engine:
     distributed = _load("distributed")
+    settings = _load("dask.config")
     killed = _load("distributed.scheduler").KilledWorker
     slots = _Slots()
 
     @contextmanager
     def open_client() -> Iterator[Executor]:
-        with where() as place:
+        with settings.set(QUIET), where() as place:
             try:
                 client = distributed.Client(**place, timeout=CONNECT_LIMIT, set_as_default=False)
             except (OSError, ValueError) as error:

@@ -80,6 +80,22 @@ def test_what_does_not_pickle_is_a_fault_of_its_run_alone(address: str) -> None:
     assert "pickle" in outcomes[2].error
 
 
+def test_decks_that_were_sent_are_not_kept(address: str) -> None:
+    me = psutil.Process()
+    sizes: dict[int, int] = {}
+
+    def note(outcome: Outcome) -> None:
+        assert outcome.status == "done"
+        if outcome.number in (101, 501):
+            sizes[outcome.number] = me.memory_info().rss
+
+    plan = batches([("square", k) for k in range(510)])
+    decks = (replace(batch, shared=os.urandom(100_000)) for batch in plan)
+    run_batches(decks, scheduler_engine(address), on_result=note)
+    # The 400 decks between are 40 MB; a tenth is for what the allocator keeps.
+    assert sizes[501] - sizes[101] < 4e6
+
+
 def test_workers_have_one_thread_for_linear_algebra(address: str) -> None:
     names = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS")
     outcomes = sweep(batches([("where", names)]), scheduler_engine(address))
