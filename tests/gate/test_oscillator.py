@@ -36,6 +36,16 @@ def test_the_extrapolated_frequency_is_that_of_a_much_smaller_step() -> None:
     assert result.numerical_floor < 1e-6
 
 
+@pytest.mark.ngspice
+@pytest.mark.full
+def test_the_carrier_of_the_modulators_own_output() -> None:
+    """Oracle: the deck's LO of 6.2 GHz; the estimate is promised within 1 kHz."""
+    bench = cosim.load_testbench(EXAMPLES / "x90_spin.toml")
+    found = estimate_carrier(capture_probe(make_plan(bench)).waveform)
+    assert found.frequency == pytest.approx(6.2e9, abs=1e3)
+    assert abs(found.frequency - 6.2e9) <= found.uncertainty
+
+
 LC = """an LC tank that rings down a little, driven by nothing
 l1 tank 0 1n ic=0
 c1 tank 0 1.0132118364233778p ic=1
