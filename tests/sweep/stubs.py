@@ -3,6 +3,7 @@
 import os
 import signal
 import sys
+import threading
 import time
 from collections.abc import Iterable
 from functools import partial
@@ -13,6 +14,7 @@ from cosim.circuit.deck import PreparedDeck
 from cosim.circuit.simulator import simulate_prepared
 from cosim.errors import ConvergenceError, SimulatorTimeoutError
 from cosim.sweep.batches import Batch, Outcome, Task, run_each
+from cosim.sweep.engine import Engine, run_batches
 
 
 def stub(shared: Any, arguments: Any) -> Any:
@@ -77,3 +79,18 @@ def batches(orders: Iterable[object], size: int = 1) -> list[Batch]:
     tasks = [Task(number, order) for number, order in enumerate(orders, 1)]
     work = partial(run_each, stub)
     return [Batch(work, tuple(tasks[k : k + size])) for k in range(0, len(tasks), size)]
+
+
+def sweep(plan: list[Batch], engine: Engine) -> dict[int, Outcome]:
+    """Run a plan; every run is reported exactly once."""
+    seen: dict[int, Outcome] = {}
+    caller = threading.get_ident()
+
+    def note(outcome: Outcome) -> None:
+        assert threading.get_ident() == caller
+        assert outcome.number not in seen
+        seen[outcome.number] = outcome
+
+    run_batches(plan, engine, on_result=note)
+    assert sorted(seen) == sorted(task.number for batch in plan for task in batch.tasks)
+    return seen
