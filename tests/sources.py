@@ -33,6 +33,7 @@ CUMMINS = (
     '"Tackling systematic errors in quantum logic gates with composite rotations", Phys. Rev. A '
     f"67, 042308 (2003), {MEMORY}"
 )
+EQUIPARTITION = "equipartition theorem, computed from the formula"
 FILTER_AREA = "linear filter and area theorem, computed from the formula"
 GAUSSIAN_INTEGRAL = "Gaussian integral, computed from the formula"
 GLAUBER = (
@@ -52,6 +53,11 @@ HORODECKI_NIELSEN = (
 ITT = (
     f"ITT, Reference Data for Radio Engineers, chapter on attenuators, {MEMORY}; computed from the "
     "formula"
+)
+JOHNSON_NYQUIST = (
+    'J. B. Johnson, "Thermal agitation of electricity in conductors", Phys. Rev. 32, 97 (1928); '
+    'H. Nyquist, "Thermal agitation of electric charge in conductors", Phys. Rev. 32, 110 (1928), '
+    f"{MEMORY}"
 )
 KRANTZ = (
     'P. Krantz et al., "A quantum engineer\'s guide to superconducting qubits", Appl. Phys. Rev. '
@@ -83,6 +89,10 @@ PAUL = (
 PEDERSEN = (
     'L. H. Pedersen, N. M. Moller, K. Molmer, "Fidelity of quantum operations", Phys. Lett. A 367, '
     f"47 (2007), {MEMORY}"
+)
+PELGROM = (
+    'M. J. M. Pelgrom, A. C. J. Duinmaijer, A. P. G. Welbers, "Matching properties of MOS '
+    f'transistors", IEEE J. Solid-State Circuits 24, 1433 (1989), {MEMORY}'
 )
 POZAR = f"D. M. Pozar, Microwave Engineering, {MEMORY}"
 RABI = (

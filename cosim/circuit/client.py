@@ -54,7 +54,7 @@ class Answer:
     log : list of str
         Lines of ngspice, each with "stdout " or "stderr " in front.
     vectors : dict of ndarray
-        Plot key -> values; "time" in s, the others in V or A.
+        Name in ngspice's plot -> values; "time" in s, "frequency" in Hz.
     done : dict or None
         Faults of load and run, names of new plots and vectors, wall time in s; None when the
         child did not come that far.
@@ -163,6 +163,7 @@ class Client:
         self,
         lines: Sequence[str],
         commands: Sequence[str],
+        plots: str,
         keys: Sequence[str],
         data: Mapping[str, bytes],
         time_limit: float,
@@ -182,6 +183,7 @@ class Client:
             "kind": "run",
             "lines": list(lines),
             "commands": list(commands),
+            "plots": plots,
             "keys": list(keys),
             "data": [[name, len(content)] for name, content in data.items()],
             "time_limit": time_limit,

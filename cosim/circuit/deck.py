@@ -135,7 +135,7 @@ class PreparedDeck:
     Parameters
     ----------
     lines : tuple of str
-        Title, options, circuit, `.save`, `.tran` and `.end`. A line with a data file holds
+        Title, options, circuit, `.save`, the analysis and `.end`. A line with a data file holds
         "{scratch}/name"; the host fills in its scratch folder.
     origins : tuple of (str, int)
         File and line of each line; ("", 0) for the bridge's own.
@@ -149,6 +149,10 @@ class PreparedDeck:
         The deck's notices and those of the preparation.
     zeros : tuple of int
         Indices of the lines of resistors of 0 ohm, as far as can be told.
+    plots : str
+        What the names of the analysis's plots in ngspice begin with: "tran" or "noise".
+    axis : str
+        The vector over which the others stand: "time" or "frequency".
     """
 
     lines: tuple[str, ...]
@@ -158,6 +162,8 @@ class PreparedDeck:
     data: dict[str, bytes]
     notices: tuple[str, ...]
     zeros: tuple[int, ...] = ()
+    plots: str = "tran"
+    axis: str = "time"
 
 
 def where(line: SourceLine) -> str:

@@ -5,7 +5,7 @@ Run as `python -P host.py PARENT_PID SCRATCH_FOLDER` with a fresh folder that th
 its child. Requests come on standard input and answers leave on standard output as frames: a JSON
 header and raw bytes.
 
-    caller -> host   run       lines, commands, data files, plot keys, limits
+    caller -> host   run       lines, commands, data files, kind of plots, vectors, limits
     host -> caller   ready     the library is loaded; or `failed` with the reason
                      log       a line of ngspice
                      progress  the simulated part of the run, from 0 to 1
@@ -177,11 +177,13 @@ def run_deck(simulator: Any, request: dict[str, Any], output: int) -> None:
     listener.finish()
     # A failed load leaves the old plots current, so that only a plot that is new counts.
     plots = [name for name in simulator.plot_names if name not in before]
-    transients = [name for name in plots if name.startswith("tran")]
-    vectors = simulator.plot(None, transients[0]) if transients else {}
-    # The key of a node named 3 is "V(3)", that of all others is in lower case.
-    found = {name.lower(): vector._data for name, vector in vectors.items()}
-    for key in ("time", *request["keys"]):
+    found: dict[str, Any] = {}
+    # A noise analysis gives two plots, of spectra and of totals; the newest comes first.
+    for plot in (name for name in reversed(plots) if name.startswith(request["plots"])):
+        # The key of a node named 3 is "V(3)", that of all others is in lower case.
+        vectors = simulator.plot(None, plot).items()
+        found |= {name.lower(): vector._data for name, vector in vectors}
+    for key in request["keys"]:
         data = found.get(key, found.get(f"v({key})"))
         if data is not None:
             send(output, pack({"kind": "vector", "name": key}, data.tobytes()))

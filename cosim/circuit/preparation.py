@@ -1,8 +1,10 @@
 """The exact list of lines that ngspice gets for one run."""
 
 import re
+from collections.abc import Sequence
+from dataclasses import dataclass
 
-from cosim.circuit.analysis import TransientRequest
+from cosim.circuit.analysis import Tolerances, TransientRequest
 from cosim.circuit.cards import SETTING_CARDS, assignments, card_word, number_text
 from cosim.circuit.deck import Deck, PreparedDeck, SourceLine, unique, where
 from cosim.circuit.defaults import notices_on_times, output_step, zero_resistors
@@ -19,7 +21,6 @@ from cosim.circuit.settings import (
 )
 from cosim.errors import DeckError
 
-_TITLE = "transient run"
 _COLDEST_JUNCTION = 20.0  # K; below it, measured, ngspice's diode and BJT do not converge.
 _COLDEST_CARD, _HOTTEST_CARD = -40.0, 125.0  # degrees Celsius
 # BSIM3, BSIM4 and BSIM-SOI, as ngspice numbers them.
@@ -59,22 +60,109 @@ def prepare(deck: Deck, request: TransientRequest) -> PreparedDeck:
     """
     structure = structure_of(deck.lines)
     keys = resolve_saves(deck, request.saves)
-    own: dict[str, float | str] = {
-        "reltol": request.tolerances.reltol,
-        "vntol": request.tolerances.vntol,
-        "abstol": request.tolerances.abstol,
+    cards: list[str] = []
+    if keys:
+        items = unique(save_expression(vector) for vector in keys.values())
+        cards.append(".save " + " ".join(items))
+    cards.append(_transient_text(request, output_step(deck, request)))
+    return assembled(
+        deck,
+        Analysis("transient", tuple(cards), keys, "tran", "time"),
+        own_options(request.tolerances),
+        request.temperature,
+        request.seed,
+        notices_on_times(deck, request, structure),
+    )
+
+
+@dataclass(frozen=True, slots=True)
+class Analysis:
+    """The analysis of a run, as ngspice is asked for it.
+
+    Parameters
+    ----------
+    name : str
+        "transient" or "noise".
+    cards : tuple of str
+        Its card, and what it saves.
+    keys, plots, axis
+        As in `PreparedDeck`.
+    """
+
+    name: str
+    cards: tuple[str, ...]
+    keys: dict[str, str]
+    plots: str
+    axis: str
+
+
+def own_options(tolerances: Tolerances) -> dict[str, float | str]:
+    """Give the options that the bridge sets itself in every run.
+
+    Parameters
+    ----------
+    tolerances : Tolerances
+        Newton tolerances.
+
+    Returns
+    -------
+    dict
+        Option -> value, which is empty where the option is a flag.
+    """
+    return {
+        "reltol": tolerances.reltol,
+        "vntol": tolerances.vntol,
+        "abstol": tolerances.abstol,
         "method": "trap",
         "trtol": _FIXED_GRID,
         "xtrtol": _FIXED_GRID,
     }
+
+
+def assembled(
+    deck: Deck,
+    analysis: Analysis,
+    own: dict[str, float | str],
+    temperature: float | None,
+    seed: int,
+    further: Sequence[str] = (),
+) -> PreparedDeck:
+    """Put a deck's circuit and an analysis together.
+
+    Parameters
+    ----------
+    deck : Deck
+        The deck; its own analyses, saves and settings that the run sets stay out.
+    analysis : Analysis
+        The analysis.
+    own : dict
+        Options of the run -> value, empty for a flag.
+    temperature : float or None
+        Device temperature in K; None: the deck's own, or 300.15 K.
+    seed : int
+        Seed of ngspice's own random functions.
+    further : sequence of str
+        Notices beyond those of the deck, its options and its temperature.
+
+    Returns
+    -------
+    PreparedDeck
+
+    Raises
+    ------
+    ForbiddenDeckError
+        If a line would run a command, or read or write a file.
+    DeckError
+        If the deck has diodes or bipolar transistors below 20 K.
+    """
+    structure = structure_of(deck.lines)
     notices: list[str] = []
     left_out: list[tuple[SourceLine, str]] = []
     body: list[SourceLine] = [_own_line(_options_text(own))]
     empty = set(zero_resistors(structure))
     zeros: list[int] = []
     in_force = set(structure.settings)
-    temperature = _temperature_cards(deck, request, structure, notices)
-    body.extend(temperature)
+    body.extend(_temperature_cards(deck, temperature, structure, notices))
     for index, line in enumerate(deck.lines):
         card = card_word(line.text)
         if card not in SETTING_CARDS:
@@ -87,12 +175,8 @@ def prepare(deck: Deck, request: TransientRequest) -> PreparedDeck:
             if filtered.line.text:
                 body.append(filtered.line)
     notices.extend(gathered(left_out))
-    if keys:
-        items = unique(save_expression(vector) for vector in keys.values())
-        body.append(_own_line(".save " + " ".join(items)))
-    notices.extend(notices_on_times(deck, request, structure))
-    body.append(_own_line(_transient_text(request, output_step(deck, request))))
-    body.append(_own_line(".end"))
+    notices.extend(further)
+    body.extend(_own_line(card) for card in (*analysis.cards, ".end"))
     check_lines(body)
     mode = _flat_mode(deck.compatibility)
     if mode != (deck.compatibility or "") and ("ps" in mode or "lt" in mode):
@@ -104,13 +188,15 @@ def prepare(deck: Deck, request: TransientRequest) -> PreparedDeck:
             f"'{deck.compatibility}' it translates the lines of included files only"
         )
     return PreparedDeck(
-        lines=(_TITLE, *(line.text for line in body)),
+        lines=(f"{analysis.name} run", *(line.text for line in body)),
         origins=(("", 0), *((line.file, line.line) for line in body)),
-        keys=keys,
-        commands=(*((f"set ngbehavior={mode}",) if mode else ()), f"setseed {request.seed}"),
+        keys=analysis.keys,
+        commands=(*((f"set ngbehavior={mode}",) if mode else ()), f"setseed {seed}"),
         data={file.name: file.content for file in deck.data_files},
         notices=unique((*deck.notices, *notices)),
         zeros=tuple(zeros),
+        plots=analysis.plots,
+        axis=analysis.axis,
     )
 
 
@@ -120,7 +206,7 @@ def _own_line(text: str) -> SourceLine:
 
 def _options_text(own: dict[str, float | str]) -> str:
     return ".options " + " ".join(
-        f"{name}={value if isinstance(value, str) else number_text(value)}"
+        name if value == "" else f"{name}={value if isinstance(value, str) else number_text(value)}"
         for name, value in own.items()
     )
 
@@ -143,10 +229,9 @@ def _flat_mode(compatibility: str | None) -> str:
 
 
 def _temperature_cards(
-    deck: Deck, request: TransientRequest, structure: Structure, notices: list[str]
+    deck: Deck, temperature: float | None, structure: Structure, notices: list[str]
 ) -> list[SourceLine]:
     """Give the temperature cards, and look whether the models reach there."""
-    temperature = request.temperature
     if temperature is None:
         temperature = deck.temperature
     elif deck.temperature is not None and abs(temperature - deck.temperature) > 1e-9:

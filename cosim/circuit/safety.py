@@ -28,9 +28,10 @@ from cosim.errors import (
     near_names,
 )
 
-_CARDS = CIRCUIT_CARDS | {".options", ".temp", ".save", ".tran", ".end"}
+_CARDS = CIRCUIT_CARDS | {".options", ".temp", ".save", ".tran", ".noise", ".end"}
 _LETTERS = frozenset("abcdefghijklmopqrstuvwxyz")
 _OWN_OPTIONS = frozenset({"reltol", "vntol", "abstol", "method", "trtol", "xtrtol"})
+_FLAGS = FLAG_OPTIONS | {"sqrnoise"}  # A deck's own one is left out when its cards are filtered.
 _OPTION = re.compile(r"([a-z_]\w*)\s*(?:=\s*(\{[^{}]*\}|'[^']*'|[-+\w.]+))?\s*,?\s*", re.I)
 # ngspice takes "=" for a space, so that a file can also be named without it.
 _FILE = re.compile(
@@ -167,8 +168,8 @@ def _options_fault(text: str) -> _Fault | None:
         if match is None:
             return ForbiddenDeckError, f"options '{shortened(text[at:])}' cannot be read", ""
         name = match[1].lower()
-        known = name in FLAG_OPTIONS or name in VALUE_OPTIONS or name in _OWN_OPTIONS
-        if not known or (match[2] is None) != (name in FLAG_OPTIONS):
+        known = name in _FLAGS or name in VALUE_OPTIONS or name in _OWN_OPTIONS
+        if not known or (match[2] is None) != (name in _FLAGS):
             return ForbiddenDeckError, f"option '{shortened(name)}' is not sent", ""
         at = match.end()
     return None

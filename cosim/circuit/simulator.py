@@ -3,13 +3,13 @@
 from collections.abc import Callable
 
 from cosim.circuit.analysis import TransientRequest, TransientResult
-from cosim.circuit.client import client_of_this_process, find_simulator
+from cosim.circuit.client import Answer, client_of_this_process, find_simulator
 from cosim.circuit.deck import Deck, PreparedDeck, shortened
 from cosim.circuit.preparation import prepare
 from cosim.circuit.verdict import judge
 from cosim.errors import ForbiddenDeckError
 
-__all__ = ["find_simulator", "simulate", "simulate_prepared", "simulator_version"]
+__all__ = ["find_simulator", "send", "simulate", "simulate_prepared", "simulator_version"]
 
 
 def simulate(
@@ -80,6 +80,51 @@ def simulate_prepared(
     MissingDependencyError
         If ngspice or PySpice is not installed.
     """
+    part_done = None if progress is None else lambda part: progress(part * request.stop)
+    answer, version, models = send(
+        prepared, request.time_limit, request.memory_limit, progress=part_done
+    )
+    return judge(prepared, request, answer, version, models)
+
+
+def send(
+    prepared: PreparedDeck,
+    time_limit: float,
+    memory_limit: int,
+    *,
+    progress: Callable[[float], None] | None = None,
+) -> tuple[Answer, str, bool]:
+    """Let ngspice run a deck, whatever its analysis; the verdict is the caller's.
+
+    Parameters
+    ----------
+    prepared : PreparedDeck
+        The lines as they are sent.
+    time_limit : float
+        Wall-clock limit of the run in s.
+    memory_limit : int
+        Limit of the simulator's address space in bytes.
+    progress : callable or None
+        Called with the simulated part of a transient, from 0 to 1.
+
+    Returns
+    -------
+    Answer
+        What came back.
+    str
+        The simulator, for example "ngspice-39".
+    bool
+        Whether ngspice found its start file, which loads the code models of A devices.
+
+    Raises
+    ------
+    ForbiddenDeckError
+        If a line is empty or holds a control character.
+    SimulatorCrashError
+        If the host itself died.
+    MissingDependencyError
+        If ngspice or PySpice is not installed.
+    """
     for line, (file, number) in zip(prepared.lines, prepared.origins, strict=True):
         # The library counts lines, and a line that it splits again could hold a command.
         if not line or line.splitlines() != [line] or "\0" in line:
@@ -89,18 +134,17 @@ def simulate_prepared(
                 line=number,
             )
     client = client_of_this_process()
-    part_done = None if progress is None else lambda part: progress(part * request.stop)
     answer = client.run(
         lines=prepared.lines,
         commands=prepared.commands,
-        keys=sorted({key.lower() for key in prepared.keys.values()}),
+        plots=prepared.plots,
+        keys=sorted({prepared.axis, *(key.lower() for key in prepared.keys.values())}),
         data=prepared.data,
-        time_limit=request.time_limit,
-        memory_limit=request.memory_limit,
-        progress=part_done,
+        time_limit=time_limit,
+        memory_limit=memory_limit,
+        progress=progress,
     )
-    version = f"ngspice-{client.ready['version']}"
-    return judge(prepared, request, answer, version, client.ready["models"])
+    return answer, f"ngspice-{client.ready['version']}", client.ready["models"]
 
 
 def simulator_version() -> str:

@@ -1,11 +1,12 @@
 """Whether a run counts: from what the host sent to a result, or to an error.
 
 PySpice's exceptions and ngspice's return codes are no test of success in either direction. A run
-counts if its log has no fatal line, a new transient plot came, its time ends on the stop time, and
-all requested vectors are there, of one length and finite.
+counts if its log has no fatal line, a new plot of the analysis came, its time ends on the stop
+time, and all requested vectors are there, of one length and finite.
 """
 
 import signal
+from dataclasses import dataclass
 
 import numpy as np
 
@@ -26,6 +27,37 @@ from cosim.waveform import FloatArray
 STOP_TOLERANCE = 1e-6  # of the stop time: ngspice ends on it to rounding, a truncated run far off
 MEMORY_MARGIN = 0.8  # of the limit; a child that dies by a signal above it ran out of memory
 _MEMORY_WORDS = ("can't allocate", "out of memory", "bad_alloc", "MemoryError")
+
+
+@dataclass(frozen=True, slots=True)
+class Extent:
+    """What an analysis was to do, in the words of the messages on a run that was stopped.
+
+    Parameters
+    ----------
+    analysis : str
+        "transient" or "noise analysis".
+    time_limit : float
+        Wall-clock limit of the run in s.
+    memory_limit : int
+        Limit of the simulator's address space in bytes.
+    points : float
+        Number of points.
+    reached : str
+        How far it came, as far as that is known, with "; " in front.
+    shorter : str
+        What takes less time.
+    smaller : str
+        What takes less memory.
+    """
+
+    analysis: str
+    time_limit: float
+    memory_limit: int
+    points: float
+    reached: str
+    shorter: str
+    smaller: str
 
 
 def judge(
@@ -62,14 +94,17 @@ def judge(
     MissingDependencyError
         If the deck uses code models and they are not installed.
     """
-    log = clean(answer.log)
-    _check_process(request, answer, log)
-    raise_for_log(prepared, answer.log, models)
+    extent = Extent(
+        "transient",
+        request.time_limit,
+        request.memory_limit,
+        request.stop / request.step,
+        f"; it had come to about {answer.part * request.stop:.3g} s of {request.stop:g} s",
+        "take a shorter stop time or a longer step",
+        "save fewer vectors, or take a longer step",
+    )
+    log = check_run(prepared, extent, answer, models)
     assert answer.done is not None
-    faults = [text for text in answer.done["faults"].values() if text]
-    if faults or "time" not in answer.vectors:
-        what = faults[0] if faults else "there is no transient among its plots"
-        raise SimulatorCrashError(f"ngspice gave no transient: {what}", log=log[-LOG_SHOWN:])
     time = answer.vectors["time"]
     _check_time(request, time, log)
     vectors = {save.lower(): _vector(save, key, answer, log) for save, key in prepared.keys.items()}
@@ -90,30 +125,67 @@ def judge(
     )
 
 
-def _check_process(request: TransientRequest, answer: Answer, log: tuple[str, ...]) -> None:
-    reached = f"it had come to about {answer.part * request.stop:.3g} s of {request.stop:g} s"
+def check_run(
+    prepared: PreparedDeck, extent: Extent, answer: Answer, models: bool
+) -> tuple[str, ...]:
+    """Raise what kept a run from its end, whatever its analysis.
+
+    Parameters
+    ----------
+    prepared : PreparedDeck
+        The deck as sent.
+    extent : Extent
+        What was asked for.
+    answer : Answer
+        What came back.
+    models : bool
+        Whether ngspice found its start file, which loads the code models of A devices.
+
+    Returns
+    -------
+    tuple of str
+        ngspice's log.
+
+    Raises
+    ------
+    SimulationError, DeckError, MissingDependencyError
+        As `judge`, but for what the vectors themselves say.
+    """
+    log = clean(answer.log)
+    _check_process(extent, answer, log)
+    raise_for_log(prepared, answer.log, models)
+    assert answer.done is not None
+    faults = [text for text in answer.done["faults"].values() if text]
+    if faults or prepared.axis not in answer.vectors:
+        what = faults[0] if faults else f"there is no {extent.analysis} among its plots"
+        raise SimulatorCrashError(
+            f"ngspice gave no {extent.analysis}: {what}", log=log[-LOG_SHOWN:]
+        )
+    return log
+
+
+def _check_process(extent: Extent, answer: Answer, log: tuple[str, ...]) -> None:
     code, tail = answer.end["code"], log[-LOG_SHOWN:]
     if answer.end["timeout"]:
         raise SimulatorTimeoutError(
-            f"ngspice did not finish within {request.time_limit:g} s; {reached}",
-            hint="raise the time limit, or take a shorter stop time or a longer step",
+            f"ngspice did not finish within {extent.time_limit:g} s{extent.reached}",
+            hint=f"raise the time limit, or {extent.shorter}",
             log=tail,
         )
     limit = answer.end["memory_limit"]
     full = code < 0 and answer.end["peak"] > MEMORY_MARGIN * limit
     if full or any(word in line for line in log for word in _MEMORY_WORDS):
-        own = limit == request.memory_limit
+        own = limit == extent.memory_limit
         which = "memory limit" if own else "system's memory limit (ulimit -v)"
         raise SimulatorMemoryError(
             f"ngspice needs more than the {which} of {limit / 2**20:.0f} MiB "
-            f"for {request.stop / request.step:.3g} time points",
-            hint=f"raise {'the memory limit' if own else 'it'}, save fewer vectors, or take a "
-            "longer step",
+            f"for {extent.points:.3g} points",
+            hint=f"raise {'the memory limit' if own else 'it'}, or {extent.smaller}",
             log=tail,
         )
     if code < 0:
         raise SimulatorCrashError(
-            f"ngspice ended by signal {-code} ({signal.strsignal(-code)}); {reached}",
+            f"ngspice ended by signal {-code} ({signal.strsignal(-code)}){extent.reached}",
             hint="the log's last lines say how far it came with the deck",
             log=tail,
         )
