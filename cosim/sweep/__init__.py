@@ -8,4 +8,5 @@ plan.py       the product of corners, grids and samples
 batches.py    what an engine carries
 engine.py     sending batches to any executor
 local.py      processes of this machine
+cluster.py    a Dask scheduler, or the jobs of a batch system
 """
