@@ -80,6 +80,7 @@ def test_what_does_not_pickle_is_a_fault_of_its_run_alone(address: str) -> None:
     assert "pickle" in outcomes[2].error
 
 
+@pytest.mark.full
 def test_decks_that_were_sent_are_not_kept(address: str) -> None:
     me = psutil.Process()
     sizes: dict[int, int] = {}

@@ -155,9 +155,16 @@ def test_workers_of_the_pool_run_ngspice() -> None:
     assert [outcomes[n].result for n in (1, 2, 3, 4)] == pytest.approx([1.0, 1.5, 2.0, 2.5], 1e-9)
 
 
+def command(process: psutil.Process) -> str:
+    try:
+        return " ".join(process.cmdline())
+    except psutil.Error:
+        return ""  # It has just ended.
+
+
 def worker_processes(parent: int) -> list[psutil.Process]:
     children = psutil.Process(parent).children(recursive=True)
-    return [child for child in children if "spawn_main" in " ".join(child.cmdline())]
+    return [child for child in children if "spawn_main" in command(child)]
 
 
 def wait_until(condition: Callable[[], bool]) -> bool:
@@ -220,7 +227,7 @@ def test_ctrl_c_leaves_no_child_and_loses_no_report(tmp_path: Path) -> None:
     lines = [first_line(process), first_line(process)]
     children = psutil.Process(process.pid).children(recursive=True)
     assert len(worker_processes(process.pid)) == 2
-    assert any("host.py" in " ".join(child.cmdline()) for child in children)
+    assert any("host.py" in command(child) for child in children)
     # As a terminal does: to the whole group, workers included.
     os.killpg(process.pid, signal.SIGINT)
     out, err = process.communicate(timeout=PATIENCE)
