@@ -44,6 +44,10 @@ def stub(shared: Any, arguments: Any) -> Any:
                 file.write("x")
             if os.path.getsize(value) == 1:
                 os._exit(1)
+        case "mark":
+            with open(value, "a", encoding="utf-8") as file:
+                file.write("x")
+            time.sleep(6.0)
         case "unpicklable":
             return lambda: None
         case "divider":

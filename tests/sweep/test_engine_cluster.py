@@ -140,7 +140,7 @@ SCRIPT = """
 @pytest.mark.full
 def test_ctrl_c_cancels_what_has_not_begun(address: str, tmp_path: Path) -> None:
     trace = tmp_path / "trace"
-    orders = f'[("square", 1), ("sleep", 3), ("sleep", 3), ("kill once", {str(trace)!r})]'
+    orders = f'[("square", 1)] + [("mark", {str(trace)!r})] * 3'
     file = tmp_path / "job.py"
     file.write_text(textwrap.dedent(SCRIPT.format(orders=orders, address=address)))
     process = subprocess.Popen(
@@ -156,9 +156,10 @@ def test_ctrl_c_cancels_what_has_not_begun(address: str, tmp_path: Path) -> None
     out, err = process.communicate(timeout=PATIENCE)
     assert process.returncode == 130, err
     assert out == "interrupted\n"
-    # Both workers are free again only when what was running is over; the last run has not begun.
-    assert len(sweep(batches([("sleep", 0.0)] * 4), scheduler_engine(address))) == 4
-    assert not trace.exists()
+    # Runs that were sent earlier come first: when these are done, nothing else is waiting. Two
+    # workers can have begun two of the three.
+    sweep(batches([("square", 1)] * 4), scheduler_engine(address))
+    assert not trace.exists() or trace.stat().st_size <= 2
 
 
 @pytest.mark.full
