@@ -149,7 +149,7 @@ def parse_quantity(text: object, unit: str) -> float:
         fault = "without a unit" if not spelling else f'with the unit "{spelling}"'
         near = {name.lower(): name for name in _allowed(unit)}.get(spelling.lower())
         hint = f'did you mean "{near}"? Capitals matter in units' if near else ""
-        if not near and spelling + unit in _allowed(unit):
+        if spelling and not near and spelling + unit in _allowed(unit):
             hint = f'SPICE suffixes are not read here; did you mean "{spelling}{unit}"?'
         raise UnitError(f'wanted {what}, such as "{example}", got "{text}" {fault}', hint=hint)
     return _to_si(number, spelling, unit)
