@@ -10,6 +10,7 @@ from rich.text import Text
 
 from cosim.checks import Finding
 from cosim.comparison import Comparison
+from cosim.quantum.fidelity import incoherent_infidelity
 from cosim.result import GateResult
 from cosim.units import format_quantity
 
@@ -112,7 +113,7 @@ def _number_table(result: GateResult) -> Table:
     table.add_row("rotation", f"{math.degrees(result.rotation.angle):.4f}° about ({axis})")
     table.add_row("phase slip per gate", f"{math.degrees(result.phase_slip):+.4f}°")
     table.add_row("leakage, seepage", f"{result.leakage:.2e}, {result.seepage:.2e}")
-    incoherent = 0.5 * (1.0 - math.sqrt(min(1.0, result.unitarity)))
+    incoherent = incoherent_infidelity(result.channel.superoperator)
     table.add_row("unitarity", f"{result.unitarity:.7f}, decoherence alone {incoherent:.3e}")
     table.add_row(
         "numerical floor", _or_dash(result.numerical_floor, "not asked for, or too few samples")
