@@ -111,13 +111,15 @@ class Capture:
     result: TransientResult | None
 
 
-def make_plan(bench: Testbench) -> Plan:
+def make_plan(bench: Testbench, deck: Deck | None = None) -> Plan:
     """Read the deck of a testbench and work out the transient; nothing is simulated.
 
     Parameters
     ----------
     bench : Testbench
         The testbench.
+    deck : Deck or None
+        What `read_deck` gave for it; None reads it.
 
     Returns
     -------
@@ -131,7 +133,7 @@ def make_plan(bench: Testbench) -> Plan:
     """
     table = netlist_of(bench)
     folder = Path(bench.folder)
-    deck = read_deck(bench)
+    deck = read_deck(bench) if deck is None else deck
     roots = confidential_roots([str(_under(folder, p, "confidential")) for p in table.confidential])
     check_roots(deck, roots)  # Before names are looked up in lines that are cut in two.
     deck = altered_deck(bench, deck)

@@ -98,11 +98,31 @@ def gate_target(bench: Testbench) -> Target:
     return Target(name, rotation, target_unitary(rotation.axis, rotation.angle))
 
 
+@dataclass(frozen=True, slots=True)
+class Shots:
+    """The simulator's part of a run, made beforehand: several runs may share it.
+
+    Parameters
+    ----------
+    plan : Plan
+        The deck and the transient, from `cosim.capture.make_plan`.
+    first : Capture
+        The waveform at the probe, without the line behind it.
+    second : Capture or None
+        The same at half the step, for the numerical floor.
+    """
+
+    plan: Plan
+    first: Capture
+    second: Capture | None
+
+
 def run_gate(
     bench: Testbench,
     *,
     system: OperatorSystem | None = None,
     progress: Progress | None = None,
+    shots: Shots | None = None,
 ) -> GateResult:
     """Run a testbench with a gate from the netlist, or from a waveform, to its fidelity.
 
@@ -114,6 +134,8 @@ def run_gate(
         A user's own system, for a testbench with kind = "operators" in [qubit].
     progress : callable or None
         Called with the simulated time in s now and then, during both runs of the simulator.
+    shots : Shots or None
+        What the simulator gave for this deck; None lets it run.
 
     Returns
     -------
@@ -129,7 +151,7 @@ def run_gate(
     """
     clock = Clock()
     target = gate_target(bench)
-    plan, shot = _capture(bench, progress, clock)
+    plan, shot = _capture(bench, progress, shots, clock)
     drive = couple(bench, shot, system)
     pulse = drive.pulse(shot.waveform)
     clock.lap("interpolation")
@@ -146,7 +168,7 @@ def run_gate(
     rotation = _unfolded(rotation_of(nearest_unitary(channel)), target.rotation)
     calibration = _calibrate(bench, drive, pulse, free, channel, rotation.angle, target)
     clock.lap("calibration")
-    second, carrier = _second_run(bench, plan, drive, shot, progress, clock)
+    second, carrier = _second_run(bench, plan, drive, shot, progress, shots, clock)
     views = Views(channel, free, calibration, target.unitary)
     as_simulated, in_free_frame, calibrated = views.fidelities(second)
     floor = views.floor(second)
@@ -194,8 +216,11 @@ def run_gate(
 
 
 def _capture(
-    bench: Testbench, progress: Progress | None, clock: Clock
+    bench: Testbench, progress: Progress | None, shots: Shots | None, clock: Clock
 ) -> tuple[Plan | None, Capture]:
+    if shots is not None:
+        clock.note_capture(shots.first)
+        return shots.plan, through_line(bench, shots.first)
     if bench.netlist is None:
         shot = through_line(bench, import_waveform(bench))
         clock.lap_capture(shot)
@@ -237,6 +262,7 @@ def _second_run(
     drive: QubitDrive,
     first: Capture,
     progress: Progress | None,
+    shots: Shots | None,
     clock: Clock,
 ) -> tuple[Pulse | None, float]:
     """Simulate once more at half the step; give the pulse and the carrier in Hz.
@@ -249,8 +275,12 @@ def _second_run(
         halved = every_second(first.waveform, drive.carrier_frequency)
         second = None if halved is None else drive.pulse(halved)
         return second, drive.carrier_frequency
-    shot = through_line(bench, capture_probe(plan.half_step(), progress=progress))
-    clock.lap_capture(shot, "floor_")
+    if shots is not None and shots.second is not None:
+        shot = through_line(bench, shots.second)
+        clock.note_capture(shot, "floor_")
+    else:
+        shot = through_line(bench, capture_probe(plan.half_step(), progress=progress))
+        clock.lap_capture(shot, "floor_")
     return drive.second_pulse(first.waveform, shot.waveform)
 
 

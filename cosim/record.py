@@ -3,6 +3,7 @@
 import platform
 import time
 from datetime import datetime
+from functools import cache
 from importlib.metadata import version
 
 from cosim.capture import Capture
@@ -35,6 +36,11 @@ class Clock:
         self.laps[prefix + "ngspice"] = shot.result.wall_time
         self.laps[prefix + "simulator_overhead"] -= shot.result.wall_time
 
+    def note_capture(self, shot: Capture, prefix: str = "") -> None:
+        """Take over the time of a capture that was made before this run began."""
+        if shot.result is not None:
+            self.laps[prefix + "ngspice"] = shot.result.wall_time
+
 
 def make_record(
     bench: Testbench, shot: Capture, carrier_frequency: float, clock: Clock
@@ -57,8 +63,7 @@ def make_record(
     RunRecord
         The record.
     """
-    versions = {name: version(name) for name in PACKAGES}
-    versions["python"] = platform.python_version()
+    versions = package_versions()
     result = shot.result
     if result is not None:
         versions["ngspice"] = result.simulator_version.removeprefix("ngspice-")
@@ -78,6 +83,23 @@ def make_record(
         step=shot.step,
         steps_per_period=1.0 / (shot.step * carrier_frequency),
     )
+
+
+def package_versions() -> dict[str, str]:
+    """Tell what this process computes with.
+
+    Returns
+    -------
+    dict of str
+        Package to version, and Python's own.
+    """
+    return {**{name: _version(name) for name in PACKAGES}, "python": platform.python_version()}
+
+
+@cache
+def _version(name: str) -> str:
+    # Read from files of the package, which takes longer than a quick circuit.
+    return version(name)
 
 
 def _texts(data: dict[str, bytes]) -> dict[str, str]:
