@@ -19,6 +19,8 @@ from cosim.sweep.batches import WORKER_DIED, Batch, Outcome, failed, perform
 # Enough that a worker never waits for the parent, and few enough that little is lost with it.
 PER_SLOT = 2
 
+PAUSE = 0.5  # s of waiting after which the caller gets a turn
+
 RESUME_HINT = "see the scheduler's log; resume the sweep for what has not been reported"
 
 _Done = tuple[Outcome, ...]
@@ -56,6 +58,7 @@ def run_batches(
     engine: Engine,
     *,
     on_result: Callable[[Outcome], None],
+    on_pause: Callable[[], None] = lambda: None,
 ) -> None:
     """Run all batches; every run ends in exactly one outcome, whatever happens to it.
 
@@ -72,13 +75,16 @@ def run_batches(
     on_result : callable
         Called with each outcome in the caller's thread, in the order in which they come. An error
         that it raises ends the sweep and comes out.
+    on_pause : callable
+        Called in the same thread when all that has come in is handed on, and every half second
+        while nothing comes.
 
     Raises
     ------
     SimulationError
         If the executor cannot be had, or drops runs without saying why.
     """
-    desk = _Desk(engine, on_result)
+    desk = _Desk(engine, on_result, on_pause)
     try:
         desk.run(iter(batches))
     except KeyboardInterrupt:
@@ -89,9 +95,15 @@ def run_batches(
 class _Desk:
     """The state of one call of `run_batches`."""
 
-    def __init__(self, engine: Engine, on_result: Callable[[Outcome], None]) -> None:
+    def __init__(
+        self,
+        engine: Engine,
+        on_result: Callable[[Outcome], None],
+        on_pause: Callable[[], None],
+    ) -> None:
         self.engine = engine
         self.on_result = on_result
+        self.on_pause = on_pause
         self.flying: dict[Future[_Done], Batch] = {}
         self.landed: SimpleQueue[Future[_Done]] = SimpleQueue()
         self.again: deque[Batch] = deque()  # To be sent before any new batch.
@@ -115,8 +127,11 @@ class _Desk:
                     broken = self.feed(executor, waiting)
                 if not self.flying:
                     return broken
-                broken |= self.collect(self.landed.get())
+                broken |= self.collect(self.next_landed())
+                while self.landed.qsize():
+                    broken |= self.collect(self.landed.get())
                 self.report()
+                self.on_pause()
 
     def feed(self, executor: Executor, waiting: Iterator[Batch]) -> bool:
         """Send what there is room for; gives True if the executor turned out to be broken."""
@@ -152,6 +167,13 @@ class _Desk:
         self.flying[future] = batch
         future.add_done_callback(self.landed.put)
         return False
+
+    def next_landed(self) -> "Future[_Done]":
+        while True:
+            try:
+                return self.landed.get(timeout=PAUSE)
+            except Empty:
+                self.on_pause()
 
     def collect(self, future: "Future[_Done]") -> bool:
         """Take what a future brings; gives True if its executor is broken."""

@@ -1,7 +1,7 @@
 """The table [sweep] of a testbench: corners, grids, Monte Carlo, mismatch, perturbations."""
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field, fields
 from typing import Annotated, Any, Literal
 
 from cosim.config import Quantity, check_keys, numbered, read_table
@@ -199,6 +199,33 @@ class CornerTable:
 
 
 @dataclass(frozen=True, slots=True)
+class ReportTable:
+    """Keys of [sweep] itself: what is judged, and what is kept besides the table of runs.
+
+    Parameters
+    ----------
+    fidelity : "as_simulated", "free_frame" or "calibrated"
+        Which of the three fidelities ranks the runs.
+    limit : float or None
+        Of the infidelity 1 - F_avg, for the yield.
+    keep : int or "all"
+        How many of the worst runs keep their raw waveforms.
+    """
+
+    fidelity: Literal["as_simulated", "free_frame", "calibrated"] = "free_frame"
+    limit: float | None = None
+    keep: int | Literal["all"] = 3
+
+    def __post_init__(self) -> None:
+        if self.limit is not None and not 0.0 < self.limit < 1.0:
+            raise InputError(
+                f"key 'limit': wanted an infidelity between 0 and 1, got {self.limit:g}"
+            )
+        if self.keep != "all" and self.keep < 0:
+            raise InputError(f"key 'keep': wanted a number from 0, or \"all\", got {self.keep}")
+
+
+@dataclass(frozen=True, slots=True)
 class SweepTable:
     """The table [sweep].
 
@@ -214,6 +241,8 @@ class SweepTable:
         Drawn anew for each sample.
     one_at_a_time : tuple of PerturbationTable
         In place of samples: the nominal point, and two more for each of these.
+    report : ReportTable
+        What is judged and kept; it bears on no run.
     """
 
     corners: tuple[CornerTable, ...] = ()
@@ -221,6 +250,7 @@ class SweepTable:
     monte_carlo: MonteCarloTable | None = None
     mismatch: MismatchTable | None = None
     one_at_a_time: tuple[PerturbationTable, ...] = ()
+    report: ReportTable = field(default_factory=ReportTable)
 
 
 def read_sweep(bench: Testbench) -> SweepTable:
@@ -244,7 +274,8 @@ def read_sweep(bench: Testbench) -> SweepTable:
     file = bench.source or "the testbench"
     table = bench.sweep
     names = ["corners", "grid", "monte_carlo", "mismatch", "one_at_a_time"]
-    check_keys(table, names, f"{file}, table [sweep]")
+    own = [item.name for item in fields(ReportTable)]
+    check_keys(table, [*names, *own], f"{file}, table [sweep]")
     if not any(table.get(name) for name in names):
         raise TestbenchError(
             f"{file} has no table [sweep] that says what to run",
@@ -261,6 +292,12 @@ def read_sweep(bench: Testbench) -> SweepTable:
             else None
         ),
         one_at_a_time=_array(table, "one_at_a_time", PerturbationTable, file),
+        report=read_table(
+            {name: table[name] for name in own if name in table},
+            ReportTable,
+            file=file,
+            name="sweep",
+        ),
     )
     if found.mismatch is not None and found.monte_carlo is None:
         raise TestbenchError(
