@@ -1,7 +1,6 @@
 """The first half of the drive path: from a testbench to the waveform at the probe."""
 
 import math
-import os
 from collections.abc import Callable
 from dataclasses import dataclass, replace
 from pathlib import Path
@@ -10,22 +9,16 @@ from cosim.circuit.analysis import TransientRequest, TransientResult
 from cosim.circuit.confidential import (
     Roots,
     check_roots,
-    confidential_roots,
     kept_files,
     withhold,
 )
-from cosim.circuit.deck import shortened
-from cosim.circuit.mismatch import Shift, with_mismatch
 from cosim.circuit.netlist import (
     Deck,
     DeckFile,
-    deck_from_text,
-    load_deck,
-    with_instances,
-    with_parameters,
 )
 from cosim.circuit.probe import Probe, evaluate_probe
 from cosim.circuit.simulator import simulate
+from cosim.decks import altered_deck, netlist_of, read_deck, roots_of
 from cosim.dsp.upconversion import upconvert
 from cosim.errors import TestbenchError
 from cosim.port import open_port
@@ -134,7 +127,7 @@ def make_plan(bench: Testbench, deck: Deck | None = None) -> Plan:
     table = netlist_of(bench)
     folder = Path(bench.folder)
     deck = read_deck(bench) if deck is None else deck
-    roots = confidential_roots([str(_under(folder, p, "confidential")) for p in table.confidential])
+    roots = roots_of(bench)
     check_roots(deck, roots)  # Before names are looked up in lines that are cut in two.
     deck = altered_deck(bench, deck)
     stop = _stop(table, deck)
@@ -160,120 +153,6 @@ def make_plan(bench: Testbench, deck: Deck | None = None) -> Plan:
     carrier = drive.carrier if isinstance(drive.carrier, float) else math.nan
     notices = (*withheld, *loaded, *notices)
     return Plan(deck, probes, carrier, drive.probe is None, request, notices, roots, table.save)
-
-
-def read_deck(bench: Testbench) -> Deck:
-    """Read the deck of a testbench with the sections that it names; nothing else is changed.
-
-    Parameters
-    ----------
-    bench : Testbench
-        The testbench.
-
-    Returns
-    -------
-    Deck
-        The deck with its includes.
-
-    Raises
-    ------
-    DeckError, TestbenchError
-        If it cannot be read, or the testbench has no netlist.
-    """
-    table = netlist_of(bench)
-    folder = Path(bench.folder)
-    include_paths = tuple(
-        str(_under(folder, path, "include_paths")) for path in table.include_paths
-    )
-    if bench.circuit:
-        return deck_from_text(
-            bench.circuit,
-            name=table.file,
-            folder=folder,
-            include_paths=include_paths,
-            sections=table.sections,
-            compatibility=table.compatibility,
-        )
-    return load_deck(
-        _short(_under(folder, table.file, "file")),
-        include_paths=include_paths,
-        sections=table.sections,
-        compatibility=table.compatibility,
-    )
-
-
-def altered_deck(bench: Testbench, deck: Deck) -> Deck:
-    """Apply a testbench's parameters, instances and mismatch to its deck.
-
-    Parameters
-    ----------
-    bench : Testbench
-        The testbench.
-    deck : Deck
-        From `read_deck`.
-
-    Returns
-    -------
-    Deck
-        The altered deck.
-
-    Raises
-    ------
-    DeckError, InputError
-        If a parameter, instance or transistor does not exist, or a value is impossible.
-    """
-    table = netlist_of(bench)
-    deck = with_instances(with_parameters(deck, table.parameters), table.instances)
-    shifts = {
-        path: Shift(values.get("threshold", 0.0), values.get("current_factor", 1.0))
-        for path, values in table.mismatch.items()
-    }
-    return with_mismatch(deck, shifts)
-
-
-def netlist_of(bench: Testbench) -> NetlistTable:
-    """Give the table [netlist] of a testbench.
-
-    Parameters
-    ----------
-    bench : Testbench
-        The testbench.
-
-    Returns
-    -------
-    NetlistTable
-        The table.
-
-    Raises
-    ------
-    TestbenchError
-        If the testbench imports a waveform.
-    """
-    if bench.netlist is None:
-        raise TestbenchError(
-            f"{bench.source or 'the testbench'} imports a waveform: there is no netlist to simulate"
-        )
-    return bench.netlist
-
-
-def _under(folder: Path, name: str, key: str) -> Path:
-    """Give the path that a key names, relative to the testbench's folder; "~" is expanded."""
-    try:
-        path = folder / Path(name).expanduser()
-        os.lstat(os.fsencode(path))
-    except OSError:
-        pass  # Whether it is there is said where it is read.
-    except (RuntimeError, ValueError) as error:  # no such user; NUL, or half a character
-        raise TestbenchError(
-            f"table [netlist], key '{key}': {shortened(repr(name))} is no path: {error}"
-        ) from None
-    return path
-
-
-def _short(path: Path) -> Path:
-    # "examples/../netlists/a.cir" reads better as "netlists/a.cir", where that is the same file.
-    short = Path(os.path.normpath(path))
-    return short if os.path.realpath(short) == os.path.realpath(path) else path
 
 
 def _stop(table: NetlistTable, deck: Deck) -> float:

@@ -25,7 +25,8 @@ and the next step. Every error pickles with its details, so that it survives pro
 """
 
 import difflib
-from collections.abc import Iterable
+from collections.abc import Iterable, Mapping
+from types import MappingProxyType
 from typing import Any
 
 
@@ -137,7 +138,15 @@ class ArchiveError(InputError, OSError):
 
 
 class SimulationError(CosimError, RuntimeError):
-    """The simulation failed."""
+    """The simulation failed.
+
+    Attributes
+    ----------
+    partial : mapping of str to ndarray
+        What the simulator had computed until then, "time" in s among it; often empty.
+    """
+
+    partial: Mapping[str, Any] = MappingProxyType({})
 
 
 class ConvergenceError(SimulationError):

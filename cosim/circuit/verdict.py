@@ -16,6 +16,7 @@ from cosim.circuit.deck import PreparedDeck, shortened
 from cosim.circuit.faults import LOG_SHOWN, clean, findings, raise_for_log
 from cosim.errors import (
     ConvergenceError,
+    SimulationError,
     SimulatorCrashError,
     SimulatorMemoryError,
     SimulatorTimeoutError,
@@ -103,11 +104,18 @@ def judge(
         "take a shorter stop time or a longer step",
         "save fewer vectors, or take a longer step",
     )
-    log = check_run(prepared, extent, answer, models)
+    try:
+        log = check_run(prepared, extent, answer, models)
+        time = answer.vectors["time"]
+        _check_time(request, time, log)
+        vectors = {
+            save.lower(): _vector(save, key, answer, log) for save, key in prepared.keys.items()
+        }
+    except SimulationError as error:
+        # How far it came, and what it looked like there, is the best hint at what went wrong.
+        error.partial = dict(answer.vectors)
+        raise
     assert answer.done is not None
-    time = answer.vectors["time"]
-    _check_time(request, time, log)
-    vectors = {save.lower(): _vector(save, key, answer, log) for save, key in prepared.keys.items()}
     remarks = findings(prepared, answer.log)
     return TransientResult(
         time=time,

@@ -6,7 +6,7 @@ from typing import Any
 
 import numpy as np
 
-from cosim.capture import altered_deck, read_deck
+from cosim.decks import altered_deck, read_deck
 from cosim.circuit.deck import Deck
 from cosim.config import numbered
 from cosim.errors import CosimError, TestbenchError

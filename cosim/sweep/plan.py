@@ -6,7 +6,7 @@ from typing import Any
 
 import numpy as np
 
-from cosim.capture import altered_deck
+from cosim.decks import altered_deck
 from cosim.circuit.deck import Deck
 from cosim.circuit.mismatch import Mosfet, mosfets
 from cosim.errors import TestbenchError, UnitError
@@ -115,6 +115,15 @@ class SweepPlan:
     def columns(self) -> tuple[str, ...]:
         """The keys of every run's `values`, in their order."""
         return tuple(self.run(0).values)
+
+    @property
+    def units(self) -> dict[str, str]:
+        """The units of `columns`; "" for texts, plain numbers and parameters of the deck."""
+        keys = [item.key for item in self.axes]
+        keys += [item.key for item in self.variations]
+        keys += [item.key for item in self.perturbations]
+        units = {key.path: key.quantity.unit for key in keys if key.quantity is not None}
+        return {name: units.get(name, "") for name in self.columns}
 
     def __len__(self) -> int:
         count = len(self.corners) * self.samples

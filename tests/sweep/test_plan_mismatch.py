@@ -15,9 +15,9 @@ import numpy as np
 import pytest
 from scipy import stats
 
-from cosim.capture import altered_deck, read_deck
 from cosim.circuit.analysis import TransientRequest
 from cosim.circuit.simulator import simulate
+from cosim.decks import altered_deck, read_deck
 from cosim.sweep.plan import SweepPlan, make_sweep
 from cosim.testbench import make_testbench
 from cosim.waveform import FloatArray

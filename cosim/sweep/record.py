@@ -1,0 +1,214 @@
+"""What a sweep archives besides its table: the plan that it follows, and the runs that failed."""
+
+import hashlib
+import json
+import platform
+from collections.abc import Mapping
+from dataclasses import asdict, dataclass, field
+from datetime import datetime
+from math import nan
+
+from cosim.archive.layout import SCHEMA_VERSION
+from cosim.circuit.confidential import kept_files
+from cosim.circuit.deck import DeckFile
+from cosim.decks import roots_of
+from cosim.errors import ArchiveError
+from cosim.record import package_versions
+from cosim.result import KINDS
+from cosim.sweep.plan import SweepPlan
+from cosim.testbench import Testbench
+from cosim.waveform import Waveform
+
+_SHOWN = 5  # differing keys that a message names
+
+
+@dataclass(frozen=True, slots=True)
+class SweepRecord:
+    """The plan of a sweep, as its archive keeps it.
+
+    Parameters
+    ----------
+    title : str
+        Title of the testbench.
+    runs : int
+        How many runs are planned.
+    inputs : tuple of str
+        Columns of the table that the plan sets.
+    units : dict of str
+        Unit by column, "" for texts and plain numbers.
+    fidelity : str
+        Which of the three fidelities ranks the runs.
+    limit : float
+        Of the infidelity, for the yield; NaN without one.
+    keep : str
+        How many of the worst runs keep their raw waveforms, or "all".
+    digest : str
+        SHA-256 of all that determines the runs, in hexadecimal.
+    content : str
+        What it is taken of, as JSON: testbench by corner, SHA-256 of the files, the table [sweep].
+    testbench : str
+        The testbench as TOML, complete.
+    source, folder : str
+        Path of the testbench, and the folder that its paths are relative to.
+    deck_files : tuple of DeckFile
+        Every file of the decks as its author wrote it; without its text where it is confidential.
+    versions : dict of str
+        Package to version.
+    host : str
+        Name of the machine that planned it and its operating system.
+    started : str
+        ISO 8601 with UTC offset.
+    """
+
+    title: str
+    runs: int = field(metadata={"unit": "1"})
+    inputs: tuple[str, ...]
+    units: dict[str, str]
+    fidelity: str
+    limit: float = field(metadata={"unit": "1"})
+    keep: str
+    digest: str
+    content: str
+    testbench: str
+    source: str
+    folder: str
+    deck_files: tuple[DeckFile, ...]
+    versions: dict[str, str]
+    host: str
+    started: str
+
+
+@dataclass(frozen=True, slots=True)
+class FailedRun:
+    """What is kept of a run that has no result.
+
+    Parameters
+    ----------
+    status : str
+        Why, as in `cosim.sweep.batches.Outcome`.
+    error : str
+        The message.
+    log : tuple of str
+        Lines of the simulator's log that belong to it.
+    testbench : str
+        The testbench of this run as TOML; empty when it did not come that far.
+    deck_sent : str
+        The deck as it was sent to the simulator, without confidential lines; empty as above.
+    waveforms : dict of Waveform
+        What the simulator had computed until it failed; empty when it had nothing.
+    """
+
+    status: str
+    error: str
+    log: tuple[str, ...]
+    testbench: str
+    deck_sent: str
+    waveforms: dict[str, Waveform]
+
+
+# Classes by the tag that the archive of a sweep keeps.
+SWEEP_KINDS: dict[str, type] = {
+    **KINDS,
+    SweepRecord.__name__: SweepRecord,
+    FailedRun.__name__: FailedRun,
+}
+
+
+def make_sweep_record(plan: SweepPlan, bench: Testbench) -> SweepRecord:
+    """Write down a plan.
+
+    Parameters
+    ----------
+    plan : SweepPlan
+        The plan.
+    bench : Testbench
+        The testbench it was made of.
+
+    Returns
+    -------
+    SweepRecord
+        The same testbench and files give the same `digest` everywhere.
+    """
+    content = _content(plan)
+    report = plan.table.report
+    return SweepRecord(
+        title=bench.title,
+        runs=len(plan),
+        inputs=plan.columns,
+        units=plan.units,
+        fidelity=report.fidelity,
+        limit=nan if report.limit is None else report.limit,
+        keep=str(report.keep),
+        digest=hashlib.sha256(content.encode()).hexdigest(),
+        content=content,
+        testbench=bench.to_toml(),
+        source=bench.source,
+        folder=bench.folder,
+        deck_files=_deck_files(plan),
+        versions=package_versions(),
+        host=f"{platform.node()} ({platform.platform()})",
+        started=datetime.now().astimezone().isoformat(timespec="seconds"),
+    )
+
+
+def check_same_plan(archived: SweepRecord, plan: SweepRecord, path: str) -> None:
+    """Refuse to mix the runs of two plans.
+
+    Parameters
+    ----------
+    archived : SweepRecord
+        What the archive was begun with.
+    plan : SweepRecord
+        What the testbench and its files say now.
+    path : str
+        The archive's name for the message.
+
+    Raises
+    ------
+    ArchiveError
+        If they are not the same; it names what has changed.
+    """
+    if archived.digest == plan.digest:
+        return
+    old, new = (_flat(json.loads(record.content)) for record in (archived, plan))
+    changed = sorted(key for key in old.keys() | new.keys() if old.get(key) != new.get(key))
+    listed = ", ".join(changed[:_SHOWN])
+    if len(changed) > _SHOWN:
+        listed += f" and {len(changed) - _SHOWN} more"
+    raise ArchiveError(
+        f"{path} was begun with another testbench or deck, and its runs are not mixed with those "
+        f"of this one; changed: {listed}",
+        hint="give another archive, or take the testbench and the files as they were: "
+        f"`qcosim show {path} --testbench` prints it",
+    )
+
+
+def _content(plan: SweepPlan) -> str:
+    table = {name: part for name, part in asdict(plan.table).items() if name != "report"}
+    corners = {
+        corner.name or "testbench": {
+            "testbench": dict(corner.flat),
+            "files": {**dict(corner.files.waveform), "line": corner.files.line},
+        }
+        for corner in plan.corners
+    }
+    whole = {"schema": SCHEMA_VERSION, "sweep": table, "corners": corners}
+    return json.dumps(whole, sort_keys=True, separators=(",", ":"))
+
+
+def _flat(value: object, name: str = "") -> dict[str, object]:
+    if isinstance(value, Mapping):
+        found: dict[str, object] = {}
+        for key, item in value.items():
+            found |= _flat(item, f"{name}.{key}" if name else str(key))
+        return found
+    return {name: value}
+
+
+def _deck_files(plan: SweepPlan) -> tuple[DeckFile, ...]:
+    found: dict[tuple[str, str], DeckFile] = {}
+    for corner in plan.corners:
+        if corner.deck is not None:
+            for file in kept_files(corner.deck.files, roots_of(corner.bench)):
+                found.setdefault((file.path, file.sha256), file)
+    return tuple(found.values())
