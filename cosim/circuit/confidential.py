@@ -162,22 +162,43 @@ def withhold(result: TransientResult, deck: Deck, roots: Roots) -> TransientResu
         return result
     return replace(
         result,
-        deck=_kept_lines(result, deck.files, roots),
+        deck=kept_lines(result.deck, result.origins, deck.files, roots),
         data=_kept_data(result.data, deck.data_files, roots),
-        log=_kept_log(result.log),
+        log=kept_log(result.log, roots),
         warnings=_kept_warnings(result, roots),
         remarks=(),
         origins=(),
     )
 
 
-def _kept_lines(
-    result: TransientResult, files: Sequence[DeckFile], roots: Roots
+def kept_lines(
+    lines: Sequence[str],
+    origins: Sequence[tuple[str, int]],
+    files: Sequence[DeckFile],
+    roots: Roots,
 ) -> tuple[str, ...]:
+    """Take the lines that come from confidential files out of a deck as it is sent.
+
+    Parameters
+    ----------
+    lines : sequence of str
+        The deck.
+    origins : sequence of (str, int)
+        File and line of each.
+    files : sequence of DeckFile
+        Every file that was read.
+    roots : Roots
+        Confidential folders.
+
+    Returns
+    -------
+    tuple of str
+        A comment says how many lines of which file with which SHA-256 stood there.
+    """
     sums = {file.path: file.sha256 for file in files}
-    covered = {path: roots.cover(path) for path in {path for path, _ in result.origins}}
+    covered = {path: roots.cover(path) for path in {path for path, _ in origins}}
     kept: list[str] = []
-    pairs = zip(result.deck, (path for path, _ in result.origins), strict=True)
+    pairs = zip(lines, (path for path, _ in origins), strict=True)
     for path, run in groupby(pairs, key=lambda pair: pair[1]):
         texts = [text for text, _ in run]
         if covered[path]:
@@ -195,7 +216,23 @@ def _kept_data(data: dict[str, bytes], files: Sequence[DataFile], roots: Roots) 
     return {name: left_out.get(name, content) for name, content in data.items()}
 
 
-def _kept_log(log: Sequence[str]) -> tuple[str, ...]:
+def kept_log(log: Sequence[str], roots: Roots) -> tuple[str, ...]:
+    """Take out of a log what may quote a confidential file.
+
+    Parameters
+    ----------
+    log : sequence of str
+        Lines of the simulator's log.
+    roots : Roots
+        Confidential folders; without any the log is as it was.
+
+    Returns
+    -------
+    tuple of str
+        The lines that tell of the run, and how many were left out.
+    """
+    if not roots.folders:
+        return tuple(log)
     kept = [line for line in log if not line or _OF_THE_RUN.match(line)]
     if len(kept) < len(log):
         kept.append(f"({len(log) - len(kept)} lines that may quote confidential files left out)")

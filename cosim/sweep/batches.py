@@ -3,12 +3,11 @@
 import time
 import traceback
 from collections.abc import Callable, Iterable, Iterator
-from collections.abc import Set as AbstractSet
 from dataclasses import dataclass, replace
 from functools import partial
 from itertools import islice
 from math import nan
-from typing import Any
+from typing import Any, TypeVar
 
 from cosim.errors import (
     ConvergenceError,
@@ -21,6 +20,8 @@ from cosim.errors import (
     SimulatorMemoryError,
     SimulatorTimeoutError,
 )
+
+T = TypeVar("T")
 
 DONE = "done"
 FAULT = "fault"
@@ -228,16 +229,16 @@ def _one_for_each(batch: Batch, outcomes: Iterable[Outcome]) -> tuple[Outcome, .
     return known
 
 
-def take_slice(batches: Iterable[Batch], part: int, parts: int) -> Iterator[Batch]:
-    """Take every n-th batch of a plan, for jobs that share it out among themselves.
+def take_slice(groups: Iterable[T], part: int, parts: int) -> Iterator[T]:
+    """Take every n-th group of runs, for jobs that share a plan out among themselves.
 
-    The rule counts batches of the whole plan, so that it gives every job the same share whatever
-    has been finished meanwhile: slice first, then `leave_out` what is there.
+    The rule counts groups of the whole plan, so that it gives every job the same share whatever
+    has been finished meanwhile: slice first, then leave out what is there.
 
     Parameters
     ----------
-    batches : iterable of Batch
-        All batches of the plan, in its order.
+    groups : iterable
+        All groups or batches of the plan, in its order.
     part : int
         Which share, from 1.
     parts : int
@@ -245,8 +246,8 @@ def take_slice(batches: Iterable[Batch], part: int, parts: int) -> Iterator[Batc
 
     Returns
     -------
-    iterator of Batch
-        The batches part, part + parts, part + 2 parts, ..., counted from 1.
+    iterator
+        The groups part, part + parts, part + 2 parts, ..., counted from 1.
 
     Raises
     ------
@@ -258,7 +259,7 @@ def take_slice(batches: Iterable[Batch], part: int, parts: int) -> Iterator[Batc
             f"slice {part}/{parts}: the first number must lie between 1 and the second",
             hint="3/64 is the third of 64 shares",
         )
-    return islice(batches, part - 1, None, parts)
+    return islice(groups, part - 1, None, parts)
 
 
 def parse_slice(text: str) -> tuple[int, int]:
@@ -285,24 +286,3 @@ def parse_slice(text: str) -> tuple[int, int]:
         raise InputError(f"slice {text!r}: wanted two whole numbers", hint="write it as 3/64")
     take_slice((), int(part), int(parts))
     return int(part), int(parts)
-
-
-def leave_out(batches: Iterable[Batch], finished: AbstractSet[int]) -> Iterator[Batch]:
-    """Leave out runs that need not be made again.
-
-    Parameters
-    ----------
-    batches : iterable of Batch
-        The batches of a plan or a slice of it.
-    finished : set of int
-        Numbers of the runs to leave out.
-
-    Yields
-    ------
-    Batch
-        With the tasks that remain; batches of which none remains are left out.
-    """
-    for batch in batches:
-        tasks = tuple(task for task in batch.tasks if task.number not in finished)
-        if tasks:
-            yield batch if len(tasks) == len(batch.tasks) else replace(batch, tasks=tasks)

@@ -2,6 +2,7 @@
 
 import hashlib
 import json
+import os
 import platform
 from collections.abc import Mapping
 from dataclasses import asdict, dataclass, field
@@ -143,7 +144,7 @@ def make_sweep_record(plan: SweepPlan, bench: Testbench) -> SweepRecord:
         content=content,
         testbench=bench.to_toml(),
         source=bench.source,
-        folder=bench.folder,
+        folder=os.path.abspath(bench.folder),
         deck_files=_deck_files(plan),
         versions=package_versions(),
         host=f"{platform.node()} ({platform.platform()})",

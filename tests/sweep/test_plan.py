@@ -18,7 +18,8 @@ from scipy.stats import qmc
 import cosim
 from cosim.capture import make_plan
 from cosim.sweep.keys import flattened
-from cosim.sweep.plan import SweepPlan, SweepRun, make_sweep
+from cosim.sweep.plan import SweepPlan, SweepRun
+from cosim.sweep.planning import make_sweep
 from cosim.sweep.samples import sample_seed, uniform, unit_samples
 from cosim.sweep.table import MonteCarloTable, VaryTable
 from cosim.testbench import load_testbench
@@ -88,7 +89,7 @@ threshold = "3.5 mV um"
 current_factor = "1 % um"
 """
 ELSEWHERE = """import json, sys
-from cosim.sweep.plan import make_sweep
+from cosim.sweep.planning import make_sweep
 from cosim.testbench import load_testbench
 plan = make_sweep(load_testbench(sys.argv[1]))
 rows = [[r.identity, r.seed, dict(r.values), r.waveform_key, r.deck_key] for r in plan]

@@ -18,7 +18,8 @@ from scipy import stats
 from cosim.circuit.analysis import TransientRequest
 from cosim.circuit.simulator import simulate
 from cosim.decks import altered_deck, read_deck
-from cosim.sweep.plan import SweepPlan, make_sweep
+from cosim.sweep.plan import SweepPlan
+from cosim.sweep.planning import make_sweep
 from cosim.testbench import make_testbench
 from cosim.waveform import FloatArray
 from tests import sources

@@ -9,7 +9,7 @@ import numpy as np
 import pytest
 
 from cosim.errors import DeckError, InputError, TestbenchError, UnknownNameError
-from cosim.sweep.plan import make_sweep
+from cosim.sweep.planning import make_sweep
 from cosim.sweep.table import read_sweep
 from cosim.testbench import Testbench, load_testbench, make_testbench
 
