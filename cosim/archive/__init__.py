@@ -26,27 +26,45 @@ The rooms: layout (names and root attributes), encoding, decoding, table, files 
 locking, opening), store (the functions below).
 """
 
+from cosim.archive.consolidation import consolidate, merge
 from cosim.archive.layout import NumberedRun, RunInfo
+from cosim.archive.rows import Row
+from cosim.archive.series import Series
 from cosim.archive.store import (
     append,
-    consolidate,
     read,
     read_table,
     read_units,
+    record_numbers,
     run_numbers,
     write,
     write_part,
 )
+from cosim.archive.sweeps import compact, create, read_plan, read_series, write_rows
+from cosim.archive.table import cells_of
+from cosim.archive.verification import Verification, verify
 
 __all__ = [
     "NumberedRun",
+    "Row",
     "RunInfo",
+    "Series",
+    "Verification",
     "append",
+    "cells_of",
+    "compact",
     "consolidate",
+    "create",
+    "merge",
     "read",
+    "read_plan",
+    "read_series",
     "read_table",
     "read_units",
+    "record_numbers",
     "run_numbers",
+    "verify",
     "write",
     "write_part",
+    "write_rows",
 ]

@@ -1,6 +1,7 @@
 """Values to HDF5: a dataclass becomes a group, its fields become datasets and subgroups."""
 
 import dataclasses
+import hashlib
 import json
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
@@ -10,10 +11,12 @@ import h5py
 import numpy as np
 import numpy.typing as npt
 
-from cosim.archive.layout import TEXT, member_name, storage_options
+from cosim.archive.layout import TEXT, TEXTS, member_name, storage_options
 from cosim.errors import ArchiveError
 
 _NO_METADATA: Mapping[str, Any] = {}
+# Decks, which many runs have in common; the words of a result are shorter.
+_SHARED_TEXT = 512
 _WORD = np.iinfo(np.int64)
 _ARRAY_TYPES = "?efdFD" + np.typecodes["AllInteger"]
 
@@ -187,9 +190,33 @@ def _write_integer(group: Any, name: str, value: int, context: _Context) -> None
 
 def _write_text(group: Any, name: str, value: str) -> None:
     plain = is_plain_text(value)
+    if plain and len(value) >= _SHARED_TEXT and TEXTS in group.file:
+        group[name] = shared_text(group.file[TEXTS], value)
+        return
     dataset = group.create_dataset(name, data=value if plain else json.dumps(value), dtype=TEXT)
     if not plain:
         dataset.attrs["quoting"] = "json"
+
+
+def shared_text(texts: Any, value: str) -> Any:
+    """Find or make the one dataset that holds a text, for a link to it where the text belongs.
+
+    Parameters
+    ----------
+    texts : h5py.Group
+        The group of the texts of this file.
+    value : str
+        A text.
+
+    Returns
+    -------
+    h5py.Dataset
+        Its name is the SHA-256 of the text as UTF-8.
+    """
+    name = hashlib.sha256(value.encode("utf-8")).hexdigest()
+    if name not in texts:
+        texts.create_dataset(name, data=value, dtype=TEXT)
+    return texts[name]
 
 
 def _write_array(

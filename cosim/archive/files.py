@@ -1,31 +1,22 @@
-"""Archive files as a whole: found, opened, locked, and published by a rename.
-
-HDF5 makes no promise for a file whose writer was killed, and a full disk can crash its library.
-So no HDF5 file is ever changed in place: a new one is made in memory and put in the place of the
-old one by a rename, which either happens or does not.
-"""
+"""Archive files as a whole: named, listed, and opened while others may be writing."""
 
 import contextlib
 import errno
-import fcntl
-import glob
-import io
 import os
 import stat
 import time
 import uuid
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Sequence
 from pathlib import Path
 from typing import Any, TypeVar
 
 import h5py
 
-from cosim.archive.layout import LIBRARY_BOUNDS, check_root, write_root
+from cosim.archive.layout import check_root
 from cosim.errors import ArchiveError, CosimError, near_names
 
-_LOCK_TIMEOUT = 60.0
 _SNAPSHOT_TRIES = 50
-_NO_SPACE = (errno.ENOSPC, errno.EDQUOT, errno.EFBIG)
+_MERGED = "m.h5"
 _HDF5_ERRORS = (OSError, RuntimeError, LookupError, ValueError, TypeError)
 
 T = TypeVar("T")
@@ -78,22 +69,62 @@ def list_parts(path: Path) -> tuple[Path, ...]:
     )
 
 
-def new_part_path(path: Path) -> Path:
+def new_part_path(path: Path, parts: Sequence[Path] = ()) -> Path:
     """Give a name for a part that was never used before and sorts behind the others.
 
     Parameters
     ----------
     path : path
         NAME.h5.
+    parts : sequence of Path
+        The parts that are there, in their order.
 
     Returns
     -------
     Path
         A file in the folder of the parts.
     """
-    # A name that came back would hide the loss of the first part of that name from a reader.
-    name = f"{time.time_ns():020d}-{uuid.uuid4().hex[:8]}.h5"
-    return parts_folder(path) / name
+    # A name that came back would hide the loss of the first part of that name from a reader; and
+    # the clock may have been set back since the last part.
+    stamp = max([time.time_ns(), *(_stamp(part) + 1 for part in parts[-1:])])
+    return parts_folder(path) / f"{stamp:020d}-{uuid.uuid4().hex[:8]}.h5"
+
+
+def merged_part_path(parts: Sequence[Path]) -> Path:
+    """Give a name for a part that takes the place of others.
+
+    Parameters
+    ----------
+    parts : sequence of Path
+        Neighbours in the order of publication, at least one.
+
+    Returns
+    -------
+    Path
+        A name that sorts behind the parts before the last of them, and before what follows it.
+    """
+    return parts[-1].with_name(f"{_stamp(parts[-1]):020d}-{uuid.uuid4().hex[:8]}{_MERGED}")
+
+
+def is_merged(part: Path) -> bool:
+    """Tell whether a part was made from others.
+
+    Parameters
+    ----------
+    part : Path
+        The part.
+
+    Returns
+    -------
+    bool
+        True if `merged_part_path` gave its name.
+    """
+    return part.name.endswith(_MERGED)
+
+
+def _stamp(part: Path) -> int:
+    digits = part.name.partition("-")[0]
+    return int(digits) if digits.isdecimal() else 0
 
 
 def snapshot(path: Path, action: Callable[[tuple[Path, ...]], T]) -> T:
@@ -125,14 +156,26 @@ def snapshot(path: Path, action: Callable[[tuple[Path, ...]], T]) -> T:
             return action((path, *parts))
         except FileNotFoundError:
             if not path.exists():
-                raise _missing(path) from None
+                raise missing(path) from None
     raise ArchiveError(
         f"{path}: the parts of the archive change faster than they can be read",
         hint="wait until its writer has finished, and try again",
     )
 
 
-def _missing(path: Path) -> ArchiveError:
+def missing(path: Path) -> ArchiveError:
+    """Give the error that says that there is no archive.
+
+    Parameters
+    ----------
+    path : Path
+        NAME.h5.
+
+    Returns
+    -------
+    ArchiveError
+        The error to raise.
+    """
     if list_parts(path):
         return ArchiveError(
             f"{path}: there is no such file, though its parts are in {parts_folder(path)}",
@@ -209,190 +252,3 @@ def _unreadable(path: Path, error: OSError) -> ArchiveError:
         f"{path}: the HDF5 file is {what} ({error})",
         hint="copy it again from where it came, or run the simulation again",
     )
-
-
-@contextlib.contextmanager
-def edited(image: io.BytesIO, path: Path) -> Iterator[Any]:
-    """Open a file in memory for writing; an empty one becomes an archive without runs.
-
-    Parameters
-    ----------
-    image : io.BytesIO
-        Content of the file.
-    path : Path
-        The name that stands in messages.
-
-    Yields
-    ------
-    h5py.File
-        The open file.
-
-    Raises
-    ------
-    ArchiveError
-        If HDF5 refuses.
-    """
-    new = not image.getbuffer().nbytes
-    try:
-        with h5py.File(image, "w" if new else "r+", libver=LIBRARY_BOUNDS) as file:
-            if new:
-                write_root(file)
-            yield file
-    except CosimError:
-        raise
-    except (OSError, RuntimeError, LookupError, ValueError) as error:
-        raise ArchiveError(
-            f"{path}: not written, HDF5 refused: {error}",
-            hint="write to a new file; if that fails too, a value has no place in an archive",
-        ) from error
-
-
-@contextlib.contextmanager
-def locked(path: Path) -> Iterator[None]:
-    """Keep other writers of an archive out, and clear away what killed ones have left.
-
-    Parameters
-    ----------
-    path : path
-        NAME.h5.
-
-    Yields
-    ------
-    None
-        While the lock is held.
-
-    Raises
-    ------
-    ArchiveError
-        If another writer holds the lock for a minute, or the folder does not allow one.
-    """
-    side = path.with_name(f".{path.name}.lock")
-    try:
-        handle = _take_lock(side)
-    except OSError as error:
-        raise unwritable(path, error) from error
-    try:
-        for folder in (path.parent, parts_folder(path)):
-            for item in folder.glob(f".{glob.escape(path.name)}.*.tmp"):
-                with contextlib.suppress(OSError):
-                    item.unlink()
-        yield
-    finally:
-        # Removed while it is still held: whoever waits for it sees that its file is gone.
-        with contextlib.suppress(OSError):
-            os.unlink(side)
-        with contextlib.suppress(OSError):
-            os.close(handle)
-
-
-def _take_lock(side: Path) -> int:
-    deadline = time.monotonic() + _LOCK_TIMEOUT
-    while time.monotonic() < deadline:
-        handle = os.open(side, os.O_RDWR | os.O_CREAT | os.O_CLOEXEC, 0o666)
-        try:
-            fcntl.flock(handle, fcntl.LOCK_EX | fcntl.LOCK_NB)
-            if os.fstat(handle).st_nlink:
-                return handle
-        except BlockingIOError:
-            time.sleep(0.01)
-        except OSError:
-            os.close(handle)
-            raise
-        os.close(handle)
-    raise ArchiveError(
-        f"{side}: another process has been writing this archive for {_LOCK_TIMEOUT:.0f} s",
-        hint="wait for it to finish, or write to another file",
-    )
-
-
-def publish(path: Path, image: io.BytesIO, archive: Path) -> None:
-    """Put a finished file in its place: temporary name, fsync, rename, fsync of the folder.
-
-    Parameters
-    ----------
-    path : Path
-        Where the file appears.
-    image : io.BytesIO
-        Its content.
-    archive : Path
-        NAME.h5 that it belongs to, whose lock is held.
-
-    Raises
-    ------
-    ArchiveError
-        If it cannot be written; what stood at `path` is untouched.
-    """
-    temporary = path.with_name(f".{archive.name}.{uuid.uuid4().hex[:8]}.tmp")
-    try:
-        try:
-            with image.getbuffer() as content:
-                _write_file(temporary, content, path)
-            os.replace(temporary, path)
-        except BaseException:
-            with contextlib.suppress(OSError):
-                os.unlink(temporary)
-            raise
-        _sync_folder(path.parent)
-    except OSError as error:
-        raise unwritable(path, error) from error
-
-
-def _write_file(temporary: Path, content: memoryview, path: Path) -> None:
-    handle = os.open(temporary, os.O_WRONLY | os.O_CREAT | os.O_EXCL | os.O_CLOEXEC, 0o666)
-    try:
-        with contextlib.suppress(FileNotFoundError):
-            os.fchmod(handle, stat.S_IMODE(os.stat(path).st_mode))
-        written = 0
-        while written < len(content):
-            written += os.write(handle, content[written:])
-        os.fsync(handle)
-    finally:
-        os.close(handle)
-
-
-def _sync_folder(folder: Path) -> None:
-    handle = os.open(folder, os.O_RDONLY | os.O_CLOEXEC)
-    try:
-        os.fsync(handle)
-    finally:
-        os.close(handle)
-
-
-def unwritable(path: Path, error: OSError) -> ArchiveError:
-    """Give the error that says why a file cannot be written, and what to do.
-
-    Parameters
-    ----------
-    path : Path
-        The file.
-    error : OSError
-        What the system said.
-
-    Returns
-    -------
-    ArchiveError
-        The error to raise.
-    """
-    if isinstance(error, ArchiveError):
-        return error
-    if error.errno in _NO_SPACE:
-        return ArchiveError(
-            f"{path}: not written, no space is left on the disk or in the quota",
-            hint="free some space, or write to another folder; the archive is as it was",
-        )
-    if error.errno in (errno.EACCES, errno.EPERM, errno.EROFS):
-        return ArchiveError(
-            f"{path}: not written, no permission to write in {path.parent}",
-            hint="choose another folder",
-        )
-    if error.errno == errno.ENOENT:
-        return ArchiveError(
-            f"{path}: not written, the folder {path.parent} does not exist", hint="make it first"
-        )
-    if error.errno == errno.ENOLCK:
-        return ArchiveError(
-            f"{path}: not written, the file system cannot lock files",
-            hint="write to a local folder and move the archive afterwards",
-        )
-    reason = os.strerror(error.errno) if error.errno else str(error)
-    return ArchiveError(f"{path}: not written: {reason}", hint="choose another file name")

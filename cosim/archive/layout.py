@@ -19,7 +19,14 @@ SCHEMA_VERSION = 1
 # (the back references of a table of 4,085 columns are more), and small groups take less space.
 LIBRARY_BOUNDS = ("v108", "latest")
 
+# Group of the long texts that the runs of a sweep share; files of single runs have none.
+TEXTS = "texts"
+# What a sweep was planned with.
+PLAN = "plan"
+
 TEXT = h5py.string_dtype()
+TEXT_TYPE = h5py.h5t.py_create(TEXT, logical=True)
+TEXT_OBJECT = h5py.h5t.py_create(TEXT)
 
 
 @dataclass(frozen=True, slots=True)

@@ -1,31 +1,29 @@
-"""Write, append, read, list and merge: what the rooms above use."""
+"""Write, append, read and list: what the rooms above use for archives of single runs."""
 
 import io
 import os
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Collection, Iterable, Mapping, Sequence
 from contextlib import suppress
 from pathlib import Path
 from typing import Any
 
-import h5py
 import numpy.typing as npt
 
 from cosim.archive.decoding import read_object
 from cosim.archive.encoding import is_instance, write_object
-from cosim.archive.files import (
-    edited,
-    list_parts,
-    locked,
-    new_part_path,
-    opened,
-    parts_folder,
-    publish,
-    snapshot,
-    unwritable,
+from cosim.archive.files import list_parts, new_part_path, opened, parts_folder, snapshot
+from cosim.archive.layout import DONE, PLAN, NumberedRun, RunInfo, run_group_name
+from cosim.archive.publishing import edited, locked, publish, unwritable
+from cosim.archive.table import (
+    Column,
+    column_names,
+    load_ids,
+    load_table,
+    row_of,
+    stack,
+    write_table,
 )
-from cosim.archive.layout import DONE, NumberedRun, RunInfo, members, run_group_name
-from cosim.archive.table import Column, load_ids, load_table, row_of, stack, write_table
-from cosim.errors import ArchiveError
+from cosim.errors import ArchiveError, near_names
 
 
 def write(path: str | os.PathLike[str], run: object, *, info: RunInfo = DONE) -> None:
@@ -46,7 +44,7 @@ def write(path: str | os.PathLike[str], run: object, *, info: RunInfo = DONE) ->
         If a value has no place in an archive, the file cannot be written, or `path` is something
         else than an archive or one with parts. What was there is then untouched.
     """
-    target = _resolved(path)
+    target = resolved(path)
     with locked(target):
         if list_parts(target):
             raise ArchiveError(
@@ -54,8 +52,12 @@ def write(path: str | os.PathLike[str], run: object, *, info: RunInfo = DONE) ->
                 "with the new one",
                 hint="choose another name, or move the old archive with its parts away",
             )
-        with suppress(FileNotFoundError), opened(target):
-            pass
+        with suppress(FileNotFoundError), opened(target) as file:
+            if PLAN in file:
+                raise ArchiveError(
+                    f"{target}: the archive holds a sweep, which one run would replace",
+                    hint="choose another name, or move the sweep away",
+                )
         _publish_runs(target, [NumberedRun(1, run, info)], target)
 
 
@@ -83,7 +85,7 @@ def append(path: str | os.PathLike[str], run: object, *, info: RunInfo = DONE) -
         If `path` is something else than an archive or cannot be read or written, or a value has
         no place in an archive. What was there is then untouched.
     """
-    target = _resolved(path)
+    target = resolved(path)
     with locked(target):
         if not target.exists() and not list_parts(target):
             _publish_runs(target, [NumberedRun(1, run, info)], target)
@@ -124,59 +126,16 @@ def write_part(path: str | os.PathLike[str], runs: Sequence[NumberedRun]) -> Pat
     """
     if not runs:
         raise ArchiveError("a part needs at least one run, got none", hint="publish when there is")
-    target = _resolved(path)
+    target = resolved(path)
     with locked(target):
         run_numbers(target)
-        part = new_part_path(target)
+        part = new_part_path(target, list_parts(target))
         try:
             part.parent.mkdir(exist_ok=True)
         except OSError as error:
             raise unwritable(part, error) from error
         _publish_runs(part, runs, target)
     return part
-
-
-def consolidate(path: str | os.PathLike[str]) -> int:
-    """Merge the parts of an archive into NAME.h5 and remove them.
-
-    Works in memory, which must hold the whole archive twice.
-
-    Parameters
-    ----------
-    path : path
-        NAME.h5.
-
-    Returns
-    -------
-    int
-        How many parts were merged.
-
-    Raises
-    ------
-    ArchiveError
-        If a file cannot be read or written. Whatever happens, no run is lost: the parts stay
-        until NAME.h5 holds them.
-    """
-    target = _resolved(path)
-    with locked(target):
-        run_numbers(target)
-        parts = list_parts(target)
-        if parts:
-            image = io.BytesIO(target.read_bytes())
-            with edited(image, target) as file:
-                for part in parts:
-                    with opened(part) as source:
-                        _copy_runs(source, file)
-                write_table(file, _load_tables((target, *parts)))
-            publish(target, image, target)
-        try:
-            for part in parts:
-                os.unlink(part)
-        except OSError as error:
-            raise unwritable(parts_folder(target), error) from error
-        with suppress(OSError):
-            os.rmdir(parts_folder(target))
-    return len(parts)
 
 
 def read(path: str | os.PathLike[str], types: Mapping[str, type], run: int | None = None) -> Any:
@@ -207,7 +166,7 @@ def read(path: str | os.PathLike[str], types: Mapping[str, type], run: int | Non
 
 
 def _read_run(files: Sequence[Path], types: Mapping[str, type], run: int | None) -> Any:
-    owners = _owners(files)
+    owners = owners_of(files)
     if not owners:
         raise ArchiveError(f"{files[0]}: the archive holds no runs yet", hint="run it first")
     number = max(owners) if run is None else run
@@ -216,11 +175,29 @@ def _read_run(files: Sequence[Path], types: Mapping[str, type], run: int | None)
             f"{files[0]}: there is no run {number}", hint=f"runs: {_ranges(sorted(owners))}"
         )
     with opened(owners[number]) as file:
-        return read_object(file["runs"][run_group_name(number)], types)
+        name = run_group_name(number)
+        # Of the link and not of the group, which may be damaged.
+        if not file["runs"].id.links.exists(name.encode()):
+            raise ArchiveError(
+                f"{files[0]}: of run {number} only its row in the table is kept, not the whole run",
+                hint=f"`qcosim rerun {number}` makes it again",
+            )
+        return read_object(file["runs"][name], types)
 
 
-def _owners(files: Iterable[Path]) -> dict[int, Path]:
-    """Find the file that holds each run; of several, the one that was published last."""
+def owners_of(files: Iterable[Path]) -> dict[int, Path]:
+    """Find the file that holds each run; of several, the one that was published last.
+
+    Parameters
+    ----------
+    files : iterable of Path
+        NAME.h5 and its parts, in the order of their publication.
+
+    Returns
+    -------
+    dict of int to Path
+        File by run number.
+    """
     owners: dict[int, Path] = {}
     for path in files:
         with opened(path) as file:
@@ -240,27 +217,33 @@ def _ranges(numbers: Sequence[int]) -> str:
     return ", ".join(shown[:12]) + (f" and {len(shown) - 12} more ranges" if shown[12:] else "")
 
 
-def read_table(path: str | os.PathLike[str]) -> dict[str, npt.NDArray[Any]]:
+def read_table(
+    path: str | os.PathLike[str], columns: Collection[str] | None = None
+) -> dict[str, npt.NDArray[Any]]:
     """Read the table of all runs, without reading any run.
 
     Parameters
     ----------
     path : path
         NAME.h5; its parts are found beside it.
+    columns : collection of str or None
+        Names of the columns to read; None for all.
 
     Returns
     -------
     dict of str to ndarray, each of shape (runs,)
-        The columns, sorted by "id": bool, int64, float64 (NaN where a run has no such value) or
-        str objects. First "id", "kind", "status", "start_time" and "wall_time" (s), then the
-        scalar fields of the runs, "free_frame.average_gate_fidelity". Empty without runs.
+        The columns, sorted by "id", which is always among them: bool, int64, float64 (NaN where a
+        run has no such value) or str objects. First "id", "kind", "status", "start_time" and
+        "wall_time" (s), in a sweep "checksum", then the scalar fields of the runs,
+        "free_frame.average_gate_fidelity". Empty without runs.
 
     Raises
     ------
     ArchiveError
-        If there is no such archive, or it cannot be read.
+        If there is no such archive or column, or it cannot be read.
     """
-    return {name: column.values for name, column in snapshot(Path(path), _load_tables).items()}
+    table = _read_columns(Path(path), columns)
+    return {name: column.values for name, column in table.items()}
 
 
 def read_units(path: str | os.PathLike[str]) -> dict[str, str]:
@@ -281,15 +264,27 @@ def read_units(path: str | os.PathLike[str]) -> dict[str, str]:
     ArchiveError
         If there is no such archive, or it cannot be read.
     """
-    return {name: column.unit for name, column in snapshot(Path(path), _load_tables).items()}
+    return {name: column.unit for name, column in _read_columns(Path(path), None).items()}
 
 
-def _load_tables(files: Iterable[Path]) -> dict[str, Column]:
-    tables = []
-    for path in files:
-        with opened(path) as file:
-            tables.append(load_table(file))
-    return stack(tables)
+def _read_columns(path: Path, columns: Collection[str] | None) -> dict[str, Column]:
+    names: dict[str, None] = {}
+
+    def load(files: Iterable[Path]) -> dict[str, Column]:
+        tables = []
+        for item in files:
+            with opened(item) as file:
+                names.update(dict.fromkeys(column_names(file)))
+                tables.append(load_table(file, None if columns is None else {*columns, "id"}))
+        return stack(tables)
+
+    table = snapshot(path, load)
+    for name in columns or () if names else ():
+        if name not in names:
+            raise ArchiveError(
+                f"{path}: the table has no column '{name}'", hint=near_names(name, list(names))
+            )
+    return table
 
 
 def run_numbers(path: str | os.PathLike[str]) -> tuple[int, ...]:
@@ -311,11 +306,52 @@ def run_numbers(path: str | os.PathLike[str]) -> tuple[int, ...]:
         If there is no such archive, or it cannot be read.
     """
 
-    return tuple(sorted(snapshot(Path(path), _owners)))
+    return tuple(sorted(snapshot(Path(path), owners_of)))
 
 
-def _resolved(path: str | os.PathLike[str]) -> Path:
-    """Follow links, so that a rename replaces the file and not the link to it."""
+def record_numbers(path: str | os.PathLike[str]) -> tuple[int, ...]:
+    """List the numbers of the runs that are kept whole, and not as a row of the table only.
+
+    Parameters
+    ----------
+    path : path
+        NAME.h5; its parts are found beside it.
+
+    Returns
+    -------
+    tuple of int
+        Rising.
+
+    Raises
+    ------
+    ArchiveError
+        If there is no such archive, or it cannot be read.
+    """
+
+    def load(files: Iterable[Path]) -> set[int]:
+        whole: set[int] = set()
+        for item in files:
+            with opened(item) as file:
+                # What a later file says of a run takes the place of all that was known of it.
+                whole = whole.difference(load_ids(file)) | {int(name) for name in file["runs"]}
+        return whole
+
+    return tuple(sorted(snapshot(Path(path), load)))
+
+
+def resolved(path: str | os.PathLike[str]) -> Path:
+    """Follow links, so that a rename replaces the file and not the link to it.
+
+    Parameters
+    ----------
+    path : path
+        NAME.h5.
+
+    Returns
+    -------
+    Path
+        The file itself, which need not exist.
+    """
     return Path(os.path.realpath(path))
 
 
@@ -339,33 +375,3 @@ def _write_runs(file: Any, runs: Sequence[NumberedRun]) -> None:
         group.attrs["status"] = entry.info.status
         group.attrs["start_time"] = entry.info.start_time
         group.attrs["wall_time"] = entry.info.wall_time
-
-
-def _copy_runs(source: Any, file: Any) -> None:
-    """Copy the runs of a part into another file, in place of those of the same numbers there."""
-    for name, group in members(source["runs"]):
-        if name in file["runs"]:
-            del file["runs"][name]
-        source.copy(group, file["runs"], name=name)
-        _attach_copied_scales(file["runs"][name])
-
-
-def _attach_copied_scales(copied: Any) -> None:
-    """Give the arrays of a copied group their scales again.
-
-    HDF5 copies the references between arrays and scales as they are, addresses in the old file,
-    with or without its option to expand references. The labels of the dimensions name the scales.
-    """
-    arrays = []
-    for _, member in members(copied):
-        if isinstance(member, h5py.Group):
-            _attach_copied_scales(member)
-        elif member.ndim:
-            arrays.append(member)
-            for attribute in ("DIMENSION_LIST", "REFERENCE_LIST"):
-                if attribute in member.attrs:
-                    del member.attrs[attribute]
-    for array in arrays:
-        if not h5py.h5ds.is_scale(array.id):
-            for dimension in array.dims:
-                dimension.attach_scale(copied[dimension.label])

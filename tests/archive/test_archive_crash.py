@@ -20,6 +20,7 @@ from cosim.archive import (
     append,
     consolidate,
     files,
+    publishing,
     read,
     read_table,
     run_numbers,
@@ -330,7 +331,7 @@ def test_lock_whose_file_was_removed_meanwhile_is_taken_again(
         real_flock(handle, operation)
 
     monkeypatch.setattr(fcntl, "flock", flock)
-    with files.locked(path):
+    with publishing.locked(path):
         assert (tmp_path / ".a.h5.lock").exists()
 
 
@@ -339,8 +340,11 @@ def test_lock_that_is_held_is_an_error_in_the_end(
 ) -> None:
     path = tmp_path / "a.h5"
     write(path, make(1.0))
-    monkeypatch.setattr(files, "_LOCK_TIMEOUT", 0.05)
-    with files.locked(path), pytest.raises(ArchiveError, match="another process has been writing"):
+    monkeypatch.setattr(publishing, "_LOCK_TIMEOUT", 0.05)
+    with (
+        publishing.locked(path),
+        pytest.raises(ArchiveError, match="another process has been writing"),
+    ):
         append(path, make(2.0))
     assert append(path, make(2.0)) == 2
 

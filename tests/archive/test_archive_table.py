@@ -20,7 +20,7 @@ from cosim.archive import (
     write,
     write_part,
 )
-from cosim.archive.files import edited
+from cosim.archive.publishing import edited
 from cosim.archive.table import Column, write_table
 from cosim.errors import ArchiveError
 
