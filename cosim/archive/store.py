@@ -177,7 +177,7 @@ def _read_run(files: Sequence[Path], types: Mapping[str, type], run: int | None)
     with opened(owners[number]) as file:
         name = run_group_name(number)
         # Of the link and not of the group, which may be damaged.
-        if not file["runs"].id.links.exists(name.encode()):
+        if name not in set(file["runs"]):
             raise ArchiveError(
                 f"{files[0]}: of run {number} only its row in the table is kept, not the whole run",
                 hint=f"`qcosim rerun {number}` makes it again",
