@@ -9,6 +9,7 @@ from typing import Any
 
 import numpy.typing as npt
 
+from cosim.archive.checksums import CHECKSUM
 from cosim.archive.decoding import read_object
 from cosim.archive.encoding import is_instance, write_object
 from cosim.archive.files import list_parts, new_part_path, opened, parts_folder, snapshot
@@ -176,13 +177,32 @@ def _read_run(files: Sequence[Path], types: Mapping[str, type], run: int | None)
         )
     with opened(owners[number]) as file:
         name = run_group_name(number)
-        # Of the link and not of the group, which may be damaged.
-        if name not in set(file["runs"]):
+        if name not in set(file["runs"]) and number in rows_only(file):
             raise ArchiveError(
                 f"{files[0]}: of run {number} only its row in the table is kept, not the whole run",
                 hint=f"`qcosim rerun {number}` makes it again",
             )
         return read_object(file["runs"][name], types)
+
+
+def rows_only(file: Any) -> set[int]:
+    """Find the runs of an open file of which only the row in the table was kept.
+
+    Parameters
+    ----------
+    file : h5py.File
+        The open file.
+
+    Returns
+    -------
+    set of int
+        Their numbers. A run without a checksum, which was written whole, is never among them.
+    """
+    table = load_table(file, ("id", CHECKSUM))
+    if CHECKSUM not in table:
+        return set()
+    pairs = zip(table["id"].values.tolist(), table[CHECKSUM].values.tolist(), strict=True)
+    return {number for number, checksum in pairs if checksum}.difference(map(int, file["runs"]))
 
 
 def owners_of(files: Iterable[Path]) -> dict[int, Path]:

@@ -12,6 +12,7 @@ from cosim.archive.checksums import CHECKSUM, record_digest, row_digests, series
 from cosim.archive.files import opened, snapshot
 from cosim.archive.layout import PLAN, run_group_name
 from cosim.archive.series import load_grid, stack_groups
+from cosim.archive.store import rows_only
 from cosim.archive.table import load_table
 from cosim.errors import ArchiveError
 
@@ -89,6 +90,8 @@ def _verify_file(file: Any) -> tuple[set[int], set[int], list[str]]:
             if kept and kept != found:
                 damaged.append(f"the row or a series of run {number}")
     whole = {int(name) for name in file["runs"]}
+    for number in sorted(set(numbers).difference(whole, rows_only(file))):
+        damaged.append(f"the record of run {number}, which is lost")
     for number in sorted(whole):
         if not _is_record_whole(file["runs"][run_group_name(number)]):
             damaged.append(f"the record of run {number}")
