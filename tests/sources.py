@@ -141,3 +141,20 @@ ZVEREV = (
     f"A. I. Zverev, Handbook of Filter Synthesis, {MEMORY}; overshoot of the step response "
     "computed from the poles"
 )
+CLOPPER_PEARSON = (
+    'C. J. Clopper, E. S. Pearson, "The use of confidence or fiducial limits illustrated in the '
+    f'case of the binomial", Biometrika 26, 404 (1934), {MEMORY}'
+)
+NEWCOMBE = (
+    'R. G. Newcombe, "Two-sided confidence intervals for the single proportion: comparison of '
+    f'seven methods", Statist. Med. 17, 857 (1998), table I, {MEMORY}'
+)
+SPEARMAN = (
+    'C. Spearman, "The proof and measurement of association between two things", Am. J. Psychol. '
+    f"15, 72 (1904), {MEMORY}"
+)
+WILSON = (
+    'E. B. Wilson, "Probable inference, the law of succession, and statistical inference", J. Am. '
+    f"Stat. Assoc. 22, 209 (1927), {MEMORY}"
+)
+LINEAR_MODEL = "variances of independent numbers add, computed from the formula"

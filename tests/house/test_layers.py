@@ -44,14 +44,19 @@ FLOORS = {
     "line": 4,
     "checks": 6,
     "terminal": 6,
+    "sweep_figures": 6,
+    "sweep_terminal": 6,
     "figures": 6,
     "cli": 6,
+    "command_options": 6,
+    "sweep_cli": 6,
+    "sweep_progress": 6,
     "__main__": 6,
 }
 WINGS = {"circuit", "dsp", "quantum", "archive", "formats"}
 
 # Imports inside functions that start-up time asks for, and no others.
-LATE = {"cli.py", "units.py"}
+LATE = {"cli.py", "sweep_cli.py", "units.py"}
 
 
 def room(file: Path) -> str:
