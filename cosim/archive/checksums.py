@@ -14,6 +14,8 @@ import h5py
 import numpy as np
 import numpy.typing as npt
 
+from cosim.archive.encoding import is_instance
+from cosim.archive.layout import member_key
 from cosim.archive.table import EXACT
 
 _SIZE = 16  # bytes: no two of a hundred thousand rows agree by chance
@@ -154,13 +156,16 @@ def series_digest(name: str, grid: tuple[float, float, float], values: npt.NDArr
     return digest.digest()
 
 
-def record_digest(group: Any) -> str:
+def record_digest(group: Any, written: object = None) -> str:
     """Give the checksum of all that is in a group: datasets, scales, units and kinds.
 
     Parameters
     ----------
     group : h5py.Group
         The group of a run or of the plan.
+    written : object
+        The dataclass that was just written there, whose arrays are then not read again; None
+        takes everything from the file.
 
     Returns
     -------
@@ -169,37 +174,52 @@ def record_digest(group: Any) -> str:
         between arrays and scales, which are addresses in a file.
     """
     digest = hashlib.sha256()
-    _feed(digest, "", group)
+    _feed(digest, b"", group.id, written)
     return digest.hexdigest()
 
 
-def _feed(digest: Any, path: str, item: Any) -> None:
-    digest.update(f"\0{path}\0".encode("utf-8", "surrogatepass"))
-    _feed_attributes(digest, item.id)
-    if isinstance(item, h5py.Dataset):
-        _feed_values(digest, item.id)
-        return
-    for name in sorted(item):
-        _feed(digest, f"{path}/{name}", item[name])
-
-
-def _feed_attributes(digest: Any, item: Any) -> None:
+def _feed(digest: Any, path: bytes, item: Any, written: object) -> None:
+    digest.update(b"\0" + path + b"\0")
     names: list[bytes] = []
     h5py.h5a.iterate(item, names.append)
     for name in sorted(names):
         if name not in _SCALE_ATTRIBUTES:
             digest.update(name)
-            _feed_values(digest, h5py.h5a.open(item, name))
+            attribute = h5py.h5a.open(item, name)
+            values = np.empty(attribute.shape, dtype=attribute.dtype)
+            if values.size:
+                attribute.read(values)
+            _feed_values(digest, values)
+    if isinstance(item, h5py.h5d.DatasetID):
+        _feed_values(digest, _values_of(item, written))
+        return
+    for name in sorted(item):
+        child = _member(written, name.decode("utf-8", "surrogateescape"))
+        _feed(digest, path + b"/" + name, h5py.h5o.open(item, name), child)
 
 
-def _feed_values(digest: Any, item: Any) -> None:
-    """Take in the values of a dataset or an attribute, and their type and shape."""
-    values = np.empty(item.shape, dtype=item.dtype)
+def _member(written: object, name: str) -> object:
+    """Give what stands in a dataclass, dictionary or sequence under a link name, if anything."""
+    if is_instance(written):
+        return getattr(written, name, None)
+    if isinstance(written, Mapping):
+        return written.get(member_key(name))
+    if isinstance(written, (tuple, list)) and name.isdecimal():
+        return written[int(name)]
+    return None
+
+
+def _values_of(dataset: Any, written: object) -> npt.NDArray[Any]:
+    if isinstance(written, np.ndarray) and written.shape == dataset.shape:
+        if written.dtype == dataset.dtype:
+            return written
+    values = np.empty(dataset.shape, dtype=dataset.dtype)
     if values.size:
-        if isinstance(item, h5py.h5d.DatasetID):
-            item.read(h5py.h5s.ALL, h5py.h5s.ALL, values)
-        else:
-            item.read(values)
+        dataset.read(h5py.h5s.ALL, h5py.h5s.ALL, values)
+    return values
+
+
+def _feed_values(digest: Any, values: npt.NDArray[Any]) -> None:
     digest.update(f"{values.dtype.str}{values.shape}".encode())
     if values.dtype.kind == "O":
         for text in values.ravel().tolist():

@@ -11,6 +11,7 @@ import h5py
 import numpy as np
 import numpy.typing as npt
 
+from cosim.archive.datasets import create_dataset, set_text
 from cosim.archive.layout import TEXT, TEXTS, member_name, storage_options
 from cosim.errors import ArchiveError
 
@@ -154,7 +155,7 @@ def _write_value(
     elif isinstance(value, str):
         _write_text(group, name, value)
     elif isinstance(value, (bool, np.bool_)):
-        group.create_dataset(name, data=bool(value), dtype=np.bool_)
+        create_dataset(group, name, np.array(bool(value)), "")
     elif isinstance(value, (int, np.integer)):
         _write_integer(group, name, int(value), context)
     elif isinstance(value, (float, np.floating)):
@@ -176,16 +177,15 @@ def _write_value(
 def _write_number(
     group: Any, name: str, value: complex, dtype: npt.DTypeLike, context: _Context
 ) -> None:
-    group.create_dataset(name, data=value, dtype=dtype).attrs["units"] = context.unit
+    create_dataset(group, name, np.array(value, dtype=dtype), context.unit)
 
 
 def _write_integer(group: Any, name: str, value: int, context: _Context) -> None:
     if fits_word(value):
         _write_number(group, name, value, np.int64, context)
         return
-    dataset = group.create_dataset(name, data=str(value), dtype=TEXT)
-    dataset.attrs["kind"] = "int"
-    dataset.attrs["units"] = context.unit
+    dataset = create_dataset(group, name, np.array(str(value), dtype=TEXT), context.unit)
+    set_text(dataset, b"kind", "int")
 
 
 def _write_text(group: Any, name: str, value: str) -> None:
@@ -193,9 +193,10 @@ def _write_text(group: Any, name: str, value: str) -> None:
     if plain and len(value) >= _SHARED_TEXT and TEXTS in group.file:
         group[name] = shared_text(group.file[TEXTS], value)
         return
-    dataset = group.create_dataset(name, data=value if plain else json.dumps(value), dtype=TEXT)
+    text = np.array(value if plain else json.dumps(value), dtype=TEXT)
+    dataset = create_dataset(group, name, text, "")
     if not plain:
-        dataset.attrs["quoting"] = "json"
+        set_text(dataset, b"quoting", "json")
 
 
 def shared_text(texts: Any, value: str) -> Any:
@@ -215,7 +216,7 @@ def shared_text(texts: Any, value: str) -> Any:
     """
     name = hashlib.sha256(value.encode("utf-8")).hexdigest()
     if name not in texts:
-        texts.create_dataset(name, data=value, dtype=TEXT)
+        create_dataset(texts, name, np.array(value, dtype=TEXT), "")
     return texts[name]
 
 
@@ -231,14 +232,12 @@ def _write_array(
             f"{group.name}/{name}: an array of type {value.dtype} cannot be archived",
             hint="wanted bool, integers, float64 or complex128; texts go into a tuple",
         )
-    options = storage_options(value.size)
-    dataset = group.create_dataset(name, data=value, dtype=value.dtype, **options)
-    if value.dtype.kind != "b":
-        dataset.attrs["units"] = context.unit
+    unit = "" if value.dtype.kind == "b" else context.unit
+    dataset = create_dataset(group, name, value, unit, storage_options(value.size))
     if value.ndim == 0:
-        dataset.attrs["kind"] = "ndarray"
+        set_text(dataset, b"kind", "ndarray")
     elif value.ndim == 1 and context.metadata.get("axes") == (name,):
-        dataset.make_scale(name)
+        h5py.h5ds.set_scale(dataset, name.encode())
     else:
         _attach_scales(group, dataset, name, context, reserved)
 
@@ -262,12 +261,11 @@ def _write_sequence(
         return
     items, dtype, quoted = packed
     options = {} if dtype is TEXT else storage_options(len(items))
-    dataset = group.create_dataset(name, data=items, dtype=dtype, **options)
-    dataset.attrs["kind"] = kind
+    unit = "" if dtype is TEXT or dtype is np.bool_ else context.unit
+    dataset = create_dataset(group, name, np.array(items, dtype=dtype), unit, options)
+    set_text(dataset, b"kind", kind)
     if quoted:
-        dataset.attrs["quoting"] = "json"
-    if dtype is not TEXT and dtype is not np.bool_:
-        dataset.attrs["units"] = context.unit
+        set_text(dataset, b"quoting", "json")
     _attach_scales(group, dataset, name, context, reserved)
 
 
@@ -310,15 +308,15 @@ def _attach_scales(
     an array for a mistake; hence the copies and the underscores.
     """
     axes: tuple[str, ...] = tuple(context.metadata.get("axes", ()))
-    if len(axes) != dataset.ndim:
+    if len(axes) != dataset.rank:
         # Items of a dict or sequence may have dimensions that the declaration does not speak of.
-        axes = tuple(f"{name}_index{k}" for k in range(dataset.ndim))
-        axes = (f"{name}_index",) if dataset.ndim == 1 else axes
+        axes = tuple(f"{name}_index{k}" for k in range(dataset.rank))
+        axes = (f"{name}_index",) if dataset.rank == 1 else axes
     used: list[str] = []
     for dimension, axis in enumerate(axes):
         scale = _scale(group, axis, dataset.shape[dimension], context, reserved, used)
-        dataset.dims[dimension].attach_scale(group[scale])
-        dataset.dims[dimension].label = scale
+        h5py.h5ds.attach_scale(dataset, h5py.h5d.open(group.id, scale.encode()), dimension)
+        h5py.h5ds.set_label(dataset, dimension, scale.encode())
         used.append(scale)
 
 
@@ -340,14 +338,12 @@ def _scale(
     if name in group:
         return name
     values, unit = _scale_values(axis, length, context)
-    text = isinstance(values, tuple)
-    dtype = TEXT if isinstance(values, tuple) else values.dtype
-    options = {} if text else storage_options(length)
-    dataset = group.create_dataset(name, data=values, dtype=dtype, **options)
-    dataset.attrs["derived"] = True
-    if not text:
-        dataset.attrs["units"] = unit
-    dataset.make_scale(name)
+    if isinstance(values, tuple):
+        dataset = create_dataset(group, name, np.array(values, dtype=TEXT), "")
+    else:
+        dataset = create_dataset(group, name, values, unit, storage_options(length))
+    h5py.Dataset(dataset).attrs["derived"] = True
+    h5py.h5ds.set_scale(dataset, name.encode())
     return name
 
 

@@ -132,9 +132,13 @@ def _table(rows: Sequence[Row]) -> dict[str, Column]:
         "start_time": Column(np.array([row.info.start_time for row in rows], dtype=texts)),
         "wall_time": Column(np.array([row.info.wall_time for row in rows], dtype=float), "s"),
     }
-    names = dict.fromkeys(rows[0].cells)
-    if any(row.cells.keys() != names.keys() for row in rows):
-        names = dict.fromkeys(name for row in rows for name in row.cells)
+    names = list(rows[0].cells)
+    columns: Sequence[Sequence[Cell | None]] = list(
+        zip(*[row.cells.values() for row in rows], strict=False)
+    )
+    if any(list(row.cells) != names for row in rows):
+        names = list(dict.fromkeys(name for row in rows for name in row.cells))
+        columns = [[row.cells.get(name) for row in rows] for name in names]
     units: dict[str, str] = {}
     seen: Mapping[str, str] | None = None
     for row in rows:
@@ -142,8 +146,8 @@ def _table(rows: Sequence[Row]) -> dict[str, Column]:
             seen = row.units
             for name, unit in seen.items():
                 units[name] = unit if units.get(name, unit) == unit else "mixed"
-    for name in names:
-        table[name] = _column([row.cells.get(name) for row in rows], units.get(name, "1"))
+    for name, column in zip(names, columns, strict=True):
+        table[name] = _column(column, units.get(name, "1"))
     return table
 
 
@@ -175,4 +179,4 @@ def _write_record(file: Any, row: Row) -> None:
     group.attrs["status"] = row.info.status
     group.attrs["start_time"] = row.info.start_time
     group.attrs["wall_time"] = row.info.wall_time
-    group.attrs[CHECKSUM] = record_digest(group)
+    group.attrs[CHECKSUM] = record_digest(group, row.run)

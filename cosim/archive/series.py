@@ -10,8 +10,8 @@ import numpy as np
 import numpy.typing as npt
 
 from cosim.archive.checksums import series_digest
+from cosim.archive.datasets import create_dataset
 from cosim.archive.layout import member_key, member_name
-from cosim.archive.table import create_dataset
 from cosim.errors import ArchiveError
 
 SERIES = "series"
@@ -154,7 +154,7 @@ def write_stack(file: Any, name: str, stack: Stack) -> None:
         The series.
     """
     group = stack_group(file, name, stack.values.shape[1])
-    values = create_dataset(group, "values", stack.values, stack.unit, packed=False)
+    values = create_dataset(group, "values", stack.values, stack.unit)
     write_scales(group, values, stack.numbers, stack.grid)
 
 
@@ -198,15 +198,15 @@ def write_scales(
         Start, step and carrier frequency.
     """
     samples = np.arange(values.shape[1], dtype=np.int64)
-    runs = create_dataset(group, "id", numbers, "1", packed=False)
-    sample = create_dataset(group, "sample", samples, "1", packed=False)
+    runs = create_dataset(group, "id", numbers, "1")
+    sample = create_dataset(group, "sample", samples, "1")
     h5py.h5ds.set_scale(runs, b"id")
     h5py.h5ds.set_scale(sample, b"sample")
     h5py.h5ds.attach_scale(values, runs, 0)
     h5py.h5ds.attach_scale(values, sample, 1)
     for index, (name, unit) in enumerate(GRID.items()):
         column = np.ascontiguousarray(grid[:, index])
-        dataset = create_dataset(group, name, column, unit, packed=False)
+        dataset = create_dataset(group, name, column, unit)
         h5py.h5ds.attach_scale(dataset, runs, 0)
 
 

@@ -9,11 +9,10 @@ import h5py
 import numpy as np
 import numpy.typing as npt
 
+from cosim.archive.datasets import create_dataset
 from cosim.archive.encoding import field_unit, fits_word, is_instance, is_plain_text
 from cosim.archive.layout import (
     TEXT,
-    TEXT_OBJECT,
-    TEXT_TYPE,
     NumberedRun,
     member_key,
     member_name,
@@ -259,56 +258,25 @@ def write_columns(group: Any, table: Mapping[str, Column], packed: bool) -> None
     Parameters
     ----------
     group : h5py.Group
-        The group, which has the column "id" or gets it here, first of all.
+        The group, which has the column "id" or gets it here, as the first.
     table : mapping of str to Column
         The columns.
     packed : bool
         Whether long columns are compressed.
     """
+    scale = h5py.h5d.open(group.id, b"id") if "id" in group else None
     for name, column in table.items():
-        dataset = create_dataset(group, member_name(name), column.values, column.unit, packed)
-        if name == "id":
+        values = column.values
+        options = storage_options(values.size) if packed and values.dtype.kind != "O" else {}
+        if options:
+            # Whole columns are read: few large chunks.
+            options["chunks"] = (min(values.size, _CHUNK),)
+        dataset = create_dataset(group, member_name(name), values, column.unit, options)
+        if scale is None:
+            scale = dataset
             h5py.h5ds.set_scale(dataset, b"id")
         else:
-            h5py.h5ds.attach_scale(dataset, h5py.h5d.open(group.id, b"id"), 0)
-
-
-def create_dataset(group: Any, name: str, values: npt.NDArray[Any], unit: str, packed: bool) -> Any:
-    """Make a dataset of numbers or texts, as cheaply as HDF5 allows.
-
-    Parameters
-    ----------
-    group : h5py.Group
-        Where it appears.
-    name : str
-        Its link name.
-    values : ndarray
-        Numbers, bools or str objects.
-    unit : str
-        Its unit; none is noted if that is empty.
-    packed : bool
-        Whether it is compressed if it is long.
-
-    Returns
-    -------
-    h5py.h5d.DatasetID
-        The dataset. (Through the classes of h5py a table of 60 columns takes five times as long.)
-    """
-    text = values.dtype.kind == "O"
-    options = {} if text or not packed else storage_options(values.size)
-    if options:
-        # Whole columns are read: few large chunks.
-        options["chunks"] = (min(values.shape[0], _CHUNK), *values.shape[1:])
-        dataset = group.create_dataset(name, data=values, dtype=values.dtype, **options).id
-    else:
-        kind = TEXT_TYPE if text else h5py.h5t.py_create(values.dtype, logical=True)
-        space = h5py.h5s.create_simple(values.shape)
-        dataset = h5py.h5d.create(group.id, name.encode(), kind, space)
-        dataset.write(h5py.h5s.ALL, h5py.h5s.ALL, values, TEXT_OBJECT if text else None)
-    if unit:
-        note = h5py.h5a.create(dataset, b"units", TEXT_TYPE, h5py.h5s.create(h5py.h5s.SCALAR))
-        note.write(np.array(unit, dtype=TEXT))
-    return dataset
+            h5py.h5ds.attach_scale(dataset, scale, 0)
 
 
 def column_names(file: Any) -> list[str]:
