@@ -270,7 +270,29 @@ def capture_probe(plan: Plan, *, progress: Callable[[float], None] | None = None
     SimulationError, DeckError
         If the simulator fails; the log is in the error.
     """
-    result = simulate(plan.deck, plan.request, progress=progress)
+    return captured(plan, simulate(plan.deck, plan.request, progress=progress))
+
+
+def captured(plan: Plan, result: TransientResult) -> Capture:
+    """Read the probe of a run.
+
+    Parameters
+    ----------
+    plan : Plan
+        From `make_plan`.
+    result : TransientResult
+        The run of its deck.
+
+    Returns
+    -------
+    Capture
+        The waveform at the probe; what is confidential is taken out of the run.
+
+    Raises
+    ------
+    WaveformError
+        If a baseband pair cannot be upconverted.
+    """
     result = withhold(result, plan.deck, plan.confidential)
     files = kept_files(plan.deck.files, plan.confidential)
     wanted = {name.lower() for name in plan.kept}

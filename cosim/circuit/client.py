@@ -20,7 +20,8 @@ from typing import Any
 
 import numpy as np
 
-from cosim.circuit import host
+from cosim.circuit import frames
+from cosim.circuit.deck import unique
 from cosim.errors import MissingDependencyError, SimulationError, SimulatorCrashError
 from cosim.waveform import FloatArray
 
@@ -30,6 +31,7 @@ ANSWER_MARGIN = 30.0  # s beyond the run's own limit, which the host itself enfo
 LONGEST_WAIT = 3600.0  # s for one wait of a run that may last longer
 CLOSE_LIMIT = 5.0  # s for the host to remove its folder
 
+_HOST = str(Path(__file__).with_name("host.py"))
 # Nothing else of the caller's environment reaches the simulator: no SPICE_* search path, no HOME
 # with a start file.
 _PASSED_VARIABLES = ("PATH", "TMPDIR", "LD_LIBRARY_PATH")
@@ -58,6 +60,9 @@ class Answer:
     done : dict or None
         Faults of load and run, names of new plots and vectors, wall time in s; None when the
         child did not come that far.
+    loaded : dict or None
+        Of a deck that was loaded for many sets: the fault, lines of the log that the reading gave,
+        the simulated time in s that the sets share; None when it was not loaded.
     end : dict
         Exit code (negative: signal), whether the time limit ran out, peak memory in bytes.
     part : float
@@ -70,6 +75,7 @@ class Answer:
     vectors: dict[str, FloatArray] = field(default_factory=dict)
     done: dict[str, Any] | None = None
     end: dict[str, Any] = field(default_factory=dict)
+    loaded: dict[str, Any] | None = None
     part: float = 0.0
     overhead_time: float = 0.0
 
@@ -115,7 +121,7 @@ def _temporary_folder() -> str:
     """Make a fresh folder with a path in lower case, for ngspice lowers the names of data files."""
     for parent in (tempfile.gettempdir(), "/tmp", "/var/tmp"):
         if parent == parent.lower() and os.access(parent, os.W_OK):
-            return tempfile.mkdtemp(prefix=host.SCRATCH_PREFIX, dir=parent)
+            return tempfile.mkdtemp(prefix=frames.SCRATCH_PREFIX, dir=parent)
     raise SimulationError(
         f"no temporary folder with a path in lower case: {tempfile.gettempdir()!r} has capitals, "
         "/tmp and /var/tmp cannot be written",
@@ -137,10 +143,11 @@ def _environment(library: str, scratch: str) -> dict[str, str]:
         "OPENBLAS_NUM_THREADS": "1",
         "NGSPICE_LIBRARY_PATH": library,
     }
-    folder = str(Path(spec.origin).parents[1])
-    if folder not in site.getsitepackages():
-        # Installed for one user, or found through PYTHONPATH, neither of which the host inherits.
-        environment["PYTHONPATH"] = folder
+    # Installed for one user, or found through PYTHONPATH, neither of which the host inherits.
+    folders = (str(Path(_HOST).parents[2]), str(Path(spec.origin).parents[1]))
+    named = [folder for folder in unique(folders) if folder not in site.getsitepackages()]
+    if named:
+        environment["PYTHONPATH"] = os.pathsep.join(named)
     return environment
 
 
@@ -185,16 +192,45 @@ class Client:
             "commands": list(commands),
             "plots": plots,
             "keys": list(keys),
-            "data": [[name, len(content)] for name, content in data.items()],
             "time_limit": time_limit,
             "memory_limit": memory_limit,
         }
-        frame = host.pack(request, b"".join(data.values()))
+        return self.exchange(request, data, progress)
+
+    def exchange(
+        self,
+        request: dict[str, Any],
+        data: Mapping[str, bytes],
+        progress: Callable[[float], None] | None = None,
+    ) -> Answer:
+        """Send a request that the host answers, and collect the answer.
+
+        Parameters
+        ----------
+        request : dict
+            As `cosim.circuit.host` describes it; "data" is filled in.
+        data : mapping of str to bytes
+            Name in the scratch folder -> content.
+        progress : callable or None
+            Called with the simulated part of a transient, from 0 to 1.
+
+        Returns
+        -------
+        Answer
+
+        Raises
+        ------
+        MissingDependencyError, SimulatorCrashError
+            As `run`.
+        """
+        request["data"] = [[name, len(content)] for name, content in data.items()]
+        frame = frames.pack(request, b"".join(data.values()))
         with self._lock:
             began = time.perf_counter()
             try:
                 self._ask(frame)
-                answer = self._collect(time.monotonic() + time_limit + ANSWER_MARGIN, progress)
+                limit = time.monotonic() + request["time_limit"] + ANSWER_MARGIN
+                answer = self._collect(limit, progress)
             except BaseException:
                 # An interrupt or a fault in the middle leaves a run going on and half a frame in
                 # the pipe: the host goes, and the next run starts another.
@@ -203,6 +239,13 @@ class Client:
             elapsed = time.perf_counter() - began
         answer.overhead_time = elapsed - (answer.done["wall_time"] if answer.done else 0.0)
         return answer
+
+    def unload(self) -> None:
+        """Let go of the deck that is loaded for many sets, if there is one."""
+        with self._lock:
+            if self._owner == os.getpid() and self._process is not None:
+                with contextlib.suppress(BrokenPipeError):
+                    self._write(frames.pack({"kind": "unload"}))
 
     def close(self) -> None:
         """End the host and remove its scratch folder."""
@@ -241,7 +284,7 @@ class Client:
         atexit.register(self.close)
         with open(os.path.join(self._scratch, "host.err"), "wb") as errors:
             return subprocess.Popen(
-                [sys.executable, "-P", host.__file__, str(os.getpid()), self._scratch],
+                [sys.executable, "-P", _HOST, str(os.getpid()), self._scratch],
                 stdin=subprocess.PIPE,
                 stdout=subprocess.PIPE,
                 stderr=errors,
@@ -263,7 +306,7 @@ class Client:
     def _write(self, frame: bytes) -> None:
         assert self._process is not None
         assert self._process.stdin is not None
-        host.send(self._process.stdin.fileno(), frame)
+        frames.send(self._process.stdin.fileno(), frame)
 
     def _collect(self, deadline: float, progress: Callable[[float], None] | None) -> Answer:
         answer = Answer()
@@ -280,13 +323,17 @@ class Client:
                     answer.vectors[header["name"]] = payload
                 case "done":
                     answer.done = header
+                case "loaded":
+                    answer.loaded = header
                 case "end":
                     answer.end = header
         return answer
 
     def _receive(self, deadline: float) -> tuple[dict[str, Any], FloatArray]:
-        sizes = host.FRAME.unpack(self._read(bytearray(host.FRAME.size), deadline))
-        header, _ = host.unpack(host.FRAME.pack(*sizes) + self._read(bytearray(sizes[0]), deadline))
+        sizes = frames.FRAME.unpack(self._read(bytearray(frames.FRAME.size), deadline))
+        header, _ = frames.unpack(
+            frames.FRAME.pack(*sizes) + self._read(bytearray(sizes[0]), deadline)
+        )
         payload = np.empty(sizes[1] // 8)
         self._read(payload.view(np.uint8), deadline)
         return header, payload

@@ -6,202 +6,52 @@ its child. Requests come on standard input and answers leave on standard output 
 header and raw bytes.
 
     caller -> host   run       lines, commands, data files, kind of plots, vectors, limits
+                     load      the same, to be kept for sets; how many points to run at once
+                     set       commands that change the loaded deck, vectors, limits
+                     unload    nothing more is asked of the loaded deck
     host -> caller   ready     the library is loaded; or `failed` with the reason
                      log       a line of ngspice
                      progress  the simulated part of the run, from 0 to 1
                      vector    name; its float64 values follow
                      done      faults of load and run, names of new plots and vectors, wall time
-                     end       how the child ended; always the last frame of a run
+                     loaded    lines of the log that the reading gave, time of the last point in s
+                     end       how the child ended, or that the deck is not loaded; always the
+                               last frame of an answer
+
+A deck is loaded for many sets by a child that stays and is a host itself: it forks one child per
+set. So a set has limits of its own, and takes nothing but itself down.
 
 End of file on standard input, or another parent process, means that the caller is gone: the host
-kills the child, removes the scratch folder and leaves. PySpice is imported here and nowhere else.
-The file imports nothing of this package, so that it runs wherever the caller found the package.
+kills the child, removes the scratch folder and leaves. The client names this package's folder, so
+that the host runs wherever the caller found the package.
 """
 
 import ctypes
 import gc
-import json
-import logging
 import os
 import resource
 import select
 import shutil
 import signal
-import struct
 import sys
 import time
 import traceback
-from collections import deque
 from pathlib import Path
-from typing import Any, NoReturn
+from typing import Any, NamedTuple, NoReturn
 
-if __name__ == "__main__":
-    # The client takes the frame functions from here and must not load PySpice by that.
-    from PySpice.Spice.NgSpice.Shared import NgSpiceShared
+from cosim.circuit.frames import SCRATCH_PREFIX, Assembler, pack, send, unpack
+from cosim.circuit.library import load_deck, load_library, run_deck
 
-SCRATCH_PREFIX = "qcosim-"
-FRAME = struct.Struct("<IQ")  # bytes of the JSON header, bytes of the payload
 CHUNK = 2**16  # bytes read at a time: what a pipe holds; larger pipes count against a user limit
 FILE_LIMIT = 2**26  # bytes that a child may write into one file: model checks, no more
-LOG_LIMIT = 20_000  # lines of a run's log that are passed on at once
-LOG_TAIL = 200  # lines after these that are kept for the end of the run
-PROGRESS_INTERVAL = 0.1  # s
 ORPHAN_INTERVAL = 1.0  # s between two looks at the parent's process id
 PR_SET_PDEATHSIG = 1  # from linux/prctl.h
+LOST = {"kind": "end", "timeout": False, "code": 0, "peak": 0, "memory_limit": 0, "lost": True}
+END_MARGIN = 10.0  # s beyond a set's own limit, which the loaded deck's process enforces
 
 
 class CallerGoneError(Exception):
     """The process that asked for the run does not exist any more."""
-
-
-def pack(header: dict[str, Any], payload: bytes = b"") -> bytes:
-    """Make one frame."""
-    text = json.dumps(header).encode()
-    return FRAME.pack(len(text), len(payload)) + text + payload
-
-
-def send(descriptor: int, data: bytes) -> None:
-    """Write all bytes to a blocking descriptor."""
-    view = memoryview(data)
-    while view:
-        view = view[os.write(descriptor, view) :]
-
-
-class Assembler:
-    """Cuts complete frames out of a stream of bytes."""
-
-    def __init__(self) -> None:
-        self._buffer = bytearray()
-
-    def feed(self, data: bytes) -> list[bytes]:
-        """Take bytes in; give the frames that are complete now."""
-        self._buffer += data
-        frames = []
-        while len(self._buffer) >= FRAME.size:
-            header, payload = FRAME.unpack_from(self._buffer)
-            size = FRAME.size + header + payload
-            if len(self._buffer) < size:
-                break
-            frames.append(bytes(memoryview(self._buffer)[:size]))
-            del self._buffer[:size]
-        return frames
-
-
-def unpack(frame: bytes) -> tuple[dict[str, Any], memoryview]:
-    """Split a frame into its header and its payload."""
-    size, _ = FRAME.unpack_from(frame)
-    header: dict[str, Any] = json.loads(frame[FRAME.size : FRAME.size + size])
-    return header, memoryview(frame)[FRAME.size + size :]
-
-
-def load_library() -> tuple[Any, bool]:
-    """Load libngspice through PySpice; give the instance and whether it found its code models."""
-    said: list[str] = []
-    # PySpice logs each line of ngspice as an error; the callback below collects them instead.
-    logging.getLogger("PySpice").setLevel(logging.CRITICAL + 1)
-
-    class Simulator(NgSpiceShared):  # type: ignore[misc]  # PySpice ships no types.
-        """The library, with its log and its progress passed on to `listener`."""
-
-        listener: "Listener | None" = None
-
-        def send_char(self, message: str, ngspice_id: int) -> int:
-            if self.listener is not None:
-                self.listener.line(message)
-            else:
-                said.append(message)
-            return 0
-
-        def send_stat(self, message: str, ngspice_id: int) -> int:
-            if self.listener is not None:
-                self.listener.status(message)
-            return 0
-
-    simulator = Simulator.new_instance()
-    # ngspice gives BSIM models two OpenMP threads, which spin and take a core from another run.
-    simulator.exec_command("set num_threads=1")
-    # Its start file loads the code models of A devices, and comes in a package of its own.
-    return simulator, not any("can't find the initialization file" in line for line in said)
-
-
-class Listener:
-    """Passes ngspice's lines and its progress on as frames."""
-
-    def __init__(self, output: int) -> None:
-        self._output = output
-        self._lines = 0
-        self._tail: deque[str] = deque(maxlen=LOG_TAIL)
-        self._next = time.monotonic() + PROGRESS_INTERVAL
-
-    def line(self, text: str) -> None:
-        """Pass a line of the log on at once: the next one may never come."""
-        self._lines += 1
-        if self._lines <= LOG_LIMIT:
-            send(self._output, pack({"kind": "log", "text": text}))
-        else:
-            self._tail.append(text)
-
-    def finish(self) -> None:
-        """Pass on the last lines of a log that was too long."""
-        left_out = self._lines - LOG_LIMIT - len(self._tail)
-        if left_out > 0:
-            self._tail.appendleft(f"({left_out} lines left out here)")
-        for text in self._tail:
-            send(self._output, pack({"kind": "log", "text": text}))
-
-    def status(self, text: str) -> None:
-        """Pass on a status such as "tran: 12.3%", a few times a second."""
-        now = time.monotonic()
-        if now < self._next or not text.startswith("tran:"):
-            return
-        self._next = now + PROGRESS_INTERVAL
-        try:
-            part = float(text.partition(":")[2].rstrip("% ")) / 100
-        except ValueError:
-            return
-        send(self._output, pack({"kind": "progress", "part": part}))
-
-
-def run_deck(simulator: Any, request: dict[str, Any], output: int) -> None:
-    """Load and run a deck, and send what it gave; the verdict is the caller's."""
-    simulator.listener = listener = Listener(output)
-    before = set(simulator.plot_names)
-    faults = {"load": "", "run": ""}
-    began = time.perf_counter()
-    for command in request["commands"]:
-        _quietly(simulator.exec_command, command)
-    faults["load"] = _quietly(simulator.load_circuit, "\n".join(request["lines"]))
-    if not faults["load"]:
-        faults["run"] = _quietly(simulator.exec_command, "run")
-    wall_time = time.perf_counter() - began
-    listener.finish()
-    # A failed load leaves the old plots current, so that only a plot that is new counts.
-    plots = [name for name in simulator.plot_names if name not in before]
-    found: dict[str, Any] = {}
-    # A noise analysis gives two plots, of spectra and of totals; the newest comes first.
-    for plot in (name for name in reversed(plots) if name.startswith(request["plots"])):
-        # The key of a node named 3 is "V(3)", that of all others is in lower case.
-        vectors = simulator.plot(None, plot).items()
-        found |= {name.lower(): vector._data for name, vector in vectors}
-    for key in request["keys"]:
-        data = found.get(key, found.get(f"v({key})"))
-        if data is not None:
-            send(output, pack({"kind": "vector", "name": key}, data.tobytes()))
-    done = {"kind": "done", "faults": faults, "plots": plots, "wall_time": wall_time}
-    send(output, pack(done | {"available": sorted(found)}))
-
-
-def _quietly(function: Any, argument: str) -> str:
-    """Call PySpice; give the text of a fault that counts.
-
-    PySpice raises when any line that is not a warning comes on ngspice's error stream, and also
-    when a title contains "error". Only a return code of the library itself is a fault.
-    """
-    try:
-        function(argument)
-    except NameError as error:  # the base of all errors that PySpice raises here
-        return str(error) if "returned" in str(error) else ""
-    return ""
 
 
 def allowed(kind: int, wanted: int) -> int:
@@ -210,8 +60,13 @@ def allowed(kind: int, wanted: int) -> int:
     return wanted if hard == resource.RLIM_INFINITY else min(wanted, hard)
 
 
-def child(simulator: Any, request: dict[str, Any], data: memoryview, output: int) -> NoReturn:
-    """Be the forked child: one deck under limits in an own folder, then leave."""
+def child(
+    simulator: Any, request: dict[str, Any], data: memoryview, output: int, asked: int
+) -> NoReturn:
+    """Be the forked child: one deck under limits in an own folder, then leave.
+
+    With a deck for many sets it does not leave but serves them, as they are asked of it.
+    """
     status = 1
     try:
         # The host's end must not leave a child behind, whatever ends it.
@@ -221,15 +76,23 @@ def child(simulator: Any, request: dict[str, Any], data: memoryview, output: int
         folder.mkdir()
         os.chdir(folder)
         for name, size in request["data"]:
-            (folder / name).write_bytes(data[:size])
+            # The lines of a loaded deck name files in its own folder.
+            (folder.parent if request["kind"] == "set" else folder).joinpath(name).write_bytes(
+                data[:size]
+            )
             data = data[size:]
         resource.setrlimit(resource.RLIMIT_CORE, (0, 0))
         resource.setrlimit(resource.RLIMIT_FSIZE, (allowed(resource.RLIMIT_FSIZE, FILE_LIMIT),) * 2)
         resource.setrlimit(
             resource.RLIMIT_AS, (allowed(resource.RLIMIT_AS, request["memory_limit"]),) * 2
         )
+        if request["kind"] == "load":
+            load_deck(simulator, request, output)
+            Host(simulator, asked, output, os.getppid(), keeps=False).serve()
         run_deck(simulator, request, output)
         status = 0
+    except CallerGoneError:
+        pass
     except MemoryError:
         send(output, pack({"kind": "log", "text": "python: out of memory"}))
     except BaseException:
@@ -239,23 +102,48 @@ def child(simulator: Any, request: dict[str, Any], data: memoryview, output: int
         os._exit(status)
 
 
+class Loaded(NamedTuple):
+    """A child that has loaded a deck and waits for sets."""
+
+    token: str
+    process: int
+    requests: int
+    answers: int
+    frames: Assembler
+    folder: str
+
+
 class Host:
     """Runs one deck after the other for the process that started it."""
 
-    def __init__(self, simulator: Any, source: int, target: int, parent: int) -> None:
+    def __init__(
+        self, simulator: Any, source: int, target: int, parent: int, *, keeps: bool = True
+    ) -> None:
         self._simulator = simulator
         self._source = source
         self._target = target
         self._parent = parent
+        self._keeps = keeps  # Whether decks are loaded here, or one is loaded and sets run.
         self._requests = Assembler()
         self._runs = 0
+        self._loaded: Loaded | None = None
 
-    def serve(self) -> None:
+    def serve(self) -> NoReturn:
         """Answer requests until the caller is gone."""
-        while True:
-            for frame in self._requests.feed(self._read(None, None)):
-                header, data = unpack(frame)
-                self._run(header, data)
+        try:
+            while True:
+                for frame in self._requests.feed(self._read(None, None)):
+                    header, data = unpack(frame)
+                    if header["kind"] == "run" or not self._keeps:
+                        self._run(header, data)
+                    elif header["kind"] == "set":
+                        self._pass_on(header, frame)
+                    else:
+                        self._unload()
+                        if header["kind"] == "load":
+                            self._load(header, data)
+        finally:
+            self._unload()
 
     def _read(self, child_output: int | None, deadline: float | None) -> bytes:
         """Wait for bytes: of the child while one runs (b"" at its end), else of the caller.
@@ -287,21 +175,27 @@ class Host:
             if ready:
                 return os.read(ready[0], CHUNK)
 
-    def _run(self, request: dict[str, Any], data: memoryview) -> None:
+    def _fork(self, request: dict[str, Any], data: memoryview, asked: int = -1) -> tuple[int, int]:
+        """Start a child; give its process id and the descriptor of its frames."""
         self._runs += 1
         request["folder"] = os.path.join(os.getcwd(), f"run{self._runs}")
-        if request["data"]:  # Without data files a parameter may well be named scratch.
+        if request["data"] and "lines" in request:
+            # Without data files a parameter may well be named scratch.
             lines = request["lines"]
             request["lines"] = [line.replace("{scratch}", request["folder"]) for line in lines]
         source, output = os.pipe()
         process = os.fork()
         if process == 0:
             os.close(source)
-            child(self._simulator, request, data, output)
+            child(self._simulator, request, data, output, asked)
         os.close(output)
+        return process, source
+
+    def _run(self, request: dict[str, Any], data: memoryview) -> None:
+        process, source = self._fork(request, data)
         timeout = False
         try:
-            self._forward(source, time.monotonic() + request["time_limit"])
+            self._forward(source, Assembler(), time.monotonic() + request["time_limit"])
         except TimeoutError:
             timeout = True
             os.kill(process, signal.SIGKILL)
@@ -317,12 +211,57 @@ class Host:
         limit = allowed(resource.RLIMIT_AS, request["memory_limit"])
         send(self._target, pack(end | {"memory_limit": limit}))
 
-    def _forward(self, source: int, deadline: float) -> None:
-        """Pass complete frames on, so that a child that dies in the middle spoils nothing."""
-        assembler = Assembler()
+    def _load(self, request: dict[str, Any], data: memoryview) -> None:
+        asked, requests = os.pipe()
+        process, answers = self._fork(request, data, asked)
+        os.close(asked)
+        self._loaded = Loaded(
+            request["token"], process, requests, answers, Assembler(), request["folder"]
+        )
+        self._answer(request["time_limit"], "loaded")
+
+    def _pass_on(self, request: dict[str, Any], frame: bytes) -> None:
+        if self._loaded is not None and self._loaded.token == request["token"]:
+            send(self._loaded.requests, frame)
+            self._answer(request["time_limit"] + END_MARGIN, "end")
+        else:
+            send(self._target, pack(LOST))
+
+    def _answer(self, time_limit: float, last: str) -> None:
+        """Pass on what the loaded deck's process answers, or that it is lost."""
+        assert self._loaded is not None
+        process = self._loaded
+        try:
+            whole = self._forward(
+                process.answers, process.frames, time.monotonic() + time_limit, last
+            )
+        except TimeoutError:
+            whole = False
+        if not whole:
+            self._unload()
+        if last != "end" or not whole:
+            send(self._target, pack(LOST | {"lost": not whole}))
+
+    def _unload(self) -> None:
+        loaded, self._loaded = self._loaded, None
+        if loaded is not None:
+            os.kill(loaded.process, signal.SIGKILL)  # A set that still runs ends with it.
+            os.close(loaded.requests)
+            os.close(loaded.answers)
+            os.waitpid(loaded.process, 0)
+            shutil.rmtree(loaded.folder, ignore_errors=True)
+
+    def _forward(self, source: int, frames: Assembler, deadline: float, last: str = "") -> bool:
+        """Pass complete frames on, so that a child that dies in the middle spoils nothing.
+
+        Up to the child's end, or to a frame of the kind `last`: then the value is True.
+        """
         while data := self._read(source, deadline):
-            for frame in assembler.feed(data):
+            for frame in frames.feed(data):
                 send(self._target, frame)
+                if last and unpack(frame)[0]["kind"] == last:
+                    return True
+        return False
 
 
 def main(arguments: list[str]) -> None:

@@ -125,14 +125,7 @@ def send(
     MissingDependencyError
         If ngspice or PySpice is not installed.
     """
-    for line, (file, number) in zip(prepared.lines, prepared.origins, strict=True):
-        # The library counts lines, and a line that it splits again could hold a command.
-        if not line or line.splitlines() != [line] or "\0" in line:
-            raise ForbiddenDeckError(
-                f"an empty line or a control character in {shortened(line)!r}",
-                file=file,
-                line=number,
-            )
+    check_cut(prepared)
     client = client_of_this_process()
     answer = client.run(
         lines=prepared.lines,
@@ -145,6 +138,29 @@ def send(
         progress=progress,
     )
     return answer, f"ngspice-{client.ready['version']}", client.ready["models"]
+
+
+def check_cut(prepared: PreparedDeck) -> None:
+    """Refuse a deck whose lines the library would cut up again, and so could find a command.
+
+    Parameters
+    ----------
+    prepared : PreparedDeck
+        The lines as they are sent.
+
+    Raises
+    ------
+    ForbiddenDeckError
+        If a line is empty or holds a control character.
+    """
+    for line, (file, number) in zip(prepared.lines, prepared.origins, strict=True):
+        # The library counts lines, and a line that it splits again could hold a command.
+        if not line or line.splitlines() != [line] or "\0" in line:
+            raise ForbiddenDeckError(
+                f"an empty line or a control character in {shortened(line)!r}",
+                file=file,
+                line=number,
+            )
 
 
 def simulator_version() -> str:

@@ -10,7 +10,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from cosim.circuit.client import client_of_this_process
-from cosim.circuit.host import FRAME, Assembler, pack, unpack
+from cosim.circuit.frames import FRAME, Assembler, pack, unpack
 from cosim.errors import CosimError
 from tests.circuit.conftest import Runner
 

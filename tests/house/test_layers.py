@@ -27,6 +27,7 @@ FLOORS = {
     "testbench": 3,
     "result": 3,
     "capture": 4,
+    "captures": 4,
     "decks": 4,
     "adjust": 4,
     "fidelities": 4,
