@@ -10,9 +10,10 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 from matplotlib.axes import Axes
+from matplotlib.axis import XAxis, YAxis
 from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.figure import Figure
-from matplotlib.ticker import MaxNLocator
+from matplotlib.ticker import FuncFormatter, LogLocator, MaxNLocator, NullFormatter
 
 from cosim.errors import InputError
 from cosim.sweep.columns import CORNER, Table, encode
@@ -52,6 +53,7 @@ _MOST_BARS = 10
 _MOST_STEPS = 2000
 # Below this ratio of its ends a logarithmic axis has no decades to show.
 _LEAST_RATIO = 5.0
+_FEW_DECADES = 300.0
 _PREFIXES = {-15: "f", -12: "p", -9: "n", -6: "µ", -3: "m", 0: "", 3: "k", 6: "M", 9: "G", 12: "T"}
 _PREFIXED = ("s", "Hz", "V", "A", "F", "H", "W", "m")
 
@@ -169,6 +171,18 @@ def _is_log(values: FloatArray, limit: float) -> bool:
     return bool(ends.max() > _LEAST_RATIO * ends.min())
 
 
+def _make_log(axis: XAxis | YAxis, values: FloatArray, limit: float) -> None:
+    set_scale = axis.axes.set_xscale if axis.axis_name == "x" else axis.axes.set_yscale
+    set_scale("log", nonpositive="mask")
+    ends = np.append(values, limit)
+    ends = ends[ends > 0.0]
+    if ends.max() < _FEW_DECADES * ends.min():
+        # Too few powers of ten to read a value by; all digits would overlap.
+        axis.set_major_locator(LogLocator(subs=(1.0, 3.0)))
+        axis.set_major_formatter(FuncFormatter(lambda value, _: f"{value:.0e}"))
+    axis.set_minor_formatter(NullFormatter())
+
+
 def _metric_label(summary: SweepSummary) -> str:
     return f"{summary.metric} ({summary.unit})" if summary.unit not in ("", "1") else summary.metric
 
@@ -183,7 +197,7 @@ def _draw_histogram(
         hidden = int((good <= 0.0).sum())
         shown = good[good > 0.0]
         edges = np.geomspace(shown.min(), shown.max() * (1.0 + 1e-9), count + 1)
-        axes.set_xscale("log")
+        _make_log(axes.xaxis, good, summary.goal.limit)
     else:
         # Equal values get a bin that is seen.
         half = 0.5 * float(np.ptp(good)) or 0.05 * abs(float(good[0])) or 1.0
@@ -228,7 +242,7 @@ def _draw_yield(
             label=part.name,
         )
     if log:
-        axes.set_xscale("log", nonpositive="mask")
+        _make_log(axes.xaxis, good, summary.goal.limit)
     _mark_limit(axes.axvline, summary)
     axes.set_ylim(0.0, 103.0)
     axes.set_xlabel(f"limit on the {_metric_label(summary)}")
@@ -252,7 +266,7 @@ def _draw_scatter(
     scale, shown = _scale(values[np.isfinite(values)], unit)
     good = metric[np.isfinite(metric)]
     if _is_log(good, summary.goal.limit):
-        axes.set_yscale("log", nonpositive="mask")
+        _make_log(axes.yaxis, good, summary.goal.limit)
     # Many points are drawn as pixels in vector formats too, and lighter.
     size, alpha = (4.0, 0.25) if good.size > 5000 else (12.0, 0.7)
     for part in series:

@@ -45,6 +45,7 @@ def summary_table(summary: SweepSummary) -> Group:
         parts += _headed("worst runs", _worst_table(summary))
     if summary.sensitivities:
         parts += _headed("one at a time, where the swing is largest", _swing_table(summary))
+        parts += [Text(line) for line in _swing_places(summary)]
     if summary.correlations:
         parts += _headed(_correlation_heading(summary), _correlation_table(summary))
     parts.append(Text(""))
@@ -231,14 +232,22 @@ def _swing_table(summary: SweepSummary) -> Table:
     for item in summary.sensitivities:
         at, unit = item.largest, summary.units.get(item.key, "")
         ends = " to ".join(format_input(value, unit) for value in (at.low_input, at.high_input))
-        where = f"\n  at {describe_inputs(at.point, summary.units)}" if at.point else ""
         values = [_number(value, 2) for value in (at.low, at.nominal, at.high, at.swing)]
         slope = _number(at.derivative, 2)
         if unit and not math.isnan(at.derivative):
             slope += f" per {unit}"
-        moved = f"{short[item.key]} {ends}{where}"
-        table.add_row(escape(moved), *values, slope, _RESOLVED[item.resolved])
+        table.add_row(escape(f"{short[item.key]} {ends}"), *values, slope, _RESOLVED[item.resolved])
     return table
+
+
+def _swing_places(summary: SweepSummary) -> list[str]:
+    short = short_names(summary.inputs)
+    places: dict[str, list[str]] = {}
+    for item in summary.sensitivities:
+        if item.largest.point:
+            place = describe_inputs(item.largest.point, summary.units)
+            places.setdefault(place, []).append(short[item.key])
+    return [f"at {place}: {', '.join(keys)}" for place, keys in places.items()]
 
 
 def _correlation_heading(summary: SweepSummary) -> str:
