@@ -6,12 +6,16 @@ from dataclasses import dataclass
 from typing import Any
 
 from cosim.capture import make_plan
+from cosim.circuit.confidential import kept_lines
 from cosim.circuit.netlist import resolve_saves
 from cosim.circuit.preparation import prepare
 from cosim.circuit.simulator import simulator_version
 from cosim.gate import gate_target
 from cosim.imported import import_waveform
-from cosim.probe_run import Estimate, estimate_run, try_deck
+from cosim.probe_run import estimate_run, try_deck
+from cosim.sweep.estimate import estimate_sweep
+from cosim.sweep.plan import SweepPlan
+from cosim.sweep.planning import make_sweep
 from cosim.testbench import Testbench, load_testbench
 from cosim.units import format_quantity
 
@@ -38,7 +42,9 @@ class Finding:
     value: Any
 
 
-def check_testbench(path: str | os.PathLike[str], *, probe: bool = False) -> tuple[Finding, ...]:
+def check_testbench(
+    path: str | os.PathLike[str], *, probe: bool = False
+) -> tuple[tuple[Finding, ...], tuple[str, ...]]:
     """Validate a testbench with its deck, or its waveform, and the environment.
 
     Parameters
@@ -51,7 +57,10 @@ def check_testbench(path: str | os.PathLike[str], *, probe: bool = False) -> tup
     Returns
     -------
     tuple of Finding
-        What was found. ngspice loads the deck and takes ten steps; without `probe`, no more.
+        What was found. ngspice loads the deck and takes ten steps; without `probe`, no more, but
+        of a sweep it always runs the 200 points.
+    tuple of str
+        The deck as it will be sent, of a sweep that of its first run; without confidential lines.
 
     Raises
     ------
@@ -68,9 +77,34 @@ def check_testbench(path: str | os.PathLike[str], *, probe: bool = False) -> tup
         Finding("testbench", f"{path}: {bench.title}", "testbench", str(path)),
         Finding("target", target.name, "target", target.name),
     ]
-    found += _waveform_findings(bench) if bench.netlist is None else _deck_findings(bench, probe)
+    plan = make_sweep(bench) if bench.sweep else None
+    if plan is not None:
+        bench = plan.testbench(plan.run(0))
+    deck: tuple[str, ...] = ()
+    if bench.netlist is None:
+        found += _waveform_findings(bench)
+    else:
+        more, deck = _deck_findings(bench, probe and plan is None)
+        found += more
+    if plan is not None:
+        found += _sweep_findings(plan)
     found.append(Finding("result", "ready to run", "ready", True))
-    return tuple(found)
+    return tuple(found), deck
+
+
+def _sweep_findings(plan: SweepPlan) -> list[Finding]:
+    estimate = estimate_sweep(plan)
+    parts = [f"{len(plan.corners)} corners"] if plan.table.corners else []
+    parts += [f"{len(axis.values)} values of {axis.key.path}" for axis in plan.axes]
+    parts += [f"{plan.samples} samples"] if plan.table.monte_carlo is not None else []
+    if plan.perturbations:
+        parts.append(f"1 + 2 x {len(plan.perturbations)} one at a time")
+    text = f"{estimate.runs} runs ({' x '.join(parts)}), {estimate.waveforms} of the circuit"
+    found = [
+        Finding("sweep", text, "runs", estimate.runs),
+        Finding("waveforms", "one per deck as altered", "waveforms", estimate.waveforms),
+    ]
+    return found + _estimates(estimate.time, estimate.memory, estimate.disk, " on one worker")
 
 
 def _waveform_findings(bench: Testbench) -> list[Finding]:
@@ -85,7 +119,7 @@ def _waveform_findings(bench: Testbench) -> list[Finding]:
     ]
 
 
-def _deck_findings(bench: Testbench, probe: bool) -> list[Finding]:
+def _deck_findings(bench: Testbench, probe: bool) -> tuple[list[Finding], tuple[str, ...]]:
     plan = make_plan(bench)
     request = plan.request
     resolve_saves(plan.deck, request.saves)
@@ -114,18 +148,32 @@ def _deck_findings(bench: Testbench, probe: bool) -> list[Finding]:
     ]
     try_deck(plan)
     if probe:
-        found += _estimates(estimate_run(plan, floor=bench.accuracy.floor))
+        single = estimate_run(plan, floor=bench.accuracy.floor)
+        found += _estimates(single.time, single.memory, single.disk, "")
     notices = (*plan.deck.notices, *prepared.notices, *plan.notices)
-    return found + [Finding("notice", text, f"notice_{k}", text) for k, text in _count(notices)]
+    found += [Finding("notice", text, f"notice_{k}", text) for k, text in _count(notices)]
+    lines = kept_lines(prepared.lines, prepared.origins, plan.deck.files, plan.confidential)
+    return found, lines
 
 
-def _estimates(estimate: Estimate) -> list[Finding]:
-    memory, disk = (f"{size / 2**20:.1f} MiB" for size in (estimate.memory, estimate.disk))
+def _estimates(time: float, memory: float, disk: float, where: str) -> list[Finding]:
+    took, vectors, archive = _duration(time), _size(memory), _size(disk)
     return [
-        Finding("time", f"about {estimate.time:.2g} s of ngspice", "time", estimate.time),
-        Finding("memory", f"about {memory} for the vectors", "memory", estimate.memory),
-        Finding("disk", f"about {disk} in an archive", "disk", estimate.disk),
+        Finding("time", f"about {took} of ngspice{where}", "time", time),
+        Finding("memory", f"about {vectors} for the vectors{where}", "memory", memory),
+        Finding("disk", f"about {archive} in an archive", "disk", disk),
     ]
+
+
+def _size(size: float) -> str:
+    return f"{size / 2**20:.1f} MiB" if size < 2**30 else f"{size / 2**30:.1f} GiB"
+
+
+def _duration(seconds: float) -> str:
+    for unit, name in ((86400.0, "days"), (3600.0, "hours"), (60.0, "min")):
+        if seconds >= 2.0 * unit:
+            return f"{seconds / unit:.1f} {name}"
+    return f"{seconds:.2g} s"
 
 
 def _count(notices: Iterable[str]) -> Iterable[tuple[int, str]]:

@@ -1,4 +1,4 @@
-"""The command line: `qcosim check`, `run` and `show`.
+"""The command line: `qcosim check`, `run`, `sweep`, `show` and their like.
 
 Results go to standard output, everything else to standard error. Exit codes: 0 done, 1 a fault
 of the program, 2 the input is wrong, 3 the simulation failed, 130 interrupted.
@@ -18,7 +18,23 @@ import typer
 from rich.console import Console
 from rich.progress import BarColumn, Progress, TextColumn, TimeElapsedColumn
 
+from cosim.command_options import (
+    ArchivePath,
+    JsonFlag,
+    PlotOption,
+    TestbenchPath,
+    check_output,
+)
 from cosim.errors import CosimError, InputError, MissingDependencyError, SimulationError
+from cosim.sweep_cli import (
+    COMMANDS,
+    LimitOption,
+    MetricOption,
+    export_sweep,
+    show_sweep,
+    show_sweep_run,
+    testbench_text,
+)
 
 if TYPE_CHECKING:
     from cosim.testbench import Testbench
@@ -30,10 +46,6 @@ app = typer.Typer(
     rich_markup_mode="rich",
     help="From circuit netlists to qubit dynamics: what a drive circuit does to a qubit.",
 )
-
-TestbenchPath = Annotated[Path, typer.Argument(metavar="TESTBENCH.toml", help="The testbench.")]
-ArchivePath = Annotated[Path, typer.Argument(metavar="ARCHIVE.h5", help="The archive.")]
-JsonFlag = Annotated[bool, typer.Option("--json", help="Print numbers for machines, no table.")]
 
 
 def _print_version(wanted: bool) -> None:
@@ -61,17 +73,26 @@ def check(
         bool,
         typer.Option("--probe", help="Run 200 points and estimate time, memory and disk space."),
     ] = False,
+    deck: Annotated[
+        bool | None,
+        typer.Option(
+            "--deck/--no-deck",
+            help="Print the deck as it will be sent, of a sweep the first; default: of a sweep.",
+        ),
+    ] = None,
     json_output: JsonFlag = False,
 ) -> None:
     """Validate a testbench, its deck and the environment; nothing long is run."""
     from cosim.checks import check_testbench
     from cosim.terminal import check_table
 
-    findings = check_testbench(testbench, probe=probe)
+    findings, lines = check_testbench(testbench, probe=probe)
     if json_output:
         typer.echo(json.dumps({item.name: item.value for item in findings}, indent=2))
-    else:
-        Console(highlight=False).print(check_table(findings))
+        return
+    Console(highlight=False).print(check_table(findings))
+    if deck or (deck is None and any(item.name == "runs" for item in findings)):
+        typer.echo("\n".join(("", *lines)))
 
 
 @app.command(epilog="Example: qcosim run examples/x90_spin.toml --archive x90.h5 --plot x90.png")
@@ -80,9 +101,7 @@ def run(
     archive: Annotated[
         Path | None, typer.Option(metavar="FILE.h5", help="Add the result to this archive.")
     ] = None,
-    plot: Annotated[
-        Path | None, typer.Option(metavar="FILE", help="Write a figure (png, pdf or svg).")
-    ] = None,
+    plot: PlotOption = None,
     json_output: JsonFlag = False,
     floor: Annotated[
         bool | None,
@@ -101,8 +120,8 @@ def run(
     from cosim.terminal import result_table
     from cosim.testbench import load_testbench
 
-    _check_output(archive, ".h5")
-    _check_output(plot, ".png", ".pdf", ".svg")
+    check_output(archive, ".h5")
+    check_output(plot, ".png", ".pdf", ".svg")
     if archive is not None and archive.exists():
         run_numbers(archive)  # Refuses what is no archive, before an hour of simulation.
     bench = load_testbench(testbench)
@@ -132,15 +151,39 @@ def show(
     log: Annotated[
         bool, typer.Option("--log", help="Print the simulator's log of the run.")
     ] = False,
+    limit: LimitOption = None,
+    metric: MetricOption = None,
+    plot: PlotOption = None,
+    testbench: Annotated[
+        bool, typer.Option("--testbench", help="Print the testbench of a sweep.")
+    ] = False,
     json_output: JsonFlag = False,
 ) -> None:
-    """Show what is in an archive."""
-    from cosim.archive import read_table
+    """Show what is in an archive: its runs, one of them, or what a sweep tells."""
+    from cosim.archive import read_plan, read_table
     from cosim.dispatch import load
     from cosim.result import as_columns, as_numbers
     from cosim.terminal import record_table, result_table, runs_table
 
+    check_output(plot, ".png", ".pdf", ".svg")
     console = Console(highlight=False)
+    if read_plan(archive, {}) is not None:
+        if run is not None:
+            show_sweep_run(archive, run, json_output=json_output, log=log)
+        elif testbench:
+            typer.echo(testbench_text(archive), nl=False)
+        elif log:
+            raise InputError("say which run's log: --run N")
+        else:
+            show_sweep(
+                archive, json_output=json_output, plot=plot, limit=limit, metric=metric, table=True
+            )
+        return
+    if limit is not None or metric is not None or plot is not None or testbench:
+        raise InputError(
+            f"{archive} holds single runs and no sweep, which alone has --limit, --metric, "
+            "--plot and --testbench"
+        )
     if run is None and not log:
         table = read_table(archive)
         if json_output:
@@ -167,18 +210,26 @@ def export(
         typer.Option(metavar="DIR", help="Write the exact deck, to be repeated by ngspice -b."),
     ] = None,
     csv: Annotated[
-        Path | None, typer.Option(metavar="FILE.csv", help="Write the waveforms as columns.")
+        Path | None,
+        typer.Option(
+            metavar="FILE.csv",
+            help="Write the waveforms as columns; of a sweep without --run the table of runs.",
+        ),
     ] = None,
     envelope: Annotated[
         Path | None, typer.Option(metavar="FILE.csv", help="Write I and Q as columns.")
     ] = None,
 ) -> None:
     """Write what is in an archived run as files that other programs read."""
+    from cosim.archive import read_plan
     from cosim.dispatch import load
     from cosim.exporting import export_csv, export_deck, export_envelope
 
     if deck is csv is envelope is None:
         raise InputError("say what to export: --deck DIR, --csv FILE or --envelope FILE")
+    if run is None and read_plan(archive, {}) is not None:
+        export_sweep(archive, deck, csv, envelope)
+        return
     result = load(archive, run=run)
     if deck is not None:
         export_deck(result, deck)
@@ -212,17 +263,8 @@ def compare(
         Console(highlight=False).print(comparison_table(found))
 
 
-def _check_output(path: Path | None, *endings: str) -> None:
-    # A run may take an hour; a name that cannot be written is told before it.
-    if path is None:
-        return
-    if path.suffix.lower() not in endings:
-        raise InputError(f"'{path}': wanted a name that ends in {' or '.join(endings)}")
-    folder = path.absolute().parent
-    if not folder.is_dir():
-        raise InputError(f"'{path}': the folder {folder} does not exist")
-    if not os.access(folder, os.W_OK):
-        raise InputError(f"'{path}': the folder {folder} cannot be written to")
+for _command, _example in COMMANDS:
+    app.command(epilog=f"Example: {_example}")(_command)
 
 
 @contextmanager

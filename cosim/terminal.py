@@ -12,6 +12,7 @@ from cosim.checks import Finding
 from cosim.comparison import Comparison
 from cosim.quantum.fidelity import incoherent_infidelity
 from cosim.result import GateResult
+from cosim.sweep.record import FailedRun
 from cosim.units import format_quantity
 
 CAUTION = (
@@ -199,6 +200,61 @@ def runs_table(columns: Mapping[str, np.ndarray]) -> Table:
     for index in range(count):
         table.add_row(*(_cell(label, columns[name][index]) for label, name in present.items()))
     return table
+
+
+def row_table(row: Mapping[str, object], units: Mapping[str, str]) -> Table:
+    """Lay out the row of one run of a sweep.
+
+    Parameters
+    ----------
+    row : mapping
+        Column to value.
+    units : mapping of str
+        Unit by column.
+
+    Returns
+    -------
+    rich.table.Table
+        One line per column that has a value.
+    """
+    table = _plain_table()
+    for name, value in row.items():
+        if value not in (None, ""):
+            unit = units.get(name, "")
+            text = f"{value:.8g}" if isinstance(value, float) else str(value)
+            table.add_row(name, text if unit in ("", "1") else f"{text} {unit}")
+    return table
+
+
+def failure_table(row: Mapping[str, object], record: FailedRun) -> Group:
+    """Lay out a run of a sweep that has no result.
+
+    Parameters
+    ----------
+    row : mapping
+        Its row in the table.
+    record : FailedRun
+        What is kept of it.
+
+    Returns
+    -------
+    rich.console.Group
+        Status, message, inputs, and the end of the simulator's log.
+    """
+    table = _plain_table()
+    for name, value in row.items():
+        if value not in (None, "", "error") and name not in ("error", "identity", "kind"):
+            table.add_row(name, str(value))
+    for name, wave in record.waveforms.items():
+        table.add_row(
+            f"kept of {name}", f"{wave.t.size} points to {format_quantity(wave.t[-1], 's')}"
+        )
+    parts: list[RenderableType] = [
+        Text(f"run {row['id']}: {record.status}", style="bold"),
+        Text(record.error, style="red"),
+        table,
+    ]
+    return Group(*parts, *(Text(f"  | {line}", style="dim") for line in record.log))
 
 
 def comparison_table(comparison: Comparison) -> Group:

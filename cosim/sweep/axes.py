@@ -6,9 +6,9 @@ from typing import Any
 
 import numpy as np
 
-from cosim.decks import altered_deck, read_deck
 from cosim.circuit.deck import Deck
 from cosim.config import numbered
+from cosim.decks import altered_deck, read_deck
 from cosim.errors import CosimError, TestbenchError
 from cosim.sweep.identity import Files, files_of
 from cosim.sweep.keys import NumberKey, flattened, nominal, number_key, with_number, with_setting

@@ -3,10 +3,8 @@
 import hashlib
 import json
 import os
-import platform
 from collections.abc import Mapping
 from dataclasses import asdict, dataclass, field
-from datetime import datetime
 from math import nan
 
 from cosim.archive.layout import SCHEMA_VERSION
@@ -25,7 +23,7 @@ _SHOWN = 5  # differing keys that a message names
 
 @dataclass(frozen=True, slots=True)
 class SweepRecord:
-    """The plan of a sweep, as its archive keeps it.
+    """The plan of a sweep, as its archive keeps it: equal for all jobs that share one.
 
     Parameters
     ----------
@@ -55,10 +53,6 @@ class SweepRecord:
         Every file of the decks as its author wrote it; without its text where it is confidential.
     versions : dict of str
         Package to version.
-    host : str
-        Name of the machine that planned it and its operating system.
-    started : str
-        ISO 8601 with UTC offset.
     """
 
     title: str
@@ -75,8 +69,6 @@ class SweepRecord:
     folder: str
     deck_files: tuple[DeckFile, ...]
     versions: dict[str, str]
-    host: str
-    started: str
 
 
 @dataclass(frozen=True, slots=True)
@@ -147,8 +139,6 @@ def make_sweep_record(plan: SweepPlan, bench: Testbench) -> SweepRecord:
         folder=os.path.abspath(bench.folder),
         deck_files=_deck_files(plan),
         versions=package_versions(),
-        host=f"{platform.node()} ({platform.platform()})",
-        started=datetime.now().astimezone().isoformat(timespec="seconds"),
     )
 
 
@@ -185,7 +175,11 @@ def check_same_plan(archived: SweepRecord, plan: SweepRecord, path: str) -> None
 
 
 def _content(plan: SweepPlan) -> str:
-    table = {name: part for name, part in asdict(plan.table).items() if name != "report"}
+    # What the corners set stands below; a testbench that was written and read again may say it in
+    # another order.
+    own = asdict(plan.table)
+    table = {name: own[name] for name in ("grid", "monte_carlo", "mismatch", "one_at_a_time")}
+    table["corners"] = [corner.name for corner in plan.corners]
     corners = {
         corner.name or "testbench": {
             "testbench": dict(corner.flat),

@@ -1,0 +1,195 @@
+"""Runs of an archived sweep made again: one alone, or a sample to check the archive by."""
+
+import os
+import tomllib
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from cosim import archive
+from cosim.errors import ArchiveError, InputError
+from cosim.gate import run_gate
+from cosim.result import GateResult
+from cosim.sweep.batches import DONE
+from cosim.sweep.plan import SweepPlan
+from cosim.sweep.planning import make_sweep
+from cosim.sweep.record import SWEEP_KINDS, SweepRecord, check_same_plan, make_sweep_record
+from cosim.testbench import load_testbench, make_testbench
+
+# Two computers round differently in their mathematical libraries; anything larger is a difference.
+ROUNDING = 1e-9
+
+VIEWS = ("as_simulated", "free_frame", "calibrated")
+
+
+@dataclass(frozen=True, slots=True)
+class Repetition:
+    """A run of a sweep that was made again.
+
+    Parameters
+    ----------
+    number : int
+        Its number in the archive.
+    difference : float
+        Largest difference of the three average gate fidelities to the archived ones.
+    allowed : float
+        What is put down to rounding, or to the numerical errors that the error bars cover.
+    """
+
+    number: int
+    difference: float
+    allowed: float
+
+    @property
+    def same(self) -> bool:
+        """Whether the archive and the repetition agree."""
+        return self.difference <= self.allowed
+
+
+def read_record(path: str | os.PathLike[str]) -> SweepRecord:
+    """Read the plan that the archive of a sweep was begun with.
+
+    Parameters
+    ----------
+    path : path
+        The archive.
+
+    Returns
+    -------
+    SweepRecord
+
+    Raises
+    ------
+    ArchiveError
+        If there is no such archive, or it is not one of a sweep.
+    """
+    record = archive.read_plan(path, SWEEP_KINDS)
+    if not isinstance(record, SweepRecord):
+        raise ArchiveError(
+            f"{os.fspath(path)} holds single runs and no sweep",
+            hint="give the archive of a sweep, from `qcosim sweep`",
+        )
+    return record
+
+
+def archived_plan(
+    path: str | os.PathLike[str], testbench: str | os.PathLike[str] | None = None
+) -> SweepPlan:
+    """Make the plan of an archived sweep again, from the deck where it stands now.
+
+    Parameters
+    ----------
+    path : path
+        The archive.
+    testbench : path or None
+        The testbench's file, where it has moved; None takes the archived text and folder.
+
+    Returns
+    -------
+    SweepPlan
+        The same as the archived one.
+
+    Raises
+    ------
+    ArchiveError
+        If the testbench, the deck or another file is not what it was; it names what changed.
+    InputError
+        If one of them cannot be read.
+    """
+    record = read_record(path)
+    if testbench is not None:
+        bench = load_testbench(testbench)
+    else:
+        bench = make_testbench(tomllib.loads(record.testbench), folder=record.folder)
+        bench = replace(bench, source=record.source)
+    plan = make_sweep(bench)
+    check_same_plan(record, make_sweep_record(plan, bench), os.fspath(path))
+    return plan
+
+
+def rerun(
+    path: str | os.PathLike[str],
+    number: int,
+    *,
+    testbench: str | os.PathLike[str] | None = None,
+) -> GateResult:
+    """Make one run of an archived sweep again, alone, with all that a single run gives.
+
+    Parameters
+    ----------
+    path : path
+        The archive.
+    number : int
+        Number of the run, from 1; it need not have been made yet.
+    testbench : path or None
+        As in `archived_plan`.
+
+    Returns
+    -------
+    GateResult
+
+    Raises
+    ------
+    ArchiveError
+        As `archived_plan`.
+    InputError
+        If there is no such run.
+    SimulationError
+        If the run fails.
+    """
+    return _rerun(archived_plan(path, testbench), number)
+
+
+def _rerun(plan: SweepPlan, number: int) -> GateResult:
+    if not 1 <= number <= len(plan):
+        raise InputError(f"the sweep has the runs 1 to {len(plan)}, there is no run {number}")
+    return run_gate(plan.testbench(plan.run(number - 1)))
+
+
+def repeat_sample(
+    path: str | os.PathLike[str],
+    count: int,
+    *,
+    seed: int = 1,
+    testbench: str | os.PathLike[str] | None = None,
+) -> tuple[Repetition, ...]:
+    """Make a random sample of the finished runs of a sweep again and compare.
+
+    Parameters
+    ----------
+    path : path
+        The archive.
+    count : int
+        How many runs; all if there are fewer.
+    seed : int
+        Of the choice.
+    testbench : path or None
+        As in `archived_plan`.
+
+    Returns
+    -------
+    tuple of Repetition
+        In the order of the numbers.
+
+    Raises
+    ------
+    ArchiveError, InputError, SimulationError
+        As `rerun`.
+    """
+    plan = archived_plan(path, testbench)
+    bars = [f"{view}.error_bar" for view in VIEWS]
+    columns = [f"{view}.average_gate_fidelity" for view in VIEWS]
+    table = archive.read_table(path, columns=("id", "status", *columns, *bars))
+    done = np.flatnonzero(table["status"] == DONE) if table else np.array([], dtype=int)
+    chosen = np.random.default_rng(seed).choice(done, min(count, done.size), replace=False)
+    found = []
+    for at in sorted(chosen.tolist()):
+        number = int(table["id"][at])
+        result = _rerun(plan, number)
+        differences = [
+            abs(getattr(result, view).average_gate_fidelity - float(table[column][at]))
+            for view, column in zip(VIEWS, columns, strict=True)
+        ]
+        wide = np.nanmax([ROUNDING, *(float(table[name][at]) for name in bars)])
+        found.append(Repetition(number, max(differences), float(wide)))
+    return tuple(found)
