@@ -26,6 +26,7 @@ from cosim.circuit.waves import SourceWords, source_words
 
 _NUMBER = re.compile(r"[-+]?(?:\d+\.?\d*|\.\d+)(?:e[-+]?\d+)?(?:meg|[tgkmunpf])?", re.IGNORECASE)
 _NAME = re.compile(r"(?<![\w.])[a-z_]\w*")
+_ASSIGNED = re.compile(r"(?<![\w.])[a-z_]\w*\s*=(?!=)")  # Names of a model's or device's own.
 _BRACES = re.compile(r"\{[^{}]*\}|'[^']*'|\"[^\"]*\"")
 # Cards that are read once, or whose effect outlasts the circuit that they stand in.
 _READ_ONCE = frozenset({".if", ".elseif", ".tran", ".save", ".temp", ".options", ".csparam"})
@@ -214,9 +215,10 @@ def _view(lines: tuple[str, ...]) -> _View:
             depth -= 1
         elif card in (".param", ".csparam"):
             names = {item.name for item in definitions(line)}
-            repeated |= names & seen if len(names) == len(definitions(line)) else names
+            again = names & seen if len(names) == len(definitions(line)) else names
+            repeated |= again
             seen |= names
-            if depth == 0 and card == ".param":
+            if depth == 0 and card == ".param" and not again:
                 common[index], found = _without_numbers(line)
                 numbers |= found
         elif depth == 0 and line[0] in "vViI" and index > 0:  # The first line is the title.
@@ -356,11 +358,13 @@ def _value_part(line: str) -> str:
     card = card_word(line)
     if card in (".save", ".global", ".ends"):
         return " ".join(_BRACES.findall(line))
-    if card in (".subckt",) or line[0] == "x":
+    if card == ".subckt" or line[0] == "x":
         found = assignments(line)
         return line[found[0].start :] if found else " ".join(_BRACES.findall(line))
-    if card:
+    if card in (".if", ".elseif"):
         return line
+    if card:
+        return _ASSIGNED.sub(" ", line)
     spans = word_spans(line)
     nodes = 1 + _NODES.get(line[0], 0)
-    return line[spans[nodes][0] :] if len(spans) > nodes else ""
+    return _ASSIGNED.sub(" ", line[spans[nodes][0] :]) if len(spans) > nodes else ""
