@@ -128,6 +128,32 @@ class TestOneAtATime:
         points = [swing.point for swing in summary_of(twice, inputs).swings]
         assert sorted(point["netlist.temperature"] for point in points) == [4.0, 4.0, 300.0, 300.0]
 
+    def test_corners_and_grid_points_are_told_apart(self) -> None:
+        table = moved_one_at_a_time(0.05, {"slow": 1.2, "fast": 0.8})
+        twice = {name: np.concatenate((column, column)) for name, column in table.items()}
+        twice["netlist.temperature"] = np.repeat([4.0, 300.0], len(table["id"]))
+        found = summary_of(twice, ("corner", R, C, "perturbed", "netlist.temperature"))
+        assert [item.points for item in found.sensitivities] == [4, 4]
+        assert len({tuple(swing.point.items()) for swing in found.swings}) == 4
+        assert all(
+            swing.nominal_input
+            == NOMINAL[R] * {"slow": 1.2, "fast": 0.8}[str(swing.point["corner"])]
+            for swing in found.swings
+            if swing.key == R
+        )
+
+    def test_without_the_nominal_run(self) -> None:
+        """The runs that move another number tell which side a run lies on."""
+        table = moved_one_at_a_time(0.05, {"": 1.0})
+        kept = np.isin(np.arange(5), (1, 3, 4))  # R at its lower value, C at both.
+        found = summary_of({name: column[kept] for name, column in table.items()})
+        places = {item.key: item.largest for item in found.sensitivities}
+        assert places[R].low_input == pytest.approx(0.95 * NOMINAL[R])
+        assert math.isnan(places[R].high_input)
+        assert places[C].derivative == pytest.approx(
+            (places[C].high - places[C].low) / (0.1 * NOMINAL[C])
+        )
+
     def test_unresolved(self) -> None:
         def flat(values: dict[str, float]) -> float:
             # R moves the metric by less than the two error bars together, C by more.
@@ -242,6 +268,31 @@ class TestCorrelations:
         item = by_key(found)["x"]
         assert item.spearman == pytest.approx(1.0, abs=1e-12)  # Rounding.
         assert item.standardised == pytest.approx(1.0, abs=1e-9)  # 1000 costs three digits.
+
+    def test_ranks_of_corners_of_unequal_size(self) -> None:
+        """Ranks as parts of the size: two runs against each other, four along with each other."""
+        corner = np.array(["a"] * 2 + ["b"] * 4, dtype=object)
+        metric = np.array([1.0, 0.0, 10.0, 11.0, 12.0, 13.0])
+        x = np.array([0.0, 1.0, 0.0, 1.0, 2.0, 3.0])
+        # Squares of the centered ranks: 2 (1/2)^2/2^2 = 1/8 and 5/4^2 = 5/16.
+        expected = (5 / 16 - 1 / 8) / (5 / 16 + 1 / 8)
+        got = by_key(sampled(metric, corner=corner, x=x))["x"].spearman
+        assert got == pytest.approx(expected, abs=1e-12)  # Rounding.
+
+    def test_corners_do_not_multiply_the_samples(self) -> None:
+        """What thirty samples cannot tell from chance stays so at twenty corners."""
+        rng = np.random.default_rng(17)
+        x, metric = rng.standard_normal((2, 30))
+        alone = by_key(sampled(metric, x=x))["x"]
+        corner = np.repeat([f"corner {at}" for at in range(20)], 30).astype(object)
+        samples = np.tile(np.arange(30), 20)
+        found = sampled(np.tile(metric, 20), corner=corner, x=np.tile(x, 20), sample=samples)
+        item = by_key(found)["x"]
+        assert item.spearman == pytest.approx(alone.spearman, abs=1e-12)  # Rounding.
+        # 600 independent samples would tell this from chance: 2.24/sqrt(599) = 0.09.
+        assert abs(item.spearman) > 0.1
+        assert alone.significant is False
+        assert item.significant is False
 
     def test_an_optimum_is_seen_by_the_share_alone(self) -> None:
         rng = np.random.default_rng(9)
