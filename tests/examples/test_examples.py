@@ -7,6 +7,7 @@ tests/published and tests/crosscheck are for. Made anew with: python tests/examp
 import json
 import subprocess
 import sys
+import tempfile
 import tomllib
 from pathlib import Path
 
@@ -14,12 +15,17 @@ import pytest
 import tomli_w
 
 import cosim
+from cosim.archive import read_table
 from cosim.result import GateResult
+from cosim.sweep.local import local_engine
+from cosim.sweep.run import run_sweep
 
 HERE = Path(__file__).parent
 EXAMPLES = HERE.parents[1] / "examples"
-BENCHES = sorted(path.stem for path in EXAMPLES.glob("*.toml"))
-SCRIPTS = sorted(path.stem for path in EXAMPLES.glob("*.py"))
+SWEEPS = ("sweep_corners",)
+BENCHES = sorted({path.stem for path in EXAMPLES.glob("*.toml")} - {*SWEEPS})
+# What needs a cluster is tested in tests/sweep.
+SCRIPTS = sorted({path.stem for path in EXAMPLES.glob("*.py")} - {"sweep_on_slurm"})
 
 # Another processor or library rounds differently, which Newton's iteration in ngspice turns into
 # a change of a waveform of the order of its relative tolerance of 1e-4 in the worst case and of
@@ -63,6 +69,26 @@ def test_testbenches_give_the_committed_numbers(name: str, tmp_path: Path) -> No
     cosim.save(result, tmp_path / "a.h5")
     again = cosim.load(tmp_path / "a.h5")
     assert key_numbers(again) == key_numbers(result)
+
+
+@pytest.mark.ngspice
+@pytest.mark.full
+@pytest.mark.parametrize("name", SWEEPS)
+def test_sweeps_give_the_committed_infidelities(name: str, tmp_path: Path) -> None:
+    found = sweep_infidelities(name, tmp_path / "s.h5")
+    expected = tomllib.loads((HERE / "expected.toml").read_text(encoding="utf-8"))[name]
+    assert len(found) >= 24
+    assert found == pytest.approx(
+        expected["infidelities"], abs=TOLERANCE["free_frame.average_gate_fidelity"]
+    )
+
+
+def sweep_infidelities(name: str, path: Path) -> list[float]:
+    """Run a sweep on two workers and give the infidelity of each run."""
+    state = run_sweep(EXAMPLES / f"{name}.toml", path, engine=local_engine(2))
+    assert state.finished == state.planned
+    fidelities: list[float] = read_table(path)["free_frame.average_gate_fidelity"].tolist()
+    return [1.0 - fidelity for fidelity in fidelities]
 
 
 @pytest.mark.ngspice
@@ -114,6 +140,9 @@ def write_expected() -> None:
     for name in BENCHES:
         table[name] = key_numbers(cosim.run(EXAMPLES / f"{name}.toml"))
         print(name, json.dumps(table[name], indent=1))
+    for name in SWEEPS:
+        with tempfile.TemporaryDirectory() as folder:
+            table[name] = {"infidelities": sweep_infidelities(name, Path(folder, "s.h5"))}
     for name in SCRIPTS:
         done = subprocess.run(
             [sys.executable, EXAMPLES / f"{name}.py"], capture_output=True, text=True, check=True
