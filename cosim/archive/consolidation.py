@@ -170,6 +170,7 @@ def _write_in_child(
         "archives": [[str(path.absolute()) for path in archive] for archive in archives],
         "keep": keep,
         "target": str(temporary.absolute()),
+        "parent": os.getpid(),
     }
     try:
         _run_child(target, order)

@@ -3,7 +3,8 @@
 What is held at once is the run numbers, some columns of the table, 32 MiB of series and one
 array of a record. As a program it reads one JSON object from its standard input, with the keys
 `archives` (a list of lists of files, in the order in which they were published), `keep` (a list
-of run numbers or null), and `target` (the file to write), and prints how many runs it wrote.
+of run numbers or null), `target` (the file to write) and `parent` (the process that has asked,
+without which it ends), and prints how many runs it wrote.
 """
 
 import collections
@@ -305,11 +306,19 @@ def run_program(order: Mapping[str, Any]) -> int:
         owners = find_owners(sources, archives)
         with h5py.File(order["target"], "x", libver=LIBRARY_BOUNDS, locking=False) as file:
             write_root(file)
+            _check_parent(order["parent"])
             merge_files(file, sources, owners, keep, packed=True)
+    _check_parent(order["parent"])
     handle = os.open(order["target"], os.O_RDONLY)
     os.fsync(handle)
     os.close(handle)
     return int(owners.numbers.size)
+
+
+def _check_parent(parent: int) -> None:
+    """End when nobody waits for the file any more."""
+    if os.getppid() != parent:
+        raise SystemExit("the process that asked for the merge has ended")
 
 
 if __name__ == "__main__":

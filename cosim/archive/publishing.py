@@ -26,7 +26,7 @@ from cosim.errors import ArchiveError, CosimError
 
 _LOCK_TIMEOUT = 60.0
 _NO_SPACE = (errno.ENOSPC, errno.EDQUOT, errno.EFBIG)
-NO_LOCKS = (errno.ENOLCK, errno.ENOSYS, errno.EOPNOTSUPP)
+_NO_LOCKS = (errno.ENOLCK, errno.ENOSYS, errno.EOPNOTSUPP)
 
 
 @contextlib.contextmanager
@@ -147,10 +147,8 @@ def locked(path: Path, tidy: bool = True, needed: bool = True) -> Iterator[bool]
     try:
         handle = _take_lock(side)
     except OSError as error:
-        if error.errno not in NO_LOCKS or needed:
+        if error.errno not in _NO_LOCKS or needed:
             raise unwritable(path, error) from error
-        with contextlib.suppress(OSError):
-            os.unlink(side)
         yield False
         return
     try:
@@ -179,6 +177,8 @@ def _take_lock(side: Path) -> int:
             time.sleep(0.01)
         except OSError:
             os.close(handle)
+            with contextlib.suppress(OSError):
+                os.unlink(side)
             raise
         os.close(handle)
     raise ArchiveError(
@@ -338,7 +338,7 @@ def unwritable(path: Path, error: OSError) -> ArchiveError:
         return ArchiveError(
             f"{path}: not written, the folder {path.parent} does not exist", hint="make it first"
         )
-    if error.errno in NO_LOCKS:
+    if error.errno in _NO_LOCKS:
         return ArchiveError(
             f"{path}: not written, the file system cannot lock files",
             hint="write to a local folder and move the archive afterwards",

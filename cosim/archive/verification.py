@@ -110,7 +110,7 @@ def _series_of(file: Any, numbers: Sequence[int]) -> list[bytes]:
     for name, length, group in sorted(stack_groups(file), key=lambda item: item[:2]):
         for number, digest in _stack_digests(name, length, group):
             digests[number] = digests.get(number, b"") + digest
-    return list(digests.values())[: len(numbers)]
+    return [digests[number] for number in numbers]
 
 
 def _stack_digests(name: str, length: int, group: Any) -> Iterator[tuple[int, bytes]]:

@@ -7,7 +7,6 @@ import os
 import resource
 import signal
 import threading
-from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -30,15 +29,13 @@ from cosim.archive import (
     write_part,
 )
 from cosim.errors import ArchiveError
+from tests.archive.faults import Fault, die, real_write, run_in_child
 
 pytestmark = pytest.mark.filterwarnings(
     # Python 3.12 and later warn of any fork while numpy's threads exist; the children of these
     # tests use nothing of theirs.
     "ignore:This process:DeprecationWarning"
 )
-
-# The calls by which a file or folder appears, fills, reaches the disk, or goes.
-CALLS = ("open", "write", "fsync", "replace", "unlink", "mkdir", "rmdir", "close")
 
 
 @dataclass(frozen=True, slots=True)
@@ -60,57 +57,6 @@ def check(path: Path, values: dict[int, float]) -> None:
         run = read(path, {"Run": Run}, number)
         assert run.value == value
         np.testing.assert_array_equal(run.samples, np.full(2000, value))
-
-
-class Fault:
-    """Does something at the k-th of the calls by which files are changed."""
-
-    def __init__(self, at: int, action: Callable[[str, tuple[Any, ...]], None]) -> None:
-        self.left = at
-        self.action = action
-
-    def install(self) -> None:
-        for name in CALLS:
-            setattr(os, name, self._wrap(name, getattr(os, name)))
-
-    def _wrap(self, name: str, original: Callable[..., Any]) -> Callable[..., Any]:
-        def call(*args: Any) -> Any:
-            self.left -= 1
-            if self.left == 0:
-                self.action(name, args)
-            return original(*args)
-
-        return call
-
-
-real_write = os.write
-
-
-def die(name: str, args: tuple[Any, ...]) -> None:
-    """Die before the call; a write gets half of its bytes out first."""
-    if name == "write":
-        real_write(args[0], args[1][: len(args[1]) // 2])
-    os.kill(os.getpid(), signal.SIGKILL)
-
-
-def run_in_child(work: Callable[[int], None], fault: Fault | None = None) -> tuple[int, bytes]:
-    """Run `work` in a forked child; it gets a pipe to report on. Give its status and report."""
-    reading, writing = os.pipe()
-    pid = os.fork()
-    if pid == 0:
-        code = 1
-        try:
-            os.close(reading)
-            if fault is not None:
-                fault.install()
-            work(writing)
-            code = 0
-        finally:
-            os._exit(code)
-    os.close(writing)
-    with os.fdopen(reading, "rb") as pipe:
-        report = pipe.read()
-    return os.waitstatus_to_exitcode(os.waitpid(pid, 0)[1]), report
 
 
 def publish_everything(path: Path, pipe: int) -> None:
