@@ -81,7 +81,7 @@ class SweepSummary:
     metric : str
         Its name for people.
     unit : str
-        Its unit.
+        Its unit; empty for a plain number.
     inputs : tuple of str
         The plan's columns.
     units : dict
@@ -219,7 +219,7 @@ def summarise(
     return SweepSummary(
         goal=goal,
         metric=goal.label,
-        unit=units.get(goal.column, ""),
+        unit="" if units.get(goal.column) == "1" else units.get(goal.column, ""),
         inputs=tuple(inputs),
         units={name: units[name] for name in inputs if units.get(name, "") not in ("", "1")},
         planned=rows if planned is None else planned,
