@@ -30,6 +30,7 @@ from cosim.sweep_cli import (
     COMMANDS,
     LimitOption,
     MetricOption,
+    check_run_archive,
     export_sweep,
     show_sweep,
     show_sweep_run,
@@ -113,7 +114,6 @@ def run(
     """Run a testbench from the netlist to the fidelity."""
     from dataclasses import replace
 
-    from cosim.archive import run_numbers
     from cosim.dispatch import run as run_testbench
     from cosim.dispatch import save
     from cosim.result import as_numbers
@@ -122,8 +122,8 @@ def run(
 
     check_output(archive, ".h5")
     check_output(plot, ".png", ".pdf", ".svg")
-    if archive is not None and archive.exists():
-        run_numbers(archive)  # Refuses what is no archive, before an hour of simulation.
+    if archive is not None:
+        check_run_archive(archive)
     bench = load_testbench(testbench)
     if floor is not None:
         bench = replace(bench, accuracy=replace(bench.accuracy, floor=floor))

@@ -86,9 +86,9 @@ def sweep(
             part=part,
             on_progress=show,
         )
+    show_sweep(target, json_output=json_output, plot=plot, table=False)
     if state.notice:
         console.print(f"notice: {state.notice}", style="yellow")
-    show_sweep(target, json_output=json_output, plot=plot, table=False)
     if part[1] > 1:
         console.print(f"when all {part[1]} shares are there: qcosim merge {archive}")
     if not state.finished and state.planned:
@@ -104,6 +104,7 @@ def merge(
 ) -> None:
     """Put the shares of a sweep together, or the parts of one that was interrupted."""
     from cosim import archive as store
+    from cosim.sweep.run import kept_whole
     from cosim.sweep.shares import shares_beside
 
     given = tuple(others) if others else shares_beside(archive)
@@ -113,7 +114,7 @@ def merge(
             hint="name the archives to merge: qcosim merge ALL.h5 ONE.h5 TWO.h5",
         )
     count = store.merge(archive, given) if given else 0
-    parts = store.consolidate(archive)
+    parts = store.consolidate(archive, kept_whole(archive))
     typer.echo(f"{count} runs from {len(given)} archives, {parts} parts merged", err=True)
     show_sweep(archive, json_output=False, plot=None, table=False)
 
@@ -121,7 +122,7 @@ def merge(
 def verify(
     archive: ArchivePath,
     repeat: Annotated[
-        int, typer.Option(metavar="N", help="Run N of the finished runs again and compare.")
+        int, typer.Option(metavar="N", min=0, help="Run N of the finished runs again and compare.")
     ] = 0,
     seed: Annotated[int, typer.Option(help="Of the choice of these runs.")] = 1,
     testbench: MovedTestbench = None,
@@ -143,8 +144,12 @@ def verify(
         for item in repeated:
             verdict = "the same" if item.same else "NOT THE SAME"
             typer.echo(
-                f"run {item.number} made again: {verdict}, fidelities differ by "
-                f"{item.difference:.1e} (allowed: {item.allowed:.1e})"
+                f"run {item.number} made again: {verdict}, "
+                + (
+                    f"it failed: {item.error}"
+                    if item.error
+                    else f"fidelities differ by {item.difference:.1e} (allowed: {item.allowed:.1e})"
+                )
             )
         typer.echo(
             f"{found.rows} runs and {found.records} whole records are intact"
@@ -175,8 +180,8 @@ def rerun(
 
     check_output(into, ".h5")
     check_output(plot, ".png", ".pdf", ".svg")
-    if into is not None and into.exists() and into.samefile(archive):
-        raise InputError(f"'{into}' is the sweep itself; give another archive")
+    if into is not None:
+        check_run_archive(into)
     result = run_again(archive, number, testbench=testbench)
     if json_output:
         typer.echo(json.dumps(as_numbers(result), indent=2))
@@ -187,6 +192,30 @@ def rerun(
     if plot is not None:
         plot_gate(result, plot)
         typer.echo(f"figure in {plot}", err=True)
+
+
+def check_run_archive(path: Path) -> None:
+    """Refuse an archive that a single run cannot be added to, before the run is made.
+
+    Parameters
+    ----------
+    path : Path
+        The archive, which need not exist.
+
+    Raises
+    ------
+    ArchiveError
+        If there is something else, or a sweep, whose numbers are those of its plan.
+    """
+    from cosim.archive import read_plan, run_numbers
+
+    if path.exists():
+        run_numbers(path)
+        if read_plan(path, {}) is not None:
+            raise ArchiveError(
+                f"{path} holds a sweep, and a single run is none of its runs",
+                hint="give another archive",
+            )
 
 
 def _engine(workers: int | None, scheduler: str | None) -> "Engine":

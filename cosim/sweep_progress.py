@@ -2,7 +2,7 @@
 
 import time
 from collections.abc import Callable, Iterator
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 
 from rich.console import Console
 from rich.progress import BarColumn, MofNCompleteColumn, Progress, TextColumn, TimeElapsedColumn
@@ -61,7 +61,9 @@ class _Lines:
             if now < self.said + (LINE_INTERVAL if news else SIGN_OF_LIFE):
                 return
         self.said, self.missing = now, state.missing
-        self.console.print(progress_line(state), highlight=False, soft_wrap=True)
+        # Whoever read the lines may have gone; the sweep goes on.
+        with suppress(OSError):
+            print(progress_line(state), file=self.console.file, flush=True)
 
 
 def progress_line(state: SweepState) -> str:

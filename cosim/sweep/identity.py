@@ -125,7 +125,7 @@ def identity_keys(
         In hexadecimal: of all that determines the result; of what determines the waveform at the
         probe; of the deck as read, without its parameters.
     """
-    kept = {key: value for key, value in flat.items() if not _is_ignored(key)}
+    kept = {key: value for key, value in flat.items() if not bears_on_nothing(key)}
     waveform = {key: value for key, value in kept.items() if _is_of_waveform(key)}
     rest = {key: value for key, value in kept.items() if key not in waveform}
     waveform_key = _hash([SCHEMA_VERSION, waveform, dict(files.waveform), dict(mismatch)])
@@ -135,7 +135,18 @@ def identity_keys(
     return identity, waveform_key, deck_key
 
 
-def _is_ignored(key: str) -> bool:
+def bears_on_nothing(key: str) -> bool:
+    """Tell whether a key of the flat testbench has no part in what a run is.
+
+    Parameters
+    ----------
+    key : str
+        Dotted key, "netlist.time_limit".
+
+    Returns
+    -------
+    bool
+    """
     return key in _IGNORED or (key.startswith("stimulus.") and key.endswith(".file"))
 
 

@@ -14,6 +14,7 @@ from cosim.decks import roots_of
 from cosim.errors import ArchiveError
 from cosim.record import package_versions
 from cosim.result import KINDS
+from cosim.sweep.identity import bears_on_nothing
 from cosim.sweep.plan import SweepPlan
 from cosim.testbench import Testbench
 from cosim.waveform import Waveform
@@ -135,7 +136,7 @@ def make_sweep_record(plan: SweepPlan, bench: Testbench) -> SweepRecord:
         digest=hashlib.sha256(content.encode()).hexdigest(),
         content=content,
         testbench=bench.to_toml(),
-        source=bench.source,
+        source=os.path.abspath(bench.source) if bench.source else "",
         folder=os.path.abspath(bench.folder),
         deck_files=_deck_files(plan),
         versions=package_versions(),
@@ -182,7 +183,9 @@ def _content(plan: SweepPlan) -> str:
     table["corners"] = [corner.name for corner in plan.corners]
     corners = {
         corner.name or "testbench": {
-            "testbench": dict(corner.flat),
+            "testbench": {
+                key: value for key, value in corner.flat.items() if not bears_on_nothing(key)
+            },
             "files": {**dict(corner.files.waveform), "line": corner.files.line},
         }
         for corner in plan.corners

@@ -1,5 +1,6 @@
 """Runs of an archived sweep made again: one alone, or a sample to check the archive by."""
 
+import math
 import os
 import tomllib
 from dataclasses import dataclass, replace
@@ -7,7 +8,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from cosim import archive
-from cosim.errors import ArchiveError, InputError
+from cosim.errors import ArchiveError, InputError, SimulationError
 from cosim.gate import run_gate
 from cosim.result import GateResult
 from cosim.sweep.batches import DONE
@@ -31,14 +32,18 @@ class Repetition:
     number : int
         Its number in the archive.
     difference : float
-        Largest difference of the three average gate fidelities to the archived ones.
+        Largest difference of the three average gate fidelities to the archived ones; NaN where
+        one of two is none, or the repetition failed.
     allowed : float
         What is put down to rounding, or to the numerical errors that the error bars cover.
+    error : str
+        Message of a repetition that failed; mostly empty.
     """
 
     number: int
     difference: float
     allowed: float
+    error: str = ""
 
     @property
     def same(self) -> bool:
@@ -173,8 +178,10 @@ def repeat_sample(
 
     Raises
     ------
-    ArchiveError, InputError, SimulationError
-        As `rerun`.
+    ArchiveError
+        As `archived_plan`.
+    InputError
+        If the testbench or the deck cannot be read.
     """
     plan = archived_plan(path, testbench)
     bars = [f"{view}.error_bar" for view in VIEWS]
@@ -185,11 +192,14 @@ def repeat_sample(
     found = []
     for at in sorted(chosen.tolist()):
         number = int(table["id"][at])
-        result = _rerun(plan, number)
-        differences = [
-            abs(getattr(result, view).average_gate_fidelity - float(table[column][at]))
-            for view, column in zip(VIEWS, columns, strict=True)
-        ]
-        wide = np.nanmax([ROUNDING, *(float(table[name][at]) for name in bars)])
-        found.append(Repetition(number, max(differences), float(wide)))
+        wide = float(np.nanmax([ROUNDING, *(float(table[name][at]) for name in bars)]))
+        try:
+            result = _rerun(plan, number)
+        except (InputError, SimulationError) as error:
+            found.append(Repetition(number, math.nan, wide, str(error)))
+            continue
+        made = [getattr(result, view).average_gate_fidelity for view in VIEWS]
+        kept = [float(table[column][at]) for column in columns]
+        # The greatest of numbers with a NaN among them is NaN, and then they are not the same.
+        found.append(Repetition(number, float(np.max(np.abs(np.subtract(made, kept)))), wide))
     return tuple(found)

@@ -9,7 +9,8 @@ import time
 from collections import Counter
 from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass, field, replace
-from itertools import chain
+from functools import partial
+from itertools import chain, groupby
 from pathlib import Path
 from typing import Any
 
@@ -30,6 +31,7 @@ from cosim.testbench import Testbench, load_testbench
 FLUSH_INTERVAL = 2.0  # s: what is lost at most when the process is killed
 FLUSH_ROWS = 256
 LARGEST_BATCH = 16
+LARGEST_FAMILY = 256  # runs that share a waveform; of more, it is simulated once for each so many
 BATCHES_PER_SLOT = 4  # few enough runs in a batch that the slots end at about the same time
 
 
@@ -130,28 +132,39 @@ def run_sweep(
 def _alone(path: Path) -> Iterator[None]:
     """Keep other sweeps off the archive for as long as this one runs."""
     side = path.with_name(f".{path.name}.sweep")
+    handle = _take(side, path)
     try:
-        handle = os.open(side, os.O_RDWR | os.O_CREAT | os.O_CLOEXEC, 0o666)
-    except OSError as error:
-        raise ArchiveError(
-            f"{path}: no sweep can be written in {path.absolute().parent}: {error.strerror}",
-            hint="choose a folder that exists and that you may write in",
-        ) from None
-    try:
+        yield
+    finally:
+        # Removed while it is still held: whoever has opened it meanwhile sees that it is gone.
+        with contextlib.suppress(OSError):
+            os.unlink(side)
+        os.close(handle)
+
+
+def _take(side: Path, path: Path) -> int:
+    """Open and lock the file that stands for a running sweep."""
+    while True:
+        try:
+            handle = os.open(side, os.O_RDWR | os.O_CREAT | os.O_CLOEXEC, 0o666)
+        except OSError as error:
+            raise ArchiveError(
+                f"{path}: no sweep can be written in {path.absolute().parent}: {error.strerror}",
+                hint="choose a folder that exists and that you may write in",
+            ) from None
         try:
             fcntl.flock(handle, fcntl.LOCK_EX | fcntl.LOCK_NB)
         except BlockingIOError:
+            os.close(handle)
             raise ArchiveError(
                 f"{path}: another sweep is writing this archive",
                 hint="wait for it; jobs that divide a sweep take --slice, each with its archive",
             ) from None
         except OSError:
             # The file system has no locks: then nothing keeps two sweeps apart.
-            pass
-        yield
-    finally:
-        with contextlib.suppress(OSError):
-            os.unlink(side)
+            return handle
+        if os.fstat(handle).st_nlink:
+            return handle
         os.close(handle)
 
 
@@ -181,8 +194,8 @@ class _Desk:
         self.record = record
         self.path = path
         self.on_progress = on_progress
-        self.keep = ALL if record.keep == "all" else int(record.keep)
-        self.metric = f"{record.fidelity}.average_gate_fidelity"
+        self.keep = _keep_of(record)
+        self.metric = _metric_of(record)
         self.worst: list[float] = []  # A heap of the infidelities of the runs that are kept whole.
         self.done: set[int] = set()  # Numbers that are not to be run again.
         self.finished = 0
@@ -241,21 +254,40 @@ class _Desk:
         # Jobs that divide the plan must cut it alike, whatever each of them runs on.
         slots = part[1] if part[1] > 1 else max(1, engine.slots())
         size = math.ceil(len(self.plan) / (BATCHES_PER_SLOT * slots))
-        return take_slice(self.plan.groups(min(LARGEST_BATCH, size)), *part)
+        families = self.plan.groups(LARGEST_FAMILY)
+        cut = partial(self.cut, min(LARGEST_BATCH, size))
+        return take_slice(chain.from_iterable(map(cut, families)), *part)
+
+    def cut(self, size: int, group: tuple[int, ...]) -> Iterator[tuple[int, ...]]:
+        """Cut a group to a size, though never between runs that share a waveform."""
+        piece: tuple[int, ...] = ()
+        for _, runs in groupby(group, lambda number: self.plan.run(number).waveform_key):
+            members = tuple(runs)
+            if piece and len(piece) + len(members) > size:
+                yield piece
+                piece = ()
+            piece += members
+        if piece:
+            yield piece
 
     def batches(self, engine: Engine, part: tuple[int, int]) -> Iterator[Batch]:
         # Runs when the engine is open, so that it knows its slots.
         for group in self.groups(engine, part):
             numbers = [number for number in group if number + 1 not in self.done]
             if numbers:
-                full = self.keep == ALL or len(self.worst) < self.keep
                 shared = Shared(
                     self.plan.only(numbers),
                     self.record.fidelity,
                     self.keep,
-                    -math.inf if full else self.worst[0],
+                    self.threshold(),
                 )
                 yield Batch(run_batch, tuple(Task(number + 1) for number in numbers), shared)
+
+    def threshold(self) -> float:
+        """Give the infidelity from which a run is among the worst, as far as is known."""
+        if self.keep == ALL or len(self.worst) < self.keep:
+            return -math.inf
+        return self.worst[0] if self.worst else math.inf
 
     def take(self, outcome: Outcome) -> None:
         row = outcome.result if outcome.result is not None else failed_row(self.plan, outcome)
@@ -285,12 +317,8 @@ class _Desk:
 
     def tidy(self) -> str:
         """Merge the parts; give a notice if that does not go: all can be read as it is."""
-        keep = None
-        if self.keep != ALL:
-            table = archive.read_table(self.path, columns=("id", "status", self.metric))
-            keep = whole_numbers(table, self.metric, self.keep)
         try:
-            archive.consolidate(self.path, keep)
+            archive.consolidate(self.path, kept_whole(self.path, self.record))
         except ArchiveError as error:
             return f"the parts of the archive were not merged: {error}"
         return ""
@@ -303,6 +331,44 @@ class _Desk:
             self.made,
             time.monotonic() - self.began,
         )
+
+
+def kept_whole(path: str | os.PathLike[str], record: SweepRecord | None = None) -> set[int] | None:
+    """Tell which runs of an archived sweep are kept whole.
+
+    Parameters
+    ----------
+    path : path
+        The archive.
+    record : SweepRecord or None
+        Its plan, of which the metric and the number to keep are taken; None reads it.
+
+    Returns
+    -------
+    set of int or None
+        Their numbers, for `cosim.archive.consolidate`; None for all, as in an archive of single
+        runs.
+
+    Raises
+    ------
+    ArchiveError
+        If the archive cannot be read.
+    """
+    plan = archive.read_plan(path, SWEEP_KINDS) if record is None else record
+    if not isinstance(plan, SweepRecord) or plan.keep == "all":
+        return None
+    metric = _metric_of(plan)
+    return whole_numbers(
+        archive.read_table(path, columns=("id", "status", metric)), metric, _keep_of(plan)
+    )
+
+
+def _metric_of(record: SweepRecord) -> str:
+    return f"{record.fidelity}.average_gate_fidelity"
+
+
+def _keep_of(record: SweepRecord) -> int:
+    return ALL if record.keep == "all" else int(record.keep)
 
 
 def whole_numbers(table: Mapping[str, Any], metric: str, keep: int) -> set[int]:

@@ -94,9 +94,13 @@ def run_batch(batch: Batch) -> tuple[Outcome, ...]:
             outcome = _outcome(plan, run, shot, spent, results)
             outcomes.append(outcome)
             spent = 0.0
-    for number in _worst(results, shared):
+            # No more of them is held than is sent back.
+            results = {number: results[number] for number in _worst(results, shared)}
+    # What was read while the runs were made must not be of another file either.
+    check_files(plan, runs)
+    for number, result in results.items():
         at = next(k for k, outcome in enumerate(outcomes) if outcome.number == number)
-        row = replace(outcomes[at].result, run=results[number])
+        row = replace(outcomes[at].result, run=result)
         outcomes[at] = replace(outcomes[at], result=row)
     return tuple(outcomes)
 
@@ -150,7 +154,7 @@ def check_files(plan: SweepPlan, runs: Sequence[SweepRun]) -> None:
 
 def _shots(plan: SweepPlan, groups: Sequence[Sequence[SweepRun]]) -> Iterator[_Shot]:
     """Simulate the waveform of each group of runs."""
-    ready = [_ready(plan, members[0]) for members in groups]
+    ready = [_ready(plan, members) for members in groups]
     plans = [item.plan for item in ready if item.plan is not None]
     firsts = _Captures(plans)
     # The runs at half the step are a family of their own.
@@ -189,17 +193,24 @@ class _Captures:
         return found
 
 
-def _ready(plan: SweepPlan, run: SweepRun) -> _Shot:
+def _ready(plan: SweepPlan, members: Sequence[SweepRun]) -> _Shot:
+    """Plan the simulation of runs that share it, by the first whose testbench is in order."""
     began = time.perf_counter()
-    bench = None
-    try:
-        bench = plan.testbench(run)
-        made = None
-        if bench.netlist is not None:
-            made = make_plan(bench, plan.corner(run).deck)
-    except CosimError as error:
-        return _Shot(bench, error=error, wall_time=time.perf_counter() - began)
-    return _Shot(bench, made, wall_time=time.perf_counter() - began)
+    shot = _Shot(None)
+    for run in members:
+        try:
+            bench, made = _simulation(plan, run)
+        except CosimError as error:
+            shot = _Shot(None, error=error)
+            continue
+        shot = _Shot(bench, made)
+        break
+    return replace(shot, wall_time=time.perf_counter() - began)
+
+
+def _simulation(plan: SweepPlan, run: SweepRun) -> tuple[Testbench, Plan | None]:
+    bench = plan.testbench(run)
+    return bench, None if bench.netlist is None else make_plan(bench, plan.corner(run).deck)
 
 
 def _outcome(
@@ -212,7 +223,7 @@ def _outcome(
     # A library that calls sys.exit has failed; it must not end the worker.
     except (Exception, SystemExit) as error:
         outcome = failed(number, error, spent + time.perf_counter() - began)
-        known = _known(shot, error)
+        known = _known(plan, run, shot, error)
         return replace(outcome, result=_failed_row(plan, run, outcome, known))
     outcome = Outcome(number, DONE, wall_time=spent + time.perf_counter() - began)
     results[number] = result
@@ -220,6 +231,8 @@ def _outcome(
 
 
 def _gate(plan: SweepPlan, run: SweepRun, shot: _Shot) -> GateResult:
+    if shot.bench is None:
+        _simulation(plan, run)  # Each of the runs has its own word to say on what is wrong.
     if shot.error is not None:
         raise shot.error
     bench = plan.testbench(run)
@@ -275,18 +288,21 @@ def _failed_row(plan: SweepPlan, run: SweepRun, outcome: Outcome, known: FailedR
     )
 
 
-def _known(shot: _Shot, error: BaseException) -> FailedRun:
+def _known(plan: SweepPlan, run: SweepRun, shot: _Shot, error: BaseException) -> FailedRun:
     """Give what is known of a run that failed, without its status."""
-    if shot.bench is None or shot.plan is None:
-        toml = "" if shot.bench is None else shot.bench.to_toml()
-        return FailedRun("", "", (), toml, "", {})
-    roots = roots_of(shot.bench)
+    try:
+        bench = plan.testbench(run)
+    except CosimError:
+        return FailedRun("", "", (), "", "", {})
+    if shot.plan is None:
+        return FailedRun("", "", (), bench.to_toml(), "", {})
+    roots = roots_of(bench)
     waves: dict[str, Waveform] = {}
     if shot.shots is not None:
         waves = {"probe": shot.shots.first.waveform}
     elif isinstance(error, SimulationError):
         waves = dict(_partial(error.partial))
-    return FailedRun("", "", (), shot.bench.to_toml(), _sent(shot.plan, roots), waves)
+    return FailedRun("", "", (), bench.to_toml(), _sent(shot.plan, roots), waves)
 
 
 def _sent(plan: Plan, roots: Roots) -> str:
