@@ -257,10 +257,10 @@ class Host:
         Up to the child's end, or to a frame of the kind `last`: then the value is True.
         """
         while data := self._read(source, deadline):
-            for frame in frames.feed(data):
-                send(self._target, frame)
-                if last and unpack(frame)[0]["kind"] == last:
-                    return True
+            whole = frames.feed(data)
+            send(self._target, b"".join(whole))
+            if last and any(unpack(frame)[0]["kind"] == last for frame in whole):
+                return True
         return False
 
 

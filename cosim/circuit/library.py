@@ -16,6 +16,7 @@ from cosim.circuit.frames import pack, send
 LOG_LIMIT = 20_000  # lines of a run's log that are passed on at once
 LOG_TAIL = 200  # lines after these that are kept for the end of the run
 PROGRESS_INTERVAL = 0.1  # s
+LARGE = 2**16  # bytes; less than that waits for what follows
 CONSTANTS = "const"  # the plot that ngspice starts with
 
 
@@ -64,16 +65,21 @@ class Listener:
     ----------
     output : int
         Descriptor that the frames go to.
+    at_once : bool
+        Whether each line leaves at once, since the next one may never come. Else they wait for
+        one another: each frame wakes three processes on its way.
     """
 
-    def __init__(self, output: int) -> None:
+    def __init__(self, output: int, *, at_once: bool = True) -> None:
         self._output = output
+        self._at_once = at_once
+        self._held: list[bytes] = []
         self.count = 0
         self._tail: deque[str] = deque(maxlen=LOG_TAIL)
         self._next = time.monotonic() + PROGRESS_INTERVAL
 
     def line(self, text: str) -> None:
-        """Pass a line of the log on at once: the next one may never come.
+        """Pass on a line of the log.
 
         Parameters
         ----------
@@ -82,7 +88,9 @@ class Listener:
         """
         self.count += 1
         if self.count <= LOG_LIMIT:
-            send(self._output, pack({"kind": "log", "text": text}))
+            self._held.append(pack({"kind": "log", "text": text}))
+            if self._at_once:
+                self._flush()
         else:
             self._tail.append(text)
 
@@ -92,7 +100,12 @@ class Listener:
         if left_out > 0:
             self._tail.appendleft(f"({left_out} lines left out here)")
         for text in self._tail:
-            send(self._output, pack({"kind": "log", "text": text}))
+            self._held.append(pack({"kind": "log", "text": text}))
+        self._flush()
+
+    def _flush(self) -> None:
+        held, self._held = self._held, []
+        send(self._output, b"".join(held))
 
     def status(self, text: str) -> None:
         """Pass on the simulated part of a transient, a few times a second.
@@ -110,7 +123,8 @@ class Listener:
             part = float(text.partition(":")[2].rstrip("% ")) / 100
         except ValueError:
             return
-        send(self._output, pack({"kind": "progress", "part": part}))
+        self._held.append(pack({"kind": "progress", "part": part}))
+        self._flush()
 
 
 def run_deck(simulator: Any, request: dict[str, Any], output: int) -> None:
@@ -125,7 +139,8 @@ def run_deck(simulator: Any, request: dict[str, Any], output: int) -> None:
     output : int
         Descriptor that the frames go to.
     """
-    simulator.listener = listener = Listener(output)
+    # A set that ends early is run again alone, so that no line of its log is lost.
+    simulator.listener = listener = Listener(output, at_once=request["kind"] == "run")
     faults = {"load": "", "run": ""}
     began = time.perf_counter()
     for command in request["commands"]:
@@ -146,12 +161,16 @@ def run_deck(simulator: Any, request: dict[str, Any], output: int) -> None:
         # The key of a node named 3 is "V(3)", that of all others is in lower case.
         vectors = simulator.plot(None, plot).items()
         found |= {name.lower(): vector._data for name, vector in vectors}
+    last = b""
     for key in request["keys"]:
         data = found.get(key, found.get(f"v({key})"))
         if data is not None:
-            send(output, pack({"kind": "vector", "name": key}, data.tobytes()))
+            last += pack({"kind": "vector", "name": key}, data.tobytes())
+            if len(last) > LARGE:
+                send(output, last)
+                last = b""
     done = {"kind": "done", "faults": faults, "plots": plots, "wall_time": wall_time}
-    send(output, pack(done | {"available": sorted(found)}))
+    send(output, last + pack(done | {"available": sorted(found)}))
 
 
 def load_deck(simulator: Any, request: dict[str, Any], output: int) -> None:

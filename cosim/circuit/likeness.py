@@ -121,6 +121,24 @@ class Definition:
     random: bool
 
 
+_short_card = lru_cache(maxsize=2**14)(card_word)
+
+
+def card_of(line: str) -> str:
+    """Give a line's card as `card_word` does, quickly for the long lines of a kit.
+
+    Parameters
+    ----------
+    line : str
+        A line of a deck.
+
+    Returns
+    -------
+    str
+    """
+    return _short_card(line[:16]) if line[0] == "." else ""
+
+
 @lru_cache(maxsize=2**14)  # A kit has hundreds of these lines, the same ones in each deck.
 def definitions(line: str) -> tuple[Definition, ...]:
     """Give what a line defines.
@@ -208,7 +226,7 @@ def _view(lines: tuple[str, ...]) -> _View:
     sources: dict[int, str] = {}
     depth = 0
     for index, line in enumerate(lines):
-        card = card_word(line) if line[0] == "." else ""
+        card = card_of(line)
         if card in (".subckt", ".if"):
             depth += 1
         elif card in (".ends", ".endif"):

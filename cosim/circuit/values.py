@@ -6,12 +6,11 @@ many decks at once; the names of each deck's parameters get a prefix of their ow
 
 import math
 import re
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Callable, Sequence
 
-from cosim.circuit.cards import card_word
 from cosim.circuit.client import client_of_this_process
 from cosim.circuit.deck import PreparedDeck
-from cosim.circuit.likeness import definitions, names_in, needed
+from cosim.circuit.likeness import card_of, definitions, names_in, needed
 from cosim.circuit.waves import SourceWords
 
 _AT_ONCE = 50  # decks
@@ -76,13 +75,14 @@ def _values(
     lines: list[str] = []
     devices: dict[str, str] = {}  # text of a value -> the vector that tells it
     renamed: list[list[list[str]]] = []
+    used = names_in(" ".join(text for own in sources for source in own for text in source.texts))
+    places = _places(prepared[0].lines, needed(prepared[0].lines, used))
+    if places is None:
+        return []
     for number, (deck, own) in enumerate(zip(prepared, sources, strict=True)):
-        used = names_in(" ".join(text for source in own for text in source.texts))
-        defined = _definitions(deck.lines, needed(deck.lines, used))
-        if defined is None:
-            return []
-        rename = _renaming(defined, number)
-        lines += [rename(text) for text in defined.values()]
+        defined = [definitions(deck.lines[index])[item] for index, item in places]
+        rename = _renaming([item.name for item in defined], number)
+        lines += [rename(item.card) for item in defined]
         renamed.append([[rename(text) for text in source.texts] for source in own])
         for text in (text for texts in renamed[-1] for text in texts):
             devices.setdefault(text, f"vqcosim{len(devices)}")
@@ -108,22 +108,22 @@ def _values(
     return [[[told[vectors[text]] for text in texts] for texts in own] for own in renamed]
 
 
-def _definitions(lines: Sequence[str], wanted: set[str]) -> dict[str, str] | None:
-    """Give the cards that define some names; None where one is not defined once, at the top."""
-    found: dict[str, str] = {}
+def _places(lines: Sequence[str], wanted: set[str]) -> list[tuple[int, int]] | None:
+    """Give line and place of what defines some names; None where one has not one, at the top."""
+    found: dict[str, tuple[int, int]] = {}
     depth = 0
-    for line in lines:
-        card = card_word(line) if line[0] == "." else ""
+    for index, line in enumerate(lines):
+        card = card_of(line)
         depth += (card in (".subckt", ".if")) - (card in (".ends", ".endif"))
-        for item in definitions(line) if card else ():
+        for place, item in enumerate(definitions(line) if card else ()):
             if item.name in wanted:
                 if depth or item.name in found or card == ".csparam":
                     return None
-                found[item.name] = item.card
-    return found
+                found[item.name] = index, place
+    return list(found.values())
 
 
-def _renaming(defined: Mapping[str, str], number: int) -> Callable[[str], str]:
+def _renaming(defined: Sequence[str], number: int) -> Callable[[str], str]:
     """Give what puts a prefix before all defined names of a text."""
     if not defined:
         return str

@@ -1,0 +1,124 @@
+"""Runs per second of decks that share a load against fresh loads, in turns within one run.
+
+Of the process kit a short run shows the load and what takes its place, the run of the kit's own
+test what is gained where the simulation itself takes longer than its load.
+"""
+
+import os
+import time
+from collections.abc import Callable, Sequence
+from pathlib import Path
+
+import numpy as np
+import pytest
+
+from cosim.circuit.analysis import TransientRequest, TransientResult
+from cosim.circuit.client import client_of_this_process
+from cosim.circuit.deck import Deck, PreparedDeck
+from cosim.circuit.family import simulate_family
+from cosim.circuit.netlist import deck_from_text, load_deck, prepare, with_parameters
+from cosim.circuit.simulator import simulate_prepared
+from tests.circuit.batch import run_batch
+from tests.kit.install import LIBRARY, MODELS, install_kit
+from tests.kit.test_open_kit import DECK, STEP, STOP
+
+pytestmark = pytest.mark.ngspice
+
+MODULATOR = Path(__file__).parents[2] / "netlists" / "pulse_modulator" / "pulse_modulator.cir"
+ROUNDS = 3
+RUNS = 40
+
+Sets = Sequence[dict[str, float]]
+
+
+@pytest.fixture(scope="module")
+def kit(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    return install_kit(tmp_path_factory.mktemp("kit"))
+
+
+def spent() -> float:
+    """Processor time in s of this process, of the host, and of its children that have ended."""
+    process = client_of_this_process()._process
+    assert process is not None
+    words = Path(f"/proc/{process.pid}/stat").read_text().rpartition(")")[2].split()
+    return time.process_time() + sum(map(int, words[11:15])) / os.sysconf("SC_CLK_TCK")
+
+
+def best(work: Callable[[], object]) -> float:
+    """Seconds of the fastest of some rounds, since others use the machine as well."""
+    times = []
+    for _ in range(ROUNDS):
+        start = time.perf_counter()
+        work()
+        times.append(time.perf_counter() - start)
+    return min(times)
+
+
+def compare(name: str, deck: Deck, sets: Sets, asked: Sequence[TransientRequest]) -> None:
+    ready: list[PreparedDeck] = [
+        prepare(with_parameters(deck, values), one) for values, one in zip(sets, asked, strict=True)
+    ]
+    few = list(zip(ready, asked, strict=True))[: max(2, len(sets) // 4)]
+    simulate_prepared(*few[0])  # The host runs, and files are in memory.
+    results: list[object] = []
+
+    def alone() -> None:
+        results.extend(simulate_prepared(*item) for item in few)
+
+    def shared() -> None:
+        results.extend(simulate_family(ready, asked))
+        simulate_prepared(*few[0])  # The loaded deck has ended, and its time is counted.
+
+    costs = []
+    for work, runs in ((alone, len(few)), (shared, len(sets))):
+        before = spent()
+        wall = best(work)
+        costs.append((1e3 * wall / runs, 1e3 * (spent() - before) / ROUNDS / runs))
+    assert all(isinstance(result, TransientResult) for result in results)
+    (cold, busy), (warm, own) = costs
+    print(
+        f"\n{name}, {len(sets)} runs: fresh {cold:.1f} ms a run, with a shared load {warm:.1f} ms: "
+        f"{cold / warm:.1f} times the runs per second; processor time {busy:.1f} and {own:.1f} ms: "
+        f"{busy / own:.1f} times"
+    )
+
+
+def request(stop: float, step: float, saves: tuple[str, ...], seed: int = 1) -> TransientRequest:
+    return TransientRequest(stop=stop, step=step, saves=saves, seed=seed)
+
+
+@pytest.mark.parametrize("stop", [0.2e-9, 1e-9, STOP])
+def test_a_process_kit(kit: Path, stop: float) -> None:
+    deck = deck_from_text(
+        DECK, name="deck.cir", include_paths=(str(kit / MODELS),), compatibility="hs"
+    )
+    one = request(stop, STEP, ("v(out)",))
+    runs = RUNS if stop < STOP else 8
+    supplies = [{"vdd": float(volts)} for volts in np.linspace(1.6, 2.0, runs)]
+    compare(f"kit, {1e9 * stop:g} ns, supplies", deck, supplies, [one] * runs)
+    seeds = [request(stop, STEP, ("v(out)",), seed=number + 1) for number in range(runs)]
+    compare(f"kit, {1e9 * stop:g} ns, supplies and seeds (reset)", deck, supplies, seeds)
+
+
+def test_a_kit_that_ngspice_reads_itself(kit: Path, tmp_path: Path) -> None:
+    deck = DECK[: DECK.index(".tran")].replace(f'"{LIBRARY}"', f"{kit / MODELS / LIBRARY}")
+    for name, text in (("short", deck + ".tran 1p 1p\n.end\n"), ("whole", "t\nr1 1 0 1\n.end\n")):
+        (tmp_path / f"{name}.cir").write_text(text, encoding="utf-8")
+    taken = {
+        name: best(lambda name=name: run_batch(f"{name}.cir", tmp_path, "hsa"))  # type: ignore[misc]
+        for name in ("short", "whole")
+    }
+    print(f"\nngspice -b reads the kit in {1e3 * (taken['short'] - taken['whole']):.0f} ms")
+
+
+@pytest.mark.parametrize("stop", [1e-9, 12e-9])
+def test_the_pulse_modulator(stop: float) -> None:
+    deck = load_deck(MODULATOR)
+    one = request(stop, 1 / 80 / 6.2e9, ("v(rf_p)",))
+    codes = [{"amp": float(code)} for code in range(0, 128, 16)]
+    both = [
+        {"amp": float(code), "vdd": volts} for code in (0, 40, 80, 120) for volts in (1.05, 1.1)
+    ]
+    edges = [{"c_edge": 1e-13 + 1e-14 * number} for number in range(8)]
+    for name, sets in (("codes", codes), ("codes and supplies", both), ("capacitances", edges)):
+        compare(f"pulse modulator, {1e9 * stop:g} ns, {name}", deck, sets, [one] * len(sets))
