@@ -26,7 +26,7 @@ The rooms: layout (names and root attributes), encoding, decoding, table, files 
 locking, opening), store (the functions below).
 """
 
-from cosim.archive.consolidation import consolidate, merge
+from cosim.archive.consolidation import compact, consolidate, merge
 from cosim.archive.layout import NumberedRun, RunInfo
 from cosim.archive.rows import Row
 from cosim.archive.series import Series
@@ -40,7 +40,7 @@ from cosim.archive.store import (
     write,
     write_part,
 )
-from cosim.archive.sweeps import compact, create, read_plan, read_series, write_rows
+from cosim.archive.sweeps import create, read_plan, read_series, write_rows
 from cosim.archive.table import cells_of
 from cosim.archive.verification import Verification, verify
 

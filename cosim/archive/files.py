@@ -252,3 +252,27 @@ def _unreadable(path: Path, error: OSError) -> ArchiveError:
         f"{path}: the HDF5 file is {what} ({error})",
         hint="copy it again from where it came, or run the simulation again",
     )
+
+
+def archive_files(path: Path) -> tuple[Path, ...]:
+    """List the files of an archive, NAME.h5 first.
+
+    Parameters
+    ----------
+    path : Path
+        NAME.h5, which must exist.
+
+    Returns
+    -------
+    tuple of Path
+        In the order of their publication.
+
+    Raises
+    ------
+    ArchiveError
+        If there is no such archive, or its folder of parts may not be read.
+    """
+    parts = list_parts(path)
+    if not path.exists():
+        raise missing(path)
+    return (path, *parts)

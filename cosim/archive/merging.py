@@ -1,10 +1,11 @@
 """Many files of archives into one, in bounded memory; also a program, `python -m`, that does it.
 
-What is held at once is the run numbers, some columns of the table, 32 MiB of series and one
+What is held at once is the run numbers, some columns of the table, some blocks of series and one
 array of a record. As a program it reads one JSON object from its standard input, with the keys
 `archives` (a list of lists of files, in the order in which they were published), `keep` (a list
-of run numbers or null), `target` (the file to write) and `parent` (the process that has asked,
-without which it ends), and prints how many runs it wrote.
+of run numbers or null), `packed` (whether to compress), `target` (the file to write) and `parent`
+(the process that has asked, without which it ends), and prints how many of the runs came from
+other archives than the first.
 """
 
 import collections
@@ -41,7 +42,7 @@ from cosim.archive.table import (
     write_columns,
 )
 
-_OPEN_FILES = 64
+_OPEN_FILES = 250  # more than the small parts that are there before they are merged
 _CELLS = 2**23  # 64 MiB of numbers in the columns that are held at once
 _SAMPLES = 2**22  # 32 MiB of complex64 in the block of series that is held at once
 _CHUNK = 2**17  # samples of a chunk of series, 1 MB of complex64
@@ -132,7 +133,7 @@ def find_owners(sources: Sources, archives: Sequence[int]) -> Owners:
         rows = np.arange(numbers.size)
         pieces.append(np.stack([numbers, np.full_like(numbers, index), rows], axis=1))
         if several:
-            table = load_table(sources[index], ("status", "start_time"))
+            table = load_table(sources[index], ("status", "start_time"), units=False)
             words = [table[name].values.tolist() for name in ("status", "start_time") if table]
             marks += [(status == "done", start) for status, start in zip(*words, strict=True)]
     entries = np.concatenate(pieces) if pieces else np.empty((0, 3), dtype=np.int64)
@@ -148,6 +149,24 @@ def find_owners(sources: Sources, archives: Sequence[int]) -> Owners:
     ranked = entries[order[::-1]]
     numbers, first = np.unique(ranked[:, 0], return_index=True)
     return Owners(numbers, ranked[first, 1], ranked[first, 2])
+
+
+def foreign_runs(owners: Owners, archives: Sequence[Sequence[object]]) -> int:
+    """Count the runs that came from other archives than the first of several.
+
+    Parameters
+    ----------
+    owners : Owners
+        Where each run was taken from.
+    archives : sequence of sequence
+        The files of each archive.
+
+    Returns
+    -------
+    int
+        How many.
+    """
+    return int((owners.source >= len(archives[0])).sum())
 
 
 def merge_files(
@@ -297,7 +316,7 @@ def run_program(order: Mapping[str, Any]) -> int:
     Returns
     -------
     int
-        How many runs were written.
+        How many of the runs came from other archives than the first.
     """
     paths = [Path(name) for archive in order["archives"] for name in archive]
     archives = [index for index, archive in enumerate(order["archives"]) for _ in archive]
@@ -307,12 +326,12 @@ def run_program(order: Mapping[str, Any]) -> int:
         with h5py.File(order["target"], "x", libver=LIBRARY_BOUNDS, locking=False) as file:
             write_root(file)
             _check_parent(order["parent"])
-            merge_files(file, sources, owners, keep, packed=True)
+            merge_files(file, sources, owners, keep, order["packed"])
     _check_parent(order["parent"])
     handle = os.open(order["target"], os.O_RDONLY)
     os.fsync(handle)
     os.close(handle)
-    return int(owners.numbers.size)
+    return foreign_runs(owners, order["archives"])
 
 
 def _check_parent(parent: int) -> None:

@@ -198,7 +198,7 @@ def rows_only(file: Any) -> set[int]:
     set of int
         Their numbers. A run without a checksum, which was written whole, is never among them.
     """
-    table = load_table(file, ("id", CHECKSUM))
+    table = load_table(file, ("id", CHECKSUM), units=False)
     if CHECKSUM not in table:
         return set()
     pairs = zip(table["id"].values.tolist(), table[CHECKSUM].values.tolist(), strict=True)
@@ -262,7 +262,7 @@ def read_table(
     ArchiveError
         If there is no such archive or column, or it cannot be read.
     """
-    table = _read_columns(Path(path), columns)
+    table = _read_columns(Path(path), columns, units=False)
     return {name: column.values for name, column in table.items()}
 
 
@@ -284,10 +284,12 @@ def read_units(path: str | os.PathLike[str]) -> dict[str, str]:
     ArchiveError
         If there is no such archive, or it cannot be read.
     """
-    return {name: column.unit for name, column in _read_columns(Path(path), None).items()}
+    return {
+        name: column.unit for name, column in _read_columns(Path(path), None, units=True).items()
+    }
 
 
-def _read_columns(path: Path, columns: Collection[str] | None) -> dict[str, Column]:
+def _read_columns(path: Path, columns: Collection[str] | None, units: bool) -> dict[str, Column]:
     names: dict[str, None] = {}
 
     def load(files: Iterable[Path]) -> dict[str, Column]:
@@ -295,7 +297,8 @@ def _read_columns(path: Path, columns: Collection[str] | None) -> dict[str, Colu
         for item in files:
             with opened(item) as file:
                 names.update(dict.fromkeys(column_names(file)))
-                tables.append(load_table(file, None if columns is None else {*columns, "id"}))
+                chosen = None if columns is None else {*columns, "id"}
+                tables.append(load_table(file, chosen, units=units))
         return stack(tables)
 
     table = snapshot(path, load)

@@ -6,29 +6,19 @@ from pathlib import Path
 from typing import Any
 
 from cosim.archive.checksums import CHECKSUM, record_digest
+from cosim.archive.consolidation import compact_parts
 from cosim.archive.decoding import read_object
 from cosim.archive.encoding import is_instance, write_object
-from cosim.archive.files import (
-    is_merged,
-    list_parts,
-    merged_part_path,
-    missing,
-    new_part_path,
-    opened,
-    snapshot,
-)
+from cosim.archive.files import is_merged, list_parts, missing, new_part_path, opened, snapshot
 from cosim.archive.layout import PLAN, TEXTS
-from cosim.archive.merging import find_owners, merge_files, sources_of
-from cosim.archive.publishing import image_of, locked, publish, remove_parts, unwritable
+from cosim.archive.publishing import image_of, locked, publish, unwritable
 from cosim.archive.rows import Row, write_all
 from cosim.archive.series import Series, load_series
 from cosim.archive.store import owners_of, resolved
 from cosim.errors import ArchiveError
 
-# A reader opens every part, at about a millisecond each.
+# A reader opens every part, at some milliseconds each.
 _MANY_PARTS = 200
-_SMALL_PART = 8 * 2**20  # bytes of a part that is merged into another one
-_MERGED_PART = 32 * 2**20  # bytes of the parts that are merged into one, in memory
 
 
 def create(path: str | os.PathLike[str], plan: object) -> None:
@@ -143,68 +133,8 @@ def write_rows(path: str | os.PathLike[str], rows: Sequence[Row]) -> Path:
             raise unwritable(part, error) from error
         publish(part, image, target)
         if alone and sum(not is_merged(item) for item in parts) >= _MANY_PARTS:
-            _compact(target, (*parts, part))
+            compact_parts(target, (*parts, part))
     return part
-
-
-def compact(path: str | os.PathLike[str]) -> int:
-    """Merge the small parts of an archive into larger ones, which are parts still.
-
-    Parameters
-    ----------
-    path : path
-        NAME.h5.
-
-    Returns
-    -------
-    int
-        By how many parts there are fewer.
-
-    Raises
-    ------
-    ArchiveError
-        If a part cannot be read or written; no run is lost.
-    """
-    target = resolved(path)
-    if not target.exists():
-        raise missing(target)
-    with locked(target):
-        return _compact(target, list_parts(target))
-
-
-def _compact(target: Path, parts: Sequence[Path]) -> int:
-    groups = _neighbours([(part, part.stat().st_size) for part in parts])
-    for group in groups:
-        merged = merged_part_path(group)
-
-        def write(file: Any, group: Sequence[Path] = group) -> None:
-            with sources_of(group) as sources:
-                owners = find_owners(sources, [0] * len(group))
-                merge_files(file, sources, owners, None, packed=False)
-
-        publish(merged, image_of(merged, write), target)
-        remove_parts(target, group)
-    return sum(len(group) - 1 for group in groups)
-
-
-def _neighbours(parts: Sequence[tuple[Path, int]]) -> list[list[Path]]:
-    """Choose neighbours that become one part, from the newest on.
-
-    A part that is merged already joins again only if those after it are not much smaller, so that
-    a row is copied a few times in all and not once for each merge.
-    """
-    groups: list[list[Path]] = [[]]
-    total = 0
-    for part, size in reversed(parts):
-        small = size <= (4 * total if is_merged(part) else _SMALL_PART)
-        if not small or total + size > _MERGED_PART:
-            groups.append([])
-            total = 0
-            small = not is_merged(part) and size <= _SMALL_PART
-        if small:
-            groups[-1].insert(0, part)
-            total += size
-    return [group for group in groups if len(group) > 1]
 
 
 def read_series(path: str | os.PathLike[str], run: int) -> dict[str, Series]:
@@ -238,27 +168,3 @@ def read_series(path: str | os.PathLike[str], run: int) -> dict[str, Series]:
             return load_series(file, run)
 
     return snapshot(Path(path), load)
-
-
-def archive_files(path: Path) -> tuple[Path, ...]:
-    """List the files of an archive, NAME.h5 first.
-
-    Parameters
-    ----------
-    path : Path
-        NAME.h5, which must exist.
-
-    Returns
-    -------
-    tuple of Path
-        In the order of their publication.
-
-    Raises
-    ------
-    ArchiveError
-        If there is no such archive, or its folder of parts may not be read.
-    """
-    parts = list_parts(path)
-    if not path.exists():
-        raise missing(path)
-    return (path, *parts)

@@ -27,6 +27,12 @@ CORE = ("id", "kind", "status", "start_time", "wall_time")
 # Longer texts are decks and logs; they stay with their run.
 _LONGEST_TEXT = 200
 
+# h5py finds out the type in memory of every array that it reads; most are of these.
+_MEMORY_TYPES: Mapping[npt.DTypeLike, Any] = {
+    np.dtype(np.float64): h5py.h5t.NATIVE_DOUBLE,
+    np.dtype(np.int64): h5py.h5t.NATIVE_INT64,
+}
+
 # Up to here every integer is a float64.
 EXACT = 2**53
 
@@ -296,7 +302,10 @@ def column_names(file: Any) -> list[str]:
 
 
 def load_table(
-    file: Any, columns: Collection[str] | None = None, raw: bool = False
+    file: Any,
+    columns: Collection[str] | None = None,
+    raw: bool = False,
+    units: bool = True,
 ) -> dict[str, Column]:
     """Read the table of an open file.
 
@@ -308,6 +317,8 @@ def load_table(
         Names of the columns to read; None for all. One that is not there is left out.
     raw : bool
         Whether bools are given as the bytes that stand in the file.
+    units : bool
+        Whether the units are read, which takes as long as the values of a small table.
 
     Returns
     -------
@@ -319,30 +330,29 @@ def load_table(
     group = file["table"]
     names = {member_key(name): name for name in group}
     return {
-        key: _load_column(h5py.h5d.open(group.id, name.encode()), raw)
+        key: _load_column(h5py.h5d.open(group.id, name.encode()), raw, units)
         for key, name in names.items()
         if columns is None or key in columns
     }
 
 
-def _load_column(dataset: Any, raw: bool) -> Column:
-    unit = np.empty((), dtype=TEXT)
-    if h5py.h5a.exists(dataset, b"units"):
-        h5py.h5a.open(dataset, b"units").read(unit)
-        text = unit.item()
-        unit_text = text.decode() if isinstance(text, bytes) else str(text)
-    else:
-        unit_text = ""
+def _load_column(dataset: Any, raw: bool, units: bool) -> Column:
+    unit = ""
+    if units and h5py.h5a.exists(dataset, b"units"):
+        noted = np.empty((), dtype=TEXT)
+        h5py.h5a.open(dataset, b"units").read(noted)
+        text = noted.item()
+        unit = text.decode() if isinstance(text, bytes) else str(text)
     dtype = dataset.dtype
     if dtype.kind == "b" and raw:
         dtype = np.dtype(np.uint8)
     values = np.empty(dataset.shape, dtype=dtype)
     if values.size:
-        dataset.read(h5py.h5s.ALL, h5py.h5s.ALL, values)
+        dataset.read(h5py.h5s.ALL, h5py.h5s.ALL, values, _MEMORY_TYPES.get(dtype))
     if dtype.kind != "O":
-        return Column(values, unit_text)
+        return Column(values, unit)
     texts = [item.decode() if isinstance(item, bytes) else item for item in values.tolist()]
-    return Column(np.array(texts, dtype=np.object_), unit_text)
+    return Column(np.array(texts, dtype=np.object_), unit)
 
 
 def load_ids(file: Any) -> list[int]:

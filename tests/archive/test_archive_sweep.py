@@ -16,6 +16,7 @@ from cosim.archive import (
     cells_of,
     compact,
     consolidate,
+    consolidation,
     create,
     read,
     read_plan,
@@ -292,10 +293,10 @@ def test_parts_are_merged_when_there_are_many(path: Path, monkeypatch: pytest.Mo
 def test_parts_of_some_size_stay_apart(path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     parts = [write_rows(path, [row(number)]) for number in range(1, 7)]
     size = parts[0].stat().st_size
-    monkeypatch.setattr(sweeps, "_MERGED_PART", int(2.5 * size))
+    monkeypatch.setattr(consolidation, "_MERGED_PART", int(2.5 * size))
     assert compact(path) == 3
     assert len(list_parts(path)) == 3
-    monkeypatch.setattr(sweeps, "_SMALL_PART", size // 2)
+    monkeypatch.setattr(consolidation, "_SMALL_PART", size // 2)
     write_rows(path, [row(7)])
     write_rows(path, [row(8)])
     assert compact(path) == 0
