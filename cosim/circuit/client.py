@@ -314,7 +314,7 @@ class Client:
             header, payload = self._receive(deadline)
             match header.pop("kind"):
                 case "log":
-                    answer.log.append(header["text"])
+                    answer.log += header["lines"]
                 case "progress":
                     answer.part = header["part"]
                     if progress is not None:

@@ -159,13 +159,17 @@ def _by_sources(kin: Kin, decks: _Decks, values: Sequence[_Values]) -> list[_Bra
     """Let decks share the part of the run in which their sources agree, if it is long enough."""
     _, request = decks[kin.members[0]]
     groups: list[tuple[float, list[int]]] = []
+    near: dict[tuple[float, ...], list[int]] = {}  # Others do not begin with the same value.
     for number in range(len(kin.members)):
-        for place, (until, group) in enumerate(groups):
+        first = tuple(own[0] for own in values[number])
+        for place in near.setdefault(first, []):
+            until, group = groups[place]
             common = min(until, *map(agreement, kin.sources[0], values[group[0]], values[number]))
             if common >= LEAST_SHARE * request.stop and request.start == 0.0:
                 groups[place] = (common, [*group, number])
                 break
         else:
+            near[first].append(len(groups))
             groups.append((math.inf, [number]))
     alone = [number for _, group in groups if len(group) == 1 for number in group]
     found = [(0.0, alone)] if alone else []

@@ -10,7 +10,7 @@ header and raw bytes.
                      set       commands that change the loaded deck, vectors, limits
                      unload    nothing more is asked of the loaded deck
     host -> caller   ready     the library is loaded; or `failed` with the reason
-                     log       a line of ngspice
+                     log       lines of ngspice
                      progress  the simulated part of the run, from 0 to 1
                      vector    name; its float64 values follow
                      done      faults of load and run, names of new plots and vectors, wall time
@@ -94,10 +94,10 @@ def child(
     except CallerGoneError:
         pass
     except MemoryError:
-        send(output, pack({"kind": "log", "text": "python: out of memory"}))
+        send(output, pack({"kind": "log", "lines": ["python: out of memory"]}))
     except BaseException:
-        for line in traceback.format_exc().splitlines():
-            send(output, pack({"kind": "log", "text": f"python: {line}"}))
+        lines = [f"python: {line}" for line in traceback.format_exc().splitlines()]
+        send(output, pack({"kind": "log", "lines": lines}))
     finally:
         os._exit(status)
 

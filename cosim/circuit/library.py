@@ -73,7 +73,7 @@ class Listener:
     def __init__(self, output: int, *, at_once: bool = True) -> None:
         self._output = output
         self._at_once = at_once
-        self._held: list[bytes] = []
+        self._held: list[str] = []
         self.count = 0
         self._tail: deque[str] = deque(maxlen=LOG_TAIL)
         self._next = time.monotonic() + PROGRESS_INTERVAL
@@ -88,7 +88,7 @@ class Listener:
         """
         self.count += 1
         if self.count <= LOG_LIMIT:
-            self._held.append(pack({"kind": "log", "text": text}))
+            self._held.append(text)
             if self._at_once:
                 self._flush()
         else:
@@ -99,13 +99,13 @@ class Listener:
         left_out = self.count - LOG_LIMIT - len(self._tail)
         if left_out > 0:
             self._tail.appendleft(f"({left_out} lines left out here)")
-        for text in self._tail:
-            self._held.append(pack({"kind": "log", "text": text}))
+        self._held += self._tail
         self._flush()
 
     def _flush(self) -> None:
-        held, self._held = self._held, []
-        send(self._output, b"".join(held))
+        if self._held:
+            held, self._held = self._held, []
+            send(self._output, pack({"kind": "log", "lines": held}))
 
     def status(self, text: str) -> None:
         """Pass on the simulated part of a transient, a few times a second.
@@ -123,8 +123,8 @@ class Listener:
             part = float(text.partition(":")[2].rstrip("% ")) / 100
         except ValueError:
             return
-        self._held.append(pack({"kind": "progress", "part": part}))
         self._flush()
+        send(self._output, pack({"kind": "progress", "part": part}))
 
 
 def run_deck(simulator: Any, request: dict[str, Any], output: int) -> None:

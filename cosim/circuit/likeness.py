@@ -33,6 +33,7 @@ _READ_ONCE = frozenset({".if", ".elseif", ".tran", ".save", ".temp", ".options",
 _NOISE = ("trnoise", "trrandom", "external")
 _RANDOM = ("agauss", "aunif", "gauss", "unif", "limit", "random", "poisson", "exponential")
 _DIALECTS = frozenset({"set ngbehavior=hsa"})
+_SOURCES = frozenset("vViI")
 # Words behind an element's name that are certainly nodes, where no parameter is looked for.
 _NODES = {"q": 3, "m": 4, "j": 3, "z": 3, "s": 4, "t": 4, "o": 4} | dict.fromkeys("rclvidegwb", 2)
 
@@ -62,6 +63,7 @@ class Kin:
 class _View:
     """A deck's lines with what may differ cut out."""
 
+    lines: tuple[str, ...]
     common: tuple[str, ...]
     numbers: dict[str, str]
     repeated: frozenset[str]
@@ -84,7 +86,10 @@ def kindred(prepared: Sequence[PreparedDeck], requests: Sequence[TransientReques
         Every deck is in one of them, in the order of their first members; a deck that is alone
         runs fresh, and so do those that have neither parameters nor sources.
     """
-    views = [_view(item.lines) for item in prepared]
+    views: list[_View] = []
+    for item in prepared:
+        near = _near_view(item.lines, views[-1]) if views else None
+        views.append(near or _view(item.lines))
     groups: dict[object, list[int]] = {}
     for place, (item, request, view) in enumerate(zip(prepared, requests, views, strict=True)):
         key = (
@@ -136,7 +141,7 @@ def card_of(line: str) -> str:
     -------
     str
     """
-    return _short_card(line[:16]) if line[0] == "." else ""
+    return _short_card(line[:16]) if line[:1] == "." else ""
 
 
 @lru_cache(maxsize=2**14)  # A kit has hundreds of these lines, the same ones in each deck.
@@ -187,7 +192,7 @@ def needed(lines: Sequence[str], used: Iterable[str]) -> set[str]:
     """
     uses: dict[str, set[str]] = {}
     for line in lines:
-        for item in definitions(line) if line[0] == "." else ():
+        for item in definitions(line) if card_of(line) else ():
             uses.setdefault(item.name, set()).update(item.used)
     known: set[str] = set()
     waiting = set(used)
@@ -239,10 +244,27 @@ def _view(lines: tuple[str, ...]) -> _View:
             if depth == 0 and card == ".param" and not again:
                 common[index], found = _without_numbers(line)
                 numbers |= found
-        elif depth == 0 and line[0] in "vViI" and index > 0:  # The first line is the title.
+        elif depth == 0 and line[:1] in _SOURCES and index > 0:  # The first line is the title.
             sources[index] = line
             common[index] = ""
-    return _View(tuple(common), numbers, frozenset(repeated), sources)
+    return _View(lines, tuple(common), numbers, frozenset(repeated), sources)
+
+
+def _near_view(lines: tuple[str, ...], other: _View) -> _View | None:
+    """Give the view of a deck that is like another one, quickly; None if it is not."""
+    if len(lines) != len(other.lines):
+        return None
+    numbers, sources = dict(other.numbers), dict(other.sources)
+    for index, (own, known) in enumerate(zip(lines, other.lines, strict=True)):
+        if own is known or own == known:
+            continue
+        if index in sources and own[:1] in _SOURCES:
+            sources[index] = own
+        elif other.common[index] != known and _without_numbers(own)[0] == other.common[index]:
+            numbers |= _without_numbers(own)[1]
+        else:
+            return None
+    return _View(lines, other.common, numbers, other.repeated, sources)
 
 
 @lru_cache(maxsize=2**14)
