@@ -7,15 +7,14 @@ of every cell that is there, in the order of the names, and then over its series
 """
 
 import hashlib
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Iterable, Iterator, Mapping, Sequence
 from typing import Any
 
 import h5py
 import numpy as np
 import numpy.typing as npt
 
-from cosim.archive.encoding import is_instance
-from cosim.archive.layout import member_key
+from cosim.archive.datasets import Array
 from cosim.archive.table import EXACT
 
 _SIZE = 16  # bytes: no two of a hundred thousand rows agree by chance
@@ -156,16 +155,13 @@ def series_digest(name: str, grid: tuple[float, float, float], values: npt.NDArr
     return digest.digest()
 
 
-def record_digest(group: Any, written: object = None) -> str:
+def record_digest(group: Any) -> str:
     """Give the checksum of all that is in a group: datasets, scales, units and kinds.
 
     Parameters
     ----------
     group : h5py.Group
         The group of a run or of the plan.
-    written : object
-        The dataclass that was just written there, whose arrays are then not read again; None
-        takes everything from the file.
 
     Returns
     -------
@@ -173,53 +169,72 @@ def record_digest(group: Any, written: object = None) -> str:
         64 hexadecimal digits (SHA-256). Attributes "checksum" do not count, nor do references
         between arrays and scales, which are addresses in a file.
     """
+    items: dict[str, Any] = {}
+    _collect(items, "", group.id)
+    return contents_digest(
+        (path, (_notes_of(item), None if _is_group(item) else _values_of(item)))
+        for path, item in sorted(items.items())
+    )
+
+
+def contents_digest(
+    contents: Iterable[tuple[str, tuple[Mapping[str, Array], Array | None]]],
+) -> str:
+    """Give the checksum of what was written into a group, without reading it again.
+
+    Parameters
+    ----------
+    contents : iterable of tuples
+        Path, and attributes and values, in the order of the paths; values are None for a group.
+
+    Returns
+    -------
+    str
+        As `record_digest` gives it.
+    """
     digest = hashlib.sha256()
-    _feed(digest, b"", group.id, written)
+    for path, (notes, values) in contents:
+        digest.update(f"\0{path}\0".encode("utf-8", "surrogateescape"))
+        for name in sorted(notes):
+            digest.update(f"\0{name}\0".encode())
+            _feed(digest, notes[name])
+        if values is not None:
+            _feed(digest, values)
     return digest.hexdigest()
 
 
-def _feed(digest: Any, path: bytes, item: Any, written: object) -> None:
-    digest.update(b"\0" + path + b"\0")
+def _is_group(item: Any) -> bool:
+    return isinstance(item, h5py.h5g.GroupID)
+
+
+def _collect(items: dict[str, Any], path: str, item: Any) -> None:
+    items[path] = item
+    for name in item if _is_group(item) else ():
+        child = f"{path}/{name.decode('utf-8', 'surrogateescape')}"
+        _collect(items, child, h5py.h5o.open(item, name))
+
+
+def _notes_of(item: Any) -> dict[str, Array]:
     names: list[bytes] = []
     h5py.h5a.iterate(item, names.append)
-    for name in sorted(names):
+    notes = {}
+    for name in names:
         if name not in _SCALE_ATTRIBUTES:
-            digest.update(name)
             attribute = h5py.h5a.open(item, name)
             values = np.empty(attribute.shape, dtype=attribute.dtype)
-            if values.size:
-                attribute.read(values)
-            _feed_values(digest, values)
-    if isinstance(item, h5py.h5d.DatasetID):
-        _feed_values(digest, _values_of(item, written))
-        return
-    for name in sorted(item):
-        child = _member(written, name.decode("utf-8", "surrogateescape"))
-        _feed(digest, path + b"/" + name, h5py.h5o.open(item, name), child)
+            attribute.read(values)
+            notes[name.decode()] = values
+    return notes
 
 
-def _member(written: object, name: str) -> object:
-    """Give what stands in a dataclass, dictionary or sequence under a link name, if anything."""
-    if is_instance(written):
-        return getattr(written, name, None)
-    if isinstance(written, Mapping):
-        return written.get(member_key(name))
-    if isinstance(written, (tuple, list)) and name.isdecimal():
-        return written[int(name)]
-    return None
-
-
-def _values_of(dataset: Any, written: object) -> npt.NDArray[Any]:
-    if isinstance(written, np.ndarray) and written.shape == dataset.shape:
-        if written.dtype == dataset.dtype:
-            return written
+def _values_of(dataset: Any) -> Array:
     values = np.empty(dataset.shape, dtype=dataset.dtype)
     if values.size:
         dataset.read(h5py.h5s.ALL, h5py.h5s.ALL, values)
     return values
 
 
-def _feed_values(digest: Any, values: npt.NDArray[Any]) -> None:
+def _feed(digest: Any, values: Array) -> None:
     digest.update(f"{values.dtype.str}{values.shape}".encode())
     if values.dtype.kind == "O":
         for text in values.ravel().tolist():

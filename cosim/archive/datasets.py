@@ -5,7 +5,8 @@ long, most of it on what is the same for every dataset.
 """
 
 from collections.abc import Mapping
-from typing import Any
+from dataclasses import dataclass, field
+from typing import Any, TypeAlias
 
 import h5py
 import numpy as np
@@ -13,13 +14,17 @@ import numpy.typing as npt
 
 from cosim.archive.layout import TEXT, TEXT_OBJECT, TEXT_TYPE
 
+Array: TypeAlias = npt.NDArray[Any]
+
+_NOTHING: Mapping[str, Any] = {}
+
 _SCALAR = h5py.h5s.create(h5py.h5s.SCALAR)
 
 
 def create_dataset(
     group: Any,
     name: str,
-    values: npt.NDArray[Any],
+    values: Array,
     unit: str,
     options: Mapping[str, Any] | None = None,
 ) -> Any:
@@ -73,3 +78,76 @@ def set_text(item: Any, name: bytes, text: str) -> None:
     """
     note = h5py.h5a.create(item, name, TEXT_TYPE, _SCALAR)
     note.write(np.array(text, dtype=TEXT))
+
+
+@dataclass(frozen=True, slots=True)
+class Place:
+    """A group that is being filled, with a list of all that goes into it.
+
+    Parameters
+    ----------
+    group : h5py.Group
+        The group.
+    path : str
+        Its path below the record that it belongs to, "/run/versions"; "" for the record itself.
+    texts : h5py.Group or None
+        The texts that runs share, in files that have them.
+    contents : dict
+        By path, the attributes and the values (None for a group) of all that was written in the
+        record, for its checksum.
+    """
+
+    group: Any
+    path: str
+    texts: Any
+    contents: dict[str, tuple[dict[str, Array], Array | None]] = field(default_factory=dict)
+
+    @property
+    def name(self) -> str:
+        """Path in the file."""
+        return str(self.group.name)
+
+    def fill(self, notes: Mapping[str, Any]) -> None:
+        """Note attributes of the group: texts, tuples of texts, numbers or bools."""
+        self.contents[self.path] = (_set_notes(self.group.id, notes), None)
+
+    def subgroup(self, name: str) -> "Place":
+        """Make a group in the group."""
+        made = self.group.create_group(name, track_order=True)
+        return Place(made, f"{self.path}/{name}", self.texts, self.contents)
+
+    def dataset(
+        self,
+        name: str,
+        values: Array,
+        unit: str = "",
+        options: Mapping[str, Any] | None = None,
+        notes: Mapping[str, Any] = _NOTHING,
+    ) -> Any:
+        """Make a dataset as `create_dataset` does, and note attributes of it."""
+        dataset = create_dataset(self.group, name, values, unit, options)
+        noted = _set_notes(dataset, notes)
+        if unit:
+            noted["units"] = _as_array(unit)
+        self.contents[f"{self.path}/{name}"] = (noted, values)
+        return dataset
+
+    def link(self, name: str, text: Any, value: Array) -> None:
+        """Link a shared text into the group."""
+        self.group[name] = text
+        self.contents[f"{self.path}/{name}"] = ({}, value)
+
+
+def _set_notes(item: Any, notes: Mapping[str, Any]) -> dict[str, Array]:
+    arrays = {name: _as_array(value) for name, value in notes.items()}
+    for name, values in arrays.items():
+        text = values.dtype.kind == "O"
+        kind = TEXT_TYPE if text else h5py.h5t.py_create(values.dtype, logical=True)
+        space = h5py.h5s.create_simple(values.shape) if values.ndim else _SCALAR
+        h5py.h5a.create(item, name.encode(), kind, space).write(values)
+    return arrays
+
+
+def _as_array(value: Any) -> Array:
+    text = isinstance(value, str) or (isinstance(value, tuple) and isinstance(value[0], str))
+    return np.array(value, dtype=TEXT if text else None)

@@ -11,7 +11,7 @@ import h5py
 import numpy as np
 import numpy.typing as npt
 
-from cosim.archive.datasets import create_dataset, set_text
+from cosim.archive.datasets import Place, create_dataset
 from cosim.archive.layout import TEXT, TEXTS, member_name, storage_options
 from cosim.errors import ArchiveError
 
@@ -19,6 +19,8 @@ _NO_METADATA: Mapping[str, Any] = {}
 # Decks, which many runs have in common; the words of a result are shorter.
 _SHARED_TEXT = 512
 _WORD = np.iinfo(np.int64)
+_QUOTED = {"quoting": "json"}
+_DERIVED = {"derived": True}
 _ARRAY_TYPES = "?efdFD" + np.typecodes["AllInteger"]
 
 
@@ -105,7 +107,7 @@ def is_plain_text(text: str) -> bool:
     return True
 
 
-def write_object(group: Any, value: Any) -> None:
+def write_object(group: Any, value: Any, notes: Mapping[str, Any] | None = None) -> Place:
     """Write a dataclass instance into a fresh HDF5 group.
 
     Parameters
@@ -114,14 +116,26 @@ def write_object(group: Any, value: Any) -> None:
         Empty group that receives the fields.
     value : object
         Instance of a dataclass.
+    notes : mapping or None
+        Further attributes of the group.
+
+    Returns
+    -------
+    Place
+        The group, with what was written.
 
     Raises
     ------
     ArchiveError
         If a field holds a value that has no place in an archive; the message names it.
     """
+    place = Place(group, "", group.file[TEXTS] if TEXTS in group.file else None)
+    _write_fields(place, value, notes or {})
+    return place
+
+
+def _write_fields(group: Place, value: Any, notes: Mapping[str, Any]) -> None:
     fields = dataclasses.fields(value)
-    group.attrs["kind"] = type(value).__name__
     contexts = {
         field.name: _Context(value, field.metadata, field_unit(value, field.metadata))
         for field in fields
@@ -129,33 +143,35 @@ def write_object(group: Any, value: Any) -> None:
     # Scales come first, so that the arrays along them find them.
     ordered = sorted(fields, key=lambda field: field.metadata.get("axes") != (field.name,))
     members = {field.name: getattr(value, field.name) for field in ordered}
-    _write_members(group, members, contexts)
+    _write_members(group, members, contexts, {"kind": type(value).__name__, **notes})
 
 
 def _write_members(
-    group: Any, members: Mapping[str, object], contexts: Mapping[str, _Context]
+    group: Place,
+    members: Mapping[str, object],
+    contexts: Mapping[str, _Context],
+    notes: Mapping[str, Any],
 ) -> None:
     """Write named values into a group; which of them are None stands in an attribute."""
+    absent = tuple(name for name, value in members.items() if value is None)
+    group.fill({**notes, "none": absent} if absent else notes)
     reserved = frozenset(members)
     for name, value in members.items():
         if value is not None:
             _write_value(group, name, value, contexts[name], reserved)
-    absent = [name for name, value in members.items() if value is None]
-    if absent:
-        group.attrs.create("none", absent, dtype=TEXT)
 
 
 def _write_value(
-    group: Any, name: str, value: object, context: _Context, reserved: frozenset[str]
+    group: Place, name: str, value: object, context: _Context, reserved: frozenset[str]
 ) -> None:
     if is_instance(value):
-        write_object(group.create_group(name, track_order=True), value)
+        _write_fields(group.subgroup(name), value, {})
     elif isinstance(value, np.ndarray):
         _write_array(group, name, value, context, reserved)
     elif isinstance(value, str):
         _write_text(group, name, value)
     elif isinstance(value, (bool, np.bool_)):
-        create_dataset(group, name, np.array(bool(value)), "")
+        group.dataset(name, np.array(bool(value)))
     elif isinstance(value, (int, np.integer)):
         _write_integer(group, name, int(value), context)
     elif isinstance(value, (float, np.floating)):
@@ -175,53 +191,33 @@ def _write_value(
 
 
 def _write_number(
-    group: Any, name: str, value: complex, dtype: npt.DTypeLike, context: _Context
+    group: Place, name: str, value: complex, dtype: npt.DTypeLike, context: _Context
 ) -> None:
-    create_dataset(group, name, np.array(value, dtype=dtype), context.unit)
+    group.dataset(name, np.array(value, dtype=dtype), context.unit)
 
 
-def _write_integer(group: Any, name: str, value: int, context: _Context) -> None:
+def _write_integer(group: Place, name: str, value: int, context: _Context) -> None:
     if fits_word(value):
         _write_number(group, name, value, np.int64, context)
         return
-    dataset = create_dataset(group, name, np.array(str(value), dtype=TEXT), context.unit)
-    set_text(dataset, b"kind", "int")
+    text = np.array(str(value), dtype=TEXT)
+    group.dataset(name, text, context.unit, notes={"kind": "int"})
 
 
-def _write_text(group: Any, name: str, value: str) -> None:
+def _write_text(group: Place, name: str, value: str) -> None:
     plain = is_plain_text(value)
-    if plain and len(value) >= _SHARED_TEXT and TEXTS in group.file:
-        group[name] = shared_text(group.file[TEXTS], value)
-        return
     text = np.array(value if plain else json.dumps(value), dtype=TEXT)
-    dataset = create_dataset(group, name, text, "")
-    if not plain:
-        set_text(dataset, b"quoting", "json")
-
-
-def shared_text(texts: Any, value: str) -> Any:
-    """Find or make the one dataset that holds a text, for a link to it where the text belongs.
-
-    Parameters
-    ----------
-    texts : h5py.Group
-        The group of the texts of this file.
-    value : str
-        A text.
-
-    Returns
-    -------
-    h5py.Dataset
-        Its name is the SHA-256 of the text as UTF-8.
-    """
-    name = hashlib.sha256(value.encode("utf-8")).hexdigest()
-    if name not in texts:
-        create_dataset(texts, name, np.array(value, dtype=TEXT), "")
-    return texts[name]
+    if plain and len(value) >= _SHARED_TEXT and group.texts is not None:
+        key = hashlib.sha256(value.encode("utf-8")).hexdigest()
+        if key not in group.texts:
+            create_dataset(group.texts, key, text, "")
+        group.link(name, group.texts[key], text)
+    else:
+        group.dataset(name, text, notes={} if plain else _QUOTED)
 
 
 def _write_array(
-    group: Any,
+    group: Place,
     name: str,
     value: npt.NDArray[Any],
     context: _Context,
@@ -233,17 +229,18 @@ def _write_array(
             hint="wanted bool, integers, float64 or complex128; texts go into a tuple",
         )
     unit = "" if value.dtype.kind == "b" else context.unit
-    dataset = create_dataset(group, name, value, unit, storage_options(value.size))
+    notes = {} if value.ndim else {"kind": "ndarray"}
+    dataset = group.dataset(name, value, unit, storage_options(value.size), notes)
     if value.ndim == 0:
-        set_text(dataset, b"kind", "ndarray")
-    elif value.ndim == 1 and context.metadata.get("axes") == (name,):
+        return
+    if value.ndim == 1 and context.metadata.get("axes") == (name,):
         h5py.h5ds.set_scale(dataset, name.encode())
     else:
         _attach_scales(group, dataset, name, context, reserved)
 
 
 def _write_sequence(
-    group: Any,
+    group: Place,
     name: str,
     value: Sequence[object],
     context: _Context,
@@ -253,19 +250,15 @@ def _write_sequence(
     kind = "list" if isinstance(value, list) else "tuple"
     packed = _packed(value)
     if packed is None:
-        subgroup = group.create_group(name, track_order=True)
-        subgroup.attrs["kind"] = kind
-        subgroup.attrs["length"] = len(value)
         members = {f"{index:06d}": item for index, item in enumerate(value)}
-        _write_members(subgroup, members, dict.fromkeys(members, context))
+        notes = {"kind": kind, "length": len(value)}
+        _write_members(group.subgroup(name), members, dict.fromkeys(members, context), notes)
         return
     items, dtype, quoted = packed
     options = {} if dtype is TEXT else storage_options(len(items))
     unit = "" if dtype is TEXT or dtype is np.bool_ else context.unit
-    dataset = create_dataset(group, name, np.array(items, dtype=dtype), unit, options)
-    set_text(dataset, b"kind", kind)
-    if quoted:
-        set_text(dataset, b"quoting", "json")
+    notes = {"kind": kind, **(_QUOTED if quoted else {})}
+    dataset = group.dataset(name, np.array(items, dtype=dtype), unit, options, notes)
     _attach_scales(group, dataset, name, context, reserved)
 
 
@@ -286,21 +279,20 @@ def _packed(value: Sequence[object]) -> tuple[Sequence[object], npt.DTypeLike, b
     return None
 
 
-def _write_mapping(group: Any, name: str, value: Mapping[Any, object], context: _Context) -> None:
+def _write_mapping(group: Place, name: str, value: Mapping[Any, object], context: _Context) -> None:
     wrong = [key for key in value if not isinstance(key, str)]
     if wrong:
         raise ArchiveError(
             f"{group.name}/{name}: the keys of a dict must be texts, got {wrong[0]!r}",
             hint="write the keys as str",
         )
-    subgroup = group.create_group(name, track_order=True)
-    subgroup.attrs["kind"] = "dict"
     members = {member_name(key): item for key, item in value.items()}
-    _write_members(subgroup, members, dict.fromkeys(members, context))
+    contexts = dict.fromkeys(members, context)
+    _write_members(group.subgroup(name), members, contexts, {"kind": "dict"})
 
 
 def _attach_scales(
-    group: Any, dataset: Any, name: str, context: _Context, reserved: frozenset[str]
+    group: Place, dataset: Any, name: str, context: _Context, reserved: frozenset[str]
 ) -> None:
     """Give each dimension of an array a scale of its own name in the array's own group.
 
@@ -315,13 +307,13 @@ def _attach_scales(
     used: list[str] = []
     for dimension, axis in enumerate(axes):
         scale = _scale(group, axis, dataset.shape[dimension], context, reserved, used)
-        h5py.h5ds.attach_scale(dataset, h5py.h5d.open(group.id, scale.encode()), dimension)
+        h5py.h5ds.attach_scale(dataset, h5py.h5d.open(group.group.id, scale.encode()), dimension)
         h5py.h5ds.set_label(dataset, dimension, scale.encode())
         used.append(scale)
 
 
 def _scale(
-    group: Any,
+    group: Place,
     axis: str,
     length: int,
     context: _Context,
@@ -329,20 +321,20 @@ def _scale(
     used: Sequence[str],
 ) -> str:
     """Find or make the scale of an axis in a group, and give its name."""
-    if axis in reserved and axis in group and axis not in used:
-        if h5py.h5ds.is_scale(group[axis].id) and group[axis].shape == (length,):
+    made = group.group
+    if axis in reserved and axis in made and axis not in used:
+        if h5py.h5ds.is_scale(made[axis].id) and made[axis].shape == (length,):
             return axis
     name = axis
-    while name in reserved or name in used or (name in group and group[name].shape != (length,)):
+    while name in reserved or name in used or (name in made and made[name].shape != (length,)):
         name += "_"
-    if name in group:
+    if name in made:
         return name
     values, unit = _scale_values(axis, length, context)
     if isinstance(values, tuple):
-        dataset = create_dataset(group, name, np.array(values, dtype=TEXT), "")
+        dataset = group.dataset(name, np.array(values, dtype=TEXT), notes=_DERIVED)
     else:
-        dataset = create_dataset(group, name, values, unit, storage_options(length))
-    h5py.Dataset(dataset).attrs["derived"] = True
+        dataset = group.dataset(name, values, unit, storage_options(length), _DERIVED)
     h5py.h5ds.set_scale(dataset, name.encode())
     return name
 

@@ -51,6 +51,22 @@ class RunInfo:
 DONE = RunInfo()
 
 
+def notes_of(info: RunInfo) -> dict[str, str | float]:
+    """Give the attributes of a run's group.
+
+    Parameters
+    ----------
+    info : RunInfo
+        What is known of the run besides its result.
+
+    Returns
+    -------
+    dict
+        By name.
+    """
+    return {"status": info.status, "start_time": info.start_time, "wall_time": info.wall_time}
+
+
 @dataclass(frozen=True, slots=True)
 class NumberedRun:
     """A run with its place in the archive.

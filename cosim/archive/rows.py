@@ -8,9 +8,10 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from cosim.archive.checksums import CHECKSUM, record_digest, row_digests
+from cosim.archive.checksums import CHECKSUM, contents_digest, row_digests
+from cosim.archive.datasets import set_text
 from cosim.archive.encoding import fits_word, is_instance, write_object
-from cosim.archive.layout import DONE, TEXTS, RunInfo, run_group_name
+from cosim.archive.layout import DONE, TEXTS, RunInfo, notes_of, run_group_name
 from cosim.archive.series import Series, Stack, stacks_of, write_stack
 from cosim.archive.table import CORE, Cell, Column, write_table
 from cosim.errors import ArchiveError
@@ -175,8 +176,5 @@ def _write_record(file: Any, row: Row) -> None:
             hint="wrap the values in a frozen dataclass with declared fields",
         )
     group = file["runs"].create_group(run_group_name(row.number), track_order=True)
-    write_object(group, row.run)
-    group.attrs["status"] = row.info.status
-    group.attrs["start_time"] = row.info.start_time
-    group.attrs["wall_time"] = row.info.wall_time
-    group.attrs[CHECKSUM] = record_digest(group, row.run)
+    place = write_object(group, row.run, notes_of(row.info))
+    set_text(group.id, CHECKSUM.encode(), contents_digest(sorted(place.contents.items())))

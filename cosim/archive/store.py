@@ -13,7 +13,7 @@ from cosim.archive.checksums import CHECKSUM
 from cosim.archive.decoding import read_object
 from cosim.archive.encoding import is_instance, write_object
 from cosim.archive.files import list_parts, new_part_path, opened, parts_folder, snapshot
-from cosim.archive.layout import DONE, PLAN, NumberedRun, RunInfo, run_group_name
+from cosim.archive.layout import DONE, PLAN, NumberedRun, RunInfo, notes_of, run_group_name
 from cosim.archive.publishing import edited, locked, publish, unwritable
 from cosim.archive.table import (
     Column,
@@ -394,7 +394,4 @@ def _write_runs(file: Any, runs: Sequence[NumberedRun]) -> None:
                 hint="wrap the values in a frozen dataclass with declared fields",
             )
         group = file["runs"].create_group(run_group_name(entry.number), track_order=True)
-        write_object(group, entry.run)
-        group.attrs["status"] = entry.info.status
-        group.attrs["start_time"] = entry.info.start_time
-        group.attrs["wall_time"] = entry.info.wall_time
+        write_object(group, entry.run, notes_of(entry.info))

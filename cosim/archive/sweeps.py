@@ -5,7 +5,7 @@ from collections.abc import Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
-from cosim.archive.checksums import CHECKSUM, record_digest
+from cosim.archive.checksums import CHECKSUM, contents_digest
 from cosim.archive.consolidation import compact_parts
 from cosim.archive.decoding import read_object
 from cosim.archive.encoding import is_instance, write_object
@@ -47,8 +47,8 @@ def create(path: str | os.PathLike[str], plan: object) -> None:
     def write(file: Any) -> None:
         file.create_group(TEXTS)
         group = file.create_group(PLAN, track_order=True)
-        write_object(group, plan)
-        group.attrs[CHECKSUM] = record_digest(group)
+        place = write_object(group, plan)
+        group.attrs[CHECKSUM] = contents_digest(sorted(place.contents.items()))
         if not len(file[TEXTS]):
             del file[TEXTS]
 

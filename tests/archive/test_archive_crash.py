@@ -171,7 +171,9 @@ def test_any_failure_while_a_run_is_encoded(
     write(path, make(1.0))
     for error, reported in ((MemoryError, MemoryError), (RuntimeError, ArchiveError)):
 
-        def fail(group: object, value: object, error: type[Exception] = error) -> None:
+        def fail(
+            group: object, value: object, notes: object, error: type[Exception] = error
+        ) -> None:
             raise error("no more")
 
         monkeypatch.setattr("cosim.archive.store.write_object", fail)
