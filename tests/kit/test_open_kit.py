@@ -5,14 +5,18 @@ into the cache folder of pytest; it is no dependency of ours.
 """
 
 import shutil
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
 import pytest
 
 import cosim
+from cosim.archive import read_table
 from cosim.errors import UnknownNameError
 from cosim.result import GateResult
+from cosim.sweep.local import local_engine
+from cosim.sweep.run import run_sweep
 from cosim.testbench import Testbench, make_testbench
 from cosim.waveform import FloatArray
 from tests.circuit.batch import OPTIONS, ROUNDING, run_batch
@@ -21,6 +25,7 @@ from tests.kit.install import LIBRARY, MODELS, PACKAGE, VERSION, install_kit
 pytestmark = [pytest.mark.ngspice, pytest.mark.full]
 
 CARRIER, STOP = 1.5e9, 25e-9
+SECTIONS = ("tt", "ff", "ss", "sf", "fs")
 STEP = 1.0 / CARRIER / 80  # Also the step of the deck's .tran, from which the first steps follow.
 
 # Lengths are numbers in um, since the kit sets `.option scale=1u` for the whole deck.
@@ -104,10 +109,10 @@ def by_hand(folder: Path, kit: Path, section: str, deck: str) -> FloatArray:
 @pytest.fixture(scope="module")
 def corners(kit: Path, tmp_path_factory: pytest.TempPathFactory) -> dict[str, GateResult]:
     folder = tmp_path_factory.mktemp("corners")
-    return {name: cosim.run(bench(folder, kit, name, {})) for name in ("tt", "ff", "ss")}
+    return {name: cosim.run(bench(folder, kit, name, {})) for name in SECTIONS}
 
 
-@pytest.mark.parametrize("section", ["tt", "ff", "ss"])
+@pytest.mark.parametrize("section", SECTIONS)
 def test_a_section_gives_the_waveform_of_the_kit_read_by_ngspice(
     kit: Path, corners: dict[str, GateResult], tmp_path: Path, section: str
 ) -> None:
@@ -130,6 +135,43 @@ def test_a_changed_instance_gives_the_waveform_of_a_deck_changed_by_hand(
     result = cosim.run(bench(tmp_path, kit, "tt", {"instances": instances}))
     np.testing.assert_allclose(result.waveform.v, out, rtol=0, atol=ROUNDING)
     assert result.pulse.amplitude < 0.95 * corners["tt"].pulse.amplitude
+
+
+def test_the_five_corners_as_a_sweep(
+    kit: Path, corners: dict[str, GateResult], tmp_path: Path
+) -> None:
+    """Each corner at two supplies; at the deck's own one the rows are those of single runs."""
+    swept = replace(
+        bench(tmp_path, kit, "tt", {"confidential": [str(kit)]}),
+        sweep={
+            "corners": {name: {"sections": {LIBRARY: name}} for name in SECTIONS},
+            "grid": [{"key": "netlist.parameters.vdd", "values": [1.8, 1.62]}],
+            "keep": 1,
+        },
+    )
+    archive = tmp_path / "corners.h5"
+    state = run_sweep(swept, archive, engine=local_engine(2))
+    assert (state.finished, state.planned) == (10, 10), state.failed
+    table = read_table(archive)
+    assert table["corner"].tolist() == [name for name in SECTIONS for _ in range(2)]
+    whole = slice(0, None, 2)
+    for column in ("as_simulated.average_gate_fidelity", "pulse.amplitude", "rotation.angle"):
+        single = [value_of(corners[name], column) for name in SECTIONS]
+        # One deck on one computer: the same numbers to the last bit.
+        assert table[column][whole].tolist() == single, column
+    # Four devices drive the output: less supply, less amplitude, at every corner.
+    assert (table["pulse.amplitude"][1::2] < 0.95 * table["pulse.amplitude"][whole]).all()
+    text = archive.read_bytes()
+    assert b"vth0" not in text
+    assert b"left out here" in text
+
+
+def value_of(result: GateResult, column: str) -> float:
+    value: object = result
+    for name in column.split("."):
+        value = getattr(value, name)
+    assert isinstance(value, float)
+    return value
 
 
 def test_the_fast_corner_is_stronger_and_faster_than_the_slow_one(
