@@ -18,6 +18,24 @@ Array: TypeAlias = npt.NDArray[Any]
 
 _NOTHING: Mapping[str, Any] = {}
 
+# h5py finds out the type of every array that it writes or reads; most are of these.
+NUMBER_TYPES: Mapping[npt.DTypeLike, Any] = {
+    np.dtype(np.float64): h5py.h5t.IEEE_F64LE,
+    np.dtype(np.int64): h5py.h5t.STD_I64LE,
+}
+
+
+def _ordered_group() -> Any:
+    """Make the properties of a group whose members keep their order."""
+    properties = h5py.h5p.create(h5py.h5p.GROUP_CREATE)
+    order = h5py.h5p.CRT_ORDER_TRACKED | h5py.h5p.CRT_ORDER_INDEXED
+    properties.set_link_creation_order(order)
+    properties.set_attr_creation_order(order)
+    return properties
+
+
+_ORDERED_GROUP = _ordered_group()
+
 _SCALAR = h5py.h5s.create(h5py.h5s.SCALAR)
 
 
@@ -53,12 +71,13 @@ def create_dataset(
         dataset = made.id
     else:
         text = values.dtype.kind == "O"
-        kind = TEXT_TYPE if text else h5py.h5t.py_create(values.dtype, logical=True)
+        number = NUMBER_TYPES.get(values.dtype)
+        kind = TEXT_TYPE if text else number or h5py.h5t.py_create(values.dtype, logical=True)
         space = h5py.h5s.create_simple(values.shape) if values.ndim else _SCALAR
         dataset = h5py.h5d.create(group.id, name.encode(), kind, space)
         if values.size:
             plain = np.ascontiguousarray(values)
-            dataset.write(h5py.h5s.ALL, h5py.h5s.ALL, plain, TEXT_OBJECT if text else None)
+            dataset.write(h5py.h5s.ALL, h5py.h5s.ALL, plain, TEXT_OBJECT if text else number)
     if unit:
         set_text(dataset, b"units", unit)
     return dataset
@@ -113,8 +132,8 @@ class Place:
 
     def subgroup(self, name: str) -> "Place":
         """Make a group in the group."""
-        made = self.group.create_group(name, track_order=True)
-        return Place(made, f"{self.path}/{name}", self.texts, self.contents)
+        made = h5py.h5g.create(self.group.id, name.encode(), gcpl=_ORDERED_GROUP)
+        return Place(h5py.Group(made), f"{self.path}/{name}", self.texts, self.contents)
 
     def dataset(
         self,

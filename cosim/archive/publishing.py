@@ -24,6 +24,8 @@ from cosim.archive.files import parts_folder
 from cosim.archive.layout import LIBRARY_BOUNDS, write_root
 from cosim.errors import ArchiveError, CosimError
 
+# Bytes by which a file in memory grows; with the 64 kB of h5py it is copied often.
+_BLOCK = 2**20
 _LOCK_TIMEOUT = 60.0
 _NO_SPACE = (errno.ENOSPC, errno.EDQUOT, errno.EFBIG)
 _NO_LOCKS = (errno.ENOLCK, errno.ENOSYS, errno.EOPNOTSUPP)
@@ -82,7 +84,12 @@ def image_of(path: Path, write: Callable[[Any], None]) -> bytes:
     with refusals(path):
         # The name is that of no file: HDF5 refuses one that this process has open.
         with h5py.File(
-            uuid.uuid4().hex, "w", libver=LIBRARY_BOUNDS, driver="core", backing_store=False
+            uuid.uuid4().hex,
+            "w",
+            libver=LIBRARY_BOUNDS,
+            driver="core",
+            backing_store=False,
+            block_size=_BLOCK,
         ) as file:
             write_root(file)
             write(file)

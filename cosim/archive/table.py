@@ -9,7 +9,7 @@ import h5py
 import numpy as np
 import numpy.typing as npt
 
-from cosim.archive.datasets import create_dataset
+from cosim.archive.datasets import NUMBER_TYPES, create_dataset
 from cosim.archive.encoding import field_unit, fits_word, is_instance, is_plain_text
 from cosim.archive.layout import (
     TEXT,
@@ -26,12 +26,6 @@ CORE = ("id", "kind", "status", "start_time", "wall_time")
 
 # Longer texts are decks and logs; they stay with their run.
 _LONGEST_TEXT = 200
-
-# h5py finds out the type in memory of every array that it reads; most are of these.
-_MEMORY_TYPES: Mapping[npt.DTypeLike, Any] = {
-    np.dtype(np.float64): h5py.h5t.NATIVE_DOUBLE,
-    np.dtype(np.int64): h5py.h5t.NATIVE_INT64,
-}
 
 # Up to here every integer is a float64.
 EXACT = 2**53
@@ -348,7 +342,7 @@ def _load_column(dataset: Any, raw: bool, units: bool) -> Column:
         dtype = np.dtype(np.uint8)
     values = np.empty(dataset.shape, dtype=dtype)
     if values.size:
-        dataset.read(h5py.h5s.ALL, h5py.h5s.ALL, values, _MEMORY_TYPES.get(dtype))
+        dataset.read(h5py.h5s.ALL, h5py.h5s.ALL, values, NUMBER_TYPES.get(dtype))
     if dtype.kind != "O":
         return Column(values, unit)
     texts = [item.decode() if isinstance(item, bytes) else item for item in values.tolist()]
