@@ -7,7 +7,8 @@ from dataclasses import dataclass, replace
 from datetime import datetime
 
 from cosim.archive import Row, RunInfo, Series, cells_of
-from cosim.capture import Capture, Plan, capture_probe, check_window, make_plan
+from cosim.capture import Capture, Plan, check_window, make_plan
+from cosim.captures import capture_probes
 from cosim.circuit.confidential import Roots, kept_lines, kept_log
 from cosim.circuit.preparation import prepare
 from cosim.decks import roots_of
@@ -186,7 +187,7 @@ class _Captures:
     """The captures of some plans, made together and handed out one by one."""
 
     def __init__(self, plans: Sequence[Plan]) -> None:
-        self._captures = iter(tuple(_capture_probes(plans)))
+        self._captures = iter(tuple(capture_probes(plans)))
 
     def next(self) -> Capture | CosimError:
         found: Capture | CosimError = next(self._captures)
@@ -335,12 +336,3 @@ def _worst(results: Mapping[int, GateResult], shared: Shared) -> tuple[int, ...]
     }
     reached = [number for number, loss in losses.items() if loss >= shared.threshold]
     return tuple(sorted(reached, key=lambda number: -losses[number])[: shared.keep])
-
-
-def _capture_probes(plans: Sequence[Plan]) -> Iterator[Capture | CosimError]:
-    """Simulate decks one after the other."""
-    for plan in plans:
-        try:
-            yield capture_probe(plan)
-        except CosimError as error:
-            yield error
