@@ -220,6 +220,9 @@ def opened(path: Path) -> Iterator[Any]:
     except (FileNotFoundError, CosimError):
         raise
     except OSError as error:
+        if error.errno == errno.ESTALE:
+            # A file that another machine has removed, of which NFS still has the name.
+            raise FileNotFoundError(errno.ENOENT, os.strerror(errno.ENOENT), str(path)) from error
         raise _unreadable(path, error) from error
     with file:
         try:

@@ -12,6 +12,7 @@ import sys
 from multiprocessing.synchronize import Event
 from pathlib import Path
 
+import h5py
 import numpy as np
 import pytest
 
@@ -302,6 +303,25 @@ def test_file_system_without_locks(tmp_path: Path, monkeypatch: pytest.MonkeyPat
             action(path)
     check_rows(path, set(range(1, 6)))
     assert len(list(tmp_path.iterdir())) == 2
+
+
+def test_part_that_another_machine_has_removed(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    path = tmp_path / "a.h5"
+    create(path, PLAN)
+    part = write_rows(path, [row(1)])
+    real_file = h5py.File
+
+    def stale(name: Path, *args: object, **options: object) -> object:
+        if name == part:
+            monkeypatch.undo()
+            consolidate(path)
+            raise OSError(errno.ESTALE, os.strerror(errno.ESTALE))
+        return real_file(name, *args, **options)
+
+    monkeypatch.setattr(h5py, "File", stale)
+    assert run_numbers(path) == (1,)
 
 
 @pytest.mark.full
