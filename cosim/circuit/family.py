@@ -88,7 +88,8 @@ def simulate_family(
         Decks as sent, of any kind. Results of decks that are alike are held back until their
         turn, so that a long sequence is better given in parts.
     requests : sequence of TransientRequest
-        The request that each was prepared for.
+        The request that each was prepared for. The time limit holds for a load, with the part of
+        the run that is shared, and again for each run out of it.
     progress : callable or None
         Called with the place of a deck and its simulated time in s, now and then.
 
@@ -165,7 +166,10 @@ def _by_sources(kin: Kin, decks: _Decks, values: Sequence[_Values]) -> list[_Bra
         for place in near.setdefault(first, []):
             until, group = groups[place]
             common = min(until, *map(agreement, kin.sources[0], values[group[0]], values[number]))
-            if common >= LEAST_SHARE * request.stop and request.start == 0.0:
+            one, other = (decks[kin.members[k]][0].data for k in (group[0], number))
+            # A file is open once its run has begun.
+            fits = request.start == 0.0 and one == other
+            if fits and common >= LEAST_SHARE * request.stop:
                 groups[place] = (common, [*group, number])
                 break
         else:
@@ -239,10 +243,21 @@ def _tell(progress: Progress, place: int, stop: float, part: float) -> None:
 
 @dataclass(frozen=True, slots=True)
 class _Load:
-    """A loaded deck: its token, and the lines of the log that belong to each of its runs."""
+    """A loaded deck: its token, and the lines of the log that belong to each of its runs.
+
+    Parameters
+    ----------
+    token : str
+        By which the host knows it.
+    log : list of str
+        The lines.
+    rewrites : bool
+        Whether each run puts its own data files in the place of the loaded deck's.
+    """
 
     token: str
     log: list[str]
+    rewrites: bool
 
 
 def _load(branching: _Branching, decks: _Decks) -> _Load | None:
@@ -271,7 +286,8 @@ def _load(branching: _Branching, decks: _Decks) -> _Load | None:
         # What the reading alone says comes once; what `reset` says again comes from each run.
         reading, again = log[: loaded["reading"]], Counter(log[loaded["reading"] :])
         log = [line for line in reading if not _taken(again, line)]
-    return _Load(token, log)
+    rewrites = any(decks[member.place][0].data != deck.data for member in branching.members)
+    return _Load(token, log, rewrites)
 
 
 def _taken(lines: Counter[str], line: str) -> bool:
@@ -305,7 +321,7 @@ def _one(
     }
     client = client_of_this_process()
     try:
-        answer = client.exchange(asked, {}, progress)
+        answer = client.exchange(asked, deck.data if loaded.rewrites else {}, progress)
         if answer.end.get("lost"):
             return None
         own = [line for line in answer.log if not line.startswith("stdout Reset re-loads circuit")]

@@ -1,17 +1,16 @@
 """Which of many decks can share one load, told from their lines as they are sent.
 
-Decks are alike if they differ in the plain numbers of top-level `.param` cards and in top-level
-sources only. There are two ways to make one of them out of another that is loaded, and both gave
-every point of a fresh run bit by bit where these rules let them:
+Decks are alike if they differ in nothing but plain numbers of top-level `.param` cards, top-level
+sources, and samples of file sources. There are two ways to make one of them out of another that is
+loaded; where these rules let them, both gave every point of a fresh run bit by bit:
 
     alter   the values of top-level sources are set. Nothing else may depend on what differs.
-    reset   `alterparam`, `setseed` and `reset`: ngspice works the deck out again from the lines
-            that it has read, without reading them again.
+    reset   `alterparam`, `setseed`, `reset`: ngspice works its lines out again, unread.
 
-What is not certain is left to a fresh run: parameters of the same name in a subcircuit (ngspice
-would change these too), parameters that are set twice or within `.if`, those that `.if`, `.tran`,
-`.save`, `.temp`, `.options` or `.csparam` depend on, sources of noise (they draw from a pool that
-no seed resets), and the dialects that ngspice translates line by line while it reads them.
+What is not certain runs fresh: parameters of the same name in a subcircuit (`alterparam` changes
+these too), parameters set twice or within `.if`, those that `.if`, `.tran`, `.save`, `.temp`,
+`.options` or `.csparam` depend on, sources of noise (no seed resets their pool), and the dialects
+that ngspice translates while it reads.
 """
 
 import re
@@ -20,7 +19,7 @@ from dataclasses import dataclass
 from functools import lru_cache
 
 from cosim.circuit.analysis import TransientRequest
-from cosim.circuit.cards import assignments, card_word, word_spans
+from cosim.circuit.cards import assignments, card_word, model_card, word_spans
 from cosim.circuit.deck import PreparedDeck
 from cosim.circuit.waves import SourceWords, source_words
 
@@ -94,7 +93,7 @@ def kindred(prepared: Sequence[PreparedDeck], requests: Sequence[TransientReques
     for place, (item, request, view) in enumerate(zip(prepared, requests, views, strict=True)):
         key = (
             view.common, tuple(view.numbers), tuple(view.sources), _settings(item),
-            tuple(item.data.items()), tuple(item.keys.items()), item.plots, item.axis,
+            _data(item), tuple(item.keys.items()), item.plots, item.axis,
             request.start, request.time_limit, request.memory_limit,
         )  # fmt: skip
         groups.setdefault(key, []).append(place)
@@ -219,6 +218,18 @@ def names_in(text: str) -> frozenset[str]:
     return frozenset(_NAME.findall(text.lower()))
 
 
+def _data(item: PreparedDeck) -> tuple[tuple[str, bytes], ...]:
+    """Give the data files; of those that are read as a run begins the names only."""
+    late: set[str] = set()
+    early: set[str] = set()
+    for line in item.lines if item.data else ():
+        if "{scratch}" in line:
+            is_source = card_of(line) == ".model" and model_card(line)[1] == "filesource"
+            (late if is_source else early).update(name for name in item.data if name in line)
+    late -= early
+    return tuple((name, b"" if name in late else data) for name, data in item.data.items())
+
+
 def _settings(item: PreparedDeck) -> tuple[str, ...]:
     return tuple(command for command in item.commands if not command.startswith("setseed"))
 
@@ -228,8 +239,7 @@ def _view(lines: tuple[str, ...]) -> _View:
     numbers: dict[str, str] = {}
     seen: set[str] = set()
     repeated: set[str] = set()
-    sources: dict[int, str] = {}
-    depth = 0
+    sources, depth = {}, 0
     for index, line in enumerate(lines):
         card = card_of(line)
         if card in (".subckt", ".if"):

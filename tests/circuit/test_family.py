@@ -167,6 +167,43 @@ def test_parameters_inside_a_subcircuit(only_warm: list[str]) -> None:
     check(items(deck, sets, request(20e-9)), only_warm, "reset")
 
 
+CONSTRUCTS = {
+    "a function": (".func f(x) {a*x}", "r1 in out {f(1k)}"),
+    "an initial condition": (".ic v(out)={a/10}", "r1 in out {a*1k}"),
+    "a width of its own name": ("m1 in in out 0 nm w={w} l=1u", ".model nm nmos(vto=0.3 kp=1e-4)"),
+    "a model": ("d1 in out dm", ".model dm d(is={a*1e-14} cjo=1p)"),
+    "a bare name": ("r1 in out rbare", ".param rbare={a*1k}"),
+    "a behavioural source": ("b1 out 0 i=-a*1m*v(in)", "r1 in out 1k"),
+    "an expression in quotes": ("r1 in out 'a*1k'", "l1 out 0 1u"),
+    "a branch that does not depend on it": (
+        ".param kind=1", ".if (kind==1)", "r1 in out {a*1k}", ".else", "r1 in out 1", ".endif"
+    ),
+    "a ternary": ("r1 in out {a > 1.5 ? 1k : 2k*a}", "c2 in out {a*1f}"),
+    "two levels": (
+        ".subckt outer x y k=1", "xi x y inner h={k*a}", ".ends",
+        ".subckt inner x y h=1", ".param loc={h*1k}", "r1 x y {loc} m=2", ".ends",
+        "x1 in out outer k={a}",
+    ),
+}  # fmt: skip
+
+
+@pytest.mark.parametrize("initial", ["op", "uic"])
+@pytest.mark.parametrize("name", CONSTRUCTS)
+def test_what_parameters_can_enter(name: str, initial: str, only_warm: list[str]) -> None:
+    head = ["constructs", ".param a=1 w=1u", "v1 in 0 sin(0.5 1 1g)", "c1 out 0 1p"]
+    deck = deck_from_text("\n".join([*head, *CONSTRUCTS[name], ".end"]), name="c.cir")
+    sets = [{"a": a, "w": a * 1e-6} for a in (1.0, 2.0, 1 / 3)]
+    check(items(deck, sets, request(initial=initial)), only_warm, "reset")
+
+
+@pytest.mark.parametrize("initial", ["op", "uic"])
+def test_initial_conditions_beside_altered_sources(initial: str, only_warm: list[str]) -> None:
+    text = FILTER.replace("d1 out", ".ic v(out)=0.1\nd1 out")
+    deck = deck_from_text(text, name="filter.cir")
+    sets = [{"level": 1.0}, {"level": 0.3}, {"level": -1.0}]
+    check(items(deck, sets, request(initial=initial)), only_warm, "resume")
+
+
 def test_the_text_of_a_number_as_its_author_wrote_it(only_warm: list[str]) -> None:
     texts = ("1k", "0.5k", "2e3", "1.5meg", "+700", "3.3E2")
     asked = request(5e-9)
@@ -260,6 +297,19 @@ def test_files_and_code_models(only_warm: list[str]) -> None:
     deck = with_stimulus(deck_from_text(ANALOG, name="analog.cir"), "vin", wave)
     sets = [{"r": 1e3, "k": 2.0}, {"r": 2e3}, {"k": -0.5}]
     check(items(deck, sets, request()), only_warm, "reset")
+
+
+def test_samples_of_each_deck_are_its_own(only_warm: list[str]) -> None:
+    time = np.linspace(0.0, 3e-9, 301)
+    text = ANALOG.replace("vin in", "v2 z 0 {level}\nr7 z mid 1k\nvin in")
+    plain = deck_from_text(text.replace("k=2", "k=2 level=1"), name="analog.cir")
+    decks = []
+    for scale, values in ((1.0, {}), (2.0, {}), (1.0, {"level": 0.5}), (0.3, {"level": 2.0})):
+        wave = Waveform(time, scale * np.sin(2e9 * np.pi * time), unit="V")
+        decks += items(with_stimulus(plain, "vin", wave), [values], request())
+    check(decks, only_warm, "run")
+    only_warm.clear()
+    check(decks[:2], only_warm, "reset")
 
 
 FAULTY = """a logarithm of a parameter

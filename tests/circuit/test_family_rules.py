@@ -145,7 +145,11 @@ def test_decks_that_differ_in_more_are_no_family() -> None:
     assert way(deck(*body, mode="hsa"), deck(*other)) == "fresh"
     assert way(deck(*body, mode="hsa"), deck(*other, mode="hsa")) == "reset"
     assert way(deck(*body, mode="psa"), deck(*other, mode="psa")) == "fresh"
-    assert way(deck(*body, data=b"1"), deck(*other, data=b"2")) == "fresh"
+    # Samples are read as a run begins, other files as a deck is loaded.
+    for kind, expected in (("filesource", "reset"), ("d_source", "fresh")):
+        card = f'.model m {kind}(file="{{scratch}}/w.txt")'
+        pair_of = (deck(*body, card, data=b"1"), deck(*other, card, data=b"2"))
+        assert way(*pair_of) == expected
     assert way(deck(*body, data=b"1"), deck(*other, data=b"1")) == "reset"
     slower = replace(REQUEST, time_limit=5.0)
     found = kindred([deck(*body), deck(*other)], [REQUEST, slower])
