@@ -186,8 +186,11 @@ def repeat_sample(
     plan = archived_plan(path, testbench)
     bars = [f"{view}.error_bar" for view in VIEWS]
     columns = [f"{view}.average_gate_fidelity" for view in VIEWS]
+    table = archive.read_table(path, columns=("id", "status"))
+    if not table or not (table["status"] == DONE).any():
+        return ()
     table = archive.read_table(path, columns=("id", "status", *columns, *bars))
-    done = np.flatnonzero(table["status"] == DONE) if table else np.array([], dtype=int)
+    done = np.flatnonzero(table["status"] == DONE)
     chosen = np.random.default_rng(seed).choice(done, min(count, done.size), replace=False)
     found = []
     for at in sorted(chosen.tolist()):

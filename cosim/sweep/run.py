@@ -207,7 +207,7 @@ class _Desk:
 
     def find_finished(self, mine: set[int] | None, retry_failed: bool) -> None:
         """Look what the archive holds already of the share of this call."""
-        table = archive.read_table(self.path, columns=("id", "status", self.metric))
+        table = _read_ranks(self.path, self.metric)
         if not table:
             return
         fidelities = table.get(self.metric)
@@ -358,9 +358,15 @@ def kept_whole(path: str | os.PathLike[str], record: SweepRecord | None = None) 
     if not isinstance(plan, SweepRecord) or plan.keep == "all":
         return None
     metric = _metric_of(plan)
-    return whole_numbers(
-        archive.read_table(path, columns=("id", "status", metric)), metric, _keep_of(plan)
-    )
+    return whole_numbers(_read_ranks(path, metric), metric, _keep_of(plan))
+
+
+def _read_ranks(path: str | os.PathLike[str], metric: str) -> dict[str, Any]:
+    """Read who is done, and how well; where nobody is, there is no column of the metric."""
+    table = archive.read_table(path, columns=("id", "status"))
+    if table and (table["status"] == DONE).any():
+        table = archive.read_table(path, columns=("id", "status", metric))
+    return table
 
 
 def _metric_of(record: SweepRecord) -> str:

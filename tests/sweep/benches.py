@@ -1,11 +1,15 @@
 """Testbenches of sweeps that take ngspice some 50 ms a run, and what their archives hold."""
 
+from collections.abc import Iterator
+from concurrent.futures import Executor, ThreadPoolExecutor
+from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 
 from cosim import archive
+from cosim.sweep.engine import Engine
 
 # A burst of 20 ns at 5 GHz through an RC filter. A run fails where `fail`, in ns, lies within the
 # run: the logarithm then loses its argument, after a waveform up to that time.
@@ -98,6 +102,16 @@ current_factor = "1 % um"
 """
 # Columns that differ between two runs of the same.
 OF_TIME = frozenset({"start_time", "wall_time", "checksum"})
+
+
+@contextmanager
+def open_thread() -> Iterator[Executor]:
+    with ThreadPoolExecutor(1) as pool:
+        yield pool
+
+
+# In this process, so that calls can be counted, and no process has to start.
+HERE = Engine(open=open_thread, slots=lambda: 1)
 
 
 def write_bench(

@@ -1,8 +1,6 @@
 """Oracle: each run of the plan made alone by `cosim.run`, and counts of what is simulated."""
 
-from collections.abc import Iterator, Sequence
-from concurrent.futures import Executor, ThreadPoolExecutor
-from contextlib import contextmanager
+from collections.abc import Sequence
 from pathlib import Path
 
 import numpy as np
@@ -14,7 +12,6 @@ from cosim.capture import Plan
 from cosim.errors import TestbenchError
 from cosim.result import GateResult
 from cosim.sweep import work
-from cosim.sweep.engine import Engine
 from cosim.sweep.planning import make_sweep
 from cosim.sweep.record import SWEEP_KINDS, FailedRun
 from cosim.sweep.run import run_sweep
@@ -22,6 +19,7 @@ from cosim.testbench import load_testbench
 from tests.sweep.benches import (
     FAILING,
     GRID,
+    HERE,
     LEVELS,
     MISMATCH,
     MOS_DECK,
@@ -32,16 +30,6 @@ from tests.sweep.benches import (
 )
 
 pytestmark = pytest.mark.ngspice
-
-
-@contextmanager
-def open_thread() -> Iterator[Executor]:
-    with ThreadPoolExecutor(1) as pool:
-        yield pool
-
-
-# In this process, so that calls can be counted, and no process has to start.
-HERE = Engine(open=open_thread, slots=lambda: 1)
 
 
 @pytest.fixture
