@@ -18,7 +18,7 @@ its series, and has a group in /runs only if it was to be kept whole.
 
 Every file appears whole, by a rename, so that a writer killed at any moment leaves everything
 readable that was reported as written. Where a run stands twice, the latest part holds. When there
-are more than 200 parts, the small ones become larger parts (`...m.h5`); `consolidate` brings all
+are more than 100 parts, the small ones become larger parts (`...m.h5`); `consolidate` brings all
 into NAME.h5. What was replaced is removed only afterwards.
 
 A row's checksum covers its cells and series (BLAKE2b; see `checksums`), the attribute `checksum`

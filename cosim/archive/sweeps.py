@@ -18,7 +18,7 @@ from cosim.archive.store import owners_of, resolved
 from cosim.errors import ArchiveError
 
 # A reader opens every part, at some milliseconds each.
-_MANY_PARTS = 200
+_MANY_PARTS = 100
 
 
 def create(path: str | os.PathLike[str], plan: object) -> None:

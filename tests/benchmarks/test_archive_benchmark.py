@@ -73,7 +73,7 @@ def batches(count: int, samples: int = 0) -> Iterator[list[Row]]:
 def test_cost_of_a_row(tmp_path: Path, samples: int) -> None:
     path = tmp_path / "a.h5"
     create(path, PLAN)
-    # Beyond two hundred parts, so that the merges of small parts are in it.
+    # Beyond one hundred parts, so that the merges of small parts are in it.
     count = 250
     times = [
         own(lambda some=some: write_rows(path, some)) for some in batches(count * BATCH, samples)
