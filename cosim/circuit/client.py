@@ -214,10 +214,6 @@ class Client:
         progress : callable or None
             Called with the simulated part of a transient, from 0 to 1.
 
-        Returns
-        -------
-        Answer
-
         Raises
         ------
         MissingDependencyError, SimulatorCrashError
@@ -241,11 +237,16 @@ class Client:
         return answer
 
     def unload(self) -> None:
-        """Let go of the deck that is loaded for many sets, if there is one."""
-        with self._lock:
+        """Let go of the deck that is loaded for many sets, unless a run is going on."""
+        # The collector may end a generator in the middle of another run, which must not wait here.
+        if not self._lock.acquire(blocking=False):
+            return
+        try:
             if self._owner == os.getpid() and self._process is not None:
                 with contextlib.suppress(BrokenPipeError):
                     self._write(frames.pack({"kind": "unload"}))
+        finally:
+            self._lock.release()
 
     def close(self) -> None:
         """End the host and remove its scratch folder."""

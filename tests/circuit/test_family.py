@@ -484,3 +484,20 @@ def test_two_hundred_families_leave_nothing_behind() -> None:
     assert before[1][1] == []
     scratch = os.readlink(f"/proc/{host()}/cwd")
     assert [name for name in os.listdir(scratch) if name.startswith("run")] == []
+
+
+def test_a_family_given_up_in_the_middle_of_another_run_does_not_stop_it() -> None:
+    deck = deck_from_text(FILTER, name="filter.cir")
+    decks = items(deck, [{"r": 1e3}, {"r": 2e3}, {"r": 3e3}], request())
+    results: Any = simulate_family(*map(list, zip(*decks, strict=True)))
+    next(results)
+    other = items(load_deck(MODULATOR), SLOW[:1], request(4e-9, STEP, saves=("v(rf_p)",)))[0]
+    ended: list[float] = []
+
+    def give_up(time: float) -> None:
+        results.close()
+        ended.append(time)
+
+    assert isinstance(simulate_prepared(*other, progress=give_up), TransientResult)
+    assert ended
+    assert_equal(run(decks)[2], fresh(decks[2]))
