@@ -4,7 +4,7 @@ import hashlib
 import json
 import os
 from collections.abc import Mapping
-from dataclasses import asdict, dataclass, field
+from dataclasses import asdict, dataclass, field, replace
 from math import nan
 
 from cosim.archive.layout import SCHEMA_VERSION
@@ -208,5 +208,7 @@ def _deck_files(plan: SweepPlan) -> tuple[DeckFile, ...]:
     for corner in plan.corners:
         if corner.deck is not None:
             for file in kept_files(corner.deck.files, roots_of(corner.bench)):
-                found.setdefault((file.path, file.sha256), file)
+                # Jobs that share a plan may have named its testbench in different ways.
+                whole = replace(file, path=os.path.abspath(file.path))
+                found.setdefault((whole.path, whole.sha256), whole)
     return tuple(found.values())

@@ -285,6 +285,7 @@ def _failed_row(plan: SweepPlan, run: SweepRun, outcome: Outcome, known: FailedR
         info=RunInfo(outcome.status, started, outcome.wall_time),
         cells={**_own_cells(run), "error": text, "host": platform.node()},
         units=plan.units,
+        series={},  # The default of a row does not pickle.
         run=record,
     )
 

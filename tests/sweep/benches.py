@@ -143,13 +143,20 @@ def rows(path: Path) -> list[dict[str, Any]]:
     return sorted(found, key=lambda row: row["id"])
 
 
-def same_rows(first: list[dict[str, Any]], second: list[dict[str, Any]]) -> bool:
-    """Whether two tables hold the same, bit by bit; a number that is not there is NaN."""
-    return [sorted(row) for row in first] == [sorted(row) for row in second] and all(
-        one[name] == two[name] or (one[name] != one[name] and two[name] != two[name])
-        for one, two in zip(first, second, strict=True)
-        for name in one
-    )
+def differing(
+    first: list[dict[str, Any]], second: list[dict[str, Any]]
+) -> list[tuple[int, str, object, object]]:
+    """Give what two tables do not hold alike, bit by bit: run, column, and both values."""
+    found: list[tuple[int, str, object, object]] = []
+    numbers = [[row["id"] for row in table] for table in (first, second)]
+    if numbers[0] != numbers[1]:
+        return [(0, "id", *numbers)]
+    for one, two in zip(first, second, strict=True):
+        for name in sorted(one.keys() | two.keys()):
+            mine, theirs = one.get(name), two.get(name)
+            if mine != theirs and not (mine != mine and theirs != theirs):  # Both may be NaN.
+                found.append((one["id"], name, mine, theirs))
+    return found
 
 
 def envelopes(path: Path) -> dict[int, np.ndarray]:

@@ -24,7 +24,7 @@ from cosim.sweep.engine import Engine
 from cosim.sweep.local import local_engine
 from cosim.sweep.record import SWEEP_KINDS
 from cosim.sweep.run import SweepState, run_sweep
-from tests.sweep.benches import DECK, FAILING, HERE, LEVELS, rows, same_rows, write_bench
+from tests.sweep.benches import DECK, FAILING, HERE, LEVELS, differing, rows, write_bench
 
 pytestmark = pytest.mark.ngspice
 
@@ -199,11 +199,11 @@ def check_and_resume(folder: Path, expected: list[dict[str, Any]]) -> None:
     reported = rows(path)
     # It was interrupted indeed, and not before its first part.
     assert 2 <= len(reported) < 16
-    assert same_rows(reported, [expected[row["id"] - 1] for row in reported])
+    assert differing(reported, [expected[row["id"] - 1] for row in reported]) == []
     assert archive.verify(path).damaged == ()
     state = run_sweep(folder / "bench.toml", path, engine=HERE, resume=True)
     assert (state.made, state.finished) == (16 - len(reported), 16)
-    assert same_rows(rows(path), expected)
+    assert differing(rows(path), expected) == []
     worst = sorted(expected, key=lambda row: row["free_frame.average_gate_fidelity"])[:2]
     assert sorted(archive.record_numbers(path)) == sorted(row["id"] for row in worst)
 
