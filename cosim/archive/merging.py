@@ -189,12 +189,12 @@ def merge_files(
     keep : collection of int or None
         Numbers of the runs whose records are kept; None for all.
     packed : bool
-        Whether table and series are compressed.
+        Whether series are compressed.
     """
     texts = file.require_group(TEXTS)
     if PLAN in sources[0]:
         copy_record(sources[0], PLAN, file, PLAN, texts)
-    _merge_tables(file, sources, owners, packed)
+    _merge_tables(file, sources, owners)
     _merge_series(file, sources, owners, packed)
     for index in range(len(sources.paths)):
         records = list(sources[index]["runs"])
@@ -207,7 +207,7 @@ def merge_files(
         del file[TEXTS]
 
 
-def _merge_tables(file: Any, sources: Sources, owners: Owners, packed: bool) -> None:
+def _merge_tables(file: Any, sources: Sources, owners: Owners) -> None:
     if not owners.numbers.size:
         return
     used = [int(index) for index in np.unique(owners.source)]
@@ -227,7 +227,7 @@ def _merge_tables(file: Any, sources: Sources, owners: Owners, packed: bool) -> 
         joined = join(tables)
         order = np.argsort(joined["id"].values)
         ordered = {name: Column(joined[name].values[order], joined[name].unit) for name in block}
-        write_columns(group, ordered, packed)
+        write_columns(group, ordered)
 
 
 def _merge_series(file: Any, sources: Sources, owners: Owners, packed: bool) -> None:

@@ -89,7 +89,7 @@ def write_all(file: Any, rows: Sequence[Row]) -> None:
     digests = row_digests(columns, series_blobs(numbers, stacks))
     place = list(table.items())
     place.insert(len(CORE), (CHECKSUM, Column(np.array(digests, dtype=np.object_))))
-    write_table(file, dict(place), packed=False)
+    write_table(file, dict(place))
     for (name, _), stack in stacks.items():
         write_stack(file, name, stack)
     file.create_group(TEXTS)

@@ -16,7 +16,6 @@ from cosim.archive.layout import (
     NumberedRun,
     member_key,
     member_name,
-    storage_options,
 )
 
 Cell: TypeAlias = bool | int | float | str
@@ -29,8 +28,6 @@ _LONGEST_TEXT = 200
 
 # Up to here every integer is a float64.
 EXACT = 2**53
-
-_CHUNK = 2**14  # rows: 128 kB of a numeric column, which fits HDF5's cache of chunks
 
 
 @dataclass(frozen=True, slots=True)
@@ -235,7 +232,7 @@ def _is_inexact(values: npt.NDArray[Any]) -> bool:
     return values.dtype.kind == "i" and bool(np.any(np.abs(values.astype(float)) >= EXACT))
 
 
-def write_table(file: Any, table: Mapping[str, Column], packed: bool = True) -> None:
+def write_table(file: Any, table: Mapping[str, Column]) -> None:
     """Write the table into an open file, in place of the one that is there.
 
     Parameters
@@ -244,16 +241,17 @@ def write_table(file: Any, table: Mapping[str, Column], packed: bool = True) -> 
         The open file.
     table : mapping of str to Column
         A table.
-    packed : bool
-        Whether long columns are compressed.
     """
     if "table" in file:
         del file["table"]
-    write_columns(file.create_group("table", track_order=True), table, packed)
+    write_columns(file.create_group("table", track_order=True), table)
 
 
-def write_columns(group: Any, table: Mapping[str, Column], packed: bool) -> None:
+def write_columns(group: Any, table: Mapping[str, Column]) -> None:
     """Add columns to the group of a table.
+
+    They are not compressed, which would save a third of their space at best, and make a table of
+    100,000 rows take several times as long to read.
 
     Parameters
     ----------
@@ -261,17 +259,10 @@ def write_columns(group: Any, table: Mapping[str, Column], packed: bool) -> None
         The group, which has the column "id" or gets it here, as the first.
     table : mapping of str to Column
         The columns.
-    packed : bool
-        Whether long columns are compressed.
     """
     scale = h5py.h5d.open(group.id, b"id") if "id" in group else None
     for name, column in table.items():
-        values = column.values
-        options = storage_options(values.size) if packed and values.dtype.kind != "O" else {}
-        if options:
-            # Whole columns are read: few large chunks.
-            options["chunks"] = (min(values.size, _CHUNK),)
-        dataset = create_dataset(group, member_name(name), values, column.unit, options)
+        dataset = create_dataset(group, member_name(name), column.values, column.unit)
         if scale is None:
             scale = dataset
             h5py.h5ds.set_scale(dataset, b"id")
