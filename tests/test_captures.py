@@ -137,8 +137,9 @@ def test_what_is_confidential_leaves_no_line(folder: Path) -> None:
     assert any("vth0" in line.text for line in plans[0].deck.lines)
 
 
+@pytest.mark.full
 def test_progress_names_the_plan(folder: Path) -> None:
-    plans = [plan(folder, stop="40 ns", parameters={"vdd": v}) for v in (1.1, 1.0)]
+    plans = [plan(folder, stop="100 ns", parameters={"vdd": v}) for v in (1.1, 1.0)]
     seen: list[tuple[int, float]] = []
     list(capture_probes(plans, progress=lambda place, time: seen.append((place, time))))
     assert {place for place, _ in seen} == {0, 1}

@@ -368,7 +368,7 @@ SLOW = [{"amp": a, "c_edge": c} for a, c in ((93, 2e-13), (1, 1e-13), (127, 3e-1
 
 
 def slow() -> list[Item]:
-    return items(load_deck(MODULATOR), SLOW, request(8e-9, STEP, saves=("v(rf_p)",)))
+    return items(load_deck(MODULATOR), SLOW, request(20e-9, STEP, saves=("v(rf_p)",)))
 
 
 def youngest(process: int) -> int:
@@ -447,12 +447,13 @@ def test_no_ngspice_is_an_error_for_each(monkeypatch: pytest.MonkeyPatch) -> Non
     assert [type(one) for one in warm] == [MissingDependencyError] * 2
 
 
+@pytest.mark.full
 def test_progress_names_the_deck() -> None:
     seen: list[tuple[int, float]] = []
-    decks = items(load_deck(MODULATOR), SLOW[:2], request(8e-9, STEP, saves=("v(rf_p)",)))
+    decks = items(load_deck(MODULATOR), SLOW[:2], request(20e-9, STEP, saves=("v(rf_p)",)))
     run(decks, lambda place, time: seen.append((place, time)))
     assert {place for place, _ in seen} == {0, 1}
-    assert all(0.0 <= time <= 8e-9 for _, time in seen)
+    assert all(0.0 <= time <= 20e-9 for _, time in seen)
 
 
 def test_a_family_that_is_given_up_leaves_no_process() -> None:
@@ -492,7 +493,7 @@ def test_a_family_given_up_in_the_middle_of_another_run_does_not_stop_it() -> No
     decks = items(deck, [{"r": 1e3}, {"r": 2e3}, {"r": 3e3}], request())
     results: Any = simulate_family(*map(list, zip(*decks, strict=True)))
     next(results)
-    other = items(load_deck(MODULATOR), SLOW[:1], request(4e-9, STEP, saves=("v(rf_p)",)))[0]
+    other = items(load_deck(MODULATOR), SLOW[:1], request(20e-9, STEP, saves=("v(rf_p)",)))[0]
     ended: list[float] = []
 
     def give_up(time: float) -> None:
