@@ -253,8 +253,11 @@ def show_sweep(
     limit, metric : float, str or None
         In place of what the testbench says.
     """
+    import numpy as np
+
     from cosim import archive as store
     from cosim.result import as_columns
+    from cosim.sweep.batches import DONE
     from cosim.sweep.goal import make_goal
     from cosim.sweep.repetition import read_record
     from cosim.sweep.statistics import summarise
@@ -265,8 +268,12 @@ def show_sweep(
     own = f"{record.fidelity}.average_gate_fidelity"
     bound = limit if limit is not None else record.limit if metric in (None, own) else math.nan
     columns, units = store.read_table(path), store.read_units(path)
+    judged = dict(columns)
+    if columns and DONE not in columns["status"]:
+        # Where no run has a result, the table has no column of it either.
+        judged.setdefault(metric or own, np.full(len(columns["id"]), math.nan))
     summary = summarise(
-        columns,
+        judged,
         record.inputs,
         make_goal(metric or own, bound),
         planned=record.runs,
@@ -282,7 +289,7 @@ def show_sweep(
         console.print(f"[bold]{record.title or path}[/bold]")
         console.print(summary_table(summary))
     if plot is not None:
-        plot_sweep(columns, units, summary, plot)
+        plot_sweep(judged, units, summary, plot)
         typer.echo(f"figure in {plot}", err=True)
 
 
