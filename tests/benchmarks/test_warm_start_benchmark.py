@@ -73,13 +73,17 @@ def compare(name: str, deck: Deck, sets: Sets, asked: Sequence[TransientRequest]
         results.extend(simulate_family(ready, asked))
         simulate_prepared(*TINY)  # The loaded deck has ended, and its time is counted.
 
-    costs = []
-    for work, runs in ((alone, len(few)), (shared, len(sets))):
-        before = spent()
-        wall = best(work)
-        costs.append((1e3 * wall / runs, 1e3 * (spent() - before) / ROUNDS / runs))
+    walls: dict[Callable[[], None], list[float]] = {alone: [], shared: []}
+    costs = dict.fromkeys(walls, 0.0)
+    for _ in range(ROUNDS):  # In turns, since the machine is not equally busy all the time.
+        for work, times in walls.items():
+            before, start = spent(), time.perf_counter()
+            work()
+            times.append(time.perf_counter() - start)
+            costs[work] += (spent() - before) / ROUNDS
     assert all(isinstance(result, TransientResult) for result in results)
-    (cold, busy), (warm, own) = costs
+    cold, warm = 1e3 * min(walls[alone]) / len(few), 1e3 * min(walls[shared]) / len(sets)
+    busy, own = 1e3 * costs[alone] / len(few), 1e3 * costs[shared] / len(sets)
     print(
         f"\n{name}, {len(sets)} runs: fresh {cold:.1f} ms a run, with a shared load {warm:.1f} ms: "
         f"{cold / warm:.1f} times the runs per second; processor time {busy:.1f} and {own:.1f} ms: "
