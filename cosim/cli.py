@@ -4,15 +4,17 @@ Results go to standard output, everything else to standard error. Exit codes: 0 
 of the program, 2 the input is wrong, 3 the simulation failed, 130 interrupted.
 """
 
+import atexit
 import importlib.metadata
 import io
 import json
 import os
+import signal
 import sys
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from pathlib import Path
-from typing import TYPE_CHECKING, Annotated
+from typing import TYPE_CHECKING, Annotated, NoReturn
 
 import typer
 from rich.console import Console
@@ -300,8 +302,11 @@ def main() -> None:
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
         sys.exit(0)
     except KeyboardInterrupt:
-        typer.echo("interrupted", err=True)
-        sys.exit(130)
+        _leave_interrupted()
+    except SystemExit as end:
+        if end.code == 130:
+            _leave_interrupted()
+        raise
     except CosimError as error:
         if debug:
             raise
@@ -315,6 +320,15 @@ def main() -> None:
         typer.echo(f"fault of the program: {type(error).__name__}: {error}", err=True)
         typer.echo("  run it again with --debug for the traceback", err=True)
         sys.exit(1)
+
+
+def _leave_interrupted() -> NoReturn:
+    # A second Ctrl-C while the program ends must not change its exit code. Python gives up its own
+    # handlers near its end, but leaves a signal ignored; from the start, that would be inherited.
+    signal.signal(signal.SIGINT, lambda *_: None)
+    atexit.register(signal.signal, signal.SIGINT, signal.SIG_IGN)
+    typer.echo("interrupted", err=True)
+    sys.exit(130)
 
 
 def _exit_code(error: CosimError) -> int:

@@ -169,14 +169,12 @@ def _shots(plan: SweepPlan, groups: Sequence[Sequence[SweepRun]]) -> Iterator[_S
         if item.plan is None or item.bench is None:
             yield item
             continue
-        first = firsts.next()
-        second = seconds.next() if item.bench.accuracy.floor else None
+        first, spent = firsts.next()
+        second = None
+        if item.bench.accuracy.floor:
+            second, more = seconds.next()
+            spent += more
         error = next((shot for shot in (first, second) if isinstance(shot, CosimError)), None)
-        spent = sum(
-            shot.result.wall_time + shot.result.overhead_time
-            for shot in (first, second)
-            if isinstance(shot, Capture) and shot.result is not None
-        )
         shots = None
         if isinstance(first, Capture) and not isinstance(second, CosimError):
             shots = Shots(item.plan, first, second)
@@ -187,11 +185,23 @@ class _Captures:
     """The captures of some plans, made together and handed out one by one."""
 
     def __init__(self, plans: Sequence[Plan]) -> None:
-        self._captures = iter(tuple(capture_probes(plans)))
+        self._captures = iter(tuple(_timed(capture_probes(plans))))
 
-    def next(self) -> Capture | CosimError:
-        found: Capture | CosimError = next(self._captures)
-        return found
+    def next(self) -> tuple[Capture | CosimError, float]:
+        return next(self._captures)
+
+
+def _timed(
+    captures: Iterator[Capture | CosimError],
+) -> Iterator[tuple[Capture | CosimError, float]]:
+    """Give each capture with its time in s; a failed one has none of its own."""
+    began = time.perf_counter()
+    for found in captures:
+        spent = time.perf_counter() - began
+        if isinstance(found, Capture) and found.result is not None:
+            spent = found.result.wall_time + found.result.overhead_time
+        yield found, spent
+        began = time.perf_counter()
 
 
 def _ready(plan: SweepPlan, members: Sequence[SweepRun]) -> _Shot:

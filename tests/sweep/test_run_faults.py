@@ -75,6 +75,8 @@ temperature = "290 K"
     for row, word in zip(found, words, strict=True):
         assert word in row["error"]
     assert archive.record_numbers(path) == (2, 3, 4)
+    # Its time limit has passed.
+    assert archive.read_table(path)["wall_time"][2] >= 0.5
     late = archive.read(path, SWEEP_KINDS, 3)
     assert 'time_limit = "0.5 s"' in late.testbench
     assert "b1 in 0 v=" in late.deck_sent
