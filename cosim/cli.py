@@ -232,6 +232,7 @@ def export(
     if run is None and read_plan(archive, {}) is not None:
         export_sweep(archive, deck, csv, envelope)
         return
+    _refuse_failed(archive, run)
     result = load(archive, run=run)
     if deck is not None:
         export_deck(result, deck)
@@ -258,11 +259,26 @@ def compare(
     from cosim.result import as_plain
     from cosim.terminal import comparison_table
 
+    _refuse_failed(first, run)
+    _refuse_failed(second, with_run)
     found = compare_runs(load(first, run=run), load(second, run=with_run))
     if json_output:
         typer.echo(json.dumps(as_plain(found), indent=2))
     else:
         Console(highlight=False).print(comparison_table(found))
+
+
+def _refuse_failed(archive: Path, run: int | None) -> None:
+    """Say of a run without a result that it has none."""
+    from cosim.archive import read_table
+
+    table = read_table(archive, columns=("id", "status")) if run is not None else {}
+    for number, status in zip(table.get("id", ()), table.get("status", ()), strict=True):
+        if number == run and status != "done":
+            raise InputError(
+                f"{archive}: run {run} has no result: {status}",
+                hint=f"`qcosim show {archive} --run {run}` tells more",
+            )
 
 
 for _command, _example in COMMANDS:

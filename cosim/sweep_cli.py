@@ -76,16 +76,20 @@ def sweep(
     part = (1, 1) if share is None else parse_slice(share)
     target = share_path(archive, *part)
     console = Console(stderr=True, highlight=False)
-    with shown_progress(console) as show:
-        state = run_sweep(
-            testbench,
-            target,
-            engine=_engine(workers, scheduler),
-            resume=resume,
-            retry_failed=retry_failed,
-            part=part,
-            on_progress=show,
-        )
+    try:
+        with shown_progress(console) as show:
+            state = run_sweep(
+                testbench,
+                target,
+                engine=_engine(workers, scheduler),
+                resume=resume,
+                retry_failed=retry_failed,
+                part=part,
+                on_progress=show,
+            )
+    except KeyboardInterrupt:
+        typer.echo(f"what was reported is in {target}; --resume goes on with it", err=True)
+        raise
     show_sweep(target, json_output=json_output, plot=plot, table=False)
     if state.notice:
         console.print(f"notice: {state.notice}", style="yellow")

@@ -231,7 +231,9 @@ def test_a_sweep_that_is_ended_leaves_its_runs_and_no_process(
         assert process.wait(PATIENCE) == code, (tmp_path / "out").read_text()
         assert len(below) >= 4  # Two workers and the host of each.
         wait_for(lambda: not any(child.is_running() for child in below))
-    assert "Traceback" not in (tmp_path / "out").read_text()
+    text = (tmp_path / "out").read_text()
+    assert "Traceback" not in text
+    assert ("--resume goes on with it" in text) == (code == 130)
     check_and_resume(tmp_path, undisturbed)
 
 

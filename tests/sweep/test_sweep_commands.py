@@ -168,7 +168,11 @@ def test_a_sweep_is_exported(failing: Path, qcosim: Cli, tmp_path: Path) -> None
     assert qcosim("export", failing, "--run", whole, "--deck", deck)[0] == 0
     for number in (3, min({1, 2, 4} - {whole})):
         code, _, err = qcosim("export", failing, "--run", number, "--csv", tmp_path / "b.csv")
-        assert code == 2, err
+        assert code == 2
+        words = "run 3 has no result: no convergence" if number == 3 else "only its row"
+        assert words in err
+    code, _, err = qcosim("compare", failing, failing, "--run", whole, "--with", 3)
+    assert (code, "run 3 has no result" in err) == (2, True)
     assert qcosim("export", failing, "--deck", deck)[0] == 2
 
 
@@ -204,6 +208,37 @@ def test_a_flipped_bit_is_found(failing: Path, qcosim: Cli) -> None:
     code, out, _ = qcosim("verify", failing, "--json")
     assert code == 1
     assert len(parsed(out)["damaged"]) == 1
+
+
+def test_a_run_is_made_again_by_the_command(failing: Path, qcosim: Cli, tmp_path: Path) -> None:
+    code, out, _ = qcosim("rerun", failing, 2, "--json", "--archive", tmp_path / "one.h5")
+    assert code == 0
+    row = rows(failing)[1]
+    name = "free_frame.average_gate_fidelity"
+    assert parsed(out)["free_frame"]["average_gate_fidelity"] == row[name]
+    assert archive.read_table(tmp_path / "one.h5")[name] == [row[name]]
+    code, _, err = qcosim("rerun", failing, 3)
+    assert (code, "no solution" in err) == (3, True)
+    code, _, err = qcosim("rerun", failing, 9)
+    assert (code, "runs 1 to 4" in err) == (2, True)
+    (tmp_path / "deck.cir").write_text("another deck\n.end\n")
+    code, _, err = qcosim("rerun", failing, 2)
+    assert (code, "deck" in err) == (2, True)
+
+
+def test_a_sample_is_made_again_by_the_command(failing: Path, qcosim: Cli) -> None:
+    code, out, _ = qcosim("verify", failing, "--repeat", 2)
+    assert code == 0
+    assert out.count("made again: the same") == 2
+    with h5py.File(failing, "r+") as file:
+        file["table/free_frame.average_gate_fidelity"][0] -= 1e-6
+    code, out, _ = qcosim("verify", failing, "--repeat", 3)
+    assert code == 1
+    assert "run 1 made again: NOT THE SAME, fidelities differ by 1.0e-06" in out
+    assert out.count("made again: the same") == 2
+    numbers = parsed(qcosim("verify", failing, "--repeat", 3, "--json")[1])
+    assert [item["same"] for item in numbers["repeated"]] == [False, True, True]
+    assert qcosim("verify", failing, "--repeat", -1)[0] == 2
 
 
 def test_shares_are_merged_by_the_command(tmp_path: Path, qcosim: Cli) -> None:
