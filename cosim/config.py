@@ -10,7 +10,7 @@ import math
 import tomllib
 from collections.abc import Mapping
 from pathlib import Path
-from typing import Any, TypeVar, get_args, get_type_hints
+from typing import Any, TypeVar, get_args, get_origin, get_type_hints
 
 import tomli_w
 from pydantic import GetCoreSchemaHandler, TypeAdapter, ValidationError
@@ -371,7 +371,7 @@ def _written_table(table: object) -> dict[str, Any]:
         value = getattr(table, item.name)
         # What is left out in TOML is what TOML cannot say: nothing, and infinity.
         if value not in (None, {}, (), math.inf):
-            written[item.name] = _written(value, _unit_of(hints[item.name]))
+            written[item.name] = _written(value, hints[item.name])
     return written
 
 
@@ -381,16 +381,27 @@ def _unit_of(hint: Any) -> str:
     return (found + inner + [""])[0]
 
 
-def _written(value: Any, unit: str) -> Any:
+def _written(value: Any, hint: Any) -> Any:
     if isinstance(value, Level):
         return f"{value.value!r} {value.unit}"
     if dataclasses.is_dataclass(value):
         return _written_table(value)
     if isinstance(value, tuple):
-        return [_written(item, unit) for item in value]
+        hints = _hints_of_items(hint, len(value))
+        return [_written(item, part) for item, part in zip(value, hints, strict=True)]
+    unit = _unit_of(hint)
     if isinstance(value, float) and unit:
         return f"{value!r} {unit}"
     return value
+
+
+def _hints_of_items(hint: Any, count: int) -> tuple[Any, ...]:
+    """Give the annotation of each item of a tuple that is annotated, or may also be None."""
+    for part in (hint, *get_args(hint)):
+        if get_origin(part) is tuple:
+            found = get_args(part)
+            return (found[0],) * count if found[-1] is ... else found
+    return (None,) * count
 
 
 def _field_names(cls: type[Any]) -> list[str]:

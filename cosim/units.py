@@ -26,6 +26,10 @@ _PREFIXED = ("s", "Hz", "V", "A", "ohm", "F", "H", "W", "m", "K")
 # Decibel units stay numbers in decibels; Pint does not know them.
 _DECIBELS = ("dB", "dBc", "dBm", "dBc/Hz")
 
+# Spectral densities by the unit of what fluctuates. "2 nV/sqrt(Hz)" is squared on the way in.
+_DENSITIES = {"Hz^2/Hz": "Hz", "V^2/Hz": "V", "rad^2/Hz": "rad", "1/Hz": "1"}
+_SQUARED, _ROOT = "^2/Hz", "/sqrt(Hz)"
+
 _WHAT = {
     "s": ("a time", "10 ns"),
     "Hz": ("a frequency", "6.2 GHz"),
@@ -39,6 +43,11 @@ _WHAT = {
     "m": ("a length", "2 um"),
     "V m": ("a voltage times a length", "3.5 mV um"),
     "1 m": ("a ratio times a length", "1 % um"),
+    "Hz^2/Hz": ("a spectral density of a frequency", "1e3 Hz^2/Hz"),
+    "V^2/Hz": ("a spectral density of a voltage", "2 nV/sqrt(Hz)"),
+    "rad^2/Hz": ("a spectral density of a phase", "1e-12 rad^2/Hz"),
+    "1/Hz": ("a spectral density of a ratio", "1e-14 1/Hz"),
+    "dBc/Hz": ("a level below the carrier", "-120 dBc/Hz"),
 }
 
 
@@ -62,6 +71,11 @@ def _spellings(unit: str) -> Iterator[str]:
     elif unit == "1 m":
         for length in _spellings("m"):
             yield from (length, f"% {length}")
+    elif unit in _DENSITIES:
+        base = _DENSITIES[unit]
+        yield from (unit, f"{base}{_ROOT}")
+        for spelling in _spellings(base) if base != "1" else ():
+            yield from (f"{spelling}{_SQUARED}", f"{spelling}{_ROOT}")
     elif unit == "rad":
         yield from ("rad", "mrad", "deg")
     else:
@@ -88,6 +102,9 @@ def _factor(spelling: str, unit: str) -> float:
         if unit == "1 m":
             return (0.01 if space else 1.0) * _factor(length, "m")
         return _factor(first, "V") * _factor(length, "m")
+    if unit in _DENSITIES:
+        base = spelling.removesuffix(_SQUARED).removesuffix(_ROOT)
+        return 1.0 if _DENSITIES[unit] == "1" else _factor(base, _DENSITIES[unit]) ** 2
     registry = _registry()
     quantity = registry.Quantity(1.0, registry.parse_units(spelling.replace("µ", "u")))
     return float(quantity.to(unit).magnitude)
@@ -105,6 +122,8 @@ def _to_si(number: float, spelling: str, unit: str) -> float:
         return number
     if spelling == "degC":
         return number + 273.15
+    if spelling.endswith(_ROOT):
+        number = number * abs(number)  # A negative one stays an error of whoever looks at it.
     factor = _factor(spelling, unit)
     inverse = round(1 / factor)
     if factor < 1 and math.isclose(factor * inverse, 1.0, rel_tol=1e-12):
@@ -122,7 +141,7 @@ def parse_quantity(text: object, unit: str) -> float:
         For instance "10 ns". A bare number is an error unless `unit` is "1".
     unit : str
         The unit wanted: "s", "Hz", "V", "A", "ohm", "K", "Hz/V", "dB", "rad", "m",
-        "V m", "1 m" (a ratio times a length), or "1".
+        "V m", "1 m" (a ratio times a length), "Hz^2/Hz", "V^2/Hz", "rad^2/Hz", "1/Hz", or "1".
 
     Returns
     -------
