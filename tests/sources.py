@@ -158,3 +158,43 @@ WILSON = (
     f"Stat. Assoc. 22, 209 (1927), {MEMORY}"
 )
 LINEAR_MODEL = "variances of independent numbers add, computed from the formula"
+BALL = (
+    'H. Ball, W. D. Oliver, M. J. Biercuk, "The role of master clock stability in quantum '
+    f'information processing", npj Quantum Inf. 2, 16033 (2016), {MEMORY}'
+)
+CALLEN_WELTON = (
+    'H. B. Callen, T. A. Welton, "Irreversibility and generalized noise", Phys. Rev. 83, 34 '
+    f"(1951), {MEMORY}"
+)
+CYWINSKI = (
+    'L. Cywinski, R. M. Lutchyn, C. P. Nave, S. Das Sarma, "How to enhance dephasing time in '
+    f'superconducting qubits", Phys. Rev. B 77, 174509 (2008), {MEMORY}'
+)
+GOLDEN_RULE = (
+    'R. J. Schoelkopf et al., "Qubits as spectrometers of quantum noise" (2003), golden rule for '
+    f"classical noise, {MEMORY}"
+)
+GREEN = (
+    'T. J. Green, J. Sastrawan, H. Uys, M. J. Biercuk, "Arbitrary quantum control of qubits in the '
+    f'presence of universal noise", New J. Phys. 15, 095004 (2013), {MEMORY}'
+)
+IEEE_1139 = f"IEEE Std 1139, definition of L(f), {MEMORY}; computed from the formula"
+ITHIER = (
+    'G. Ithier et al., "Decoherence in a superconducting quantum bit circuit", Phys. Rev. B 72, '
+    f"134519 (2005), {MEMORY}"
+)
+KLAUDER_ANDERSON = (
+    'J. R. Klauder, P. W. Anderson, "Spectral diffusion decay in spin resonance experiments", '
+    f"Phys. Rev. 125, 912 (1962), {MEMORY}"
+)
+LINDBLAD_WHITE = "white noise as a Lindblad operator, computed from the formula"
+PALADINO = (
+    'E. Paladino et al., "1/f noise: implications for solid-state quantum information", Rev. Mod. '
+    f"Phys. 86, 361 (2014), {MEMORY}"
+)
+PLANCK = f"M. Planck's law of the mean energy of a mode, {MEMORY}; computed from the formula"
+SCHOTTKY = (
+    'W. Schottky, "Ueber spontane Stromschwankungen in verschiedenen Elektrizitaetsleitern", Ann. '
+    f"Phys. 362, 541 (1918), {MEMORY}"
+)
+WIENER_KHINCHIN = "theorem of Wiener and Khinchin, chi-square law of the periodogram"
