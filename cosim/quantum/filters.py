@@ -25,67 +25,28 @@ from dataclasses import dataclass, field
 import numpy as np
 
 from cosim.errors import InputError
+from cosim.quantum.control_path import (
+    ROUNDING,
+    PathSegment,
+    checked_subspace,
+    dagger,
+    differences,
+)
 from cosim.quantum.transforms import fourier_integral
 from cosim.waveform import ComplexArray, FloatArray
 
-# A segment is interpolated by cubics, which take the ends from the samples next to them.
-LEAST_SAMPLES = 8
-# Deviation from U^dag U = 1, or from N^dag = N over the norm of N, that is taken for rounding.
-ROUNDING = 1e-8
-
-
-@dataclass(frozen=True, slots=True)
-class PathSegment:
-    """The nominal evolution over a stretch in which the control is smooth.
-
-    A gate is one segment, or several where the control jumps; what happens in no time, such as an
-    ideal pulse, stands between the end of one and the start of the next.
-
-    Parameters
-    ----------
-    start : float
-        Time of the first sample in s.
-    dt : float
-        Sample interval in s.
-    unitaries : ndarray of complex, shape (n, d, d)
-        U from the start of the gate to start + k dt, at least 8 samples, both ends included.
-
-    Raises
-    ------
-    InputError
-        If the shape does not fit, the interval is not positive or a matrix is not unitary.
-    """
-
-    start: float = field(metadata={"unit": "s"})
-    dt: float = field(metadata={"unit": "s"})
-    unitaries: ComplexArray
-
-    def __post_init__(self) -> None:
-        u = np.ascontiguousarray(self.unitaries, dtype=np.complex128)
-        object.__setattr__(self, "unitaries", u)
-        if u.ndim != 3 or u.shape[1] != u.shape[2] or u.shape[0] < LEAST_SAMPLES:
-            raise InputError(
-                f"filter function: wanted at least {LEAST_SAMPLES} unitaries, an array of shape "
-                f"(n, d, d), got {u.shape}"
-            )
-        if not (math.isfinite(self.start) and math.isfinite(self.dt) and self.dt > 0):
-            raise InputError(
-                f"filter function: wanted a start and a positive interval in s, got "
-                f"{self.start!r} and {self.dt!r}"
-            )
-        deviation = np.abs(_dagger(u) @ u - np.eye(u.shape[1])).max(axis=(1, 2))
-        if not (deviation < ROUNDING).all():
-            bad = int(np.flatnonzero(~(deviation < ROUNDING))[0])
-            raise InputError(
-                f"filter function: matrix {bad} of the path is not unitary, U^dag U differs from 1 "
-                f"by {deviation[bad]:.3g}",
-                hint="relaxation has no filter function: give the evolution without it",
-            )
-
-    @property
-    def stop(self) -> float:
-        """Time of the last sample in s."""
-        return float(self.start + self.dt * (self.unitaries.shape[0] - 1))
+__all__ = [
+    "FilterFunction",
+    "NoiseInfidelity",
+    "PathSegment",
+    "PhaseFilters",
+    "carrier_filter_function",
+    "filter_area",
+    "filter_function",
+    "noise_infidelity",
+    "phase_filter_functions",
+    "phase_operator",
+]
 
 
 @dataclass(frozen=True, slots=True)
@@ -289,6 +250,67 @@ def phase_filter_functions(
     return PhaseFilters(qubit, oscillator)
 
 
+def carrier_filter_function(
+    path: Sequence[PathSegment],
+    lowering: ComplexArray,
+    offsets: FloatArray,
+    *,
+    subspace: Sequence[int] = (0, 1),
+) -> FilterFunction:
+    """Give the filter function of noise that is added to the drive, around the frame's frequency.
+
+    Parameters
+    ----------
+    path, subspace
+        As in `filter_function`, in a frame that rotates at f_frame, the qubit's or the carrier's.
+    lowering : ndarray, shape (d, d)
+        What the rate multiplies, the part that lowers: a of H/hbar = rate (a + a^dag).
+    offsets : ndarray, shape (k,)
+        Frequencies less f_frame in Hz, of both signs.
+
+    Returns
+    -------
+    FilterFunction
+        In (rad/s)**-2: 1 - F_avg = integral of S(f_frame + offset) times it over all offsets, with
+        S the one-sided density of the rate 2 pi k v(t) at the qubit in (rad/s)**2/Hz.
+
+    Raises
+    ------
+    InputError
+        As in `filter_function`.
+
+    Notes
+    -----
+    First order as above with N = a exp(-i omega t) + a^dag exp(i omega t). Noise is stationary, so
+    that its sidebands do not interfere; what turns at twice the frequency is left out, as in the
+    rotating-wave approximation. White noise costs an idle of two levels 2/3 `flip_rate` per time.
+    """
+    chosen = checked_subspace(path, subspace)
+    shape = path[0].unitaries.shape[1:]
+    a = np.asarray(lowering, dtype=np.complex128)
+    if a.shape != shape:
+        raise InputError(
+            f"filter function: wanted a lowering operator of shape {shape}, got {a.shape}"
+        )
+    f = -np.asarray(offsets, dtype=np.float64)
+    transform: ComplexArray = np.zeros((shape[0] ** 2, f.size), dtype=np.complex128)
+    for segment in path:
+        u = segment.unitaries
+        values = np.ascontiguousarray((dagger(u) @ a @ u).reshape(u.shape[0], -1).T)
+        part = fourier_integral(values.real, segment.dt, f)
+        part = part + 1j * fourier_integral(values.imag, segment.dt, f)
+        transform += part * np.exp(-2j * np.pi * f * (segment.start - path[0].start))
+    block = transform.reshape(*shape, -1)
+    m, others = len(chosen), [k for k in range(shape[0]) if k not in chosen]
+    power = np.abs(block) ** 2
+    within = power[np.ix_(chosen, chosen)].sum(axis=(0, 1))
+    trace = block[chosen, chosen].sum(axis=0)
+    # A classical force raises and lowers alike, so that half the density counts in each direction.
+    lost = power[np.ix_(others, chosen)].sum(axis=(0, 1))
+    lost = lost + power[np.ix_(chosen, others)].sum(axis=(0, 1))
+    return FilterFunction(-f, (within - np.abs(trace) ** 2 / m) / (m + 1), lost / (2 * m))
+
+
 def noise_infidelity(
     function: FilterFunction, density: FloatArray, weights: FloatArray
 ) -> NoiseInfidelity:
@@ -336,24 +358,12 @@ def _signals(
     The first m**2 - 1 are the coordinates of the traceless part of P X P over sqrt(m + 1), the
     others the real and imaginary parts of Q X P over sqrt(m).
     """
-    if not path or len(path) != len(operators):
+    if len(path) != len(operators):
         raise InputError(
             f"filter function: wanted one operator for each segment of a path, got "
             f"{len(operators)} for {len(path)}"
         )
-    d = path[0].unitaries.shape[1]
-    chosen = sorted(set(subspace))
-    if len(chosen) != len(subspace) or len(chosen) < 2 or chosen[0] < 0 or chosen[-1] >= d:
-        raise InputError(
-            f"filter function: wanted a subspace of at least two of {d} levels, got "
-            f"{tuple(subspace)}"
-        )
-    first = path[0].unitaries[0]
-    if np.abs(first - np.eye(d)).max() > ROUNDING:
-        raise InputError(
-            f"filter function: the path must start with the identity, its first matrix differs "
-            f"by {np.abs(first - np.eye(d)).max():.3g}"
-        )
+    chosen = checked_subspace(path, subspace)
     return [
         _coordinates(segment.unitaries, _operator(operator, segment), chosen)
         for segment, operator in zip(path, operators, strict=True)
@@ -367,7 +377,7 @@ def _operator(operator: ComplexArray, segment: PathSegment) -> ComplexArray:
         raise InputError(
             f"filter function: wanted an operator of shape {shape[1:]} or {shape}, got {n.shape}"
         )
-    skew = float(np.abs(n - _dagger(n)).max())
+    skew = float(np.abs(n - dagger(n)).max())
     if not skew <= ROUNDING * float(np.abs(n).max()):
         raise InputError(
             f"filter function: the operator of the noise is not Hermitian, it differs by {skew:.3g}"
@@ -377,24 +387,16 @@ def _operator(operator: ComplexArray, segment: PathSegment) -> ComplexArray:
 
 def _coordinates(u: ComplexArray, operator: ComplexArray, inside: list[int]) -> FloatArray:
     m, outside = len(inside), [k for k in range(u.shape[1]) if k not in inside]
-    x = _dagger(u) @ (operator @ u[:, :, inside])
+    x = dagger(u) @ (operator @ u[:, :, inside])
     block = x[:, inside, :].transpose(1, 2, 0)
     upper = block[np.triu_indices(m, k=1)]
     diagonal = np.diagonal(block, axis1=0, axis2=1).real.T
-    # Helmert's basis of the differences of the diagonal elements, which has no trace.
-    helmert = np.array(
-        [[1.0] * k + [-float(k)] + [0.0] * (m - 1 - k) for k in range(1, m)]
-    ) / np.sqrt([[k * (k + 1.0)] for k in range(1, m)])
-    within = [helmert @ diagonal, math.sqrt(2) * upper.real, math.sqrt(2) * upper.imag]
+    within = [differences(m) @ diagonal, math.sqrt(2) * upper.real, math.sqrt(2) * upper.imag]
     parts = [part / math.sqrt(m + 1) for part in within]
     if outside:
         lost = x[:, outside, :].reshape(u.shape[0], -1).T / math.sqrt(m)
         parts += [lost.real, lost.imag]
     return np.ascontiguousarray(np.concatenate(parts))
-
-
-def _dagger(matrices: ComplexArray) -> ComplexArray:
-    return np.asarray(np.conj(np.swapaxes(matrices, -1, -2)))
 
 
 def _integrate(values: FloatArray, dt: float) -> FloatArray:

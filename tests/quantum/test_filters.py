@@ -8,12 +8,14 @@ from cosim.errors import InputError
 from cosim.quantum.filters import (
     FilterFunction,
     PathSegment,
+    carrier_filter_function,
     filter_area,
     filter_function,
     noise_infidelity,
     phase_filter_functions,
     phase_operator,
 )
+from cosim.quantum.heating import flip_rate
 from cosim.quantum.transforms import fourier_integral
 from cosim.waveform import ComplexArray
 
@@ -195,6 +197,101 @@ class TestFilterFunction:
         assert got.infidelity == pytest.approx(area.infidelity, rel=1e-5)
         assert got.leakage == pytest.approx(area.leakage, rel=1e-5)
         assert area.leakage > 0.01 * area.infidelity
+
+
+class TestFramesOfThePhase:
+    @pytest.mark.parametrize("levels", [2, 3])
+    def test_a_weak_phase_spur(self, levels: int) -> None:
+        """The drive's phase wobbles; the oscillator's frame follows it, the qubit's does not."""
+        t, between, dt = grids()
+        path, size = nominal(levels), 1e-3
+        _, number, still = ladder(levels)
+        n = np.diag(number).real
+
+        def wobbled(x: np.ndarray, phase: float, f: float) -> ComplexArray:
+            turn = np.exp(-1j * np.outer(size * np.cos(2 * np.pi * f * x + phase), n))
+            return turn[:, :, None] * drive(levels, x) * turn.conj()[:, None, :] + still
+
+        for f in (5e6, 60e6):
+            found = np.zeros(2)
+            for phase in np.array([0.1, 0.6]) * np.pi:
+                u = evolve(wobbled(t, phase, f), wobbled(between, phase, f), dt)[-1]
+                ends = size * np.cos(2 * np.pi * f * np.array([0.0, TIME]) + phase)
+                seen = np.exp(1j * ends[1] * n)[:, None] * u * np.exp(-1j * ends[0] * n)
+                for k, matrix in enumerate((u, seen)):
+                    found[k] += infidelity(matrix, path.unitaries[-1])[0] / 2
+            filters = phase_filter_functions([path], [drive(levels, t)], number, np.array([f]))
+            both = (filters.qubit_frame, filters.oscillator_frame)
+            wanted = np.array([function.total[0] for function in both]) * size**2 / 2
+            # The next order is size^2 of the first; rounding of the 400 steps is 1e-13.
+            assert found == pytest.approx(wanted, rel=1e-4, abs=1e-13)
+            assert not 0.5 < wanted[0] / wanted[1] < 2  # The frames are told apart.
+
+
+class TestCarrierFilterFunction:
+    @pytest.mark.parametrize("levels", [2, 3, 6])
+    @pytest.mark.parametrize("offset", [-300e6, -35e6, 0.0, 35e6])
+    def test_a_weak_tone_beside_the_carrier(self, levels: int, offset: float) -> None:
+        t, between, dt = grids()
+        path, size = nominal(levels), 3e-3 / TIME / np.sqrt(levels)
+        a, _, still = ladder(levels)
+
+        def total(x: np.ndarray, phase: float) -> ComplexArray:
+            half = size / 2 * np.exp(1j * (2 * np.pi * offset * x + phase))[:, None, None] * a
+            return drive(levels, x) + still + half + np.conj(np.swapaxes(half, 1, 2))
+
+        found = np.zeros(2)
+        for phase in np.array([0.1, 0.6]) * np.pi:
+            u = evolve(total(t, phase), total(between, phase), dt)[-1]
+            found += np.array(infidelity(u, path.unitaries[-1])) / 2
+        function = carrier_filter_function([path], a, np.array([offset]))
+        # A tone of amplitude `size` has the variance size^2/2, all of it at its own frequency.
+        wanted = size**2 / 2 * np.array([function.total[0], function.leakage[0]])
+        # The next order is 1e-4 of the first; as for the tones above, and rounding of the 800
+        # exponentials.
+        assert found == pytest.approx(wanted, rel=1e-3, abs=wanted[0] ** 2 + 1e-12)
+        if levels > 2 and offset == -300e6:
+            assert wanted[1] > 0.5 * wanted[0]  # |1> to |2> is 300 MHz lower.
+
+    def test_both_sidebands_are_both_quadratures(self) -> None:
+        """Noise of density S on both sides of a carrier has 2 S in each quadrature."""
+        path = nominal(3)
+        a, _, _ = ladder(3)
+        f = np.array([0.0, 20e6, 290e6])
+        sides = [carrier_filter_function([path], a, sign * f) for sign in (1, -1)]
+        quadratures = [
+            filter_function([path], [operator], f)
+            for operator in ((a + a.conj().T) / 2, 1j * (a - a.conj().T) / 2)
+        ]
+        for part in ("inside", "leakage"):
+            first = sum(getattr(function, part) for function in sides)
+            second = 2 * sum(getattr(function, part) for function in quadratures)
+            assert first == pytest.approx(second, rel=1e-10)  # Rounding.
+
+    def test_an_idle_is_heated(self) -> None:
+        time, level = 1e-6, 1e3
+        path = PathSegment(0.0, time / 400, np.broadcast_to(np.eye(3), (401, 3, 3)))
+        a, _, _ = ladder(3)
+        step = 0.5 / time
+        offsets = step * np.arange(-4000, 4001)
+        function = carrier_filter_function([path], a, offsets)
+        weights = np.full(offsets.size, step)
+        found = noise_infidelity(function, np.full(offsets.size, level), weights)
+        # Both flips of |0> and |1>, and |1> to |2> at twice the rate from half of the states. The
+        # sum over lines is exact but for the tails above 2 GHz, 1/(pi^2 f time) = 5e-5.
+        rate = flip_rate(level)
+        assert found.leakage == pytest.approx(2 * rate * time / 2, rel=1e-4)
+        inside = found.infidelity - found.leakage
+        assert inside == pytest.approx(2 / 3 * rate * time, rel=1e-4)
+
+    def test_errors(self) -> None:
+        path = nominal(2)
+        with pytest.raises(InputError, match=r"lowering operator of shape \(2, 2\), got \(3, 3\)"):
+            carrier_filter_function([path], ladder(3)[0], np.zeros(1))
+        with pytest.raises(InputError, match=r"one number of levels, got \[\]"):
+            carrier_filter_function([], ladder(2)[0], np.zeros(1))
+        with pytest.raises(InputError, match=r"one number of levels, got \[\(2, 2\), \(3, 3\)\]"):
+            carrier_filter_function([path, nominal(3)], ladder(2)[0], np.zeros(1))
 
 
 class TestFourierIntegral:
