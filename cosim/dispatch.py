@@ -63,8 +63,14 @@ def save(result: GateResult, path: str | os.PathLike[str]) -> int:
     Raises
     ------
     ArchiveError
-        If the file is something else or cannot be written; what was there is untouched.
+        If the file is something else, holds a sweep, or cannot be written; what was there is
+        untouched.
     """
+    if os.path.exists(path) and archive.read_plan(path, {}) is not None:
+        raise ArchiveError(
+            f"{os.fspath(path)} holds a sweep, whose runs are those of its plan",
+            hint="save the result in another archive",
+        )
     record = result.run
     info = archive.RunInfo(
         status="done", start_time=record.started, wall_time=sum(record.wall_times.values())

@@ -2,7 +2,6 @@
 
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
-from types import MappingProxyType
 from typing import Any
 
 import numpy as np
@@ -15,8 +14,6 @@ from cosim.archive.layout import DONE, TEXTS, RunInfo, notes_of, run_group_name
 from cosim.archive.series import Series, Stack, stacks_of, write_stack
 from cosim.archive.table import CORE, Cell, Column, write_table
 from cosim.errors import ArchiveError
-
-_NO_SERIES: Mapping[str, Series] = MappingProxyType({})
 
 
 @dataclass(frozen=True, slots=True)
@@ -51,7 +48,7 @@ class Row:
     info: RunInfo = DONE
     cells: Mapping[str, Cell] = field(default_factory=dict)
     units: Mapping[str, str] = field(default_factory=dict)
-    series: Mapping[str, Series] = field(default_factory=lambda: _NO_SERIES)
+    series: Mapping[str, Series] = field(default_factory=dict)
     run: object | None = None
 
     def __post_init__(self) -> None:

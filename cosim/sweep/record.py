@@ -50,6 +50,8 @@ class SweepRecord:
         The testbench as TOML, complete.
     source, folder : str
         Path of the testbench, and the folder that its paths are relative to.
+    circuit : str
+        The deck's text when it was made in Python; else empty.
     deck_files : tuple of DeckFile
         Every file of the decks as its author wrote it; without its text where it is confidential.
     versions : dict of str
@@ -68,6 +70,7 @@ class SweepRecord:
     testbench: str
     source: str
     folder: str
+    circuit: str
     deck_files: tuple[DeckFile, ...]
     versions: dict[str, str]
 
@@ -138,6 +141,7 @@ def make_sweep_record(plan: SweepPlan, bench: Testbench) -> SweepRecord:
         testbench=bench.to_toml(),
         source=os.path.abspath(bench.source) if bench.source else "",
         folder=os.path.abspath(bench.folder),
+        circuit=bench.circuit,
         deck_files=_deck_files(plan),
         versions=package_versions(),
     )

@@ -106,7 +106,7 @@ def archived_plan(
         bench = load_testbench(testbench)
     else:
         bench = make_testbench(tomllib.loads(record.testbench), folder=record.folder)
-        bench = replace(bench, source=record.source)
+        bench = replace(bench, source=record.source, circuit=record.circuit)
     plan = make_sweep(bench)
     check_same_plan(record, make_sweep_record(plan, bench), os.fspath(path))
     return plan

@@ -88,7 +88,7 @@ def test_some_columns_of_the_table(swept: Path) -> None:
 def test_a_run_of_which_the_row_alone_is_kept(swept: Path) -> None:
     with pytest.raises(ArchiveError, match="of run 3 only its row") as caught:
         read(swept, TYPES, 3)
-    assert "qcosim rerun 3" in caught.value.hint
+    assert f"qcosim rerun {swept} 3" in caught.value.hint
     with pytest.raises(ArchiveError, match="no run 5"):
         read_series(swept, 5)
 
