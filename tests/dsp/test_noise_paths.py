@@ -2,6 +2,7 @@
 
 import itertools
 import math
+import os
 import subprocess
 import sys
 
@@ -198,16 +199,23 @@ class TestSeeds:
             # 200 products of independent numbers: 1/sqrt(200), five of these.
             assert abs(np.corrcoef(one, other)[0, 1]) < 5 / math.sqrt(200)
 
-    def test_another_process_draws_the_same(self) -> None:
+    @pytest.mark.parametrize("threads", ["1", "2"])
+    def test_another_process_draws_the_same(self, threads: str) -> None:
+        """777 samples: a product of matrices of that size by a BLAS tells its threads apart."""
         program = (
             "from cosim.dsp.noise.density import *; from cosim.dsp.noise.paths import *;"
             "s = SpectralDensity('V', (PowerLaw(1.0, 1.0, 1.0, 1e-2),));"
-            "print(sample_paths(plan_paths(s, 300, 0.5e-9), 7, 21, 2).tobytes().hex())"
+            "print(sample_paths(plan_paths(s, 777, 0.5e-9), 7, 21, 2).tobytes().hex())"
         )
         done = subprocess.run(
-            [sys.executable, "-c", program], capture_output=True, text=True, check=True, timeout=60
+            [sys.executable, "-c", program],
+            capture_output=True,
+            text=True,
+            check=True,
+            timeout=60,
+            env={**os.environ, "OPENBLAS_NUM_THREADS": threads},
         )
-        here = sample_paths(plan_paths(FLICKER, 300, DT), 7, 21, 2).tobytes().hex()
+        here = sample_paths(plan_paths(FLICKER, 777, DT), 7, 21, 2).tobytes().hex()
         assert done.stdout.strip() == here
 
 

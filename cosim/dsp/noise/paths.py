@@ -27,8 +27,8 @@ _STEP_TURNS = 8.0
 _SLOW_RECORDS = 10.0
 # The period of the transform is doubled up to this many records.
 _LONGEST_PERIOD = 16
-# Samples are made in blocks of this size, at fixed places, because the last bit of a product of
-# matrices depends on their size.
+# Samples are made in blocks of this size, at fixed places, because the last bit of transforms that
+# are made together may depend on their number.
 _BLOCK = 16
 
 
@@ -241,7 +241,8 @@ def sample_paths(
                 for number in range(begin, begin + _BLOCK)
             ]
         )
-        block = (draws[:, 1 : 1 + size.size] * size) @ waves
+        # Not by the BLAS, whose last bit depends on its number of threads.
+        block = np.einsum("bl,ln->bn", draws[:, 1 : 1 + size.size] * size, waves)
         if bins:
             pair = draws[:, 1 + size.size :].reshape(_BLOCK, 2, bins) * scale
             spectrum = pair[:, 0] - 1j * pair[:, 1]
