@@ -109,6 +109,15 @@ class TestCovariance:
         assert np.abs(got - wanted).max() < 5 * 0.01 * wanted[0, 0]
         assert np.abs(paths.mean(axis=0)).max() < 5 * math.sqrt(wanted[0, 0] / 20_000)
 
+    def test_power_at_half_the_sampling_rate(self) -> None:
+        plan = plan_paths(SpectralDensity("V", (PowerLaw(1.0, low=NYQUIST * (1 - 1e-4)),)), 200, DT)
+        assert plan.variance == pytest.approx(1e-4 * NYQUIST, rel=1e-6)
+        paths = sample_paths(plan, 6, 0, 4000)
+        # One line, whose samples alternate and have one Gaussian amplitude: sqrt(2/4000), four.
+        assert np.abs(paths[:, 1:] + paths[:, :-1]).max() < 1e-9 * np.abs(paths).max()
+        got = np.mean(paths[:, 0] ** 2) / plan.variance
+        assert got == pytest.approx(1.0, abs=4 * math.sqrt(2 / 4000))
+
     def test_gaussian(self) -> None:
         plan = plan_paths(FLICKER, 40, DT)
         end = sample_paths(plan, 8, 0, 20_000)[:, -1] / math.sqrt(plan.variance)
