@@ -113,6 +113,10 @@ RUSS = (
     f"97, 085421 (2018), {MEMORY}"
 )
 ROTATING_FRAME = "algebra of the rotating frame, |0> the ground state, computed from the formula"
+SCHOTTKY = (
+    'W. Schottky, "Ueber spontane Stromschwankungen in verschiedenen Elektrizitaetsleitern", Ann. '
+    f"Phys. 362, 541 (1918), 2 q I, {MEMORY}"
+)
 SCHNEIDER = (
     'A. Schneider et al., "Local sensing with the multilevel ac Stark effect", Phys. Rev. A 97, '
     f"062334 (2018), second-order perturbation theory, {MEMORY}"
@@ -124,6 +128,10 @@ STRAUCH = (
 THEIS = (
     'L. S. Theis et al., "Counteracting systems of diabaticities using DRAG controls: the status '
     f'after 10 years", EPL 123, 60001 (2018), second-order perturbation theory, {MEMORY}'
+)
+VAN_DER_ZIEL = (
+    'A. van der Ziel, "Thermal noise in field-effect transistors", Proc. IRE 50, 1808 (1962), '
+    f"4 k T (2/3) gm of a long channel in saturation, {MEMORY}"
 )
 WALLMAN = (
     'J. Wallman, C. Granade, R. Harper, S. T. Flammia, "Estimating the coherence of noise", New J. '

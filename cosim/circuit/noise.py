@@ -2,7 +2,8 @@
 
 import math
 import re
-from dataclasses import dataclass, field
+from collections.abc import Mapping
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 
@@ -11,7 +12,9 @@ from cosim.circuit.cards import masked, number_text
 from cosim.circuit.client import Answer
 from cosim.circuit.deck import Deck, PreparedDeck, shortened
 from cosim.circuit.faults import LOG_SHOWN, findings
+from cosim.circuit.inventory import device_names
 from cosim.circuit.lookup import find_device, find_node
+from cosim.circuit.noise_parts import device_temperature, part_vectors
 from cosim.circuit.preparation import Analysis, assembled, own_options
 from cosim.circuit.probe import parse_probe
 from cosim.circuit.simulator import send
@@ -27,6 +30,7 @@ _LEAST_GAIN = 1e-20
 _ROUNDING = 1e-6  # of a frequency, or of a step: ngspice multiplies its way up the grid
 # Measured: a point that passes the stop by less than reltol, or 1e-4, still counts for ngspice.
 _MOST_POINTS = 5000  # per decade; their distance is four times that
+_SUM = 1e-9  # of the density: what the parts may lack; ngspice adds up the same doubles
 
 
 @dataclass(frozen=True, slots=True)
@@ -58,6 +62,8 @@ class NoiseRequest:
         Wall-clock limit of the run in s.
     memory_limit : int
         Limit of the simulator's address space in bytes.
+    by_device : bool
+        Whether the density comes by device and kind of contribution too.
 
     Raises
     ------
@@ -74,6 +80,7 @@ class NoiseRequest:
     seed: int = 1
     time_limit: float = field(default=600.0, metadata={"unit": "s"})
     memory_limit: int = field(default=8 * 2**30, metadata={"unit": "byte"})
+    by_device: bool = False
 
     def __post_init__(self) -> None:
         names = ["start_frequency", "stop_frequency", "time_limit", "memory_limit"]
@@ -132,6 +139,12 @@ class NoiseResult:
         The lines exactly as sent.
     simulator_version : str
         For example "ngspice-39".
+    by_device : dict of str to dict of str to ndarray, each of shape (n,)
+        Device as ngspice names it ("r1", "m.x1.m1") -> kind of contribution ("thermal", "channel",
+        "series", "shot", "flicker") -> density of the output voltage in V^2/Hz; all of them add up
+        to `output_density`. Empty unless it was asked for.
+    device_temperature : float or None
+        At which the devices were simulated, in K; None where the parts were not asked for.
     """
 
     frequency: FloatArray = field(metadata={"unit": "Hz", "axes": ("frequency",)})
@@ -142,6 +155,10 @@ class NoiseResult:
     warnings: tuple[str, ...]
     deck: tuple[str, ...]
     simulator_version: str
+    by_device: Mapping[str, Mapping[str, FloatArray]] = field(
+        default_factory=dict, metadata={"unit": "V^2/Hz", "axes": ("frequency",)}
+    )
+    device_temperature: float | None = field(default=None, metadata={"unit": "K"})
 
 
 def simulate_noise(deck: Deck, request: NoiseRequest) -> NoiseResult:
@@ -179,7 +196,14 @@ def simulate_noise(deck: Deck, request: NoiseRequest) -> NoiseResult:
     """
     prepared = prepare_noise(deck, request)
     answer, version, models = send(prepared, request.time_limit, request.memory_limit)
-    return judge_noise(prepared, request, answer, version, models)
+    result = judge_noise(prepared, request, answer, version, models)
+    if not request.by_device:
+        return result
+    return replace(
+        result,
+        by_device=_by_device(deck, answer, result),
+        device_temperature=device_temperature(deck, request.temperature),
+    )
 
 
 def prepare_noise(deck: Deck, request: NoiseRequest) -> PreparedDeck:
@@ -211,7 +235,11 @@ def prepare_noise(deck: Deck, request: NoiseRequest) -> PreparedDeck:
         f".noise {_output(deck, request.output)} {_source(deck, request.source)} "
         f"dec {request.points_per_decade:d} {first} {last}"
     )
-    analysis = Analysis("noise", (card,), {name: name for name in _VECTORS}, "noise", "frequency")
+    keys = {name: name for name in _VECTORS}
+    if request.by_device:
+        card += " 1"  # Points per summary, without which there are no vectors of devices.
+        keys |= {name: name for name in part_vectors(device_names(deck))}
+    analysis = Analysis("noise", (card,), keys, "noise", "frequency")
     return assembled(deck, analysis, own, request.temperature, request.seed)
 
 
@@ -313,3 +341,26 @@ def judge_noise(
         deck=prepared.lines,
         simulator_version=version,
     )
+
+
+def _by_device(deck: Deck, answer: Answer, result: NoiseResult) -> dict[str, dict[str, FloatArray]]:
+    """Collect the densities of each device, and see that they are the whole."""
+    found: dict[str, dict[str, FloatArray]] = {}
+    total = np.zeros_like(result.output_density)
+    for vector, (device, part) in part_vectors(device_names(deck)).items():
+        density = answer.vectors.get(vector)
+        if density is not None:
+            parts = found.setdefault(device, {})
+            parts[part] = parts.get(part, 0.0) + density
+            total += density
+    if not np.allclose(total, result.output_density, _SUM, 0.0):
+        asked = part_vectors(device_names(deck))
+        assert answer.done is not None
+        names = [name for name in answer.done["available"] if name.startswith("onoise")]
+        unknown = [name for name in names if name not in asked and "total" not in name]
+        raise SimulatorCrashError(
+            "the noise of the devices does not add up to that of the output; ngspice also gave "
+            f"{shortened(', '.join(unknown))}",
+            log=result.log[-LOG_SHOWN:],
+        )
+    return found

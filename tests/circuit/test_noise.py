@@ -80,14 +80,16 @@ class TestJohnson:
         for card, kelvin in (("", 300.15), (".temp 126.85", 400.0)):
             result = analyse(RESISTOR.format(r="1k") + f"\n{card}")
             wanted = 4 * constants.k * kelvin * 1e3
-            assert result.output_density == pytest.approx(wanted, rel=BOLTZMANN)
+            assert result.output_density == pytest.approx(wanted, rel=BOLTZMANN, abs=0.0)
 
     def test_total_is_the_integral_over_the_grid(self) -> None:
         result = analyse(RESISTOR.format(r="1k"), start=10.0, stop=2e3, points=1)
         # One point per decade: the grid ends at 1 kHz.
-        assert result.frequency == pytest.approx([10.0, 100.0, 1000.0], rel=1e-9)  # rounding
+        assert result.frequency == pytest.approx(
+            [10.0, 100.0, 1000.0], rel=1e-9, abs=0.0
+        )  # rounding
         wanted = math.sqrt(4 * constants.k * 300.15 * 1e3 * 990.0)
-        assert result.total_output == pytest.approx(wanted, rel=BOLTZMANN)
+        assert result.total_output == pytest.approx(wanted, rel=BOLTZMANN, abs=0.0)
 
 
 class TestDivider:
@@ -109,7 +111,7 @@ class TestDivider:
     def test_input_of_a_current_source(self) -> None:
         result = analyse("i1 0 3 dc 1u ac 1\nr1 3 0 1k", output="v(3)", source="I1")
         wanted = 4 * constants.k * 300.15 / 1e3  # A^2/Hz
-        assert result.input_density == pytest.approx(wanted, rel=BOLTZMANN)
+        assert result.input_density == pytest.approx(wanted, rel=BOLTZMANN, abs=0.0)
 
     def test_a_difference_inside_of_a_subcircuit(self) -> None:
         body = (
@@ -120,13 +122,13 @@ class TestDivider:
         wanted = 4 * constants.k * 300.15 * 600.0
         for output in ("v(x1.m,out)", "V(out) - V(X1.M)", "v(x1.m) - v(x1.b)"):
             result = analyse(body, output=output, source="x1.v1")
-            assert result.output_density == pytest.approx(wanted, rel=BOLTZMANN)
+            assert result.output_density == pytest.approx(wanted, rel=BOLTZMANN, abs=0.0)
 
     def test_no_gain_is_an_infinite_input_density(self) -> None:
         result = analyse("v1 in 0 dc 0 ac 1\nr1 in 0 1k\nr2 out 0 1k")
         assert np.isinf(result.input_density).all()
         wanted = 4 * constants.k * 300.15 * 1e3
-        assert result.output_density == pytest.approx(wanted, rel=BOLTZMANN)
+        assert result.output_density == pytest.approx(wanted, rel=BOLTZMANN, abs=0.0)
 
 
 class TestCapacitor:
@@ -154,7 +156,7 @@ class TestCapacitor:
             0.5, result.output_density[::-1] / result.output_density[0], result.frequency[::-1]
         )
         # Linear interpolation between points 0.23 % apart, h^2/8.
-        assert half == pytest.approx(corner, rel=1e-6)
+        assert half == pytest.approx(corner, rel=1e-6, abs=0.0)
 
 
 class TestFaults:
@@ -277,7 +279,7 @@ def test_the_grid_ends_where_the_request_says() -> None:
         stop = 1e3 * (1 - short)
         result = analyse(RESISTOR.format(r="1k"), stop=stop, points=10)
         wanted = 1000.0 if short < 1e-7 else 10**2.9
-        assert result.frequency[-1] == pytest.approx(wanted, rel=1e-9)  # rounding
+        assert result.frequency[-1] == pytest.approx(wanted, rel=1e-9, abs=0.0)  # rounding
 
 
 def test_the_analyses_of_the_deck_stay_out() -> None:
@@ -294,7 +296,7 @@ def test_the_analyses_of_the_deck_stay_out() -> None:
     result = simulate_noise(deck, request)
     assert any(".noise left out" in warning for warning in result.warnings)
     wanted = 4 * constants.k * 300.15 * 1e3
-    assert result.output_density == pytest.approx(wanted, rel=BOLTZMANN)
+    assert result.output_density == pytest.approx(wanted, rel=BOLTZMANN, abs=0.0)
 
 
 def test_a_transient_after_a_noise_run_is_the_same() -> None:
@@ -307,4 +309,4 @@ def test_a_transient_after_a_noise_run_is_the_same() -> None:
     assert np.array_equal(after.vectors["v(out)"], before.vectors["v(out)"])
     assert np.array_equal(again.output_density, quiet.output_density)
     # 1 - exp(-t/tau) at t = tau, which the edge of 1 ps moves by 5e-4 tau.
-    assert after.vectors["v(out)"][-1] == pytest.approx(1 - math.exp(-1), rel=1e-3)
+    assert after.vectors["v(out)"][-1] == pytest.approx(1 - math.exp(-1), rel=1e-3, abs=0.0)

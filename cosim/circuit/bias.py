@@ -1,0 +1,171 @@
+"""The clean run of a deck that saves the bias of everything that makes noise."""
+
+from collections.abc import Sequence
+from dataclasses import dataclass, field, replace
+
+import numpy as np
+
+from cosim.circuit.analysis import TransientRequest, TransientResult
+from cosim.circuit.deck import Deck, unique
+from cosim.circuit.flicker import card_flicker
+from cosim.circuit.inventory import Inventory, NoisyDevice, noisy_devices
+from cosim.circuit.noise_parts import device_temperature
+from cosim.circuit.probe import Probe, parse_probe
+from cosim.circuit.simulator import simulate
+from cosim.waveform import FloatArray
+
+# Measured: the currents of junctions that ngspice saves hold those of their capacitances, which
+# make no noise; "capcur", "cqbe" and "cqbc" give these. All count the multiplier m; the "r" of a
+# resistor counts neither that nor a temperature coefficient.
+_SAVED = {
+    "mos": ("gm", "gds", "id"),
+    "jfet": ("gm", "gds", "id"),
+    "diode": ("id", "capcur"),
+    "bipolar": ("ic", "ib", "cqbe", "cqbc"),
+    "resistor": ("i", "r", "m"),
+}
+_FOR_FLICKER = ("w", "l", "m")  # of a MOS transistor
+_LEAST_VOLTAGE = 1e-6  # V; over less a resistor's current is no measure of its conductance.
+
+
+@dataclass(frozen=True, slots=True)
+class CleanRun:
+    """A run without noise, and what is known of each device that makes noise.
+
+    Parameters
+    ----------
+    deck : Deck
+        The deck.
+    request : TransientRequest
+        The request of the run.
+    probes : tuple of Probe
+        What is looked at.
+    result : TransientResult
+        Times of shape (n,) in s from 0 on, and all vectors.
+    inventory : Inventory
+        The devices, and what is left out.
+    device_temperature : float
+        Temperature of the devices in K.
+    """
+
+    deck: Deck
+    request: TransientRequest
+    probes: tuple[Probe, ...]
+    result: TransientResult
+    inventory: Inventory
+    device_temperature: float = field(metadata={"unit": "K"})
+
+    def vector(self, device: NoisyDevice, name: str) -> FloatArray:
+        """Give a quantity of a device, shape (n,).
+
+        Parameters
+        ----------
+        device : NoisyDevice
+            One of the inventory's.
+        name : str
+            ngspice's name of the quantity: "gm" in S, "id" in A and the like.
+
+        Returns
+        -------
+        ndarray, shape (n,)
+        """
+        return self.result.vectors[f"@{device.name}[{name}]"]
+
+
+def clean_run(deck: Deck, request: TransientRequest, probes: Sequence[str]) -> CleanRun:
+    """Run a deck without noise and save the bias of every device that makes some.
+
+    Measured on a modulator of 52 MOSFETs, all that is saved of its 64 devices adds a fifth to the
+    run's time.
+
+    Parameters
+    ----------
+    deck : Deck
+        The deck, with its terminations and parameters.
+    request : TransientRequest
+        Times in s and the rest; its run is saved from t = 0 on, whatever `start` says.
+    probes : sequence of str
+        As `parse_probe` reads them, for example "v(out_p) - v(out_n)".
+
+    Returns
+    -------
+    CleanRun
+
+    Raises
+    ------
+    DeckError
+        Or one of its kinds.
+    ProbeError
+        If a probe cannot be read.
+    InputError
+        If the device temperature cannot be told.
+    SimulationError
+        Or one of its kinds.
+    MissingDependencyError
+        If ngspice or PySpice is not installed.
+    """
+    kelvin = device_temperature(deck, request.temperature)
+    inventory = noisy_devices(deck)
+    parsed = tuple(parse_probe(text) for text in probes)
+    saves = [*request.saves, *(name for probe in parsed for _, name in probe.terms)]
+    for device in inventory.devices:
+        names = _SAVED[device.kind]
+        if device.kind == "mos" and card_flicker(deck, device) is not None:
+            names += _FOR_FLICKER
+        saves += [f"@{device.name}[{name}]" for name in names]
+        if device.kind == "resistor":
+            saves += [f"v({node})" for node in device.nodes if node != "0"]
+    request = replace(request, start=0.0, saves=unique(save.strip().lower() for save in saves))
+    return CleanRun(deck, request, parsed, simulate(deck, request), inventory, kelvin)
+
+
+def conductance(clean: CleanRun, device: NoisyDevice) -> float:
+    """Give the conductance of a resistor as ngspice has it.
+
+    Parameters
+    ----------
+    clean : CleanRun
+        The clean run.
+    device : NoisyDevice
+        A resistor.
+
+    Returns
+    -------
+    float
+        In S: its current over its voltage where that is greatest, with all temperature
+        coefficients; where no voltage stands over it, by its resistance and multiplier alone.
+    """
+    vectors = clean.result.vectors
+    high, low = (
+        vectors[f"v({node})"] if node != "0" else np.zeros_like(clean.result.time)
+        for node in device.nodes
+    )
+    voltage = high - low
+    place = int(np.argmax(np.abs(voltage)))
+    if abs(voltage[place]) > _LEAST_VOLTAGE:
+        return float(clean.vector(device, "i")[place] / voltage[place])
+    return float(clean.vector(device, "m")[-1] / clean.vector(device, "r")[-1])
+
+
+def junction_currents(clean: CleanRun, device: NoisyDevice) -> dict[str, FloatArray]:
+    """Give the currents of a diode or bipolar transistor that cross its junctions.
+
+    Parameters
+    ----------
+    clean : CleanRun
+        The clean run.
+    device : NoisyDevice
+        A diode or bipolar transistor.
+
+    Returns
+    -------
+    dict of str to ndarray, each of shape (n,)
+        "id", or "ic" and "ib", in A, without the currents of capacitances.
+    """
+    if device.kind == "diode":
+        return {"id": clean.vector(device, "id") - clean.vector(device, "capcur")}
+    emitter, collector = (clean.vector(device, name) for name in ("cqbe", "cqbc"))
+    return {
+        "ic": clean.vector(device, "ic") + collector,
+        "ib": clean.vector(device, "ib") - emitter - collector,
+    }
