@@ -1,0 +1,179 @@
+"""Where dissipation acts in a batch: panels of Simpson's rule over the slices of a row."""
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+from scipy.linalg import expm
+
+from cosim.quantum.batch_drive import BatchDrive
+from cosim.quantum.batch_kernel import row_sizes
+from cosim.quantum.kernel import IndexArray
+from cosim.quantum.qubit import Qubit
+from cosim.quantum.steps import dissipator_rates
+from cosim.waveform import FloatArray
+
+# What each of the panels' two errors may cost in the channel of a row, by estimate, and the
+# longest half panel in radians, beyond which the estimate does not hold.
+PANEL_ERROR = 2e-8
+PANEL_TURN = 0.5
+
+
+@dataclass(frozen=True, slots=True)
+class Panels:
+    """Dissipation between the parts of slices, as `batch_kernel.channel_rows` takes it.
+
+    Parameters
+    ----------
+    parts : int
+        Equal parts into which each slice is cut.
+    kick : ndarray of int64, shape (slices parts + 1,)
+        Table that acts before each part and after the last, or -1.
+    tables : ndarray, shape (kinds, levels, levels, levels)
+        rho_ij grows by sum_m tables[., i, j, m] rho_m,m+j-i.
+    """
+
+    parts: int
+    kick: IndexArray
+    tables: FloatArray
+
+
+def panel_exponents(qubit: Qubit, drive: BatchDrive, rows: IndexArray) -> IndexArray:
+    """Choose for each row how long half a panel may be.
+
+    Parameters
+    ----------
+    qubit : Qubit
+        With loss.
+    drive : BatchDrive
+    rows : ndarray of int64, shape (m,)
+
+    Returns
+    -------
+    ndarray of int64, shape (m,)
+        e: half a panel is 2**e units, a unit being a slice of order 1 or a step of order 4. For
+        order 4 never negative: within a step the frame is known in second order only.
+
+    Notes
+    -----
+    Half panels s of Simpson's rule leave decay s**4/180 times the change of the integrand's third
+    derivative, of the order of turning**3 as the drive goes on. What turns fast, by anharmonicity
+    and detuning, leaves the ends of the integral alone, as far as the drive brings no more. Jumps
+    between slices add decay s**2 jumps/12, jumps being the root of the sum of their squares as
+    for noise; within a slice there are none. These are estimates; halving the steps is the proof.
+    """
+    rate, detuning = drive.pick(rows)
+    largest, jumps = row_sizes(rate)
+    unit = drive.step if drive.order == 1 else 2 * drive.step
+    decay = float(dissipator_rates(qubit)[0].max())
+    slow = math.sqrt(qubit.levels - 1) * largest
+    fast = 2 * math.pi * abs(qubit.anharmonicity) * (qubit.levels - 2)
+    turning = slow + fast + np.abs(detuning).max(axis=1)
+    with np.errstate(divide="ignore"):
+        ends = 90 * PANEL_ERROR / (decay * turning**3 * (1 + slow * drive.duration))
+        smooth = np.minimum(ends**0.25, PANEL_TURN / turning)
+        rough = np.sqrt(12 * PANEL_ERROR / (decay * jumps))
+    # Nothing is gained by panels longer than the evolution.
+    longest = math.log2(max(1.0, drive.duration / unit / 2))
+    smooth = np.minimum(np.log2(smooth / unit), longest)
+    rough = np.maximum(np.minimum(np.log2(rough / unit), longest), -1)
+    exponents = np.floor(np.minimum(smooth, rough)).astype(np.int64)
+    if drive.order == 4:
+        exponents = np.maximum(exponents, 0)
+    return np.broadcast_to(exponents, rows.shape)
+
+
+def lay_panels(qubit: Qubit, drive: BatchDrive, exponent: int, level: int) -> Panels:
+    """Lay the panels over the slices and make the tables of dissipation.
+
+    Parameters
+    ----------
+    qubit : Qubit
+    drive : BatchDrive
+    exponent : int
+        From `panel_exponents`, less one for each halving.
+    level : int
+        Halvings of the steps; they cut the steps of order 4 themselves.
+
+    Returns
+    -------
+    Panels
+    """
+    if drive.order == 1:
+        parts = 2 ** max(0, -exponent)
+        if drive.samples * parts == 1:
+            parts = 2  # Simpson's rule needs two halves.
+        units, stride, unit = drive.samples * parts, 1, drive.step / parts
+        half = max(1, 2**exponent)
+    else:
+        parts, stride = 1, 2
+        units = (drive.samples - 1) // 2 * 2**level
+        unit = 2 * drive.step / 2**level
+        half = 2 ** (exponent + level)
+    weights = simpson_weights(units, int(half))
+    times, kinds = np.unique(weights, return_inverse=True)
+    kick = np.full(units * stride + 1, -1, dtype=np.int64)
+    # The first of the different weights is zero where panels span several units.
+    shift = 1 if times[0] == 0 else 0
+    kick[::stride] = kinds.reshape(-1) - shift
+    return Panels(parts, kick, _tables(qubit, unit * times[shift:]))
+
+
+def simpson_weights(count: int, half: int) -> FloatArray:
+    """Give the weights of the composite Simpson rule on an even grid.
+
+    Parameters
+    ----------
+    count : int
+        Number of intervals, at least 2.
+    half : int
+        Intervals in half a panel. What is left at the end is done with single intervals, an odd
+        number of them with the three-eighths rule.
+
+    Returns
+    -------
+    ndarray, shape (count + 1,)
+        Non-negative, in units of an interval, with the sum `count`.
+    """
+    half = min(half, count // 2)
+    panels = count // (2 * half)
+    if count - 2 * half * panels == 1:
+        panels -= 1
+    weights = np.zeros(count + 1)
+    end = 2 * half * panels
+    _add_panels(weights[: end + 1 : half], half)
+    last = count - 3 if (count - end) % 2 else count
+    _add_panels(weights[end : last + 1], 1)
+    if last < count:
+        weights[last:] += np.array([3, 9, 9, 3]) / 8
+    return weights
+
+
+def _add_panels(weights: FloatArray, half: int) -> None:
+    """Add the weights of adjoining panels, in place; a single point is no panel."""
+    weights[:-2:2] += half / 3
+    weights[1:-1:2] += 4 * half / 3
+    weights[2::2] += half / 3
+
+
+def _tables(qubit: Qubit, times: FloatArray) -> FloatArray:
+    """Give exp(D time) - 1 of the dissipator for some times, diagonal by diagonal of rho."""
+    decay, down, up = dissipator_rates(qubit)
+    d = qubit.levels
+    tables = np.zeros((times.size, d, d, d))
+    for offset in range(-d + 1, d):
+        # The elements rho_m,m+offset form a chain that the dissipator couples.
+        m = np.arange(max(0, -offset), d - max(0, offset))
+        chain = np.diag(-decay[m, m + offset])
+        chain += np.diag(down[m, m + offset][:-1], 1) + np.diag(up[m, m + offset][1:], -1)
+        for kind, time in enumerate(times):
+            tables[kind, m[:, None], (m + offset)[:, None], m[None, :]] = _grown(chain * time)
+    return tables
+
+
+def _grown(matrix: FloatArray) -> FloatArray:
+    """Give exp(matrix) - 1 without loss of digits where the matrix is small."""
+    n = matrix.shape[0]
+    # The upper right block of this exponential is (exp(matrix) - 1)/matrix.
+    augmented = np.block([[matrix, np.eye(n)], [np.zeros((n, 2 * n))]])
+    return np.asarray(matrix @ expm(augmented)[:n, n:])
