@@ -40,6 +40,8 @@ class Pulse:
         Window in s.
     phase : float
         Phase of the drive in rad that is taken out of the channel.
+    before : ndarray of complex, shape (levels^2, levels^2), or None
+        A channel before it: what noise does.
     """
 
     qubit: Qubit | OperatorSystem
@@ -47,6 +49,7 @@ class Pulse:
     start: float
     stop: float
     phase: float = 0.0
+    before: ComplexArray | None = None
 
     def channel(self, *, scale: float = 1.0, detuning: float = 0.0) -> ComplexArray:
         """Evolve, with the drive scaled and the carrier offset.
@@ -78,13 +81,14 @@ class Pulse:
             return evolve_operators(self.qubit, self.drive, self.start, self.stop, scale=scale)
         qubit = replace(self.qubit, frequency=self.qubit.frequency - detuning)
         channel = evolve(qubit, self.drive, self.start, self.stop, scale=scale)
-        return phase_frame(channel, self.phase, -self.phase) if self.phase else channel
+        channel = phase_frame(channel, self.phase, -self.phase) if self.phase else channel
+        return channel if self.before is None else channel @ self.before
 
     def lossless(self) -> "Pulse":
-        """The same pulse on the same qubit without relaxation and dephasing."""
+        """The same pulse on the same qubit without relaxation, dephasing and noise."""
         if isinstance(self.qubit, OperatorSystem):
             return replace(self, qubit=self.qubit.without_collapse())
-        return replace(self, qubit=replace(self.qubit, t1=math.inf, t2=math.inf))
+        return replace(self, qubit=replace(self.qubit, t1=math.inf, t2=math.inf), before=None)
 
 
 @dataclass(frozen=True, slots=True)

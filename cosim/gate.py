@@ -2,7 +2,7 @@
 
 import math
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 from cosim.adjust import Calibration, Pulse, calibrate_pulse
 from cosim.capture import Capture, Plan, capture_probe, make_plan
@@ -22,6 +22,8 @@ from cosim.guards import (
 )
 from cosim.imported import every_second, import_waveform
 from cosim.line import through_line
+from cosim.neighbours import idle_effect, spectator_effects, spectator_warnings
+from cosim.noise_effect import NoisyGate, noisy_gate
 from cosim.quantum.channel import check_channel, nearest_unitary, pauli_transfer_matrix
 from cosim.quantum.fidelity import (
     Rotation,
@@ -40,8 +42,9 @@ from cosim.quantum.targets import target_rotation
 from cosim.qubit_drive import QubitDrive, couple
 from cosim.record import Clock, make_record
 from cosim.result import Channel, GateResult
+from cosim.side_results import SpectatorEffect
 from cosim.testbench import Testbench
-from cosim.waveform import ComplexArray
+from cosim.waveform import ComplexArray, Envelope
 
 Progress = Callable[[float], None]
 
@@ -155,25 +158,37 @@ def run_gate(
     drive = couple(bench, shot, system)
     pulse = drive.pulse(shot.waveform)
     clock.lap("interpolation")
-    channel = pulse.channel()
+    clean = channel = pulse.channel()
     check_channel(channel)
     clock.lap("evolution")
     envelope = demodulate(shot.waveform, drive.carrier_frequency)
     measures = measure_pulse(shot.waveform, drive.carrier_frequency, envelope=envelope)
     clock.lap("demodulation")
     twin = drive.rotating_wave_twin(envelope)
-    rotating_wave_error = math.nan if twin is None else channel_distance(channel, twin)
+    rotating_wave_error = math.nan if twin is None else channel_distance(clean, twin)
     clock.lap("rotating_wave_twin")
+    noisy = _noise(bench, drive, envelope)
+    if noisy is not None:
+        pulse = replace(pulse, before=noisy.correction)
+        channel = clean @ noisy.correction
+    clock.lap("noise")
     free = free_frame(channel, target.unitary)
     rotation = _unfolded(rotation_of(nearest_unitary(channel)), target.rotation)
     calibration = _calibrate(bench, drive, pulse, free, channel, rotation.angle, target)
     clock.lap("calibration")
     second, carrier = _second_run(bench, plan, drive, shot, progress, shots, clock)
+    if second is not None:
+        second = replace(second, before=pulse.before)
     views = Views(channel, free, calibration, target.unitary)
     as_simulated, in_free_frame, calibrated = views.fidelities(second)
     floor = views.floor(second)
     clock.lap("fidelities")
-    reference = _reference_error(bench, pulse, channel)
+    spectators = spectator_effects(bench.spectator, drive, pulse)
+    idle = None
+    if bench.gate.idle is not None:
+        idle = idle_effect(bench.gate.idle, drive, pulse, shot.waveform, bench.noise)
+    clock.lap("neighbours")
+    reference = _reference_error(bench, pulse, clean)
     clock.lap("reference")
     warnings = (
         *shot.notices,
@@ -185,6 +200,8 @@ def run_gate(
         *scale_warnings(calibrated),
         *twin_warnings(drive.carrier_frequency, drive.qubit.frequency, rotating_wave_error),
         *floor_warnings(calibrated, floor),
+        *(() if noisy is None else noisy.warnings),
+        *spectator_warnings(spectators, drive),
     )
     clock.lap("checks")
     return GateResult(
@@ -212,6 +229,25 @@ def run_gate(
         extra=shot.extra,
         warnings=tuple(dict.fromkeys(warnings)),
         run=make_record(bench, shot, drive.carrier_frequency, clock),
+        noise=None if noisy is None else noisy.effect,
+        spectators=spectators,
+        register_infidelity=_register(in_free_frame.infidelity, spectators),
+        idle=idle,
+    )
+
+
+def _register(own: float, spectators: tuple[SpectatorEffect, ...]) -> float:
+    if not spectators:
+        return math.nan
+    return own + sum(item.free_frame_infidelity for item in spectators)
+
+
+def _noise(bench: Testbench, drive: QubitDrive, envelope: Envelope) -> NoisyGate | None:
+    if not bench.noise:
+        return None
+    accuracy = bench.accuracy
+    return noisy_gate(
+        drive, envelope, bench.noise, samples=accuracy.noise_samples, seed=accuracy.noise_seed
     )
 
 
@@ -246,7 +282,7 @@ def _calibrate(
     with_amplitude = "amplitude" in adjusted and target.rotation.angle != 0.0
     if not with_amplitude and "detuning" not in adjusted:
         return Calibration(1.0, 0.0, channel, free)
-    return calibrate_pulse(
+    found = calibrate_pulse(
         pulse,
         target.unitary,
         guess=target.rotation.angle / angle if angle > 0.0 else 1.0,
@@ -254,6 +290,10 @@ def _calibrate(
         with_detuning="detuning" in adjusted,
         resonance=drive.qubit.frequency - drive.carrier_frequency,
     )
+    # The search leaves decoherence and noise out of account, which move its optimum by very little.
+    if found.frame.average_gate_fidelity < free.average_gate_fidelity:
+        return Calibration(1.0, 0.0, channel, free)
+    return found
 
 
 def _second_run(

@@ -183,13 +183,26 @@ def couple(bench: Testbench, shot: Capture, system: OperatorSystem | None = None
         carrier_frequency=frequency,
         estimated=estimated,
         follows=table.frequency == "carrier",
-        qubit=system or _qubit(table, frequency),
+        qubit=system or make_qubit(table, frequency),
         line=line,
         window=(max(start, first), min(stop, last)),
     )
 
 
-def _qubit(table: QubitTable, carrier_frequency: float) -> Qubit:
+def make_qubit(table: QubitTable, carrier_frequency: float) -> Qubit:
+    """Make the qubit that a table describes.
+
+    Parameters
+    ----------
+    table : QubitTable
+        Of a spin or a transmon.
+    carrier_frequency : float
+        In Hz, for a qubit that follows the carrier.
+
+    Returns
+    -------
+    Qubit
+    """
     nominal = table.frequency if isinstance(table.frequency, float) else carrier_frequency
     return Qubit(
         frequency=nominal + table.detuning,

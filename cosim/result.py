@@ -10,6 +10,7 @@ from cosim.circuit.netlist import DeckFile
 from cosim.dsp.pulse import PulseMeasures
 from cosim.errors import InputError
 from cosim.quantum.fidelity import Rotation
+from cosim.side_results import IdleEffect, NoiseEffect, NoiseSource, SpectatorEffect
 from cosim.waveform import ComplexArray, Envelope, FloatArray, Waveform
 
 # What `cosim.circuit.confidential` writes in place of lines, and of a data file.
@@ -205,6 +206,15 @@ class GateResult:
         What the reader must know before using the numbers.
     run : RunRecord
         Deck, testbench, versions, times, log.
+    noise : NoiseEffect or None
+        What the noise of the testbench does; it is part of the three fidelities, the leakage and
+        the channel. None without [[noise]].
+    spectators : tuple of SpectatorEffect
+        The other qubits of the line.
+    register_infidelity : float
+        Sum of the free-frame infidelities of the qubit and of the others; NaN without others.
+    idle : IdleEffect or None
+        A stretch without a pulse, where the testbench names one.
     """
 
     title: str
@@ -230,6 +240,10 @@ class GateResult:
     extra: dict[str, Waveform] = field(metadata=_NOT_IN_TABLE)
     warnings: tuple[str, ...]
     run: RunRecord = field(metadata=_NOT_IN_TABLE)
+    noise: NoiseEffect | None = None
+    spectators: tuple[SpectatorEffect, ...] = ()
+    register_infidelity: float = field(default=math.nan, metadata=_unit("1"))
+    idle: IdleEffect | None = None
 
 
 # Classes by the tag that the archive keeps.
@@ -245,6 +259,10 @@ KINDS: dict[str, type] = {
         Waveform,
         Envelope,
         DeckFile,
+        NoiseEffect,
+        NoiseSource,
+        SpectatorEffect,
+        IdleEffect,
     )
 }
 
@@ -276,8 +294,9 @@ def as_numbers(result: object) -> dict[str, Any]:
     Returns
     -------
     dict
-        The fields of `GATE_FIELDS`, and `reference_error` if the testbench asked for it; a
-        number that does not exist is None.
+        The fields of `GATE_FIELDS`, and those that the testbench asks for: `reference_error`,
+        `noise`, `spectators` and `register_infidelity`, `idle`; a number that does not exist is
+        None.
 
     Raises
     ------
@@ -286,7 +305,10 @@ def as_numbers(result: object) -> dict[str, Any]:
     """
     if not isinstance(result, GateResult):
         raise InputError(f"wanted a gate result, got {type(result).__name__}")
-    asked = () if math.isnan(result.reference_error) else ("reference_error",)
+    asked = ["reference_error"] * (not math.isnan(result.reference_error))
+    asked += ["noise"] * (result.noise is not None)
+    asked += ["spectators", "register_infidelity"] * bool(result.spectators)
+    asked += ["idle"] * (result.idle is not None)
     return {name: as_plain(getattr(result, name)) for name in (*GATE_FIELDS, *asked)}
 
 

@@ -234,6 +234,57 @@ class QubitTable:
 
 
 @dataclass(frozen=True, slots=True)
+class SpectatorTable:
+    """A table [[spectator]]: another qubit on the same line, which sees the same waveform.
+
+    Parameters
+    ----------
+    kind, rabi_per_volt, levels, anharmonicity, t1, t2, thermal_population
+        As in `QubitTable`; "operators" is not one of the kinds.
+    frequency : float or None
+        In Hz.
+    offset : float or None
+        In place of `frequency`: from that of [qubit], in Hz.
+    name : str
+        For results.
+    target : str
+        Name of the rotation that it is meant to make.
+    """
+
+    kind: Literal["spin", "transmon"]
+    rabi_per_volt: Annotated[float, Quantity("Hz/V", above=0.0)]
+    frequency: Annotated[float, Quantity("Hz", above=0.0)] | None = None
+    offset: Frequency | None = None
+    name: str = ""
+    target: str = "identity"
+    levels: int | None = None
+    anharmonicity: Frequency | None = None
+    t1: DecayTime = math.inf
+    t2: DecayTime = math.inf
+    thermal_population: float = 0.0
+
+    def __post_init__(self) -> None:
+        if (self.frequency is None) == (self.offset is None):
+            raise InputError("give 'frequency' or 'offset', one of them")
+        self.qubit(1.0)
+
+    def qubit(self, frequency: float) -> QubitTable:
+        """Give the table [qubit] of this one; `frequency` in Hz is that of the gate's qubit."""
+        own = self.frequency if self.frequency is not None else frequency + (self.offset or 0.0)
+        return QubitTable(
+            self.kind,
+            self.rabi_per_volt,
+            own,
+            0.0,
+            self.levels,
+            self.anharmonicity,
+            self.t1,
+            self.t2,
+            self.thermal_population,
+        )
+
+
+@dataclass(frozen=True, slots=True)
 class TargetTable:
     """A target rotation as { axis, angle }.
 
@@ -259,20 +310,24 @@ class GateTable:
         Name of a rotation ("x90", "-y90", "identity"), or { axis = [x, y, z], angle = "90 deg" }.
     window : tuple of two floats or None
         Start and end of the gate in s; default: the whole run.
+    idle : tuple of two floats or None
+        Start and end in s of a stretch without a pulse, to be judged as such.
     calibrate : tuple of str
         What the calibrated fidelity may adjust beside the frame: "amplitude", "detuning".
     """
 
     target: Annotated[str | TargetTable, NameOrTable(TargetTable)]
     window: tuple[Time, Time] | None = None
+    idle: tuple[Time, Time] | None = None
     calibrate: tuple[Literal["amplitude", "detuning"], ...] = ("amplitude",)
 
     def __post_init__(self) -> None:
-        if self.window is not None and self.window[0] >= self.window[1]:
-            raise InputError(
-                f"key 'window': the end must come after the start, got {self.window[0]:g} s "
-                f"to {self.window[1]:g} s"
-            )
+        for name, span in (("window", self.window), ("idle", self.idle)):
+            if span is not None and span[0] >= span[1]:
+                raise InputError(
+                    f"key '{name}': the end must come after the start, got {span[0]:g} s "
+                    f"to {span[1]:g} s"
+                )
 
 
 @dataclass(frozen=True, slots=True)
@@ -286,10 +341,22 @@ class AccuracyTable:
         floor and the error bars. The two runs cost four to five times one.
     reference : bool
         Also evolve the full waveform with QuTiP's master-equation solver, and tell the difference.
+    noise_samples : int
+        Seeded samples of what fluctuates during the gate, where the testbench has such noise.
+    noise_seed : int
+        Their seed.
     """
 
     floor: bool = True
     reference: bool = False
+    noise_samples: int = 1000
+    noise_seed: int = 1
+
+    def __post_init__(self) -> None:
+        if not 2 <= self.noise_samples <= 1_000_000:
+            raise InputError(f"key 'noise_samples': wanted 2 to 1000000, got {self.noise_samples}")
+        if not 0 <= self.noise_seed < 2**63:
+            raise InputError(f"key 'noise_seed': wanted 0 to 2**63 - 1, got {self.noise_seed}")
 
 
 TABLES = {

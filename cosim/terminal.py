@@ -12,6 +12,7 @@ from cosim.checks import Finding
 from cosim.comparison import Comparison
 from cosim.quantum.fidelity import incoherent_infidelity
 from cosim.result import GateResult
+from cosim.side_terminal import idle_parts, noise_parts, spectator_parts
 from cosim.sweep.record import FailedRun
 from cosim.units import format_quantity
 
@@ -62,6 +63,9 @@ def result_table(result: GateResult) -> Group:
         Text(_heading(result)),
         _fidelity_table(result),
         _number_table(result),
+        *noise_parts(result.noise),
+        *spectator_parts(result.spectators, result.register_infidelity),
+        *idle_parts(result.idle, result.waveform.unit),
     ]
     parts += [Text(f"warning: {line}", style="yellow") for line in result.warnings]
     parts.append(Text(CAUTION, style="dim"))

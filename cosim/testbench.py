@@ -2,13 +2,14 @@
 
 import copy
 import os
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
 from cosim.config import check_keys, read_table, read_toml, write_tables
 from cosim.errors import TestbenchError, near_names
+from cosim.noises import Noise, read_noises
 from cosim.schema import (
     SOURCES,
     TABLES,
@@ -17,9 +18,13 @@ from cosim.schema import (
     GateTable,
     NetlistTable,
     QubitTable,
+    SpectatorTable,
     WaveformTable,
 )
 from cosim.stimuli import Stimulus, read_stimuli
+
+# Tables of which there may be several.
+ARRAYS = ("stimulus", "noise", "spectator")
 
 # Tables of the studies: each study reads its own, when it is asked for.
 STUDIES = ("sweep",)
@@ -39,6 +44,10 @@ class Testbench:
         The other tables, in SI units.
     stimulus : tuple of Stimulus
         The tables [[stimulus]], in SI units; only with a netlist.
+    noise : tuple of Noise
+        The tables [[noise]], in SI units.
+    spectator : tuple of SpectatorTable
+        The tables [[spectator]], in SI units.
     sweep : mapping
         The table [sweep] as it was given; `cosim.sweep.table` reads it.
     folder : str
@@ -59,6 +68,8 @@ class Testbench:
     gate: GateTable
     accuracy: AccuracyTable
     stimulus: tuple[Stimulus, ...] = ()
+    noise: tuple[Noise, ...] = ()
+    spectator: tuple[SpectatorTable, ...] = ()
     sweep: Mapping[str, Any] = field(default_factory=dict)
     folder: str = "."
     source: str = ""
@@ -66,7 +77,7 @@ class Testbench:
 
     def to_toml(self) -> str:
         """Write the testbench as a TOML text that gives the same run again."""
-        tables = {name: getattr(self, name) for name in (*TABLES, "stimulus", *STUDIES)}
+        tables = {name: getattr(self, name) for name in (*TABLES, *ARRAYS, *STUDIES)}
         given = {name: table for name, table in tables.items() if table not in (None, (), {})}
         return write_tables(self.title, given)
 
@@ -119,7 +130,7 @@ def make_testbench(tables: Mapping[str, Any], *, folder: str | os.PathLike[str] 
 
 def _build(tables: Mapping[str, Any], *, file: str, folder: str) -> Testbench:
     label = file or "the testbench"
-    known = (*TABLES, "stimulus", *STUDIES)
+    known = (*TABLES, *ARRAYS, *STUDIES)
     for name in tables:
         if isinstance(tables[name], Mapping) and name not in known:
             raise TestbenchError(f"{label}: unknown table [{name}]; {near_names(name, known)}")
@@ -151,6 +162,8 @@ def _build(tables: Mapping[str, Any], *, file: str, folder: str) -> Testbench:
         raise TestbenchError(
             f"{label}: a table [[stimulus]] drives a source of a deck, but there is no [netlist]"
         )
+    noise = read_noises(tables.get("noise", []), file=label)
+    spectator = _read_spectators(tables.get("spectator", []), label)
     sweep = tables.get("sweep", {})
     if not isinstance(sweep, Mapping):
         raise TestbenchError(f"{label}: wanted a table [sweep], got {sweep!r}")
@@ -158,10 +171,23 @@ def _build(tables: Mapping[str, Any], *, file: str, folder: str) -> Testbench:
         title=title,
         **parts,
         stimulus=stimulus,
+        noise=noise,
+        spectator=spectator,
         sweep=copy.deepcopy(dict(sweep)),
         folder=folder,
         source=file,
         circuit=circuit,
+    )
+
+
+def _read_spectators(tables: object, file: str) -> tuple[SpectatorTable, ...]:
+    if not isinstance(tables, Sequence) or isinstance(tables, str):
+        raise TestbenchError(
+            f"{file}: wanted tables [[spectator]], with two brackets, got {tables!r}"
+        )
+    return tuple(
+        read_table(table, SpectatorTable, file=file, name="spectator", number=number)
+        for number, table in enumerate(tables, start=1)
     )
 
 

@@ -16,6 +16,8 @@ from cosim.units import parse_parameter, parse_quantity
 
 # Fields of [netlist] that hold a table of their own, by name.
 _MAPS = ("parameters", "instances", "sections")
+# Arrays of tables, of which a key names one by its number: "stimulus.1.period", "noise.2.white".
+_ARRAYS = ("stimulus", "noise", "spectator")
 
 
 @dataclass(frozen=True, slots=True)
@@ -29,7 +31,7 @@ class NumberKey:
     table, field : str
         Where it stands: "netlist" and "parameters", "qubit" and "t1", "stimulus" and "period".
     item : str
-        Name of the parameter; path of the instance; number of the stimulus, from 1.
+        Name of the parameter; path of the instance; number of the stimulus or noise, from 1.
     name : str
         Name of an instance's parameter.
     quantity : Quantity or None
@@ -118,8 +120,9 @@ def number_key(bench: Testbench, deck: Deck | None, text: str, where: str) -> Nu
     if table == "netlist" and field in ("parameters", "instances") and deck is not None:
         return _deck_key(deck, text, field, item, where)
     cls: Any = TABLES.get(table)
-    if table == "stimulus" and field.isdecimal() and 1 <= int(field) <= len(bench.stimulus):
-        cls = type(bench.stimulus[int(field) - 1])
+    rows = getattr(bench, table) if table in _ARRAYS else ()
+    if field.isdecimal() and 1 <= int(field) <= len(rows):
+        cls = type(rows[int(field) - 1])
         field, item = item, str(int(field))
     elif item or (table in TABLES and getattr(bench, table) is None):
         cls = None
@@ -131,7 +134,7 @@ def number_key(bench: Testbench, deck: Deck | None, text: str, where: str) -> Nu
         )
     quantity, whole = _kind(hints[field])
     if hints[field] is Level:
-        quantity = Quantity(getattr(bench.stimulus[int(item) - 1], field).unit)
+        quantity = Quantity(getattr(rows[int(item) - 1], field).unit)
     if quantity is None and not whole and hints[field] is not float:
         raise TestbenchError(
             f"{where}, key 'key': '{text}' is no number that can be varied; "
@@ -174,7 +177,8 @@ def known_keys(bench: Testbench, deck: Deck | None) -> Iterator[str]:
     str
     """
     tables: list[tuple[str, Any]] = [(name, getattr(bench, name)) for name in TABLES]
-    tables += [(f"stimulus.{at}", item) for at, item in enumerate(bench.stimulus, start=1)]
+    for name in _ARRAYS:
+        tables += [(f"{name}.{at}", item) for at, item in enumerate(getattr(bench, name), start=1)]
     for table, value in tables:
         hints = get_type_hints(type(value), include_extras=True) if value is not None else {}
         for field, hint in hints.items():
@@ -214,8 +218,8 @@ def nominal(bench: Testbench, deck: Deck | None, key: NumberKey) -> float | None
         In SI units; None where neither says a finite number.
     """
     value: Any
-    if key.table == "stimulus":
-        value = getattr(bench.stimulus[int(key.item) - 1], key.field)
+    if key.table in _ARRAYS:
+        value = getattr(getattr(bench, key.table)[int(key.item) - 1], key.field)
         value = value.value if isinstance(value, Level) else value
     elif key.field == "parameters":
         given = {name.lower(): item for name, item in getattr(bench, key.table).parameters.items()}
@@ -260,13 +264,14 @@ def with_number(bench: Testbench, key: NumberKey, value: float) -> Testbench:
     """
     try:
         value = key.checked(value)
-        if key.table == "stimulus":
-            stimuli: list[Any] = list(bench.stimulus)
-            old = stimuli[int(key.item) - 1]
+        if key.table in _ARRAYS:
+            rows: list[Any] = list(getattr(bench, key.table))
+            old = rows[int(key.item) - 1]
             was = getattr(old, key.field)
             new = replace(was, value=value) if isinstance(was, Level) else value
-            stimuli[int(key.item) - 1] = replace(old, **{key.field: new})
-            return replace(bench, stimulus=tuple(stimuli))
+            rows[int(key.item) - 1] = replace(old, **{key.field: new})
+            replaced: dict[str, Any] = {key.table: tuple(rows)}
+            return replace(bench, **replaced)
         table = getattr(bench, key.table)
         content: Any = value
         if key.field == "parameters":
@@ -355,7 +360,8 @@ def flattened(bench: Testbench) -> dict[str, Any]:
     """
     flat: dict[str, Any] = {}
     tables: list[tuple[str, Any]] = [(name, getattr(bench, name)) for name in TABLES]
-    tables += [(f"stimulus.{at}", item) for at, item in enumerate(bench.stimulus, start=1)]
+    for name in _ARRAYS:
+        tables += [(f"{name}.{at}", item) for at, item in enumerate(getattr(bench, name), start=1)]
     for table, value in tables:
         for item in fields(value) if value is not None else ():
             content = getattr(value, item.name)

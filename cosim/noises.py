@@ -1,0 +1,361 @@
+"""The tables [[noise]] of a testbench: what fluctuates, and how strongly."""
+
+import math
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from typing import Annotated, Any, Literal
+
+from cosim.config import Quantity, numbered, read_table
+from cosim.dsp.noise.density import Outside, PowerLaw, SpectralDensity, density_from_points
+from cosim.dsp.noise.oscillator import (
+    amplitude_noise_density,
+    jitter_density,
+    phase_noise_density,
+)
+from cosim.errors import InputError, TestbenchError, near_names
+from cosim.schema import Frequency, PositiveFrequency, PositiveTime
+
+# ngspice's flicker noise, and most data sheets, give the level of 1/f noise at this frequency.
+_REFERENCE = 1.0  # Hz
+
+Sidebands = tuple[tuple[PositiveFrequency, Annotated[float, Quantity("dBc/Hz")]], ...]
+
+
+def _check_one(given: Mapping[str, bool], keys: str) -> None:
+    said = [name for name, there in given.items() if there]
+    if len(said) != 1:
+        raise InputError(f"give one of {keys}, got {' and '.join(said) if said else 'none'}")
+
+
+def _check_levels(white: float | None, flicker: float | None, low: float, high: float) -> None:
+    for name, level in (("white", white), ("flicker", flicker)):
+        if level is not None and level < 0.0:
+            raise InputError(f"key '{name}': a spectral density is not negative, got {level:g}")
+    if not 0.0 <= low < high:
+        raise InputError(f"wanted 0 <= low < high, got {low:g} Hz and {high:g} Hz")
+
+
+def _law(
+    unit: str,
+    factor: float,
+    white: float | None,
+    flicker: float | None,
+    exponent: float,
+    low: float,
+    high: float,
+) -> SpectralDensity:
+    terms = []
+    if white:
+        terms.append(PowerLaw(factor * white, low=low, high=high))
+    if flicker:
+        terms.append(PowerLaw(factor * flicker, exponent, _REFERENCE, low, high))
+    return SpectralDensity(unit, tuple(terms))
+
+
+@dataclass(frozen=True, slots=True)
+class DetuningNoise:
+    """A table [[noise]] with acts_on = "detuning": the qubit's frequency fluctuates.
+
+    Parameters
+    ----------
+    acts_on : "detuning"
+        What fluctuates.
+    name : str
+        For messages and results.
+    t2_star : float or None
+        Constant during a gate, of standard deviation sqrt(2)/T2* rad/s, in s.
+    deviation : float or None
+        Constant during a gate, of this standard deviation in Hz.
+    white, flicker : float or None
+        One-sided spectral density in Hz^2/Hz: constant, and at 1 Hz of one that falls as
+        f^-exponent; their sum where both are given.
+    exponent : float
+        1 for 1/f noise.
+    low, high : float
+        Band in Hz outside of which there is none.
+    points : tuple of (float, float)
+        Frequency in Hz and density in Hz^2/Hz, a power law between each two.
+    below, above : "error", "zero", "hold" or "extend"
+        What holds outside of the points.
+    """
+
+    acts_on: Literal["detuning"]
+    name: str = ""
+    t2_star: PositiveTime | None = None
+    deviation: Annotated[float, Quantity("Hz", above=0.0)] | None = None
+    white: Annotated[float, Quantity("Hz^2/Hz")] | None = None
+    flicker: Annotated[float, Quantity("Hz^2/Hz")] | None = None
+    exponent: float = 1.0
+    low: Frequency = 0.0
+    high: Frequency = math.inf
+    points: tuple[tuple[PositiveFrequency, Annotated[float, Quantity("Hz^2/Hz")]], ...] = ()
+    below: Outside = "error"
+    above: Outside = "error"
+
+    def __post_init__(self) -> None:
+        law = self.white is not None or self.flicker is not None
+        given = {
+            "'t2_star'": self.t2_star is not None,
+            "'deviation'": self.deviation is not None,
+            "'white' or 'flicker'": law,
+            "'points'": bool(self.points),
+        }
+        _check_one(given, "'t2_star', 'deviation', 'white' and 'flicker', or 'points'")
+        _check_levels(self.white, self.flicker, self.low, self.high)
+        self.density(0.0)
+
+    @property
+    def spread(self) -> float:
+        """Standard deviation in rad/s of what is constant during a gate; 0 without."""
+        if self.t2_star is not None:
+            return math.sqrt(2.0) / self.t2_star
+        return 2.0 * math.pi * self.deviation if self.deviation is not None else 0.0
+
+    def density(self, carrier: float) -> SpectralDensity | None:
+        """Density of the detuning in (rad/s)^2/Hz; None for what is constant during a gate."""
+        del carrier
+        factor = (2.0 * math.pi) ** 2
+        if self.points:
+            f, s = zip(*self.points, strict=True)
+            values = [factor * level for level in s]
+            return density_from_points(f, values, "rad/s", below=self.below, above=self.above)
+        if self.white is None and self.flicker is None:
+            return None
+        law = (self.white, self.flicker, self.exponent, self.low, self.high)
+        return _law("rad/s", factor, *law)
+
+
+@dataclass(frozen=True, slots=True)
+class AmplitudeNoise:
+    """A table [[noise]] with acts_on = "amplitude": the drive's relative amplitude fluctuates.
+
+    Parameters
+    ----------
+    acts_on : "amplitude"
+        What fluctuates.
+    name : str
+        For messages and results.
+    deviation : float or None
+        Constant during a gate, of this relative standard deviation.
+    white, flicker, exponent, low, high
+        As in `DetuningNoise`, in 1/Hz.
+    points, below, above
+        As in `DetuningNoise`, in 1/Hz.
+    sidebands : tuple of (float, float)
+        Offset from the carrier in Hz and single-sideband amplitude noise in dBc/Hz.
+    """
+
+    acts_on: Literal["amplitude"]
+    name: str = ""
+    deviation: float | None = None
+    white: Annotated[float, Quantity("1/Hz")] | None = None
+    flicker: Annotated[float, Quantity("1/Hz")] | None = None
+    exponent: float = 1.0
+    low: Frequency = 0.0
+    high: Frequency = math.inf
+    points: tuple[tuple[PositiveFrequency, Annotated[float, Quantity("1/Hz")]], ...] = ()
+    sidebands: Sidebands = ()
+    below: Outside = "error"
+    above: Outside = "error"
+
+    def __post_init__(self) -> None:
+        given = {
+            "'deviation'": self.deviation is not None,
+            "'white' or 'flicker'": self.white is not None or self.flicker is not None,
+            "'points'": bool(self.points),
+            "'sidebands'": bool(self.sidebands),
+        }
+        _check_one(given, "'deviation', 'white' and 'flicker', 'points', or 'sidebands'")
+        if self.deviation is not None and not self.deviation > 0.0:
+            raise InputError(f"key 'deviation': wanted more than 0, got {self.deviation:g}")
+        _check_levels(self.white, self.flicker, self.low, self.high)
+        self.density(0.0)
+
+    @property
+    def spread(self) -> float:
+        """Relative standard deviation of what is constant during a gate; 0 without."""
+        return self.deviation or 0.0
+
+    def density(self, carrier: float) -> SpectralDensity | None:
+        """Density of the relative amplitude in 1/Hz; None for what is constant during a gate."""
+        del carrier
+        outside: dict[str, Outside] = {"below": self.below, "above": self.above}
+        if self.sidebands:
+            f, levels = zip(*self.sidebands, strict=True)
+            return amplitude_noise_density(f, levels, **outside)
+        if self.points:
+            f, levels = zip(*self.points, strict=True)
+            return density_from_points(f, levels, "1", **outside)
+        if self.white is None and self.flicker is None:
+            return None
+        return _law("1", 1.0, self.white, self.flicker, self.exponent, self.low, self.high)
+
+
+@dataclass(frozen=True, slots=True)
+class PhaseNoise:
+    """A table [[noise]] with acts_on = "phase": the carrier's phase fluctuates.
+
+    Parameters
+    ----------
+    acts_on : "phase"
+        What fluctuates.
+    name : str
+        For messages and results.
+    deviation : float or None
+        Constant during a gate, of this standard deviation in rad.
+    white, flicker, exponent, low, high
+        As in `DetuningNoise`, in rad^2/Hz.
+    points, below, above
+        As in `DetuningNoise`, in rad^2/Hz.
+    sidebands : tuple of (float, float)
+        Offset from the carrier in Hz and L(f) in dBc/Hz.
+    jitter : float or None
+        Standard deviation of the time of an edge of the clock in s, independent from edge to edge.
+    clock : float or None
+        Rate of these edges in Hz.
+    """
+
+    acts_on: Literal["phase"]
+    name: str = ""
+    deviation: Annotated[float, Quantity("rad", above=0.0)] | None = None
+    white: Annotated[float, Quantity("rad^2/Hz")] | None = None
+    flicker: Annotated[float, Quantity("rad^2/Hz")] | None = None
+    exponent: float = 1.0
+    low: Frequency = 0.0
+    high: Frequency = math.inf
+    points: tuple[tuple[PositiveFrequency, Annotated[float, Quantity("rad^2/Hz")]], ...] = ()
+    sidebands: Sidebands = ()
+    jitter: PositiveTime | None = None
+    clock: PositiveFrequency | None = None
+    below: Outside = "error"
+    above: Outside = "error"
+
+    def __post_init__(self) -> None:
+        given = {
+            "'deviation'": self.deviation is not None,
+            "'white' or 'flicker'": self.white is not None or self.flicker is not None,
+            "'points'": bool(self.points),
+            "'sidebands'": bool(self.sidebands),
+            "'jitter'": self.jitter is not None,
+        }
+        _check_one(given, "'deviation', 'white' and 'flicker', 'points', 'sidebands' or 'jitter'")
+        if (self.jitter is None) != (self.clock is None):
+            raise InputError("'jitter' and 'clock' go together")
+        _check_levels(self.white, self.flicker, self.low, self.high)
+        self.density(1.0)
+
+    @property
+    def spread(self) -> float:
+        """Standard deviation in rad of what is constant during a gate; 0 without."""
+        return self.deviation or 0.0
+
+    def density(self, carrier: float) -> SpectralDensity | None:
+        """Density of the phase in rad^2/Hz, for a carrier in Hz; None for a constant one."""
+        outside: dict[str, Outside] = {"below": self.below, "above": self.above}
+        if self.jitter is not None and self.clock is not None:
+            return jitter_density(self.jitter, carrier, self.clock)
+        if self.sidebands:
+            f, levels = zip(*self.sidebands, strict=True)
+            return phase_noise_density(f, levels, **outside)
+        if self.points:
+            f, levels = zip(*self.points, strict=True)
+            return density_from_points(f, levels, "rad", **outside)
+        if self.white is None and self.flicker is None:
+            return None
+        return _law("rad", 1.0, self.white, self.flicker, self.exponent, self.low, self.high)
+
+
+@dataclass(frozen=True, slots=True)
+class ProbeNoise:
+    """A table [[noise]] with acts_on = "probe": a voltage is added there, around the carrier.
+
+    Parameters
+    ----------
+    acts_on : "probe"
+        What fluctuates.
+    name : str
+        For messages and results.
+    white : float or None
+        One-sided spectral density in V^2/Hz at the carrier, the same to both sides of it.
+    points : tuple of (float, float)
+        Offset from the carrier in Hz and density in V^2/Hz, the same to both sides.
+    below, above
+        As in `DetuningNoise`.
+    """
+
+    acts_on: Literal["probe"]
+    name: str = ""
+    white: Annotated[float, Quantity("V^2/Hz")] | None = None
+    points: tuple[tuple[PositiveFrequency, Annotated[float, Quantity("V^2/Hz")]], ...] = ()
+    below: Outside = "error"
+    above: Outside = "error"
+
+    def __post_init__(self) -> None:
+        _check_one(
+            {"'white'": self.white is not None, "'points'": bool(self.points)},
+            "'white' or 'points'",
+        )
+        _check_levels(self.white, None, 0.0, math.inf)
+        self.density(0.0)
+
+    @property
+    def spread(self) -> float:
+        """Nothing of it is constant during a gate."""
+        return 0.0
+
+    def density(self, carrier: float) -> SpectralDensity | None:
+        """Density of each quadrature at offsets from the carrier in V^2/Hz.
+
+        v = I cos - Q sin with I and Q independent: each has twice the density of v.
+        """
+        del carrier
+        if self.points:
+            f, levels = zip(*self.points, strict=True)
+            values = [2.0 * level for level in levels]
+            return density_from_points(f, values, "V", below=self.below, above=self.above)
+        return _law("V", 2.0, self.white, None, 0.0, 0.0, math.inf)
+
+
+Noise = DetuningNoise | AmplitudeNoise | PhaseNoise | ProbeNoise
+
+KINDS: dict[str, type[Any]] = {
+    "detuning": DetuningNoise,
+    "amplitude": AmplitudeNoise,
+    "phase": PhaseNoise,
+    "probe": ProbeNoise,
+}
+
+
+def read_noises(tables: object, *, file: str) -> tuple[Noise, ...]:
+    """Read the tables [[noise]] of a testbench.
+
+    Parameters
+    ----------
+    tables : list of mapping
+        The tables as tomllib gives them.
+    file : str
+        The testbench, for messages.
+
+    Returns
+    -------
+    tuple of Noise
+        Quantities in SI units.
+
+    Raises
+    ------
+    TestbenchError
+        If a table does not say what it acts on, gives no data or too much, or a density is
+        negative or unordered.
+    """
+    if not isinstance(tables, Sequence) or isinstance(tables, str):
+        raise TestbenchError(f"{file}: wanted tables [[noise]], with two brackets, got {tables!r}")
+    found: list[Noise] = []
+    for number, table in enumerate(tables, start=1):
+        where = numbered(file, "noise", number)
+        acts_on = table.get("acts_on") if isinstance(table, Mapping) else None
+        if acts_on not in KINDS:
+            got = "it is missing" if acts_on is None else f"got {acts_on!r}"
+            hint = near_names(str(acts_on), KINDS)
+            raise TestbenchError(f"{where}, key 'acts_on': {got}", hint=hint)
+        found.append(read_table(table, KINDS[acts_on], file=file, name="noise", number=number))
+    return tuple(found)

@@ -1,0 +1,118 @@
+"""Noise, other qubits of the line and rest, as tables for a terminal."""
+
+import math
+from collections.abc import Sequence
+
+from rich.console import RenderableType
+from rich.table import Table
+from rich.text import Text
+
+from cosim.side_results import IdleEffect, NoiseEffect, SpectatorEffect
+from cosim.units import format_quantity
+
+
+def noise_parts(effect: NoiseEffect | None) -> list[RenderableType]:
+    """Lay out what noise does.
+
+    Parameters
+    ----------
+    effect : NoiseEffect or None
+        Of a gate result.
+
+    Returns
+    -------
+    list
+        A heading and a table; empty without noise.
+    """
+    if effect is None:
+        return []
+    if effect.method == "samples":
+        how = (
+            f"{effect.infidelity:.3e} ± {effect.standard_error:.1e} from {effect.samples} samples "
+            f"(seed {effect.seed}), {effect.first_order:.3e} to first order"
+        )
+    else:
+        how = f"{effect.infidelity:.3e} by quadrature"
+    table = _headed("source", "acts on", "1 - F_avg", "leakage", "by")
+    for item in effect.sources:
+        by = item.method
+        if not math.isnan(item.oscillator_frame):
+            by += f"; in the oscillator's frame {item.oscillator_frame:.3e}"
+        cells = (f"{item.infidelity:.3e}", f"{item.leakage:.1e}", by)
+        table.add_row(item.name, item.acts_on, *cells)
+    return [Text(""), Text(f"noise costs {how}; it is part of the numbers above"), table]
+
+
+def spectator_parts(
+    effects: Sequence[SpectatorEffect], register_infidelity: float
+) -> list[RenderableType]:
+    """Lay out what the waveform does to other qubits of the line.
+
+    Parameters
+    ----------
+    effects : sequence of SpectatorEffect
+        Of a gate result.
+    register_infidelity : float
+        Of the same.
+
+    Returns
+    -------
+    list
+        A heading and a table; empty without others.
+    """
+    if not effects:
+        return []
+    names = ("spectator", "frequency", "target", "1 - F_avg", "free frame", "angle", "phase")
+    table = _headed(*names, "leakage")
+    for item in effects:
+        table.add_row(
+            item.name,
+            format_quantity(item.frequency, "Hz", 6),
+            item.target,
+            f"{item.infidelity:.3e}",
+            f"{item.free_frame_infidelity:.3e}",
+            f"{math.degrees(item.rotation.angle):.3f}°",
+            f"{math.degrees(item.phase):+.3f}°",
+            f"{item.leakage:.1e}",
+        )
+    heading = f"the register, free frame: 1 - F_avg sums up to {register_infidelity:.3e}"
+    return [Text(""), Text(heading), table]
+
+
+def idle_parts(effect: IdleEffect | None, unit: str) -> list[RenderableType]:
+    """Lay out what happens at rest.
+
+    Parameters
+    ----------
+    effect : IdleEffect or None
+        Of a gate result.
+    unit : str
+        Unit of the probe.
+
+    Returns
+    -------
+    list
+        Two lines; empty without.
+    """
+    if effect is None:
+        return []
+    span = effect.stop - effect.start
+    per = 1e-6 / span
+    return [
+        Text(""),
+        Text(
+            f"at rest, {format_quantity(effect.start, 's')} to "
+            f"{format_quantity(effect.stop, 's')}, per microsecond: 1 - F_avg "
+            f"{per * effect.infidelity:.3e} ({per * effect.free_frame_infidelity:.3e} in the free "
+            f"frame), phase {per * math.degrees(effect.phase):+.4f}°, flips by noise "
+            f"{1e-6 * effect.flip_rate:.2e} each way, dephasing by noise "
+            f"{1e-6 * effect.dephasing_rate:.2e}; {format_quantity(effect.residual, unit)} are left"
+        ),
+    ]
+
+
+def _headed(*names: str) -> Table:
+    table = Table(box=None, pad_edge=False, header_style="bold")
+    for at, name in enumerate(names):
+        table.add_column(name, justify="left" if at < 2 else "right", no_wrap=at < 2)
+    return table
