@@ -13,7 +13,7 @@ import numpy as np
 
 from cosim.errors import InputError
 from cosim.quantum import batch_kernel
-from cosim.quantum.batch_drive import BatchDrive
+from cosim.quantum.batch_drive import MOST_TURN, BatchDrive
 from cosim.quantum.batch_plan import Panels, lay_panels, panel_exponents
 from cosim.quantum.hamiltonian import anharmonic_energies
 from cosim.quantum.kernel import IndexArray
@@ -121,8 +121,8 @@ def evolve_batch(
     Raises
     ------
     InputError
-        If the levels, the tolerance or the workers are out of range, or the tolerance cannot be
-        met by halving the steps 8 times.
+        If the levels, the tolerance or the workers are out of range, the tolerance cannot be met
+        by halving the steps 8 times, or a step is far too long for the levels or the loss.
 
     Notes
     -----
@@ -219,7 +219,7 @@ def _evolved(
     `before` counts the samples that went before, so that the choice of checked rows does not
     depend on how samples are portioned.
     """
-    _check(qubit, tolerance, workers)
+    _check(qubit, drive, tolerance, workers)
     exact = qubit.lossless and drive.order == 1
     row_bytes = 200 * drive.samples + 64 * qubit.levels**4
     chunk = max(1, CHUNK_BYTES // row_bytes)
@@ -300,8 +300,12 @@ def _channels(
     rate, detuning, step = drive.slices(rows, level)
     ladder = np.sqrt(np.arange(1.0, qubit.levels))
     energies = anharmonic_energies(qubit)
-    # The panels are those of the samples as given, halved as often as asked.
-    exponents = panel_exponents(qubit, drive, rows) - level
+    exponents = panel_exponents(qubit, drive, rows)
+    if drive.order == 1 and level > 0:
+        # Panels over whole slices all miss what happens within a slice, so that halving them
+        # would not show it: the first halving goes within the slices.
+        exponents = np.minimum(exponents, 0)
+    exponents = exponents - level
     out = np.empty((rows.size, size, size), dtype=np.complex128)
     for exponent in np.unique(exponents):
         panels: Panels = lay_panels(qubit, drive, int(exponent), level)
@@ -338,11 +342,18 @@ def _share(
             out[part] = values
 
 
-def _check(qubit: Qubit, tolerance: float | None, workers: int) -> None:
+def _check(qubit: Qubit, drive: BatchDrive, tolerance: float | None, workers: int) -> None:
     if qubit.levels > MOST_LEVELS:
         raise InputError(
             f"batch: wanted a qubit of 2 to {MOST_LEVELS} levels, got {qubit.levels}",
             hint="keep fewer levels with `Qubit.with_levels`",
+        )
+    turn = float(np.ptp(anharmonic_energies(qubit))) * drive.step
+    if turn > MOST_TURN:
+        raise InputError(
+            f"batch: the anharmonic levels turn by {turn:.3g} rad in a step of {drive.step:.3g} s, "
+            f"at most {MOST_TURN:g} are made",
+            hint="cut the time into more samples",
         )
     if tolerance is not None and not LEAST_TOLERANCE <= tolerance < 1:
         raise InputError(

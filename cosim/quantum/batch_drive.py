@@ -13,6 +13,9 @@ from cosim.waveform import ComplexArray, FloatArray
 
 Array = TypeVar("Array", ComplexArray, FloatArray)
 
+# Largest turn in one slice in rad; beyond it no ten digits are left of the phase.
+MOST_TURN = 1e6
+
 
 @dataclass(frozen=True, slots=True)
 class BatchDrive:
@@ -39,7 +42,8 @@ class BatchDrive:
     Raises
     ------
     InputError
-        If the shapes do not fit, a number is not finite, or step or order are out of range.
+        If the shapes do not fit, a number is not finite, step or order are out of range, or the
+        drive turns by more than 1e6 rad in a step.
 
     Notes
     -----
@@ -82,10 +86,20 @@ class BatchDrive:
                 hint="constant detunings of the rows stand in a column: detuning[:, None]",
             )
         for name, values in (("rate", rate), ("detuning", detuning)):
-            if not np.isfinite(values).all():
+            # Complex numbers as pairs; what is not a number survives both extremes.
+            parts = values.view(np.float64)
+            largest = max(float(parts.max()), -float(parts.min()))
+            if not math.isfinite(largest):
                 row, column = np.argwhere(~np.isfinite(values))[0]
                 raise InputError(
                     f"batch drive: the {name} is not finite in row {row}, sample {column}"
+                )
+            if largest * self.step > MOST_TURN:
+                raise InputError(
+                    f"batch drive: the {name} comes up to {largest:.3g} rad/s, which turns by "
+                    f"{largest * self.step:.3g} rad in a step of {self.step:.3g} s; at most "
+                    f"{MOST_TURN:g} are made",
+                    hint="rates are in rad/s and steps in s: check their units",
                 )
         if self.order == 4 and (samples < 5 or samples % 2 == 0):
             raise InputError(

@@ -6,6 +6,7 @@ from dataclasses import dataclass
 import numpy as np
 from scipy.linalg import expm
 
+from cosim.errors import InputError
 from cosim.quantum.batch_drive import BatchDrive
 from cosim.quantum.batch_kernel import row_sizes
 from cosim.quantum.kernel import IndexArray
@@ -17,6 +18,8 @@ from cosim.waveform import FloatArray
 # longest half panel in radians, beyond which the estimate does not hold.
 PANEL_ERROR = 2e-8
 PANEL_TURN = 0.5
+# Most parts of slices in an evolution, as the other kernel's most steps.
+MOST_PARTS = 30_000_000
 
 
 @dataclass(frozen=True, slots=True)
@@ -58,9 +61,11 @@ def panel_exponents(qubit: Qubit, drive: BatchDrive, rows: IndexArray) -> IndexA
     -----
     Half panels s of Simpson's rule leave decay s**4/180 times the change of the integrand's third
     derivative, of the order of turning**3 as the drive goes on. What turns fast, by anharmonicity
-    and detuning, leaves the ends of the integral alone, as far as the drive brings no more. Jumps
+    and detuning, leaves the ends of the integral alone, as far as the drive brings no more. The
+    second order in the dissipator adds (decay s)**2/12, and more as the drive goes on. Jumps
     between slices add decay s**2 jumps/12, jumps being the root of the sum of their squares as
-    for noise; within a slice there are none. These are estimates; halving the steps is the proof.
+    for noise, and decay unit**2/12 times twice the largest rate for a slow rise and fall; within
+    a slice there are none. These are estimates; halving the steps is the proof.
     """
     rate, detuning = drive.pick(rows)
     largest, jumps = row_sizes(rate)
@@ -69,15 +74,20 @@ def panel_exponents(qubit: Qubit, drive: BatchDrive, rows: IndexArray) -> IndexA
     slow = math.sqrt(qubit.levels - 1) * largest
     fast = 2 * math.pi * abs(qubit.anharmonicity) * (qubit.levels - 2)
     turning = slow + fast + np.abs(detuning).max(axis=1)
-    with np.errstate(divide="ignore"):
-        ends = 90 * PANEL_ERROR / (decay * turning**3 * (1 + slow * drive.duration))
+    with np.errstate(divide="ignore", over="ignore"):
+        on = 1 + slow * drive.duration
+        ends = 90 * PANEL_ERROR / (decay * turning**3 * on)
         smooth = np.minimum(ends**0.25, PANEL_TURN / turning)
+        smooth = np.minimum(smooth, np.sqrt(12 * PANEL_ERROR / on) / decay)
         rough = np.sqrt(12 * PANEL_ERROR / (decay * jumps))
+    rough[decay * unit**2 * 2 * largest / 12 > PANEL_ERROR] = 0.0
     # Nothing is gained by panels longer than the evolution.
     longest = math.log2(max(1.0, drive.duration / unit / 2))
     smooth = np.minimum(np.log2(smooth / unit), longest)
-    rough = np.maximum(np.minimum(np.log2(rough / unit), longest), -1)
-    exponents = np.floor(np.minimum(smooth, rough)).astype(np.int64)
+    with np.errstate(divide="ignore"):
+        rough = np.maximum(np.minimum(np.log2(rough / unit), longest), -1)
+    # Far below what `lay_panels` lets pass.
+    exponents = np.floor(np.maximum(np.minimum(smooth, rough), -60)).astype(np.int64)
     if drive.order == 4:
         exponents = np.maximum(exponents, 0)
     return np.broadcast_to(exponents, rows.shape)
@@ -98,9 +108,21 @@ def lay_panels(qubit: Qubit, drive: BatchDrive, exponent: int, level: int) -> Pa
     Returns
     -------
     Panels
+
+    Raises
+    ------
+    InputError
+        If there would be more than `MOST_PARTS` parts of slices.
     """
     if drive.order == 1:
         parts = 2 ** max(0, -exponent)
+        if drive.samples * parts > MOST_PARTS:
+            raise InputError(
+                f"batch: {drive.samples} slices of {drive.step:.3g} s would be cut into "
+                f"{drive.samples * parts:.3g} parts, at most {MOST_PARTS:.3g} are made: the drive "
+                f"turns too fast beside T1 {qubit.t1:.3g} s and T2 {qubit.t2:.3g} s",
+                hint="check the drive rate, the detuning, t1 and t2, or keep fewer levels",
+            )
         if drive.samples * parts == 1:
             parts = 2  # Simpson's rule needs two halves.
         units, stride, unit = drive.samples * parts, 1, drive.step / parts

@@ -173,6 +173,18 @@ class TestStepError:
         assert found.step_error == pytest.approx(true, rel=0.3)
         assert true > 1e-11  # Above rounding, else nothing was compared.
 
+    @pytest.mark.parametrize("t1", [30e-6, 3e-6, 0.3e-6])
+    def test_sees_what_happens_within_slices(self, t1: float) -> None:
+        # Panels over several slices agree with one another, and are all wrong by as much.
+        qubit = Qubit(5e9, 2, t1=t1, t2=0.7 * t1)
+        drive = BatchDrive(1e-10, smooth_rate(1000, rabi=10e6))
+        found = evolve_batch(qubit, drive)
+        exact = evolve_batch(qubit, drive, tolerance=3e-11).channels
+        true = float(np.abs(found.channels - exact).max())
+        # Where the second order in the dissipator leads, halving takes three quarters only.
+        assert 0.7 * true < found.step_error < 1.3 * true
+        assert found.step_error < 1e-7
+
     @pytest.mark.parametrize("order", [1, 4])
     def test_a_tolerance_is_met(self, order: int) -> None:
         drive = BatchDrive(1e-9, smooth_rate(31) * np.array([[1.0], [3.0]]), order=order)
@@ -207,7 +219,7 @@ class TestPanels:
             assert (weights >= 0).all()
 
     def test_panels_shrink_with_the_drive_and_with_noise(self) -> None:
-        two = LOSSY.with_levels(2)
+        two = Qubit(5e9, t1=30e-6, t2=20e-6)
         calm = noisy_rate(1, 200, spread=0.0)
         rates = np.concatenate([calm, 10 * calm, noisy_rate(1, 200, spread=1.0)])
         exponents = panel_exponents(two, BatchDrive(STEP, rates), np.arange(3))
@@ -270,6 +282,18 @@ class TestErrors:
             evolve_batch(LOSSY, drive, workers=0)
         with pytest.raises(InputError, match="at least one sample"):
             mean_channel(LOSSY, [])
+
+    def test_steps_in_the_wrong_unit(self) -> None:
+        rate = noisy_rate(2, 7)
+        with pytest.raises(InputError, match=r"the rate comes up to (.|\n)* check their units"):
+            BatchDrive(50.0, rate)
+        with pytest.raises(InputError, match="the detuning comes up to"):
+            BatchDrive(STEP, rate, -1e18)
+        still = BatchDrive(1.0, np.zeros(3, dtype=complex))
+        with pytest.raises(InputError, match="anharmonic levels turn by"):
+            evolve_batch(lossless(3), still)
+        with pytest.raises(InputError, match=r"would be cut into .* T1 1e-12 s"):
+            evolve_batch(Qubit(5e9, t1=1e-12, t2=1e-12), BatchDrive(1e-3, rate))
 
     def test_a_tolerance_out_of_reach(self) -> None:
         # Steps of 4 us under 30 MHz: even their 256th part is a turn of 3 rad.
