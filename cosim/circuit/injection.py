@@ -182,7 +182,8 @@ def injected_difference(
             f"with noise ngspice took {noisy.time.size} time points, without it "
             f"{clean.result.time.size}: its steps failed at other times, and the difference of the "
             "two runs is not the noise alone",
-            hint="Take a shorter step, or a smaller scale of the noise.",
+            hint="Take a smaller scale of the noise or a shorter step, or give switched nodes the "
+            "capacitance that they have.",
         )
     before = clean.result.vectors
     return Difference(
@@ -268,13 +269,13 @@ def _rows(times: FloatArray, samples: FloatArray) -> tuple[bytes, list[float]]:
     """
     peaks = np.abs(samples).max(axis=1)
     scales = np.where(peaks > 0, peaks, 1.0) / _LARGEST
-    counts = np.rint(samples.T / scales).astype(np.int64)
+    counts = np.rint(samples.T / scales).astype(np.int32)
     counts = np.vstack([counts, counts[-1:]])
     stamps = [*times.tolist(), max(_HOLD, 2.0 * float(times[-1]))]
     text = "".join(f"{stamp:.16e}".ljust(23) for stamp in stamps).encode()
     width = _DIGITS + 2
-    table: npt.NDArray[np.uint8] = np.full((len(stamps), 23 + width * len(samples) + 1), ord(" "))
-    table = table.astype(np.uint8)
+    shape = (len(stamps), 23 + width * len(samples) + 1)
+    table: npt.NDArray[np.uint8] = np.full(shape, ord(" "), np.uint8)
     table[:, :23] = np.frombuffer(text, np.uint8).reshape(len(stamps), 23)
     left = np.abs(counts)
     for digit in range(_DIGITS):

@@ -141,6 +141,31 @@ class TestActive:
         # Two operating points within reltol, in a power of the current.
         assert got == pytest.approx(parts["flicker"][0] / parts["channel"][0], rel=1e-4, abs=0.0)
 
+    @pytest.mark.parametrize(
+        ("device", "part"),
+        [
+            ("d1 out 0 n\n.model n d is=1e-12 cjo=1p tt=1n", "shot"),
+            ("q1 out in 0 n m=2\n.model n npn is=1e-15 bf=100 cje=1p cjc=1p tf=1n", "shot"),
+            ("q1 out inp vdd n\n.model n pnp is=1e-15 bf=100", "shot"),
+            ("j1 out 0 0 n\n.model n njf vto=-1 beta=1m", "channel"),
+            ("m1 out in 0 0 n w=2u l=1u m=2\n.model n nmos level=3 vto=0.4 kp=100u", "channel"),
+            ("m1 out in vdd vdd n w=2u l=1u\n.model n pmos level=1 vto=-0.4 kp=100u", "channel"),
+        ],
+    )
+    def test_densities_are_those_of_small_signals(self, device: str, part: str) -> None:
+        body = f"v1 in 0 dc 0.7 ac 1\nvp inp 0 0.8\nvd vdd 0 1.5\nrd vdd out 100\n{device}"
+        run = clean(body, ["v(out)"], count=100)
+        request = NoiseRequest("v(out)", "v1", 1.0, 1e3, 1, temperature=300.0, by_device=True)
+        parts = simulate_noise(run.deck, request).by_device
+        white: dict[str, float] = {}
+        for item in noise_currents(run, MODEL):
+            if "out" in item.nodes:  # The base's current of a held base does not reach the output.
+                white[item.device] = float(item.white[-1])
+        small = parts[device.split()[0]][part][0] / parts["rd"]["thermal"][0]
+        # Both stand between the output and a held node, so that the circuit's gain cancels. The
+        # operating points agree within reltol; a diode's current within that of its exponent.
+        assert white[device.split()[0]] / white["rd"] == pytest.approx(small, rel=2e-4, abs=0.0)
+
     def test_a_bsim4_channel_is_near_to_its_own_noise(self) -> None:
         # A long channel: the model of the charge, which the conductance stands for, is BSIM4's.
         # Measured: 3 % in the triode region and 1 % in saturation; the transconductance alone
