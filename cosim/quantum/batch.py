@@ -199,6 +199,8 @@ def mean_channel(
             step_error = max(step_error, error)
     if count == 0:
         raise InputError("mean channel: wanted at least one sample, got no drive at all")
+    # Rounding may leave a sum of squares that is zero a little below it.
+    squares = np.maximum(squares, 0.0)
     spread = squares / (count * (count - 1)) if count > 1 else np.full_like(squares, np.nan)
     return MeanChannel(mean, np.sqrt(spread), count, step_error)
 

@@ -10,7 +10,8 @@ quaternion.
 
 A slice's unitary is left without the phase of the mean energy, which no channel sees.
 
-The functions compile at their first call and are cached on disk; nothing compiles at import.
+The functions compile at their first call and are cached on disk; nothing compiles at import. The
+cache of a function watches its own file alone: whoever changes this one touches batch_kernel.py.
 """
 
 import math

@@ -152,6 +152,10 @@ class TestWholes:
         assert np.array_equal(found.standard_error, whole.standard_error)
         assert (found.count, found.step_error) == (whole.count, whole.step_error)
 
+    def test_equal_samples_have_an_error_of_rounding(self) -> None:
+        rate = np.repeat(noisy_rate(1, 30), 50, axis=0)
+        assert mean_channel(LOSSY, BatchDrive(STEP, rate)).standard_error.max() < 1e-15
+
     def test_one_sample_has_no_error(self) -> None:
         assert np.isnan(
             mean_channel(LOSSY, BatchDrive(STEP, noisy_rate(1, 9))).standard_error
