@@ -127,6 +127,19 @@ class Level:
 
 
 @dataclasses.dataclass(frozen=True, slots=True)
+class Key:
+    """Marks a field whose key in the file is a word that Python keeps for itself.
+
+    Parameters
+    ----------
+    name : str
+        The key.
+    """
+
+    name: str
+
+
+@dataclasses.dataclass(frozen=True, slots=True)
 class Parameter:
     """Marks a field that takes a deck's parameter: a number, or a number with a unit."""
 
@@ -262,13 +275,18 @@ def read_table(
     where = f"{file}, table [{name}]" if number is None else numbered(file, name, number)
     if not isinstance(table, Mapping):
         raise TestbenchError(f"{where}: wanted a table, got {table!r}")
-    check_keys(table, _field_names(cls), where)
+    hints = get_type_hints(cls, include_extras=True)
+    fields = {_key_of(hints[name], name): name for name in _field_names(cls)}
+    check_keys(table, list(fields), where)
     for item in dataclasses.fields(cls):  # type: ignore[arg-type]
         required = item.default is item.default_factory is dataclasses.MISSING
-        if required and item.name not in table:
-            raise TestbenchError(f"{where}: the key '{item.name}' is missing")
-    hints = get_type_hints(cls, include_extras=True)
-    values = {key: read_value(hints[key], value, where, key) for key, value in table.items()}
+        key = _key_of(hints[item.name], item.name)
+        if required and key not in table:
+            raise TestbenchError(f"{where}: the key '{key}' is missing")
+    values = {
+        fields[key]: read_value(hints[fields[key]], value, where, key)
+        for key, value in table.items()
+    }
     try:
         return cls(**values)
     except InputError as error:
@@ -371,7 +389,7 @@ def _written_table(table: object) -> dict[str, Any]:
         value = getattr(table, item.name)
         # What is left out in TOML is what TOML cannot say: nothing, and infinity.
         if value not in (None, {}, (), math.inf):
-            written[item.name] = _written(value, hints[item.name])
+            written[_key_of(hints[item.name], item.name)] = _written(value, hints[item.name])
     return written
 
 
@@ -402,6 +420,11 @@ def _hints_of_items(hint: Any, count: int) -> tuple[Any, ...]:
             found = get_args(part)
             return (found[0],) * count if found[-1] is ... else found
     return (None,) * count
+
+
+def _key_of(hint: Any, name: str) -> str:
+    marks = [mark.name for mark in getattr(hint, "__metadata__", ()) if isinstance(mark, Key)]
+    return marks[0] if marks else name
 
 
 def _field_names(cls: type[Any]) -> list[str]:

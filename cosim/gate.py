@@ -23,7 +23,9 @@ from cosim.guards import (
 from cosim.imported import every_second, import_waveform
 from cosim.line import through_line
 from cosim.neighbours import idle_effect, spectator_effects, spectator_warnings
+from cosim.netlist_noise import circuit_noise
 from cosim.noise_effect import NoisyGate, noisy_gate
+from cosim.noises import NetlistNoise
 from cosim.quantum.channel import check_channel, nearest_unitary, pauli_transfer_matrix
 from cosim.quantum.fidelity import (
     Rotation,
@@ -167,7 +169,7 @@ def run_gate(
     twin = drive.rotating_wave_twin(envelope)
     rotating_wave_error = math.nan if twin is None else channel_distance(clean, twin)
     clock.lap("rotating_wave_twin")
-    noisy = _noise(bench, drive, envelope)
+    noisy = _noise(bench, plan, drive, envelope)
     if noisy is not None:
         pulse = replace(pulse, before=noisy.correction)
         channel = clean @ noisy.correction
@@ -242,12 +244,24 @@ def _register(own: float, spectators: tuple[SpectatorEffect, ...]) -> float:
     return own + sum(item.free_frame_infidelity for item in spectators)
 
 
-def _noise(bench: Testbench, drive: QubitDrive, envelope: Envelope) -> NoisyGate | None:
+def _noise(
+    bench: Testbench, plan: Plan | None, drive: QubitDrive, envelope: Envelope
+) -> NoisyGate | None:
     if not bench.noise:
         return None
     accuracy = bench.accuracy
+    circuits = {
+        place: circuit_noise(bench, plan, noise, drive.carrier_frequency)
+        for place, noise in enumerate(bench.noise)
+        if isinstance(noise, NetlistNoise)
+    }
     return noisy_gate(
-        drive, envelope, bench.noise, samples=accuracy.noise_samples, seed=accuracy.noise_seed
+        drive,
+        envelope,
+        bench.noise,
+        samples=accuracy.noise_samples,
+        seed=accuracy.noise_seed,
+        circuits=circuits,
     )
 
 

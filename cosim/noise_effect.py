@@ -6,23 +6,37 @@ sample, averaged. The clean channel itself stays that of the full waveform.
 """
 
 import math
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field, replace
+from types import MappingProxyType
 
 import numpy as np
-from scipy.interpolate import CubicSpline
 
-from cosim.coupling import rate_per_unit, rotating_rate
+from cosim.coupling import rate_per_unit
 from cosim.dsp.noise.bands import FrequencyGrid, frequency_grid
 from cosim.dsp.noise.density import SpectralDensity
 from cosim.dsp.noise.paths import PathPlan, generator, plan_paths, sample_paths
 from cosim.errors import InputError, TestbenchError
-from cosim.noises import AmplitudeNoise, DetuningNoise, Noise, PhaseNoise, ProbeNoise
+from cosim.netlist_noise import INJECTION, CircuitNoise, injected_noise
+from cosim.noise_frame import (
+    Nominal,
+    channel_losses,
+    nominal_evolution,
+    superoperators,
+    unitary_losses,
+)
+from cosim.noises import (
+    AmplitudeNoise,
+    DetuningNoise,
+    NetlistNoise,
+    Noise,
+    PhaseNoise,
+    ProbeNoise,
+)
 from cosim.quantum.batch import propagate_batch
 from cosim.quantum.batch_drive import BatchDrive
 from cosim.quantum.filters import (
     FilterFunction,
-    PathSegment,
     filter_area,
     filter_function,
     noise_infidelity,
@@ -46,34 +60,6 @@ SIGNIFICANT = 4.0
 NEGLIGIBLE = 0.02
 # What the sampling cannot reach is told from this part of the effect on.
 UNREACHED = 0.01
-
-
-@dataclass(frozen=True, slots=True)
-class _Nominal:
-    """The clean evolution in the rotating wave, on slices of equal length."""
-
-    qubit: Qubit
-    step: float
-    rate: ComplexArray  # (n,), rad/s in the middle of each slice
-    turn: ComplexArray  # (n,), exp(2 pi i offset t) of the carrier in the qubit's frame
-    edge_rate: ComplexArray  # (n + 1,), at the edges
-    edge_turn: ComplexArray
-    path: PathSegment
-    final: ComplexArray  # (d, d)
-
-    @property
-    def duration(self) -> float:
-        return self.step * self.rate.size
-
-    @property
-    def nyquist(self) -> float:
-        return 0.5 / self.step
-
-    def drive_hamiltonian(self, rate: ComplexArray) -> ComplexArray:
-        """Give (rate a + rate^* a^dag)/2, shape (n, d, d), in rad/s."""
-        a = self.qubit.annihilation()
-        half = 0.5 * rate[:, None, None]
-        return np.asarray(half * a + half.conj() * a.conj().T)
 
 
 @dataclass(frozen=True, slots=True)
@@ -107,7 +93,13 @@ class NoisyGate:
 
 
 def noisy_gate(
-    drive: QubitDrive, envelope: Envelope, noises: Sequence[Noise], *, samples: int, seed: int
+    drive: QubitDrive,
+    envelope: Envelope,
+    noises: Sequence[Noise],
+    *,
+    samples: int,
+    seed: int,
+    circuits: Mapping[int, CircuitNoise] = MappingProxyType({}),
 ) -> NoisyGate:
     """Work out what the noise of a testbench does to its gate.
 
@@ -123,6 +115,8 @@ def noisy_gate(
         How many seeded samples are drawn of what fluctuates during the gate.
     seed : int
         Of these; the same seed gives the same numbers on any number of workers.
+    circuits : mapping of int to CircuitNoise
+        Place of each `NetlistNoise` among `noises`, from 0 -> its circuit.
 
     Returns
     -------
@@ -133,12 +127,15 @@ def noisy_gate(
     InputError
         If the qubit is given by operators, a density does not cover the band that is needed, or
         its power is infinite.
+    SimulationError
+        If a noisy run of the circuit fails.
     """
     if isinstance(drive.qubit, OperatorSystem):
         raise InputError(
             'a system of operators has no [[noise]] tables: put its noise into "collapse" operators'
         )
-    nominal = _nominal(drive.qubit, drive, envelope)
+    nominal = nominal_evolution(drive.qubit, drive, envelope)
+    volts = rate_per_unit(drive.line, envelope.unit)
     found = [
         _Fluctuation(
             noise,
@@ -148,69 +145,80 @@ def noisy_gate(
         )
         for number, noise in enumerate(noises, start=1)
     ]
-    volts = rate_per_unit(drive.line, envelope.unit)
-    sources = tuple(_source(nominal, item, volts) for item in found)
-    first_order = sum(source.infidelity for source in sources)
-    if all(item.density is None for item in found):
-        average = _quadrature(nominal, found)
-        infidelity, leaked = _losses(average, nominal.qubit.levels)
-        effect = NoiseEffect(
-            first_order, infidelity, 0.0, leaked, 0, seed, "quadrature", True, sources
-        )
-        return NoisyGate(average, effect, _warnings(drive.qubit, found, effect))
-    planned = [
-        item
-        if item.density is None
-        else replace(
-            item,
-            plan=_in_table(item, lambda item=item: _plan(nominal, item.density)),
-        )
-        for item in found
-    ]
-    correction, losses, leaks = _sampled(nominal, planned, volts, samples, seed)
-    error = float(losses.std(ddof=1) / math.sqrt(samples))
-    sampled = float(losses.mean())
-    beyond = SIGNIFICANT * error + NEGLIGIBLE * sampled + sampled**2
+    tables = [item for item in found if not isinstance(item.noise, NetlistNoise)]
+    sources: dict[int, NoiseSource] = {
+        item.stream: _source(nominal, item, volts) for item in tables
+    }
+    drawn = _drawn_effect(nominal, tables, volts, samples, seed)
+    first_order = sum(source.infidelity for source in sources.values())
+    spread = SIGNIFICANT * drawn.error + NEGLIGIBLE * drawn.infidelity + drawn.infidelity**2
+    agree = drawn.method == "quadrature" or abs(drawn.infidelity - first_order) <= spread
+    correction, variance = drawn.correction, drawn.error**2
+    for item in found:
+        if isinstance(item.noise, NetlistNoise):
+            circuit = circuits[item.stream - 1]
+            channel, source = injected_noise(nominal, circuit, item.noise, item.name, volts, seed)
+            sources[item.stream] = source
+            # Independent of the others, and small: the channels follow one another.
+            correction = correction @ channel
+            variance += source.standard_error**2
+    injected = [item for item in sources.values() if item.method == INJECTION]
     effect = NoiseEffect(
-        first_order,
-        sampled,
-        error,
-        float(leaks.mean()),
-        samples,
-        seed,
-        "samples",
-        abs(sampled - first_order) <= beyond,
-        sources,
+        first_order=sum(source.infidelity for source in sources.values()),
+        infidelity=drawn.infidelity + sum(item.infidelity for item in injected),
+        standard_error=math.sqrt(variance),
+        leakage=drawn.leakage + sum(item.leakage for item in injected),
+        samples=drawn.samples,
+        seed=seed,
+        method=drawn.method if tables else INJECTION,
+        agree=agree,
+        sources=tuple(sources[item.stream] for item in found),
     )
     return NoisyGate(correction, effect, _warnings(drive.qubit, found, effect))
 
 
-def _nominal(qubit: Qubit, drive: QubitDrive, envelope: Envelope) -> _Nominal:
-    start, stop = drive.window
-    offset = drive.carrier_frequency - qubit.frequency
-    step = min(envelope.dt, 1.0 / (20.0 * abs(offset))) if offset else envelope.dt
-    count = max(16, round((stop - start) / step))
-    step = (stop - start) / count
-    edges: FloatArray = start + step * np.arange(count + 1, dtype=np.float64)
-    middles: FloatArray = edges[:-1] + 0.5 * step
-    spline = CubicSpline(envelope.t, envelope.iq)
-    rate = rotating_rate(spline(middles), middles, drive.line, envelope.unit, offset)
-    edge_rate = rotating_rate(spline(edges), edges, drive.line, envelope.unit, offset)
-    slices = propagate_batch(qubit, BatchDrive(step, rate[:, None])).unitaries
-    path = np.empty((count + 1, qubit.levels, qubit.levels), dtype=np.complex128)
-    path[0] = np.eye(qubit.levels)
-    for k in range(count):
-        path[k + 1] = slices[k] @ path[k]
-    turns = [np.exp(2j * math.pi * offset * t) for t in (middles, edges)]
-    segment = PathSegment(start, step, path)
-    return _Nominal(qubit, step, rate, turns[0], edge_rate, turns[1], segment, path[-1])
+@dataclass(frozen=True, slots=True)
+class _Drawn:
+    """What the tables do together, the circuit's own noise apart."""
+
+    correction: ComplexArray
+    infidelity: float
+    error: float
+    leakage: float
+    samples: int
+    method: str
 
 
-def _source(nominal: _Nominal, item: _Fluctuation, volts: float) -> NoiseSource:
+def _drawn_effect(
+    nominal: Nominal, items: Sequence[_Fluctuation], volts: float, samples: int, seed: int
+) -> _Drawn:
+    levels = nominal.qubit.levels
+    if not items:
+        return _Drawn(np.eye(levels**2, dtype=np.complex128), 0.0, 0.0, 0.0, 0, "quadrature")
+    if all(item.density is None for item in items):
+        average = _quadrature(nominal, items)
+        return _Drawn(average, *_without_error(average, levels), 0, "quadrature")
+    planned = [
+        item
+        if item.density is None
+        else replace(item, plan=_in_table(item, lambda item=item: _plan(nominal, item.density)))
+        for item in items
+    ]
+    correction, losses, leaks = _sampled(nominal, planned, volts, samples, seed)
+    error = float(losses.std(ddof=1) / math.sqrt(samples))
+    return _Drawn(correction, float(losses.mean()), error, float(leaks.mean()), samples, "samples")
+
+
+def _without_error(channel: ComplexArray, levels: int) -> tuple[float, float, float]:
+    infidelity, leaked = channel_losses(channel, levels)
+    return infidelity, 0.0, leaked
+
+
+def _source(nominal: Nominal, item: _Fluctuation, volts: float) -> NoiseSource:
     """Give the effect of one source by itself, to first order or by quadrature."""
     kind = item.noise.acts_on
     if item.density is None:
-        infidelity, leaked = _losses(_quadrature(nominal, [item]), nominal.qubit.levels)
+        infidelity, leaked = channel_losses(_quadrature(nominal, [item]), nominal.qubit.levels)
         return NoiseSource(item.name, kind, "quadrature", infidelity, leaked)
     grid = _in_table(item, lambda: _grid(nominal, item.density))
     levels = _in_table(item, lambda: item.density.at(grid.frequencies))
@@ -236,7 +244,7 @@ def _source(nominal: _Nominal, item: _Fluctuation, volts: float) -> NoiseSource:
 
 
 def _filters(
-    nominal: _Nominal, item: _Fluctuation, volts: float, frequencies: FloatArray
+    nominal: Nominal, item: _Fluctuation, volts: float, frequencies: FloatArray
 ) -> tuple[list[FilterFunction], list[ComplexArray]]:
     """Give the filter functions of a source, and the operators that it multiplies."""
     drive = nominal.drive_hamiltonian(nominal.edge_rate)
@@ -255,19 +263,19 @@ def _filters(
     return found, operators
 
 
-def _grid(nominal: _Nominal, density: SpectralDensity | None) -> FrequencyGrid:
+def _grid(nominal: Nominal, density: SpectralDensity | None) -> FrequencyGrid:
     assert density is not None
     low = density.low
     high = min(density.high, nominal.nyquist)
     return frequency_grid(low, high, nominal.duration, density.corners)
 
 
-def _plan(nominal: _Nominal, density: SpectralDensity | None) -> PathPlan:
+def _plan(nominal: Nominal, density: SpectralDensity | None) -> PathPlan:
     assert density is not None
     return plan_paths(density, nominal.rate.size, nominal.step)
 
 
-def _quadrature(nominal: _Nominal, items: Sequence[_Fluctuation]) -> ComplexArray:
+def _quadrature(nominal: Nominal, items: Sequence[_Fluctuation]) -> ComplexArray:
     """Average over what is constant during the gate; the channel before the clean one."""
     kinds = (DetuningNoise, AmplitudeNoise, PhaseNoise)
     spreads = [
@@ -282,13 +290,13 @@ def _quadrature(nominal: _Nominal, items: Sequence[_Fluctuation]) -> ComplexArra
         unitaries = propagate_batch(
             nominal.qubit, BatchDrive(nominal.step, rate, detuning[:, None])
         ).unitaries
-        return _superoperators(nominal.final.conj().T @ unitaries)
+        return superoperators(nominal.final.conj().T @ unitaries)
 
     return np.asarray(gaussian_average(channels, spreads, tolerance=QUADRATURE).value)
 
 
 def _sampled(
-    nominal: _Nominal, items: Sequence[_Fluctuation], volts: float, samples: int, seed: int
+    nominal: Nominal, items: Sequence[_Fluctuation], volts: float, samples: int, seed: int
 ) -> tuple[ComplexArray, FloatArray, FloatArray]:
     """Draw samples; give their mean channel, and the losses and leakage of each."""
     d = nominal.qubit.levels
@@ -298,17 +306,15 @@ def _sampled(
         count = min(CHUNK, samples - first)
         drive = _drawn(nominal, items, volts, seed, first, count)
         unitaries = nominal.final.conj().T @ propagate_batch(nominal.qubit, drive).unitaries
-        total += _superoperators(unitaries).sum(axis=0)
-        block = unitaries[:, :2, :2]
-        kept = np.einsum("bij,bij->b", block, block.conj()).real
-        trace = np.abs(np.einsum("bii->b", block)) ** 2
-        losses[first : first + count] = 1.0 - (trace + kept) / 6.0
-        leaks[first : first + count] = 1.0 - kept / 2.0
+        total += superoperators(unitaries).sum(axis=0)
+        lost, leaked = unitary_losses(unitaries)
+        losses[first : first + count] = lost
+        leaks[first : first + count] = leaked
     return total / samples, losses, leaks
 
 
 def _drawn(
-    nominal: _Nominal,
+    nominal: Nominal,
     items: Sequence[_Fluctuation],
     volts: float,
     seed: int,
@@ -344,24 +350,6 @@ def _paths(item: _Fluctuation, seed: int, first: int, count: int, stream: int) -
         generator(seed, stream, number).standard_normal() for number in range(first, first + count)
     ]
     return item.noise.spread * np.array(draws)[:, None]
-
-
-def _superoperators(unitaries: ComplexArray) -> ComplexArray:
-    """Give conj(U) kron U of each, column-stacking, shape (batch, d^2, d^2)."""
-    batch, d, _ = unitaries.shape
-    product = np.einsum("bij,bkl->bikjl", unitaries.conj(), unitaries)
-    return np.asarray(product.reshape(batch, d * d, d * d))
-
-
-def _losses(channel: ComplexArray, levels: int) -> tuple[float, float]:
-    """Give infidelity against the identity and leakage of a channel, on the two lowest levels."""
-    d = levels
-    blocks = channel.reshape(d, d, d, d)  # column n, row m of E in that order of columns
-    # E[j' d + i', j d + i] maps |i><j| to |i'><j'|.
-    trace = sum(blocks[j, i, j, i] for i in range(2) for j in range(2)).real
-    kept = sum(blocks[k, k, i, i] for i in range(2) for k in range(2)).real
-    # Rounding may leave something below zero of nothing.
-    return max(0.0, float(1.0 - (trace + kept) / 6.0)), max(0.0, float(1.0 - kept / 2.0))
 
 
 def _in_table(item: _Fluctuation, work):  # type: ignore[no-untyped-def]

@@ -5,7 +5,7 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import Annotated, Any, Literal
 
-from cosim.config import Quantity, numbered, read_table
+from cosim.config import Key, Quantity, numbered, read_table
 from cosim.dsp.noise.density import Outside, PowerLaw, SpectralDensity, density_from_points
 from cosim.dsp.noise.oscillator import (
     amplitude_noise_density,
@@ -13,7 +13,7 @@ from cosim.dsp.noise.oscillator import (
     phase_noise_density,
 )
 from cosim.errors import InputError, TestbenchError, near_names
-from cosim.schema import Frequency, PositiveFrequency, PositiveTime
+from cosim.schema import Frequency, PositiveFrequency, PositiveTime, Temperature
 
 # ngspice's flicker noise, and most data sheets, give the level of 1/f noise at this frequency.
 _REFERENCE = 1.0  # Hz
@@ -316,7 +316,60 @@ class ProbeNoise:
         return _law("V", 2.0, self.white, None, 0.0, 0.0, math.inf)
 
 
-Noise = DetuningNoise | AmplitudeNoise | PhaseNoise | ProbeNoise
+@dataclass(frozen=True, slots=True)
+class NetlistNoise:
+    """A table [[noise]] with acts_on = "probe" and from = "netlist": the deck's own noise there.
+
+    Currents that are made from a seed are injected at every device, along the run: a circuit that
+    is switched or modulated has no noise around one operating point.
+
+    Parameters
+    ----------
+    acts_on : "probe"
+        What fluctuates.
+    origin : "netlist"
+        The key `from`.
+    name : str
+        For messages and results.
+    seeds : int
+        Noisy runs of the circuit, at least 2.
+    resistor_temperature, channel_temperature, series_temperature : float or None
+        Noise temperature in K of resistors, of channels, and of series resistances of transistors
+        and diodes; None: the device temperature, which decks with cards fitted at 4 K have warmer.
+    gamma : float
+        Excess factor of channels.
+    by_device : bool
+        Whether each device is injected alone as well, in a run of its own.
+    """
+
+    acts_on: Literal["probe"]
+    origin: Annotated[Literal["netlist"], Key("from")]
+    name: str = ""
+    seeds: int = 8
+    resistor_temperature: Temperature | None = None
+    channel_temperature: Temperature | None = None
+    series_temperature: Temperature | None = None
+    gamma: float = 2.0 / 3.0
+    by_device: bool = False
+
+    def __post_init__(self) -> None:
+        if not 2 <= self.seeds <= 100_000:
+            raise InputError(f"key 'seeds': wanted 2 to 100000, got {self.seeds}")
+        if not self.gamma > 0.0:
+            raise InputError(f"key 'gamma': wanted more than 0, got {self.gamma:g}")
+
+    @property
+    def spread(self) -> float:
+        """Nothing of it is constant during a gate."""
+        return 0.0
+
+    def density(self, carrier: float) -> SpectralDensity | None:
+        """It has none: the noise of a switched circuit is not stationary."""
+        del carrier
+        return None
+
+
+Noise = DetuningNoise | AmplitudeNoise | PhaseNoise | ProbeNoise | NetlistNoise
 
 KINDS: dict[str, type[Any]] = {
     "detuning": DetuningNoise,
@@ -357,5 +410,6 @@ def read_noises(tables: object, *, file: str) -> tuple[Noise, ...]:
             got = "it is missing" if acts_on is None else f"got {acts_on!r}"
             hint = near_names(str(acts_on), KINDS)
             raise TestbenchError(f"{where}, key 'acts_on': {got}", hint=hint)
-        found.append(read_table(table, KINDS[acts_on], file=file, name="noise", number=number))
+        cls = NetlistNoise if "from" in table else KINDS[acts_on]
+        found.append(read_table(table, cls, file=file, name="noise", number=number))
     return tuple(found)

@@ -22,7 +22,8 @@ class NoiseSource:
     acts_on : str
         "detuning", "amplitude", "phase" or "probe".
     method : str
-        "filter function", or "quadrature" for what is constant during a gate.
+        "filter function", "quadrature" for what is constant during a gate, or "injection" for the
+        circuit's own noise.
     infidelity : float
         1 - F_avg against the clean gate, leakage included; of a phase in the qubit's frame.
     leakage : float
@@ -34,6 +35,10 @@ class NoiseSource:
         Bound on what it costs above `highest_frequency`, which no sample on this grid carries.
     highest_frequency : float
         In Hz; NaN for quadrature.
+    standard_error : float
+        Of the infidelity, from the seeds of an injection; 0 for others.
+    devices : dict of float
+        Device in ngspice's name -> its part of the infidelity, where it was asked for.
     """
 
     name: str
@@ -44,6 +49,8 @@ class NoiseSource:
     oscillator_frame: float = field(default=math.nan, metadata=_unit("1"))
     unreached: float = field(default=0.0, metadata=_unit("1"))
     highest_frequency: float = field(default=math.nan, metadata=_unit("Hz"))
+    standard_error: float = field(default=0.0, metadata=_unit("1"))
+    devices: dict[str, float] = field(default_factory=dict, metadata=_unit("1"))
 
 
 @dataclass(frozen=True, slots=True)

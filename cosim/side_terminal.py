@@ -10,6 +10,8 @@ from rich.text import Text
 from cosim.side_results import IdleEffect, NoiseEffect, SpectatorEffect
 from cosim.units import format_quantity
 
+MOST_DEVICES = 5  # named in the table
+
 
 def noise_parts(effect: NoiseEffect | None) -> list[RenderableType]:
     """Lay out what noise does.
@@ -32,12 +34,18 @@ def noise_parts(effect: NoiseEffect | None) -> list[RenderableType]:
             f"(seed {effect.seed}), {effect.first_order:.3e} to first order"
         )
     else:
-        how = f"{effect.infidelity:.3e} by quadrature"
+        error = f" ± {effect.standard_error:.1e}" * (effect.standard_error > 0.0)
+        how = f"{effect.infidelity:.3e}{error} by {effect.method}"
     table = _headed("source", "acts on", "1 - F_avg", "leakage", "by")
     for item in effect.sources:
         by = item.method
         if not math.isnan(item.oscillator_frame):
             by += f"; in the oscillator's frame {item.oscillator_frame:.3e}"
+        if item.standard_error:
+            by += f", ± {item.standard_error:.1e}"
+        if item.devices:
+            most = list(item.devices.items())[:MOST_DEVICES]
+            by += "; most: " + ", ".join(f"{name} {value:.1e}" for name, value in most)
         cells = (f"{item.infidelity:.3e}", f"{item.leakage:.1e}", by)
         table.add_row(item.name, item.acts_on, *cells)
     return [Text(""), Text(f"noise costs {how}; it is part of the numbers above"), table]

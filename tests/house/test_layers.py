@@ -45,6 +45,8 @@ FLOORS = {
     "line": 4,
     "noises": 3,
     "noise_effect": 4,
+    "noise_frame": 4,
+    "netlist_noise": 4,
     "neighbours": 4,
     "side_results": 3,
     "checks": 6,
