@@ -6,13 +6,11 @@ the table, the key, what was wanted, what was got, and the nearest valid name.
 """
 
 import dataclasses
-import math
 import tomllib
 from collections.abc import Mapping
 from pathlib import Path
-from typing import Any, TypeVar, get_args, get_origin, get_type_hints
+from typing import Any, TypeVar, get_type_hints
 
-import tomli_w
 from pydantic import GetCoreSchemaHandler, TypeAdapter, ValidationError
 from pydantic_core import CoreSchema, core_schema
 
@@ -276,11 +274,11 @@ def read_table(
     if not isinstance(table, Mapping):
         raise TestbenchError(f"{where}: wanted a table, got {table!r}")
     hints = get_type_hints(cls, include_extras=True)
-    fields = {_key_of(hints[name], name): name for name in _field_names(cls)}
+    fields = {key_of(hints[name], name): name for name in _field_names(cls)}
     check_keys(table, list(fields), where)
     for item in dataclasses.fields(cls):  # type: ignore[arg-type]
         required = item.default is item.default_factory is dataclasses.MISSING
-        key = _key_of(hints[item.name], item.name)
+        key = key_of(hints[item.name], item.name)
         if required and key not in table:
             raise TestbenchError(f"{where}: the key '{key}' is missing")
     values = {
@@ -355,74 +353,21 @@ def _frozen(value: object) -> object:
     return value
 
 
-def write_tables(title: str, tables: Mapping[str, object]) -> str:
-    """Write frozen dataclasses as the TOML text that reads back as the same ones.
+def key_of(hint: Any, name: str) -> str:
+    """Give the key of a field in the file.
 
     Parameters
     ----------
-    title : str
-        Value of the key `title`.
-    tables : mapping
-        Table name to frozen dataclass, or to a tuple of them for an array of tables; a mapping is
-        written as it stands.
+    hint : type
+        The field's annotation, with its extras.
+    name : str
+        The field's name.
 
     Returns
     -------
     str
-        Quantities as text in SI units, with all digits.
+        What `Key` says, else the name.
     """
-    written: dict[str, Any] = {"title": title}
-    for name, table in tables.items():
-        if isinstance(table, tuple):
-            written[name] = [_written_table(item) for item in table]
-        elif isinstance(table, Mapping):
-            written[name] = table
-        else:
-            written[name] = _written_table(table)
-    return tomli_w.dumps(written)
-
-
-def _written_table(table: object) -> dict[str, Any]:
-    hints = get_type_hints(type(table), include_extras=True)
-    written = {}
-    for item in dataclasses.fields(table):  # type: ignore[arg-type]
-        value = getattr(table, item.name)
-        # What is left out in TOML is what TOML cannot say: nothing, and infinity.
-        if value not in (None, {}, (), math.inf):
-            written[_key_of(hints[item.name], item.name)] = _written(value, hints[item.name])
-    return written
-
-
-def _unit_of(hint: Any) -> str:
-    found = [mark.unit for mark in getattr(hint, "__metadata__", ()) if isinstance(mark, Quantity)]
-    inner = [unit for part in get_args(hint) if (unit := _unit_of(part))]
-    return (found + inner + [""])[0]
-
-
-def _written(value: Any, hint: Any) -> Any:
-    if isinstance(value, Level):
-        return f"{value.value!r} {value.unit}"
-    if dataclasses.is_dataclass(value):
-        return _written_table(value)
-    if isinstance(value, tuple):
-        hints = _hints_of_items(hint, len(value))
-        return [_written(item, part) for item, part in zip(value, hints, strict=True)]
-    unit = _unit_of(hint)
-    if isinstance(value, float) and unit:
-        return f"{value!r} {unit}"
-    return value
-
-
-def _hints_of_items(hint: Any, count: int) -> tuple[Any, ...]:
-    """Give the annotation of each item of a tuple that is annotated, or may also be None."""
-    for part in (hint, *get_args(hint)):
-        if get_origin(part) is tuple:
-            found = get_args(part)
-            return (found[0],) * count if found[-1] is ... else found
-    return (None,) * count
-
-
-def _key_of(hint: Any, name: str) -> str:
     marks = [mark.name for mark in getattr(hint, "__metadata__", ()) if isinstance(mark, Key)]
     return marks[0] if marks else name
 

@@ -7,7 +7,7 @@ from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
-from cosim.config import check_keys, read_table, read_toml, write_tables
+from cosim.config import check_keys, read_table, read_toml
 from cosim.errors import TestbenchError, near_names
 from cosim.noises import Noise, read_noises
 from cosim.schema import (
@@ -22,6 +22,7 @@ from cosim.schema import (
     WaveformTable,
 )
 from cosim.stimuli import Stimulus, read_stimuli
+from cosim.toml_writing import write_tables
 
 # Tables of which there may be several.
 ARRAYS = ("stimulus", "noise", "spectator")

@@ -15,9 +15,10 @@ from cosim.circuit.netlist import (
     with_parameters,
     with_terminations,
 )
-from cosim.config import read_table, write_tables
+from cosim.config import read_table
 from cosim.errors import DeckError, InputError, TestbenchError, UnknownNameError
 from cosim.schema import NetlistTable
+from cosim.toml_writing import write_tables
 from tests.circuit.batch import DECKS, OPTIONS, ROUNDING, WRITING, copy_decks, original, output, run
 
 # Deck, how it is altered, and the same edit by hand: (old text, new text) pairs.

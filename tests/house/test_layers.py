@@ -15,6 +15,7 @@ FLOORS = {
     "errors": 0,
     "units": 0,
     "config": 0,
+    "toml_writing": 0,
     "waveform": 0,
     "archive": 1,
     "circuit": 1,
