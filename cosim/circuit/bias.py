@@ -75,8 +75,8 @@ class CleanRun:
 def clean_run(deck: Deck, request: TransientRequest, probes: Sequence[str]) -> CleanRun:
     """Run a deck without noise and save the bias of every device that makes some.
 
-    Measured on a modulator of 52 MOSFETs, all that is saved of its 64 devices adds a fifth to the
-    run's time.
+    Measured on a modulator of 52 MOSFETs and 12 resistors, its 200 vectors double the run's time:
+    each takes 0.3 us at a time point.
 
     Parameters
     ----------

@@ -6,7 +6,7 @@ for. Noise that is slow is the same numbers with their spectrum shaped, see `_sl
 """
 
 import math
-from collections.abc import Collection, Mapping
+from collections.abc import Collection, Sequence
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -16,66 +16,14 @@ from scipy.interpolate import CubicSpline
 from cosim.circuit.bias import CleanRun, conductance, junction_currents
 from cosim.circuit.flicker import Flicker, card_flicker, flicker_unread
 from cosim.circuit.inventory import NoisyDevice
-from cosim.circuit.noise_parts import CHANNEL, THERMAL, NoiseTemperatures
+from cosim.circuit.noise_parts import CHANNEL, THERMAL
+from cosim.circuit.noise_settings import NoiseSettings as NoiseSettings
 from cosim.errors import InputError, UnknownNameError, near_names
 from cosim.waveform import FloatArray
 
 _FINER = 4
-CHANNELS = ("conductance", "transconductance")
+_MOST_NUMBERS = 10**8  # of one run: 0.8 GB, and as much in files
 _JUNCTIONS = {"ic": (0, 2), "ib": (1, 2), "id": (0, 1)}  # Between which terminals they flow.
-
-
-@dataclass(frozen=True, slots=True)
-class NoiseSettings:
-    """How the noise of devices is made.
-
-    Parameters
-    ----------
-    temperatures : NoiseTemperatures
-        Of resistors and channels in K; None: the device temperature.
-    gamma : float
-        Excess factor of channels, 2/3 for a long one.
-    channel : str
-        "conductance": S = 4 k T gamma (gm + gds)(1 + a + a^2)/(1 + a) with a = gds/(gm + gds), the
-        charge-based noise of a long channel, which is that of its conductance at no voltage and
-        2/3 of gm in saturation; measured, BSIM4's own within 10 % in both. "transconductance":
-        4 k T gamma gm, ngspice's formula for level 1 to 3, by which a closed switch is silent.
-    bandwidth : float or None
-        Where the band ends, in Hz, at most half over the step; None: there.
-    flicker : mapping of str to Flicker
-        1/f noise of devices by their name in ngspice or their model's name; a name of a device
-        goes before one of a model, and both before what the card says.
-    slowest : float or None
-        Where the band of 1/f noise begins, in Hz: below one over the run's time it is a constant
-        of the run. None: half of that.
-    scale : float
-        Factor by which the currents are injected and the result is divided again.
-
-    Raises
-    ------
-    InputError
-        If a value is out of its range.
-    """
-
-    temperatures: NoiseTemperatures = field(default_factory=NoiseTemperatures)
-    gamma: float = 2 / 3
-    channel: str = "conductance"
-    bandwidth: float | None = field(default=None, metadata={"unit": "Hz"})
-    flicker: Mapping[str, Flicker] = field(default_factory=dict)
-    slowest: float | None = field(default=None, metadata={"unit": "Hz"})
-    scale: float = 1.0
-
-    def __post_init__(self) -> None:
-        for name in ("gamma", "bandwidth", "slowest", "scale"):
-            value = getattr(self, name)
-            if value is not None and not (math.isfinite(value) and value > 0):
-                raise InputError(
-                    f"NoiseSettings.{name} must be a positive finite number, got {value!r}"
-                )
-        if self.channel not in CHANNELS:
-            raise InputError(
-                f"NoiseSettings.channel must be one of {', '.join(CHANNELS)}, got {self.channel!r}"
-            )
 
 
 @dataclass(frozen=True, slots=True)
@@ -144,8 +92,10 @@ def _widths(grid: FloatArray) -> FloatArray:
     return np.concatenate([steps[:1], (steps[:-1] + steps[1:]) / 2, steps[-1:]])
 
 
-def noise_currents(clean: CleanRun, settings: NoiseSettings) -> tuple[NoiseCurrent, ...]:
-    """Give the densities of all noise currents along a clean run.
+def noise_currents(
+    clean: CleanRun, settings: NoiseSettings, devices: Collection[str] | None = None
+) -> tuple[NoiseCurrent, ...]:
+    """Give the densities of noise currents along a clean run.
 
     Parameters
     ----------
@@ -153,6 +103,8 @@ def noise_currents(clean: CleanRun, settings: NoiseSettings) -> tuple[NoiseCurre
         The clean run.
     settings : NoiseSettings
         Temperatures in K and the rest.
+    devices : collection of str or None
+        Names in ngspice of the devices whose currents are wanted; None: of all.
 
     Returns
     -------
@@ -163,21 +115,28 @@ def noise_currents(clean: CleanRun, settings: NoiseSettings) -> tuple[NoiseCurre
     Raises
     ------
     UnknownNameError
-        If 1/f noise is given for a name that is neither a device nor a model.
+        If there is no such device, or 1/f noise or an excess factor is given for a name that is
+        neither a device nor a model.
     """
-    devices = clean.inventory.devices
-    known = {device.name for device in devices} | {device.model for device in devices} - {""}
-    for name in settings.flicker:
+    present = {device.name: device for device in clean.inventory.devices}
+    wanted = present.keys() if devices is None else {name.strip().lower() for name in devices}
+    for name in sorted(wanted - present.keys()):
+        raise UnknownNameError(
+            f"'{name}' is no device whose noise is injected", hint=near_names(name, present)
+        )
+    known = present.keys() | {device.model for device in present.values()} - {""}
+    for name in (*settings.flicker, *settings.gammas):
         if name.lower() not in known:
             raise UnknownNameError(
-                f"1/f noise is given for '{name}', which is no device that makes noise and no "
-                "model of one",
+                f"the noise of '{name}' is given, which is no device that makes noise and no model "
+                "of one",
                 hint=near_names(name.lower(), known),
             )
     grid = noise_grid(clean)
     found: list[NoiseCurrent] = []
-    for device in devices:
-        found += _currents(clean, settings, device, grid)
+    for name, device in present.items():
+        if name in wanted:
+            found += _currents(clean, settings, device, grid)
     return tuple(found)
 
 
@@ -199,15 +158,10 @@ def left_out(clean: CleanRun, settings: NoiseSettings) -> tuple[str, ...]:
     unread = {
         device.name: flicker_unread(clean.deck, device)
         for device in clean.inventory.devices
-        if _given(settings, device) is None
+        if settings.flicker_of(device) is None
     }
     texts = (f"{name}: {text}" for name, text in unread.items() if text)
     return (*clean.inventory.left_out, *texts)
-
-
-def _given(settings: NoiseSettings, device: NoisyDevice) -> Flicker | None:
-    lowered = {name.lower(): flicker for name, flicker in settings.flicker.items()}
-    return lowered.get(device.name, lowered.get(device.model))
 
 
 def _currents(
@@ -227,7 +181,7 @@ def _currents(
     if device.kind in ("mos", "jfet"):
         carried = {"id": along(clean.vector(device, "id"))}
         conducting = _channel(clean, settings, device)
-        whites = {"id": thermal(CHANNEL) * settings.gamma * along(conducting)}
+        whites = {"id": thermal(CHANNEL) * settings.gamma_of(device) * along(conducting)}
         ends = {"id": _between(device, (0, 2))}
     else:
         carried = {name: along(i) for name, i in junction_currents(clean, device).items()}
@@ -270,7 +224,7 @@ def _flicker(
     clean: CleanRun, settings: NoiseSettings, device: NoisyDevice, current: FloatArray
 ) -> tuple[FloatArray, float]:
     """Give the density at 1 Hz along the run, and the power of the frequency."""
-    given = _given(settings, device)
+    given = settings.flicker_of(device)
     if given is None:
         card = card_flicker(clean.deck, device)
         if card is None:
@@ -287,11 +241,7 @@ def _flicker(
 
 
 def noise_samples(
-    clean: CleanRun,
-    settings: NoiseSettings,
-    currents: tuple[NoiseCurrent, ...],
-    seed: int,
-    devices: Collection[str] | None,
+    clean: CleanRun, settings: NoiseSettings, currents: Sequence[NoiseCurrent], seed: int
 ) -> FloatArray:
     """Draw the noise currents of one run.
 
@@ -301,33 +251,23 @@ def noise_samples(
         The clean run.
     settings : NoiseSettings
         Band in Hz and scale.
-    currents : tuple of NoiseCurrent
+    currents : sequence of NoiseCurrent
         From `noise_currents`.
     seed : int
         Not negative. The numbers of a current depend on it, on the device's name and on nothing
         else: one device alone has those that it has among all.
-    devices : collection of str or None
-        Names in ngspice of the devices that make noise in this run; None: all of them.
 
     Returns
     -------
     ndarray, shape (currents, n)
-        In A on the grid of `noise_grid`, times the scale; zero for the others. The white part is
-        zero at t = 0, so that it is no part of the operating point.
+        In A on the grid of `noise_grid`, times the scale. The white part is zero at t = 0, so that
+        it is no part of the operating point.
 
     Raises
     ------
     InputError
-        If the band is wider than the grid's, or its ends are not in order.
-    UnknownNameError
-        If there is no such device.
+        If the seed is negative, the band is wider than the grid's, or there are too many numbers.
     """
-    known = {current.device for current in currents}
-    wanted = known if devices is None else {name.strip().lower() for name in devices}
-    for name in sorted(wanted - known):
-        raise UnknownNameError(
-            f"'{name}' is no device whose noise is injected", hint=near_names(name, known)
-        )
     if seed < 0:
         raise InputError(f"the seed of noise must not be negative, got {seed}")
     step = clean.request.step
@@ -339,18 +279,23 @@ def noise_samples(
             hint="Take a shorter step.",
         )
     grid = noise_grid(clean)
-    out = np.zeros((len(currents), grid.size))
+    if len(currents) * grid.size > _MOST_NUMBERS:
+        raise InputError(
+            f"{len(currents)} noise currents at {grid.size} times are more than "
+            f"{_MOST_NUMBERS:.0e} numbers",
+            hint="Name fewer devices at a time, or take a shorter run.",
+        )
+    out = np.empty((len(currents), grid.size))
     for place, current in enumerate(currents):
-        if current.device in wanted:
-            again = sum(other.device == current.device for other in currents[:place])
-            # A seed of its own for each: numbers must not depend on which others there are.
-            random = np.random.default_rng([seed, again, *current.device.encode()])
-            white = _white_numbers(random, grid, step, settings.bandwidth)
-            out[place] = np.sqrt(current.white) * white
-            out[place, 0] = 0.0
-            if current.slow.any():
-                slow = _slow_numbers(random, grid, step, current.exponent, settings)
-                out[place] += np.sqrt(current.slow) * slow
+        again = sum(other.device == current.device for other in currents[:place])
+        # A seed of its own for each: numbers must not depend on which others there are.
+        random = np.random.default_rng([seed, again, *current.device.encode()])
+        white = _white_numbers(random, grid, step, settings.bandwidth)
+        out[place] = np.sqrt(current.white) * white
+        out[place, 0] = 0.0
+        if current.slow.any():
+            slow = _slow_numbers(random, grid, step, current.exponent, settings)
+            out[place] += np.sqrt(current.slow) * slow
     return settings.scale * out
 
 

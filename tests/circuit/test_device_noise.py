@@ -9,16 +9,12 @@ from scipy import constants, signal
 from cosim.circuit.analysis import TransientRequest
 from cosim.circuit.bias import CleanRun, clean_run
 from cosim.circuit.flicker import Flicker
-from cosim.circuit.generators import (
-    NoiseSettings,
-    noise_currents,
-    noise_grid,
-    noise_samples,
-)
+from cosim.circuit.generators import noise_currents, noise_grid, noise_samples
 from cosim.circuit.injection import device_noise, with_currents
 from cosim.circuit.netlist import deck_from_text
 from cosim.circuit.noise import NoiseRequest, simulate_noise
 from cosim.circuit.noise_parts import NoiseTemperatures
+from cosim.circuit.noise_settings import NoiseSettings
 from cosim.circuit.simulator import simulate
 from cosim.errors import InputError, UnknownNameError
 from tests import sources
@@ -81,7 +77,7 @@ class TestResistor:
     def test_is_the_filtered_current(self) -> None:
         run = clean(LOW_PASS.format(c="1p"), ["v(out)"], count=2000)
         currents = noise_currents(run, NoiseSettings())
-        drawn = noise_samples(run, NoiseSettings(), currents, 3, None)[0]
+        drawn = noise_samples(run, NoiseSettings(), currents, 3)[0]
         grid = noise_grid(run)
         noise = device_noise(run, 3).samples["v(out)"][run.result.time.searchsorted(grid)]
         # The current leaves "in" and enters "out", into R beside C, by the trapezoidal rule.
@@ -166,6 +162,17 @@ class TestActive:
         # operating points agree within reltol; a diode's current within that of its exponent.
         assert white[device.split()[0]] / white["rd"] == pytest.approx(small, rel=2e-4, abs=0.0)
 
+    def test_an_excess_factor_goes_by_device_then_by_model(self) -> None:
+        body = "vd d 0 1\nm1 d d 0 0 n w=2u l=1u\nm2 d d 0 0 n w=2u l=1u\n.model n nmos level=1"
+        run = clean(body, ["i(vd)"], count=10)
+        settings = NoiseSettings(gamma=1.0, gammas={"N": 2.0, "M2": 3.0})
+        plain = noise_currents(run, NoiseSettings(gamma=1.0))
+        given = noise_currents(run, settings)
+        ratios = [b.white[-1] / a.white[-1] for a, b in zip(plain, given, strict=True)]
+        assert ratios == pytest.approx([2.0, 3.0], rel=1e-12)
+        with pytest.raises(UnknownNameError, match="'m3'"):
+            noise_currents(run, NoiseSettings(gammas={"m3": 1.0}))
+
     def test_a_bsim4_channel_is_near_to_its_own_noise(self) -> None:
         # A long channel: the model of the charge, which the conductance stands for, is BSIM4's.
         # Measured: 3 % in the triode region and 1 % in saturation; the transconductance alone
@@ -210,7 +217,7 @@ class TestSeeds:
 
     def test_other_seeds_and_other_devices_are_not_correlated(self, network: CleanRun) -> None:
         currents = noise_currents(network, NoiseSettings())
-        drawn = [noise_samples(network, NoiseSettings(), currents, seed, None) for seed in (0, 1)]
+        drawn = [noise_samples(network, NoiseSettings(), currents, seed) for seed in (0, 1)]
         table = np.corrcoef(np.vstack(drawn))
         apart = table[~np.eye(6, dtype=bool)]
         assert np.abs(apart).max() < SIGMAS / math.sqrt(5000)
@@ -244,7 +251,7 @@ class TestBand:
         assert noise.highest_frequency == 1e9
         assert noise.lowest_frequency == pytest.approx(1 / (20_000 * STEP))
         currents = noise_currents(run, settings)
-        drawn = noise_samples(run, settings, currents, 1, None)[0]
+        drawn = noise_samples(run, settings, currents, 1)[0]
         density = np.abs(np.fft.rfft(drawn * signal.windows.hann(drawn.size))) ** 2
         f = np.fft.rfftfreq(drawn.size, STEP)
         inside, outside = density[f < 0.99e9].mean(), density[f > 1.05e9].mean()
@@ -273,7 +280,7 @@ class TestFlicker:
         # With a channel of almost no noise of its own the drawn numbers are 1/f alone.
         settings = NoiseSettings(NoiseTemperatures(channel=1e-6), flicker={"N": given}, slowest=1.0)
         currents = noise_currents(run, settings)
-        drawn = [noise_samples(run, settings, currents, seed, None)[0] for seed in range(200)]
+        drawn = [noise_samples(run, settings, currents, seed)[0] for seed in range(200)]
         spectra = np.abs(np.fft.rfft(np.array(drawn)[:, :4096], axis=1)) ** 2
         density = 2 * STEP * spectra.mean(axis=0) / 4096
         f = np.fft.rfftfreq(4096, STEP)
@@ -354,7 +361,14 @@ class TestCurrents:
 
 @pytest.mark.parametrize(
     "values",
-    [{"gamma": 0.0}, {"scale": -1.0}, {"bandwidth": math.inf}, {"slowest": 0.0}, {"channel": "gm"}],
+    [
+        {"gamma": 0.0},
+        {"scale": -1.0},
+        {"bandwidth": math.inf},
+        {"slowest": 0.0},
+        {"channel": "gm"},
+        {"gammas": {"m1": -1.0}},
+    ],
 )
 def test_impossible_settings_are_refused(values: dict[str, float]) -> None:
     with pytest.raises(InputError, match="must be"):

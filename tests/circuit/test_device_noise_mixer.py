@@ -8,10 +8,11 @@ from scipy import constants
 
 from cosim.circuit.analysis import TransientRequest
 from cosim.circuit.bias import CleanRun, clean_run
-from cosim.circuit.generators import NoiseSettings, noise_currents, noise_grid, noise_samples
+from cosim.circuit.generators import noise_currents, noise_grid, noise_samples
 from cosim.circuit.injection import device_noise
 from cosim.circuit.netlist import deck_from_text
 from cosim.circuit.noise import NoiseRequest, simulate_noise
+from cosim.circuit.noise_settings import NoiseSettings
 from cosim.circuit.stationarity import check_stationarity
 from cosim.errors import ConvergenceError
 from cosim.waveform import ComplexArray, FloatArray
@@ -73,9 +74,8 @@ class TestTail:
 
     def test_conversion(self, validate: Validate, mixer: CleanRun) -> None:
         settings = NoiseSettings(bandwidth=BAND)
-        currents = noise_currents(mixer, settings)
-        place = [current.device for current in currents].index(TAIL)
-        drawn = noise_samples(mixer, settings, currents, 3, [TAIL])[place]
+        currents = noise_currents(mixer, settings, [TAIL])
+        drawn = noise_samples(mixer, settings, currents, 3)[0]
         noise = device_noise(mixer, 3, settings, devices=[TAIL])
         assert noise.devices == (TAIL,)
         near = np.arange(-39, 40)
@@ -107,9 +107,8 @@ class TestTail:
 
     def test_one_and_twenty_microampere_agree(self, mixer: CleanRun) -> None:
         quiet, loud = (NoiseSettings(bandwidth=BAND, scale=scale) for scale in (10.0, 200.0))
-        currents = noise_currents(mixer, quiet)
-        place = [current.device for current in currents].index(TAIL)
-        drawn = noise_samples(mixer, quiet, currents, 3, [TAIL])[place]
+        currents = noise_currents(mixer, quiet, [TAIL])
+        drawn = noise_samples(mixer, quiet, currents, 3)[0]
         assert 0.5e-6 < float(np.std(drawn)) < 2e-6
         first, second = (
             device_noise(mixer, 3, settings, devices=[TAIL]).samples[PROBE]

@@ -7,10 +7,10 @@ import pytest
 
 from cosim.circuit.analysis import TransientRequest
 from cosim.circuit.bias import CleanRun, clean_run
-from cosim.circuit.generators import NoiseSettings
 from cosim.circuit.injection import device_noise
 from cosim.circuit.netlist import load_deck, with_parameters, with_terminations
 from cosim.circuit.noise_parts import NoiseTemperatures
+from cosim.circuit.noise_settings import NoiseSettings
 from cosim.circuit.stationarity import check_stationarity
 
 pytestmark = [pytest.mark.ngspice, pytest.mark.full]
