@@ -15,10 +15,13 @@ import math
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field
 
+import numpy as np
+
 from cosim.circuit.deck import Deck
 from cosim.circuit.hierarchy import structure_of
 from cosim.circuit.settings import CELSIUS, written_temperature
 from cosim.errors import InputError
+from cosim.waveform import FloatArray
 
 THERMAL, CHANNEL, SERIES, SHOT, FLICKER = "thermal", "channel", "series", "shot", "flicker"
 PARTS = (THERMAL, CHANNEL, SERIES, SHOT, FLICKER)
@@ -190,3 +193,29 @@ def device_temperature(deck: Deck, requested: float | None) -> float:
         f"the device temperature is written as '{written[0]}', which only ngspice can work out",
         hint="Give the device temperature with the request.",
     )
+
+
+def band_power(frequency: FloatArray, density: FloatArray) -> float:
+    """Integrate a spectral density over its grid, as a power law from point to point.
+
+    Parameters
+    ----------
+    frequency : ndarray, shape (n,)
+        In Hz, rising, positive.
+    density : ndarray, shape (n,)
+        In V^2/Hz, not negative.
+
+    Returns
+    -------
+    float
+        In V^2. Where a density is zero its neighbourhood is integrated along straight lines.
+    """
+    low, high = density[:-1], density[1:]
+    straight = (low + high) / 2 * np.diff(frequency)
+    positive = (low > 0) & (high > 0)
+    span = np.log(frequency[1:] / frequency[:-1])
+    rise = np.log(np.where(positive, high, 1.0) / np.where(positive, low, 1.0)) + span
+    # The integral of a power law is the logarithmic mean of f S(f) times the logarithm's span.
+    small = np.abs(rise) < 1e-8
+    mean = np.where(small, 1.0, np.expm1(rise) / np.where(small, 1.0, rise))
+    return float(np.sum(np.where(positive, low * frequency[:-1] * span * mean, straight)))

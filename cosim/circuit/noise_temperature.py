@@ -6,7 +6,7 @@ from dataclasses import replace
 import numpy as np
 
 from cosim.circuit.noise import NoiseResult
-from cosim.circuit.noise_parts import NoiseTemperatures, factors
+from cosim.circuit.noise_parts import NoiseTemperatures, band_power, factors
 from cosim.errors import InputError
 from cosim.waveform import FloatArray
 
@@ -57,29 +57,3 @@ def at_noise_temperatures(result: NoiseResult, temperatures: NoiseTemperatures) 
         total_output=math.sqrt(band_power(result.frequency, output)),
         by_device=parts,
     )
-
-
-def band_power(frequency: FloatArray, density: FloatArray) -> float:
-    """Integrate a spectral density over its grid, as a power law from point to point.
-
-    Parameters
-    ----------
-    frequency : ndarray, shape (n,)
-        In Hz, rising, positive.
-    density : ndarray, shape (n,)
-        In V^2/Hz, not negative.
-
-    Returns
-    -------
-    float
-        In V^2. Where a density is zero its neighbourhood is integrated along straight lines.
-    """
-    low, high = density[:-1], density[1:]
-    straight = (low + high) / 2 * np.diff(frequency)
-    positive = (low > 0) & (high > 0)
-    span = np.log(frequency[1:] / frequency[:-1])
-    rise = np.log(np.where(positive, high, 1.0) / np.where(positive, low, 1.0)) + span
-    # The integral of a power law is the logarithmic mean of f S(f) times the logarithm's span.
-    small = np.abs(rise) < 1e-8
-    mean = np.where(small, 1.0, np.expm1(rise) / np.where(small, 1.0, rise))
-    return float(np.sum(np.where(positive, low * frequency[:-1] * span * mean, straight)))

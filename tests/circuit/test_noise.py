@@ -269,6 +269,12 @@ class TestVerdict:
         with pytest.raises(SimulatorCrashError, match=what):
             self.judged(vectors)
 
+    def test_a_total_that_is_not_finite_is_integrated_here(self) -> None:
+        # 36 of the white part, and 4 (f/10)^-k with 10^k = 4 over the next decade.
+        slope = 1 - math.log10(4.0)
+        wanted = math.sqrt(36.0 + (100.0 - 40.0) / slope)
+        assert self.judged({"onoise_total": [math.nan]}).total_output == pytest.approx(wanted)
+
     def test_a_density_that_is_not_finite(self) -> None:
         with pytest.raises(ConvergenceError, match="onoise_spectrum is not finite"):
             self.judged({"onoise_spectrum": [4.0, math.nan, 1.0]})

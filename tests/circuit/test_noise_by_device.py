@@ -12,8 +12,8 @@ from cosim.circuit.bias import clean_run, conductance
 from cosim.circuit.inventory import device_names, noisy_devices
 from cosim.circuit.netlist import deck_from_text
 from cosim.circuit.noise import NoiseRequest, NoiseResult, simulate_noise
-from cosim.circuit.noise_parts import NoiseTemperatures
-from cosim.circuit.noise_temperature import at_noise_temperatures, band_power
+from cosim.circuit.noise_parts import NoiseTemperatures, band_power
+from cosim.circuit.noise_temperature import at_noise_temperatures
 from cosim.errors import InputError
 from tests import sources
 from tests.validation import Validate

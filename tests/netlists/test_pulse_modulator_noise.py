@@ -1,5 +1,6 @@
-"""Oracle: linearity, superposition, and the square root of the noise temperature."""
+"""Oracle: linearity, superposition, and ngspice's `.noise` where the deck does not switch."""
 
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -7,8 +8,10 @@ import pytest
 
 from cosim.circuit.analysis import TransientRequest
 from cosim.circuit.bias import CleanRun, clean_run
+from cosim.circuit.deck import SourceLine
 from cosim.circuit.injection import device_noise
 from cosim.circuit.netlist import load_deck, with_parameters, with_terminations
+from cosim.circuit.noise import NoiseRequest, simulate_noise
 from cosim.circuit.noise_parts import NoiseTemperatures
 from cosim.circuit.noise_settings import NoiseSettings
 from cosim.circuit.stationarity import check_stationarity
@@ -49,3 +52,35 @@ def test_noise_is_linear_and_adds_up(pulse: CleanRun) -> None:
     # with the square of its size.
     assert np.std(sum(halves) - whole.samples[PROBE]) < 0.01 * size
     assert np.std(warm.samples[PROBE] / np.sqrt(10) - whole.samples[PROBE]) < 0.02 * size
+
+
+def test_at_rest_it_is_that_of_small_signals() -> None:
+    deck = with_terminations(load_deck(str(DECK)), ("rf_p", "rf_n"), 50.0)
+    deck = with_parameters(deck, {"lo_on": 0.0, "t_start": 1e-6, "t_stop": 2e-6})
+    # The deck has no source with an ac value, which `.noise` asks for: one that touches nothing.
+    idle = [SourceLine("vidle idle 0 dc 0 ac 1", "", 0), SourceLine("cidle idle 0 1f", "", 0)]
+    deck = replace(deck, lines=(*deck.lines, *idle))
+    request = NoiseRequest("v(rf_p,rf_n)", "vidle", 1e9, 40e9, 100, by_device=True)
+    small = simulate_noise(deck, request)
+    stop, settled, seeds = 24e-9, 4e-9, 3
+    run = clean_run(deck, TransientRequest(stop=stop, step=STEP), [PROBE])
+    assert check_stationarity(run, settled, stop).stationary
+    even = np.arange(settled, stop, STEP)
+    window = np.hanning(even.size)
+    f = np.fft.rfftfreq(even.size, STEP)
+    band = (f > 2e9) & (f < 30e9)
+    wanted = np.exp(
+        np.interp(np.log(f[band]), np.log(small.frequency), np.log(small.output_density))
+    )
+    ratios = []
+    for seed in range(seeds):
+        # The formula of level 1, so that both ways have the same densities.
+        noise = device_noise(run, seed, NoiseSettings(channel="transconductance"))
+        values = np.interp(even, noise.time, noise.samples[PROBE])
+        density = 2 * STEP * np.abs(np.fft.rfft(values * window)) ** 2 / np.sum(window**2)
+        ratios.append(density[band] / wanted)
+    # Four standard deviations of a mean of exponential numbers, of which a Hann window makes
+    # neighbours alike and the variance of the mean 35/18 times as large; and 2 % for the
+    # trapezoidal rule and straight lines between time points at 30 GHz.
+    bound = 4 * np.sqrt(35 / 18 / (seeds * np.count_nonzero(band))) + 0.02
+    assert np.mean(ratios) == pytest.approx(1.0, abs=bound)
