@@ -14,7 +14,7 @@ from cosim.circuit.netlist import deck_from_text
 from cosim.circuit.noise import NoiseRequest, simulate_noise
 from cosim.circuit.noise_settings import NoiseSettings
 from cosim.circuit.stationarity import check_stationarity
-from cosim.errors import ConvergenceError
+from cosim.errors import ConvergenceError, InputError
 from cosim.waveform import ComplexArray, FloatArray
 from tests import sources
 from tests.validation import Validate
@@ -173,3 +173,16 @@ class TestStationarity:
             change = 1 - math.exp(-2 * amplitude * constants.e / (constants.k * 300.15))
             for name in ("d1", "q1"):
                 assert found.changes[name] == pytest.approx(change, rel=0.01)
+
+    def test_windows_and_limits_that_make_no_sense(self, mixer: CleanRun) -> None:
+        with pytest.raises(InputError, match="fewer than two time points"):
+            check_stationarity(mixer, 1e-6, 2e-6)
+        with pytest.raises(InputError, match=r"must lie in \(0, 1\)"):
+            check_stationarity(mixer, 0.0, 1e-9, limit=0.0)
+
+    def test_a_circuit_of_resistors_is_accepted(self) -> None:
+        deck = deck_from_text("deck\nv1 in 0 sin(0 1 1g)\nr1 in out 1k\nc1 out 0 1p\n.end\n")
+        run = clean_run(deck, TransientRequest(stop=1e-9, step=1e-11), ["v(out)"])
+        found = check_stationarity(run, 0.0, 1e-9, {"r1": 1.0})
+        assert found.stationary
+        assert found.changes == {}
