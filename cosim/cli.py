@@ -33,10 +33,6 @@ from cosim.sweep_cli import (
     LimitOption,
     MetricOption,
     check_run_archive,
-    export_sweep,
-    show_sweep,
-    show_sweep_run,
-    testbench_text,
 )
 
 if TYPE_CHECKING:
@@ -77,12 +73,12 @@ def check(
         typer.Option("--probe", help="Run 200 points and estimate time, memory and disk space."),
     ] = False,
     deck: Annotated[
-        bool | None,
+        bool,
         typer.Option(
-            "--deck/--no-deck",
-            help="Print the deck as it will be sent, of a sweep the first; default: of a sweep.",
+            "--deck",
+            help="Print the deck as it will be sent; of a sweep that of its first run.",
         ),
-    ] = None,
+    ] = False,
     json_output: JsonFlag = False,
 ) -> None:
     """Validate a testbench, its deck and the environment; nothing long is run."""
@@ -94,7 +90,7 @@ def check(
         typer.echo(json.dumps({item.name: item.value for item in findings}, indent=2))
         return
     Console(highlight=False).print(check_table(findings))
-    if deck or (deck is None and any(item.name == "runs" for item in findings)):
+    if deck:
         typer.echo("\n".join(("", *lines)))
 
 
@@ -165,13 +161,14 @@ def show(
     from cosim.archive import read_plan, read_table
     from cosim.dispatch import load
     from cosim.result import as_columns, as_numbers
+    from cosim.sweep_show import show_sweep, show_sweep_run, testbench_text
     from cosim.terminal import record_table, result_table, runs_table
 
     check_output(plot, ".png", ".pdf", ".svg")
     console = Console(highlight=False)
     if read_plan(archive, {}) is not None:
         if run is not None:
-            show_sweep_run(archive, run, json_output=json_output, log=log)
+            show_sweep_run(archive, run, json_output=json_output, log=log, plot=plot)
         elif testbench:
             typer.echo(testbench_text(archive), nl=False)
         elif log:
@@ -230,6 +227,8 @@ def export(
     if deck is csv is envelope is None:
         raise InputError("say what to export: --deck DIR, --csv FILE or --envelope FILE")
     if run is None and read_plan(archive, {}) is not None:
+        from cosim.sweep_show import export_sweep
+
         export_sweep(archive, deck, csv, envelope)
         return
     _refuse_failed(archive, run)

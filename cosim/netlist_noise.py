@@ -9,9 +9,9 @@ from scipy.interpolate import CubicSpline
 
 from cosim.capture import Plan
 from cosim.circuit.bias import CleanRun, clean_run
-from cosim.circuit.generators import NoiseSettings
 from cosim.circuit.injection import InjectedNoise, device_noise
 from cosim.circuit.noise_parts import NoiseTemperatures
+from cosim.circuit.noise_settings import NoiseSettings
 from cosim.dsp.demodulation import demodulate
 from cosim.errors import TestbenchError
 from cosim.noise_frame import Nominal, superoperators, unitary_losses
@@ -200,6 +200,7 @@ def injected_noise(
         highest_frequency=found[0][1].highest_frequency,
         standard_error=float(losses.std(ddof=1) / math.sqrt(len(seeds))),
         devices=dict(sorted(devices.items(), key=lambda pair: -pair[1])),
+        left_out=found[0][1].left_out,
     )
     return superoperators(unitaries).mean(axis=0), source
 

@@ -372,6 +372,9 @@ def _warnings(qubit: Qubit, items: Sequence[_Fluctuation], effect: NoiseEffect) 
             "more than the sampling error, so that the noise is not small"
         )
     for item, source in zip(items, effect.sources, strict=True):
+        if source.left_out:
+            more = f" and {len(source.left_out) - 1} more" * (len(source.left_out) > 1)
+            found.append(f"noise '{item.name}' is without {source.left_out[0]}{more}")
         if item.density is not None and item.density.low > 0.0:
             found.append(
                 f"noise '{item.name}': what is slower than its first point, below "

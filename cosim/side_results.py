@@ -39,6 +39,8 @@ class NoiseSource:
         Of the infidelity, from the seeds of an injection; 0 for others.
     devices : dict of float
         Device in ngspice's name -> its part of the infidelity, where it was asked for.
+    left_out : tuple of str
+        What makes noise in the circuit and was not injected, with the reason.
     """
 
     name: str
@@ -51,6 +53,7 @@ class NoiseSource:
     highest_frequency: float = field(default=math.nan, metadata=_unit("Hz"))
     standard_error: float = field(default=0.0, metadata=_unit("1"))
     devices: dict[str, float] = field(default_factory=dict, metadata=_unit("1"))
+    left_out: tuple[str, ...] = ()
 
 
 @dataclass(frozen=True, slots=True)

@@ -1,9 +1,8 @@
 """The commands of sweeps: `qcosim sweep`, `merge`, `verify` and `rerun`, and sweeps in others."""
 
 import json
-import math
 from pathlib import Path
-from typing import TYPE_CHECKING, Annotated, Any
+from typing import TYPE_CHECKING, Annotated
 
 import typer
 from rich.console import Console
@@ -19,7 +18,6 @@ from cosim.errors import ArchiveError, InputError
 
 if TYPE_CHECKING:
     from cosim.sweep.engine import Engine
-    from cosim.sweep.statistics import SweepSummary
 
 WorkersOption = Annotated[
     int | None,
@@ -68,6 +66,7 @@ def sweep(
     from cosim.sweep.run import run_sweep
     from cosim.sweep.shares import share_path
     from cosim.sweep_progress import shown_progress
+    from cosim.sweep_show import show_sweep
 
     check_output(archive, ".h5")
     check_output(plot, ".png", ".pdf", ".svg")
@@ -108,8 +107,10 @@ def merge(
 ) -> None:
     """Put the shares of a sweep together, or the parts of one that was interrupted."""
     from cosim import archive as store
-    from cosim.sweep.run import kept_whole
+    from cosim.sweep.keeping import kept_whole
+    from cosim.sweep.repetition import read_record
     from cosim.sweep.shares import shares_beside
+    from cosim.sweep_show import show_sweep
 
     given = tuple(others) if others else shares_beside(archive)
     if not given and not archive.exists():
@@ -119,8 +120,16 @@ def merge(
         )
     count = store.merge(archive, given) if given else 0
     parts = store.consolidate(archive, kept_whole(archive))
-    typer.echo(f"{count} runs from {len(given)} archives, {parts} parts merged", err=True)
+    there, planned = len(store.run_numbers(archive)), read_record(archive).runs
+    of = f" of {len(given)} archives" if given else ""
+    typer.echo(f"{count} new runs{of}, {parts} parts merged", err=True)
     show_sweep(archive, json_output=False, plot=None, table=False)
+    if there < planned:
+        typer.echo(
+            f"{planned - there} of {planned} runs are missing: a share is not there yet, or "
+            "was cut short",
+            err=True,
+        )
 
 
 def verify(
@@ -231,180 +240,6 @@ def _engine(workers: int | None, scheduler: str | None) -> "Engine":
     if workers is not None:
         raise InputError("give --workers or --scheduler, not both: a scheduler has its own workers")
     return scheduler_engine(scheduler)
-
-
-def show_sweep(
-    path: Path,
-    *,
-    json_output: bool,
-    plot: Path | None,
-    table: bool,
-    limit: float | None = None,
-    metric: str | None = None,
-) -> None:
-    """Print what a sweep tells.
-
-    Parameters
-    ----------
-    path : Path
-        Its archive.
-    json_output : bool
-        Numbers for machines.
-    plot : Path or None
-        File of a figure.
-    table : bool
-        Whether to give the table of all runs too, to machines.
-    limit, metric : float, str or None
-        In place of what the testbench says.
-    """
-    import numpy as np
-
-    from cosim import archive as store
-    from cosim.result import as_columns
-    from cosim.sweep.batches import DONE
-    from cosim.sweep.goal import make_goal
-    from cosim.sweep.repetition import read_record
-    from cosim.sweep.statistics import summarise
-    from cosim.sweep_figures import plot_sweep
-    from cosim.sweep_terminal import summary_table
-
-    record = read_record(path)
-    own = f"{record.fidelity}.average_gate_fidelity"
-    bound = limit if limit is not None else record.limit if metric in (None, own) else math.nan
-    columns, units = store.read_table(path), store.read_units(path)
-    judged = dict(columns)
-    if columns and DONE not in columns["status"]:
-        # Where no run has a result, the table has no column of it either.
-        judged.setdefault(metric or own, np.full(len(columns["id"]), math.nan))
-    summary = summarise(
-        judged,
-        record.inputs,
-        make_goal(metric or own, bound),
-        planned=record.runs,
-        units=units,
-    )
-    if json_output:
-        numbers = summary_numbers(summary)
-        if table:
-            numbers["table"] = as_columns(columns)
-        typer.echo(json.dumps(numbers, indent=2))
-    else:
-        console = Console(highlight=False)
-        console.print(f"[bold]{record.title or path}[/bold]")
-        console.print(summary_table(summary))
-    if plot is not None:
-        plot_sweep(judged, units, summary, plot)
-        typer.echo(f"figure in {plot}", err=True)
-
-
-def summary_numbers(summary: "SweepSummary") -> dict[str, Any]:
-    """Turn a summary into plain numbers for machines.
-
-    Parameters
-    ----------
-    summary : SweepSummary
-        From `cosim.sweep.statistics.summarise`.
-
-    Returns
-    -------
-    dict
-        Its fields; a number that does not exist is None.
-    """
-    from cosim.result import as_plain
-
-    numbers: dict[str, Any] = as_plain(summary)
-    return numbers
-
-
-def show_sweep_run(path: Path, number: int, *, json_output: bool, log: bool) -> None:
-    """Print one run of a sweep: whole where it was kept so, else its row.
-
-    Parameters
-    ----------
-    path : Path
-        The archive.
-    number : int
-        Number of the run, from 1.
-    json_output : bool
-        Numbers for machines.
-    log : bool
-        Only the simulator's log.
-    """
-    from cosim import archive as store
-    from cosim.result import GateResult, as_numbers, as_plain
-    from cosim.sweep.record import SWEEP_KINDS, FailedRun
-    from cosim.terminal import failure_table, record_table, result_table, row_table
-
-    console = Console(highlight=False)
-    table = store.read_table(path)
-    at = [k for k, found in enumerate(table.get("id", [])) if found == number]
-    if not at:
-        raise ArchiveError(
-            f"{path}: run {number} is not in the archive", hint="qcosim show ARCHIVE.h5 --json"
-        )
-    row = {
-        name: as_plain(column[at[0]].item() if hasattr(column[at[0]], "item") else column[at[0]])
-        for name, column in table.items()
-    }
-    record = store.read(path, SWEEP_KINDS, number) if number in store.record_numbers(path) else None
-    if log:
-        if record is None:
-            raise ArchiveError(
-                f"{path}: of run {number} the row is kept and no log",
-                hint=f"qcosim rerun {path} {number} makes it again",
-            )
-        lines = record.log if isinstance(record, FailedRun) else record.run.log
-        typer.echo(json.dumps(lines) if json_output else "\n".join(lines))
-    elif json_output:
-        whole = as_numbers(record) if isinstance(record, GateResult) else {}
-        typer.echo(json.dumps({**row, **whole}, indent=2))
-    elif isinstance(record, GateResult):
-        console.print(result_table(record))
-        console.print(record_table(record))
-    elif isinstance(record, FailedRun):
-        console.print(failure_table(row, record))
-    else:
-        console.print(row_table(row, store.read_units(path)))
-        typer.echo(f"the run as a whole: qcosim rerun {path} {number}", err=True)
-
-
-def export_sweep(path: Path, deck: Path | None, csv: Path | None, envelope: Path | None) -> None:
-    """Write the table of a sweep's runs for spreadsheets.
-
-    Parameters
-    ----------
-    path : Path
-        The archive.
-    deck, csv, envelope : Path or None
-        Where to; only `csv` is possible without a run.
-    """
-    from cosim import archive as store
-    from cosim.sweep.csv_export import write_csv
-
-    if csv is None or deck is not None or envelope is not None:
-        raise InputError("of a sweep say which run: --run N; or --csv FILE for the table of runs")
-    check_output(csv, ".csv")
-    table = store.read_table(path)
-    write_csv(table, store.read_units(path), csv)
-    typer.echo(f"{len(table.get('id', []))} runs in {csv}", err=True)
-
-
-def testbench_text(path: Path) -> str:
-    """Give the testbench that a sweep was begun with.
-
-    Parameters
-    ----------
-    path : Path
-        The archive.
-
-    Returns
-    -------
-    str
-        As TOML.
-    """
-    from cosim.sweep.repetition import read_record
-
-    return read_record(path).testbench
 
 
 COMMANDS = (

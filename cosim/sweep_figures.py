@@ -203,6 +203,8 @@ def _draw_histogram(
         half = 0.5 * float(np.ptp(good)) or 0.05 * abs(float(good[0])) or 1.0
         middle = 0.5 * float(good.min() + good.max())
         edges = np.linspace(middle - half, middle + half, count + 1)
+        # Rounding must not leave the least or the greatest outside.
+        edges[0], edges[-1] = min(edges[0], good.min()), max(edges[-1], good.max())
     alone = len(series) == 1
     for part in series:
         axes.hist(

@@ -86,8 +86,10 @@ def progress_line(state: SweepState) -> str:
 def _rate(state: SweepState) -> str:
     failed = sum(state.failed.values())
     words = [f"{failed} failed"]
-    if state.made and state.elapsed > 0.0:
-        rate = state.made / state.elapsed
+    if not state.slots and state.missing:
+        words.append("no worker has come yet")
+    if state.rate > 0.0:
+        rate = state.rate
         words.append(f"{rate:.2g} runs/s" if rate < 10.0 else f"{rate:.0f} runs/s")
         if state.missing:
             words.append(f"{_duration(state.missing / rate)} left")

@@ -230,13 +230,15 @@ def row_table(row: Mapping[str, object], units: Mapping[str, str]) -> Table:
     return table
 
 
-def failure_table(row: Mapping[str, object], record: FailedRun) -> Group:
+def failure_table(row: Mapping[str, object], units: Mapping[str, str], record: FailedRun) -> Group:
     """Lay out a run of a sweep that has no result.
 
     Parameters
     ----------
     row : mapping
         Its row in the table.
+    units : mapping of str
+        Unit by column.
     record : FailedRun
         What is kept of it.
 
@@ -245,10 +247,8 @@ def failure_table(row: Mapping[str, object], record: FailedRun) -> Group:
     rich.console.Group
         Status, message, inputs, and the end of the simulator's log.
     """
-    table = _plain_table()
-    for name, value in row.items():
-        if value not in (None, "", "error") and name not in ("error", "identity", "kind"):
-            table.add_row(name, str(value))
+    told = ("error", "identity", "kind")
+    table = row_table({name: value for name, value in row.items() if name not in told}, units)
     for name, wave in record.waveforms.items():
         table.add_row(
             f"kept of {name}", f"{wave.t.size} points to {format_quantity(wave.t[-1], 's')}"

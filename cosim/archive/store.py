@@ -180,7 +180,7 @@ def _read_run(files: Sequence[Path], types: Mapping[str, type], run: int | None)
         if name not in set(file["runs"]) and number in rows_only(file):
             raise ArchiveError(
                 f"{files[0]}: of run {number} only its row in the table is kept, not the whole run",
-                hint=f"`qcosim rerun {files[0]} {number}` makes it again",
+                hint=f"`qcosim rerun {files[0]} {number} --archive OTHER.h5` makes it again, whole",
             )
         return read_object(file["runs"][name], types)
 

@@ -17,7 +17,7 @@ from cosim.circuit.bias import CleanRun, conductance, junction_currents
 from cosim.circuit.flicker import Flicker, card_flicker, flicker_unread
 from cosim.circuit.inventory import NoisyDevice
 from cosim.circuit.noise_parts import CHANNEL, THERMAL
-from cosim.circuit.noise_settings import NoiseSettings as NoiseSettings
+from cosim.circuit.noise_settings import NoiseSettings
 from cosim.errors import InputError, UnknownNameError, near_names
 from cosim.waveform import FloatArray
 

@@ -14,6 +14,7 @@ local.py        processes of this machine
 cluster.py      a Dask scheduler, or the jobs of a batch system
 work.py         what a worker does with a batch
 record.py       what is archived besides the table of runs
+keeping.py      which runs are kept whole
 run.py          a sweep from its plan to its archive, and resuming it
 shares.py       the archives of jobs that divide a sweep among themselves
 repetition.py   runs of an archived sweep made again

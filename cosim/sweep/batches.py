@@ -19,6 +19,7 @@ from cosim.errors import (
     SimulatorCrashError,
     SimulatorMemoryError,
     SimulatorTimeoutError,
+    WaveformError,
 )
 
 T = TypeVar("T")
@@ -35,6 +36,7 @@ _STATUSES: tuple[tuple[type[BaseException], str], ...] = (
     (SimulatorMemoryError, "memory"),
     (EvolutionError, "evolution error"),
     (SimulationError, "simulation error"),
+    (WaveformError, "no usable pulse"),
     (InputError, "input error"),
     (MissingDependencyError, "missing dependency"),
     (MemoryError, "memory"),
@@ -51,8 +53,8 @@ class Outcome:
         Run number.
     status : str
         "done"; "no convergence", "timeout", "crash", "memory", "evolution error", "simulation
-        error", "input error", "missing dependency" after the typed error of that kind; "fault"
-        after any other; "worker_died" when the run ended its worker's process twice.
+        error", "no usable pulse", "input error", "missing dependency" after the typed error of
+        that kind; "fault" after any other; "worker_died" when the run ended its worker twice.
     result : any
         What the run gave; None unless it is done.
     error : str

@@ -2,6 +2,7 @@
 starts. Both need the extra `cluster`, which is loaded when an engine is made.
 """
 
+import shutil
 import time
 from collections.abc import Callable, Iterator
 from concurrent.futures import Executor
@@ -14,8 +15,9 @@ from typing import Any
 from cosim.errors import InputError, MissingDependencyError, SimulationError, near_names
 from cosim.sweep.engine import Engine
 
-# Classes of dask-jobqueue by the name of the batch system.
+# Classes of dask-jobqueue by the name of the batch system, and its command that takes a job.
 SYSTEMS = {"slurm": "SLURMCluster", "pbs": "PBSCluster", "lsf": "LSFCluster"}
+SUBMIT = {"slurm": "sbatch", "pbs": "qsub", "lsf": "bsub"}
 
 CONNECT_LIMIT = 30.0  # s for the scheduler to answer
 COUNT_INTERVAL = 2.0  # s after which the workers are counted again
@@ -125,11 +127,16 @@ def queue_engine(system: str, request: JobRequest, jobs: int) -> Engine:
     InputError
         If there is no such batch system, or no job is asked for.
     MissingDependencyError
-        If dask-jobqueue is not installed.
+        If dask-jobqueue is not installed, or the batch system's command is not there.
     """
     if jobs < 1:
         raise InputError(f"a sweep in a queue needs at least 1 job, got {jobs}")
     cluster_class = _cluster_class(system)
+    if shutil.which(SUBMIT[system]) is None:
+        raise MissingDependencyError(
+            f"the command {SUBMIT[system]} of {system} is not on this computer's PATH",
+            hint="sweep from a computer that submits jobs, or with --workers on this one",
+        )
     options = _job_options(system, request)
     # A free port for its pages, which need a further package and are not served.
     scheduler = {

@@ -18,6 +18,7 @@ from cosim.units import parse_parameter, parse_quantity
 _MAPS = ("parameters", "instances", "sections")
 # Arrays of tables, of which a key names one by its number: "stimulus.1.period", "noise.2.white".
 _ARRAYS = ("stimulus", "noise", "spectator")
+DEFAULT_TEMPERATURE = 300.15  # K; ngspice's 27 degrees Celsius
 
 
 @dataclass(frozen=True, slots=True)
@@ -232,6 +233,8 @@ def nominal(bench: Testbench, deck: Deck | None, key: NumberKey) -> float | None
         value = _lowered(_lowered(instances).get(key.item, {})).get(key.name)
     else:
         value = getattr(getattr(bench, key.table), key.field)
+        if value is None and key.path == "netlist.temperature" and deck is not None:
+            value = DEFAULT_TEMPERATURE if deck.temperature is None else deck.temperature
     number = isinstance(value, (int, float)) and math.isfinite(value)
     return float(value) if number else None
 

@@ -3,7 +3,7 @@
 import hashlib
 import json
 import os
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import asdict, dataclass, field, replace
 from math import nan
 
@@ -168,6 +168,11 @@ def check_same_plan(archived: SweepRecord, plan: SweepRecord, path: str) -> None
         return
     old, new = (_flat(json.loads(record.content)) for record in (archived, plan))
     changed = sorted(key for key in old.keys() | new.keys() if old.get(key) != new.get(key))
+    decks = [key for key in changed if key.endswith(".files.deck")]
+    files = _changed_files(archived.deck_files, plan.deck_files)
+    if decks and files:
+        # The file's own name tells more than where its checksum stands.
+        changed = [*files, *(key for key in changed if key not in decks)]
     listed = ", ".join(changed[:_SHOWN])
     if len(changed) > _SHOWN:
         listed += f" and {len(changed) - _SHOWN} more"
@@ -177,6 +182,12 @@ def check_same_plan(archived: SweepRecord, plan: SweepRecord, path: str) -> None
         hint="give another archive, or take the testbench and the files as they were: "
         f"`qcosim show {path} --testbench` prints it",
     )
+
+
+def _changed_files(old: Sequence[DeckFile], new: Sequence[DeckFile]) -> list[str]:
+    known, now = {file.sha256 for file in old}, {file.sha256 for file in new}
+    found = [file.path for file in new if file.sha256 not in known]
+    return found or [file.path for file in old if file.sha256 not in now]
 
 
 def _content(plan: SweepPlan) -> str:

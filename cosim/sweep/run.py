@@ -7,20 +7,18 @@ import math
 import os
 import time
 from collections import Counter
-from collections.abc import Callable, Iterator, Mapping
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field, replace
 from functools import partial
 from itertools import chain, groupby
 from pathlib import Path
-from typing import Any
-
-import numpy as np
 
 from cosim import archive
 from cosim.archive import Row
 from cosim.errors import ArchiveError
 from cosim.sweep.batches import DONE, Batch, Outcome, Task, take_slice
 from cosim.sweep.engine import Engine, run_batches
+from cosim.sweep.keeping import keep_of, kept_whole, metric_of, read_ranks
 from cosim.sweep.local import local_engine
 from cosim.sweep.plan import SweepPlan
 from cosim.sweep.planning import make_sweep
@@ -51,6 +49,10 @@ class SweepState:
         Those that this call has made.
     elapsed : float
         Its wall-clock time in s.
+    rate : float
+        Runs per second since the first ones were written; 0 before.
+    slots : int
+        Batches that the engine can run at a time; 0 where no worker has come yet.
     notice : str
         What the reader must know of the archive; mostly empty.
     """
@@ -60,6 +62,8 @@ class SweepState:
     failed: dict[str, int] = field(default_factory=dict)
     made: int = 0
     elapsed: float = 0.0
+    rate: float = 0.0
+    slots: int = 1
     notice: str = ""
 
     @property
@@ -194,8 +198,8 @@ class _Desk:
         self.record = record
         self.path = path
         self.on_progress = on_progress
-        self.keep = _keep_of(record)
-        self.metric = _metric_of(record)
+        self.keep = keep_of(record)
+        self.metric = metric_of(record)
         self.worst: list[float] = []  # A heap of the infidelities of the runs that are kept whole.
         self.done: set[int] = set()  # Numbers that are not to be run again.
         self.finished = 0
@@ -203,11 +207,13 @@ class _Desk:
         self.made = 0
         self.planned = len(plan)
         self.waiting: list[Row] = []
+        self.slots = 1
         self.began = self.flushed = time.monotonic()
+        self.first = (0, self.began)  # Runs of the first writing, and when: starting up is slow.
 
     def find_finished(self, mine: set[int] | None, retry_failed: bool) -> None:
         """Look what the archive holds already of the share of this call."""
-        table = _read_ranks(self.path, self.metric)
+        table = read_ranks(self.path, self.metric)
         if not table:
             return
         fidelities = table.get(self.metric)
@@ -244,7 +250,8 @@ class _Desk:
         self.on_progress(self.state())
         try:
             batches = self.batches(engine, part)
-            run_batches(batches, engine, on_result=self.take, on_pause=self.pause)
+            pause = partial(self.pause, engine)
+            run_batches(batches, engine, on_result=self.take, on_pause=pause)
         finally:
             self.flush()
         self.on_progress(self.state())
@@ -296,7 +303,8 @@ class _Desk:
         if len(self.waiting) >= FLUSH_ROWS:
             self.flush()
 
-    def pause(self) -> None:
+    def pause(self, engine: Engine) -> None:
+        self.slots = engine.slots()
         if self.waiting and time.monotonic() - self.flushed >= FLUSH_INTERVAL:
             self.flush()
         self.on_progress(self.state())
@@ -313,6 +321,8 @@ class _Desk:
                 if row.info.status == DONE:
                     self.rank(1.0 - float(row.cells[self.metric]))
             self.made += len(rows)
+            if not self.first[0]:
+                self.first = (self.made, time.monotonic())
         self.flushed = time.monotonic()
 
     def tidy(self) -> str:
@@ -324,82 +334,18 @@ class _Desk:
         return ""
 
     def state(self) -> SweepState:
+        now = time.monotonic()
+        made, since = self.first
+        if self.made > made:
+            rate = (self.made - made) / max(self.flushed - since, 1e-3)
+        else:
+            rate = made / (since - self.began) if made else 0.0
         return SweepState(
             self.planned,
             self.finished,
             dict(self.failed),
             self.made,
-            time.monotonic() - self.began,
+            now - self.began,
+            rate,
+            self.slots,
         )
-
-
-def kept_whole(path: str | os.PathLike[str], record: SweepRecord | None = None) -> set[int] | None:
-    """Tell which runs of an archived sweep are kept whole.
-
-    Parameters
-    ----------
-    path : path
-        The archive.
-    record : SweepRecord or None
-        Its plan, of which the metric and the number to keep are taken; None reads it.
-
-    Returns
-    -------
-    set of int or None
-        Their numbers, for `cosim.archive.consolidate`; None for all, as in an archive of single
-        runs.
-
-    Raises
-    ------
-    ArchiveError
-        If the archive cannot be read.
-    """
-    plan = archive.read_plan(path, SWEEP_KINDS) if record is None else record
-    if not isinstance(plan, SweepRecord) or plan.keep == "all":
-        return None
-    metric = _metric_of(plan)
-    return whole_numbers(_read_ranks(path, metric), metric, _keep_of(plan))
-
-
-def _read_ranks(path: str | os.PathLike[str], metric: str) -> dict[str, Any]:
-    """Read who is done, and how well; where nobody is, there is no column of the metric."""
-    table = archive.read_table(path, columns=("id", "status"))
-    if table and (table["status"] == DONE).any():
-        table = archive.read_table(path, columns=("id", "status", metric))
-    return table
-
-
-def _metric_of(record: SweepRecord) -> str:
-    return f"{record.fidelity}.average_gate_fidelity"
-
-
-def _keep_of(record: SweepRecord) -> int:
-    return ALL if record.keep == "all" else int(record.keep)
-
-
-def whole_numbers(table: Mapping[str, Any], metric: str, keep: int) -> set[int]:
-    """Tell which runs of a sweep are kept whole: those that failed, and the worst.
-
-    Parameters
-    ----------
-    table : mapping of ndarray, each of shape (runs,)
-        The columns "id", "status" and, if a run is done, the metric.
-    metric : str
-        Column of the fidelity that ranks the runs.
-    keep : int
-        How many of the worst.
-
-    Returns
-    -------
-    set of int
-        Their numbers.
-    """
-    if not table:
-        return set()
-    numbers, done = table["id"], table["status"] == DONE
-    whole = set(numbers[~done].tolist())
-    if metric in table and keep > 0:
-        losses = np.where(done, 1.0 - table[metric], -np.inf)
-        order = np.argsort(-losses, kind="stable")[:keep]
-        whole |= set(numbers[order][np.isfinite(losses[order])].tolist())
-    return whole

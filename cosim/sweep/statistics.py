@@ -245,7 +245,7 @@ def summarise(
         notes=(
             *_count_notes(goal, rows, planned, finished, done.get(DONE, 0)),
             *_yield_notes(overall, everywhere),
-            *_bar_notes(bars[good]),
+            *(_bar_notes(bars[good]) if limited else ()),
             *notes,
         ),
     )

@@ -59,6 +59,7 @@ FLOORS = {
     "command_options": 6,
     "side_terminal": 6,
     "sweep_cli": 6,
+    "sweep_show": 6,
     "sweep_progress": 6,
     "__main__": 6,
 }

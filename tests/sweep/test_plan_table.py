@@ -236,8 +236,8 @@ WRONG: list[tuple[dict[str, Any], list[str]]] = [
         ["a difference of temperatures"],
     ),
     (
-        drawn(key="netlist.temperature", distribution="normal", sigma="1 K"),
-        ["a nominal value of 'netlist.temperature'", "'mean'"],
+        drawn(key="netlist.stop", distribution="normal", sigma="1 ns"),
+        ["a nominal value of 'netlist.stop'", "'mean'"],
     ),
     (
         drawn(key="qubit.detuning", distribution="lognormal", sigma=0.1),

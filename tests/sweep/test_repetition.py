@@ -117,7 +117,7 @@ def test_a_folder_that_moved_is_named(own: Path, swept: Path) -> None:
     assert len(archived_plan(own / "a.h5", toml)) == 4
     assert rerun(own / "a.h5", 1, testbench=toml).run.testbench
     (own / "deck.cir").write_text(DECK.replace("0.12 ", "0.125 "))
-    with pytest.raises(ArchiveError, match=r"corners\.testbench\.files\.deck"):
+    with pytest.raises(ArchiveError, match=r"changed: .*deck\.cir"):
         rerun(own / "a.h5", 1, testbench=toml)
     # Without it the archive's own folder counts, where nothing has changed.
     rerun(own / "a.h5", 1)

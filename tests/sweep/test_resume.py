@@ -108,8 +108,8 @@ def one_of_six(tmp_path_factory: pytest.TempPathFactory) -> Path:
 @pytest.mark.parametrize(
     ("sweep", "change", "deck", "parts", "name"),
     [
-        (GRID, (), DECK.replace("0.12 ", "0.121 "), FILTER, "corners.testbench.files.deck"),
-        (GRID, (), DECK, FILTER.replace("50", "51"), "corners.testbench.files.deck"),
+        (GRID, (), DECK.replace("0.12 ", "0.121 "), FILTER, "deck.cir"),
+        (GRID, (), DECK, FILTER.replace("50", "51"), "filter.inc"),
         (GRID, ("100 MHz/V", "101 MHz/V"), DECK, FILTER, "testbench.qubit.rabi_per_volt"),
         (GRID, ('"x90"', '"y90"'), DECK, FILTER, "testbench.gate.target"),
         (GRID.replace("0.13]", "0.14]"), (), DECK, FILTER, "sweep.grid"),

@@ -13,8 +13,9 @@ from cosim.errors import ArchiveError
 from cosim.sweep import run as run_module
 from cosim.sweep.cluster import scheduler_engine
 from cosim.sweep.engine import Engine
+from cosim.sweep.keeping import kept_whole
 from cosim.sweep.local import local_engine
-from cosim.sweep.run import kept_whole, run_sweep
+from cosim.sweep.run import run_sweep
 from cosim.sweep.shares import share_path, shares_beside
 from tests.sweep.benches import (
     FAILING,

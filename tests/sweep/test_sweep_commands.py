@@ -249,7 +249,7 @@ def test_shares_are_merged_by_the_command(tmp_path: Path, qcosim: Cli) -> None:
         assert f"qcosim merge {path}" in err.replace("\n", "")
     code, _, err = qcosim("merge", path)
     assert code == 0
-    assert "6 runs from 2 archives" in err
+    assert "6 new runs of 2 archives" in err
     assert len(archive.record_numbers(path)) == 2
     assert parsed(qcosim("show", path, "--json")[1])["missing"] == 0
     code, _, err = qcosim("merge", tmp_path / "none.h5")
@@ -258,7 +258,7 @@ def test_shares_are_merged_by_the_command(tmp_path: Path, qcosim: Cli) -> None:
 
 def test_check_says_what_a_sweep_takes(tmp_path: Path, qcosim: Cli) -> None:
     toml = write_bench(tmp_path, GRID)
-    code, out, _ = qcosim("check", toml)
+    code, out, _ = qcosim("check", toml, "--deck")
     assert code == 0
     assert "6 runs (2 values of netlist.parameters.level x 3 values of qubit.detuning)" in (
         re.sub(r"\s+", " ", out)
@@ -279,7 +279,7 @@ def test_check_of_a_sweep_finds_what_is_wrong(tmp_path: Path, qcosim: Cli) -> No
 
 
 def test_the_line_of_progress_counts_rate_failures_and_time() -> None:
-    state = SweepState(600, 118, {"timeout": 2}, made=100, elapsed=20.0)
+    state = SweepState(600, 118, {"timeout": 2}, made=100, elapsed=20.0, rate=5.0)
     assert progress_line(state) == "120 of 600 runs, 2 failed, 5 runs/s, 1.6 min left"
     assert progress_line(SweepState(10)) == "0 of 10 runs, 0 failed"
 
