@@ -30,7 +30,7 @@ def main() -> None:
         print(
             f"{weight:6.2f}  {result.as_simulated.infidelity:9.3e}"
             f"  {result.free_frame.infidelity:17.3e}  {result.leakage:9.3e}"
-            f"  {degrees(asin(axis[2])):22.4f}"
+            f"  {degrees(asin(axis[2])):22.2e}"
         )
 
 
