@@ -25,7 +25,6 @@ from cosim.line import through_line
 from cosim.neighbours import idle_effect, spectator_effects, spectator_warnings
 from cosim.netlist_noise import circuit_noise
 from cosim.noise_effect import NoisyGate, noisy_gate
-from cosim.noises import NetlistNoise
 from cosim.quantum.channel import check_channel, nearest_unitary, pauli_transfer_matrix
 from cosim.quantum.fidelity import (
     Rotation,
@@ -46,6 +45,7 @@ from cosim.record import Clock, make_record
 from cosim.result import Channel, GateResult
 from cosim.side_results import SpectatorEffect
 from cosim.testbench import Testbench
+from cosim.voltage_noises import NetlistNoise
 from cosim.waveform import ComplexArray, Envelope
 
 Progress = Callable[[float], None]

@@ -9,7 +9,7 @@ import numpy as np
 from cosim.adjust import Pulse
 from cosim.coupling import rate_per_unit
 from cosim.errors import InputError, TestbenchError
-from cosim.noises import DetuningNoise, Noise, ProbeNoise
+from cosim.noises import VOLTAGES, DetuningNoise, Noise
 from cosim.quantum.channel import nearest_unitary
 from cosim.quantum.evolution import DriveSpline
 from cosim.quantum.fidelity import average_gate_fidelity, leakage, rotation_of, target_unitary
@@ -154,7 +154,7 @@ def idle_effect(
         density = noise.density(drive.carrier_frequency)
         if density is None:
             continue
-        if isinstance(noise, ProbeNoise):
+        if isinstance(noise, VOLTAGES):
             # Of each quadrature beside the carrier; of the voltage itself it is half of that.
             offset = abs(drive.carrier_frequency - _frequency(drive))
             lowest = max(offset, density.low, 1.0)

@@ -15,11 +15,11 @@ from cosim.circuit.noise_settings import NoiseSettings
 from cosim.dsp.demodulation import demodulate
 from cosim.errors import TestbenchError
 from cosim.noise_frame import Nominal, superoperators, unitary_losses
-from cosim.noises import NetlistNoise
 from cosim.quantum.batch import propagate_batch
 from cosim.quantum.batch_drive import BatchDrive
 from cosim.side_results import NoiseSource
 from cosim.testbench import Testbench
+from cosim.voltage_noises import NetlistNoise
 from cosim.waveform import ComplexArray, Envelope, Waveform
 
 INJECTION = "injection"

@@ -25,14 +25,7 @@ from cosim.noise_frame import (
     superoperators,
     unitary_losses,
 )
-from cosim.noises import (
-    AmplitudeNoise,
-    DetuningNoise,
-    NetlistNoise,
-    Noise,
-    PhaseNoise,
-    ProbeNoise,
-)
+from cosim.noises import VOLTAGES, AmplitudeNoise, DetuningNoise, Noise, PhaseNoise
 from cosim.quantum.batch import propagate_batch
 from cosim.quantum.batch_drive import BatchDrive
 from cosim.quantum.filters import (
@@ -48,6 +41,7 @@ from cosim.quantum.quasistatic import gaussian_average
 from cosim.quantum.qubit import Qubit
 from cosim.qubit_drive import QubitDrive
 from cosim.side_results import NoiseEffect, NoiseSource
+from cosim.voltage_noises import LineNoise, NetlistNoise
 from cosim.waveform import ComplexArray, Envelope, FloatArray
 
 # Samples of one batch: enough that the kernel's own cost is all, few enough to be small.
@@ -136,6 +130,9 @@ def noisy_gate(
         )
     nominal = nominal_evolution(drive.qubit, drive, envelope)
     volts = rate_per_unit(drive.line, envelope.unit)
+    for noise in noises:
+        if isinstance(noise, LineNoise):
+            _check_line(noise, drive, envelope.unit)
     found = [
         _Fluctuation(
             noise,
@@ -175,6 +172,17 @@ def noisy_gate(
         sources=tuple(sources[item.stream] for item in found),
     )
     return NoisyGate(correction, effect, _warnings(drive.qubit, found, effect))
+
+
+def _check_line(noise: LineNoise, drive: QubitDrive, unit: str) -> None:
+    if unit != "V":
+        raise TestbenchError('[[noise]] with acts_on = "line" goes with a probe of a voltage')
+    if abs(noise.attenuation - drive.line.attenuation) > 1e-6:
+        raise TestbenchError(
+            f'[[noise]] with acts_on = "line": its stages make {noise.attenuation:g} dB, and '
+            f"[drive] says attenuation = {drive.line.attenuation:g} dB",
+            hint="give every attenuator between probe and qubit with its temperature",
+        )
 
 
 @dataclass(frozen=True, slots=True)
@@ -325,7 +333,7 @@ def _drawn(
     detuning, factor = np.zeros(shape), np.ones(shape)
     phase, added = np.zeros(shape), np.zeros(shape, dtype=np.complex128)
     for item in items:
-        if isinstance(item.noise, ProbeNoise):
+        if isinstance(item.noise, VOLTAGES):
             paths = [
                 _paths(item, seed, first, count, 2 * item.stream + quadrature)
                 for quadrature in (0, 1)

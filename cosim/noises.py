@@ -5,51 +5,19 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import Annotated, Any, Literal
 
-from cosim.config import Key, Quantity, numbered, read_table
-from cosim.dsp.noise.density import Outside, PowerLaw, SpectralDensity, density_from_points
+from cosim.config import Quantity, numbered, read_table
+from cosim.dsp.noise.density import Outside, SpectralDensity, density_from_points
 from cosim.dsp.noise.oscillator import (
     amplitude_noise_density,
     jitter_density,
     phase_noise_density,
 )
 from cosim.errors import InputError, TestbenchError, near_names
-from cosim.schema import Frequency, PositiveFrequency, PositiveTime, Temperature
-
-# ngspice's flicker noise, and most data sheets, give the level of 1/f noise at this frequency.
-_REFERENCE = 1.0  # Hz
+from cosim.noise_keys import check_levels, check_one, density_law
+from cosim.schema import Frequency, PositiveFrequency, PositiveTime
+from cosim.voltage_noises import LineNoise, NetlistNoise, ProbeNoise
 
 Sidebands = tuple[tuple[PositiveFrequency, Annotated[float, Quantity("dBc/Hz")]], ...]
-
-
-def _check_one(given: Mapping[str, bool], keys: str) -> None:
-    said = [name for name, there in given.items() if there]
-    if len(said) != 1:
-        raise InputError(f"give one of {keys}, got {' and '.join(said) if said else 'none'}")
-
-
-def _check_levels(white: float | None, flicker: float | None, low: float, high: float) -> None:
-    for name, level in (("white", white), ("flicker", flicker)):
-        if level is not None and level < 0.0:
-            raise InputError(f"key '{name}': a spectral density is not negative, got {level:g}")
-    if not 0.0 <= low < high:
-        raise InputError(f"wanted 0 <= low < high, got {low:g} Hz and {high:g} Hz")
-
-
-def _law(
-    unit: str,
-    factor: float,
-    white: float | None,
-    flicker: float | None,
-    exponent: float,
-    low: float,
-    high: float,
-) -> SpectralDensity:
-    terms = []
-    if white:
-        terms.append(PowerLaw(factor * white, low=low, high=high))
-    if flicker:
-        terms.append(PowerLaw(factor * flicker, exponent, _REFERENCE, low, high))
-    return SpectralDensity(unit, tuple(terms))
 
 
 @dataclass(frozen=True, slots=True)
@@ -100,8 +68,8 @@ class DetuningNoise:
             "'white' or 'flicker'": law,
             "'points'": bool(self.points),
         }
-        _check_one(given, "'t2_star', 'deviation', 'white' and 'flicker', or 'points'")
-        _check_levels(self.white, self.flicker, self.low, self.high)
+        check_one(given, "'t2_star', 'deviation', 'white' and 'flicker', or 'points'")
+        check_levels(self.white, self.flicker, self.low, self.high)
         self.density(0.0)
 
     @property
@@ -122,7 +90,7 @@ class DetuningNoise:
         if self.white is None and self.flicker is None:
             return None
         law = (self.white, self.flicker, self.exponent, self.low, self.high)
-        return _law("rad/s", factor, *law)
+        return density_law("rad/s", factor, *law)
 
 
 @dataclass(frozen=True, slots=True)
@@ -165,10 +133,10 @@ class AmplitudeNoise:
             "'points'": bool(self.points),
             "'sidebands'": bool(self.sidebands),
         }
-        _check_one(given, "'deviation', 'white' and 'flicker', 'points', or 'sidebands'")
+        check_one(given, "'deviation', 'white' and 'flicker', 'points', or 'sidebands'")
         if self.deviation is not None and not self.deviation > 0.0:
             raise InputError(f"key 'deviation': wanted more than 0, got {self.deviation:g}")
-        _check_levels(self.white, self.flicker, self.low, self.high)
+        check_levels(self.white, self.flicker, self.low, self.high)
         self.density(0.0)
 
     @property
@@ -188,7 +156,7 @@ class AmplitudeNoise:
             return density_from_points(f, levels, "1", **outside)
         if self.white is None and self.flicker is None:
             return None
-        return _law("1", 1.0, self.white, self.flicker, self.exponent, self.low, self.high)
+        return density_law("1", 1.0, self.white, self.flicker, self.exponent, self.low, self.high)
 
 
 @dataclass(frozen=True, slots=True)
@@ -238,10 +206,10 @@ class PhaseNoise:
             "'sidebands'": bool(self.sidebands),
             "'jitter'": self.jitter is not None,
         }
-        _check_one(given, "'deviation', 'white' and 'flicker', 'points', 'sidebands' or 'jitter'")
+        check_one(given, "'deviation', 'white' and 'flicker', 'points', 'sidebands' or 'jitter'")
         if (self.jitter is None) != (self.clock is None):
             raise InputError("'jitter' and 'clock' go together")
-        _check_levels(self.white, self.flicker, self.low, self.high)
+        check_levels(self.white, self.flicker, self.low, self.high)
         self.density(1.0)
 
     @property
@@ -262,120 +230,20 @@ class PhaseNoise:
             return density_from_points(f, levels, "rad", **outside)
         if self.white is None and self.flicker is None:
             return None
-        return _law("rad", 1.0, self.white, self.flicker, self.exponent, self.low, self.high)
+        return density_law("rad", 1.0, self.white, self.flicker, self.exponent, self.low, self.high)
 
 
-@dataclass(frozen=True, slots=True)
-class ProbeNoise:
-    """A table [[noise]] with acts_on = "probe": a voltage is added there, around the carrier.
+Noise = DetuningNoise | AmplitudeNoise | PhaseNoise | ProbeNoise | LineNoise | NetlistNoise
 
-    Parameters
-    ----------
-    acts_on : "probe"
-        What fluctuates.
-    name : str
-        For messages and results.
-    white : float or None
-        One-sided spectral density in V^2/Hz at the carrier, the same to both sides of it.
-    points : tuple of (float, float)
-        Offset from the carrier in Hz and density in V^2/Hz, the same to both sides.
-    below, above
-        As in `DetuningNoise`.
-    """
-
-    acts_on: Literal["probe"]
-    name: str = ""
-    white: Annotated[float, Quantity("V^2/Hz")] | None = None
-    points: tuple[tuple[PositiveFrequency, Annotated[float, Quantity("V^2/Hz")]], ...] = ()
-    below: Outside = "error"
-    above: Outside = "error"
-
-    def __post_init__(self) -> None:
-        _check_one(
-            {"'white'": self.white is not None, "'points'": bool(self.points)},
-            "'white' or 'points'",
-        )
-        _check_levels(self.white, None, 0.0, math.inf)
-        self.density(0.0)
-
-    @property
-    def spread(self) -> float:
-        """Nothing of it is constant during a gate."""
-        return 0.0
-
-    def density(self, carrier: float) -> SpectralDensity | None:
-        """Density of each quadrature at offsets from the carrier in V^2/Hz.
-
-        v = I cos - Q sin with I and Q independent: each has twice the density of v.
-        """
-        del carrier
-        if self.points:
-            f, levels = zip(*self.points, strict=True)
-            values = [2.0 * level for level in levels]
-            return density_from_points(f, values, "V", below=self.below, above=self.above)
-        return _law("V", 2.0, self.white, None, 0.0, 0.0, math.inf)
-
-
-@dataclass(frozen=True, slots=True)
-class NetlistNoise:
-    """A table [[noise]] with acts_on = "probe" and from = "netlist": the deck's own noise there.
-
-    Currents that are made from a seed are injected at every device, along the run: a circuit that
-    is switched or modulated has no noise around one operating point.
-
-    Parameters
-    ----------
-    acts_on : "probe"
-        What fluctuates.
-    origin : "netlist"
-        The key `from`.
-    name : str
-        For messages and results.
-    seeds : int
-        Noisy runs of the circuit, at least 2.
-    resistor_temperature, channel_temperature, series_temperature : float or None
-        Noise temperature in K of resistors, of channels, and of series resistances of transistors
-        and diodes; None: the device temperature, which decks with cards fitted at 4 K have warmer.
-    gamma : float
-        Excess factor of channels.
-    by_device : bool
-        Whether each device is injected alone as well, in a run of its own.
-    """
-
-    acts_on: Literal["probe"]
-    origin: Annotated[Literal["netlist"], Key("from")]
-    name: str = ""
-    seeds: int = 8
-    resistor_temperature: Temperature | None = None
-    channel_temperature: Temperature | None = None
-    series_temperature: Temperature | None = None
-    gamma: float = 2.0 / 3.0
-    by_device: bool = False
-
-    def __post_init__(self) -> None:
-        if not 2 <= self.seeds <= 100_000:
-            raise InputError(f"key 'seeds': wanted 2 to 100000, got {self.seeds}")
-        if not self.gamma > 0.0:
-            raise InputError(f"key 'gamma': wanted more than 0, got {self.gamma:g}")
-
-    @property
-    def spread(self) -> float:
-        """Nothing of it is constant during a gate."""
-        return 0.0
-
-    def density(self, carrier: float) -> SpectralDensity | None:
-        """It has none: the noise of a switched circuit is not stationary."""
-        del carrier
-        return None
-
-
-Noise = DetuningNoise | AmplitudeNoise | PhaseNoise | ProbeNoise | NetlistNoise
+# Those that add a voltage around the carrier.
+VOLTAGES = (ProbeNoise, LineNoise)
 
 KINDS: dict[str, type[Any]] = {
     "detuning": DetuningNoise,
     "amplitude": AmplitudeNoise,
     "phase": PhaseNoise,
     "probe": ProbeNoise,
+    "line": LineNoise,
 }
 
 

@@ -10,11 +10,12 @@ from cosim.adjust import Pulse
 from cosim.coupling import DriveLine, drive_rate
 from cosim.errors import TestbenchError
 from cosim.neighbours import idle_effect, spectator_effects, spectator_warnings
-from cosim.noises import DetuningNoise, ProbeNoise
+from cosim.noises import DetuningNoise
 from cosim.quantum.evolution import DriveSpline
 from cosim.quantum.qubit import Qubit
 from cosim.qubit_drive import QubitDrive
 from cosim.schema import SpectatorTable
+from cosim.voltage_noises import ProbeNoise
 from cosim.waveform import Waveform
 from tests import sources
 from tests.validation import Validate

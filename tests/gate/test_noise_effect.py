@@ -5,13 +5,15 @@ from dataclasses import replace
 
 import numpy as np
 import pytest
+from scipy.constants import Boltzmann, Planck
 
 from cosim.coupling import DriveLine
 from cosim.errors import TestbenchError
 from cosim.noise_effect import NoisyGate, noisy_gate
-from cosim.noises import AmplitudeNoise, DetuningNoise, Noise, PhaseNoise, ProbeNoise
+from cosim.noises import AmplitudeNoise, DetuningNoise, Noise, PhaseNoise
 from cosim.quantum.qubit import Qubit
 from cosim.qubit_drive import QubitDrive
+from cosim.voltage_noises import LineNoise, ProbeNoise
 from cosim.waveform import Envelope
 from tests import sources
 from tests.validation import Validate
@@ -165,3 +167,33 @@ def test_a_density_that_does_not_cover_the_band_names_its_table() -> None:
     with pytest.raises(TestbenchError, match="number 1"):
         gate(0.25, 50e-9, endless)
     assert gate(0.25, 50e-9, replace(endless, low=1e-3), samples=16).effect.infidelity > 0.0
+
+
+def test_attenuators_at_their_stages(validate: Validate) -> None:
+    """20 dB at 4 K and 20 dB at 0.1 K behind a source at 300 K, at 5 GHz."""
+    noise = LineNoise("line", ((20.0, 4.0), (20.0, 0.1)), source=300.0)
+    rabi = 1e9  # Hz/V
+    line = DriveLine(rabi_per_volt=rabi, attenuation=40.0)
+    duration = 10e-6
+    drive = QubitDrive(CARRIER, False, False, Qubit(CARRIER), line, (0.0, duration))
+    envelope = Envelope(0.0, duration / 400, np.zeros(401, dtype=np.complex128), CARRIER)
+    found = noisy_gate(drive, envelope, (noise,), samples=16, seed=1)
+
+    def planck(kelvin: float) -> float:
+        return Planck * CARRIER / math.expm1(Planck * CARRIER / (Boltzmann * kelvin))
+
+    power = (planck(300.0) / 100 + 0.99 * planck(4.0)) / 100 + 0.99 * planck(0.1)
+    # The golden rule, up and down, as a loss: (rate up + rate down) T/3.
+    expected = (2 * math.pi * rabi) ** 2 * 50.0 * power * duration / 3
+    source = found.effect.sources[0]
+    validate(
+        "flips by the noise of two attenuator stages",
+        sources.PLANCK,
+        expected,
+        source.infidelity + source.unreached,
+        # The sum over frequencies and what is left of it above the band.
+        rel=1e-3,
+    )
+    wrong = replace(drive, line=replace(line, attenuation=30.0))
+    with pytest.raises(TestbenchError, match="its stages make 40 dB"):
+        noisy_gate(wrong, envelope, (noise,), samples=16, seed=1)

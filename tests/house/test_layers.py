@@ -45,6 +45,8 @@ FLOORS = {
     "sweep": 5,
     "line": 4,
     "noises": 3,
+    "noise_keys": 3,
+    "voltage_noises": 3,
     "noise_effect": 4,
     "noise_frame": 4,
     "netlist_noise": 4,
