@@ -52,6 +52,8 @@ def test_a_detuned_neighbour_is_flipped_as_rabi_has_it(ratio: float, validate: V
     drive, pulse, _ = played()
     (found,) = spectator_effects([spin(ratio * RABI)], drive, pulse)
     flip = math.sin(math.pi / 2 * math.sqrt(1 + ratio**2)) ** 2 / (1 + ratio**2)
+    # At these ratios the neighbour returns exactly; the formula leaves its rounding.
+    flip = 0.0 if ratio in (math.sqrt(3.0), math.sqrt(15.0)) else flip
     # With the phase absorbed a unitary of flip probability P has F_avg = 1 - 2 P/3.
     validate(
         f"flip of a neighbour at {ratio:.3f} Rabi frequencies",
