@@ -12,7 +12,7 @@ from typing import Any, TypeVar
 
 import h5py
 
-from cosim.archive.layout import check_root
+from cosim.archive.layout import HDF5_LOCK, check_root
 from cosim.errors import ArchiveError, CosimError, near_names
 
 _SNAPSHOT_TRIES = 50
@@ -209,32 +209,38 @@ def opened(path: Path) -> Iterator[Any]:
     ArchiveError
         If it cannot be opened, is no archive, is of a newer schema, or turns out to be damaged.
     """
-    try:
-        mode = os.stat(path).st_mode
-        if stat.S_ISREG(mode):
-            # The files never change, so HDF5's locks, which some file systems lack, are not needed.
-            file = h5py.File(path, "r", locking=False)
-        else:
-            what = "a folder" if stat.S_ISDIR(mode) else "not a regular file"
-            raise ArchiveError(f"{path}: wanted an archive, this is {what}", hint="give a .h5 file")
-    except (FileNotFoundError, CosimError):
-        raise
-    except OSError as error:
-        if error.errno == errno.ESTALE:
-            # A file that another machine has removed, of which NFS still has the name.
-            raise FileNotFoundError(errno.ENOENT, os.strerror(errno.ENOENT), str(path)) from error
-        raise _unreadable(path, error) from error
-    with file:
+    with HDF5_LOCK:
         try:
-            check_root(file, str(path))
-            yield file
-        except CosimError:
+            mode = os.stat(path).st_mode
+            if stat.S_ISREG(mode):
+                # The files never change, so that HDF5's locks, which some file systems lack, are
+                # not needed.
+                file = h5py.File(path, "r", locking=False)
+            else:
+                what = "a folder" if stat.S_ISDIR(mode) else "not a regular file"
+                raise ArchiveError(
+                    f"{path}: wanted an archive, this is {what}", hint="give a .h5 file"
+                )
+        except (FileNotFoundError, CosimError):
             raise
-        except _HDF5_ERRORS as error:
-            raise ArchiveError(
-                f"{path}: the archive is damaged: {error}",
-                hint="take it from a backup, or run the simulation again",
-            ) from error
+        except OSError as error:
+            if error.errno == errno.ESTALE:
+                # A file that another machine has removed, of which NFS still has the name.
+                raise FileNotFoundError(
+                    errno.ENOENT, os.strerror(errno.ENOENT), str(path)
+                ) from error
+            raise _unreadable(path, error) from error
+        with file:
+            try:
+                check_root(file, str(path))
+                yield file
+            except CosimError:
+                raise
+            except _HDF5_ERRORS as error:
+                raise ArchiveError(
+                    f"{path}: the archive is damaged: {error}",
+                    hint="take it from a backup, or run the simulation again",
+                ) from error
 
 
 def _unreadable(path: Path, error: OSError) -> ArchiveError:

@@ -1,6 +1,7 @@
 """Names and root attributes of an archive: what stands where in each file."""
 
 import re
+import threading
 from collections.abc import Iterator
 from dataclasses import dataclass
 from datetime import UTC, datetime
@@ -25,6 +26,11 @@ TEXTS = "texts"
 PLAN = "plan"
 
 TEXT = h5py.string_dtype()
+
+# HDF5 for one thread of this process at a time, from the opening of a file to its close: h5py's own
+# lock is let go between two calls, and two threads that took turns there ended in a segmentation
+# fault now and then (measured: one run in six of a reader beside a writer).
+HDF5_LOCK = threading.RLock()
 TEXT_TYPE = h5py.h5t.py_create(TEXT, logical=True)
 TEXT_OBJECT = h5py.h5t.py_create(TEXT)
 

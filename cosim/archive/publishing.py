@@ -21,7 +21,7 @@ from typing import Any
 import h5py
 
 from cosim.archive.files import parts_folder
-from cosim.archive.layout import LIBRARY_BOUNDS, write_root
+from cosim.archive.layout import HDF5_LOCK, LIBRARY_BOUNDS, write_root
 from cosim.errors import ArchiveError, CosimError
 
 # Bytes by which a file in memory grows; with the 64 kB of h5py it is copied often.
@@ -81,7 +81,7 @@ def image_of(path: Path, write: Callable[[Any], None]) -> bytes:
     ArchiveError
         If HDF5 refuses.
     """
-    with refusals(path):
+    with HDF5_LOCK, refusals(path):
         # The name is that of no file: HDF5 refuses one that this process has open.
         with h5py.File(
             uuid.uuid4().hex,
@@ -120,7 +120,7 @@ def edited(image: io.BytesIO, path: Path) -> Iterator[Any]:
         If HDF5 refuses.
     """
     new = not image.getbuffer().nbytes
-    with refusals(path):
+    with HDF5_LOCK, refusals(path):
         with h5py.File(image, "w" if new else "r+", libver=LIBRARY_BOUNDS) as file:
             if new:
                 write_root(file)
