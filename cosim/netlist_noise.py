@@ -2,7 +2,7 @@
 
 import math
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 from scipy.interpolate import CubicSpline
@@ -41,6 +41,8 @@ class CircuitNoise:
         Its unit.
     carrier_frequency : float
         In Hz.
+    made : dict
+        Seed -> its noise: a run of the simulator serves the gate's qubit, the others and rest.
     """
 
     clean: CleanRun
@@ -48,6 +50,7 @@ class CircuitNoise:
     probe: str
     unit: str
     carrier_frequency: float
+    made: dict[int, tuple[Envelope, InjectedNoise]] = field(default_factory=dict, compare=False)
 
     def envelope(self, seed: int) -> tuple[Envelope, InjectedNoise]:
         """Run the circuit with the noise of one seed.
@@ -69,8 +72,10 @@ class CircuitNoise:
         SimulationError, DeckError
             If the run fails.
         """
-        noise = device_noise(self.clean, seed, self.settings)
-        return self._demodulated(noise), noise
+        if seed not in self.made:
+            noise = device_noise(self.clean, seed, self.settings)
+            self.made[seed] = self._demodulated(noise), noise
+        return self.made[seed]
 
     def devices(self, seed: int) -> Iterator[tuple[str, Envelope]]:
         """Run the circuit with the noise of one device after the other.

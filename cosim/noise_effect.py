@@ -94,6 +94,7 @@ def noisy_gate(
     samples: int,
     seed: int,
     circuits: Mapping[int, CircuitNoise] = MappingProxyType({}),
+    of_the_line: bool = False,
 ) -> NoisyGate:
     """Work out what the noise of a testbench does to its gate.
 
@@ -111,6 +112,9 @@ def noisy_gate(
         Of these; the same seed gives the same numbers on any number of workers.
     circuits : mapping of int to CircuitNoise
         Place of each `NetlistNoise` among `noises`, from 0 -> its circuit.
+    of_the_line : bool
+        Whether to leave out the detuning's, which is the gate's own qubit's: all others reach every
+        qubit of the line.
 
     Returns
     -------
@@ -141,6 +145,7 @@ def noisy_gate(
             noise.density(drive.carrier_frequency),
         )
         for number, noise in enumerate(noises, start=1)
+        if not (of_the_line and isinstance(noise, DetuningNoise))
     ]
     tables = [item for item in found if not isinstance(item.noise, NetlistNoise)]
     sources: dict[int, NoiseSource] = {
