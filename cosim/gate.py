@@ -22,9 +22,8 @@ from cosim.guards import (
 )
 from cosim.imported import every_second, import_waveform
 from cosim.line import through_line
-from cosim.neighbours import idle_effect, spectator_effects, spectator_warnings
-from cosim.netlist_noise import circuit_noise
-from cosim.noise_effect import NoisyGate, noisy_gate
+from cosim.neighbours import Neighbour, idle_effect, spectator_effects
+from cosim.noise_setup import line_of_noise
 from cosim.quantum.channel import check_channel, nearest_unitary, pauli_transfer_matrix
 from cosim.quantum.fidelity import (
     Rotation,
@@ -43,10 +42,8 @@ from cosim.quantum.targets import target_rotation
 from cosim.qubit_drive import QubitDrive, couple
 from cosim.record import Clock, make_record
 from cosim.result import Channel, GateResult
-from cosim.side_results import SpectatorEffect
 from cosim.testbench import Testbench
-from cosim.voltage_noises import NetlistNoise
-from cosim.waveform import ComplexArray, Envelope
+from cosim.waveform import ComplexArray
 
 Progress = Callable[[float], None]
 
@@ -169,7 +166,8 @@ def run_gate(
     twin = drive.rotating_wave_twin(envelope)
     rotating_wave_error = math.nan if twin is None else channel_distance(clean, twin)
     clock.lap("rotating_wave_twin")
-    noisy = _noise(bench, plan, drive, envelope)
+    noise = line_of_noise(bench, plan, drive.carrier_frequency, envelope)
+    noisy = noise.on(drive)
     if noisy is not None:
         pulse = replace(pulse, before=noisy.correction)
         channel = clean @ noisy.correction
@@ -185,10 +183,12 @@ def run_gate(
     as_simulated, in_free_frame, calibrated = views.fidelities(second)
     floor = views.floor(second)
     clock.lap("fidelities")
-    spectators = spectator_effects(bench.spectator, drive, pulse)
-    idle = None
+    neighbours = spectator_effects(bench.spectator, drive, pulse, noise)
+    idle, idle_warnings = None, tuple[str, ...]()
     if bench.gate.idle is not None:
-        idle = idle_effect(bench.gate.idle, drive, pulse, shot.waveform, bench.noise)
+        idle, idle_warnings = idle_effect(
+            bench.gate.idle, drive, pulse, shot.waveform, measures.amplitude, noise
+        )
     clock.lap("neighbours")
     reference = _reference_error(bench, pulse, clean)
     clock.lap("reference")
@@ -203,7 +203,8 @@ def run_gate(
         *twin_warnings(drive.carrier_frequency, drive.qubit.frequency, rotating_wave_error),
         *floor_warnings(calibrated, floor),
         *(() if noisy is None else noisy.warnings),
-        *spectator_warnings(spectators, drive),
+        *(text for item in neighbours for text in item.warnings),
+        *idle_warnings,
     )
     clock.lap("checks")
     return GateResult(
@@ -232,37 +233,16 @@ def run_gate(
         warnings=tuple(dict.fromkeys(warnings)),
         run=make_record(bench, shot, drive.carrier_frequency, clock),
         noise=None if noisy is None else noisy.effect,
-        spectators=spectators,
-        register_infidelity=_register(in_free_frame.infidelity, spectators),
+        spectators=tuple(item.effect for item in neighbours),
+        register_infidelity=_register(in_free_frame.infidelity, neighbours),
         idle=idle,
     )
 
 
-def _register(own: float, spectators: tuple[SpectatorEffect, ...]) -> float:
-    if not spectators:
+def _register(own: float, neighbours: tuple[Neighbour, ...]) -> float:
+    if not neighbours:
         return math.nan
-    return own + sum(item.free_frame_infidelity for item in spectators)
-
-
-def _noise(
-    bench: Testbench, plan: Plan | None, drive: QubitDrive, envelope: Envelope
-) -> NoisyGate | None:
-    if not bench.noise:
-        return None
-    accuracy = bench.accuracy
-    circuits = {
-        place: circuit_noise(bench, plan, noise, drive.carrier_frequency)
-        for place, noise in enumerate(bench.noise)
-        if isinstance(noise, NetlistNoise)
-    }
-    return noisy_gate(
-        drive,
-        envelope,
-        bench.noise,
-        samples=accuracy.noise_samples,
-        seed=accuracy.noise_seed,
-        circuits=circuits,
-    )
+    return own + sum(item.effect.free_frame_infidelity for item in neighbours)
 
 
 def _capture(

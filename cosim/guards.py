@@ -8,9 +8,12 @@ import numpy as np
 from cosim.adjust import SCALE_RANGE, Pulse
 from cosim.capture import check_steps
 from cosim.coupling import DriveLine, rate_per_unit
+from cosim.dsp.noise.density import SpectralDensity
 from cosim.dsp.pulse import PulseMeasures
+from cosim.noises import DetuningNoise, Noise
 from cosim.quantum.fidelity import average_gate_fidelity
 from cosim.quantum.operators import OperatorSystem
+from cosim.quantum.qubit import Qubit
 from cosim.result import Fidelity
 from cosim.waveform import ComplexArray, Envelope, Waveform
 
@@ -30,6 +33,10 @@ TWIN_TOLERANCE = 1e-4
 # Carrier left at an edge of the window, over the plateau, that is worth a warning: a pulse cut
 # there by the window loses an angle of the same order.
 EDGE_TOLERANCE = 1e-3
+
+# A noise that dephases at this part of T2's own rate, or whose T2* is within this part of T2, may
+# be what T2 was measured with.
+DOUBLE_TOLERANCE = 0.1
 
 
 def step_warnings(step: float, carrier_frequency: float) -> tuple[str, ...]:
@@ -122,7 +129,9 @@ def area_warnings(
     return tuple(found)
 
 
-def level_warnings(pulse: Pulse, target: ComplexArray) -> tuple[str, ...]:
+def level_warnings(
+    pulse: Pulse, target: ComplexArray, *, table: str = "[qubit]"
+) -> tuple[str, ...]:
     """Tell when the levels kept are too few, from a run with one more.
 
     Parameters
@@ -131,6 +140,8 @@ def level_warnings(pulse: Pulse, target: ComplexArray) -> tuple[str, ...]:
         Drive, qubit and window.
     target : ndarray of complex, shape (2, 2)
         Target unitary.
+    table : str
+        Where the levels stand.
 
     Returns
     -------
@@ -153,7 +164,7 @@ def level_warnings(pulse: Pulse, target: ComplexArray) -> tuple[str, ...]:
         return ()
     return (
         f"{qubit.levels} levels are too few: with {qubit.levels + 1} the average gate fidelity "
-        f"changes by {change:.1e}; raise 'levels' in [qubit]",
+        f"changes by {change:.1e}; raise 'levels' in {table}",
     )
 
 
@@ -254,3 +265,46 @@ def floor_warnings(calibrated: Fidelity, floor: float) -> tuple[str, ...]:
             f"floor {floor:.1e}: a smaller step is needed to resolve it",
         )
     return ()
+
+
+def counting_warnings(
+    qubit: Qubit, name: str, noise: Noise, density: SpectralDensity | None
+) -> tuple[str, ...]:
+    """Tell when a noise of the detuning may be what the testbench's t2 stands for already.
+
+    Parameters
+    ----------
+    qubit : Qubit
+        With its t2.
+    name : str
+        Of the noise.
+    noise : Noise
+        The table [[noise]].
+    density : SpectralDensity or None
+        Of the detuning in (rad/s)^2/Hz; None for a constant one.
+
+    Returns
+    -------
+    tuple of str
+        The warning, if any.
+    """
+    rate = qubit.gamma_phi
+    if not isinstance(noise, DetuningNoise) or rate <= 0.0:
+        return ()
+    if density is None:
+        t2_star = math.sqrt(2.0) / noise.spread
+        if abs(t2_star / qubit.t2 - 1.0) > DOUBLE_TOLERANCE:
+            return ()
+        return (
+            f"noise '{name}' makes a T2* of {t2_star:.4g} s, and the testbench's t2 is "
+            f"{qubit.t2:.4g} s: the same dephasing may be counted twice",
+        )
+    # White noise dephases at S/4; of another noise that is told where t2 would see it.
+    where = max(density.low, rate / (2.0 * math.pi))
+    own = float(density.at([where])[0]) / 4.0 if where < density.high else 0.0
+    if own <= DOUBLE_TOLERANCE * rate:
+        return ()
+    return (
+        f"noise '{name}' alone dephases at {own:.3g} 1/s, and the testbench's t2 at {rate:.3g} "
+        "1/s: the same noise may be counted twice",
+    )

@@ -2,14 +2,17 @@
 
 import math
 from collections.abc import Sequence
-from dataclasses import replace
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from cosim.adjust import Pulse
 from cosim.coupling import rate_per_unit
 from cosim.errors import InputError, TestbenchError
-from cosim.noises import VOLTAGES, DetuningNoise, Noise
+from cosim.guards import level_warnings
+from cosim.noise_effect import NoisyGate
+from cosim.noise_setup import LineOfNoise
+from cosim.noises import VOLTAGES, AmplitudeNoise, DetuningNoise, Noise, PhaseNoise
 from cosim.quantum.channel import nearest_unitary
 from cosim.quantum.evolution import DriveSpline
 from cosim.quantum.fidelity import average_gate_fidelity, leakage, rotation_of, target_unitary
@@ -20,15 +23,31 @@ from cosim.quantum.targets import target_rotation
 from cosim.qubit_drive import QubitDrive, make_qubit
 from cosim.schema import SpectatorTable
 from cosim.side_results import IdleEffect, SpectatorEffect
-from cosim.waveform import Waveform
+from cosim.waveform import Envelope, Waveform
 
 _IDENTITY = np.eye(2, dtype=np.complex128)
 
 
+@dataclass(frozen=True, slots=True)
+class Neighbour:
+    """What happens to another qubit of the line, and what the reader must know of it.
+
+    Parameters
+    ----------
+    effect : SpectatorEffect
+        In numbers.
+    warnings : tuple of str
+        Each with its name.
+    """
+
+    effect: SpectatorEffect
+    warnings: tuple[str, ...]
+
+
 def spectator_effects(
-    tables: Sequence[SpectatorTable], drive: QubitDrive, pulse: Pulse
-) -> tuple[SpectatorEffect, ...]:
-    """Evolve the other qubits of the line under the same waveform.
+    tables: Sequence[SpectatorTable], drive: QubitDrive, pulse: Pulse, noise: LineOfNoise
+) -> tuple[Neighbour, ...]:
+    """Evolve the other qubits of the line under the same waveform, with the same noise.
 
     Parameters
     ----------
@@ -38,29 +57,34 @@ def spectator_effects(
         Of the gate.
     pulse : Pulse
         The gate's; without the rotating-wave approximation, as the gate's own headline.
+    noise : LineOfNoise
+        That of the line reaches every qubit; the detuning's is the gate's qubit's own.
 
     Returns
     -------
-    tuple of SpectatorEffect
-        In the order of the tables. Noise of the testbench acts on the gate's qubit alone.
+    tuple of Neighbour
+        In the order of the tables.
 
     Raises
     ------
     InputError
         If a target does not exist, or the gate's qubit is given by operators.
+    SimulationError
+        If a noisy run of the circuit fails.
     """
     if not tables:
         return ()
     if isinstance(drive.qubit, OperatorSystem):
         raise InputError("[[spectator]] tables do not go with a system of operators")
     return tuple(
-        _spectator(table, number, drive, pulse) for number, table in enumerate(tables, start=1)
+        _spectator(table, number, drive, pulse, noise)
+        for number, table in enumerate(tables, start=1)
     )
 
 
 def _spectator(
-    table: SpectatorTable, number: int, drive: QubitDrive, pulse: Pulse
-) -> SpectatorEffect:
+    table: SpectatorTable, number: int, drive: QubitDrive, pulse: Pulse, noise: LineOfNoise
+) -> Neighbour:
     assert not isinstance(drive.qubit, OperatorSystem)
     qubit = make_qubit(table.qubit(drive.qubit.frequency), drive.carrier_frequency)
     # The line is the same; only what a volt does to this qubit differs.
@@ -73,42 +97,41 @@ def _spectator(
             f"table [[spectator]] number {number}, key 'target': {error.message}", hint=error.hint
         ) from None
     target = target_unitary(wanted.axis, wanted.angle)
-    channel = Pulse(qubit, spline, pulse.start, pulse.stop).channel()
+    own = Pulse(qubit, spline, pulse.start, pulse.stop)
+    line = replace(drive.line, rabi_per_volt=table.rabi_per_volt)
+    noisy = noise.on_another(replace(drive, qubit=qubit, line=line))
+    if noisy is not None:
+        own = replace(own, before=noisy.correction)
+    channel = own.channel()
     framed = free_frame(channel, target)
-    found = rotation_of(nearest_unitary(channel))
-    return SpectatorEffect(
+    effect = SpectatorEffect(
         name=table.name or f"spectator {number}",
         frequency=qubit.frequency,
         target=table.target,
         infidelity=_loss(average_gate_fidelity(channel, target)),
         free_frame_infidelity=_loss(framed.average_gate_fidelity),
-        rotation=found,
+        rotation=rotation_of(nearest_unitary(channel)),
         phase=math.remainder(-(framed.before + framed.after), 2.0 * math.pi),
         leakage=max(0.0, leakage(channel)),
+        noise=None if noisy is None else noisy.effect,
     )
+    found = [
+        *_carrier_warnings(effect, drive),
+        *level_warnings(own, target, table=f"[[spectator]] number {number}"),
+        *(() if noisy is None else noisy.warnings),
+    ]
+    return Neighbour(effect, tuple(f"'{effect.name}': {text}" for text in found))
 
 
-def spectator_warnings(effects: Sequence[SpectatorEffect], drive: QubitDrive) -> tuple[str, ...]:
-    """Name spectators that the carrier drives as it drives its target.
-
-    Parameters
-    ----------
-    effects : sequence of SpectatorEffect
-        From `spectator_effects`.
-    drive : QubitDrive
-        Of the gate.
-
-    Returns
-    -------
-    tuple of str
-    """
+def _carrier_warnings(item: SpectatorEffect, drive: QubitDrive) -> tuple[str, ...]:
     start, stop = drive.window
     width = 1.0 / (stop - start)
-    return tuple(
-        f"'{item.name}' lies {abs(item.frequency - drive.carrier_frequency):.3g} Hz from the "
-        f"carrier, within the pulse's own width of {width:.3g} Hz: it is driven like the target"
-        for item in effects
-        if item.target == "identity" and abs(item.frequency - drive.carrier_frequency) < width
+    offset = abs(item.frequency - drive.carrier_frequency)
+    if item.target != "identity" or offset >= width:
+        return ()
+    return (
+        f"it lies {offset:.3g} Hz from the carrier, within the pulse's own width of {width:.3g} "
+        "Hz: it is driven like the target",
     )
 
 
@@ -117,8 +140,9 @@ def idle_effect(
     drive: QubitDrive,
     pulse: Pulse,
     waveform: Waveform,
-    noises: Sequence[Noise],
-) -> IdleEffect:
+    amplitude: float,
+    noise: LineOfNoise,
+) -> tuple[IdleEffect, tuple[str, ...]]:
     """Judge a stretch without a pulse.
 
     Parameters
@@ -131,49 +155,94 @@ def idle_effect(
         The gate's, whose drive reaches over the whole run.
     waveform : Waveform
         At the probe.
-    noises : sequence of Noise
-        The tables [[noise]].
+    amplitude : float
+        Of the gate's pulse there, carrier peak amplitude in the waveform's unit.
+    noise : LineOfNoise
+        All of it acts at rest as well.
 
     Returns
     -------
-    IdleEffect
+    effect : IdleEffect
+    warnings : tuple of str
 
     Raises
     ------
     InputError
         If the stretch does not lie within the run.
+    SimulationError
+        If a noisy run of the circuit fails.
     """
     start, stop = span
-    clean = replace(pulse, start=start, stop=stop, before=None)
-    channel = clean.channel()
+    own = replace(pulse, start=start, stop=stop, before=None)
+    own.channel()  # Refuses a stretch outside of the run before noise is made for it.
+    phase = free_frame(own.channel(), _IDENTITY)
+    noisy = noise.on(replace(drive, window=span))
+    if noisy is not None:
+        own = replace(own, before=noisy.correction)
+    channel = own.channel()
     framed = free_frame(channel, _IDENTITY)
     inside = (waveform.t >= start) & (waveform.t <= stop)
-    flips = dephasing = 0.0
-    volts = rate_per_unit(drive.line, waveform.unit)
-    for noise in noises:
-        density = noise.density(drive.carrier_frequency)
-        if density is None:
-            continue
-        if isinstance(noise, VOLTAGES):
-            # Of each quadrature beside the carrier; of the voltage itself it is half of that.
-            offset = abs(drive.carrier_frequency - _frequency(drive))
-            lowest = max(offset, density.low, 1.0)
-            flips += flip_rate(0.5 * volts**2 * float(density.at([lowest])[0]))
-        elif isinstance(noise, DetuningNoise):
-            # White noise of the detuning, as its density at the slowest turn of the stretch.
-            lowest = min(max(1.0 / (stop - start), density.low), density.high)
-            dephasing += float(density.at([lowest])[0]) / 4.0
-    return IdleEffect(
+    left = _left(noise.envelope, span)
+    turn = math.remainder(-(phase.before + phase.after), 2.0 * math.pi)
+    flips, dephasing = _rates(span, drive, waveform.unit, left, noise.noises)
+    effect = IdleEffect(
         start=start,
         stop=stop,
         infidelity=_loss(average_gate_fidelity(channel, _IDENTITY)),
         free_frame_infidelity=_loss(framed.average_gate_fidelity),
-        phase=math.remainder(-(framed.before + framed.after), 2.0 * math.pi),
+        phase=turn,
+        stark_shift=turn / (2.0 * math.pi * (stop - start)),
         leakage=max(0.0, leakage(channel)),
         residual=float(np.ptp(waveform.v[inside])) / 2.0 if inside.any() else math.nan,
+        extinction=20.0 * math.log10(amplitude / left) if left > 0.0 else math.inf,
         flip_rate=flips,
         dephasing_rate=dephasing,
+        noise=None if noisy is None else noisy.effect,
     )
+    return effect, _idle_warnings(noisy)
+
+
+def _idle_warnings(noisy: NoisyGate | None) -> tuple[str, ...]:
+    return () if noisy is None else tuple(f"at rest: {text}" for text in noisy.warnings)
+
+
+def _left(envelope: Envelope, span: tuple[float, float]) -> float:
+    """Give the median of the carrier's amplitude, which the tail of a pulse does not move."""
+    inside = (envelope.t >= span[0]) & (envelope.t <= span[1])
+    size = np.abs(envelope.iq[inside])
+    return float(np.median(size)) if size.size else math.nan
+
+
+def _rates(
+    span: tuple[float, float],
+    drive: QubitDrive,
+    unit: str,
+    left: float,
+    noises: Sequence[Noise],
+) -> tuple[float, float]:
+    """Give the rates in 1/s of flips, each way, and of dephasing, by the golden rule."""
+    flips = dephasing = 0.0
+    volts = rate_per_unit(drive.line, unit)
+    slowest = 1.0 / (span[1] - span[0])
+    offset = abs(drive.carrier_frequency - _frequency(drive))
+    for noise in noises:
+        density = noise.density(drive.carrier_frequency)
+        if density is None:
+            continue
+        # What is slower than one turn per stretch is no rate.
+        where = min(max(slowest, density.low), density.high)
+        if isinstance(noise, DetuningNoise):
+            dephasing += float(density.at([where])[0]) / 4.0
+            continue
+        beside = min(max(offset, where), density.high)
+        level = float(density.at([beside])[0])
+        if isinstance(noise, VOLTAGES):
+            # Of each quadrature beside the carrier; of the voltage itself it is half of that.
+            flips += flip_rate(0.5 * volts**2 * level)
+        elif isinstance(noise, (AmplitudeNoise, PhaseNoise)):
+            # It has one quadrature, on what is left of the carrier.
+            flips += flip_rate(0.25 * (volts * left) ** 2 * level)
+    return flips, dephasing
 
 
 def _frequency(drive: QubitDrive) -> float:

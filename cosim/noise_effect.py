@@ -17,6 +17,7 @@ from cosim.dsp.noise.bands import FrequencyGrid, frequency_grid
 from cosim.dsp.noise.density import SpectralDensity
 from cosim.dsp.noise.paths import PathPlan, generator, plan_paths, sample_paths
 from cosim.errors import InputError, TestbenchError
+from cosim.guards import counting_warnings
 from cosim.netlist_noise import INJECTION, CircuitNoise, injected_noise
 from cosim.noise_frame import (
     Nominal,
@@ -25,16 +26,14 @@ from cosim.noise_frame import (
     superoperators,
     unitary_losses,
 )
+from cosim.noise_spectra import noise_filters, noise_spectrum
 from cosim.noises import VOLTAGES, AmplitudeNoise, DetuningNoise, Noise, PhaseNoise
 from cosim.quantum.batch import propagate_batch
 from cosim.quantum.batch_drive import BatchDrive
 from cosim.quantum.filters import (
-    FilterFunction,
     filter_area,
-    filter_function,
     noise_infidelity,
     phase_filter_functions,
-    phase_operator,
 )
 from cosim.quantum.operators import OperatorSystem
 from cosim.quantum.quasistatic import gaussian_average
@@ -235,7 +234,7 @@ def _source(nominal: Nominal, item: _Fluctuation, volts: float) -> NoiseSource:
         return NoiseSource(item.name, kind, "quadrature", infidelity, leaked)
     grid = _in_table(item, lambda: _grid(nominal, item.density))
     levels = _in_table(item, lambda: item.density.at(grid.frequencies))
-    functions, operators = _filters(nominal, item, volts, grid.frequencies)
+    functions, operators = noise_filters(nominal, item.noise, volts, grid.frequencies)
     effects = [noise_infidelity(function, levels, grid.weights) for function in functions]
     infidelity = sum(effect.infidelity for effect in effects)
     leaked = sum(effect.leakage for effect in effects)
@@ -253,27 +252,18 @@ def _source(nominal: Nominal, item: _Fluctuation, volts: float) -> NoiseSource:
         for function, operator in zip(functions, operators, strict=True):
             whole = filter_area([nominal.path], [operator]).infidelity
             beyond += last * max(0.0, whole - float(grid.weights @ function.total))
-    return NoiseSource(item.name, kind, "filter function", infidelity, leaked, frame, beyond, high)
-
-
-def _filters(
-    nominal: Nominal, item: _Fluctuation, volts: float, frequencies: FloatArray
-) -> tuple[list[FilterFunction], list[ComplexArray]]:
-    """Give the filter functions of a source, and the operators that it multiplies."""
-    drive = nominal.drive_hamiltonian(nominal.edge_rate)
-    number = nominal.qubit.number()
-    if isinstance(item.noise, DetuningNoise):
-        operators = [number]
-    elif isinstance(item.noise, AmplitudeNoise):
-        operators = [drive]
-    elif isinstance(item.noise, PhaseNoise):
-        operators = [phase_operator(number, drive)]
-    else:
-        # The two quadratures of an added voltage are independent.
-        turn = volts * nominal.edge_turn
-        operators = [nominal.drive_hamiltonian(turn), nominal.drive_hamiltonian(1j * turn)]
-    found = [filter_function([nominal.path], [one], frequencies) for one in operators]
-    return found, operators
+    spectrum = noise_spectrum(item.density, levels, functions, grid)
+    return NoiseSource(
+        item.name,
+        kind,
+        "filter function",
+        infidelity,
+        leaked,
+        frame,
+        beyond,
+        high,
+        spectrum=spectrum,
+    )
 
 
 def _grid(nominal: Nominal, density: SpectralDensity | None) -> FrequencyGrid:
@@ -398,14 +388,5 @@ def _warnings(qubit: Qubit, items: Sequence[_Fluctuation], effect: NoiseEffect) 
                 f"noise '{item.name}': above {source.highest_frequency:.3g} Hz, where the samples "
                 f"end, it costs up to {source.unreached:.2g} more"
             )
-        if isinstance(item.noise, DetuningNoise) and item.density is not None:
-            # White noise of the detuning dephases at S/4, which T2 may count already.
-            low = max(item.density.low, 1e-3)
-            rate = float(item.density.at([low])[0]) / 4.0 if low < item.density.high else 0.0
-            if qubit.gamma_phi > 0.0 and rate > 0.1 * qubit.gamma_phi:
-                found.append(
-                    f"noise '{item.name}' alone dephases at {rate:.3g} 1/s at low frequency, and "
-                    f"the testbench's t2 at {qubit.gamma_phi:.3g} 1/s: the same noise may be "
-                    "counted twice"
-                )
+        found += counting_warnings(qubit, item.name, item.noise, item.density)
     return tuple(found)

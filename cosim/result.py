@@ -10,7 +10,7 @@ from cosim.circuit.netlist import DeckFile
 from cosim.dsp.pulse import PulseMeasures
 from cosim.errors import InputError
 from cosim.quantum.fidelity import Rotation
-from cosim.side_results import IdleEffect, NoiseEffect, NoiseSource, SpectatorEffect
+from cosim.side_results import IdleEffect, NoiseEffect, NoiseSource, NoiseSpectrum, SpectatorEffect
 from cosim.waveform import ComplexArray, Envelope, FloatArray, Waveform
 
 # What `cosim.circuit.confidential` writes in place of lines, and of a data file.
@@ -261,6 +261,7 @@ KINDS: dict[str, type] = {
         DeckFile,
         NoiseEffect,
         NoiseSource,
+        NoiseSpectrum,
         SpectatorEffect,
         IdleEffect,
     )
@@ -339,12 +340,17 @@ def as_plain(value: Any) -> Any:
     Returns
     -------
     object
-        Dictionaries and lists; a number that does not exist is None.
+        Dictionaries and lists; a number that does not exist or is infinite is None, and what is
+        no part of a table of runs is left out.
     """
     if isinstance(value, float):
-        return None if math.isnan(value) else value
+        return value if math.isfinite(value) else None
     if isinstance(value, (tuple, list)):
         return [as_plain(item) for item in value]
     if is_dataclass(value):
-        return {item.name: as_plain(getattr(value, item.name)) for item in fields(value)}
+        return {
+            item.name: as_plain(getattr(value, item.name))
+            for item in fields(value)
+            if item.metadata.get("table", True)
+        }
     return value

@@ -70,18 +70,23 @@ def spectator_parts(
     """
     if not effects:
         return []
-    names = ("spectator", "frequency", "target", "1 - F_avg", "free frame", "angle", "phase")
-    table = _headed(*names, "leakage")
+    # The terminal is 80 columns wide: what says nothing of these qubits has none of them.
+    gates = any(item.target != "identity" for item in effects)
+    noisy = any(item.noise is not None for item in effects)
+    names = ("spectator", "frequency", *["target"] * gates, "1 - F_avg", "free frame", "angle")
+    table = _headed(*names, "phase", "leakage", *["noise"] * noisy)
     for item in effects:
+        by_noise = "-" if item.noise is None else f"{item.noise.infidelity:.1e}"
         table.add_row(
             item.name,
-            format_quantity(item.frequency, "Hz", 6),
-            item.target,
-            f"{item.infidelity:.3e}",
-            f"{item.free_frame_infidelity:.3e}",
-            f"{math.degrees(item.rotation.angle):.3f}°",
-            f"{math.degrees(item.phase):+.3f}°",
+            format_quantity(item.frequency, "Hz", 5),
+            *[item.target] * gates,
+            f"{item.infidelity:.2e}",
+            f"{item.free_frame_infidelity:.2e}",
+            f"{math.degrees(item.rotation.angle):.2f}°",
+            f"{math.degrees(item.phase):+.2f}°",
             f"{item.leakage:.1e}",
+            *[by_noise] * noisy,
         )
     heading = f"the register, free frame: 1 - F_avg sums up to {register_infidelity:.3e}"
     return [Text(""), Text(heading), table]
@@ -100,23 +105,30 @@ def idle_parts(effect: IdleEffect | None, unit: str) -> list[RenderableType]:
     Returns
     -------
     list
-        Two lines; empty without.
+        A heading and a table; empty without.
     """
     if effect is None:
         return []
-    span = effect.stop - effect.start
-    per = 1e-6 / span
-    return [
-        Text(""),
-        Text(
-            f"at rest, {format_quantity(effect.start, 's')} to "
-            f"{format_quantity(effect.stop, 's')}, per microsecond: 1 - F_avg "
-            f"{per * effect.infidelity:.3e} ({per * effect.free_frame_infidelity:.3e} in the free "
-            f"frame), phase {per * math.degrees(effect.phase):+.4f}°, flips by noise "
-            f"{1e-6 * effect.flip_rate:.2e} each way, dephasing by noise "
-            f"{1e-6 * effect.dephasing_rate:.2e}; {format_quantity(effect.residual, unit)} are left"
-        ),
-    ]
+    micro = 1e-6
+    start, stop = format_quantity(effect.start, "s"), format_quantity(effect.stop, "s")
+    lost = f"1 - F_avg {effect.infidelity:.3e}, free frame {effect.free_frame_infidelity:.3e}"
+    if effect.noise is not None:
+        lost += f", noise {effect.noise.infidelity:.1e}"
+    left, shift = format_quantity(effect.residual, unit), format_quantity(effect.stark_shift, "Hz")
+    turn = 360.0 * micro * effect.stark_shift
+    table = Table(box=None, pad_edge=False, show_header=False)
+    table.add_column(no_wrap=True, style="bold")
+    table.add_column()
+    rows = {
+        "over the stretch": lost,
+        "carrier left": f"extinction {effect.extinction:.1f} dB, {left}",
+        "Stark shift": f"{shift}: {turn:+.4f}° per microsecond",
+        "flips by noise": f"{micro * effect.flip_rate:.2e} per microsecond, up and down each",
+        "dephasing by noise": f"{micro * effect.dephasing_rate:.2e} per microsecond",
+    }
+    for name, text in rows.items():
+        table.add_row(name, text)
+    return [Text(""), Text(f"at rest, {start} to {stop}"), table]
 
 
 def _headed(*names: str) -> Table:
