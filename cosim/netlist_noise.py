@@ -1,17 +1,19 @@
 """The noise of a circuit's own devices at the probe, as envelopes that are added to the drive's."""
 
 import math
-from collections.abc import Iterator, Sequence
-from dataclasses import dataclass, field
+from collections.abc import Sequence
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 from scipy.interpolate import CubicSpline
 
+from cosim.added_noise import INJECTION, AddedNoise, choose_method, temperatures_of
 from cosim.capture import Plan
 from cosim.circuit.bias import CleanRun, clean_run
+from cosim.circuit.generators import check_names
 from cosim.circuit.injection import InjectedNoise, device_noise
-from cosim.circuit.noise_parts import NoiseTemperatures
 from cosim.circuit.noise_settings import NoiseSettings
+from cosim.circuit.noise_shares import DeviceShares, device_shares, single_shares
 from cosim.dsp.demodulation import demodulate
 from cosim.errors import TestbenchError
 from cosim.noise_frame import Nominal, superoperators, unitary_losses
@@ -22,7 +24,8 @@ from cosim.testbench import Testbench
 from cosim.voltage_noises import NetlistNoise
 from cosim.waveform import ComplexArray, Envelope, Waveform
 
-INJECTION = "injection"
+# What the devices explain of the noise together; less means that the projection does not hold.
+EXPLAINED = 0.7
 
 
 @dataclass(frozen=True, slots=True)
@@ -41,8 +44,16 @@ class CircuitNoise:
         Its unit.
     carrier_frequency : float
         In Hz.
+    method : "injection", "stationary" or "frozen"
+        How its noise is worked out.
+    reason : str
+        Why, where the testbench left it open.
+    added : AddedNoise or None
+        The voltage that it adds, of the other two methods.
     made : dict
         Seed -> its noise: a run of the simulator serves the gate's qubit, the others and rest.
+    told : dict
+        Stretch of the run -> the devices' shares of the noise there.
     """
 
     clean: CleanRun
@@ -50,7 +61,11 @@ class CircuitNoise:
     probe: str
     unit: str
     carrier_frequency: float
+    method: str = INJECTION
+    reason: str = ""
+    added: AddedNoise | None = None
     made: dict[int, tuple[Envelope, InjectedNoise]] = field(default_factory=dict, compare=False)
+    told: dict[tuple[float, float], DeviceShares] = field(default_factory=dict, compare=False)
 
     def envelope(self, seed: int) -> tuple[Envelope, InjectedNoise]:
         """Run the circuit with the noise of one seed.
@@ -77,27 +92,42 @@ class CircuitNoise:
             self.made[seed] = self._demodulated(noise), noise
         return self.made[seed]
 
-    def devices(self, seed: int) -> Iterator[tuple[str, Envelope]]:
-        """Run the circuit with the noise of one device after the other.
+    def shares(self, seeds: Sequence[int], span: tuple[float, float], each: bool) -> DeviceShares:
+        """Tell which device makes how much of the noise.
 
         Parameters
         ----------
-        seed : int
-            Not negative.
+        seeds : sequence of int
+            Of the noisy runs.
+        span : tuple of two floats
+            Stretch of the run in s.
+        each : bool
+            Whether each device makes noise alone, in a run of its own of the first seed; else the
+            runs of all devices tell it.
 
-        Yields
-        ------
-        tuple of (str, Envelope)
-            Device in ngspice's name, and the envelope of its noise.
+        Returns
+        -------
+        DeviceShares
 
         Raises
         ------
         SimulationError, DeckError
             If a run fails.
         """
-        for device in self.clean.inventory.devices:
-            noise = device_noise(self.clean, seed, self.settings, devices=(device.name,))
-            yield device.name, self._demodulated(noise)
+        if span not in self.told:
+            (probe,) = self.clean.probes
+            where = (probe, self.carrier_frequency, span)
+            if each:
+                names = [device.name for device in self.clean.inventory.devices]
+                alone = (
+                    (name, device_noise(self.clean, seeds[0], self.settings, devices=(name,)))
+                    for name in names
+                )
+                self.told[span] = single_shares(alone, *where)
+            else:
+                runs = [self.envelope(seed)[1] for seed in seeds]
+                self.told[span] = device_shares(self.clean, self.settings, runs, *where)
+        return self.told[span]
 
     def _demodulated(self, noise: InjectedNoise) -> Envelope:
         wave = Waveform(noise.time, noise.samples[self.probe], unit=self.unit)
@@ -107,7 +137,7 @@ class CircuitNoise:
 def circuit_noise(
     bench: Testbench, plan: Plan | None, noise: NetlistNoise, carrier_frequency: float
 ) -> CircuitNoise:
-    """Run a circuit without noise and look at its devices.
+    """Run a circuit without noise, look at its devices and choose how their noise is worked out.
 
     Parameters
     ----------
@@ -127,10 +157,12 @@ def circuit_noise(
     Raises
     ------
     TestbenchError
-        If there is no netlist, a line of S-parameters stands behind the probe, or it is a baseband
-        pair.
-    SimulationError, DeckError
-        If the run fails.
+        If there is no netlist, a line of S-parameters stands behind the probe, it is a baseband
+        pair, or the circuit has no operating point and the table wants the noise around it.
+    SimulationError, DeckError, ProbeError
+        If the run, or the small-signal noise that is asked for, fails.
+    UnknownNameError
+        If an excess factor is given for what is no device and no model.
     """
     if plan is None:
         raise TestbenchError('[[noise]] with from = "netlist" needs a [netlist], not a [waveform]')
@@ -140,14 +172,29 @@ def circuit_noise(
             "of S-parameters behind it"
         )
     (probe,) = plan.probes
-    settings = NoiseSettings(
-        temperatures=NoiseTemperatures(
-            noise.resistor_temperature, noise.channel_temperature, noise.series_temperature
-        ),
-        gamma=noise.gamma,
-    )
+    settings = NoiseSettings(temperatures_of(noise), gammas=noise.gammas)
+    if noise.gamma is not None:
+        settings = replace(settings, gamma=noise.gamma)
     clean = clean_run(plan.deck, plan.request, [probe.text])
-    return CircuitNoise(clean, settings, probe.text, probe.unit, carrier_frequency)
+    check_names(clean.inventory, settings)
+    choice = choose_method(clean, noise, carrier_frequency, _stretch(bench, clean))
+    return CircuitNoise(
+        clean,
+        settings,
+        probe.text,
+        probe.unit,
+        carrier_frequency,
+        choice.method,
+        choice.reason,
+        choice.added,
+    )
+
+
+def _stretch(bench: Testbench, clean: CleanRun) -> tuple[float, float]:
+    """Give the stretch of the run that counts: from the gate to the rest that is judged."""
+    whole = (0.0, float(clean.result.time[-1]))
+    spans = [span for span in (bench.gate.window or whole, bench.gate.idle) if span is not None]
+    return min(start for start, _ in spans), max(stop for _, stop in spans)
 
 
 def injected_noise(
@@ -191,23 +238,79 @@ def injected_noise(
     found = [circuit.envelope(number) for number in seeds]
     unitaries = _with_added(nominal, [envelope for envelope, _ in found], volts)
     losses, leaks = unitary_losses(unitaries)
-    devices: dict[str, float] = {}
-    if noise.by_device:
-        names, alone = zip(*circuit.devices(seed), strict=True)
-        each, _ = unitary_losses(_with_added(nominal, alone, volts))
-        devices = dict(zip(names, each.tolist(), strict=True))
+    infidelity = float(losses.mean())
+    start = float(nominal.middles[0]) - 0.5 * nominal.step
+    shares = circuit.shares(seeds, (start, start + nominal.duration), noise.by_device)
     source = NoiseSource(
         name=name,
         acts_on=noise.acts_on,
         method=INJECTION,
-        infidelity=float(losses.mean()),
+        infidelity=infidelity,
         leakage=float(leaks.mean()),
         highest_frequency=found[0][1].highest_frequency,
         standard_error=float(losses.std(ddof=1) / math.sqrt(len(seeds))),
-        devices=dict(sorted(devices.items(), key=lambda pair: -pair[1])),
+        devices={device: infidelity * part for device, part in shares.parts.items()},
+        devices_error=infidelity * shares.deviation,
+        devices_explain=shares.explained,
         left_out=found[0][1].left_out,
+        reason=circuit.reason,
     )
     return superoperators(unitaries).mean(axis=0), source
+
+
+def labelled(source: NoiseSource, circuit: CircuitNoise) -> NoiseSource:
+    """Say of a voltage added at the probe that it is a circuit's noise, and whose.
+
+    Parameters
+    ----------
+    source : NoiseSource
+        What the added voltage does.
+    circuit : CircuitNoise
+        The circuit that it stands for.
+
+    Returns
+    -------
+    NoiseSource
+    """
+    if circuit.added is None:
+        return source
+    parts = circuit.added.parts.items()
+    return replace(
+        source,
+        method=circuit.method,
+        devices={device: source.infidelity * part for device, part in parts},
+        left_out=circuit.added.left_out,
+        reason=circuit.reason,
+    )
+
+
+def circuit_warnings(circuit: CircuitNoise, source: NoiseSource) -> tuple[str, ...]:
+    """Say what the reader must know of a circuit's noise.
+
+    Parameters
+    ----------
+    circuit : CircuitNoise
+        The circuit.
+    source : NoiseSource
+        What its noise does.
+
+    Returns
+    -------
+    tuple of str
+    """
+    if circuit.added is not None:
+        return tuple(f"noise '{source.name}': {text}" for text in circuit.added.warnings)
+    if source.devices_error == math.inf:
+        return (
+            f"noise '{source.name}': in so short a gate so few noisy runs do not tell its devices "
+            "apart; more 'seeds' do, or by_device = true, which takes a run of each",
+        )
+    if source.devices_explain < EXPLAINED:
+        return (
+            f"noise '{source.name}': the parts of its devices explain {source.devices_explain:.0%} "
+            "of it only; by_device = true takes a run of each",
+        )
+    return ()
 
 
 def _with_added(nominal: Nominal, envelopes: Sequence[Envelope], volts: float) -> ComplexArray:

@@ -12,13 +12,14 @@ from types import MappingProxyType
 
 import numpy as np
 
+from cosim.added_noise import INJECTION
 from cosim.coupling import rate_per_unit
 from cosim.dsp.noise.bands import FrequencyGrid, frequency_grid
 from cosim.dsp.noise.density import SpectralDensity
 from cosim.dsp.noise.paths import PathPlan, generator, plan_paths, sample_paths
 from cosim.errors import InputError, TestbenchError
 from cosim.guards import counting_warnings
-from cosim.netlist_noise import INJECTION, CircuitNoise, injected_noise
+from cosim.netlist_noise import CircuitNoise, circuit_warnings, injected_noise, labelled
 from cosim.noise_frame import (
     Nominal,
     channel_losses,
@@ -110,7 +111,7 @@ def noisy_gate(
     seed : int
         Of these; the same seed gives the same numbers on any number of workers.
     circuits : mapping of int to CircuitNoise
-        Place of each `NetlistNoise` among `noises`, from 0 -> its circuit.
+        Place among `noises`, from 0 -> the circuit of a `NetlistNoise`, or of what stands for it.
     of_the_line : bool
         Whether to leave out the detuning's, which is the gate's own qubit's: all others reach every
         qubit of the line.
@@ -147,9 +148,11 @@ def noisy_gate(
         if not (of_the_line and isinstance(noise, DetuningNoise))
     ]
     tables = [item for item in found if not isinstance(item.noise, NetlistNoise)]
-    sources: dict[int, NoiseSource] = {
-        item.stream: _source(nominal, item, volts) for item in tables
-    }
+    sources: dict[int, NoiseSource] = {}
+    for item in tables:
+        source = _source(nominal, item, volts)
+        of_circuit = circuits.get(item.stream - 1)
+        sources[item.stream] = source if of_circuit is None else labelled(source, of_circuit)
     drawn = _drawn_effect(nominal, tables, volts, samples, seed)
     first_order = sum(source.infidelity for source in sources.values())
     spread = SIGNIFICANT * drawn.error + NEGLIGIBLE * drawn.infidelity + drawn.infidelity**2
@@ -174,8 +177,14 @@ def noisy_gate(
         method=drawn.method if tables else INJECTION,
         agree=agree,
         sources=tuple(sources[item.stream] for item in found),
+        noise_method=", ".join(dict.fromkeys(item.method for item in circuits.values())),
     )
-    return NoisyGate(correction, effect, _warnings(drive.qubit, found, effect))
+    told = (
+        text
+        for place, circuit in circuits.items()
+        for text in circuit_warnings(circuit, sources[place + 1])
+    )
+    return NoisyGate(correction, effect, (*_warnings(drive.qubit, found, effect), *told))
 
 
 def _check_line(noise: LineNoise, drive: QubitDrive, unit: str) -> None:

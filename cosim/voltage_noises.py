@@ -1,7 +1,8 @@
 """The tables [[noise]] that add a voltage: at the probe, along the line, by the deck's devices."""
 
 import math
-from dataclasses import dataclass
+from collections.abc import Mapping
+from dataclasses import dataclass, field
 from typing import Annotated, Literal
 
 import numpy as np
@@ -120,9 +121,6 @@ class LineNoise:
 class NetlistNoise:
     """A table [[noise]] with acts_on = "probe" and from = "netlist": the deck's own noise there.
 
-    Currents that are made from a seed are injected at every device, along the run: a circuit that
-    is switched or modulated has no noise around one operating point.
-
     Parameters
     ----------
     acts_on : "probe"
@@ -131,32 +129,64 @@ class NetlistNoise:
         The key `from`.
     name : str
         For messages and results.
+    method : "auto", "injection", "stationary" or "frozen"
+        "injection": currents made from a seed, at every device along the run, since a circuit that
+        is switched or modulated has no noise around one operating point. "stationary": the
+        simulator's small-signal noise around the sources' mean values in the gate's window, refused
+        where a leading device's bias changes there. "auto": the latter where it holds, else the
+        former. "frozen": an estimate from the sources at one instant, which converts no noise from
+        one frequency to another, and has no 1/f noise.
+    instant : float or None
+        Of "frozen", in s; None: the middle of the gate's window.
     seeds : int
-        Noisy runs of the circuit, at least 2.
+        Noisy runs of the circuit of "injection", at least 2.
     resistor_temperature, channel_temperature, series_temperature : float or None
         Noise temperature in K of resistors, of channels, and of series resistances of transistors
         and diodes; None: the device temperature, which decks with cards fitted at 4 K have warmer.
-    gamma : float
-        Excess factor of channels.
+    gamma : float or None
+        Excess factor of channels, which only "injection" takes; None: 2/3 there.
+    gammas : mapping of str to float
+        The same of single devices, or of all of a model.
     by_device : bool
-        Whether each device is injected alone as well, in a run of its own.
+        Whether "injection" injects each device alone as well, in a run of its own.
     """
 
     acts_on: Literal["probe"]
     origin: Annotated[Literal["netlist"], Key("from")]
     name: str = ""
+    method: Literal["auto", "injection", "stationary", "frozen"] = "auto"
+    instant: Annotated[float, Quantity("s", least=0.0)] | None = None
     seeds: int = 8
     resistor_temperature: Temperature | None = None
     channel_temperature: Temperature | None = None
     series_temperature: Temperature | None = None
-    gamma: float = 2.0 / 3.0
+    gamma: float | None = None
+    gammas: Mapping[str, float] = field(default_factory=dict)
     by_device: bool = False
 
     def __post_init__(self) -> None:
         if not 2 <= self.seeds <= 100_000:
             raise InputError(f"key 'seeds': wanted 2 to 100000, got {self.seeds}")
-        if not self.gamma > 0.0:
+        if self.gamma is not None and not self.gamma > 0.0:
             raise InputError(f"key 'gamma': wanted more than 0, got {self.gamma:g}")
+        for name, value in self.gammas.items():
+            if not 0.0 < value < math.inf:
+                raise InputError(f"key 'gammas.{name}': wanted more than 0, got {value:g}")
+        if self.instant is not None and self.method != "frozen":
+            raise InputError("key 'instant' goes with method = \"frozen\"")
+        around_a_point = self.method in ("stationary", "frozen")
+        if around_a_point and (self.channels_given or self.by_device):
+            raise InputError(
+                f"'gamma', 'gammas' and 'by_device' go with injection, not with method = "
+                f'"{self.method}"',
+                hint="The simulator's small-signal noise has its models' own excess factors, and "
+                "each device's part without a run of its own.",
+            )
+
+    @property
+    def channels_given(self) -> bool:
+        """Whether excess factors are given, which the simulator's own noise does not take."""
+        return self.gamma is not None or bool(self.gammas)
 
     @property
     def spread(self) -> float:
@@ -164,6 +194,6 @@ class NetlistNoise:
         return 0.0
 
     def density(self, carrier: float) -> SpectralDensity | None:
-        """It has none: the noise of a switched circuit is not stationary."""
+        """It has none before the circuit is known."""
         del carrier
         return None

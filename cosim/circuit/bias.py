@@ -8,7 +8,13 @@ import numpy as np
 from cosim.circuit.analysis import TransientRequest, TransientResult
 from cosim.circuit.deck import Deck, unique
 from cosim.circuit.flicker import card_flicker
-from cosim.circuit.inventory import Inventory, NoisyDevice, noisy_devices
+from cosim.circuit.inventory import (
+    IndependentSource,
+    Inventory,
+    NoisyDevice,
+    independent_sources,
+    noisy_devices,
+)
 from cosim.circuit.noise_parts import device_temperature
 from cosim.circuit.probe import Probe, parse_probe
 from cosim.circuit.simulator import simulate
@@ -46,6 +52,8 @@ class CleanRun:
         The devices, and what is left out.
     device_temperature : float
         Temperature of the devices in K.
+    sources : tuple of IndependentSource
+        The voltage and current sources, whose values the run has saved.
     """
 
     deck: Deck
@@ -54,6 +62,7 @@ class CleanRun:
     result: TransientResult
     inventory: Inventory
     device_temperature: float = field(metadata={"unit": "K"})
+    sources: tuple[IndependentSource, ...] = ()
 
     def vector(self, device: NoisyDevice, name: str) -> FloatArray:
         """Give a quantity of a device, shape (n,).
@@ -70,6 +79,41 @@ class CleanRun:
         ndarray, shape (n,)
         """
         return self.result.vectors[f"@{device.name}[{name}]"]
+
+    def value(self, source: IndependentSource) -> FloatArray:
+        """Give the value of a source along the run, shape (n,).
+
+        Parameters
+        ----------
+        source : IndependentSource
+            One of the run's.
+
+        Returns
+        -------
+        ndarray, shape (n,)
+            In V or A.
+        """
+        if source.name[0] == "i":
+            return self.result.vectors[source.saves[0]]
+        high, low = (self.voltage(node) for node in source.nodes)
+        return high - low
+
+    def voltage(self, node: str) -> FloatArray:
+        """Give the voltage of a net that the run has saved, shape (n,).
+
+        Parameters
+        ----------
+        node : str
+            As ngspice has it; "0" for ground.
+
+        Returns
+        -------
+        ndarray, shape (n,)
+            In V.
+        """
+        if node == "0":
+            return np.zeros_like(self.result.time)
+        return self.result.vectors[f"v({node})"]
 
 
 def clean_run(deck: Deck, request: TransientRequest, probes: Sequence[str]) -> CleanRun:
@@ -115,8 +159,11 @@ def clean_run(deck: Deck, request: TransientRequest, probes: Sequence[str]) -> C
         saves += [f"@{device.name}[{name}]" for name in names]
         if device.kind == "resistor":
             saves += [f"v({node})" for node in device.nodes if node != "0"]
+    sources = independent_sources(deck)
+    saves += [save for source in sources for save in source.saves]
     request = replace(request, start=0.0, saves=unique(save.strip().lower() for save in saves))
-    return CleanRun(deck, request, parsed, simulate(deck, request), inventory, kelvin)
+    result = simulate(deck, request)
+    return CleanRun(deck, request, parsed, result, inventory, kelvin, sources)
 
 
 def conductance(clean: CleanRun, device: NoisyDevice) -> float:
@@ -135,11 +182,7 @@ def conductance(clean: CleanRun, device: NoisyDevice) -> float:
         In S: its current over its voltage where that is greatest, with all temperature
         coefficients; where no voltage stands over it, by its resistance and multiplier alone.
     """
-    vectors = clean.result.vectors
-    high, low = (
-        vectors[f"v({node})"] if node != "0" else np.zeros_like(clean.result.time)
-        for node in device.nodes
-    )
+    high, low = (clean.voltage(node) for node in device.nodes)
     voltage = high - low
     place = int(np.argmax(np.abs(voltage)))
     if abs(voltage[place]) > _LEAST_VOLTAGE:

@@ -15,7 +15,7 @@ from scipy.interpolate import CubicSpline
 
 from cosim.circuit.bias import CleanRun, conductance, junction_currents
 from cosim.circuit.flicker import Flicker, card_flicker, flicker_unread
-from cosim.circuit.inventory import NoisyDevice
+from cosim.circuit.inventory import Inventory, NoisyDevice
 from cosim.circuit.noise_parts import CHANNEL, THERMAL
 from cosim.circuit.noise_settings import NoiseSettings
 from cosim.errors import InputError, UnknownNameError, near_names
@@ -124,7 +124,32 @@ def noise_currents(
         raise UnknownNameError(
             f"'{name}' is no device whose noise is injected", hint=near_names(name, present)
         )
-    known = present.keys() | {device.model for device in present.values()} - {""}
+    check_names(clean.inventory, settings)
+    grid = noise_grid(clean)
+    found: list[NoiseCurrent] = []
+    for name, device in present.items():
+        if name in wanted:
+            found += _currents(clean, settings, device, grid)
+    return tuple(found)
+
+
+def check_names(inventory: Inventory, settings: NoiseSettings) -> None:
+    """Refuse settings of devices that are not there.
+
+    Parameters
+    ----------
+    inventory : Inventory
+        What makes noise in a deck.
+    settings : NoiseSettings
+        1/f noise and excess factors by device or model.
+
+    Raises
+    ------
+    UnknownNameError
+        If a name is neither a device that makes noise nor a model of one.
+    """
+    known = {device.name for device in inventory.devices}
+    known |= {device.model for device in inventory.devices} - {""}
     for name in (*settings.flicker, *settings.gammas):
         if name.lower() not in known:
             raise UnknownNameError(
@@ -132,12 +157,6 @@ def noise_currents(
                 "of one",
                 hint=near_names(name.lower(), known),
             )
-    grid = noise_grid(clean)
-    found: list[NoiseCurrent] = []
-    for name, device in present.items():
-        if name in wanted:
-            found += _currents(clean, settings, device, grid)
-    return tuple(found)
 
 
 def left_out(clean: CleanRun, settings: NoiseSettings) -> tuple[str, ...]:

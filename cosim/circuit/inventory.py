@@ -16,6 +16,7 @@ KINDS = {"r": "resistor", "m": "mos", "j": "jfet", "d": "diode", "q": "bipolar"}
 _OTHERS = {"s": "a switch", "w": "a switch", "z": "a MESFET"}
 _MOST_DEVICES = 20_000
 _BEHAVIOURAL = re.compile(r"(?<![\w.])[vi]\s*\(", re.IGNORECASE)
+_BENDING = re.compile(r"(?<![\w.])([vi]\s*\(|poly\b|table\b)", re.IGNORECASE)
 _SERIES = {"m": ("rd", "rs", "rsh", "rg"), "j": ("rd", "rs"), "d": ("rs",), "q": ("rb", "rc", "re")}
 
 
@@ -109,6 +110,81 @@ def noisy_devices(deck: Deck) -> Inventory:
         if len(devices) > _MOST_DEVICES:
             raise DeckError(f"more than {_MOST_DEVICES} devices make noise", file=deck.path)
     return Inventory(tuple(devices), tuple(left_out))
+
+
+@dataclass(frozen=True, slots=True)
+class IndependentSource:
+    """A voltage or current source of a deck.
+
+    Parameters
+    ----------
+    path : str
+        "vin" or "x1.vin".
+    name : str
+        Its name in ngspice: "vin", "v.x1.vin".
+    nodes : tuple of (str, str)
+        The nets of its terminals as ngspice has them; "0" for ground.
+    """
+
+    path: str
+    name: str
+    nodes: tuple[str, str]
+
+    @property
+    def saves(self) -> tuple[str, ...]:
+        """What a run saves for its value to be known."""
+        if self.name[0] == "i":
+            return (f"@{self.name}[current]",)
+        return tuple(f"v({node})" for node in self.nodes if node != "0")
+
+
+def independent_sources(deck: Deck) -> tuple[IndependentSource, ...]:
+    """Find the voltage and current sources of a deck.
+
+    Parameters
+    ----------
+    deck : Deck
+        The deck.
+
+    Returns
+    -------
+    tuple of IndependentSource
+        Through all instances; without those in a branch of an `.if` of which cannot be told
+        whether it is there.
+    """
+    structure = structure_of(deck.lines)
+    found = []
+    for prefix, scope, element, index in _elements(structure, structure.root, ""):
+        if element.letter in "vi" and index not in scope.uncertain:
+            first, second = (find_node(deck, prefix + node) for node in element.nodes[:2])
+            path = prefix + element.name
+            found.append(IndependentSource(path, _flat(prefix, element), (first, second)))
+    return tuple(found)
+
+
+def unobserved_elements(deck: Deck) -> tuple[str, ...]:
+    """Find the elements that may change with time and of which no run tells whether they do.
+
+    Parameters
+    ----------
+    deck : Deck
+        The deck.
+
+    Returns
+    -------
+    tuple of str
+        Names in ngspice of switches, MESFETs, behavioural and polynomial elements, code models
+        (but for those that play a stimulus) and compiled models, through all instances.
+    """
+    structure = structure_of(deck.lines)
+    found = []
+    for prefix, _, element, index in _elements(structure, structure.root, ""):
+        text = structure.lines[index].text
+        plays = element.letter == "a" and element.name.startswith("astimulus_")
+        bends = element.letter in "rclefgh" and _BENDING.search(text)
+        if bends or (element.letter in "swzbanu" and not plays):
+            found.append(_flat(prefix, element))
+    return tuple(found)
 
 
 def device_names(deck: Deck) -> tuple[tuple[str, str], ...]:

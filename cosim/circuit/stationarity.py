@@ -49,8 +49,10 @@ class Stationarity:
         -------
         str
         """
+        if not self.changes:
+            return "the circuit is without transistors and diodes"
         if self.stationary:
-            most = max(self.changes.values(), default=0.0)
+            most = max(self.changes.values())
             return f"no leading device's bias changes by more than {most:.2g} of itself"
         named = ", ".join(f"{name} by {self.changes[name]:.0%}" for name in self.breaking[:_SHOWN])
         more = len(self.breaking) - _SHOWN
@@ -104,7 +106,7 @@ def check_stationarity(
             hint=f"The run goes from 0 s to {time[-1]:g} s.",
         )
     active = {item.name: item for item in clean.inventory.devices if item.kind != "resistor"}
-    bias = {name: _bias(clean, item)[inside] for name, item in active.items()}
+    bias = {name: bias_of(clean, item)[inside] for name, item in active.items()}
     currents = {name: _peak(_current(clean, item)[inside]) for name, item in active.items()}
     greatest = max(currents.values(), default=0.0)
     leading = {name for name, peak in currents.items() if peak > _LEADING_CURRENT * greatest}
@@ -128,7 +130,21 @@ def _leading(shares: Mapping[str, float]) -> set[str]:
     return found
 
 
-def _bias(clean: CleanRun, device: NoisyDevice) -> FloatArray:
+def bias_of(clean: CleanRun, device: NoisyDevice) -> FloatArray:
+    """Give what tells of a device whether it moves.
+
+    Parameters
+    ----------
+    clean : CleanRun
+        The clean run.
+    device : NoisyDevice
+        A transistor or diode.
+
+    Returns
+    -------
+    ndarray, shape (n,)
+        gm in S of a field-effect transistor, the collector's or the diode's current in A.
+    """
     if device.kind in ("mos", "jfet"):
         return clean.vector(device, "gm")
     return _current(clean, device)
