@@ -5,9 +5,10 @@ import os
 import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.backends.backend_agg import FigureCanvasAgg
-from matplotlib.figure import Figure
+from matplotlib.figure import Figure, SubFigure
 
 from cosim.errors import InputError
+from cosim.noise_figures import draw_sides, side_rows
 from cosim.result import GateResult
 from cosim.terminal import CAUTION
 
@@ -15,7 +16,7 @@ _LABELS = ("I", "X", "Y", "Z")
 
 
 def plot_gate(result: GateResult, path: str | os.PathLike[str]) -> None:
-    """Draw a gate: waveform and envelope, phase, Pauli transfer matrix, fidelities.
+    """Draw a gate: waveform, phase, Pauli transfer matrix, fidelities, noise and other qubits.
 
     Parameters
     ----------
@@ -29,14 +30,15 @@ def plot_gate(result: GateResult, path: str | os.PathLike[str]) -> None:
     InputError
         If the file cannot be written.
     """
-    figure = Figure(figsize=(10.5, 6.5), layout="constrained")
+    figure = Figure(figsize=(10.5, 6.5 + 3.0 * side_rows(result)), layout="constrained")
     FigureCanvasAgg(figure)
-    grid = figure.add_gridspec(2, 3)
-    envelope = figure.add_subplot(grid[0, :2])
+    gate = _with_sides(figure, result)
+    grid = gate.add_gridspec(2, 3)
+    envelope = gate.add_subplot(grid[0, :2])
     _draw_envelope(envelope, result)
-    _draw_phase(figure.add_subplot(grid[1, :2], sharex=envelope), result)
-    _draw_matrix(figure.add_subplot(grid[0, 2]), result)
-    _draw_infidelities(figure.add_subplot(grid[1, 2]), result)
+    _draw_phase(gate.add_subplot(grid[1, :2], sharex=envelope), result)
+    _draw_matrix(gate.add_subplot(grid[0, 2]), result)
+    _draw_infidelities(gate.add_subplot(grid[1, 2]), result)
     figure.suptitle(result.title or f"gate {result.target}")
     figure.text(0.995, 0.002, CAUTION, ha="right", va="bottom", fontsize=6, color="0.45")
     figure.get_layout_engine().set(rect=(0, 0.02, 1, 0.98))  # type: ignore[union-attr, call-arg]
@@ -44,6 +46,17 @@ def plot_gate(result: GateResult, path: str | os.PathLike[str]) -> None:
         figure.savefig(path, dpi=150)
     except (OSError, ValueError) as error:
         raise InputError(f"the figure {os.fspath(path)} cannot be written: {error}") from None
+
+
+def _with_sides(figure: Figure, result: GateResult) -> Figure | SubFigure:
+    """Draw what stands beside the gate below; give the part of the figure that is left."""
+    more = side_rows(result)
+    if not more:
+        return figure
+    # Each part lays out its columns by itself.
+    parts = figure.add_gridspec(2, 1, height_ratios=[6.5, 3.0 * more])
+    draw_sides(figure.add_subfigure(parts[1]), result)
+    return figure.add_subfigure(parts[0])
 
 
 def _draw_envelope(axes: Axes, result: GateResult) -> None:
@@ -90,6 +103,11 @@ def _draw_phase(axes: Axes, result: GateResult) -> None:
 def _mark_window(axes: Axes, result: GateResult) -> None:
     for edge in result.window:
         axes.axvline(edge * 1e9, color="0.4", lw=0.8, ls="--")
+    if result.idle is not None:
+        start, stop = 1e9 * result.idle.start, 1e9 * result.idle.stop
+        axes.axvspan(start, stop, color="C0", alpha=0.08, lw=0)
+        place = axes.get_xaxis_transform()
+        axes.text(0.5 * (start + stop), 0.97, "rest", transform=place, ha="center", va="top")
 
 
 def _draw_matrix(axes: Axes, result: GateResult) -> None:

@@ -56,6 +56,7 @@ FLOORS = {
     "neighbours": 4,
     "side_results": 3,
     "checks": 6,
+    "noise_figures": 6,
     "terminal": 6,
     "sweep_figures": 6,
     "sweep_terminal": 6,
