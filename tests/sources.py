@@ -108,6 +108,11 @@ RICHARDSON = (
     'L. F. Richardson, "The approximate arithmetical solution by finite differences of physical '
     f'problems", Phil. Trans. R. Soc. A 210, 307 (1911), {MEMORY}'
 )
+RIGETTI = (
+    'C. Rigetti, M. Devoret, "Fully microwave-tunable universal gates in superconducting qubits '
+    'with linear couplings and fixed transition frequencies", Phys. Rev. B 81, 134507 (2010), '
+    f"{MEMORY}"
+)
 RUSS = (
     'M. Russ et al., "High-fidelity quantum gates in Si/SiGe double quantum dots", Phys. Rev. B '
     f"97, 085421 (2018), {MEMORY}"
@@ -140,6 +145,10 @@ WALLMAN = (
 WALLMAN_FLAMMIA = (
     'J. J. Wallman, S. T. Flammia, "Randomized benchmarking with confidence", New J. Phys. 16, '
     f"103032 (2014), {MEMORY}"
+)
+WOOD = (
+    'C. J. Wood, J. M. Gambetta, "Quantification and characterization of leakage errors", Phys. '
+    f"Rev. A 97, 032306 (2018), {MEMORY}"
 )
 ZENER = (
     'C. Zener, "Non-adiabatic crossing of energy levels", Proc. R. Soc. A 137, 696 (1932), '

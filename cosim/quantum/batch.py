@@ -1,28 +1,31 @@
 """Batched evolution in the rotating frame: noise samples, corners, trials, detunings.
 
-H/hbar = 2 pi alpha n (n - 1)/2 + (rate a + rate^* a^dag)/2 + detuning a^dag a, with the rate of
-`cosim.quantum.reference.evolve_rotating_wave`, plus relaxation and dephasing. A row's numbers
-depend on that row alone, to the last bit: not on the rest of the batch, the chunks or the threads.
+Of a qubit H/hbar = 2 pi alpha n (n - 1)/2 + (rate a + rate^* a^dag)/2 + detuning a^dag a, with the
+rate of `cosim.quantum.reference.evolve_rotating_wave`, plus relaxation and dephasing; other small
+systems, pairs above all, are a `BatchSystem` with `BatchControls`. A row's numbers depend on that
+row alone, to the last bit: not on the rest of the batch, the chunks or the threads.
 """
 
+import math
 from collections.abc import Callable, Iterable, Iterator
-from concurrent.futures import ThreadPoolExecutor
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 
 from cosim.errors import InputError
 from cosim.quantum import batch_kernel
-from cosim.quantum.batch_drive import MOST_TURN, BatchDrive
-from cosim.quantum.batch_plan import Panels, lay_panels, panel_exponents
-from cosim.quantum.hamiltonian import anharmonic_energies
+from cosim.quantum.batch_drive import BatchDrive
+from cosim.quantum.batch_rows import Rows, rows_of
+from cosim.quantum.batch_system import BatchControls, BatchSystem
 from cosim.quantum.kernel import IndexArray
 from cosim.quantum.qubit import Qubit
 from cosim.waveform import ComplexArray, FloatArray
 
 __all__ = [
     "BatchChannels",
+    "BatchControls",
     "BatchDrive",
+    "BatchSystem",
     "BatchUnitaries",
     "MeanChannel",
     "evolve_batch",
@@ -30,7 +33,6 @@ __all__ = [
     "propagate_batch",
 ]
 
-MOST_LEVELS = 6
 # Working memory of one chunk of rows in bytes.
 CHUNK_BYTES = 64 * 2**20
 # Without a tolerance the steps are halved for these rows only: the first, and one of so many.
@@ -98,15 +100,20 @@ class MeanChannel:
 
 
 def evolve_batch(
-    qubit: Qubit, drive: BatchDrive, *, tolerance: float | None = None, workers: int = 1
+    system: Qubit | BatchSystem,
+    drive: BatchDrive | BatchControls,
+    *,
+    tolerance: float | None = None,
+    workers: int = 1,
 ) -> BatchChannels:
     """Evolve a batch of drives and give the channels.
 
     Parameters
     ----------
-    qubit : Qubit
-        With 2 to 6 levels; its frequency does not matter in the rotating frame.
-    drive : BatchDrive
+    system : Qubit or BatchSystem
+        A qubit of 2 to 6 levels, whose frequency does not matter in the rotating frame; or any
+        small system, a pair of qubits say, of up to 9 states.
+    drive : BatchDrive for a Qubit, BatchControls for a BatchSystem
     tolerance : float, optional
         Largest change of an element of a superoperator on halving the steps, at least 1e-11. Each
         row's steps are halved until it is met. Without it the drive's samples set the steps, and
@@ -121,30 +128,36 @@ def evolve_batch(
     Raises
     ------
     InputError
-        If the levels, the tolerance or the workers are out of range, the tolerance cannot be met
-        by halving the steps 8 times, or a step is far too long for the levels or the loss.
+        If system and drive do not belong together, the levels, the tolerance or the workers are
+        out of range, the tolerance cannot be met by halving the steps 8 times, or a step is far
+        too long for the levels or the loss.
 
     Notes
     -----
-    Slices of constant drive are exact up to rounding. Dissipation acts between them by Simpson's
-    rule as in `cosim.quantum.kernel`; its panels are chosen for an error of 2e-8 and halved with
-    the steps. What is of second order in the dissipator falls with the square of the panels. A
-    smooth drive is sliced in fourth order, see `BatchDrive`.
+    Slices of constant drive are exact up to rounding, and with loss so are runs of 64 or more
+    slices, of order 1, that are equal or, of a qubit, undriven. In other slices dissipation acts
+    between them by Simpson's rule as in `cosim.quantum.kernel`; its panels are chosen for an error
+    of 2e-8 and halved with the steps. What is of second order in the dissipator falls with the
+    square of the panels. A smooth drive is sliced in fourth order, see `BatchDrive`.
     """
-    parts = list(_evolved(qubit, drive, tolerance, workers, 0, _channels))
+    parts = list(_evolved(rows_of(system, drive), tolerance, workers, 0, _channels))
     return BatchChannels(np.concatenate([part for part, _ in parts]), max(e for _, e in parts))
 
 
 def propagate_batch(
-    qubit: Qubit, drive: BatchDrive, *, tolerance: float | None = None, workers: int = 1
+    system: Qubit | BatchSystem,
+    drive: BatchDrive | BatchControls,
+    *,
+    tolerance: float | None = None,
+    workers: int = 1,
 ) -> BatchUnitaries:
     """Evolve a batch of drives without relaxation and dephasing.
 
     Parameters
     ----------
-    qubit, drive, tolerance, workers
-        As in `evolve_batch`, the tolerance for elements of the propagator; t1 and t2 are left out
-        of account.
+    system, drive, tolerance, workers
+        As in `evolve_batch`, the tolerance for elements of the propagator; t1 and t2 or the
+        collapse operators are left out of account.
 
     Returns
     -------
@@ -155,14 +168,17 @@ def propagate_batch(
     InputError
         As in `evolve_batch`.
     """
-    lossless = Qubit(qubit.frequency, qubit.levels, qubit.anharmonicity)
-    parts = list(_evolved(lossless, drive, tolerance, workers, 0, _unitaries))
+    if isinstance(system, Qubit):
+        lossless: Qubit | BatchSystem = replace(system, t1=math.inf, t2=math.inf)
+    else:
+        lossless = system.without_collapse()
+    parts = list(_evolved(rows_of(lossless, drive), tolerance, workers, 0, _unitaries))
     return BatchUnitaries(np.concatenate([part for part, _ in parts]), max(e for _, e in parts))
 
 
 def mean_channel(
-    qubit: Qubit,
-    drives: BatchDrive | Iterable[BatchDrive],
+    system: Qubit | BatchSystem,
+    drives: BatchDrive | BatchControls | Iterable[BatchDrive | BatchControls],
     *,
     tolerance: float | None = None,
     workers: int = 1,
@@ -171,8 +187,8 @@ def mean_channel(
 
     Parameters
     ----------
-    qubit : Qubit
-    drives : BatchDrive or iterable of BatchDrive
+    system : Qubit or BatchSystem
+    drives : BatchDrive or BatchControls, or iterable of them
         All samples, or portions of them made one after the other; how they are portioned does
         not change a bit of the result.
     tolerance, workers
@@ -187,13 +203,14 @@ def mean_channel(
     InputError
         As in `evolve_batch`, or if there is no sample.
     """
-    size = qubit.levels**2
+    size = system.levels**2
     mean = np.zeros((size, size), dtype=np.complex128)
     squares = np.zeros((size, size))
     count = 0
     step_error = 0.0
-    for drive in (drives,) if isinstance(drives, BatchDrive) else drives:
-        for values, error in _evolved(qubit, drive, tolerance, workers, count, _channels):
+    for drive in (drives,) if isinstance(drives, BatchDrive | BatchControls) else drives:
+        batch = rows_of(system, drive)
+        for values, error in _evolved(batch, tolerance, workers, count, _channels):
             batch_kernel.add_moments(count, mean, squares, values)
             count += values.shape[0]
             step_error = max(step_error, error)
@@ -205,55 +222,43 @@ def mean_channel(
     return MeanChannel(mean, np.sqrt(spread), count, step_error)
 
 
-Solver = Callable[[Qubit, BatchDrive, IndexArray, int, int], ComplexArray]
+Solver = Callable[[Rows, IndexArray, int, int], ComplexArray]
 
 
 def _evolved(
-    qubit: Qubit,
-    drive: BatchDrive,
-    tolerance: float | None,
-    workers: int,
-    before: int,
-    solve: Solver,
+    batch: Rows, tolerance: float | None, workers: int, before: int, solve: Solver
 ) -> Iterator[tuple[ComplexArray, float]]:
     """Give the chunks of a batch in order, each with its step error.
 
     `before` counts the samples that went before, so that the choice of checked rows does not
     depend on how samples are portioned.
     """
-    _check(qubit, drive, tolerance, workers)
-    exact = qubit.lossless and drive.order == 1
-    row_bytes = 200 * drive.samples + 64 * qubit.levels**4
-    chunk = max(1, CHUNK_BYTES // row_bytes)
-    for begin in range(0, drive.batch, chunk):
-        part = drive.take(begin, min(begin + chunk, drive.batch))
+    _check(tolerance, workers)
+    chunk = max(1, CHUNK_BYTES // batch.row_bytes)
+    for begin in range(0, batch.batch, chunk):
+        part = batch.take(begin, min(begin + chunk, batch.batch))
         rows = np.arange(part.batch)
-        found = solve(qubit, part, rows, 0, workers)
-        if exact:
+        found = solve(part, rows, 0, workers)
+        if batch.exact:
             yield found, 0.0
         elif tolerance is None:
             index = rows + begin + before
             rows = rows[(index < CHECKED_FIRST) | (index % CHECKED_EVERY == 0)]
-            finer = _finer(qubit, part, rows, 1, workers, solve)
+            finer = _finer(part, rows, 1, workers, solve)
             yield found, float(np.abs(finer - found[rows]).max(initial=0.0))
         else:
-            yield found, _halve_until(qubit, part, tolerance, workers, solve, found)
+            yield found, _halve_until(part, tolerance, workers, solve, found)
 
 
 def _halve_until(
-    qubit: Qubit,
-    drive: BatchDrive,
-    tolerance: float,
-    workers: int,
-    solve: Solver,
-    found: ComplexArray,
+    batch: Rows, tolerance: float, workers: int, solve: Solver, found: ComplexArray
 ) -> float:
     """Halve each row's steps until it no longer changes, in place; give the largest change."""
-    rows = np.arange(drive.batch)
+    rows = np.arange(batch.batch)
     largest = 0.0
     changes = np.zeros(0)
     for level in range(1, MOST_HALVINGS + 1):
-        finer = _finer(qubit, drive, rows, level, workers, solve)
+        finer = _finer(batch, rows, level, workers, solve)
         changes = np.abs(finer - found[rows]).max(axis=(1, 2))
         found[rows] = finer
         largest = max(largest, float(changes[changes <= tolerance].max(initial=0.0)))
@@ -262,101 +267,26 @@ def _halve_until(
             return largest
     raise InputError(
         f"tolerance: wanted {tolerance:.3g}, but after {MOST_HALVINGS} halvings of the steps "
-        f"{rows.size} of {drive.batch} rows still change by up to {changes.max():.3g}",
+        f"{rows.size} of {batch.batch} rows still change by up to {changes.max():.3g}",
         hint="give the drive on a finer grid, or ask for less",
     )
 
 
-def _finer(
-    qubit: Qubit, drive: BatchDrive, rows: IndexArray, level: int, workers: int, solve: Solver
-) -> ComplexArray:
+def _finer(batch: Rows, rows: IndexArray, level: int, workers: int, solve: Solver) -> ComplexArray:
     """Solve with halved steps, in portions that keep the memory of the chunk."""
     portions = np.array_split(rows, min(2**level, max(1, rows.size)))
-    return np.concatenate([solve(qubit, drive, some, level, workers) for some in portions])
+    return np.concatenate([solve(batch, some, level, workers) for some in portions])
 
 
-def _unitaries(
-    qubit: Qubit, drive: BatchDrive, rows: IndexArray, level: int, workers: int
-) -> ComplexArray:
-    rate, detuning, step = drive.slices(rows, level)
-    ladder = np.sqrt(np.arange(1.0, qubit.levels))
-    energies = anharmonic_energies(qubit)
-
-    def run(some: IndexArray) -> ComplexArray:
-        return np.asarray(batch_kernel.unitary_rows(rate, detuning, some, step, ladder, energies))
-
-    out = np.empty((rows.size, qubit.levels, qubit.levels), dtype=np.complex128)
-    _share(run, np.arange(rows.size), workers, out)
-    return out
+def _unitaries(rows: Rows, some: IndexArray, level: int, workers: int) -> ComplexArray:
+    return rows.unitaries(some, level, workers)
 
 
-def _channels(
-    qubit: Qubit, drive: BatchDrive, rows: IndexArray, level: int, workers: int
-) -> ComplexArray:
-    size = qubit.levels**2
-    if qubit.lossless:
-        u = _unitaries(qubit, drive, rows, level, workers)
-        # conj(u) kron u, row by row.
-        product = u.conj()[:, :, None, :, None] * u[:, None, :, None, :]
-        return product.reshape(rows.size, size, size)
-    rate, detuning, step = drive.slices(rows, level)
-    ladder = np.sqrt(np.arange(1.0, qubit.levels))
-    energies = anharmonic_energies(qubit)
-    exponents = panel_exponents(qubit, drive, rows)
-    if drive.order == 1 and level > 0:
-        # Panels over whole slices all miss what happens within a slice, so that halving them
-        # would not show it: the first halving goes within the slices.
-        exponents = np.minimum(exponents, 0)
-    exponents = exponents - level
-    out = np.empty((rows.size, size, size), dtype=np.complex128)
-    for exponent in np.unique(exponents):
-        panels: Panels = lay_panels(qubit, drive, int(exponent), level)
-
-        def run(some: IndexArray, panels: Panels = panels) -> ComplexArray:
-            return np.asarray(
-                batch_kernel.channel_rows(
-                    rate,
-                    detuning,
-                    some,
-                    step,
-                    panels.parts,
-                    panels.kick,
-                    panels.tables,
-                    ladder,
-                    energies,
-                )
-            )
-
-        _share(run, np.flatnonzero(exponents == exponent), workers, out)
-    return out
+def _channels(rows: Rows, some: IndexArray, level: int, workers: int) -> ComplexArray:
+    return rows.channels(some, level, workers)
 
 
-def _share(
-    run: Callable[[IndexArray], ComplexArray], rows: IndexArray, workers: int, out: ComplexArray
-) -> None:
-    """Write the rows' results into `out`, with the rows shared among threads."""
-    if workers == 1 or rows.size < 2:
-        out[rows] = run(rows)
-        return
-    parts = np.array_split(rows, min(workers, rows.size))
-    with ThreadPoolExecutor(len(parts)) as pool:
-        for part, values in zip(parts, pool.map(run, parts), strict=True):
-            out[part] = values
-
-
-def _check(qubit: Qubit, drive: BatchDrive, tolerance: float | None, workers: int) -> None:
-    if qubit.levels > MOST_LEVELS:
-        raise InputError(
-            f"batch: wanted a qubit of 2 to {MOST_LEVELS} levels, got {qubit.levels}",
-            hint="keep fewer levels with `Qubit.with_levels`",
-        )
-    turn = float(np.ptp(anharmonic_energies(qubit))) * drive.step
-    if turn > MOST_TURN:
-        raise InputError(
-            f"batch: the anharmonic levels turn by {turn:.3g} rad in a step of {drive.step:.3g} s, "
-            f"at most {MOST_TURN:g} are made",
-            hint="cut the time into more samples",
-        )
+def _check(tolerance: float | None, workers: int) -> None:
     if tolerance is not None and not LEAST_TOLERANCE <= tolerance < 1:
         raise InputError(
             f"tolerance: wanted {LEAST_TOLERANCE:g}, where rounding begins, to 1, got {tolerance!r}"

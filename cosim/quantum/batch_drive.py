@@ -190,12 +190,24 @@ class BatchDrive:
         if self.order == 1:
             return rate, detuning, self.step
         if detuning.shape[1] > 1:
-            detuning = _fourth_order(detuning, level)
-        return _fourth_order(rate, level), detuning, float(self.step / 2**level)
+            detuning = fourth_order(detuning, level)
+        return fourth_order(rate, level), detuning, float(self.step / 2**level)
 
 
-def _fourth_order(values: Array, level: int) -> Array:
-    """Turn samples at edges and middles of steps into two constant slices for each step."""
+def fourth_order(values: Array, level: int) -> Array:
+    """Turn samples at edges and middles of steps into two constant slices for each step.
+
+    Parameters
+    ----------
+    values : ndarray, shape (m, n)
+        n odd.
+    level : int
+        How often the steps are halved, on the cubic spline of the samples.
+
+    Returns
+    -------
+    ndarray, shape (m, (n - 1) 2**level)
+    """
     if level:
         count = values.shape[1] - 1
         spline = CubicSpline(np.arange(count + 1.0), values, axis=1)

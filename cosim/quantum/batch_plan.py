@@ -2,17 +2,19 @@
 
 import math
 from dataclasses import dataclass
+from typing import TypeVar
 
 import numpy as np
 from scipy.linalg import expm
 
 from cosim.errors import InputError
-from cosim.quantum.batch_drive import BatchDrive
 from cosim.quantum.batch_kernel import row_sizes
 from cosim.quantum.kernel import IndexArray
 from cosim.quantum.qubit import Qubit
 from cosim.quantum.steps import dissipator_rates
-from cosim.waveform import FloatArray
+from cosim.waveform import ComplexArray, FloatArray
+
+Matrix = TypeVar("Matrix", ComplexArray, FloatArray)
 
 # What each of the panels' two errors may cost in the channel of a row, by estimate, and the
 # longest half panel in radians, beyond which the estimate does not hold.
@@ -20,6 +22,51 @@ PANEL_ERROR = 2e-8
 PANEL_TURN = 0.5
 # Most parts of slices in an evolution, as the other kernel's most steps.
 MOST_PARTS = 30_000_000
+
+
+@dataclass(frozen=True, slots=True)
+class RowSizes:
+    """What sets the panels of each row.
+
+    Parameters
+    ----------
+    decay : float
+        Fastest decay in 1/s.
+    slow, fast : ndarray, shape (m,)
+        How fast the drive turns the system, and how fast it turns without, in rad/s.
+    largest, jumps : ndarray, shape (m,)
+        Largest rate, and the root of the sum of its squared jumps between slices, in rad/s.
+    """
+
+    decay: float
+    slow: FloatArray
+    fast: FloatArray
+    largest: FloatArray
+    jumps: FloatArray
+
+
+@dataclass(frozen=True, slots=True)
+class Grid:
+    """The slices over which panels are laid.
+
+    Parameters
+    ----------
+    step : float
+        Time between samples in s.
+    samples : int
+        Number of samples.
+    order : int
+        Of the drive, 1 or 4.
+    """
+
+    step: float
+    samples: int
+    order: int
+
+    @property
+    def duration(self) -> float:
+        """Length of the evolution in s."""
+        return self.step * (self.samples if self.order == 1 else self.samples - 1)
 
 
 @dataclass(frozen=True, slots=True)
@@ -31,29 +78,54 @@ class Panels:
     parts : int
         Equal parts into which each slice is cut.
     kick : ndarray of int64, shape (slices parts + 1,)
-        Table that acts before each part and after the last, or -1.
-    tables : ndarray, shape (kinds, levels, levels, levels)
-        rho_ij grows by sum_m tables[., i, j, m] rho_m,m+j-i.
+        Which of the times acts before each part and after the last, or -1.
+    times : ndarray, shape (kinds,)
+        For which the dissipator acts, in s.
     """
 
     parts: int
     kick: IndexArray
-    tables: FloatArray
+    times: FloatArray
 
 
-def panel_exponents(qubit: Qubit, drive: BatchDrive, rows: IndexArray) -> IndexArray:
-    """Choose for each row how long half a panel may be.
+def qubit_sizes(qubit: Qubit, rate: ComplexArray, detuning: FloatArray) -> RowSizes:
+    """Give what sets the panels of a qubit's rows.
 
     Parameters
     ----------
     qubit : Qubit
         With loss.
-    drive : BatchDrive
-    rows : ndarray of int64, shape (m,)
+    rate : ndarray, shape (1 or m, n)
+        In rad/s.
+    detuning : ndarray, shape (1 or m, 1 or n)
+        In rad/s.
 
     Returns
     -------
-    ndarray of int64, shape (m,)
+    RowSizes
+    """
+    largest, jumps = row_sizes(rate)
+    fast = 2 * math.pi * abs(qubit.anharmonicity) * (qubit.levels - 2)
+    return RowSizes(
+        float(dissipator_rates(qubit)[0].max()),
+        math.sqrt(qubit.levels - 1) * largest,
+        fast + np.abs(detuning).max(axis=1),
+        largest,
+        jumps,
+    )
+
+
+def panel_exponents(sizes: RowSizes, grid: Grid) -> IndexArray:
+    """Choose for each row how long half a panel may be.
+
+    Parameters
+    ----------
+    sizes : RowSizes
+    grid : Grid
+
+    Returns
+    -------
+    ndarray of int64, shape (1 or m,)
         e: half a panel is 2**e units, a unit being a slice of order 1 or a step of order 4. For
         order 4 never negative: within a step the frame is known in second order only.
 
@@ -67,43 +139,38 @@ def panel_exponents(qubit: Qubit, drive: BatchDrive, rows: IndexArray) -> IndexA
     for noise, and decay unit**2/12 times twice the largest rate for a slow rise and fall; within
     a slice there are none. These are estimates; halving the steps is the proof.
     """
-    rate, detuning = drive.pick(rows)
-    largest, jumps = row_sizes(rate)
-    unit = drive.step if drive.order == 1 else 2 * drive.step
-    decay = float(dissipator_rates(qubit)[0].max())
-    slow = math.sqrt(qubit.levels - 1) * largest
-    fast = 2 * math.pi * abs(qubit.anharmonicity) * (qubit.levels - 2)
-    turning = slow + fast + np.abs(detuning).max(axis=1)
+    decay, slow = sizes.decay, sizes.slow
+    unit = grid.step if grid.order == 1 else 2 * grid.step
+    turning = slow + sizes.fast
     with np.errstate(divide="ignore", over="ignore"):
-        on = 1 + slow * drive.duration
+        on = 1 + slow * grid.duration
         ends = 90 * PANEL_ERROR / (decay * turning**3 * on)
         smooth = np.minimum(ends**0.25, PANEL_TURN / turning)
         smooth = np.minimum(smooth, np.sqrt(12 * PANEL_ERROR / on) / decay)
-        rough = np.sqrt(12 * PANEL_ERROR / (decay * jumps))
-    rough[decay * unit**2 * 2 * largest / 12 > PANEL_ERROR] = 0.0
+        rough = np.sqrt(12 * PANEL_ERROR / (decay * sizes.jumps))
+    rough[decay * unit**2 * 2 * sizes.largest / 12 > PANEL_ERROR] = 0.0
     # Nothing is gained by panels longer than the evolution.
-    longest = math.log2(max(1.0, drive.duration / unit / 2))
+    longest = math.log2(max(1.0, grid.duration / unit / 2))
     smooth = np.minimum(np.log2(smooth / unit), longest)
     with np.errstate(divide="ignore"):
         rough = np.maximum(np.minimum(np.log2(rough / unit), longest), -1)
     # Far below what `lay_panels` lets pass.
     exponents = np.floor(np.maximum(np.minimum(smooth, rough), -60)).astype(np.int64)
-    if drive.order == 4:
-        exponents = np.maximum(exponents, 0)
-    return np.broadcast_to(exponents, rows.shape)
+    return np.asarray(np.maximum(exponents, 0) if grid.order == 4 else exponents)
 
 
-def lay_panels(qubit: Qubit, drive: BatchDrive, exponent: int, level: int) -> Panels:
-    """Lay the panels over the slices and make the tables of dissipation.
+def lay_panels(grid: Grid, exponent: int, level: int, decay: float) -> Panels:
+    """Lay the panels over the slices.
 
     Parameters
     ----------
-    qubit : Qubit
-    drive : BatchDrive
+    grid : Grid
     exponent : int
         From `panel_exponents`, less one for each halving.
     level : int
         Halvings of the steps; they cut the steps of order 4 themselves.
+    decay : float
+        Fastest decay in 1/s, for the error's text.
 
     Returns
     -------
@@ -114,23 +181,23 @@ def lay_panels(qubit: Qubit, drive: BatchDrive, exponent: int, level: int) -> Pa
     InputError
         If there would be more than `MOST_PARTS` parts of slices.
     """
-    if drive.order == 1:
+    if grid.order == 1:
         parts = 2 ** max(0, -exponent)
-        if drive.samples * parts > MOST_PARTS:
+        if grid.samples * parts > MOST_PARTS:
             raise InputError(
-                f"batch: {drive.samples} slices of {drive.step:.3g} s would be cut into "
-                f"{drive.samples * parts:.3g} parts, at most {MOST_PARTS:.3g} are made: the drive "
-                f"turns too fast beside T1 {qubit.t1:.3g} s and T2 {qubit.t2:.3g} s",
+                f"batch: {grid.samples} slices of {grid.step:.3g} s would be cut into "
+                f"{grid.samples * parts:.3g} parts, at most {MOST_PARTS:.3g} are made: the drive "
+                f"turns too fast beside a loss of up to {decay:.3g} per second",
                 hint="check the drive rate, the detuning, t1 and t2, or keep fewer levels",
             )
-        if drive.samples * parts == 1:
+        if grid.samples * parts == 1:
             parts = 2  # Simpson's rule needs two halves.
-        units, stride, unit = drive.samples * parts, 1, drive.step / parts
+        units, stride, unit = grid.samples * parts, 1, grid.step / parts
         half = max(1, 2**exponent)
     else:
         parts, stride = 1, 2
-        units = (drive.samples - 1) // 2 * 2**level
-        unit = 2 * drive.step / 2**level
+        units = (grid.samples - 1) // 2 * 2**level
+        unit = 2 * grid.step / 2**level
         half = 2 ** (exponent + level)
     weights = simpson_weights(units, int(half))
     times, kinds = np.unique(weights, return_inverse=True)
@@ -138,7 +205,7 @@ def lay_panels(qubit: Qubit, drive: BatchDrive, exponent: int, level: int) -> Pa
     # The first of the different weights is zero where panels span several units.
     shift = 1 if times[0] == 0 else 0
     kick[::stride] = kinds.reshape(-1) - shift
-    return Panels(parts, kick, _tables(qubit, unit * times[shift:]))
+    return Panels(parts, kick, unit * times[shift:])
 
 
 def simpson_weights(count: int, half: int) -> FloatArray:
@@ -178,8 +245,20 @@ def _add_panels(weights: FloatArray, half: int) -> None:
     weights[2::2] += half / 3
 
 
-def _tables(qubit: Qubit, times: FloatArray) -> FloatArray:
-    """Give exp(D time) - 1 of the dissipator for some times, diagonal by diagonal of rho."""
+def qubit_tables(qubit: Qubit, times: FloatArray) -> FloatArray:
+    """Give exp(D time) - 1 of a qubit's dissipator for some times, diagonal by diagonal of rho.
+
+    Parameters
+    ----------
+    qubit : Qubit
+    times : ndarray, shape (kinds,)
+        In s.
+
+    Returns
+    -------
+    ndarray, shape (kinds, levels, levels, levels)
+        rho_ij grows by sum_m tables[., i, j, m] rho_m,m+j-i.
+    """
     decay, down, up = dissipator_rates(qubit)
     d = qubit.levels
     tables = np.zeros((times.size, d, d, d))
@@ -189,12 +268,21 @@ def _tables(qubit: Qubit, times: FloatArray) -> FloatArray:
         chain = np.diag(-decay[m, m + offset])
         chain += np.diag(down[m, m + offset][:-1], 1) + np.diag(up[m, m + offset][1:], -1)
         for kind, time in enumerate(times):
-            tables[kind, m[:, None], (m + offset)[:, None], m[None, :]] = _grown(chain * time)
+            tables[kind, m[:, None], (m + offset)[:, None], m[None, :]] = growth(chain * time)
     return tables
 
 
-def _grown(matrix: FloatArray) -> FloatArray:
-    """Give exp(matrix) - 1 without loss of digits where the matrix is small."""
+def growth(matrix: Matrix) -> Matrix:
+    """Give exp(matrix) - 1 without loss of digits where the matrix is small.
+
+    Parameters
+    ----------
+    matrix : ndarray, shape (n, n)
+
+    Returns
+    -------
+    ndarray, shape (n, n)
+    """
     n = matrix.shape[0]
     # The upper right block of this exponential is (exp(matrix) - 1)/matrix.
     augmented = np.block([[matrix, np.eye(n)], [np.zeros((n, 2 * n))]])

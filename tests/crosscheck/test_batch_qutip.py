@@ -4,7 +4,13 @@ import numpy as np
 import pytest
 import qutip
 
-from cosim.quantum.batch import BatchDrive, evolve_batch, propagate_batch
+from cosim.quantum.batch import (
+    BatchControls,
+    BatchDrive,
+    BatchSystem,
+    evolve_batch,
+    propagate_batch,
+)
 from cosim.quantum.channel import pauli_transfer_matrix, unitary_superoperator
 from cosim.quantum.evolution import evolve
 from cosim.quantum.hamiltonian import anharmonic_energies
@@ -69,6 +75,70 @@ def test_open_slices(levels: int) -> None:
         assert np.abs(found.channels[row] - wanted).max() < 1e-8
         # The halved ones, with a margin for the rounding of many small steps.
         assert np.abs(exact[row] - wanted).max() < 2e-10
+
+
+@pytest.mark.parametrize("levels", [2, 3])
+def test_held_slices(levels: int) -> None:
+    # A constant top and a pause within noise.
+    qubit = Qubit(5e9, levels, -0.3e9, 30e-6, 20e-6, 0.1)
+    rate, detuning = noise(2, 200)
+    rate[:, 20:100], detuning[:, 20:100] = rate[:, 20:21], detuning[:, 20:21]
+    rate[:, 110:180] = 0
+    exact = evolve_batch(qubit, BatchDrive(STEP, rate, detuning), tolerance=1e-10).channels
+    for row in range(2):
+        wanted = piecewise(qubit, rate[row], detuning[row], STEP)
+        # The tolerance, with a margin for the rounding of many small steps.
+        assert np.abs(exact[row] - wanted).max() < 2e-10
+
+
+class TestPairs:
+    """Two qubits, each driven, with an exchange, a shift of |11> and losses of their own."""
+
+    @staticmethod
+    def piecewise(
+        system: BatchSystem, controls: list[ComplexArray], step: float, *, lossy: bool
+    ) -> ComplexArray:
+        """Propagate with QuTiP; the samples hold on their slices."""
+        edges = step * np.arange(controls[0].size + 1)
+        parts: list[object] = [qutip.Qobj(system.static)]
+        for operator, values in zip(system.operators, controls, strict=True):
+            held = np.append(values, values[-1])
+            parts += [
+                [qutip.Qobj(operator) / 2, held],
+                [qutip.Qobj(operator).dag() / 2, held.conj()],
+            ]
+        hamiltonian = qutip.QobjEvo(parts, tlist=edges, order=0)
+        collapse = [qutip.Qobj(c) for c in system.collapse] if lossy else []
+        found = qutip.propagator(hamiltonian, edges[-1], collapse, piecewise_t=edges)
+        return np.asarray(found.full())
+
+    @pytest.mark.parametrize(("levels", "samples"), [(2, 200), (3, 30)])
+    def test_slices(self, levels: int, samples: int) -> None:
+        a = np.diag(np.sqrt(np.arange(1.0, levels)), 1)
+        one = np.eye(levels)
+        first, second = np.kron(a, one), np.kron(one, a)
+        n1, n2 = first.T @ first, second.T @ second
+        anharmonic = np.pi * -0.3e9 * (n1 @ n1 - n1 + n2 @ n2 - n2)
+        operators = (first, second, first.T @ second + first @ second.T, n1 @ n2)
+        losses = (200.0 * first, 150.0 * second, 100.0 * n1, 120.0 * n2)
+        system = BatchSystem(2 * np.pi * 40e6 * n1 + anharmonic, operators, losses)
+        rate, detuning = noise(2, 2 * samples)
+        drives = rate[:, :samples], rate[:, samples:]
+        coupling, shift = 2 * np.pi * 3e6 * np.array([[1.0], [1.5]]), detuning[:, :samples]
+        drive = BatchControls(STEP, (*drives, coupling, shift))
+        closed = propagate_batch(system, drive).unitaries
+        lossy = evolve_batch(system, drive)
+        exact = evolve_batch(system, drive, tolerance=1e-9).channels
+        for row in range(2):
+            controls = [drives[0][row], drives[1][row], np.full(samples, coupling[row, 0]) + 0j]
+            controls.append(shift[row] + 0j)
+            wanted = self.piecewise(system, controls, STEP, lossy=False)
+            # Both exponentiate each slice: rounding of 200 products.
+            assert np.abs(closed[row] - wanted).max() < 1e-12
+            wanted = self.piecewise(system, controls, STEP, lossy=True)
+            # The panels' error, as promised, and the tolerance.
+            assert np.abs(lossy.channels[row] - wanted).max() < 1e-7
+            assert np.abs(exact[row] - wanted).max() < 1e-9
 
 
 @pytest.mark.parametrize("levels", [2, 3])

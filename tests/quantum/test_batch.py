@@ -6,8 +6,16 @@ import pytest
 from cosim.errors import InputError
 from cosim.quantum import batch
 from cosim.quantum.batch import BatchDrive, evolve_batch, mean_channel, propagate_batch
-from cosim.quantum.batch_plan import lay_panels, panel_exponents, simpson_weights
+from cosim.quantum.batch_plan import (
+    Grid,
+    lay_panels,
+    panel_exponents,
+    qubit_sizes,
+    qubit_tables,
+    simpson_weights,
+)
 from cosim.quantum.channel import check_channel, unitary_superoperator
+from cosim.quantum.kernel import IndexArray
 from cosim.quantum.qubit import Qubit
 from cosim.waveform import ComplexArray, FloatArray
 
@@ -226,22 +234,25 @@ class TestPanels:
         two = Qubit(5e9, t1=30e-6, t2=20e-6)
         calm = noisy_rate(1, 200, spread=0.0)
         rates = np.concatenate([calm, 10 * calm, noisy_rate(1, 200, spread=1.0)])
-        exponents = panel_exponents(two, BatchDrive(STEP, rates), np.arange(3))
+
+        def chosen(rates: ComplexArray, grid: Grid) -> IndexArray:
+            return panel_exponents(qubit_sizes(two, rates, np.zeros((1, 1))), grid)
+
+        exponents = chosen(rates, Grid(STEP, 200, 1))
         assert exponents[0] > exponents[1]
         assert exponents[0] > exponents[2]
         # Within a step of order 4 no panel begins.
-        coarse = BatchDrive(20 * STEP, 10 * calm[:, :199], order=4)
-        assert panel_exponents(two, coarse, np.arange(1))[0] == 0
+        assert chosen(10 * calm[:, :199], Grid(20 * STEP, 199, 4))[0] == 0
 
     def test_dissipation_adds_up_to_the_evolution(self) -> None:
         qubit = LOSSY.with_levels(2)
         for order, exponent in ((1, -2), (1, 0), (1, 3), (4, 0), (4, 2)):
-            drive = BatchDrive(STEP, noisy_rate(1, 101), order=order)
-            panels = lay_panels(qubit, drive, exponent, 0)
+            grid = Grid(STEP, 101, order)
+            panels = lay_panels(grid, exponent, 0, qubit.gamma_1)
             # A coherence decays exponentially, so that the tables' logarithms give their times.
-            times = -np.log1p(panels.tables[:, 0, 1, 0]) * qubit.t2
+            times = -np.log1p(qubit_tables(qubit, panels.times)[:, 0, 1, 0]) * qubit.t2
             total = times[panels.kick[panels.kick >= 0]].sum()
-            assert total == pytest.approx(drive.duration, rel=1e-11)  # Rounding of small logs.
+            assert total == pytest.approx(grid.duration, rel=1e-11)  # Rounding of small logs.
 
 
 class TestErrors:
@@ -296,7 +307,9 @@ class TestErrors:
         still = BatchDrive(1.0, np.zeros(3, dtype=complex))
         with pytest.raises(InputError, match="anharmonic levels turn by"):
             evolve_batch(lossless(3), still)
-        with pytest.raises(InputError, match=r"would be cut into .* T1 1e-12 s"):
+        with pytest.raises(
+            InputError, match=r"would be cut into .* loss of up to 1e\+12 per second"
+        ):
             evolve_batch(Qubit(5e9, t1=1e-12, t2=1e-12), BatchDrive(1e-3, rate))
 
     def test_a_tolerance_out_of_reach(self) -> None:
