@@ -13,7 +13,7 @@ from cosim.circuit.bias import CleanRun, clean_run
 from cosim.circuit.generators import check_names
 from cosim.circuit.injection import InjectedNoise, device_noise
 from cosim.circuit.noise_settings import NoiseSettings
-from cosim.circuit.noise_shares import DeviceShares, device_shares, single_shares
+from cosim.circuit.noise_shares import DeviceShares, device_shares
 from cosim.dsp.demodulation import demodulate
 from cosim.errors import TestbenchError
 from cosim.noise_frame import Nominal, superoperators, unitary_losses
@@ -52,6 +52,8 @@ class CircuitNoise:
         The voltage that it adds, of the other two methods.
     made : dict
         Seed -> its noise: a run of the simulator serves the gate's qubit, the others and rest.
+    single : dict
+        Device and seed -> the noise of the device alone.
     told : dict
         Stretch of the run -> the devices' shares of the noise there.
     """
@@ -65,6 +67,7 @@ class CircuitNoise:
     reason: str = ""
     added: AddedNoise | None = None
     made: dict[int, tuple[Envelope, InjectedNoise]] = field(default_factory=dict, compare=False)
+    single: dict[tuple[str, int], Envelope] = field(default_factory=dict, compare=False)
     told: dict[tuple[float, float], DeviceShares] = field(default_factory=dict, compare=False)
 
     def envelope(self, seed: int) -> tuple[Envelope, InjectedNoise]:
@@ -92,8 +95,8 @@ class CircuitNoise:
             self.made[seed] = self._demodulated(noise), noise
         return self.made[seed]
 
-    def shares(self, seeds: Sequence[int], span: tuple[float, float], each: bool) -> DeviceShares:
-        """Tell which device makes how much of the noise.
+    def shares(self, seeds: Sequence[int], span: tuple[float, float]) -> DeviceShares:
+        """Tell which device makes how much of the noise, from the runs of all devices.
 
         Parameters
         ----------
@@ -101,9 +104,6 @@ class CircuitNoise:
             Of the noisy runs.
         span : tuple of two floats
             Stretch of the run in s.
-        each : bool
-            Whether each device makes noise alone, in a run of its own of the first seed; else the
-            runs of all devices tell it.
 
         Returns
         -------
@@ -116,18 +116,35 @@ class CircuitNoise:
         """
         if span not in self.told:
             (probe,) = self.clean.probes
+            runs = [self.envelope(seed)[1] for seed in seeds]
             where = (probe, self.carrier_frequency, span)
-            if each:
-                names = [device.name for device in self.clean.inventory.devices]
-                alone = (
-                    (name, device_noise(self.clean, seeds[0], self.settings, devices=(name,)))
-                    for name in names
-                )
-                self.told[span] = single_shares(alone, *where)
-            else:
-                runs = [self.envelope(seed)[1] for seed in seeds]
-                self.told[span] = device_shares(self.clean, self.settings, runs, *where)
+            self.told[span] = device_shares(self.clean, self.settings, runs, *where)
         return self.told[span]
+
+    def alone(self, device: str, seed: int) -> Envelope:
+        """Run the circuit with the noise of one device.
+
+        Parameters
+        ----------
+        device : str
+            In ngspice's name.
+        seed : int
+            Not negative.
+
+        Returns
+        -------
+        Envelope
+            Of its noise, around the carrier.
+
+        Raises
+        ------
+        SimulationError, DeckError
+            If the run fails.
+        """
+        if (device, seed) not in self.single:
+            noise = device_noise(self.clean, seed, self.settings, devices=(device,))
+            self.single[device, seed] = self._demodulated(noise)
+        return self.single[device, seed]
 
     def _demodulated(self, noise: InjectedNoise) -> Envelope:
         wave = Waveform(noise.time, noise.samples[self.probe], unit=self.unit)
@@ -239,8 +256,8 @@ def injected_noise(
     unitaries = _with_added(nominal, [envelope for envelope, _ in found], volts)
     losses, leaks = unitary_losses(unitaries)
     infidelity = float(losses.mean())
-    start = float(nominal.middles[0]) - 0.5 * nominal.step
-    shares = circuit.shares(seeds, (start, start + nominal.duration), noise.by_device)
+    devices = _each if noise.by_device else _told
+    parts, error, explain = devices(nominal, circuit, seeds, volts, infidelity)
     source = NoiseSource(
         name=name,
         acts_on=noise.acts_on,
@@ -249,13 +266,41 @@ def injected_noise(
         leakage=float(leaks.mean()),
         highest_frequency=found[0][1].highest_frequency,
         standard_error=float(losses.std(ddof=1) / math.sqrt(len(seeds))),
-        devices={device: infidelity * part for device, part in shares.parts.items()},
-        devices_error=infidelity * shares.deviation,
-        devices_explain=shares.explained,
+        devices=parts,
+        devices_error=error,
+        devices_explain=explain,
         left_out=found[0][1].left_out,
         reason=circuit.reason,
     )
     return superoperators(unitaries).mean(axis=0), source
+
+
+_Parts = tuple[dict[str, float], float, float]
+
+
+def _told(
+    nominal: Nominal, circuit: CircuitNoise, seeds: Sequence[int], volts: float, infidelity: float
+) -> _Parts:
+    """Give each device's part of the infidelity, the error, and what the parts explain."""
+    del volts
+    start = float(nominal.middles[0]) - 0.5 * nominal.step
+    shares = circuit.shares(seeds, (start, start + nominal.duration))
+    parts = {device: infidelity * part for device, part in shares.parts.items()}
+    return parts, infidelity * shares.deviation, shares.explained
+
+
+def _each(
+    nominal: Nominal, circuit: CircuitNoise, seeds: Sequence[int], volts: float, infidelity: float
+) -> _Parts:
+    """Give what each device costs alone, in runs of its own."""
+    found, errors = {}, [0.0]
+    for device in circuit.clean.inventory.devices:
+        envelopes = [circuit.alone(device.name, seed) for seed in seeds]
+        losses, _ = unitary_losses(_with_added(nominal, envelopes, volts))
+        found[device.name] = float(losses.mean())
+        errors.append(float(losses.std(ddof=1) / math.sqrt(len(seeds))))
+    parts = dict(sorted(found.items(), key=lambda pair: -pair[1]))
+    return parts, max(errors), sum(parts.values()) / infidelity if infidelity > 0.0 else 1.0
 
 
 def labelled(source: NoiseSource, circuit: CircuitNoise) -> NoiseSource:
@@ -303,12 +348,12 @@ def circuit_warnings(circuit: CircuitNoise, source: NoiseSource) -> tuple[str, .
     if source.devices_error == math.inf:
         return (
             f"noise '{source.name}': in so short a gate so few noisy runs do not tell its devices "
-            "apart; more 'seeds' do, or by_device = true, which takes a run of each",
+            "apart; more 'seeds' do, or by_device = true, which takes runs of each",
         )
     if source.devices_explain < EXPLAINED:
         return (
             f"noise '{source.name}': the parts of its devices explain {source.devices_explain:.0%} "
-            "of it only; by_device = true takes a run of each",
+            "of it only; by_device = true takes runs of each",
         )
     return ()
 

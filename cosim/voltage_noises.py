@@ -148,7 +148,7 @@ class NetlistNoise:
     gammas : mapping of str to float
         The same of single devices, or of all of a model.
     by_device : bool
-        Whether "injection" injects each device alone as well, in a run of its own.
+        Whether "injection" injects each device alone as well, in a run for each seed.
     """
 
     acts_on: Literal["probe"]
