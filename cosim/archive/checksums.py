@@ -194,12 +194,12 @@ def contents_digest(
     """
     digest = hashlib.sha256()
     for path, (notes, values) in contents:
-        digest.update(f"\0{path}\0".encode("utf-8", "surrogateescape"))
+        pieces: list[bytes | memoryview] = [f"\0{path}\0".encode("utf-8", "surrogateescape")]
         for name in sorted(notes):
-            digest.update(f"\0{name}\0".encode())
-            _feed(digest, notes[name])
+            pieces += (f"\0{name}\0".encode(), *_pieces(notes[name]))
         if values is not None:
-            _feed(digest, values)
+            pieces += _pieces(values)
+        digest.update(b"".join(pieces))
     return digest.hexdigest()
 
 
@@ -234,11 +234,9 @@ def _values_of(dataset: Any) -> Array:
     return values
 
 
-def _feed(digest: Any, values: Array) -> None:
-    digest.update(f"{values.dtype.str}{values.shape}".encode())
-    if values.dtype.kind == "O":
-        for text in values.ravel().tolist():
-            digest.update(text.encode() if isinstance(text, str) else text or b"")
-            digest.update(b"\0")
-    else:
-        digest.update(np.ascontiguousarray(values).reshape(-1).view(np.uint8))
+def _pieces(values: Array) -> list[bytes | memoryview]:
+    head = f"{values.dtype.str}{values.shape}".encode()
+    if values.dtype.kind != "O":
+        return [head, np.ascontiguousarray(values).reshape(-1).view(np.uint8).data]
+    texts = [t.encode() if isinstance(t, str) else t or b"" for t in values.ravel().tolist()]
+    return [head, *(text + b"\0" for text in texts)]

@@ -22,6 +22,7 @@ _NOTHING: Mapping[str, Any] = {}
 NUMBER_TYPES: Mapping[npt.DTypeLike, Any] = {
     np.dtype(np.float64): h5py.h5t.IEEE_F64LE,
     np.dtype(np.int64): h5py.h5t.STD_I64LE,
+    np.dtype(np.bool_): h5py.h5t.py_create(np.dtype(np.bool_), logical=True),
 }
 
 
@@ -44,7 +45,7 @@ def create_dataset(
     name: str,
     values: Array,
     unit: str,
-    options: Mapping[str, Any] | None = None,
+    packing: Any = None,
 ) -> Any:
     """Make a dataset of numbers or texts.
 
@@ -58,26 +59,22 @@ def create_dataset(
         Numbers, bools or str objects.
     unit : str
         Its unit; none is noted if that is empty.
-    options : mapping or None
-        Filters and chunks, from `storage_options`.
+    packing : h5py.h5p.PropDCID or None
+        Filters and chunks, from `filters`.
 
     Returns
     -------
     h5py.h5d.DatasetID
         The dataset.
     """
-    if options:
-        made = group.create_dataset(name, data=values, dtype=values.dtype, **options)
-        dataset = made.id
-    else:
-        text = values.dtype.kind == "O"
-        number = NUMBER_TYPES.get(values.dtype)
-        kind = TEXT_TYPE if text else number or h5py.h5t.py_create(values.dtype, logical=True)
-        space = h5py.h5s.create_simple(values.shape) if values.ndim else _SCALAR
-        dataset = h5py.h5d.create(group.id, name.encode(), kind, space)
-        if values.size:
-            plain = np.ascontiguousarray(values)
-            dataset.write(h5py.h5s.ALL, h5py.h5s.ALL, plain, TEXT_OBJECT if text else number)
+    text = values.dtype.kind == "O"
+    number = NUMBER_TYPES.get(values.dtype)
+    kind = TEXT_TYPE if text else _number_type(values.dtype)
+    space = h5py.h5s.create_simple(values.shape) if values.ndim else _SCALAR
+    dataset = h5py.h5d.create(group.id, name.encode(), kind, space, packing)
+    if values.size:
+        plain = np.ascontiguousarray(values)
+        dataset.write(h5py.h5s.ALL, h5py.h5s.ALL, plain, TEXT_OBJECT if text else number)
     if unit:
         set_text(dataset, b"units", unit)
     return dataset
@@ -114,12 +111,15 @@ class Place:
     contents : dict
         By path, the attributes and the values (None for a group) of all that was written in the
         record, for its checksum.
+    scales : dict
+        The scales in the group, by name.
     """
 
     group: Any
     path: str
     texts: Any
     contents: dict[str, tuple[dict[str, Array], Array | None]] = field(default_factory=dict)
+    scales: dict[str, Any] = field(default_factory=dict)
 
     @property
     def name(self) -> str:
@@ -140,16 +140,21 @@ class Place:
         name: str,
         values: Array,
         unit: str = "",
-        options: Mapping[str, Any] | None = None,
+        packing: Any = None,
         notes: Mapping[str, Any] = _NOTHING,
     ) -> Any:
         """Make a dataset as `create_dataset` does, and note attributes of it."""
-        dataset = create_dataset(self.group, name, values, unit, options)
+        dataset = create_dataset(self.group, name, values, unit, packing)
         noted = _set_notes(dataset, notes)
         if unit:
             noted["units"] = _as_array(unit)
         self.contents[f"{self.path}/{name}"] = (noted, values)
         return dataset
+
+    def mark_scale(self, name: str, dataset: Any) -> None:
+        """Make a dataset of the group a scale of this name."""
+        h5py.h5ds.set_scale(dataset, name.encode())
+        self.scales[name] = dataset
 
     def link(self, name: str, text: Any, value: Array) -> None:
         """Link a shared text into the group."""
@@ -161,10 +166,14 @@ def _set_notes(item: Any, notes: Mapping[str, Any]) -> dict[str, Array]:
     arrays = {name: _as_array(value) for name, value in notes.items()}
     for name, values in arrays.items():
         text = values.dtype.kind == "O"
-        kind = TEXT_TYPE if text else h5py.h5t.py_create(values.dtype, logical=True)
+        kind = TEXT_TYPE if text else _number_type(values.dtype)
         space = h5py.h5s.create_simple(values.shape) if values.ndim else _SCALAR
         h5py.h5a.create(item, name.encode(), kind, space).write(values)
     return arrays
+
+
+def _number_type(dtype: np.dtype[Any]) -> Any:
+    return NUMBER_TYPES.get(dtype) or h5py.h5t.py_create(dtype, logical=True)
 
 
 def _as_array(value: Any) -> Array:

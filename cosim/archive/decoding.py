@@ -95,4 +95,6 @@ def _read_dataset(dataset: Any) -> Any:
         value = json.loads(value) if quoted else value if text else value.item()
         return int(value) if kind == "int" else value
     items = [json.loads(item) for item in value] if quoted else value.tolist()
+    if kind == "dict":
+        return dict(zip(dataset.dims[0][0].asstr()[()].tolist(), items, strict=True))
     return tuple(items) if kind == "tuple" else items

@@ -4,15 +4,15 @@ import dataclasses
 import hashlib
 import json
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
-from typing import Any
+from dataclasses import dataclass, replace
+from typing import Any, TypeAlias
 
 import h5py
 import numpy as np
 import numpy.typing as npt
 
 from cosim.archive.datasets import Place, create_dataset
-from cosim.archive.layout import TEXT, TEXTS, member_name, storage_options
+from cosim.archive.layout import TEXT, TEXTS, filters, member_name
 from cosim.errors import ArchiveError
 
 _NO_METADATA: Mapping[str, Any] = {}
@@ -22,6 +22,10 @@ _WORD = np.iinfo(np.int64)
 _QUOTED = {"quoting": "json"}
 _DERIVED = {"derived": True}
 _ARRAY_TYPES = "?efdFD" + np.typecodes["AllInteger"]
+
+
+# Items, type, and whether they are quoted texts.
+_Packed: TypeAlias = tuple[Sequence[object], npt.DTypeLike, bool]
 
 
 @dataclass(frozen=True, slots=True)
@@ -181,7 +185,7 @@ def _write_value(
     elif isinstance(value, (tuple, list)):
         _write_sequence(group, name, value, context, reserved)
     elif isinstance(value, Mapping):
-        _write_mapping(group, name, value, context)
+        _write_mapping(group, name, value, context, reserved)
     else:
         raise ArchiveError(
             f"{group.name}/{name}: a value of type {type(value).__name__} cannot be archived",
@@ -230,11 +234,11 @@ def _write_array(
         )
     unit = "" if value.dtype.kind == "b" else context.unit
     notes = {} if value.ndim else {"kind": "ndarray"}
-    dataset = group.dataset(name, value, unit, storage_options(value.size), notes)
+    dataset = group.dataset(name, value, unit, filters(value.shape), notes)
     if value.ndim == 0:
         return
     if value.ndim == 1 and context.metadata.get("axes") == (name,):
-        h5py.h5ds.set_scale(dataset, name.encode())
+        group.mark_scale(name, dataset)
     else:
         _attach_scales(group, dataset, name, context, reserved)
 
@@ -254,16 +258,27 @@ def _write_sequence(
         notes = {"kind": kind, "length": len(value)}
         _write_members(group.subgroup(name), members, dict.fromkeys(members, context), notes)
         return
+    _write_packed(group, name, packed, kind, context, reserved)
+
+
+def _write_packed(
+    group: Place,
+    name: str,
+    packed: _Packed,
+    kind: str,
+    context: _Context,
+    reserved: frozenset[str],
+) -> None:
     items, dtype, quoted = packed
-    options = {} if dtype is TEXT else storage_options(len(items))
+    packing = None if dtype is TEXT else filters((len(items),))
     unit = "" if dtype is TEXT or dtype is np.bool_ else context.unit
     notes = {"kind": kind, **(_QUOTED if quoted else {})}
-    dataset = group.dataset(name, np.array(items, dtype=dtype), unit, options, notes)
+    dataset = group.dataset(name, np.array(items, dtype=dtype), unit, packing, notes)
     _attach_scales(group, dataset, name, context, reserved)
 
 
-def _packed(value: Sequence[object]) -> tuple[Sequence[object], npt.DTypeLike, bool] | None:
-    """Give items, type and whether quoted, for scalars of one type; None for anything else."""
+def _packed(value: Sequence[object]) -> _Packed | None:
+    """Pack scalars of one type; None for anything else."""
     if not value:
         return None
     if all(isinstance(item, str) for item in value):
@@ -279,13 +294,28 @@ def _packed(value: Sequence[object]) -> tuple[Sequence[object], npt.DTypeLike, b
     return None
 
 
-def _write_mapping(group: Place, name: str, value: Mapping[Any, object], context: _Context) -> None:
+def _write_mapping(
+    group: Place,
+    name: str,
+    value: Mapping[Any, object],
+    context: _Context,
+    reserved: frozenset[str],
+) -> None:
+    """Write a dict: one dataset along its keys when its items are scalars of one type."""
     wrong = [key for key in value if not isinstance(key, str)]
     if wrong:
         raise ArchiveError(
             f"{group.name}/{name}: the keys of a dict must be texts, got {wrong[0]!r}",
             hint="write the keys as str",
         )
+    items = tuple(value.values())
+    long = any(isinstance(item, str) and len(item) >= _SHARED_TEXT for item in items)
+    packed = None if long or not all(map(is_plain_text, value)) else _packed(items)
+    if packed is not None:
+        axis = f"{name}_key"
+        labelled = {"axes": (axis,), "labels": {axis: tuple(value)}}
+        _write_packed(group, name, packed, "dict", replace(context, metadata=labelled), reserved)
+        return
     members = {member_name(key): item for key, item in value.items()}
     contexts = dict.fromkeys(members, context)
     _write_members(group.subgroup(name), members, contexts, {"kind": "dict"})
@@ -307,7 +337,7 @@ def _attach_scales(
     used: list[str] = []
     for dimension, axis in enumerate(axes):
         scale = _scale(group, axis, dataset.shape[dimension], context, reserved, used)
-        h5py.h5ds.attach_scale(dataset, h5py.h5d.open(group.group.id, scale.encode()), dimension)
+        h5py.h5ds.attach_scale(dataset, group.scales[scale], dimension)
         h5py.h5ds.set_label(dataset, dimension, scale.encode())
         used.append(scale)
 
@@ -321,10 +351,9 @@ def _scale(
     used: Sequence[str],
 ) -> str:
     """Find or make the scale of an axis in a group, and give its name."""
-    made = group.group
-    if axis in reserved and axis in made and axis not in used:
-        if h5py.h5ds.is_scale(made[axis].id) and made[axis].shape == (length,):
-            return axis
+    made = group.scales
+    if axis in reserved and axis in made and axis not in used and made[axis].shape == (length,):
+        return axis
     name = axis
     while name in reserved or name in used or (name in made and made[name].shape != (length,)):
         name += "_"
@@ -334,8 +363,8 @@ def _scale(
     if isinstance(values, tuple):
         dataset = group.dataset(name, np.array(values, dtype=TEXT), notes=_DERIVED)
     else:
-        dataset = group.dataset(name, values, unit, storage_options(length), _DERIVED)
-    h5py.h5ds.set_scale(dataset, name.encode())
+        dataset = group.dataset(name, values, unit, filters((length,)), _DERIVED)
+    group.mark_scale(name, dataset)
     return name
 
 

@@ -28,8 +28,8 @@ from cosim.archive.layout import (
     LIBRARY_BOUNDS,
     PLAN,
     TEXTS,
+    filters,
     run_group_name,
-    storage_options,
     write_root,
 )
 from cosim.archive.series import load_grid, load_rows, stack_group, stack_groups, write_scales
@@ -264,16 +264,15 @@ def _merge_stack(
     entries, grid = entries[order], np.concatenate(grids)[order]
     name, length = key
     group = stack_group(file, name, length)
-    options = storage_options(len(entries) * length) if packed else {}
-    if options:
-        options["chunks"] = (min(len(entries), max(1, _CHUNK // length)), length)
-    values = group.create_dataset(
-        "values", (len(entries), length), np.result_type(*types), **options
-    )
+    shape = (len(entries), length)
+    chunk = min(len(entries), max(1, _CHUNK // length))
+    packing = filters(shape, (chunk, length)) if packed else None
+    kind = h5py.h5t.py_create(np.result_type(*types), logical=True)
+    space = h5py.h5s.create_simple(shape)
+    values = h5py.Dataset(h5py.h5d.create(group.id, b"values", kind, space, packing))
     values.attrs["units"] = units.pop() if len(units) == 1 else "mixed"
     write_scales(group, values.id, entries[:, 0].copy(), grid)
     # Whole chunks, so that none is packed twice.
-    chunk = values.chunks[0] if options else 1
     height = max(1, _SAMPLES // (length * chunk)) * chunk
     for start in range(0, len(entries), height):
         block = entries[start : start + height]

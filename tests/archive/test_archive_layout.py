@@ -8,7 +8,7 @@ import numpy as np
 import pytest
 import xarray
 
-from cosim.archive import NumberedRun, append, consolidate, write, write_part
+from cosim.archive import NumberedRun, append, consolidate, read, write, write_part
 from cosim.waveform import Envelope, Waveform
 
 PAULI = ("I", "X", "Y", "Z")
@@ -38,6 +38,7 @@ class Result:
     channel: Channel
     time: np.ndarray = field(metadata={"unit": "s", "axes": ("time",)})
     vectors: dict[str, np.ndarray] = field(metadata={"unit": "A", "axes": ("time",)})
+    wall_times: dict[str, float] = field(metadata={"unit": "s"})
     log: tuple[str, ...] = ()
     note: str | None = None
     quality: np.ndarray = field(default_factory=lambda: np.zeros(0))
@@ -57,6 +58,7 @@ def result(seed: int = 7) -> Result:
         channel=Channel(rng.random((4, 4)), rng.random((3, 3)), rng.random((2, 3, 4))),
         time=t,
         vectors={"v(out)": np.cos(t), "i(x1/r1)": np.ones_like(t)},
+        wall_times={"deck": 0.25, "ngspice": 3.5},
         log=("one", "two"),
     )
 
@@ -122,6 +124,28 @@ def test_arrays_of_a_dict_have_the_axis_of_their_owner(archive: tuple[Path, str]
     assert dataset["v(out)"].attrs["units"] == "A"
     np.testing.assert_array_equal(dataset["time"], result().time)
     assert dataset["time"].attrs["units"] == "s"
+
+
+def test_numbers_of_a_dict_are_labelled_by_its_keys(archive: tuple[Path, str]) -> None:
+    times = open_group(archive)["wall_times"]
+    assert times.dims == ("wall_times_key",)
+    assert times.sel(wall_times_key="ngspice") == 3.5
+    assert times.attrs["units"] == "s"
+
+
+def test_numbers_of_a_dict_as_a_group_are_read_too(tmp_path: Path) -> None:
+    path = tmp_path / "a.h5"
+    write(path, result())
+    with h5py.File(path, "r+") as file:
+        run = file["runs/000001"]
+        del run["wall_times"]
+        # As archives had them before their numbers stood in one dataset.
+        group = run.create_group("wall_times", track_order=True)
+        group.attrs["kind"] = "dict"
+        for name, seconds in {"deck": 0.5, "ngspice": 7.0}.items():
+            group[name] = seconds
+    types = {"Result": Result, "Waveform": Waveform, "Envelope": Envelope, "Channel": Channel}
+    assert read(path, types).wall_times == {"deck": 0.5, "ngspice": 7.0}
 
 
 def test_scalars_and_texts(archive: tuple[Path, str]) -> None:

@@ -29,7 +29,6 @@ from cosim.archive import (
     write_rows,
 )
 from cosim.archive.files import list_parts
-from cosim.archive.layout import storage_options
 from cosim.result import GateResult
 from tests.archive.sweep_rows import PLAN
 
@@ -37,6 +36,8 @@ ROWS = 100_000
 BATCH = 128
 SAMPLES = 1613
 NUMBERS = 56
+# Those of the archive; the chunks are h5py's own.
+FILTERS = {"compression": "gzip", "compression_opts": 1, "shuffle": True, "fletcher32": True}
 UNITS = {f"number{index}": "Hz" for index in range(NUMBERS)}
 
 
@@ -141,7 +142,7 @@ def write_plain(path: Path, runs: Sequence[GateResult]) -> None:
                 ("pauli_transfer_matrix", run.channel.pauli_transfer_matrix),
                 *((f"extra {key}", vector.v) for key, vector in run.extra.items()),
             ):
-                group.create_dataset(name, data=values, **storage_options(values.size))
+                group.create_dataset(name, data=values, **(FILTERS if values.size > 1000 else {}))
         file.flush()
 
 
