@@ -1,6 +1,7 @@
 """Shared by all tests: small decks and testbenches made in a temporary folder."""
 
-from collections.abc import Callable
+import os
+from collections.abc import Callable, Iterator
 from pathlib import Path
 from typing import Any
 
@@ -12,6 +13,28 @@ pytest_plugins = ["tests.validation"]
 
 Tables = dict[str, dict[str, Any]]
 BenchMaker = Callable[..., Testbench]
+
+
+# Hundreds of CPU seconds in one file; a process that starts one of these last works on alone.
+LONGEST = ("tests/examples/", "tests/kit/")
+
+
+def pytest_collection_modifyitems(items: list[pytest.Item]) -> None:
+    """Begin with the files that take longest, so that all processes end at about one time."""
+    long = {item.path for item in items if item.get_closest_marker("full")}
+    items.sort(key=lambda item: (not item.nodeid.startswith(LONGEST), item.path not in long))
+
+
+@pytest.fixture(scope="session", autouse=True)
+def no_wait_for_the_disk() -> Iterator[None]:
+    """Let fsync look at its handle only, for the archives of these tests are thousands.
+
+    It decides what is left when the power fails, which no test can try; what a process that was
+    killed has written is there all the same. Processes that a test starts anew do wait.
+    """
+    with pytest.MonkeyPatch.context() as patch:
+        patch.setattr(os, "fsync", os.fstat)
+        yield
 
 
 @pytest.fixture

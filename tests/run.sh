@@ -16,4 +16,4 @@ fi
 .venv/bin/mypy
 # Two test processes whose linear algebra starts threads of its own wait for one another.
 export OPENBLAS_NUM_THREADS=1 OMP_NUM_THREADS=1
-exec .venv/bin/python -m pytest -n 2 --dist loadfile "${select[@]}" "$@"
+exec .venv/bin/python -m pytest -n 2 --dist loadfile --no-loadscope-reorder "${select[@]}" "$@"
