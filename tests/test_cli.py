@@ -225,6 +225,7 @@ def test_exit_codes(
     assert "Traceback" not in err
 
 
+@pytest.mark.full
 def test_debug_shows_the_traceback(bench: Path) -> None:
     bench.write_text("nonsense", encoding="utf-8")
     done = subprocess.run(
@@ -238,6 +239,7 @@ def test_debug_shows_the_traceback(bench: Path) -> None:
     assert "Traceback" in done.stderr
 
 
+@pytest.mark.full
 @pytest.mark.ngspice
 def test_a_closed_pipe_is_silent(bench: Path) -> None:
     read, write = os.pipe()

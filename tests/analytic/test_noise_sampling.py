@@ -71,6 +71,7 @@ def evolve(field: FloatArray, dt: float, state: ComplexArray) -> ComplexArray:
 
 @pytest.mark.parametrize("name", ["FID", "echo"])
 class TestFreeInductionAndEcho:
+    @pytest.mark.full
     def test_ornstein_uhlenbeck(self, validate: Validate, name: str) -> None:
         density = SpectralDensity("rad/s", (Lorentzian((2 * math.pi * 5e4) ** 2, 1e-5),))
         wanted = {"FID": 2.460778, "echo": 0.3153459}[name]

@@ -58,7 +58,7 @@ class TestDrivenOscillator:
     No rotating-wave approximation is involved.
     """
 
-    @pytest.mark.parametrize("t1", [math.inf, 0.2e-6])
+    @pytest.mark.parametrize("t1", [math.inf, pytest.param(0.2e-6, marks=pytest.mark.full)])
     def test_vacuum_becomes_a_coherent_state(self, validate: Validate, t1: float) -> None:
         levels = 8
         qubit = Qubit(CARRIER, levels, 0.0, t1=t1, t2=2 * t1)

@@ -103,7 +103,7 @@ def test_killed_at_every_call(tmp_path: Path) -> None:
     assert kills > 40
 
 
-@pytest.mark.parametrize("number", [errno.ENOSPC, errno.EIO])
+@pytest.mark.parametrize("number", [errno.ENOSPC, pytest.param(errno.EIO, marks=pytest.mark.full)])
 def test_failure_of_every_call(tmp_path: Path, number: int) -> None:
     def fail(name: str, args: tuple[Any, ...]) -> None:
         raise OSError(number, os.strerror(number))
@@ -203,6 +203,7 @@ def test_two_processes_append_at_once(tmp_path: Path) -> None:
     assert [item.name for item in tmp_path.iterdir()] == ["a.h5"]
 
 
+@pytest.mark.full
 def test_reader_beside_a_writer_that_publishes_and_merges(tmp_path: Path) -> None:
     path = tmp_path / "a.h5"
     write(path, make(1.0))

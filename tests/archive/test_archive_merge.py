@@ -54,7 +54,7 @@ def content(path: Path) -> dict[str, str]:
     return found
 
 
-@pytest.mark.parametrize("child", [False, True])
+@pytest.mark.parametrize("child", [False, pytest.param(True, marks=pytest.mark.full)])
 def test_merge_of_a_job_array(tmp_path: Path, monkeypatch: pytest.MonkeyPatch, child: bool) -> None:
     if child:
         monkeypatch.setattr(consolidation, "_IN_MEMORY", 0)
@@ -143,6 +143,7 @@ def test_what_is_not_merged(tmp_path: Path) -> None:
     assert not (tmp_path / "new.h5").exists()
 
 
+@pytest.mark.full
 def test_a_child_writes_what_is_written_in_memory(
     tmp_path: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:
@@ -160,6 +161,7 @@ def test_a_child_writes_what_is_written_in_memory(
     assert consolidate(other) == 0
 
 
+@pytest.mark.full
 def test_in_small_pieces_as_in_one(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     """Few files open, a block of one column, and of two rows of series at a time."""
     numbers = [7 * n % 41 + 1 for n in range(41)]

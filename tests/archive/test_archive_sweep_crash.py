@@ -168,6 +168,7 @@ def large_sweep(path: Path) -> list[str]:
     return list(read_table(path)["checksum"])
 
 
+@pytest.mark.full
 def test_full_disk_while_a_child_merges(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.setattr(consolidation, "_IN_MEMORY", 0)
     path = tmp_path / "a.h5"

@@ -173,6 +173,7 @@ def test_run_numbers_above_six_digits(tmp_path: Path) -> None:
         NumberedRun(0, gate(0.1))
 
 
+@pytest.mark.full
 def test_thousands_of_columns() -> None:
     # 4,085 is where HDF5's first object format has no more room for a scale's references.
     columns = {"id": Column(np.array([1]), "1")}

@@ -222,6 +222,7 @@ def test_files_that_include_themselves_are_refused_with_the_chain(tmp_path: Path
         load_deck(tmp_path / "lib.cir")
 
 
+@pytest.mark.full
 def test_short_files_that_would_grow_without_bound_are_refused(tmp_path: Path) -> None:
     for level in range(9):
         inner = f".include level{level + 1}.inc\n" * 10

@@ -340,6 +340,7 @@ def test_a_set_that_does_not_converge_costs_itself_only() -> None:
         assert_equal(one, fresh(item))
 
 
+@pytest.mark.full
 def test_a_set_that_takes_too_long_costs_itself_only() -> None:
     sets = [{"t": 1.5e-9}, {"t": 1e-14}, {"t": 2e-9}]
     decks = faulty(sets, time_limit=1.0)

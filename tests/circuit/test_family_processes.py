@@ -76,6 +76,7 @@ def test_the_end_of_the_caller_ends_the_loaded_deck_and_its_run(
         process.communicate()
 
 
+@pytest.mark.full
 def test_the_end_of_the_host_ends_the_loaded_deck_and_its_run(tmp_path: Path) -> None:
     process = begin("list(family([1e-4, 1e-4]))", tmp_path)
     try:
@@ -111,6 +112,7 @@ def test_an_interrupt_in_the_middle_leaves_nothing_and_the_next_family_works(
     assert_nothing_left(tmp_path)
 
 
+@pytest.mark.full
 def test_a_family_in_a_forked_process_has_a_host_of_its_own(tmp_path: Path) -> None:
     body = """
         import multiprocessing

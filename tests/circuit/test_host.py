@@ -54,6 +54,7 @@ def descriptors(process: int) -> int:
     return len(list(Path(f"/proc/{process}/fd").iterdir()))
 
 
+@pytest.mark.full
 @pytest.mark.ngspice
 def test_many_runs_and_failures_leave_nothing_behind(run_lines: Runner) -> None:
     good = ["v1 in 0 1", "r1 in out 1k", "c1 out 0 1p"]

@@ -130,6 +130,7 @@ def test_the_simulator_module_loads_no_pyspice(start: Starter) -> None:
     assert output(start(body)) == "False 1.5 False"
 
 
+@pytest.mark.full
 def test_a_pool_of_forked_processes_runs_decks(start: Starter, tmp_path: Path) -> None:
     body = """
         import multiprocessing
@@ -142,6 +143,7 @@ def test_a_pool_of_forked_processes_runs_decks(start: Starter, tmp_path: Path) -
     assert_nothing_left(tmp_path)
 
 
+@pytest.mark.full
 @pytest.mark.parametrize("method", ["fork", "spawn"])
 def test_an_executor_of_processes_runs_decks(start: Starter, tmp_path: Path, method: str) -> None:
     body = f"""
@@ -156,6 +158,7 @@ def test_an_executor_of_processes_runs_decks(start: Starter, tmp_path: Path, met
     assert_nothing_left(tmp_path)
 
 
+@pytest.mark.full
 def test_a_daemonic_process_runs_decks(start: Starter, tmp_path: Path) -> None:
     # A cluster's worker under its nanny is such a process and may have no children of its own
     # made by multiprocessing.
@@ -172,6 +175,7 @@ def test_a_daemonic_process_runs_decks(start: Starter, tmp_path: Path) -> None:
     assert_nothing_left(tmp_path)
 
 
+@pytest.mark.full
 def test_busy_blas_threads_and_ignored_signals_do_no_harm(start: Starter, tmp_path: Path) -> None:
     body = """
         import signal, threading
@@ -206,6 +210,7 @@ def test_a_plain_fork_leaves_the_parents_host_alone(start: Starter, tmp_path: Pa
     assert_nothing_left(tmp_path)
 
 
+@pytest.mark.full
 def test_a_fork_in_the_middle_of_another_threads_run_works(start: Starter, tmp_path: Path) -> None:
     # The child inherits the lock in the locked state, and no thread that would open it.
     body = """
@@ -244,6 +249,7 @@ def test_the_end_of_the_caller_ends_everything(
     assert_nothing_left(tmp_path)
 
 
+@pytest.mark.full
 def test_the_end_of_the_caller_is_seen_past_a_worker_that_holds_its_pipes(
     start: Starter, tmp_path: Path
 ) -> None:
@@ -287,6 +293,7 @@ def test_an_interrupt_comes_out_and_the_next_run_works(start: Starter, tmp_path:
     assert_nothing_left(tmp_path)
 
 
+@pytest.mark.full
 def test_an_error_in_the_progress_callback_comes_out(start: Starter, tmp_path: Path) -> None:
     body = """
         try:
@@ -298,6 +305,7 @@ def test_an_error_in_the_progress_callback_comes_out(start: Starter, tmp_path: P
     assert_nothing_left(tmp_path)
 
 
+@pytest.mark.full
 def test_the_death_of_an_idle_host_is_made_good(start: Starter, tmp_path: Path) -> None:
     body = """
         import signal
@@ -385,6 +393,7 @@ def test_a_missing_library_says_what_to_type(start: Starter, tmp_path: Path) -> 
     assert_nothing_left(tmp_path)
 
 
+@pytest.mark.full
 @pytest.mark.parametrize(("kind", "limit"), [("RLIMIT_AS", 2**32), ("RLIMIT_FSIZE", 2**20)])
 def test_a_hard_limit_of_the_system_is_kept_below(start: Starter, kind: str, limit: int) -> None:
     process = start(

@@ -171,6 +171,7 @@ def test_both_branches_of_a_condition_are_replaced() -> None:
         assert result.vectors["v(in)"] == pytest.approx(0.5 if choice else -0.5, abs=ROUNDING)
 
 
+@pytest.mark.full
 def test_many_samples_at_any_step(run_lines: Runner) -> None:
     rng = np.random.default_rng(7)
     t: FloatArray = np.cumsum(rng.uniform(0.1, 1.9, 200_000)) * 1e-13

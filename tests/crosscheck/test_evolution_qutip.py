@@ -30,15 +30,18 @@ class TestAgainstQutip:
         qubit = Qubit(CARRIER, t1=10e-6, t2=20e-6, thermal_population=0.1)
         assert largest_difference(qubit, square_burst(100e6, 120e-9, 2e-12)) < TOLERANCE
 
+    @pytest.mark.full
     def test_three_levels_at_full_length(self) -> None:
         qubit = Qubit(CARRIER, 3, -0.3e9, 10e-6, 10e-6)
         assert largest_difference(qubit, smooth_burst(10e6, 120e-9)) < TOLERANCE
 
+    @pytest.mark.full
     def test_four_levels_with_square_edges(self) -> None:
         qubit = Qubit(CARRIER, 4, -0.3e9, 10e-6, 10e-6)
         step = 1 / (80 * CARRIER)
         assert largest_difference(qubit, square_burst(100e6, 25e-9, step)) < TOLERANCE
 
+    @pytest.mark.full
     @pytest.mark.parametrize("levels", [4, 6])
     def test_more_levels_without_loss_at_full_length(self, levels: int) -> None:
         qubit = Qubit(CARRIER, levels, -0.3e9)

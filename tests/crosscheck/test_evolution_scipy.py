@@ -79,7 +79,7 @@ TOLERANCE = 1e-10
 
 
 class TestAgainstScipy:
-    @pytest.mark.parametrize("levels", [2, 3, 6])
+    @pytest.mark.parametrize("levels", [2, 3, pytest.param(6, marks=pytest.mark.full)])
     @pytest.mark.parametrize("rabi", [10e6, 100e6])
     def test_smooth_burst(self, levels: int, rabi: float) -> None:
         qubit = Qubit(CARRIER, levels, -0.3e9, 10e-6, 12e-6, 0.1)
@@ -98,6 +98,7 @@ class TestAgainstScipy:
         start, stop = drive.t[300] + 0.7e-12, drive.t[1500] + 1.1e-12
         assert largest_difference(qubit, drive, start, stop) < TOLERANCE
 
+    @pytest.mark.full
     def test_two_levels_for_longer(self) -> None:
         qubit = Qubit(CARRIER, t1=10e-6, t2=10e-6)
         drive = smooth_burst(20e6, 30e-9)

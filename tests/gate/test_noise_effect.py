@@ -123,6 +123,7 @@ def test_the_phase_is_given_in_both_frames() -> None:
     check_sampled(found, source.infidelity)
 
 
+@pytest.mark.full
 def test_sources_add_up_and_the_seed_decides() -> None:
     noises = (
         DetuningNoise("detuning", name="a", white=2e2),

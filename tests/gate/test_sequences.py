@@ -114,6 +114,7 @@ def test_bb1_from_a_behavioural_source(
 class TestDrag:
     TOPIC = "DRAG"
 
+    @pytest.mark.full
     def test_controls_of_a_gaussian(self, make_bench: BenchMaker, validate: Validate) -> None:
         """B13: the first-order quadrature, from the deck's volts to the qubit's two controls.
 

@@ -61,6 +61,7 @@ def start_phase(shift: float) -> complex:
     return complex(mean / abs(mean))
 
 
+@pytest.mark.full
 def test_frequency_follows_the_dispersion_of_the_time_step(validate: Validate) -> None:
     steps = (4e-12, 2e-12, 1e-12)
     found = [frequency({}, step) for step in steps]

@@ -132,6 +132,7 @@ def test_every_transistor_carries_signal() -> None:
     assert unmoved == []
 
 
+@pytest.mark.full
 def test_amplitude_code_is_monotonic() -> None:
     deck = load_deck(DECK)
     carries = {code for bit in (2, 4, 8, 16, 32, 64) for code in (bit - 1, bit)}

@@ -106,6 +106,7 @@ def check(case: tuple[Path, str]) -> None:
         assert all(np.isfinite(values).all() for values in result.vectors.values())
 
 
+@pytest.mark.full
 @pytest.mark.ngspice
 @settings(
     derandomize=True,

@@ -433,6 +433,7 @@ class TestDrag:
             validate, kind, "rotating-wave solver", leakage(channel), infidelity(channel, X)
         )
 
+    @pytest.mark.full
     @pytest.mark.parametrize("kind", DRAG_CARDS)
     def test_real_waveform(self, validate: Validate, kind: str) -> None:
         # What the counter-rotating part changes falls as one over the carrier (6 % of the smallest

@@ -66,7 +66,8 @@ def phase_of_one(drive: DriveSpline, qubit: Qubit) -> float:
 
 
 @pytest.mark.parametrize(
-    ("levels", "alpha", "shift"), [(5, -330e6, -383720.9), (2, 0.0, -500000.0)]
+    ("levels", "alpha", "shift"),
+    [pytest.param(5, -330e6, -383720.9, marks=pytest.mark.full), (2, 0.0, -500000.0)],
 )
 def test_shift_by_a_drive_off_resonance(
     validate: Validate, levels: int, alpha: float, shift: float
@@ -87,6 +88,7 @@ def test_shift_by_a_drive_off_resonance(
     validate(quantity, source, shift, got, "Hz", rel=0.02, card="B12")
 
 
+@pytest.mark.full
 def test_sweep_through_a_crossing(validate: Validate) -> None:
     # B19: gap 2 x 10 MHz, sweep 1e16 Hz/s from -T to T. For the kernel the gap is the qubit's
     # frequency and the sweep is the drive, along x: H/h = 10 MHz sigma_z' + (v t/2) sigma_x.

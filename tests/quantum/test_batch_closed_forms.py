@@ -41,6 +41,23 @@ class TestTwoLevels:
         quantity = "population of |1> at 10 MHz, detuned by 5 MHz, after 50 ns, by the batch"
         validate(quantity, sources.RABI, 0.772813, excited, rel=DIGITS, card="B01")
 
+    @pytest.mark.parametrize("order", [1, 4])
+    def test_trials_of_size_and_detuning_together(self, order: int) -> None:
+        # A calibration's grid: each row has its own size of one constant pulse, and a detuning.
+        step, rate = constant(10e6, 50e-9, 65)
+        scale, detuning = np.meshgrid(np.linspace(0.5, 1.5, 9), np.linspace(-6e7, 6e7, 5))
+        rates = rate * scale.reshape(-1, 1)
+        drive = BatchDrive(step, rates, detuning.reshape(-1, 1), order)
+        found = np.abs(propagate_batch(TWO, drive).unitaries[:, 1, 0]) ** 2
+        channels = evolve_batch(TWO, drive).channels[:, 3, 0].real
+        size = np.abs(rates[:, 0])
+        turn = np.hypot(size, detuning.reshape(-1))
+        wanted = (size / turn) ** 2 * np.sin(turn * drive.duration / 2) ** 2
+        assert np.ptp(wanted) > 0.5
+        # Rounding of 65 products.
+        assert np.abs(found - wanted).max() < 1e-13
+        assert np.abs(channels - wanted).max() < 1e-13
+
     @pytest.mark.parametrize("phase", [0.0, 0.7, np.pi / 2])
     def test_a_phase_turns_the_axis(self, phase: float) -> None:
         step, rate = constant(5e6, 50e-9, 10)
@@ -100,7 +117,14 @@ class TestLoss:
         # Nothing turns, so that the placing of the dissipation costs nothing: rounding.
         assert np.abs(found - wanted).max() < 1e-13
 
-    @pytest.mark.parametrize(("levels", "anharmonicity"), [(3, -0.3e9), (6, -0.01e9), (6, 0.0)])
+    @pytest.mark.parametrize(
+        ("levels", "anharmonicity"),
+        [
+            (3, -0.3e9),
+            pytest.param(6, -0.01e9, marks=pytest.mark.full),
+            pytest.param(6, 0.0, marks=pytest.mark.full),
+        ],
+    )
     def test_higher_levels_decay_as_an_oscillator(self, levels: int, anharmonicity: float) -> None:
         qubit = Qubit(5e9, levels, anharmonicity, t1=1e-6, t2=2e-6)
         time, top = 0.3e-6, levels - 1
@@ -190,6 +214,7 @@ class TestOrder:
 
 
 class TestPhysical:
+    @pytest.mark.full
     @PROPERTY
     @given(
         levels=st.integers(2, 5),

@@ -97,7 +97,7 @@ class TestPropagateUnitary:
 
 
 class TestStepError:
-    @pytest.mark.parametrize("levels", [2, 3, 6])
+    @pytest.mark.parametrize("levels", [2, 3, pytest.param(6, marks=pytest.mark.full)])
     @pytest.mark.parametrize("square", [False, True])
     def test_is_below_the_promise_in_hard_cases(self, levels: int, square: bool) -> None:
         drive = square_burst(100e6, 20e-9, 2e-12) if square else smooth_burst(100e6, 20e-9)

@@ -50,6 +50,7 @@ def rows(outcomes: dict[int, Outcome]) -> list[tuple[int, str, object, tuple[str
     return [(n, o.status, o.result, o.log) for n, o in sorted(outcomes.items())]
 
 
+@pytest.mark.full
 def test_the_same_plan_gives_the_same_rows_on_every_engine(address: str) -> None:
     orders: list[object] = [("square", 0.1 * k) for k in range(30)]
     orders[4] = ("no convergence", None)

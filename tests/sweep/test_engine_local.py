@@ -36,6 +36,7 @@ def test_failures_are_rows_and_the_sweep_goes_on() -> None:
     assert (outcomes[1].result, outcomes[5].result) == (9, 16)
 
 
+@pytest.mark.full
 @pytest.mark.parametrize("word", ["kill", "leave"])
 def test_the_run_that_ends_its_worker_is_named_and_no_other(word: str) -> None:
     orders: list[object] = [("square", k) for k in range(1, 13)]
@@ -69,6 +70,7 @@ def test_what_does_not_pickle_is_a_fault_of_its_run_alone() -> None:
     assert "pickle" in outcomes[4].error
 
 
+@pytest.mark.full
 def test_the_number_of_workers_changes_no_number() -> None:
     orders: list[object] = [("square", 0.1 * k) for k in range(20)]
     orders[7] = ("divide", 0)
@@ -88,6 +90,7 @@ def test_workers_have_one_thread_and_the_parent_keeps_its_own() -> None:
     assert {name: os.environ.get(name) for name in THREAD_VARIABLES} == before
 
 
+@pytest.mark.full
 def test_no_more_batches_are_taken_than_there_is_room_for() -> None:
     taken: list[int] = []
     reported: list[int] = []
@@ -220,6 +223,7 @@ def first_line(process: "subprocess.Popen[str]") -> str:
     return process.stdout.readline().strip()
 
 
+@pytest.mark.full
 @pytest.mark.ngspice
 def test_ctrl_c_leaves_no_child_and_loses_no_report(tmp_path: Path) -> None:
     orders = '[("divider", 2.0), ("sleep", 1000.0), ("divider", 3.0), ("sleep", 1000.0)]'
@@ -238,6 +242,7 @@ def test_ctrl_c_leaves_no_child_and_loses_no_report(tmp_path: Path) -> None:
     assert wait_until(lambda: not list(tmp_path.glob("qcosim-*")))
 
 
+@pytest.mark.full
 def test_workers_do_not_outlive_a_parent_that_is_killed(tmp_path: Path) -> None:
     process = start(tmp_path, '[("square", 1), ("sleep", 1000.0), ("sleep", 1000.0)]')
     assert first_line(process) == "1 done"

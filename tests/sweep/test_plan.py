@@ -179,6 +179,7 @@ class TestOrder:
 
 
 class TestIdentity:
+    @pytest.mark.full
     def test_another_process_finds_the_same(self, tmp_path: Path) -> None:
         plan = plan_of(tmp_path)
         done = subprocess.run(

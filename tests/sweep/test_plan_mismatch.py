@@ -104,6 +104,7 @@ SCATTER = 3.0 / math.sqrt(2 * PAIRS * SAMPLES)
 
 @pytest.mark.ngspice
 class TestDifferentialPair:
+    @pytest.mark.full
     def test_threshold(self, tmp_path: Path, validate: Validate) -> None:
         plan = plan_of(tmp_path, LEVEL1, {"threshold": "3.5 mV um"})
         found = offsets(plan)
@@ -115,6 +116,7 @@ class TestDifferentialPair:
         # A fixed seed: a p-value below 1e-3 would come once in a thousand seeds.
         assert stats.kstest(found.ravel() / expected, "norm").pvalue > 1e-3
 
+    @pytest.mark.full
     def test_threshold_and_current_factor(self, tmp_path: Path, validate: Validate) -> None:
         mismatch = {"threshold": "2 mV um", "current_factor": "2 % um"}
         found = offsets(plan_of(tmp_path, LEVEL1, mismatch))

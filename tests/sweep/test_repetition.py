@@ -179,6 +179,7 @@ r7 q 0 1k
 """
 
 
+@pytest.mark.full
 @pytest.mark.parametrize("confidential", [False, True])
 def test_nothing_of_a_confidential_file_is_archived(tmp_path: Path, confidential: bool) -> None:
     (tmp_path / "kit").mkdir()

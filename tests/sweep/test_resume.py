@@ -50,7 +50,7 @@ def small_parts(monkeypatch: pytest.MonkeyPatch) -> None:
 
 
 @pytest.mark.usefixtures("small_parts")
-@pytest.mark.parametrize("runs", [1, 4])
+@pytest.mark.parametrize("runs", [pytest.param(1, marks=pytest.mark.full), 4])
 def test_a_resumed_sweep_is_as_one_made_in_one_go(tmp_path: Path, runs: int) -> None:
     toml = write_bench(tmp_path, LEVELS)
     run_sweep(toml, tmp_path / "whole.h5", engine=HERE)
@@ -160,6 +160,7 @@ def test_what_bears_on_no_run_may_change(
     assert (state.made, state.finished) == (3, 6)
 
 
+@pytest.mark.full
 def test_a_stimulus_that_changes_while_the_sweep_runs_fails_its_runs(
     tmp_path: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:

@@ -164,7 +164,7 @@ def test_the_record_of_a_failed_run_holds_its_own_testbench(tmp_path: Path) -> N
         assert record.testbench == plan.testbench(run).to_toml()
 
 
-@pytest.mark.parametrize("keep", ["0", "4", "99", '"all"'])
+@pytest.mark.parametrize("keep", ["0", "4", pytest.param("99", marks=pytest.mark.full), '"all"'])
 def test_the_worst_runs_are_kept_whole(tmp_path: Path, keep: str) -> None:
     path = tmp_path / "a.h5"
     run_sweep(write_bench(tmp_path, LEVELS, ("keep = 2", f"keep = {keep}")), path, engine=HERE)
@@ -209,6 +209,7 @@ def test_an_imported_waveform_over_the_qubit(tmp_path: Path) -> None:
     check_against_single_runs(tmp_path / "a.h5", toml)
 
 
+@pytest.mark.full
 def test_a_carrier_that_is_estimated(tmp_path: Path) -> None:
     toml = write_bench(
         tmp_path,

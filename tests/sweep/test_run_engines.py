@@ -55,7 +55,9 @@ def test_the_plan_of_these_tests_has_results_and_failures(alone: Path) -> None:
     assert sorted(row["status"] for row in rows(alone)) == ["done"] * 6 + ["no convergence"] * 6
 
 
-@pytest.mark.parametrize("size", [1, 2, 3, 5, 16])
+@pytest.mark.parametrize(
+    "size", [1, *(pytest.param(size, marks=pytest.mark.full) for size in (2, 3, 16)), 5]
+)
 def test_the_size_of_batches_changes_no_number(
     tmp_path: Path, alone: Path, monkeypatch: pytest.MonkeyPatch, size: int
 ) -> None:
@@ -85,6 +87,7 @@ def test_a_cluster_changes_no_number(tmp_path: Path, alone: Path) -> None:
     check_same(path, alone)
 
 
+@pytest.mark.full
 def test_three_shares_merged_are_the_whole(tmp_path: Path) -> None:
     toml, path = write_bench(tmp_path, LEVELS), tmp_path / "all.h5"
     run_sweep(toml, tmp_path / "whole.h5", engine=HERE)
@@ -104,6 +107,7 @@ def test_three_shares_merged_are_the_whole(tmp_path: Path) -> None:
     check_same(path, tmp_path / "whole.h5")
 
 
+@pytest.mark.full
 def test_archives_that_overlap_are_merged_and_those_of_other_plans_are_not(
     tmp_path: Path,
 ) -> None:
@@ -131,7 +135,7 @@ def test_shares_of_a_testbench_that_is_named_in_two_ways_are_merged(
     assert archive.merge(tmp_path / "all.h5", shares_beside(Path("all.h5"))) == 6
 
 
-@pytest.mark.parametrize("parts", [1, 2, 7, 50])
+@pytest.mark.parametrize("parts", [1, 2, 7, pytest.param(50, marks=pytest.mark.full)])
 def test_shares_are_the_same_on_every_engine(
     tmp_path: Path, monkeypatch: pytest.MonkeyPatch, parts: int
 ) -> None:

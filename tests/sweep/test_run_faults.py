@@ -131,6 +131,7 @@ class Fragile(Executor):
         return future
 
 
+@pytest.mark.full
 def test_a_run_that_ends_its_worker_is_tried_once_more_and_named(tmp_path: Path) -> None:
     broken: list[int] = []
     engine = Engine(open=lambda: Fragile(3, broken), slots=lambda: 1)

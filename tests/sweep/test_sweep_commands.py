@@ -119,6 +119,7 @@ def test_what_cannot_be_is_refused(
     assert not list(tmp_path.glob("*.h5*"))
 
 
+@pytest.mark.full
 def test_one_run_is_shown_as_far_as_it_was_kept(failing: Path, qcosim: Cli) -> None:
     (whole,) = set(archive.record_numbers(failing)) - {3}
     short = min({1, 2, 4} - {whole})
@@ -146,6 +147,7 @@ def test_one_run_is_shown_as_far_as_it_was_kept(failing: Path, qcosim: Cli) -> N
     assert (code, "run 5 is not in the archive" in err) == (2, True)
 
 
+@pytest.mark.full
 def test_the_testbench_of_a_sweep_is_printed(failing: Path, qcosim: Cli, tmp_path: Path) -> None:
     code, out, _ = qcosim("show", failing, "--testbench")
     assert code == 0
@@ -176,6 +178,7 @@ def test_a_sweep_is_exported(failing: Path, qcosim: Cli, tmp_path: Path) -> None
     assert qcosim("export", failing, "--deck", deck)[0] == 2
 
 
+@pytest.mark.full
 def test_a_single_run_is_not_added_to_a_sweep(failing: Path, qcosim: Cli, tmp_path: Path) -> None:
     single = write_bench(tmp_path, "", name="single.toml")
     before = failing.read_bytes()
@@ -210,6 +213,7 @@ def test_a_flipped_bit_is_found(failing: Path, qcosim: Cli) -> None:
     assert len(parsed(out)["damaged"]) == 1
 
 
+@pytest.mark.full
 def test_a_run_is_made_again_by_the_command(failing: Path, qcosim: Cli, tmp_path: Path) -> None:
     code, out, _ = qcosim("rerun", failing, 2, "--json", "--archive", tmp_path / "one.h5")
     assert code == 0
@@ -226,6 +230,7 @@ def test_a_run_is_made_again_by_the_command(failing: Path, qcosim: Cli, tmp_path
     assert (code, "deck" in err) == (2, True)
 
 
+@pytest.mark.full
 def test_a_sample_is_made_again_by_the_command(failing: Path, qcosim: Cli) -> None:
     code, out, _ = qcosim("verify", failing, "--repeat", 2)
     assert code == 0

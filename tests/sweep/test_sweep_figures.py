@@ -84,6 +84,7 @@ def test_one_at_a_time(monkeypatch: pytest.MonkeyPatch) -> None:
     assert tornado.get_yticklabels()[0].get_text() == "detuning\n-100 kHz to 100 kHz"
 
 
+@pytest.mark.full
 @pytest.mark.parametrize("ending", ["png", "pdf", "svg"])
 def test_formats(ending: str, tmp_path: Path) -> None:
     table = samples(10)
