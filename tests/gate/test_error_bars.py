@@ -24,7 +24,7 @@ EXAMPLES = Path(__file__).parents[2] / "examples"
 # Shorter pulses of the slow decks: what the step does to a pulse is there in each carrier period
 # and at each edge. The drive is made stronger, so that the angle stays what it is.
 SHORT: dict[str, tuple[dict[str, float], float, float]] = {
-    "x90_spin": ({}, 130e-9, 125e-9),
+    "x90_spin": ({"t_stop": 25e-9}, 42e-9, 40e-9),
     "x180_transmon": ({}, 50e-9, 50e-9),
     "x90_bsim4": ({"t_stop": 25e-9}, 42e-9, 40e-9),
     "x90_oscillator": ({"t_stop": 30e-9}, 40e-9, 38e-9),
