@@ -94,6 +94,7 @@ class TestFreeInductionAndEcho:
         quantity = f"chi of {name} over sampled white paths"
         validate(quantity, sources.CYWINSKI, 0.5, chi, abs=allowed, card="C01")
 
+    @pytest.mark.full
     def test_one_over_f(self, validate: Validate, name: str) -> None:
         level = (2 * math.pi * 5e3) ** 2
         density = SpectralDensity("rad/s", (PowerLaw(level, 1.0, low=1.0),))

@@ -196,6 +196,7 @@ def test_busy_blas_threads_and_ignored_signals_do_no_harm(start: Starter, tmp_pa
     assert_nothing_left(tmp_path)
 
 
+@pytest.mark.full
 def test_a_plain_fork_leaves_the_parents_host_alone(start: Starter, tmp_path: Path) -> None:
     body = """
         divide(1.0)
@@ -320,6 +321,7 @@ def test_the_death_of_an_idle_host_is_made_good(start: Starter, tmp_path: Path) 
     assert_nothing_left(tmp_path)
 
 
+@pytest.mark.full
 def test_the_death_of_a_busy_host_is_an_error_and_made_good(start: Starter, tmp_path: Path) -> None:
     body = """
         import signal

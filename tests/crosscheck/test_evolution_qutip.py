@@ -22,6 +22,7 @@ def largest_difference(qubit: Qubit, drive: DriveSpline) -> float:
 
 
 class TestAgainstQutip:
+    @pytest.mark.full
     def test_two_levels_at_full_length_with_short_times(self) -> None:
         qubit = Qubit(CARRIER, t1=10e-6, t2=10e-6)
         assert largest_difference(qubit, smooth_burst(100e6, 120e-9)) < TOLERANCE

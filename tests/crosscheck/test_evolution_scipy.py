@@ -86,7 +86,7 @@ class TestAgainstScipy:
         drive = smooth_burst(rabi, 4e-9)
         assert largest_difference(qubit, drive, 0.0, drive.t[-1]) < TOLERANCE
 
-    @pytest.mark.parametrize("levels", [2, 4])
+    @pytest.mark.parametrize("levels", [2, pytest.param(4, marks=pytest.mark.full)])
     def test_square_edges_on_the_grid_of_a_circuit_simulator(self, levels: int) -> None:
         qubit = Qubit(CARRIER, levels, -0.3e9, 10e-6, 10e-6)
         drive = square_burst(100e6, 4e-9, 2e-12)

@@ -74,6 +74,7 @@ def test_the_run_that_ends_its_worker_is_named_and_no_other(address: str) -> Non
     }
 
 
+@pytest.mark.full
 def test_what_does_not_pickle_is_a_fault_of_its_run_alone(address: str) -> None:
     orders: list[object] = [("square", 2), ("square", threading.Lock()), ("square", 3)]
     outcomes = sweep(batches(orders, 3), scheduler_engine(address))
@@ -98,12 +99,14 @@ def test_decks_that_were_sent_are_not_kept(address: str) -> None:
     assert sizes[501] - sizes[101] < 4e6
 
 
+@pytest.mark.full
 def test_workers_have_one_thread_for_linear_algebra(address: str) -> None:
     names = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS")
     outcomes = sweep(batches([("where", names)]), scheduler_engine(address))
     assert outcomes[1].result[1] == dict.fromkeys(names, "1")
 
 
+@pytest.mark.full
 @pytest.mark.ngspice
 def test_workers_under_a_nanny_run_ngspice(address: str) -> None:
     orders = [("divider", volts) for volts in (2.0, 3.0, 4.0, 5.0)]
@@ -112,6 +115,7 @@ def test_workers_under_a_nanny_run_ngspice(address: str) -> None:
     assert [outcomes[n].result for n in (1, 2, 3, 4)] == pytest.approx([1.0, 1.5, 2.0, 2.5], 1e-9)
 
 
+@pytest.mark.full
 def test_an_error_of_the_caller_leaves_the_cluster_fit_for_use(address: str) -> None:
     def refuse(outcome: Outcome) -> None:
         raise OSError(28, "No space left on device")
