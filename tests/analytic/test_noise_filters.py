@@ -226,6 +226,7 @@ class TestOscillatorIdle:
 
 
 class TestSpinLock:
+    @pytest.mark.full
     def test_density_at_the_rabi_frequency(self, validate: Validate) -> None:
         density = SpectralDensity("rad/s", (Lorentzian((2 * np.pi * 2e4) ** 2, 1e-6),))
         omega, t = 2 * np.pi * 1e6, 200e-6

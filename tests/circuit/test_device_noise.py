@@ -47,7 +47,7 @@ LOW_PASS = "v1 in 0 dc 1\nr1 in out 1k\nc1 out 0 {c}"
 
 
 class TestResistor:
-    @pytest.mark.parametrize("kelvin", [300.0, 4.2])
+    @pytest.mark.parametrize("kelvin", [300.0, pytest.param(4.2, marks=pytest.mark.full)])
     def test_johnson_noise(self, validate: Validate, kelvin: float) -> None:
         run = clean(RESISTOR, ["v(out)"])
         settings = NoiseSettings(NoiseTemperatures(resistor=kelvin))
@@ -59,6 +59,7 @@ class TestResistor:
         got = np.mean(noise**2) / NYQUIST
         validate(quantity, source, 4 * constants.k * kelvin * 1e3, got, "V^2/Hz", rel=rel)
 
+    @pytest.mark.full
     @pytest.mark.parametrize("kelvin", [300.0, 4.2])
     def test_capacitor(self, validate: Validate, kelvin: float) -> None:
         run = clean(LOW_PASS.format(c="0.4p"), ["v(out)"])
@@ -101,7 +102,9 @@ class TestActive:
         wanted = 2 * constants.e * current
         validate(quantity, sources.SCHOTTKY, wanted, np.mean(noise**2) / NYQUIST, "A^2/Hz", rel=rel)
 
-    @pytest.mark.parametrize("channel", ["conductance", "transconductance"])
+    @pytest.mark.parametrize(
+        "channel", ["conductance", pytest.param("transconductance", marks=pytest.mark.full)]
+    )
     def test_channel_noise(self, validate: Validate, channel: str) -> None:
         body = (
             "v1 in 0 dc 0.7 ac 1\nvd vdd 0 1.5\nrd vdd out 500 noisy=0\n"
@@ -273,7 +276,10 @@ class TestFlicker:
         ".model n nmos level=1 vto=0.4 kp=600u tnom=26.85"
     )
 
-    @pytest.mark.parametrize("exponent", [0.8, 1.0, 1.2])
+    @pytest.mark.parametrize(
+        "exponent",
+        [pytest.param(0.8, marks=pytest.mark.full), 1.0, pytest.param(1.2, marks=pytest.mark.full)],
+    )
     def test_spectrum(self, exponent: float) -> None:
         run = clean(self.body, ["v(out)"], count=4096)
         given = Flicker(1e-9, 1.0, exponent)

@@ -67,6 +67,7 @@ def test_over_rotation(
     assert result.calibrated.amplitude_scale == pytest.approx(1 / 1.01, abs=1e-4)  # the kicks
 
 
+@pytest.mark.full
 def test_detuning(make_bench: BenchMaker, validate: Validate) -> None:
     """Pi pulse with Delta/Omega = 0.05: 1 - F_avg = 1.665071e-3.
 
@@ -88,7 +89,14 @@ def test_detuning(make_bench: BenchMaker, validate: Validate) -> None:
     validate(quantity, sources.ALGEBRA, 1.665071e-3, sum(found) / 2, abs=allowed, card="A04")
 
 
-@pytest.mark.parametrize(("fraction", "detuning"), [(0.5, 1e6), (0.7, 1.5e6), (1.0, 2e6)])
+@pytest.mark.parametrize(
+    ("fraction", "detuning"),
+    [
+        (0.5, 1e6),
+        pytest.param(0.7, 1.5e6, marks=pytest.mark.full),
+        pytest.param(1.0, 2e6, marks=pytest.mark.full),
+    ],
+)
 def test_rabi_formula_off_resonance(
     make_bench: BenchMaker, validate: Validate, fraction: float, detuning: float
 ) -> None:
@@ -107,7 +115,8 @@ def test_rabi_formula_off_resonance(
 
 
 @pytest.mark.parametrize(
-    ("target", "fraction", "infidelity"), [("x", 1.0, 2.666311e-4), ("x90", 0.5, 1.333222e-4)]
+    ("target", "fraction", "infidelity"),
+    [pytest.param("x", 1.0, 2.666311e-4, marks=pytest.mark.full), ("x90", 0.5, 1.333222e-4)],
 )
 def test_phase_error(
     make_bench: BenchMaker, validate: Validate, target: str, fraction: float, infidelity: float
@@ -128,7 +137,15 @@ def test_phase_error(
         assert result.free_frame.infidelity < KICK
 
 
-@pytest.mark.parametrize("phase", [0.0, 40.0, 90.0, -90.0])
+@pytest.mark.parametrize(
+    "phase",
+    [
+        0.0,
+        40.0,
+        pytest.param(90.0, marks=pytest.mark.full),
+        pytest.param(-90.0, marks=pytest.mark.full),
+    ],
+)
 def test_the_sign_of_the_phase_axis(
     make_bench: BenchMaker, validate: Validate, phase: float
 ) -> None:

@@ -88,6 +88,7 @@ def test_pulse_is_the_envelope_of_the_modulator() -> None:
     assert np.max(np.abs(late - theirs)) < 0.03 * np.mean(theirs[flat])
 
 
+@pytest.mark.full
 def test_default_pulse_is_a_quarter_turn_at_any_useful_step() -> None:
     for step in (20e-12, 50e-12):
         t, i, q = pair({}, 130e-9, step)
@@ -100,6 +101,7 @@ def test_default_pulse_is_a_quarter_turn_at_any_useful_step() -> None:
         assert np.max(np.abs(i[(t < 5e-9) | (t > 125e-9)])) < 1e-3 * np.max(i)
 
 
+@pytest.mark.full
 def test_area_converges_with_the_step() -> None:
     coarse, middle, fine = (
         np.trapezoid(i, t) for t, i, _ in (pair(SHORT, 36e-9, h) for h in (50e-12, 20e-12, 5e-12))
@@ -110,6 +112,7 @@ def test_area_converges_with_the_step() -> None:
     assert middle == pytest.approx(fine, rel=5e-4)
 
 
+@pytest.mark.full
 def test_codes_are_signed_and_linear() -> None:
     codes = [0, 1, 2, 31, 32, 63, 64, 93, 127]
     found = np.array([levels({"amp_i": code, "amp_q": -code}) for code in codes])

@@ -57,7 +57,12 @@ def area(v: FloatArray, frequency: float, *, points: int = 80) -> complex:
 
 @pytest.mark.parametrize(
     ("gain_db", "phase_degrees", "published_db"),
-    [(0.1, 1.0, 39.61402), (0.1, 0.0, 44.79698), (0.0, 1.0, 41.18283), (0.5, 3.0, 28.1997)],
+    [
+        pytest.param(0.1, 1.0, 39.61402, marks=pytest.mark.full),
+        pytest.param(0.1, 0.0, 44.79698, marks=pytest.mark.full),
+        (0.0, 1.0, 41.18283),
+        (0.5, 3.0, 28.1997),
+    ],
 )
 def test_image_rejection(
     validate: Validate, gain_db: float, phase_degrees: float, published_db: float
@@ -74,7 +79,14 @@ def test_image_rejection(
     validate(quantity, sources.RAZAVI, published_db, measured, "dB", abs=1e-4, card="F10")
 
 
-@pytest.mark.parametrize("offsets", [(1e-3, 0.0), (0.0, 1e-3), (1e-3, 1e-3)])
+@pytest.mark.parametrize(
+    "offsets",
+    [
+        pytest.param((1e-3, 0.0), marks=pytest.mark.full),
+        pytest.param((0.0, 1e-3), marks=pytest.mark.full),
+        (1e-3, 1e-3),
+    ],
+)
 def test_offset_leaks_carrier(validate: Validate, offsets: tuple[float, float]) -> None:
     leak_i, leak_q = offsets
     v = output({**TONE, "leakage_i": leak_i, "leakage_q": leak_q}, 68e-9)
@@ -89,6 +101,7 @@ def test_offset_leaks_carrier(validate: Validate, offsets: tuple[float, float]) 
     assert np.angle(leak) == pytest.approx(math.atan2(leak_q, leak_i), abs=1e-5)
 
 
+@pytest.mark.full
 def test_area_of_the_pulse_and_its_step_error(validate: Validate) -> None:
     coarse = area(output({}, 50e-9), CARRIER)
     fine = area(output({}, 50e-9, points=160), CARRIER, points=160)
@@ -118,6 +131,7 @@ def test_overshoot_of_the_reconstruction_filter(validate: Validate) -> None:
     validate(quantity, sources.ZVEREV, 12.78, overshoot, "%", rel=5e-4, card="F09", digits=4)
 
 
+@pytest.mark.full
 def test_quadrature_spares_the_upper_transition() -> None:
     # A fast clock and a fine grid, so that aliases and rounding stay below the lines in question.
     fine = {"f_clk": 5e9, "bits": 16.0}

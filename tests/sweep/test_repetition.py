@@ -148,6 +148,7 @@ def test_the_record_of_a_plan_is_read_as_it_was_written(swept: Path) -> None:
     assert texts == {"deck.cir": DECK, "filter.inc": FILTER}
 
 
+@pytest.mark.full
 def test_a_circuit_in_python_is_swept(tmp_path: Path) -> None:
     write_bench(tmp_path, GRID)
     bench = replace(

@@ -196,6 +196,7 @@ time_unit = "s"
     assert (again.made, again.finished, again.failed) == (4, 6, {})
 
 
+@pytest.mark.full
 def test_two_sweeps_do_not_write_one_archive(tmp_path: Path) -> None:
     toml, path = write_bench(tmp_path, LEVELS), tmp_path / "a.h5"
     tried = []

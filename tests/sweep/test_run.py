@@ -186,6 +186,7 @@ def test_a_testbench_without_a_sweep_is_refused_before_anything_is_written(tmp_p
     assert not list(tmp_path.glob("*.h5*"))
 
 
+@pytest.mark.full
 def test_an_imported_waveform_over_the_qubit(tmp_path: Path) -> None:
     t = np.arange(0.0, 24e-9, 10e-12)
     v = 0.12 * np.sin(2 * np.pi * 5e9 * t)

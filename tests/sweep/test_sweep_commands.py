@@ -159,6 +159,7 @@ def test_the_testbench_of_a_sweep_is_printed(failing: Path, qcosim: Cli, tmp_pat
     assert (code, parsed(out)["finished"]) == (0, 3)
 
 
+@pytest.mark.full
 def test_a_sweep_is_exported(failing: Path, qcosim: Cli, tmp_path: Path) -> None:
     code, _, err = qcosim("export", failing, "--csv", tmp_path / "a.csv")
     assert (code, "4 runs in" in err) == (0, True)
@@ -191,6 +192,7 @@ def test_a_single_run_is_not_added_to_a_sweep(failing: Path, qcosim: Cli, tmp_pa
     assert failing.read_bytes() == before
 
 
+@pytest.mark.full
 def test_a_flipped_bit_is_found(failing: Path, qcosim: Cli) -> None:
     assert qcosim("verify", failing)[0] == 0
     with h5py.File(failing) as file:
