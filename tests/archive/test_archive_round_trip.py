@@ -114,6 +114,7 @@ def test_items_of_one_type_come_back(items: list[Any]) -> None:
     assert same(round_trip(Anything(tuple(items))).value, tuple(items))
 
 
+@pytest.mark.full
 @QUICK
 @given(
     st.integers(0, 6),

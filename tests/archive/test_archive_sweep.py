@@ -275,6 +275,7 @@ def test_cells_are_the_columns_of_a_whole_run(path: Path) -> None:
     assert {name: read_units(path)[name] for name in cells} == units
 
 
+@pytest.mark.full
 def test_parts_are_merged_when_there_are_many(path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.setattr(sweeps, "_MANY_PARTS", 5)
     most = 0

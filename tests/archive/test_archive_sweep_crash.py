@@ -136,6 +136,7 @@ def test_failure_of_every_call(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) 
     assert at > 110
 
 
+@pytest.mark.full
 def test_full_disk_at_every_size(tmp_path: Path) -> None:
     """The process may write no longer file, as on a disk with so much space."""
     sizes = [2**k for k in range(10, 18)]

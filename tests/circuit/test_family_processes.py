@@ -92,6 +92,7 @@ def test_the_end_of_the_host_ends_the_loaded_deck_and_its_run(tmp_path: Path) ->
         process.communicate()
 
 
+@pytest.mark.full
 def test_an_interrupt_in_the_middle_leaves_nothing_and_the_next_family_works(
     tmp_path: Path,
 ) -> None:

@@ -27,6 +27,7 @@ class TestAgainstQutip:
         qubit = Qubit(CARRIER, t1=10e-6, t2=10e-6)
         assert largest_difference(qubit, smooth_burst(100e6, 120e-9)) < TOLERANCE
 
+    @pytest.mark.full
     def test_two_levels_at_full_length_with_square_edges(self) -> None:
         qubit = Qubit(CARRIER, t1=10e-6, t2=20e-6, thermal_population=0.1)
         assert largest_difference(qubit, square_burst(100e6, 120e-9, 2e-12)) < TOLERANCE

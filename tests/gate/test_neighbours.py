@@ -171,6 +171,7 @@ def silent(duration: float) -> tuple[QubitDrive, Pulse]:
     return drive, Pulse(pulse.qubit, DriveSpline(pulse.drive.t, 0.0 * pulse.drive.c), 0.0, duration)
 
 
+@pytest.mark.full
 def test_noise_of_the_line_flips_a_neighbour_by_the_golden_rule(validate: Validate) -> None:
     duration, density, samples = 1e-6, 4e-12, 800  # s; V^2/Hz
     drive, pulse = silent(duration)
@@ -198,6 +199,7 @@ def test_noise_of_the_line_flips_a_neighbour_by_the_golden_rule(validate: Valida
     assert spectator_effects([table], drive, pulse, detuned)[0].effect.noise is None
 
 
+@pytest.mark.full
 def test_a_fluctuating_amplitude_makes_the_stark_phase_of_a_far_neighbour_fluctuate() -> None:
     drive, pulse, _ = played(40 * DURATION)
     spread, offset = 0.01, 40 * RABI
@@ -289,6 +291,7 @@ def test_noise_at_rest_makes_rates() -> None:
     assert found.infidelity == pytest.approx(whole, rel=2 * clean.infidelity)
 
 
+@pytest.mark.full
 @pytest.mark.parametrize("kind", ["amplitude", "phase"])
 def test_noise_of_a_leaking_carrier_flips_a_detuned_qubit(kind: str) -> None:
     """Two ways: the golden rule, and the filter function of all that happens in the stretch."""

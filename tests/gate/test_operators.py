@@ -42,6 +42,7 @@ def transmon() -> tuple[qutip.Qobj, qutip.Qobj, list[qutip.Qobj]]:
     return h, a + a.dag(), [math.sqrt(1 / 5e-6) * a, math.sqrt(2 * pure) * n]
 
 
+@pytest.mark.full
 @pytest.mark.ngspice
 def test_a_transmon_given_by_operators_is_the_transmon(make_bench: BenchMaker) -> None:
     known = cosim.run(make_bench(DECK, TABLES))

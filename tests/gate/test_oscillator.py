@@ -56,7 +56,7 @@ r1 tank 0 20k
 
 
 @pytest.mark.ngspice
-@pytest.mark.parametrize("step", ["4 ps", "2 ps"])
+@pytest.mark.parametrize("step", ["4 ps", pytest.param("2 ps", marks=pytest.mark.full)])
 def test_an_lc_tank_obeys_the_frequency_law(make_bench: BenchMaker, step: str) -> None:
     """tan(omega h/2) = omega_0 h/2, and Richardson's extrapolation of two steps.
 

@@ -227,6 +227,7 @@ def test_the_script_of_a_job_can_be_read_first(system: str) -> None:
     assert "--nworkers 4 " in script
 
 
+@pytest.mark.full
 def test_what_a_queue_cannot_be_asked() -> None:
     with pytest.raises(InputError, match=r"no batch system 'slurn'\n  did you mean 'slurm'"):
         queue_engine("slurn", REQUEST, jobs=1)

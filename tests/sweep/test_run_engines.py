@@ -125,6 +125,7 @@ def test_archives_that_overlap_are_merged_and_those_of_other_plans_are_not(
     assert (tmp_path / "all.h5").read_bytes() == before
 
 
+@pytest.mark.full
 def test_shares_of_a_testbench_that_is_named_in_two_ways_are_merged(
     tmp_path: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:
