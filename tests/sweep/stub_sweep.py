@@ -20,7 +20,7 @@ def stub_batch(batch: Batch) -> tuple[Outcome, ...]:
     for task in batch.tasks:
         time.sleep(LENGTH)
         random = np.random.default_rng(task.number)
-        values = random.normal(size=2 * SAMPLES).view(np.complex128)
+        values = random.normal(size=2 * SAMPLES).view(np.complex128).astype(np.complex64)
         envelope = Series(0.0, 8e-11, values, "V", 6.2e9)
         numbers = random.normal(size=CELLS).tolist()
         cells = {f"number_{k}": number for k, number in enumerate(numbers)}
