@@ -183,11 +183,12 @@ def run_gate(
     as_simulated, in_free_frame, calibrated = views.fidelities(second)
     floor = views.floor(second)
     clock.lap("fidelities")
-    neighbours = spectator_effects(bench.spectator, drive, pulse, noise)
+    told = () if noisy is None else noisy.warnings
+    neighbours = spectator_effects(bench.spectator, drive, pulse, noise, told)
     idle, idle_warnings = None, tuple[str, ...]()
     if bench.gate.idle is not None:
         idle, idle_warnings = idle_effect(
-            bench.gate.idle, drive, pulse, shot.waveform, measures.amplitude, noise
+            bench.gate.idle, drive, pulse, shot.waveform, measures.amplitude, noise, told
         )
     clock.lap("neighbours")
     reference = _reference_error(bench, pulse, clean)
@@ -202,7 +203,7 @@ def run_gate(
         *scale_warnings(calibrated),
         *twin_warnings(drive.carrier_frequency, drive.qubit.frequency, rotating_wave_error),
         *floor_warnings(calibrated, floor),
-        *(() if noisy is None else noisy.warnings),
+        *told,
         *(text for item in neighbours for text in item.warnings),
         *idle_warnings,
     )

@@ -1,7 +1,7 @@
 """What else the line does: to its other qubits while the gate is played, and to its own at rest."""
 
 import math
-from collections.abc import Sequence
+from collections.abc import Collection, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -16,7 +16,7 @@ from cosim.noises import VOLTAGES, AmplitudeNoise, DetuningNoise, Noise, PhaseNo
 from cosim.quantum.channel import nearest_unitary
 from cosim.quantum.evolution import DriveSpline
 from cosim.quantum.fidelity import average_gate_fidelity, leakage, rotation_of, target_unitary
-from cosim.quantum.frame import free_frame
+from cosim.quantum.frame import FreeFrame, free_frame
 from cosim.quantum.heating import flip_rate
 from cosim.quantum.operators import OperatorSystem
 from cosim.quantum.targets import target_rotation
@@ -24,6 +24,9 @@ from cosim.qubit_drive import QubitDrive, make_qubit
 from cosim.schema import SpectatorTable
 from cosim.side_results import IdleEffect, SpectatorEffect
 from cosim.waveform import Envelope, Waveform
+
+# Part of the pulse's amplitude that a stretch without a pulse does not reach.
+PULSE_TOLERANCE = 0.1
 
 _IDENTITY = np.eye(2, dtype=np.complex128)
 
@@ -45,7 +48,11 @@ class Neighbour:
 
 
 def spectator_effects(
-    tables: Sequence[SpectatorTable], drive: QubitDrive, pulse: Pulse, noise: LineOfNoise
+    tables: Sequence[SpectatorTable],
+    drive: QubitDrive,
+    pulse: Pulse,
+    noise: LineOfNoise,
+    told: Collection[str] = (),
 ) -> tuple[Neighbour, ...]:
     """Evolve the other qubits of the line under the same waveform, with the same noise.
 
@@ -59,6 +66,8 @@ def spectator_effects(
         The gate's; without the rotating-wave approximation, as the gate's own headline.
     noise : LineOfNoise
         That of the line reaches every qubit; the detuning's is the gate's qubit's own.
+    told : collection of str
+        Warnings that the reader has of the gate, which are not repeated.
 
     Returns
     -------
@@ -77,13 +86,18 @@ def spectator_effects(
     if isinstance(drive.qubit, OperatorSystem):
         raise InputError("[[spectator]] tables do not go with a system of operators")
     return tuple(
-        _spectator(table, number, drive, pulse, noise)
+        _spectator(table, number, drive, pulse, noise, told)
         for number, table in enumerate(tables, start=1)
     )
 
 
 def _spectator(
-    table: SpectatorTable, number: int, drive: QubitDrive, pulse: Pulse, noise: LineOfNoise
+    table: SpectatorTable,
+    number: int,
+    drive: QubitDrive,
+    pulse: Pulse,
+    noise: LineOfNoise,
+    told: Collection[str],
 ) -> Neighbour:
     assert not isinstance(drive.qubit, OperatorSystem)
     qubit = make_qubit(table.qubit(drive.qubit.frequency), drive.carrier_frequency)
@@ -111,14 +125,14 @@ def _spectator(
         infidelity=_loss(average_gate_fidelity(channel, target)),
         free_frame_infidelity=_loss(framed.average_gate_fidelity),
         rotation=rotation_of(nearest_unitary(channel)),
-        phase=math.remainder(-(framed.before + framed.after), 2.0 * math.pi),
+        phase=_phase(framed),
         leakage=max(0.0, leakage(channel)),
         noise=None if noisy is None else noisy.effect,
     )
     found = [
         *_carrier_warnings(effect, drive),
         *level_warnings(own, target, table=f"[[spectator]] number {number}"),
-        *(() if noisy is None else noisy.warnings),
+        *_new_warnings(noisy, told),
     ]
     return Neighbour(effect, tuple(f"'{effect.name}': {text}" for text in found))
 
@@ -142,6 +156,7 @@ def idle_effect(
     waveform: Waveform,
     amplitude: float,
     noise: LineOfNoise,
+    told: Collection[str] = (),
 ) -> tuple[IdleEffect, tuple[str, ...]]:
     """Judge a stretch without a pulse.
 
@@ -159,6 +174,8 @@ def idle_effect(
         Of the gate's pulse there, carrier peak amplitude in the waveform's unit.
     noise : LineOfNoise
         All of it acts at rest as well.
+    told : collection of str
+        Warnings that the reader has of the gate, which are not repeated.
 
     Returns
     -------
@@ -167,14 +184,19 @@ def idle_effect(
 
     Raises
     ------
-    InputError
+    TestbenchError
         If the stretch does not lie within the run.
     SimulationError
         If a noisy run of the circuit fails.
     """
     start, stop = span
+    first, last = float(waveform.t[0]), float(waveform.t[-1])
+    if start < first or stop > last:
+        raise TestbenchError(
+            f"table [gate], key 'idle': {start:.6g} s to {stop:.6g} s is not within the run, which "
+            f"goes from {first:.6g} s to {last:.6g} s"
+        )
     own = replace(pulse, start=start, stop=stop, before=None)
-    own.channel()  # Refuses a stretch outside of the run before noise is made for it.
     phase = free_frame(own.channel(), _IDENTITY)
     noisy = noise.on(replace(drive, window=span))
     if noisy is not None:
@@ -183,7 +205,7 @@ def idle_effect(
     framed = free_frame(channel, _IDENTITY)
     inside = (waveform.t >= start) & (waveform.t <= stop)
     left = _left(noise.envelope, span)
-    turn = math.remainder(-(phase.before + phase.after), 2.0 * math.pi)
+    turn = _phase(phase)
     flips, dephasing = _rates(span, drive, waveform.unit, left, noise.noises)
     effect = IdleEffect(
         start=start,
@@ -199,11 +221,27 @@ def idle_effect(
         dephasing_rate=dephasing,
         noise=None if noisy is None else noisy.effect,
     )
-    return effect, _idle_warnings(noisy)
+    found = (*_pulse_warnings(noise.envelope, span, amplitude), *_new_warnings(noisy, told))
+    return effect, tuple(f"at rest: {text}" for text in found)
 
 
-def _idle_warnings(noisy: NoisyGate | None) -> tuple[str, ...]:
-    return () if noisy is None else tuple(f"at rest: {text}" for text in noisy.warnings)
+def _pulse_warnings(
+    envelope: Envelope, span: tuple[float, float], amplitude: float
+) -> tuple[str, ...]:
+    inside = (envelope.t >= span[0]) & (envelope.t <= span[1])
+    peak = float(np.abs(envelope.iq[inside]).max(initial=0.0)) / amplitude
+    if peak <= PULSE_TOLERANCE:
+        return ()
+    return (f"the carrier reaches {peak:.0%} of the pulse: 'idle' in [gate] lies on a pulse",)
+
+
+def _new_warnings(noisy: NoisyGate | None, told: Collection[str]) -> tuple[str, ...]:
+    return () if noisy is None else tuple(text for text in noisy.warnings if text not in told)
+
+
+def _phase(framed: FreeFrame) -> float:
+    # No phase is 0.0, not -0.0.
+    return math.remainder(-(framed.before + framed.after), 2.0 * math.pi) + 0.0
 
 
 def _left(envelope: Envelope, span: tuple[float, float]) -> float:

@@ -90,9 +90,11 @@ def _draw_costs(axes: Axes, effect: NoiseEffect, colours: dict[str, str]) -> Non
         axes.barh(place, value, color=colour, height=0.6, xerr=error or None, capsize=2)
         if source is not None and source.leakage > lowest:
             axes.plot(source.leakage, place, "|", color="black", ms=12, mew=1.5)
+        end = value + error
         if source is not None and source.oscillator_frame > lowest:
             axes.plot(source.oscillator_frame, place, "D", mfc="white", mec="black", ms=5)
-        axes.text(value + error, place, f" {value:.1e}", va="center", fontsize=7)
+            end = max(end, 1.5 * source.oscillator_frame)
+        axes.text(end, place, f" {value:.1e}", va="center", fontsize=7)
     axes.plot([], [], "|", color="black", ms=9, mew=1.5, label="of it leakage")
     if any(not math.isnan(item.oscillator_frame) for item in effect.sources):
         axes.plot([], [], "D", mfc="white", mec="black", ms=5, label="oscillator's frame")
@@ -234,7 +236,7 @@ def _draw_spectators(axes: Axes, result: GateResult) -> None:
     axes.axvline(0.0, color="0.5", lw=0.8, ls=":")
     axes.set_yscale("log")
     axes.margins(x=0.15, y=0.2)
-    axes.set_xlabel("other qubits: frequency less the carrier's (MHz)", fontsize=_SMALL)
+    axes.set_xlabel("offset of the other qubits (MHz)", fontsize=_SMALL)
     axes.set_ylabel("infidelity 1 - F_avg", fontsize=_SMALL)
     axes.legend(
         loc="lower center",

@@ -342,7 +342,8 @@ class AccuracyTable:
     reference : bool
         Also evolve the full waveform with QuTiP's master-equation solver, and tell the difference.
     noise_samples : int
-        Seeded samples of what fluctuates during the gate, where the testbench has such noise.
+        Seeded samples of what fluctuates during the gate, where the testbench has such noise; they
+        come in pairs of opposite sign.
     noise_seed : int
         Their seed.
     """
@@ -353,8 +354,8 @@ class AccuracyTable:
     noise_seed: int = 1
 
     def __post_init__(self) -> None:
-        if not 2 <= self.noise_samples <= 1_000_000:
-            raise InputError(f"key 'noise_samples': wanted 2 to 1000000, got {self.noise_samples}")
+        if not 4 <= self.noise_samples <= 1_000_000:
+            raise InputError(f"key 'noise_samples': wanted 4 to 1000000, got {self.noise_samples}")
         if not 0 <= self.noise_seed < 2**63:
             raise InputError(f"key 'noise_seed': wanted 0 to 2**63 - 1, got {self.noise_seed}")
 

@@ -96,7 +96,7 @@ class NoiseSource:
     devices_explain: float = field(default=1.0, metadata=_unit("1"))
     left_out: tuple[str, ...] = ()
     reason: str = ""
-    spectrum: NoiseSpectrum | None = field(default=None, metadata={"table": False})
+    spectrum: NoiseSpectrum | None = field(default=None, metadata={"table": False}, compare=False)
 
 
 @dataclass(frozen=True, slots=True)
