@@ -12,20 +12,23 @@ from cosim.capture import Plan
 from cosim.circuit.bias import CleanRun, clean_run
 from cosim.circuit.generators import check_names
 from cosim.circuit.injection import InjectedNoise, device_noise
+from cosim.circuit.model_noise import with_models
 from cosim.circuit.noise_settings import NoiseSettings
 from cosim.circuit.noise_shares import DeviceShares, device_shares
 from cosim.dsp.demodulation import demodulate
-from cosim.errors import TestbenchError
+from cosim.errors import SimulationError, TestbenchError
 from cosim.noise_frame import Nominal, superoperators, unitary_losses
 from cosim.quantum.batch import propagate_batch
 from cosim.quantum.batch_drive import BatchDrive
 from cosim.side_results import NoiseSource
 from cosim.testbench import Testbench
 from cosim.voltage_noises import NetlistNoise
-from cosim.waveform import ComplexArray, Envelope, Waveform
+from cosim.waveform import ComplexArray, Envelope, FloatArray, Waveform
 
 # What the devices explain of the noise together; less means that the projection does not hold.
 EXPLAINED = 0.7
+# Of a period of the carrier, at which models are asked for the noise of their channels.
+INSTANTS = 8
 
 
 @dataclass(frozen=True, slots=True)
@@ -50,6 +53,8 @@ class CircuitNoise:
         Why, where the testbench left it open.
     added : AddedNoise or None
         The voltage that it adds, of the other two methods.
+    warnings : tuple of str
+        What the reader must know, without the noise's name.
     made : dict
         Seed -> its noise: a run of the simulator serves the gate's qubit, the others and rest.
     single : dict
@@ -66,6 +71,7 @@ class CircuitNoise:
     method: str = INJECTION
     reason: str = ""
     added: AddedNoise | None = None
+    warnings: tuple[str, ...] = ()
     made: dict[int, tuple[Envelope, InjectedNoise]] = field(default_factory=dict, compare=False)
     single: dict[tuple[str, int], Envelope] = field(default_factory=dict, compare=False)
     told: dict[tuple[float, float], DeviceShares] = field(default_factory=dict, compare=False)
@@ -194,7 +200,11 @@ def circuit_noise(
         settings = replace(settings, gamma=noise.gamma)
     clean = clean_run(plan.deck, plan.request, [probe.text])
     check_names(clean.inventory, settings)
-    choice = choose_method(clean, noise, carrier_frequency, _stretch(bench, clean))
+    span = _stretch(bench, clean)
+    choice = choose_method(clean, noise, carrier_frequency, span)
+    warnings = tuple[str, ...]()
+    if choice.method == INJECTION:
+        settings, warnings = _modelled(clean, settings, noise, carrier_frequency, span)
     return CircuitNoise(
         clean,
         settings,
@@ -204,7 +214,25 @@ def circuit_noise(
         choice.method,
         choice.reason,
         choice.added,
+        warnings,
     )
+
+
+def _modelled(
+    clean: CleanRun,
+    settings: NoiseSettings,
+    noise: NetlistNoise,
+    carrier_frequency: float,
+    span: tuple[float, float],
+) -> tuple[NoiseSettings, tuple[str, ...]]:
+    """Ask the models of channels that no formula here stands for, along a period of the carrier."""
+    middle = 0.5 * (span[0] + span[1])
+    instants = [middle + k / (INSTANTS * carrier_frequency) for k in range(INSTANTS)]
+    try:
+        return with_models(clean, settings, instants, gammas=noise.gamma is None), ()
+    except SimulationError as error:
+        text = f"the models of its channels could not be asked for their noise: {error.message}"
+        return settings, (text,)
 
 
 def _stretch(bench: Testbench, clean: CleanRun) -> tuple[float, float]:
@@ -255,7 +283,7 @@ def injected_noise(
     found = [circuit.envelope(number) for number in seeds]
     unitaries = _with_added(nominal, [envelope for envelope, _ in found], volts)
     losses, leaks = unitary_losses(unitaries)
-    infidelity = float(losses.mean())
+    infidelity, error_of_runs = _mean(losses)
     devices = _each if noise.by_device else _told
     parts, error, explain = devices(nominal, circuit, seeds, volts, infidelity)
     source = NoiseSource(
@@ -265,7 +293,7 @@ def injected_noise(
         infidelity=infidelity,
         leakage=float(leaks.mean()),
         highest_frequency=found[0][1].highest_frequency,
-        standard_error=float(losses.std(ddof=1) / math.sqrt(len(seeds))),
+        standard_error=error_of_runs,
         devices=parts,
         devices_error=error,
         devices_explain=explain,
@@ -297,8 +325,8 @@ def _each(
     for device in circuit.clean.inventory.devices:
         envelopes = [circuit.alone(device.name, seed) for seed in seeds]
         losses, _ = unitary_losses(_with_added(nominal, envelopes, volts))
-        found[device.name] = float(losses.mean())
-        errors.append(float(losses.std(ddof=1) / math.sqrt(len(seeds))))
+        found[device.name], error = _mean(losses)
+        errors.append(error)
     parts = dict(sorted(found.items(), key=lambda pair: -pair[1]))
     return parts, max(errors), sum(parts.values()) / infidelity if infidelity > 0.0 else 1.0
 
@@ -345,22 +373,33 @@ def circuit_warnings(circuit: CircuitNoise, source: NoiseSource) -> tuple[str, .
     """
     if circuit.added is not None:
         return tuple(f"noise '{source.name}': {text}" for text in circuit.added.warnings)
+    found = [f"noise '{source.name}': {text}" for text in circuit.warnings]
     if source.devices_error == math.inf:
-        return (
+        found.append(
             f"noise '{source.name}': in so short a gate so few noisy runs do not tell its devices "
-            "apart; more 'seeds' do, or by_device = true, which takes runs of each",
+            "apart; more 'seeds' do, or by_device = true, which takes runs of each"
         )
-    if source.devices_explain < EXPLAINED:
-        return (
-            f"noise '{source.name}': the parts of its devices explain {source.devices_explain:.0%} "
-            "of it only; by_device = true takes runs of each",
+    elif source.devices_explain < EXPLAINED:
+        found.append(
+            f"noise '{source.name}': the parts of its devices are rough, they explain "
+            f"{source.devices_explain:.0%} of its power; by_device = true takes runs of each"
         )
-    return ()
+    return tuple(found)
+
+
+def _mean(losses: FloatArray) -> tuple[float, float]:
+    """Give the mean over pairs of opposite sign, which are independent, and its error."""
+    pairs = losses.reshape(2, -1).mean(axis=0)
+    return float(pairs.mean()), float(pairs.std(ddof=1) / math.sqrt(pairs.size))
 
 
 def _with_added(nominal: Nominal, envelopes: Sequence[Envelope], volts: float) -> ComplexArray:
-    """Give V = U0^dag U for each envelope added to the drive, shape (envelopes, d, d)."""
+    """Give V = U0^dag U for each envelope added to the drive, then taken from it.
+
+    Noise of either sign is as likely, and so the mean of few runs turns nothing by itself; shape
+    (2 envelopes, d, d).
+    """
     added = np.array([CubicSpline(item.t, item.iq)(nominal.middles) for item in envelopes])
-    rate = nominal.rate + volts * nominal.turn * added
+    rate = nominal.rate + volts * nominal.turn * np.concatenate([added, -added])
     unitaries = propagate_batch(nominal.qubit, BatchDrive(nominal.step, rate)).unitaries
     return np.asarray(nominal.final.conj().T @ unitaries)

@@ -144,7 +144,8 @@ class NetlistNoise:
         Noise temperature in K of resistors, of channels, and of series resistances of transistors
         and diodes; None: the device temperature, which decks with cards fitted at 4 K have warmer.
     gamma : float or None
-        Excess factor of channels, which only "injection" takes; None: 2/3 there.
+        Excess factor of channels, which only "injection" takes; None: that of the simulator's
+        models, 2/3 of level 1 to 3.
     gammas : mapping of str to float
         The same of single devices, or of all of a model.
     by_device : bool

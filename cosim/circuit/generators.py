@@ -199,7 +199,7 @@ def _currents(
         return [NoiseCurrent(device.name, _between(device, (0, 1)), white, quiet, 1.0)]
     if device.kind in ("mos", "jfet"):
         carried = {"id": along(clean.vector(device, "id"))}
-        conducting = _channel(clean, settings, device)
+        conducting = channel_conductance(clean, settings, device)
         whites = {"id": thermal(CHANNEL) * settings.gamma_of(device) * along(conducting)}
         ends = {"id": _between(device, (0, 2))}
     else:
@@ -226,8 +226,25 @@ def _between(device: NoisyDevice, places: tuple[int, int]) -> tuple[str, str]:
     return device.nodes[first], device.nodes[second]
 
 
-def _channel(clean: CleanRun, settings: NoiseSettings, device: NoisyDevice) -> FloatArray:
-    """Give the conductance in S by which 4 k T gamma is multiplied."""
+def channel_conductance(
+    clean: CleanRun, settings: NoiseSettings, device: NoisyDevice
+) -> FloatArray:
+    """Give the conductance by which 4 k T gamma is multiplied.
+
+    Parameters
+    ----------
+    clean : CleanRun
+        The clean run.
+    settings : NoiseSettings
+        Which conductance is meant.
+    device : NoisyDevice
+        A field-effect transistor.
+
+    Returns
+    -------
+    ndarray, shape (n,)
+        In S.
+    """
     gm = np.abs(clean.vector(device, "gm"))
     if settings.channel == "transconductance":
         return gm

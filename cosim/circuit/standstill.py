@@ -83,20 +83,79 @@ def resting_noise(
     if probe.unit != "V":
         raise ProbeError(f"the noise around an operating point is of voltages, not of {probe.text}")
     still = deck_at_rest(clean, span)
+    band = _LOWEST * carrier_frequency, _HIGHEST * carrier_frequency
+    noise = small_signal_noise(clean, still, probe, band, _POINTS_PER_DECADE)
+    shift = _shift(clean, resting_run(clean, still), span)
+    return RestingNoise(at_noise_temperatures(noise, temperatures), shift)
+
+
+def small_signal_noise(
+    clean: CleanRun, still: Deck, probe: Probe, band: tuple[float, float], points_per_decade: int
+) -> NoiseResult:
+    """Analyse the noise of a deck around its operating point, at the temperature of a run.
+
+    Parameters
+    ----------
+    clean : CleanRun
+        The run.
+    still : Deck
+        From `deck_at_rest`, or with elements added to it.
+    probe : Probe
+        Of voltages.
+    band : tuple of two floats
+        Frequencies in Hz.
+    points_per_decade : int
+        Of the grid.
+
+    Returns
+    -------
+    NoiseResult
+        By device.
+
+    Raises
+    ------
+    DeckError, SimulationError
+        As `cosim.circuit.noise.simulate_noise`.
+    """
     deck, output, source = _with_output(still, probe)
     request = NoiseRequest(
         output,
         source,
-        _LOWEST * carrier_frequency,
-        _HIGHEST * carrier_frequency,
-        _POINTS_PER_DECADE,
+        *band,
+        points_per_decade,
         temperature=clean.request.temperature,
         seed=clean.request.seed,
         time_limit=clean.request.time_limit,
         by_device=True,
     )
-    noise = at_noise_temperatures(simulate_noise(deck, request), temperatures)
-    return RestingNoise(noise, _shift(clean, still, span))
+    return simulate_noise(deck, request)
+
+
+def resting_run(clean: CleanRun, still: Deck) -> CleanRun:
+    """Run a few steps of a deck whose sources stand still, for the bias of its devices.
+
+    Parameters
+    ----------
+    clean : CleanRun
+        The run from which it was made.
+    still : Deck
+        From `deck_at_rest`.
+
+    Returns
+    -------
+    CleanRun
+        At the operating point.
+
+    Raises
+    ------
+    DeckError, SimulationError
+        As `cosim.circuit.bias.clean_run`.
+    """
+    step = clean.request.step
+    request: TransientRequest = replace(
+        clean.request, stop=_STEPS * step, initial="op", output_step=None, saves=()
+    )
+    return clean_run(still, request, [probe.text for probe in clean.probes])
 
 
 def deck_at_rest(clean: CleanRun, span: tuple[float, float]) -> Deck:
@@ -183,12 +242,7 @@ def _with_output(deck: Deck, probe: Probe) -> tuple[Deck, str, str]:
     return replace(deck, lines=(*deck.lines, *added)), f"v({below})", f"v{end}"
 
 
-def _shift(clean: CleanRun, still: Deck, span: tuple[float, float]) -> dict[str, float]:
-    step = clean.request.step
-    request: TransientRequest = replace(
-        clean.request, stop=_STEPS * step, initial="op", output_step=None, saves=()
-    )
-    resting = clean_run(still, request, [probe.text for probe in clean.probes])
+def _shift(clean: CleanRun, resting: CleanRun, span: tuple[float, float]) -> dict[str, float]:
     found: dict[str, float] = {}
     for device in clean.inventory.devices:
         if device.kind != "resistor":
