@@ -393,12 +393,6 @@ def _mean(losses: FloatArray) -> tuple[float, float]:
     return float(pairs.mean()), float(pairs.std(ddof=1) / math.sqrt(pairs.size))
 
 
-def _mean(losses: FloatArray) -> tuple[float, float]:
-    """Give the mean over pairs of opposite sign, which are independent, and its error."""
-    pairs = losses.reshape(2, -1).mean(axis=0)
-    return float(pairs.mean()), float(pairs.std(ddof=1) / math.sqrt(pairs.size))
-
-
 def _with_added(nominal: Nominal, envelopes: Sequence[Envelope], volts: float) -> ComplexArray:
     """Give V = U0^dag U for each envelope added to the drive, then taken from it.
 
