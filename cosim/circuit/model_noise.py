@@ -2,11 +2,12 @@
 
 A resistor that conducts nothing beside a channel makes a known current between the same nets. The
 ratio of the two in a small-signal noise analysis is that of the currents, whatever the circuit
-makes of them. The operating points are those of sources frozen at a few instants of a run, and what
-counts is each device's noise over all of them: a device that is off adds nothing.
+makes of them. The operating points are those of sources frozen at a few instants of a run, and at
+some more for devices that conduct at none of them. What counts is each device's noise over all of
+them; of one that is off at all of them nothing is told, whatever its model says there.
 """
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -27,6 +28,8 @@ from cosim.waveform import FloatArray
 _BESIDE = 1e12  # ohm
 _BAND = (1e6, 1e7)  # Hz; the parts of a device are told apart at any frequency
 _LEAST = 1e-3  # of a device's greatest 1/f noise; less does not count for its law
+_CONDUCTS = 0.1  # of its greatest conductance along the run: what a device has that is on
+_FURTHER = 8  # instants that are added for devices that are off at the others
 _MISFIT = 0.2  # of a density, by which a law of the current may miss it
 
 
@@ -52,7 +55,7 @@ def with_models(
     settings : NoiseSettings
         What is given there by device or by model goes before what the models say.
     instants : sequence of float
-        Of the run, in s.
+        Of the run, in s; up to 8 more are added.
     gammas : bool
         Whether excess factors are taken; 1/f noise is in any case.
 
@@ -72,8 +75,9 @@ def with_models(
     wanted = [item for item in clean.inventory.devices if _is_unread(clean, item)]
     if not wanted:
         return settings
+    along = {item.name: channel_conductance(clean, settings, item) for item in wanted}
     points: dict[str, list[_Point]] = {device.name: [] for device in wanted}
-    for instant in instants:
+    for instant in _all_instants(clean, along, instants):
         still = deck_at_rest(clean, (instant, instant))
         for name, point in _points(clean, settings, still, wanted).items():
             points[name].append(point)
@@ -81,6 +85,9 @@ def with_models(
     laws: dict[str, Flicker] = {}
     for device in wanted:
         found = points[device.name]
+        least = _CONDUCTS * float(along[device.name].max())
+        if not any(point.conductance > least for point in found):
+            continue
         white = sum(point.white for point in found)
         conducting = sum(point.conductance for point in found)
         if white > 0.0 and conducting > 0.0:
@@ -104,6 +111,20 @@ def with_models(
         gammas=own | {name.lower(): value for name, value in settings.gammas.items()},
         flicker=slow | dict(settings.flicker),
     )
+
+
+def _all_instants(
+    clean: CleanRun, along: Mapping[str, FloatArray], instants: Sequence[float]
+) -> list[float]:
+    """Add instants at which devices conduct that conduct at none of those that are given."""
+    time = clean.result.time
+    found = list(instants)
+    for conductance in along.values():
+        there = np.interp(found, time, conductance)
+        off = float(np.max(there)) <= _CONDUCTS * float(conductance.max())
+        if off and len(found) < len(instants) + _FURTHER:
+            found.append(float(time[np.argmax(conductance)]))
+    return found
 
 
 def _is_unread(clean: CleanRun, device: NoisyDevice) -> bool:

@@ -83,6 +83,23 @@ def test_a_factor_is_the_mean_by_power() -> None:
         assert max(values) > 1.2 * min(values)  # the swing is wide enough for the mean to matter
 
 
+def test_a_device_that_is_off_at_the_instants_is_asked_where_it_conducts() -> None:
+    """Off, the model's noise over its conductance is hundreds; on, it is that of the channel."""
+    body = "v1 in 0 pulse(0 0.8 1n 10p 10p 0.3n)\nvd vdd 0 1.5\nrd vdd o 100\n"
+    body += f"m1 o in 0 0 n w=10u l=0.2u\n.model n nmos {BSIM4}"
+    run = run_of(body)
+    on, off, both = (
+        with_models(run, NoiseSettings(), instants, gammas=True)
+        for instants in ([1.2e-9], [0.5e-9], [0.5e-9, 1.2e-9])
+    )
+    assert 0.6 < on.gammas["m1"] < 1.0
+    # What it makes while it is off is nothing beside that, to 1e-6 and less.
+    assert both.gammas["m1"] == pytest.approx(on.gammas["m1"], rel=1e-6)
+    # The greatest conductance lies on the edge, where the overshoot through the gate differs.
+    assert off.gammas["m1"] == pytest.approx(on.gammas["m1"], rel=0.05)
+    assert off.flicker["m1"].coefficient == pytest.approx(on.flicker["m1"].coefficient, rel=0.05)
+
+
 def test_what_is_given_goes_first() -> None:
     run = run_of(STACK.format(BSIM4))
     law = Flicker(1e-12)
