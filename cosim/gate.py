@@ -22,7 +22,7 @@ from cosim.guards import (
 )
 from cosim.imported import every_second, import_waveform
 from cosim.line import through_line
-from cosim.neighbours import Neighbour, idle_effect, spectator_effects
+from cosim.neighbours import Neighbour, heating_warnings, idle_effect, spectator_effects
 from cosim.noise_setup import line_of_noise
 from cosim.quantum.channel import check_channel, nearest_unitary, pauli_transfer_matrix
 from cosim.quantum.fidelity import (
@@ -204,6 +204,7 @@ def run_gate(
         *twin_warnings(drive.carrier_frequency, drive.qubit.frequency, rotating_wave_error),
         *floor_warnings(calibrated, floor),
         *told,
+        *heating_warnings(noise.noises, drive, envelope.unit),
         *(text for item in neighbours for text in item.warnings),
         *idle_warnings,
     )

@@ -9,7 +9,7 @@ import numpy as np
 from cosim.adjust import Pulse
 from cosim.coupling import rate_per_unit
 from cosim.errors import InputError, TestbenchError
-from cosim.guards import level_warnings
+from cosim.guards import DOUBLE_TOLERANCE, level_warnings
 from cosim.noise_effect import NoisyGate
 from cosim.noise_setup import LineOfNoise
 from cosim.noises import VOLTAGES, AmplitudeNoise, DetuningNoise, Noise, PhaseNoise
@@ -251,6 +251,41 @@ def _left(envelope: Envelope, span: tuple[float, float]) -> float:
     return float(np.median(size)) if size.size else math.nan
 
 
+def heating_warnings(noises: Sequence[Noise], drive: QubitDrive, unit: str) -> tuple[str, ...]:
+    """Tell when a voltage added to the line may be what the testbench's t1 stands for already.
+
+    Parameters
+    ----------
+    noises : sequence of Noise
+        The tables [[noise]].
+    drive : QubitDrive
+        Of the gate.
+    unit : str
+        Of the probe.
+
+    Returns
+    -------
+    tuple of str
+        A warning for each that flips the qubit at more than a tenth of t1's rate.
+    """
+    if isinstance(drive.qubit, OperatorSystem) or drive.qubit.gamma_1 == 0.0:
+        return ()
+    slowest = 1.0 / (drive.window[1] - drive.window[0])
+    found = []
+    for place, noise in enumerate(noises, start=1):
+        rate = 0.0
+        if isinstance(noise, VOLTAGES):
+            level = _level(noise, drive, abs(drive.carrier_frequency - _frequency(drive)), slowest)
+            rate = 2.0 * _added_flips(drive, unit, level)
+        if rate > DOUBLE_TOLERANCE * drive.qubit.gamma_1:
+            found.append(
+                f"noise '{noise.name or f'noise {place}'}' alone relaxes the qubit at {rate:.3g} "
+                f"1/s, and the testbench's t1 at {drive.qubit.gamma_1:.3g} 1/s: the same noise may "
+                "be counted twice"
+            )
+    return tuple(found)
+
+
 def _rates(
     span: tuple[float, float],
     drive: QubitDrive,
@@ -260,27 +295,32 @@ def _rates(
 ) -> tuple[float, float]:
     """Give the rates in 1/s of flips, each way, and of dephasing, by the golden rule."""
     flips = dephasing = 0.0
-    volts = rate_per_unit(drive.line, unit)
     slowest = 1.0 / (span[1] - span[0])
     offset = abs(drive.carrier_frequency - _frequency(drive))
     for noise in noises:
-        density = noise.density(drive.carrier_frequency)
-        if density is None:
-            continue
-        # What is slower than one turn per stretch is no rate.
-        where = min(max(slowest, density.low), density.high)
         if isinstance(noise, DetuningNoise):
-            dephasing += float(density.at([where])[0]) / 4.0
-            continue
-        beside = min(max(offset, where), density.high)
-        level = float(density.at([beside])[0])
-        if isinstance(noise, VOLTAGES):
-            # Of each quadrature beside the carrier; of the voltage itself it is half of that.
-            flips += flip_rate(0.5 * volts**2 * level)
+            dephasing += _level(noise, drive, 0.0, slowest) / 4.0
+        elif isinstance(noise, VOLTAGES):
+            flips += _added_flips(drive, unit, _level(noise, drive, offset, slowest))
         elif isinstance(noise, (AmplitudeNoise, PhaseNoise)):
             # It has one quadrature, on what is left of the carrier.
-            flips += flip_rate(0.25 * (volts * left) ** 2 * level)
+            rate = left * rate_per_unit(drive.line, unit)
+            flips += flip_rate(0.25 * rate**2 * _level(noise, drive, offset, slowest))
     return flips, dephasing
+
+
+def _level(noise: Noise, drive: QubitDrive, frequency: float, slowest: float) -> float:
+    """Give the density at a frequency in Hz; what is slower than `slowest` is no rate."""
+    density = noise.density(drive.carrier_frequency)
+    if density is None:
+        return 0.0
+    where = min(max(frequency, slowest, density.low), density.high)
+    return float(density.at([where])[0])
+
+
+def _added_flips(drive: QubitDrive, unit: str, level: float) -> float:
+    # Of each quadrature beside the carrier; of the voltage itself it is half of that.
+    return flip_rate(0.5 * rate_per_unit(drive.line, unit) ** 2 * level)
 
 
 def _frequency(drive: QubitDrive) -> float:

@@ -230,6 +230,12 @@ def test_what_cannot_be_meant_is_refused(
         ),
         (
             ("", ""),
+            '[[noise]]\nacts_on = "probe"\nname = "out"\nwhite = "300 nV/sqrt(Hz)"',
+            # (2 pi 40 MHz/V)^2 9e-14 V^2/Hz, up and down, and 1/50 us.
+            "noise 'out' alone relaxes the qubit at 5.68e+03 1/s, and the testbench's t1 at 2e+04",
+        ),
+        (
+            ("", ""),
             '[[spectator]]\nkind = "spin"\noffset = "1 MHz"\nrabi_per_volt = "40 MHz/V"',
             "'spectator 1': it lies 1e+06 Hz from the carrier",
         ),
