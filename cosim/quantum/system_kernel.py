@@ -143,7 +143,9 @@ def _lose(growth: ComplexArray, x: ComplexArray, half: ComplexArray) -> None:
             total = 0j
             for n in range(d):
                 for m in range(d):
-                    total += growth[i + d * j, m + d * n] * x[m, n]
+                    # Losses of single qubits leave most elements zero.
+                    if growth[i + d * j, m + d * n] != 0:
+                        total += growth[i + d * j, m + d * n] * x[m, n]
             half[i, j] = total
     for i in range(d):
         for j in range(d):
