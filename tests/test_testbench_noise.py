@@ -22,6 +22,7 @@ rabi_per_volt = "85 MHz/V"
 [gate]
 target = "x90"
 """
+NETLIST = "acts_on = 'probe'\nfrom = 'netlist'\n"
 
 
 def bench(text: str) -> Testbench:
@@ -89,6 +90,17 @@ def test_what_is_constant_during_a_gate_has_a_spread() -> None:
         ("acts_on = 'detuning'\nwhit = '1 Hz^2/Hz'", "unknown key 'whit'"),
         ("acts_on = 'phase'\njitter = '1 ps'", "'jitter' and 'clock' go together"),
         ("acts_on = 'amplitude'\ndeviation = 0.0", "wanted more than 0"),
+        (NETLIST + "method = 'smal'", "key 'method'.*got 'smal'"),
+        (NETLIST + "method = 'stationary'\ngamma = 1.0", "go with injection, not with"),
+        (NETLIST + "method = 'frozen'\ngammas = { m1 = 1.0 }", "go with injection, not with"),
+        (NETLIST + "method = 'frozen'\nby_device = true", "go with injection, not with"),
+        (NETLIST + "instant = '3 ns'", "key 'instant' goes with method = \"frozen\""),
+        (NETLIST + "gammas = { 'm.x1.m1' = 0.0 }", r"key 'gammas\.m\.x1\.m1': wanted more than 0"),
+        (NETLIST + "gammas = { m1 = 'two' }", r"key 'gammas\.m1'.*got 'two'"),
+        (NETLIST + "gamma = 0.0", "key 'gamma': wanted more than 0"),
+        (NETLIST + "seeds = 1", "key 'seeds': wanted 2 to 100000, got 1"),
+        (NETLIST + "white = '1 V^2/Hz'", "unknown key 'white'"),
+        (NETLIST + "channel_temperature = '0 K'", "wanted more than 0 K"),
         ("acts_on = 'detuning'\nwhite = '1 Hz^2/Hz'\nlow = '2 Hz'\nhigh = '1 Hz'", "low < high"),
         ("acts_on = 'probe'\npoints = [['2 Hz', '1 V^2/Hz'], ['1 Hz', '1 V^2/Hz']]", "must rise"),
         ("acts_on = 'probe'\npoints = [['1 Hz', '1 V^2/Hz'], ['2 Hz', '-1 V^2/Hz']]", "positive"),
@@ -127,6 +139,17 @@ acts_on = "detuning"
 white = "1e3 Hz^2/Hz"
 flicker = "1e6 Hz^2/Hz"
 low = "1 mHz"
+[[noise]]
+acts_on = "probe"
+from = "netlist"
+method = "injection"
+gamma = 1.1
+gammas = { "m.x1.m1" = 0.9, nch = 1.2 }
+[[noise]]
+acts_on = "probe"
+from = "netlist"
+method = "frozen"
+instant = "3 ns"
 [[spectator]]
 kind = "transmon"
 name = "q2"

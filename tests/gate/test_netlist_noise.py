@@ -1,5 +1,6 @@
 """Oracle: closed forms of a circuit's noise (4kTR behind a pole, an ideal switch) at the qubit."""
 
+import json
 import math
 from collections.abc import Callable
 from pathlib import Path
@@ -8,9 +9,10 @@ from typing import Any
 import pytest
 from scipy import constants
 
+from cosim.dispatch import load, save
 from cosim.errors import TestbenchError, UnknownNameError
 from cosim.gate import run_gate
-from cosim.result import GateResult
+from cosim.result import GateResult, as_numbers
 from cosim.testbench import make_testbench
 from tests import sources
 from tests.validation import Validate
@@ -127,6 +129,21 @@ class TestJohnson:
         assert first == second
         assert first is not None
         assert first.infidelity > 0.0
+
+    def test_the_result_survives_a_file_and_says_all_to_machines(
+        self, run: Run, tmp_path: Path
+    ) -> None:
+        found = run(LOW_PASS, method="injection", seeds=2, name="devices")
+        save(found, tmp_path / "result.h5")
+        again = load(tmp_path / "result.h5")
+        assert isinstance(again, GateResult)
+        assert repr(again.noise) == repr(
+            found.noise
+        )  # a number that is none is not equal to itself
+        told = json.loads(json.dumps(as_numbers(found), allow_nan=False))["noise"]
+        assert told["noise_method"] == "injection"
+        assert told["sources"][0]["devices"] == {}
+        assert told["sources"][0]["devices_error"] is None  # so few runs do not tell
 
     def test_a_circuit_without_noise_costs_nothing(self, run: Run) -> None:
         found = run(LOW_PASS.replace("1k", "1k noisy=0"), method="stationary", samples=16).noise
