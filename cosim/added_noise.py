@@ -63,7 +63,11 @@ class Choice:
 
 
 def choose_method(
-    clean: CleanRun, noise: NetlistNoise, carrier_frequency: float, span: tuple[float, float]
+    clean: CleanRun,
+    noise: NetlistNoise,
+    carrier_frequency: float,
+    span: tuple[float, float],
+    instant: float,
 ) -> Choice:
     """Find out whether a circuit's noise is that of an operating point.
 
@@ -77,6 +81,8 @@ def choose_method(
         In Hz.
     span : tuple of two floats
         The stretch of the run in s that counts.
+    instant : float
+        At which "frozen" freezes it, in s.
 
     Returns
     -------
@@ -94,7 +100,6 @@ def choose_method(
         return Choice(INJECTION, "", None)
     temperatures = temperatures_of(noise)
     if noise.method == FROZEN:
-        instant = 0.5 * (span[0] + span[1]) if noise.instant is None else noise.instant
         if instant > clean.request.stop:
             raise TestbenchError(
                 f"[[noise]]{_named(noise)}, key 'instant': {format_quantity(instant, 's')} lies "

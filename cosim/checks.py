@@ -12,12 +12,14 @@ from cosim.circuit.preparation import prepare
 from cosim.circuit.simulator import simulator_version
 from cosim.gate import gate_target
 from cosim.imported import import_waveform
+from cosim.noisy_circuit import noise_settings
 from cosim.probe_run import estimate_run, try_deck
 from cosim.sweep.estimate import estimate_sweep
 from cosim.sweep.plan import SweepPlan
 from cosim.sweep.planning import make_sweep
 from cosim.testbench import Testbench, load_testbench
 from cosim.units import format_quantity
+from cosim.voltage_noises import NetlistNoise
 
 
 @dataclass(frozen=True, slots=True)
@@ -121,6 +123,9 @@ def _waveform_findings(bench: Testbench) -> list[Finding]:
 
 def _deck_findings(bench: Testbench, probe: bool) -> tuple[list[Finding], tuple[str, ...]]:
     plan = make_plan(bench)
+    for noise in bench.noise:
+        if isinstance(noise, NetlistNoise):
+            noise_settings(noise, plan.deck)
     request = plan.request
     resolve_saves(plan.deck, request.saves)
     prepared = prepare(plan.deck, request)

@@ -19,7 +19,7 @@ from cosim.dsp.noise.density import SpectralDensity
 from cosim.dsp.noise.paths import PathPlan, generator, plan_paths, sample_paths
 from cosim.errors import InputError, TestbenchError
 from cosim.guards import counting_warnings
-from cosim.netlist_noise import CircuitNoise, circuit_warnings, injected_noise, labelled
+from cosim.netlist_noise import circuit_warnings, injected_noise, labelled
 from cosim.noise_frame import (
     Nominal,
     channel_losses,
@@ -29,6 +29,7 @@ from cosim.noise_frame import (
 )
 from cosim.noise_spectra import noise_filters, noise_spectrum
 from cosim.noises import VOLTAGES, AmplitudeNoise, DetuningNoise, Noise, PhaseNoise
+from cosim.noisy_circuit import CircuitNoise
 from cosim.quantum.batch import propagate_batch
 from cosim.quantum.batch_drive import BatchDrive
 from cosim.quantum.filters import (

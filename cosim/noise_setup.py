@@ -4,9 +4,9 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 
 from cosim.capture import Plan
-from cosim.netlist_noise import CircuitNoise, circuit_noise
 from cosim.noise_effect import NoisyGate, noisy_gate
 from cosim.noises import DetuningNoise, Noise
+from cosim.noisy_circuit import CircuitNoise, circuit_noise
 from cosim.qubit_drive import QubitDrive
 from cosim.testbench import Testbench
 from cosim.voltage_noises import NetlistNoise

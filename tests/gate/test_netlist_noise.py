@@ -9,6 +9,7 @@ from typing import Any
 import pytest
 from scipy import constants
 
+from cosim.checks import check_testbench
 from cosim.dispatch import load, save
 from cosim.errors import TestbenchError, UnknownNameError
 from cosim.gate import run_gate
@@ -374,6 +375,35 @@ class TestChoice:
         found = run(body, rabi=1e9, samples=16).noise
         assert found is not None
         assert found.noise_method == "stationary"
-        both = run(body, rabi=1e9, seeds=2, gate={"idle": ["0 ns", "0.9 ns"]}).noise
+        rest = {"idle": ["0 ns", "1.9 ns"]}
+        both = run(body, rabi=1e9, seeds=2, gate=rest).noise
         assert both is not None
         assert both.noise_method == "injection"
+
+    def test_a_wrong_name_is_found_before_the_run(self, tmp_path: Path) -> None:
+        (tmp_path / "deck.cir").write_text(f"deck\n{AMPLIFIER.format('1m', 0)}\n.end\n")
+        text = """
+[netlist]
+file = "deck.cir"
+stop = "23 ns"
+[drive]
+probe = "v(out)"
+carrier = "1 GHz"
+termination = "in deck"
+[qubit]
+kind = "spin"
+frequency = "carrier"
+rabi_per_volt = "1 GHz/V"
+[gate]
+target = "x"
+[[noise]]
+acts_on = "probe"
+from = "netlist"
+gammas = { nn = 1.0 }
+"""
+        (tmp_path / "bench.toml").write_text(text)
+        with pytest.raises(UnknownNameError, match="noise of 'nn' is given"):
+            check_testbench(tmp_path / "bench.toml", probe=False)
+        (tmp_path / "bench.toml").write_text(text.replace("nn =", "n ="))
+        findings, _ = check_testbench(tmp_path / "bench.toml", probe=False)
+        assert findings[-1].name == "ready"

@@ -54,6 +54,7 @@ FLOORS = {
     "noise_spectra": 4,
     "netlist_noise": 4,
     "added_noise": 4,
+    "noisy_circuit": 4,
     "neighbours": 4,
     "side_results": 3,
     "checks": 6,
