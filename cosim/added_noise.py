@@ -167,10 +167,14 @@ def _at_rest(
         return found.sentence(), None
     try:
         resting = resting_noise(clean, probe, carrier_frequency, span, temperatures_of(noise))
-    except SimulationError as error:
+    except SimulationError:
         if asked:
             raise
-        return f"the simulator has no noise around an operating point: {error.message}", None
+        # Its message may quote a deck whose lines are not to be kept with a result.
+        return (
+            "the simulator finds no operating point of the circuit with its sources at rest",
+            None,
+        )
     found = check_stationarity(clean, *span, _shares(resting, carrier_frequency))
     return _verdict(found, resting)
 

@@ -174,10 +174,12 @@ def _anywhere(devices: Sequence[NoisyDevice]) -> Probe:
 
 
 def _law(points: Sequence[_Point]) -> Flicker | None:
-    """Fit a power of the current to 1/f noise; None where there is none, or it does not follow."""
-    most = max((float(point.slow[0]) for point in points), default=0.0)
+    """Fit a power of the current to 1/f noise; None where it follows none."""
+    most = max(float(point.slow[0]) for point in points)
+    if not most > 0.0:
+        return Flicker(0.0)
     counting = [point for point in points if point.slow[0] > _LEAST * most and point.current > 0.0]
-    if not most > 0.0 or not counting:
+    if not counting:
         return None
     exponents = [
         float(np.log(p.slow[0] / p.slow[1]) / np.log(_BAND[1] / _BAND[0])) for p in counting

@@ -10,8 +10,11 @@ import pytest
 from scipy import constants
 
 from cosim.checks import check_testbench
+from cosim.circuit import standstill
+from cosim.circuit.deck import Deck
+from cosim.circuit.noise import NoiseRequest, NoiseResult
 from cosim.dispatch import load, save
-from cosim.errors import TestbenchError, UnknownNameError
+from cosim.errors import ConvergenceError, TestbenchError, UnknownNameError
 from cosim.gate import run_gate
 from cosim.result import GateResult, as_numbers
 from cosim.testbench import make_testbench
@@ -300,6 +303,9 @@ m1 out in 0 0 n w=10u l=1u
 .model n nmos level=1 vto=0.4 kp=600u tox=5n kf={}"""
 
 
+BSIM4 = "level=14 vth0=0.4 toxe=2n"
+
+
 class TestChoice:
     def test_an_amplifier_of_small_signals(self, run: Run) -> None:
         found = run(AMPLIFIER.format("1m", 0), rabi=1e9, samples=16).noise
@@ -329,6 +335,37 @@ class TestChoice:
         assert "change with time: s1" in found.sources[0].reason
         with pytest.raises(TestbenchError, match="change with time: s1"):
             run(body, method="stationary")
+
+    def test_a_circuit_without_an_operating_point(
+        self, run: Run, monkeypatch: pytest.MonkeyPatch
+    ) -> None:
+        def fails(deck: Deck, request: NoiseRequest) -> NoiseResult:
+            raise ConvergenceError("no solution of a line that is not to be kept")
+
+        monkeypatch.setattr(standstill, "simulate_noise", fails)
+        body = AMPLIFIER.format("1m", 0).replace("level=1 vto=0.4 kp=600u tox=5n kf=0", BSIM4)
+        found = run(body, rabi=1e8, seeds=2)
+        assert found.noise is not None
+        assert found.noise.noise_method == "injection"
+        assert "no operating point of the circuit" in found.noise.sources[0].reason
+        (told,) = (text for text in found.warnings if "excess factors are taken for 2/3" in text)
+        assert "not to be kept" not in told + found.noise.sources[0].reason
+        assert found.noise.sources[0].left_out == ("m.x1.m1: the 1/f noise of its model 'n'",)
+        with pytest.raises(ConvergenceError, match="no solution"):
+            run(body, method="stationary")
+
+    def test_models_are_asked_for_their_channels(self, run: Run) -> None:
+        """1/f noise of a card at the gate counts: it moves the gain in the run of each seed."""
+        body = AMPLIFIER.format("50m", 0)
+        quiet, loud = (
+            run(body.replace("level=1 vto=0.4 kp=600u tox=5n kf=0", model), rabi=1e8, seeds=2).noise
+            for model in (f"{BSIM4} fnoimod=0", f"{BSIM4} fnoimod=0 kf=1e-18")
+        )
+        assert quiet is not None
+        assert loud is not None
+        assert quiet.noise_method == loud.noise_method == "injection"
+        assert quiet.sources[0].left_out == loud.sources[0].left_out == ()
+        assert loud.infidelity > 10 * quiet.infidelity
 
     def test_excess_factors(self, run: Run) -> None:
         body = AMPLIFIER.format("1m", 0)
