@@ -17,7 +17,7 @@ from cosim.probe_run import estimate_run, try_deck
 from cosim.sweep.estimate import estimate_sweep
 from cosim.sweep.plan import SweepPlan
 from cosim.sweep.planning import make_sweep
-from cosim.testbench import Testbench, load_testbench
+from cosim.testbench import Testbench, gate_bench, load_testbench
 from cosim.units import format_quantity
 from cosim.voltage_noises import NetlistNoise
 
@@ -73,7 +73,7 @@ def check_testbench(
     MissingDependencyError
         If ngspice is not installed.
     """
-    bench = load_testbench(path)
+    bench = gate_bench(load_testbench(path))
     target = gate_target(bench)
     found = [
         Finding("testbench", f"{path}: {bench.title}", "testbench", str(path)),

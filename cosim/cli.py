@@ -36,7 +36,7 @@ from cosim.sweep_cli import (
 )
 
 if TYPE_CHECKING:
-    from cosim.testbench import Testbench
+    from cosim.testbench import Bench
 
 app = typer.Typer(
     add_completion=False,
@@ -285,7 +285,7 @@ for _command, _example in COMMANDS:
 
 
 @contextmanager
-def _progress(bench: "Testbench") -> Iterator[Callable[[float], None] | None]:
+def _progress(bench: "Bench") -> Iterator[Callable[[float], None] | None]:
     """Show the simulated time on a terminal; keep quiet elsewhere."""
     console = Console(stderr=True)
     if not console.is_terminal:

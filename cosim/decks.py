@@ -15,15 +15,15 @@ from cosim.circuit.netlist import (
 )
 from cosim.errors import TestbenchError
 from cosim.schema import NetlistTable
-from cosim.testbench import Testbench
+from cosim.testbench import Bench
 
 
-def read_deck(bench: Testbench) -> Deck:
+def read_deck(bench: Bench) -> Deck:
     """Read the deck of a testbench with the sections that it names; nothing else is changed.
 
     Parameters
     ----------
-    bench : Testbench
+    bench : Bench
         The testbench.
 
     Returns
@@ -58,12 +58,12 @@ def read_deck(bench: Testbench) -> Deck:
     )
 
 
-def altered_deck(bench: Testbench, deck: Deck) -> Deck:
+def altered_deck(bench: Bench, deck: Deck) -> Deck:
     """Apply a testbench's parameters, instances and mismatch to its deck.
 
     Parameters
     ----------
-    bench : Testbench
+    bench : Bench
         The testbench.
     deck : Deck
         From `read_deck`.
@@ -87,12 +87,12 @@ def altered_deck(bench: Testbench, deck: Deck) -> Deck:
     return with_mismatch(deck, shifts)
 
 
-def roots_of(bench: Testbench) -> Roots:
+def roots_of(bench: Bench) -> Roots:
     """Look at the folders of a testbench whose files are confidential.
 
     Parameters
     ----------
-    bench : Testbench
+    bench : Bench
         The testbench.
 
     Returns
@@ -110,12 +110,12 @@ def roots_of(bench: Testbench) -> Roots:
     return confidential_roots([str(_under(folder, path, "confidential")) for path in named])
 
 
-def netlist_of(bench: Testbench) -> NetlistTable:
+def netlist_of(bench: Bench) -> NetlistTable:
     """Give the table [netlist] of a testbench.
 
     Parameters
     ----------
-    bench : Testbench
+    bench : Bench
         The testbench.
 
     Returns

@@ -8,11 +8,11 @@ from cosim.errors import ArchiveError
 from cosim.gate import run_gate
 from cosim.quantum.operators import OperatorSystem
 from cosim.result import KINDS, GateResult
-from cosim.testbench import Testbench, load_testbench
+from cosim.testbench import Bench, gate_bench, load_testbench
 
 
 def run(
-    bench: Testbench | str | os.PathLike[str],
+    bench: Bench | str | os.PathLike[str],
     *,
     system: OperatorSystem | None = None,
     progress: Callable[[float], None] | None = None,
@@ -40,8 +40,7 @@ def run(
     SimulationError
         If ngspice or the evolution fails.
     """
-    if not isinstance(bench, Testbench):
-        bench = load_testbench(bench)
+    bench = gate_bench(bench if isinstance(bench, Bench) else load_testbench(bench))
     return run_gate(bench, system=system, progress=progress)
 
 

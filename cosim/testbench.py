@@ -10,6 +10,7 @@ from typing import Any
 from cosim.config import check_keys, read_table, read_toml
 from cosim.errors import TestbenchError, near_names
 from cosim.noises import Noise, read_noises
+from cosim.readout_schema import READOUT_TABLES, ReadoutTable, ResonatorTable, SensorTable
 from cosim.schema import (
     SOURCES,
     TABLES,
@@ -30,25 +31,27 @@ ARRAYS = ("stimulus", "noise", "spectator")
 # Tables of the studies: each study reads its own, when it is asked for.
 STUDIES = ("sweep",)
 
+# What [readout] takes from the tables of a gate.
+_SHARED = ("netlist", "accuracy")
+_ALL = (*TABLES, *READOUT_TABLES, *ARRAYS, *STUDIES)
 
-@dataclass(frozen=True, slots=True)
-class Testbench:
-    """A testbench with all that a run needs.
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Bench:
+    """What testbenches of every kind have.
 
     Parameters
     ----------
     title : str
         A line for people.
-    netlist, waveform
-        Where the waveform comes from; one of the two is None.
-    drive, qubit, gate, accuracy
-        The other tables, in SI units.
+    netlist : NetlistTable or None
+        The deck; None where a waveform is imported.
+    accuracy : AccuracyTable
+        What is spent on error bars, in SI units.
     stimulus : tuple of Stimulus
         The tables [[stimulus]], in SI units; only with a netlist.
     noise : tuple of Noise
         The tables [[noise]], in SI units.
-    spectator : tuple of SpectatorTable
-        The tables [[spectator]], in SI units.
     sweep : mapping
         The table [sweep] as it was given; `cosim.sweep.table` reads it.
     folder : str
@@ -59,18 +62,11 @@ class Testbench:
         The deck's text when it came as a PySpice `Circuit`; else empty.
     """
 
-    __test__ = False  # The name starts with "Test"; pytest must not collect it.
-
     title: str
     netlist: NetlistTable | None
-    waveform: WaveformTable | None
-    drive: DriveTable
-    qubit: QubitTable
-    gate: GateTable
     accuracy: AccuracyTable
     stimulus: tuple[Stimulus, ...] = ()
     noise: tuple[Noise, ...] = ()
-    spectator: tuple[SpectatorTable, ...] = ()
     sweep: Mapping[str, Any] = field(default_factory=dict)
     folder: str = "."
     source: str = ""
@@ -78,12 +74,58 @@ class Testbench:
 
     def to_toml(self) -> str:
         """Write the testbench as a TOML text that gives the same run again."""
-        tables = {name: getattr(self, name) for name in (*TABLES, *ARRAYS, *STUDIES)}
+        tables = {name: getattr(self, name, None) for name in _ALL}
         given = {name: table for name, table in tables.items() if table not in (None, (), {})}
         return write_tables(self.title, given)
 
 
-def load_testbench(path: str | os.PathLike[str]) -> Testbench:
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Testbench(Bench):
+    """A testbench of a gate, with all that a run needs.
+
+    Parameters
+    ----------
+    title, netlist, accuracy, stimulus, noise, sweep, folder, source, circuit
+        As in `Bench`.
+    waveform : WaveformTable or None
+        Where the waveform comes from when there is no netlist.
+    drive, qubit, gate
+        The other tables, in SI units.
+    spectator : tuple of SpectatorTable
+        The tables [[spectator]], in SI units.
+    """
+
+    __test__ = False  # The name starts with "Test"; pytest must not collect it.
+
+    waveform: WaveformTable | None
+    drive: DriveTable
+    qubit: QubitTable
+    gate: GateTable
+    spectator: tuple[SpectatorTable, ...] = ()
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class ReadoutBench(Bench):
+    """A testbench of a readout, with all that a run needs.
+
+    Parameters
+    ----------
+    title, netlist, accuracy, stimulus, noise, sweep, folder, source, circuit
+        As in `Bench`; there is always a netlist.
+    resonator : ResonatorTable or None
+        What answers, in SI units.
+    sensor : SensorTable or None
+        In its place, a charge sensor in the deck.
+    readout : ReadoutTable
+        The way in and out, in SI units.
+    """
+
+    resonator: ResonatorTable | None
+    sensor: SensorTable | None
+    readout: ReadoutTable
+
+
+def load_testbench(path: str | os.PathLike[str]) -> Testbench | ReadoutBench:
     """Read a testbench file.
 
     Parameters
@@ -93,8 +135,8 @@ def load_testbench(path: str | os.PathLike[str]) -> Testbench:
 
     Returns
     -------
-    Testbench
-        Quantities in SI units.
+    Testbench or ReadoutBench
+        With [gate] or with [readout]; quantities in SI units.
 
     Raises
     ------
@@ -105,7 +147,9 @@ def load_testbench(path: str | os.PathLike[str]) -> Testbench:
     return _build(read_toml(file), file=str(file), folder=str(file.parent))
 
 
-def make_testbench(tables: Mapping[str, Any], *, folder: str | os.PathLike[str] = ".") -> Testbench:
+def make_testbench(
+    tables: Mapping[str, Any], *, folder: str | os.PathLike[str] = "."
+) -> Testbench | ReadoutBench:
     """Make a testbench from Python.
 
     Parameters
@@ -118,8 +162,8 @@ def make_testbench(tables: Mapping[str, Any], *, folder: str | os.PathLike[str] 
 
     Returns
     -------
-    Testbench
-        Quantities in SI units.
+    Testbench or ReadoutBench
+        With [gate] or with [readout]; quantities in SI units.
 
     Raises
     ------
@@ -129,56 +173,114 @@ def make_testbench(tables: Mapping[str, Any], *, folder: str | os.PathLike[str] 
     return _build(tables, file="", folder=str(folder))
 
 
-def _build(tables: Mapping[str, Any], *, file: str, folder: str) -> Testbench:
+def gate_bench(bench: Bench) -> Testbench:
+    """Insist on a testbench of a gate.
+
+    Parameters
+    ----------
+    bench : Bench
+        Of either kind.
+
+    Returns
+    -------
+    Testbench
+        The same.
+
+    Raises
+    ------
+    TestbenchError
+        If it is one of a readout.
+    """
+    if not isinstance(bench, Testbench):
+        raise TestbenchError(
+            f"{bench.source or 'the testbench'} has [readout]; this takes a testbench with [gate]"
+        )
+    return bench
+
+
+def _build(tables: Mapping[str, Any], *, file: str, folder: str) -> Testbench | ReadoutBench:
     label = file or "the testbench"
-    known = (*TABLES, *ARRAYS, *STUDIES)
     for name in tables:
-        if isinstance(tables[name], Mapping) and name not in known:
-            raise TestbenchError(f"{label}: unknown table [{name}]; {near_names(name, known)}")
-    check_keys(tables, ["title", *known], label)
+        if isinstance(tables[name], Mapping) and name not in _ALL:
+            raise TestbenchError(f"{label}: unknown table [{name}]; {near_names(name, _ALL)}")
+    readout = "readout" in tables
+    kinds = {name: TABLES[name] for name in _SHARED} | READOUT_TABLES if readout else TABLES
+    arrays = tuple(name for name in ARRAYS if not readout or name != "spectator")
+    _check_kind(tables, readout, (*kinds, *arrays, *STUDIES), label)
     title = tables.get("title", "")
     if not isinstance(title, str):
         raise TestbenchError(f"{label}: 'title' is a text, got {title!r}")
-    for name in ("drive", "qubit", "gate"):
-        if name not in tables:
-            raise TestbenchError(f"{label}: the table [{name}] is missing")
-    sources = [name for name in SOURCES if name in tables]
-    if len(sources) != 1:
-        raise TestbenchError(
-            f"{label}: wanted one of the tables [netlist] and [waveform], got "
-            f"{'both' if sources else 'none'}"
-        )
     given, circuit = _with_circuit(tables, label)
-    parts: dict[str, Any] = {name: None for name in SOURCES}
-    for name, cls in TABLES.items():
-        if name in sources or name not in SOURCES:
+    parts: dict[str, Any] = dict.fromkeys((*SOURCES, "resonator", "sensor"))
+    for name, cls in kinds.items():
+        if name in given or name not in parts:
             parts[name] = read_table(given.get(name, {}), cls, file=label, name=name)
+    stimulus = read_stimuli(tables.get("stimulus", []), file=label)
+    noise = read_noises(tables.get("noise", []), file=label)
+    sweep = tables.get("sweep", {})
+    if not isinstance(sweep, Mapping):
+        raise TestbenchError(f"{label}: wanted a table [sweep], got {sweep!r}")
+    common: dict[str, Any] = {
+        "title": title,
+        "stimulus": stimulus,
+        "noise": noise,
+        "sweep": copy.deepcopy(dict(sweep)),
+        "folder": folder,
+        "source": file,
+        "circuit": circuit,
+        **{name: part for name, part in parts.items() if name in kinds},
+    }
+    if readout:
+        return _readout_bench(common, label)
+    if stimulus and parts["netlist"] is None:
+        raise TestbenchError(
+            f"{label}: a table [[stimulus]] drives a source of a deck, but there is no [netlist]"
+        )
     if parts["netlist"] is not None and parts["drive"].termination is None:
         raise TestbenchError(
             f"{label}, table [drive]: the key 'termination' is missing",
             hint='say termination = "50 ohm", or "in deck" where the deck has the load',
         )
-    stimulus = read_stimuli(tables.get("stimulus", []), file=label)
-    if stimulus and parts["netlist"] is None:
+    return Testbench(**common, spectator=_read_spectators(tables.get("spectator", []), label))
+
+
+def _check_kind(tables: Mapping[str, Any], readout: bool, known: Sequence[str], label: str) -> None:
+    """Refuse tables of the other kind of testbench, and miss those of its own."""
+    other = [name for name in _ALL if name in tables and name not in known]
+    if other and readout:
+        raise TestbenchError(f"{label}: the table [{other[0]}] does not go with [readout]")
+    check_keys(tables, ["title", *known, *other], label)
+    if other:
+        raise TestbenchError(f"{label}: the table [{other[0]}] goes with [readout] only")
+    for name in ("netlist", "readout") if readout else ("drive", "qubit", "gate"):
+        if name not in tables:
+            raise TestbenchError(f"{label}: the table [{name}] is missing")
+    sources = [name for name in SOURCES if name in tables]
+    if not readout and len(sources) != 1:
         raise TestbenchError(
-            f"{label}: a table [[stimulus]] drives a source of a deck, but there is no [netlist]"
+            f"{label}: wanted one of the tables [netlist] and [waveform], got "
+            f"{'both' if sources else 'none'}"
         )
-    noise = read_noises(tables.get("noise", []), file=label)
-    spectator = _read_spectators(tables.get("spectator", []), label)
-    sweep = tables.get("sweep", {})
-    if not isinstance(sweep, Mapping):
-        raise TestbenchError(f"{label}: wanted a table [sweep], got {sweep!r}")
-    return Testbench(
-        title=title,
-        **parts,
-        stimulus=stimulus,
-        noise=noise,
-        spectator=spectator,
-        sweep=copy.deepcopy(dict(sweep)),
-        folder=folder,
-        source=file,
-        circuit=circuit,
-    )
+
+
+def _readout_bench(parts: Mapping[str, Any], label: str) -> ReadoutBench:
+    bench = ReadoutBench(**parts)
+    if (bench.resonator is None) == (bench.sensor is None):
+        raise TestbenchError(
+            f"{label}: wanted one of the tables [resonator] and [sensor], got "
+            f"{'none' if bench.resonator is None else 'both'}"
+        )
+    if bench.resonator is not None and bench.readout.source is None:
+        raise TestbenchError(
+            f"{label}, table [readout]: the key 'source' is missing",
+            hint='name the voltage source that the resonator\'s answer replaces, such as "Vin"',
+        )
+    if bench.sensor is not None and bench.readout.source is not None:
+        raise TestbenchError(
+            f"{label}, table [readout]: with a [sensor] the deck has its own sources, and the key "
+            "'source' has no place"
+        )
+    return bench
 
 
 def _read_spectators(tables: object, file: str) -> tuple[SpectatorTable, ...]:

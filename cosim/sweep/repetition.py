@@ -15,7 +15,7 @@ from cosim.sweep.batches import DONE
 from cosim.sweep.plan import SweepPlan
 from cosim.sweep.planning import make_sweep
 from cosim.sweep.record import SWEEP_KINDS, SweepRecord, check_same_plan, make_sweep_record
-from cosim.testbench import load_testbench, make_testbench
+from cosim.testbench import gate_bench, load_testbench, make_testbench
 
 # Two computers round differently in their mathematical libraries; anything larger is a difference.
 ROUNDING = 1e-9
@@ -103,9 +103,10 @@ def archived_plan(
     """
     record = read_record(path)
     if testbench is not None:
-        bench = load_testbench(testbench)
+        bench = gate_bench(load_testbench(testbench))
     else:
-        bench = make_testbench(tomllib.loads(record.testbench), folder=record.folder)
+        tables = tomllib.loads(record.testbench)
+        bench = gate_bench(make_testbench(tables, folder=record.folder))
         bench = replace(bench, source=record.source, circuit=record.circuit)
     plan = make_sweep(bench)
     check_same_plan(record, make_sweep_record(plan, bench), os.fspath(path))

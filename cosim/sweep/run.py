@@ -24,7 +24,7 @@ from cosim.sweep.plan import SweepPlan
 from cosim.sweep.planning import make_sweep
 from cosim.sweep.record import SWEEP_KINDS, SweepRecord, check_same_plan, make_sweep_record
 from cosim.sweep.work import ALL, Shared, failed_row, run_batch
-from cosim.testbench import Testbench, load_testbench
+from cosim.testbench import Bench, Testbench, gate_bench, load_testbench
 
 FLUSH_INTERVAL = 2.0  # s: what is lost at most when the process is killed
 FLUSH_ROWS = 256
@@ -117,8 +117,7 @@ def run_sweep(
     SimulationError
         If the engine fails; a run that fails is a row of the archive, and no error.
     """
-    if not isinstance(bench, Testbench):
-        bench = load_testbench(bench)
+    bench = gate_bench(bench if isinstance(bench, Bench) else load_testbench(bench))
     plan = make_sweep(bench)
     record = make_sweep_record(plan, bench)
     target = Path(path)

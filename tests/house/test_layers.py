@@ -56,6 +56,7 @@ FLOORS = {
     "added_noise": 4,
     "noisy_circuit": 4,
     "neighbours": 4,
+    "readout_schema": 3,
     "side_results": 3,
     "checks": 6,
     "noise_figures": 6,

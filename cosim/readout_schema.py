@@ -1,0 +1,294 @@
+"""The tables of a testbench with a readout as frozen dataclasses in SI units."""
+
+import math
+from dataclasses import dataclass
+from typing import Annotated, Literal
+
+from cosim.config import Quantity
+from cosim.errors import InputError
+from cosim.schema import (
+    DecayTime,
+    Frequency,
+    PositiveFrequency,
+    PositiveTime,
+    Resistance,
+    Temperature,
+    Time,
+)
+
+Stage = tuple[Annotated[float, Quantity("dB", least=0.0)], Temperature]
+Rate = Annotated[float, Quantity("Hz", least=0.0)]
+
+
+@dataclass(frozen=True, slots=True)
+class ResonatorTable:
+    """Table [resonator]: what answers, and the pulse that asks it.
+
+    Parameters
+    ----------
+    geometry : "reflection", "transmission" or "hanger"
+        How the resonator meets its line.
+    frequency : float
+        Midway between the resonances for |0> and |1>, in Hz.
+    kappa_in, kappa_out, kappa_internal : float
+        Decay rates over 2 pi in Hz: to the input, to the output, and inside. In reflection the one
+        port is `kappa_out`; of a hanger `kappa_out` counts both directions.
+    chi : float
+        Half of the difference of the resonances for |1> and |0> over 2 pi, in Hz: negative for a
+        transmon below its resonator.
+    chi_2 : float or None
+        Shift of the resonance for |2> from `frequency`, in Hz.
+    drive_frequency : float or None
+        In Hz; default: `frequency`.
+    photons : float or None
+        Photons in the resonator in steady state, the mean of those for |0> and |1>.
+    power : float or None
+        In place of `photons`: power at the resonator's input in dBm.
+    start, length : float
+        Of the pulse, in s.
+    edge : float
+        Duration of its edges in s: raised cosines that begin at `start` and end with the pulse.
+    boost : float
+        Factor on the pulse's field over its first part, which fills the resonator faster.
+    boost_length : float
+        Duration of that part in s.
+    qubit_frequency, coupling, anharmonicity : float or None
+        The qubit's own, in Hz: what the critical photon number, the decay through the resonator
+        and the sign of `chi` are judged by.
+    """
+
+    geometry: Literal["reflection", "transmission", "hanger"]
+    frequency: PositiveFrequency
+    kappa_out: Annotated[float, Quantity("Hz", above=0.0)]
+    chi: Frequency
+    start: Time
+    length: PositiveTime
+    kappa_in: Rate = 0.0
+    kappa_internal: Rate = 0.0
+    chi_2: Frequency | None = None
+    drive_frequency: PositiveFrequency | None = None
+    photons: float | None = None
+    power: Annotated[float, Quantity("dBm", least=-300.0, most=60.0)] | None = None
+    edge: Annotated[float, Quantity("s", least=0.0)] = 0.0
+    boost: float = 1.0
+    boost_length: Annotated[float, Quantity("s", least=0.0)] = 0.0
+    qubit_frequency: PositiveFrequency | None = None
+    coupling: PositiveFrequency | None = None
+    anharmonicity: Frequency | None = None
+
+    def __post_init__(self) -> None:
+        if self.chi == 0.0:
+            raise InputError(
+                "key 'chi': with 0 Hz the resonator answers alike for |0> and |1>, so that there "
+                "is nothing to read"
+            )
+        if self.geometry == "transmission" and self.kappa_in == 0.0:
+            raise InputError("a resonator in transmission needs the key 'kappa_in'")
+        if self.geometry != "transmission" and self.kappa_in != 0.0:
+            raise InputError(
+                f"a resonator in {self.geometry} has one port, of rate 'kappa_out'; 'kappa_in' "
+                "belongs to transmission"
+            )
+        if (self.photons is None) == (self.power is None):
+            raise InputError("give 'photons' or 'power', one of them")
+        if self.photons is not None and not 0.0 < self.photons <= 1e6:
+            raise InputError(f"key 'photons': wanted more than 0, got {self.photons:g}")
+        if 2.0 * self.edge > self.length:
+            raise InputError(
+                f"key 'edge': both edges take longer than the pulse of {self.length:g} s"
+            )
+        if not 0.0 < self.boost <= 100.0:
+            raise InputError(f"key 'boost': wanted more than 0 and at most 100, got {self.boost:g}")
+        if self.boost_length > self.length:
+            raise InputError("key 'boost_length': wanted at most the pulse's 'length'")
+        if (self.coupling is None) != (self.qubit_frequency is None):
+            raise InputError("'qubit_frequency' and 'coupling' go together")
+
+    @property
+    def drive(self) -> float:
+        """Frequency of the drive in Hz."""
+        return self.frequency if self.drive_frequency is None else self.drive_frequency
+
+
+@dataclass(frozen=True, slots=True)
+class SensorTable:
+    """Table [sensor]: a charge sensor whose state is a number in the deck.
+
+    Parameters
+    ----------
+    parameter : str
+        The deck's .param that takes the value.
+    value_0, value_1 : float
+        Its values for |0> and |1>, in SI units.
+    event : float
+        Time in s at which the state may begin to show: the start of the conversion to charge.
+    tunnel_time : float
+        Mean time in s in which |1> tunnels, and then looks like `value_1`; 0: at once.
+    return_time : float
+        Mean time in s after which it has gone back to `value_0`.
+    edge : float
+        Duration in s over which the value changes.
+    """
+
+    parameter: str
+    value_0: float
+    value_1: float
+    event: Time = 0.0
+    tunnel_time: Annotated[float, Quantity("s", least=0.0)] = 0.0
+    return_time: DecayTime = math.inf
+    edge: PositiveTime = 1e-9
+
+    def __post_init__(self) -> None:
+        if self.value_0 == self.value_1:
+            raise InputError("'value_0' and 'value_1' are equal, so that there is nothing to read")
+
+
+@dataclass(frozen=True, slots=True)
+class ReadoutTable:
+    """Table [readout]: the way into the netlist, what is read of it, and how it is judged.
+
+    Parameters
+    ----------
+    window : tuple of two floats
+        Start and end in s of the integration.
+    source : str or None
+        The deck's voltage source that the resonator's answer replaces: an EMF behind the
+        impedance that stands in the deck. Not needed with a [sensor].
+    source_q : str or None
+        The source of Q, where the answer enters as a baseband pair.
+    signal : "rf", "if" or "baseband"
+        At which frequency it enters: the drive's, `intermediate_frequency`, or as a pair.
+    intermediate_frequency : float or None
+        In Hz, for "if".
+    impedance : float
+        Z0 of the line in ohm.
+    stages : tuple of (float, float)
+        Attenuators between resonator and netlist: dB and temperature in K, from the resonator on.
+    gain : float
+        Of an amplifier in front of the netlist, after them, in dB.
+    noise_temperature : float
+        Of that amplifier at its input, in K.
+    probe : str or None
+        Output at `output_frequency`, or in baseband where that is not given.
+    i, q : str or None
+        In place of `probe`: outputs I and Q in baseband.
+    decision : str or None
+        In place of both: a node that stands for the circuit's own decision.
+    output_frequency : float or None
+        Frequency of `probe` in Hz.
+    threshold : float or None
+        Level in V that `decision` is compared with.
+    decide_at : float or None
+        Time in s at which it is read; default: the end of the window.
+    output_rate : float or None
+        Rate in Hz at which records are kept; default: that of the converter, else 400 samples in
+        the window.
+    weights : "boxcar" or "matched"
+        How the record is weighted before it is summed.
+    adc_bits : int or None
+        Bits of the converter; None: none.
+    adc_full_scale : float or None
+        Peak-to-peak range of the converter in V.
+    adc_rate : float or None
+        Its rate in Hz.
+    t1 : float
+        Decay time of |1> in s during the readout.
+    thermal_population : float
+        Of |1> in equilibrium: excites |0> at thermal_population/t1.
+    preparation_error : float
+        Probability that the state prepared is the other one.
+    decay_times : int
+        Simulated times of decay.
+    shots, records : int
+        Integrated shots, and shots as whole records in time.
+    seed : int
+        Of all that is random.
+    """
+
+    window: tuple[Time, Time]
+    source: str | None = None
+    source_q: str | None = None
+    signal: Literal["rf", "if", "baseband"] = "rf"
+    intermediate_frequency: PositiveFrequency | None = None
+    impedance: Resistance = 50.0
+    stages: tuple[Stage, ...] = ()
+    gain: Annotated[float, Quantity("dB", least=-200.0, most=200.0)] = 0.0
+    noise_temperature: Annotated[float, Quantity("K", least=0.0)] = 0.0
+    probe: str | None = None
+    i: str | None = None
+    q: str | None = None
+    decision: str | None = None
+    output_frequency: PositiveFrequency | None = None
+    threshold: Annotated[float, Quantity("V")] | None = None
+    decide_at: Time | None = None
+    output_rate: PositiveFrequency | None = None
+    weights: Literal["boxcar", "matched"] = "matched"
+    adc_bits: int | None = None
+    adc_full_scale: Annotated[float, Quantity("V", above=0.0)] | None = None
+    adc_rate: PositiveFrequency | None = None
+    t1: DecayTime = math.inf
+    thermal_population: float = 0.0
+    preparation_error: float = 0.0
+    decay_times: int = 6
+    shots: int = 1_000_000
+    records: int = 20_000
+    seed: int = 1
+
+    def __post_init__(self) -> None:
+        start, stop = self.window
+        if start >= stop:
+            raise InputError(
+                f"key 'window': the end must come after the start, got {start:g} s to {stop:g} s"
+            )
+        self._check_input()
+        self._check_output()
+        self._check_converter()
+        for name in ("thermal_population", "preparation_error"):
+            value = getattr(self, name)
+            if not 0.0 <= value <= 0.5:
+                raise InputError(f"key '{name}': wanted 0 to 0.5, got {value:g}")
+        for name, least, most in (
+            ("decay_times", 2, 1000),
+            ("shots", 1000, 10**8),
+            ("records", 100, 10**6),
+        ):
+            value = getattr(self, name)
+            if not least <= value <= most:
+                raise InputError(f"key '{name}': wanted {least} to {most}, got {value}")
+        if not 0 <= self.seed < 2**63:
+            raise InputError(f"key 'seed': wanted 0 to 2**63 - 1, got {self.seed}")
+
+    def _check_input(self) -> None:
+        if (self.signal == "if") != (self.intermediate_frequency is not None):
+            raise InputError("'intermediate_frequency' goes with signal = \"if\"")
+        if (self.signal == "baseband") != (self.source_q is not None):
+            raise InputError("'source_q' goes with signal = \"baseband\"")
+
+    def _check_output(self) -> None:
+        given = [name for name in ("probe", "decision") if getattr(self, name) is not None]
+        if self.i is not None or self.q is not None:
+            given.append("i")
+        if len(given) != 1:
+            raise InputError("give one of the outputs 'probe', 'i' with 'q', and 'decision'")
+        if self.q is not None and self.i is None:
+            raise InputError("'q' goes with 'i'")
+        if self.output_frequency is not None and self.probe is None:
+            raise InputError("'output_frequency' goes with 'probe'")
+        if (self.decision is not None) != (self.threshold is not None):
+            raise InputError("'threshold' goes with 'decision'")
+        if self.decide_at is not None and self.decision is None:
+            raise InputError("'decide_at' goes with 'decision'")
+
+    def _check_converter(self) -> None:
+        parts = (self.adc_bits, self.adc_full_scale, self.adc_rate)
+        if any(part is None for part in parts) and any(part is not None for part in parts):
+            raise InputError("'adc_bits', 'adc_full_scale' and 'adc_rate' go together")
+        if self.adc_bits is not None and not 1 <= self.adc_bits <= 32:
+            raise InputError(f"key 'adc_bits': wanted 1 to 32, got {self.adc_bits}")
+
+
+READOUT_TABLES = {
+    "resonator": ResonatorTable,
+    "sensor": SensorTable,
+    "readout": ReadoutTable,
+}
