@@ -24,6 +24,7 @@ FLOORS = {
     "formats": 1,
     "quantum": 1,
     "coupling": 2,
+    "outgoing": 2,
     "schema": 3,
     "stimuli": 3,
     "testbench": 3,
