@@ -35,6 +35,7 @@ CUMMINS = (
 )
 EQUIPARTITION = "equipartition theorem, computed from the formula"
 FILTER_AREA = "linear filter and area theorem, computed from the formula"
+FRIIS = f'H. T. Friis, "Noise figures of radio receivers", Proc. IRE 32, 419 (1944), {MEMORY}'
 GAUSSIAN_INTEGRAL = "Gaussian integral, computed from the formula"
 GLAUBER = (
     'R. J. Glauber, "Coherent and incoherent states of the radiation field", Phys. Rev. 131, 2766 '
@@ -104,6 +105,10 @@ RAMSEY = (
     f"Rev. 78, 695 (1950), transition probability with two separated fields, {MEMORY}"
 )
 RAZAVI = f"B. Razavi, RF Microelectronics, section on image-reject receivers, {MEMORY}"
+RAZAVI_COMPRESSION = (
+    "B. Razavi, RF Microelectronics, gain compression of a third-order nonlinearity, "
+    f"{MEMORY}; computed from the formula"
+)
 RICHARDSON = (
     'L. F. Richardson, "The approximate arithmetical solution by finite differences of physical '
     f'problems", Phil. Trans. R. Soc. A 210, 307 (1911), {MEMORY}'
@@ -215,3 +220,46 @@ SCHOTTKY = (
     f"Phys. 362, 541 (1918), {MEMORY}"
 )
 WIENER_KHINCHIN = "theorem of Wiener and Khinchin, chi-square law of the periodogram"
+BEENAKKER = (
+    'C. W. J. Beenakker, "Theory of Coulomb-blockade oscillations in the conductance of a quantum '
+    f'dot", Phys. Rev. B 44, 1646 (1991), {MEMORY}'
+)
+BLAIS = (
+    'A. Blais et al., "Cavity quantum electrodynamics for superconducting electrical circuits: an '
+    f'architecture for quantum computation", Phys. Rev. A 69, 062320 (2004), {MEMORY}'
+)
+CAVES = (
+    'C. M. Caves, "Quantum limits on noise in linear amplifiers", Phys. Rev. D 26, 1817 (1982), '
+    f"{MEMORY}"
+)
+CLERK = (
+    'A. A. Clerk et al., "Introduction to quantum noise, measurement, and amplification", Rev. '
+    f"Mod. Phys. 82, 1155 (2010), {MEMORY}"
+)
+CODATA = "exact e and h of the SI, computed from the formula"
+GAMBETTA_DEPHASING = (
+    'J. Gambetta et al., "Qubit-photon interactions in a cavity: measurement-induced dephasing and '
+    f'number splitting", Phys. Rev. A 74, 042318 (2006), {MEMORY}'
+)
+GARDINER_COLLETT = (
+    'C. W. Gardiner, M. J. Collett, "Input and output in damped quantum systems", Phys. Rev. A 31, '
+    f"3761 (1985), {MEMORY}"
+)
+HOUCK = (
+    'A. A. Houck et al., "Controlling the spontaneous emission of a superconducting transmon '
+    f'qubit", Phys. Rev. Lett. 101, 080502 (2008), {MEMORY}'
+)
+INPUT_OUTPUT = "input-output theory of a linear resonator, computed from the formula"
+KOCH = (
+    'J. Koch et al., "Charge-insensitive qubit design derived from the Cooper pair box", Phys. '
+    f"Rev. A 76, 042319 (2007), {MEMORY}"
+)
+PROBST = (
+    'S. Probst et al., "Efficient and robust analysis of complex scattering data under noise in '
+    f'microwave resonators", Rev. Sci. Instrum. 86, 024706 (2015), {MEMORY}'
+)
+SETE = (
+    'E. A. Sete, J. M. Martinis, A. N. Korotkov, "Quantum theory of a bandpass Purcell filter for '
+    f'qubit readout", Phys. Rev. A 92, 012325 (2015), {MEMORY}'
+)
+WALLS_MILBURN = f"D. F. Walls, G. J. Milburn, Quantum Optics, input-output theory, {MEMORY}"

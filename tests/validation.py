@@ -22,6 +22,7 @@ TOPICS = (
     "circuit",
     "signal",
     "coupling",
+    "readout",
     "end to end through ngspice",
 )
 MEMORY = "recalled from memory"
