@@ -99,7 +99,7 @@ def with_terminations(deck: Deck, nodes: Sequence[str], resistance: float) -> De
     Returns
     -------
     Deck
-        With one resistor per node; its name collides with none of the deck.
+        With one resistor per node; its name collides with none of the deck. It makes no noise.
 
     Raises
     ------
@@ -111,6 +111,9 @@ def with_terminations(deck: Deck, nodes: Sequence[str], resistance: float) -> De
     if not (math.isfinite(resistance) and resistance > 0):
         raise InputError(f"a termination must be positive and finite, got {resistance!r} ohm")
     taken = structure_of(deck.lines).root.elements
+    # A matched line at the probe: what the line itself radiates runs into the circuit, not along
+    # with the circuit's own wave, so that the resistor that stands for it is silent.
+    load = f"{number_text(resistance)} noisy=0"
     added: list[SourceLine] = []
     number = 0
     for node in dict.fromkeys(find_node(deck, name) for name in nodes):
@@ -119,7 +122,7 @@ def with_terminations(deck: Deck, nodes: Sequence[str], resistance: float) -> De
         number += 1
         while f"rtermination{number}" in taken:
             number += 1
-        added.append(SourceLine(f"rtermination{number} {node} 0 {number_text(resistance)}", "", 0))
+        added.append(SourceLine(f"rtermination{number} {node} 0 {load}", "", 0))
     return replace(deck, lines=(*deck.lines, *added))
 
 

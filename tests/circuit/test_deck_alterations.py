@@ -420,4 +420,4 @@ def test_the_names_of_terminations_are_free() -> None:
     lines = with_terminations(with_terminations(deck, ["a", "A", "b"], 50), ["a"], 75).lines
     names = [line.text.split()[0].lower() for line in lines]
     assert len(set(names)) == len(names) == 6
-    assert lines[-1].text == "rtermination5 a 0 75.0"
+    assert lines[-1].text == "rtermination5 a 0 75.0 noisy=0"

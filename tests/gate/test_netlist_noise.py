@@ -44,6 +44,7 @@ def run(tmp_path: Path) -> Run:
         rabi: float = RABI,
         samples: int = 400,
         gate: dict[str, Any] | None = None,
+        termination: str = "in deck",
         other: tuple[dict[str, Any], ...] = (),
         **noise: Any,
     ) -> GateResult:
@@ -55,7 +56,7 @@ def run(tmp_path: Path) -> Run:
                 "steps_per_period": 200,
                 "temperature": "300 K",
             },
-            "drive": {"probe": probe, "carrier": f"{CARRIER!r} Hz", "termination": "in deck"},
+            "drive": {"probe": probe, "carrier": f"{CARRIER!r} Hz", "termination": termination},
             "qubit": {"kind": "spin", "frequency": "carrier", "rabi_per_volt": f"{rabi!r} Hz/V"},
             "gate": {"target": "x", "window": [f"{START!r} s", f"{STOP!r} s"], "calibrate": []},
             "accuracy": {"floor": False, "noise_samples": samples},
@@ -94,6 +95,34 @@ class TestJohnson:
         assert abs(found.infidelity - source.infidelity) < 4 * found.standard_error
         assert source.devices == {"r1": source.infidelity}
         assert source.left_out == ()
+
+    @pytest.mark.parametrize(
+        "method", ["stationary", pytest.param("injection", marks=pytest.mark.full)]
+    )
+    def test_a_matched_source_sends_kt_into_the_line(
+        self, validate: Validate, run: Run, method: str
+    ) -> None:
+        # 4 k T R halved by the matched load, whose own noise goes the other way.
+        runs = {"seeds": 64} if method == "injection" else {}
+        found = run(
+            "v1 in 0 sin(0 2m 1g)\nr1 in out 50",
+            method=method,
+            rabi=80e9,
+            termination="50 ohm",
+            resistor_temperature="4 K",
+            **runs,
+        ).noise
+        assert found is not None
+        (source,) = found.sources
+        assert set(source.devices) == {"r1"}
+        validate(
+            f"50 ohm at 4 K into a matched line ({method})",
+            f"{sources.JOHNSON_NYQUIST}; {sources.GOLDEN_RULE}",
+            (2 * math.pi * 80e9) ** 2 * constants.k * 4.0 * 50.0 * TIME / 3,
+            source.infidelity + source.unreached,
+            # White: nothing but the band and rounding; or four standard deviations of 64 runs.
+            rel=1e-2 if method == "stationary" else 4 * math.sqrt(1 / 64),
+        )
 
     @pytest.mark.full
     @pytest.mark.parametrize("kelvin", [300.0, 4.2])
