@@ -1,0 +1,245 @@
+"""The probabilities of the decisions, in closed form for every course that the state may take."""
+
+import math
+from dataclasses import dataclass, field
+
+import numpy as np
+from scipy.optimize import minimize_scalar
+from scipy.special import ndtr, ndtri
+
+from cosim.dsp.detection.projection import Projection
+from cosim.dsp.detection.records import Preparation, Transitions
+from cosim.errors import InputError
+from cosim.waveform import FloatArray
+
+# Below this step of its argument the mean of the normal distribution is taken by Simpson's rule,
+# whose error is 0.55 step^4/2880 = 2e-10; above, from the integral, which loses digits to
+# cancellation where the step is small.
+_SMALL = 0.03
+
+
+@dataclass(frozen=True, slots=True)
+class Odds:
+    """Probabilities of one decision for one state at the start of the records.
+
+    Parameters
+    ----------
+    kept : float
+        Probability that the state stays as it is until the end of the window.
+    decided_and_kept : float
+        Joint probability of that and of the decision.
+    decided_and_changed : float
+        Joint probability of a change of state and of the decision.
+    """
+
+    kept: float = field(metadata={"unit": "1"})
+    decided_and_kept: float = field(metadata={"unit": "1"})
+    decided_and_changed: float = field(metadata={"unit": "1"})
+
+    @property
+    def decided(self) -> float:
+        """Probability of the decision."""
+        return self.decided_and_kept + self.decided_and_changed
+
+
+def check_transitions(projection: Projection, transitions: Transitions) -> None:
+    """Refuse rates of transitions for which no record was simulated.
+
+    Parameters
+    ----------
+    projection : Projection
+    transitions : Transitions
+
+    Raises
+    ------
+    InputError
+        If there is a rate without records.
+    """
+    for state, (rate, name) in enumerate(
+        ((transitions.up, "excitations"), (transitions.down, "decays"))
+    ):
+        if rate > 0 and projection.simulated[state] == 0:
+            raise InputError(
+                f"detection: the state changes at {rate:.6g} 1/s, but the records hold no "
+                f"'{name}' before the end of the window, {projection.stop:.6g} s",
+                hint="give the chain's response for some times of the transition",
+            )
+
+
+def state_odds(
+    projection: Projection,
+    transitions: Transitions,
+    threshold: float,
+    state: int,
+    decision: int,
+    *,
+    coarse: bool = False,
+) -> Odds:
+    """Give the probabilities of a decision for one state at the start.
+
+    Parameters
+    ----------
+    projection : Projection
+    transitions : Transitions
+        At most one happens within the window.
+    threshold : float
+        In V: the decision is 1 above it.
+    state, decision : int
+        0 or 1.
+    coarse : bool
+        Whether every other simulated time of a transition is left out.
+
+    Returns
+    -------
+    Odds
+
+    Notes
+    -----
+    The time of the transition is exponential; over each interval of the table the value is taken
+    to change along a straight line, for which the mean of the normal distribution is exact.
+    """
+    rate = transitions.down if state else transitions.up
+    sign = 1.0 if decision else -1.0
+    level = sign * (projection.values[state] - threshold) / projection.sigmas[state]
+    kept = math.exp(-rate * projection.stop)
+    alone = float(ndtr(level)) * kept
+    if rate == 0:
+        return Odds(kept, alone, 0.0)
+    points = projection.coarse_points if coarse else projection.path_points
+    path = projection.along(points[state])
+    levels = sign * (path - threshold) / projection.path_sigmas[state]
+    left = np.exp(-rate * projection.path_times)
+    shares = -left[:-1] * np.expm1(-rate * np.diff(projection.path_times))
+    return Odds(kept, alone, float(shares @ _mean_normal(levels)))
+
+
+def wrong_shares(
+    projection: Projection,
+    transitions: Transitions,
+    preparation: Preparation,
+    threshold: float,
+    *,
+    coarse: bool = False,
+) -> tuple[float, float]:
+    """Give P(1|0) and P(0|1).
+
+    Parameters
+    ----------
+    projection : Projection
+    transitions : Transitions
+    preparation : Preparation
+    threshold : float
+        In V.
+    coarse : bool
+        Whether every other simulated time of a transition is left out.
+
+    Returns
+    -------
+    tuple of 2 floats
+        Of the prepared state, not of the state at the start.
+    """
+
+    def odds(state: int, decision: int) -> float:
+        return state_odds(
+            projection, transitions, threshold, state, decision, coarse=coarse
+        ).decided
+
+    first, second = preparation.wrong
+    return (
+        (1 - first) * odds(0, 1) + first * odds(1, 1),
+        (1 - second) * odds(1, 0) + second * odds(0, 0),
+    )
+
+
+def best_threshold(
+    projection: Projection,
+    transitions: Transitions,
+    preparation: Preparation,
+    prior_excited: float = 0.5,
+) -> float:
+    """Find the threshold with the fewest wrong decisions.
+
+    Parameters
+    ----------
+    projection : Projection
+    transitions : Transitions
+    preparation : Preparation
+    prior_excited : float
+        How often state 1 is prepared.
+
+    Returns
+    -------
+    float
+        In V: the least of (1 - prior) P(1|0) + prior P(0|1), looked for from three standard
+        deviations below the mean of state 0 to three above that of state 1.
+    """
+
+    def cost(threshold: float) -> float:
+        wrong = wrong_shares(projection, transitions, preparation, threshold)
+        return (1 - prior_excited) * wrong[0] + prior_excited * wrong[1]
+
+    low = float(projection.values[0] - 3 * projection.sigmas[0])
+    high = float(projection.values[1] + 3 * projection.sigmas[1])
+    # A coarse look first, since outside the two means the cost is flat.
+    grid = np.linspace(low, high, 33)
+    least = int(np.argmin([cost(float(x)) for x in grid]))
+    bounds = (grid[max(least - 1, 0)], grid[min(least + 1, grid.size - 1)])
+    width = float(bounds[1] - bounds[0])
+    found = minimize_scalar(cost, bounds=bounds, method="bounded", options={"xatol": 1e-6 * width})
+    return float(found.x)
+
+
+def separation_error(snr: float) -> float:
+    """Give the share of wrong decisions of two equal Gaussians with the threshold in the middle.
+
+    Parameters
+    ----------
+    snr : float
+        Distance of the means over the standard deviation.
+
+    Returns
+    -------
+    float
+        erfc(snr/(2 sqrt 2))/2.
+
+    Notes
+    -----
+    P. Krantz et al., "A quantum engineer's guide to superconducting qubits", Appl. Phys. Rev. 6,
+    021318 (2019), eq. (170).
+    """
+    return float(ndtr(-snr / 2))
+
+
+def snr_for_error(error: float) -> float:
+    """Give the signal over noise that a separation error asks for.
+
+    Parameters
+    ----------
+    error : float
+        Between 0 and 1/2.
+
+    Returns
+    -------
+    float
+        Inverse of `separation_error`.
+
+    Raises
+    ------
+    InputError
+        If the error is out of range.
+    """
+    if not 0 < error < 0.5:
+        raise InputError(f"separation error: wanted one between 0 and 1/2, got {error!r}")
+    return float(-2 * ndtri(error))
+
+
+def _mean_normal(levels: FloatArray) -> FloatArray:
+    """Mean of the normal distribution function over each step of its argument, shape (n - 1,)."""
+    a, b = levels[:-1], levels[1:]
+    ends = ndtr(levels)
+    # The integral of the distribution function.
+    integral = levels * ends + np.exp(-(levels**2) / 2) / math.sqrt(2 * math.pi)
+    step = b - a
+    small = np.abs(step) < _SMALL
+    simpson = (ends[:-1] + 4 * ndtr((a + b) / 2) + ends[1:]) / 6
+    return np.asarray(np.where(small, simpson, np.diff(integral) / np.where(small, 1.0, step)))

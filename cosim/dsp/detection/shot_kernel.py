@@ -1,0 +1,71 @@
+"""The compiled kernel of integrated shots: one decision after the other.
+
+The function compiles at its first call and is cached on disk; nothing compiles at import.
+"""
+
+import numba
+from numpy.random import Generator
+
+from cosim.waveform import FloatArray
+
+
+@numba.njit(cache=True, nogil=True, error_model="numpy")
+def count_excited(
+    generator: Generator,
+    count: int,
+    prepared: int,
+    wrong: float,
+    rates: FloatArray,
+    stop: float,
+    values: FloatArray,
+    sigmas: FloatArray,
+    paths: FloatArray,
+    path_sigmas: FloatArray,
+    threshold: float,
+) -> int:
+    """Draw shots of one prepared state and count the decisions 1.
+
+    Parameters
+    ----------
+    generator : numpy.random.Generator
+        Moved on.
+    count : int
+        Number of shots.
+    prepared : int
+        0 or 1.
+    wrong : float
+        Probability of the other state at the start.
+    rates : ndarray, shape (2,)
+        Of leaving state 0 and state 1 in 1/s.
+    stop : float
+        End of the window in s.
+    values, sigmas : ndarray, shape (2,)
+        Mean and standard deviation for each state that stays, in V.
+    paths, path_sigmas : ndarray, shape (2, n)
+        The same for a change of each state at n equidistant times from 0 to `stop`, in V.
+    threshold : float
+        In V.
+
+    Returns
+    -------
+    int
+    """
+    found = 0
+    scale = (paths.shape[1] - 1) / stop
+    for _ in range(count):
+        state = prepared
+        if wrong > 0.0 and generator.random() < wrong:
+            state = 1 - prepared
+        value = values[state]
+        sigma = sigmas[state]
+        if rates[state] > 0.0:
+            place = generator.standard_exponential() / rates[state] * scale
+            if place < paths.shape[1] - 1:
+                k = int(place)
+                part = place - k
+                value = paths[state, k] + part * (paths[state, k + 1] - paths[state, k])
+                change = path_sigmas[state, k + 1] - path_sigmas[state, k]
+                sigma = path_sigmas[state, k] + part * change
+        if value + sigma * generator.standard_normal() > threshold:
+            found += 1
+    return found
