@@ -128,6 +128,24 @@ def test_any_drive_agrees_with_an_integrator(geometry: str, level: int) -> None:
     assert found.inside[-1] == pytest.approx(wanted, rel=1e-9)
 
 
+@pytest.mark.parametrize("geometry", ["reflection", "transmission", "hanger"])
+def test_a_long_drive_ends_in_the_steady_response(geometry: str) -> None:
+    """Source of the signs: b_out = b_in - sqrt(k) a at every port."""
+    resonator = {
+        "reflection": reflecting(KAPPA, 0.2 * KAPPA),
+        "transmission": transmitting(0.3 * KAPPA, 0.7 * KAPPA),
+        "hanger": hanging(KAPPA, 0.2 * KAPPA),
+    }[geometry]
+    drive = IncidentField(1e-9, np.full(1501, 2e4j), 6.0023e9)
+    found = evolve_field(resonator, drive, 1)
+    # After 1500 ns, 23 time constants of the field, 1e-10 of the ring-up is left.
+    wanted = 2e4j * complex(scattering(resonator, 1, 6.0023e9))
+    assert found.outside[-1] == pytest.approx(wanted, rel=1e-8)
+    arriving = drive.samples[-1] if geometry != "transmission" else 0.0
+    there = arriving - math.sqrt(resonator.output_rate) * found.inside[-1]
+    assert found.outside[-1] == pytest.approx(there, rel=1e-12)
+
+
 @pytest.mark.parametrize(("before", "after"), [(1, 0), (0, 1), (2, 1)])
 def test_a_jump_agrees_with_an_integrator(before: int, after: int) -> None:
     resonator = Resonator("transmission", FREQUENCY, 0.3 * KAPPA, KAPPA, 0.0, CHI, 3.0 * CHI)
