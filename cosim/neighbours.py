@@ -6,6 +6,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
+from cosim.added_noise import INJECTION
 from cosim.adjust import Pulse
 from cosim.coupling import rate_per_unit
 from cosim.errors import InputError, TestbenchError
@@ -19,6 +20,7 @@ from cosim.quantum.fidelity import average_gate_fidelity, leakage, rotation_of, 
 from cosim.quantum.frame import FreeFrame, free_frame
 from cosim.quantum.heating import flip_rate
 from cosim.quantum.operators import OperatorSystem
+from cosim.quantum.qubit import Qubit
 from cosim.quantum.targets import target_rotation
 from cosim.qubit_drive import QubitDrive, make_qubit
 from cosim.schema import SpectatorTable
@@ -130,23 +132,26 @@ def _spectator(
         noise=None if noisy is None else noisy.effect,
     )
     found = [
-        *_carrier_warnings(effect, drive),
+        *_carrier_warnings(effect, qubit, drive),
         *level_warnings(own, target, table=f"[[spectator]] number {number}"),
         *_new_warnings(noisy, told),
     ]
     return Neighbour(effect, tuple(f"'{effect.name}': {text}" for text in found))
 
 
-def _carrier_warnings(item: SpectatorEffect, drive: QubitDrive) -> tuple[str, ...]:
+def _carrier_warnings(item: SpectatorEffect, qubit: Qubit, drive: QubitDrive) -> tuple[str, ...]:
     start, stop = drive.window
     width = 1.0 / (stop - start)
-    offset = abs(item.frequency - drive.carrier_frequency)
-    if item.target != "identity" or offset >= width:
+    if item.target != "identity":
         return ()
-    return (
-        f"it lies {offset:.3g} Hz from the carrier, within the pulse's own width of {width:.3g} "
-        "Hz: it is driven like the target",
-    )
+    within = f"Hz from the carrier, within the pulse's own width of {width:.3g} Hz"
+    offset = abs(item.frequency - drive.carrier_frequency)
+    if offset < width:
+        return (f"it lies {offset:.3g} {within}: it is driven like the target",)
+    second = abs(item.frequency + qubit.anharmonicity - drive.carrier_frequency)
+    if qubit.levels > 2 and second < width:
+        return (f"its second transition lies {second:.3g} {within}: it leaks from |1>",)
+    return ()
 
 
 def idle_effect(
@@ -197,7 +202,8 @@ def idle_effect(
             f"goes from {first:.6g} s to {last:.6g} s"
         )
     own = replace(pulse, start=start, stop=stop, before=None)
-    phase = free_frame(own.channel(), _IDENTITY)
+    clean = own.channel()
+    phase = free_frame(clean, _IDENTITY)
     noisy = noise.on(replace(drive, window=span))
     if noisy is not None:
         own = replace(own, before=noisy.correction)
@@ -207,6 +213,9 @@ def idle_effect(
     left = _left(noise.envelope, span)
     turn = _phase(phase)
     flips, dephasing = _rates(span, drive, waveform.unit, left, noise.noises)
+    if noisy is not None:
+        injected = [item.flips for item in noisy.effect.sources if item.method == INJECTION]
+        flips += sum(injected) / (stop - start)
     effect = IdleEffect(
         start=start,
         stop=stop,
@@ -220,6 +229,7 @@ def idle_effect(
         flip_rate=flips,
         dephasing_rate=dephasing,
         noise=None if noisy is None else noisy.effect,
+        rotation=rotation_of(nearest_unitary(clean)),
     )
     found = (*_pulse_warnings(noise.envelope, span, amplitude), *_new_warnings(noisy, told))
     return effect, tuple(f"at rest: {text}" for text in found)

@@ -71,6 +71,7 @@ def injected_noise(
         infidelity=infidelity,
         leakage=float(leaks.mean()),
         highest_frequency=found[0][1].highest_frequency,
+        flips=float((np.abs(unitaries[:, [0, 1], [1, 0]]) ** 2).mean()),
         standard_error=error_of_runs,
         devices=parts,
         devices_error=error,

@@ -66,6 +66,8 @@ class NoiseSource:
         In Hz; NaN for quadrature.
     standard_error : float
         Of the infidelity, from the seeds of an injection; 0 for others.
+    flips : float
+        Probability of a flip by an injection, the mean of up and down; NaN for others.
     devices : dict of float
         Device in ngspice's name -> its part of the infidelity, by its part of the noise's power
         around the carrier, the greatest first; of an injection those that are told from none.
@@ -91,6 +93,7 @@ class NoiseSource:
     unreached: float = field(default=0.0, metadata=_unit("1"))
     highest_frequency: float = field(default=math.nan, metadata=_unit("Hz"))
     standard_error: float = field(default=0.0, metadata=_unit("1"))
+    flips: float = field(default=math.nan, metadata=_unit("1"))
     devices: dict[str, float] = field(default_factory=dict, metadata=_unit("1"))
     devices_error: float = field(default=0.0, metadata=_unit("1"))
     devices_explain: float = field(default=1.0, metadata=_unit("1"))
@@ -204,12 +207,16 @@ class IdleEffect:
         Peak of the pulse over what is left around the carrier, in dB.
     flip_rate : float
         Rate in 1/s of flips up, and of flips down, by the golden rule: by the noise that the probe
-        and the line add, and by that of amplitude and phase on what is left of the carrier.
+        and the line add, and by that of amplitude and phase on what is left of the carrier; by
+        noise injected into the circuit, those of its runs over the stretch.
     dephasing_rate : float
         Rate in 1/s of the detuning's noise, taken as white from one turn per stretch on.
     noise : NoiseEffect or None
         What all noise does over the stretch, that of the circuit's devices too; part of the
         infidelities above.
+    rotation : Rotation or None
+        By what is left of the carrier, without noise: the Stark shift about z, and on resonance a
+        turn about an axis of the drive.
     """
 
     start: float = field(metadata=_unit("s"))
@@ -224,3 +231,4 @@ class IdleEffect:
     flip_rate: float = field(metadata=_unit("1/s"))
     dephasing_rate: float = field(metadata=_unit("1/s"))
     noise: NoiseEffect | None = None
+    rotation: Rotation | None = None

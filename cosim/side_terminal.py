@@ -122,6 +122,7 @@ def idle_parts(effect: IdleEffect | None, unit: str) -> list[RenderableType]:
     rows = {
         "over the stretch": lost,
         "carrier left": f"extinction {effect.extinction:.1f} dB, {left}",
+        **_turned(effect),
         "Stark shift": f"{shift}: {turn:+.4f}° per microsecond",
         "flips by noise": f"{micro * effect.flip_rate:.2e} per microsecond, up and down each",
         "dephasing by noise": f"{micro * effect.dephasing_rate:.2e} per microsecond",
@@ -129,6 +130,15 @@ def idle_parts(effect: IdleEffect | None, unit: str) -> list[RenderableType]:
     for name, text in rows.items():
         table.add_row(name, text)
     return [Text(""), Text(f"at rest, {start} to {stop}"), table]
+
+
+def _turned(effect: IdleEffect) -> dict[str, str]:
+    if effect.rotation is None:
+        return {}
+    pace = math.degrees(effect.rotation.angle) * 1e-6 / (effect.stop - effect.start)
+    x, y, z = effect.rotation.axis
+    about = f" about ({x:+.3f}, {y:+.3f}, {z:+.3f})" if pace > 0.0 else ""
+    return {"turn by it": f"{pace:.4f}° per microsecond{about}"}
 
 
 def _headed(*names: str) -> Table:

@@ -227,6 +227,18 @@ def test_all_qubits_see_the_same_noise() -> None:
     assert twin.noise.infidelity == own.effect.infidelity
 
 
+def test_a_second_transition_on_the_carrier_is_named() -> None:
+    drive, pulse, _ = played(DURATION)
+    table = SpectatorTable("transmon", RABI, offset=302e6, anharmonicity=-300e6)
+    found = spectator_effects([table], drive, pulse, line(DURATION))[0]
+    assert found.warnings[0].startswith(
+        "'spectator 1': its second transition lies 2e+06 Hz from the carrier"
+    )
+    # A pi pulse on a transition with sqrt(2) of the coupling empties |1>, half of the population,
+    # but for (1 - cos(sqrt(2) pi))/2 and the offset of two in five of the Rabi frequency.
+    assert found.effect.leakage > 0.1
+
+
 def test_levels_that_are_too_few_are_named_with_their_table() -> None:
     drive, pulse, _ = played(0.1 * DURATION)
     # The peak Rabi frequency of 500 MHz is beyond an anharmonicity of 100 MHz.
@@ -259,6 +271,10 @@ def test_rest_under_a_leaking_carrier() -> None:
     assert found.extinction == pytest.approx(60.0, rel=1e-12)
     assert found.noise is None
     assert found.flip_rate == found.dephasing_rate == 0.0
+    assert found.rotation is not None
+    assert found.rotation.angle == pytest.approx(angle, rel=1e-3)
+    # Of the cosine's first and last half turn the counter-rotating part, 2 RABI/CARRIER, is left.
+    assert found.rotation.axis == pytest.approx((1.0, 0.0, 0.0), abs=2e-3)
 
 
 def test_what_is_left_of_the_carrier_shifts_a_detuned_qubit(validate: Validate) -> None:

@@ -89,6 +89,10 @@ def test_injected_runs_are_shared(tmp_path: Path) -> None:
     assert found.noise is not None
     assert found.idle is not None
     assert found.idle.noise is not None
+    (at_rest,) = found.idle.noise.sources
+    # Of two levels up and down alike: a flip costs 2/3, dephasing nothing on top.
+    assert found.idle.flip_rate * (REST[1] - REST[0]) == pytest.approx(at_rest.flips, rel=1e-12)
+    assert at_rest.flips == pytest.approx(1.5 * at_rest.infidelity, rel=1e-3, abs=0.0)
     half, beside = found.spectators
     assert half.noise is not None
     assert beside.noise is not None
