@@ -16,6 +16,11 @@ ALLEN_EBERLY = (
     "L. Allen, J. H. Eberly, Optical Resonance and Two-Level Atoms (1975), area of a pulse, "
     f"{MEMORY}"
 )
+BLISS = (
+    'C. I. Bliss, "The calculation of the dosage-mortality curve", Ann. Appl. Biol. 22, 134 '
+    "(1935), data; probit line in A. J. Dobson, An Introduction to Generalized Linear Models, "
+    f"{MEMORY}"
+)
 BLANES = (
     'S. Blanes, F. Casas, J. Ros, "Improved high order integrators based on the Magnus expansion", '
     f"BIT 40, 434 (2000), method of sixth order, {MEMORY}"
@@ -263,3 +268,26 @@ SETE = (
     f'qubit readout", Phys. Rev. A 92, 012325 (2015), {MEMORY}'
 )
 WALLS_MILBURN = f"D. F. Walls, G. J. Milburn, Quantum Optics, input-output theory, {MEMORY}"
+BENNETT = (
+    'W. R. Bennett, "Spectra of quantized signals", Bell Syst. Tech. J. 27, 446 (1948); IEEE Std '
+    f"1241, ideal signal-to-noise ratio of a converter, {MEMORY}; computed from the formula"
+)
+CONNORS = (
+    'E. J. Connors, JJ Nelson, J. M. Nichol, "Rapid high-fidelity spin-state readout in Si/SiGe '
+    'quantum dots via rf reflectometry", Phys. Rev. Applied 13, 024019 (2020), 99.9 % in 300 ns, '
+    f"{MEMORY}; the rest computed from the formula"
+)
+GAMBETTA_PROTOCOLS = (
+    'J. Gambetta, W. A. Braff, A. Wallraff, S. M. Girvin, R. J. Schoelkopf, "Protocols for optimal '
+    'readout of qubits using a continuous quantum nondemolition measurement", Phys. Rev. A 76, '
+    f"012325 (2007), {MEMORY}"
+)
+GAMBETTA_TRAJECTORY = (
+    'J. Gambetta et al., "Quantum trajectory approach to circuit QED: quantum jumps and the Zeno '
+    f'effect", Phys. Rev. A 77, 012112 (2008), {MEMORY}'
+)
+NORTH = (
+    'D. O. North, "An analysis of the factors which determine signal/noise discrimination in '
+    f'pulsed carrier systems", RCA report PTR-6C (1943), matched filter, {MEMORY}; computed from '
+    "the formula"
+)
