@@ -87,8 +87,8 @@ class TestSpinTunnelling:
         assert out_probability(tunnelling, level, times) == pytest.approx(wanted, abs=1e-9)
 
     @pytest.mark.parametrize("level", [0, 1])
-    def test_drawn_times_follow_them(self, level: int) -> None:
-        tunnelling = self.cases[0]
+    @pytest.mark.parametrize("tunnelling", cases)
+    def test_drawn_times_follow_them(self, tunnelling: SpinTunnelling, level: int) -> None:
         out, back = tunnelling_times(tunnelling, level, SHOTS, seed=5)
         assert (back > out).all()
         assert kstest(out, lambda t: out_probability(tunnelling, level, t)).pvalue > UNLIKELY
