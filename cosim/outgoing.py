@@ -158,32 +158,6 @@ def emf_envelope(field_out: npt.ArrayLike, frequency: float, line: OutputLine) -
     return np.asarray(2 * scale * np.conj(field_out), dtype=np.complex128)
 
 
-def field_from_emf(emf: npt.ArrayLike, frequency: float, line: OutputLine) -> ComplexArray:
-    """Refer an envelope of the deck's source back to the resonator's output.
-
-    Parameters
-    ----------
-    emf : array_like of complex, any shape
-        I + jQ of the EMF in V.
-    frequency : float
-        Of the carrier in Hz.
-    line : OutputLine
-        As in `emf_envelope`, of which this is the inverse.
-
-    Returns
-    -------
-    ndarray of complex, shape as `emf`
-        b in sqrt(photon/s).
-
-    Raises
-    ------
-    InputError
-        If the frequency is not positive.
-    """
-    scale = _volts_per_field(frequency, line.impedance) * math.sqrt(power_gain(line.stages))
-    return np.asarray(np.conj(emf) / (2 * scale), dtype=np.complex128)
-
-
 def incident_samples(
     iq: npt.ArrayLike, frequency: float, attenuation: float = 0.0, impedance: float = 50.0
 ) -> ComplexArray:

@@ -251,35 +251,6 @@ def amplitude_for_photons(
     return math.sqrt(photons * len(fields) / sum(abs(one) ** 2 for one in fields))
 
 
-def sampling_step(resonator: Resonator, frequency: float, accuracy: float, level: int = 1) -> float:
-    """Give the step at which straight lines between samples follow a ring-up.
-
-    Parameters
-    ----------
-    resonator : Resonator
-        The resonator.
-    frequency : float
-        Of the drive in Hz.
-    accuracy : float
-        Largest error between samples over the steady field.
-    level : int
-        State of the qubit.
-
-    Returns
-    -------
-    float
-        In s: sqrt(8 accuracy)/|kappa/2 + i Delta|, from the second derivative of an exponential.
-
-    Raises
-    ------
-    InputError
-        If the accuracy is not positive, or as in `Resonator.pull`.
-    """
-    if not (math.isfinite(accuracy) and accuracy > 0):
-        raise InputError(f"accuracy: wanted a positive number, got {accuracy!r}")
-    return math.sqrt(8 * accuracy) / abs(complex(field_rate(resonator, level, frequency)))
-
-
 def wait_for_photons(resonator: Resonator, photons: float, left: float) -> float:
     """Give the wait without a drive until few photons are left.
 

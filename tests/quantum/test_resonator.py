@@ -11,7 +11,6 @@ from cosim.quantum.resonator import (
     Resonator,
     amplitude_for_photons,
     photons_after,
-    sampling_step,
     scattering,
     steady_field,
     wait_for_photons,
@@ -192,16 +191,6 @@ def test_photons_decay_with_kappa() -> None:
     assert wait_for_photons(resonator, 0.005, 0.01) == 0.0
 
 
-def test_the_step_keeps_straight_lines_near_the_exponential() -> None:
-    resonator = reflecting()
-    step = sampling_step(resonator, 6.01e9, 1e-3)
-    rate = KAPPA / 2 + 1j * (CHI - TURN * 10e6)
-    middle = np.exp(-rate * step / 2)
-    # At the start of an exponential of size one, where it is bent most.
-    error = abs((1 + np.exp(-rate * step)) / 2 - middle)
-    assert 0.9e-3 < error < 1.1e-3  # The third derivative counts some |rate| step = 9 %.
-
-
 @pytest.mark.parametrize(
     ("words", "changes"),
     [
@@ -240,7 +229,5 @@ def test_what_cannot_be_asked_is_refused() -> None:
         scattering(resonator, 3, 6e9)
     with pytest.raises(InputError, match="photons: wanted at least 0"):
         amplitude_for_photons(resonator, -1.0, 6e9)
-    with pytest.raises(InputError, match="accuracy"):
-        sampling_step(resonator, 6e9, 0.0)
     with pytest.raises(InputError, match="photons left"):
         wait_for_photons(resonator, 1.0, 0.0)
