@@ -198,7 +198,7 @@ def circuit_noise(
     choice = choose_method(clean, noise, carrier_frequency, stretch, instant)
     warnings = tuple[str, ...]()
     if choice.method == INJECTION:
-        settings, warnings = _modelled(clean, settings, noise, carrier_frequency, middle)
+        settings, warnings = modelled_settings(clean, settings, noise, carrier_frequency, middle)
     return CircuitNoise(
         clean,
         settings,
@@ -238,14 +238,35 @@ def noise_settings(noise: NetlistNoise, deck: Deck) -> NoiseSettings:
     return settings
 
 
-def _modelled(
+def modelled_settings(
     clean: CleanRun,
     settings: NoiseSettings,
     noise: NetlistNoise,
     carrier_frequency: float,
     middle: float,
 ) -> tuple[NoiseSettings, tuple[str, ...]]:
-    """Ask the models of channels that no formula here stands for, along a period of the carrier."""
+    """Ask the models of channels that no formula here stands for, along a period of the carrier.
+
+    Parameters
+    ----------
+    clean : CleanRun
+        The run without noise.
+    settings : NoiseSettings
+        From `noise_settings`.
+    noise : NetlistNoise
+        The table [[noise]]: an excess factor that is given goes before what models say.
+    carrier_frequency : float
+        In Hz.
+    middle : float
+        Time in s in the middle of what counts.
+
+    Returns
+    -------
+    NoiseSettings
+        With what the models say.
+    tuple of str
+        A warning where they could not be asked.
+    """
     instants = [middle + k / (INSTANTS * carrier_frequency) for k in range(INSTANTS)]
     try:
         return with_models(clean, settings, instants, gammas=noise.gamma is None), ()

@@ -6,6 +6,7 @@ from typing import Annotated, Literal
 
 from cosim.config import Quantity
 from cosim.errors import InputError
+from cosim.quantum.resonator import Resonator
 from cosim.schema import (
     DecayTime,
     Frequency,
@@ -32,7 +33,7 @@ class ResonatorTable:
         Midway between the resonances for |0> and |1>, in Hz.
     kappa_in, kappa_out, kappa_internal : float
         Decay rates over 2 pi in Hz: to the input, to the output, and inside. In reflection the one
-        port is `kappa_out`; of a hanger `kappa_out` counts both directions.
+        port is `kappa_in`; of a hanger `kappa_out` counts both directions.
     chi : float
         Half of the difference of the resonances for |1> and |0> over 2 pi, in Hz: negative for a
         transmon below its resonator.
@@ -46,12 +47,14 @@ class ResonatorTable:
         In place of `photons`: power at the resonator's input in dBm.
     start, length : float
         Of the pulse, in s.
-    edge : float
-        Duration of its edges in s: raised cosines that begin at `start` and end with the pulse.
     boost : float
         Factor on the pulse's field over its first part, which fills the resonator faster.
     boost_length : float
-        Duration of that part in s.
+        Duration of that part in s; 0: there is none.
+    ring_down : float
+        Factor on the pulse's field behind it, negative to empty the resonator.
+    ring_down_length : float
+        Duration of that part in s; 0: there is none.
     qubit_frequency, coupling, anharmonicity : float or None
         The qubit's own, in Hz: what the critical photon number, the decay through the resonator
         and the sign of `chi` are judged by.
@@ -59,48 +62,38 @@ class ResonatorTable:
 
     geometry: Literal["reflection", "transmission", "hanger"]
     frequency: PositiveFrequency
-    kappa_out: Annotated[float, Quantity("Hz", above=0.0)]
     chi: Frequency
-    start: Time
+    start: Annotated[float, Quantity("s", least=0.0)]
     length: PositiveTime
     kappa_in: Rate = 0.0
+    kappa_out: Rate = 0.0
     kappa_internal: Rate = 0.0
     chi_2: Frequency | None = None
     drive_frequency: PositiveFrequency | None = None
     photons: float | None = None
     power: Annotated[float, Quantity("dBm", least=-300.0, most=60.0)] | None = None
-    edge: Annotated[float, Quantity("s", least=0.0)] = 0.0
     boost: float = 1.0
     boost_length: Annotated[float, Quantity("s", least=0.0)] = 0.0
+    ring_down: float = 0.0
+    ring_down_length: Annotated[float, Quantity("s", least=0.0)] = 0.0
     qubit_frequency: PositiveFrequency | None = None
     coupling: PositiveFrequency | None = None
     anharmonicity: Frequency | None = None
 
     def __post_init__(self) -> None:
-        if self.chi == 0.0:
-            raise InputError(
-                "key 'chi': with 0 Hz the resonator answers alike for |0> and |1>, so that there "
-                "is nothing to read"
-            )
-        if self.geometry == "transmission" and self.kappa_in == 0.0:
-            raise InputError("a resonator in transmission needs the key 'kappa_in'")
-        if self.geometry != "transmission" and self.kappa_in != 0.0:
-            raise InputError(
-                f"a resonator in {self.geometry} has one port, of rate 'kappa_out'; 'kappa_in' "
-                "belongs to transmission"
-            )
+        self.resonator()
         if (self.photons is None) == (self.power is None):
             raise InputError("give 'photons' or 'power', one of them")
         if self.photons is not None and not 0.0 < self.photons <= 1e6:
             raise InputError(f"key 'photons': wanted more than 0, got {self.photons:g}")
-        if 2.0 * self.edge > self.length:
-            raise InputError(
-                f"key 'edge': both edges take longer than the pulse of {self.length:g} s"
-            )
         if not 0.0 < self.boost <= 100.0:
             raise InputError(f"key 'boost': wanted more than 0 and at most 100, got {self.boost:g}")
-        if self.boost_length > self.length:
-            raise InputError("key 'boost_length': wanted at most the pulse's 'length'")
+        if (self.boost != 1.0) != (self.boost_length > 0.0):
+            raise InputError("'boost' and 'boost_length' go together")
+        if self.boost_length >= self.length:
+            raise InputError("key 'boost_length': wanted less than the pulse's 'length'")
+        if (self.ring_down != 0.0) != (self.ring_down_length > 0.0):
+            raise InputError("'ring_down' and 'ring_down_length' go together")
         if (self.coupling is None) != (self.qubit_frequency is None):
             raise InputError("'qubit_frequency' and 'coupling' go together")
 
@@ -108,6 +101,24 @@ class ResonatorTable:
     def drive(self) -> float:
         """Frequency of the drive in Hz."""
         return self.frequency if self.drive_frequency is None else self.drive_frequency
+
+    @property
+    def stop(self) -> float:
+        """End of the pulse in s, the part that empties the resonator included."""
+        return self.start + self.length + self.ring_down_length
+
+    def resonator(self) -> Resonator:
+        """Give the resonator, with rates in rad/s."""
+        turn = 2.0 * math.pi
+        return Resonator(
+            self.geometry,
+            self.frequency,
+            turn * self.kappa_in,
+            turn * self.kappa_out,
+            turn * self.kappa_internal,
+            turn * self.chi,
+            None if self.chi_2 is None else turn * self.chi_2,
+        )
 
 
 @dataclass(frozen=True, slots=True)
@@ -191,6 +202,8 @@ class ReadoutTable:
         Peak-to-peak range of the converter in V.
     adc_rate : float or None
         Its rate in Hz.
+    adc_cycles : int
+        Of its clock, after the conversion of the last sample, until the decision stands.
     t1 : float
         Decay time of |1> in s during the readout.
     thermal_population : float
@@ -226,6 +239,7 @@ class ReadoutTable:
     adc_bits: int | None = None
     adc_full_scale: Annotated[float, Quantity("V", above=0.0)] | None = None
     adc_rate: PositiveFrequency | None = None
+    adc_cycles: int = 0
     t1: DecayTime = math.inf
     thermal_population: float = 0.0
     preparation_error: float = 0.0
@@ -251,6 +265,7 @@ class ReadoutTable:
             ("decay_times", 2, 1000),
             ("shots", 1000, 10**8),
             ("records", 100, 10**6),
+            ("adc_cycles", 0, 10**6),
         ):
             value = getattr(self, name)
             if not least <= value <= most:

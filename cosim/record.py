@@ -8,7 +8,7 @@ from importlib.metadata import version
 
 from cosim.capture import Capture
 from cosim.result import RunRecord
-from cosim.testbench import Testbench
+from cosim.testbench import Bench
 
 PACKAGES = ("qcosim", "numpy", "scipy", "qutip", "PySpice", "numba", "h5py")
 
@@ -43,13 +43,13 @@ class Clock:
 
 
 def make_record(
-    bench: Testbench, shot: Capture, carrier_frequency: float, clock: Clock
+    bench: Bench, shot: Capture, carrier_frequency: float, clock: Clock
 ) -> RunRecord:
     """Write down what is needed to check a run in two years.
 
     Parameters
     ----------
-    bench : Testbench
+    bench : Bench
         The testbench.
     shot : Capture
         The waveform and where it comes from.

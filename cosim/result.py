@@ -6,6 +6,8 @@ from collections.abc import Mapping
 from dataclasses import dataclass, field, fields, is_dataclass
 from typing import Any
 
+import numpy as np
+
 from cosim.circuit.netlist import DeckFile
 from cosim.dsp.pulse import PulseMeasures
 from cosim.errors import InputError
@@ -284,6 +286,31 @@ GATE_FIELDS = (
 )
 
 
+def gate_result(result: object) -> GateResult:
+    """Insist on the result of a gate.
+
+    Parameters
+    ----------
+    result : object
+        A result of any kind.
+
+    Returns
+    -------
+    GateResult
+        The same.
+
+    Raises
+    ------
+    InputError
+        If it is of another kind.
+    """
+    if not isinstance(result, GateResult):
+        title = getattr(result, "title", "")
+        named = f" ({title!r})" * bool(title)
+        raise InputError(f"this takes the result of a gate, got a {type(result).__name__}{named}")
+    return result
+
+
 def as_numbers(result: object) -> dict[str, Any]:
     """Turn a gate result into plain numbers for machines.
 
@@ -304,8 +331,7 @@ def as_numbers(result: object) -> dict[str, Any]:
     InputError
         If the result is of another kind.
     """
-    if not isinstance(result, GateResult):
-        raise InputError(f"wanted a gate result, got {type(result).__name__}")
+    result = gate_result(result)
     asked = ["reference_error"] * (not math.isnan(result.reference_error))
     asked += ["noise"] * (result.noise is not None)
     asked += ["spectators", "register_infidelity"] * bool(result.spectators)
@@ -335,7 +361,7 @@ def as_plain(value: Any) -> Any:
     Parameters
     ----------
     value : object
-        Dataclasses, tuples and lists of plain numbers and texts.
+        Dataclasses, tuples, lists and arrays of plain numbers and texts.
 
     Returns
     -------
@@ -345,6 +371,8 @@ def as_plain(value: Any) -> Any:
     """
     if isinstance(value, float):
         return value if math.isfinite(value) else None
+    if isinstance(value, np.ndarray):
+        return as_plain(value.tolist())
     if isinstance(value, (tuple, list)):
         return [as_plain(item) for item in value]
     if is_dataclass(value):

@@ -23,6 +23,7 @@ source with its breakpoints errs by 1e-4 and 5e-5; the area under the pulse come
 import hashlib
 from collections.abc import Iterator, Mapping
 from dataclasses import replace
+from functools import lru_cache
 from itertools import islice
 
 import numpy as np
@@ -250,11 +251,22 @@ def _data_file(name: str, waveform: Waveform, origin: DeckFile | None) -> DataFi
 
 
 def _rows(waveform: Waveform) -> bytes:
-    """Write the samples from t = 0 on, with all digits, and a last row that holds the value."""
+    """Write the samples from t = 0 on, with all digits, and a last row that holds the value.
+
+    Of samples in a row that are equal only the first and the last are written.
+    """
     later = waveform.t > 0.0
     stop = max(_HOLD, 2.0 * float(waveform.t[-1]))
     first = float(np.interp(0.0, waveform.t, waveform.v))
     t: FloatArray = np.concatenate(([0.0], waveform.t[later], [stop]))
     v: FloatArray = np.concatenate(([first], waveform.v[later], waveform.v[-1:]))
-    rows = zip(t.tolist(), v.tolist(), strict=True)
-    return "".join(f"{number_text(at)} {number_text(value)}\n" for at, value in rows).encode()
+    level = np.concatenate(([False], (v[1:-1] == v[:-2]) & (v[1:-1] == v[2:]), [False]))
+    values = map(number_text, v[~level].tolist())
+    rows = zip(_stamps(t[~level].tobytes()), values, strict=True)
+    return "".join(f"{at} {value}\n" for at, value in rows).encode()
+
+
+@lru_cache(maxsize=4)
+def _stamps(times: bytes) -> tuple[str, ...]:
+    """Write times; many waveforms stand on the same, and writing takes longer than all else."""
+    return tuple(map(number_text, np.frombuffer(times).tolist()))

@@ -1,0 +1,155 @@
+"""What the reader of a readout's result must know: warnings, each with its number."""
+
+import math
+
+from cosim.dsp.detection.assignment import AssignmentSplit
+from cosim.dsp.detection.shots import ShotCounts
+from cosim.outgoing import OutputLine, least_added_quanta, power_gain
+from cosim.quantum.qubit import Qubit
+from cosim.quantum.readout_limits import dispersive_guards
+from cosim.readout_noise import ARRIVING, ChainNoise
+from cosim.readout_schema import ResonatorTable
+from cosim.units import format_quantity
+
+UNEVEN = 0.05  # of the answers' sizes: beyond, the chain bends one state more than the other
+SLACK = 3.0  # standard errors between a count and the closed form
+COARSE = 0.05  # of the assignment error, that the interpolation of decays may be wrong by
+CLIPPED = 1e-3  # of the samples
+NEAR_CRITICAL = 0.1  # of the critical photon number
+CHI_OFF = 0.2  # of chi, against what the coupling makes
+UNSURE = 0.2  # relative standard error of the noise
+
+
+def dispersive_warnings(pulse: ResonatorTable, photons: float) -> tuple[str, ...]:
+    """Judge whether the qubit only shifts its resonator.
+
+    Parameters
+    ----------
+    pulse : ResonatorTable
+        With `coupling` and `qubit_frequency`, or nothing is judged.
+    photons : float
+        Largest mean photon number of the readout.
+
+    Returns
+    -------
+    tuple of str
+
+    Raises
+    ------
+    InputError
+        If chi has another sign than coupling, detuning and anharmonicity make.
+    """
+    if pulse.coupling is None or pulse.qubit_frequency is None:
+        return ()
+    levels = 2 if pulse.anharmonicity is None else 3
+    qubit = Qubit(pulse.qubit_frequency, levels, pulse.anharmonicity or 0.0)
+    found = dispersive_guards(pulse.resonator(), qubit, 2.0 * math.pi * pulse.coupling, photons)
+    warnings = []
+    if photons > NEAR_CRITICAL * found.critical_photons:
+        warnings.append(
+            f"up to {photons:.3g} photons, {photons / found.critical_photons:.2g} of the critical "
+            f"number {found.critical_photons:.3g}: the dispersive picture overrates the readout"
+        )
+    expected = found.expected_chi / (2.0 * math.pi)
+    if abs(pulse.chi - expected) > CHI_OFF * abs(expected):
+        warnings.append(
+            f"chi is {format_quantity(pulse.chi, 'Hz')}, and coupling, detuning and anharmonicity "
+            f"make {format_quantity(expected, 'Hz')}"
+        )
+    return tuple(warnings)
+
+
+def chain_warnings(
+    compression: tuple[float, float],
+    noise: ChainNoise,
+    added: float,
+    line: OutputLine,
+    split: AssignmentSplit,
+) -> tuple[str, ...]:
+    """Judge the chain.
+
+    Parameters
+    ----------
+    compression : tuple of two floats
+        Size of the answer to |0> and to |1> over that of a linear chain.
+    noise : ChainNoise
+        At its output.
+    added : float
+        Quanta at the resonator's output; NaN where that has no meaning.
+    line : OutputLine
+        In front of the netlist.
+    split : AssignmentSplit
+        The decisions.
+
+    Returns
+    -------
+    tuple of str
+    """
+    warnings = []
+    if abs(compression[0] - compression[1]) > UNEVEN:
+        state = int(compression[1] < compression[0])
+        warnings.append(
+            f"the chain saturates for |{state}> more than for |{1 - state}>: its answers are "
+            f"{compression[0]:.3g} (|0>) and {compression[1]:.3g} (|1>) of those of a linear chain"
+        )
+    least = least_added_quanta(max(power_gain(line.stages), 1.0)) if line.stages else 0.0
+    if not math.isnan(added) and added < least:
+        warnings.append(
+            f"the chain adds {added:.3g} quanta, less than the {least:.3g} that one which keeps "
+            "the phase must add: a noise temperature or a temperature of noise is too low"
+        )
+    if noise.method == ARRIVING:
+        warnings.append(
+            "the netlist's own noise is not in it: add a table [[noise]] with acts_on = "
+            '"probe" and from = "netlist"'
+        )
+    if noise.relative_error > UNSURE:
+        warnings.append(
+            f"the noise is known within {noise.relative_error:.0%} of its density: more 'seeds' "
+            "in [[noise]] make it surer"
+        )
+    if split.clipped > CLIPPED:
+        warnings.append(
+            f"{split.clipped:.2%} of the samples are outside the converter's range: a larger "
+            "'adc_full_scale', or less gain"
+        )
+    if split.interpolation_error > COARSE * split.assignment_error:
+        warnings.append(
+            f"too few times of decay are simulated: without every other one the error changes by "
+            f"{split.interpolation_error:.2g}; more 'decay_times' in [readout]"
+        )
+    return tuple(warnings)
+
+
+def shot_warnings(
+    split: AssignmentSplit, shots: ShotCounts, records: ShotCounts
+) -> tuple[str, ...]:
+    """Compare counted decisions with those in closed form.
+
+    Parameters
+    ----------
+    split : AssignmentSplit
+        In closed form.
+    shots, records : ShotCounts
+        Counted, integrated and as whole records.
+
+    Returns
+    -------
+    tuple of str
+    """
+    warnings = []
+    for name, counts in (("integrated shots", shots), ("whole records", records)):
+        off = counts.deviation(split.assignment_matrix)
+        if abs(off) > SLACK:
+            why = ""
+            if split.lsb_over_sigma > 1.0:
+                why = (
+                    f"; a step of the converter is {split.lsb_over_sigma:.2g} of the noise, so "
+                    "that rounding is not like noise"
+                )
+            warnings.append(
+                f"{counts.count} {name} give an assignment error of "
+                f"{counts.assignment_error:.3g}, {abs(off):.1f} standard errors from "
+                f"{split.assignment_error:.3g} in closed form{why}"
+            )
+    return tuple(warnings)

@@ -1,0 +1,296 @@
+"""What a readout sends into the netlist: the answers of a resonator, or the states of a sensor."""
+
+import math
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from cosim.dsp.noise.thermal import Attenuator
+from cosim.errors import TestbenchError
+from cosim.outgoing import Amplifier, OutputLine, emf_envelope
+from cosim.quantum.incident import (
+    IncidentField,
+    incident_amplitude,
+    sample_drive,
+    two_step_drive,
+)
+from cosim.quantum.resonator import Resonator, field_rate
+from cosim.quantum.resonator_field import Field, evolve_field, fields_with_jump
+from cosim.readout_schema import ReadoutTable, ResonatorTable
+from cosim.waveform import ComplexArray, FloatArray, Waveform
+
+# Samples of the field in the time 1/kappa and in one turn against the drive.
+FINE = 50
+# Part of the answer with which the chain's response to small signals is found.
+SMALL = 0.05
+GROUND, EXCITED, SECOND, REST = "0", "1", "2", "rest"
+
+
+@dataclass(frozen=True, slots=True)
+class Answers:
+    """What the netlist is asked, run by run, as the EMF of its source.
+
+    Parameters
+    ----------
+    drive : IncidentField
+        The field towards the resonator, from the deck's t = 0 on.
+    fields : dict of Field
+        Run -> field in and behind the resonator, each of shape (n,).
+    emf : dict of ndarray of complex, each of shape (n,)
+        Run -> I + jQ of the EMF in V on the grid of `drive`: "0", "1", "2", "decay 1" and so on,
+        "excitation 1" and so on, and "rest" without any.
+    decay_times, excitation_times : ndarray, shape (k,)
+        Times in s at which |1> decays and |0> is excited in these runs.
+    """
+
+    drive: IncidentField
+    fields: dict[str, Field]
+    emf: dict[str, ComplexArray]
+    decay_times: FloatArray = field(metadata={"unit": "s"})
+    excitation_times: FloatArray = field(metadata={"unit": "s"})
+
+
+def output_line(table: ReadoutTable) -> OutputLine:
+    """Give the way from the resonator to the deck.
+
+    Parameters
+    ----------
+    table : ReadoutTable
+        The table [readout].
+
+    Returns
+    -------
+    OutputLine
+    """
+    stages: list[Attenuator | Amplifier] = [
+        Attenuator(10.0 ** (decibels / 10.0), kelvin) for decibels, kelvin in table.stages
+    ]
+    if table.gain != 0.0 or table.noise_temperature != 0.0:
+        stages.append(Amplifier(table.gain, table.noise_temperature))
+    return OutputLine(tuple(stages), impedance=table.impedance)
+
+
+def make_answers(pulse: ResonatorTable, table: ReadoutTable, stop: float) -> Answers:
+    """Work out what leaves the resonator for every run of the netlist.
+
+    Parameters
+    ----------
+    pulse : ResonatorTable
+        The resonator and its drive.
+    table : ReadoutTable
+        What is asked of the readout.
+    stop : float
+        End of the run in s.
+
+    Returns
+    -------
+    Answers
+
+    Raises
+    ------
+    TestbenchError
+        If the pulse does not end within the run, or the window lies outside of it.
+    """
+    resonator = pulse.resonator()
+    if pulse.stop > stop:
+        raise TestbenchError(
+            f"table [resonator]: the pulse ends at {1e9 * pulse.stop:g} ns, behind the run's end "
+            f"at {1e9 * stop:g} ns",
+            hint="shorten the pulse, or say a later 'stop' in [netlist]",
+        )
+    check_readout_window(table, stop)
+    drive = incident_field(pulse, resonator, stop)
+    line = output_line(table)
+    fields = {name: evolve_field(resonator, drive, level) for name, level in _levels(pulse)}
+    first = pulse.start
+    decays = _inner_times(first, table.window[1], table.decay_times if _decays(table) else 0)
+    rises = _inner_times(
+        first, table.window[1], max(2, table.decay_times // 2) if _excites(table) else 0
+    )
+    fields |= _jumps(resonator, drive, decays, "decay", 1, 0)
+    fields |= _jumps(resonator, drive, rises, "excitation", 0, 1)
+    emf = {name: emf_envelope(one.outside, pulse.drive, line) for name, one in fields.items()}
+    emf[REST] = np.zeros(drive.samples.size, dtype=np.complex128)
+    return Answers(drive, fields, emf, decays, rises)
+
+
+def incident_field(pulse: ResonatorTable, resonator: Resonator, stop: float) -> IncidentField:
+    """Give the field that drives the resonator.
+
+    Parameters
+    ----------
+    pulse : ResonatorTable
+        The table [resonator].
+    resonator : Resonator
+        Its resonator.
+    stop : float
+        End of the run in s.
+
+    Returns
+    -------
+    IncidentField
+        From t = 0 of the deck to beyond its end.
+    """
+    steps = two_step_drive(
+        drive_level(pulse, resonator),
+        pulse.length,
+        boost=pulse.boost,
+        boost_length=pulse.boost_length,
+        ring_down=pulse.ring_down,
+        ring_down_length=pulse.ring_down_length,
+    )
+    rates = [abs(complex(field_rate(resonator, state, pulse.drive))) for state in (0, 1)]
+    step = min(1.0 / (FINE * max(rates)), pulse.length / 200.0)
+    count = math.ceil(stop / step) + 2
+    return sample_drive(steps, pulse.drive, step, count, pulse.start)
+
+
+def drive_level(pulse: ResonatorTable, resonator: Resonator) -> float:
+    """Give the incident field of the pulse's long part.
+
+    Parameters
+    ----------
+    pulse : ResonatorTable
+        With `photons`, the mean of those for |0> and |1> in steady state, or with `power`.
+    resonator : Resonator
+        Its resonator.
+
+    Returns
+    -------
+    float
+        In sqrt(photon/s).
+    """
+    if pulse.power is not None:
+        return incident_amplitude(1e-3 * 10.0 ** (pulse.power / 10.0), pulse.drive)
+    assert pulse.photons is not None  # The table insists on one of the two.
+    per_flux = [
+        resonator.driven_rate / abs(complex(field_rate(resonator, state, pulse.drive))) ** 2
+        for state in (0, 1)
+    ]
+    return math.sqrt(pulse.photons / (0.5 * sum(per_flux)))
+
+
+def source_waveforms(
+    emf: ComplexArray, answers: Answers, table: ReadoutTable, step: float, stop: float
+) -> dict[str, Waveform]:
+    """Give what the deck's sources play in one run.
+
+    Parameters
+    ----------
+    emf : ndarray of complex, shape (n,)
+        One of the runs of `answers`.
+    answers : Answers
+        With the grid.
+    table : ReadoutTable
+        At which frequency the answer enters.
+    step : float
+        Time step of the simulator in s.
+    stop : float
+        End of the run in s.
+
+    Returns
+    -------
+    dict of Waveform
+        By source, in V.
+    """
+    assert table.source is not None  # A testbench with a resonator insists on it.
+    grid = answers.drive.t
+    if table.source_q is not None:
+        return {
+            table.source: Waveform(grid, emf.real.copy(), unit="V"),
+            table.source_q: Waveform(grid, emf.imag.copy(), unit="V"),
+        }
+    t = np.asarray(step * np.arange(math.ceil(stop / step) + 2), dtype=np.float64)
+    turning = np.interp(t, grid, emf.real) + 1j * np.interp(t, grid, emf.imag)
+    # Straight lines between the samples of a carrier are weaker by this factor.
+    turn = 2.0 * math.pi * (table.intermediate_frequency or answers.drive.frequency)
+    weaker = float(np.sinc(turn * step / (2.0 * math.pi)) ** 2)
+    wave = (turning * np.exp(1j * turn * t)).real / weaker
+    return {table.source: Waveform(t, wave, unit="V")}
+
+
+def input_frequency_of(pulse: ResonatorTable, table: ReadoutTable) -> float:
+    """Give the frequency in Hz at which the answer enters; 0 for a baseband pair."""
+    if table.signal == "baseband":
+        return 0.0
+    return table.intermediate_frequency or pulse.drive
+
+
+def answer_emf(answers: Answers, name: str) -> ComplexArray:
+    """Give the EMF of a run by its name.
+
+    Parameters
+    ----------
+    answers : Answers
+        From `make_answers`.
+    name : str
+        One of its runs, or "small" and one of them.
+
+    Returns
+    -------
+    ndarray of complex, shape (n,)
+        I + jQ in V.
+    """
+    whole = name.removeprefix("small ")
+    return SMALL * answers.emf[whole] if whole != name else answers.emf[name]
+
+
+def check_readout_window(table: ReadoutTable, stop: float) -> None:
+    """Refuse a window of integration that does not lie within the run.
+
+    Parameters
+    ----------
+    table : ReadoutTable
+        The table [readout].
+    stop : float
+        End of the run in s.
+
+    Raises
+    ------
+    TestbenchError
+        Naming both.
+    """
+    first, last = table.window
+    if first < 0.0 or last > stop * (1.0 + 1e-9):
+        raise TestbenchError(
+            f"table [readout], key 'window': {1e9 * first:g} ns to {1e9 * last:g} ns does not lie "
+            f"within the run of 0 ns to {1e9 * stop:g} ns"
+        )
+
+
+def _levels(pulse: ResonatorTable) -> list[tuple[str, int]]:
+    levels = [(GROUND, 0), (EXCITED, 1)]
+    return levels if pulse.chi_2 is None else [*levels, (SECOND, 2)]
+
+
+def _decays(table: ReadoutTable) -> bool:
+    return math.isfinite(table.t1)
+
+
+def _excites(table: ReadoutTable) -> bool:
+    return _decays(table) and table.thermal_population > 0.0
+
+
+def _inner_times(first: float, last: float, count: int) -> FloatArray:
+    """Spread times of jumps over a stretch; at its ends the runs without a jump stand."""
+    return np.asarray(first + (last - first) * (np.arange(count) + 0.5) / max(count, 1))
+
+
+def _jumps(
+    resonator: Resonator,
+    drive: IncidentField,
+    times: FloatArray,
+    name: str,
+    before: int,
+    after: int,
+) -> Mapping[str, Field]:
+    if not times.size:
+        return {}
+    found = fields_with_jump(resonator, drive, times, before, after)
+    return {
+        f"{name} {number}": Field(found.step, found.frequency, inside, outside)
+        for number, (inside, outside) in enumerate(
+            zip(found.inside, found.outside, strict=True), start=1
+        )
+    }

@@ -1,0 +1,376 @@
+"""The netlist of a readout: its runs, and the records that its outputs give."""
+
+import math
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, replace
+from pathlib import Path
+
+import numpy as np
+from scipy.integrate import cumulative_trapezoid
+
+from cosim.capture import Capture, check_steps
+from cosim.circuit.analysis import TransientRequest, TransientResult
+from cosim.circuit.confidential import Roots, check_roots, kept_files, withhold
+from cosim.circuit.deck import Deck, PreparedDeck
+from cosim.circuit.family import simulate_family
+from cosim.circuit.netlist import resolve_saves, with_parameters
+from cosim.circuit.preparation import prepare
+from cosim.circuit.probe import Probe, evaluate_probe, parse_probe
+from cosim.circuit.stimulus import with_stimuli
+from cosim.decks import altered_deck, netlist_of, read_deck, roots_of
+from cosim.dsp.demodulation import demodulate
+from cosim.errors import CosimError, DeckError, InputError, TestbenchError
+from cosim.readout_input import check_readout_window
+from cosim.readout_schema import ReadoutTable
+from cosim.stimuli import apply_stimuli
+from cosim.testbench import ReadoutBench
+from cosim.waveform import ComplexArray, FloatArray, Waveform
+
+DEFAULT_STEPS_PER_PERIOD = 80
+DEFAULT_SAMPLES = 400  # of a record, where no converter says more
+PER_CONVERSION = 4  # samples of a record in one of the converter's: its filter is simulated
+
+
+@dataclass(frozen=True, slots=True)
+class ReadoutPlan:
+    """A deck made ready for a readout, and what will be asked of the simulator.
+
+    Parameters
+    ----------
+    deck : Deck
+        With parameters, sections, instances and stimuli applied; its source as it stands there.
+    request : TransientRequest
+        The transient on the fixed grid.
+    probes : tuple of Probe
+        One output, or I and Q.
+    confidential : Roots
+        Folders whose files are kept as path and SHA-256 only.
+    notices : tuple of str
+        What the reader must know.
+    """
+
+    deck: Deck
+    request: TransientRequest
+    probes: tuple[Probe, ...]
+    confidential: Roots
+    notices: tuple[str, ...]
+
+    def half_step(self) -> "ReadoutPlan":
+        """The same runs at half the step and tighter tolerances, for the numerical floor."""
+        request = replace(
+            self.request,
+            step=self.request.step / 2.0,
+            tolerances=self.request.tolerances.tighter(),
+            output_step=self.request.step / 2.0,
+        )
+        return replace(self, request=request)
+
+
+@dataclass(frozen=True, slots=True)
+class Grid:
+    """The samples of a record.
+
+    Parameters
+    ----------
+    start : float
+        Time in s at which the first sample's cell begins.
+    step : float
+        In s.
+    count : int
+        Samples.
+    """
+
+    start: float
+    step: float
+    count: int
+
+    @property
+    def time(self) -> FloatArray:
+        """Times in s of the ends of the cells, from the first, shape (count,)."""
+        return np.asarray(self.step * np.arange(1, self.count + 1), dtype=np.float64)
+
+
+def make_readout_plan(bench: ReadoutBench, frequency: float) -> ReadoutPlan:
+    """Read the deck of a readout and work out its transient; nothing is simulated.
+
+    Parameters
+    ----------
+    bench : ReadoutBench
+        The testbench.
+    frequency : float
+        At which the answer enters in Hz; 0 where the step cannot follow from it.
+
+    Returns
+    -------
+    ReadoutPlan
+
+    Raises
+    ------
+    DeckError, ProbeError, TestbenchError
+        If the deck, an output or a time is wrong.
+    """
+    table = netlist_of(bench)
+    deck = read_deck(bench)
+    roots = roots_of(bench)
+    check_roots(deck, roots)
+    deck = altered_deck(bench, deck)
+    stop = table.stop if table.stop is not None else deck.tran.stop if deck.tran else math.nan
+    if math.isnan(stop):
+        raise TestbenchError(
+            f"{deck.path} has no .tran card, so the testbench must say when to stop",
+            hint='add to [netlist], for instance: stop = "600 ns"',
+        )
+    check_readout_window(bench.readout, stop)
+    step, notices = _time_step(bench, deck, frequency)
+    if bench.stimulus:
+        deck, coarse = apply_stimuli(
+            deck, bench.stimulus, folder=Path(bench.folder), stop=stop, step=step
+        )
+        notices += coarse
+    withheld = check_roots(deck, roots)
+    probes = _probes(bench, deck)
+    names = [name for probe in probes for _, name in probe.terms]
+    request = TransientRequest(
+        stop=stop,
+        step=step,
+        initial=table.initial or ("uic" if deck.tran is not None and deck.tran.uic else "op"),
+        saves=tuple(dict.fromkeys([*names, *table.save])),
+        temperature=table.temperature,
+        seed=table.seed,
+        time_limit=table.time_limit,
+        output_step=step,
+    )
+    return ReadoutPlan(deck, request, probes, roots, (*deck.notices, *withheld, *notices))
+
+
+def simulate_answers(
+    plan: ReadoutPlan, waveforms: Sequence[Mapping[str, Waveform]]
+) -> list[TransientResult]:
+    """Run the netlist once for each answer, with one load of the deck where that will do.
+
+    Parameters
+    ----------
+    plan : ReadoutPlan
+        From `make_readout_plan`.
+    waveforms : sequence of mapping of str to Waveform
+        For each run the sources and what they play, in V.
+
+    Returns
+    -------
+    list of TransientResult
+        In the order of the runs.
+
+    Raises
+    ------
+    InputError, SimulationError
+        If a source does not exist, or a run fails.
+    """
+    decks = [with_stimuli(plan.deck, waves) for waves in waveforms]
+    return _simulate(plan, [prepare(deck, plan.request) for deck in decks])
+
+
+def simulate_values(
+    plan: ReadoutPlan, parameters: Sequence[Mapping[str, float]]
+) -> list[TransientResult]:
+    """Run the netlist once for each set of its parameters; else as `simulate_answers`.
+
+    Parameters
+    ----------
+    plan : ReadoutPlan
+        From `make_readout_plan`.
+    parameters : sequence of mapping of str to float
+        For each run values of the deck's .param.
+
+    Returns
+    -------
+    list of TransientResult
+        In the order of the runs.
+
+    Raises
+    ------
+    InputError, SimulationError
+        If a parameter does not exist, or a run fails.
+    """
+    decks = [with_parameters(plan.deck, values) for values in parameters]
+    return _simulate(plan, [prepare(deck, plan.request) for deck in decks])
+
+
+def record_grid(table: ReadoutTable, begin: float) -> Grid:
+    """Give the grid of the records, which end with the window.
+
+    Parameters
+    ----------
+    table : ReadoutTable
+        With the window, and the converter or the rate.
+    begin : float
+        Time in s from which on the state counts, at which they begin unless the window does
+        before.
+
+    Returns
+    -------
+    Grid
+
+    Raises
+    ------
+    InputError
+        If the window holds less than two samples.
+    """
+    first, last = table.window
+    if table.adc_rate is not None:
+        rate = PER_CONVERSION * table.adc_rate
+    else:
+        rate = table.output_rate or DEFAULT_SAMPLES / (last - first)
+    if (last - first) * rate < 2.0:
+        raise InputError(
+            f"table [readout]: the window of {1e9 * (last - first):g} ns holds less than two "
+            f"samples at {rate:g} Hz"
+        )
+    # The window begins with a sample.
+    before = max(0, math.ceil((first - begin) * rate * (1.0 - 1e-9)))
+    count = before + math.floor((last - first) * rate * (1.0 + 1e-9))
+    return Grid(first - before / rate, 1.0 / rate, count)
+
+
+def read_record(
+    plan: ReadoutPlan, table: ReadoutTable, grid: Grid, result: TransientResult
+) -> ComplexArray:
+    """Read the outputs of one run as a record.
+
+    Parameters
+    ----------
+    plan : ReadoutPlan
+        With the probes.
+    table : ReadoutTable
+        At which frequency the output is.
+    grid : Grid
+        Of the record.
+    result : TransientResult
+        The run.
+
+    Returns
+    -------
+    ndarray of complex, shape (count,)
+        I + jQ in V, each the mean over its cell: what an integrator gives that is reset.
+
+    Raises
+    ------
+    WaveformError
+        If the output cannot be demodulated.
+    """
+    waves = [evaluate_probe(probe, result.vectors) for probe in plan.probes]
+    return outputs_record(result.time, waves, table, grid)
+
+
+def outputs_record(
+    time: FloatArray, waves: Sequence[FloatArray], table: ReadoutTable, grid: Grid
+) -> ComplexArray:
+    """Make a record of the voltages of one output, or of I and Q; else as `read_record`.
+
+    Parameters
+    ----------
+    time : ndarray, shape (n,)
+        In s.
+    waves : sequence of ndarray, each of shape (n,)
+        In V.
+    table, grid
+        As in `read_record`.
+
+    Returns
+    -------
+    ndarray of complex, shape (count,)
+        I + jQ in V.
+
+    Raises
+    ------
+    WaveformError
+        If the output cannot be demodulated.
+    """
+    if table.output_frequency is not None:
+        found = demodulate(Waveform(time, waves[0], unit="V"), table.output_frequency)
+        return _cell_means(found.t, found.iq, grid)
+    iq = waves[0].astype(np.complex128)
+    if len(waves) > 1:
+        iq = iq + 1j * waves[1]
+    return _cell_means(time, iq, grid)
+
+
+def capture_of(plan: ReadoutPlan, result: TransientResult) -> Capture:
+    """Give one run for the record, without what is confidential.
+
+    Parameters
+    ----------
+    plan : ReadoutPlan
+        The plan.
+    result : TransientResult
+        Its run.
+
+    Returns
+    -------
+    Capture
+        The first output.
+    """
+    result = withhold(result, plan.deck, plan.confidential)
+    wave = Waveform(result.time, evaluate_probe(plan.probes[0], result.vectors), unit="V")
+    files = kept_files(plan.deck.files, plan.confidential)
+    return Capture(wave, {}, plan.request.step, files, plan.notices, result)
+
+
+def _cell_means(time: FloatArray, iq: ComplexArray, grid: Grid) -> ComplexArray:
+    edges = grid.start + grid.step * np.arange(grid.count + 1)
+    area = cumulative_trapezoid(iq, time, initial=0)
+    at = np.interp(edges, time, area.real) + 1j * np.interp(edges, time, area.imag)
+    return np.asarray(np.diff(at) / grid.step)
+
+
+def _simulate(plan: ReadoutPlan, ready: Sequence[PreparedDeck]) -> list[TransientResult]:
+    found = []
+    for outcome in simulate_family(ready, [plan.request] * len(ready)):
+        if isinstance(outcome, CosimError):
+            raise outcome
+        found.append(outcome)
+    return found
+
+
+def _time_step(bench: ReadoutBench, deck: Deck, frequency: float) -> tuple[float, tuple[str, ...]]:
+    table = netlist_of(bench)
+    largest = table.max_step
+    if largest is None and table.steps_per_period is None and deck.tran is not None:
+        largest = deck.tran.max_step
+    if frequency == 0.0:
+        if largest is None:
+            raise TestbenchError(
+                "without a frequency at which the answer enters, the time step cannot follow from "
+                "it",
+                hint='add to [netlist], for instance: max_step = "50 ps"',
+            )
+        return largest, ()
+    period = 1.0 / frequency
+    if table.steps_per_period is not None:
+        count = table.steps_per_period
+    elif largest is not None:
+        count = math.ceil(period / largest * (1.0 - 1e-9))
+    else:
+        count = DEFAULT_STEPS_PER_PERIOD
+    return period / count, check_steps(count, period)
+
+
+def _probes(bench: ReadoutBench, deck: Deck) -> tuple[Probe, ...]:
+    probes = []
+    for key in ("probe", "decision", "i", "q"):
+        text = getattr(bench.readout, key)
+        if text is None:
+            continue
+        try:
+            probe = parse_probe(text)
+            resolve_saves(deck, [name for _, name in probe.terms])
+        except DeckError as error:
+            where = f"{bench.source or 'the testbench'}, table [readout], key '{key}'"
+            error.args = (f"{where}: {error.message}",)
+            raise
+        if probe.unit != "V":
+            raise TestbenchError(
+                f"table [readout], key '{key}': wanted a voltage, got '{text}', which is a current",
+                hint="add a resistor that makes a voltage of it, as the next stage would",
+            )
+        probes.append(probe)
+    return tuple(probes)
