@@ -180,15 +180,17 @@ def split_assignment(
     The average over the time of a decay: J. Gambetta et al., "Protocols for optimal readout of
     qubits using a continuous quantum nondemolition measurement", Phys. Rev. A 76, 012325 (2007).
     """
-    received = receive(output, detector)
-    rounded = project(received, detector.weights)
-    check_transitions(rounded, transitions)
-    chain = rounded
+    sampled = receive(output, detector, rounding=False)
+    chain = rounded = linear = project(sampled, detector.weights)
+    check_transitions(chain, transitions)
+    received = sampled
     if detector.adc is not None:
-        chain = project(receive(output, detector, rounding=False), detector.weights)
-    linear = chain
+        received = receive(output, detector, lags=sampled.lags)
+        rounded = project(received, detector.weights)
     if output.linear is not None:
-        linear = project(receive(output.linearised(), detector, rounding=False), detector.weights)
+        known = sampled.lags if output.linear_noise is None else None
+        straight = receive(output.linearised(), detector, rounding=False, lags=known)
+        linear = project(straight, detector.weights)
     nothing, sure = Transitions(), Preparation()
     upwards = replace(transitions, down=0.0)
     steps = (

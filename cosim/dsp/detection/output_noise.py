@@ -232,7 +232,7 @@ def plan_noise(noise: OutputNoise, step: float, count: int) -> NoiseSpectrumPlan
     period = min(longest, int(next_fast_len(count + memory)))
     powers = circulant_powers(lags, period)
     total = np.abs(powers).sum()
-    error = -float(powers[powers < 0].sum() / total) if total > 0 else 0.0
+    error = float(np.abs(powers[powers < 0]).sum() / total) if total > 0 else 0.0
     return NoiseSpectrumPlan(
         np.sqrt(np.maximum(powers, 0.0) / (2 * period)), noise.quadratures, error
     )

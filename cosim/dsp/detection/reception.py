@@ -222,7 +222,13 @@ def sampling_window(records: Records, detector: Detector) -> tuple[int, int, int
     return every, first, count
 
 
-def receive(output: ChainOutput, detector: Detector, *, rounding: bool = True) -> Received:
+def receive(
+    output: ChainOutput,
+    detector: Detector,
+    *,
+    rounding: bool = True,
+    lags: ComplexArray | None = None,
+) -> Received:
     """Filter, sample and cut out the window.
 
     Parameters
@@ -231,6 +237,8 @@ def receive(output: ChainOutput, detector: Detector, *, rounding: bool = True) -
     detector : Detector
     rounding : bool
         Whether the converter rounds and clips; the filter and the sampling stay without.
+    lags : ndarray of complex, shape (2, n), or None
+        The covariance without rounding, where it is known from the same noise.
 
     Returns
     -------
@@ -256,12 +264,7 @@ def receive(output: ChainOutput, detector: Detector, *, rounding: bool = True) -
     rows = rows[:, every * first :: every][:, :count]
     if output.noise.quadratures == 1:
         rows = rows.real + 0j
-    distinct = output.noises if output.excited_noise is not None else output.noises[:1]
-    if adc is None:
-        lags = [noise_lags(noise, records.step, count) for noise in distinct]
-    else:
-        lags = [sampled_lags(adc, noise, records.step, count) for noise in distinct]
-    both = np.array([lags[0], lags[-1]])
+    both = _covariances(output, adc, count) if lags is None else lags.copy()
     sigmas = np.sqrt(both[:, 0].real / output.noise.quadratures)
     if not sigmas.min() > 0:
         raise InputError(
@@ -289,3 +292,14 @@ def receive(output: ChainOutput, detector: Detector, *, rounding: bool = True) -
         lsb,
         clipped,
     )
+
+
+def _covariances(output: ChainOutput, adc: Adc | None, count: int) -> ComplexArray:
+    """Covariance of the samples for each state in V**2 without rounding, shape (2, count)."""
+    step = output.records.step
+    distinct = output.noises if output.excited_noise is not None else output.noises[:1]
+    found = [
+        noise_lags(noise, step, count) if adc is None else sampled_lags(adc, noise, step, count)
+        for noise in distinct
+    ]
+    return np.array([found[0], found[-1]])
