@@ -1,7 +1,8 @@
 """From circuit netlists to qubit dynamics.
 
     bench = cosim.load_testbench("x90.toml")     a testbench: netlist, drive, qubit, gate
-    result = cosim.run(bench)                    a GateResult, from ngspice to the fidelity
+    result = cosim.run(bench)                    a GateResult, from ngspice to the fidelity, or
+                                                 a ReadoutResult, to the assignment error
     cosim.save(result, "x90.h5")                 an archive in HDF5
     again = cosim.load("x90.h5")
 
@@ -26,8 +27,9 @@ if TYPE_CHECKING:
         WaveformError,
     )
     from cosim.quantum.operators import OperatorSystem, operator_system
+    from cosim.readout_result import ReadoutResult
     from cosim.result import Fidelity, GateResult
-    from cosim.testbench import Testbench, load_testbench, make_testbench
+    from cosim.testbench import ReadoutBench, Testbench, load_testbench, make_testbench
     from cosim.waveform import Envelope, Waveform
 
 __all__ = [
@@ -39,6 +41,8 @@ __all__ = [
     "GateResult",
     "InputError",
     "OperatorSystem",
+    "ReadoutBench",
+    "ReadoutResult",
     "SimulationError",
     "Testbench",
     "TestbenchError",
@@ -64,8 +68,9 @@ _HOMES = {
         "WaveformError",
     ),
     "cosim.quantum.operators": ("OperatorSystem", "operator_system"),
+    "cosim.readout_result": ("ReadoutResult",),
     "cosim.result": ("Fidelity", "GateResult"),
-    "cosim.testbench": ("Testbench", "load_testbench", "make_testbench"),
+    "cosim.testbench": ("ReadoutBench", "Testbench", "load_testbench", "make_testbench"),
     "cosim.waveform": ("Envelope", "Waveform"),
 }
 

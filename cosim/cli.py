@@ -36,6 +36,8 @@ from cosim.sweep_cli import (
 )
 
 if TYPE_CHECKING:
+    from cosim.readout_result import ReadoutResult
+    from cosim.result import GateResult
     from cosim.testbench import Bench
 
 app = typer.Typer(
@@ -109,13 +111,11 @@ def run(
         ),
     ] = None,
 ) -> None:
-    """Run a testbench from the netlist to the fidelity."""
+    """Run a testbench from the netlist to the fidelity, or to the assignment error."""
     from dataclasses import replace
 
     from cosim.dispatch import run as run_testbench
     from cosim.dispatch import save
-    from cosim.result import as_numbers
-    from cosim.terminal import result_table
     from cosim.testbench import load_testbench
 
     check_output(archive, ".h5")
@@ -128,17 +128,12 @@ def run(
     with _progress(bench) as report:
         result = run_testbench(bench, progress=report)
     # Numbers first: what goes wrong with a file must not take them away.
-    if json_output:
-        typer.echo(json.dumps(as_numbers(result), indent=2))
-    else:
-        Console(highlight=False).print(result_table(result))
+    _print_result(result, json_output)
     if archive is not None:
         number = save(result, archive)
         typer.echo(f"archived as run {number} of {archive}", err=True)
     if plot is not None:
-        from cosim.figures import plot_gate
-
-        plot_gate(result, plot)
+        _plot_result(result, plot)
         typer.echo(f"figure in {plot}", err=True)
 
 
@@ -160,9 +155,9 @@ def show(
     """Show what is in an archive: its runs, one of them, or what a sweep tells."""
     from cosim.archive import read_plan, read_table
     from cosim.dispatch import load
-    from cosim.result import as_columns, as_numbers
+    from cosim.result import as_columns
     from cosim.sweep_show import show_sweep, show_sweep_run, testbench_text
-    from cosim.terminal import record_table, result_table, runs_table
+    from cosim.terminal import record_table, runs_table
 
     check_output(plot, ".png", ".pdf", ".svg")
     console = Console(highlight=False)
@@ -193,11 +188,10 @@ def show(
     result = load(archive, run=run)
     if log:
         typer.echo(json.dumps(result.run.log) if json_output else "\n".join(result.run.log))
-    elif json_output:
-        typer.echo(json.dumps(as_numbers(result), indent=2))
     else:
-        console.print(result_table(result))
-        console.print(record_table(result))
+        _print_result(result, json_output)
+        if not json_output:
+            console.print(record_table(result))
 
 
 @app.command(epilog="Example: qcosim export x90.h5 --run 1 --deck x90_deck")
@@ -265,6 +259,33 @@ def compare(
         typer.echo(json.dumps(as_plain(found), indent=2))
     else:
         Console(highlight=False).print(comparison_table(found))
+
+
+def _print_result(result: "GateResult | ReadoutResult", json_output: bool) -> None:
+    from cosim.readout_result import ReadoutResult, readout_numbers
+    from cosim.readout_terminal import readout_table
+    from cosim.result import as_numbers
+    from cosim.terminal import result_table
+
+    if json_output:
+        numbers = (
+            readout_numbers(result) if isinstance(result, ReadoutResult) else as_numbers(result)
+        )
+        typer.echo(json.dumps(numbers, indent=2))
+        return
+    table = readout_table(result) if isinstance(result, ReadoutResult) else result_table(result)
+    Console(highlight=False).print(table)
+
+
+def _plot_result(result: "GateResult | ReadoutResult", path: Path) -> None:
+    from cosim.figures import plot_gate
+    from cosim.readout_figures import plot_readout
+    from cosim.readout_result import ReadoutResult
+
+    if isinstance(result, ReadoutResult):
+        plot_readout(result, path)
+    else:
+        plot_gate(result, path)
 
 
 def _refuse_failed(archive: Path, run: int | None) -> None:

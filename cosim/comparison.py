@@ -6,7 +6,8 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from cosim.result import GateResult
+from cosim.readout_result import ReadoutResult
+from cosim.result import GateResult, gate_result
 
 # The numbers compared, by their name in the result, with the name of their error bar if any.
 NUMBERS: dict[str, str] = {
@@ -81,8 +82,10 @@ class Comparison:
     inputs: tuple[str, ...]
 
 
-def compare_runs(first: GateResult, second: GateResult) -> Comparison:
-    """Compare two runs.
+def compare_runs(
+    first: GateResult | ReadoutResult, second: GateResult | ReadoutResult
+) -> Comparison:
+    """Compare two runs of a gate.
 
     Parameters
     ----------
@@ -93,7 +96,13 @@ def compare_runs(first: GateResult, second: GateResult) -> Comparison:
     -------
     Comparison
         Changes are second minus first.
+
+    Raises
+    ------
+    InputError
+        If one is of a readout.
     """
+    first, second = gate_result(first), gate_result(second)
     numbers = tuple(
         Difference(name, _number(first, name), _number(second, name), _bar(first, second, bar))
         for name, bar in NUMBERS.items()

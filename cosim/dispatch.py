@@ -4,11 +4,13 @@ import os
 from collections.abc import Callable
 
 from cosim import archive
-from cosim.errors import ArchiveError
+from cosim.errors import ArchiveError, InputError
 from cosim.gate import run_gate
 from cosim.quantum.operators import OperatorSystem
+from cosim.readout import run_readout
+from cosim.readout_result import READOUT_KINDS, ReadoutResult
 from cosim.result import KINDS, GateResult
-from cosim.testbench import Bench, gate_bench, load_testbench
+from cosim.testbench import Bench, ReadoutBench, gate_bench, load_testbench
 
 
 def run(
@@ -16,12 +18,12 @@ def run(
     *,
     system: OperatorSystem | None = None,
     progress: Callable[[float], None] | None = None,
-) -> GateResult:
-    """Run a testbench: netlist, waveform, qubit, fidelity.
+) -> GateResult | ReadoutResult:
+    """Run a testbench: of a gate up to the fidelity, of a readout up to the assignment error.
 
     Parameters
     ----------
-    bench : Testbench or path
+    bench : Testbench, ReadoutBench or path
         A testbench, or the TOML file of one.
     system : OperatorSystem or None
         A user's own system from `cosim.operator_system`, for kind = "operators" in [qubit].
@@ -30,26 +32,33 @@ def run(
 
     Returns
     -------
-    GateResult
+    GateResult or ReadoutResult
         A design estimate, with error bars for the numerical errors.
 
     Raises
     ------
     InputError
-        If the testbench, the deck or the waveform cannot be used.
+        If the testbench, the deck or the waveform cannot be used, or a readout is given a system.
     SimulationError
         If ngspice or the evolution fails.
     """
-    bench = gate_bench(bench if isinstance(bench, Bench) else load_testbench(bench))
-    return run_gate(bench, system=system, progress=progress)
+    bench = bench if isinstance(bench, Bench) else load_testbench(bench)
+    if not isinstance(bench, ReadoutBench):
+        return run_gate(gate_bench(bench), system=system, progress=progress)
+    if system is not None:
+        raise InputError(
+            f"{bench.source or 'the testbench'} has [readout], which takes no system of operators",
+            hint="what answers is said in [resonator] or [sensor]",
+        )
+    return run_readout(bench, progress=progress)
 
 
-def save(result: GateResult, path: str | os.PathLike[str]) -> int:
+def save(result: GateResult | ReadoutResult, path: str | os.PathLike[str]) -> int:
     """Add a result to an archive, which is made if it does not exist.
 
     Parameters
     ----------
-    result : GateResult
+    result : GateResult or ReadoutResult
         The result of a run.
     path : path
         The HDF5 file.
@@ -77,7 +86,7 @@ def save(result: GateResult, path: str | os.PathLike[str]) -> int:
     return archive.append(path, result, info=info)
 
 
-def load(path: str | os.PathLike[str], *, run: int | None = None) -> GateResult:
+def load(path: str | os.PathLike[str], *, run: int | None = None) -> GateResult | ReadoutResult:
     """Read a result from an archive.
 
     Parameters
@@ -89,7 +98,7 @@ def load(path: str | os.PathLike[str], *, run: int | None = None) -> GateResult:
 
     Returns
     -------
-    GateResult
+    GateResult or ReadoutResult
         Equal to the one that was saved.
 
     Raises
@@ -97,7 +106,7 @@ def load(path: str | os.PathLike[str], *, run: int | None = None) -> GateResult:
     ArchiveError
         If the file or the run cannot be read.
     """
-    result = archive.read(path, KINDS, run=run)
-    if not isinstance(result, GateResult):
+    result = archive.read(path, KINDS | READOUT_KINDS, run=run)
+    if not isinstance(result, (GateResult, ReadoutResult)):
         raise ArchiveError(f"{os.fspath(path)}: the run is not one that this version knows")
     return result

@@ -1,4 +1,4 @@
-"""What is in an archived run, written as files that other programs read."""
+"""What is in an archived run of a gate, written as files that other programs read."""
 
 import os
 from pathlib import Path
@@ -6,14 +6,17 @@ from pathlib import Path
 import numpy as np
 
 from cosim.errors import InputError
-from cosim.result import GateResult
+from cosim.readout_result import ReadoutResult
+from cosim.result import GateResult, gate_result
 from cosim.waveform import FloatArray, Waveform
 
 SCRATCH = "{scratch}/"
 DECK, STARTUP = "deck.cir", ".spiceinit"
 
 
-def export_deck(result: GateResult, folder: str | os.PathLike[str]) -> tuple[Path, ...]:
+def export_deck(
+    result: GateResult | ReadoutResult, folder: str | os.PathLike[str]
+) -> tuple[Path, ...]:
     """Write the exact deck of a run, so that it can be repeated by hand.
 
     In the folder, `ngspice -b -r out.raw deck.cir` then gives the vectors of the run: ngspice
@@ -35,9 +38,10 @@ def export_deck(result: GateResult, folder: str | os.PathLike[str]) -> tuple[Pat
     Raises
     ------
     InputError
-        If the run has no deck, or keeps it only in part since files of it are confidential, or
-        the folder is not empty or cannot be written.
+        If the run is of a readout, has no deck, or keeps it only in part since files of it are
+        confidential, or the folder is not empty or cannot be written.
     """
+    result = gate_result(result)
     record = result.run
     if not record.deck_sent:
         raise InputError("the run imported a waveform: there is no deck to export")
@@ -66,7 +70,7 @@ def export_deck(result: GateResult, folder: str | os.PathLike[str]) -> tuple[Pat
     return tuple(target / name for name in texts)
 
 
-def export_csv(result: GateResult, path: str | os.PathLike[str]) -> int:
+def export_csv(result: GateResult | ReadoutResult, path: str | os.PathLike[str]) -> int:
     """Write the waveforms of a run as columns with units.
 
     Parameters
@@ -84,15 +88,16 @@ def export_csv(result: GateResult, path: str | os.PathLike[str]) -> int:
     Raises
     ------
     InputError
-        If the file cannot be written.
+        If the run is of a readout, or the file cannot be written.
     """
+    result = gate_result(result)
     columns: dict[str, FloatArray] = {"time (s)": result.waveform.t}
     for name, wave in {"probe": result.waveform, **result.extra}.items():
         columns[f"{name} ({wave.unit})"] = _on_grid(wave, result.waveform.t)
     return _write(columns, path)
 
 
-def export_envelope(result: GateResult, path: str | os.PathLike[str]) -> int:
+def export_envelope(result: GateResult | ReadoutResult, path: str | os.PathLike[str]) -> int:
     """Write the demodulated envelope of a run as columns with units.
 
     Parameters
@@ -110,8 +115,9 @@ def export_envelope(result: GateResult, path: str | os.PathLike[str]) -> int:
     Raises
     ------
     InputError
-        If the file cannot be written.
+        If the run is of a readout, or the file cannot be written.
     """
+    result = gate_result(result)
     envelope = result.envelope
     columns = {
         "time (s)": envelope.t,

@@ -11,6 +11,7 @@ from rich.text import Text
 from cosim.checks import Finding
 from cosim.comparison import Comparison
 from cosim.quantum.fidelity import incoherent_infidelity
+from cosim.readout_result import ReadoutResult
 from cosim.result import GateResult
 from cosim.side_terminal import idle_parts, noise_parts, spectator_parts
 from cosim.sweep.record import FailedRun
@@ -149,12 +150,12 @@ def _or_dash(value: float, otherwise: str) -> str:
     return f"- ({otherwise})" if math.isnan(value) else f"{value:.2e}"
 
 
-def record_table(result: GateResult) -> Table:
+def record_table(result: GateResult | ReadoutResult) -> Table:
     """Lay out where a result comes from.
 
     Parameters
     ----------
-    result : GateResult
+    result : GateResult or ReadoutResult
         The result of a run.
 
     Returns
@@ -196,6 +197,7 @@ def runs_table(columns: Mapping[str, np.ndarray]) -> Table:
         "title": "title",
         "F_pro, free": "free_frame.process_fidelity",
         "1 - F_avg": "free_frame.average_gate_fidelity",
+        "readout error": "assignment_error",
     }
     present = {label: name for label, name in shown.items() if name in columns}
     for label in present:
@@ -298,6 +300,11 @@ def comparison_table(comparison: Comparison) -> Group:
 
 def _cell(label: str, value: object) -> str:
     if isinstance(value, (float, np.floating)):
+        if math.isnan(value):
+            # Gates and readouts may stand in one archive.
+            return "-"
+        if label == "readout error":
+            return f"{value:.3e}"
         return f"{1.0 - value:.3e}" if label.startswith("1 -") else f"{value:.7f}"
     text = value.decode() if isinstance(value, bytes) else str(value)
     # A date without its zone is enough in a list; the detailed view has all of it.

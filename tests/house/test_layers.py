@@ -74,6 +74,8 @@ FLOORS = {
     "cli": 6,
     "command_options": 6,
     "side_terminal": 6,
+    "readout_figures": 6,
+    "readout_terminal": 6,
     "sweep_cli": 6,
     "sweep_show": 6,
     "sweep_progress": 6,
@@ -142,7 +144,7 @@ def test_every_room_has_a_floor() -> None:
     assert {room(file) for file in FILES} - {"__init__"} == set(FLOORS)
 
 
-@pytest.mark.parametrize("wing", ["circuit", "dsp", "formats", "quantum", "sweep"])
+@pytest.mark.parametrize("wing", ["circuit", "dsp", "dsp/detection", "formats", "quantum", "sweep"])
 def test_a_wings_init_holds_a_docstring_only(wing: str) -> None:
     body = ast.parse((PACKAGE / wing / "__init__.py").read_text(encoding="utf-8")).body
     assert len(body) == 1

@@ -1,0 +1,191 @@
+"""A readout as tables for a terminal."""
+
+import math
+from dataclasses import fields
+
+from rich.console import Group, RenderableType
+from rich.table import Table
+from rich.text import Text
+
+from cosim.dsp.detection.assignment import ErrorItems
+from cosim.dsp.detection.shots import ShotCounts
+from cosim.readout_result import ReadoutResult
+from cosim.terminal import CAUTION
+from cosim.units import format_quantity
+
+MOST_DEVICES = 5  # named in the table
+_BAR = 24  # characters of the longest bar
+
+
+def readout_table(result: ReadoutResult) -> Group:
+    """Lay out the result of a readout.
+
+    Parameters
+    ----------
+    result : ReadoutResult
+        The result of a run.
+
+    Returns
+    -------
+    rich.console.Group
+        Heading, assignment error and matrix, what the error is made of, noise, what the readout
+        leaves behind, shots against the closed form, warnings and the caution.
+    """
+    parts: list[RenderableType] = [
+        Text(result.title or "readout", style="bold"),
+        Text(_heading(result)),
+        _headline(result),
+        Text(""),
+        Text("what makes the wrong decisions"),
+        _split_table(result),
+        Text(""),
+        Text("noise at the output"),
+        _noise_table(result),
+        Text(""),
+        Text("what the readout leaves behind"),
+        _aftermath_table(result),
+        Text(""),
+        Text("closed form against decisions that were counted"),
+        _shot_table(result),
+    ]
+    parts += [Text(f"warning: {line}", style="yellow") for line in result.warnings]
+    parts.append(Text(CAUTION, style="dim"))
+    return Group(*parts)
+
+
+def window_of(result: ReadoutResult) -> tuple[float, float]:
+    """Give the window of the integration in the deck's time.
+
+    Parameters
+    ----------
+    result : ReadoutResult
+        The result of a run.
+
+    Returns
+    -------
+    tuple of two floats
+        Start and end in s.
+    """
+    # The records' time begins with the first cell, and the traces stand at the middle of cells.
+    time = result.traces.time
+    begin = float(time[0] - 0.5 * (time[1] - time[0]))
+    return begin + result.split.projection.start, begin + result.split.projection.stop
+
+
+def ranked_errors(errors: ErrorItems) -> list[tuple[str, float]]:
+    """Sort what makes the wrong decisions.
+
+    Parameters
+    ----------
+    errors : ErrorItems
+        Of a result.
+
+    Returns
+    -------
+    list of (str, float)
+        Name and part of the assignment error, the greatest first.
+    """
+    items = [(item.name, float(getattr(errors, item.name))) for item in fields(errors)]
+    return sorted(items, key=lambda item: -abs(item[1]))
+
+
+def _heading(result: ReadoutResult) -> str:
+    start, stop = (format_quantity(edge, "s") for edge in window_of(result))
+    return (
+        f"integrated from {start} to {stop}, step {format_quantity(result.run.step, 's', 5)} "
+        f"({result.run.steps_per_period:.4g} per period), {result.run.points} points"
+    )
+
+
+def _headline(result: ReadoutResult) -> Table:
+    table = _plain_table()
+    floor = result.numerical_floor
+    bar = "(no numerical floor)" if math.isnan(floor) else f"± {floor:.1e} (numerical floor)"
+    p = result.assignment_matrix
+    best = format_quantity(result.best_integration_time, "s")
+    table.add_row("assignment error", f"{result.assignment_error:.4e} {bar}")
+    table.add_row("prepared 0", f"P(0|0) = {p[0, 0]:.6f}   P(1|0) = {p[1, 0]:.4e}")
+    table.add_row("prepared 1", f"P(1|1) = {p[1, 1]:.6f}   P(0|1) = {p[0, 1]:.4e}")
+    table.add_row("signal over noise", f"{result.snr:.4g}")
+    table.add_row("integration time", format_quantity(result.integration_time, "s"))
+    table.add_row("best one", f"{best}, assignment error {result.best_assignment_error:.4e}")
+    return table
+
+
+def _split_table(result: ReadoutResult) -> Table:
+    table = Table(box=None, pad_edge=False, show_header=False)
+    table.add_column(style="bold", no_wrap=True)
+    for _ in range(2):
+        table.add_column(justify="right", no_wrap=True)
+    table.add_column(no_wrap=True)
+    items = ranked_errors(result.errors)
+    largest = max((abs(value) for _, value in items), default=0.0)
+    for name, value in items:
+        # A chain that bends may also help: such an item has no bar.
+        length = round(_BAR * value / largest) if value > 0.0 else 0
+        share = value / result.assignment_error if result.assignment_error > 0.0 else 0.0
+        table.add_row(name, f"{value:.3e}", f"{share:.1%}", "█" * length)
+    return table
+
+
+def _noise_table(result: ReadoutResult) -> Table:
+    table = _plain_table()
+    noise = result.noise
+    method = result.noise_method
+    if noise.relative_error > 0.0:
+        method += f", density within ± {noise.relative_error:.0%}"
+    if noise.reason:
+        method += f": {noise.reason}"
+    added = result.added_noise_quanta
+    none = "- (one output in baseband)"
+    table.add_row("added noise", none if math.isnan(added) else f"{added:.4g} quanta")
+    kelvin = result.noise_temperature
+    table.add_row("noise temperature", none if math.isnan(kelvin) else format_quantity(kelvin, "K"))
+    table.add_row("method", method)
+    if noise.devices:
+        most = list(noise.devices.items())[:MOST_DEVICES]
+        text = ", ".join(f"{name} {share:.1%}" for name, share in most)
+        table.add_row("made by", text + ", ..." * (len(noise.devices) > len(most)))
+    if noise.left_out:
+        table.add_row("left out", ", ".join(noise.left_out))
+    return table
+
+
+def _aftermath_table(result: ReadoutResult) -> Table:
+    table = _plain_table()
+    photons = result.residual_photons
+    rate = result.dephasing_rate
+    agreement = result.repeat_agreement
+    wait = format_quantity(result.wait, "s")
+    table.add_row("photons at the end", "-" if math.isnan(photons) else f"{photons:.3g}")
+    table.add_row("wait", wait if math.isnan(result.wait) else f"{wait} until 0.01 of one is left")
+    table.add_row("latency", format_quantity(result.latency, "s"))
+    table.add_row("repeat agreement", "-" if math.isnan(agreement) else f"{agreement:.5f}")
+    table.add_row("dephasing", "-" if math.isnan(rate) else f"{rate:.4g} /s while driven")
+    return table
+
+
+def _shot_table(result: ReadoutResult) -> Table:
+    table = Table(box=None, pad_edge=False, header_style="bold")
+    table.add_column("", style="bold", no_wrap=True)
+    table.add_column("decisions", justify="right", no_wrap=True)
+    for name in ("assignment error", "off by"):
+        table.add_column(name, no_wrap=True)
+    table.add_row("closed form", "-", f"{result.assignment_error:.4e}", "-")
+    rows: dict[str, ShotCounts] = {
+        "integrated shots": result.shots,
+        "whole records": result.records,
+    }
+    for name, counts in rows.items():
+        # Where no decision is ever wrong there is no sampling error either.
+        off = counts.deviation(result.assignment_matrix) if result.assignment_error else 0.0
+        value = f"{counts.assignment_error:.4e} ± {counts.standard_error:.1e}"
+        table.add_row(name, str(counts.count), value, f"{off:+.2f} standard errors")
+    return table
+
+
+def _plain_table() -> Table:
+    table = Table(box=None, pad_edge=False, show_header=False)
+    table.add_column(style="bold", no_wrap=True)
+    table.add_column(overflow="fold")
+    return table
