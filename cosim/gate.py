@@ -8,6 +8,7 @@ from cosim.adjust import Calibration, Pulse, calibrate_pulse
 from cosim.capture import Capture, Plan, capture_probe, make_plan
 from cosim.dsp.demodulation import demodulate
 from cosim.dsp.pulse import measure_pulse
+from cosim.dsp.tones import own_tone
 from cosim.errors import InputError, TestbenchError
 from cosim.fidelities import Views
 from cosim.guards import (
@@ -22,7 +23,13 @@ from cosim.guards import (
 )
 from cosim.imported import every_second, import_waveform
 from cosim.line import through_line
-from cosim.neighbours import Neighbour, heating_warnings, idle_effect, spectator_effects
+from cosim.neighbours import (
+    Neighbour,
+    heating_warnings,
+    idle_effect,
+    other_tones,
+    spectator_effects,
+)
 from cosim.noise_setup import line_of_noise
 from cosim.quantum.channel import check_channel, nearest_unitary, pauli_transfer_matrix
 from cosim.quantum.fidelity import (
@@ -161,7 +168,9 @@ def run_gate(
     check_channel(channel)
     clock.lap("evolution")
     envelope = demodulate(shot.waveform, drive.carrier_frequency)
-    measures = measure_pulse(shot.waveform, drive.carrier_frequency, envelope=envelope)
+    # The measures are those of the tone that plays the gate, where others are played with it.
+    tone = own_tone(envelope, other_tones(bench.spectator, drive))
+    measures = measure_pulse(shot.waveform, drive.carrier_frequency, envelope=tone)
     clock.lap("demodulation")
     twin = drive.rotating_wave_twin(envelope)
     rotating_wave_error = math.nan if twin is None else channel_distance(clean, twin)
@@ -197,7 +206,7 @@ def run_gate(
         *shot.notices,
         *(step_warnings(shot.step, drive.carrier_frequency) if plan and not plan.baseband else ()),
         *edge_warnings(drive.window, shot.waveform, drive.carrier_frequency, measures.amplitude),
-        *area_warnings(drive.window, envelope, drive.line, target.rotation.angle),
+        *area_warnings(drive.window, tone, drive.line, target.rotation.angle),
         *level_warnings(pulse, target.unitary),
         *carrier_warnings(measures),
         *scale_warnings(calibrated),

@@ -93,6 +93,31 @@ def spectator_effects(
     )
 
 
+def other_tones(tables: Sequence[SpectatorTable], drive: QubitDrive) -> tuple[float, ...]:
+    """Tell where the tones lie that play the gates of other qubits.
+
+    Parameters
+    ----------
+    tables : sequence of SpectatorTable
+        The tables [[spectator]].
+    drive : QubitDrive
+        Of the gate.
+
+    Returns
+    -------
+    tuple of float
+        Of each qubit with a gate of its own the frequency less the carrier's, in Hz; none within
+        one over the window, which no average over the pulse tells apart from the carrier.
+    """
+    if isinstance(drive.qubit, OperatorSystem):
+        return ()
+    played = [table for table in tables if table.target != "identity"]
+    base, carrier = drive.qubit.frequency, drive.carrier_frequency
+    offsets = [make_qubit(table.qubit(base), carrier).frequency - carrier for table in played]
+    start, stop = drive.window
+    return tuple(offset for offset in offsets if abs(offset) * (stop - start) >= 1.0)
+
+
 def _spectator(
     table: SpectatorTable,
     number: int,

@@ -152,6 +152,8 @@ def _check_power(waveform: Waveform, envelope: Envelope, burst: Burst) -> None:
             f"there is no pulse at {envelope.carrier_frequency:.6g} Hz that could be measured: "
             f"the envelope is above half its level only from {first:.6g} s to {last:.6g} s, and "
             f"{shortest:.3g} s, half the demodulator's filter, are needed",
+            hint="where the waveform holds tones of other qubits, give these as [[spectator]] "
+            "with their 'target'",
         )
     t, v = waveform.t[inside], waveform.v[inside]
     mean = float(trapezoid(v, t)) / float(t[-1] - t[0])

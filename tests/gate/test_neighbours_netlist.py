@@ -106,3 +106,37 @@ def test_injected_runs_are_shared(tmp_path: Path) -> None:
     rest = found.idle.noise.sources[0]
     assert rest.method == "injection"
     assert 0.05 < rest.infidelity / own.infidelity < 20.0
+
+
+def test_two_gates_at_once(tmp_path: Path) -> None:
+    """Equal tones 100 MHz apart, a pi pulse each: what one does to the other's qubit."""
+    start, time, offset = 20e-9, 100e-9, 100e6
+    tones = "cos(6.283185307179586*1e9*time)+cos(6.283185307179586*1.1e9*time)"
+    (tmp_path / "deck.cir").write_text(
+        f"deck\nve env 0 pwl(0 0 {start!r} 0 20.01n 1 120n 1 120.01n 0)\n"
+        f"b1 out 0 v=v(env)*({tones})\n.end\n"
+    )
+    rabi = 0.5 / time
+    tables = {
+        "netlist": {"file": "deck.cir", "stop": "140 ns", "steps_per_period": 80},
+        "drive": {"probe": "v(out)", "carrier": "1 GHz", "termination": "in deck"},
+        "qubit": {"kind": "spin", "frequency": "carrier", "rabi_per_volt": f"{rabi!r} Hz/V"},
+        "gate": {"target": "x", "calibrate": []},
+        "accuracy": {"floor": False},
+        "spectator": [
+            {
+                "kind": "spin",
+                "offset": f"{offset!r} Hz",
+                "rabi_per_volt": f"{rabi!r} Hz/V",
+                "target": "x",
+            }
+        ],
+    }
+    found = run_gate(make_testbench(tables, folder=tmp_path))
+    (other,) = found.spectators
+    assert found.pulse.amplitude == pytest.approx(1.0, rel=1e-3)
+    assert found.warnings == ()
+    # The other tone tilts the axis: an infidelity of the order of (rabi/offset)^2, 2.5e-3, with a
+    # factor of at most 2/3 by its flips and the phase of pi/2 rabi/offset that it shifts.
+    for loss in (found.free_frame.infidelity, other.free_frame_infidelity):
+        assert 0.0 < loss < (rabi / offset) ** 2
