@@ -42,6 +42,7 @@ def split(output: ChainOutput = STEADY, **detector: object) -> object:
             "'decay_times' must rise",
         ),
         (lambda: Transitions(-1.0), "'down' at least zero"),
+        (lambda: Transitions(conversion=0.0), "a positive 'conversion'"),
         (lambda: relaxation(0.0), "a positive t1"),
         (lambda: relaxation(1.0, 1.5), "'thermal_population' between 0 and 1"),
         (lambda: Preparation(0.1, -0.1), "'error' between 0 and 1"),
@@ -75,6 +76,15 @@ def split(output: ChainOutput = STEADY, **detector: object) -> object:
             "the records hold no 'excitations'",
         ),
         (lambda: project(receive(BARE, Detector()), "boxcar", 11), "wanted 1 to 10 samples"),
+        (
+            lambda: split_assignment(BARE, Detector(), Transitions(conversion=1e6), SURE),
+            "the records hold no 'excitations'",
+        ),
+        (
+            lambda: repeat_agreement(SPLIT, Transitions(conversion=1e6), SURE),
+            "one that converts it",
+        ),
+        (lambda: split(steady(4097, 1e-9, 5.0), weights="whitened"), "at most 4096 samples"),
         (lambda: snr_for_error(0.5), "between 0 and 1/2"),
         (lambda: integrated_shots(SPLIT, NOTHING, SURE, 5, 1), "an even number"),
         (lambda: integrated_shots(SPLIT, NOTHING, SURE, 4, -1), "a seed of at least 0"),

@@ -24,7 +24,7 @@ from cosim.dsp.detection.output_noise import OutputNoise
 from cosim.dsp.detection.projection import Projection
 from cosim.dsp.detection.reception import ChainOutput, Detector
 from cosim.dsp.detection.records import Preparation, Transitions, relaxation
-from cosim.dsp.detection.shots import ShotCounts, integrated_shots
+from cosim.dsp.detection.shots import ShotCounts, integrated_shots, record_shots, shot_points
 from cosim.dsp.noise.paths import generator
 from tests.dsp.detections import NOTHING, SURE, bent, pointer_difference, pointers, steady
 
@@ -130,6 +130,45 @@ def test_items_sum_and_do_not_fall_below_zero(
     assert split.assignment_matrix.sum(axis=0) == pytest.approx([1, 1], rel=1e-12)
     assert (split.assignment_matrix >= -1e-15).all()
     assert split.assignment_matrix[[1, 0], [0, 1]].mean() == split.assignment_error
+
+
+class TestConversion:
+    """A state that looks like the other one until it converts, as a spin whose electron tunnels."""
+
+    def test_in_closed_form(self) -> None:
+        rates = Transitions(down=2e5, up=1e4, conversion=5e6)
+        output, detector = steady(COUNT, STEP, 1e5), Detector(weights="boxcar")
+        split = split_assignment(output, detector, rates, SURE)
+        # Seen if it converts before it goes down and before the middle of the window.
+        missed = 1 - 5e6 / 5.2e6 * -math.expm1(-5.2e6 * DURATION / 2)
+        up = -math.expm1(-1e4 * DURATION / 2)
+        # Threshold crossings are 1e-5 of the window wide.
+        assert split.assignment_matrix[0, 1] == pytest.approx(missed, rel=1e-4)
+        assert split.assignment_matrix[1, 0] == pytest.approx(up, rel=1e-4)
+        assert split.errors.decay == pytest.approx(missed / 2, rel=1e-4)
+        assert split.errors.excitation == pytest.approx(up / 2, rel=1e-4)
+
+    def test_a_fast_one_is_none(self) -> None:
+        output = pointers(COUNT, STEP, RATE, OutputNoise(white=1e-7), times=31)
+        fast = split_assignment(output, Detector(), Transitions(conversion=1e12), SURE)
+        none = split_assignment(output, Detector(), NOTHING, SURE)
+        # 1 ps late in a response of 80 ns.
+        assert fast.assignment_error == pytest.approx(none.assignment_error, rel=1e-3)
+
+    def test_shots_agree(self) -> None:
+        rates, preparation = Transitions(2e5, 1e5, 4e6), Preparation(0.02, 0.01)
+        output, detector = saturating(5e-8), Detector(threshold="optimal")
+        split = split_assignment(output, detector, rates, preparation)
+        assert split.errors.decay > 0.01
+        shots = integrated_shots(split, rates, preparation, 1_000_000, 3)
+        assert abs(shots.deviation(split.assignment_matrix)) < 3
+        records = record_shots(output, detector, split, rates, preparation, 6000, 3)
+        assert abs(records.deviation(split.assignment_matrix)) < 3
+        points = shot_points(split, rates, preparation, 50_000, 4)
+        share = float(np.mean(split.projection.along(points[1]) <= split.threshold))
+        wanted = split.assignment_matrix[0, 1]
+        error = math.sqrt(wanted * (1 - wanted) / 50_000)
+        assert share == pytest.approx(wanted, abs=3 * error)
 
 
 class TestInterpolation:

@@ -58,7 +58,7 @@ def repeat_agreement(
     Raises
     ------
     InputError
-        If the wait is negative or not finite.
+        If the wait is negative or not finite, or state 1 is seen by a conversion, which ends it.
 
     Notes
     -----
@@ -67,6 +67,10 @@ def repeat_agreement(
     """
     if not (math.isfinite(wait) and wait >= 0):
         raise InputError(f"repeat agreement: wanted a wait of at least zero in s, got {wait!r}")
+    if transitions.converts:
+        raise InputError(
+            "repeat agreement: wanted a readout that leaves the state, got one that converts it"
+        )
     odds = {
         (state, decision): state_odds(
             split.projection, transitions, split.threshold, state, decision

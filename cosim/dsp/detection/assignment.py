@@ -9,7 +9,8 @@ assignment error grows with it, so that the items sum to the whole exactly:
 3. quantisation: rounding and clipping of the converter. The filter in front and the sampling
    belong to the chain and are there from the first.
 4. excitation: state 0 that becomes 1 between the start of the records and the end of the window.
-5. decay: the same for state 1 that becomes 0.
+5. decay: the same for state 1 that becomes 0, or that is seen late or never where it is seen by a
+   conversion.
 6. preparation: the other state at the start of the records.
 
 Weights and axis are found anew from the records of each step, and so is the threshold, by the same
@@ -192,7 +193,7 @@ def split_assignment(
         straight = receive(output.linearised(), detector, rounding=False, lags=known)
         linear = project(straight, detector.weights)
     nothing, sure = Transitions(), Preparation()
-    upwards = replace(transitions, down=0.0)
+    upwards = replace(transitions, down=0.0, conversion=math.inf)
     steps = (
         (linear, nothing, sure),
         (chain, nothing, sure),

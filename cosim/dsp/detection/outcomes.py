@@ -16,6 +16,8 @@ from cosim.waveform import FloatArray
 # whose error is 0.55 step^4/2880 = 2e-10; above, from the integral, which loses digits to
 # cancellation where the step is small.
 _SMALL = 0.03
+# Below this the series of `_lean` is exact to turns^3/720 and its closed form loses digits.
+_SERIES = 1e-3
 
 
 @dataclass(frozen=True, slots=True)
@@ -25,11 +27,11 @@ class Odds:
     Parameters
     ----------
     kept : float
-        Probability that the state stays as it is until the end of the window.
+        Probability that what the chain sees stays as it is until the end of the window.
     decided_and_kept : float
         Joint probability of that and of the decision.
     decided_and_changed : float
-        Joint probability of a change of state and of the decision.
+        Joint probability of a change of what it sees and of the decision.
     """
 
     kept: float = field(metadata={"unit": "1"})
@@ -55,12 +57,11 @@ def check_transitions(projection: Projection, transitions: Transitions) -> None:
     InputError
         If there is a rate without records.
     """
-    for state, (rate, name) in enumerate(
-        ((transitions.up, "excitations"), (transitions.down, "decays"))
-    ):
-        if rate > 0 and projection.simulated[state] == 0:
+    for course in (transitions.course(0), transitions.course(1)):
+        name = ("excitations", "decays")[course.seen]
+        if course.rate > 0 and projection.simulated[course.seen] == 0:
             raise InputError(
-                f"detection: the state changes at {rate:.6g} 1/s, but the records hold no "
+                f"detection: the state changes at {course.rate:.6g} 1/s, but the records hold no "
                 f"'{name}' before the end of the window, {projection.stop:.6g} s",
                 hint="give the chain's response for some times of the transition",
             )
@@ -96,21 +97,25 @@ def state_odds(
     Notes
     -----
     The time of the transition is exponential; over each interval of the table the value is taken
-    to change along a straight line, for which the mean of the normal distribution is exact.
+    to change along a straight line, for which the mean of the normal distribution is exact. That
+    earlier times within an interval are more frequent is counted to first order.
     """
-    rate = transitions.down if state else transitions.up
+    course = transitions.course(state)
+    seen, rate = course.seen, course.rate
     sign = 1.0 if decision else -1.0
-    level = sign * (projection.values[state] - threshold) / projection.sigmas[state]
-    kept = math.exp(-rate * projection.stop)
+    level = sign * (projection.values[seen] - threshold) / projection.sigmas[seen]
+    kept = 1 + course.share * math.expm1(-rate * projection.stop)
     alone = float(ndtr(level)) * kept
     if rate == 0:
         return Odds(kept, alone, 0.0)
     points = projection.coarse_points if coarse else projection.path_points
-    path = projection.along(points[state])
-    levels = sign * (path - threshold) / projection.path_sigmas[state]
+    path = projection.along(points[seen])
+    levels = sign * (path - threshold) / projection.path_sigmas[seen]
     left = np.exp(-rate * projection.path_times)
-    shares = -left[:-1] * np.expm1(-rate * np.diff(projection.path_times))
-    return Odds(kept, alone, float(shares @ _mean_normal(levels)))
+    shares = -course.share * left[:-1] * np.expm1(-rate * np.diff(projection.path_times))
+    lean = _lean(rate * float(projection.path_times[1]))
+    means = _mean_normal(levels) + lean * np.diff(ndtr(levels))
+    return Odds(kept, alone, float(shares @ means))
 
 
 def wrong_shares(
@@ -231,6 +236,16 @@ def snr_for_error(error: float) -> float:
     if not 0 < error < 0.5:
         raise InputError(f"separation error: wanted one between 0 and 1/2, got {error!r}")
     return float(-2 * ndtri(error))
+
+
+def _lean(turns: float) -> float:
+    """How far the mean of an exponential time lies from the middle of an interval, in its length.
+
+    `turns` is rate times length; from 0 to 1 the mean is 1/turns - 1/(exp(turns) - 1).
+    """
+    if turns < _SERIES:
+        return -turns / 12
+    return 1 / turns - 0.5 - math.exp(-turns) / -math.expm1(-turns)
 
 
 def _mean_normal(levels: FloatArray) -> FloatArray:

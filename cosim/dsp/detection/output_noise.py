@@ -40,7 +40,8 @@ class OutputNoise:
     density : ndarray, shape (m,)
         Two-sided in V**2/Hz, linear between the points and zero outside them; added to `white`.
         A one-sided density S1 of the carrier-band voltage makes an envelope (peak amplitudes) of
-        2 S1(f_c + f).
+        2 S1(f_c + f). Where the noise is not circular, as behind a limiter, give twice the density
+        along the axis between the states.
     quadratures : int
         2 for I + jQ, 1 for a single real output, whose density is even.
 

@@ -8,7 +8,7 @@ from scipy.interpolate import CubicSpline
 from scipy.linalg import cholesky, solve_triangular, toeplitz
 
 from cosim.dsp.detection.reception import Received
-from cosim.dsp.detection.weights import Rule, boxcar, matched, too_narrow, whitened
+from cosim.dsp.detection.weights import Rule, boxcar, check_length, matched, too_narrow, whitened
 from cosim.errors import InputError
 from cosim.waveform import ComplexArray, FloatArray
 
@@ -187,6 +187,7 @@ def snr_over_time(received: Received, rule: Rule) -> FloatArray:
         # A whitened difference: the squares of its first k samples add up to the power of the
         # best weights for k samples.
         n = difference.size
+        check_length(n)
         mean = received.lags.mean(axis=0) / received.quadratures
         try:
             lower = cholesky(toeplitz(mean[:n]), lower=True)

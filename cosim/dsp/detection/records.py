@@ -118,20 +118,53 @@ class Transitions:
     ----------
     down, up : float
         From 1 to 0 and from 0 to 1, in 1/s.
+    conversion : float
+        Rate in 1/s at which state 1 comes to look like itself, as a spin does when its electron
+        tunnels: before, the chain sees state 0, and a state that has gone down by then is never
+        seen. Once seen it stays. Infinite where it is seen at once.
 
     Raises
     ------
     InputError
-        If a rate is negative or not finite.
+        If a rate is negative or not finite, or the conversion is not positive.
     """
 
     down: float = field(default=0.0, metadata={"unit": "1/s"})
     up: float = field(default=0.0, metadata={"unit": "1/s"})
+    conversion: float = field(default=math.inf, metadata={"unit": "1/s"})
 
     def __post_init__(self) -> None:
         for name, value in (("down", self.down), ("up", self.up)):
             if not (math.isfinite(value) and value >= 0):
                 raise InputError(f"transitions: wanted '{name}' at least zero in 1/s, got {value}")
+        if not self.conversion > 0:
+            raise InputError(
+                f"transitions: wanted a positive 'conversion' in 1/s, got {self.conversion!r}"
+            )
+
+    @property
+    def converts(self) -> bool:
+        """Whether state 1 is seen with a delay."""
+        return math.isfinite(self.conversion)
+
+    def course(self, state: int) -> "Course":
+        """Give what a state looks like, and how that changes.
+
+        Parameters
+        ----------
+        state : int
+            0 or 1, at the start of the records.
+
+        Returns
+        -------
+        Course
+        """
+        if state == 0:
+            return Course(0, self.up, 1.0)
+        if not self.converts:
+            return Course(1, self.down, 1.0)
+        rate = self.conversion + self.down
+        return Course(0, rate, self.conversion / rate)
 
     def neglected(self, duration: float) -> float:
         """Bound the probability of a second transition in one readout, which is left out.
@@ -147,6 +180,25 @@ class Transitions:
             down up duration^2 / 2.
         """
         return self.down * self.up * duration**2 / 2
+
+
+@dataclass(frozen=True, slots=True)
+class Course:
+    """What the chain sees of a state.
+
+    Parameters
+    ----------
+    seen : int
+        Whose record it starts with, 0 or 1.
+    rate : float
+        At which something happens, in 1/s; the first time counts.
+    share : float
+        Probability that the record then goes over to the other state; else it stays for good.
+    """
+
+    seen: int = field(metadata={"unit": "1"})
+    rate: float = field(metadata={"unit": "1/s"})
+    share: float = field(metadata={"unit": "1"})
 
 
 def relaxation(t1: float, thermal_population: float = 0.0) -> Transitions:

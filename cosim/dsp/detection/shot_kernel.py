@@ -4,9 +4,13 @@ The function compiles at its first call and is cached on disk; nothing compiles 
 """
 
 import numba
+import numpy as np
+import numpy.typing as npt
 from numpy.random import Generator
 
 from cosim.waveform import FloatArray
+
+IndexArray = npt.NDArray[np.int64]
 
 
 @numba.njit(cache=True, nogil=True, error_model="numpy")
@@ -15,7 +19,9 @@ def count_excited(
     count: int,
     prepared: int,
     wrong: float,
+    seen: IndexArray,
     rates: FloatArray,
+    changes: FloatArray,
     stop: float,
     values: FloatArray,
     sigmas: FloatArray,
@@ -35,8 +41,12 @@ def count_excited(
         0 or 1.
     wrong : float
         Probability of the other state at the start.
+    seen : ndarray of int64, shape (2,)
+        Whose record each state starts with.
     rates : ndarray, shape (2,)
-        Of leaving state 0 and state 1 in 1/s.
+        At which something happens to each state in 1/s.
+    changes : ndarray, shape (2,)
+        Probability that the record then goes over to the other state.
     stop : float
         End of the window in s.
     values, sigmas : ndarray, shape (2,)
@@ -56,16 +66,18 @@ def count_excited(
         state = prepared
         if wrong > 0.0 and generator.random() < wrong:
             state = 1 - prepared
-        value = values[state]
-        sigma = sigmas[state]
+        start = seen[state]
+        value = values[start]
+        sigma = sigmas[start]
         if rates[state] > 0.0:
             place = generator.standard_exponential() / rates[state] * scale
-            if place < paths.shape[1] - 1:
+            changed = changes[state] == 1.0 or generator.random() < changes[state]
+            if changed and place < paths.shape[1] - 1:
                 k = int(place)
                 part = place - k
-                value = paths[state, k] + part * (paths[state, k + 1] - paths[state, k])
-                change = path_sigmas[state, k + 1] - path_sigmas[state, k]
-                sigma = path_sigmas[state, k] + part * change
+                value = paths[start, k] + part * (paths[start, k + 1] - paths[start, k])
+                change = path_sigmas[start, k + 1] - path_sigmas[start, k]
+                sigma = path_sigmas[start, k] + part * change
         if value + sigma * generator.standard_normal() > threshold:
             found += 1
     return found

@@ -114,13 +114,16 @@ def integrated_shots(
     half = _half(count, seed)
     projection = split.projection
     paths = np.array([projection.along(points) for points in projection.path_points])
+    courses = [transitions.course(state) for state in (0, 1)]
     excited = [
         count_excited(
             generator(seed, _INTEGRATED, state),
             half,
             state,
             preparation.wrong[state],
-            np.array([transitions.up, transitions.down]),
+            np.array([course.seen for course in courses]),
+            np.array([course.rate for course in courses]),
+            np.array([course.share for course in courses]),
             projection.stop,
             projection.values,
             projection.sigmas,
@@ -294,14 +297,16 @@ def _courses(
     transitions: Transitions,
     preparation: Preparation,
 ) -> tuple[FloatArray, FloatArray]:
-    """States at the start, and times of their transition in s; infinite for none."""
+    """States that are seen at first, and times of their change in s; infinite for none."""
     wrong = random.random(count) < preparation.wrong[prepared]
     states = np.where(wrong, 1 - prepared, prepared)
-    rates = np.array([transitions.up, transitions.down])[states]
+    courses = [transitions.course(state) for state in (0, 1)]
+    rates = np.array([course.rate for course in courses])[states]
+    shares = np.array([course.share for course in courses])[states]
     times = np.full(count, math.inf)
     draws = random.standard_exponential(count)
-    np.divide(draws, rates, out=times, where=rates > 0)
-    return states, times
+    np.divide(draws, rates, out=times, where=(rates > 0) & (random.random(count) < shares))
+    return np.array([course.seen for course in courses])[states], times
 
 
 def _switched(

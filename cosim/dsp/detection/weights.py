@@ -8,6 +8,9 @@ from scipy.linalg import solve_toeplitz
 from cosim.errors import InputError
 from cosim.waveform import ComplexArray
 
+# Samples of whitened weights: a matrix of this many complex numbers squared takes 256 MiB.
+_LONGEST = 4096
+
 Rule = Literal["boxcar", "matched", "whitened"]
 
 
@@ -71,13 +74,14 @@ def whitened(difference: ComplexArray, lags: ComplexArray) -> ComplexArray:
     Raises
     ------
     InputError
-        If the two records are equal, or the noise leaves combinations of samples without any,
-        so that no weights are the best.
+        If the two records are equal, there are over 4096 samples, or the noise leaves
+        combinations of samples without any, so that no weights are the best.
 
     Notes
     -----
     Generalised matched filter; the system is solved by Levinson's recursion.
     """
+    check_length(difference.size)
     first = lags[: difference.size]
     try:
         found = solve_toeplitz((first, np.conj(first)), difference)
@@ -88,6 +92,26 @@ def whitened(difference: ComplexArray, lags: ComplexArray) -> ComplexArray:
     if not (np.isfinite(found).all() and power >= 0):
         raise too_narrow()
     return _scaled(found)
+
+
+def check_length(count: int) -> None:
+    """Refuse more samples than whitened weights are worked out for.
+
+    Parameters
+    ----------
+    count : int
+
+    Raises
+    ------
+    InputError
+        If there are over 4096.
+    """
+    if count > _LONGEST:
+        raise InputError(
+            f"whitened weights: wanted at most {_LONGEST} samples, whose square sets the cost, got "
+            f"{count}",
+            hint="use a converter with a lower rate, or matched weights",
+        )
 
 
 def too_narrow() -> InputError:
