@@ -20,6 +20,7 @@ DECADES = 6
 
 _STATES = ("C0", "C3")  # colours of |0> and |1>
 _SMALL = 8
+_LONGEST = 20  # characters of a device's name
 _LEAST = 1e-30  # stands for zero on a logarithmic axis
 _PREFIXES = ((1.0, ""), (1e-3, "m"), (1e-6, "µ"), (1e-9, "n"))
 
@@ -178,8 +179,9 @@ def _draw_photons(axes: Axes, result: ReadoutResult) -> None:
     traces = result.traces
     per_second, second = _time_scale(result)
     t = traces.field_time * per_second
-    for state, photons in enumerate((traces.photons_ground, traces.photons_excited)):
-        axes.plot(t, photons, color=_STATES[state], lw=1.3, label=f"|{state}>")
+    # Driven midway between the two resonances, both states have as many: one is drawn dashed.
+    axes.plot(t, traces.photons_ground, color=_STATES[0], lw=1.6, label="|0>")
+    axes.plot(t, traces.photons_excited, color=_STATES[1], lw=1.3, ls="--", label="|1>")
     _mark_window(axes, result, per_second)
     axes.set_xlim(0.0, max(traces.time[-1], traces.field_time[-1]) * per_second)
     axes.set_ylim(bottom=0.0)
@@ -257,7 +259,9 @@ def _draw_devices(axes: Axes, result: ReadoutResult) -> None:
         axes.text(100.0 * max(share, 0.0), place, f" {share:.1%}", va="center", fontsize=7)
     # Room for the numbers at the ends of the bars.
     axes.set_xlim(right=1.3 * 100.0 * max(share for _, share in shown))
-    axes.set_yticks(range(len(shown)), [name for name, _ in shown], fontsize=7)
+    # Of a name within many subcircuits the end tells most.
+    names = [name if len(name) <= _LONGEST else f"…{name[1 - _LONGEST :]}" for name, _ in shown]
+    axes.set_yticks(range(len(shown)), names, fontsize=7)
     axes.set_ylim(len(shown) - 0.5, -0.5)
     axes.set_xlabel("part of the density (%)", fontsize=_SMALL)
     _finish(axes, "noise near the carrier, by device", legend=False)

@@ -103,12 +103,19 @@ def _headline(result: ReadoutResult) -> Table:
     bar = "(no numerical floor)" if math.isnan(floor) else f"± {floor:.1e} (numerical floor)"
     p = result.assignment_matrix
     best = format_quantity(result.best_integration_time, "s")
+    # The lengths that were tried end with the window.
+    whole = result.best_integration_time >= result.integration_time * (1.0 - 1e-9)
     table.add_row("assignment error", f"{result.assignment_error:.4e} {bar}")
     table.add_row("prepared 0", f"P(0|0) = {p[0, 0]:.6f}   P(1|0) = {p[1, 0]:.4e}")
     table.add_row("prepared 1", f"P(1|1) = {p[1, 1]:.6f}   P(0|1) = {p[0, 1]:.4e}")
     table.add_row("signal over noise", f"{result.snr:.4g}")
     table.add_row("integration time", format_quantity(result.integration_time, "s"))
-    table.add_row("best one", f"{best}, assignment error {result.best_assignment_error:.4e}")
+    table.add_row(
+        "best one",
+        "the whole window; a longer one may be better"
+        if whole
+        else f"{best}, assignment error {result.best_assignment_error:.4e}",
+    )
     return table
 
 

@@ -37,8 +37,9 @@ from cosim.readout_result import (
 )
 from cosim.readout_terminal import readout_table
 from cosim.result import RunRecord, as_numbers
-from cosim.terminal import CAUTION
+from cosim.terminal import CAUTION, runs_table
 from cosim.waveform import ComplexArray
+from tests.readout.benches import bench
 
 WIDTH = 80
 BEGIN, STEP, COUNT = 100e-9, 2e-9, 400  # of the records: from 100 ns to 900 ns of the deck
@@ -208,7 +209,13 @@ class TestReadoutTable:
             off = counts.deviation(result.assignment_matrix)
             assert f"{counts.count} {value} {off:+.2f} standard errors" in words
         assert "warning: the chain saturates for |1> more than for |0>" in lines
+        best = f"best one {1e9 * result.scan.best_time:.4g} ns, assignment error"
+        assert f"{best} {result.scan.best_error:.4e}" in words
         assert words.endswith(CAUTION)
+
+    def test_a_best_length_at_the_end_of_the_window(self, sensor: ReadoutResult) -> None:
+        assert sensor.best_integration_time == pytest.approx(700e-9, rel=1e-9, abs=0.0)
+        assert "the whole window; a longer one may be better" in printed(sensor)
 
     def test_the_greatest_error_comes_first(self, result: ReadoutResult) -> None:
         items = {one.name: getattr(result.errors, one.name) for one in fields(result.errors)}
@@ -252,6 +259,26 @@ class TestReadoutTable:
             errors=replace(result.errors, **{one.name: 0.0 for one in fields(result.errors)}),
         )
         assert "assignment error   0.0000e+00" in printed(sure)
+
+
+def test_gates_and_readouts_in_one_list() -> None:
+    columns = {
+        "id": np.array([1, 2]),
+        "status": np.array(["done", "done"], dtype=object),
+        "start_time": np.array(["2026-01-02T03:04:05+00:00"] * 2, dtype=object),
+        "target": np.array(["x90", ""], dtype=object),
+        "title": np.array(["a gate", "a readout"], dtype=object),
+        "free_frame.process_fidelity": np.array([0.9991, math.nan]),
+        "free_frame.average_gate_fidelity": np.array([0.9994, math.nan]),
+        "assignment_error": np.array([math.nan, 0.0182]),
+    }
+    text = io.StringIO()
+    Console(file=text, width=WIDTH, highlight=False).print(runs_table(columns))
+    lines = text.getvalue().splitlines()
+    assert max(map(len, lines)) <= WIDTH
+    gate, readout = (next(x for x in lines if x.startswith(f"{n} ")) for n in (1, 2))
+    assert gate.split()[-3:] == ["0.9991000", "6.000e-04", "-"]
+    assert readout.split()[-3:] == ["-", "-", "1.820e-02"]
 
 
 def test_json_prints_the_declared_names(result: ReadoutResult, sensor: ReadoutResult) -> None:
@@ -306,8 +333,11 @@ class TestFigure:
         coloured = (np.ptp(picture[..., :3], axis=2) > 0.1).mean()
         assert 0.005 < coloured < 0.3
 
-    def test_pdf(self, result: ReadoutResult, tmp_path: Path) -> None:
-        plot_readout(result, tmp_path / "a.pdf")
+    def test_an_item_that_helps_and_another_format(
+        self, result: ReadoutResult, tmp_path: Path
+    ) -> None:
+        helps = replace(result, errors=replace(result.errors, saturation=-1e-2))
+        plot_readout(helps, tmp_path / "a.pdf")
         assert (tmp_path / "a.pdf").read_bytes().startswith(b"%PDF")
 
     def test_extremes_are_drawn_without_complaint(
@@ -327,12 +357,10 @@ class TestFigure:
             noise=replace(
                 result.noise,
                 density=np.full(result.noise.density.size, 1e-15),
-                devices={f"r{n}": 0.05 for n in range(20)},
+                devices={f"xchip.xamplifier.xstage{n}.mtransistor": 0.05 for n in range(20)},
             ),
         )
         plot_readout(sure, tmp_path / "a.png")
-        helps = replace(result, errors=replace(result.errors, saturation=-1e-2))
-        plot_readout(helps, tmp_path / "a.png")
 
     def test_a_file_that_cannot_be_written(self, result: ReadoutResult, tmp_path: Path) -> None:
         with pytest.raises(InputError, match="cannot be written"):
@@ -354,6 +382,31 @@ class TestCommands:
             return int(end.value.code or 0), out, err
 
         return call
+
+    @pytest.mark.ngspice
+    def test_run(self, qcosim: Callable[..., tuple[int, str, str]], tmp_path: Path) -> None:
+        few = {"shots": 1000, "records": 100, "window": ["20 ns", "120 ns"], "decay_times": 2}
+        netlist, resonator = {"stop": "130 ns"}, {"length": "100 ns"}
+        made = bench(tmp_path, netlist=netlist, resonator=resonator, readout=few)
+        (tmp_path / "ro.toml").write_text(made.to_toml(), encoding="utf-8")
+        archive, figure = tmp_path / "new.h5", tmp_path / "new.png"
+        words = ("run", tmp_path / "ro.toml", "--archive", archive, "--plot", figure)
+        code, out, err = qcosim(*words)
+        assert code == 0, err
+        assert "what makes the wrong decisions" in out
+        assert figure.read_bytes().startswith(b"\x89PNG")
+        assert "as run 1 of" in err
+        _, first, _ = qcosim("run", tmp_path / "ro.toml", "--json")
+        _, second, _ = qcosim("show", archive, "--run", 1, "--json")
+        # Shots have a seed, so that nothing but times differs between two runs.
+        assert json.loads(first) == json.loads(second)
+        assert list(json.loads(first)) == list(READOUT_FIELDS)
+
+    def test_a_readout_takes_no_system(self, tmp_path: Path) -> None:
+        z = np.diag([0.0, 1.0])
+        system = cosim.operator_system(z, np.array([[0.0, 1.0], [1.0, 0.0]]))
+        with pytest.raises(InputError, match="takes no system of operators"):
+            cosim.run(bench(tmp_path), system=system)
 
     @pytest.fixture
     def archive(self, result: ReadoutResult, tmp_path: Path) -> Path:
