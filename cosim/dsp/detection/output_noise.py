@@ -246,7 +246,7 @@ def draw_noise(plan: NoiseSpectrumPlan, draws: ComplexArray, count: int) -> Comp
     ----------
     plan : NoiseSpectrumPlan
     draws : ndarray of complex, shape (paths, period)
-        From `draw_lines`; not kept.
+        From `draw_lines`.
     count : int
         Samples of a path, at most half the period.
 

@@ -26,8 +26,9 @@ from cosim.dsp.noise.paths import generator
 from cosim.errors import InputError
 from cosim.waveform import ComplexArray, FloatArray
 
-# Streams of the random numbers of each kind of shots, plus the state that is prepared.
-_INTEGRATED, _RECORDS, _POINTS = 0, 2, 4
+# Streams of the random numbers of each kind of shots, out of the way of noise with the same seed;
+# the number within a stream is the state that is prepared.
+_INTEGRATED, _RECORDS, _POINTS = 101, 102, 103
 # Samples of noise that are made at a time: their transform takes 4 MiB.
 _BLOCK = 1 << 18
 
