@@ -53,6 +53,8 @@ QUADRATURE = 1e-10
 SIGNIFICANT = 4.0
 # ... and by more than this part, or by more than what second order makes of it.
 NEGLIGIBLE = 0.02
+# ... and by more than thousands of slices round a channel.
+ROUNDING = 1e-12
 # What the sampling cannot reach is told from this part of the effect on.
 UNREACHED = 0.01
 
@@ -157,6 +159,7 @@ def noisy_gate(
     drawn = _drawn_effect(nominal, tables, volts, samples, seed)
     first_order = sum(source.infidelity for source in sources.values())
     spread = SIGNIFICANT * drawn.error + NEGLIGIBLE * drawn.infidelity + drawn.infidelity**2
+    spread = max(spread, ROUNDING)
     agree = drawn.method == "quadrature" or abs(drawn.infidelity - first_order) <= spread
     correction, variance = drawn.correction, drawn.error**2
     for item in found:
@@ -258,9 +261,11 @@ def _source(nominal: Nominal, item: _Fluctuation, volts: float) -> NoiseSource:
         frame = noise_infidelity(phase.oscillator_frame, levels, grid.weights).infidelity
     high = float(grid.frequencies[-1])
     beyond = 0.0
-    if item.density.high == math.inf and item.density.variance(high, math.inf) > 0.0:
-        # At most what white noise of the density at the last frequency would do above it.
-        last = float(levels[-1])
+    if item.density.high > high:
+        # At most what white noise of the greatest density up to ten times the last frequency would
+        # do above it; a tenth of the filter's tail lies beyond.
+        above = np.geomspace(high, min(item.density.high, 10.0 * high), 50)
+        last = float(item.density.at(above).max())
         for function, operator in zip(functions, operators, strict=True):
             whole = filter_area([nominal.path], [operator]).infidelity
             beyond += last * max(0.0, whole - float(grid.weights @ function.total))

@@ -96,6 +96,19 @@ def test_white_amplitude_noise_on_a_pi_pulse() -> None:
     )
 
 
+def test_a_band_that_ends_above_the_samples_is_bounded_and_named() -> None:
+    density, duration = 1e-10, 50e-9
+    found = gate(0.5, duration, AmplitudeNoise("amplitude", white=density, low=5e9, high=2e10))
+    (source,) = found.effect.sources
+    # No sample carries it, 400 slices of a gate of 50 ns end at 4 GHz; the sinc^2 of the angle's
+    # variance leaves at most 1/(pi^2 4 GHz 50 ns) of the whole there, that of all white noise.
+    whole = math.pi**2 * density / (4 * duration) / 3
+    assert source.infidelity == 0.0
+    assert 0.0 < source.unreached < 2 * whole / (math.pi**2 * 4e9 * duration)
+    assert found.effect.agree
+    assert any("where the samples end" in text for text in found.warnings)
+
+
 def test_white_voltage_noise_flips_up_and_down() -> None:
     density, duration = 2e2, 1e-6  # V^2/Hz at 1 Hz/V
     found = gate(0.0, duration, ProbeNoise("probe", white=density))
