@@ -4,7 +4,7 @@ import math
 
 from cosim.dsp.detection.assignment import AssignmentSplit
 from cosim.dsp.detection.shots import ShotCounts
-from cosim.outgoing import OutputLine, least_added_quanta, power_gain
+from cosim.outgoing import least_added_quanta
 from cosim.quantum.qubit import Qubit
 from cosim.quantum.readout_limits import dispersive_guards
 from cosim.readout_noise import ARRIVING, ChainNoise
@@ -63,7 +63,6 @@ def chain_warnings(
     compression: tuple[float, float],
     noise: ChainNoise,
     added: float,
-    line: OutputLine,
     split: AssignmentSplit,
 ) -> tuple[str, ...]:
     """Judge the chain.
@@ -76,8 +75,6 @@ def chain_warnings(
         At its output.
     added : float
         Quanta at the resonator's output; NaN where that has no meaning.
-    line : OutputLine
-        In front of the netlist.
     split : AssignmentSplit
         The decisions.
 
@@ -92,11 +89,11 @@ def chain_warnings(
             f"the chain saturates for |{state}> more than for |{1 - state}>: its answers are "
             f"{compression[0]:.3g} (|0>) and {compression[1]:.3g} (|1>) of those of a linear chain"
         )
-    least = least_added_quanta(max(power_gain(line.stages), 1.0)) if line.stages else 0.0
-    if not math.isnan(added) and added < least:
+    # The chain ends in a digital record, with a gain that no limit depends on: half a quantum.
+    if not math.isnan(added) and added < least_added_quanta(math.inf):
         warnings.append(
-            f"the chain adds {added:.3g} quanta, less than the {least:.3g} that one which keeps "
-            "the phase must add: a noise temperature or a temperature of noise is too low"
+            f"the chain adds {added:.3g} quanta, less than the half that one which keeps the phase "
+            "must add: a noise temperature is too low, or the netlist's noise is left out"
         )
     if noise.method == ARRIVING:
         warnings.append(
@@ -139,7 +136,9 @@ def shot_warnings(
     """
     warnings = []
     for name, counts in (("integrated shots", shots), ("whole records", records)):
-        off = counts.deviation(split.assignment_matrix)
+        expected = split.assignment_error
+        # Without an error that is expected there is no scatter to compare with.
+        off = counts.deviation(split.assignment_matrix) if expected > 0.0 else 0.0
         if abs(off) > SLACK:
             why = ""
             if split.lsb_over_sigma > 1.0:
@@ -150,6 +149,6 @@ def shot_warnings(
             warnings.append(
                 f"{counts.count} {name} give an assignment error of "
                 f"{counts.assignment_error:.3g}, {abs(off):.1f} standard errors from "
-                f"{split.assignment_error:.3g} in closed form{why}"
+                f"{expected:.3g} in closed form{why}"
             )
     return tuple(warnings)

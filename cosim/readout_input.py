@@ -15,7 +15,7 @@ from cosim.quantum.incident import (
     sample_drive,
     two_step_drive,
 )
-from cosim.quantum.resonator import Resonator, field_rate
+from cosim.quantum.resonator import Resonator, amplitude_for_photons, field_rate
 from cosim.quantum.resonator_field import Field, evolve_field, fields_with_jump
 from cosim.readout_schema import ReadoutTable, ResonatorTable
 from cosim.waveform import ComplexArray, FloatArray, Waveform
@@ -104,8 +104,8 @@ def make_answers(pulse: ResonatorTable, table: ReadoutTable, stop: float) -> Ans
     line = output_line(table)
     fields = {name: evolve_field(resonator, drive, level) for name, level in _levels(pulse)}
     first = pulse.start
-    decays = _inner_times(first, table.window[1], table.decay_times if _decays(table) else 0)
-    rises = _inner_times(
+    decays = inner_times(first, table.window[1], table.decay_times if _decays(table) else 0)
+    rises = inner_times(
         first, table.window[1], max(2, table.decay_times // 2) if _excites(table) else 0
     )
     fields |= _jumps(resonator, drive, decays, "decay", 1, 0)
@@ -164,11 +164,7 @@ def drive_level(pulse: ResonatorTable, resonator: Resonator) -> float:
     if pulse.power is not None:
         return incident_amplitude(1e-3 * 10.0 ** (pulse.power / 10.0), pulse.drive)
     assert pulse.photons is not None  # The table insists on one of the two.
-    per_flux = [
-        resonator.driven_rate / abs(complex(field_rate(resonator, state, pulse.drive))) ** 2
-        for state in (0, 1)
-    ]
-    return math.sqrt(pulse.photons / (0.5 * sum(per_flux)))
+    return amplitude_for_photons(resonator, pulse.photons, pulse.drive)
 
 
 def source_waveforms(
@@ -259,6 +255,24 @@ def check_readout_window(table: ReadoutTable, stop: float) -> None:
         )
 
 
+def inner_times(first: float, last: float, count: int) -> FloatArray:
+    """Spread times of jumps over a stretch; at its ends the runs without a jump stand.
+
+    Parameters
+    ----------
+    first, last : float
+        Ends of the stretch in s.
+    count : int
+        How many.
+
+    Returns
+    -------
+    ndarray, shape (count,)
+        In s, the middles of equal parts.
+    """
+    return np.asarray(first + (last - first) * (np.arange(count) + 0.5) / max(count, 1))
+
+
 def _levels(pulse: ResonatorTable) -> list[tuple[str, int]]:
     levels = [(GROUND, 0), (EXCITED, 1)]
     return levels if pulse.chi_2 is None else [*levels, (SECOND, 2)]
@@ -270,11 +284,6 @@ def _decays(table: ReadoutTable) -> bool:
 
 def _excites(table: ReadoutTable) -> bool:
     return _decays(table) and table.thermal_population > 0.0
-
-
-def _inner_times(first: float, last: float, count: int) -> FloatArray:
-    """Spread times of jumps over a stretch; at its ends the runs without a jump stand."""
-    return np.asarray(first + (last - first) * (np.arange(count) + 0.5) / max(count, 1))
 
 
 def _jumps(

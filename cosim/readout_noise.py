@@ -9,11 +9,11 @@ import numpy as np
 
 from cosim.added_noise import INJECTION, choose_method
 from cosim.circuit.bias import CleanRun, clean_run, conductance
+from cosim.circuit.deck import Deck
 from cosim.circuit.generators import NoiseCurrent, noise_currents, noise_samples
 from cosim.circuit.injection import injected_difference
 from cosim.circuit.inventory import NoisyDevice, independent_sources
 from cosim.circuit.noise_settings import NoiseSettings
-from cosim.circuit.stimulus import with_stimuli
 from cosim.dsp.detection.output_noise import OutputNoise
 from cosim.errors import TestbenchError
 from cosim.noisy_circuit import modelled_settings, noise_settings
@@ -21,7 +21,7 @@ from cosim.outgoing import ArrivingNoise
 from cosim.readout_output import Grid, ReadoutPlan, outputs_record
 from cosim.readout_schema import ReadoutTable
 from cosim.voltage_noises import NetlistNoise
-from cosim.waveform import ComplexArray, FloatArray, Waveform
+from cosim.waveform import ComplexArray, FloatArray
 
 ARRIVING = "arriving only"
 # Bands of |frequency| that the injected noise is averaged over, in lines of a record's spectrum.
@@ -70,13 +70,13 @@ class NoisyInput:
 
     Parameters
     ----------
-    waveforms : tuple of mapping of str to Waveform
-        What the sources play for |0> and for |1>: the circuit's bias is that of these runs.
+    sources : tuple of str
+        The deck's sources.
     emf_density : float
-        One-sided density of the EMF of each source in V^2/Hz.
+        One-sided density of the EMF of each in V^2/Hz.
     """
 
-    waveforms: tuple[Mapping[str, Waveform], Mapping[str, Waveform]]
+    sources: tuple[str, ...]
     emf_density: float = field(metadata={"unit": "V^2/Hz"})
 
 
@@ -114,25 +114,25 @@ def netlist_noise_at_output(
     table: ReadoutTable,
     grid: Grid,
     noise: NetlistNoise,
+    decks: Sequence[Deck],
     entry: NoisyInput | None,
-    frequency: float,
 ) -> ChainNoise:
     """Simulate the noise of the netlist at its outputs, together with what arrives.
 
     Parameters
     ----------
     plan : ReadoutPlan
-        The deck, its source as it stands there.
+        The plan.
     table : ReadoutTable
         With the outputs and the seed.
     grid : Grid
         Of the records.
     noise : NetlistNoise
         The table [[noise]].
+    decks : sequence of Deck
+        For |0> and for |1>: the noise is that of the circuit's bias in these runs.
     entry : NoisyInput or None
         Where noise arrives; None for a deck with a sensor of its own.
-    frequency : float
-        At which the signal enters in Hz, 0 in baseband.
 
     Returns
     -------
@@ -148,8 +148,7 @@ def netlist_noise_at_output(
     """
     texts = [probe.text for probe in plan.probes]
     span = table.window
-    waves: Sequence[Mapping[str, Waveform]] = ({},) if entry is None else entry.waveforms
-    cleans = [clean_run(with_stimuli(plan.deck, each), plan.request, texts) for each in waves]
+    cleans = [clean_run(deck, plan.request, texts) for deck in decks]
     behind = {} if entry is None else _behind(plan, entry, cleans[0], table)
     settings = noise_settings(noise, plan.deck)
     reason = "I and Q, or an output in baseband, are no voltage around a carrier"
@@ -177,7 +176,8 @@ def netlist_noise_at_output(
             hint=f'say method = "{INJECTION}"',
         )
     instant = 0.5 * (span[0] + span[1])
-    settings, _ = modelled_settings(cleans[0], settings, noise, frequency or 1.0 / span[1], instant)
+    carrier = table.output_frequency or 1.0 / span[1]
+    settings, _ = modelled_settings(cleans[0], settings, noise, carrier, instant)
     return _injected(plan, table, grid, noise, cleans, behind, settings, reason)
 
 
@@ -243,7 +243,7 @@ def _behind(
     """Find the resistors behind the sources; give the density in A^2/Hz of what arrives there."""
     nets = {source.path: source.nodes for source in independent_sources(plan.deck)}
     found = {}
-    for name in entry.waveforms[0]:
+    for name in entry.sources:
         ends = {net for net in nets.get(name.lower(), ()) if net != "0"}
         devices = [one for one in clean.inventory.devices if _is_behind(one, ends)]
         if len(devices) != 1:

@@ -1,7 +1,7 @@
 """The netlist of a readout: its runs, and the records that its outputs give."""
 
 import math
-from collections.abc import Mapping, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
 
@@ -11,12 +11,11 @@ from scipy.integrate import cumulative_trapezoid
 from cosim.capture import Capture, check_steps
 from cosim.circuit.analysis import TransientRequest, TransientResult
 from cosim.circuit.confidential import Roots, check_roots, kept_files, withhold
-from cosim.circuit.deck import Deck, PreparedDeck
+from cosim.circuit.deck import Deck
 from cosim.circuit.family import simulate_family
-from cosim.circuit.netlist import resolve_saves, with_parameters
+from cosim.circuit.netlist import resolve_saves
 from cosim.circuit.preparation import prepare
 from cosim.circuit.probe import Probe, evaluate_probe, parse_probe
-from cosim.circuit.stimulus import with_stimuli
 from cosim.decks import altered_deck, netlist_of, read_deck, roots_of
 from cosim.dsp.demodulation import demodulate
 from cosim.errors import CosimError, DeckError, InputError, TestbenchError
@@ -143,56 +142,33 @@ def make_readout_plan(bench: ReadoutBench, frequency: float) -> ReadoutPlan:
     return ReadoutPlan(deck, request, probes, roots, (*deck.notices, *withheld, *notices))
 
 
-def simulate_answers(
-    plan: ReadoutPlan, waveforms: Sequence[Mapping[str, Waveform]]
-) -> list[TransientResult]:
-    """Run the netlist once for each answer, with one load of the deck where that will do.
+def simulate_all(plan: ReadoutPlan, decks: Sequence[Deck]) -> list[TransientResult]:
+    """Run all decks of a readout, with one load for those that differ little enough.
 
     Parameters
     ----------
     plan : ReadoutPlan
         From `make_readout_plan`.
-    waveforms : sequence of mapping of str to Waveform
-        For each run the sources and what they play, in V.
+    decks : sequence of Deck
+        Its deck for each of the runs.
 
     Returns
     -------
     list of TransientResult
-        In the order of the runs.
+        In the order of the decks.
 
     Raises
     ------
     InputError, SimulationError
-        If a source does not exist, or a run fails.
+        If a deck is wrong or a run fails.
     """
-    decks = [with_stimuli(plan.deck, waves) for waves in waveforms]
-    return _simulate(plan, [prepare(deck, plan.request) for deck in decks])
-
-
-def simulate_values(
-    plan: ReadoutPlan, parameters: Sequence[Mapping[str, float]]
-) -> list[TransientResult]:
-    """Run the netlist once for each set of its parameters; else as `simulate_answers`.
-
-    Parameters
-    ----------
-    plan : ReadoutPlan
-        From `make_readout_plan`.
-    parameters : sequence of mapping of str to float
-        For each run values of the deck's .param.
-
-    Returns
-    -------
-    list of TransientResult
-        In the order of the runs.
-
-    Raises
-    ------
-    InputError, SimulationError
-        If a parameter does not exist, or a run fails.
-    """
-    decks = [with_parameters(plan.deck, values) for values in parameters]
-    return _simulate(plan, [prepare(deck, plan.request) for deck in decks])
+    ready = [prepare(deck, plan.request) for deck in decks]
+    found = []
+    for outcome in simulate_family(ready, [plan.request] * len(ready)):
+        if isinstance(outcome, CosimError):
+            raise outcome
+        found.append(outcome)
+    return found
 
 
 def record_grid(table: ReadoutTable, begin: float) -> Grid:
@@ -320,15 +296,6 @@ def _cell_means(time: FloatArray, iq: ComplexArray, grid: Grid) -> ComplexArray:
     area = cumulative_trapezoid(iq, time, initial=0)
     at = np.interp(edges, time, area.real) + 1j * np.interp(edges, time, area.imag)
     return np.asarray(np.diff(at) / grid.step)
-
-
-def _simulate(plan: ReadoutPlan, ready: Sequence[PreparedDeck]) -> list[TransientResult]:
-    found = []
-    for outcome in simulate_family(ready, [plan.request] * len(ready)):
-        if isinstance(outcome, CosimError):
-            raise outcome
-        found.append(outcome)
-    return found
 
 
 def _time_step(bench: ReadoutBench, deck: Deck, frequency: float) -> tuple[float, tuple[str, ...]]:

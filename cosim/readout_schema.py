@@ -123,31 +123,31 @@ class ResonatorTable:
 
 @dataclass(frozen=True, slots=True)
 class SensorTable:
-    """Table [sensor]: a charge sensor whose state is a number in the deck.
+    """Table [sensor]: a charge sensor whose state is the value of an element of the deck.
 
     Parameters
     ----------
-    parameter : str
-        The deck's .param that takes the value.
     value_0, value_1 : float
-        Its values for |0> and |1>, in SI units.
-    event : float
-        Time in s at which the state may begin to show: the start of the conversion to charge.
+        What the element is worth for |0> and for |1>, in SI units.
+    parameter : str
+        The deck's .param of its value from the start on.
+    late_parameter : str
+        The .param of its value from the event on.
+    event_parameter : str
+        The .param of the time in s of the event.
+    start : float
+        Time in s from which on the state counts.
     tunnel_time : float
-        Mean time in s in which |1> tunnels, and then looks like `value_1`; 0: at once.
-    return_time : float
-        Mean time in s after which it has gone back to `value_0`.
-    edge : float
-        Duration in s over which the value changes.
+        Mean time in s in which |1> tunnels, and only then looks like `value_1`; 0: at once.
     """
 
-    parameter: str
     value_0: float
     value_1: float
-    event: Time = 0.0
+    parameter: str
+    late_parameter: str
+    event_parameter: str
+    start: Annotated[float, Quantity("s", least=0.0)] = 0.0
     tunnel_time: Annotated[float, Quantity("s", least=0.0)] = 0.0
-    return_time: DecayTime = math.inf
-    edge: PositiveTime = 1e-9
 
     def __post_init__(self) -> None:
         if self.value_0 == self.value_1:

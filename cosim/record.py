@@ -42,9 +42,7 @@ class Clock:
             self.laps[prefix + "ngspice"] = shot.result.wall_time
 
 
-def make_record(
-    bench: Bench, shot: Capture, carrier_frequency: float, clock: Clock
-) -> RunRecord:
+def make_record(bench: Bench, shot: Capture, carrier_frequency: float, clock: Clock) -> RunRecord:
     """Write down what is needed to check a run in two years.
 
     Parameters

@@ -30,7 +30,13 @@ TABLES: dict[str, dict[str, Any]] = {
         "t1": "30 us",
     },
 }
-SENSOR = {"parameter": "g_sensor", "value_0": 1e-6, "value_1": 2e-6}
+SENSOR = {
+    "parameter": "g_sensor",
+    "late_parameter": "g_late",
+    "event_parameter": "t_event",
+    "value_0": 1e-6,
+    "value_1": 2e-6,
+}
 
 
 def altered(**tables: dict[str, Any] | None) -> dict[str, Any]:

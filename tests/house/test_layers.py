@@ -62,6 +62,8 @@ FLOORS = {
     "readout_input": 4,
     "readout_output": 4,
     "readout_noise": 4,
+    "readout_chain": 4,
+    "readout_sensor": 4,
     "readout_guards": 4,
     "readout": 4,
     "side_results": 3,
