@@ -42,6 +42,7 @@ def split(output: ChainOutput = STEADY, **detector: object) -> object:
             "'decay_times' must rise",
         ),
         (lambda: Transitions(-1.0), "'down' at least zero"),
+        (lambda: Transitions(reversion=-1.0), "'reversion' at least zero"),
         (lambda: Transitions(conversion=0.0), "a positive 'conversion'"),
         (lambda: relaxation(0.0), "a positive t1"),
         (lambda: relaxation(1.0, 1.5), "'thermal_population' between 0 and 1"),

@@ -8,6 +8,8 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from scipy.integrate import quad
+from scipy.special import ndtr
 
 from cosim import archive
 from cosim.dsp.detection.aftermath import decision_latency, repeat_agreement
@@ -155,8 +157,59 @@ class TestConversion:
         # 1 ps late in a response of 80 ns.
         assert fast.assignment_error == pytest.approx(none.assignment_error, rel=1e-3)
 
-    def test_shots_agree(self) -> None:
-        rates, preparation = Transitions(2e5, 1e5, 4e6), Preparation(0.02, 0.01)
+    @pytest.mark.parametrize("snr", [12.0, 1e4])
+    def test_and_back_in_closed_form(self, snr: float) -> None:
+        rates = Transitions(conversion=4e6, reversion=1e6)
+        split = split_assignment(steady(COUNT, STEP, snr), Detector(weights="boxcar"), rates, SURE)
+        # The time that it is seen for, over the window, by adaptive quadrature of both times.
+        half = DURATION / 2
+
+        def seen(t: float) -> float:
+            kept = math.exp(-1e6 * (DURATION - t)) * ndtr(snr * (1 - t / DURATION - 0.5))
+            part = quad(
+                lambda u: 1e6 * math.exp(-1e6 * u) * ndtr(snr * (u / DURATION - 0.5)),
+                0,
+                DURATION - t,
+                points=[min(half, DURATION - t)],
+            )[0]
+            return 4e6 * math.exp(-4e6 * t) * float(kept + part)
+
+        never = math.exp(-4e6 * DURATION) * separation_error(snr)
+        wanted = never + quad(seen, 0, DURATION, points=[half], epsabs=1e-9)[0]
+        # Two times are averaged over in steps of a 128th of the window, to second order.
+        assert split.assignment_matrix[1, 1] == pytest.approx(wanted, rel=2e-4)
+        if snr > 100:
+            exact = -math.expm1(-4e6 * half) * math.exp(-1e6 * half)
+            assert split.assignment_matrix[1, 1] == pytest.approx(exact, rel=2e-4)
+
+    def test_and_back_through_a_chain_that_saturates(self) -> None:
+        """Brute force: both times drawn, each record sent through the chain."""
+        rates, shots = Transitions(conversion=4e6, reversion=1.5e6), 100_000
+        split = split_assignment(saturating(5e-8), Detector(weights="boxcar"), rates, SURE)
+        random = generator(12, 0, 0)
+        first = random.exponential(1 / 4e6, shots)
+        second = first + random.exponential(1 / 1.5e6, shots)
+        t = STEP * np.arange(COUNT)
+        never = pointer_difference(t, np.array([math.inf]), RATE)
+        values = np.empty(shots)
+        for begin in range(0, shots, 4000):
+            out, back = (
+                pointer_difference(t, times[begin : begin + 4000], RATE)
+                for times in (first, second)
+            )
+            rows = bent(back - never - out, 1.5)
+            values[begin : begin + 4000] = split.projection.along(
+                rows @ split.projection.weights.conj()
+            )
+        values += split.projection.sigmas[1] * random.standard_normal(shots)
+        counted = float(np.mean(values < split.threshold))
+        error = math.sqrt(counted * (1 - counted) / shots)
+        # The chain settles in 80 ns; transitions closer than that are no sum of two.
+        assert split.assignment_matrix[0, 1] == pytest.approx(counted, abs=3 * error)
+
+    @pytest.mark.parametrize("reversion", [0.0, 1.5e6])
+    def test_shots_agree(self, reversion: float) -> None:
+        rates, preparation = Transitions(2e5, 1e5, 4e6, reversion), Preparation(0.02, 0.01)
         output, detector = saturating(5e-8), Detector(threshold="optimal")
         split = split_assignment(output, detector, rates, preparation)
         assert split.errors.decay > 0.01

@@ -58,7 +58,8 @@ def repeat_agreement(
     Raises
     ------
     InputError
-        If the wait is negative or not finite, or state 1 is seen by a conversion, which ends it.
+        If the wait is negative or not finite, or there is a conversion or reversion, after
+        which the state is another.
 
     Notes
     -----
@@ -67,7 +68,7 @@ def repeat_agreement(
     """
     if not (math.isfinite(wait) and wait >= 0):
         raise InputError(f"repeat agreement: wanted a wait of at least zero in s, got {wait!r}")
-    if transitions.converts:
+    if transitions.converts or transitions.reversion > 0:
         raise InputError(
             "repeat agreement: wanted a readout that leaves the state, got one that converts it"
         )

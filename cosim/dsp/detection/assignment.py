@@ -99,7 +99,7 @@ class AssignmentSplit:
         Change of the assignment error when every other simulated time of a transition is left
         out: bounds the error of the interpolation.
     neglected : float
-        Bound on the probability of a second transition within one readout, which is left out.
+        Bound on the probability of a further transition within one readout, which is left out.
     """
 
     assignment_error: float = field(metadata={"unit": "1"})
@@ -162,7 +162,7 @@ def split_assignment(
     output : ChainOutput
     detector : Detector
     transitions : Transitions
-        During the readout; at most one is counted in each.
+        During the readout; at most one is counted in each, and a reversion.
     preparation : Preparation
         Before it.
 

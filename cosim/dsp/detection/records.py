@@ -121,7 +121,10 @@ class Transitions:
     conversion : float
         Rate in 1/s at which state 1 comes to look like itself, as a spin does when its electron
         tunnels: before, the chain sees state 0, and a state that has gone down by then is never
-        seen. Once seen it stays. Infinite where it is seen at once.
+        seen. Infinite where it is seen at once.
+    reversion : float
+        Rate in 1/s at which the chain sees state 0 again after it came to see state 1 by a
+        conversion or by `up`, as when another electron fills the place; 0 where it stays.
 
     Raises
     ------
@@ -132,9 +135,11 @@ class Transitions:
     down: float = field(default=0.0, metadata={"unit": "1/s"})
     up: float = field(default=0.0, metadata={"unit": "1/s"})
     conversion: float = field(default=math.inf, metadata={"unit": "1/s"})
+    reversion: float = field(default=0.0, metadata={"unit": "1/s"})
 
     def __post_init__(self) -> None:
-        for name, value in (("down", self.down), ("up", self.up)):
+        for name in ("down", "up", "reversion"):
+            value = getattr(self, name)
             if not (math.isfinite(value) and value >= 0):
                 raise InputError(f"transitions: wanted '{name}' at least zero in 1/s, got {value}")
         if not self.conversion > 0:
@@ -160,14 +165,14 @@ class Transitions:
         Course
         """
         if state == 0:
-            return Course(0, self.up, 1.0)
+            return Course(0, self.up, 1.0, self.reversion)
         if not self.converts:
-            return Course(1, self.down, 1.0)
+            return Course(1, self.down, 1.0, 0.0)
         rate = self.conversion + self.down
-        return Course(0, rate, self.conversion / rate)
+        return Course(0, rate, self.conversion / rate, self.reversion)
 
     def neglected(self, duration: float) -> float:
-        """Bound the probability of a second transition in one readout, which is left out.
+        """Bound the probability of a further transition in one readout, which is left out.
 
         Parameters
         ----------
@@ -177,9 +182,9 @@ class Transitions:
         Returns
         -------
         float
-            down up duration^2 / 2.
+            up max(down, reversion) duration^2 / 2.
         """
-        return self.down * self.up * duration**2 / 2
+        return self.up * max(self.down, self.reversion) * duration**2 / 2
 
 
 @dataclass(frozen=True, slots=True)
@@ -194,11 +199,14 @@ class Course:
         At which something happens, in 1/s; the first time counts.
     share : float
         Probability that the record then goes over to the other state; else it stays for good.
+    back : float
+        Rate at which it goes back after that, in 1/s.
     """
 
     seen: int = field(metadata={"unit": "1"})
     rate: float = field(metadata={"unit": "1/s"})
     share: float = field(metadata={"unit": "1"})
+    back: float = field(metadata={"unit": "1/s"})
 
 
 def relaxation(t1: float, thermal_population: float = 0.0) -> Transitions:

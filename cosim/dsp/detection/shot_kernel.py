@@ -3,6 +3,8 @@
 The function compiles at its first call and is cached on disk; nothing compiles at import.
 """
 
+import math
+
 import numba
 import numpy as np
 import numpy.typing as npt
@@ -14,6 +16,13 @@ IndexArray = npt.NDArray[np.int64]
 
 
 @numba.njit(cache=True, nogil=True, error_model="numpy")
+def _look_up(table: FloatArray, place: float) -> float:
+    """Value at a place between the table's points, counted from 0."""
+    k = int(place)
+    return table[k] + (place - k) * (table[k + 1] - table[k])  # type: ignore[no-any-return]
+
+
+@numba.njit(cache=True, nogil=True, error_model="numpy")
 def count_excited(
     generator: Generator,
     count: int,
@@ -22,6 +31,7 @@ def count_excited(
     seen: IndexArray,
     rates: FloatArray,
     changes: FloatArray,
+    backs: FloatArray,
     stop: float,
     values: FloatArray,
     sigmas: FloatArray,
@@ -47,6 +57,8 @@ def count_excited(
         At which something happens to each state in 1/s.
     changes : ndarray, shape (2,)
         Probability that the record then goes over to the other state.
+    backs : ndarray, shape (2,)
+        Rate at which it goes back after that in 1/s.
     stop : float
         End of the window in s.
     values, sigmas : ndarray, shape (2,)
@@ -61,7 +73,8 @@ def count_excited(
     int
     """
     found = 0
-    scale = (paths.shape[1] - 1) / stop
+    last = paths.shape[1] - 1
+    scale = last / stop
     for _ in range(count):
         state = prepared
         if wrong > 0.0 and generator.random() < wrong:
@@ -72,12 +85,16 @@ def count_excited(
         if rates[state] > 0.0:
             place = generator.standard_exponential() / rates[state] * scale
             changed = changes[state] == 1.0 or generator.random() < changes[state]
-            if changed and place < paths.shape[1] - 1:
-                k = int(place)
-                part = place - k
-                value = paths[start, k] + part * (paths[start, k + 1] - paths[start, k])
-                change = path_sigmas[start, k + 1] - path_sigmas[start, k]
-                sigma = path_sigmas[start, k] + part * change
+            if changed and place < last:
+                value = _look_up(paths[start], place)
+                sigma = _look_up(path_sigmas[start], place)
+                if backs[state] > 0.0:
+                    place += generator.standard_exponential() / backs[state] * scale
+                    if place < last:
+                        other = 1 - start
+                        value += _look_up(paths[other], place) - values[other]
+                        after = _look_up(path_sigmas[other], place)
+                        sigma = math.sqrt(sigma**2 + after**2 - sigmas[other] ** 2)
         if value + sigma * generator.standard_normal() > threshold:
             found += 1
     return found

@@ -125,6 +125,7 @@ def integrated_shots(
             np.array([course.seen for course in courses]),
             np.array([course.rate for course in courses]),
             np.array([course.share for course in courses]),
+            np.array([course.back for course in courses]),
             projection.stop,
             projection.values,
             projection.sigmas,
@@ -168,13 +169,21 @@ def shot_points(
     found = np.empty((2, count), dtype=np.complex128)
     for prepared in (0, 1):
         random = generator(seed, _POINTS, prepared)
-        states, times = _courses(random, count, prepared, transitions, preparation)
+        states, times, backs = _courses(random, count, prepared, transitions, preparation)
         mean, sigma = projection.points[states], projection.sigmas[states]
         for state in (0, 1):
             changed = (states == state) & (times < projection.stop)
             at = times[changed]
             mean[changed] = np.interp(at, projection.path_times, projection.path_points[state])
             sigma[changed] = np.interp(at, projection.path_times, projection.path_sigmas[state])
+            other = 1 - state
+            changed &= backs < projection.stop
+            at = backs[changed]
+            after = np.interp(at, projection.path_times, projection.path_points[other])
+            mean[changed] += after - projection.points[other]
+            after = np.interp(at, projection.path_times, projection.path_sigmas[other])
+            power = sigma[changed] ** 2 + after**2 - projection.sigmas[other] ** 2
+            sigma[changed] = np.sqrt(power)
         draws = random.standard_normal((2, count))
         if projection.quadratures == 1:
             draws[1] = 0.0
@@ -233,13 +242,13 @@ def record_shots(
     for prepared in (0, 1):
         random = generator(seed, _RECORDS, prepared)
         for block in _blocks(half, period):
-            states, times = _courses(random, block, prepared, transitions, preparation)
+            course = _courses(random, block, prepared, transitions, preparation)
             draws = draw_lines(random, block, period)
             paths = [draw_noise(plan, draws, lead + needed) for plan in plans]
-            noise = _switched(paths, states, times, output.records.step, lead)
+            noise = _switched(paths, course, output.records.step, lead)
             noise = _filtered(detector.adc, output.records.step, noise)
             shots = noise[:, lead + every * first :: every][:, :samples]
-            shots = _add_means(shots, nodes, states, times)
+            shots = _add_means(shots, nodes, course)
             if detector.adc is not None:
                 clipped += _outside(detector.adc, shots, output.noise.quadratures)
                 shots = quantise(detector.adc, shots)
@@ -279,15 +288,20 @@ def _nodes(output: ChainOutput, detector: Detector, projection: Projection, stat
 
 
 def _add_means(
-    shots: ComplexArray, nodes: list[_Nodes], states: FloatArray, times: FloatArray
+    shots: ComplexArray, nodes: list[_Nodes], course: tuple[FloatArray, FloatArray, FloatArray]
 ) -> ComplexArray:
     """Add the mean record of each shot to its noise."""
+    states, times, backs = course
     means = np.array([node.unchanged for node in nodes])
     found = shots + means[states]
     for state, node in enumerate(nodes):
         changed = np.flatnonzero((states == state) & (times < node.stop))
         if changed.size:
             found[changed] += node.parts(times[changed]) @ node.records - node.unchanged
+        returned = changed[backs[changed] < node.stop]
+        if returned.size:
+            other = nodes[1 - state]
+            found[returned] += other.parts(backs[returned]) @ other.records - other.unchanged
     return np.asarray(found)
 
 
@@ -297,8 +311,8 @@ def _courses(
     prepared: int,
     transitions: Transitions,
     preparation: Preparation,
-) -> tuple[FloatArray, FloatArray]:
-    """States that are seen at first, and times of their change in s; infinite for none."""
+) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """States that are seen at first, times of their change and of the way back, or infinity."""
     wrong = random.random(count) < preparation.wrong[prepared]
     states = np.where(wrong, 1 - prepared, prepared)
     courses = [transitions.course(state) for state in (0, 1)]
@@ -307,13 +321,16 @@ def _courses(
     times = np.full(count, math.inf)
     draws = random.standard_exponential(count)
     np.divide(draws, rates, out=times, where=(rates > 0) & (random.random(count) < shares))
-    return np.array([course.seen for course in courses])[states], times
+    backs = np.full(count, math.inf)
+    rates = np.array([course.back for course in courses])[states]
+    if rates.any():
+        np.divide(random.standard_exponential(count), rates, out=backs, where=rates > 0)
+    return np.array([course.seen for course in courses])[states], times, times + backs
 
 
 def _switched(
     paths: list[ComplexArray],
-    states: FloatArray,
-    times: FloatArray,
+    course: tuple[FloatArray, FloatArray, FloatArray],
     step: float,
     lead: int,
 ) -> ComplexArray:
@@ -321,7 +338,8 @@ def _switched(
     if len(paths) == 1:
         return paths[0]
     t = step * (np.arange(paths[0].shape[1]) - lead)
-    changed = t[None, :] >= times[:, None]
+    states, times, backs = course
+    changed = (t[None, :] >= times[:, None]) & (t[None, :] < backs[:, None])
     return np.where((states[:, None] == 1) ^ changed, paths[1], paths[0])
 
 
