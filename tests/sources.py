@@ -201,6 +201,10 @@ GOLDEN_RULE = (
     'R. J. Schoelkopf et al., "Qubits as spectrometers of quantum noise" (2003), golden rule for '
     f"classical noise, {MEMORY}"
 )
+GRAY = (
+    "P. R. Gray et al., Analysis and Design of Analog Integrated Circuits, the emitter-coupled "
+    f"pair, {MEMORY}; computed from the formula"
+)
 GREEN = (
     'T. J. Green, J. Sastrawan, H. Uys, M. J. Biercuk, "Arbitrary quantum control of qubits in the '
     f'presence of universal noise", New J. Phys. 15, 095004 (2013), {MEMORY}'
