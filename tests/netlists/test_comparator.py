@@ -9,13 +9,13 @@ import pytest
 from cosim.circuit.analysis import TransientRequest
 from cosim.circuit.bias import CleanRun, clean_run
 from cosim.circuit.deck import Deck
-from cosim.circuit.generators import noise_currents, noise_grid, noise_samples
-from cosim.circuit.injection import with_currents
 from cosim.circuit.netlist import deck_from_text, load_deck, with_parameters
 from cosim.circuit.noise_parts import NoiseTemperatures
 from cosim.circuit.noise_settings import NoiseSettings
+from cosim.circuit.noisy_run import run_with_noise
 from cosim.circuit.simulator import simulate
 from cosim.dsp.decisions import fit_probit, sampled_decisions
+from cosim.errors import InputError
 from cosim.waveform import FloatArray
 
 pytestmark = pytest.mark.ngspice
@@ -119,16 +119,22 @@ def noisy_decisions(
 ) -> FloatArray:
     """Decisions with the noise of all devices, seed after seed."""
     settings = NoiseSettings(NoiseTemperatures(temperature, temperature, temperature))
-    currents = noise_currents(run, settings, None)
-    ends = [current.nodes for current in currents]
-    found = []
-    for seed in seeds:
-        samples = noise_samples(run, settings, currents, seed)
-        deck = with_currents(run.deck, ends, noise_grid(run), samples)
-        # A decision is no small signal, so that the run is not compared with the clean one.
-        result = simulate(deck, run.request)
-        found.append(decided(result.time, result.vectors["v(q)"], cycles))
+    runs = (run_with_noise(run, seed, settings) for seed in seeds)
+    found = [decided(noisy.time, noisy.vectors["v(q)"], cycles) for noisy in runs]
     return np.concatenate(found)
+
+
+def test_a_run_with_noise_is_repeated_by_its_seed_and_refuses_a_scale() -> None:
+    deck, _ = ramp(OFFSET - 0.1e-3, OFFSET + 0.1e-3, 6)
+    run = clean_run(deck, request(6), ["v(q)", "v(on)"])
+    settings = NoiseSettings(NoiseTemperatures(4.0, 4.0, 4.0))
+    one, again, other = (run_with_noise(run, seed, settings) for seed in (3, 3, 4))
+    assert np.array_equal(one.vectors["v(on)"], again.vectors["v(on)"])
+    assert not np.array_equal(one.vectors["v(on)"], other.vectors["v(on)"])
+    silent = run_with_noise(run, 3, settings, devices=())
+    assert np.array_equal(silent.vectors["v(on)"], run.result.vectors["v(on)"])
+    with pytest.raises(InputError, match=r"needs NoiseSettings.scale = 1, got 0.1"):
+        run_with_noise(run, 3, NoiseSettings(scale=0.1))
 
 
 @pytest.mark.full
