@@ -2,22 +2,26 @@
 
 import os
 from collections.abc import Iterable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 from cosim.capture import make_plan
 from cosim.circuit.confidential import kept_lines
 from cosim.circuit.netlist import resolve_saves
 from cosim.circuit.preparation import prepare
-from cosim.circuit.simulator import simulator_version
+from cosim.circuit.simulator import simulate_prepared, simulator_version
 from cosim.gate import gate_target
 from cosim.imported import import_waveform
 from cosim.noisy_circuit import noise_settings
-from cosim.probe_run import estimate_run, try_deck
+from cosim.probe_run import TRIAL_POINTS, estimate_run, try_deck
+from cosim.readout import readout_frequency
+from cosim.readout_chain import STATES, make_inquiry
+from cosim.readout_input import GROUND
+from cosim.readout_output import make_readout_plan, record_grid
 from cosim.sweep.estimate import estimate_sweep
 from cosim.sweep.plan import SweepPlan
 from cosim.sweep.planning import make_sweep
-from cosim.testbench import Testbench, gate_bench, load_testbench
+from cosim.testbench import ReadoutBench, Testbench, gate_bench, load_testbench
 from cosim.units import format_quantity
 from cosim.voltage_noises import NetlistNoise
 
@@ -73,7 +77,10 @@ def check_testbench(
     MissingDependencyError
         If ngspice is not installed.
     """
-    bench = gate_bench(load_testbench(path))
+    loaded = load_testbench(path)
+    if isinstance(loaded, ReadoutBench):
+        return _check_readout(loaded, path)
+    bench = gate_bench(loaded)
     target = gate_target(bench)
     found = [
         Finding("testbench", f"{path}: {bench.title}", "testbench", str(path)),
@@ -92,6 +99,54 @@ def check_testbench(
         found += _sweep_findings(plan)
     found.append(Finding("result", "ready to run", "ready", True))
     return tuple(found), deck
+
+
+def _check_readout(
+    bench: ReadoutBench, path: str | os.PathLike[str]
+) -> tuple[tuple[Finding, ...], tuple[str, ...]]:
+    plan = make_readout_plan(bench, readout_frequency(bench))
+    inquiry = make_inquiry(bench, plan)
+    for noise in bench.noise:
+        if isinstance(noise, NetlistNoise):
+            noise_settings(noise, plan.deck)
+    grid = record_grid(bench.readout, inquiry.begin)
+    request = plan.request
+    resolve_saves(plan.deck, request.saves)
+    prepared = prepare(inquiry.deck_of(plan, GROUND), request)
+    runs = len(STATES) + len(inquiry.jumps) + (3 if inquiry.answers is not None else 0)
+    points = round(request.stop / request.step) + 1
+    short = replace(request, stop=min(request.stop, TRIAL_POINTS * request.step))
+    simulate_prepared(prepare(inquiry.deck_of(plan, GROUND), short), short)
+    found = [
+        Finding("testbench", f"{path}: {bench.title}", "testbench", str(path)),
+        Finding(
+            "deck",
+            f"{plan.deck.path}: {len(plan.deck.files)} files, {len(prepared.lines)} lines sent",
+            "deck_files",
+            [file.path for file in plan.deck.files],
+        ),
+        *(Finding("output", item.text, "output", item.text) for item in plan.probes),
+        Finding(
+            "transient",
+            f"{format_quantity(request.stop, 's')} at {format_quantity(request.step, 's', 5)}, "
+            f"{points} points",
+            "points",
+            points,
+        ),
+        Finding("runs", f"{runs} of the netlist, without noise and floor", "runs", runs),
+        Finding(
+            "record",
+            f"{grid.count} samples of {format_quantity(grid.step, 's', 4)}",
+            "samples",
+            grid.count,
+        ),
+        Finding("simulator", simulator_version(), "simulator", simulator_version()),
+    ]
+    notices = (*prepared.notices, *plan.notices)
+    found += [Finding("notice", text, f"notice_{k}", text) for k, text in _count(notices)]
+    found.append(Finding("result", "ready to run", "ready", True))
+    lines = kept_lines(prepared.lines, prepared.origins, plan.deck.files, plan.confidential)
+    return tuple(found), lines
 
 
 def _sweep_findings(plan: SweepPlan) -> list[Finding]:

@@ -7,7 +7,11 @@ import numpy as np
 from scipy.constants import Boltzmann
 
 from cosim.dsp.detection.aftermath import decision_latency, repeat_agreement
-from cosim.dsp.detection.assignment import scan_integration, split_assignment
+from cosim.dsp.detection.assignment import (
+    AssignmentSplit,
+    scan_integration,
+    split_assignment,
+)
 from cosim.dsp.detection.converter import Adc
 from cosim.dsp.detection.reception import ChainOutput, Detector
 from cosim.dsp.detection.records import Preparation, Records, Transitions
@@ -78,7 +82,7 @@ def run_readout(bench: ReadoutBench, *, progress: Progress | None = None) -> Rea
     del progress
     clock = Clock()
     table = bench.readout
-    frequency = _frequency(bench)
+    frequency = readout_frequency(bench)
     plan = make_readout_plan(bench, frequency)
     clock.lap("deck")
     inquiry = make_inquiry(bench, plan)
@@ -127,7 +131,7 @@ def run_readout(bench: ReadoutBench, *, progress: Progress | None = None) -> Rea
         residual_photons=photons,
         wait=wait,
         latency=decision_latency(detector.adc, table.adc_cycles) if detector.adc else 0.0,
-        repeat_agreement=repeat_agreement(split, *chances).mean,
+        repeat_agreement=_agreement(split, *chances),
         dephasing_rate=dephasing,
         shots=shots,
         records=records,
@@ -148,8 +152,19 @@ def run_readout(bench: ReadoutBench, *, progress: Progress | None = None) -> Rea
     )
 
 
-def _frequency(bench: ReadoutBench) -> float:
-    """Frequency in Hz that the time step follows; 0 in baseband."""
+def readout_frequency(bench: ReadoutBench) -> float:
+    """Give the frequency that the time step follows.
+
+    Parameters
+    ----------
+    bench : ReadoutBench
+        The testbench.
+
+    Returns
+    -------
+    float
+        In Hz; 0 in baseband.
+    """
     if bench.resonator is not None:
         return input_frequency_of(bench.resonator, bench.readout)
     return bench.readout.output_frequency or 0.0
@@ -232,6 +247,13 @@ def _left_behind(pulse: ResonatorTable | None, inquiry: Inquiry) -> tuple[float,
     ground, excited = (steady_field(resonator, state, level, pulse.drive) for state in (0, 1))
     rate = float(dephasing_rate(resonator, ground, excited))
     return photons, wait_for_photons(resonator, photons, LEFT), rate
+
+
+def _agreement(split: AssignmentSplit, transitions: Transitions, preparation: Preparation) -> float:
+    """Repeat agreement; a state that is converted to be seen is not there for a second readout."""
+    if transitions.converts:
+        return math.nan
+    return repeat_agreement(split, transitions, preparation).mean
 
 
 def _dispersive(pulse: ResonatorTable | None, inquiry: Inquiry) -> tuple[str, ...]:

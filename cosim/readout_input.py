@@ -207,7 +207,20 @@ def source_waveforms(
 
 
 def input_frequency_of(pulse: ResonatorTable, table: ReadoutTable) -> float:
-    """Give the frequency in Hz at which the answer enters; 0 for a baseband pair."""
+    """Give the frequency at which the answer enters.
+
+    Parameters
+    ----------
+    pulse : ResonatorTable
+        With the drive's frequency.
+    table : ReadoutTable
+        With the way in.
+
+    Returns
+    -------
+    float
+        In Hz; 0 for a baseband pair.
+    """
     if table.signal == "baseband":
         return 0.0
     return table.intermediate_frequency or pulse.drive

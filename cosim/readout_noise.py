@@ -81,7 +81,18 @@ class NoisyInput:
 
 
 def quadratures_of(table: ReadoutTable) -> int:
-    """Tell whether the output is I and Q (2) or one voltage in baseband (1)."""
+    """Tell what the outputs are.
+
+    Parameters
+    ----------
+    table : ReadoutTable
+        With the outputs.
+
+    Returns
+    -------
+    int
+        2 for I and Q, or a voltage around a carrier; 1 for one voltage in baseband.
+    """
     return 2 if table.q is not None or table.output_frequency is not None else 1
 
 

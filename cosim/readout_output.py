@@ -17,7 +17,7 @@ from cosim.circuit.netlist import resolve_saves
 from cosim.circuit.preparation import prepare
 from cosim.circuit.probe import Probe, evaluate_probe, parse_probe
 from cosim.decks import altered_deck, netlist_of, read_deck, roots_of
-from cosim.dsp.demodulation import demodulate
+from cosim.dsp.demodulation import demodulate, half_length
 from cosim.errors import CosimError, DeckError, InputError, TestbenchError
 from cosim.readout_input import check_readout_window
 from cosim.readout_schema import ReadoutTable
@@ -120,6 +120,7 @@ def make_readout_plan(bench: ReadoutBench, frequency: float) -> ReadoutPlan:
             hint='add to [netlist], for instance: stop = "600 ns"',
         )
     check_readout_window(bench.readout, stop)
+    _check_ends(bench, stop)
     step, notices = _time_step(bench, deck, frequency)
     if bench.stimulus:
         deck, coarse = apply_stimuli(
@@ -296,6 +297,26 @@ def _cell_means(time: FloatArray, iq: ComplexArray, grid: Grid) -> ComplexArray:
     area = cumulative_trapezoid(iq, time, initial=0)
     at = np.interp(edges, time, area.real) + 1j * np.interp(edges, time, area.imag)
     return np.asarray(np.diff(at) / grid.step)
+
+
+def _check_ends(bench: ReadoutBench, stop: float) -> None:
+    """Keep the record off the ends of a carrier, where the demodulator sees it switched."""
+    if bench.readout.output_frequency is None:
+        return
+    margin = half_length(bench.readout.output_frequency)
+    last = bench.readout.window[1]
+    if last > stop - margin:
+        raise TestbenchError(
+            f"table [readout], key 'window': it ends at {1e9 * last:.6g} ns, and the run must go "
+            f"on for {1e9 * margin:.3g} ns, half of the demodulator's filter at "
+            f"{bench.readout.output_frequency:.6g} Hz",
+            hint=f'say stop = "{1e9 * (last + margin):.6g} ns" or later in [netlist]',
+        )
+    if bench.sensor is not None and min(bench.sensor.start, bench.readout.window[0]) < margin:
+        raise TestbenchError(
+            f"table [sensor], key 'start': wanted at least {1e9 * margin:.3g} ns, half of the "
+            "demodulator's filter, since the carrier begins with the run"
+        )
 
 
 def _time_step(bench: ReadoutBench, deck: Deck, frequency: float) -> tuple[float, tuple[str, ...]]:

@@ -109,7 +109,7 @@ class ReadoutResult:
         the cycles behind it; 0 without a converter.
     repeat_agreement : float
         Probability that a second readout, at once, decides as the first did, the mean over both
-        states.
+        states; NaN where the state is converted to be seen.
     dephasing_rate : float
         By which the drive measures in steady state, in 1/s.
     shots : ShotCounts

@@ -139,6 +139,8 @@ class SensorTable:
         Time in s from which on the state counts.
     tunnel_time : float
         Mean time in s in which |1> tunnels, and only then looks like `value_1`; 0: at once.
+    return_time : float
+        Mean time in s in which it looks like `value_0` again after that.
     """
 
     value_0: float
@@ -148,10 +150,16 @@ class SensorTable:
     event_parameter: str
     start: Annotated[float, Quantity("s", least=0.0)] = 0.0
     tunnel_time: Annotated[float, Quantity("s", least=0.0)] = 0.0
+    return_time: DecayTime = math.inf
 
     def __post_init__(self) -> None:
         if self.value_0 == self.value_1:
             raise InputError("'value_0' and 'value_1' are equal, so that there is nothing to read")
+        if math.isfinite(self.return_time) and self.tunnel_time == 0.0:
+            raise InputError(
+                "'return_time' goes with 'tunnel_time'; a state that is seen at once "
+                "decays by 't1' in [readout]"
+            )
 
 
 @dataclass(frozen=True, slots=True)

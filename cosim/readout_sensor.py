@@ -64,9 +64,10 @@ def make_sensor_runs(sensor: SensorTable, table: ReadoutTable, stop: float) -> S
         down=(1.0 - p) / t1 if math.isfinite(t1) else 0.0,
         up=p / t1 if math.isfinite(t1) else 0.0,
         conversion=1.0 / sensor.tunnel_time if sensor.tunnel_time > 0.0 else math.inf,
+        reversion=0.0 if math.isinf(sensor.return_time) else 1.0 / sensor.return_time,
     )
     low, high = sensor.value_0, sensor.value_1
-    falls = transitions.down > 0.0 and not transitions.converts
+    falls = transitions.reversion > 0.0 or (transitions.down > 0.0 and not transitions.converts)
     rises = transitions.up > 0.0 or transitions.converts
     last = table.window[1]
     decays = inner_times(sensor.start, last, table.decay_times if falls else 0)

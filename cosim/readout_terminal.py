@@ -91,9 +91,11 @@ def ranked_errors(errors: ErrorItems) -> list[tuple[str, float]]:
 
 def _heading(result: ReadoutResult) -> str:
     start, stop = (format_quantity(edge, "s") for edge in window_of(result))
+    periods = result.run.steps_per_period
+    grid = "" if math.isnan(periods) else f" ({periods:.4g} per period)"
     return (
-        f"integrated from {start} to {stop}, step {format_quantity(result.run.step, 's', 5)} "
-        f"({result.run.steps_per_period:.4g} per period), {result.run.points} points"
+        f"integrated from {start} to {stop}, step {format_quantity(result.run.step, 's', 5)}{grid}"
+        f", {result.run.points} points"
     )
 
 
@@ -144,7 +146,7 @@ def _noise_table(result: ReadoutResult) -> Table:
     if noise.reason:
         method += f": {noise.reason}"
     added = result.added_noise_quanta
-    none = "- (one output in baseband)"
+    none = "- (a sensor, or one output in baseband)"
     table.add_row("added noise", none if math.isnan(added) else f"{added:.4g} quanta")
     kelvin = result.noise_temperature
     table.add_row("noise temperature", none if math.isnan(kelvin) else format_quantity(kelvin, "K"))

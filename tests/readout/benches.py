@@ -43,7 +43,7 @@ def tables(quanta: float = 0.75) -> Tables:
     An intermediate frequency instead of 6 GHz saves time points; the field does not depend on it.
     """
     return {
-        "netlist": {"file": "deck.cir", "stop": "440 ns", "steps_per_period": 80},
+        "netlist": {"file": "deck.cir", "stop": "470 ns", "steps_per_period": 80},
         "resonator": {
             "geometry": "reflection",
             "frequency": f"{FREQUENCY} Hz",

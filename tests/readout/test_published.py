@@ -59,7 +59,7 @@ def test_steady_state_and_added_noise(tmp_path: Path, validate: Validate) -> Non
     Source: sources.CLERK: SNR times 1/sqrt(1 + 2 n).
     """
     more = {
-        "netlist": {"stop": "1.41 us"},
+        "netlist": {"stop": "1.45 us"},
         "resonator": {"start": "0 ns", "length": "1.4 us"},
         "readout": {"window": ["1 us", "1.4 us"]},
     }
@@ -87,6 +87,7 @@ def test_measurement_dephases(tmp_path: Path, validate: Validate) -> None:
     )
 
 
+@pytest.mark.full
 def test_decay_during_the_readout(tmp_path: Path, validate: Validate) -> None:
     """Noise is small and the field stands: a decay in the first half of the window is an error.
 
@@ -94,7 +95,7 @@ def test_decay_during_the_readout(tmp_path: Path, validate: Validate) -> None:
     window of 500 ns: an error of 2 %, for a decay is seen later by that.
     """
     more = {
-        "netlist": {"stop": "1.01 us"},
+        "netlist": {"stop": "1.05 us"},
         "resonator": {
             "kappa_in": "50 MHz",
             "chi": "10 MHz",

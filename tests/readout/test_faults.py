@@ -1,0 +1,88 @@
+"""Oracle: the wrong inputs of a readout, each with the words that it must find."""
+
+from pathlib import Path
+from typing import Any
+
+import pytest
+
+from cosim.errors import CosimError
+from cosim.readout import run_readout
+from tests.readout.benches import LINEAR, bench, kelvin
+
+pytestmark = pytest.mark.ngspice
+FEW = {"shots": 1000, "records": 100}
+# A tanh of 1 mV: the answers of some 0.05 mV pass, those of |1> in the test below do not.
+BENT = LINEAR.replace("e1 amp 0 in 0 20", "b1 amp 0 v={20*1m*tanh(v(in)/1m)}")
+
+
+@pytest.mark.parametrize(
+    ("tables", "deck", "words"),
+    [
+        ({"readout": {"source": "vnone"}}, LINEAR, "vnone"),
+        ({"readout": {"window": ["20 ns", "2 us"]}}, LINEAR, "does not lie within the run"),
+        ({"readout": {"window": ["20 ns", "460 ns"]}}, LINEAR, "half of the demodulator's filter"),
+        ({"readout": {"output_frequency": "5 GHz"}}, LINEAR, "samples per period of a carrier"),
+        ({"readout": {"probe": "v(nowhere)"}}, LINEAR, "key 'probe'"),
+        ({"readout": {"probe": "i(vin)"}}, LINEAR, "wanted a voltage"),
+        ({"resonator": {"length": "1 us"}}, LINEAR, "behind the run's end"),
+        (
+            {
+                "resonator": {
+                    "qubit_frequency": "4.5 GHz",
+                    "coupling": "60 MHz",
+                    "anharmonicity": "-300 MHz",
+                }
+            },
+            LINEAR,
+            "turn its sign",
+        ),
+        (
+            {"readout": {"adc_bits": 8, "adc_full_scale": "1 V", "adc_rate": "1 MHz"}},
+            LINEAR,
+            "window",
+        ),
+        ({"noise": [{"acts_on": "phase", "deviation": "1 deg"}]}, LINEAR, "one table"),
+        (
+            {"noise": [{"acts_on": "probe", "from": "netlist"}]},
+            LINEAR.replace("r0 emf in 50", "r0 emf in 75"),
+            "75 ohm",
+        ),
+        (
+            {"noise": [{"acts_on": "probe", "from": "netlist"}]},
+            LINEAR.replace("r0 emf in 50", "l0 emf in 1n"),
+            "one resistor behind the source",
+        ),
+    ],
+)
+def test_what_is_refused(tmp_path: Path, tables: dict[str, Any], deck: str, words: str) -> None:
+    tables = {name: dict(table) if name != "noise" else table for name, table in tables.items()}
+    tables["readout"] = {**FEW, **tables.get("readout", {})}
+    with pytest.raises(CosimError) as caught:
+        run_readout(bench(tmp_path, deck, **tables))
+    assert words in f"{caught.value} {caught.value.hint}"
+
+
+def test_a_chain_that_saturates_for_one_state_is_named(tmp_path: Path) -> None:
+    # At the resonance for |0> the resonator in transmission answers that state alone.
+    tables = {
+        "resonator": {
+            "geometry": "transmission",
+            "kappa_in": "1 MHz",
+            "kappa_out": "4 MHz",
+            "chi": "10 MHz",
+            "drive_frequency": "5.99 GHz",
+        },
+        "readout": {**FEW, "gain": "90 dB", "t1": "20 us", "decay_times": 2},
+    }
+    result = run_readout(bench(tmp_path, BENT, **tables))
+    (words,) = [text for text in result.warnings if "saturates" in text]
+    assert "for |0> more than for |1>" in words
+    assert result.errors.saturation != 0.0
+
+
+def test_less_noise_than_there_can_be_is_named(tmp_path: Path) -> None:
+    result = run_readout(bench(tmp_path, quanta=0.2, readout=FEW))
+    (words,) = [text for text in result.warnings if "quanta" in text]
+    assert "0.2 quanta" in words
+    assert result.added_noise_quanta == pytest.approx(0.2, rel=1e-3)
+    assert kelvin(1.0) == pytest.approx(0.288, rel=1e-2)
