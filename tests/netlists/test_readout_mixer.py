@@ -11,10 +11,15 @@ from pathlib import Path
 
 import numpy as np
 import pytest
+from scipy.constants import k as BOLTZMANN
 from scipy.interpolate import CubicSpline
 
 from cosim.circuit.analysis import TransientRequest
+from cosim.circuit.bias import clean_run
+from cosim.circuit.injection import device_noise
 from cosim.circuit.netlist import load_deck, with_parameters
+from cosim.circuit.noise_parts import NoiseTemperatures
+from cosim.circuit.noise_settings import NoiseSettings
 from cosim.circuit.simulator import simulate
 from tests import sources
 from tests.validation import Validate
@@ -28,6 +33,7 @@ DECK = FOLDER / "readout_mixer.cir"
 LO = 5.9e9
 IF = 100e6
 LEVEL = 1e-3
+NOISE = 67.0  # K of the source at one sideband, its own two among it, all devices at 4 K
 POINTS = 80  # per period of the LO; coarser ones see its edges up to degrees too early or late.
 
 
@@ -116,6 +122,38 @@ def test_corners(section: str, supply: float) -> None:
     # Transconductance goes as the root of the card's parameter, which moves by 10 %.
     assert abs(ahead) / LEVEL == pytest.approx(1.78, rel=0.1)
     assert abs(back) < 1e-4 * abs(ahead)
+
+
+@pytest.mark.full
+def test_noise_of_both_sidebands_folds_onto_the_outputs() -> None:
+    # A wide filter gives many independent frequencies in a short run.
+    wide = {"f_filter": 2e9, "amp_in": 0.0}
+    gain = abs(outputs({"f_filter": 2e9})[0]) / LEVEL
+    step, settled = 1 / (POINTS * LO), 5e-9
+    deck = with_parameters(load_deck(DECK), wide)
+    probes = ("v(i_p) - v(i_n)", "v(q_p) - v(q_n)")
+    run = clean_run(deck, TransientRequest(stop=65e-9, step=step), list(probes))
+    settings = NoiseSettings(NoiseTemperatures(4.0, 4.0, 4.0))
+    grid = np.arange(settled, 65e-9 - step, step)
+    f = np.fft.rfftfreq(grid.size, step)
+    band = (f > 0.05e9) & (f < 0.9e9)
+    kelvin = {}
+    for name, devices in (("source", ("r0",)), ("all", None)):
+        densities = []
+        for seed in (0, 1):
+            noise = device_noise(run, seed, settings, devices=devices)
+            for probe in probes:
+                values = np.interp(grid, noise.time, noise.samples[probe])
+                densities.append(2 * step * np.abs(np.fft.rfft(values))[band] ** 2 / grid.size)
+        kelvin[name] = float(np.mean(densities)) / gain**2 / (4 * BOLTZMANN * 50.0)
+    # Four standard deviations of a mean of exponential numbers: four records of 51 frequencies.
+    bound = 4 / np.sqrt(4 * np.count_nonzero(band))
+    # Each sideband brings the 4 K of the source. So do those of the LO's odd harmonics n, with 1/n of
+    # the amplitude for square switching: 1 + 1/9 + 1/25 ... = pi^2/8 at the most.
+    most = 2 * 4.0 * math.pi**2 / 8
+    assert 2 * 4.0 * (1 - bound) < kelvin["source"] < most * (1 + bound)
+    # The design number of NOTES.md.
+    assert kelvin["all"] == pytest.approx(NOISE, rel=bound)
 
 
 def test_cards_are_those_of_the_modulator() -> None:
