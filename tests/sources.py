@@ -114,6 +114,10 @@ RAZAVI_COMPRESSION = (
     "B. Razavi, RF Microelectronics, gain compression of a third-order nonlinearity, "
     f"{MEMORY}; computed from the formula"
 )
+RAZAVI_MIXER = (
+    "B. Razavi, RF Microelectronics, conversion gain (2/pi) gm R of a commutating mixer, "
+    f"{MEMORY}; computed from the formula"
+)
 RICHARDSON = (
     'L. F. Richardson, "The approximate arithmetical solution by finite differences of physical '
     f'problems", Phil. Trans. R. Soc. A 210, 307 (1911), {MEMORY}'

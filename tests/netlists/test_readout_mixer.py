@@ -78,9 +78,7 @@ def test_slow_and_hard_switching_has_the_gain_of_a_square_wave(validate: Validat
     slow = {"f_lo": LO / 30, "f_in": (LO + IF) / 30, "lo_amp": 0.6, "c_couple": 10e-9}
     ahead, _, found = outputs(slow, frequency=LO / 30)
     quantity = "conversion gain of the readout mixer, switched slowly, over half the EMF"
-    source = sources.RAZAVI_COMPRESSION.replace(
-        "gain compression of a third-order nonlinearity", "commutating mixer, (2/pi) gm R"
-    )
+    source = sources.RAZAVI_MIXER
     expected = 2 / math.pi * found["@m.xi.mgp[gm]"] * 220.0
     # While the LO crosses zero, 6 % of the period, both switches of a pair conduct; the output
     # conductance of transconductor and switches shunts 1 % of the current.
@@ -148,8 +146,8 @@ def test_noise_of_both_sidebands_folds_onto_the_outputs() -> None:
         kelvin[name] = float(np.mean(densities)) / gain**2 / (4 * BOLTZMANN * 50.0)
     # Four standard deviations of a mean of exponential numbers: four records of 51 frequencies.
     bound = 4 / np.sqrt(4 * np.count_nonzero(band))
-    # Each sideband brings the 4 K of the source. So do those of the LO's odd harmonics n, with 1/n of
-    # the amplitude for square switching: 1 + 1/9 + 1/25 ... = pi^2/8 at the most.
+    # Each sideband brings the 4 K of the source. So do those of the LO's odd harmonics n, with 1/n
+    # of the amplitude for square switching: 1 + 1/9 + 1/25 ... = pi^2/8 at the most.
     most = 2 * 4.0 * math.pi**2 / 8
     assert 2 * 4.0 * (1 - bound) < kelvin["source"] < most * (1 + bound)
     # The design number of NOTES.md.
