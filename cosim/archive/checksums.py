@@ -17,6 +17,7 @@ import numpy.typing as npt
 from cosim.archive.datasets import Array
 from cosim.archive.table import EXACT
 
+_LARGE = 1000  # values of an array that is worth a call of its own
 _SIZE = 16  # bytes: no two of a hundred thousand rows agree by chance
 _SCALE_ATTRIBUTES = (
     b"CLASS",
@@ -193,13 +194,19 @@ def contents_digest(
         As `record_digest` gives it.
     """
     digest = hashlib.sha256()
+    small: list[bytes] = []
     for path, (notes, values) in contents:
-        pieces: list[bytes | memoryview] = [f"\0{path}\0".encode("utf-8", "surrogateescape")]
+        small.append(f"\0{path}\0".encode("utf-8", "surrogateescape"))
         for name in sorted(notes):
-            pieces += (f"\0{name}\0".encode(), *_pieces(notes[name]))
-        if values is not None:
-            pieces += _pieces(values)
-        digest.update(b"".join(pieces))
+            small += (f"\0{name}\0".encode(), *_pieces(notes[name]))
+        if values is not None and values.size > _LARGE and values.dtype.kind != "O":
+            small.append(_head(values))
+            digest.update(b"".join(small))
+            digest.update(np.ascontiguousarray(values).reshape(-1).view(np.uint8).data)
+            small.clear()
+        elif values is not None:
+            small += _pieces(values)
+    digest.update(b"".join(small))
     return digest.hexdigest()
 
 
@@ -234,9 +241,12 @@ def _values_of(dataset: Any) -> Array:
     return values
 
 
-def _pieces(values: Array) -> list[bytes | memoryview]:
-    head = f"{values.dtype.str}{values.shape}".encode()
+def _pieces(values: Array) -> list[bytes]:
     if values.dtype.kind != "O":
-        return [head, np.ascontiguousarray(values).reshape(-1).view(np.uint8).data]
+        return [_head(values), values.tobytes()]
     texts = [t.encode() if isinstance(t, str) else t or b"" for t in values.ravel().tolist()]
-    return [head, *(text + b"\0" for text in texts)]
+    return [_head(values), *(text + b"\0" for text in texts)]
+
+
+def _head(values: Array) -> bytes:
+    return f"{values.dtype.str}{values.shape}".encode()
