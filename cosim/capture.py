@@ -130,14 +130,20 @@ def make_plan(bench: Testbench, deck: Deck | None = None) -> Plan:
     roots = roots_of(bench)
     check_roots(deck, roots)  # Before names are looked up in lines that are cut in two.
     deck = altered_deck(bench, deck)
-    stop = _stop(table, deck)
+    stop = stop_of(table, deck)
     check_window(bench, stop)
-    step, notices = _step(bench, table, deck)
+    drive = bench.drive
+    carrier = drive.carrier if isinstance(drive.carrier, float) else math.nan
+    step, notices = time_step(
+        table,
+        deck,
+        0.0 if math.isnan(carrier) or drive.probe is None else carrier,
+        "with a baseband pair" if drive.probe is None else 'with carrier = "estimate"',
+    )
     if bench.stimulus:
         deck, coarse = apply_stimuli(deck, bench.stimulus, folder=folder, stop=stop, step=step)
         notices += coarse
     withheld = check_roots(deck, roots)  # With the files of the stimuli.
-    drive = bench.drive
     deck, probes, loaded = open_port(bench, deck)
     terms = [name for probe in probes for _, name in probe.terms]
     request = TransientRequest(
@@ -150,12 +156,30 @@ def make_plan(bench: Testbench, deck: Deck | None = None) -> Plan:
         time_limit=table.time_limit,
         output_step=step,
     )
-    carrier = drive.carrier if isinstance(drive.carrier, float) else math.nan
     notices = (*withheld, *loaded, *notices)
     return Plan(deck, probes, carrier, drive.probe is None, request, notices, roots, table.save)
 
 
-def _stop(table: NetlistTable, deck: Deck) -> float:
+def stop_of(table: NetlistTable, deck: Deck) -> float:
+    """Give the end of the transient.
+
+    Parameters
+    ----------
+    table : NetlistTable
+        The table [netlist].
+    deck : Deck
+        Its deck.
+
+    Returns
+    -------
+    float
+        In s.
+
+    Raises
+    ------
+    TestbenchError
+        If neither says one.
+    """
     if table.stop is not None:
         return table.stop
     if deck.tran is not None:
@@ -191,20 +215,45 @@ def check_window(bench: Testbench, stop: float, start: float = 0.0) -> None:
         )
 
 
-def _step(bench: Testbench, table: NetlistTable, deck: Deck) -> tuple[float, tuple[str, ...]]:
+def time_step(
+    table: NetlistTable, deck: Deck, frequency: float, without: str
+) -> tuple[float, tuple[str, ...]]:
+    """Give the time step of the transient: a whole part of a carrier's period.
+
+    Parameters
+    ----------
+    table : NetlistTable
+        The table [netlist].
+    deck : Deck
+        Its deck.
+    frequency : float
+        Of the carrier in Hz; 0 where there is none that is known.
+    without : str
+        Why, for the message: "with a baseband pair".
+
+    Returns
+    -------
+    float
+        In s.
+    tuple of str
+        A warning when it is coarse.
+
+    Raises
+    ------
+    TestbenchError
+        If there is no carrier and neither testbench nor deck says a step, or it is too coarse.
+    """
     largest = table.max_step
     if largest is None and table.steps_per_period is None and deck.tran is not None:
         largest = deck.tran.max_step
-    carrier = bench.drive.carrier
-    if isinstance(carrier, str) or bench.drive.probe is None:
-        why = "with a baseband pair" if bench.drive.probe is None else 'with carrier = "estimate"'
+    if frequency == 0.0:
         if largest is None:
             raise TestbenchError(
-                f"{why} the time step cannot follow from the carrier",
+                f"{without} the time step cannot follow from the carrier",
                 hint='add to [netlist], for instance: max_step = "2 ps"',
             )
         return largest, ()
-    period = 1.0 / carrier
+    period = 1.0 / frequency
     if table.steps_per_period is not None:
         count = table.steps_per_period
     elif largest is not None:

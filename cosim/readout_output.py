@@ -8,7 +8,7 @@ from pathlib import Path
 import numpy as np
 from scipy.integrate import cumulative_trapezoid
 
-from cosim.capture import Capture, check_steps
+from cosim.capture import Capture, stop_of, time_step
 from cosim.circuit.analysis import TransientRequest, TransientResult
 from cosim.circuit.confidential import Roots, check_roots, kept_files, withhold
 from cosim.circuit.deck import Deck
@@ -25,7 +25,6 @@ from cosim.stimuli import apply_stimuli
 from cosim.testbench import ReadoutBench
 from cosim.waveform import ComplexArray, FloatArray, Waveform
 
-DEFAULT_STEPS_PER_PERIOD = 80
 DEFAULT_SAMPLES = 400  # of a record, where no converter says more
 PER_CONVERSION = 4  # samples of a record in one of the converter's: its filter is simulated
 
@@ -113,15 +112,10 @@ def make_readout_plan(bench: ReadoutBench, frequency: float) -> ReadoutPlan:
     roots = roots_of(bench)
     check_roots(deck, roots)
     deck = altered_deck(bench, deck)
-    stop = table.stop if table.stop is not None else deck.tran.stop if deck.tran else math.nan
-    if math.isnan(stop):
-        raise TestbenchError(
-            f"{deck.path} has no .tran card, so the testbench must say when to stop",
-            hint='add to [netlist], for instance: stop = "600 ns"',
-        )
+    stop = stop_of(table, deck)
     check_readout_window(bench.readout, stop)
     _check_ends(bench, stop)
-    step, notices = _time_step(bench, deck, frequency)
+    step, notices = time_step(table, deck, frequency, "in baseband")
     if bench.stimulus:
         deck, coarse = apply_stimuli(
             deck, bench.stimulus, folder=Path(bench.folder), stop=stop, step=step
@@ -317,29 +311,6 @@ def _check_ends(bench: ReadoutBench, stop: float) -> None:
             f"table [sensor], key 'start': wanted at least {1e9 * margin:.3g} ns, half of the "
             "demodulator's filter, since the carrier begins with the run"
         )
-
-
-def _time_step(bench: ReadoutBench, deck: Deck, frequency: float) -> tuple[float, tuple[str, ...]]:
-    table = netlist_of(bench)
-    largest = table.max_step
-    if largest is None and table.steps_per_period is None and deck.tran is not None:
-        largest = deck.tran.max_step
-    if frequency == 0.0:
-        if largest is None:
-            raise TestbenchError(
-                "without a frequency at which the answer enters, the time step cannot follow from "
-                "it",
-                hint='add to [netlist], for instance: max_step = "50 ps"',
-            )
-        return largest, ()
-    period = 1.0 / frequency
-    if table.steps_per_period is not None:
-        count = table.steps_per_period
-    elif largest is not None:
-        count = math.ceil(period / largest * (1.0 - 1e-9))
-    else:
-        count = DEFAULT_STEPS_PER_PERIOD
-    return period / count, check_steps(count, period)
 
 
 def _probes(bench: ReadoutBench, deck: Deck) -> tuple[Probe, ...]:
