@@ -49,8 +49,8 @@ TOLERANCE = {
     "pulse.amplitude": 1e-5,
 }
 
-# In practice a waveform changes by 1e-6 (above). The rarest error here, at a signal over noise below
-# 8, changes in relative terms by at most 8**2/4 of that. The density of injected noise is a
+# In practice a waveform changes by 1e-6 (above). The rarest error here, at a signal over noise
+# below 8, changes in relative terms by at most 8**2/4 of that. The density of injected noise is a
 # difference of two runs and known to some 1e-4, of which such an error takes 8 times as much.
 READOUT_NUMBERS = (
     "assignment_error",
