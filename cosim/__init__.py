@@ -2,7 +2,8 @@
 
     bench = cosim.load_testbench("x90.toml")     a testbench: netlist, drive, qubit, gate
     result = cosim.run(bench)                    a GateResult, from ngspice to the fidelity, or
-                                                 a ReadoutResult, to the assignment error
+                                                 a ReadoutResult, to the assignment error,
+                                                 or a DecisionResult, of a comparator's decisions
     cosim.save(result, "x90.h5")                 an archive in HDF5
     again = cosim.load("x90.h5")
 
@@ -16,6 +17,7 @@ from importlib import import_module
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
+    from cosim.decision_result import DecisionResult
     from cosim.dispatch import load, run, save
     from cosim.errors import (
         ArchiveError,
@@ -35,6 +37,7 @@ if TYPE_CHECKING:
 __all__ = [
     "ArchiveError",
     "CosimError",
+    "DecisionResult",
     "DeckError",
     "Envelope",
     "Fidelity",
@@ -57,6 +60,7 @@ __all__ = [
 ]
 
 _HOMES = {
+    "cosim.decision_result": ("DecisionResult",),
     "cosim.dispatch": ("load", "run", "save"),
     "cosim.errors": (
         "ArchiveError",

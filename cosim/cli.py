@@ -36,6 +36,7 @@ from cosim.sweep_cli import (
 )
 
 if TYPE_CHECKING:
+    from cosim.decision_result import DecisionResult
     from cosim.readout_result import ReadoutResult
     from cosim.result import GateResult
     from cosim.testbench import Bench
@@ -261,28 +262,36 @@ def compare(
         Console(highlight=False).print(comparison_table(found))
 
 
-def _print_result(result: "GateResult | ReadoutResult", json_output: bool) -> None:
+def _print_result(result: "GateResult | ReadoutResult | DecisionResult", json_output: bool) -> None:
+    from cosim.decision_result import DecisionResult, decision_numbers
+    from cosim.decision_terminal import decision_table
     from cosim.readout_result import ReadoutResult, readout_numbers
     from cosim.readout_terminal import readout_table
     from cosim.result import as_numbers
     from cosim.terminal import result_table
 
+    if isinstance(result, DecisionResult):
+        numbers, table = decision_numbers(result), decision_table(result)
+    elif isinstance(result, ReadoutResult):
+        numbers, table = readout_numbers(result), readout_table(result)
+    else:
+        numbers, table = as_numbers(result), result_table(result)
     if json_output:
-        numbers = (
-            readout_numbers(result) if isinstance(result, ReadoutResult) else as_numbers(result)
-        )
         typer.echo(json.dumps(numbers, indent=2))
-        return
-    table = readout_table(result) if isinstance(result, ReadoutResult) else result_table(result)
-    Console(highlight=False).print(table)
+    else:
+        Console(highlight=False).print(table)
 
 
-def _plot_result(result: "GateResult | ReadoutResult", path: Path) -> None:
+def _plot_result(result: "GateResult | ReadoutResult | DecisionResult", path: Path) -> None:
+    from cosim.decision_figures import plot_decisions
+    from cosim.decision_result import DecisionResult
     from cosim.figures import plot_gate
     from cosim.readout_figures import plot_readout
     from cosim.readout_result import ReadoutResult
 
-    if isinstance(result, ReadoutResult):
+    if isinstance(result, DecisionResult):
+        plot_decisions(result, path)
+    elif isinstance(result, ReadoutResult):
         plot_readout(result, path)
     else:
         plot_gate(result, path)

@@ -6,6 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from cosim.decision_result import DecisionResult
 from cosim.readout_result import ReadoutResult
 from cosim.result import GateResult, gate_result
 
@@ -83,7 +84,8 @@ class Comparison:
 
 
 def compare_runs(
-    first: GateResult | ReadoutResult, second: GateResult | ReadoutResult
+    first: GateResult | ReadoutResult | DecisionResult,
+    second: GateResult | ReadoutResult | DecisionResult,
 ) -> Comparison:
     """Compare two runs of a gate.
 

@@ -4,10 +4,12 @@ import os
 from collections.abc import Callable
 
 from cosim import archive
+from cosim.decision_result import DECISION_KINDS, DecisionResult
 from cosim.errors import ArchiveError, InputError
 from cosim.gate import run_gate
 from cosim.quantum.operators import OperatorSystem
 from cosim.readout import run_readout
+from cosim.readout_decisions import run_decisions
 from cosim.readout_result import READOUT_KINDS, ReadoutResult
 from cosim.result import KINDS, GateResult
 from cosim.testbench import Bench, ReadoutBench, gate_bench, load_testbench
@@ -18,7 +20,7 @@ def run(
     *,
     system: OperatorSystem | None = None,
     progress: Callable[[float], None] | None = None,
-) -> GateResult | ReadoutResult:
+) -> GateResult | ReadoutResult | DecisionResult:
     """Run a testbench: of a gate up to the fidelity, of a readout up to the assignment error.
 
     Parameters
@@ -32,7 +34,7 @@ def run(
 
     Returns
     -------
-    GateResult or ReadoutResult
+    GateResult, ReadoutResult or DecisionResult
         A design estimate, with error bars for the numerical errors.
 
     Raises
@@ -50,15 +52,17 @@ def run(
             f"{bench.source or 'the testbench'} has [readout], which takes no system of operators",
             hint="what answers is said in [resonator] or [sensor]",
         )
+    if bench.readout.decision is not None:
+        return run_decisions(bench)
     return run_readout(bench, progress=progress)
 
 
-def save(result: GateResult | ReadoutResult, path: str | os.PathLike[str]) -> int:
+def save(result: GateResult | ReadoutResult | DecisionResult, path: str | os.PathLike[str]) -> int:
     """Add a result to an archive, which is made if it does not exist.
 
     Parameters
     ----------
-    result : GateResult or ReadoutResult
+    result : GateResult, ReadoutResult or DecisionResult
         The result of a run.
     path : path
         The HDF5 file.
@@ -86,7 +90,9 @@ def save(result: GateResult | ReadoutResult, path: str | os.PathLike[str]) -> in
     return archive.append(path, result, info=info)
 
 
-def load(path: str | os.PathLike[str], *, run: int | None = None) -> GateResult | ReadoutResult:
+def load(
+    path: str | os.PathLike[str], *, run: int | None = None
+) -> GateResult | ReadoutResult | DecisionResult:
     """Read a result from an archive.
 
     Parameters
@@ -98,7 +104,7 @@ def load(path: str | os.PathLike[str], *, run: int | None = None) -> GateResult 
 
     Returns
     -------
-    GateResult or ReadoutResult
+    GateResult, ReadoutResult or DecisionResult
         Equal to the one that was saved.
 
     Raises
@@ -106,7 +112,7 @@ def load(path: str | os.PathLike[str], *, run: int | None = None) -> GateResult 
     ArchiveError
         If the file or the run cannot be read.
     """
-    result = archive.read(path, KINDS | READOUT_KINDS, run=run)
-    if not isinstance(result, (GateResult, ReadoutResult)):
+    result = archive.read(path, KINDS | READOUT_KINDS | DECISION_KINDS, run=run)
+    if not isinstance(result, (GateResult, ReadoutResult, DecisionResult)):
         raise ArchiveError(f"{os.fspath(path)}: the run is not one that this version knows")
     return result

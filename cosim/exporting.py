@@ -5,6 +5,7 @@ from pathlib import Path
 
 import numpy as np
 
+from cosim.decision_result import DecisionResult
 from cosim.errors import InputError
 from cosim.readout_result import ReadoutResult
 from cosim.result import GateResult, gate_result
@@ -15,7 +16,7 @@ DECK, STARTUP = "deck.cir", ".spiceinit"
 
 
 def export_deck(
-    result: GateResult | ReadoutResult, folder: str | os.PathLike[str]
+    result: GateResult | ReadoutResult | DecisionResult, folder: str | os.PathLike[str]
 ) -> tuple[Path, ...]:
     """Write the exact deck of a run, so that it can be repeated by hand.
 
@@ -70,7 +71,9 @@ def export_deck(
     return tuple(target / name for name in texts)
 
 
-def export_csv(result: GateResult | ReadoutResult, path: str | os.PathLike[str]) -> int:
+def export_csv(
+    result: GateResult | ReadoutResult | DecisionResult, path: str | os.PathLike[str]
+) -> int:
     """Write the waveforms of a run as columns with units.
 
     Parameters
@@ -97,7 +100,9 @@ def export_csv(result: GateResult | ReadoutResult, path: str | os.PathLike[str])
     return _write(columns, path)
 
 
-def export_envelope(result: GateResult | ReadoutResult, path: str | os.PathLike[str]) -> int:
+def export_envelope(
+    result: GateResult | ReadoutResult | DecisionResult, path: str | os.PathLike[str]
+) -> int:
     """Write the demodulated envelope of a run as columns with units.
 
     Parameters

@@ -21,11 +21,11 @@ from cosim.outgoing import OutputLine, added_quanta, arriving_noise
 from cosim.quantum.readout_limits import dephasing_rate
 from cosim.quantum.resonator import steady_field, wait_for_photons
 from cosim.readout_chain import STATES, Chain, Inquiry, make_chain, make_inquiry, run_all
+from cosim.readout_entry import noisy_input, readout_noise_tables
 from cosim.readout_guards import chain_warnings, dispersive_warnings, shot_warnings
 from cosim.readout_input import drive_level, input_frequency_of, output_line
 from cosim.readout_noise import (
     ChainNoise,
-    NoisyInput,
     arriving_only,
     netlist_noise_at_output,
     quadratures_of,
@@ -42,7 +42,6 @@ from cosim.readout_result import ReadoutNoise, ReadoutResult, ReadoutTraces
 from cosim.readout_schema import ReadoutTable, ResonatorTable
 from cosim.record import Clock, make_record
 from cosim.testbench import ReadoutBench
-from cosim.voltage_noises import NetlistNoise
 from cosim.waveform import ComplexArray
 
 Progress = Callable[[float], None]
@@ -76,8 +75,9 @@ def run_readout(bench: ReadoutBench, *, progress: Progress | None = None) -> Rea
     """
     if bench.readout.decision is not None:
         raise TestbenchError(
-            f"{bench.source or 'the testbench'}, table [readout]: a run takes the outputs 'probe', "
-            "or 'i' and 'q'; the decisions of a comparator are not counted yet"
+            f"{bench.source or 'the testbench'}, table [readout]: wanted the outputs 'probe', or "
+            "'i' and 'q', got 'decision'",
+            hint="cosim.run takes both kinds",
         )
     del progress
     clock = Clock()
@@ -192,23 +192,13 @@ def _noise(
     line: OutputLine,
 ) -> ChainNoise:
     table = bench.readout
-    tables = [one for one in bench.noise if isinstance(one, NetlistNoise)]
-    if len(tables) != len(bench.noise) or len(tables) > 1:
-        raise TestbenchError(
-            f"{bench.source or 'the testbench'}: a readout takes one table [[noise]], with "
-            'acts_on = "probe" and from = "netlist"; what arrives with the signal is said in '
-            "[readout]"
-        )
+    tables = readout_noise_tables(bench)
     entry = None
     if inquiry.answers is not None:
         arriving = arriving_noise(line, [inquiry.answers.drive.frequency])
         if not tables:
             return arriving_only(arriving, chain.gain, table)
-        # The EMF's one-sided density; the two sources of a baseband pair have twice that, since
-        # both sides of the carrier fall on the same frequency.
-        density = float(arriving.emf_density[0]) / (1.0 if table.signal == "baseband" else 2.0)
-        sources = tuple(name for name in (table.source, table.source_q) if name is not None)
-        entry = NoisyInput(sources, density)
+        entry = noisy_input(arriving, table)
     elif not tables:
         raise TestbenchError(
             f"{bench.source or 'the testbench'}: with a [sensor] all noise is the netlist's own, "

@@ -211,10 +211,33 @@ def run_all(plan: ReadoutPlan, inquiry: Inquiry, names: Sequence[str]) -> list[T
     return simulate_all(plan, [inquiry.deck_of(plan, name) for name in names])
 
 
-def _answering(answers: Answers, table: ReadoutTable, plan: ReadoutPlan, name: str) -> Deck:
-    emf, request = answer_emf(answers, name), plan.request
+def deck_with_answer(
+    plan: ReadoutPlan, table: ReadoutTable, answers: Answers, emf: ComplexArray
+) -> Deck:
+    """Let the deck's source play an answer.
+
+    Parameters
+    ----------
+    plan : ReadoutPlan
+        The deck and the transient.
+    table : ReadoutTable
+        With the source.
+    answers : Answers
+        With the grid.
+    emf : ndarray of complex, shape (n,)
+        I + jQ in V on that grid.
+
+    Returns
+    -------
+    Deck
+    """
+    request = plan.request
     waves = source_waveforms(emf, answers, table, request.step, request.stop)
     return with_stimuli(plan.deck, waves)
+
+
+def _answering(answers: Answers, table: ReadoutTable, plan: ReadoutPlan, name: str) -> Deck:
+    return deck_with_answer(plan, table, answers, answer_emf(answers, name))
 
 
 def _sensing(runs: SensorRuns, plan: ReadoutPlan, name: str) -> Deck:

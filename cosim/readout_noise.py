@@ -3,21 +3,21 @@
 import itertools
 import math
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field
 
 import numpy as np
 
 from cosim.added_noise import INJECTION, choose_method
-from cosim.circuit.bias import CleanRun, clean_run, conductance
+from cosim.circuit.bias import CleanRun, clean_run
 from cosim.circuit.deck import Deck
-from cosim.circuit.generators import NoiseCurrent, noise_currents, noise_samples
+from cosim.circuit.generators import noise_currents, noise_samples
 from cosim.circuit.injection import injected_difference
-from cosim.circuit.inventory import NoisyDevice, independent_sources
 from cosim.circuit.noise_settings import NoiseSettings
 from cosim.dsp.detection.output_noise import OutputNoise
 from cosim.errors import TestbenchError
 from cosim.noisy_circuit import modelled_settings, noise_settings
 from cosim.outgoing import ArrivingNoise
+from cosim.readout_entry import NoisyInput, readout_currents, resistors_behind
 from cosim.readout_output import Grid, ReadoutPlan, outputs_record
 from cosim.readout_schema import ReadoutTable
 from cosim.voltage_noises import NetlistNoise
@@ -62,22 +62,6 @@ class ChainNoise:
     def near(self) -> float:
         """Density beside the carrier in V^2/Hz, two-sided."""
         return float(self.output.at(np.zeros(1))[0])
-
-
-@dataclass(frozen=True, slots=True)
-class NoisyInput:
-    """Where the noise that arrives enters the netlist.
-
-    Parameters
-    ----------
-    sources : tuple of str
-        The deck's sources.
-    emf_density : float
-        One-sided density of the EMF of each in V^2/Hz.
-    """
-
-    sources: tuple[str, ...]
-    emf_density: float = field(metadata={"unit": "V^2/Hz"})
 
 
 def quadratures_of(table: ReadoutTable) -> int:
@@ -160,7 +144,7 @@ def netlist_noise_at_output(
     texts = [probe.text for probe in plan.probes]
     span = table.window
     cleans = [clean_run(deck, plan.request, texts) for deck in decks]
-    behind = {} if entry is None else _behind(plan, entry, cleans[0], table)
+    behind = {} if entry is None else resistors_behind(plan, entry, cleans[0], table)
     settings = noise_settings(noise, plan.deck)
     reason = "I and Q, or an output in baseband, are no voltage around a carrier"
     if table.output_frequency is not None:
@@ -202,7 +186,7 @@ def _injected(
     settings: NoiseSettings,
     reason: str,
 ) -> ChainNoise:
-    currents = [_currents(clean, settings, behind) for clean in cleans]
+    currents = [readout_currents(clean, settings, behind) for clean in cleans]
 
     def record(seed: int, only: str = "") -> ComplexArray:
         # The states take turns, so that the noise is the mean of theirs.
@@ -233,49 +217,6 @@ def _injected(
 
 def _named(device: str, behind: Mapping[str, float]) -> str:
     return "arriving" if device in behind else device
-
-
-def _currents(
-    clean: CleanRun, settings: NoiseSettings, behind: Mapping[str, float]
-) -> list[NoiseCurrent]:
-    """Give the devices' noise currents; a resistor behind a source makes what arrives instead."""
-    found = []
-    for current in noise_currents(clean, settings):
-        if current.device in behind:
-            white = np.full_like(current.white, behind[current.device])
-            current = replace(current, white=white, slow=np.zeros_like(current.slow))
-        found.append(current)
-    return found
-
-
-def _behind(
-    plan: ReadoutPlan, entry: NoisyInput, clean: CleanRun, table: ReadoutTable
-) -> dict[str, float]:
-    """Find the resistors behind the sources; give the density in A^2/Hz of what arrives there."""
-    nets = {source.path: source.nodes for source in independent_sources(plan.deck)}
-    found = {}
-    for name in entry.sources:
-        ends = {net for net in nets.get(name.lower(), ()) if net != "0"}
-        devices = [one for one in clean.inventory.devices if _is_behind(one, ends)]
-        if len(devices) != 1:
-            raise TestbenchError(
-                f"table [readout]: wanted one resistor behind the source '{name}', whose noise is "
-                f"that of the line, found {len(devices)}",
-                hint=f"let the deck have one of {table.impedance:g} ohm from the source to the "
-                "input of the circuit",
-            )
-        siemens = conductance(clean, devices[0])
-        if not math.isclose(siemens * table.impedance, 1.0, rel_tol=0.01):
-            raise TestbenchError(
-                f"table [readout]: behind the source '{name}' stands a resistor of "
-                f"{1.0 / siemens:.4g} ohm, and the 'impedance' is {table.impedance:g} ohm"
-            )
-        found[devices[0].name] = entry.emf_density * siemens**2
-    return found
-
-
-def _is_behind(device: NoisyDevice, ends: set[str]) -> bool:
-    return device.kind == "resistor" and len(ends & set(device.nodes)) == 1
 
 
 def _with_arriving(

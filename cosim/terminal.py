@@ -10,6 +10,7 @@ from rich.text import Text
 
 from cosim.checks import Finding
 from cosim.comparison import Comparison
+from cosim.decision_result import DecisionResult
 from cosim.quantum.fidelity import incoherent_infidelity
 from cosim.readout_result import ReadoutResult
 from cosim.result import GateResult
@@ -150,12 +151,12 @@ def _or_dash(value: float, otherwise: str) -> str:
     return f"- ({otherwise})" if math.isnan(value) else f"{value:.2e}"
 
 
-def record_table(result: GateResult | ReadoutResult) -> Table:
+def record_table(result: GateResult | ReadoutResult | DecisionResult) -> Table:
     """Lay out where a result comes from.
 
     Parameters
     ----------
-    result : GateResult or ReadoutResult
+    result : GateResult, ReadoutResult or DecisionResult
         The result of a run.
 
     Returns
