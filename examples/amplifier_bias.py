@@ -58,7 +58,7 @@ def main(picture: Path | None = None) -> None:
     assert isinstance(bench, cosim.ReadoutBench)
     readout = replace(bench.readout, decay_times=2, shots=1000, records=100)
     bench = replace(bench, readout=readout, accuracy=replace(bench.accuracy, floor=False))
-    print("ic1 (mA)  power (mW)  noise (K)  added quanta  error  separation  quantisation")
+    print("ic1 (mA)  power (mW)  noise (K)  added quanta      error  separation  quantisation")
     powers, results = [], []
     for current in CURRENTS:
         bias: dict[str, float | str] = {"ic1": current, "ic2": 2.0 * current}
@@ -69,8 +69,8 @@ def main(picture: Path | None = None) -> None:
         results.append(result)
         print(
             f"{1e3 * current:8.2f}  {1e3 * powers[-1]:10.2f}  {result.noise_temperature:9.2f}"
-            f"  {result.added_noise_quanta:12.2f}  {result.assignment_error:8.5f}"
-            f"  {result.errors.separation:8.5f}  {result.errors.quantisation:8.5f}"
+            f"  {result.added_noise_quanta:12.2f}  {result.assignment_error:9.3e}"
+            f"  {result.errors.separation:10.3e}  {result.errors.quantisation:12.3e}"
         )
     if picture is not None:
         draw(powers, results, picture)
