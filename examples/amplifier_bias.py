@@ -44,10 +44,9 @@ def draw(powers: list[float], results: list[cosim.ReadoutResult], path: Path) ->
             axes.loglog(scale, np.where(row > 0.0, row, np.nan), ".--", label=item.name)
     axes.set_xticks(scale, [f"{value:.2g}" for value in scale])
     axes.minorticks_off()
-    axes.set_xlabel("power of the amplifier (mW)")
-    axes.set_ylabel("probability")
+    axes.set(xlabel="power of the amplifier (mW)", ylabel="probability", ylim=(1e-3, 1e-1))
     axes.grid(alpha=0.3)
-    axes.legend(fontsize="small")
+    axes.legend(fontsize="small", loc="lower right")
     axes.set_title("Design estimate from simulation", fontsize="medium")
     figure.savefig(path, dpi=150)
 
