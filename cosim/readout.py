@@ -107,13 +107,13 @@ def run_readout(bench: ReadoutBench, *, progress: Progress | None = None) -> Rea
     clock.lap("shots")
     floor = _floor(bench, plan, grid, inquiry, chain.records, noise, detector)
     clock.lap("floor")
-    added, kelvin = _referred(noise, chain, table, line, bench.resonator)
+    added, kelvin, unsure = _referred(noise, chain, table, line, bench.resonator)
     photons, wait, dephasing = _left_behind(bench.resonator, inquiry)
     f = np.linspace(-0.5 / grid.step, 0.5 / grid.step, _DENSITY_POINTS)
     warnings = (
         *plan.notices,
         *_dispersive(bench.resonator, inquiry),
-        *chain_warnings(chain.compression, noise, added, split),
+        *chain_warnings(chain.compression, noise, added, (kelvin, unsure), split),
         *shot_warnings(split, shots, records),
     )
     return ReadoutResult(
@@ -127,6 +127,7 @@ def run_readout(bench: ReadoutBench, *, progress: Progress | None = None) -> Rea
         best_assignment_error=scan.best_error,
         added_noise_quanta=added,
         noise_temperature=kelvin,
+        noise_temperature_error=unsure,
         noise_method=noise.method,
         residual_photons=photons,
         wait=wait,
@@ -215,16 +216,20 @@ def _referred(
     table: ReadoutTable,
     line: OutputLine,
     pulse: ResonatorTable | None,
-) -> tuple[float, float]:
-    """Refer the noise to the resonator's output in quanta, and to the netlist's source in K."""
+) -> tuple[float, float, float]:
+    """Refer the noise to the resonator's output in quanta, and to the netlist's source in K.
+
+    The third is the standard error of the second.
+    """
     if pulse is None or quadratures_of(table) == 1:
-        return math.nan, math.nan
+        return math.nan, math.nan, 0.0
     at_source = noise.near / chain.gain**2
     arriving = arriving_noise(line, [pulse.drive])
     whole = float(added_quanta(at_source, pulse.drive, line))
     own = float(arriving.quanta[0] - arriving.added_quanta[0])
     beyond = (at_source - float(arriving.emf_density[0])) / (8.0 * line.impedance)
-    return whole - own, beyond / Boltzmann
+    unsure = noise.relative_error * at_source / (8.0 * line.impedance)
+    return whole - own, beyond / Boltzmann, unsure / Boltzmann
 
 
 def _left_behind(pulse: ResonatorTable | None, inquiry: Inquiry) -> tuple[float, float, float]:

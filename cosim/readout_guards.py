@@ -63,6 +63,7 @@ def chain_warnings(
     compression: tuple[float, float],
     noise: ChainNoise,
     added: float,
+    kelvin: tuple[float, float],
     split: AssignmentSplit,
 ) -> tuple[str, ...]:
     """Judge the chain.
@@ -75,6 +76,8 @@ def chain_warnings(
         At its output.
     added : float
         Quanta at the resonator's output; NaN where that has no meaning.
+    kelvin : tuple of two floats
+        Noise temperature of the netlist in K, and its standard error.
     split : AssignmentSplit
         The decisions.
 
@@ -104,6 +107,11 @@ def chain_warnings(
         warnings.append(
             f"the noise is known within {noise.relative_error:.0%} of its density: more 'seeds' "
             "in [[noise]] make it surer"
+        )
+    if kelvin[1] > abs(kelvin[0]):
+        warnings.append(
+            f"the netlist's own noise, {kelvin[0]:.3g} +- {kelvin[1]:.3g} K at its source, is not "
+            "told apart from what arrives there, which is far more"
         )
     if split.clipped > CLIPPED:
         warnings.append(

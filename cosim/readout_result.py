@@ -130,6 +130,9 @@ class ReadoutResult:
         What the reader must know before using the numbers.
     run : RunRecord
         Deck, testbench, versions, times, log.
+    noise_temperature_error : float
+        Standard error of `noise_temperature` in K: that of the whole noise, of which the netlist's
+        may be a small part; 0 where it is no matter of chance.
     """
 
     title: str
@@ -163,6 +166,7 @@ class ReadoutResult:
     traces: ReadoutTraces = field(metadata=_NOT_IN_TABLE)
     warnings: tuple[str, ...]
     run: RunRecord = field(metadata=_NOT_IN_TABLE)
+    noise_temperature_error: float = field(default=0.0, metadata=_unit("K"))
 
 
 # Classes by the tag that the archive keeps.
@@ -191,6 +195,7 @@ READOUT_FIELDS = (
     "best_assignment_error",
     "added_noise_quanta",
     "noise_temperature",
+    "noise_temperature_error",
     "noise_method",
     "residual_photons",
     "wait",

@@ -149,7 +149,11 @@ def _noise_table(result: ReadoutResult) -> Table:
     none = "- (a sensor, or one output in baseband)"
     table.add_row("added noise", none if math.isnan(added) else f"{added:.4g} quanta")
     kelvin = result.noise_temperature
-    table.add_row("noise temperature", none if math.isnan(kelvin) else format_quantity(kelvin, "K"))
+    unsure = result.noise_temperature_error
+    bar = f" ± {format_quantity(unsure, 'K', 2)}" if unsure > 0.0 else ""
+    table.add_row(
+        "noise temperature", none if math.isnan(kelvin) else format_quantity(kelvin, "K") + bar
+    )
     table.add_row("method", method)
     if noise.devices:
         most = list(noise.devices.items())[:MOST_DEVICES]

@@ -386,7 +386,7 @@ class TestCommands:
     @pytest.mark.ngspice
     def test_run(self, qcosim: Callable[..., tuple[int, str, str]], tmp_path: Path) -> None:
         few = {"shots": 1000, "records": 100, "window": ["20 ns", "120 ns"], "decay_times": 2}
-        netlist, resonator = {"stop": "130 ns"}, {"length": "100 ns"}
+        netlist, resonator = {"stop": "165 ns"}, {"length": "100 ns"}
         made = bench(tmp_path, netlist=netlist, resonator=resonator, readout=few)
         (tmp_path / "ro.toml").write_text(made.to_toml(), encoding="utf-8")
         archive, figure = tmp_path / "new.h5", tmp_path / "new.png"
