@@ -86,7 +86,7 @@ def check_testbench(
         Finding("testbench", f"{path}: {bench.title}", "testbench", str(path)),
         Finding("target", target.name, "target", target.name),
     ]
-    plan = make_sweep(bench) if bench.sweep else None
+    plan = make_sweep(bench) if bench.studies.get("sweep") else None
     if plan is not None:
         bench = plan.testbench(plan.run(0))
     deck: tuple[str, ...] = ()

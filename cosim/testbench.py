@@ -29,7 +29,7 @@ from cosim.toml_writing import write_tables
 ARRAYS = ("stimulus", "noise", "spectator")
 
 # Tables of the studies: each study reads its own, when it is asked for.
-STUDIES = ("sweep",)
+STUDIES = ("sweep", "calibrate", "budget", "sensitivity", "drift", "specify", "train")
 
 # What [readout] takes from the tables of a gate.
 _SHARED = ("netlist", "accuracy")
@@ -52,8 +52,8 @@ class Bench:
         The tables [[stimulus]], in SI units; only with a netlist.
     noise : tuple of Noise
         The tables [[noise]], in SI units.
-    sweep : mapping
-        The table [sweep] as it was given; `cosim.sweep.table` reads it.
+    studies : mapping
+        The tables of `STUDIES`, by name, as they were given; each study reads its own.
     folder : str
         Folder that the paths in the tables are relative to.
     source : str
@@ -67,14 +67,14 @@ class Bench:
     accuracy: AccuracyTable
     stimulus: tuple[Stimulus, ...] = ()
     noise: tuple[Noise, ...] = ()
-    sweep: Mapping[str, Any] = field(default_factory=dict)
+    studies: Mapping[str, Mapping[str, Any]] = field(default_factory=dict)
     folder: str = "."
     source: str = ""
     circuit: str = ""
 
     def to_toml(self) -> str:
         """Write the testbench as a TOML text that gives the same run again."""
-        tables = {name: getattr(self, name, None) for name in _ALL}
+        tables = {name: getattr(self, name, None) for name in _ALL} | dict(self.studies)
         given = {name: table for name, table in tables.items() if table not in (None, (), {})}
         return write_tables(self.title, given)
 
@@ -85,7 +85,7 @@ class Testbench(Bench):
 
     Parameters
     ----------
-    title, netlist, accuracy, stimulus, noise, sweep, folder, source, circuit
+    title, netlist, accuracy, stimulus, noise, studies, folder, source, circuit
         As in `Bench`.
     waveform : WaveformTable or None
         Where the waveform comes from when there is no netlist.
@@ -110,7 +110,7 @@ class ReadoutBench(Bench):
 
     Parameters
     ----------
-    title, netlist, accuracy, stimulus, noise, sweep, folder, source, circuit
+    title, netlist, accuracy, stimulus, noise, studies, folder, source, circuit
         As in `Bench`; there is always a netlist.
     resonator : ResonatorTable or None
         What answers, in SI units.
@@ -217,14 +217,15 @@ def _build(tables: Mapping[str, Any], *, file: str, folder: str) -> Testbench | 
             parts[name] = read_table(given.get(name, {}), cls, file=label, name=name)
     stimulus = read_stimuli(tables.get("stimulus", []), file=label)
     noise = read_noises(tables.get("noise", []), file=label)
-    sweep = tables.get("sweep", {})
-    if not isinstance(sweep, Mapping):
-        raise TestbenchError(f"{label}: wanted a table [sweep], got {sweep!r}")
+    studies = {name: tables[name] for name in STUDIES if name in tables}
+    for name, study in studies.items():
+        if not isinstance(study, Mapping):
+            raise TestbenchError(f"{label}: wanted a table [{name}], got {study!r}")
     common: dict[str, Any] = {
         "title": title,
         "stimulus": stimulus,
         "noise": noise,
-        "sweep": copy.deepcopy(dict(sweep)),
+        "studies": copy.deepcopy({name: dict(study) for name, study in studies.items()}),
         "folder": folder,
         "source": file,
         "circuit": circuit,

@@ -11,7 +11,7 @@ from cosim.config import numbered
 from cosim.decks import altered_deck, read_deck
 from cosim.errors import CosimError, TestbenchError
 from cosim.sweep.identity import Files, files_of
-from cosim.sweep.keys import NumberKey, flattened, nominal, number_key, with_number, with_setting
+from cosim.keys import NumberKey, flattened, nominal, number_key, with_number, with_setting
 from cosim.sweep.samples import Variation, read_step, read_variation
 from cosim.sweep.table import GridTable, SweepTable
 from cosim.testbench import Testbench
@@ -106,7 +106,7 @@ def read_corners(bench: Testbench, table: SweepTable) -> tuple[Corner, ...]:
     DeckError
         If a deck cannot be read, or a parameter, section or instance does not exist.
     """
-    bench = replace(bench, sweep={})
+    bench = replace(bench, studies={})
     decks: dict[tuple[Any, ...], Deck] = {}
     if not table.corners:
         return (_corner("", bench, {}, decks),)

@@ -113,7 +113,7 @@ def identity_keys(
     Parameters
     ----------
     flat : mapping
-        The testbench, from `cosim.sweep.keys.flattened`, with the values of this run.
+        The testbench, from `cosim.keys.flattened`, with the values of this run.
     files : Files
         The files that it reads.
     mismatch : mapping

@@ -13,7 +13,7 @@ from cosim.sweep.axes import (
     Perturbation,
 )
 from cosim.sweep.identity import identity_keys
-from cosim.sweep.keys import NumberKey, nominal, with_number
+from cosim.keys import NumberKey, nominal, with_number
 from cosim.sweep.samples import (
     Variation,
     draw_mismatch,

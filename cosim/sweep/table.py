@@ -272,7 +272,7 @@ def read_sweep(bench: Testbench) -> SweepTable:
         On an unknown or missing key, or a value of the wrong kind.
     """
     file = bench.source or "the testbench"
-    table = bench.sweep
+    table = bench.studies.get("sweep", {})
     names = ["corners", "grid", "monte_carlo", "mismatch", "one_at_a_time"]
     own = [item.name for item in fields(ReportTable)]
     check_keys(table, [*names, *own], f"{file}, table [sweep]")

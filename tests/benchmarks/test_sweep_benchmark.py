@@ -39,7 +39,7 @@ def bench_of(runs: int) -> Testbench:
     return replace(
         bench,
         accuracy=replace(bench.accuracy, floor=False),
-        sweep={"grid": [axis], "keep": 0},
+        studies={"sweep": {"grid": [axis], "keep": 0}},
     )
 
 
@@ -129,7 +129,7 @@ def test_two_workers_against_two_hosts(tmp_path: Path, monkeypatch: pytest.Monke
                 marks.append((state.made, time.perf_counter()))
 
         axis = {"key": "netlist.parameters.vdd", "start": "1.05 V", "stop": "1.15 V", "count": 32}
-        swept = replace(bench, sweep={"grid": [axis], "keep": 0})
+        swept = replace(bench, studies={"sweep": {"grid": [axis], "keep": 0}})
         writing = 0.0
         began = time.perf_counter()
         path = tmp_path / f"{turn}.h5"

@@ -143,10 +143,12 @@ def test_the_five_corners_as_a_sweep(
     """Each corner at two supplies; at the deck's own one the rows are those of single runs."""
     swept = replace(
         bench(tmp_path, kit, "tt", {"confidential": [str(kit)]}),
-        sweep={
-            "corners": {name: {"sections": {LIBRARY: name}} for name in SECTIONS},
-            "grid": [{"key": "netlist.parameters.vdd", "values": [1.8, 1.62]}],
-            "keep": 1,
+        studies={
+            "sweep": {
+                "corners": {name: {"sections": {LIBRARY: name}} for name in SECTIONS},
+                "grid": [{"key": "netlist.parameters.vdd", "values": [1.8, 1.62]}],
+                "keep": 1,
+            }
         },
     )
     archive = tmp_path / "corners.h5"

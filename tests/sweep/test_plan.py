@@ -17,7 +17,7 @@ from scipy.stats import qmc
 
 import cosim
 from cosim.capture import make_plan
-from cosim.sweep.keys import flattened
+from cosim.keys import flattened
 from cosim.sweep.plan import SweepPlan, SweepRun
 from cosim.sweep.planning import make_sweep
 from cosim.sweep.samples import sample_seed, uniform, unit_samples
@@ -367,7 +367,7 @@ class TestSamples:
         bench = load_testbench(write(tmp_path))
         vary = [{"key": "qubit.t2", **entry}]
         sweep = {"monte_carlo": {"runs": 512, "method": "latin hypercube", "vary": vary}}
-        plan = make_sweep(replace(bench, sweep=copy.deepcopy(sweep)))
+        plan = make_sweep(replace(bench, studies={"sweep": copy.deepcopy(sweep)}))
         values = np.array([run.values["qubit.t2"] for run in plan])
         # A stratified set follows its law to within one stratum: 1/n in the distribution.
         assert stats.kstest(values, law.cdf).statistic <= 1 / 512 + 1e-12

@@ -79,10 +79,10 @@ class TestWhatATableMeans:
     def test_a_testbench_passes_the_table_on(self, tmp_path: Path) -> None:
         sweep = {**grid("qubit.detuning", "0 Hz", "100 kHz"), "mismatch": {"threshold": "1 mV um"}}
         made = bench(tmp_path, sweep)
-        assert made.sweep == sweep
+        assert made.studies == {"sweep": sweep}
         (tmp_path / "again.toml").write_text(made.to_toml(), encoding="utf-8")
         again = load_testbench(tmp_path / "again.toml")
-        assert again.sweep == sweep
+        assert again.studies == {"sweep": sweep}
         assert "sweep" not in bench(tmp_path, {}).to_toml()
 
     def test_axes(self, tmp_path: Path) -> None:
@@ -135,7 +135,7 @@ class TestWhatATableMeans:
         assert last.netlist.instances == {"x1": {"w": 3e-6}}
         assert (last.qubit.thermal_population, last.qubit.t1) == (0.02, 1e-3)
         assert (last.qubit.detuning, last.drive.attenuation) == (1e6, 3.0)
-        assert last.sweep == {}
+        assert last.studies == {}
         assert plan.testbench(plan.run(0)).qubit.t1 == 10e-3
 
     def test_a_stimulus_can_be_moved(self, tmp_path: Path) -> None:
