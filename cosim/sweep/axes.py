@@ -10,8 +10,8 @@ from cosim.circuit.deck import Deck
 from cosim.config import numbered
 from cosim.decks import altered_deck, read_deck
 from cosim.errors import CosimError, TestbenchError
-from cosim.sweep.identity import Files, files_of
 from cosim.keys import NumberKey, flattened, nominal, number_key, with_number, with_setting
+from cosim.sweep.identity import Files, files_of
 from cosim.sweep.samples import Variation, read_step, read_variation
 from cosim.sweep.table import GridTable, SweepTable
 from cosim.testbench import Testbench

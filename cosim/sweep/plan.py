@@ -7,13 +7,13 @@ from typing import Any
 from cosim.circuit.mismatch import Mosfet, mosfets
 from cosim.decks import altered_deck
 from cosim.errors import TestbenchError, UnitError
+from cosim.keys import NumberKey, nominal, with_number
 from cosim.sweep.axes import (
     Axis,
     Corner,
     Perturbation,
 )
 from cosim.sweep.identity import identity_keys
-from cosim.keys import NumberKey, nominal, with_number
 from cosim.sweep.samples import (
     Variation,
     draw_mismatch,

@@ -15,8 +15,8 @@ from scipy.stats import qmc
 
 from cosim.circuit.mismatch import Mosfet, Shift
 from cosim.errors import TestbenchError, UnitError
-from cosim.schema import ShiftName
 from cosim.keys import NumberKey
+from cosim.schema import ShiftName
 from cosim.sweep.table import MismatchTable, MonteCarloTable, VaryTable
 from cosim.waveform import FloatArray
 
