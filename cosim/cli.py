@@ -28,6 +28,7 @@ from cosim.command_options import (
     check_output,
 )
 from cosim.errors import CosimError, InputError, MissingDependencyError, SimulationError
+from cosim.study_cli import STUDY_COMMANDS
 from cosim.sweep_cli import (
     COMMANDS,
     LimitOption,
@@ -310,7 +311,7 @@ def _refuse_failed(archive: Path, run: int | None) -> None:
             )
 
 
-for _command, _example in COMMANDS:
+for _command, _example in (*COMMANDS, *STUDY_COMMANDS):
     app.command(epilog=f"Example: {_example}")(_command)
 
 
