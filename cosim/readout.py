@@ -1,11 +1,13 @@
 """The readout path: resonator or sensor, netlist, records, decisions."""
 
 import math
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass
 
 import numpy as np
 from scipy.constants import Boltzmann
 
+from cosim.circuit.deck import Deck
 from cosim.dsp.detection.aftermath import decision_latency, repeat_agreement
 from cosim.dsp.detection.assignment import (
     AssignmentSplit,
@@ -20,7 +22,15 @@ from cosim.errors import TestbenchError
 from cosim.outgoing import OutputLine, added_quanta, arriving_noise
 from cosim.quantum.readout_limits import dephasing_rate
 from cosim.quantum.resonator import steady_field, wait_for_photons
-from cosim.readout_chain import STATES, Chain, Inquiry, make_chain, make_inquiry, run_all
+from cosim.readout_chain import (
+    STATES,
+    Chain,
+    Inquiry,
+    make_chain,
+    make_inquiry,
+    run_all,
+    transitions_of,
+)
 from cosim.readout_entry import noisy_input, readout_noise_tables
 from cosim.readout_guards import chain_warnings, dispersive_warnings, shot_warnings
 from cosim.readout_input import drive_level, input_frequency_of, output_line
@@ -51,20 +61,56 @@ LEFT = 0.01  # photons, after which the next gate may begin
 _DENSITY_POINTS = 101
 
 
-def run_readout(bench: ReadoutBench, *, progress: Progress | None = None) -> ReadoutResult:
-    """Run a testbench with a readout from the resonator or sensor to the assignment error.
+@dataclass(frozen=True, slots=True)
+class ReadoutRuns:
+    """All that the simulator gives for a readout; what is judged of it needs no further run.
+
+    Readouts that differ in the converter's resolution, the weights, the shots, the preparation and
+    the rates of transitions only have these in common.
+
+    Parameters
+    ----------
+    frequency : float
+        That the time step follows, in Hz; 0 in baseband.
+    plan : ReadoutPlan
+        The deck and the transient.
+    inquiry : Inquiry
+        What was asked.
+    grid : Grid
+        Of the records.
+    chain : Chain
+        What was answered.
+    noise : ChainNoise
+        At the outputs.
+    half : Records or None
+        Of |0> and |1> at half the step; None when left out.
+    laps : mapping of str to float
+        Wall-clock times of the stages in s.
+    """
+
+    frequency: float
+    plan: ReadoutPlan
+    inquiry: Inquiry
+    grid: Grid
+    chain: Chain
+    noise: ChainNoise
+    half: Records | None
+    laps: Mapping[str, float]
+
+
+def simulate_readout(bench: ReadoutBench, *, deck: Deck | None = None) -> ReadoutRuns:
+    """Run the netlist of a readout for all that is asked of it, with its noise.
 
     Parameters
     ----------
     bench : ReadoutBench
         The testbench.
-    progress : callable or None
-        Not called yet: the runs of a readout are many short ones.
+    deck : Deck or None
+        As `cosim.decks.read_deck` gives it, where it has been read already.
 
     Returns
     -------
-    ReadoutResult
-        A design estimate.
+    ReadoutRuns
 
     Raises
     ------
@@ -79,11 +125,10 @@ def run_readout(bench: ReadoutBench, *, progress: Progress | None = None) -> Rea
             "'i' and 'q', got 'decision'",
             hint="cosim.run takes both kinds",
         )
-    del progress
     clock = Clock()
     table = bench.readout
     frequency = readout_frequency(bench)
-    plan = make_readout_plan(bench, frequency)
+    plan = make_readout_plan(bench, frequency, deck)
     clock.lap("deck")
     inquiry = make_inquiry(bench, plan)
     grid = record_grid(table, inquiry.begin)
@@ -92,12 +137,49 @@ def run_readout(bench: ReadoutBench, *, progress: Progress | None = None) -> Rea
     clock.lap("simulator_overhead")
     clock.laps["ngspice"] = sum(result.wall_time for result in chain.results)
     clock.laps["simulator_overhead"] -= clock.laps["ngspice"]
-    line = output_line(table)
-    noise = _noise(bench, plan, grid, inquiry, chain, line)
+    noise = _noise(bench, plan, grid, inquiry, chain)
     clock.lap("noise")
+    half = _half_step(table, plan, grid, inquiry) if bench.accuracy.floor else None
+    clock.lap("floor")
+    return ReadoutRuns(frequency, plan, inquiry, grid, chain, noise, half, clock.laps)
+
+
+def run_readout(
+    bench: ReadoutBench, *, progress: Progress | None = None, runs: ReadoutRuns | None = None
+) -> ReadoutResult:
+    """Run a testbench with a readout from the resonator or sensor to the assignment error.
+
+    Parameters
+    ----------
+    bench : ReadoutBench
+        The testbench.
+    progress : callable or None
+        Not called yet: the runs of a readout are many short ones.
+    runs : ReadoutRuns or None
+        What has been simulated already, for this testbench or one that has it in common.
+
+    Returns
+    -------
+    ReadoutResult
+        A design estimate.
+
+    Raises
+    ------
+    InputError
+        If the testbench or the deck cannot be used.
+    SimulationError
+        If ngspice fails.
+    """
+    del progress
+    clock = Clock()
+    runs = simulate_readout(bench) if runs is None else runs
+    clock.note_laps(runs.laps)
+    table, line = bench.readout, output_line(bench.readout)
+    inquiry, grid, chain, noise = runs.inquiry, runs.grid, runs.chain, runs.noise
     output = ChainOutput(chain.records, noise.output, None, chain.linear)
     detector = _detector(table, grid)
-    chances = inquiry.transitions, Preparation(table.thermal_population, table.preparation_error)
+    preparation = Preparation(table.thermal_population, table.preparation_error)
+    chances = transitions_of(bench), preparation
     split = split_assignment(output, detector, *chances)
     scan = scan_integration(output, detector, *chances)
     clock.lap("detection")
@@ -105,13 +187,12 @@ def run_readout(bench: ReadoutBench, *, progress: Progress | None = None) -> Rea
     records = record_shots(output, detector, split, *chances, table.records, table.seed)
     points = shot_points(split, *chances, POINTS, table.seed)
     clock.lap("shots")
-    floor = _floor(bench, plan, grid, inquiry, chain.records, noise, detector)
-    clock.lap("floor")
+    floor = _floor(chain.records, runs.half, noise, detector)
     added, kelvin, unsure = _referred(noise, chain, table, line, bench.resonator)
     photons, wait, dephasing = _left_behind(bench.resonator, inquiry)
     f = np.linspace(-0.5 / grid.step, 0.5 / grid.step, _DENSITY_POINTS)
     warnings = (
-        *plan.notices,
+        *runs.plan.notices,
         *_dispersive(bench.resonator, inquiry),
         *chain_warnings(chain.compression, noise, added, (kelvin, unsure), split),
         *shot_warnings(split, shots, records),
@@ -149,7 +230,9 @@ def run_readout(bench: ReadoutBench, *, progress: Progress | None = None) -> Rea
         ),
         traces=_traces(chain.records, grid, inquiry, points),
         warnings=tuple(dict.fromkeys(warnings)),
-        run=make_record(bench, capture_of(plan, chain.results[1]), frequency or math.nan, clock),
+        run=make_record(
+            bench, capture_of(runs.plan, chain.results[1]), runs.frequency or math.nan, clock
+        ),
     )
 
 
@@ -190,13 +273,12 @@ def _noise(
     grid: Grid,
     inquiry: Inquiry,
     chain: Chain,
-    line: OutputLine,
 ) -> ChainNoise:
     table = bench.readout
     tables = readout_noise_tables(bench)
     entry = None
     if inquiry.answers is not None:
-        arriving = arriving_noise(line, [inquiry.answers.drive.frequency])
+        arriving = arriving_noise(output_line(table), [inquiry.answers.drive.frequency])
         if not tables:
             return arriving_only(arriving, chain.gain, table)
         entry = noisy_input(arriving, table)
@@ -258,32 +340,29 @@ def _dispersive(pulse: ResonatorTable | None, inquiry: Inquiry) -> tuple[str, ..
     return dispersive_warnings(pulse, max(float(fields[name].photons.max()) for name in STATES))
 
 
-def _floor(
-    bench: ReadoutBench,
-    plan: ReadoutPlan,
-    grid: Grid,
-    inquiry: Inquiry,
-    first: Records,
-    noise: ChainNoise,
-    detector: Detector,
-) -> float:
-    """Simulate the two states once more at half the step; give the change of the error.
+def _half_step(table: ReadoutTable, plan: ReadoutPlan, grid: Grid, inquiry: Inquiry) -> Records:
+    """Simulate the two states once more at half the step."""
+    half = plan.half_step()
+    results = run_all(half, inquiry, STATES)
+    ground, excited = (read_record(half, table, grid, result) for result in results)
+    return Records(grid.step, ground, excited)
+
+
+def _floor(first: Records, half: Records | None, noise: ChainNoise, detector: Detector) -> float:
+    """Give the change of the error at half the step.
 
     Only what tells the states apart is compared: decays change both alike.
     """
-    if not bench.accuracy.floor:
+    if half is None:
         return math.nan
-    half = plan.half_step()
-    results = run_all(half, inquiry, STATES)
-    ground, excited = (read_record(half, bench.readout, grid, result) for result in results)
     errors = [
         split_assignment(
-            ChainOutput(Records(grid.step, *pair), noise.output),
+            ChainOutput(Records(first.step, one.ground, one.excited), noise.output),
             detector,
             Transitions(),
             Preparation(),
         ).assignment_error
-        for pair in ((first.ground, first.excited), (ground, excited))
+        for one in (first, half)
     ]
     return abs(errors[1] - errors[0])
 

@@ -24,7 +24,7 @@ from cosim.readout_input import (
 )
 from cosim.readout_output import Grid, ReadoutPlan, read_record, simulate_all
 from cosim.readout_schema import ReadoutTable
-from cosim.readout_sensor import SensorRuns, make_sensor_runs
+from cosim.readout_sensor import SensorRuns, make_sensor_runs, sensor_transitions
 from cosim.testbench import ReadoutBench
 from cosim.waveform import ComplexArray, FloatArray
 
@@ -45,8 +45,6 @@ class Inquiry:
     decay_times, excitation_times : ndarray, shape (k,)
         Times in s of the changes of state in the runs "decay 1" and so on, "excitation 1" and so
         on.
-    transitions : Transitions
-        How often they happen.
     deck_of : callable
         Gives the deck of a run by its name.
     answers : Answers or None
@@ -56,7 +54,6 @@ class Inquiry:
     begin: float = field(metadata={"unit": "s"})
     decay_times: FloatArray = field(metadata={"unit": "s"})
     excitation_times: FloatArray = field(metadata={"unit": "s"})
-    transitions: Transitions
     deck_of: Callable[[ReadoutPlan, str], Deck]
     answers: Answers | None = None
 
@@ -119,7 +116,6 @@ def make_inquiry(bench: ReadoutBench, plan: ReadoutPlan) -> Inquiry:
             bench.sensor.start,
             runs.decay_times,
             runs.excitation_times,
-            runs.transitions,
             partial(_sensing, runs),
         )
     assert bench.resonator is not None  # A testbench has one of the two.
@@ -128,10 +124,27 @@ def make_inquiry(bench: ReadoutBench, plan: ReadoutPlan) -> Inquiry:
         bench.resonator.start,
         answers.decay_times,
         answers.excitation_times,
-        relaxation(table.t1, table.thermal_population),
         partial(_answering, answers, table),
         answers,
     )
+
+
+def transitions_of(bench: ReadoutBench) -> Transitions:
+    """Give how often the state changes.
+
+    Parameters
+    ----------
+    bench : ReadoutBench
+        With [resonator] or [sensor].
+
+    Returns
+    -------
+    Transitions
+    """
+    table = bench.readout
+    if bench.sensor is not None:
+        return sensor_transitions(bench.sensor, table)
+    return relaxation(table.t1, table.thermal_population)
 
 
 def make_chain(plan: ReadoutPlan, table: ReadoutTable, grid: Grid, inquiry: Inquiry) -> Chain:

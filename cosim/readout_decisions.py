@@ -20,9 +20,9 @@ from dataclasses import replace
 
 import numpy as np
 from scipy.interpolate import PchipInterpolator
-from scipy.special import ndtr
-from scipy.stats import binom
+from scipy.special import bdtr, bdtrc, ndtr
 
+from cosim.circuit.deck import Deck
 from cosim.decision_noise import (
     DecidingNoise,
     count_ones,
@@ -37,7 +37,7 @@ from cosim.dsp.detection.outcomes import wrong_shares
 from cosim.dsp.detection.projection import TABLE, Projection
 from cosim.dsp.detection.records import Preparation, Transitions
 from cosim.errors import TestbenchError
-from cosim.readout_chain import Inquiry, make_inquiry
+from cosim.readout_chain import Inquiry, make_inquiry, transitions_of
 from cosim.readout_comparator import FINEST, Comparator, Threshold, find_changes, find_threshold
 from cosim.readout_guards import dispersive_warnings
 from cosim.readout_input import EXCITED, GROUND, input_frequency_of
@@ -52,13 +52,15 @@ COUNTED = 4  # times the seeds: decisions at each of the answers themselves
 UNLIKELY = 1e-3  # probability of a count under the fit, below which a warning is due
 
 
-def run_decisions(bench: ReadoutBench) -> DecisionResult:
+def run_decisions(bench: ReadoutBench, *, deck: Deck | None = None) -> DecisionResult:
     """Run a testbench whose [readout] has a `decision`, up to the assignment error.
 
     Parameters
     ----------
     bench : ReadoutBench
         The testbench.
+    deck : Deck or None
+        As `cosim.decks.read_deck` gives it, where it has been read already.
 
     Returns
     -------
@@ -84,7 +86,7 @@ def run_decisions(bench: ReadoutBench) -> DecisionResult:
     if table.adc_bits is not None:
         raise TestbenchError(f"{where}: 'decision' and a converter do not go together")
     frequency = input_frequency_of(pulse, table)
-    plan = make_readout_plan(bench, frequency)
+    plan = make_readout_plan(bench, frequency, deck)
     instant = table.window[1] if table.decide_at is None else table.decide_at
     if not 0.0 < instant <= plan.request.stop:
         raise TestbenchError(
@@ -105,7 +107,8 @@ def run_decisions(bench: ReadoutBench) -> DecisionResult:
     clock.lap("changes of state")
     projection = _projection(paths, inquiry.begin, table.window[1], fit.noise)
     preparation = Preparation(table.thermal_population, table.preparation_error)
-    matrix, errors = _split(projection, inquiry.transitions, preparation, fit.offset)
+    chances = transitions_of(bench), preparation
+    matrix, errors = _split(projection, *chances, fit.offset)
     counted = _counted(comparator, threshold, noise)
     clock.lap("counts")
     floor = _floor(bench, comparator, threshold, fit)
@@ -122,7 +125,7 @@ def run_decisions(bench: ReadoutBench) -> DecisionResult:
     return DecisionResult(
         title=bench.title,
         assignment_error=errors.total,
-        standard_error=_standard_error(projection, inquiry.transitions, preparation, fit),
+        standard_error=_standard_error(projection, *chances, fit),
         assignment_matrix=matrix,
         snr=1.0 / fit.noise,
         errors=errors,
@@ -293,8 +296,8 @@ def _judged(
     trials = counted.trials.astype(int)
     wrong = (int(counted.ones[0]), int(trials[1] - counted.ones[1]))
     for state, (number, share) in enumerate(zip(wrong, expected, strict=True)):
-        law = binom(trials[state], share)
-        if min(law.cdf(number), law.sf(number - 1)) < UNLIKELY:
+        law = trials[state], share
+        if min(bdtr(number, *law), bdtrc(number - 1, *law)) < UNLIKELY:
             warnings.append(
                 f"of {trials[state]} decisions counted for |{state}> {number} are wrong, and the "
                 f"fit around the threshold says {share * trials[state]:.3g}: the chain bends "

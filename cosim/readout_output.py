@@ -88,7 +88,9 @@ class Grid:
         return np.asarray(self.step * np.arange(1, self.count + 1), dtype=np.float64)
 
 
-def make_readout_plan(bench: ReadoutBench, frequency: float) -> ReadoutPlan:
+def make_readout_plan(
+    bench: ReadoutBench, frequency: float, deck: Deck | None = None
+) -> ReadoutPlan:
     """Read the deck of a readout and work out its transient; nothing is simulated.
 
     Parameters
@@ -97,6 +99,8 @@ def make_readout_plan(bench: ReadoutBench, frequency: float) -> ReadoutPlan:
         The testbench.
     frequency : float
         At which the answer enters in Hz; 0 where the step cannot follow from it.
+    deck : Deck or None
+        As `cosim.decks.read_deck` gives it, where it has been read already.
 
     Returns
     -------
@@ -108,7 +112,7 @@ def make_readout_plan(bench: ReadoutBench, frequency: float) -> ReadoutPlan:
         If the deck, an output or a time is wrong.
     """
     table = netlist_of(bench)
-    deck = read_deck(bench)
+    deck = read_deck(bench) if deck is None else deck
     roots = roots_of(bench)
     check_roots(deck, roots)
     deck = altered_deck(bench, deck)

@@ -24,14 +24,34 @@ class SensorRuns:
         on.
     decay_times, excitation_times : ndarray, shape (k,)
         Times in s of the events in these runs.
-    transitions : Transitions
-        How often they happen.
     """
 
     parameters: dict[str, Mapping[str, float]]
     decay_times: FloatArray = field(metadata={"unit": "s"})
     excitation_times: FloatArray = field(metadata={"unit": "s"})
-    transitions: Transitions
+
+
+def sensor_transitions(sensor: SensorTable, table: ReadoutTable) -> Transitions:
+    """Give how often the state changes, and how soon it shows.
+
+    Parameters
+    ----------
+    sensor : SensorTable
+        The sensor.
+    table : ReadoutTable
+        With the decay of |1>.
+
+    Returns
+    -------
+    Transitions
+    """
+    p, t1 = table.thermal_population, table.t1
+    return Transitions(
+        down=(1.0 - p) / t1 if math.isfinite(t1) else 0.0,
+        up=p / t1 if math.isfinite(t1) else 0.0,
+        conversion=1.0 / sensor.tunnel_time if sensor.tunnel_time > 0.0 else math.inf,
+        reversion=0.0 if math.isinf(sensor.return_time) else 1.0 / sensor.return_time,
+    )
 
 
 def make_sensor_runs(sensor: SensorTable, table: ReadoutTable, stop: float) -> SensorRuns:
@@ -59,13 +79,7 @@ def make_sensor_runs(sensor: SensorTable, table: ReadoutTable, stop: float) -> S
         raise TestbenchError(
             f"a run with a [sensor] takes less than {NEVER:g} s, got {stop:g} s",
         )
-    p, t1 = table.thermal_population, table.t1
-    transitions = Transitions(
-        down=(1.0 - p) / t1 if math.isfinite(t1) else 0.0,
-        up=p / t1 if math.isfinite(t1) else 0.0,
-        conversion=1.0 / sensor.tunnel_time if sensor.tunnel_time > 0.0 else math.inf,
-        reversion=0.0 if math.isinf(sensor.return_time) else 1.0 / sensor.return_time,
-    )
+    transitions = sensor_transitions(sensor, table)
     low, high = sensor.value_0, sensor.value_1
     falls = transitions.reversion > 0.0 or (transitions.down > 0.0 and not transitions.converts)
     rises = transitions.up > 0.0 or transitions.converts
@@ -77,7 +91,7 @@ def make_sensor_runs(sensor: SensorTable, table: ReadoutTable, stop: float) -> S
         parameters[f"decay {number}"] = _values(sensor, high, low, time)
     for number, time in enumerate(excitations.tolist(), start=1):
         parameters[f"excitation {number}"] = _values(sensor, low, high, time)
-    return SensorRuns(parameters, decays, excitations, transitions)
+    return SensorRuns(parameters, decays, excitations)
 
 
 def _values(

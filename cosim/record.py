@@ -2,6 +2,7 @@
 
 import platform
 import time
+from collections.abc import Mapping
 from datetime import datetime
 from functools import cache
 from importlib.metadata import version
@@ -35,6 +36,11 @@ class Clock:
         self.lap(prefix + "simulator_overhead")
         self.laps[prefix + "ngspice"] = shot.result.wall_time
         self.laps[prefix + "simulator_overhead"] -= shot.result.wall_time
+
+    def note_laps(self, laps: Mapping[str, float]) -> None:
+        """Take over stages that are not this run's alone; the next begins now."""
+        self.laps |= laps
+        self._last = time.perf_counter()
 
     def note_capture(self, shot: Capture, prefix: str = "") -> None:
         """Take over the time of a capture that was made before this run began."""
