@@ -1,15 +1,16 @@
-"""What stands behind `cosim.run`, `cosim.save` and `cosim.load`."""
+"""What stands behind `cosim.run`, `cosim.save` and `cosim.load`.
+
+A chain is loaded when it is run: each has libraries that the other never needs.
+"""
 
 import os
 from collections.abc import Callable
+from importlib import import_module
 
 from cosim import archive
 from cosim.decision_result import DECISION_KINDS, DecisionResult
 from cosim.errors import ArchiveError, InputError
-from cosim.gate import run_gate
 from cosim.quantum.operators import OperatorSystem
-from cosim.readout import run_readout
-from cosim.readout_decisions import run_decisions
 from cosim.readout_result import READOUT_KINDS, ReadoutResult
 from cosim.result import KINDS, GateResult
 from cosim.testbench import Bench, ReadoutBench, gate_bench, load_testbench
@@ -45,16 +46,21 @@ def run(
         If ngspice or the evolution fails.
     """
     bench = bench if isinstance(bench, Bench) else load_testbench(bench)
+    result: GateResult | ReadoutResult | DecisionResult
     if not isinstance(bench, ReadoutBench):
-        return run_gate(gate_bench(bench), system=system, progress=progress)
+        gate = import_module("cosim.gate")
+        result = gate.run_gate(gate_bench(bench), system=system, progress=progress)
+        return result
     if system is not None:
         raise InputError(
             f"{bench.source or 'the testbench'} has [readout], which takes no system of operators",
             hint="what answers is said in [resonator] or [sensor]",
         )
     if bench.readout.decision is not None:
-        return run_decisions(bench)
-    return run_readout(bench, progress=progress)
+        result = import_module("cosim.readout_decisions").run_decisions(bench)
+    else:
+        result = import_module("cosim.readout").run_readout(bench, progress=progress)
+    return result
 
 
 def save(result: GateResult | ReadoutResult | DecisionResult, path: str | os.PathLike[str]) -> int:

@@ -9,8 +9,7 @@ from dataclasses import dataclass, field
 
 import numpy as np
 import numpy.typing as npt
-from scipy.special import log_ndtr
-from scipy.stats import chi2
+from scipy.special import chdtrc, log_ndtr
 
 from cosim.errors import InputError
 from cosim.waveform import FloatArray
@@ -151,7 +150,7 @@ def fit_probit(
         noise_error=spread * float(np.sqrt(to_noise @ covariance @ to_noise)),
         trials=int(n.sum()),
         deviance=deviance,
-        plausibility=float(chi2.sf(deviance, freedom)) if freedom > 0 else float("nan"),
+        plausibility=float(chdtrc(freedom, deviance)) if freedom > 0 else float("nan"),
     )
 
 

@@ -8,7 +8,7 @@ from dataclasses import dataclass, field
 
 import numpy as np
 import numpy.typing as npt
-from scipy.signal import lfilter
+from scipy.linalg.blas import ztbsv
 
 from cosim.errors import InputError
 from cosim.quantum.incident import IncidentField
@@ -134,10 +134,11 @@ def _inside(
     first, second = _weights(np.asarray(rate * drive.step, dtype=np.complex128))
     force = math.sqrt(resonator.driven_rate) * drive.samples
     kicks = drive.step * ((first - second) * force[:-1] + second * force[1:])
-    decay = np.exp(-rate * drive.step)
-    return np.asarray(
-        lfilter([1.0], [1.0, -decay], np.concatenate([[initial], kicks])), dtype=np.complex128
-    )
+    # a[n] - decay a[n - 1] = kick[n] is a triangle of two diagonals, solved from the top down.
+    bands = np.ones((2, drive.samples.size), dtype=np.complex128, order="F")
+    bands[1] = -np.exp(-rate * drive.step)
+    inside = ztbsv(1, bands, np.concatenate([[initial], kicks]), lower=1, diag=1)
+    return np.asarray(inside, dtype=np.complex128)
 
 
 def _between(

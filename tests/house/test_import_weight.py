@@ -41,6 +41,21 @@ def test_reading_a_testbench_loads_no_solver() -> None:
     assert not loaded & {"qutip", "matplotlib", "PySpice", "scipy.signal", "h5py", "numba"}
 
 
+@pytest.mark.parametrize(
+    ("modules", "absent"),
+    [
+        ("cosim.gate", {"scipy.signal", "scipy.stats", "matplotlib", "PySpice"}),
+        (
+            "cosim.readout, cosim.readout_decisions",
+            {"scipy.signal", "scipy.stats", "qutip", "matplotlib", "PySpice"},
+        ),
+        ("cosim.dispatch", {"scipy.signal", "scipy.stats", "qutip", "matplotlib", "PySpice"}),
+    ],
+)
+def test_a_chain_loads_what_it_uses(modules: str, absent: set[str]) -> None:
+    assert not loaded_after(f"import {modules}") & absent
+
+
 def test_the_door_is_explicit() -> None:
     assert sorted(cosim.__all__) == cosim.__all__
     for name in cosim.__all__:

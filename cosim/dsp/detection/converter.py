@@ -1,8 +1,8 @@
 """The analog-to-digital converters behind a chain, one for I and one for Q, with their filter.
 
-The filter in front is a Butterworth low-pass, scipy's digital one on the grid of the records (by
-the bilinear transform, its corner pre-warped). The converter rounds to the nearest of 2**bits
-levels from -full_scale/2 in steps of full_scale/2**bits; zero is one of them.
+The filter in front is a digital Butterworth low-pass on the grid of the records (by the bilinear
+transform, its corner pre-warped). The converter rounds to the nearest of 2**bits levels from
+-full_scale/2 in steps of full_scale/2**bits; zero is one of them.
 """
 
 import math
@@ -10,9 +10,9 @@ from dataclasses import dataclass, field
 
 import numpy as np
 from scipy.fft import ifft
-from scipy.signal import butter, sosfilt, sosfilt_zi
 from scipy.special import ndtr
 
+from cosim.dsp.detection.low_pass import butterworth_sections, run_sections
 from cosim.dsp.detection.output_noise import (
     OutputNoise,
     circulant_powers,
@@ -230,9 +230,29 @@ def filter_records(adc: Adc, step: float, records: ComplexArray) -> ComplexArray
     ndarray of complex, shape (rows, n)
         In V, on the same grid.
     """
-    sections = butter(adc.order, adc.corner, fs=1 / step, output="sos")
-    rest = sosfilt_zi(sections)[:, None, :] * records[None, :, :1]
-    return np.asarray(sosfilt(sections, records, axis=1, zi=rest)[0])
+    # A steady value passes as it is: only what differs from it meets a filter at rest.
+    begin = records[:, :1]
+    return np.asarray(begin + filter_noise(adc, step, records - begin))
+
+
+def filter_noise(adc: Adc, step: float, noise: ComplexArray) -> ComplexArray:
+    """Send noise through the anti-alias filter, which is at rest before it.
+
+    Parameters
+    ----------
+    adc : Adc
+    step : float
+        In s.
+    noise : ndarray of complex, shape (rows, n)
+        In V.
+
+    Returns
+    -------
+    ndarray of complex, shape (rows, n)
+        In V, on the same grid; as noise of the chain is from `settling_samples` on.
+    """
+    sections = butterworth_sections(adc.order, adc.corner * step)
+    return np.asarray(run_sections(sections, np.ascontiguousarray(noise)))
 
 
 def settling_samples(adc: Adc, step: float) -> int:

@@ -13,10 +13,15 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.random import Generator
 from scipy.interpolate import CubicSpline
-from scipy.signal import butter, sosfilt
 
 from cosim.dsp.detection.assignment import AssignmentSplit
-from cosim.dsp.detection.converter import Adc, filter_records, quantise, settling_samples
+from cosim.dsp.detection.converter import (
+    Adc,
+    filter_noise,
+    filter_records,
+    quantise,
+    settling_samples,
+)
 from cosim.dsp.detection.output_noise import draw_lines, draw_noise, plan_noise
 from cosim.dsp.detection.projection import Projection, transition_nodes
 from cosim.dsp.detection.reception import ChainOutput, Detector, sampling_window
@@ -246,7 +251,8 @@ def record_shots(
             draws = draw_lines(random, block, period)
             paths = [draw_noise(plan, draws, lead + needed) for plan in plans]
             noise = _switched(paths, course, output.records.step, lead)
-            noise = _filtered(detector.adc, output.records.step, noise)
+            if detector.adc is not None:
+                noise = filter_noise(detector.adc, output.records.step, noise)
             shots = noise[:, lead + every * first :: every][:, :samples]
             shots = _add_means(shots, nodes, course)
             if detector.adc is not None:
@@ -341,12 +347,6 @@ def _switched(
     states, times, backs = course
     changed = (t[None, :] >= times[:, None]) & (t[None, :] < backs[:, None])
     return np.where((states[:, None] == 1) ^ changed, paths[1], paths[0])
-
-
-def _filtered(adc: Adc | None, step: float, noise: ComplexArray) -> ComplexArray:
-    if adc is None:
-        return noise
-    return np.asarray(sosfilt(butter(adc.order, adc.corner, fs=1 / step, output="sos"), noise))
 
 
 def _outside(adc: Adc, shots: ComplexArray, quadratures: int) -> int:
