@@ -132,6 +132,37 @@ def half_length(carrier_frequency: float, bandwidth: float | None = None) -> flo
     return (_ATTENUATION - 7.95) / (2.285 * 2 * np.pi * transition) / 2
 
 
+def low_pass(carrier_frequency: float, step: float, bandwidth: float | None = None) -> FloatArray:
+    """Give what the demodulator does to an envelope: the weights of its low-pass.
+
+    Parameters
+    ----------
+    carrier_frequency : float
+        In Hz.
+    step : float
+        Time between samples in s.
+    bandwidth : float or None
+        As in `demodulate`, in Hz.
+
+    Returns
+    -------
+    ndarray, shape (2 m + 1,)
+        Symmetric, with the sum 1; m steps reach `half_length` or just beyond.
+
+    Raises
+    ------
+    WaveformError
+        If the bandwidth is not possible.
+    """
+    width = _checked_bandwidth(carrier_frequency, bandwidth)
+    reach = int(np.ceil(half_length(carrier_frequency, width) / step))
+    tau = step * np.arange(-reach, reach + 1)
+    cutoff = (width + _stop_edge(carrier_frequency, width)) / 2
+    beta = 0.1102 * (_ATTENUATION - 8.7)
+    low = np.sinc(2 * cutoff * tau) * np.kaiser(tau.size, beta)
+    return np.asarray(low / low.sum(), dtype=np.float64)
+
+
 def _stop_edge(carrier_frequency: float, width: float) -> float:
     return min(3 * width, carrier_frequency - width)
 
@@ -192,13 +223,9 @@ def _filtered(
 
 def _taps(carrier: float, width: float, cell: float) -> tuple[ComplexArray, int]:
     """Band-pass weights for cell averages, and the number of cells from the centre to the end."""
-    half = half_length(carrier, width)
-    reach = int(np.ceil(half / cell))
+    low = 2 * low_pass(carrier, cell, width)  # The real carrier holds half its amplitude at +f_c.
+    reach = low.size // 2
     tau = cell * np.arange(-reach, reach + 1)
-    cutoff = (width + _stop_edge(carrier, width)) / 2
-    beta = 0.1102 * (_ATTENUATION - 8.7)
-    low = np.sinc(2 * cutoff * tau) * np.kaiser(tau.size, beta)
-    low *= 2 / low.sum()  # The real carrier holds half its amplitude at +f_c.
     sharp = np.convolve(low * np.exp(2j * np.pi * carrier * tau), _SHARPEN)
     # Weight number i meets the sample at t + (i - reach) cell, so the filter is turned round:
     # h(t - t_n) with t_n - t = tau is h(-tau), the conjugate.
