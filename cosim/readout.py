@@ -15,6 +15,7 @@ from cosim.dsp.detection.assignment import (
     split_assignment,
 )
 from cosim.dsp.detection.converter import Adc
+from cosim.dsp.detection.leaked import leaked_decisions, leaked_point, leaked_points
 from cosim.dsp.detection.reception import ChainOutput, Detector
 from cosim.dsp.detection.records import Preparation, Records, Transitions
 from cosim.dsp.detection.shots import integrated_shots, record_shots, shot_points
@@ -52,7 +53,7 @@ from cosim.readout_result import ReadoutNoise, ReadoutResult, ReadoutTraces
 from cosim.readout_schema import ReadoutTable, ResonatorTable
 from cosim.record import Clock, make_record
 from cosim.testbench import ReadoutBench
-from cosim.waveform import ComplexArray
+from cosim.waveform import ComplexArray, FloatArray
 
 Progress = Callable[[float], None]
 
@@ -187,6 +188,7 @@ def run_readout(
     records = record_shots(output, detector, split, *chances, table.records, table.seed)
     points = shot_points(split, *chances, POINTS, table.seed)
     clock.lap("shots")
+    leaked_at = _leaked(output, detector, split, chain, table.seed)
     floor = _floor(chain.records, runs.half, noise, detector)
     added, kelvin, unsure = _referred(noise, chain, table, line, bench.resonator)
     photons, wait, dephasing = _left_behind(bench.resonator, inquiry)
@@ -228,7 +230,8 @@ def run_readout(
             noise.reason,
             noise.left_out,
         ),
-        traces=_traces(chain.records, grid, inquiry, points),
+        traces=_traces(chain.records, grid, inquiry, (*points, leaked_at[1])),
+        leaked=leaked_at[0],
         warnings=tuple(dict.fromkeys(warnings)),
         run=make_record(
             bench, capture_of(runs.plan, chain.results[1]), runs.frequency or math.nan, clock
@@ -332,6 +335,16 @@ def _agreement(split: AssignmentSplit, transitions: Transitions, preparation: Pr
         return math.nan
     return repeat_agreement(split, transitions, preparation).mean
 
+def _leaked(
+    output: ChainOutput, detector: Detector, split: AssignmentSplit, chain: Chain, seed: int
+) -> tuple[FloatArray, ComplexArray]:
+    """Decide |2>, and draw some of its points; not known, none without its record."""
+    if chain.second is None:
+        return np.zeros(0), np.zeros(0, dtype=np.complex128)
+    point = leaked_point(output, detector, split, chain.second)
+    return leaked_decisions(split, point), leaked_points(split, point, POINTS, seed)
+
+
 
 def _dispersive(pulse: ResonatorTable | None, inquiry: Inquiry) -> tuple[str, ...]:
     if pulse is None or inquiry.answers is None:
@@ -367,7 +380,9 @@ def _floor(first: Records, half: Records | None, noise: ChainNoise, detector: De
     return abs(errors[1] - errors[0])
 
 
-def _traces(records: Records, grid: Grid, inquiry: Inquiry, points: ComplexArray) -> ReadoutTraces:
+def _traces(
+    records: Records, grid: Grid, inquiry: Inquiry, points: tuple[ComplexArray, ...]
+) -> ReadoutTraces:
     time, photons = np.zeros(0), [np.zeros(0), np.zeros(0)]
     if inquiry.answers is not None:
         time = inquiry.answers.drive.t
@@ -379,6 +394,5 @@ def _traces(records: Records, grid: Grid, inquiry: Inquiry, points: ComplexArray
         time,
         photons[0],
         photons[1],
-        points[0],
-        points[1],
+        *points,
     )

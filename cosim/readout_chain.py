@@ -16,6 +16,7 @@ from cosim.readout_input import (
     EXCITED,
     GROUND,
     REST,
+    SECOND,
     SMALL,
     Answers,
     answer_emf,
@@ -81,6 +82,8 @@ class Chain:
         Size of the answer to |0> and to |1> over that of a linear chain.
     results : tuple of TransientResult
         The runs, |0> and |1> first.
+    second : ndarray of complex, shape (n,), or None
+        Record of |2> in V, on the grid of `records`; None where it is not known what |2> does.
     """
 
     records: Records
@@ -88,6 +91,7 @@ class Chain:
     gain: float
     compression: tuple[float, float]
     results: tuple[TransientResult, ...]
+    second: ComplexArray | None = None
 
 
 def make_inquiry(bench: ReadoutBench, plan: ReadoutPlan) -> Inquiry:
@@ -170,8 +174,11 @@ def make_chain(plan: ReadoutPlan, table: ReadoutTable, grid: Grid, inquiry: Inqu
     InputError, SimulationError
         If a run fails, or an output cannot be read.
     """
-    weak = [REST, *(f"small {name}" for name in STATES)] if inquiry.answers is not None else []
-    names = [*STATES, *inquiry.jumps, *weak]
+    more = []
+    if inquiry.answers is not None:
+        known = [SECOND] if SECOND in inquiry.answers.emf else []
+        more = [*known, REST, *(f"small {name}" for name in STATES)]
+    names = [*STATES, *inquiry.jumps, *more]
     results = run_all(plan, inquiry, names)
     found = {
         name: read_record(plan, table, grid, result)
@@ -186,17 +193,19 @@ def make_chain(plan: ReadoutPlan, table: ReadoutTable, grid: Grid, inquiry: Inqu
     bent = max(float(np.abs(found[name] - straight[name]).max()) for name in STATES)
     linear = None
     if bent > BENT * apart:
-        more = run_all(plan, inquiry, [f"small {name}" for name in inquiry.jumps])
-        for name, result in zip(inquiry.jumps, more, strict=True):
+        weak = run_all(plan, inquiry, [f"small {name}" for name in inquiry.jumps])
+        for name, result in zip(inquiry.jumps, weak, strict=True):
             record = read_record(plan, table, grid, result)
             straight[name] = rest + (record - rest) / SMALL
         linear = _records(straight, grid, inquiry)
+        results += weak
     sizes = [
         float(np.linalg.norm(found[name] - rest) / np.linalg.norm(straight[name] - rest))
         for name in STATES
     ]
     gain = _gain(straight[EXCITED] - straight[GROUND], grid, inquiry.answers)
-    return Chain(records, linear, gain, (sizes[0], sizes[1]), tuple(results))
+    bends = sizes[0], sizes[1]
+    return Chain(records, linear, gain, bends, tuple(results), found.get(SECOND))
 
 
 def run_all(plan: ReadoutPlan, inquiry: Inquiry, names: Sequence[str]) -> list[TransientResult]:

@@ -18,7 +18,7 @@ from cosim.units import format_quantity
 MOST_DEVICES = 8
 DECADES = 6
 
-_STATES = ("C0", "C3")  # colours of |0> and |1>
+_STATES = ("C0", "C3", "C2")  # colours of |0>, |1> and |2>
 _SMALL = 8
 _LONGEST = 20  # characters of a device's name
 _LEAST = 1e-30  # stands for zero on a logarithmic axis
@@ -78,10 +78,10 @@ def _draw_figures_of_merit(figure: SubFigure, result: ReadoutResult) -> None:
 
 
 def _draw_points(axes: Axes, result: ReadoutResult) -> None:
-    clouds = (result.traces.points_ground, result.traces.points_excited)
+    clouds = _clouds(result)
     scale, unit = _prefixed(float(max(np.abs(cloud).max() for cloud in clouds)), "V")
     projection = result.split.projection
-    title = f"{clouds[0].size + clouds[1].size} shots"
+    title = f"{sum(cloud.size for cloud in clouds)} shots"
     if projection.quadratures == 1:
         _draw_values(axes, result, scale, unit)
         _finish(axes, title)
@@ -98,7 +98,8 @@ def _draw_points(axes: Axes, result: ReadoutResult) -> None:
         first, second = crossing, crossing + way * float(np.abs(means[1] - means[0]))
         ends = (first.real, first.imag), (second.real, second.imag)
         axes.axline(*ends, color="black", lw=1.0, ls=style, label=label)
-    for state, mean in enumerate(means):
+    # Where |2> lies is told by its points alone.
+    for state, mean in enumerate([*means, *(cloud.mean() * scale for cloud in clouds[2:])]):
         colour = _STATES[state]
         axes.plot(mean.real, mean.imag, "o", color=colour, mec="white", ms=8, label=f"|{state}>")
     axes.set_aspect("equal", adjustable="datalim")
@@ -107,13 +108,16 @@ def _draw_points(axes: Axes, result: ReadoutResult) -> None:
     _finish(axes, title)
 
 
+def _clouds(result: ReadoutResult) -> list[np.ndarray]:
+    traces = result.traces
+    second = [traces.points_second] if traces.points_second.size else []
+    return [traces.points_ground, traces.points_excited, *second]
+
+
 def _draw_values(axes: Axes, result: ReadoutResult, scale: float, unit: str) -> None:
     """Count the values of a single output, whose points lie on a line."""
     projection = result.split.projection
-    values = [
-        projection.along(cloud) * scale
-        for cloud in (result.traces.points_ground, result.traces.points_excited)
-    ]
+    values = [projection.along(cloud) * scale for cloud in _clouds(result)]
     edges = np.histogram_bin_edges(np.concatenate(values), bins=60).tolist()
     for state, one in enumerate(values):
         axes.hist(one, edges, color=_STATES[state], alpha=0.6, label=f"|{state}>")

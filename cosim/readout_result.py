@@ -3,6 +3,8 @@
 from dataclasses import dataclass, field
 from typing import Any
 
+import numpy as np
+
 from cosim.dsp.detection.assignment import AssignmentSplit, ErrorItems, IntegrationScan
 from cosim.dsp.detection.projection import Projection
 from cosim.dsp.detection.shots import ShotCounts
@@ -14,6 +16,14 @@ _NOT_IN_TABLE = {"table": False}
 
 def _unit(unit: str) -> dict[str, Any]:
     return {"unit": unit}
+
+
+def _no_points() -> ComplexArray:
+    return np.zeros(0, dtype=np.complex128)
+
+
+def _not_known() -> FloatArray:
+    return np.zeros(0)
 
 
 @dataclass(frozen=True, slots=True)
@@ -61,6 +71,8 @@ class ReadoutTraces:
         In the resonator; empty for a sensor.
     points_ground, points_excited : ndarray of complex, shape (k,)
         Some integrated shots in V.
+    points_second : ndarray of complex, shape (k,)
+        The same of |2>; empty where it is not known what |2> does.
     """
 
     time: FloatArray = field(metadata={"unit": "s", "axes": ("time",)})
@@ -71,6 +83,9 @@ class ReadoutTraces:
     photons_excited: FloatArray = field(metadata={"unit": "1", "axes": ("field_time",)})
     points_ground: ComplexArray = field(metadata={"unit": "V", "axes": ("shot",)})
     points_excited: ComplexArray = field(metadata={"unit": "V", "axes": ("shot",)})
+    points_second: ComplexArray = field(
+        default_factory=_no_points, metadata={"unit": "V", "axes": ("second_shot",)}
+    )
 
 
 @dataclass(frozen=True, slots=True)
@@ -131,8 +146,11 @@ class ReadoutResult:
     run : RunRecord
         Deck, testbench, versions, times, log.
     noise_temperature_error : float
-        Standard error of `noise_temperature` in K: that of the whole noise, of which the netlist's
-        may be a small part; 0 where it is no matter of chance.
+        Standard error of `noise_temperature` in K, of the runs with the netlist's noise alone; 0
+        where it is no matter of chance.
+    leaked : ndarray, shape (2,)
+        P(0|2) and P(1|2) of a qubit that has leaked to |2> and stays there; empty where the
+        testbench does not say by how much |2> shifts the resonance.
     """
 
     title: str
@@ -167,6 +185,10 @@ class ReadoutResult:
     warnings: tuple[str, ...]
     run: RunRecord = field(metadata=_NOT_IN_TABLE)
     noise_temperature_error: float = field(default=0.0, metadata=_unit("K"))
+    leaked: FloatArray = field(
+        default_factory=_not_known,
+        metadata={"unit": "1", "axes": ("decided",), "labels": {"decided": ("0", "1")}},
+    )
 
 
 # Classes by the tag that the archive keeps.
@@ -188,6 +210,7 @@ READOUT_KINDS: dict[str, type] = {
 READOUT_FIELDS = (
     "assignment_error",
     "assignment_matrix",
+    "leaked",
     "snr",
     "errors",
     "integration_time",

@@ -110,6 +110,9 @@ def _headline(result: ReadoutResult) -> Table:
     table.add_row("assignment error", f"{result.assignment_error:.4e} {bar}")
     table.add_row("prepared 0", f"P(0|0) = {p[0, 0]:.6f}   P(1|0) = {p[1, 0]:.4e}")
     table.add_row("prepared 1", f"P(1|1) = {p[1, 1]:.6f}   P(0|1) = {p[0, 1]:.4e}")
+    if result.leaked.size:
+        text = f"P(0|2) = {result.leaked[0]:.4e}   P(1|2) = {result.leaked[1]:.4e}"
+        table.add_row("leaked to 2", text)
     table.add_row("signal over noise", f"{result.snr:.4g}")
     table.add_row("integration time", format_quantity(result.integration_time, "s"))
     table.add_row(

@@ -138,7 +138,9 @@ def make_result(*, quadratures: int = 2, told: bool = True) -> ReadoutResult:
             1.1 * photons if told else np.zeros(0),
             points[0],
             points[1],
+            0.5 * points[0] if told else np.zeros(0, complex),
         ),
+        leaked=np.array([0.25, 0.75]) if told else np.zeros(0),
         warnings=("the chain saturates for |1> more than for |0>",) if told else (),
         run=RunRecord(
             started="2026-01-02T03:04:05+00:00",
@@ -200,6 +202,7 @@ class TestReadoutTable:
         # The records begin at 100 ns of the deck, and the window at the first whole sample of the
         # converter 100 ns later: it converts every 8 ns.
         assert "integrated from 204 ns to 900 ns" in words
+        assert "leaked to 2 P(0|2) = 2.5000e-01 P(1|2) = 7.5000e-01" in words
         for expected in ("12.5 quanta", "3.6 K", "± 7%: the chain is switched", "wait 640 ns"):
             assert expected in words
         assert "arriving 41.0%, xlna.xfirst.m1 30.0%" in words
