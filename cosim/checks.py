@@ -15,9 +15,10 @@ from cosim.imported import import_waveform
 from cosim.noisy_circuit import noise_settings
 from cosim.probe_run import TRIAL_POINTS, estimate_run, try_deck
 from cosim.readout import readout_frequency
-from cosim.readout_chain import STATES, make_inquiry
+from cosim.readout_chain import make_inquiry
 from cosim.readout_input import GROUND
 from cosim.readout_output import make_readout_plan, record_grid
+from cosim.readout_probe import estimate_readout, transients_of
 from cosim.sweep.estimate import estimate_sweep
 from cosim.sweep.plan import SweepPlan
 from cosim.sweep.planning import make_sweep
@@ -79,7 +80,7 @@ def check_testbench(
     """
     loaded = load_testbench(path)
     if isinstance(loaded, ReadoutBench):
-        return _check_readout(loaded, path)
+        return _check_readout(loaded, path, probe)
     bench = gate_bench(loaded)
     target = gate_target(bench)
     found = [
@@ -88,7 +89,7 @@ def check_testbench(
     ]
     plan = make_sweep(bench) if bench.studies.get("sweep") else None
     if plan is not None:
-        bench = plan.testbench(plan.run(0))
+        bench = gate_bench(plan.testbench(plan.run(0)))
     deck: tuple[str, ...] = ()
     if bench.netlist is None:
         found += _waveform_findings(bench)
@@ -102,8 +103,13 @@ def check_testbench(
 
 
 def _check_readout(
-    bench: ReadoutBench, path: str | os.PathLike[str]
+    bench: ReadoutBench, path: str | os.PathLike[str], probe: bool
 ) -> tuple[tuple[Finding, ...], tuple[str, ...]]:
+    sweep = make_sweep(bench) if bench.studies.get("sweep") else None
+    if sweep is not None:
+        first = sweep.testbench(sweep.run(0))
+        assert isinstance(first, ReadoutBench)  # As the testbench that it is made of.
+        bench = first
     plan = make_readout_plan(bench, readout_frequency(bench))
     inquiry = make_inquiry(bench, plan)
     for noise in bench.noise:
@@ -113,7 +119,7 @@ def _check_readout(
     request = plan.request
     resolve_saves(plan.deck, request.saves)
     prepared = prepare(inquiry.deck_of(plan, GROUND), request)
-    runs = len(STATES) + len(inquiry.jumps) + (3 if inquiry.answers is not None else 0)
+    counts = transients_of(bench, inquiry)
     points = round(request.stop / request.step) + 1
     short = replace(request, stop=min(request.stop, TRIAL_POINTS * request.step))
     simulate_prepared(prepare(inquiry.deck_of(plan, GROUND), short), short)
@@ -133,7 +139,12 @@ def _check_readout(
             "points",
             points,
         ),
-        Finding("runs", f"{runs} of the netlist, without noise and floor", "runs", runs),
+        Finding(
+            "of the netlist",
+            f"{counts.clean} transients, {counts.noisy} with noise, {counts.half} at half the step",
+            "transients",
+            counts.clean + counts.noisy + counts.half,
+        ),
         Finding(
             "record",
             f"{grid.count} samples of {format_quantity(grid.step, 's', 4)}",
@@ -144,6 +155,11 @@ def _check_readout(
     ]
     notices = (*prepared.notices, *plan.notices)
     found += [Finding("notice", text, f"notice_{k}", text) for k, text in _count(notices)]
+    if sweep is not None:
+        found += _sweep_findings(sweep)
+    elif probe:
+        single = estimate_readout(bench, plan, inquiry)
+        found += _estimates(single.time, single.memory, single.disk, "")
     found.append(Finding("result", "ready to run", "ready", True))
     lines = kept_lines(prepared.lines, prepared.origins, plan.deck.files, plan.confidential)
     return tuple(found), lines
@@ -157,9 +173,12 @@ def _sweep_findings(plan: SweepPlan) -> list[Finding]:
     if plan.perturbations:
         parts.append(f"1 + 2 x {len(plan.perturbations)} one at a time")
     text = f"{estimate.runs} runs ({' x '.join(parts)}), {estimate.waveforms} of the circuit"
+    shared = "one per deck as altered"
+    if plan.is_readout:
+        shared = "one set for runs that differ in what is done with the records only"
     found = [
         Finding("sweep", text, "runs", estimate.runs),
-        Finding("waveforms", "one per deck as altered", "waveforms", estimate.waveforms),
+        Finding("waveforms", shared, "waveforms", estimate.waveforms),
     ]
     return found + _estimates(estimate.time, estimate.memory, estimate.disk, " on one worker")
 

@@ -135,7 +135,9 @@ def run(
         number = save(result, archive)
         typer.echo(f"archived as run {number} of {archive}", err=True)
     if plot is not None:
-        _plot_result(result, plot)
+        from cosim.result_figures import plot_result
+
+        plot_result(result, plot)
         typer.echo(f"figure in {plot}", err=True)
 
 
@@ -264,38 +266,12 @@ def compare(
 
 
 def _print_result(result: "GateResult | ReadoutResult | DecisionResult", json_output: bool) -> None:
-    from cosim.decision_result import DecisionResult, decision_numbers
-    from cosim.decision_terminal import decision_table
-    from cosim.readout_result import ReadoutResult, readout_numbers
-    from cosim.readout_terminal import readout_table
-    from cosim.result import as_numbers
-    from cosim.terminal import result_table
+    from cosim.result_show import numbers_of, table_of
 
-    if isinstance(result, DecisionResult):
-        numbers, table = decision_numbers(result), decision_table(result)
-    elif isinstance(result, ReadoutResult):
-        numbers, table = readout_numbers(result), readout_table(result)
-    else:
-        numbers, table = as_numbers(result), result_table(result)
     if json_output:
-        typer.echo(json.dumps(numbers, indent=2))
+        typer.echo(json.dumps(numbers_of(result), indent=2))
     else:
-        Console(highlight=False).print(table)
-
-
-def _plot_result(result: "GateResult | ReadoutResult | DecisionResult", path: Path) -> None:
-    from cosim.decision_figures import plot_decisions
-    from cosim.decision_result import DecisionResult
-    from cosim.figures import plot_gate
-    from cosim.readout_figures import plot_readout
-    from cosim.readout_result import ReadoutResult
-
-    if isinstance(result, DecisionResult):
-        plot_decisions(result, path)
-    elif isinstance(result, ReadoutResult):
-        plot_readout(result, path)
-    else:
-        plot_gate(result, path)
+        Console(highlight=False).print(table_of(result))
 
 
 def _refuse_failed(archive: Path, run: int | None) -> None:

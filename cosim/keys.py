@@ -3,21 +3,28 @@
 import math
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, fields, is_dataclass, replace
-from typing import Any, get_args, get_type_hints
+from typing import Any, TypeVar, get_args, get_type_hints
 
 from cosim.circuit.alteration import with_instances, with_parameters
 from cosim.circuit.deck import Deck
 from cosim.circuit.hierarchy import structure_of
 from cosim.config import Level, Quantity, read_value
 from cosim.errors import InputError, TestbenchError, UnitError, near_names
+from cosim.readout_schema import READOUT_TABLES
 from cosim.schema import TABLES
-from cosim.testbench import Testbench
+from cosim.testbench import Bench
 from cosim.units import parse_parameter, parse_quantity
 
+AnyBench = TypeVar("AnyBench", bound=Bench)
+
+# The tables of testbenches of both kinds; each has some of them.
+_TABLES: dict[str, Any] = {**TABLES, **READOUT_TABLES}
 # Fields of [netlist] that hold a table of their own, by name.
 _MAPS = ("parameters", "instances", "sections")
 # Arrays of tables, of which a key names one by its number: "stimulus.1.period", "noise.2.white".
 _ARRAYS = ("stimulus", "noise", "spectator")
+# Types of fields that hold a number without a unit.
+_PLAIN: tuple[Any, ...] = (float, float | None)
 DEFAULT_TEMPERATURE = 300.15  # K; ngspice's 27 degrees Celsius
 
 
@@ -93,7 +100,7 @@ class NumberKey:
         return value
 
 
-def number_key(bench: Testbench, deck: Deck | None, text: str, where: str) -> NumberKey:
+def number_key(bench: Bench, deck: Deck | None, text: str, where: str) -> NumberKey:
     """Find a number by its dotted key.
 
     Parameters
@@ -120,12 +127,12 @@ def number_key(bench: Testbench, deck: Deck | None, text: str, where: str) -> Nu
     field, _, item = rest.partition(".")
     if table == "netlist" and field in ("parameters", "instances") and deck is not None:
         return _deck_key(deck, text, field, item, where)
-    cls: Any = TABLES.get(table)
-    rows = getattr(bench, table) if table in _ARRAYS else ()
+    cls: Any = _TABLES.get(table)
+    rows = getattr(bench, table, ()) if table in _ARRAYS else ()
     if field.isdecimal() and 1 <= int(field) <= len(rows):
         cls = type(rows[int(field) - 1])
         field, item = item, str(int(field))
-    elif item or (table in TABLES and getattr(bench, table) is None):
+    elif item or getattr(bench, table, None) is None:
         cls = None
     hints = get_type_hints(cls, include_extras=True) if cls else {}
     if field not in hints:
@@ -136,7 +143,7 @@ def number_key(bench: Testbench, deck: Deck | None, text: str, where: str) -> Nu
     quantity, whole = _kind(hints[field])
     if hints[field] is Level:
         quantity = Quantity(getattr(rows[int(item) - 1], field).unit)
-    if quantity is None and not whole and hints[field] is not float:
+    if quantity is None and not whole and hints[field] not in _PLAIN:
         raise TestbenchError(
             f"{where}, key 'key': '{text}' is no number that can be varied; "
             f"{near_names(text, known_keys(bench, deck))}"
@@ -163,7 +170,7 @@ def _deck_key(deck: Deck, text: str, field: str, item: str, where: str) -> Numbe
     return NumberKey(path, "netlist", field, item, name)
 
 
-def known_keys(bench: Testbench, deck: Deck | None) -> Iterator[str]:
+def known_keys(bench: Bench, deck: Deck | None) -> Iterator[str]:
     """Give the dotted keys of all numbers of a testbench, and of its deck's parameters.
 
     Parameters
@@ -177,17 +184,23 @@ def known_keys(bench: Testbench, deck: Deck | None) -> Iterator[str]:
     ------
     str
     """
-    tables: list[tuple[str, Any]] = [(name, getattr(bench, name)) for name in TABLES]
-    for name in _ARRAYS:
-        tables += [(f"{name}.{at}", item) for at, item in enumerate(getattr(bench, name), start=1)]
-    for table, value in tables:
+    for table, value in _tables_of(bench):
         hints = get_type_hints(type(value), include_extras=True) if value is not None else {}
         for field, hint in hints.items():
-            if _kind(hint) != (None, False) or hint in (float, Level):
+            if _kind(hint) != (None, False) or hint in (*_PLAIN, Level):
                 yield f"{table}.{field}"
     if deck is not None:
         for name in structure_of(deck.lines).parameters.expressions:
             yield f"netlist.parameters.{name}"
+
+
+def _tables_of(bench: Bench) -> list[tuple[str, Any]]:
+    """Give the tables of a testbench by name; None where it has none of that name."""
+    found = [(name, getattr(bench, name, None)) for name in _TABLES]
+    for name in _ARRAYS:
+        rows = getattr(bench, name, ())
+        found += [(f"{name}.{at}", item) for at, item in enumerate(rows, start=1)]
+    return found
 
 
 def _kind(hint: Any) -> tuple[Quantity | None, bool]:
@@ -201,7 +214,7 @@ def _kind(hint: Any) -> tuple[Quantity | None, bool]:
     return (marks[0] if marks else None), whole
 
 
-def nominal(bench: Testbench, deck: Deck | None, key: NumberKey) -> float | None:
+def nominal(bench: Bench, deck: Deck | None, key: NumberKey) -> float | None:
     """Give the value that a testbench, or its deck, has for a number.
 
     Parameters
@@ -243,7 +256,7 @@ def _lowered(mapping: Mapping[str, Any]) -> dict[str, Any]:
     return {name.strip().lower(): value for name, value in mapping.items()}
 
 
-def with_number(bench: Testbench, key: NumberKey, value: float) -> Testbench:
+def with_number(bench: AnyBench, key: NumberKey, value: float) -> AnyBench:
     """Set one number of a testbench.
 
     Parameters
@@ -291,7 +304,7 @@ def with_number(bench: Testbench, key: NumberKey, value: float) -> Testbench:
         ) from None
 
 
-def with_setting(bench: Testbench, path: str, raw: object, where: str) -> Testbench:
+def with_setting(bench: AnyBench, path: str, raw: object, where: str) -> AnyBench:
     """Set one key of a testbench to what a corner says.
 
     Parameters
@@ -318,10 +331,10 @@ def with_setting(bench: Testbench, path: str, raw: object, where: str) -> Testbe
     """
     table, _, rest = path.strip().partition(".")
     field, _, item = rest.partition(".")
-    if table not in TABLES or getattr(bench, table) is None:
-        names = [name for name in TABLES if getattr(bench, name) is not None]
+    if table not in _TABLES or getattr(bench, table, None) is None:
+        names = [name for name in _TABLES if getattr(bench, name, None) is not None]
         raise TestbenchError(f"{where}: unknown key '{path}'; {near_names(table, names)}")
-    hints = get_type_hints(TABLES[table], include_extras=True)
+    hints = get_type_hints(_TABLES[table], include_extras=True)
     if field not in hints or (item and field not in _MAPS):
         names = [f"{table}.{name}" for name in hints]
         raise TestbenchError(f"{where}: unknown key '{path}'; {near_names(path, names)}")
@@ -348,7 +361,7 @@ def with_setting(bench: Testbench, path: str, raw: object, where: str) -> Testbe
         raise TestbenchError(f"{where}, key '{path}': {error.message}", hint=error.hint) from None
 
 
-def flattened(bench: Testbench) -> dict[str, Any]:
+def flattened(bench: Bench) -> dict[str, Any]:
     """Give all that a testbench says as one flat mapping, for hashes and comparisons.
 
     Parameters
@@ -362,10 +375,7 @@ def flattened(bench: Testbench) -> dict[str, Any]:
         Dotted key, as in `NumberKey.path` -> number, text, None, list or dict of those.
     """
     flat: dict[str, Any] = {}
-    tables: list[tuple[str, Any]] = [(name, getattr(bench, name)) for name in TABLES]
-    for name in _ARRAYS:
-        tables += [(f"{name}.{at}", item) for at, item in enumerate(getattr(bench, name), start=1)]
-    for table, value in tables:
+    for table, value in _tables_of(bench):
         for item in fields(value) if value is not None else ():
             content = getattr(value, item.name)
             if item.name in ("parameters", "instances") and table == "netlist":

@@ -161,7 +161,8 @@ def verify(
                 + (
                     f"it failed: {item.error}"
                     if item.error
-                    else f"fidelities differ by {item.difference:.1e} (allowed: {item.allowed:.1e})"
+                    else f"{item.what} differ by {item.difference:.1e} "
+                    f"(allowed: {item.allowed:.1e})"
                 )
             )
         typer.echo(
@@ -186,10 +187,9 @@ def rerun(
 ) -> None:
     """Make one run of a sweep again, alone, with all that a single run gives."""
     from cosim.dispatch import save
-    from cosim.figures import plot_gate
-    from cosim.result import as_numbers
+    from cosim.result_figures import plot_result
+    from cosim.result_show import numbers_of, table_of
     from cosim.sweep.repetition import rerun as run_again
-    from cosim.terminal import result_table
 
     check_output(into, ".h5")
     check_output(plot, ".png", ".pdf", ".svg")
@@ -197,13 +197,13 @@ def rerun(
         check_run_archive(into)
     result = run_again(archive, number, testbench=testbench)
     if json_output:
-        typer.echo(json.dumps(as_numbers(result), indent=2))
+        typer.echo(json.dumps(numbers_of(result), indent=2))
     else:
-        Console(highlight=False).print(result_table(result))
+        Console(highlight=False).print(table_of(result))
     if into is not None:
         typer.echo(f"archived as run {save(result, into)} of {into}", err=True)
     if plot is not None:
-        plot_gate(result, plot)
+        plot_result(result, plot)
         typer.echo(f"figure in {plot}", err=True)
 
 

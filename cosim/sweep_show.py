@@ -14,17 +14,19 @@ from rich.console import Console
 from cosim import archive as store
 from cosim.command_options import check_output
 from cosim.errors import ArchiveError, InputError
-from cosim.figures import plot_gate
-from cosim.result import GateResult, as_columns, as_numbers, as_plain
+from cosim.result import as_columns, as_plain
+from cosim.result_figures import plot_result
+from cosim.result_show import numbers_of, table_of
 from cosim.sweep.batches import DONE
 from cosim.sweep.csv_export import write_csv
 from cosim.sweep.goal import make_goal
+from cosim.sweep.keeping import metric_of
 from cosim.sweep.record import SWEEP_KINDS, FailedRun
 from cosim.sweep.repetition import read_record
 from cosim.sweep.statistics import SweepSummary, summarise
 from cosim.sweep_figures import plot_sweep
 from cosim.sweep_terminal import describe_inputs, summary_table
-from cosim.terminal import failure_table, record_table, result_table, row_table
+from cosim.terminal import failure_table, record_table, row_table
 
 MOST_MESSAGES = 5  # of failed runs that are printed
 
@@ -55,7 +57,7 @@ def show_sweep(
     """
 
     record = read_record(path)
-    own = f"{record.fidelity}.average_gate_fidelity"
+    own = metric_of(record)
     bound = limit if limit is not None else record.limit if metric in (None, own) else math.nan
     columns, units = store.read_table(path), store.read_units(path)
     judged = dict(columns)
@@ -168,7 +170,8 @@ def show_sweep_run(
     }
     record = store.read(path, SWEEP_KINDS, number) if number in store.record_numbers(path) else None
     units = store.read_units(path)
-    if plot is not None and not isinstance(record, GateResult):
+    whole = None if isinstance(record, FailedRun) else record
+    if plot is not None and whole is None:
         raise ArchiveError(
             f"{path}: run {number} was not kept whole, so that there is nothing to draw",
             hint=f"qcosim rerun {path} {number} --plot {plot} makes it again",
@@ -182,16 +185,16 @@ def show_sweep_run(
         lines = record.log if isinstance(record, FailedRun) else record.run.log
         typer.echo(json.dumps(lines) if json_output else "\n".join(lines))
     elif json_output:
-        whole = as_numbers(record) if isinstance(record, GateResult) else {}
-        typer.echo(json.dumps({**row, **whole}, indent=2))
-    elif isinstance(record, GateResult):
+        numbers = {} if whole is None else numbers_of(whole)
+        typer.echo(json.dumps({**row, **numbers}, indent=2))
+    elif whole is not None:
         inputs = {name: row[name] for name in read_record(path).inputs}
         place = describe_inputs(inputs, units)
         console.print(f"run {number}: {place}, seed {row['seed']}", markup=False)
-        console.print(result_table(record))
-        console.print(record_table(record))
+        console.print(table_of(whole))
+        console.print(record_table(whole))
         if plot is not None:
-            plot_gate(record, plot)
+            plot_result(whole, plot)
             typer.echo(f"figure in {plot}", err=True)
     elif isinstance(record, FailedRun):
         console.print(failure_table(row, units, record))

@@ -263,7 +263,8 @@ def _correlation_table(summary: SweepSummary) -> Table:
     table = _columns(names, left=1)
     short = short_names(summary.inputs)
     for item in summary.correlations:
-        share = "-" if math.isnan(item.share) else _percent(item.share)
+        # Of a share of variance, other than of a yield, no more than a tenth of a percent counts.
+        share = "-" if math.isnan(item.share) else f"{100 * item.share:.1f} %"
         slope = "-" if math.isnan(item.standardised) else f"{item.standardised:+.3f}"
         cells = (share, f"{item.spearman:+.3f}", slope, _number(item.effect, 2))
         table.add_row(

@@ -14,7 +14,7 @@ from cosim.keys import NumberKey, flattened, nominal, number_key, with_number, w
 from cosim.sweep.identity import Files, files_of
 from cosim.sweep.samples import Variation, read_step, read_variation
 from cosim.sweep.table import GridTable, SweepTable
-from cosim.testbench import Testbench
+from cosim.testbench import Bench
 
 
 @dataclass(frozen=True, slots=True)
@@ -25,7 +25,7 @@ class Corner:
     ----------
     name : str
         Its name; empty for the testbench itself.
-    bench : Testbench
+    bench : Bench
         With the corner's settings and without [sweep].
     deck : Deck or None
         As read, nothing altered; None when a waveform is imported.
@@ -38,7 +38,7 @@ class Corner:
     """
 
     name: str
-    bench: Testbench
+    bench: Bench
     deck: Deck | None
     files: Files
     flat: Mapping[str, Any]
@@ -84,12 +84,12 @@ class Perturbation:
         return center + sign * self.step * (abs(center) if self.relative else 1.0)
 
 
-def read_corners(bench: Testbench, table: SweepTable) -> tuple[Corner, ...]:
+def read_corners(bench: Bench, table: SweepTable) -> tuple[Corner, ...]:
     """Apply the corners of a sweep to a testbench and read their decks.
 
     Parameters
     ----------
-    bench : Testbench
+    bench : Bench
         The testbench.
     table : SweepTable
         Its table [sweep].
@@ -130,7 +130,7 @@ def read_corners(bench: Testbench, table: SweepTable) -> tuple[Corner, ...]:
 
 
 def _corner(
-    name: str, bench: Testbench, base: Mapping[str, Any], decks: dict[tuple[Any, ...], Deck]
+    name: str, bench: Bench, base: Mapping[str, Any], decks: dict[tuple[Any, ...], Deck]
 ) -> Corner:
     deck = None
     if bench.netlist is not None:

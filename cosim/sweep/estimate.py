@@ -3,8 +3,14 @@
 from dataclasses import dataclass
 
 from cosim.capture import make_plan
-from cosim.probe_run import estimate_run
+from cosim.circuit.deck import Deck
+from cosim.probe_run import Estimate, estimate_run
+from cosim.readout import readout_frequency
+from cosim.readout_chain import make_inquiry
+from cosim.readout_output import make_readout_plan
+from cosim.readout_probe import estimate_readout
 from cosim.sweep.plan import SweepPlan
+from cosim.testbench import Bench, ReadoutBench, gate_bench
 
 # Bytes of a run's row in an archive: some sixty columns, and the texts (measured, 20,000 runs).
 _ROW = 1000.0
@@ -21,10 +27,11 @@ class SweepEstimate:
     runs : int
         How many runs.
     waveforms : int
-        How many simulations of the circuit: runs that differ in the qubit or the gate share one.
+        How many simulations of the circuit: runs that differ in the qubit or the gate share one,
+        readouts that differ in what is done with the records all that they simulate.
     time : float
-        Time of ngspice in s on one worker, both runs of each where there are two; NaN for
-        imported waveforms.
+        Time of ngspice in s on one worker, both runs of each where there are two, of a readout
+        all of its runs; NaN for imported waveforms.
     memory : float
         Memory for the vectors of one worker in byte, on top of the program's own.
     disk : float
@@ -62,10 +69,7 @@ def estimate_sweep(plan: SweepPlan) -> SweepEstimate:
     rows = _ROW * runs
     if bench.netlist is None:
         return SweepEstimate(runs, waveforms, float("nan"), 0.0, rows)
-    made = make_plan(bench, plan.corners[0].deck)
-    single = estimate_run(made, floor=bench.accuracy.floor)
-    carrier = bench.drive.carrier if isinstance(bench.drive.carrier, float) else 0.0
-    envelope = _SAMPLE * _PER_PERIOD * carrier * made.request.stop
+    single, envelope = _of_run(bench, plan.corners[0].deck)
     keep = plan.table.report.keep
     whole = runs if keep == "all" else min(runs, keep)
     return SweepEstimate(
@@ -75,3 +79,15 @@ def estimate_sweep(plan: SweepPlan) -> SweepEstimate:
         single.memory,
         rows + envelope * runs + single.disk * whole,
     )
+
+
+def _of_run(bench: Bench, deck: Deck | None) -> tuple[Estimate, float]:
+    """Give what one run takes, and the size of its envelope in byte."""
+    if isinstance(bench, ReadoutBench):
+        asked = make_readout_plan(bench, readout_frequency(bench), deck)
+        return estimate_readout(bench, asked, make_inquiry(bench, asked)), 0.0
+    bench = gate_bench(bench)
+    made = make_plan(bench, deck)
+    carrier = bench.drive.carrier if isinstance(bench.drive.carrier, float) else 0.0
+    envelope = _SAMPLE * _PER_PERIOD * carrier * made.request.stop
+    return estimate_run(made, floor=bench.accuracy.floor), envelope

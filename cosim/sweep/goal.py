@@ -2,6 +2,7 @@
 
 import math
 from dataclasses import dataclass
+from typing import TypeVar
 
 import numpy as np
 
@@ -9,6 +10,11 @@ from cosim.errors import InputError, near_names
 from cosim.sweep.batches import DONE
 from cosim.sweep.columns import Table
 from cosim.waveform import FloatArray
+
+ASSIGNMENT_ERROR = "assignment_error"
+"""Column that ranks the runs of a readout."""
+
+Number = TypeVar("Number", float, FloatArray)
 
 
 @dataclass(frozen=True, slots=True)
@@ -24,14 +30,14 @@ class Goal:
         the better the smaller it is.
     limit : float
         What the metric may be at most; NaN where nothing is asked for.
-    error_column : str
-        Column with the error bar of `column`; empty where there is none.
+    error_columns : tuple of str
+        Columns whose sum is the error bar of `column`; those that the table has not add nothing.
     """
 
     column: str = "free_frame.average_gate_fidelity"
     complement: bool = True
     limit: float = math.nan
-    error_column: str = "free_frame.error_bar"
+    error_columns: tuple[str, ...] = ("free_frame.error_bar",)
 
     def __post_init__(self) -> None:
         if math.isinf(self.limit):
@@ -44,6 +50,10 @@ class Goal:
         name = {"average_gate_fidelity": "F_avg", "process_fidelity": "F_pro"}.get(name, name)
         words = f"infidelity 1 - {name}" if self.complement else name.replace("_", " ")
         return f"{words}, {view.replace('_', ' ')}" if dot else words
+
+    def metric(self, value: Number) -> Number:
+        """Give the metric of a value of the column, or of several."""
+        return 1.0 - value if self.complement else value
 
 
 def make_goal(column: str, limit: float = math.nan) -> Goal:
@@ -68,8 +78,10 @@ def make_goal(column: str, limit: float = math.nan) -> Goal:
     view, dot, name = column.rpartition(".")
     bars = {"average_gate_fidelity": "error_bar", "process_fidelity": "process_error_bar"}
     if name in bars:
-        return Goal(column, True, limit, f"{view}{dot}{bars[name]}")
-    return Goal(column, False, limit, "")
+        return Goal(column, True, limit, (f"{view}{dot}{bars[name]}",))
+    # What the time step does to it, and of counted decisions what chance does.
+    own = ("numerical_floor", "standard_error") if column == ASSIGNMENT_ERROR else ()
+    return Goal(column, False, limit, own)
 
 
 def judged(table: Table, goal: Goal) -> tuple[FloatArray, FloatArray]:
@@ -106,8 +118,11 @@ def judged(table: Table, goal: Goal) -> tuple[FloatArray, FloatArray]:
         )
     values = table[goal.column].astype(float)
     done = np.asarray(table["status"] == DONE, dtype=bool) & np.isfinite(values)
-    metric = np.where(done, 1.0 - values if goal.complement else values, np.nan)
+    metric = np.where(done, goal.metric(values), np.nan)
+    found = [table[name].astype(float) for name in goal.error_columns if name in numbers]
     bars = np.full(metric.shape, np.nan)
-    if goal.error_column in numbers:
-        bars = np.where(done, table[goal.error_column].astype(float), np.nan)
+    if found:
+        # A number that does not exist adds nothing, unless there is none at all.
+        there = done & np.isfinite(found).any(axis=0)
+        bars = np.where(there, np.nansum(found, axis=0), np.nan)
     return metric, bars

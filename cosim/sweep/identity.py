@@ -7,6 +7,7 @@ does not depend on the process, the folder, or on what else the sweep holds.
 
 import hashlib
 import json
+import math
 from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
@@ -15,7 +16,7 @@ from typing import Any
 from cosim.archive.layout import SCHEMA_VERSION
 from cosim.circuit.deck import Deck
 from cosim.errors import TestbenchError
-from cosim.testbench import Testbench
+from cosim.testbench import Bench, Testbench
 
 # Names and places of files, whose content counts, and what bears on no number: the wall-clock
 # limit of a run that ended, and how much of the deck its record keeps.
@@ -43,6 +44,27 @@ _OF_WAVEFORM = frozenset(
     }
 )
 _WAVEFORM_TABLES = frozenset({"netlist", "stimulus", "waveform"})
+# Of a readout the other way round, since nearly all that it is said to be is simulated: the
+# resonator's answers are the deck's source, the window and the seed are those of its noise. These
+# keys are used on the records only, as `cosim.readout.run_readout` takes them from
+# `simulate_readout`. The converter's rate is none of them: the records' grid follows from it. A
+# comparator's decisions are simulated with all of them.
+_OF_RECORDS = frozenset(
+    {
+        "readout.weights",
+        "readout.adc_bits",
+        "readout.adc_full_scale",
+        "readout.adc_cycles",
+        "readout.preparation_error",
+        "readout.shots",
+        "readout.records",
+        "accuracy.reference",
+        "accuracy.noise_samples",
+        "accuracy.noise_seed",
+    }
+)
+# Of these it is simulated whether there are such changes of state, and judged how often they come.
+_OF_CHANGES = ("readout.t1", "readout.thermal_population")
 
 
 @dataclass(frozen=True, slots=True)
@@ -62,7 +84,7 @@ class Files:
     line: tuple[str, ...]
 
 
-def files_of(bench: Testbench, deck: Deck | None) -> Files:
+def files_of(bench: Bench, deck: Deck | None) -> Files:
     """Hash the files that a testbench reads.
 
     Parameters
@@ -85,17 +107,20 @@ def files_of(bench: Testbench, deck: Deck | None) -> Files:
     if deck is not None:
         data = tuple(file.sha256 for file in deck.data_files)
         waveform["deck"] = (*(file.sha256 for file in deck.files), *data)
-    if bench.waveform is not None:
-        waveform["waveform"] = (_sha256(bench, bench.waveform.file),)
     for number, stimulus in enumerate(bench.stimulus, start=1):
         name = getattr(stimulus, "file", None)
         if name is not None:
             waveform[f"stimulus.{number}"] = (_sha256(bench, name),)
-    line = () if bench.drive.line is None else (_sha256(bench, bench.drive.line),)
+    line: tuple[str, ...] = ()
+    if isinstance(bench, Testbench):
+        if bench.waveform is not None:
+            waveform["waveform"] = (_sha256(bench, bench.waveform.file),)
+        if bench.drive.line is not None:
+            line = (_sha256(bench, bench.drive.line),)
     return Files(waveform, line)
 
 
-def _sha256(bench: Testbench, name: str) -> str:
+def _sha256(bench: Bench, name: str) -> str:
     path = Path(bench.folder) / Path(name).expanduser()
     try:
         return hashlib.sha256(path.read_bytes()).hexdigest()
@@ -123,11 +148,11 @@ def identity_keys(
     -------
     tuple of (str, str, str)
         In hexadecimal: of all that determines the result; of what determines the waveform at the
-        probe; of the deck as read, without its parameters.
+        probe, of a readout its records; of the deck as read, without its parameters.
     """
     kept = {key: value for key, value in flat.items() if not bears_on_nothing(key)}
-    waveform = {key: value for key, value in kept.items() if _is_of_waveform(key)}
-    rest = {key: value for key, value in kept.items() if key not in waveform}
+    waveform = _simulated(kept)
+    rest = {key: value for key, value in kept.items() if key not in waveform or key in _OF_CHANGES}
     waveform_key = _hash([SCHEMA_VERSION, waveform, dict(files.waveform), dict(mismatch)])
     identity = _hash([waveform_key, rest, files.line])
     sections, mode = flat.get("netlist.sections"), flat.get("netlist.compatibility")
@@ -148,6 +173,17 @@ def bears_on_nothing(key: str) -> bool:
     bool
     """
     return key in _IGNORED or (key.startswith("stimulus.") and key.endswith(".file"))
+
+
+def _simulated(kept: Mapping[str, Any]) -> dict[str, Any]:
+    """Give the part of the testbench that says what is simulated."""
+    if "readout.window" not in kept:
+        return {key: value for key, value in kept.items() if _is_of_waveform(key)}
+    if kept["readout.decision"] is not None:
+        return dict(kept)
+    found = {key: value for key, value in kept.items() if key not in _OF_RECORDS}
+    t1, population = (kept[key] for key in _OF_CHANGES)
+    return {**found, "readout.t1": math.isfinite(t1), "readout.thermal_population": population > 0}
 
 
 def _is_of_waveform(key: str) -> bool:

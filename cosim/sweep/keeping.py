@@ -8,6 +8,7 @@ import numpy as np
 
 from cosim import archive
 from cosim.sweep.batches import DONE
+from cosim.sweep.goal import ASSIGNMENT_ERROR, make_goal
 from cosim.sweep.record import SWEEP_KINDS, SweepRecord
 from cosim.sweep.work import ALL
 
@@ -48,7 +49,7 @@ def read_ranks(path: str | os.PathLike[str], metric: str) -> dict[str, Any]:
     path : path
         The archive.
     metric : str
-        Column of the fidelity that ranks the runs.
+        Column that ranks the runs.
 
     Returns
     -------
@@ -67,7 +68,7 @@ def read_ranks(path: str | os.PathLike[str], metric: str) -> dict[str, Any]:
 
 
 def metric_of(record: SweepRecord) -> str:
-    """Give the column of the fidelity that ranks the runs of a sweep.
+    """Give the column that ranks the runs of a sweep.
 
     Parameters
     ----------
@@ -78,6 +79,8 @@ def metric_of(record: SweepRecord) -> str:
     -------
     str
     """
+    if record.fidelity == ASSIGNMENT_ERROR:
+        return ASSIGNMENT_ERROR
     return f"{record.fidelity}.average_gate_fidelity"
 
 
@@ -105,7 +108,7 @@ def whole_numbers(table: Mapping[str, Any], metric: str, keep: int) -> set[int]:
     table : mapping of ndarray, each of shape (runs,)
         The columns "id", "status" and, if a run is done, the metric.
     metric : str
-        Column of the fidelity that ranks the runs.
+        Column that ranks the runs.
     keep : int
         How many of the worst.
 
@@ -119,7 +122,7 @@ def whole_numbers(table: Mapping[str, Any], metric: str, keep: int) -> set[int]:
     numbers, done = table["id"], table["status"] == DONE
     whole = set(numbers[~done].tolist())
     if metric in table and keep > 0:
-        losses = np.where(done, 1.0 - table[metric], -np.inf)
+        losses = np.where(done, make_goal(metric).metric(table[metric]), -np.inf)
         order = np.argsort(-losses, kind="stable")[:keep]
         whole |= set(numbers[order][np.isfinite(losses[order])].tolist())
     return whole

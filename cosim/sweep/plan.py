@@ -21,7 +21,7 @@ from cosim.sweep.samples import (
     sample_seed,
 )
 from cosim.sweep.table import SweepTable
-from cosim.testbench import Testbench
+from cosim.testbench import Bench, ReadoutBench
 from cosim.waveform import FloatArray
 
 _SEED = NumberKey("netlist.seed", "netlist", "seed", whole=True)
@@ -47,7 +47,8 @@ class SweepRun:
         "corner", dotted keys, "sample", "perturbed" -> name or number in SI units.
     waveform_key : str
         SHA-256 of what determines the circuit's waveform: runs that differ in the qubit, the line
-        behind the probe or the gate only share it.
+        behind the probe or the gate only share it; of a readout those that differ in what is done
+        with its records.
     deck_key : str
         SHA-256 of the deck as read, without its parameters.
     """
@@ -100,6 +101,11 @@ class SweepPlan:
         if self.table.monte_carlo is not None:
             return self.table.monte_carlo.runs
         return 1 + 2 * len(self.perturbations)
+
+    @property
+    def is_readout(self) -> bool:
+        """Whether its runs are readouts, and not gates."""
+        return isinstance(self.corners[0].bench, ReadoutBench)
 
     @property
     def columns(self) -> tuple[str, ...]:
@@ -162,7 +168,7 @@ class SweepPlan:
         seed = 1 + int(identity[:16], 16) % (2**31 - 1)
         return SweepRun(number, identity, seed, values, waveform_key, deck_key)
 
-    def testbench(self, run: SweepRun) -> Testbench:
+    def testbench(self, run: SweepRun) -> Bench:
         """Give the testbench of one run, ready to be run.
 
         Parameters
@@ -172,7 +178,7 @@ class SweepPlan:
 
         Returns
         -------
-        Testbench
+        Bench
             With everything set and drawn; without [sweep].
 
         Raises
@@ -314,9 +320,7 @@ class SweepPlan:
         centers: dict[str, float] = self._kept[point]
         return centers
 
-    def _devices(
-        self, corner: Corner, bench: Testbench, changes: list[Change]
-    ) -> tuple[Mosfet, ...]:
+    def _devices(self, corner: Corner, bench: Bench, changes: list[Change]) -> tuple[Mosfet, ...]:
         """Give the transistors, whose sizes may follow from the parameters of the run."""
         of_deck = [(key.path, value) for key, value in changes if key.item]
         point = ("devices", corner.name, tuple(of_deck))

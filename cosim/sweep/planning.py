@@ -16,19 +16,19 @@ from cosim.sweep.axes import (
 from cosim.sweep.plan import SweepPlan
 from cosim.sweep.samples import unit_samples
 from cosim.sweep.table import read_sweep
-from cosim.testbench import Testbench
+from cosim.testbench import Bench, Testbench
 
 # Functions whose values ngspice draws from the deck's seed.
 _RANDOM = ("gauss(", "unif(", "limit(")
 _MOST_POINTS = 64  # points of corners and grid whose extreme samples are looked at
 
 
-def make_sweep(bench: Testbench) -> SweepPlan:
+def make_sweep(bench: Bench) -> SweepPlan:
     """Make the plan of a testbench with a table [sweep]; nothing is simulated.
 
     Parameters
     ----------
-    bench : Testbench
+    bench : Bench
         The testbench.
 
     Returns
@@ -45,7 +45,7 @@ def make_sweep(bench: Testbench) -> SweepPlan:
     """
     table = read_sweep(bench)
     where = f"{bench.source or 'the testbench'}, table [sweep]"
-    if bench.qubit.kind == "operators":
+    if isinstance(bench, Testbench) and bench.qubit.kind == "operators":
         raise TestbenchError(
             f"{where}: operators given in Python have no identity that a sweep could resume by",
             hint="call cosim.run in a loop of your own",

@@ -10,13 +10,15 @@ from math import nan
 from cosim.archive.layout import SCHEMA_VERSION
 from cosim.circuit.confidential import kept_files
 from cosim.circuit.deck import DeckFile
+from cosim.decision_result import DECISION_KINDS
 from cosim.decks import roots_of
 from cosim.errors import ArchiveError
+from cosim.readout_result import READOUT_KINDS
 from cosim.record import package_versions
 from cosim.result import KINDS
 from cosim.sweep.identity import bears_on_nothing
 from cosim.sweep.plan import SweepPlan
-from cosim.testbench import Testbench
+from cosim.testbench import Bench
 from cosim.waveform import Waveform
 
 _SHOWN = 5  # differing keys that a message names
@@ -37,9 +39,9 @@ class SweepRecord:
     units : dict of str
         Unit by column, "" for texts and plain numbers.
     fidelity : str
-        Which of the three fidelities ranks the runs.
+        Which of the three fidelities ranks the runs; "assignment_error" of a readout.
     limit : float
-        Of the infidelity, for the yield; NaN without one.
+        Of the infidelity or assignment error, for the yield; NaN without one.
     keep : str
         How many of the worst runs keep their raw waveforms, or "all".
     digest : str
@@ -106,19 +108,21 @@ class FailedRun:
 # Classes by the tag that the archive of a sweep keeps.
 SWEEP_KINDS: dict[str, type] = {
     **KINDS,
+    **READOUT_KINDS,
+    **DECISION_KINDS,
     SweepRecord.__name__: SweepRecord,
     FailedRun.__name__: FailedRun,
 }
 
 
-def make_sweep_record(plan: SweepPlan, bench: Testbench) -> SweepRecord:
+def make_sweep_record(plan: SweepPlan, bench: Bench) -> SweepRecord:
     """Write down a plan.
 
     Parameters
     ----------
     plan : SweepPlan
         The plan.
-    bench : Testbench
+    bench : Bench
         The testbench it was made of.
 
     Returns

@@ -8,17 +8,22 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from cosim import archive
+from cosim.dispatch import run
 from cosim.errors import ArchiveError, InputError, SimulationError
-from cosim.gate import run_gate
-from cosim.result import GateResult
 from cosim.sweep.batches import DONE
+from cosim.sweep.goal import ASSIGNMENT_ERROR, judged, make_goal
 from cosim.sweep.plan import SweepPlan
 from cosim.sweep.planning import make_sweep
 from cosim.sweep.record import SWEEP_KINDS, SweepRecord, check_same_plan, make_sweep_record
-from cosim.testbench import gate_bench, load_testbench, make_testbench
+from cosim.sweep.simulated import AnyResult
+from cosim.testbench import load_testbench, make_testbench
 
 # Two computers round differently in their mathematical libraries; anything larger is a difference.
 ROUNDING = 1e-9
+# Newton's iteration in ngspice makes of that a change of a waveform of 1e-6 and of the density of
+# injected noise, a difference of two runs, of 1e-4. A rare assignment error changes by up to ten
+# times as much, in parts of itself.
+READOUT_ROUNDING = 1e-3
 
 VIEWS = ("as_simulated", "free_frame", "calibrated")
 
@@ -32,18 +37,21 @@ class Repetition:
     number : int
         Its number in the archive.
     difference : float
-        Largest difference of the three average gate fidelities to the archived ones; NaN where
-        one of two is none, or the repetition failed.
+        Largest difference of the three average gate fidelities to the archived ones, or that of
+        the assignment error; NaN where one of two is none, or the repetition failed.
     allowed : float
         What is put down to rounding, or to the numerical errors that the error bars cover.
     error : str
         Message of a repetition that failed; mostly empty.
+    what : str
+        What is compared, for people.
     """
 
     number: int
     difference: float
     allowed: float
     error: str = ""
+    what: str = "fidelities"
 
     @property
     def same(self) -> bool:
@@ -103,10 +111,10 @@ def archived_plan(
     """
     record = read_record(path)
     if testbench is not None:
-        bench = gate_bench(load_testbench(testbench))
+        bench = load_testbench(testbench)
     else:
         tables = tomllib.loads(record.testbench)
-        bench = gate_bench(make_testbench(tables, folder=record.folder))
+        bench = make_testbench(tables, folder=record.folder)
         bench = replace(bench, source=record.source, circuit=record.circuit)
     plan = make_sweep(bench)
     check_same_plan(record, make_sweep_record(plan, bench), os.fspath(path))
@@ -118,7 +126,7 @@ def rerun(
     number: int,
     *,
     testbench: str | os.PathLike[str] | None = None,
-) -> GateResult:
+) -> AnyResult:
     """Make one run of an archived sweep again, alone, with all that a single run gives.
 
     Parameters
@@ -132,7 +140,7 @@ def rerun(
 
     Returns
     -------
-    GateResult
+    GateResult, ReadoutResult or DecisionResult
 
     Raises
     ------
@@ -146,10 +154,10 @@ def rerun(
     return _rerun(archived_plan(path, testbench), number)
 
 
-def _rerun(plan: SweepPlan, number: int) -> GateResult:
+def _rerun(plan: SweepPlan, number: int) -> AnyResult:
     if not 1 <= number <= len(plan):
         raise InputError(f"the sweep has the runs 1 to {len(plan)}, there is no run {number}")
-    return run_gate(plan.testbench(plan.run(number - 1)))
+    return run(plan.testbench(plan.run(number - 1)))
 
 
 def repeat_sample(
@@ -185,25 +193,35 @@ def repeat_sample(
         If the testbench or the deck cannot be read.
     """
     plan = archived_plan(path, testbench)
-    bars = [f"{view}.error_bar" for view in VIEWS]
-    columns = [f"{view}.average_gate_fidelity" for view in VIEWS]
+    goals = [make_goal(column) for column in _compared(read_record(path))]
+    columns = [goal.column for goal in goals]
     table = archive.read_table(path, columns=("id", "status"))
     if not table or not (table["status"] == DONE).any():
         return ()
-    table = archive.read_table(path, columns=("id", "status", *columns, *bars))
+    table = archive.read_table(path)
     done = np.flatnonzero(table["status"] == DONE)
     chosen = np.random.default_rng(seed).choice(done, min(count, done.size), replace=False)
+    what = "assignment errors" if plan.is_readout else "fidelities"
+    bars = np.array([judged(table, goal)[1] for goal in goals])
     found = []
     for at in sorted(chosen.tolist()):
         number = int(table["id"][at])
-        wide = float(np.nanmax([ROUNDING, *(float(table[name][at]) for name in bars)]))
+        kept = [float(table[column][at]) for column in columns]
+        rounding = READOUT_ROUNDING * kept[0] if plan.is_readout else ROUNDING
+        wide = float(np.nanmax([ROUNDING, rounding, *bars[:, at]]))
         try:
-            result = _rerun(plan, number)
+            cells, _ = archive.cells_of(_rerun(plan, number))
         except (InputError, SimulationError) as error:
             found.append(Repetition(number, math.nan, wide, str(error)))
             continue
-        made = [getattr(result, view).average_gate_fidelity for view in VIEWS]
-        kept = [float(table[column][at]) for column in columns]
+        made = [float(cells[column]) for column in columns]
         # The greatest of numbers with a NaN among them is NaN, and then they are not the same.
-        found.append(Repetition(number, float(np.max(np.abs(np.subtract(made, kept)))), wide))
+        difference = float(np.max(np.abs(np.subtract(made, kept))))
+        found.append(Repetition(number, difference, wide, what=what))
     return tuple(found)
+
+
+def _compared(record: SweepRecord) -> tuple[str, ...]:
+    if record.fidelity == ASSIGNMENT_ERROR:
+        return (ASSIGNMENT_ERROR,)
+    return tuple(f"{view}.average_gate_fidelity" for view in VIEWS)

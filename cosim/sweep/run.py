@@ -18,18 +18,23 @@ from cosim.archive import Row
 from cosim.errors import ArchiveError
 from cosim.sweep.batches import DONE, Batch, Outcome, Task, take_slice
 from cosim.sweep.engine import Engine, run_batches
+from cosim.sweep.goal import make_goal
 from cosim.sweep.keeping import keep_of, kept_whole, metric_of, read_ranks
 from cosim.sweep.local import local_engine
 from cosim.sweep.plan import SweepPlan
 from cosim.sweep.planning import make_sweep
 from cosim.sweep.record import SWEEP_KINDS, SweepRecord, check_same_plan, make_sweep_record
 from cosim.sweep.work import ALL, Shared, failed_row, run_batch
-from cosim.testbench import Bench, Testbench, gate_bench, load_testbench
+from cosim.testbench import Bench, load_testbench
 
 FLUSH_INTERVAL = 2.0  # s: what is lost at most when the process is killed
 FLUSH_ROWS = 256
 LARGEST_BATCH = 16
 LARGEST_FAMILY = 256  # runs that share a waveform; of more, it is simulated once for each so many
+# A readout takes seconds and shares no load of its deck with another, so that a batch gains nothing
+# but loses more with its worker; judging what is shared takes a second or so too.
+LARGEST_READOUT_BATCH = 1
+LARGEST_READOUT_FAMILY = 16
 BATCHES_PER_SLOT = 4  # few enough runs in a batch that the slots end at about the same time
 
 
@@ -73,7 +78,7 @@ class SweepState:
 
 
 def run_sweep(
-    bench: Testbench | str | os.PathLike[str],
+    bench: Bench | str | os.PathLike[str],
     path: str | os.PathLike[str],
     *,
     engine: Engine | None = None,
@@ -86,8 +91,8 @@ def run_sweep(
 
     Parameters
     ----------
-    bench : Testbench or path
-        A testbench with a table [sweep], or its TOML file.
+    bench : Bench or path
+        A testbench, of gates or of readouts, with a table [sweep], or its TOML file.
     path : path
         The archive, NAME.h5. While the sweep runs its results stand in NAME.h5.parts beside it
         and can be read at any time.
@@ -117,7 +122,7 @@ def run_sweep(
     SimulationError
         If the engine fails; a run that fails is a row of the archive, and no error.
     """
-    bench = gate_bench(bench if isinstance(bench, Bench) else load_testbench(bench))
+    bench = bench if isinstance(bench, Bench) else load_testbench(bench)
     plan = make_sweep(bench)
     record = make_sweep_record(plan, bench)
     target = Path(path)
@@ -199,7 +204,8 @@ class _Desk:
         self.on_progress = on_progress
         self.keep = keep_of(record)
         self.metric = metric_of(record)
-        self.worst: list[float] = []  # A heap of the infidelities of the runs that are kept whole.
+        self.goal = make_goal(self.metric)
+        self.worst: list[float] = []  # A heap of the metric of the runs that are kept whole.
         self.done: set[int] = set()  # Numbers that are not to be run again.
         self.finished = 0
         self.failed: Counter[str] = Counter()
@@ -215,22 +221,22 @@ class _Desk:
         table = read_ranks(self.path, self.metric)
         if not table:
             return
-        fidelities = table.get(self.metric)
+        values = table.get(self.metric)
         for at, (number, status) in enumerate(
             zip(table["id"].tolist(), table["status"].tolist(), strict=True)
         ):
             if status == DONE:
-                self.rank(1.0 - float(fidelities[at]) if fidelities is not None else math.nan)
+                self.rank(math.nan if values is None else self.goal.metric(float(values[at])))
             if mine is not None and number not in mine:
                 continue
             if status == DONE or not retry_failed:
                 self.done.add(number)
                 self.count(status)
 
-    def rank(self, infidelity: float) -> None:
+    def rank(self, loss: float) -> None:
         """Take a finished run into the heap of the worst, if it is one."""
-        if self.keep > 0 and not math.isnan(infidelity):
-            heapq.heappush(self.worst, infidelity)
+        if self.keep > 0 and not math.isnan(loss):
+            heapq.heappush(self.worst, loss)
             if len(self.worst) > self.keep:
                 heapq.heappop(self.worst)
 
@@ -260,8 +266,11 @@ class _Desk:
         # Jobs that divide the plan must cut it alike, whatever each of them runs on.
         slots = part[1] if part[1] > 1 else max(1, engine.slots())
         size = math.ceil(len(self.plan) / (BATCHES_PER_SLOT * slots))
-        families = self.plan.groups(LARGEST_FAMILY)
-        cut = partial(self.cut, min(LARGEST_BATCH, size))
+        most, family = LARGEST_BATCH, LARGEST_FAMILY
+        if self.plan.is_readout:
+            most, family = LARGEST_READOUT_BATCH, LARGEST_READOUT_FAMILY
+        families = self.plan.groups(family)
+        cut = partial(self.cut, min(most, size))
         return take_slice(chain.from_iterable(map(cut, families)), *part)
 
     def cut(self, size: int, group: tuple[int, ...]) -> Iterator[tuple[int, ...]]:
@@ -283,14 +292,14 @@ class _Desk:
             if numbers:
                 shared = Shared(
                     self.plan.only(numbers),
-                    self.record.fidelity,
+                    self.metric,
                     self.keep,
                     self.threshold(),
                 )
                 yield Batch(run_batch, tuple(Task(number + 1) for number in numbers), shared)
 
     def threshold(self) -> float:
-        """Give the infidelity from which a run is among the worst, as far as is known."""
+        """Give the metric from which a run is among the worst, as far as is known."""
         if self.keep == ALL or len(self.worst) < self.keep:
             return -math.inf
         return self.worst[0] if self.worst else math.inf
@@ -318,7 +327,7 @@ class _Desk:
             for row in rows:
                 self.count(row.info.status)
                 if row.info.status == DONE:
-                    self.rank(1.0 - float(row.cells[self.metric]))
+                    self.rank(self.goal.metric(float(row.cells[self.metric])))
             self.made += len(rows)
             if not self.first[0]:
                 self.first = (self.made, time.monotonic())

@@ -1,12 +1,13 @@
 """The table [sweep] of a testbench: corners, grids, Monte Carlo, mismatch, perturbations."""
 
 from collections.abc import Mapping
-from dataclasses import dataclass, field, fields
+from dataclasses import dataclass, fields
 from typing import Annotated, Any, Literal
 
 from cosim.config import Quantity, check_keys, numbered, read_table
 from cosim.errors import InputError, TestbenchError
-from cosim.testbench import Testbench
+from cosim.sweep.goal import ASSIGNMENT_ERROR
+from cosim.testbench import Bench, ReadoutBench
 
 Raw = float | int | str
 """A number or a text with a unit: which unit is due, the key beside it says."""
@@ -17,7 +18,6 @@ SHORTHANDS = {
     "parameters": "netlist.parameters",
     "instances": "netlist.instances",
     "temperature": "netlist.temperature",
-    "thermal_population": "qubit.thermal_population",
 }
 
 
@@ -204,22 +204,23 @@ class ReportTable:
 
     Parameters
     ----------
-    fidelity : "as_simulated", "free_frame" or "calibrated"
-        Which of the three fidelities ranks the runs.
+    fidelity : "as_simulated", "free_frame", "calibrated" or "assignment_error"
+        Which of the three fidelities ranks the runs of a gate; the last of a readout.
     limit : float or None
-        Of the infidelity 1 - F_avg, for the yield.
+        Of the infidelity 1 - F_avg, or of the assignment error, for the yield.
     keep : int or "all"
         How many of the worst runs keep their raw waveforms.
     """
 
-    fidelity: Literal["as_simulated", "free_frame", "calibrated"] = "free_frame"
+    fidelity: Literal["as_simulated", "free_frame", "calibrated", "assignment_error"]
     limit: float | None = None
     keep: int | Literal["all"] = 3
 
     def __post_init__(self) -> None:
         if self.limit is not None and not 0.0 < self.limit < 1.0:
             raise InputError(
-                f"key 'limit': wanted an infidelity between 0 and 1, got {self.limit:g}"
+                "key 'limit': wanted an infidelity, or an assignment error, between 0 and 1, got "
+                f"{self.limit:g}"
             )
         if self.keep != "all" and self.keep < 0:
             raise InputError(f"key 'keep': wanted a number from 0, or \"all\", got {self.keep}")
@@ -245,20 +246,20 @@ class SweepTable:
         What is judged and kept; it bears on no run.
     """
 
+    report: ReportTable
     corners: tuple[CornerTable, ...] = ()
     grid: tuple[GridTable, ...] = ()
     monte_carlo: MonteCarloTable | None = None
     mismatch: MismatchTable | None = None
     one_at_a_time: tuple[PerturbationTable, ...] = ()
-    report: ReportTable = field(default_factory=ReportTable)
 
 
-def read_sweep(bench: Testbench) -> SweepTable:
+def read_sweep(bench: Bench) -> SweepTable:
     """Read the table [sweep] of a testbench.
 
     Parameters
     ----------
-    bench : Testbench
+    bench : Bench
         The testbench.
 
     Returns
@@ -283,7 +284,7 @@ def read_sweep(bench: Testbench) -> SweepTable:
             '"100 kHz"]',
         )
     found = SweepTable(
-        corners=_corners(table.get("corners", {}), f"{file}, table [sweep.corners"),
+        corners=_corners(table.get("corners", {}), bench, f"{file}, table [sweep.corners"),
         grid=_array(table, "grid", GridTable, file),
         monte_carlo=_monte_carlo(table["monte_carlo"], file) if "monte_carlo" in table else None,
         mismatch=(
@@ -292,12 +293,7 @@ def read_sweep(bench: Testbench) -> SweepTable:
             else None
         ),
         one_at_a_time=_array(table, "one_at_a_time", PerturbationTable, file),
-        report=read_table(
-            {name: table[name] for name in own if name in table},
-            ReportTable,
-            file=file,
-            name="sweep",
-        ),
+        report=_report({name: table[name] for name in own if name in table}, bench, file),
     )
     if found.mismatch is not None and found.monte_carlo is None:
         raise TestbenchError(
@@ -338,7 +334,24 @@ def _monte_carlo(table: object, file: str) -> MonteCarloTable:
     return read_table(table, MonteCarloTable, file=file, name="sweep.monte_carlo")
 
 
-def _corners(tables: object, where: str) -> tuple[CornerTable, ...]:
+def _report(table: Mapping[str, Any], bench: Bench, file: str) -> ReportTable:
+    readout = isinstance(bench, ReadoutBench)
+    default = ASSIGNMENT_ERROR if readout else "free_frame"
+    report: ReportTable = read_table(
+        {"fidelity": default, **table}, ReportTable, file=file, name="sweep"
+    )
+    if readout != (report.fidelity == ASSIGNMENT_ERROR):
+        kind = "readout, which is ranked by its assignment error" if readout else "gate"
+        raise TestbenchError(
+            f"{file}, table [sweep], key 'fidelity': '{report.fidelity}' is not one of a {kind}",
+            hint="leave it out",
+        )
+    return report
+
+
+def _corners(tables: object, bench: Bench, where: str) -> tuple[CornerTable, ...]:
+    population = f"{'readout' if isinstance(bench, ReadoutBench) else 'qubit'}.thermal_population"
+    shorthands = {**SHORTHANDS, "thermal_population": population}
     if not isinstance(tables, Mapping):
         raise TestbenchError(f"{where}]: wanted tables [sweep.corners.NAME], got {tables!r}")
     found = []
@@ -347,8 +360,8 @@ def _corners(tables: object, where: str) -> tuple[CornerTable, ...]:
             raise TestbenchError(f"{where}.{name}]: wanted a table, got {table!r}")
         settings: list[tuple[str, object]] = []
         for key, value in table.items():
-            if key in SHORTHANDS:
-                settings.append((SHORTHANDS[key], value))
+            if key in shorthands:
+                settings.append((shorthands[key], value))
             elif "." not in key and isinstance(value, Mapping):
                 # qubit.t1 = "1 ms" without quotes around the key is a table within a table.
                 settings.extend((f"{key}.{inner}", item) for inner, item in value.items())

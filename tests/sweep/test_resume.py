@@ -177,7 +177,7 @@ time_unit = "s"
     toml = write_bench(
         tmp_path, LEVELS, ("[drive]", table), deck=deck.replace("{level}*", "{level}*v(g)*")
     )
-    original = work._shots
+    original = work.simulate_groups
     calls = []
 
     def change_then_simulate(plan: object, groups: Sequence[object]) -> object:
@@ -186,7 +186,7 @@ time_unit = "s"
             (tmp_path / "gain.csv").write_bytes(text + b"\n26e-9,1\n")
         return original(plan, groups)  # type: ignore[arg-type]
 
-    monkeypatch.setattr(work, "_shots", change_then_simulate)
+    monkeypatch.setattr(work, "simulate_groups", change_then_simulate)
     path = tmp_path / "a.h5"
     state = run_sweep(toml, path, engine=HERE)
     assert (state.finished, state.failed) == (2, {"input error": 4})

@@ -11,7 +11,7 @@ from cosim import archive
 from cosim.capture import Plan
 from cosim.errors import TestbenchError
 from cosim.result import GateResult
-from cosim.sweep import work
+from cosim.sweep import simulated
 from cosim.sweep.planning import make_sweep
 from cosim.sweep.record import SWEEP_KINDS, FailedRun
 from cosim.sweep.run import run_sweep
@@ -36,14 +36,14 @@ pytestmark = pytest.mark.ngspice
 def captured(monkeypatch: pytest.MonkeyPatch) -> list[int]:
     """Count the simulations that are asked for, batch by batch."""
     counts: list[int] = []
-    original = work._Captures.__init__
+    original = simulated._Captures.__init__
 
-    def count(self: work._Captures, plans: Sequence[Plan]) -> None:
+    def count(self: simulated._Captures, plans: Sequence[Plan]) -> None:
         if plans:
             counts.append(len(plans))
         original(self, plans)
 
-    monkeypatch.setattr(work._Captures, "__init__", count)
+    monkeypatch.setattr(simulated._Captures, "__init__", count)
     return counts
 
 

@@ -64,7 +64,7 @@ def moved_one_at_a_time(
 def summary_of(
     table: Table, inputs: tuple[str, ...] = ("corner", R, C, "perturbed")
 ) -> SweepSummary:
-    return summarise(table, inputs, Goal(SETTLING, False, math.nan, "bar"))
+    return summarise(table, inputs, Goal(SETTLING, False, math.nan, ("bar",)))
 
 
 class TestOneAtATime:
@@ -353,7 +353,7 @@ class TestCorrelations:
             "x": x,
             "sample": np.arange(50),
         }
-        goal = Goal("leakage", False, math.nan, "bar")
+        goal = Goal("leakage", False, math.nan, ("bar",))
         found = summarise(table, ("x", "sample"), goal)
         assert found.correlations[0].resolved is False
         assert any("not resolved" in note for note in found.notes)

@@ -294,22 +294,22 @@ class TestBadInput:
 
 
 @pytest.mark.parametrize(
-    ("column", "label", "complement", "bar"),
+    ("column", "label", "complement", "bars"),
     [
-        (F_AVG, "infidelity 1 - F_avg, free frame", True, BAR),
+        (F_AVG, "infidelity 1 - F_avg, free frame", True, (BAR,)),
         (
             "calibrated.process_fidelity",
             "infidelity 1 - F_pro, calibrated",
             True,
-            "calibrated.process_error_bar",
+            ("calibrated.process_error_bar",),
         ),
-        ("leakage", "leakage", False, ""),
-        ("assignment_error", "assignment error", False, ""),
+        ("leakage", "leakage", False, ()),
+        ("assignment_error", "assignment error", False, ("numerical_floor", "standard_error")),
     ],
 )
-def test_goals(column: str, label: str, complement: bool, bar: str) -> None:
+def test_goals(column: str, label: str, complement: bool, bars: tuple[str, ...]) -> None:
     goal = make_goal(column, 0.5)
-    assert goal == Goal(column, complement, 0.5, bar)
+    assert goal == Goal(column, complement, 0.5, bars)
     assert goal.label == label
 
 

@@ -1,0 +1,108 @@
+"""A run of a few hundred points that tells what a whole readout will take."""
+
+import math
+from dataclasses import dataclass, replace
+
+from cosim.circuit.preparation import prepare
+from cosim.circuit.simulator import simulate_prepared
+from cosim.decision_noise import INJECTION, ROUNDS, SEEDS
+from cosim.probe_run import BYTES, COPIES, POINTS, Estimate
+from cosim.readout_chain import STATES, Inquiry
+from cosim.readout_decisions import COUNTED
+from cosim.readout_input import GROUND
+from cosim.readout_output import ReadoutPlan
+from cosim.testbench import ReadoutBench
+from cosim.voltage_noises import NetlistNoise
+
+# Transients with which a comparator's threshold is found, with which the noise is closed in on, and
+# those for each answer with a change of state (counted on the comparators of the tests).
+_THRESHOLD, _PILOTS, _PATH = 16, 16, 7
+# Bytes of a whole readout in an archive: what does not grow with the number of points.
+_RECORD = 3e5
+
+
+@dataclass(frozen=True, slots=True)
+class Transients:
+    """How many runs of the netlist a readout takes, as far as that is known beforehand.
+
+    Parameters
+    ----------
+    clean, noisy : int
+        Without noise and with it, at the step.
+    half : int
+        At half the step.
+    """
+
+    clean: int
+    noisy: int
+    half: int
+
+
+def transients_of(bench: ReadoutBench, inquiry: Inquiry) -> Transients:
+    """Count the runs of the netlist that a readout takes.
+
+    Parameters
+    ----------
+    bench : ReadoutBench
+        The testbench.
+    inquiry : Inquiry
+        What is asked.
+
+    Returns
+    -------
+    Transients
+        A chain that bends takes a few more; devices one by one take `noisy` as often as there are
+        devices; noise that proves to be stationary takes none.
+    """
+    noise = [one for one in bench.noise if isinstance(one, NetlistNoise)]
+    jumps = len(inquiry.jumps)
+    if bench.readout.decision is not None:
+        seeds = noise[0].seeds if noise else SEEDS
+        noisy = _PILOTS + 2 * (ROUNDS + COUNTED) * seeds
+        half = _THRESHOLD if bench.accuracy.floor else 0
+        return Transients(_THRESHOLD + _PATH * jumps, noisy, half)
+    weak = 3 if inquiry.answers is not None else 0
+    injected = sum(one.seeds for one in noise if one.method in ("auto", INJECTION))
+    clean = len(STATES) * (2 if noise else 1) + jumps + weak
+    return Transients(clean, injected, len(STATES) if bench.accuracy.floor else 0)
+
+
+def estimate_readout(bench: ReadoutBench, plan: ReadoutPlan, inquiry: Inquiry) -> Estimate:
+    """Run the first 200 points of a readout's |0>, and of its half step, and scale up.
+
+    Parameters
+    ----------
+    bench : ReadoutBench
+        The testbench.
+    plan : ReadoutPlan
+        The deck and the transient.
+    inquiry : Inquiry
+        What is asked.
+
+    Returns
+    -------
+    Estimate
+        From the deck's first points, and with noisy runs as long as clean ones.
+
+    Raises
+    ------
+    SimulationError, DeckError
+        If the simulator fails.
+    """
+    counts = transients_of(bench, inquiry)
+    time = (counts.clean + counts.noisy) * _time_of(plan, inquiry)
+    if counts.half:
+        time += counts.half * _time_of(plan.half_step(), inquiry)
+    points = math.ceil(plan.request.stop / plan.request.step)
+    vectors = 1 + len(plan.request.saves)
+    # The runs of a chain are kept until its records are read, those of a comparator are not.
+    kept = COPIES if bench.readout.decision is not None else COPIES + counts.clean
+    return Estimate(time, float(kept * BYTES * points * vectors), _RECORD)
+
+
+def _time_of(plan: ReadoutPlan, inquiry: Inquiry) -> float:
+    """Give the wall-clock time of a whole transient in s."""
+    request = plan.request
+    short = replace(request, stop=min(request.stop, POINTS * request.step))
+    result = simulate_prepared(prepare(inquiry.deck_of(plan, GROUND), short), short)
+    return result.wall_time * math.ceil(request.stop / request.step) / result.time.size
