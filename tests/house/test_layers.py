@@ -89,6 +89,8 @@ FLOORS = {
     "readout_terminal": 7,
     "decision_terminal": 7,
     "decision_figures": 7,
+    "result_show": 7,
+    "result_figures": 7,
     "sweep_cli": 7,
     "study_cli": 7,
     "sweep_show": 7,
