@@ -8,6 +8,7 @@ import numpy as np
 from cosim.circuit.bias import CleanRun
 from cosim.circuit.inventory import unobserved_elements
 from cosim.circuit.noise_parts import FLICKER, NoiseTemperatures
+from cosim.circuit.probe import Probe
 from cosim.circuit.standstill import RestingNoise, resting_noise
 from cosim.circuit.stationarity import LIMIT, Stationarity, check_stationarity
 from cosim.errors import SimulationError, TestbenchError
@@ -114,12 +115,8 @@ def choose_method(
         if moved > LIMIT:
             text += f"; a leading device's bias is {moved:.0%} off that of the run there"
         return Choice(FROZEN, "", _added(noise, resting, carrier_frequency, span, text))
-    reason, still_found = _at_rest(clean, noise, carrier_frequency, span)
-    if still_found is None and noise.method == STATIONARY:
-        raise TestbenchError(
-            f'[[noise]]{_named(noise)} with method = "stationary": {reason}',
-            hint='Say method = "injection", which holds for any circuit.',
-        )
+    (probe,) = clean.probes
+    reason, still_found = noise_at_rest(clean, probe, noise, carrier_frequency, span)
     if still_found is None:
         return Choice(INJECTION, reason, None)
     return Choice(STATIONARY, reason, _added(noise, still_found, carrier_frequency, span, ""))
@@ -147,11 +144,62 @@ def _named(noise: NetlistNoise) -> str:
     return f" '{noise.name}'" if noise.name else ""
 
 
+def noise_at_rest(
+    clean: CleanRun,
+    probe: Probe,
+    noise: NetlistNoise,
+    frequency: float,
+    span: tuple[float, float],
+    band: tuple[float, float] | None = None,
+) -> tuple[str, RestingNoise | None]:
+    """Analyse the noise around the operating point, if the circuit keeps to one.
+
+    Parameters
+    ----------
+    clean : CleanRun
+        A run without noise.
+    probe : Probe
+        One of its.
+    noise : NetlistNoise
+        The table [[noise]].
+    frequency : float
+        In Hz, of the carrier or another at which devices that make noise there lead the circuit.
+    span : tuple of two floats
+        The stretch of the run in s that counts.
+    band : tuple of two floats or None
+        As `cosim.circuit.standstill.resting_noise` takes it.
+
+    Returns
+    -------
+    str
+        What was found, or what speaks against it.
+    RestingNoise or None
+
+    Raises
+    ------
+    TestbenchError
+        If the testbench says "stationary" and the circuit is not.
+    ProbeError, SimulationError, DeckError
+        If the small-signal noise that the testbench asks for cannot be simulated.
+    """
+    reason, found = _at_rest(clean, probe, noise, frequency, span, band)
+    if found is None and noise.method == STATIONARY:
+        raise TestbenchError(
+            f'[[noise]]{_named(noise)} with method = "stationary": {reason}',
+            hint='Say method = "injection", which holds for any circuit.',
+        )
+    return reason, found
+
+
 def _at_rest(
-    clean: CleanRun, noise: NetlistNoise, carrier_frequency: float, span: tuple[float, float]
+    clean: CleanRun,
+    probe: Probe,
+    noise: NetlistNoise,
+    frequency: float,
+    span: tuple[float, float],
+    band: tuple[float, float] | None,
 ) -> tuple[str, RestingNoise | None]:
     """Give the noise around the operating point, or None and what speaks against one."""
-    (probe,) = clean.probes
     asked = noise.method == STATIONARY
     if not asked and noise.channels_given:
         return "excess factors are given, which only injection takes", None
@@ -166,7 +214,7 @@ def _at_rest(
     if not found.stationary:
         return found.sentence(), None
     try:
-        resting = resting_noise(clean, probe, carrier_frequency, span, temperatures_of(noise))
+        resting = resting_noise(clean, probe, frequency, span, temperatures_of(noise), band)
     except SimulationError:
         if asked:
             raise
@@ -175,7 +223,7 @@ def _at_rest(
             "the simulator finds no operating point of the circuit with its sources at rest",
             None,
         )
-    found = check_stationarity(clean, *span, _shares(resting, carrier_frequency))
+    found = check_stationarity(clean, *span, _shares(resting, frequency))
     return _verdict(found, resting)
 
 

@@ -190,13 +190,13 @@ def run_readout(
     clock.lap("shots")
     leaked_at = _leaked(output, detector, split, chain, table.seed)
     floor = _floor(chain.records, runs.half, noise, detector)
-    added, kelvin, unsure = _referred(noise, chain, table, line, bench.resonator)
+    added, kelvin, unsure = _referred(noise, table, line, bench.resonator)
     photons, wait, dephasing = _left_behind(bench.resonator, inquiry)
     f = np.linspace(-0.5 / grid.step, 0.5 / grid.step, _DENSITY_POINTS)
     warnings = (
         *runs.plan.notices,
         *_dispersive(bench.resonator, inquiry),
-        *chain_warnings(chain.compression, noise, added, (kelvin, unsure), split),
+        *chain_warnings(chain.compression, noise, added, split),
         *shot_warnings(split, shots, records),
     )
     return ReadoutResult(
@@ -297,7 +297,6 @@ def _noise(
 
 def _referred(
     noise: ChainNoise,
-    chain: Chain,
     table: ReadoutTable,
     line: OutputLine,
     pulse: ResonatorTable | None,
@@ -308,13 +307,16 @@ def _referred(
     """
     if pulse is None or quadratures_of(table) == 1:
         return math.nan, math.nan, 0.0
-    at_source = noise.near / chain.gain**2
+    # What arrives is known, so that it tells the gain that noise has on its way to the output.
     arriving = arriving_noise(line, [pulse.drive])
-    whole = float(added_quanta(at_source, pulse.drive, line))
-    own = float(arriving.quanta[0] - arriving.added_quanta[0])
-    beyond = (at_source - float(arriving.emf_density[0])) / (8.0 * line.impedance)
-    unsure = noise.relative_error * at_source / (8.0 * line.impedance)
-    return whole - own, beyond / Boltzmann, unsure / Boltzmann
+    beside = noise.near - noise.netlist
+    own = noise.netlist / beside * float(arriving.emf_density[0])
+    added = float(arriving.added_quanta[0]) + float(added_quanta(own, pulse.drive, line))
+    kelvin = 1.0 / (8.0 * line.impedance * Boltzmann)
+    whole_error = noise.relative_error * noise.near
+    beside_error = math.sqrt(max(0.0, whole_error**2 - noise.netlist_error**2))
+    unsure = math.hypot(noise.netlist_error / beside, noise.netlist / beside**2 * beside_error)
+    return added, own * kelvin, unsure * float(arriving.emf_density[0]) * kelvin
 
 
 def _left_behind(pulse: ResonatorTable | None, inquiry: Inquiry) -> tuple[float, float, float]:

@@ -28,10 +28,13 @@ class NoisyInput:
         The deck's sources.
     emf_density : float
         One-sided density of the EMF of each in V^2/Hz.
+    frequency : float
+        At which the signal enters in Hz; 0 as a pair in baseband.
     """
 
     sources: tuple[str, ...]
     emf_density: float = field(metadata={"unit": "V^2/Hz"})
+    frequency: float = field(metadata={"unit": "Hz"})
 
 
 def readout_noise_tables(bench: ReadoutBench) -> list[NetlistNoise]:
@@ -80,7 +83,12 @@ def noisy_input(arriving: ArrivingNoise, table: ReadoutTable) -> NoisyInput:
     # sides of the carrier fall on the same frequency.
     density = float(arriving.emf_density[0]) / (1.0 if table.signal == "baseband" else 2.0)
     sources = tuple(name for name in (table.source, table.source_q) if name is not None)
-    return NoisyInput(sources, density)
+    frequency = float(arriving.frequencies[0])
+    if table.signal == "baseband":
+        frequency = 0.0
+    elif table.intermediate_frequency is not None:
+        frequency = table.intermediate_frequency
+    return NoisyInput(sources, density, frequency)
 
 
 def resistors_behind(

@@ -17,6 +17,7 @@ COARSE = 0.05  # of the assignment error, that the interpolation of decays may b
 CLIPPED = 1e-3  # of the samples
 NEAR_CRITICAL = 0.1  # of the critical photon number
 CHI_OFF = 0.2  # of chi, against what the coupling makes
+BENT = 0.1  # of the noise, by which a run of all of it may differ from the sum of its parts
 UNSURE = 0.2  # relative standard error of the noise
 
 
@@ -63,7 +64,6 @@ def chain_warnings(
     compression: tuple[float, float],
     noise: ChainNoise,
     added: float,
-    kelvin: tuple[float, float],
     split: AssignmentSplit,
 ) -> tuple[str, ...]:
     """Judge the chain.
@@ -76,8 +76,6 @@ def chain_warnings(
         At its output.
     added : float
         Quanta at the resonator's output; NaN where that has no meaning.
-    kelvin : tuple of two floats
-        Noise temperature of the netlist in K, and its standard error.
     split : AssignmentSplit
         The decisions.
 
@@ -108,10 +106,11 @@ def chain_warnings(
             f"the noise is known within {noise.relative_error:.0%} of its density: more 'seeds' "
             "in [[noise]] make it surer"
         )
-    if kelvin[1] > abs(kelvin[0]):
+    if noise.bent > BENT:
         warnings.append(
-            f"the netlist's own noise, {kelvin[0]:.3g} +- {kelvin[1]:.3g} K at its source, is not "
-            "told apart from what arrives there, which is far more"
+            "the noise of the devices and that which arrives do not add up: run together they "
+            f"differ from their sum by {noise.bent:.0%}, so much do they bend the chain; the noise "
+            "at its output is not to be relied on"
         )
     if split.clipped > CLIPPED:
         warnings.append(

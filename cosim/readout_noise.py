@@ -1,32 +1,29 @@
 """The noise of a readout: what arrives with the signal, and what the netlist's devices add."""
 
-import itertools
 import math
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 
-from cosim.added_noise import INJECTION, choose_method
+from cosim.added_noise import FROZEN, INJECTION, STATIONARY, AddedNoise, choose_method
 from cosim.circuit.bias import CleanRun, clean_run
 from cosim.circuit.deck import Deck
-from cosim.circuit.generators import noise_currents, noise_samples
-from cosim.circuit.injection import injected_difference
+from cosim.circuit.generators import noise_currents
 from cosim.circuit.noise_settings import NoiseSettings
+from cosim.dsp.detection.band_levels import noise_of_levels
 from cosim.dsp.detection.output_noise import OutputNoise
 from cosim.errors import TestbenchError
 from cosim.noisy_circuit import modelled_settings, noise_settings
 from cosim.outgoing import ArrivingNoise
 from cosim.readout_entry import NoisyInput, readout_currents, resistors_behind
-from cosim.readout_output import Grid, ReadoutPlan, outputs_record
+from cosim.readout_injection import Entry, NoisyRuns, injected_output, powers_alone
+from cosim.readout_output import Grid, ReadoutPlan
 from cosim.readout_schema import ReadoutTable
+from cosim.readout_stationary import baseband_noise
 from cosim.voltage_noises import NetlistNoise
-from cosim.waveform import ComplexArray, FloatArray
 
 ARRIVING = "arriving only"
-# Bands of |frequency| that the injected noise is averaged over, in lines of a record's spectrum.
-_FIRST_BAND = 3
-_GROWTH = 1.6
 _OFFSETS = 41  # of a density that is known in closed form
 
 
@@ -49,6 +46,13 @@ class ChainNoise:
         "arriving" for what comes with the signal. Empty where it is not told.
     left_out : tuple of str
         What makes noise in the deck and is not in it.
+    netlist : float
+        Part of the density near the carrier that does not arrive with the signal, in V^2/Hz: the
+        devices', and what arrives at other frequencies and is mixed onto the output.
+    netlist_error : float
+        Standard error of that in V^2/Hz.
+    bent : float
+        By how much injected noise of all differs from the sum of its parts, over itself.
     """
 
     output: OutputNoise
@@ -57,6 +61,9 @@ class ChainNoise:
     relative_error: float = field(default=0.0, metadata={"unit": "1"})
     devices: dict[str, float] = field(default_factory=dict, metadata={"unit": "1"})
     left_out: tuple[str, ...] = ()
+    netlist: float = field(default=0.0, metadata={"unit": "V^2/Hz"})
+    netlist_error: float = field(default=0.0, metadata={"unit": "V^2/Hz"})
+    bent: float = field(default=0.0, metadata={"unit": "1"})
 
     @property
     def near(self) -> float:
@@ -143,138 +150,117 @@ def netlist_noise_at_output(
     """
     texts = [probe.text for probe in plan.probes]
     span = table.window
+    middle = 0.5 * (span[0] + span[1])
     cleans = [clean_run(deck, plan.request, texts) for deck in decks]
     behind = {} if entry is None else resistors_behind(plan, entry, cleans[0], table)
     settings = noise_settings(noise, plan.deck)
-    reason = "I and Q, or an output in baseband, are no voltage around a carrier"
-    if table.output_frequency is not None:
-        choice = choose_method(
-            cleans[0], noise, table.output_frequency, span, 0.5 * (span[0] + span[1])
-        )
+    instead = _instead(behind, cleans[0], settings)
+    reason = "I and Q at an intermediate frequency are no one voltage around a carrier"
+    if table.output_frequency is not None and len(texts) == 1:
+        choice = choose_method(cleans[0], noise, table.output_frequency, span, middle)
         reason = choice.reason
         if choice.added is not None:
-            density = choice.added.table.density(table.output_frequency)
-            assert density is not None  # Its table has points.
-            parts = dict(choice.added.parts)
-            factor, devices = _with_arriving(parts, behind, cleans[0], settings)
-            reach = 0.5 / grid.step
-            offsets = np.linspace(0.0, reach, _OFFSETS)
-            values = factor * density.at(np.maximum(offsets, 1e-4 * reach))
-            f = np.concatenate([-offsets[:0:-1], offsets])
-            output = OutputNoise(0.0, f, np.concatenate([values[:0:-1], values]), 2)
-            left_out = choice.added.left_out
-            return ChainNoise(output, choice.method, reason, 0.0, devices, left_out)
-    elif noise.method not in ("auto", INJECTION):
+            found = _around_carrier(choice.added, table.output_frequency, grid, instead)
+            return replace(found, method=choice.method, reason=reason)
+    elif noise.method == FROZEN or (noise.method == STATIONARY and table.output_frequency):
+        where = "one output at its 'output_frequency'"
+        where += "" if noise.method == FROZEN else ", or with outputs in baseband"
         raise TestbenchError(
-            f'[[noise]] with method = "{noise.method}" goes with one output at its '
-            "'output_frequency'",
+            f'[[noise]] with method = "{noise.method}" goes with {where}',
             hint=f'say method = "{INJECTION}"',
         )
-    instant = 0.5 * (span[0] + span[1])
+    elif noise.method != INJECTION and table.output_frequency is None:
+        reason, resting = baseband_noise(cleans, noise, grid, span, instead)
+        if resting is not None:
+            left_out = tuple(cleans[0].inventory.left_out)
+            return _told(resting.output, STATIONARY, reason, resting.parts, instead, left_out)
     carrier = table.output_frequency or 1.0 / span[1]
-    settings, _ = modelled_settings(cleans[0], settings, noise, carrier, instant)
-    return _injected(plan, table, grid, noise, cleans, behind, settings, reason)
+    settings, _ = modelled_settings(cleans[0], settings, noise, carrier, middle)
+    runs = NoisyRuns(
+        cleans,
+        [readout_currents(clean, settings, behind) for clean in cleans],
+        settings,
+        None if entry is None else _entry(entry, behind, table, grid),
+        table,
+        grid,
+        quadratures_of(table),
+    )
+    found = _injected(runs, noise, instead)
+    return found if noise.method == INJECTION else replace(found, reason=reason)
 
 
-def _injected(
-    plan: ReadoutPlan,
-    table: ReadoutTable,
-    grid: Grid,
-    noise: NetlistNoise,
-    cleans: Sequence[CleanRun],
-    behind: Mapping[str, float],
-    settings: NoiseSettings,
-    reason: str,
+def _injected(runs: NoisyRuns, noise: NetlistNoise, instead: Mapping[str, float]) -> ChainNoise:
+    seeds = range(runs.table.seed, runs.table.seed + noise.seeds)
+    found = injected_output(runs, seeds)
+    return ChainNoise(
+        found.output,
+        INJECTION,
+        "",
+        found.relative_error,
+        _shares(powers_alone(runs, seeds), instead) if noise.by_device else {},
+        tuple(runs.cleans[0].inventory.left_out),
+        found.netlist,
+        found.netlist_error,
+        found.bent,
+    )
+
+
+def _entry(
+    entry: NoisyInput, behind: Mapping[str, float], table: ReadoutTable, grid: Grid
+) -> Entry:
+    """Say which part of what arrives is that around the signal.
+
+    A mixer takes its image, twice the output's frequency off, to the same output: the band of the
+    signal ends half-way there.
+    """
+    half_band = math.inf
+    # One and the same frequency may have been rounded in two ways.
+    if not math.isclose(table.output_frequency or 0.0, entry.frequency, rel_tol=1e-9):
+        half_band = min(0.5 / grid.step, 0.5 * entry.frequency or math.inf)
+        half_band = min(half_band, table.output_frequency or math.inf)
+    return Entry(behind, entry.frequency, half_band)
+
+
+def _instead(
+    behind: Mapping[str, float], clean: CleanRun, settings: NoiseSettings
+) -> dict[str, float]:
+    """Give what arrives over the own noise of the resistors behind the sources."""
+    own = {one.device: float(one.white[0]) for one in noise_currents(clean, settings, behind)}
+    return {name: density / own[name] for name, density in behind.items()}
+
+
+def _around_carrier(
+    added: AddedNoise, carrier_frequency: float, grid: Grid, instead: Mapping[str, float]
 ) -> ChainNoise:
-    currents = [readout_currents(clean, settings, behind) for clean in cleans]
-
-    def record(seed: int, only: str = "") -> ComplexArray:
-        # The states take turns, so that the noise is the mean of theirs.
-        place = seed % len(cleans)
-        clean = cleans[place]
-        made = [one for one in currents[place] if only in ("", one.device)]
-        samples = noise_samples(clean, settings, made, seed)
-        found = injected_difference(clean, made, samples).samples
-        waves = [found[probe.text] / settings.scale for probe in plan.probes]
-        return outputs_record(clean.result.time, waves, table, grid)
-
-    seeds = range(table.seed, table.seed + noise.seeds)
-    records = np.array([record(seed) for seed in seeds])
-    output, error = _spectrum(records, grid, quadratures_of(table))
-    devices: dict[str, float] = {}
-    if noise.by_device:
-        names = dict.fromkeys(one.device for one in currents[0])
-        powers = {
-            name: float(np.mean([_near(record(seed, name), grid) for seed in seeds]))
-            for name in names
-        }
-        whole = sum(powers.values())
-        devices = {_named(name, behind): power / whole for name, power in powers.items()}
-        devices = dict(sorted(devices.items(), key=lambda pair: -pair[1]))
-    left_out = tuple(cleans[0].inventory.left_out)
-    return ChainNoise(output, INJECTION, reason, error, devices, left_out)
+    """Put what arrives in the place of the noise of the resistors behind the sources."""
+    density = added.table.density(carrier_frequency)
+    assert density is not None  # Its table has points.
+    changed = {name: part * instead.get(name, 1.0) for name, part in added.parts.items()}
+    factor = sum(changed.values()) / sum(added.parts.values())
+    reach = 0.5 / grid.step
+    offsets = np.linspace(0.0, reach, _OFFSETS)
+    values = factor * density.at(np.maximum(offsets, 1e-4 * reach))
+    return _told(noise_of_levels(offsets, values, 2), "", "", changed, instead, added.left_out)
 
 
-def _named(device: str, behind: Mapping[str, float]) -> str:
-    return "arriving" if device in behind else device
+def _told(
+    output: OutputNoise,
+    method: str,
+    reason: str,
+    parts: Mapping[str, float],
+    instead: Mapping[str, float],
+    left_out: tuple[str, ...],
+) -> ChainNoise:
+    """Tell which part of a density that is known without chance is the netlist's."""
+    devices = _shares(parts, instead)
+    found = ChainNoise(output, method, reason, 0.0, devices, left_out)
+    return replace(found, netlist=found.near * (1.0 - devices.get("arriving", 0.0)))
 
 
-def _with_arriving(
-    parts: dict[str, float],
-    behind: Mapping[str, float],
-    clean: CleanRun,
-    settings: NoiseSettings,
-) -> tuple[float, dict[str, float]]:
-    """Put what arrives in the place of the noise of the resistors behind the sources.
-
-    Gives the factor on the density near the carrier, and the parts after that.
-    """
-    own = {one.device: float(one.white[0]) for one in noise_currents(clean, settings)}
-    changed = {
-        _named(name, behind): part * (behind[name] / own[name] if name in behind else 1.0)
-        for name, part in parts.items()
-    }
-    factor = sum(changed.values()) / sum(parts.values())
-    whole = sum(changed.values())
-    shares = {name: part / whole for name, part in changed.items()}
-    return factor, dict(sorted(shares.items(), key=lambda pair: -pair[1]))
-
-
-def _spectrum(records: ComplexArray, grid: Grid, quadratures: int) -> tuple[OutputNoise, float]:
-    """Average the spectra of noise records over bands of frequency.
-
-    Gives the density, and its relative standard error near the carrier.
-    """
-    count = records.shape[1]
-    lines = np.abs(np.fft.fft(records, axis=1)) ** 2 * grid.step / count
-    number = np.abs(np.fft.fftfreq(count) * count).round().astype(int)
-    edges = [0]
-    width = float(_FIRST_BAND)
-    while edges[-1] <= count // 2:
-        edges.append(edges[-1] + max(1, round(width)))
-        width *= _GROWTH
-    middles, levels = [], []
-    first_error = 0.0
-    for low, high in itertools.pairwise(edges):
-        inside = (number >= low) & (number < high)
-        if not inside.any():
-            continue
-        values = lines[:, inside]
-        middles.append(0.0 if low == 0 else float(number[inside].mean()))
-        levels.append(float(values.mean()))
-        if low == 0:
-            # A line of white noise scatters by itself (I + jQ); of a real output, mirrored lines
-            # are the same one.
-            free = values.size if quadratures == 2 else 0.5 * (values.size + records.shape[0])
-            first_error = 1.0 / math.sqrt(free)
-    unit = 1.0 / (count * grid.step)
-    f: FloatArray = unit * np.array([*middles, count / 2.0 + 1.0])
-    density = np.array([*levels, levels[-1]])
-    both = np.concatenate([-f[:0:-1], f]), np.concatenate([density[:0:-1], density])
-    return OutputNoise(0.0, *both, quadratures), first_error
-
-
-def _near(record: ComplexArray, grid: Grid) -> float:
-    """Give the density near the carrier of one noise record, in V^2/Hz."""
-    lines = np.abs(np.fft.fft(record)) ** 2 * grid.step / record.size
-    return float(np.mean([*lines[:_FIRST_BAND], *lines[-_FIRST_BAND + 1 :]]))
+def _shares(powers: Mapping[str, float], instead: Mapping[str, float]) -> dict[str, float]:
+    """Give the parts of devices, the greatest first; what arrives goes under one name."""
+    found: dict[str, float] = {}
+    for device, power in powers.items():
+        name = "arriving" if device in instead else device
+        found[name] = found.get(name, 0.0) + power / sum(powers.values())
+    return dict(sorted(found.items(), key=lambda pair: -pair[1]))

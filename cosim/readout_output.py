@@ -262,11 +262,34 @@ def outputs_record(
     """
     if table.output_frequency is not None:
         found = demodulate(Waveform(time, waves[0], unit="V"), table.output_frequency)
-        return _cell_means(found.t, found.iq, grid)
+        return cell_means(found.t, found.iq, grid)
     iq = waves[0].astype(np.complex128)
     if len(waves) > 1:
         iq = iq + 1j * waves[1]
-    return _cell_means(time, iq, grid)
+    return cell_means(time, iq, grid)
+
+
+def cell_means(time: FloatArray, iq: ComplexArray, grid: Grid) -> ComplexArray:
+    """Average over the cells of a record.
+
+    Parameters
+    ----------
+    time : ndarray, shape (n,)
+        In s.
+    iq : ndarray of complex, shape (n,)
+        Straight lines between these.
+    grid : Grid
+        Of the record.
+
+    Returns
+    -------
+    ndarray of complex, shape (count,)
+        In the unit of `iq`.
+    """
+    edges = grid.start + grid.step * np.arange(grid.count + 1)
+    area = cumulative_trapezoid(iq, time, initial=0)
+    at = np.interp(edges, time, area.real) + 1j * np.interp(edges, time, area.imag)
+    return np.asarray(np.diff(at) / grid.step)
 
 
 def capture_of(plan: ReadoutPlan, result: TransientResult) -> Capture:
@@ -288,13 +311,6 @@ def capture_of(plan: ReadoutPlan, result: TransientResult) -> Capture:
     wave = Waveform(result.time, evaluate_probe(plan.probes[0], result.vectors), unit="V")
     files = kept_files(plan.deck.files, plan.confidential)
     return Capture(wave, {}, plan.request.step, files, plan.notices, result)
-
-
-def _cell_means(time: FloatArray, iq: ComplexArray, grid: Grid) -> ComplexArray:
-    edges = grid.start + grid.step * np.arange(grid.count + 1)
-    area = cumulative_trapezoid(iq, time, initial=0)
-    at = np.interp(edges, time, area.real) + 1j * np.interp(edges, time, area.imag)
-    return np.asarray(np.diff(at) / grid.step)
 
 
 def _check_ends(bench: ReadoutBench, stop: float) -> None:

@@ -53,6 +53,7 @@ def resting_noise(
     carrier_frequency: float,
     span: tuple[float, float],
     temperatures: NoiseTemperatures,
+    band: tuple[float, float] | None = None,
 ) -> RestingNoise:
     """Analyse the noise of a deck whose sources stand at the values of a stretch of its run.
 
@@ -64,10 +65,13 @@ def resting_noise(
         Of voltages.
     carrier_frequency : float
         In Hz; the grid reaches to nearly zero and to nearly twice of it, in steps of 0.23 %.
+        0 where a band is given.
     span : tuple of two floats
         The stretch in s, over which each source is averaged; an instant where both are equal.
     temperatures : NoiseTemperatures
         In K.
+    band : tuple of two floats or None
+        Ends of the grid in Hz in place of those around a carrier.
 
     Returns
     -------
@@ -83,7 +87,8 @@ def resting_noise(
     if probe.unit != "V":
         raise ProbeError(f"the noise around an operating point is of voltages, not of {probe.text}")
     still = deck_at_rest(clean, span)
-    band = _LOWEST * carrier_frequency, _HIGHEST * carrier_frequency
+    if band is None:
+        band = _LOWEST * carrier_frequency, _HIGHEST * carrier_frequency
     noise = small_signal_noise(clean, still, probe, band, _POINTS_PER_DECADE)
     shift = _shift(clean, resting_run(clean, still), span)
     return RestingNoise(at_noise_temperatures(noise, temperatures), shift)
