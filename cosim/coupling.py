@@ -4,7 +4,6 @@ import math
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.constants import Planck, elementary_charge
 
 from cosim.errors import InputError
 from cosim.waveform import ComplexArray, FloatArray, Waveform
@@ -132,58 +131,3 @@ def rotating_rate(
 
     turn = np.exp(2j * math.pi * frequency_offset * t)
     return np.asarray(iq * turn * rate_per_unit(line, unit), dtype=np.complex128)
-
-
-def level_shift(gate_voltage: float, lever_arm: float) -> float:
-    """Turn a gate's voltage into the shift of a level in a quantum dot.
-
-    Parameters
-    ----------
-    gate_voltage : float
-        In V, at the gate.
-    lever_arm : float
-        Shift of the level in eV for each volt, 0 to 1.
-
-    Returns
-    -------
-    float
-        e lever_arm V/h in Hz: 1 mV at a lever arm of 0.1 is 24.2 GHz.
-
-    Raises
-    ------
-    InputError
-        If the lever arm is not above 0 and at most 1.
-    """
-    return gate_voltage * _hertz_per_volt(lever_arm)
-
-
-def slope_per_hertz(slope: float, lever_arm: float) -> float:
-    """Turn a slope against a gate's voltage into one against the energy of the level.
-
-    Parameters
-    ----------
-    slope : float
-        Of a conductance or a capacitance, in S/V or F/V.
-    lever_arm : float
-        As in `level_shift`.
-
-    Returns
-    -------
-    float
-        In S/Hz or F/Hz.
-
-    Raises
-    ------
-    InputError
-        As in `level_shift`.
-    """
-    return slope / _hertz_per_volt(lever_arm)
-
-
-def _hertz_per_volt(lever_arm: float) -> float:
-    if not 0 < lever_arm <= 1:
-        raise InputError(
-            f"lever arm: wanted a number above 0 and at most 1, got {lever_arm!r}",
-            hint="it is the part of the gate's voltage that the level sees, in eV/V",
-        )
-    return elementary_charge * lever_arm / Planck

@@ -233,10 +233,6 @@ SCHOTTKY = (
     f"Phys. 362, 541 (1918), {MEMORY}"
 )
 WIENER_KHINCHIN = "theorem of Wiener and Khinchin, chi-square law of the periodogram"
-BEENAKKER = (
-    'C. W. J. Beenakker, "Theory of Coulomb-blockade oscillations in the conductance of a quantum '
-    f'dot", Phys. Rev. B 44, 1646 (1991), {MEMORY}'
-)
 BLAIS = (
     'A. Blais et al., "Cavity quantum electrodynamics for superconducting electrical circuits: an '
     f'architecture for quantum computation", Phys. Rev. A 69, 062320 (2004), {MEMORY}'

@@ -6,7 +6,6 @@ import numpy as np
 import pytest
 from scipy.constants import Boltzmann, Planck, hbar
 
-from cosim.coupling import level_shift, slope_per_hertz
 from cosim.dsp.noise.thermal import Attenuator, johnson_density
 from cosim.errors import InputError
 from cosim.outgoing import (
@@ -20,7 +19,7 @@ from cosim.outgoing import (
     least_added_quanta,
     power_gain,
 )
-from cosim.quantum.incident import incident_amplitude, sample_drive, square_drive
+from cosim.quantum.incident import incident_amplitude, sample_drive, two_step_drive
 from cosim.quantum.resonator import amplitude_for_photons
 from cosim.quantum.resonator_field import evolve_field
 from tests import sources
@@ -165,7 +164,7 @@ def test_signal_to_noise_in_volts(validate: Validate) -> None:
     resonator = reflecting()
     line = OutputLine((Amplifier(26.0, added * Planck * FREQUENCY / Boltzmann),))
     amplitude = amplitude_for_photons(resonator, 5.0, FREQUENCY)
-    drive = sample_drive(square_drive(amplitude, tau), FREQUENCY, step, 4001)
+    drive = sample_drive(two_step_drive(amplitude, tau), FREQUENCY, step, 4001)
     low, high = (
         emf_envelope(evolve_field(resonator, drive, level).outside, FREQUENCY, line)
         for level in (0, 1)
@@ -177,25 +176,6 @@ def test_signal_to_noise_in_volts(validate: Validate) -> None:
     assert KAPPA * step < 0.004
     quantity = "SNR in volts of a boxcar of 400 ns, efficiency 0.4"
     validate(quantity, sources.CLERK, 5.403141, snr, rel=2e-6, card="D09")
-
-
-class TestLevers:
-    def test_a_lever_arm(self, validate: Validate) -> None:
-        """1 mV at a lever arm of 0.1 is 0.1 meV; 1 eV/h = 2.417989e14 Hz."""
-        shift = level_shift(1e-3, 0.1)
-        quantity = "level shift by 1 mV at a lever arm of 0.1"
-        validate(quantity, sources.CODATA, 2.417989e10, shift, "Hz", rel=DIGITS)
-
-    def test_slope_times_shift_is_that_of_the_gate(self) -> None:
-        product = slope_per_hertz(2e-3, 0.07) * level_shift(0.4e-3, 0.07)
-        assert product == pytest.approx(2e-3 * 0.4e-3, rel=1e-12, abs=0.0)
-
-    @pytest.mark.parametrize("arm", [0.0, -0.1, 1.1, math.nan])
-    def test_no_lever_arm(self, arm: float) -> None:
-        with pytest.raises(InputError, match="lever arm: wanted a number above 0"):
-            level_shift(1e-3, arm)
-        with pytest.raises(InputError, match="lever arm"):
-            slope_per_hertz(1e-3, arm)
 
 
 def test_what_is_no_line_is_refused() -> None:

@@ -50,46 +50,6 @@ class ProbitFit:
     plausibility: float
 
 
-def sampled_decisions(
-    time: FloatArray, values: FloatArray, instants: FloatArray, threshold: float
-) -> npt.NDArray[np.bool_]:
-    """Read the decisions of a logic node.
-
-    Parameters
-    ----------
-    time : ndarray, shape (n,)
-        In s, rising.
-    values : ndarray, shape (n,)
-        Voltage of the node in V, taken as straight lines between the times.
-    instants : ndarray, shape (k,)
-        When to read, in s, inside the record.
-    threshold : float
-        In V.
-
-    Returns
-    -------
-    ndarray of bool, shape (k,)
-        Whether the node is above the threshold.
-
-    Raises
-    ------
-    InputError
-        If the shapes do not fit, or an instant lies outside the record.
-    """
-    if time.ndim != 1 or time.shape != values.shape or time.size < 2:
-        raise InputError(
-            f"decisions need as many times as values, two at the least; got shapes {time.shape} "
-            f"and {values.shape}"
-        )
-    if instants.size and not (instants.min() >= time[0] and instants.max() <= time[-1]):
-        raise InputError(
-            f"decisions are wanted from {instants.min():g} s to {instants.max():g} s, the record "
-            f"is from {time[0]:g} s to {time[-1]:g} s",
-            hint="Let the run last until after the last decision.",
-        )
-    return np.interp(instants, time, values) > threshold
-
-
 def fit_probit(
     levels: FloatArray,
     ones: npt.NDArray[np.int_] | npt.NDArray[np.bool_],

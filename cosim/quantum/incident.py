@@ -114,29 +114,6 @@ def incident_amplitude(power: float, frequency: float) -> float:
     return math.sqrt(power / (hbar * 2 * math.pi * frequency))
 
 
-def square_drive(level: complex, length: float) -> tuple[Plateau, ...]:
-    """Give a pulse that is switched on and off.
-
-    Parameters
-    ----------
-    level : complex
-        Field in sqrt(photon/s).
-    length : float
-        In s.
-
-    Returns
-    -------
-    tuple of Plateau
-        One.
-
-    Raises
-    ------
-    InputError
-        As in `Plateau`.
-    """
-    return (Plateau(length, level),)
-
-
 def two_step_drive(
     level: complex,
     length: float,

@@ -31,7 +31,7 @@ class DispersiveGuards:
     expected_chi : float
         Shift in rad/s that g, Delta and alpha make.
     purcell_rate : float
-        Decay of the qubit through the resonator in 1/s, without a filter.
+        Decay of the qubit through the resonator in 1/s, behind the filter where there is one.
     """
 
     photons: float = field(metadata={"unit": "1"})
@@ -323,7 +323,11 @@ def check_chi(resonator: Resonator, qubit: Qubit, coupling: float) -> float:
 
 
 def dispersive_guards(
-    resonator: Resonator, qubit: Qubit, coupling: float, photons: float
+    resonator: Resonator,
+    qubit: Qubit,
+    coupling: float,
+    photons: float,
+    quality: float | None = None,
 ) -> DispersiveGuards:
     """Say in numbers how far the dispersive picture holds for a readout.
 
@@ -333,6 +337,8 @@ def dispersive_guards(
         As in `check_chi`.
     photons : float
         Largest mean photon number of the readout.
+    quality : float or None
+        Of a bandpass filter at the resonator's frequency; None: there is none.
 
     Returns
     -------
@@ -341,16 +347,21 @@ def dispersive_guards(
     Raises
     ------
     InputError
-        As in `check_chi`.
+        As in `check_chi` and `filtered_purcell_rate`.
     """
     expected = check_chi(resonator, qubit, coupling)
-    delta = 2 * math.pi * (qubit.frequency - resonator.frequency)
+    ours, theirs = (2 * math.pi * one.frequency for one in (qubit, resonator))
+    delta = ours - theirs
+    if quality is None:
+        rate = purcell_rate(resonator.kappa, coupling, delta)
+    else:
+        rate = filtered_purcell_rate(resonator.kappa, coupling, ours, theirs, quality)
     return DispersiveGuards(
         photons,
         critical_photon_number(coupling, delta),
         abs(coupling / delta),
         expected,
-        purcell_rate(resonator.kappa, coupling, delta),
+        rate,
     )
 
 

@@ -10,7 +10,7 @@ import numpy as np
 import numpy.typing as npt
 
 from cosim.errors import InputError, near_names
-from cosim.waveform import ComplexArray, FloatArray
+from cosim.waveform import ComplexArray
 
 GEOMETRIES = ("reflection", "transmission", "hanger")
 
@@ -278,23 +278,3 @@ def wait_for_photons(resonator: Resonator, photons: float, left: float) -> float
             f"photons left: wanted a number above 0 from at least 0, got {left!r} from {photons!r}"
         )
     return math.log(photons / left) / resonator.kappa if photons > left else 0.0
-
-
-def photons_after(resonator: Resonator, photons: npt.ArrayLike, wait: float) -> FloatArray:
-    """Give the photons that are left after a wait without a drive.
-
-    Parameters
-    ----------
-    resonator : Resonator
-        The resonator.
-    photons : array_like
-        Mean number now.
-    wait : float
-        In s.
-
-    Returns
-    -------
-    ndarray, shape as `photons`
-        photons exp(-kappa wait).
-    """
-    return np.asarray(np.asarray(photons, dtype=np.float64) * math.exp(-resonator.kappa * wait))

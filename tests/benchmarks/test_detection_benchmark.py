@@ -15,11 +15,11 @@ import pytest
 
 from cosim.dsp.detection.assignment import AssignmentSplit, scan_integration, split_assignment
 from cosim.dsp.detection.converter import Adc
-from cosim.dsp.detection.outcomes import snr_for_error
 from cosim.dsp.detection.output_noise import OutputNoise
 from cosim.dsp.detection.reception import ChainOutput, Detector
 from cosim.dsp.detection.records import Preparation, Records, Transitions, relaxation
 from cosim.dsp.detection.shots import integrated_shots, record_shots
+from tests.dsp.detections import snr_for_error
 
 SHOTS, RECORDS = 1_000_000, 20_000
 STEP, COUNT = 1e-9, 1000

@@ -10,8 +10,7 @@ import numpy as np
 import pytest
 import qutip
 
-from cosim.quantum.incident import sample_drive, square_drive
-from cosim.quantum.random_event import ExponentialEvent, event_probability
+from cosim.quantum.incident import sample_drive, two_step_drive
 from cosim.quantum.readout_limits import purcell_rate, transmon_chi, transmon_pulls
 from cosim.quantum.resonator import Resonator, amplitude_for_photons
 from cosim.quantum.resonator_field import evolve_field, fields_with_jump
@@ -40,7 +39,7 @@ DRIVE = RESONATOR.frequency + 1.5e6
 def full_field(level: int) -> tuple[ComplexArray, ComplexArray]:
     """Give the mean field of the exchange model and of the dispersive one, from the same pulse."""
     amplitude = amplitude_for_photons(RESONATOR, 0.1, DRIVE)
-    pulse = sample_drive(square_drive(amplitude, 160e-9), DRIVE, 1e-9, 161)
+    pulse = sample_drive(two_step_drive(amplitude, 160e-9), DRIVE, 1e-9, 161)
     b = qutip.tensor(qutip.destroy(LEVELS), qutip.qeye(PHOTONS))
     a = qutip.tensor(qutip.qeye(LEVELS), qutip.destroy(PHOTONS))
     offset = TURN * (BARE - DRIVE) * NANO
@@ -62,9 +61,8 @@ def full_field(level: int) -> tuple[ComplexArray, ComplexArray]:
     )
     alone = evolve_field(RESONATOR, pulse, level).inside
     if level == 1:
-        decay = ExponentialEvent(1 / purcell_rate(KAPPA, G, DELTA))
         edges = np.linspace(0.0, pulse.t[-1], 401)
-        weights = np.diff(event_probability(decay, edges))
+        weights = np.diff(-np.expm1(-purcell_rate(KAPPA, G, DELTA) * edges))
         jumps = fields_with_jump(RESONATOR, pulse, (edges[1:] + edges[:-1]) / 2).inside
         alone = weights @ jumps + (1 - weights.sum()) * alone
     return np.asarray(result.expect[0], dtype=np.complex128), alone

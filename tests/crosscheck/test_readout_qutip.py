@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 import qutip
 
-from cosim.quantum.incident import IncidentField, sample_drive, square_drive
+from cosim.quantum.incident import IncidentField, sample_drive, two_step_drive
 from cosim.quantum.readout_limits import dephasing_rate, stark_shift
 from cosim.quantum.resonator import Resonator, amplitude_for_photons
 from cosim.quantum.resonator_field import evolve_field, fields_with_jump
@@ -25,7 +25,7 @@ A = qutip.destroy(PHOTONS)
 def pulse() -> IncidentField:
     """Give a pulse of 150 ns at some 0.4 photons, and 150 ns after it."""
     amplitude = amplitude_for_photons(RESONATOR, 0.4, DRIVE)
-    plateaus = square_drive(amplitude * np.exp(0.7j), 150e-9)
+    plateaus = two_step_drive(amplitude * np.exp(0.7j), 150e-9)
     return sample_drive(plateaus, DRIVE, 1e-9, 301)
 
 

@@ -1,6 +1,9 @@
 """Chains that the tests of detection share: steady, of first order, and one that saturates."""
 
+import math
+
 import numpy as np
+from scipy.special import erfcinv
 
 from cosim.dsp.detection.output_noise import OutputNoise
 from cosim.dsp.detection.reception import ChainOutput
@@ -60,3 +63,15 @@ def pointers(
     if not gain:
         return ChainOutput(records(False), noise)
     return ChainOutput(records(True), noise, linear=records(False))
+
+
+def separation_error(snr: float) -> float:
+    """Wrong decisions between two equal Gaussians, the threshold in the middle (P. Krantz et al.,
+    "A quantum engineer's guide to superconducting qubits", Appl. Phys. Rev. 6, 021318 (2019)).
+    """
+    return math.erfc(snr / math.sqrt(8.0)) / 2.0
+
+
+def snr_for_error(error: float) -> float:
+    """The signal over noise for that."""
+    return float(math.sqrt(8.0) * erfcinv(2.0 * error))

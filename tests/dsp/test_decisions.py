@@ -5,7 +5,7 @@ import pytest
 from scipy.optimize import minimize
 from scipy.stats import norm
 
-from cosim.dsp.decisions import fit_probit, sampled_decisions
+from cosim.dsp.decisions import fit_probit
 from cosim.errors import InputError
 from tests import sources
 from tests.validation import Validate
@@ -99,17 +99,3 @@ class TestFitProbit:
         counts = None if trials is None else np.array(trials)
         with pytest.raises(InputError, match=text):
             fit_probit(np.array(levels), np.array(ones), counts)
-
-
-class TestSampledDecisions:
-    def test_reads_between_the_samples(self) -> None:
-        time, values = np.array([0.0, 1.0, 2.0]), np.array([0.0, 1.0, 0.0])
-        found = sampled_decisions(time, values, np.array([0.4, 0.6, 1.4, 1.6]), 0.5)
-        assert found.tolist() == [False, True, True, False]
-
-    def test_refuses_what_is_not_there(self) -> None:
-        time = np.array([0.0, 1.0])
-        with pytest.raises(InputError, match=r"wanted from 0.5 s to 1.5 s, the record is from"):
-            sampled_decisions(time, time, np.array([0.5, 1.5]), 0.5)
-        with pytest.raises(InputError, match="as many times as values"):
-            sampled_decisions(time, time[:1], np.array([0.5]), 0.5)

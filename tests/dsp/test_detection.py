@@ -9,14 +9,13 @@ from scipy.optimize import minimize_scalar
 from scipy.special import ndtr
 
 from cosim.dsp.detection.assignment import scan_integration, split_assignment
-from cosim.dsp.detection.outcomes import separation_error, snr_for_error
 from cosim.dsp.detection.output_noise import OutputNoise
 from cosim.dsp.detection.projection import project, snr_over_time
 from cosim.dsp.detection.reception import ChainOutput, Detector, receive
 from cosim.dsp.detection.records import Preparation, Records, relaxation
 from cosim.dsp.detection.weights import Rule
 from tests import sources
-from tests.dsp.detections import NOTHING, SURE, steady
+from tests.dsp.detections import NOTHING, SURE, separation_error, snr_for_error, steady
 from tests.validation import Validate
 
 TOPIC = "readout"

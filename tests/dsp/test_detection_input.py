@@ -10,7 +10,6 @@ import pytest
 from cosim.dsp.detection.aftermath import decision_latency, repeat_agreement
 from cosim.dsp.detection.assignment import scan_integration, split_assignment
 from cosim.dsp.detection.converter import Adc
-from cosim.dsp.detection.outcomes import snr_for_error
 from cosim.dsp.detection.output_noise import OutputNoise
 from cosim.dsp.detection.projection import project
 from cosim.dsp.detection.reception import ChainOutput, Detector, receive
@@ -86,7 +85,6 @@ def split(output: ChainOutput = STEADY, **detector: object) -> object:
             "one that converts it",
         ),
         (lambda: split(steady(4097, 1e-9, 5.0), weights="whitened"), "at most 4096 samples"),
-        (lambda: snr_for_error(0.5), "between 0 and 1/2"),
         (lambda: integrated_shots(SPLIT, NOTHING, SURE, 5, 1), "an even number"),
         (lambda: integrated_shots(SPLIT, NOTHING, SURE, 4, -1), "a seed of at least 0"),
         (lambda: repeat_agreement(SPLIT, NOTHING, SURE, -1.0), "a wait of at least zero"),

@@ -21,14 +21,22 @@ from cosim.dsp.detection.assignment import (
     split_assignment,
 )
 from cosim.dsp.detection.converter import Adc
-from cosim.dsp.detection.outcomes import separation_error, state_odds
+from cosim.dsp.detection.outcomes import state_odds
 from cosim.dsp.detection.output_noise import OutputNoise
 from cosim.dsp.detection.projection import Projection
 from cosim.dsp.detection.reception import ChainOutput, Detector
 from cosim.dsp.detection.records import Preparation, Transitions, relaxation
 from cosim.dsp.detection.shots import ShotCounts, integrated_shots, record_shots, shot_points
 from cosim.dsp.noise.paths import generator
-from tests.dsp.detections import NOTHING, SURE, bent, pointer_difference, pointers, steady
+from tests.dsp.detections import (
+    NOTHING,
+    SURE,
+    bent,
+    pointer_difference,
+    pointers,
+    separation_error,
+    steady,
+)
 
 STEP, COUNT, RATE = 4e-9, 250, 2 * math.pi * 2e6
 DURATION = STEP * COUNT

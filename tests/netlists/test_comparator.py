@@ -14,7 +14,7 @@ from cosim.circuit.noise_parts import NoiseTemperatures
 from cosim.circuit.noise_settings import NoiseSettings
 from cosim.circuit.noisy_run import run_with_noise
 from cosim.circuit.simulator import simulate
-from cosim.dsp.decisions import fit_probit, sampled_decisions
+from cosim.dsp.decisions import fit_probit
 from cosim.errors import InputError
 from cosim.waveform import FloatArray
 
@@ -47,7 +47,7 @@ def ramp(start: float, stop: float, cycles: int, **parameters: float) -> tuple[D
 
 def decided(time: FloatArray, q: FloatArray, cycles: int) -> FloatArray:
     """Decisions of all but the last cycle."""
-    return sampled_decisions(time, q, READ + PERIOD * np.arange(cycles - 1), 0.55)
+    return np.interp(READ + PERIOD * np.arange(cycles - 1), time, q) > 0.55
 
 
 def crossing(start: float, stop: float, cycles: int = 40, **parameters: float) -> float:

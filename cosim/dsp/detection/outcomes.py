@@ -5,7 +5,7 @@ from dataclasses import dataclass, field
 
 import numpy as np
 from scipy.optimize import minimize_scalar
-from scipy.special import ndtr, ndtri
+from scipy.special import ndtr
 
 from cosim.dsp.detection.projection import Projection
 from cosim.dsp.detection.records import Course, Preparation, Transitions
@@ -204,50 +204,6 @@ def best_threshold(
     width = float(bounds[1] - bounds[0])
     found = minimize_scalar(cost, bounds=bounds, method="bounded", options={"xatol": 1e-5 * width})
     return float(found.x)
-
-
-def separation_error(snr: float) -> float:
-    """Give the share of wrong decisions of two equal Gaussians with the threshold in the middle.
-
-    Parameters
-    ----------
-    snr : float
-        Distance of the means over the standard deviation.
-
-    Returns
-    -------
-    float
-        erfc(snr/(2 sqrt 2))/2.
-
-    Notes
-    -----
-    P. Krantz et al., "A quantum engineer's guide to superconducting qubits", Appl. Phys. Rev. 6,
-    021318 (2019), eq. (170).
-    """
-    return float(ndtr(-snr / 2))
-
-
-def snr_for_error(error: float) -> float:
-    """Give the signal over noise that a separation error asks for.
-
-    Parameters
-    ----------
-    error : float
-        Between 0 and 1/2.
-
-    Returns
-    -------
-    float
-        Inverse of `separation_error`.
-
-    Raises
-    ------
-    InputError
-        If the error is out of range.
-    """
-    if not 0 < error < 0.5:
-        raise InputError(f"separation error: wanted one between 0 and 1/2, got {error!r}")
-    return float(-2 * ndtri(error))
 
 
 def _changed_twice(
