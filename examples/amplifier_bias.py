@@ -4,7 +4,7 @@ The collector currents of both stages go down together. Gain and noise of the tr
 from their cards, so does what the converter behind them still resolves: its range stays as it is.
 To save time, fewer time points and times of decay are simulated than in the example itself.
 
-    python examples/amplifier_bias.py bias.png
+    python examples/amplifier_bias.py bias.png 0.7 1.4   # in mA; without any, those below
 """
 
 import sys
@@ -51,7 +51,7 @@ def draw(powers: list[float], results: list[cosim.ReadoutResult], path: Path) ->
     figure.savefig(path, dpi=150)
 
 
-def main(picture: Path | None = None) -> None:
+def main(picture: Path | None, currents: tuple[float, ...]) -> None:
     """Run the readout once per bias and print its row."""
     bench = cosim.load_testbench(HERE / "readout_dispersive.toml")
     assert isinstance(bench, cosim.ReadoutBench)
@@ -59,7 +59,7 @@ def main(picture: Path | None = None) -> None:
     bench = replace(bench, readout=readout, accuracy=replace(bench.accuracy, floor=False))
     print("ic1 (mA)  power (mW)  noise (K)  added quanta      error  separation  quantisation")
     powers, results = [], []
-    for current in CURRENTS:
+    for current in currents:
         bias: dict[str, float | str] = {"ic1": current, "ic2": 2.0 * current}
         parameters = {**bench.netlist.parameters, **bias}
         netlist = replace(bench.netlist, parameters=parameters, steps_per_period=40)
@@ -76,4 +76,5 @@ def main(picture: Path | None = None) -> None:
 
 
 if __name__ == "__main__":
-    main(Path(sys.argv[1]) if len(sys.argv) > 1 else None)
+    chosen = tuple(1e-3 * float(word) for word in sys.argv[2:])
+    main(Path(sys.argv[1]) if len(sys.argv) > 1 else None, chosen or CURRENTS)

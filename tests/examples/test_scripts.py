@@ -4,32 +4,23 @@ The table guards against change; that its numbers are right is what tests/gate, 
 tests/published and tests/crosscheck are for.
 """
 
-import subprocess
-import sys
 from pathlib import Path
 
 import pytest
 
-from tests.examples.committed import EXAMPLES, SCRIPTS, expected, numbers
+from tests.examples.committed import EXAMPLES, SCRIPTS, expected, numbers, run_script
 
 
 @pytest.mark.ngspice
 @pytest.mark.full
 @pytest.mark.parametrize("name", SCRIPTS)
 def test_scripts_run_and_print_the_committed_lines(name: str, tmp_path: Path) -> None:
-    done = subprocess.run(
-        [sys.executable, EXAMPLES / f"{name}.py"],
-        cwd=tmp_path,
-        capture_output=True,
-        text=True,
-        timeout=300,
-        check=False,
-    )
+    done = run_script(name, tmp_path)
     assert done.returncode == 0, done.stderr
     found = numbers(done.stdout)
     # Digits shown, and what is left of an infidelity that a calibration takes to its rounding.
     assert found == [pytest.approx(row, rel=2e-3, abs=1e-11) for row in expected(name)["rows"]]
-    assert len(found) > 2
+    assert found
 
 
 @pytest.mark.parametrize("name", SCRIPTS)
