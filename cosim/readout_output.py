@@ -17,12 +17,13 @@ from cosim.circuit.netlist import resolve_saves
 from cosim.circuit.preparation import prepare
 from cosim.circuit.probe import Probe, evaluate_probe, parse_probe
 from cosim.decks import altered_deck, netlist_of, read_deck, roots_of
-from cosim.dsp.demodulation import demodulate, half_length
+from cosim.dsp.demodulation import MIN_SAMPLES_PER_PERIOD, demodulate, half_length
 from cosim.errors import CosimError, DeckError, InputError, TestbenchError
 from cosim.readout_input import check_readout_window
 from cosim.readout_schema import ReadoutTable
 from cosim.stimuli import apply_stimuli
 from cosim.testbench import ReadoutBench
+from cosim.units import format_quantity
 from cosim.waveform import ComplexArray, FloatArray, Waveform
 
 DEFAULT_SAMPLES = 400  # of a record, where no converter says more
@@ -118,8 +119,8 @@ def make_readout_plan(
     deck = altered_deck(bench, deck)
     stop = stop_of(table, deck)
     check_readout_window(bench.readout, stop)
-    _check_ends(bench, stop)
     step, notices = time_step(table, deck, frequency, "in baseband")
+    _check_carrier(bench, stop, step)
     if bench.stimulus:
         deck, coarse = apply_stimuli(
             deck, bench.stimulus, folder=Path(bench.folder), stop=stop, step=step
@@ -261,8 +262,14 @@ def outputs_record(
         If the output cannot be demodulated.
     """
     if table.output_frequency is not None:
-        found = demodulate(Waveform(time, waves[0], unit="V"), table.output_frequency)
-        return cell_means(found.t, found.iq, grid)
+        found = [demodulate(Waveform(time, v, unit="V"), table.output_frequency) for v in waves]
+        iq = found[0].iq
+        if len(found) > 1:
+            # 2 (I + jQ) turns forwards with the sum and backwards with the other one's conjugate.
+            side = 1j if table.sideband != "lower" else -1j
+            iq = 0.5 * (iq + side * found[1].iq)
+            iq = iq if table.sideband != "lower" else np.conj(iq)
+        return cell_means(found[0].t, iq, grid)
     iq = waves[0].astype(np.complex128)
     if len(waves) > 1:
         iq = iq + 1j * waves[1]
@@ -313,22 +320,43 @@ def capture_of(plan: ReadoutPlan, result: TransientResult) -> Capture:
     return Capture(wave, {}, plan.request.step, files, plan.notices, result)
 
 
-def _check_ends(bench: ReadoutBench, stop: float) -> None:
-    """Keep the record off the ends of a carrier, where the demodulator sees it switched."""
-    if bench.readout.output_frequency is None:
+def _check_carrier(bench: ReadoutBench, stop: float, step: float) -> None:
+    """Refuse an output's frequency that is too fast for the steps or too slow for the window.
+
+    The record must also keep off the ends of a carrier, where the demodulator sees it switched.
+    """
+    frequency = bench.readout.output_frequency
+    if frequency is None:
         return
-    margin = half_length(bench.readout.output_frequency)
-    last = bench.readout.window[1]
-    if last > stop - margin:
+    first, last = bench.readout.window
+    most = 1.0 / (MIN_SAMPLES_PER_PERIOD * step)
+    if frequency > most * (1.0 + 1e-6):
+        raise TestbenchError(
+            f"table [readout], key 'output_frequency': wanted at most "
+            f"{format_quantity(most, 'Hz')}, {MIN_SAMPLES_PER_PERIOD} time steps of "
+            f"{format_quantity(step, 's', 5)} in a period (half the rate of the steps, "
+            f"{format_quantity(0.5 / step, 'Hz')}, is the end of what they can tell), got "
+            f"{format_quantity(frequency, 'Hz')}",
+            hint=f'say max_step = "{1e12 / (64.0 * frequency):.4g} ps" in [netlist]',
+        )
+    least = half_length(frequency)
+    if last - first < least:
+        raise TestbenchError(
+            f"table [readout], key 'window': wanted at least {1e9 * least:.4g} ns, half of the "
+            f"demodulator's filter at {format_quantity(frequency, 'Hz')}, got "
+            f"{1e9 * (last - first):.4g} ns, {frequency * (last - first):.3g} of its periods",
+            hint="a longer window, a higher 'output_frequency', or outputs in baseband",
+        )
+    if last > stop - least:
         raise TestbenchError(
             f"table [readout], key 'window': it ends at {1e9 * last:.6g} ns, and the run must go "
-            f"on for {1e9 * margin:.3g} ns, half of the demodulator's filter at "
-            f"{bench.readout.output_frequency:.6g} Hz",
-            hint=f'say stop = "{1e9 * (last + margin):.6g} ns" or later in [netlist]',
+            f"on for {1e9 * least:.3g} ns, half of the demodulator's filter at "
+            f"{frequency:.6g} Hz",
+            hint=f'say stop = "{1e9 * (last + least):.6g} ns" or later in [netlist]',
         )
-    if bench.sensor is not None and min(bench.sensor.start, bench.readout.window[0]) < margin:
+    if bench.sensor is not None and min(bench.sensor.start, bench.readout.window[0]) < least:
         raise TestbenchError(
-            f"table [sensor], key 'start': wanted at least {1e9 * margin:.3g} ns, half of the "
+            f"table [sensor], key 'start': wanted at least {1e9 * least:.3g} ns, half of the "
             "demodulator's filter, since the carrier begins with the run"
         )
 

@@ -190,11 +190,14 @@ class ReadoutTable:
     probe : str or None
         Output at `output_frequency`, or in baseband where that is not given.
     i, q : str or None
-        In place of `probe`: outputs I and Q in baseband.
+        In place of `probe`: outputs I and Q, in baseband or both at `output_frequency`.
     decision : str or None
         In place of both: a node that stands for the circuit's own decision.
     output_frequency : float or None
-        Frequency of `probe` in Hz.
+        Frequency of `probe`, or of both `i` and `q`, in Hz.
+    sideband : "upper", "lower" or None
+        Of I and Q at `output_frequency`: which way I + jQ turns where the signal is, as exp(+j 2
+        pi f t) or as exp(-j 2 pi f t); what turns the other way is the image. None: "upper".
     threshold : float or None
         Level in V that `decision` is compared with.
     decide_at : float or None
@@ -240,6 +243,7 @@ class ReadoutTable:
     q: str | None = None
     decision: str | None = None
     output_frequency: PositiveFrequency | None = None
+    sideband: Literal["upper", "lower"] | None = None
     threshold: Annotated[float, Quantity("V")] | None = None
     decide_at: Time | None = None
     output_rate: PositiveFrequency | None = None
@@ -295,8 +299,10 @@ class ReadoutTable:
             raise InputError("give one of the outputs 'probe', 'i' with 'q', and 'decision'")
         if self.q is not None and self.i is None:
             raise InputError("'q' goes with 'i'")
-        if self.output_frequency is not None and self.probe is None:
-            raise InputError("'output_frequency' goes with 'probe'")
+        if self.output_frequency is not None and self.probe is None and self.q is None:
+            raise InputError("'output_frequency' goes with 'probe', or with both 'i' and 'q'")
+        if self.sideband is not None and (self.q is None or self.output_frequency is None):
+            raise InputError("'sideband' goes with 'i' and 'q' at an 'output_frequency'")
         if (self.decision is not None) != (self.threshold is not None):
             raise InputError("'threshold' goes with 'decision'")
         if self.decide_at is not None and self.decision is None:
@@ -308,6 +314,14 @@ class ReadoutTable:
             raise InputError("'adc_bits', 'adc_full_scale' and 'adc_rate' go together")
         if self.adc_bits is not None and not 1 <= self.adc_bits <= 32:
             raise InputError(f"key 'adc_bits': wanted 1 to 32, got {self.adc_bits}")
+        if self.q is not None and self.output_frequency is not None and self.adc_rate is not None:
+            # One output at a carrier is digitised behind an ideal mixer; these two are as they are.
+            if self.output_frequency >= 0.5 * self.adc_rate:
+                raise InputError(
+                    f"key 'output_frequency': wanted less than half of 'adc_rate', "
+                    f"{0.5 * self.adc_rate:g} Hz, since 'i' and 'q' are digitised at it, got "
+                    f"{self.output_frequency:g} Hz"
+                )
 
 
 READOUT_TABLES = {

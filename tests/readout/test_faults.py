@@ -21,7 +21,18 @@ BENT = LINEAR.replace("e1 amp 0 in 0 20", "b1 amp 0 v={20*1m*tanh(v(in)/1m)}")
         ({"readout": {"source": "vnone"}}, LINEAR, "vnone"),
         ({"readout": {"window": ["20 ns", "2 us"]}}, LINEAR, "does not lie within the run"),
         ({"readout": {"window": ["20 ns", "460 ns"]}}, LINEAR, "half of the demodulator's filter"),
-        ({"readout": {"output_frequency": "5 GHz"}}, LINEAR, "samples per period of a carrier"),
+        (
+            {"readout": {"output_frequency": "5 GHz"}},
+            LINEAR,
+            "key 'output_frequency': wanted at most 800 MHz, 20 time steps of 62.5 ps in a period "
+            "(half the rate of the steps, 8 GHz, is the end of what they can tell), got 5 GHz",
+        ),
+        (
+            {"readout": {"output_frequency": "20 MHz"}},
+            LINEAR,
+            "key 'window': wanted at least 425.1 ns, half of the demodulator's filter at 20 MHz, "
+            "got 400 ns, 8 of its periods",
+        ),
         ({"readout": {"probe": "v(nowhere)"}}, LINEAR, "key 'probe'"),
         ({"readout": {"probe": "i(vin)"}}, LINEAR, "wanted a voltage"),
         ({"resonator": {"length": "1 us"}}, LINEAR, "behind the run's end"),
