@@ -125,7 +125,31 @@ class ReadoutBench(Bench):
     readout: ReadoutTable
 
 
-def load_testbench(path: str | os.PathLike[str]) -> Testbench | ReadoutBench:
+@dataclass(frozen=True, slots=True, kw_only=True)
+class DesignBench(Bench):
+    """A testbench without a circuit, of which it is asked what a circuit must meet ([specify]).
+
+    Parameters
+    ----------
+    title, netlist, accuracy, stimulus, noise, studies, folder, source, circuit
+        As in `Bench`; there is no netlist, no stimulus and no noise.
+    qubit : QubitTable or None
+        Of a gate, in SI units.
+    gate : GateTable or None
+        What the gate is meant to do.
+    resonator : ResonatorTable or None
+        Of a readout, in SI units.
+    readout : ReadoutTable or None
+        How the readout is judged.
+    """
+
+    qubit: QubitTable | None = None
+    gate: GateTable | None = None
+    resonator: ResonatorTable | None = None
+    readout: ReadoutTable | None = None
+
+
+def load_testbench(path: str | os.PathLike[str]) -> Testbench | ReadoutBench | DesignBench:
     """Read a testbench file.
 
     Parameters
@@ -135,8 +159,8 @@ def load_testbench(path: str | os.PathLike[str]) -> Testbench | ReadoutBench:
 
     Returns
     -------
-    Testbench or ReadoutBench
-        With [gate] or with [readout]; quantities in SI units.
+    Testbench, ReadoutBench or DesignBench
+        With [gate], with [readout], or with [specify] and no circuit; quantities in SI units.
 
     Raises
     ------
@@ -149,7 +173,7 @@ def load_testbench(path: str | os.PathLike[str]) -> Testbench | ReadoutBench:
 
 def make_testbench(
     tables: Mapping[str, Any], *, folder: str | os.PathLike[str] = "."
-) -> Testbench | ReadoutBench:
+) -> Testbench | ReadoutBench | DesignBench:
     """Make a testbench from Python.
 
     Parameters
@@ -162,8 +186,8 @@ def make_testbench(
 
     Returns
     -------
-    Testbench or ReadoutBench
-        With [gate] or with [readout]; quantities in SI units.
+    Testbench, ReadoutBench or DesignBench
+        With [gate], with [readout], or with [specify] and no circuit; quantities in SI units.
 
     Raises
     ------
@@ -189,8 +213,14 @@ def gate_bench(bench: Bench) -> Testbench:
     Raises
     ------
     TestbenchError
-        If it is one of a readout.
+        If it is one of a readout, or has no circuit.
     """
+    if isinstance(bench, DesignBench):
+        raise TestbenchError(
+            f"{bench.source or 'the testbench'} has no [netlist] and no [waveform], so that there "
+            "is nothing to run",
+            hint="`qcosim specify` says what its blocks must meet",
+        )
     if not isinstance(bench, Testbench):
         raise TestbenchError(
             f"{bench.source or 'the testbench'} has [readout]; this takes a testbench with [gate]"
@@ -198,11 +228,15 @@ def gate_bench(bench: Bench) -> Testbench:
     return bench
 
 
-def _build(tables: Mapping[str, Any], *, file: str, folder: str) -> Testbench | ReadoutBench:
+def _build(
+    tables: Mapping[str, Any], *, file: str, folder: str
+) -> Testbench | ReadoutBench | DesignBench:
     label = file or "the testbench"
     for name in tables:
         if isinstance(tables[name], Mapping) and name not in _ALL:
             raise TestbenchError(f"{label}: unknown table [{name}]; {near_names(name, _ALL)}")
+    if "specify" in tables and not any(name in tables for name in SOURCES):
+        return _design_bench(tables, label, folder)
     readout = "readout" in tables
     kinds = {name: TABLES[name] for name in _SHARED} | READOUT_TABLES if readout else TABLES
     arrays = tuple(name for name in ARRAYS if not readout or name != "spectator")
@@ -243,6 +277,36 @@ def _build(tables: Mapping[str, Any], *, file: str, folder: str) -> Testbench | 
             hint='say termination = "50 ohm", or "in deck" where the deck has the load',
         )
     return Testbench(**common, spectator=_read_spectators(tables.get("spectator", []), label))
+
+
+def _design_bench(tables: Mapping[str, Any], label: str, folder: str) -> DesignBench:
+    """Read a testbench without a circuit."""
+    readout = "readout" in tables
+    names = ("resonator", "readout") if readout else ("qubit", "gate")
+    kinds = READOUT_TABLES if readout else TABLES
+    check_keys(tables, ["title", *names, "specify"], label)
+    for name in names:
+        if name not in tables:
+            raise TestbenchError(
+                f"{label}: the table [{name}] is missing",
+                hint="without [netlist] and [waveform] a testbench with [specify] has [qubit] and "
+                "[gate], or [resonator] and [readout]",
+            )
+    parts: dict[str, Any] = {
+        name: read_table(tables[name], kinds[name], file=label, name=name) for name in names
+    }
+    study = tables["specify"]
+    if not isinstance(study, Mapping):
+        raise TestbenchError(f"{label}: wanted a table [specify], got {study!r}")
+    return DesignBench(
+        title=str(tables.get("title", "")),
+        netlist=None,
+        accuracy=AccuracyTable(),
+        studies={"specify": copy.deepcopy(dict(study))},
+        folder=folder,
+        source="" if label == "the testbench" else label,
+        **parts,
+    )
 
 
 def _check_kind(tables: Mapping[str, Any], readout: bool, known: Sequence[str], label: str) -> None:
