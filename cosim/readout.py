@@ -20,9 +20,8 @@ from cosim.dsp.detection.reception import ChainOutput, Detector
 from cosim.dsp.detection.records import Preparation, Records, Transitions
 from cosim.dsp.detection.shots import integrated_shots, record_shots, shot_points
 from cosim.errors import TestbenchError
-from cosim.outgoing import OutputLine, added_quanta, arriving_noise
-from cosim.quantum.readout_limits import dephasing_rate
-from cosim.quantum.resonator import steady_field, wait_for_photons
+from cosim.outgoing import OutputLine, added_quanta, arriving_noise, efficiency
+from cosim.readout_aftermath import find_aftermath
 from cosim.readout_chain import (
     STATES,
     Chain,
@@ -33,8 +32,8 @@ from cosim.readout_chain import (
     transitions_of,
 )
 from cosim.readout_entry import noisy_input, readout_noise_tables
-from cosim.readout_guards import chain_warnings, dispersive_warnings, shot_warnings
-from cosim.readout_input import drive_level, input_frequency_of, output_line
+from cosim.readout_guards import chain_warnings, shot_warnings
+from cosim.readout_input import input_frequency_of, output_line
 from cosim.readout_noise import (
     ChainNoise,
     arriving_only,
@@ -58,7 +57,6 @@ from cosim.waveform import ComplexArray, FloatArray
 Progress = Callable[[float], None]
 
 POINTS = 2000  # of each state, for figures
-LEFT = 0.01  # photons, after which the next gate may begin
 _DENSITY_POINTS = 101
 
 
@@ -191,11 +189,11 @@ def run_readout(
     leaked_at = _leaked(output, detector, split, chain, table.seed)
     floor = _floor(chain.records, runs.half, noise, detector)
     added, kelvin, unsure = _referred(noise, table, line, bench.resonator)
-    photons, wait, dephasing = _left_behind(bench.resonator, inquiry)
+    after = find_aftermath(bench.resonator, inquiry.answers, table.t1, runs.plan.request.stop)
     f = np.linspace(-0.5 / grid.step, 0.5 / grid.step, _DENSITY_POINTS)
     warnings = (
         *runs.plan.notices,
-        *_dispersive(bench.resonator, inquiry),
+        *after.warnings,
         *chain_warnings(chain.compression, noise, added, split),
         *shot_warnings(split, shots, records),
     )
@@ -209,14 +207,17 @@ def run_readout(
         best_integration_time=scan.best_time,
         best_assignment_error=scan.best_error,
         added_noise_quanta=added,
+        efficiency=math.nan if math.isnan(added) else efficiency(max(added, 0.0)),
         noise_temperature=kelvin,
         noise_temperature_error=unsure,
         noise_method=noise.method,
-        residual_photons=photons,
-        wait=wait,
+        residual_photons=after.residual_photons,
+        residual_stark_shift=after.residual_stark_shift,
+        wait=after.wait,
         latency=decision_latency(detector.adc, table.adc_cycles) if detector.adc else 0.0,
         repeat_agreement=_agreement(split, *chances),
-        dephasing_rate=dephasing,
+        dephasing_rate=after.dephasing_rate,
+        purcell_time=after.purcell_time,
         shots=shots,
         records=records,
         numerical_floor=floor,
@@ -319,23 +320,12 @@ def _referred(
     return added, own * kelvin, unsure * float(arriving.emf_density[0]) * kelvin
 
 
-def _left_behind(pulse: ResonatorTable | None, inquiry: Inquiry) -> tuple[float, float, float]:
-    """Photons at the end of the run, the wait in s until few are left, and dephasing in 1/s."""
-    if pulse is None or inquiry.answers is None:
-        return math.nan, math.nan, math.nan
-    resonator = pulse.resonator()
-    photons = max(float(inquiry.answers.fields[name].photons[-1]) for name in STATES)
-    level = drive_level(pulse, resonator)
-    ground, excited = (steady_field(resonator, state, level, pulse.drive) for state in (0, 1))
-    rate = float(dephasing_rate(resonator, ground, excited))
-    return photons, wait_for_photons(resonator, photons, LEFT), rate
-
-
 def _agreement(split: AssignmentSplit, transitions: Transitions, preparation: Preparation) -> float:
     """Repeat agreement; a state that is converted to be seen is not there for a second readout."""
     if transitions.converts:
         return math.nan
     return repeat_agreement(split, transitions, preparation).mean
+
 
 def _leaked(
     output: ChainOutput, detector: Detector, split: AssignmentSplit, chain: Chain, seed: int
@@ -345,14 +335,6 @@ def _leaked(
         return np.zeros(0), np.zeros(0, dtype=np.complex128)
     point = leaked_point(output, detector, split, chain.second)
     return leaked_decisions(split, point), leaked_points(split, point, POINTS, seed)
-
-
-
-def _dispersive(pulse: ResonatorTable | None, inquiry: Inquiry) -> tuple[str, ...]:
-    if pulse is None or inquiry.answers is None:
-        return ()
-    fields = inquiry.answers.fields
-    return dispersive_warnings(pulse, max(float(fields[name].photons.max()) for name in STATES))
 
 
 def _half_step(table: ReadoutTable, plan: ReadoutPlan, grid: Grid, inquiry: Inquiry) -> Records:

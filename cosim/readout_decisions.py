@@ -117,7 +117,7 @@ def run_decisions(bench: ReadoutBench, *, deck: Deck | None = None) -> DecisionR
     photons = max(float(inquiry.answers.fields[name].photons.max()) for name in (GROUND, EXCITED))
     warnings = (
         *plan.notices,
-        *dispersive_warnings(pulse, photons),
+        *dispersive_warnings(pulse, photons, table.t1),
         *noise.notices,
         *_judged(threshold, fit, counted, table.decision),
     )

@@ -6,7 +6,7 @@ from cosim.dsp.detection.assignment import AssignmentSplit
 from cosim.dsp.detection.shots import ShotCounts
 from cosim.outgoing import least_added_quanta
 from cosim.quantum.qubit import Qubit
-from cosim.quantum.readout_limits import dispersive_guards
+from cosim.quantum.readout_limits import DispersiveGuards, dispersive_guards, transmon_pulls
 from cosim.readout_noise import ARRIVING, ChainNoise
 from cosim.readout_schema import ResonatorTable
 from cosim.units import format_quantity
@@ -21,7 +21,34 @@ BENT = 0.1  # of the noise, by which a run of all of it may differ from the sum 
 UNSURE = 0.2  # relative standard error of the noise
 
 
-def dispersive_warnings(pulse: ResonatorTable, photons: float) -> tuple[str, ...]:
+def dispersive_numbers(pulse: ResonatorTable, photons: float) -> DispersiveGuards | None:
+    """Say in numbers how far the qubit only shifts its resonator.
+
+    Parameters
+    ----------
+    pulse : ResonatorTable
+        With `coupling` and `qubit_frequency`, or nothing is known.
+    photons : float
+        Largest mean photon number of the readout.
+
+    Returns
+    -------
+    DispersiveGuards or None
+
+    Raises
+    ------
+    InputError
+        If chi has another sign than coupling, detuning and anharmonicity make.
+    """
+    if pulse.coupling is None or pulse.qubit_frequency is None:
+        return None
+    levels = 2 if pulse.anharmonicity is None else 3
+    qubit = Qubit(pulse.qubit_frequency, levels, pulse.anharmonicity or 0.0)
+    coupling = 2.0 * math.pi * pulse.coupling
+    return dispersive_guards(pulse.resonator(), qubit, coupling, photons, pulse.filter_quality)
+
+
+def dispersive_warnings(pulse: ResonatorTable, photons: float, t1: float) -> tuple[str, ...]:
     """Judge whether the qubit only shifts its resonator.
 
     Parameters
@@ -30,6 +57,8 @@ def dispersive_warnings(pulse: ResonatorTable, photons: float) -> tuple[str, ...
         With `coupling` and `qubit_frequency`, or nothing is judged.
     photons : float
         Largest mean photon number of the readout.
+    t1 : float
+        Decay time of |1> in s that the readout is given.
 
     Returns
     -------
@@ -40,11 +69,9 @@ def dispersive_warnings(pulse: ResonatorTable, photons: float) -> tuple[str, ...
     InputError
         If chi has another sign than coupling, detuning and anharmonicity make.
     """
-    if pulse.coupling is None or pulse.qubit_frequency is None:
+    found = dispersive_numbers(pulse, photons)
+    if found is None or pulse.coupling is None or pulse.qubit_frequency is None:
         return ()
-    levels = 2 if pulse.anharmonicity is None else 3
-    qubit = Qubit(pulse.qubit_frequency, levels, pulse.anharmonicity or 0.0)
-    found = dispersive_guards(pulse.resonator(), qubit, 2.0 * math.pi * pulse.coupling, photons)
     warnings = []
     if photons > NEAR_CRITICAL * found.critical_photons:
         warnings.append(
@@ -56,6 +83,22 @@ def dispersive_warnings(pulse: ResonatorTable, photons: float) -> tuple[str, ...
         warnings.append(
             f"chi is {format_quantity(pulse.chi, 'Hz')}, and coupling, detuning and anharmonicity "
             f"make {format_quantity(expected, 'Hz')}"
+        )
+    if pulse.chi_2 is not None and pulse.anharmonicity is not None:
+        delta = pulse.qubit_frequency - pulse.frequency
+        # Second order in the coupling, hence in Hz as in rad/s.
+        pulls = transmon_pulls(pulse.coupling, delta, pulse.anharmonicity)
+        expected = pulls[2] - 0.5 * (pulls[0] + pulls[1])
+        if abs(pulse.chi_2 - expected) > CHI_OFF * abs(expected):
+            warnings.append(
+                f"chi_2 is {format_quantity(pulse.chi_2, 'Hz')}, and coupling, detuning and "
+                f"anharmonicity make {format_quantity(expected, 'Hz')}"
+            )
+    if t1 * found.purcell_rate > 1.0:
+        given = "no 't1' is given" if math.isinf(t1) else f"'t1' is {format_quantity(t1, 's')}"
+        warnings.append(
+            f"{given}, and through the resonator alone the qubit decays in "
+            f"{format_quantity(1.0 / found.purcell_rate, 's')}"
         )
     return tuple(warnings)
 

@@ -1,5 +1,6 @@
 """The declared results of a readout, as they are shown, archived and read back."""
 
+import math
 from dataclasses import dataclass, field
 from typing import Any
 
@@ -148,6 +149,14 @@ class ReadoutResult:
     noise_temperature_error : float
         Standard error of `noise_temperature` in K, of the runs with the netlist's noise alone; 0
         where it is no matter of chance.
+    efficiency : float
+        Part of the information in the resonator's field that the chain leaves, 1/(1 + 2 n) of n
+        added quanta; NaN as these.
+    residual_stark_shift : float
+        Of the qubit's frequency by the photons at the end of the run in Hz; NaN for a sensor.
+    purcell_time : float
+        In which the qubit decays through its resonator alone in s; NaN where the testbench gives
+        no coupling.
     leaked : ndarray, shape (2,)
         P(0|2) and P(1|2) of a qubit that has leaked to |2> and stays there; empty where the
         testbench does not say by how much |2> shifts the resonance.
@@ -185,6 +194,9 @@ class ReadoutResult:
     warnings: tuple[str, ...]
     run: RunRecord = field(metadata=_NOT_IN_TABLE)
     noise_temperature_error: float = field(default=0.0, metadata=_unit("K"))
+    efficiency: float = field(default=math.nan, metadata=_unit("1"))
+    residual_stark_shift: float = field(default=math.nan, metadata=_unit("Hz"))
+    purcell_time: float = field(default=math.nan, metadata=_unit("s"))
     leaked: FloatArray = field(
         default_factory=_not_known,
         metadata={"unit": "1", "axes": ("decided",), "labels": {"decided": ("0", "1")}},
@@ -217,14 +229,17 @@ READOUT_FIELDS = (
     "best_integration_time",
     "best_assignment_error",
     "added_noise_quanta",
+    "efficiency",
     "noise_temperature",
     "noise_temperature_error",
     "noise_method",
     "residual_photons",
+    "residual_stark_shift",
     "wait",
     "latency",
     "repeat_agreement",
     "dephasing_rate",
+    "purcell_time",
     "shots",
     "records",
     "numerical_floor",

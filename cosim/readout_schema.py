@@ -58,6 +58,9 @@ class ResonatorTable:
     qubit_frequency, coupling, anharmonicity : float or None
         The qubit's own, in Hz: what the critical photon number, the decay through the resonator
         and the sign of `chi` are judged by.
+    filter_quality : float or None
+        Quality of a bandpass filter at the resonator's frequency, between it and the line, that
+        keeps the qubit from decaying through it.
     """
 
     geometry: Literal["reflection", "transmission", "hanger"]
@@ -79,6 +82,7 @@ class ResonatorTable:
     qubit_frequency: PositiveFrequency | None = None
     coupling: PositiveFrequency | None = None
     anharmonicity: Frequency | None = None
+    filter_quality: float | None = None
 
     def __post_init__(self) -> None:
         self.resonator()
@@ -96,6 +100,12 @@ class ResonatorTable:
             raise InputError("'ring_down' and 'ring_down_length' go together")
         if (self.coupling is None) != (self.qubit_frequency is None):
             raise InputError("'qubit_frequency' and 'coupling' go together")
+        if self.filter_quality is not None and self.coupling is None:
+            raise InputError("'filter_quality' goes with 'qubit_frequency' and 'coupling'")
+        if self.filter_quality is not None and not 0.0 < self.filter_quality < math.inf:
+            raise InputError(
+                f"key 'filter_quality': wanted more than 0, got {self.filter_quality:g}"
+            )
 
     @property
     def drive(self) -> float:

@@ -150,7 +150,8 @@ def _noise_table(result: ReadoutResult) -> Table:
         method += f": {noise.reason}"
     added = result.added_noise_quanta
     none = "- (a sensor, or one output in baseband)"
-    table.add_row("added noise", none if math.isnan(added) else f"{added:.4g} quanta")
+    quanta = f"{added:.4g} quanta: {result.efficiency:.3g} of the information is left"
+    table.add_row("added noise", none if math.isnan(added) else quanta)
     kelvin = result.noise_temperature
     unsure = result.noise_temperature_error
     bar = f" ± {format_quantity(unsure, 'K', 2)}" if unsure > 0.0 else ""
@@ -173,11 +174,16 @@ def _aftermath_table(result: ReadoutResult) -> Table:
     rate = result.dephasing_rate
     agreement = result.repeat_agreement
     wait = format_quantity(result.wait, "s")
-    table.add_row("photons at the end", "-" if math.isnan(photons) else f"{photons:.3g}")
+    shift = format_quantity(result.residual_stark_shift, "Hz")
+    left = f"{photons:.3g}, which shift the qubit by {shift}"
+    table.add_row("photons at the end", "-" if math.isnan(photons) else left)
     table.add_row("wait", wait if math.isnan(result.wait) else f"{wait} until 0.01 of one is left")
     table.add_row("latency", format_quantity(result.latency, "s"))
     table.add_row("repeat agreement", "-" if math.isnan(agreement) else f"{agreement:.5f}")
     table.add_row("dephasing", "-" if math.isnan(rate) else f"{rate:.4g} /s while driven")
+    if not math.isnan(result.purcell_time):
+        alone = format_quantity(result.purcell_time, "s")
+        table.add_row("Purcell decay", f"in {alone} through the resonator alone")
     return table
 
 

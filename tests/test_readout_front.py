@@ -140,6 +140,9 @@ def make_result(*, quadratures: int = 2, told: bool = True) -> ReadoutResult:
             points[1],
             0.5 * points[0] if told else np.zeros(0, complex),
         ),
+        efficiency=0.0385 if told else math.nan,
+        residual_stark_shift=-41e3 if told else math.nan,
+        purcell_time=77e-6 if told else math.nan,
         leaked=np.array([0.25, 0.75]) if told else np.zeros(0),
         warnings=("the chain saturates for |1> more than for |0>",) if told else (),
         run=RunRecord(
@@ -203,7 +206,10 @@ class TestReadoutTable:
         # converter 100 ns later: it converts every 8 ns.
         assert "integrated from 204 ns to 900 ns" in words
         assert "leaked to 2 P(0|2) = 2.5000e-01 P(1|2) = 7.5000e-01" in words
-        for expected in ("12.5 quanta", "3.6 K", "± 7%: the chain is switched", "wait 640 ns"):
+        assert "12.5 quanta: 0.0385 of the information is left" in words
+        assert "photons at the end 3.1, which shift the qubit by -41 kHz" in words
+        assert "Purcell decay in 77 µs through the resonator alone" in words
+        for expected in ("3.6 K", "± 7%: the chain is switched", "wait 640 ns"):
             assert expected in words
         assert "arriving 41.0%, xlna.xfirst.m1 30.0%" in words
         assert "r3" not in words
