@@ -47,9 +47,9 @@ def test_five_hundred_runs_leave_nothing_behind(own_folder: Path) -> None:
     bench = cosim.load_testbench(EXAMPLES / "x90_spin.toml")
     plan = make_plan(bench)
     # A short stretch of the same deck: what is left behind does not depend on the length.
-    request = replace(plan.request, stop=0.4e-9)
+    request = replace(plan.request, stop=0.1e-9)
     good = replace(plan, request=request)
-    endless = replace(plan, request=replace(plan.request, stop=1e-3, time_limit=0.1))
+    endless = replace(plan, request=replace(plan.request, stop=1e-3, time_limit=0.05))
     starved = replace(plan, request=replace(request, memory_limit=64 * 2**20))
     process = psutil.Process()
     counts = dict.fromkeys(("good", "failed"), 0)
