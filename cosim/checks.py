@@ -119,7 +119,7 @@ def _check_readout(
     request = plan.request
     resolve_saves(plan.deck, request.saves)
     prepared = prepare(inquiry.deck_of(plan, GROUND), request)
-    counts = transients_of(bench, inquiry)
+    counts = transients_of(bench, plan, inquiry)
     points = round(request.stop / request.step) + 1
     short = replace(request, stop=min(request.stop, TRIAL_POINTS * request.step))
     simulate_prepared(prepare(inquiry.deck_of(plan, GROUND), short), short)

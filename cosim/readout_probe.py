@@ -3,12 +3,14 @@
 import math
 from dataclasses import dataclass, replace
 
+from cosim.circuit.inventory import noisy_devices
 from cosim.circuit.preparation import prepare
 from cosim.circuit.simulator import simulate_prepared
 from cosim.decision_noise import INJECTION, ROUNDS, SEEDS
 from cosim.probe_run import BYTES, COPIES, POINTS, Estimate
 from cosim.readout_chain import STATES, Inquiry
 from cosim.readout_decisions import COUNTED
+from cosim.readout_injection import arriving_runs
 from cosim.readout_input import GROUND
 from cosim.readout_output import ReadoutPlan
 from cosim.testbench import ReadoutBench
@@ -16,7 +18,10 @@ from cosim.voltage_noises import NetlistNoise
 
 # Transients with which a comparator's threshold is found, with which the noise is closed in on, and
 # those for each answer with a change of state (counted on the comparators of the tests).
-_THRESHOLD, _PILOTS, _PATH = 16, 16, 7
+_THRESHOLD, _PILOTS, _PATH = 16, 24, 7
+# A noisy run over a clean one, in time (a modulator of 52 MOSFETs), and vectors for each device
+# that makes noise: its bias in a clean run, and its current on the way to a noisy one.
+_NOISIER, _BIAS, _CURRENT = 1.45, 4, 4
 # Bytes of a whole readout in an archive: what does not grow with the number of points.
 _RECORD = 3e5
 
@@ -38,21 +43,23 @@ class Transients:
     half: int
 
 
-def transients_of(bench: ReadoutBench, inquiry: Inquiry) -> Transients:
+def transients_of(bench: ReadoutBench, plan: ReadoutPlan, inquiry: Inquiry) -> Transients:
     """Count the runs of the netlist that a readout takes.
 
     Parameters
     ----------
     bench : ReadoutBench
         The testbench.
+    plan : ReadoutPlan
+        With the deck.
     inquiry : Inquiry
         What is asked.
 
     Returns
     -------
     Transients
-        A chain that bends takes a few more; devices one by one take `noisy` as often as there are
-        devices; noise that proves to be stationary takes none.
+        A chain that bends takes a few more; noise that proves to be stationary takes no noisy run.
+        Of a comparator about as many: how soon noisy decisions err is not known beforehand.
     """
     noise = [one for one in bench.noise if isinstance(one, NetlistNoise)]
     jumps = len(inquiry.jumps)
@@ -60,9 +67,16 @@ def transients_of(bench: ReadoutBench, inquiry: Inquiry) -> Transients:
         seeds = noise[0].seeds if noise else SEEDS
         noisy = _PILOTS + 2 * (ROUNDS + COUNTED) * seeds
         half = _THRESHOLD if bench.accuracy.floor else 0
-        return Transients(_THRESHOLD + _PATH * jumps, noisy, half)
+        # One more clean run, at the threshold, gives the bias by which devices make noise.
+        return Transients(_THRESHOLD + 1 + _PATH * jumps, noisy, half)
     weak = 3 if inquiry.answers is not None else 0
-    injected = sum(one.seeds for one in noise if one.method in ("auto", INJECTION))
+    injected = 0
+    for one in noise:
+        if one.method in ("auto", INJECTION):
+            devices = len(noisy_devices(plan.deck).devices) if one.by_device else 0
+            injected += one.seeds * (1 + devices)
+            # What arrives is run alone as well, and once with all the rest.
+            injected += arriving_runs(one.seeds) + 1 if inquiry.answers is not None else 0
     clean = len(STATES) * (2 if noise else 1) + jumps + weak
     return Transients(clean, injected, len(STATES) if bench.accuracy.floor else 0)
 
@@ -82,22 +96,26 @@ def estimate_readout(bench: ReadoutBench, plan: ReadoutPlan, inquiry: Inquiry) -
     Returns
     -------
     Estimate
-        From the deck's first points, and with noisy runs as long as clean ones.
+        From the deck's first points.
 
     Raises
     ------
     SimulationError, DeckError
         If the simulator fails.
     """
-    counts = transients_of(bench, inquiry)
-    time = (counts.clean + counts.noisy) * _time_of(plan, inquiry)
+    counts = transients_of(bench, plan, inquiry)
+    time = (counts.clean + _NOISIER * counts.noisy) * _time_of(plan, inquiry)
     if counts.half:
         time += counts.half * _time_of(plan.half_step(), inquiry)
     points = math.ceil(plan.request.stop / plan.request.step)
     vectors = 1 + len(plan.request.saves)
     # The runs of a chain are kept until its records are read, those of a comparator are not.
-    kept = COPIES if bench.readout.decision is not None else COPIES + counts.clean
-    return Estimate(time, float(kept * BYTES * points * vectors), _RECORD)
+    decides = bench.readout.decision is not None
+    kept = vectors * (COPIES if decides else COPIES + counts.clean)
+    if bench.noise:
+        devices = len(noisy_devices(plan.deck).devices)
+        kept += devices * ((1 if decides else len(STATES)) * _BIAS + _CURRENT)
+    return Estimate(time, float(BYTES * points * kept), _RECORD)
 
 
 def _time_of(plan: ReadoutPlan, inquiry: Inquiry) -> float:

@@ -172,7 +172,7 @@ def _lines(records: ComplexArray, step: float) -> tuple[ComplexArray, float]:
 
 
 def _number(count: int) -> npt.NDArray[np.int_]:
-    return np.abs(np.fft.fftfreq(count) * count).round().astype(int)
+    return np.asarray(np.abs(np.fft.fftfreq(count) * count).round().astype(int))
 
 
 def _bands(count: int) -> list[tuple[float, npt.NDArray[np.bool_]]]:
