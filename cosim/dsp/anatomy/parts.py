@@ -270,7 +270,7 @@ def _distorted(
     size = samples.size
     total = float(size.sum())
     factor: ComplexArray = np.ones(size.size, dtype=np.complex128)
-    tail: ComplexArray | float = 0.0
+    tail: ComplexArray = np.zeros(size.size, dtype=np.complex128)
     if numbers["droop"]:
         place = _place(grid, shape)
         factor += numbers["droop"] * (place - float(size @ place) / total)
@@ -280,19 +280,18 @@ def _distorted(
         rate = 1.0 / numbers["settling_time"]
         on, off = (_decay(grid, edge, rate) for edge in (shape.start, shape.stop))
         factor += settling * (on - float(size @ on) / total)
-        tail = left * off * samples.falling
+        tail += left * off * samples.falling
     waves = [complex(*(numbers[name] for name in pair)) for pair in _ringing_pairs()]
     if any(waves):
         rate = 1.0 / numbers["ringing_time"]
-        for place, (edge, gate) in enumerate(((shape.start, size), (shape.stop, samples.falling))):
-            decay = _decay(grid, edge, rate)
-            angle = 2.0 * math.pi * numbers["ringing_frequency"] * (grid.t - edge)
-            up, down = waves[2 * place : 2 * place + 2]
+        for begin, (up, down) in ((shape.start, waves[:2]), (shape.stop, waves[2:])):
+            decay = _decay(grid, begin, rate)
+            angle = 2.0 * math.pi * numbers["ringing_frequency"] * (grid.t - begin)
             wave = decay * (up * np.exp(1j * angle) + down * np.exp(-1j * angle))
-            if place == 0:
+            if begin == shape.start:
                 factor += wave - complex(size @ wave) / total
             else:
-                tail = tail + wave * gate
+                tail += wave * samples.falling
     return samples.value * factor + tail, phase_of(numbers, grid, shape, size)
 
 

@@ -1,0 +1,208 @@
+"""What the plateau of a pulse shows: level, phase, droop, decays and lines."""
+
+import math
+
+import numpy as np
+
+from cosim.dsp.anatomy.fitting import OUTSIDE, Work, fit_numbers, scales_of, spur_scales
+from cosim.dsp.anatomy.leaking import find_leakage
+from cosim.dsp.anatomy.lines import LEAST, find_decay, find_lines
+from cosim.dsp.anatomy.outline import outline_names
+from cosim.dsp.anatomy.parts import GROUPS, Spur, actual_shape, compose, phase_of
+from cosim.dsp.anatomy.shapes import Grid, Shape, sample_shape
+from cosim.waveform import ComplexArray, FloatArray
+
+# A pulse with this part of its duration as a plateau has one that can droop.
+_LEAST_PLATEAU = 0.3
+# Samples of a plateau at least.
+_LEAST_SAMPLES = 8
+# Decays of more than this part of the pulse are no imperfections.
+_MOST = 0.3
+# What goes on after the pulse, by what shows on its plateau.
+_TAILS = {
+    "settling_re": "tail_re",
+    "settling_im": "tail_im",
+    **{name: name.replace("_on_", "_off_") for name in GROUPS["ringing"] if "_on_" in name},
+}
+_SHAPE = ("centre", "duration", "rise", "fall", "weight")
+
+
+def plateau_of(grid: Grid, shape: Shape) -> slice | None:
+    """Give the samples of the plateau, an edge's length away from the edges.
+
+    Parameters
+    ----------
+    grid : Grid
+    shape : Shape
+
+    Returns
+    -------
+    slice or None
+        None for a pulse without one.
+    """
+    if shape.family == "gaussian":
+        return None
+    start = shape.start + 0.5 * shape.rise + min(shape.rise, 0.05 * shape.duration)
+    stop = shape.stop - 0.5 * shape.fall - min(shape.fall, 0.05 * shape.duration)
+    if stop - start < _LEAST_PLATEAU * shape.duration:
+        return None
+    first, last = np.searchsorted(grid.t, (start, stop))
+    return slice(int(first), int(last)) if last - first >= _LEAST_SAMPLES else None
+
+
+def fit_by_plateau(
+    work: Work,
+    numbers: dict[str, float],
+    shape: Shape,
+    spurs: tuple[Spur, ...],
+    names: list[str],
+    plateau: slice,
+) -> tuple[dict[str, float], tuple[Spur, ...]]:
+    """Fit what the plateau shows, then tails, then edges.
+
+    What edges do to the phase is neither an offset of the carrier nor a drift.
+
+    Parameters
+    ----------
+    work : Work
+    numbers : dict of float
+        From the outline.
+    shape : Shape
+        Whose family the pulse is of.
+    spurs : tuple of Spur
+        At multiples of the clock.
+    names : list of str
+        Numbers that are free on the plateau.
+    plateau : slice
+        From `plateau_of`.
+
+    Returns
+    -------
+    numbers : dict of float
+    spurs : tuple of Spur
+        With those that were found.
+    """
+    found = actual_shape(numbers, shape)
+    size = sample_shape(found, work.grid).size
+    weights = np.where(size < OUTSIDE, 1.0, 0.0)
+    weights[plateau] = 1.0
+    free = scales_of(work, numbers, names) | spur_scales(numbers, spurs, frequencies=False)
+    numbers = fit_numbers(work, numbers, shape, free, spurs, weights)
+    tails: list[str] = []
+    for search in (_settling, _lines):
+        left = _left_over(work, numbers, shape, spurs, plateau)
+        if float(np.abs(left).max()) < LEAST:
+            break
+        begin, more, beside = search(work, numbers, shape, spurs, plateau, left)
+        if not more and len(beside) == len(spurs):
+            continue
+        wider = free | scales_of(work, begin, more)
+        wider |= spur_scales(begin, beside[len(spurs) :], frequencies=True)
+        trial = fit_numbers(work, begin, shape, wider, beside, weights)
+        if _plausible(work, trial, found):
+            numbers, free, spurs = trial, wider, beside
+            tails += [_TAILS[name] for name in more if name in _TAILS]
+    edges = [name for name in _SHAPE if name in outline_names(work, shape)]
+    for _ in range(2 if tails or spurs else 1):
+        if tails or spurs:
+            numbers |= find_leakage(work, numbers, size, spurs)
+            numbers = fit_numbers(work, numbers, shape, free, spurs, weights)
+            numbers = _with_tails(work, numbers, shape, spurs, tails)
+        numbers = fit_numbers(work, numbers, shape, scales_of(work, numbers, edges), spurs)
+    return numbers, spurs
+
+
+def _with_tails(
+    work: Work,
+    numbers: dict[str, float],
+    shape: Shape,
+    spurs: tuple[Spur, ...],
+    tails: list[str],
+) -> dict[str, float]:
+    """Fit what goes on after the pulse, with the time constants of its plateau."""
+    if not tails:
+        return numbers
+    found = actual_shape(numbers, shape)
+    begin = found.stop + 0.5 * found.fall + 2.0 * work.grid.step
+    after = np.where(work.grid.t > begin, 1.0, 0.0)
+    trial = fit_numbers(work, numbers, shape, scales_of(work, numbers, tails), spurs, after)
+    return trial if max(abs(trial[name]) for name in tails) < _MOST else numbers
+
+
+def _left_over(
+    work: Work,
+    numbers: dict[str, float],
+    shape: Shape,
+    spurs: tuple[Spur, ...],
+    part: slice,
+) -> ComplexArray:
+    """Give what is left of the plateau over the pulse."""
+    found = actual_shape(numbers, shape)
+    size = sample_shape(found, work.grid).size
+    carrier = numbers["level"] * np.exp(1j * phase_of(numbers, work.grid, found, size))
+    made = compose(numbers, work.grid, shape, spurs, work.wanted.baseband_frequency)
+    return np.asarray(((work.iq - made) / carrier)[part])
+
+
+def _plausible(work: Work, numbers: dict[str, float], shape: Shape) -> bool:
+    """Tell whether decays are small, and longer than what the edges can hide."""
+    least = 2.0 * work.grid.step
+    size = max(abs(numbers[name]) for name in (*GROUPS["settling"], *GROUPS["ringing"]))
+    times = numbers["settling_time"], numbers["ringing_time"]
+    return size < _MOST and min(times) > least and max(times) < 2.0 * shape.duration
+
+
+def _settling(
+    work: Work,
+    numbers: dict[str, float],
+    shape: Shape,
+    spurs: tuple[Spur, ...],
+    part: slice,
+    left: ComplexArray,
+) -> tuple[dict[str, float], list[str], tuple[Spur, ...]]:
+    found = actual_shape(numbers, shape)
+    time = find_decay(work.grid.t[part], left, found.start, found.duration)
+    if time is None:
+        return numbers, [], spurs
+    begin = numbers | {"settling_time": time}
+    return begin, ["settling_re", "settling_im", "settling_time"], spurs
+
+
+def _lines(
+    work: Work,
+    numbers: dict[str, float],
+    shape: Shape,
+    spurs: tuple[Spur, ...],
+    part: slice,
+    left: ComplexArray,
+) -> tuple[dict[str, float], list[str], tuple[Spur, ...]]:
+    size = sample_shape(actual_shape(numbers, shape), work.grid).size
+    begin, names = dict(numbers), list[str]()
+    added: list[Spur] = []
+    for line in find_lines(work.grid.t[part], left):
+        if math.isfinite(line.decay_time):
+            begin |= {"ringing_frequency": line.frequency, "ringing_time": line.decay_time}
+            names += [name for name in GROUPS["ringing"] if "_on_" in name]
+            names += ["ringing_frequency", "ringing_time"]
+            continue
+        amplitude = line.amplitude * numbers["level"] * np.exp(1j * numbers["phase"])
+        frequency = line.frequency + numbers["frequency"]
+        tone = amplitude * np.exp(2j * math.pi * frequency * work.grid.t)
+        spur = Spur(f"spur {len(added) + 1}", _comes_and_goes(work, size, tone))
+        values = (float(amplitude.real), float(amplitude.imag))
+        begin |= dict(zip(spur.numbers, values, strict=True))
+        begin[f"{spur.name}_frequency"] = frequency
+        added.append(spur)
+    return begin, names, (*spurs, *added)
+
+
+def _comes_and_goes(work: Work, size: FloatArray, tone: ComplexArray) -> bool:
+    """Tell whether a line is there during the pulse only: it explains nothing outside of it."""
+    middle = int(np.argmax(size))
+    with_it = without = 0.0
+    for side in (slice(0, middle), slice(middle, None)):
+        there = (size < OUTSIDE)[side]
+        for taken, sign in ((work.iq[side][there], 0), ((work.iq - tone)[side][there], 1)):
+            power = float(np.sum(np.abs(taken - taken.mean()) ** 2)) if taken.size else 0.0
+            with_it, without = with_it + power * (1 - sign), without + power * sign
+    return not without < 0.5 * with_it
