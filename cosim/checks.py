@@ -19,6 +19,7 @@ from cosim.readout_chain import make_inquiry
 from cosim.readout_input import GROUND
 from cosim.readout_output import make_readout_plan, record_grid
 from cosim.readout_probe import estimate_readout, transients_of
+from cosim.readout_pulse import pulse_source, silent_pulse
 from cosim.sweep.estimate import estimate_sweep
 from cosim.sweep.plan import SweepPlan
 from cosim.sweep.planning import make_sweep
@@ -111,7 +112,11 @@ def _check_readout(
         assert isinstance(first, ReadoutBench)  # As the testbench that it is made of.
         bench = first
     plan = make_readout_plan(bench, readout_frequency(bench))
-    inquiry = make_inquiry(bench, plan)
+    source = pulse_source(bench)
+    played = None
+    if source is not None and bench.resonator is not None:
+        played = silent_pulse(bench.resonator, plan.request.stop)
+    inquiry = make_inquiry(bench, plan, played)
     for noise in bench.noise:
         if isinstance(noise, NetlistNoise):
             noise_settings(noise, plan.deck)
@@ -153,7 +158,9 @@ def _check_readout(
         ),
         Finding("simulator", simulator_version(), "simulator", simulator_version()),
     ]
-    notices = (*prepared.notices, *plan.notices)
+    if source is not None:
+        found += _pulse_findings(source, bench.accuracy.floor)
+    notices = (*prepared.notices, *plan.notices, *inquiry.notices)
     found += [Finding("notice", text, f"notice_{k}", text) for k, text in _count(notices)]
     if sweep is not None:
         found += _sweep_findings(sweep)
@@ -163,6 +170,20 @@ def _check_readout(
     found.append(Finding("result", "ready to run", "ready", True))
     lines = kept_lines(prepared.lines, prepared.origins, plan.deck.files, plan.confidential)
     return tuple(found), lines
+
+
+def _pulse_findings(source: Testbench, floor: bool) -> list[Finding]:
+    """Look at the netlist, or the file, that makes the pulse of a readout."""
+    if source.netlist is None:
+        return _waveform_findings(source)
+    plan = make_plan(source)
+    try_deck(plan)
+    request, runs = plan.request, 2 if floor else 1
+    text = (
+        f"{plan.deck.path}: {format_quantity(request.stop, 's')} at "
+        f"{format_quantity(request.step, 's', 5)}, {runs} run{'s' if runs > 1 else ''}"
+    )
+    return [Finding("pulse", text, "pulse_runs", runs)]
 
 
 def _sweep_findings(plan: SweepPlan) -> list[Finding]:

@@ -24,7 +24,6 @@ from cosim.readout_entry import (
     readout_noise_tables,
     resistors_behind,
 )
-from cosim.readout_input import output_line
 from cosim.testbench import ReadoutBench
 
 INJECTION, ARRIVING = "injection", "arriving only"
@@ -92,7 +91,7 @@ def deciding_noise(
     plan, table, answers = comparator.plan, comparator.table, comparator.answers
     deck = deck_with_answer(plan, table, answers, comparator.emf(threshold.offset))
     clean = clean_run(deck, plan.request, [probe.text for probe in plan.probes])
-    arriving = arriving_noise(output_line(table), [answers.drive.frequency])
+    arriving = arriving_noise(answers.line, [answers.drive.frequency])
     behind = resistors_behind(plan, noisy_input(arriving, table), clean, table)
     tables = readout_noise_tables(bench)
     if not tables:

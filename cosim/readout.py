@@ -20,7 +20,7 @@ from cosim.dsp.detection.reception import ChainOutput, Detector
 from cosim.dsp.detection.records import Preparation, Records, Transitions
 from cosim.dsp.detection.shots import integrated_shots, record_shots, shot_points
 from cosim.errors import TestbenchError
-from cosim.outgoing import OutputLine, added_quanta, arriving_noise, efficiency
+from cosim.outgoing import added_quanta, arriving_noise, efficiency
 from cosim.readout_aftermath import find_aftermath
 from cosim.readout_chain import (
     STATES,
@@ -33,7 +33,7 @@ from cosim.readout_chain import (
 )
 from cosim.readout_entry import noisy_input, readout_noise_tables
 from cosim.readout_guards import chain_warnings, shot_warnings
-from cosim.readout_input import input_frequency_of, output_line
+from cosim.readout_input import Answers, input_frequency_of
 from cosim.readout_noise import (
     ChainNoise,
     arriving_only,
@@ -49,7 +49,7 @@ from cosim.readout_output import (
     record_grid,
 )
 from cosim.readout_result import ReadoutNoise, ReadoutResult, ReadoutTraces
-from cosim.readout_schema import ReadoutTable, ResonatorTable
+from cosim.readout_schema import ReadoutTable
 from cosim.record import Clock, make_record
 from cosim.testbench import ReadoutBench
 from cosim.waveform import ComplexArray, FloatArray
@@ -173,7 +173,7 @@ def run_readout(
     clock = Clock()
     runs = simulate_readout(bench) if runs is None else runs
     clock.note_laps(runs.laps)
-    table, line = bench.readout, output_line(bench.readout)
+    table = bench.readout
     inquiry, grid, chain, noise = runs.inquiry, runs.grid, runs.chain, runs.noise
     output = ChainOutput(chain.records, noise.output, None, chain.linear)
     detector = _detector(table, grid)
@@ -188,11 +188,12 @@ def run_readout(
     clock.lap("shots")
     leaked_at = _leaked(output, detector, split, chain, table.seed)
     floor = _floor(chain.records, runs.half, noise, detector)
-    added, kelvin, unsure = _referred(noise, table, line, bench.resonator)
+    added, kelvin, unsure = _referred(noise, table, inquiry.answers)
     after = find_aftermath(bench.resonator, inquiry.answers, table.t1, runs.plan.request.stop)
     f = np.linspace(-0.5 / grid.step, 0.5 / grid.step, _DENSITY_POINTS)
     warnings = (
         *runs.plan.notices,
+        *inquiry.notices,
         *after.warnings,
         *chain_warnings(chain.compression, noise, added, split),
         *shot_warnings(split, shots, records),
@@ -235,7 +236,10 @@ def run_readout(
         leaked=leaked_at[0],
         warnings=tuple(dict.fromkeys(warnings)),
         run=make_record(
-            bench, capture_of(runs.plan, chain.results[1]), runs.frequency or math.nan, clock
+            bench,
+            inquiry.recorded(capture_of(runs.plan, chain.results[1])),
+            runs.frequency or math.nan,
+            clock,
         ),
     )
 
@@ -282,7 +286,7 @@ def _noise(
     tables = readout_noise_tables(bench)
     entry = None
     if inquiry.answers is not None:
-        arriving = arriving_noise(output_line(table), [inquiry.answers.drive.frequency])
+        arriving = arriving_noise(inquiry.answers.line, [inquiry.answers.drive.frequency])
         if not tables:
             return arriving_only(arriving, chain.gain, table)
         entry = noisy_input(arriving, table)
@@ -299,20 +303,20 @@ def _noise(
 def _referred(
     noise: ChainNoise,
     table: ReadoutTable,
-    line: OutputLine,
-    pulse: ResonatorTable | None,
+    answers: Answers | None,
 ) -> tuple[float, float, float]:
     """Refer the noise to the resonator's output in quanta, and to the netlist's source in K.
 
     The third is the standard error of the second.
     """
-    if pulse is None or quadratures_of(table) == 1:
+    if answers is None or quadratures_of(table) == 1:
         return math.nan, math.nan, 0.0
+    line, frequency = answers.line, answers.drive.frequency
     # What arrives is known, so that it tells the gain that noise has on its way to the output.
-    arriving = arriving_noise(line, [pulse.drive])
+    arriving = arriving_noise(line, [frequency])
     beside = noise.near - noise.netlist
     own = noise.netlist / beside * float(arriving.emf_density[0])
-    added = float(arriving.added_quanta[0]) + float(added_quanta(own, pulse.drive, line))
+    added = float(arriving.added_quanta[0]) + float(added_quanta(own, frequency, line))
     kelvin = 1.0 / (8.0 * line.impedance * Boltzmann)
     whole_error = noise.relative_error * noise.near
     beside_error = math.sqrt(max(0.0, whole_error**2 - noise.netlist_error**2))

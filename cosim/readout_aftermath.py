@@ -8,7 +8,8 @@ import numpy as np
 from cosim.quantum.readout_limits import dephasing_rate, stark_shift
 from cosim.quantum.resonator import steady_field, wait_for_photons
 from cosim.readout_guards import dispersive_numbers, dispersive_warnings
-from cosim.readout_input import EXCITED, GROUND, Answers, drive_level
+from cosim.readout_input import EXCITED, GROUND, Answers
+from cosim.readout_pulse import drive_level
 from cosim.readout_schema import ResonatorTable
 
 LEFT = 0.01  # photons, after which the next gate may begin
@@ -74,7 +75,7 @@ def find_aftermath(
     ends = [complex(np.interp(stop, answers.drive.t, one.inside)) for one in fields]
     photons = max(abs(end) ** 2 for end in ends)
     most = max(float(one.photons.max()) for one in fields)
-    level = drive_level(pulse, resonator)
+    level = drive_level(pulse, resonator, answers.drive)
     steady = [steady_field(resonator, state, level, pulse.drive) for state in (0, 1)]
     shift = float(stark_shift(resonator, ends[0], ends[1]))
     guards = dispersive_numbers(pulse, most)

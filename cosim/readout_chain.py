@@ -2,11 +2,12 @@
 
 import math
 from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from functools import partial
 
 import numpy as np
 
+from cosim.capture import Capture
 from cosim.circuit.analysis import TransientResult
 from cosim.circuit.deck import Deck
 from cosim.circuit.netlist import with_parameters
@@ -24,6 +25,7 @@ from cosim.readout_input import (
     source_waveforms,
 )
 from cosim.readout_output import Grid, ReadoutPlan, read_record, simulate_all
+from cosim.readout_pulse import PlayedPulse, play_pulse, pulse_source
 from cosim.readout_schema import ReadoutTable
 from cosim.readout_sensor import SensorRuns, make_sensor_runs, sensor_transitions
 from cosim.testbench import ReadoutBench
@@ -57,6 +59,16 @@ class Inquiry:
     excitation_times: FloatArray = field(metadata={"unit": "s"})
     deck_of: Callable[[ReadoutPlan, str], Deck]
     answers: Answers | None = None
+
+    @property
+    def notices(self) -> tuple[str, ...]:
+        """What the reader must know of the answers."""
+        return () if self.answers is None else self.answers.notices
+
+    def recorded(self, shot: Capture) -> Capture:
+        """Add the files that the answers were made of to those of a run."""
+        files = () if self.answers is None else self.answers.files
+        return replace(shot, files=(*shot.files, *files))
 
     @property
     def jumps(self) -> tuple[str, ...]:
@@ -94,7 +106,9 @@ class Chain:
     second: ComplexArray | None = None
 
 
-def make_inquiry(bench: ReadoutBench, plan: ReadoutPlan) -> Inquiry:
+def make_inquiry(
+    bench: ReadoutBench, plan: ReadoutPlan, played: PlayedPulse | None = None
+) -> Inquiry:
     """Work out what is asked of the netlist.
 
     Parameters
@@ -103,6 +117,8 @@ def make_inquiry(bench: ReadoutBench, plan: ReadoutPlan) -> Inquiry:
         With [resonator] or [sensor].
     plan : ReadoutPlan
         Its plan.
+    played : PlayedPulse or None
+        In place of the pulse that another netlist would have to be simulated for.
 
     Returns
     -------
@@ -112,6 +128,8 @@ def make_inquiry(bench: ReadoutBench, plan: ReadoutPlan) -> Inquiry:
     ------
     TestbenchError
         If a time does not fit the run.
+    InputError, SimulationError
+        If a pulse of another netlist cannot be made, or a file cannot be used.
     """
     table, stop = bench.readout, plan.request.stop
     if bench.sensor is not None:
@@ -123,7 +141,10 @@ def make_inquiry(bench: ReadoutBench, plan: ReadoutPlan) -> Inquiry:
             partial(_sensing, runs),
         )
     assert bench.resonator is not None  # A testbench has one of the two.
-    answers = make_answers(bench.resonator, table, stop)
+    source = pulse_source(bench)
+    if source is not None and played is None:
+        played = play_pulse(bench, source, stop)
+    answers = make_answers(bench.resonator, table, stop, played=played, folder=bench.folder)
     return Inquiry(
         bench.resonator.start,
         answers.decay_times,

@@ -117,6 +117,7 @@ def run_decisions(bench: ReadoutBench, *, deck: Deck | None = None) -> DecisionR
     photons = max(float(inquiry.answers.fields[name].photons.max()) for name in (GROUND, EXCITED))
     warnings = (
         *plan.notices,
+        *inquiry.notices,
         *dispersive_warnings(pulse, photons, table.t1),
         *noise.notices,
         *_judged(threshold, fit, counted, table.decision),
@@ -144,7 +145,9 @@ def run_decisions(bench: ReadoutBench, *, deck: Deck | None = None) -> DecisionR
         counted=counted,
         paths=paths,
         warnings=tuple(dict.fromkeys(warnings)),
-        run=make_record(bench, capture_of(plan, clean), frequency or math.nan, clock),
+        run=make_record(
+            bench, inquiry.recorded(capture_of(plan, clean)), frequency or math.nan, clock
+        ),
     )
 
 

@@ -6,22 +6,17 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
-from cosim.dsp.noise.thermal import Attenuator
+from cosim.circuit.netlist import DeckFile
 from cosim.errors import TestbenchError
-from cosim.outgoing import Amplifier, OutputLine, emf_envelope
-from cosim.quantum.incident import (
-    IncidentField,
-    incident_amplitude,
-    sample_drive,
-    two_step_drive,
-)
-from cosim.quantum.resonator import Resonator, amplitude_for_photons, field_rate
+from cosim.outgoing import OutputLine
+from cosim.quantum.incident import IncidentField
+from cosim.quantum.resonator import Resonator
 from cosim.quantum.resonator_field import Field, evolve_field, fields_with_jump
+from cosim.readout_line import emf_at_source, way_out
+from cosim.readout_pulse import PlayedPulse, incident_field
 from cosim.readout_schema import ReadoutTable, ResonatorTable
 from cosim.waveform import ComplexArray, FloatArray, Waveform
 
-# Samples of the field in the time 1/kappa and in one turn against the drive.
-FINE = 50
 # Part of the answer with which the chain's response to small signals is found.
 SMALL = 0.05
 GROUND, EXCITED, SECOND, REST = "0", "1", "2", "rest"
@@ -42,6 +37,12 @@ class Answers:
         "excitation 1" and so on, and "rest" without any.
     decay_times, excitation_times : ndarray, shape (k,)
         Times in s at which |1> decays and |0> is excited in these runs.
+    line : OutputLine
+        From the resonator to the deck, as it is at the drive's frequency.
+    files : tuple of DeckFile
+        That were read for them, besides the deck.
+    notices : tuple of str
+        What the reader must know.
     """
 
     drive: IncidentField
@@ -49,29 +50,19 @@ class Answers:
     emf: dict[str, ComplexArray]
     decay_times: FloatArray = field(metadata={"unit": "s"})
     excitation_times: FloatArray = field(metadata={"unit": "s"})
+    line: OutputLine
+    files: tuple[DeckFile, ...] = ()
+    notices: tuple[str, ...] = ()
 
 
-def output_line(table: ReadoutTable) -> OutputLine:
-    """Give the way from the resonator to the deck.
-
-    Parameters
-    ----------
-    table : ReadoutTable
-        The table [readout].
-
-    Returns
-    -------
-    OutputLine
-    """
-    stages: list[Attenuator | Amplifier] = [
-        Attenuator(10.0 ** (decibels / 10.0), kelvin) for decibels, kelvin in table.stages
-    ]
-    if table.gain != 0.0 or table.noise_temperature != 0.0:
-        stages.append(Amplifier(table.gain, table.noise_temperature))
-    return OutputLine(tuple(stages), impedance=table.impedance)
-
-
-def make_answers(pulse: ResonatorTable, table: ReadoutTable, stop: float) -> Answers:
+def make_answers(
+    pulse: ResonatorTable,
+    table: ReadoutTable,
+    stop: float,
+    *,
+    played: PlayedPulse | None = None,
+    folder: str = ".",
+) -> Answers:
     """Work out what leaves the resonator for every run of the netlist.
 
     Parameters
@@ -82,6 +73,10 @@ def make_answers(pulse: ResonatorTable, table: ReadoutTable, stop: float) -> Ans
         What is asked of the readout.
     stop : float
         End of the run in s.
+    played : PlayedPulse or None
+        A pulse of another netlist or a file; None: that of the table.
+    folder : str
+        That files of [readout] are relative to.
 
     Returns
     -------
@@ -91,6 +86,8 @@ def make_answers(pulse: ResonatorTable, table: ReadoutTable, stop: float) -> Ans
     ------
     TestbenchError
         If the pulse does not end within the run, or the window lies outside of it.
+    WaveformError, InputError
+        If a file of [readout] cannot be used.
     """
     resonator = pulse.resonator()
     if pulse.stop > stop:
@@ -100,8 +97,8 @@ def make_answers(pulse: ResonatorTable, table: ReadoutTable, stop: float) -> Ans
             hint="shorten the pulse, or say a later 'stop' in [netlist]",
         )
     check_readout_window(table, stop)
-    drive = incident_field(pulse, resonator, stop)
-    line = output_line(table)
+    way = way_out(table, pulse.drive, folder)
+    drive = incident_field(pulse, resonator, stop) if played is None else played.drive
     fields = {name: evolve_field(resonator, drive, level) for name, level in _levels(pulse)}
     first = pulse.start
     decays = inner_times(first, table.window[1], table.decay_times if _decays(table) else 0)
@@ -110,61 +107,17 @@ def make_answers(pulse: ResonatorTable, table: ReadoutTable, stop: float) -> Ans
     )
     fields |= _jumps(resonator, drive, decays, "decay", 1, 0)
     fields |= _jumps(resonator, drive, rises, "excitation", 0, 1)
-    emf = {name: emf_envelope(one.outside, pulse.drive, line) for name, one in fields.items()}
+    emf = {
+        name: emf_at_source(one.outside, drive.step, pulse.drive, way)
+        for name, one in fields.items()
+    }
     emf[REST] = np.zeros(drive.samples.size, dtype=np.complex128)
-    return Answers(drive, fields, emf, decays, rises)
-
-
-def incident_field(pulse: ResonatorTable, resonator: Resonator, stop: float) -> IncidentField:
-    """Give the field that drives the resonator.
-
-    Parameters
-    ----------
-    pulse : ResonatorTable
-        The table [resonator].
-    resonator : Resonator
-        Its resonator.
-    stop : float
-        End of the run in s.
-
-    Returns
-    -------
-    IncidentField
-        From t = 0 of the deck to beyond its end.
-    """
-    steps = two_step_drive(
-        drive_level(pulse, resonator),
-        pulse.length,
-        boost=pulse.boost,
-        boost_length=pulse.boost_length,
-        ring_down=pulse.ring_down,
-        ring_down_length=pulse.ring_down_length,
-    )
-    rates = [abs(complex(field_rate(resonator, state, pulse.drive))) for state in (0, 1)]
-    step = min(1.0 / (FINE * max(rates)), pulse.length / 200.0)
-    count = math.ceil(stop / step) + 2
-    return sample_drive(steps, pulse.drive, step, count, pulse.start)
-
-
-def drive_level(pulse: ResonatorTable, resonator: Resonator) -> float:
-    """Give the incident field of the pulse's long part.
-
-    Parameters
-    ----------
-    pulse : ResonatorTable
-        With `photons`, the mean of those for |0> and |1> in steady state, or with `power`.
-    resonator : Resonator
-        Its resonator.
-
-    Returns
-    -------
-    float
-        In sqrt(photon/s).
-    """
-    if pulse.power is not None:
-        return incident_amplitude(1e-3 * 10.0 ** (pulse.power / 10.0), pulse.drive)
-    assert pulse.photons is not None  # The table insists on one of the two.
-    return amplitude_for_photons(resonator, pulse.photons, pulse.drive)
+    window = table.window[1] - table.window[0]
+    notices = way.notices(max(resonator.kappa / (2.0 * math.pi), 1.0 / window))
+    files = way.files
+    if played is not None:
+        files, notices = (*played.files, *files), (*played.notices, *notices)
+    return Answers(drive, fields, emf, decays, rises, way.line, files, notices)
 
 
 def source_waveforms(

@@ -19,6 +19,7 @@ from cosim.schema import (
 
 Stage = tuple[Annotated[float, Quantity("dB", least=0.0)], Temperature]
 Rate = Annotated[float, Quantity("Hz", least=0.0)]
+Ports = tuple[int, int] | tuple[tuple[int, int], tuple[int, int]]
 
 
 @dataclass(frozen=True, slots=True)
@@ -45,8 +46,12 @@ class ResonatorTable:
         Photons in the resonator in steady state, the mean of those for |0> and |1>.
     power : float or None
         In place of `photons`: power at the resonator's input in dBm.
+    pulse : str or None
+        In place of both: file of a testbench whose [netlist] or [waveform] makes the pulse and
+        whose [drive] says where it is read and how much it is attenuated, relative to this one.
     start, length : float
-        Of the pulse, in s.
+        Of the pulse, in s. One of a file is not cut to them: from `start` on the state counts, and
+        the steady state is that of the second half of `length`.
     boost : float
         Factor on the pulse's field over its first part, which fills the resonator faster.
     boost_length : float
@@ -75,6 +80,7 @@ class ResonatorTable:
     drive_frequency: PositiveFrequency | None = None
     photons: float | None = None
     power: Annotated[float, Quantity("dBm", least=-300.0, most=60.0)] | None = None
+    pulse: str | None = None
     boost: float = 1.0
     boost_length: Annotated[float, Quantity("s", least=0.0)] = 0.0
     ring_down: float = 0.0
@@ -86,8 +92,10 @@ class ResonatorTable:
 
     def __post_init__(self) -> None:
         self.resonator()
-        if (self.photons is None) == (self.power is None):
-            raise InputError("give 'photons' or 'power', one of them")
+        if sum(one is not None for one in (self.photons, self.power, self.pulse)) != 1:
+            raise InputError("give one of 'photons', 'power' and 'pulse'")
+        if self.pulse is not None and (self.boost_length or self.ring_down_length):
+            raise InputError("a 'pulse' of a file has its own steps: no 'boost', no 'ring_down'")
         if self.photons is not None and not 0.0 < self.photons <= 1e6:
             raise InputError(f"key 'photons': wanted more than 0, got {self.photons:g}")
         if not 0.0 < self.boost <= 100.0:
@@ -191,10 +199,21 @@ class ReadoutTable:
         In Hz, for "if".
     impedance : float
         Z0 of the line in ohm.
+    line : str or None
+        Touchstone file of a passive two-port next to the resonator, relative to the testbench;
+        needs the extra `rf`.
+    line_ports : two integers, or two pairs of them
+        Its near and far port, from 1; for a differential pair [[p, n], [p_far, n_far]].
+    line_temperature : float or None
+        Of the line in K; needed with it.
     stages : tuple of (float, float)
         Attenuators between resonator and netlist: dB and temperature in K, from the resonator on.
     gain : float
         Of an amplifier in front of the netlist, after them, in dB.
+    amplifier : str or None
+        In place of `gain`: Touchstone file of that amplifier.
+    amplifier_ports : two integers, or two pairs of them
+        Its input and its output, as `line_ports`.
     noise_temperature : float
         Of that amplifier at its input, in K.
     probe : str or None
@@ -245,8 +264,13 @@ class ReadoutTable:
     signal: Literal["rf", "if", "baseband"] = "rf"
     intermediate_frequency: PositiveFrequency | None = None
     impedance: Resistance = 50.0
+    line: str | None = None
+    line_ports: Ports = (1, 2)
+    line_temperature: Annotated[float, Quantity("K", least=0.0)] | None = None
     stages: tuple[Stage, ...] = ()
     gain: Annotated[float, Quantity("dB", least=-200.0, most=200.0)] = 0.0
+    amplifier: str | None = None
+    amplifier_ports: Ports = (1, 2)
     noise_temperature: Annotated[float, Quantity("K", least=0.0)] = 0.0
     probe: str | None = None
     i: str | None = None
@@ -300,6 +324,10 @@ class ReadoutTable:
             raise InputError("'intermediate_frequency' goes with signal = \"if\"")
         if (self.signal == "baseband") != (self.source_q is not None):
             raise InputError("'source_q' goes with signal = \"baseband\"")
+        if (self.line is None) != (self.line_temperature is None):
+            raise InputError("'line' and 'line_temperature' go together")
+        if self.amplifier is not None and self.gain != 0.0:
+            raise InputError("give 'gain' or 'amplifier', not both")
 
     def _check_output(self) -> None:
         given = [name for name in ("probe", "decision") if getattr(self, name) is not None]

@@ -35,6 +35,12 @@ STUDIES = ("sweep", "calibrate", "budget", "sensitivity", "drift", "specify", "t
 _SHARED = ("netlist", "accuracy")
 _ALL = (*TABLES, *READOUT_TABLES, *ARRAYS, *STUDIES)
 
+# What stands in a testbench that only makes a drive.
+_NO_GATE: Mapping[str, Any] = {
+    "qubit": {"kind": "spin", "frequency": "carrier", "rabi_per_volt": "1 Hz/V"},
+    "gate": {"target": "identity"},
+}
+
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Bench:
@@ -195,6 +201,32 @@ def make_testbench(
         If a key or value is wrong.
     """
     return _build(tables, file="", folder=str(folder))
+
+
+def load_drive(path: str | os.PathLike[str]) -> Testbench:
+    """Read a testbench file for its drive alone.
+
+    Parameters
+    ----------
+    path : path
+        The TOML file: [netlist] or [waveform], [drive], and [[stimulus]] where there is one.
+        [qubit] and [gate] may be left out.
+
+    Returns
+    -------
+    Testbench
+        With a qubit and a gate that stand for none.
+
+    Raises
+    ------
+    TestbenchError
+        If the file cannot be read, or a key or value is wrong.
+    """
+    file = Path(path)
+    tables = read_toml(file)
+    if "readout" in tables:
+        raise TestbenchError(f"{file} has [readout]; this takes a testbench with [drive]")
+    return gate_bench(_build({**_NO_GATE, **tables}, file=str(file), folder=str(file.parent)))
 
 
 def gate_bench(bench: Bench) -> Testbench:

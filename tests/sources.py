@@ -31,6 +31,10 @@ BLOCH_SIEGERT = (
     'J. H. Shirley, "Solution of the Schroedinger equation with a Hamiltonian periodic in time", '
     f"Phys. Rev. 138, B979 (1965), {MEMORY}"
 )
+BOSMA = (
+    'H. Bosma, "On the theory of linear noisy systems", Philips Res. Rep. Suppl. 10 (1967), noise '
+    f"waves of a passive multiport, {MEMORY}"
+)
 CIRCUITS = "circuit theory, computed from the formula"
 CUMMINS = (
     'S. Wimperis, "Broadband, narrowband, and passband composite pulses for use in advanced NMR '
@@ -140,6 +144,7 @@ SCHNEIDER = (
     'A. Schneider et al., "Local sensing with the multilevel ac Stark effect", Phys. Rev. A 97, '
     f"062334 (2018), second-order perturbation theory, {MEMORY}"
 )
+SCIKIT_RF = "cascade of two-ports in scikit-rf"
 STRAUCH = (
     'F. W. Strauch et al., "Quantum logic gates for coupled superconducting phase qubits", Phys. '
     f"Rev. Lett. 91, 167005 (2003), {MEMORY}"

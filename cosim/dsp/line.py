@@ -1,15 +1,18 @@
 """A waveform at the far end of a line whose transmission is known as a table over frequency."""
 
 from dataclasses import dataclass, field
+from typing import TypeVar
 
 import numpy as np
 import numpy.typing as npt
-from scipy.fft import irfft, next_fast_len, rfft, rfftfreq
+from scipy.fft import fft, fftfreq, ifft, irfft, next_fast_len, rfft, rfftfreq
 from scipy.interpolate import CubicSpline
 
 from cosim.dsp.resampling import resample
 from cosim.errors import WaveformError
 from cosim.waveform import ComplexArray, FloatArray, Waveform
+
+Samples = TypeVar("Samples", ComplexArray, FloatArray)
 
 # Energy that arrives before it was sent, over all, beyond which the table cannot be a line's.
 CAUSAL_LIMIT = 1e-2
@@ -185,11 +188,7 @@ def apply_line(
     total = float(np.sum(far[:count] ** 2))
     precursor = float(np.sum(far[record.size - quiet // 2 :] ** 2)) / total if total > 0.0 else 0.0
     if precursor > CAUSAL_LIMIT:
-        raise WaveformError(
-            f"the line answers before it is asked: {precursor:.1e} of the energy arrives before "
-            f"the record starts",
-            hint="its phase must fall with frequency, and its points lie close enough to follow it",
-        )
+        raise _not_causal(precursor)
     energy = np.abs(spectrum) ** 2
     whole = float(energy.sum()) or 1.0
     t: FloatArray = np.asarray(start + step * np.arange(count), dtype=np.float64)
@@ -202,6 +201,62 @@ def apply_line(
         interpolation_error=near.interpolation_error,
         alias_bound=near.alias_bound,
         warnings=_warnings(frequency, transmission, delay),
+    )
+
+
+def envelope_at_far_end(
+    iq: npt.ArrayLike,
+    step: float,
+    carrier_frequency: float,
+    frequency: npt.ArrayLike,
+    transmission: npt.ArrayLike,
+) -> ComplexArray:
+    """Send the envelope of a wave down a line.
+
+    Parameters
+    ----------
+    iq : array_like of complex, shape (n,)
+        I + jQ of the incident wave, of exp(+j omega t), which has stood at its first value before.
+    step : float
+        Sample interval in s.
+    carrier_frequency : float
+        In Hz.
+    frequency : array_like, shape (m,)
+        In Hz, rising from 0 or above, at least two points.
+    transmission : array_like of complex, shape (m,)
+        Outgoing over incident wave for exp(+j omega t).
+
+    Returns
+    -------
+    ndarray of complex, shape (n,)
+        I + jQ at the far end at the same times; the delay is in it.
+
+    Raises
+    ------
+    WaveformError
+        If the table is not one of a causal line.
+    """
+    table, response = _checked(frequency, transmission)
+    near = np.asarray(iq, dtype=np.complex128)
+    delay = max(line_delay(table, response), 0.0)
+    record, quiet = _padded(near - near[0], near.size, int(np.ceil(delay / step)))
+    f = carrier_frequency + np.append(0.0, fftfreq(record.size, step))
+    passed = transmission_at(table, response, np.abs(f))
+    # The response of a real signal at a negative frequency.
+    passed = np.where(f < 0.0, passed.conj(), passed)
+    far = ifft(fft(record) * passed[1:])
+    total = float(np.sum(np.abs(far[: near.size]) ** 2))
+    precursor = float(np.sum(np.abs(far[record.size - quiet // 2 :]) ** 2))
+    if precursor > CAUSAL_LIMIT * total:
+        raise _not_causal(precursor / total)
+    return np.asarray(far[: near.size] + near[0] * passed[0], dtype=np.complex128)
+
+
+def _not_causal(precursor: float) -> WaveformError:
+    return WaveformError(
+        f"the line answers before it is asked: {precursor:.1e} of the energy arrives before "
+        f"the record starts",
+        hint="its phase must fall with frequency, and its points lie close enough to follow it",
     )
 
 
@@ -222,7 +277,7 @@ def _checked(
     return f, h
 
 
-def _padded(v: FloatArray, count: int, delay: int) -> tuple[FloatArray, int]:
+def _padded(v: Samples, count: int, delay: int) -> tuple[Samples, int]:
     """The record up to `count` samples, led back to zero, and then zeros for delay and rest.
 
     Also given is the number of samples at the end in which a causal line is quiet.

@@ -37,6 +37,8 @@ class LineResponse:
     transmission : ndarray of complex, shape (n,)
         S21, or SDD21 of a differential pair: outgoing over incident wave, both ends matched to
         `impedance`, for exp(+j omega t), so that a delay turns the phase backwards.
+    near_reflection, far_reflection : ndarray of complex, shape (n,)
+        S11 and S22, or SDD11 and SDD22: what comes back of a wave into either end.
     impedance : float
         Reference impedance of each port in ohm; a differential wave sees twice that.
     file_impedance : float
@@ -51,6 +53,8 @@ class LineResponse:
 
     frequency: FloatArray = field(metadata={"unit": "Hz", "axes": ("frequency",)})
     transmission: ComplexArray = field(metadata={"unit": "1", "axes": ("frequency",)})
+    near_reflection: ComplexArray = field(metadata={"unit": "1", "axes": ("frequency",)})
+    far_reflection: ComplexArray = field(metadata={"unit": "1", "axes": ("frequency",)})
     impedance: float = field(metadata={"unit": "ohm"})
     file_impedance: float = field(metadata={"unit": "ohm"})
     largest_singular_value: float
@@ -65,6 +69,7 @@ def read_line(
     ports: Pair | tuple[Pair, Pair] = (1, 2),
     impedance: float | None = None,
     carrier_frequency: float | None = None,
+    passive: bool = True,
 ) -> LineResponse:
     """Read the transmission of a line from a Touchstone file.
 
@@ -81,6 +86,8 @@ def read_line(
         named are matched to it.
     carrier_frequency : float or None
         In Hz; the file must cover it.
+    passive : bool
+        Whether a network that makes power is refused; False for an amplifier.
 
     Returns
     -------
@@ -96,7 +103,7 @@ def read_line(
         If there is no such file, or the ports or the impedance are impossible.
     WaveformError
         If the file is not a Touchstone file with scattering parameters, is not passive by more
-        than 5 %, has fewer than two points, or does not cover the carrier.
+        than 5 % where it should be, has fewer than two points, or does not cover the carrier.
     """
     file = str(path)
     f, s, z = _parse(Path(path))
@@ -122,7 +129,9 @@ def read_line(
         )
     return LineResponse(
         frequency=f,
-        transmission=_transmission(s, pairs),
+        transmission=_wave(s, pairs[1], pairs[0]),
+        near_reflection=_wave(s, pairs[0], pairs[0]),
+        far_reflection=_wave(s, pairs[1], pairs[1]),
         impedance=float(new),
         file_impedance=old,
         largest_singular_value=largest,
@@ -130,7 +139,7 @@ def read_line(
         if f[0] == 0.0
         else f"extrapolated from {f[0]:.6g} Hz: magnitude held, phase to a multiple of pi at 0 Hz",
         above=f"beyond {f[-1]:.6g} Hz: magnitude held, phase by the line's delay",
-        warnings=(*_passivity(largest, file), *_order(s, pairs, file)),
+        warnings=(*(_passivity(largest, file) if passive else ()), *_order(s, pairs, file)),
     )
 
 
@@ -219,12 +228,12 @@ def _renormalised(s: ComplexArray, old: FloatArray, new: float) -> ComplexArray:
     return np.asarray(x * (c[None, :, None] / c[None, None, :]), dtype=np.complex128)
 
 
-def _transmission(s: ComplexArray, pairs: _Ends) -> ComplexArray:
-    near, far = pairs
-    if len(near) == 1:
-        return np.ascontiguousarray(s[:, far[0], near[0]])
-    (p, n), (p_far, n_far) = near, far
-    total = s[:, p_far, p] - s[:, p_far, n] - s[:, n_far, p] + s[:, n_far, n]
+def _wave(s: ComplexArray, out: tuple[int, ...], into: tuple[int, ...]) -> ComplexArray:
+    """Outgoing wave at one end over the incident wave at an end; of a pair differential ones."""
+    if len(into) == 1:
+        return np.ascontiguousarray(s[:, out[0], into[0]])
+    (p, n), (p_out, n_out) = into, out
+    total = s[:, p_out, p] - s[:, p_out, n] - s[:, n_out, p] + s[:, n_out, n]
     return np.ascontiguousarray(total / 2.0)
 
 
@@ -232,7 +241,8 @@ def _passivity(largest: float, file: str) -> tuple[str, ...]:
     if largest > PASSIVE_LIMIT:
         raise WaveformError(
             f"{file}: the network is not passive: its largest singular value is {largest:.4g}",
-            hint="an amplifier belongs into the netlist; else the file or its format is wrong",
+            hint="an amplifier belongs into the netlist, or under 'amplifier' of a readout; else "
+            "the file or its format is wrong",
         )
     if largest > 1.0 + PASSIVE:
         return (

@@ -23,7 +23,7 @@ from cosim.exporting import export_csv
 from cosim.outgoing import Amplifier, OutputLine, arriving_noise
 from cosim.readout import run_readout
 from cosim.readout_decisions import run_decisions
-from cosim.readout_input import make_answers, output_line
+from cosim.readout_input import make_answers
 from cosim.testbench import ReadoutBench
 from cosim.waveform import ComplexArray
 from tests.readout.benches import FREQUENCY, bench
@@ -95,7 +95,7 @@ def expected(made: tuple[ReadoutBench, DecisionResult]) -> dict[str, Any]:
     answers = make_answers(pulse, table, END)
     at = {name: filtered(emf, answers.drive.t) for name, emf in answers.emf.items()}
     step = at["1"] - at["0"]
-    density = arriving_noise(output_line(table), [FREQUENCY]).emf_density[0] / 4.0
+    density = arriving_noise(answers.line, [FREQUENCY]).emf_density[0] / 4.0
     density += 4.0 * Boltzmann * KELVIN * R_FILTER
     decays = [at[f"decay {n}"] for n in range(1, 1 + table.decay_times)]
     return {
@@ -182,7 +182,7 @@ def test_what_arrives_alone(tmp_path: Path) -> None:
     assert pulse is not None
     answers = make_answers(pulse, table, END)
     step = filtered(answers.emf["1"], answers.drive.t) - filtered(answers.emf["0"], answers.drive.t)
-    density = arriving_noise(output_line(table), [FREQUENCY]).emf_density[0] / 4.0
+    density = arriving_noise(answers.line, [FREQUENCY]).emf_density[0] / 4.0
     assert result.noise_method == "arriving only"
     # Four standard errors.
     due = math.sqrt(density / (4.0 * TAU)) / abs(step)
