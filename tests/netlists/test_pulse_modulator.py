@@ -116,14 +116,14 @@ def without(text: str, path: tuple[str, ...]) -> str:
 def test_every_transistor_carries_signal() -> None:
     text = DECK.read_text()
     devices = list(transistors(text))
-    # At full scale every cell of the converter switches.
+    # At full scale every cell of the converter switches. All decks have the same coarse step.
     parameters = {**SHORT, "amp": 127.0}
-    whole = drive(load_deck(DECK), parameters, 8e-9, 40)
+    whole = drive(load_deck(DECK), parameters, 8e-9, 20)
     peak = float(np.max(np.abs(whole)))
     unmoved = []
     for device in devices:
         cut = deck_from_text(without(text, device), name="cut", folder=FOLDER)
-        change = float(np.max(np.abs(drive(cut, parameters, 8e-9, 40) - whole)))
+        change = float(np.max(np.abs(drive(cut, parameters, 8e-9, 20) - whole)))
         # 1e-3 of the peak is an eighth of the least significant cell.
         if change <= 1e-3 * peak:
             unmoved.append(".".join(device))
