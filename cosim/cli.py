@@ -300,7 +300,9 @@ def _progress(bench: "Bench") -> Iterator[Callable[[float], None] | None]:
         return
     columns = (TextColumn("{task.description}"), BarColumn(), TimeElapsedColumn())
     with Progress(*columns, console=console, transient=True) as bar:
-        stop = bench.netlist.stop if bench.netlist is not None else None
+        # How many runs a readout takes is known at its end only.
+        netlist = bench.netlist if isinstance(bench, Testbench) else None
+        stop = None if netlist is None else netlist.stop
         task = bar.add_task("simulating", total=stop)
 
         def report(time: float) -> None:

@@ -148,9 +148,9 @@ def count_ones(
     levels = []
     for seed in seeds:
         samples = noise_samples(noise.clean, noise.settings, noise.currents, seed)
-        levels.append(
-            comparator.level(simulate(with_currents(deck, ends, grid, samples), plan.request))
-        )
+        result = simulate(with_currents(deck, ends, grid, samples), plan.request)
+        plan.progress.end(plan.request.stop)
+        levels.append(comparator.level(result))
     return int(np.sum(comparator.high(np.array(levels)) == threshold.rising))
 
 

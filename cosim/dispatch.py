@@ -31,7 +31,7 @@ def run(
     system : OperatorSystem or None
         A user's own system from `cosim.operator_system`, for kind = "operators" in [qubit].
     progress : callable or None
-        Called with the simulated time in s now and then.
+        Called with the simulated time in s now and then; of the runs of a readout with their sum.
 
     Returns
     -------
@@ -57,7 +57,7 @@ def run(
             hint="what answers is said in [resonator] or [sensor]",
         )
     if bench.readout.decision is not None:
-        result = import_module("cosim.readout_decisions").run_decisions(bench)
+        result = import_module("cosim.readout_decisions").run_decisions(bench, progress=progress)
     else:
         result = import_module("cosim.readout").run_readout(bench, progress=progress)
     return result

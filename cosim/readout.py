@@ -2,7 +2,7 @@
 
 import math
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from scipy.constants import Boltzmann
@@ -48,6 +48,7 @@ from cosim.readout_output import (
     read_record,
     record_grid,
 )
+from cosim.readout_progress import RunProgress
 from cosim.readout_result import ReadoutNoise, ReadoutResult, ReadoutTraces
 from cosim.readout_schema import ReadoutTable
 from cosim.record import Clock, make_record
@@ -97,7 +98,9 @@ class ReadoutRuns:
     laps: Mapping[str, float]
 
 
-def simulate_readout(bench: ReadoutBench, *, deck: Deck | None = None) -> ReadoutRuns:
+def simulate_readout(
+    bench: ReadoutBench, *, deck: Deck | None = None, progress: Progress | None = None
+) -> ReadoutRuns:
     """Run the netlist of a readout for all that is asked of it, with its noise.
 
     Parameters
@@ -106,6 +109,8 @@ def simulate_readout(bench: ReadoutBench, *, deck: Deck | None = None) -> Readou
         The testbench.
     deck : Deck or None
         As `cosim.decks.read_deck` gives it, where it has been read already.
+    progress : callable or None
+        Called with the simulated time in s, all runs added up, now and then.
 
     Returns
     -------
@@ -128,6 +133,7 @@ def simulate_readout(bench: ReadoutBench, *, deck: Deck | None = None) -> Readou
     table = bench.readout
     frequency = readout_frequency(bench)
     plan = make_readout_plan(bench, frequency, deck)
+    plan = replace(plan, progress=RunProgress(progress))
     clock.lap("deck")
     inquiry = make_inquiry(bench, plan)
     grid = record_grid(table, inquiry.begin)
@@ -153,7 +159,7 @@ def run_readout(
     bench : ReadoutBench
         The testbench.
     progress : callable or None
-        Not called yet: the runs of a readout are many short ones.
+        Called with the simulated time in s, all runs added up, now and then.
     runs : ReadoutRuns or None
         What has been simulated already, for this testbench or one that has it in common.
 
@@ -169,9 +175,8 @@ def run_readout(
     SimulationError
         If ngspice fails.
     """
-    del progress
     clock = Clock()
-    runs = simulate_readout(bench) if runs is None else runs
+    runs = simulate_readout(bench, progress=progress) if runs is None else runs
     clock.note_laps(runs.laps)
     table = bench.readout
     inquiry, grid, chain, noise = runs.inquiry, runs.grid, runs.chain, runs.noise

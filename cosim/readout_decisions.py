@@ -16,6 +16,7 @@ end is not counted, and at most one within it. Detection and its closed form are
 """
 
 import math
+from collections.abc import Callable
 from dataclasses import replace
 
 import numpy as np
@@ -42,6 +43,7 @@ from cosim.readout_comparator import FINEST, Comparator, Threshold, find_changes
 from cosim.readout_guards import dispersive_warnings
 from cosim.readout_input import EXCITED, GROUND, input_frequency_of
 from cosim.readout_output import capture_of, make_readout_plan
+from cosim.readout_progress import RunProgress
 from cosim.record import Clock, make_record
 from cosim.testbench import ReadoutBench
 from cosim.waveform import FloatArray
@@ -52,7 +54,12 @@ COUNTED = 4  # times the seeds: decisions at each of the answers themselves
 UNLIKELY = 1e-3  # probability of a count under the fit, below which a warning is due
 
 
-def run_decisions(bench: ReadoutBench, *, deck: Deck | None = None) -> DecisionResult:
+def run_decisions(
+    bench: ReadoutBench,
+    *,
+    deck: Deck | None = None,
+    progress: Callable[[float], None] | None = None,
+) -> DecisionResult:
     """Run a testbench whose [readout] has a `decision`, up to the assignment error.
 
     Parameters
@@ -61,6 +68,8 @@ def run_decisions(bench: ReadoutBench, *, deck: Deck | None = None) -> DecisionR
         The testbench.
     deck : Deck or None
         As `cosim.decks.read_deck` gives it, where it has been read already.
+    progress : callable or None
+        Called with the simulated time in s, all runs added up, now and then.
 
     Returns
     -------
@@ -87,6 +96,7 @@ def run_decisions(bench: ReadoutBench, *, deck: Deck | None = None) -> DecisionR
         raise TestbenchError(f"{where}: 'decision' and a converter do not go together")
     frequency = input_frequency_of(pulse, table)
     plan = make_readout_plan(bench, frequency, deck)
+    plan = replace(plan, progress=RunProgress(progress))
     instant = table.window[1] if table.decide_at is None else table.decide_at
     if not 0.0 < instant <= plan.request.stop:
         raise TestbenchError(

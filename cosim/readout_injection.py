@@ -33,6 +33,7 @@ from cosim.dsp.detection.band_levels import (
 )
 from cosim.dsp.detection.output_noise import OutputNoise
 from cosim.readout_output import Grid, cell_means, outputs_record
+from cosim.readout_progress import RunProgress
 from cosim.readout_schema import ReadoutTable
 from cosim.waveform import ComplexArray, FloatArray, Waveform
 
@@ -80,6 +81,8 @@ class NoisyRuns:
         Of the records.
     quadratures : int
         2 for I + jQ, 1 for a single real output.
+    progress : RunProgress
+        Is told of every run.
     """
 
     cleans: Sequence[CleanRun]
@@ -89,6 +92,7 @@ class NoisyRuns:
     table: ReadoutTable
     grid: Grid
     quadratures: int
+    progress: RunProgress = field(default_factory=RunProgress, compare=False)
 
     def drawn(self, seed: int) -> tuple[CleanRun, Sequence[NoiseCurrent], FloatArray]:
         """Draw the currents of a seed.
@@ -136,6 +140,7 @@ class NoisyRuns:
             If the run fails.
         """
         found = injected_difference(clean, currents, samples).samples
+        self.progress.end(clean.request.stop)
         waves = [found[probe.text] / self.settings.scale for probe in clean.probes]
         return outputs_record(clean.result.time, waves, self.table, self.grid)
 

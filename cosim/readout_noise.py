@@ -184,6 +184,7 @@ def netlist_noise_at_output(
         table,
         grid,
         quadratures_of(table),
+        plan.progress,
     )
     found = _injected(runs, noise, instead)
     return found if noise.method == INJECTION else replace(found, reason=reason)

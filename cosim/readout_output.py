@@ -2,7 +2,7 @@
 
 import math
 from collections.abc import Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 
 import numpy as np
@@ -20,6 +20,7 @@ from cosim.decks import altered_deck, netlist_of, read_deck, roots_of
 from cosim.dsp.demodulation import MIN_SAMPLES_PER_PERIOD, demodulate, half_length
 from cosim.errors import CosimError, DeckError, InputError, TestbenchError
 from cosim.readout_input import check_readout_window
+from cosim.readout_progress import RunProgress
 from cosim.readout_schema import ReadoutTable
 from cosim.stimuli import apply_stimuli
 from cosim.testbench import ReadoutBench
@@ -46,6 +47,8 @@ class ReadoutPlan:
         Folders whose files are kept as path and SHA-256 only.
     notices : tuple of str
         What the reader must know.
+    progress : RunProgress
+        Is told of every run.
     """
 
     deck: Deck
@@ -53,6 +56,7 @@ class ReadoutPlan:
     probes: tuple[Probe, ...]
     confidential: Roots
     notices: tuple[str, ...]
+    progress: RunProgress = field(default_factory=RunProgress, compare=False)
 
     def half_step(self) -> "ReadoutPlan":
         """The same runs at half the step and tighter tolerances, for the numerical floor."""
@@ -164,10 +168,13 @@ def simulate_all(plan: ReadoutPlan, decks: Sequence[Deck]) -> list[TransientResu
     """
     ready = [prepare(deck, plan.request) for deck in decks]
     found = []
-    for outcome in simulate_family(ready, [plan.request] * len(ready)):
+    requests = [plan.request] * len(ready)
+    told = plan.progress
+    for outcome in simulate_family(ready, requests, progress=lambda _, time: told.within(time)):
         if isinstance(outcome, CosimError):
             raise outcome
         found.append(outcome)
+        told.end(plan.request.stop)
     return found
 
 

@@ -69,6 +69,7 @@ FLOORS = {
     "readout_sensor": 4,
     "readout_guards": 4,
     "readout_aftermath": 4,
+    "readout_progress": 3,
     "readout_line": 4,
     "readout_pulse": 4,
     "readout": 4,
