@@ -299,6 +299,8 @@ def _progress(bench: "Bench") -> Iterator[Callable[[float], None] | None]:
         yield None
         return
     columns = (TextColumn("{task.description}"), BarColumn(), TimeElapsedColumn())
+    from cosim.testbench import Testbench
+
     with Progress(*columns, console=console, transient=True) as bar:
         # How many runs a readout takes is known at its end only.
         netlist = bench.netlist if isinstance(bench, Testbench) else None
