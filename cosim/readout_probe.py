@@ -7,7 +7,7 @@ from cosim.circuit.inventory import noisy_devices
 from cosim.circuit.preparation import prepare
 from cosim.circuit.simulator import simulate_prepared
 from cosim.decision_noise import INJECTION, ROUNDS, SEEDS
-from cosim.probe_run import BYTES, COPIES, POINTS, Estimate
+from cosim.probe_run import BYTES, COPIES, POINTS, TRIAL_POINTS, Estimate
 from cosim.readout_chain import STATES, Inquiry
 from cosim.readout_decisions import COUNTED
 from cosim.readout_injection import arriving_runs
@@ -120,7 +120,11 @@ def estimate_readout(bench: ReadoutBench, plan: ReadoutPlan, inquiry: Inquiry) -
 
 def _time_of(plan: ReadoutPlan, inquiry: Inquiry) -> float:
     """Give the wall-clock time of a whole transient in s."""
-    request = plan.request
-    short = replace(request, stop=min(request.stop, POINTS * request.step))
-    result = simulate_prepared(prepare(inquiry.deck_of(plan, GROUND), short), short)
-    return result.wall_time * math.ceil(request.stop / request.step) / result.time.size
+    request, deck = plan.request, inquiry.deck_of(plan, GROUND)
+    times = []
+    for points in (TRIAL_POINTS, POINTS):
+        short = replace(request, stop=min(request.stop, points * request.step))
+        times.append(simulate_prepared(prepare(deck, short), short).wall_time)
+    # Of a run of a few points most is the loading, which many short runs must not be scaled by.
+    each = max(times[1] - times[0], 0.0) / (POINTS - TRIAL_POINTS)
+    return times[0] + each * request.stop / request.step
