@@ -10,7 +10,13 @@ from typing import Any
 from cosim.config import check_keys, read_table, read_toml
 from cosim.errors import TestbenchError, near_names
 from cosim.noises import Noise, read_noises
-from cosim.readout_schema import READOUT_TABLES, ReadoutTable, ResonatorTable, SensorTable
+from cosim.readout_schema import (
+    ONE_OUTPUT,
+    READOUT_TABLES,
+    ReadoutTable,
+    ResonatorTable,
+    SensorTable,
+)
 from cosim.schema import (
     SOURCES,
     TABLES,
@@ -362,6 +368,8 @@ def _check_kind(tables: Mapping[str, Any], readout: bool, known: Sequence[str], 
 
 def _readout_bench(parts: Mapping[str, Any], label: str) -> ReadoutBench:
     bench = ReadoutBench(**parts)
+    if not bench.readout.has_output:
+        raise TestbenchError(f"{label}, table [readout]: {ONE_OUTPUT}")
     if (bench.resonator is None) == (bench.sensor is None):
         raise TestbenchError(
             f"{label}: wanted one of the tables [resonator] and [sensor], got "
