@@ -37,7 +37,9 @@ from cosim.readout_progress import RunProgress
 from cosim.readout_schema import ReadoutTable
 from cosim.waveform import ComplexArray, FloatArray, Waveform
 
-_FEWER = 4  # runs of the devices for one of what arrives around the signal
+# Runs of the devices for one of what arrives around the signal, and the least of these: a gain that
+# moves with the signal leaves some of what arrives to chance.
+_FEWER, _LEAST = 4, 4
 _PASSED = 0.25  # of the carrier: the pass band of the demodulator
 
 
@@ -233,7 +235,7 @@ def arriving_runs(seeds: int) -> int:
     -------
     int
     """
-    return max(2, seeds // _FEWER)
+    return min(seeds, max(_LEAST, seeds // _FEWER))
 
 
 def powers_alone(runs: NoisyRuns, seeds: range) -> dict[str, float]:
