@@ -2,7 +2,7 @@
 
 import hashlib
 import math
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
@@ -43,14 +43,11 @@ class PlayedPulse:
         That were read for it.
     notices : tuple of str
         What the reader must know.
-    wall_time : float
-        Of the simulator in s.
     """
 
     drive: IncidentField
     files: tuple[DeckFile, ...] = ()
     notices: tuple[str, ...] = ()
-    wall_time: float = field(default=0.0, metadata={"unit": "s"})
 
 
 def pulse_source(bench: ReadoutBench) -> Testbench | None:
@@ -122,8 +119,7 @@ def play_pulse(bench: ReadoutBench, source: Testbench, stop: float) -> PlayedPul
             notices += (
                 f"{source.source}: the pulse changes by {off:.2g} of itself at half the time step",
             )
-    wall_time = 0.0 if shot.result is None else shot.result.wall_time
-    return PlayedPulse(drive, (_own_file(source), *shot.files), notices, wall_time)
+    return PlayedPulse(drive, (_own_file(source), *shot.files), notices)
 
 
 def silent_pulse(pulse: ResonatorTable, stop: float) -> PlayedPulse:

@@ -10,13 +10,16 @@ import json
 import math
 from collections.abc import Mapping
 from dataclasses import dataclass
+from itertools import chain
 from pathlib import Path
 from typing import Any
 
 from cosim.archive.layout import SCHEMA_VERSION
 from cosim.circuit.deck import Deck
+from cosim.decks import read_deck
 from cosim.errors import TestbenchError
-from cosim.testbench import Bench, Testbench
+from cosim.readout_pulse import pulse_source
+from cosim.testbench import Bench, ReadoutBench, Testbench
 
 # Names and places of files, whose content counts, and what bears on no number: the wall-clock
 # limit of a run that ended, and how much of the deck its record keeps.
@@ -28,6 +31,9 @@ _IGNORED = frozenset(
         "netlist.time_limit",
         "waveform.file",
         "drive.line",
+        "readout.line",
+        "readout.amplifier",
+        "resonator.pulse",
     }
 )
 # The keys besides those of the netlist, the stimuli and the imported waveform that say what is
@@ -75,7 +81,7 @@ class Files:
     ----------
     waveform : mapping
         Role -> SHA-256 of each, in order: the deck with its includes and data, the stimuli, an
-        imported waveform.
+        imported waveform; the two-ports of a readout, and all that makes its pulse.
     line : tuple of str
         The Touchstone file of the line; empty without one.
     """
@@ -117,7 +123,23 @@ def files_of(bench: Bench, deck: Deck | None) -> Files:
             waveform["waveform"] = (_sha256(bench, bench.waveform.file),)
         if bench.drive.line is not None:
             line = (_sha256(bench, bench.drive.line),)
+    if isinstance(bench, ReadoutBench):
+        waveform |= _files_of_readout(bench)
     return Files(waveform, line)
+
+
+def _files_of_readout(bench: ReadoutBench) -> dict[str, tuple[str, ...]]:
+    found = {
+        f"readout.{key}": (_sha256(bench, name),)
+        for key, name in (("line", bench.readout.line), ("amplifier", bench.readout.amplifier))
+        if name is not None
+    }
+    source = pulse_source(bench)
+    if source is not None:
+        own = files_of(source, None if source.netlist is None else read_deck(source))
+        text = hashlib.sha256(Path(source.source).read_bytes()).hexdigest()
+        found["pulse"] = (text, *chain.from_iterable(own.waveform.values()), *own.line)
+    return found
 
 
 def _sha256(bench: Bench, name: str) -> str:

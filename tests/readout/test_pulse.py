@@ -13,6 +13,7 @@ from cosim.quantum.resonator import field_rate
 from cosim.readout import run_readout
 from cosim.readout_input import make_answers
 from cosim.readout_pulse import PlayedPulse, incident_field, play_pulse, pulse_source
+from cosim.sweep.identity import files_of
 from cosim.testbench import ReadoutBench
 from tests import sources
 from tests.readout.benches import bench
@@ -139,6 +140,15 @@ def test_the_check_counts_the_runs_of_the_pulse(tmp_path: Path) -> None:
     found = {one.name: one.value for one in check_testbench(path)[0]}
     assert found["pulse_runs"] == 1  # Without error bars; two with them.
     assert found["transients"] == 5
+
+
+def test_a_run_is_another_one_with_another_pulse(tmp_path: Path) -> None:
+    made = asked(tmp_path)
+    before = files_of(made, None)
+    assert files_of(asked(tmp_path), None) == before
+    other = files_of(asked(tmp_path, SHAPED), None)
+    third = files_of(asked(tmp_path, generator=GENERATOR + "# Another one.\n"), None)
+    assert len({one.waveform["pulse"] for one in (before, other, third)}) == 3
 
 
 def test_a_pulse_of_columns(tmp_path: Path) -> None:
