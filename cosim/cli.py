@@ -28,7 +28,7 @@ from cosim.command_options import (
     check_output,
 )
 from cosim.errors import CosimError, InputError, MissingDependencyError, SimulationError
-from cosim.study_cli import STUDY_COMMANDS
+from cosim.study_cli import STUDY_COMMANDS, show_study
 from cosim.sweep_cli import (
     COMMANDS,
     LimitOption,
@@ -160,6 +160,7 @@ def show(
     from cosim.archive import read_plan, read_table
     from cosim.dispatch import load
     from cosim.result import as_columns
+    from cosim.study_archive import load_study
     from cosim.sweep_show import show_sweep, show_sweep_run, testbench_text
     from cosim.terminal import record_table, runs_table
 
@@ -188,6 +189,10 @@ def show(
             typer.echo(json.dumps(as_columns(table), indent=2))
         else:
             console.print(runs_table(table))
+        return
+    study = load_study(archive, run)
+    if study is not None:
+        show_study(study, json_output, log=log)
         return
     result = load(archive, run=run)
     if log:
@@ -287,20 +292,21 @@ def _refuse_failed(archive: Path, run: int | None) -> None:
             )
 
 
-for _command, _example in (*COMMANDS, *STUDY_COMMANDS):
+_FURTHER: tuple[tuple[Callable[..., None], str], ...] = (*COMMANDS, *STUDY_COMMANDS)
+for _command, _example in _FURTHER:
     app.command(epilog=f"Example: {_example}")(_command)
 
 
 @contextmanager
 def _progress(bench: "Bench") -> Iterator[Callable[[float], None] | None]:
     """Show the simulated time on a terminal; keep quiet elsewhere."""
+    from cosim.testbench import Testbench
+
     console = Console(stderr=True)
     if not console.is_terminal:
         yield None
         return
     columns = (TextColumn("{task.description}"), BarColumn(), TimeElapsedColumn())
-    from cosim.testbench import Testbench
-
     with Progress(*columns, console=console, transient=True) as bar:
         # How many runs a readout takes is known at its end only.
         netlist = bench.netlist if isinstance(bench, Testbench) else None

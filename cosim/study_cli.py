@@ -4,13 +4,16 @@ import json
 import sys
 from collections.abc import Callable
 from pathlib import Path
-from typing import Annotated
+from typing import TYPE_CHECKING, Annotated
 
 import typer
 from rich.console import Console
 
 from cosim.command_options import JsonFlag, PlotOption, TestbenchPath, check_output
 from cosim.errors import InputError
+
+if TYPE_CHECKING:
+    from cosim.study_archive import StudyResult
 
 
 def calibrate(
@@ -56,7 +59,74 @@ def calibrate(
         typer.echo(f"figure in {plot}", err=True)
 
 
+def budget(
+    source: Annotated[
+        Path,
+        typer.Argument(
+            metavar="TESTBENCH.toml|ARCHIVE.h5",
+            help="A testbench, which is run, or an archive, of which nothing is simulated again.",
+        ),
+    ],
+    run: Annotated[int | None, typer.Option(help="Run of the archive; default: the last.")] = None,
+    fidelity: Annotated[
+        str | None,
+        typer.Option(help="as_simulated, free_frame or calibrated, in place of \\[budget]."),
+    ] = None,
+    archive: Annotated[
+        Path | None, typer.Option(metavar="FILE.h5", help="Add the budget to this archive.")
+    ] = None,
+    plot: PlotOption = None,
+    json_output: JsonFlag = False,
+) -> None:
+    """Take the waveform apart: what each imperfection costs, alone and removed."""
+    from cosim.budget.study import budget_of, run_budget
+    from cosim.dispatch import load
+    from cosim.result import gate_result
+    from cosim.study_archive import save_study
+    from cosim.testbench import gate_bench, load_testbench
+
+    check_output(archive, ".h5")
+    check_output(plot, ".png", ".pdf", ".svg")
+    if source.suffix.lower() == ".h5":
+        result = budget_of(gate_result(load(source, run=run)), fidelity=fidelity)
+    elif run is not None:
+        raise InputError(f"--run goes with an archive, and {source} is a testbench")
+    else:
+        result = run_budget(gate_bench(load_testbench(source)), fidelity=fidelity)
+    show_study(result, json_output)
+    if archive is not None:
+        number = save_study(result, archive)
+        typer.echo(f"archived as run {number} of {archive}", err=True)
+    if plot is not None:
+        from cosim.budget_figures import plot_budget
+
+        plot_budget(result, plot)
+        typer.echo(f"figure in {plot}", err=True)
+
+
+def show_study(result: "StudyResult", json_output: bool, *, log: bool = False) -> None:
+    """Print the result of a study, as a table or as numbers for machines.
+
+    Parameters
+    ----------
+    result : BudgetResult
+    json_output : bool
+    log : bool
+        Print the simulator's log of its run instead.
+    """
+    from cosim.budget.result import budget_numbers
+    from cosim.budget_terminal import budget_parts
+
+    if log:
+        typer.echo(json.dumps(result.run.log) if json_output else "\n".join(result.run.log))
+    elif json_output:
+        typer.echo(json.dumps(budget_numbers(result), indent=2))
+    else:
+        Console(highlight=False).print(budget_parts(result))
+
+
 # What `cli.py` registers: each command with the example of its help.
 STUDY_COMMANDS: tuple[tuple[Callable[..., None], str], ...] = (
+    (budget, "qcosim budget examples/x180_noise.toml --plot budget.png"),
     (calibrate, "qcosim calibrate examples/calibrate_modulator.toml --plot trim.png"),
 )

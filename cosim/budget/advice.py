@@ -54,9 +54,18 @@ def advise(items: Sequence[BudgetItem], total: float, error_bar: float) -> str:
             f"Nothing is to be learnt from a total of {total:.2e} within its error bar of "
             f"{error_bar:.1e}: take smaller steps first."
         )
+    others = [item for item in items if item.kind == "neighbour" and item.removed > total]
+    if others:
+        worst = max(others, key=lambda item: item.removed)
+        beside = (
+            f" Beside it {worst.name.replace(': ', ' ')} loses more than the gate itself, "
+            f"{worst.removed:.2e}: frequencies, or the pulse's spectrum there."
+        )
+    else:
+        beside = ""
     able = [item for item in items if item.counted and item.removed > _WORTH * total]
     if not able:
-        return "No single item is worth a change: none gains a twentieth of the total."
+        return "No single item is worth a change: none gains a twentieth of the total." + beside
     first = able[0]
     left = max(0.0, total - first.removed)
     text = (
@@ -65,10 +74,10 @@ def advise(items: Sequence[BudgetItem], total: float, error_bar: float) -> str:
     )
     if first.absorbed:
         text += f" A {first.absorbed_by} absorbs it."
-        others = [item for item in able[1:] if not item.absorbed]
-        if others:
-            text += f" What stays then is led by {_remedy(others[0].name)} ({others[0].name})."
-    return text
+        staying = [item for item in able[1:] if not item.absorbed]
+        if staying:
+            text += f" What stays then is led by {_remedy(staying[0].name)} ({staying[0].name})."
+    return text + beside
 
 
 def _remedy(name: str) -> str:

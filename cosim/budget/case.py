@@ -19,6 +19,7 @@ from cosim.quantum.operators import OperatorSystem
 from cosim.quantum.qubit import Qubit
 from cosim.qubit_drive import QubitDrive, couple
 from cosim.result import GateResult
+from cosim.schema import SpectatorTable
 from cosim.testbench import Testbench
 from cosim.waveform import ComplexArray
 
@@ -83,6 +84,8 @@ class Case:
         Amplitude in the envelope's unit, and phase in rad, of the ideal pulse.
     iq : ndarray of complex, shape (n,)
         The real pulse, in the qubit's frame.
+    spectators : tuple of SpectatorTable
+        The other qubits of the line.
     """
 
     result: GateResult
@@ -94,6 +97,7 @@ class Case:
     level: float
     phase: float
     iq: ComplexArray
+    spectators: tuple[SpectatorTable, ...]
 
     def envelope(self, *parts: str) -> ComplexArray:
         """Give the ideal pulse with some imperfections, shape (n,)."""
@@ -161,7 +165,7 @@ def prepare(result: GateResult, bench: Testbench, table: BudgetTable, target: Ta
     level = _ideal_level(costing, anatomy, phase, target.rotation.angle)
     if level < 0.0:
         level, phase = -level, phase + math.pi
-    return Case(result, table, drive, qubit, costing, anatomy, level, phase, iq)
+    return Case(result, table, drive, qubit, costing, anatomy, level, phase, iq, bench.spectator)
 
 
 def _ideal_level(costing: Costing, anatomy: Anatomy, phase: float, angle: float) -> float:

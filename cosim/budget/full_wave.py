@@ -84,7 +84,7 @@ class FullWave:
         return float(block_infidelity(block, self.costing.target)[0])
 
 
-def full_wave(drive: QubitDrive, waveform: Waveform, costing: Costing) -> FullWave:
+def cut_wave(drive: QubitDrive, waveform: Waveform, costing: Costing) -> FullWave:
     """Cut a waveform to the gate's window.
 
     Parameters
@@ -166,7 +166,7 @@ def full_wave_items(case: Case, costs: Costs, view: str) -> tuple[list[BudgetIte
     difference : float
         Infidelity of the full waveform less that of its envelope.
     """
-    wave = full_wave(case.drive, case.result.waveform, case.costing)
+    wave = cut_wave(case.drive, case.result.waveform, case.costing)
     ideal, band = wave.carrier(case.envelope()), wave.carrier(case.iq)
     beyond = wave.waveform.v - band
     settings = [(float(costs.scale[row]), float(costs.detuning[row])) for row in (0, 1)]

@@ -1,17 +1,23 @@
 """What is no imperfection of the pulse: decoherence, noise, other qubits, the numerical floor."""
 
 import math
+from dataclasses import replace
 
 import numpy as np
+from scipy.interpolate import CubicSpline
 
-from cosim.budget.costs import Costing, Costs, adjusted_envelopes
+from cosim.budget.case import Case
+from cosim.budget.costs import Costing, Costs, adjusted_envelopes, block_infidelity, free_blocks
 from cosim.budget.result import BudgetItem
 from cosim.quantum.batch import evolve_batch
 from cosim.quantum.batch_drive import BatchDrive
 from cosim.quantum.fidelity import average_gate_fidelity
 from cosim.quantum.frame import free_frame
 from cosim.quantum.qubit import Qubit
+from cosim.qubit_drive import make_qubit
 from cosim.result import GateResult
+from cosim.schema import SpectatorTable
+from cosim.units import format_quantity
 from cosim.waveform import ComplexArray, FloatArray
 
 
@@ -58,7 +64,7 @@ def decoherence_item(
     )
     alone, removed = (lossy - costs.infidelity[view]).tolist()
     times = [
-        f"{name} {value:.3g} s"
+        f"{name} {format_quantity(value, 's')}"
         for name, value in (("T1", qubit.t1), ("T2", qubit.t2))
         if math.isfinite(value)
     ]
@@ -108,30 +114,35 @@ def noise_items(result: GateResult) -> list[BudgetItem]:
     return items
 
 
-def neighbour_items(result: GateResult, view: str) -> list[BudgetItem]:
+def neighbour_items(case: Case, view: str) -> list[BudgetItem]:
     """Give what the other qubits of the line lose, which is no part of the gate's own total.
 
     Parameters
     ----------
-    result : GateResult
+    case : Case
     view : str
         Which fidelity; a neighbour has no calibration of its own.
 
     Returns
     -------
     list of BudgetItem
+        Alone is what the ideal pulse does to a bystander without loss and noise.
     """
     items = []
-    for effect in result.spectators:
-        free = view != "as_simulated"
+    free = view != "as_simulated"
+    for table, effect in zip(case.spectators, case.result.spectators, strict=True):
+        alone = math.nan
+        if effect.target == "identity":
+            alone = _on_bystander(
+                case, make_qubit(table.qubit(case.qubit.frequency), 0.0), table, free
+            )
         cost = effect.free_frame_infidelity if free else effect.infidelity
-        offset = effect.frequency - result.qubit_frequency
         items.append(
             BudgetItem(
                 name=f"neighbour: {effect.name}",
-                value=offset,
+                value=effect.frequency - case.qubit.frequency,
                 unit="Hz",
-                alone=math.nan,
+                alone=alone,
                 removed=cost,
                 absorbed=False,
                 kind="neighbour",
@@ -140,6 +151,26 @@ def neighbour_items(result: GateResult, view: str) -> list[BudgetItem]:
             )
         )
     return items
+
+
+def _on_bystander(case: Case, other: Qubit, table: SpectatorTable, free: bool) -> float:
+    share = table.rabi_per_volt / case.drive.line.rabi_per_volt
+    costing = replace(
+        case.costing,
+        qubit=replace(other, t1=math.inf, t2=math.inf),
+        target=np.eye(2, dtype=np.complex128),
+        volts=case.costing.volts * share,
+    )
+    offset = case.qubit.frequency - other.frequency
+    # Twenty samples in a turn, between those of the envelope.
+    t = costing.t
+    parts = 2 * math.ceil(10.0 * abs(offset) * float(t[1] - t[0])) or 1
+    fine = np.linspace(t[0], t[-1], (t.size - 1) * parts + 1)
+    iq = CubicSpline(t, case.envelope())(fine) * np.exp(2j * math.pi * offset * fine)
+    blocks = replace(costing, t=fine).unitaries(iq[None])[:, :2, :2]
+    if free:
+        blocks = free_blocks(blocks, costing.target)
+    return float(block_infidelity(blocks, costing.target)[0])
 
 
 def floor_item(result: GateResult, view: str) -> BudgetItem:

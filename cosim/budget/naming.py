@@ -6,10 +6,12 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from cosim.dsp.anatomy.parts import Anatomy
-from cosim.dsp.anatomy.shapes import TEN_TO_NINETY
+from cosim.dsp.anatomy.parts import Anatomy, actual_shape
+from cosim.dsp.anatomy.shapes import TEN_TO_NINETY, sample_shape
 from cosim.units import format_quantity
 
+# An edge is where the shape is farther than this from 0 and from 1.
+_EDGE = 1e-3
 # A level of nothing.
 _NOTHING = 1e-12
 
@@ -77,7 +79,8 @@ def measures(anatomy: Anatomy, level: float, phase: float) -> dict[str, Measure]
         found["image"] = _image(n)
     found |= _lines(anatomy)
     rest = _share(anatomy.rest, n["level"])
-    found["residual"] = Measure(decibels(rest), "dBc", f"rms {rest:.2e} of the amplitude")
+    edges = f"rms; {_at_edges(anatomy):.0%} of its power at the edges"
+    found["residual"] = Measure(decibels(rest), "dBc", edges)
     return found
 
 
@@ -155,6 +158,14 @@ def _lines(anatomy: Anatomy) -> dict[str, Measure]:
         steps = _share(anatomy.steps, n["level"])
         found["DAC steps"] = Measure(decibels(steps), "dBc", "rms beyond half the clock")
     return found
+
+
+def _at_edges(anatomy: Anatomy) -> float:
+    """Give the part of what is left that lies where the shape rises and falls."""
+    power = np.abs(anatomy.rest) ** 2
+    size = sample_shape(actual_shape(anatomy.numbers, anatomy.ideal), anatomy.grid).size
+    steep = (size > _EDGE) & (size < 1.0 - _EDGE)
+    return float(power[steep].sum() / max(float(power.sum()), 1e-300))
 
 
 def _share(part: np.ndarray, level: float) -> float:

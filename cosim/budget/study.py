@@ -16,7 +16,7 @@ from cosim.budget.full_wave import full_wave_items
 from cosim.budget.incoherent import decoherence_item, floor_item, neighbour_items, noise_items
 from cosim.budget.naming import measures
 from cosim.budget.result import BudgetItem, BudgetResult, IdealPulse
-from cosim.budget.table import budget_table
+from cosim.budget.table import BudgetTable, budget_table
 from cosim.dsp.anatomy.shapes import TEN_TO_NINETY
 from cosim.errors import InputError
 from cosim.gate import run_gate
@@ -26,7 +26,10 @@ from cosim.waveform import ComplexArray, Envelope
 
 
 def run_budget(
-    bench: Testbench, *, progress: Callable[[float], None] | None = None
+    bench: Testbench,
+    *,
+    fidelity: str | None = None,
+    progress: Callable[[float], None] | None = None,
 ) -> BudgetResult:
     """Run a gate and make its error budget.
 
@@ -34,6 +37,8 @@ def run_budget(
     ----------
     bench : Testbench
         With or without the table [budget].
+    fidelity : str or None
+        Which fidelity is costed, in place of what [budget] says.
     progress : callable or None
         Called with the simulated time in s now and then.
 
@@ -51,7 +56,8 @@ def run_budget(
         If ngspice or the evolution fails.
     """
     check_gate(bench)
-    return budget_of(run_gate(bench, progress=progress), bench)
+    _table(bench, fidelity)
+    return budget_of(run_gate(bench, progress=progress), bench, fidelity=fidelity)
 
 
 def budget_of(
@@ -83,14 +89,18 @@ def budget_of(
     begun = time.perf_counter()
     if bench is None:
         bench = gate_bench(make_testbench(tomllib.loads(result.run.testbench)))
-    table = budget_table(bench)
-    if fidelity is not None:
-        if fidelity not in VIEWS:
-            raise InputError(f"fidelity: wanted one of {', '.join(VIEWS)}, got {fidelity!r}")
-        table = replace(table, fidelity=fidelity)  # type: ignore[arg-type]
     target = check_gate(bench)
-    case = prepare(result, bench, table, target)
+    case = prepare(result, bench, _table(bench, fidelity), target)
     return _budget(case, begun)
+
+
+def _table(bench: Testbench, fidelity: str | None) -> BudgetTable:
+    table = budget_table(bench)
+    if fidelity is None:
+        return table
+    if fidelity not in VIEWS:
+        raise InputError(f"fidelity: wanted one of {', '.join(VIEWS)}, got {fidelity!r}")
+    return replace(table, fidelity=fidelity)  # type: ignore[arg-type]
 
 
 def _budget(case: Case, begun: float) -> BudgetResult:
@@ -119,8 +129,8 @@ def _budget(case: Case, begun: float) -> BudgetResult:
     judged = getattr(result, view)
     total = judged.infidelity
     interaction = total - sum(item.alone for item in items if item.counted)
-    items += [*neighbour_items(result, view), floor_item(result, view)]
-    items.sort(key=lambda item: -_rank(item))
+    items += [*neighbour_items(case, view), floor_item(result, view)]
+    items.sort(key=lambda item: (not item.counted, -_rank(item)))
     left = case.anatomy.rest + case.anatomy.steps
     share = float(np.linalg.norm(left) / np.linalg.norm(real))
     return BudgetResult(

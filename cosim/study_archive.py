@@ -1,0 +1,73 @@
+"""Results of studies in archives, beside the runs of gates and readouts."""
+
+import os
+from pathlib import Path
+
+from cosim import archive
+from cosim.budget.result import BUDGET_KINDS, BudgetResult
+from cosim.errors import ArchiveError
+
+# Classes by the tag that the archive keeps, of each study.
+STUDY_KINDS: dict[str, type] = {**BUDGET_KINDS}
+
+StudyResult = BudgetResult
+
+
+def save_study(result: StudyResult, path: str | os.PathLike[str]) -> int:
+    """Add the result of a study to an archive, which is made if it does not exist.
+
+    Parameters
+    ----------
+    result : BudgetResult
+    path : path
+        The HDF5 file; it may hold runs of gates, too.
+
+    Returns
+    -------
+    int
+        Number of the run in the archive, from 1.
+
+    Raises
+    ------
+    ArchiveError
+        If the file is something else, holds a sweep, or cannot be written.
+    """
+    if Path(path).exists() and archive.read_plan(path, {}) is not None:
+        raise ArchiveError(
+            f"{os.fspath(path)} holds a sweep, whose runs are those of its plan",
+            hint="save the result in another archive",
+        )
+    info = archive.RunInfo(status="done", start_time=result.run.started, wall_time=result.wall_time)
+    return archive.append(path, result, info=info)
+
+
+def load_study(path: str | os.PathLike[str], run: int | None = None) -> StudyResult | None:
+    """Read the result of a study from an archive.
+
+    Parameters
+    ----------
+    path : path
+        The HDF5 file.
+    run : int or None
+        Number of the run; default: the last.
+
+    Returns
+    -------
+    BudgetResult or None
+        None where the run is no study.
+
+    Raises
+    ------
+    ArchiveError
+        If the file cannot be read.
+    """
+    table = archive.read_table(path, columns=("id", "kind"))
+    kinds = dict(zip(table["id"].tolist(), table["kind"].tolist(), strict=True))
+    number = run if run is not None else max(kinds, default=None)
+    name = kinds.get(number) if number is not None else None
+    name = name.decode() if isinstance(name, bytes) else name
+    if name != BudgetResult.__name__:
+        return None
+    result = archive.read(path, STUDY_KINDS, run=number)
+    assert isinstance(result, BudgetResult)
+    return result
