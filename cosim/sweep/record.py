@@ -9,16 +9,17 @@ from math import nan
 
 from cosim.archive.layout import SCHEMA_VERSION
 from cosim.circuit.confidential import kept_files
-from cosim.circuit.deck import DeckFile
+from cosim.circuit.deck import Deck, DeckFile
 from cosim.decision_result import DECISION_KINDS
-from cosim.decks import roots_of
+from cosim.decks import read_deck, roots_of
 from cosim.errors import ArchiveError
+from cosim.readout_pulse import pulse_source
 from cosim.readout_result import READOUT_KINDS
 from cosim.record import package_versions
 from cosim.result import KINDS
 from cosim.sweep.identity import bears_on_nothing
 from cosim.sweep.plan import SweepPlan
-from cosim.testbench import Bench
+from cosim.testbench import Bench, ReadoutBench
 from cosim.waveform import Waveform
 
 _SHOWN = 5  # differing keys that a message names
@@ -225,9 +226,18 @@ def _flat(value: object, name: str = "") -> dict[str, object]:
 def _deck_files(plan: SweepPlan) -> tuple[DeckFile, ...]:
     found: dict[tuple[str, str], DeckFile] = {}
     for corner in plan.corners:
-        if corner.deck is not None:
-            for file in kept_files(corner.deck.files, roots_of(corner.bench)):
+        for bench, deck in _decks(corner.bench, corner.deck):
+            for file in kept_files(deck.files, roots_of(bench)):
                 # Jobs that share a plan may have named its testbench in different ways.
                 whole = replace(file, path=os.path.abspath(file.path))
                 found.setdefault((whole.path, whole.sha256), whole)
     return tuple(found.values())
+
+
+def _decks(bench: Bench, deck: Deck | None) -> list[tuple[Bench, Deck]]:
+    """Give the deck of a testbench, and that of a readout's pulse."""
+    found: list[tuple[Bench, Deck]] = [] if deck is None else [(bench, deck)]
+    source = pulse_source(bench) if isinstance(bench, ReadoutBench) else None
+    if source is None or source.netlist is None:
+        return found
+    return [*found, (source, read_deck(source))]
