@@ -10,8 +10,7 @@ from matplotlib.figure import Figure
 from scipy.special import ndtr
 
 from cosim.decision_result import DecisionCounts, DecisionResult
-from cosim.errors import InputError
-from cosim.terminal import CAUTION
+from cosim.figure_frame import write_figure
 
 _POINTS = 401
 
@@ -36,13 +35,7 @@ def plot_decisions(result: DecisionResult, path: str | os.PathLike[str]) -> None
     left, right = figure.subplots(1, 2)
     _draw_probability(left, result)
     _draw_changes(right, result)
-    figure.suptitle(result.title or "readout")
-    figure.text(0.995, 0.002, CAUTION, ha="right", va="bottom", fontsize=6, color="0.45")
-    figure.get_layout_engine().set(rect=(0, 0.03, 1, 0.97))  # type: ignore[union-attr, call-arg]
-    try:
-        figure.savefig(path, dpi=150)
-    except (OSError, ValueError) as error:
-        raise InputError(f"the figure {os.fspath(path)} cannot be written: {error}") from None
+    write_figure(figure, result.title or "readout", path, margin=0.03)
 
 
 def _draw_probability(axes: Axes, result: DecisionResult) -> None:

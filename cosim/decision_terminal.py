@@ -7,8 +7,8 @@ from rich.table import Table
 from rich.text import Text
 
 from cosim.decision_result import DecisionResult
-from cosim.readout_terminal import ranked_errors
-from cosim.terminal import CAUTION
+from cosim.readout_terminal import add_matrix, ranked_errors
+from cosim.terminal import framed, plain_table
 from cosim.units import format_quantity
 
 
@@ -28,7 +28,6 @@ def decision_table(result: DecisionResult) -> Group:
     """
     where = format_quantity(result.decide_at, "s")
     parts: list[RenderableType] = [
-        Text(result.title or "readout", style="bold"),
         Text(f"decided by the circuit at {where}, step {format_quantity(result.run.step, 's', 5)}"),
         _headline(result),
         Text(""),
@@ -41,35 +40,31 @@ def decision_table(result: DecisionResult) -> Group:
         Text("decisions that were counted, without changes of state"),
         _counts_table(result),
     ]
-    parts += [Text(f"warning: {line}", style="yellow") for line in result.warnings]
-    parts.append(Text(CAUTION, style="dim"))
-    return Group(*parts)
+    return framed(result.title or "readout", parts, result.warnings)
 
 
 def _headline(result: DecisionResult) -> Table:
-    table = _plain_table()
+    table = plain_table()
     floor = result.numerical_floor
     bar = "no numerical floor" if math.isnan(floor) else f"numerical floor {floor:.1e}"
-    p = result.assignment_matrix
     table.add_row(
         "assignment error",
         f"{result.assignment_error:.4e} ± {result.standard_error:.1e} (noisy runs; {bar})",
     )
-    table.add_row("prepared 0", f"P(0|0) = {p[0, 0]:.6f}   P(1|0) = {p[1, 0]:.4e}")
-    table.add_row("prepared 1", f"P(1|1) = {p[1, 1]:.6f}   P(0|1) = {p[0, 1]:.4e}")
+    add_matrix(table, result.assignment_matrix)
     table.add_row("signal over noise", f"{result.snr:.4g}")
     return table
 
 
 def _split_table(result: DecisionResult) -> Table:
-    table = _plain_table()
+    table = plain_table()
     for name, value in ranked_errors(result.errors):
         table.add_row(name, f"{value:.3e}")
     return table
 
 
 def _comparator_table(result: DecisionResult) -> Table:
-    table = _plain_table()
+    table = plain_table()
     clean = f"{result.clean_offset:.4f} without noise"
     table.add_row("offset", f"{result.offset:.4f} ± {result.offset_error:.4f}, {clean}")
     table.add_row("noise", f"{result.noise:.4g} ± {result.noise_error:.2g}, {result.noise_method}")
@@ -81,17 +76,10 @@ def _comparator_table(result: DecisionResult) -> Table:
 
 
 def _counts_table(result: DecisionResult) -> Table:
-    table = _plain_table()
+    table = plain_table()
     trials = result.counted.trials
     wrong = (result.counted.ones[0], trials[1] - result.counted.ones[1])
     for state in (0, 1):
         table.add_row(f"prepared {state}", f"{wrong[state]:.0f} of {trials[state]:.0f} wrong")
     table.add_row("for the fit", f"{result.fitted.trials.sum():.0f} around the threshold")
-    return table
-
-
-def _plain_table() -> Table:
-    table = Table(box=None, pad_edge=False, show_header=False)
-    table.add_column(style="bold", no_wrap=True)
-    table.add_column(overflow="fold")
     return table

@@ -7,10 +7,9 @@ from matplotlib.axes import Axes
 from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.figure import Figure, SubFigure
 
-from cosim.errors import InputError
+from cosim.figure_frame import write_figure
 from cosim.noise_figures import draw_sides, side_rows
 from cosim.result import GateResult
-from cosim.terminal import CAUTION
 
 _LABELS = ("I", "X", "Y", "Z")
 
@@ -39,13 +38,7 @@ def plot_gate(result: GateResult, path: str | os.PathLike[str]) -> None:
     _draw_phase(gate.add_subplot(grid[1, :2], sharex=envelope), result)
     _draw_matrix(gate.add_subplot(grid[0, 2]), result)
     _draw_infidelities(gate.add_subplot(grid[1, 2]), result)
-    figure.suptitle(result.title or f"gate {result.target}")
-    figure.text(0.995, 0.002, CAUTION, ha="right", va="bottom", fontsize=6, color="0.45")
-    figure.get_layout_engine().set(rect=(0, 0.02, 1, 0.98))  # type: ignore[union-attr, call-arg]
-    try:
-        figure.savefig(path, dpi=150)
-    except (OSError, ValueError) as error:
-        raise InputError(f"the figure {os.fspath(path)} cannot be written: {error}") from None
+    write_figure(figure, result.title or f"gate {result.target}", path)
 
 
 def _with_sides(figure: Figure, result: GateResult) -> Figure | SubFigure:

@@ -8,10 +8,9 @@ from matplotlib.axes import Axes
 from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.figure import Figure, SubFigure
 
-from cosim.errors import InputError
+from cosim.figure_frame import write_figure
 from cosim.readout_result import ReadoutResult
 from cosim.readout_terminal import ranked_errors, window_of
-from cosim.terminal import CAUTION
 from cosim.units import format_quantity
 
 # Devices that are shown, and decades that a logarithmic axis of errors goes down from the largest.
@@ -46,13 +45,7 @@ def plot_readout(result: ReadoutResult, path: str | os.PathLike[str]) -> None:
     parts = figure.add_gridspec(2, 1, height_ratios=[2.0, 1.0])
     _draw_states(figure.add_subfigure(parts[0]), result)
     _draw_figures_of_merit(figure.add_subfigure(parts[1]), result)
-    figure.suptitle(result.title or "readout")
-    figure.text(0.995, 0.002, CAUTION, ha="right", va="bottom", fontsize=6, color="0.45")
-    figure.get_layout_engine().set(rect=(0, 0.02, 1, 0.98))  # type: ignore[union-attr, call-arg]
-    try:
-        figure.savefig(path, dpi=150)
-    except (OSError, ValueError) as error:
-        raise InputError(f"the figure {os.fspath(path)} cannot be written: {error}") from None
+    write_figure(figure, result.title or "readout", path)
 
 
 def _draw_states(figure: SubFigure, result: ReadoutResult) -> None:

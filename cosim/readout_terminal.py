@@ -10,8 +10,9 @@ from rich.text import Text
 from cosim.dsp.detection.assignment import ErrorItems
 from cosim.dsp.detection.shots import ShotCounts
 from cosim.readout_result import ReadoutResult
-from cosim.terminal import CAUTION
+from cosim.terminal import framed, plain_table
 from cosim.units import format_quantity
+from cosim.waveform import FloatArray
 
 MOST_DEVICES = 5  # named in the table
 _BAR = 24  # characters of the longest bar
@@ -32,7 +33,6 @@ def readout_table(result: ReadoutResult) -> Group:
         leaves behind, shots against the closed form, warnings and the caution.
     """
     parts: list[RenderableType] = [
-        Text(result.title or "readout", style="bold"),
         Text(_heading(result)),
         _headline(result),
         Text(""),
@@ -48,9 +48,7 @@ def readout_table(result: ReadoutResult) -> Group:
         Text("closed form against decisions that were counted"),
         _shot_table(result),
     ]
-    parts += [Text(f"warning: {line}", style="yellow") for line in result.warnings]
-    parts.append(Text(CAUTION, style="dim"))
-    return Group(*parts)
+    return framed(result.title or "readout", parts, result.warnings)
 
 
 def window_of(result: ReadoutResult) -> tuple[float, float]:
@@ -89,6 +87,22 @@ def ranked_errors(errors: ErrorItems) -> list[tuple[str, float]]:
     return sorted(items, key=lambda item: -abs(item[1]))
 
 
+def add_matrix(table: Table, matrix: FloatArray) -> None:
+    """Add the probabilities of the decisions to a table.
+
+    Parameters
+    ----------
+    table : rich.table.Table
+        Of names and values; a row for each prepared state is added.
+    matrix : ndarray, shape (2, 2)
+        P(i|j): decision i, state j prepared.
+    """
+    for state in (0, 1):
+        right, wrong = matrix[state, state], matrix[1 - state, state]
+        text = f"P({state}|{state}) = {right:.6f}   P({1 - state}|{state}) = {wrong:.4e}"
+        table.add_row(f"prepared {state}", text)
+
+
 def _heading(result: ReadoutResult) -> str:
     start, stop = (format_quantity(edge, "s") for edge in window_of(result))
     periods = result.run.steps_per_period
@@ -100,16 +114,14 @@ def _heading(result: ReadoutResult) -> str:
 
 
 def _headline(result: ReadoutResult) -> Table:
-    table = _plain_table()
+    table = plain_table()
     floor = result.numerical_floor
     bar = "(no numerical floor)" if math.isnan(floor) else f"± {floor:.1e} (numerical floor)"
-    p = result.assignment_matrix
     best = format_quantity(result.best_integration_time, "s")
     # The lengths that were tried end with the window.
     whole = result.best_integration_time >= result.integration_time * (1.0 - 1e-9)
     table.add_row("assignment error", f"{result.assignment_error:.4e} {bar}")
-    table.add_row("prepared 0", f"P(0|0) = {p[0, 0]:.6f}   P(1|0) = {p[1, 0]:.4e}")
-    table.add_row("prepared 1", f"P(1|1) = {p[1, 1]:.6f}   P(0|1) = {p[0, 1]:.4e}")
+    add_matrix(table, result.assignment_matrix)
     if result.leaked.size:
         text = f"P(0|2) = {result.leaked[0]:.4e}   P(1|2) = {result.leaked[1]:.4e}"
         table.add_row("leaked to 2", text)
@@ -141,7 +153,7 @@ def _split_table(result: ReadoutResult) -> Table:
 
 
 def _noise_table(result: ReadoutResult) -> Table:
-    table = _plain_table()
+    table = plain_table()
     noise = result.noise
     method = result.noise_method
     if noise.relative_error > 0.0:
@@ -169,7 +181,7 @@ def _noise_table(result: ReadoutResult) -> Table:
 
 
 def _aftermath_table(result: ReadoutResult) -> Table:
-    table = _plain_table()
+    table = plain_table()
     photons = result.residual_photons
     rate = result.dephasing_rate
     agreement = result.repeat_agreement
@@ -203,11 +215,4 @@ def _shot_table(result: ReadoutResult) -> Table:
         off = counts.deviation(result.assignment_matrix) if result.assignment_error else 0.0
         value = f"{counts.assignment_error:.4e} ± {counts.standard_error:.1e}"
         table.add_row(name, str(counts.count), value, f"{off:+.2f} standard errors")
-    return table
-
-
-def _plain_table() -> Table:
-    table = Table(box=None, pad_edge=False, show_header=False)
-    table.add_column(style="bold", no_wrap=True)
-    table.add_column(overflow="fold")
     return table

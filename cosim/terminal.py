@@ -41,7 +41,7 @@ def check_table(findings: Sequence[Finding]) -> Table:
     rich.table.Table
         One row each.
     """
-    table = _plain_table()
+    table = plain_table()
     for item in findings:
         table.add_row(item.label, item.text)
     return table
@@ -61,7 +61,6 @@ def result_table(result: GateResult) -> Group:
         Heading, fidelities, further numbers, the pulse, warnings and the caution.
     """
     parts: list[RenderableType] = [
-        Text(result.title or "gate", style="bold"),
         Text(_heading(result)),
         _fidelity_table(result),
         _number_table(result),
@@ -69,9 +68,42 @@ def result_table(result: GateResult) -> Group:
         *spectator_parts(result.spectators, result.register_infidelity),
         *idle_parts(result.idle, result.waveform.unit),
     ]
-    parts += [Text(f"warning: {line}", style="yellow") for line in result.warnings]
-    parts.append(Text(CAUTION, style="dim"))
-    return Group(*parts)
+    return framed(result.title or "gate", parts, result.warnings)
+
+
+def framed(title: str, parts: Sequence[RenderableType], warnings: Sequence[str]) -> Group:
+    """Put what a result shows between its title and its warnings.
+
+    Parameters
+    ----------
+    title : str
+        Above all.
+    parts : sequence of renderables
+        Tables and lines.
+    warnings : sequence of str
+        Of the result.
+
+    Returns
+    -------
+    rich.console.Group
+        With the caution as the last line.
+    """
+    told = [Text(f"warning: {line}", style="yellow") for line in warnings]
+    return Group(Text(title, style="bold"), *parts, *told, Text(CAUTION, style="dim"))
+
+
+def plain_table() -> Table:
+    """Give an empty table of names and values, without a frame.
+
+    Returns
+    -------
+    rich.table.Table
+        Of two columns.
+    """
+    table = Table(box=None, pad_edge=False, show_header=False)
+    table.add_column(style="bold", no_wrap=True)
+    table.add_column(overflow="fold")
+    return table
 
 
 def _heading(result: GateResult) -> str:
@@ -113,7 +145,7 @@ def _degrees(before: float, after: float) -> str:
 
 
 def _number_table(result: GateResult) -> Table:
-    table = _plain_table()
+    table = plain_table()
     axis = ", ".join(f"{part:+.5f}" for part in result.rotation.axis)
     pulse = result.pulse
     unit = result.waveform.unit
@@ -164,7 +196,7 @@ def record_table(result: GateResult | ReadoutResult | DecisionResult) -> Table:
     rich.table.Table
         Start, host, versions, times and files.
     """
-    table = _plain_table()
+    table = plain_table()
     record = result.run
     table.add_row("started", record.started)
     table.add_row("host", record.host)
@@ -224,7 +256,7 @@ def row_table(row: Mapping[str, object], units: Mapping[str, str]) -> Table:
     rich.table.Table
         One line per column that has a value.
     """
-    table = _plain_table()
+    table = plain_table()
     for name, value in row.items():
         if value not in (None, ""):
             unit = units.get(name, "")
@@ -310,10 +342,3 @@ def _cell(label: str, value: object) -> str:
     text = value.decode() if isinstance(value, bytes) else str(value)
     # A date without its zone is enough in a list; the detailed view has all of it.
     return text[:19].replace("T", " ") if label == "started" else text
-
-
-def _plain_table() -> Table:
-    table = Table(box=None, pad_edge=False, show_header=False)
-    table.add_column(style="bold", no_wrap=True)
-    table.add_column(overflow="fold")
-    return table
