@@ -98,7 +98,7 @@ def test_a_gate_is_insisted_on() -> None:
         ({"resonator": {"kappa_out": 5}}, r"table \[resonator\], key 'kappa_out'"),
         ({"resonator": {"geometry": "transmission"}}, "kappa_in: wanted more than 0"),
         ({"resonator": {"kappa_in": "1 MHz"}}, "kappa_in: wanted 0 for the geometry 'hanger'"),
-        ({"resonator": {"power": "-120 dBm"}}, "'photons' or 'power'"),
+        ({"resonator": {"power": "-120 dBm"}}, "'photons', 'power' and 'pulse'"),
         ({"resonator": {"coupling": "60 MHz"}}, "'qubit_frequency' and 'coupling'"),
         ({"resonator": {"boost": 2.0}}, "'boost' and 'boost_length' go together"),
         ({"resonator": {"boost": 2.0, "boost_length": "1 us"}}, "less than the pulse's 'length'"),
