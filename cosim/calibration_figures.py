@@ -123,8 +123,10 @@ def _draw_limits(axes: Axes, result: CalibrationResult) -> None:
 def _draw_knob(axes: Axes, result: CalibrationResult, knob: KnobResult) -> None:
     scale, unit = _scaled(knob)
     # So far that the curve rises by as much as the metric itself, or over some steps.
-    reach = 3.0 * math.sqrt(max(result.cost, result.after) / knob.stiffness)
-    reach = max(reach, 2.5 * knob.resolution) if knob.stiffness else knob.high - knob.low
+    reach = knob.high - knob.low
+    if knob.stiffness > 0.0:
+        reach = 3.0 * math.sqrt(max(result.cost, result.after) / knob.stiffness)
+        reach = max(reach, 2.5 * knob.resolution)
     low, high = max(knob.low, knob.found - reach), min(knob.high, knob.found + reach)
     x = np.linspace(low, high, _POINTS)
     move = x - knob.found

@@ -100,7 +100,7 @@ class GateRuns:
                 if purpose in ("start", "difference"):
                     raise
                 point = Point(
-                    place, purpose, math.inf, np.zeros(0), simulated=simulated, fault=str(error)
+                    place, purpose, math.inf, np.zeros(0), simulated=simulated, fault=error.message
                 )
             self._keep(point)
             points.append(point)

@@ -75,7 +75,7 @@ class ReadoutTrials:
             except SimulationError as error:
                 if purpose in ("start", "difference"):
                     raise
-                value, warnings, fault = math.inf, (), str(error)
+                value, warnings, fault = math.inf, (), error.message
             simulated = self._decides or bool(fault) or len(self._runs) > before
             points.append(
                 Point(

@@ -5,6 +5,7 @@ and two for each knob give the first quadratic; every further run goes to its mi
 distance of the best, and is taken into it.
 """
 
+import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 from itertools import product
@@ -24,8 +25,8 @@ FIRST_STEP = 0.15
 GAIN = 1e-3
 # A part of the distance of the bounds below which it is not worth looking closer.
 LEAST_TRUST = 2e-3
-# Distance within which a second run must tell the slope at a bound, in parts of the range.
-NEAR = 0.1
+# Distance at which the best is compared with its neighbours, in parts of the range.
+NEAR = 0.05
 # Errors below this are not told apart.
 LEAST_ERROR = 1e-15
 # Relative change of the error over the whole of a knob that counts as none: rounding.
@@ -133,32 +134,27 @@ def search_by_surrogate(
     around = _around(origin, knobs)
     runner.run(around, "difference")
     _refuse_idle(runner.history, knobs)
-    trust = 2.0 * FIRST_STEP
+    trust = reach = 2.0 * FIRST_STEP
     while True:
-        surrogate = fitted(runner.history, trust)
+        surrogate = fitted(runner.history, reach)
         best = surrogate.centre
         place = _aim(surrogate, knobs, trust)
         promised = surrogate.value - surrogate.predict(place)
-        if promised < GAIN or _seen(runner, place):
-            # What is promised may lie between what has been seen: look closer once more.
-            trust *= 0.25
-            if trust >= max(LEAST_TRUST, min(knob.grid for knob in knobs)) and promised >= GAIN:
-                continue
-            inner = _inner(runner, best, knobs)
-            if len(runner.history) + len(inner) > most:
-                return Surveyed(start, best, surrogate, False)
-            runner.run(inner, "neighbour")
-            surrogate = fitted(runner.history, NEAR)
-            if surrogate.centre is best:
+        if promised < GAIN or trust < LEAST_TRUST or _seen(runner, place):
+            beside = _beside(runner, best, knobs)
+            if not beside:
                 return Surveyed(start, best, surrogate, True)
-            trust = NEAR
+            if len(runner.history) + len(beside) > most:
+                return Surveyed(start, best, surrogate, False)
+            runner.run(beside, "neighbour")
+            trust = reach = 2.0 * NEAR
             continue
         if len(runner.history) >= most:
             return Surveyed(start, best, surrogate, False)
         (point,) = runner.run([tuple(place.tolist())], "step")
-        length = float(np.abs(place - np.array(best.place)).max())
         if not point.value < best.value:
-            trust = max(0.5 * length, 0.25 * trust)
+            length = float(np.abs(place - np.array(best.place)).max())
+            trust = 0.5 * min(length, trust)
 
 
 def fitted(points: Sequence[Point], reach: float) -> Surrogate:
@@ -225,17 +221,24 @@ def _aim(surrogate: Surrogate, knobs: Sequence[Knob], trust: float) -> FloatArra
     return min((np.array(place) for place in settable), key=surrogate.predict)
 
 
-def _inner(runner: Runner, best: Point, knobs: Sequence[Knob]) -> list[tuple[float, ...]]:
-    """Give places next to the bounds that the best run stands at: what its slope there is."""
+def _beside(runner: Runner, best: Point, knobs: Sequence[Knob]) -> list[tuple[float, ...]]:
+    """Give places near the best on both sides of each knob, where nothing has been run yet.
+
+    What was fitted to runs far away is no proof of an optimum, and no slope at a bound.
+    """
+    centre = np.array(best.place)
+    moves = np.array([point.place for point in runner.history]) - centre
     found = []
     for at, knob in enumerate(knobs):
-        others = [abs(point.place[at] - best.place[at]) for point in runner.history]
-        step = max(0.5 * NEAR, knob.grid)
-        last = knob.neighbours(1.0)[-1]
-        sides = {0.0: step, last: last - step}
-        if best.place[at] in sides and not any(1e-9 < other <= 2.0 * step for other in others):
-            near = knob.neighbours(sides[best.place[at]])[0]
-            found.append((*best.place[:at], near, *best.place[at + 1 :]))
+        step = max(NEAR, knob.grid)
+        for side in (-step, step):
+            part = _nearest(knob, float(centre[at]) + side)
+            if not 0.0 <= part <= 1.0 or abs(part - centre[at]) < 1e-9:
+                continue
+            along = moves[:, at] * math.copysign(1.0, side)
+            others = np.abs(np.delete(moves, at, axis=1)).max(axis=1, initial=0.0)
+            if not np.any((along > 1e-9) & (along < 1.5 * step) & (others < along)):
+                found.append((*best.place[:at], part, *best.place[at + 1 :]))
     return found
 
 

@@ -139,8 +139,8 @@ class Knob:
             return (place,)
         count = place / self.grid
         last = math.floor(1.0 / self.grid * (1.0 + 1e-12))
-        near = {math.floor(count + 1e-9), math.ceil(count - 1e-9)}
-        return tuple(self.grid * min(max(item, 0), last) for item in sorted(near))
+        near = (math.floor(count + 1e-9), math.ceil(count - 1e-9))
+        return tuple(self.grid * item for item in sorted({min(max(n, 0), last) for n in near}))
 
 
 def read_calibrate(bench: Bench, deck: Deck | None) -> tuple[CalibrateTable, tuple[Knob, ...]]:

@@ -204,7 +204,11 @@ def _warnings(
             f"the trim gains {gain:.1e}, which is less than the error bar of "
             f"{ended.last.error_bar:.1e}: the start was as good as can be told"
         )
-    found += [point.fault for point in ended.history if point.fault]
+    for point in ended.history:
+        if point.fault:
+            pairs = zip(knobs, point.place, strict=True)
+            where = ", ".join(f"{knob.key.path} = {knob.at(part):.6g}" for knob, part in pairs)
+            found.append(f"the run at {where} failed: {point.fault}")
     return found + [f"the trimmed run: {text}" for text in ended.last.warnings]
 
 

@@ -28,6 +28,8 @@ NOTHING = 3e-5
 FAR = 0.25
 # What a step must promise to be worth a run: absolute, and as a part of the cost.
 GAIN, RELATIVE_GAIN = 1e-9, 1e-5
+# A part of the distance of the bounds below which it is not worth looking closer.
+LEAST_TRUST = 1e-4
 # Steps of a trim that cost less than this part of what is left are not tried one by one.
 FINE = 0.01
 
@@ -201,8 +203,11 @@ def _descend(
         low, high = _box(model.place, trust)
         place = model.settable(knobs, low, high)
         promised = model.centre.value - model.predict(place)
-        if promised < tolerance(model.centre.value) or _seen(runner, place):
+        if promised < tolerance(model.centre.value) or trust < LEAST_TRUST:
             return model, trust, True
+        if _seen(runner, place):
+            trust *= 0.5  # It has failed, or was worse than the model says.
+            continue
         if len(runner.history) >= most:
             return model, trust, False
         (point,) = runner.run([tuple(place.tolist())], "step")
