@@ -8,16 +8,26 @@ from pathlib import Path
 
 import pytest
 
-from tests.examples.committed import SWEEPS, TOLERANCE, expected, sweep_infidelities
+from tests.examples.committed import (
+    READOUT_TOLERANCE,
+    SWEEPS,
+    SWEPT_READOUTS,
+    TOLERANCE,
+    expected,
+    sweep_losses,
+)
 
 
 @pytest.mark.ngspice
 @pytest.mark.full
 @pytest.mark.parametrize("name", SWEEPS)
-def test_sweeps_give_the_committed_infidelities(name: str, tmp_path: Path) -> None:
-    found = sweep_infidelities(name, tmp_path / "s.h5")
-    # Two runs of each corner.
-    assert sorted(run.split()[1] for run in found) == ["fast"] * 2 + ["slow"] * 2 + ["typical"] * 2
-    assert found == pytest.approx(
-        expected(name)["infidelities"], abs=TOLERANCE["free_frame.average_gate_fidelity"]
-    )
+def test_sweeps_give_the_committed_losses(name: str, tmp_path: Path) -> None:
+    found, committed = sweep_losses(name, tmp_path / "s.h5"), expected(name)["losses"]
+    corners = sorted(run.split()[1] for run in found)
+    if name in SWEPT_READOUTS:
+        assert corners == ["typical"] * 4
+        assert found == pytest.approx(committed, rel=READOUT_TOLERANCE, abs=0.0)
+    else:
+        assert corners == ["fast"] * 2 + ["slow"] * 2 + ["typical"] * 2
+        tolerance = TOLERANCE["free_frame.average_gate_fidelity"]
+        assert found == pytest.approx(committed, abs=tolerance)
