@@ -5,6 +5,7 @@ import fcntl
 import multiprocessing
 import os
 import resource
+import shutil
 import threading
 from dataclasses import dataclass
 from pathlib import Path
@@ -103,12 +104,14 @@ def test_failure_of_every_call(tmp_path: Path, number: int) -> None:
     def fail(name: str, args: tuple[Any, ...]) -> None:
         raise OSError(number, os.strerror(number))
 
+    begun = tmp_path / "begun"
+    begun.mkdir()
+    write(begun / "a.h5", make(1.0))
+    write_part(begun / "a.h5", [NumberedRun(2, make(2.0))])
     outcomes = []
     for at in range(1, 1000):
         path = tmp_path / str(at) / "a.h5"
-        path.parent.mkdir()
-        write(path, make(1.0))
-        write_part(path, [NumberedRun(2, make(2.0))])
+        shutil.copytree(begun, path.parent)
 
         def work(pipe: int, path: Path = path, at: int = at) -> None:
             fault = Fault(at, fail)
