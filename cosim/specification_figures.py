@@ -9,6 +9,7 @@ from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.figure import Figure
 
 from cosim.errors import InputError
+from cosim.specification.readout_result import ReadoutSpecification
 from cosim.specification.result import GateSpecification, LimitMask
 from cosim.specification_terminal import format_limit
 from cosim.terminal import CAUTION
@@ -49,6 +50,40 @@ def plot_specification(result: GateSpecification, path: str | os.PathLike[str]) 
     save_figure(figure, result.title or "specification", path)
 
 
+def plot_readout_specification(result: ReadoutSpecification, path: str | os.PathLike[str]) -> None:
+    """Draw a specification of a readout.
+
+    Parameters
+    ----------
+    result : ReadoutSpecification
+        The specification.
+    path : path
+        File to write; its ending says the format.
+
+    Raises
+    ------
+    InputError
+        If the file cannot be written.
+    """
+    figure = Figure(figsize=(7.5, 4.4), layout="constrained")
+    FigureCanvasAgg(figure)
+    axes = figure.subplots()
+    base = result.base
+    shares = [
+        ("vacuum and loss", base.separation),
+        ("decay", base.decay),
+        ("preparation", base.preparation),
+        ("excitation", base.excitation),
+    ]
+    shares += [
+        (f"{block.label}: {format_limit(block.limit, block.unit)}", block.share)
+        for block in result.blocks
+    ]
+    shares.append(("all together, in closed form", result.assignment_error))
+    draw_shares(axes, shares, result.target_error, "assignment error")
+    save_figure(figure, result.title or "specification", path)
+
+
 def draw_shares(
     axes: Axes, shares: Sequence[tuple[str, float]], target: float, quantity: str
 ) -> None:
@@ -71,13 +106,14 @@ def draw_shares(
     for place, (_, value) in enumerate(shares):
         colour = "0.3" if place == len(shares) - 1 else "C0"
         axes.barh(place, max(value, least), color=colour, height=0.65)
-        axes.text(max(value, least), place, f" {value:.1e}", va="center", fontsize=7)
-    axes.axvline(target, color="C3", lw=1.2, ls="--", label="target")
+        text = axes.text(max(value, least), place, f" {value:.1e}", va="center", fontsize=7)
+        text.set_bbox({"facecolor": "white", "edgecolor": "none", "pad": 0.5})
+    axes.axvline(target, color="C3", lw=1.2, ls="--", label="target", zorder=0)
     axes.set_yticks(range(len(shares)), [name for name, _ in shares], fontsize=7)
     axes.set_ylim(len(shares) - 0.5, -0.5)
     axes.tick_params(axis="x", labelsize=7)
-    axes.set_xlabel(f"{quantity}, alone at the limit", fontsize=_SMALL)
-    axes.legend(fontsize=7, loc="lower right")
+    axes.set_xlabel(f"{quantity}, each at its limit", fontsize=_SMALL)
+    axes.legend(fontsize=7, loc="upper right")
 
 
 def save_figure(figure: Figure, title: str, path: str | os.PathLike[str]) -> None:
@@ -113,7 +149,7 @@ def _draw_mask(axes: Axes, mask: LimitMask, label: str) -> None:
         axes.set_xscale("log")
         axes.set_xlabel("offset (Hz)", fontsize=_SMALL)
     elif (mask.low == mask.high).all():
-        axes.plot(mask.low / 1e6, mask.levels, "o-", color="C4", ms=3, lw=1.0)
+        axes.plot(mask.low / 1e6, mask.levels, "o", color="C4", ms=4)
         axes.set_xlabel("offset from the carrier (MHz)", fontsize=_SMALL)
     else:
         for low, high, level in zip(mask.low, mask.high, mask.levels, strict=True):

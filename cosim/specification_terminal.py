@@ -1,17 +1,21 @@
 """What each block must meet, as tables for a terminal and as columns for other programs."""
 
+import csv
 import math
+import os
 
 from rich.console import Group, RenderableType
 from rich.table import Table
 from rich.text import Text
 
+from cosim.errors import InputError
+from cosim.specification.readout_result import ReadoutSpecification
 from cosim.specification.result import BlockLimit, GateSpecification, LimitMask
 from cosim.terminal import CAUTION
 from cosim.units import format_quantity
 
-# Units that are told as they are: decibels, densities, and plain numbers.
-_PLAIN = ("dBc", "dBc/Hz", "1/Hz", "V^2/Hz", "K", "dB")
+# Units in decibels, of which a tenth is enough.
+_PLAIN = ("dBc", "dBc/Hz")
 
 
 def specification_table(result: GateSpecification) -> Group:
@@ -44,6 +48,51 @@ def specification_table(result: GateSpecification) -> Group:
     return Group(*parts)
 
 
+def readout_specification_table(result: ReadoutSpecification) -> Group:
+    """Lay out what the blocks of a readout must meet.
+
+    Parameters
+    ----------
+    result : ReadoutSpecification
+        The specification.
+
+    Returns
+    -------
+    rich.console.Group
+        Heading, what is fixed, the blocks, the verification, warnings and the caution.
+    """
+    fixed = _plain()
+    fixed.add_row("fixed", f"{result.base_error:.2e}")
+    for name in ("separation", "decay", "preparation", "excitation"):
+        fixed.add_row(f"  {name}", f"{getattr(result.base, name):.2e}")
+    blocks = _head("block", "limit", "costs", "of target", "steady-state formula")
+    for block in result.blocks:
+        blocks.add_row(
+            block.label,
+            _limit(block),
+            f"{block.share:.2e}",
+            f"{block.share / result.target_error:.1%}",
+            _formula_text(block),
+        )
+    notes = _plain()
+    for block in result.blocks:
+        notes.add_row(block.label, block.note)
+    parts: list[RenderableType] = [
+        Text(result.title or "specification", style="bold"),
+        Text(f"target: an assignment error of {result.target_error:g}"),
+        fixed,
+        Text(""),
+        blocks,
+        Text(""),
+        notes,
+        Text(""),
+        _readout_verification(result),
+    ]
+    parts += [Text(f"warning: {line}", style="yellow") for line in result.warnings]
+    parts.append(Text(CAUTION, style="dim"))
+    return Group(*parts)
+
+
 def format_limit(value: float, unit: str) -> str:
     """Write a limit for people.
 
@@ -65,6 +114,8 @@ def format_limit(value: float, unit: str) -> str:
         return f"{value:.3g}"
     if unit in ("1/Hz", "V^2/Hz"):
         return f"{value:.2e} {unit}"
+    if unit == "K":
+        return f"{value:.3g} K"
     if unit in _PLAIN:
         return f"{value:.1f} {unit}"
     if unit == "rad":
@@ -92,6 +143,35 @@ def mask_rows(result: GateSpecification) -> list[tuple[str, str, str, str, str]]
     return rows
 
 
+def write_masks(result: GateSpecification, path: str | os.PathLike[str]) -> int:
+    """Write the masks of a specification as columns.
+
+    Parameters
+    ----------
+    result : GateSpecification
+        The specification.
+    path : path
+        The file.
+
+    Returns
+    -------
+    int
+        Number of rows below the heading.
+
+    Raises
+    ------
+    InputError
+        If the file cannot be written.
+    """
+    rows = mask_rows(result)
+    try:
+        with open(path, "w", encoding="utf-8", newline="") as file:
+            csv.writer(file).writerows(rows)
+    except OSError as error:
+        raise InputError(f"the masks cannot be written to {os.fspath(path)}: {error}") from None
+    return len(rows) - 1
+
+
 def _heading(result: GateSpecification) -> str:
     return (
         f"target {result.target}, infidelity {result.target_infidelity:g}; pulse of "
@@ -111,10 +191,7 @@ def _fixed_table(result: GateSpecification) -> Table:
 
 
 def _block_table(result: GateSpecification) -> Table:
-    table = Table(box=None, pad_edge=False, header_style="bold")
-    table.add_column("block", no_wrap=True, style="bold")
-    for name in ("limit", "infidelity", "of the target", "small-error formula"):
-        table.add_column(name, justify="right", no_wrap=True)
+    table = _head("block", "limit", "costs", "of target", "small-error formula")
     powered = not math.isnan(result.total_power)
     if powered:
         table.add_column("power", justify="right", no_wrap=True)
@@ -124,17 +201,56 @@ def _block_table(result: GateSpecification) -> Table:
             _limit(block),
             f"{block.share:.2e}",
             f"{block.share / result.target_infidelity:.1%}",
-            format_limit(block.formula, block.unit),
+            _formula_text(block),
         ]
         if powered:
-            power = math.nan if math.isnan(block.power) else block.power
-            cells.append("-" if math.isnan(power) else format_quantity(power, "W", 3))
+            cells.append(format_quantity(block.power, "W", 3))
         table.add_row(*cells)
     if powered:
         total = format_quantity(result.total_power, "W", 3)
         table.add_row("all together", "", f"{result.combined:.2e}", "", "", total)
     else:
         table.add_row("all together", "", f"{result.combined:.2e}", "", "")
+    return table
+
+
+def _readout_verification(result: ReadoutSpecification) -> Table:
+    table = _plain()
+    verdict = "met" if result.assignment_error <= result.target_error else "missed"
+    table.add_row(
+        "all limits together",
+        f"{result.assignment_error:.3e} in closed form, at a signal over noise of "
+        f"{result.snr:.3g}: target {verdict}",
+    )
+    for name, counts in (("integrated shots", result.shots), ("whole records", result.records)):
+        table.add_row(
+            f"{counts.count} {name}",
+            f"{counts.assignment_error:.3e} ± {counts.standard_error:.0e}",
+        )
+    shortest = format_quantity(result.integration_time, "s", 3)
+    longest = format_quantity(result.longest_integration, "s", 3)
+    table.add_row("integration", f"{shortest} to {longest} meet the target with these limits")
+    if not math.isnan(result.full_scale):
+        table.add_row(
+            "converters",
+            f"a step is {result.lsb_over_sigma:.2g} standard deviations of a sample, "
+            f"{result.clipped:.1e} of the samples clip",
+        )
+    return table
+
+
+def _formula_text(block: BlockLimit) -> str:
+    # Parts of a bit tell how far the formula is from the next one.
+    if block.label.startswith("bits") and not math.isnan(block.formula):
+        return f"{block.formula:.2f}"
+    return format_limit(block.formula, block.unit)
+
+
+def _head(first: str, *names: str) -> Table:
+    table = Table(box=None, pad_edge=False, header_style="bold")
+    table.add_column(first, no_wrap=True, style="bold")
+    for name in names:
+        table.add_column(name, justify="right", no_wrap=True)
     return table
 
 
@@ -168,7 +284,7 @@ def _verification_table(result: GateSpecification) -> Table:
     verdict = "met" if found.infidelity <= result.target_infidelity else "missed"
     table.add_row(
         "all limits together",
-        f"{found.infidelity:.3e} ± {found.standard_error:.0e} by simulation: the target is {verdict}",
+        f"{found.infidelity:.3e} ± {found.standard_error:.0e} by simulation: target {verdict}",
     )
     table.add_row(
         "",
@@ -177,8 +293,8 @@ def _verification_table(result: GateSpecification) -> Table:
     if found.shrinking < 1.0:
         table.add_row(
             "shrunk",
-            f"all errors that are not given to {found.shrinking:.3f} of what the rule allowed, with "
-            f"which they came to {found.before_shrinking:.3e}",
+            f"all errors that are not given to {found.shrinking:.3f} of what the rule allowed, "
+            f"with which they came to {found.before_shrinking:.3e}",
         )
     if not math.isnan(result.power_per_infidelity):
         saved = format_quantity(

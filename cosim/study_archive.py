@@ -6,11 +6,20 @@ from pathlib import Path
 from cosim import archive
 from cosim.budget.result import BUDGET_KINDS, BudgetResult
 from cosim.errors import ArchiveError
+from cosim.specification.readout_result import (
+    READOUT_SPECIFICATION_KINDS,
+    ReadoutSpecification,
+)
+from cosim.specification.result import SPECIFICATION_KINDS, GateSpecification
 
 # Classes by the tag that the archive keeps, of each study.
-STUDY_KINDS: dict[str, type] = {**BUDGET_KINDS}
+STUDY_KINDS: dict[str, type] = {
+    **BUDGET_KINDS,
+    **SPECIFICATION_KINDS,
+    **READOUT_SPECIFICATION_KINDS,
+}
 
-StudyResult = BudgetResult
+StudyResult = BudgetResult | GateSpecification | ReadoutSpecification
 
 
 def save_study(result: StudyResult, path: str | os.PathLike[str]) -> int:
@@ -18,7 +27,7 @@ def save_study(result: StudyResult, path: str | os.PathLike[str]) -> int:
 
     Parameters
     ----------
-    result : BudgetResult
+    result : BudgetResult, GateSpecification or ReadoutSpecification
     path : path
         The HDF5 file; it may hold runs of gates, too.
 
@@ -37,7 +46,8 @@ def save_study(result: StudyResult, path: str | os.PathLike[str]) -> int:
             f"{os.fspath(path)} holds a sweep, whose runs are those of its plan",
             hint="save the result in another archive",
         )
-    info = archive.RunInfo(status="done", start_time=result.run.started, wall_time=result.wall_time)
+    started = result.run.started if isinstance(result, BudgetResult) else result.started
+    info = archive.RunInfo(status="done", start_time=started, wall_time=result.wall_time)
     return archive.append(path, result, info=info)
 
 
@@ -53,7 +63,7 @@ def load_study(path: str | os.PathLike[str], run: int | None = None) -> StudyRes
 
     Returns
     -------
-    BudgetResult or None
+    BudgetResult, GateSpecification, ReadoutSpecification or None
         None where the run is no study.
 
     Raises
@@ -66,8 +76,8 @@ def load_study(path: str | os.PathLike[str], run: int | None = None) -> StudyRes
     number = run if run is not None else max(kinds, default=None)
     name = kinds.get(number) if number is not None else None
     name = name.decode() if isinstance(name, bytes) else name
-    if name != BudgetResult.__name__:
+    if name not in {cls.__name__ for cls in StudyResult.__args__}:
         return None
     result = archive.read(path, STUDY_KINDS, run=number)
-    assert isinstance(result, BudgetResult)
+    assert isinstance(result, StudyResult)
     return result

@@ -104,20 +104,79 @@ def budget(
         typer.echo(f"figure in {plot}", err=True)
 
 
+def specify(
+    testbench: TestbenchPath,
+    archive: Annotated[
+        Path | None, typer.Option(metavar="FILE.h5", help="Add the specification to this archive.")
+    ] = None,
+    csv: Annotated[
+        Path | None, typer.Option(metavar="FILE.csv", help="Write the masks as columns.")
+    ] = None,
+    plot: PlotOption = None,
+    json_output: JsonFlag = False,
+) -> None:
+    """Say what each block must meet for the target in \\[specify], of a gate or a readout."""
+    from cosim.specification.gate_specification import specify_gate
+    from cosim.specification.readout_specification import specify_readout
+    from cosim.specification_figures import plot_readout_specification, plot_specification
+    from cosim.specification_terminal import write_masks
+    from cosim.study_archive import save_study
+    from cosim.testbench import DesignBench, ReadoutBench, load_testbench
+
+    check_output(archive, ".h5")
+    check_output(csv, ".csv")
+    check_output(plot, ".png", ".pdf", ".svg")
+    bench = load_testbench(testbench)
+    of_readout = isinstance(bench, ReadoutBench) or (
+        isinstance(bench, DesignBench) and bench.readout is not None
+    )
+    if csv is not None and of_readout:
+        raise InputError("--csv writes masks, and a readout has none")
+    if of_readout:
+        readout = specify_readout(bench)
+        show_study(readout, json_output)
+    else:
+        gate = specify_gate(bench)
+        show_study(gate, json_output)
+    if archive is not None:
+        number = save_study(readout if of_readout else gate, archive)
+        typer.echo(f"archived as run {number} of {archive}", err=True)
+    if csv is not None:
+        typer.echo(f"{write_masks(gate, csv)} rows in {csv}", err=True)
+    if plot is not None:
+        if of_readout:
+            plot_readout_specification(readout, plot)
+        else:
+            plot_specification(gate, plot)
+        typer.echo(f"figure in {plot}", err=True)
+
+
 def show_study(result: "StudyResult", json_output: bool, *, log: bool = False) -> None:
     """Print the result of a study, as a table or as numbers for machines.
 
     Parameters
     ----------
-    result : BudgetResult
+    result : BudgetResult, GateSpecification or ReadoutSpecification
     json_output : bool
     log : bool
         Print the simulator's log of its run instead.
     """
-    from cosim.budget.result import budget_numbers
+    from cosim.budget.result import BudgetResult, budget_numbers
     from cosim.budget_terminal import budget_parts
+    from cosim.result import as_plain
+    from cosim.specification.result import GateSpecification
+    from cosim.specification_terminal import readout_specification_table, specification_table
 
-    if log:
+    if not isinstance(result, BudgetResult):
+        if log:
+            raise InputError("a specification ran no simulator, so that there is no log")
+        if json_output:
+            typer.echo(json.dumps(as_plain(result), indent=2))
+        elif isinstance(result, GateSpecification):
+            Console(highlight=False).print(specification_table(result))
+        else:
+            Console(highlight=False).print(readout_specification_table(result))
+    elif log:
         typer.echo(json.dumps(result.run.log) if json_output else "\n".join(result.run.log))
     elif json_output:
         typer.echo(json.dumps(budget_numbers(result), indent=2))
@@ -129,4 +188,5 @@ def show_study(result: "StudyResult", json_output: bool, *, log: bool = False) -
 STUDY_COMMANDS: tuple[tuple[Callable[..., None], str], ...] = (
     (budget, "qcosim budget examples/x180_noise.toml --plot budget.png"),
     (calibrate, "qcosim calibrate examples/calibrate_modulator.toml --plot trim.png"),
+    (specify, "qcosim specify examples/specify_x180.toml --plot specification.png"),
 )

@@ -1,6 +1,7 @@
 """From a target infidelity, the ideal pulse and the qubit to what each block must meet."""
 
 import math
+import time
 from collections.abc import Mapping
 from dataclasses import dataclass, replace
 from datetime import datetime
@@ -85,6 +86,7 @@ def specify_gate(bench: Bench) -> GateSpecification:
         If there is no [specify], a key is wrong, or the target cannot be met: the message names
         what forbids it.
     """
+    clock = time.perf_counter()
     started = datetime.now().astimezone().isoformat(timespec="seconds")
     task = _task_of(bench)
     request, pulse = task.request, task.pulse
@@ -126,6 +128,7 @@ def specify_gate(bench: Bench) -> GateSpecification:
         rule=RULE,
         warnings=_warnings(task, blocks, verified),
         started=started,
+        wall_time=time.perf_counter() - clock,
         versions=package_versions(),
         testbench=bench.to_toml(),
     )

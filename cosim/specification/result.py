@@ -4,6 +4,9 @@ from dataclasses import dataclass, field
 
 from cosim.waveform import FloatArray
 
+# What varies little from run to run has no column of its own in an archive's table.
+NOT_IN_TABLE = {"table": False}
+
 
 @dataclass(frozen=True, slots=True)
 class BlockLimit:
@@ -144,6 +147,8 @@ class GateSpecification:
         What the reader must know.
     started : str
         ISO 8601 with UTC offset.
+    wall_time : float
+        In s.
     versions : dict of str
         Package to version.
     testbench : str
@@ -170,8 +175,9 @@ class GateSpecification:
     rule: str
     warnings: tuple[str, ...]
     started: str
-    versions: dict[str, str]
-    testbench: str
+    wall_time: float = field(metadata={"unit": "s"})
+    versions: dict[str, str] = field(metadata=NOT_IN_TABLE)
+    testbench: str = field(metadata=NOT_IN_TABLE)
 
     def block(self, name: str) -> BlockLimit:
         """Give what one block must meet, by its name."""
