@@ -213,6 +213,9 @@ def envelope_at_far_end(
 ) -> ComplexArray:
     """Send the envelope of a wave down a line.
 
+    Beyond either end of the table magnitude and remaining phase are held, since a band that was
+    measured around the carrier tells nothing of what lies far below.
+
     Parameters
     ----------
     iq : array_like of complex, shape (n,)
@@ -238,10 +241,12 @@ def envelope_at_far_end(
     """
     table, response = _checked(frequency, transmission)
     near = np.asarray(iq, dtype=np.complex128)
-    delay = max(line_delay(table, response), 0.0)
-    record, quiet = _padded(near - near[0], near.size, int(np.ceil(delay / step)))
+    delay = line_delay(table, response)
+    record, quiet = _padded(near - near[0], near.size, int(np.ceil(max(delay, 0.0) / step)))
     f = carrier_frequency + np.append(0.0, fftfreq(record.size, step))
-    passed = transmission_at(table, response, np.abs(f))
+    known = np.clip(np.abs(f), table[0], table[-1])
+    beyond = np.exp(-2j * np.pi * (np.abs(f) - known) * delay)
+    passed = transmission_at(table, response, known) * beyond
     # The response of a real signal at a negative frequency.
     passed = np.where(f < 0.0, passed.conj(), passed)
     far = ifft(fft(record) * passed[1:])
