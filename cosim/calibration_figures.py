@@ -11,8 +11,7 @@ from matplotlib.ticker import MaxNLocator
 
 from cosim.calibration.result import CalibrationResult, KnobResult
 from cosim.calibration_terminal import METRICS, limit_label
-from cosim.errors import InputError
-from cosim.terminal import CAUTION
+from cosim.figure_frame import write_figure
 
 _MARKS = {
     "start": ("s", "C3"),
@@ -58,13 +57,7 @@ def plot_calibration(result: CalibrationResult, path: str | os.PathLike[str]) ->
         _draw_knob(axes, result, knob)
     for axes in below[len(result.knobs) :]:
         axes.remove()
-    figure.suptitle(result.title or "calibration")
-    figure.text(0.995, 0.002, CAUTION, ha="right", va="bottom", fontsize=6, color="0.45")
-    figure.get_layout_engine().set(rect=(0, 0.02, 1, 0.98))  # type: ignore[union-attr, call-arg]
-    try:
-        figure.savefig(path, dpi=150)
-    except (OSError, ValueError) as error:
-        raise InputError(f"the figure {os.fspath(path)} cannot be written: {error}") from None
+    write_figure(figure, result.title or "calibration", path)
 
 
 def _draw_runs(axes: Axes, result: CalibrationResult) -> None:

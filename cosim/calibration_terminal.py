@@ -9,7 +9,7 @@ from rich.text import Text
 
 from cosim.calibration.result import CalibrationResult, CalibrationRun, KnobResult
 from cosim.sweep_terminal import short_names
-from cosim.terminal import CAUTION
+from cosim.terminal import framed, plain_table
 from cosim.units import format_quantity
 
 METRICS = {
@@ -49,7 +49,6 @@ def calibration_table(result: CalibrationResult) -> Group:
         The metric before and after, the knobs, what limits the rest, warnings and the caution.
     """
     parts: list[RenderableType] = [
-        Text(result.title or "calibration", style="bold"),
         Text(_heading(result)),
         _metric_table(result),
         Text(""),
@@ -59,9 +58,7 @@ def calibration_table(result: CalibrationResult) -> Group:
         Text("what is left"),
         _limit_table(result),
     ]
-    parts += [Text(f"warning: {line}", style="yellow") for line in result.warnings]
-    parts.append(Text(CAUTION, style="dim"))
-    return Group(*parts)
+    return framed(result.title or "calibration", parts, result.warnings)
 
 
 def run_line(run: CalibrationRun, number: int) -> str:
@@ -175,10 +172,7 @@ def _signed(knob: KnobResult) -> str:
 
 
 def _limit_table(result: CalibrationResult) -> Table:
-    table = Table(box=None, pad_edge=False, show_header=False)
-    table.add_column(style="bold", no_wrap=True)
-    table.add_column(justify="right", no_wrap=True)
-    table.add_column(overflow="fold")
+    table = plain_table()
     limits = result.limits
     items = {
         "unreached": limits.unreached,
@@ -189,17 +183,17 @@ def _limit_table(result: CalibrationResult) -> Table:
     least = _LEAST_SHARE * max(items.values())
     for name, value in sorted(items.items(), key=lambda item: -item[1]):
         if value > least:
-            told = _direction(result) if name == "unreached" else ""
-            table.add_row(limit_label(result, name), f"{value:.3e}", told)
-    table.add_row("limited by", "", limit_label(result, result.limited_by))
+            told = f": {_direction(result)}" if name == "unreached" else ""
+            table.add_row(limit_label(result, name), f"{value:.3e}{told}")
+    table.add_row("limited by", limit_label(result, result.limited_by))
     return table
 
 
 def _direction(result: CalibrationResult) -> str:
     turns = np.degrees(result.turn_unreached)
-    named = ", ".join(f"{turn:+.4f}° about {axis}" for axis, turn in zip(_AXES, turns, strict=True))
-    leaks = result.leakage_after > 0.5 * result.limits.unreached
-    return f"{named}{', mostly leakage' * leaks}"
+    if result.leakage_after > 0.5 * result.limits.unreached:
+        return "mostly leakage"
+    return ", ".join(f"{turn:+.3f}° about {axis}" for axis, turn in zip(_AXES, turns, strict=True))
 
 
 def _headed(names: tuple[str, ...]) -> Table:

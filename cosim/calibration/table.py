@@ -124,8 +124,10 @@ class Knob:
         """Give the value, in SI units, at a part of the range."""
         value = min(max(self.low + place * self.range, self.low), self.high)
         if self.step:
-            # The start need not be one of the steps; what is one does without rounding errors.
+            # The start need not be one of the steps; what is one is written without the rounding
+            # errors of the product.
             near = self.low + round((value - self.low) / self.step) * self.step
+            near = float(f"{near:.12g}")
             value = near if abs(near - value) < 1e-9 * self.range else value
         return float(round(value)) if self.integer else value
 

@@ -39,7 +39,7 @@ def test_what_a_knob_can_be_set_to() -> None:
     assert free.neighbours(0.123) == (0.123,)
     # The start need not be one of the steps.
     assert knob(0, 90, 34.42, 0.1).at(34.42 / 90) == pytest.approx(34.42, rel=1e-15)
-    assert knob(0, 90, 34.42, 0.1).at(449 * 0.1 / 90) == 449 * 0.1
+    assert knob(0, 90, 34.42, 0.1).at(449 * 0.1 / 90) == 44.9
 
 
 @pytest.mark.parametrize(

@@ -19,6 +19,8 @@ import tomli_w
 
 import cosim
 from cosim.archive import read_table
+from cosim.calibration.result import CalibrationResult
+from cosim.calibration.trim import calibrate
 from cosim.result import GateResult
 from cosim.sweep.goal import judged, make_goal
 from cosim.sweep.keeping import metric_of
@@ -33,9 +35,12 @@ SWEEPS = ("sweep_corners", *SWEPT_READOUTS)
 # One of so many shares of a sweep is run, as a job of an array would: two runs of each corner, and
 # of the readout all four of one, which share what is simulated.
 SHARES = 4
+CALIBRATIONS = ("calibrate_modulator",)
 # The script amplifier_bias runs this one; once more would take a minute and a half.
 WITHIN_SCRIPTS = ("readout_dispersive",)
-BENCHES = sorted({path.stem for path in EXAMPLES.glob("*.toml")} - {*SWEEPS, *WITHIN_SCRIPTS})
+BENCHES = sorted(
+    {path.stem for path in EXAMPLES.glob("*.toml")} - {*SWEEPS, *CALIBRATIONS, *WITHIN_SCRIPTS}
+)
 OF_TRANSISTORS = sorted(name for name in BENCHES if "bsim4" in name)
 # The check at half the step takes twice as long as the run. That of these decks is tried on a
 # shorter pulse, in tests/gate/test_error_bars.py.
@@ -144,6 +149,24 @@ def sweep_losses(name: str, path: Path) -> dict[str, float]:
     }
 
 
+def calibration_example(name: str) -> CalibrationResult:
+    """Run a calibration."""
+    return calibrate(cosim.load_testbench(EXAMPLES / f"{name}.toml"))
+
+
+def calibration_figures(result: CalibrationResult) -> dict[str, float]:
+    """Give the numbers of a calibration that are committed."""
+    return {
+        "before": result.before,
+        "after": result.after,
+        "numerical_floor": result.numerical_floor,
+        "limits.resolution": result.limits.resolution,
+        "limits.rest": result.limits.rest,
+        "netlist_runs": float(result.netlist_runs),
+        **{knob.key: knob.found for knob in result.knobs},
+    }
+
+
 def numbers(text: str) -> list[list[float]]:
     """The numbers of each line of a printed table; three or four digits are shown.
 
@@ -183,6 +206,8 @@ def write_expected() -> None:
     for name in SWEEPS:
         with tempfile.TemporaryDirectory() as folder:
             table[name] = {"losses": sweep_losses(name, Path(folder, "s.h5"))}
+    for name in CALIBRATIONS:
+        table[name] = calibration_figures(calibration_example(name))
     for name in SCRIPTS:
         with tempfile.TemporaryDirectory() as folder:
             done = run_script(name, Path(folder))
