@@ -5,6 +5,7 @@ from pathlib import Path
 
 from cosim import archive
 from cosim.budget.result import BUDGET_KINDS, BudgetResult
+from cosim.calibration.result import CALIBRATION_KINDS, CalibrationResult
 from cosim.errors import ArchiveError
 from cosim.specification.readout_result import (
     READOUT_SPECIFICATION_KINDS,
@@ -15,11 +16,12 @@ from cosim.specification.result import SPECIFICATION_KINDS, GateSpecification
 # Classes by the tag that the archive keeps, of each study.
 STUDY_KINDS: dict[str, type] = {
     **BUDGET_KINDS,
+    **CALIBRATION_KINDS,
     **SPECIFICATION_KINDS,
     **READOUT_SPECIFICATION_KINDS,
 }
 
-StudyResult = BudgetResult | GateSpecification | ReadoutSpecification
+StudyResult = BudgetResult | CalibrationResult | GateSpecification | ReadoutSpecification
 
 
 def save_study(result: StudyResult, path: str | os.PathLike[str]) -> int:
@@ -27,7 +29,7 @@ def save_study(result: StudyResult, path: str | os.PathLike[str]) -> int:
 
     Parameters
     ----------
-    result : BudgetResult, GateSpecification or ReadoutSpecification
+    result : BudgetResult, CalibrationResult, GateSpecification or ReadoutSpecification
     path : path
         The HDF5 file; it may hold runs of gates, too.
 
@@ -63,7 +65,7 @@ def load_study(path: str | os.PathLike[str], run: int | None = None) -> StudyRes
 
     Returns
     -------
-    BudgetResult, GateSpecification, ReadoutSpecification or None
+    BudgetResult, CalibrationResult, GateSpecification, ReadoutSpecification or None
         None where the run is no study.
 
     Raises

@@ -22,18 +22,23 @@ def calibrate(
         Path | None,
         typer.Option(metavar="FILE.toml", help="Write the testbench with the trim applied."),
     ] = None,
+    archive: Annotated[
+        Path | None, typer.Option(metavar="FILE.h5", help="Add the calibration to this archive.")
+    ] = None,
     plot: PlotOption = None,
     json_output: JsonFlag = False,
 ) -> None:
     """Solve for the knobs named in \\[calibrate] by running the netlist again: a trim."""
-    from cosim.calibration.result import CalibrationRun, calibration_numbers
+    from cosim.calibration.result import CalibrationRun
     from cosim.calibration.trim import calibrate as run_calibration
     from cosim.calibration.trim import moved, trimmed
     from cosim.calibration_figures import plot_calibration
-    from cosim.calibration_terminal import calibration_table, run_line
+    from cosim.calibration_terminal import run_line
+    from cosim.study_archive import save_study
     from cosim.testbench import load_testbench
 
     check_output(write, ".toml")
+    check_output(archive, ".h5")
     check_output(plot, ".png", ".pdf", ".svg")
     if write is not None and write.exists() and write.samefile(testbench):
         raise InputError(f"--write {write} would take the place of the testbench itself")
@@ -46,10 +51,10 @@ def calibrate(
             typer.echo(run_line(run, len(told)), err=True)
 
     result = run_calibration(bench, progress=report)
-    if json_output:
-        typer.echo(json.dumps(calibration_numbers(result), indent=2))
-    else:
-        Console(highlight=False).print(calibration_table(result))
+    show_study(result, json_output)
+    if archive is not None:
+        number = save_study(result, archive)
+        typer.echo(f"archived as run {number} of {archive}", err=True)
     if write is not None:
         written = trimmed(moved(bench, write.absolute().parent), result).to_toml()
         write.write_text(written, encoding="utf-8")
@@ -156,18 +161,27 @@ def show_study(result: "StudyResult", json_output: bool, *, log: bool = False) -
 
     Parameters
     ----------
-    result : BudgetResult, GateSpecification or ReadoutSpecification
+    result : BudgetResult, CalibrationResult, GateSpecification or ReadoutSpecification
     json_output : bool
     log : bool
         Print the simulator's log of its run instead.
     """
     from cosim.budget.result import BudgetResult, budget_numbers
     from cosim.budget_terminal import budget_parts
+    from cosim.calibration.result import CalibrationResult, calibration_numbers
+    from cosim.calibration_terminal import calibration_table
     from cosim.result import as_plain
     from cosim.specification.result import GateSpecification
     from cosim.specification_terminal import readout_specification_table, specification_table
 
-    if not isinstance(result, BudgetResult):
+    if isinstance(result, CalibrationResult):
+        if log:
+            raise InputError("a calibration keeps no log of its runs; run the trimmed testbench")
+        if json_output:
+            typer.echo(json.dumps(calibration_numbers(result), indent=2))
+        else:
+            Console(highlight=False).print(calibration_table(result))
+    elif not isinstance(result, BudgetResult):
         if log:
             raise InputError("a specification ran no simulator, so that there is no log")
         if json_output:
