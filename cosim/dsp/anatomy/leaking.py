@@ -5,7 +5,8 @@ import math
 import numpy as np
 
 from cosim.dsp.anatomy.fitting import OUTSIDE, Work
-from cosim.dsp.anatomy.parts import Spur
+from cosim.dsp.anatomy.parts import Spur, phase_of
+from cosim.dsp.anatomy.shapes import Shape, sample_shape
 from cosim.waveform import ComplexArray, FloatArray
 
 # Samples outside of a pulse that tell a leaking carrier.
@@ -13,7 +14,7 @@ _LEAST_SAMPLES = 8
 
 
 def find_leakage(
-    work: Work, numbers: dict[str, float], size: FloatArray, spurs: tuple[Spur, ...] = ()
+    work: Work, numbers: dict[str, float], shape: Shape, spurs: tuple[Spur, ...] = ()
 ) -> dict[str, float]:
     """Find what leaks of the carrier before and after the pulse, tails of the pulse left aside.
 
@@ -21,8 +22,8 @@ def find_leakage(
     ----------
     work : Work
     numbers : dict of float
-    size : ndarray, shape (n,)
-        Of the shape.
+    shape : Shape
+        As they say.
     spurs : tuple of Spur
         Those that are always there are no leakage.
 
@@ -33,7 +34,10 @@ def find_leakage(
     """
     t = work.grid.t
     turn = np.exp(2j * math.pi * (numbers["frequency"] - work.wanted.baseband_frequency) * t)
-    left = work.iq.copy()
+    size = sample_shape(shape, work.grid).size
+    # The foot of a Gaussian reaches far.
+    pulse = numbers["level"] * size * np.exp(1j * phase_of(numbers, work.grid, shape, size))
+    left = work.iq - pulse
     for spur in spurs:
         if not spur.modulated:
             amplitude = complex(*(numbers[name] for name in spur.numbers))

@@ -24,6 +24,7 @@ _TAILS = {
     "settling_im": "tail_im",
     **{name: name.replace("_on_", "_off_") for name in GROUPS["ringing"] if "_on_" in name},
 }
+_BESIDE = (*GROUPS["carrier leakage"], *GROUPS["leakage change"])
 _SHAPE = ("centre", "duration", "rise", "fall", "weight")
 
 
@@ -88,6 +89,7 @@ def fit_by_plateau(
     weights[plateau] = 1.0
     free = scales_of(work, numbers, names) | spur_scales(numbers, spurs, frequencies=False)
     numbers = fit_numbers(work, numbers, shape, free, spurs, weights)
+    plain = numbers, free, spurs
     tails: list[str] = []
     for search in (_settling, _lines):
         left = _left_over(work, numbers, shape, spurs, plateau)
@@ -99,17 +101,43 @@ def fit_by_plateau(
         wider = free | scales_of(work, begin, more)
         wider |= spur_scales(begin, beside[len(spurs) :], frequencies=True)
         trial = fit_numbers(work, begin, shape, wider, beside, weights)
-        if _plausible(work, trial, found):
+        if _plausible(work, trial, found, beside):
             numbers, free, spurs = trial, wider, beside
             tails += [_TAILS[name] for name in more if name in _TAILS]
+    if len(free) > len(plain[1]):
+        numbers = _again(work, numbers, shape, spurs, free, weights, tails)
+        if not _plausible(work, numbers, found, spurs):
+            numbers, free, spurs = plain
+    return _with_edges(work, numbers, shape, spurs), spurs
+
+
+def _with_edges(
+    work: Work, numbers: dict[str, float], shape: Shape, spurs: tuple[Spur, ...]
+) -> dict[str, float]:
     edges = [name for name in _SHAPE if name in outline_names(work, shape)]
-    for _ in range(2 if tails or spurs else 1):
-        if tails or spurs:
-            numbers |= find_leakage(work, numbers, size, spurs)
-            numbers = fit_numbers(work, numbers, shape, free, spurs, weights)
-            numbers = _with_tails(work, numbers, shape, spurs, tails)
-        numbers = fit_numbers(work, numbers, shape, scales_of(work, numbers, edges), spurs)
-    return numbers, spurs
+    return fit_numbers(work, numbers, shape, scales_of(work, numbers, edges), spurs)
+
+
+def _again(
+    work: Work,
+    numbers: dict[str, float],
+    shape: Shape,
+    spurs: tuple[Spur, ...],
+    free: dict[str, float],
+    weights: FloatArray,
+    tails: list[str],
+) -> dict[str, float]:
+    """Fit once more with what was found: leakage, plateau, tails, edges, and the plateau again."""
+    for _ in range(2):
+        if any(not spur.modulated and not spur.clock for spur in spurs):
+            # A line that is always there hides the carrier where that is alone.
+            free = free | scales_of(work, numbers, [*_BESIDE])
+        else:
+            numbers = numbers | find_leakage(work, numbers, actual_shape(numbers, shape), spurs)
+        numbers = fit_numbers(work, numbers, shape, free, spurs, weights)
+        numbers = _with_tails(work, numbers, shape, spurs, tails)
+        numbers = _with_edges(work, numbers, shape, spurs)
+    return numbers
 
 
 def _with_tails(
@@ -144,12 +172,17 @@ def _left_over(
     return np.asarray(((work.iq - made) / carrier)[part])
 
 
-def _plausible(work: Work, numbers: dict[str, float], shape: Shape) -> bool:
-    """Tell whether decays are small, and longer than what the edges can hide."""
+def _plausible(
+    work: Work, numbers: dict[str, float], shape: Shape, spurs: tuple[Spur, ...]
+) -> bool:
+    """Tell whether decays and lines are small, and told from the edges, droop and one another."""
     least = 2.0 * work.grid.step
     size = max(abs(numbers[name]) for name in (*GROUPS["settling"], *GROUPS["ringing"]))
-    times = numbers["settling_time"], numbers["ringing_time"]
-    return size < _MOST and min(times) > least and max(times) < 2.0 * shape.duration
+    lines = [abs(complex(*(numbers[name] for name in spur.numbers))) for spur in spurs]
+    size = max([size, *(line / numbers["level"] for line in lines)])
+    settling, ringing = numbers["settling_time"], numbers["ringing_time"]
+    slow = settling < 0.3 * shape.duration and ringing < 2.0 * shape.duration
+    return size < _MOST and min(settling, ringing) > least and slow
 
 
 def _settling(
