@@ -160,6 +160,9 @@ class ReadoutResult:
     leaked : ndarray, shape (2,)
         P(0|2) and P(1|2) of a qubit that has leaked to |2> and stays there; empty where the
         testbench does not say by how much |2> shifts the resonance.
+    standard_error : float
+        Of the assignment error, since the noise is known from a number of noisy runs only; 0 where
+        it is no matter of chance.
     """
 
     title: str
@@ -201,6 +204,7 @@ class ReadoutResult:
         default_factory=_not_known,
         metadata={"unit": "1", "axes": ("decided",), "labels": {"decided": ("0", "1")}},
     )
+    standard_error: float = field(default=0.0, metadata=_unit("1"))
 
 
 # Classes by the tag that the archive keeps.
@@ -221,6 +225,7 @@ READOUT_KINDS: dict[str, type] = {
 # What `--json` prints of a readout, in this order.
 READOUT_FIELDS = (
     "assignment_error",
+    "standard_error",
     "assignment_matrix",
     "leaked",
     "snr",

@@ -120,6 +120,8 @@ def _headline(result: ReadoutResult) -> Table:
     best = format_quantity(result.best_integration_time, "s")
     # The lengths that were tried end with the window.
     whole = result.best_integration_time >= result.integration_time * (1.0 - 1e-9)
+    if result.standard_error > 0.0:
+        bar += f", ± {result.standard_error:.1e} (noisy runs)"
     table.add_row("assignment error", f"{result.assignment_error:.4e} {bar}")
     add_matrix(table, result.assignment_matrix)
     if result.leaked.size:

@@ -1,7 +1,6 @@
 """Sweeps of a testbench: what is to be run, the engines that run it, the archive, what it tells.
 
 table.py        the table [sweep] as it stands in the file
-keys.py         numbers and settings of a testbench by dotted keys
 axes.py         what its corners, grids, samples and perturbations move
 samples.py      Monte Carlo draws and the mismatch of transistors
 identity.py     hashes of all that determines a run
@@ -12,6 +11,7 @@ batches.py      what an engine carries
 engine.py       sending batches to any executor
 local.py        processes of this machine
 cluster.py      a Dask scheduler, or the jobs of a batch system
+simulated.py    what runs share, and what is made of it for each
 work.py         what a worker does with a batch
 record.py       what is archived besides the table of runs
 keeping.py      which runs are kept whole

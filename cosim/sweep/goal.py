@@ -79,7 +79,7 @@ def make_goal(column: str, limit: float = math.nan) -> Goal:
     bars = {"average_gate_fidelity": "error_bar", "process_fidelity": "process_error_bar"}
     if name in bars:
         return Goal(column, True, limit, (f"{view}{dot}{bars[name]}",))
-    # What the time step does to it, and of counted decisions what chance does.
+    # What the time step does to it, and what chance does where noisy runs are counted.
     own = ("numerical_floor", "standard_error") if column == ASSIGNMENT_ERROR else ()
     return Goal(column, False, limit, own)
 
@@ -122,7 +122,9 @@ def judged(table: Table, goal: Goal) -> tuple[FloatArray, FloatArray]:
     found = [table[name].astype(float) for name in goal.error_columns if name in numbers]
     bars = np.full(metric.shape, np.nan)
     if found:
-        # A number that does not exist adds nothing, unless there is none at all.
-        there = done & np.isfinite(found).any(axis=0)
-        bars = np.where(there, np.nansum(found, axis=0), np.nan)
+        # A part that does not exist adds nothing; where the others are nothing too, as with a noise
+        # that is no matter of chance, there is no bar.
+        whole, known = np.nansum(found, axis=0), np.isfinite(found)
+        there = done & (known.all(axis=0) | (whole > 0.0))
+        bars = np.where(there, whole, np.nan)
     return metric, bars

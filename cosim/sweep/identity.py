@@ -129,7 +129,7 @@ def files_of(bench: Bench, deck: Deck | None) -> Files:
 
 
 def _files_of_readout(bench: ReadoutBench) -> dict[str, tuple[str, ...]]:
-    found = {
+    found: dict[str, tuple[str, ...]] = {
         f"readout.{key}": (_sha256(bench, name),)
         for key, name in (("line", bench.readout.line), ("amplifier", bench.readout.amplifier))
         if name is not None

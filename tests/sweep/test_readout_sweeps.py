@@ -106,6 +106,16 @@ def check_equal(one: object, other: object) -> None:
         np.testing.assert_array_equal(mine[name], theirs[name], err_msg=name)
 
 
+def check_error_bar(result: cosim.ReadoutResult, bar: float) -> None:
+    """Two Gaussians are told apart by SNR/2 standard deviations; the noise is one error off."""
+    off = result.noise.relative_error * np.array([1.0, -1.0])
+    errors = stats.norm.sf(0.5 * result.snr / np.sqrt(1.0 + off))
+    # The threshold is found anew to 1e-9 or so, at the minimum.
+    assert result.standard_error == pytest.approx(0.5 * (errors[0] - errors[1]), rel=1e-6)
+    assert bar == result.standard_error + result.numerical_floor
+    assert result.numerical_floor > 0.0
+
+
 def summary_of(path: Path, **goal: Any) -> tuple[SweepSummary, dict[str, np.ndarray]]:
     record, table = read_record(path), archive.read_table(path)
     made = make_goal("assignment_error", record.limit)
@@ -115,7 +125,7 @@ def summary_of(path: Path, **goal: Any) -> tuple[SweepSummary, dict[str, np.ndar
 
 
 def test_a_row_is_what_the_run_gives_alone(tmp_path: Path, calls: list[ReadoutBench]) -> None:
-    more: dict[str, Any] = {"noise": NOISE, "accuracy": {"floor": True}, "readout": ADC}
+    more: dict[str, Any] = {"noise": NOISE, "accuracy": {"floor": True}}
     bench = swept_bench(tmp_path, {"keep": 1, "grid": [GAIN, T1]}, **more)
     state = run_sweep(bench, tmp_path / "a.h5", engine=HERE)
     assert (state.planned, state.finished, state.failed, state.missing) == (4, 4, {}, 0)
@@ -126,6 +136,7 @@ def test_a_row_is_what_the_run_gives_alone(tmp_path: Path, calls: list[ReadoutBe
     again = cosim.load(tmp_path / "a.h5", run=number)
     assert isinstance(again, cosim.ReadoutResult)
     assert again.assignment_error == max(row["assignment_error"] for row in rows(tmp_path / "a.h5"))
+    check_error_bar(again, summary_of(tmp_path / "a.h5")[0].worst[0].error_bar)
 
 
 def test_a_sensor_is_swept(tmp_path: Path) -> None:
