@@ -9,6 +9,7 @@ from cosim.readout import readout_frequency
 from cosim.readout_chain import make_inquiry
 from cosim.readout_output import make_readout_plan
 from cosim.readout_probe import estimate_readout
+from cosim.readout_pulse import silent_pulse
 from cosim.sweep.plan import SweepPlan
 from cosim.testbench import Bench, ReadoutBench, gate_bench
 
@@ -85,7 +86,11 @@ def _of_run(bench: Bench, deck: Deck | None) -> tuple[Estimate, float]:
     """Give what one run takes, and the size of its envelope in byte."""
     if isinstance(bench, ReadoutBench):
         asked = make_readout_plan(bench, readout_frequency(bench), deck)
-        return estimate_readout(bench, asked, make_inquiry(bench, asked)), 0.0
+        played = None
+        if bench.resonator is not None and bench.resonator.pulse is not None:
+            # The pulse's own netlist is not simulated for an estimate, nor counted in it.
+            played = silent_pulse(bench.resonator, asked.request.stop)
+        return estimate_readout(bench, asked, make_inquiry(bench, asked, played)), 0.0
     bench = gate_bench(bench)
     made = make_plan(bench, deck)
     carrier = bench.drive.carrier if isinstance(bench.drive.carrier, float) else 0.0

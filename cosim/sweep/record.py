@@ -173,7 +173,7 @@ def check_same_plan(archived: SweepRecord, plan: SweepRecord, path: str) -> None
         return
     old, new = (_flat(json.loads(record.content)) for record in (archived, plan))
     changed = sorted(key for key in old.keys() | new.keys() if old.get(key) != new.get(key))
-    decks = [key for key in changed if key.endswith(".files.deck")]
+    decks = [key for key in changed if key.endswith((".files.deck", ".files.pulse"))]
     files = _changed_files(archived.deck_files, plan.deck_files)
     if decks and files:
         # The file's own name tells more than where its checksum stands.

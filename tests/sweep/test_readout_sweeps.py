@@ -12,7 +12,7 @@ from scipy import stats
 
 import cosim
 from cosim import archive
-from cosim.errors import TestbenchError
+from cosim.errors import ArchiveError, TestbenchError
 from cosim.keys import flattened
 from cosim.readout import ReadoutRuns, run_readout, simulate_readout
 from cosim.sweep import simulated
@@ -22,13 +22,14 @@ from cosim.sweep.goal import make_goal
 from cosim.sweep.identity import files_of, identity_keys
 from cosim.sweep.keeping import kept_whole
 from cosim.sweep.planning import make_sweep
-from cosim.sweep.record import SWEEP_KINDS, FailedRun
+from cosim.sweep.record import SWEEP_KINDS, FailedRun, check_same_plan, make_sweep_record
 from cosim.sweep.repetition import read_record, repeat_sample, rerun
 from cosim.sweep.run import run_sweep
 from cosim.sweep.statistics import SweepSummary, summarise
 from cosim.testbench import ReadoutBench, load_testbench
 from tests.readout.test_archive import leaves
 from tests.readout.test_decisions import ideal
+from tests.readout.test_pulse import asked
 from tests.readout.test_sensor import DECK as SENSOR_DECK
 from tests.sweep.benches import HERE, OF_TIME, differing, rows
 from tests.sweep.readout_benches import (
@@ -419,6 +420,21 @@ def test_a_gate_is_not_ranked_by_an_assignment_error(tmp_path: Path) -> None:
     sweep = {**bench.studies["sweep"], "fidelity": "assignment_error"}
     with pytest.raises(TestbenchError, match="'assignment_error' is not one of a gate"):
         make_sweep(replace(bench, studies={"sweep": sweep}))
+
+
+def test_the_netlist_of_a_pulse_is_part_of_a_run(tmp_path: Path) -> None:
+    made = replace(asked(tmp_path), studies={"sweep": {"grid": [T1]}})
+    plan = make_sweep(made)
+    record = make_sweep_record(plan, made)
+    names = {Path(file.path).name: file.text for file in record.deck_files}
+    assert names.keys() == {"deck.cir", "generator.cir"}
+    assert estimate_sweep(plan).waveforms == 1
+    # Another amplitude of the generator is another waveform, and not mixed in.
+    (tmp_path / "generator.cir").write_text(names["generator.cir"].replace("0.1", "0.2"))
+    changed = make_sweep(made)
+    assert changed.run(0).waveform_key != plan.run(0).waveform_key
+    with pytest.raises(ArchiveError, match=r"generator\.cir"):
+        check_same_plan(record, make_sweep_record(changed, made), "a.h5")
 
 
 def test_the_estimate_counts_what_is_simulated(tmp_path: Path) -> None:
