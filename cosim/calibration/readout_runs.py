@@ -27,8 +27,8 @@ class ReadoutTrials:
     ----------
     bench : ReadoutBench
         The testbench.
-    deck : Deck
-        Its deck as read.
+    deck : Deck or None
+        Its deck as read; None reads it for each run.
     knobs : sequence of Knob
         What may be turned.
     report : callable or None
@@ -38,7 +38,7 @@ class ReadoutTrials:
     """
 
     bench: ReadoutBench
-    deck: Deck
+    deck: Deck | None
     knobs: Sequence[Knob]
     report: Report | None = None
     history: list[Point] = field(default_factory=list)

@@ -81,6 +81,10 @@ def calibrate(
     """
     began = time.perf_counter()
     started = datetime.now().astimezone().isoformat(timespec="seconds")
+    if not isinstance(bench, (Testbench, ReadoutBench)):
+        raise InputError(f"{bench.source or 'the testbench'} has no circuit and no waveform to run")
+    if system is not None and not isinstance(bench, Testbench):
+        raise InputError(f"{bench.source or 'the testbench'}: a readout takes no operators")
     deck = None if bench.netlist is None else read_deck(bench)
     table, knobs = read_calibrate(bench, deck)
 
@@ -92,11 +96,8 @@ def calibrate(
         gates = GateRuns(bench, deck, table, knobs, system, report)
         ended = _calibrate_gate(gates, bench.accuracy.floor)
     else:
-        if system is not None or not isinstance(bench, ReadoutBench) or deck is None:
-            raise InputError(f"{bench.source or 'the testbench'}: a readout takes no operators")
-        ended = _calibrate_readout(
-            ReadoutTrials(bench, deck, knobs, report), table, bench.accuracy.floor
-        )
+        trials = ReadoutTrials(bench, deck, knobs, report)
+        ended = _calibrate_readout(trials, table, bench.accuracy.floor)
     judgement, value = ended.judgement, ended.judgement.best.value
     results = knob_results(knobs, judgement, table.cost, ended.shift)
     bar = ended.last.error_bar

@@ -126,6 +126,7 @@ def test_the_command_prints_writes_and_draws(tmp_path: Path) -> None:
     path.write_text(bench(tmp_path, LEVEL, PHASE).to_toml(), encoding="utf-8")
     runner = CliRunner()
     words = ["calibrate", str(path), "--plot", str(tmp_path / "a.png")]
+    words += ["--archive", str(tmp_path / "a.h5")]
     done = runner.invoke(app, [*words, "--write", str(tmp_path / "b.toml"), "--json"])
     assert done.exit_code == 0, done.output
     numbers = json.loads(done.stdout)
@@ -135,6 +136,10 @@ def test_the_command_prints_writes_and_draws(tmp_path: Path) -> None:
     written = cosim.load_testbench(tmp_path / "b.toml")
     assert written.netlist.parameters["level"] == numbers["knobs"][0]["found"]
     assert (tmp_path / "a.png").stat().st_size > 10_000
+    shown = runner.invoke(app, ["show", str(tmp_path / "a.h5"), "--run", "1", "--json"])
+    assert json.loads(shown.stdout) == numbers
+    shown = runner.invoke(app, ["show", str(tmp_path / "a.h5"), "--run", "1"])
+    assert "infidelity as simulated, 2 knobs" in shown.stdout
 
 
 def test_what_cannot_be_written_is_refused_before_a_run(tmp_path: Path) -> None:

@@ -4,10 +4,14 @@ from pathlib import Path
 from typing import Any
 
 import pytest
+import qutip
 
 from cosim.calibration.table import read_calibrate
+from cosim.calibration.trim import calibrate
 from cosim.decks import read_deck
-from cosim.errors import TestbenchError
+from cosim.errors import InputError, TestbenchError
+from cosim.quantum.operators import operator_system
+from cosim.testbench import make_testbench
 from tests.calibration.pulses import LEVEL, bench, knob
 from tests.readout.benches import bench as readout_bench
 
@@ -107,3 +111,19 @@ def test_a_key_that_is_an_integer_by_itself_is_one_here(tmp_path: Path) -> None:
     made = bench(tmp_path, steps)
     _, (found,) = read_calibrate(made, read_deck(made))
     assert (found.integer, found.step, found.start) == (True, 1.0, 64.0)
+
+
+def test_what_cannot_be_run_is_refused(tmp_path: Path) -> None:
+    design = make_testbench(
+        {
+            "qubit": {"kind": "spin", "frequency": "5 GHz", "rabi_per_volt": "125 MHz/V"},
+            "gate": {"target": "x90"},
+            "specify": {},
+        },
+        folder=tmp_path,
+    )
+    with pytest.raises(InputError, match="no circuit"):
+        calibrate(design)
+    system = operator_system(qutip.num(2), qutip.sigmax())
+    with pytest.raises(InputError, match="a readout takes no operators"):
+        calibrate(readout_bench(tmp_path), system=system)
