@@ -16,6 +16,10 @@ from cosim.units import format_quantity
 
 # Units in decibels, of which a tenth is enough.
 _PLAIN = ("dBc", "dBc/Hz")
+GIVEN = "*: given; what a block costs, and its part of the target, is alone at its limit"
+FORMULA = "formula: the same cost for small errors of a rectangular pulse on two levels"
+STEADY_GIVEN = "*: given; what a block costs is on top of those before it"
+STEADY = "formula: the same error where the resonator rings up at once"
 
 
 def specification_table(result: GateSpecification) -> Group:
@@ -37,6 +41,8 @@ def specification_table(result: GateSpecification) -> Group:
         _fixed_table(result),
         Text(""),
         _block_table(result),
+        Text(GIVEN, style="dim"),
+        Text(FORMULA, style="dim"),
         Text(""),
         _note_table(result),
     ]
@@ -65,7 +71,7 @@ def readout_specification_table(result: ReadoutSpecification) -> Group:
     fixed.add_row("fixed", f"{result.base_error:.2e}")
     for name in ("separation", "decay", "preparation", "excitation"):
         fixed.add_row(f"  {name}", f"{getattr(result.base, name):.2e}")
-    blocks = _head("block", "limit", "costs", "of target", "steady-state formula")
+    blocks = _head("block", "limit", "costs", "part", "formula")
     for block in result.blocks:
         blocks.add_row(
             block.label,
@@ -83,6 +89,8 @@ def readout_specification_table(result: ReadoutSpecification) -> Group:
         fixed,
         Text(""),
         blocks,
+        Text(STEADY_GIVEN, style="dim"),
+        Text(STEADY, style="dim"),
         Text(""),
         notes,
         Text(""),
@@ -191,7 +199,7 @@ def _fixed_table(result: GateSpecification) -> Table:
 
 
 def _block_table(result: GateSpecification) -> Table:
-    table = _head("block", "limit", "costs", "of target", "small-error formula")
+    table = _head("block", "limit", "costs", "part", "formula")
     powered = not math.isnan(result.total_power)
     if powered:
         table.add_column("power", justify="right", no_wrap=True)
@@ -199,7 +207,7 @@ def _block_table(result: GateSpecification) -> Table:
         cells = [
             block.label,
             _limit(block),
-            f"{block.share:.2e}",
+            f"{block.share:.1e}",
             f"{block.share / result.target_infidelity:.1%}",
             _formula_text(block),
         ]
@@ -208,9 +216,9 @@ def _block_table(result: GateSpecification) -> Table:
         table.add_row(*cells)
     if powered:
         total = format_quantity(result.total_power, "W", 3)
-        table.add_row("all together", "", f"{result.combined:.2e}", "", "", total)
+        table.add_row("all together", "", f"{result.combined:.1e}", "", "", total)
     else:
-        table.add_row("all together", "", f"{result.combined:.2e}", "", "")
+        table.add_row("all together", "", f"{result.combined:.1e}", "", "")
     return table
 
 
@@ -256,7 +264,7 @@ def _head(first: str, *names: str) -> Table:
 
 def _limit(block: BlockLimit) -> str:
     text = format_limit(block.limit, block.unit)
-    return f"{text} (given)" if block.given else text
+    return f"{text} *" if block.given else text
 
 
 def _note_table(result: GateSpecification) -> Table:

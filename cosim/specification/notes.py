@@ -73,7 +73,7 @@ def describe(
         return f"{sideband:.4g} dBc/Hz in each sideband; rms {rms:.2e} to {top}"
     if isinstance(block, FlickerNoiseTable):
         rms = error * math.sqrt(max(math.log(band / block.low), 0.0))
-        return f"rms {rms:.2e} from {format_quantity(block.low, 'Hz')} to {top}"
+        return f"density at 1 Hz; rms {rms:.2e} from {format_quantity(block.low, 'Hz')} to {top}"
     if isinstance(block, PhaseNoiseTable):
         return _phase_noise(block, error, band, frequency)
     if isinstance(block, SpursTable):
@@ -85,7 +85,7 @@ def describe(
     if isinstance(block, DacBitsTable):
         bits = -math.log2(error)
         return (
-            f"{bits:.2f} of a full scale of {block.headroom:g} peaks; a sine of full scale has "
+            f"full scale {block.headroom:g} times the peak to both sides; a sine of it has "
             f"{quantisation_snr(bits):.3g} dB"
         )
     if isinstance(block, DacRateTable):

@@ -74,15 +74,15 @@ _BACK: Mapping[str, Callable[[float], float]] = {
 }
 
 BLOCKS: Mapping[str, BlockKind] = {
-    "amplitude": BlockKind("amplitude accuracy", AmplitudeTable, "1", "linear"),
+    "amplitude": BlockKind("amplitude", AmplitudeTable, "1", "linear"),
     "phase": BlockKind("phase error", PhaseTable, "rad", "linear"),
     "carrier": BlockKind("carrier frequency", CarrierTable, "Hz", "linear"),
     "timing": BlockKind("duration", TimingTable, "s", "linear"),
     "jitter": BlockKind("jitter of an edge", TimingTable, "s", "linear"),
     "image": BlockKind("image", ImageTable, "dBc", "decibel"),
     "leakage": BlockKind("carrier leakage", LeakageTable, "dBc", "decibel"),
-    "amplitude_noise": BlockKind("noise of the amplitude", AmplitudeNoiseTable, "1/Hz", "square"),
-    "flicker_noise": BlockKind("1/f of the amplitude at 1 Hz", FlickerNoiseTable, "1/Hz", "square"),
+    "amplitude_noise": BlockKind("amplitude noise", AmplitudeNoiseTable, "1/Hz", "square"),
+    "flicker_noise": BlockKind("1/f of amplitude", FlickerNoiseTable, "1/Hz", "square"),
     "phase_noise": BlockKind("phase noise", PhaseNoiseTable, "dBc/Hz", "decibel"),
     "spurs": BlockKind("spur", SpursTable, "dBc", "decibel"),
     "wideband": BlockKind("noise at the qubit", WidebandTable, "V^2/Hz", "square"),

@@ -22,11 +22,14 @@ from cosim.archive import read_table
 from cosim.calibration.result import CalibrationResult
 from cosim.calibration.trim import calibrate
 from cosim.result import GateResult
+from cosim.specification.gate_specification import specify_gate
+from cosim.specification.readout_specification import specify_readout
 from cosim.sweep.goal import judged, make_goal
 from cosim.sweep.keeping import metric_of
 from cosim.sweep.local import local_engine
 from cosim.sweep.repetition import read_record
 from cosim.sweep.run import run_sweep
+from cosim.testbench import DesignBench
 
 TABLE = Path(__file__).with_name("expected.toml")
 EXAMPLES = Path(__file__).parents[2] / "examples"
@@ -36,10 +39,12 @@ SWEEPS = ("sweep_corners", *SWEPT_READOUTS)
 # of the readout all four of one, which share what is simulated.
 SHARES = 4
 CALIBRATIONS = ("calibrate_modulator",)
+SPECIFICATIONS = ("specify_readout", "specify_x180")
 # The script amplifier_bias runs this one; once more would take a minute and a half.
 WITHIN_SCRIPTS = ("readout_dispersive",)
 BENCHES = sorted(
-    {path.stem for path in EXAMPLES.glob("*.toml")} - {*SWEEPS, *CALIBRATIONS, *WITHIN_SCRIPTS}
+    {path.stem for path in EXAMPLES.glob("*.toml")}
+    - {*SWEEPS, *CALIBRATIONS, *SPECIFICATIONS, *WITHIN_SCRIPTS}
 )
 OF_TRANSISTORS = sorted(name for name in BENCHES if "bsim4" in name)
 # The check at half the step takes twice as long as the run. That of these decks is tried on a
@@ -197,6 +202,19 @@ def run_script(name: str, folder: Path) -> subprocess.CompletedProcess[str]:
     )
 
 
+def specified(name: str) -> dict[str, float]:
+    """Solve a specification and give its limits, and what all of them cost together."""
+    bench = cosim.load_testbench(EXAMPLES / f"{name}.toml")
+    assert isinstance(bench, DesignBench)
+    if bench.readout is not None:
+        readout = specify_readout(bench)
+        found = {block.name: block.limit for block in readout.blocks}
+        return found | {"together": readout.assignment_error}
+    gate = specify_gate(bench)
+    found = {block.name: block.limit for block in gate.blocks}
+    return found | {"together": gate.verification.infidelity, "power": gate.total_power}
+
+
 def write_expected() -> None:
     """Run every example and write the table."""
     table: dict[str, object] = {}
@@ -208,6 +226,8 @@ def write_expected() -> None:
             table[name] = {"losses": sweep_losses(name, Path(folder, "s.h5"))}
     for name in CALIBRATIONS:
         table[name] = calibration_figures(calibration_example(name))
+    for name in SPECIFICATIONS:
+        table[name] = specified(name)
     for name in SCRIPTS:
         with tempfile.TemporaryDirectory() as folder:
             done = run_script(name, Path(folder))
