@@ -1,15 +1,14 @@
 """Oracle: the transients that the simulator is asked for, counted."""
 
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from pathlib import Path
-from typing import Any
 
 import pytest
 
 from cosim.checks import check_testbench
 from cosim.circuit import simulator
 from cosim.circuit.analysis import TransientRequest, TransientResult
-from cosim.circuit.family import simulate_family
+from cosim.circuit.family import Outcome, Progress, simulate_family
 from cosim.circuit.preparation import PreparedDeck
 from cosim.circuit.simulator import simulate_prepared
 from cosim.readout import run_readout
@@ -35,9 +34,14 @@ def asked(monkeypatch: pytest.MonkeyPatch) -> list[float]:
         found.append(request.stop)
         return simulate_prepared(prepared, request, progress=progress)
 
-    def many(decks: Sequence[PreparedDeck], requests: Sequence[TransientRequest]) -> Any:
+    def many(
+        decks: Sequence[PreparedDeck],
+        requests: Sequence[TransientRequest],
+        *,
+        progress: Progress | None = None,
+    ) -> Iterator[Outcome]:
         found.extend(request.stop for request in requests)
-        return simulate_family(decks, requests)
+        return simulate_family(decks, requests, progress=progress)
 
     monkeypatch.setattr(simulator, "simulate_prepared", one)
     monkeypatch.setattr("cosim.readout_output.simulate_family", many)
