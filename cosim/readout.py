@@ -16,7 +16,6 @@ from cosim.dsp.detection.assignment import (
 )
 from cosim.dsp.detection.converter import Adc
 from cosim.dsp.detection.leaked import leaked_decisions, leaked_point, leaked_points
-from cosim.dsp.detection.output_noise import OutputNoise
 from cosim.dsp.detection.reception import ChainOutput, Detector
 from cosim.dsp.detection.records import Preparation, Records, Transitions
 from cosim.dsp.detection.shots import integrated_shots, record_shots, shot_points
@@ -217,7 +216,7 @@ def run_readout(
         efficiency=math.nan if math.isnan(added) else efficiency(max(added, 0.0)),
         noise_temperature=kelvin,
         noise_temperature_error=unsure,
-        standard_error=_noise_error(chain.records, noise, detector),
+        standard_error=_noise_error(output, noise.relative_error, detector, chances),
         noise_method=noise.method,
         residual_photons=after.residual_photons,
         residual_stark_shift=after.residual_stark_shift,
@@ -363,28 +362,39 @@ def _floor(first: Records, half: Records | None, noise: ChainNoise, detector: De
     """
     if half is None:
         return math.nan
-    errors = [_told_apart(one, noise.output, detector) for one in (first, half)]
+    errors = [
+        split_assignment(
+            ChainOutput(Records(first.step, one.ground, one.excited), noise.output),
+            detector,
+            Transitions(),
+            Preparation(),
+        ).assignment_error
+        for one in (first, half)
+    ]
     return abs(errors[1] - errors[0])
 
 
-def _noise_error(first: Records, noise: ChainNoise, detector: Detector) -> float:
+def _noise_error(
+    output: ChainOutput,
+    relative_error: float,
+    detector: Detector,
+    chances: tuple[Transitions, Preparation],
+) -> float:
     """Give the change of the error with a density of the noise one standard error off."""
-    if noise.relative_error == 0.0:
+    if relative_error == 0.0:
         return 0.0
     # A density known to no better than itself has no lower end; a tenth of it stands for that.
-    factors = 1.0 + noise.relative_error, max(1.0 - noise.relative_error, 0.1)
-    one = noise.output
+    factors = 1.0 + relative_error, max(1.0 - relative_error, 0.1)
+    one = output.noise
     more, less = (
-        _told_apart(first, replace(one, white=k * one.white, density=k * one.density), detector)
+        split_assignment(
+            replace(output, noise=replace(one, white=k * one.white, density=k * one.density)),
+            detector,
+            *chances,
+        ).assignment_error
         for k in factors
     )
     return 0.5 * abs(more - less)
-
-
-def _told_apart(records: Records, output: OutputNoise, detector: Detector) -> float:
-    """Give the assignment error of states that do not change."""
-    chain = ChainOutput(Records(records.step, records.ground, records.excited), output)
-    return split_assignment(chain, detector, Transitions(), Preparation()).assignment_error
 
 
 def _traces(

@@ -320,7 +320,7 @@ def _draw_swings(axes: Axes, summary: SweepSummary, units: Mapping[str, str]) ->
     times = f" ($10^{{{power}}}${unit})" if power else f" ({unit.strip()})" * bool(unit)
     axes.set_xlabel(f"change of the metric{times}")
     gray = ", gray: within the error bars" * any(item.resolved is False for item in items)
-    axes.set_title(f"one at a time, the largest swings{gray}", fontsize=10)
+    axes.set_title(f"one at a time{gray}", fontsize=10)
     axes.legend(fontsize=7, loc="lower right")
 
 
