@@ -5,20 +5,18 @@ lines between samples. Time is counted from the start of the pulse.
 """
 
 import math
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 from scipy.linalg import solve_banded
+from scipy.optimize import minimize_scalar
 
-from cosim.dsp.detection.assignment import (
-    AssignmentSplit,
-    IntegrationScan,
-    scan_integration,
-    split_assignment,
-)
+from cosim.dsp.detection.assignment import AssignmentSplit, split_assignment
 from cosim.dsp.detection.converter import Adc
+from cosim.dsp.detection.outcomes import wrong_shares
 from cosim.dsp.detection.output_noise import OutputNoise
-from cosim.dsp.detection.reception import ChainOutput, Detector
+from cosim.dsp.detection.projection import project
+from cosim.dsp.detection.reception import ChainOutput, Detector, receive
 from cosim.dsp.detection.records import Preparation, Records, Transitions, relaxation
 from cosim.dsp.noise.thermal import Attenuator
 from cosim.errors import TestbenchError
@@ -43,6 +41,8 @@ FASTEST_POLE = 0.1
 # Steps of the density of noise behind a pole, in parts of the pole near the carrier and of the
 # offset far from it: straight lines between them are right to 0.1 % of the density.
 POLE_STEP = 0.04
+# The best length of the integration is looked for from this part of the window on.
+LEAST_PART = 0.05
 
 
 @dataclass(frozen=True, slots=True)
@@ -223,22 +223,66 @@ def judge(task: ReadoutTask, chain: ChainLimits) -> AssignmentSplit:
     )
 
 
-def best_length(task: ReadoutTask, chain: ChainLimits) -> IntegrationScan:
-    """Find the length of the integration with the least error.
+def error_of(task: ReadoutTask, chain: ChainLimits) -> float:
+    """Give the assignment error of a chain, the same as `judge` does and no more.
 
     Parameters
     ----------
     task : ReadoutTask
     chain : ChainLimits
-        Its `stop` is the latest end.
 
     Returns
     -------
-    IntegrationScan
+    float
     """
-    return scan_integration(
-        chain_output(task, chain), detector_of(task, chain), task.transitions, task.preparation
+    received = receive(chain_output(task, chain), detector_of(task, chain))
+    projection = project(received, task.table.weights)
+    threshold = projection.mid_threshold
+    return sum(wrong_shares(projection, task.transitions, task.preparation, threshold)) / 2.0
+
+
+def best_stop(task: ReadoutTask, chain: ChainLimits) -> float:
+    """Find the end of the integration with the least error.
+
+    Parameters
+    ----------
+    task : ReadoutTask
+    chain : ChainLimits
+        Its own end does not matter.
+
+    Returns
+    -------
+    float
+        In s from the start of the pulse, on a sample; the error is flat about it.
+    """
+    every = sample_interval(task, chain)
+    first = task.start + LEAST_PART * (task.latest - task.start)
+
+    def at(stop: float) -> float:
+        return error_of(task, replace(chain, stop=stop))
+
+    best = minimize_scalar(
+        at, bounds=(first, task.latest), method="bounded", options={"xatol": 2.0 * every}
     )
+    stop = min(every * round(float(best.x) / every), task.latest)
+    # Where the error falls to the very end, the search stops short of it.
+    return task.latest if at(task.latest) <= at(stop) else stop
+
+
+def sample_interval(task: ReadoutTask, chain: ChainLimits) -> float:
+    """Give the interval of the samples that are integrated, in s.
+
+    Parameters
+    ----------
+    task : ReadoutTask
+    chain : ChainLimits
+
+    Returns
+    -------
+    float
+        Of the converters, or of the records where there are none.
+    """
+    return task.step if chain.adc is None else 1.0 / chain.adc.rate
 
 
 def detector_of(task: ReadoutTask, chain: ChainLimits) -> Detector:

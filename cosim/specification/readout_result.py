@@ -35,7 +35,7 @@ class ReadoutSpecification:
     integration_time : float
         In s, the shortest with which the target is met.
     longest_integration : float
-        In s, the longest of those that were tried.
+        In s, the longest within the window.
     clipped : float
         Expected share of samples outside the converters' range.
     lsb_over_sigma : float

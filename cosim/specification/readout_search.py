@@ -15,9 +15,11 @@ from cosim.specification.readout_model import (
     FASTEST_POLE,
     ChainLimits,
     ReadoutTask,
-    best_length,
+    best_stop,
     chain_output,
+    error_of,
     judge,
+    sample_interval,
 )
 from cosim.specification.readout_request import ReadoutRequest
 
@@ -32,7 +34,7 @@ REACH = 4.0
 # Step of the converters over the noise of a sample up to which rounding is like noise.
 COARSEST = 2.0
 # How often the best length is looked for again, and for what part of the error it is not.
-MOST_ROUNDS = 3
+MOST_ROUNDS = 5
 FLAT = 2e-4
 LABELS = {
     "noise": ("noise temperature", "K"),
@@ -87,7 +89,7 @@ def integration_stop(task: ReadoutTask, request: ReadoutRequest, chain: ChainLim
                 f"{task.latest - task.start:g} s long"
             )
         return stop
-    return task.start + best_length(task, replace(chain, stop=task.latest)).best_time
+    return best_stop(task, chain)
 
 
 def with_given(task: ReadoutTask, request: ReadoutRequest, chain: ChainLimits) -> ChainLimits:
@@ -121,12 +123,14 @@ def _search_noise(
     task: ReadoutTask, request: ReadoutRequest, chain: ChainLimits, allowed: float
 ) -> Found:
     free = request.integration is not None and request.integration.value is None
+    if free:
+        # The best length grows with the noise, so that the whole window is nearer to it than that
+        # of a chain without noise; about the best the error is flat.
+        chain = replace(chain, stop=task.latest)
     found = _noise_at_length(task, chain, allowed)
     for _ in range(MOST_ROUNDS if free else 0):
-        # The best length moves a little with the noise, and the error is flat about it.
-        scan = best_length(task, replace(found.chain, stop=task.latest))
-        stop = task.start + scan.best_time
-        if scan.best_error > found.error * (1.0 - FLAT):
+        stop = best_stop(task, found.chain)
+        if error_of(task, replace(found.chain, stop=stop)) > found.error * (1.0 - FLAT):
             break
         found = _noise_at_length(task, replace(chain, stop=stop), allowed)
     return found
@@ -135,7 +139,7 @@ def _search_noise(
 def _noise_at_length(task: ReadoutTask, chain: ChainLimits, allowed: float) -> Found:
     def at(temperature: float) -> Found:
         one = replace(chain, noise_temperature=temperature)
-        return Found(one, judge(task, one).assignment_error)
+        return Found(one, error_of(task, one))
 
     high = 2.0 * noise_temperature_of(1.0, task.frequency)
     while at(high).error < allowed:
@@ -150,13 +154,13 @@ def _search_integration(
     task: ReadoutTask, request: ReadoutRequest, chain: ChainLimits, allowed: float
 ) -> Found:
     del request
-    every = task.step if chain.adc is None else 1.0 / chain.adc.rate
+    every = sample_interval(task, chain)
     first = math.ceil(task.start / every - 1e-6)
     last = math.floor(chain.stop / every + 1e-6)
 
     def at(count: float) -> Found:
         one = replace(chain, stop=every * (first + round(count)))
-        return Found(one, judge(task, one).assignment_error)
+        return Found(one, error_of(task, one))
 
     # The error falls with the length up to the best, so that halving finds where it is allowed.
     low, high = 2, last - first
@@ -174,7 +178,7 @@ def _search_bandwidth(
 
     def at(logarithm: float) -> Found:
         one = replace(chain, bandwidth=math.exp(logarithm))
-        return Found(one, judge(task, one).assignment_error)
+        return Found(one, error_of(task, one))
 
     if at(math.log(high)).error > allowed:
         raise _no_limit("bandwidth", allowed)
@@ -210,6 +214,33 @@ _SEARCHES: Mapping[str, Callable[[ReadoutTask, ReadoutRequest, ChainLimits, floa
         }
     )
 )
+
+
+def longest_stop(task: ReadoutTask, chain: ChainLimits, target: float) -> float:
+    """Find the latest end of the integration with which a target is met.
+
+    Parameters
+    ----------
+    task : ReadoutTask
+    chain : ChainLimits
+        With which it is met.
+    target : float
+        Assignment error.
+
+    Returns
+    -------
+    float
+        In s from the start of the pulse.
+    """
+    every = sample_interval(task, chain)
+    low, high = round(chain.stop / every), math.floor(task.latest / every + 1e-6)
+    if error_of(task, replace(chain, stop=every * high)) <= target:
+        return every * high
+    while high - low > 1:
+        middle = (low + high) // 2
+        met = error_of(task, replace(chain, stop=every * middle)) <= target
+        low, high = (middle, high) if met else (low, middle)
+    return every * low
 
 
 def search_limit(

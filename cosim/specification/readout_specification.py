@@ -30,7 +30,6 @@ from cosim.specification.readout_model import (
     ChainLimits,
     ReadoutTask,
     added_quanta_of,
-    best_length,
     chain_output,
     detector_of,
     judge,
@@ -46,6 +45,7 @@ from cosim.specification.readout_search import (
     Found,
     at_converter,
     integration_stop,
+    longest_stop,
     search_limit,
     with_given,
 )
@@ -241,8 +241,6 @@ def _result(
         2 * (table.records // 2),
         table.seed,
     )
-    longest = best_length(task, replace(chain, stop=task.latest))
-    within = longest.times[longest.assignment_error <= request.target * (1.0 + 1e-9)]
     added, least = added_quanta_of(task, chain.noise_temperature)
     return ReadoutSpecification(
         title=bench.title,
@@ -256,7 +254,7 @@ def _result(
         least_added_quanta=least,
         full_scale=math.nan if chain.adc is None else chain.adc.full_scale,
         integration_time=chain.stop - task.start,
-        longest_integration=float(within.max()) if within.size else chain.stop - task.start,
+        longest_integration=longest_stop(task, chain, request.target) - task.start,
         clipped=split.clipped,
         lsb_over_sigma=split.lsb_over_sigma,
         shots=shots,
