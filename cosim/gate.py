@@ -183,7 +183,7 @@ def run_gate(
     clock.lap("noise")
     free = free_frame(channel, target.unitary)
     rotation = _unfolded(rotation_of(nearest_unitary(channel)), target.rotation)
-    calibration = _calibrate(bench, drive, pulse, free, channel, rotation.angle, target)
+    calibration = best_calibration(bench, drive, pulse, free, channel, rotation.angle, target)
     clock.lap("calibration")
     second, carrier = _second_run(bench, plan, drive, shot, progress, shots, clock)
     if second is not None:
@@ -273,7 +273,7 @@ def _capture(
     return plan, shot
 
 
-def _calibrate(
+def best_calibration(
     bench: Testbench,
     drive: QubitDrive,
     pulse: Pulse,
@@ -282,6 +282,30 @@ def _calibrate(
     angle: float,
     target: Target,
 ) -> Calibration:
+    """Find what the calibrated fidelity adjusts, as far as [gate] lists it.
+
+    Parameters
+    ----------
+    bench : Testbench
+        The testbench.
+    drive : QubitDrive
+        Qubit and carrier.
+    pulse : Pulse
+        With the noise before it.
+    free : FreeFrame
+        Of its channel.
+    channel : ndarray of complex, shape (levels^2, levels^2)
+        As simulated.
+    angle : float
+        Of its rotation, in rad.
+    target : Target
+        What the gate is meant to do.
+
+    Returns
+    -------
+    Calibration
+        No worse than the free frame alone.
+    """
     adjusted = bench.gate.calibrate
     # No amplitude makes a gate that does nothing better.
     with_amplitude = "amplitude" in adjusted and target.rotation.angle != 0.0

@@ -21,20 +21,9 @@ from cosim.sweep.goal import judged
 from cosim.sweep.statistics import SweepSummary
 from cosim.sweep_terminal import describe_inputs, format_input, short_names
 from cosim.terminal import CAUTION
+from cosim.tornado import COLORS, GRAY, TornadoBar, draw_tornado, label_bars
 from cosim.waveform import FloatArray
 
-# Any two stay apart, by at least 28 in the distance of the CIE 1976 color space, to normal eyes and
-# under simulated full protanopia, deuteranopia and tritanopia.
-COLORS = (
-    "#1d4f91",
-    "#e5801a",
-    "#46c2d0",
-    "#60263e",
-    "#deb17e",
-    "#882700",
-    "#9c9eff",
-    "#898070",
-)
 _MARKERS = "os^Dv<>P"
 _DASHES: tuple[Any, ...] = (
     "-",
@@ -46,8 +35,6 @@ _DASHES: tuple[Any, ...] = (
     (0, (3, 1, 1, 1)),
     (0, (8, 3)),
 )
-_GRAY = "0.7"
-
 _MOST_SCATTERS = 3
 _MOST_BARS = 10
 _MOST_STEPS = 2000
@@ -291,56 +278,32 @@ def _draw_scatter(
 def _draw_swings(axes: Axes, summary: SweepSummary, units: Mapping[str, str]) -> None:
     items = [item for item in summary.sensitivities if not math.isnan(item.swing)][:_MOST_BARS]
     short = short_names(summary.inputs)
-    largest = max(item.swing for item in items)
-    # A power of ten in the label leaves the ticks short.
-    power = math.floor(math.log10(largest)) if largest > 0.0 else 0
-    labels = []
-    for row, item in enumerate(items):
+    bars = []
+    for item in items:
         at = item.largest
-        # Each end has half of the bar's height, so that an optimum shows both.
-        for change, offset, color, name in (
-            (at.low - at.nominal, -0.2, COLORS[0], "at the lower value"),
-            (at.high - at.nominal, 0.2, COLORS[1], "at the higher value"),
-        ):
-            axes.barh(
-                row + offset,
-                0.0 if math.isnan(change) else change / 10.0**power,
-                0.4,
-                color=color if item.resolved is not False else _GRAY,
-                label=name if row == 0 else None,
-            )
         unit = units.get(item.key, "")
         ends = " to ".join(format_input(value, unit) for value in (at.low_input, at.high_input))
         where = f"\nat {describe_inputs(at.point, units)}" if at.point else ""
-        labels.append(f"{short[item.key]}\n{ends}{where}")
-    _finish_bars(axes, labels)
-    axes.axvline(0.0, color="0.25", lw=0.8)
-    axes.xaxis.set_major_locator(MaxNLocator(5, steps=[1, 2, 5, 10]))
-    unit = f" {summary.unit}" if summary.unit not in ("", "1") else ""
-    times = f" ($10^{{{power}}}${unit})" if power else f" ({unit.strip()})" * bool(unit)
-    axes.set_xlabel(f"change of the metric{times}")
-    gray = ", gray: within the error bars" * any(item.resolved is False for item in items)
-    axes.set_title(f"one at a time{gray}", fontsize=10)
-    axes.legend(fontsize=7, loc="lower right")
+        label = f"{short[item.key]}\n{ends}{where}"
+        changes = at.low - at.nominal, at.high - at.nominal
+        bars.append(TornadoBar(label, *changes, faint=item.resolved is False))
+    draw_tornado(axes, bars, summary.unit)
+    gray = ", gray: within the error bars" * any(bar.faint for bar in bars)
+    axes.set_title(f"one at a time, the largest swings{gray}", fontsize=10)
 
 
 def _draw_shares(axes: Axes, summary: SweepSummary) -> None:
     items = [item for item in summary.correlations if not math.isnan(item.share)][:_MOST_BARS]
     short = short_names(summary.inputs)
     gray = [item.significant is False or item.resolved is False for item in items]
-    colors = [_GRAY if faint else COLORS[0] for faint in gray]
+    colors = [GRAY if faint else COLORS[0] for faint in gray]
     axes.barh(range(len(items)), [100.0 * item.share for item in items], 0.6, color=colors)
     labels = [f"{short[item.key]}\nrank corr. {item.spearman:+.2f}" for item in items]
-    _finish_bars(axes, labels)
+    label_bars(axes, labels)
     axes.set_xlim(0.0, 100.0)
     axes.set_xlabel("variance that goes with the input alone (%)")
     words = ", gray: chance, or within the error bars" * any(gray)
     axes.set_title(f"influence{words}", fontsize=10)
-
-
-def _finish_bars(axes: Axes, labels: Sequence[str]) -> None:
-    axes.set_yticks(range(len(labels)), labels, fontsize=8)
-    axes.set_ylim(len(labels) - 0.5, -0.5)  # The largest on top.
 
 
 def _mark_limit(line: Callable[..., object], summary: SweepSummary) -> None:

@@ -240,7 +240,7 @@ def _read_knob(bench: Bench, deck: Deck | None, row: object, file: str, number: 
             hint="widen the bounds, or say where the search begins: start = ...",
         )
     step = _step(table, key, integer, high - low, where)
-    return Knob(key, low, high, start, step, integer, _unit(key, table.low), _simulated(key))
+    return Knob(key, low, high, start, step, integer, _unit(key, table.low), needs_circuit(key))
 
 
 def _insist_on_integers(given: Mapping[str, Any], path: str, where: str) -> None:
@@ -279,5 +279,16 @@ def _unit(key: NumberKey, low: Number) -> str:
     return "1"
 
 
-def _simulated(key: NumberKey) -> bool:
+def needs_circuit(key: NumberKey) -> bool:
+    """Tell whether the circuit of a gate has to run again for a number.
+
+    Parameters
+    ----------
+    key : NumberKey
+        Which one.
+
+    Returns
+    -------
+    bool
+    """
     return key.table in _WAVEFORM_TABLES or key.path in _OF_WAVEFORM
