@@ -191,7 +191,8 @@ def _limit_table(result: CalibrationResult) -> Table:
 
 def _direction(result: CalibrationResult) -> str:
     turns = np.degrees(result.turn_unreached)
-    if result.leakage_after > 0.5 * result.limits.unreached:
+    # A turn by a small angle theta costs theta^2/6; the rest are amplitudes of leakage.
+    if float(result.turn_unreached @ result.turn_unreached) / 6.0 < 0.5 * result.limits.unreached:
         return "mostly leakage"
     return ", ".join(f"{turn:+.3f}° about {axis}" for axis, turn in zip(_AXES, turns, strict=True))
 

@@ -15,11 +15,12 @@ from cosim.calibration.trim import calibrate, moved, trimmed
 from cosim.errors import InputError, SimulationError
 from cosim.testbench import Testbench
 from tests.calibration.pulses import LEVEL, PHASE, bench
-from tests.sources import ALLEN_EBERLY
+from tests.sources import ALLEN_EBERLY, KRANTZ
 from tests.validation import Validate
 
 pytestmark = pytest.mark.ngspice
 TOPIC = "end to end through ngspice"
+EXAMPLES = Path(__file__).parents[2] / "examples"
 # 1/(4 k T) in V.
 BEST_LEVEL = 0.25 / (125e6 * 20e-9)
 
@@ -199,3 +200,39 @@ def test_progress_tells_every_run(tmp_path: Path) -> None:
     result = calibrate(bench(tmp_path, LEVEL), progress=lambda run: told.append(run.metric))
     assert told == [run.metric for run in result.history]
     assert np.array_equal(result.history[0].values, [0.09])
+
+
+@pytest.mark.full
+def test_amplitude_and_drag_weight_of_a_transmon(validate: Validate) -> None:
+    made = cosim.load_testbench(EXAMPLES / "x180_transmon.toml")
+    assert isinstance(made, Testbench)
+    # Fine steps of the DAC, and nothing that a trim does not mend.
+    parameters = {**made.netlist.parameters, "bits": 20}
+    qubit = replace(made.qubit, t1=math.inf, t2=math.inf, thermal_population=0.0)
+    knobs = [
+        {"key": "netlist.parameters.amp", "low": "0.3 V", "high": "0.48 V", "start": "0.38 V"},
+        {"key": "netlist.parameters.drag", "low": -0.5, "high": 2.0, "start": 0.0},
+    ]
+    made = replace(
+        made,
+        netlist=replace(made.netlist, parameters=parameters),
+        qubit=qubit,
+        accuracy=replace(made.accuracy, floor=False),
+        studies={"calibrate": {"metric": "as_simulated", "knob": knobs}},
+    )
+    result = calibrate(made)
+    # The weight that also holds the phase of the qubit, without a detuning; first order in the
+    # drive over the anharmonicity, of which the square is 0.01 here.
+    validate(
+        "DRAG weight that is best without a detuning, through the netlist",
+        KRANTZ + ", eq. (101) and text",
+        0.5,
+        result.knobs[1].found,
+        abs=0.01,
+    )
+    assert result.netlist_runs <= 8
+    assert result.before > 5e-3
+    assert result.after < 1e-7
+    # What is left is leakage, not a turn.
+    assert np.abs(result.turn_unreached).max() < 1e-4
+    assert result.leakage_after == pytest.approx(result.after, rel=0.01)
