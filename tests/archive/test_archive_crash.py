@@ -99,7 +99,8 @@ def test_killed_at_every_call(tmp_path: Path) -> None:
     assert len(seen) > 15
 
 
-@pytest.mark.parametrize("number", [errno.ENOSPC, pytest.param(errno.EIO, marks=pytest.mark.full)])
+@pytest.mark.full
+@pytest.mark.parametrize("number", [errno.ENOSPC, errno.EIO])
 def test_failure_of_every_call(tmp_path: Path, number: int) -> None:
     def fail(name: str, args: tuple[Any, ...]) -> None:
         raise OSError(number, os.strerror(number))

@@ -18,7 +18,7 @@ HEADERS = st.dictionaries(st.text(max_size=8), st.integers() | st.text(max_size=
 FRAMES = st.lists(st.tuples(HEADERS, st.binary(max_size=200)), max_size=6)
 
 
-@settings(derandomize=True, deadline=None)
+@settings(derandomize=True, deadline=None, max_examples=40)
 @given(frames=FRAMES, cuts=st.lists(st.integers(1, 60), min_size=1, max_size=20))
 def test_frames_survive_any_cutting(
     frames: list[tuple[dict[str, int | str], bytes]], cuts: list[int]

@@ -117,7 +117,9 @@ def test_decay_during_the_readout(tmp_path: Path, validate: Validate) -> None:
     )
 
 
-@pytest.mark.parametrize("method", ["stationary", "injection"])
+@pytest.mark.parametrize(
+    "method", ["stationary", pytest.param("injection", marks=pytest.mark.full)]
+)
 def test_noise_temperature_of_a_matched_resistor(
     tmp_path: Path, validate: Validate, method: str
 ) -> None:
