@@ -7,6 +7,7 @@ from cosim import archive
 from cosim.budget.result import BUDGET_KINDS, BudgetResult
 from cosim.calibration.result import CALIBRATION_KINDS, CalibrationResult
 from cosim.errors import ArchiveError
+from cosim.sensitivity.result import SENSITIVITY_KINDS, SensitivityResult
 from cosim.specification.readout_result import (
     READOUT_SPECIFICATION_KINDS,
     ReadoutSpecification,
@@ -19,9 +20,12 @@ STUDY_KINDS: dict[str, type] = {
     **CALIBRATION_KINDS,
     **SPECIFICATION_KINDS,
     **READOUT_SPECIFICATION_KINDS,
+    **SENSITIVITY_KINDS,
 }
 
-StudyResult = BudgetResult | CalibrationResult | GateSpecification | ReadoutSpecification
+StudyResult = (
+    BudgetResult | CalibrationResult | GateSpecification | ReadoutSpecification | SensitivityResult
+)
 
 
 def save_study(result: StudyResult, path: str | os.PathLike[str]) -> int:
@@ -29,7 +33,7 @@ def save_study(result: StudyResult, path: str | os.PathLike[str]) -> int:
 
     Parameters
     ----------
-    result : BudgetResult, CalibrationResult, GateSpecification or ReadoutSpecification
+    result : BudgetResult or that of another study
     path : path
         The HDF5 file; it may hold runs of gates, too.
 
@@ -65,7 +69,7 @@ def load_study(path: str | os.PathLike[str], run: int | None = None) -> StudyRes
 
     Returns
     -------
-    BudgetResult, CalibrationResult, GateSpecification, ReadoutSpecification or None
+    BudgetResult, that of another study, or None
         None where the run is no study.
 
     Raises

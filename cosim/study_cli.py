@@ -156,12 +156,44 @@ def specify(
         typer.echo(f"figure in {plot}", err=True)
 
 
+def sensitivity(
+    testbench: TestbenchPath,
+    archive: Annotated[
+        Path | None, typer.Option(metavar="FILE.h5", help="Add the sensitivities to this archive.")
+    ] = None,
+    plot: PlotOption = None,
+    json_output: JsonFlag = False,
+) -> None:
+    """Rank the numbers of a testbench and its deck by what moving each of them does."""
+    from cosim.sensitivity.study import run_sensitivity
+    from cosim.sensitivity_figures import plot_sensitivity
+    from cosim.study_archive import save_study
+    from cosim.testbench import load_testbench
+
+    check_output(archive, ".h5")
+    check_output(plot, ".png", ".pdf", ".svg")
+    result = run_sensitivity(load_testbench(testbench), progress=_tell)
+    show_study(result, json_output)
+    if archive is not None:
+        number = save_study(result, archive)
+        typer.echo(f"archived as run {number} of {archive}", err=True)
+    if plot is not None:
+        plot_sensitivity(result, plot)
+        typer.echo(f"figure in {plot}", err=True)
+
+
+def _tell(line: str) -> None:
+    """Say how far a study is, on a terminal."""
+    if sys.stderr.isatty():
+        typer.echo(line, err=True)
+
+
 def show_study(result: "StudyResult", json_output: bool, *, log: bool = False) -> None:
     """Print the result of a study, as a table or as numbers for machines.
 
     Parameters
     ----------
-    result : BudgetResult, CalibrationResult, GateSpecification or ReadoutSpecification
+    result : BudgetResult or that of another study
     json_output : bool
     log : bool
         Print the simulator's log of its run instead.
@@ -171,10 +203,19 @@ def show_study(result: "StudyResult", json_output: bool, *, log: bool = False) -
     from cosim.calibration.result import CalibrationResult, calibration_numbers
     from cosim.calibration_terminal import calibration_table
     from cosim.result import as_plain
+    from cosim.sensitivity.result import SensitivityResult
+    from cosim.sensitivity_terminal import sensitivity_table
     from cosim.specification.result import GateSpecification
     from cosim.specification_terminal import readout_specification_table, specification_table
 
-    if isinstance(result, CalibrationResult):
+    if isinstance(result, SensitivityResult):
+        if log:
+            raise InputError("a study of sensitivities keeps no log of its runs")
+        if json_output:
+            typer.echo(json.dumps(as_plain(result), indent=2))
+        else:
+            Console(highlight=False).print(sensitivity_table(result))
+    elif isinstance(result, CalibrationResult):
         if log:
             raise InputError("a calibration keeps no log of its runs; run the trimmed testbench")
         if json_output:
@@ -202,5 +243,6 @@ def show_study(result: "StudyResult", json_output: bool, *, log: bool = False) -
 STUDY_COMMANDS: tuple[tuple[Callable[..., None], str], ...] = (
     (budget, "qcosim budget examples/x180_noise.toml --plot budget.png"),
     (calibrate, "qcosim calibrate examples/calibrate_modulator.toml --plot trim.png"),
+    (sensitivity, "qcosim sensitivity examples/x90_baseband.toml --plot tornado.png"),
     (specify, "qcosim specify examples/specify_x180.toml --plot specification.png"),
 )

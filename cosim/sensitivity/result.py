@@ -1,10 +1,9 @@
 """The declared result of a study of sensitivities."""
 
 import math
-from dataclasses import dataclass, field, fields
+from dataclasses import dataclass, field
 from typing import Any
 
-from cosim.result import as_plain
 from cosim.waveform import FloatArray
 
 
@@ -120,20 +119,3 @@ class SensitivityResult:
 SENSITIVITY_KINDS: dict[str, type] = {
     cls.__name__: cls for cls in (SensitivityResult, SensitivityItem)
 }
-
-
-def sensitivity_numbers(result: SensitivityResult) -> dict[str, Any]:
-    """Turn a study of sensitivities into plain numbers for machines.
-
-    Parameters
-    ----------
-    result : SensitivityResult
-        What came out.
-
-    Returns
-    -------
-    dict
-        Its fields by name but the testbench; a number that does not exist is None.
-    """
-    names = (item.name for item in fields(result) if item.name != "testbench")
-    return {name: as_plain(getattr(result, name)) for name in names}

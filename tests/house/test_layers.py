@@ -96,6 +96,8 @@ FLOORS = {
     "side_terminal": 7,
     "figure_frame": 7,
     "tornado": 7,
+    "sensitivity_terminal": 7,
+    "sensitivity_figures": 7,
     "readout_figures": 7,
     "readout_terminal": 7,
     "decision_terminal": 7,
