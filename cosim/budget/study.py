@@ -70,7 +70,8 @@ def budget_of(
     result : GateResult
         From `cosim.run`, or from an archive.
     bench : Testbench or None
-        Its testbench; None takes the one that the result keeps.
+        Its testbench, perhaps with another table [budget]; None takes the one that the result
+        keeps.
     fidelity : str or None
         Which fidelity is costed, in place of what [budget] says.
 

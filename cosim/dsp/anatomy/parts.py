@@ -122,11 +122,11 @@ class Anatomy:
         numbers = dict(self.numbers)
         wanted = {
             "level": level,
-            "phase": phase,
             "duration": self.ideal.duration,
             "rise": self.ideal.rise,
             "fall": self.ideal.fall,
             "weight": self.ideal.weight,
+            "phase": numbers["phase"],
         }
         undone = [name for part, names in GROUPS.items() if part not in parts for name in names]
         for spur in self.spurs:
@@ -136,7 +136,12 @@ class Anatomy:
         made = compose(numbers, self.grid, self.ideal, self.spurs, self.baseband_frequency)
         if "DAC steps" in parts:
             made = made + self.steps
-        return made + self.rest if "residual" in parts else made
+        if "residual" in parts:
+            made = made + self.rest
+        if "phase" not in parts:
+            # What is added to the pulse turns with it, as behind one oscillator.
+            made = made * np.exp(1j * (phase - numbers["phase"]))
+        return made
 
 
 def neutral_numbers(shape: Shape, level: float, phase: float) -> dict[str, float]:
