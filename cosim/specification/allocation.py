@@ -117,7 +117,7 @@ def share_by_weights(
 
     if not weights:
         return Shares(tuple(names), costs(0.0))
-    top = budget / min(weights.values())
+    top = 2.0 * budget / min(weights.values())
     unit = brentq(
         lambda one: combined(costs(one), cosines) - budget, 0.0, top, rtol=1e-12, xtol=1e-300
     )

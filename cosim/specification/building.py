@@ -163,9 +163,11 @@ def _noise(
     block = request.blocks[name]
     if isinstance(block, PhaseNoiseTable):
         check_band(block, pulse, frame)
-        noise = coloured_noise(pulse, "phase", phase_shape(block), seed, stream, rows)
+        shape = phase_shape(block)
+        noise = coloured_noise(pulse, "phase", shape, seed, stream, rows, block.low)
     elif isinstance(block, FlickerNoiseTable):
-        noise = coloured_noise(pulse, "gain", flicker_density(block), seed, stream, rows)
+        shape = flicker_density(block)
+        noise = coloured_noise(pulse, "gain", shape, seed, stream, rows, block.low)
     elif name == "amplitude_noise":
         noise = white_noise(pulse, "gain", 1.0, seed, stream, rows)
     elif name == "wideband":

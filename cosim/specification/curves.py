@@ -30,8 +30,8 @@ SMALL_LOSS = 1e-8
 LIMIT_ACCURACY = 1e-4
 # A curve is followed up to this many times the error that the first order asks for.
 FARTHEST = 8.0
-# A first order below this means that the block does nothing to the gate.
-NOTHING = 1e-12
+# A loss below this at any small error is rounding: the block does nothing to the gate.
+NOTHING = 1e-13
 
 Kind = Literal["worst", "sampled", "stepped"]
 
@@ -114,7 +114,7 @@ class Curve:
         float
             x; infinite where no error that makes sense costs so much.
         """
-        if self.order < NOTHING * share:
+        if self.order == 0.0:
             return math.inf
         guess = math.sqrt(share / self.order)
         high = min(guess, self.most)
@@ -184,12 +184,12 @@ def worst_curve(
     for _ in range(3):  # The cost goes with the square, so that this ends at once.
         small = distorted_losses(pulse, rows(scale, 0), frame) - base
         lost = float(small.max())
-        if lost < 1e-13:
+        if lost < NOTHING:
             break
         scale = min(scale * math.sqrt(SMALL_LOSS / lost), most)
     small = distorted_losses(pulse, rows(scale, 0), frame) - base
     order = max(0.0, float(small.max())) / scale**2
-    order = order if order * scale**2 > 1e-13 else 0.0
+    order = order if order * scale**2 > NOTHING else 0.0
     return Curve(name, pulse, frame, base, "worst", rows, order, scale, small, most)
 
 
@@ -252,12 +252,12 @@ def sampled_curve(
     scale = min(first, most)
     for _ in range(3):
         lost = float((distorted_losses(pulse, variants(scale, rows), frame) - base).mean())
-        if lost < 1e-13:
+        if lost < NOTHING:
             break
         scale = min(scale * math.sqrt(SMALL_LOSS / lost), most)
     small = distorted_losses(pulse, variants(scale, rows), frame) - base
     order = max(0.0, float(small.mean())) / scale**2
-    order = order if order * scale**2 > 1e-13 else 0.0
+    order = order if order * scale**2 > NOTHING else 0.0
     return Curve(
         name, pulse, frame, base, "sampled", variants, order, scale, small, most, homogeneous
     )

@@ -279,6 +279,12 @@ def _in_frame(pulse: IdealPulse, what: Distortion, found: ComplexArray, frame: s
 def _end_phases(pulse: IdealPulse, what: Distortion) -> tuple[FloatArray, FloatArray]:
     """Phase of the oscillator at the start and the end of the pulse, shape (batch, 1) each."""
     phase = what.phase
-    first = phase[:, min(pulse.room, phase.shape[1] - 1)][:, None]
-    last = phase[:, min(pulse.room + pulse.cells - 1, phase.shape[1] - 1)][:, None]
+    if phase.shape[1] > 1:
+        # The ends lie between two cells, and a phase has no jumps.
+        first, last = (
+            0.5 * (phase[:, edge - 1 : edge] + phase[:, edge : edge + 1])
+            for edge in (pulse.room, pulse.room + pulse.cells)
+        )
+    else:
+        first = last = phase
     return first + 0.0, last + 2.0 * math.pi * what.frequency * pulse.duration

@@ -77,6 +77,7 @@ def coloured_noise(
     seed: int,
     stream: int,
     rows: int,
+    low: float,
 ) -> SampledNoise:
     """Draw noise of a density over the cells of a pulse.
 
@@ -86,17 +87,22 @@ def coloured_noise(
     where : "gain" or "phase"
         What it acts on.
     density : SpectralDensity
-        For x = 1; what is slower than the pulse is drawn as a constant.
+        For x = 1.
     seed, stream : int
         Of the random numbers.
     rows : int
         How many samples, even: they come in pairs of opposite sign.
+    low : float
+        Lowest frequency of the density in Hz; from there on its drift during the pulse counts,
+        which is what an oscillator that is its own reference has of it.
 
     Returns
     -------
     SampledNoise
     """
-    plan = plan_paths(density, pulse.middles.size, pulse.step)
+    cells, step = pulse.middles.size, pulse.step
+    slowest = min(low, 1.0 / (10.0 * cells * step))
+    plan = plan_paths(density, cells, step, slowest=slowest)
     paths = sample_paths(plan, seed, 0, rows // 2, stream=stream, offset=True)
     covariance = path_covariance(plan) + plan.slow_variance
     return SampledNoise(where, paired(paths), covariance)  # type: ignore[arg-type]
