@@ -156,6 +156,7 @@ def test_the_archive_keeps_it_and_json_is_plain(result: GateResult, tmp_path: Pa
     assert "spectrum" not in numbers["noise"]["sources"][0]
 
 
+@pytest.mark.full
 def test_figures(result: GateResult, folder: Path, tmp_path: Path) -> None:
     plot_gate(result, tmp_path / "a.png")
     assert (tmp_path / "a.png").stat().st_size > 50_000

@@ -44,7 +44,11 @@ def test_reading_a_testbench_loads_no_solver() -> None:
 @pytest.mark.parametrize(
     ("modules", "absent"),
     [
-        ("cosim.gate", {"scipy.signal", "scipy.stats", "PySpice"}),  # QuTiP loads matplotlib.
+        pytest.param(
+            "cosim.gate",
+            {"scipy.signal", "scipy.stats", "PySpice"},  # QuTiP loads matplotlib.
+            marks=pytest.mark.full,
+        ),
         (
             "cosim.readout, cosim.readout_decisions",
             {"scipy.signal", "scipy.stats", "qutip", "matplotlib", "PySpice"},
