@@ -278,15 +278,44 @@ def apply_stimuli(
     waves: dict[str, Waveform] = {}
     files: dict[str, DeckFile] = {}
     for stimulus in stimuli:
+        waves |= stimulus_waves(stimulus, folder=folder, stop=stop)
         if isinstance(stimulus, FileStimulus):
-            path = folder / Path(stimulus.file).expanduser()
-            waves[stimulus.source] = _from_file(stimulus, path)
+            path = _path(stimulus, folder)
             digest = hashlib.sha256(path.read_bytes()).hexdigest()
             files[stimulus.source] = DeckFile(str(path), "", digest)
-        else:
-            waves |= stimulus.waveforms(stop)
     notices = tuple(notice for name, wave in waves.items() for notice in _coarse(name, wave, step))
     return with_stimuli(deck, waves, files=files), notices
+
+
+def stimulus_waves(stimulus: Stimulus, *, folder: Path, stop: float) -> dict[str, Waveform]:
+    """Give what one table [[stimulus]] plays.
+
+    Parameters
+    ----------
+    stimulus : Stimulus
+        From `read_stimuli`.
+    folder : Path
+        Folder that its file is relative to.
+    stop : float
+        End of the run in s.
+
+    Returns
+    -------
+    dict of Waveform
+        By source.
+
+    Raises
+    ------
+    InputError
+        If a file cannot be read or has the wrong unit.
+    """
+    if isinstance(stimulus, FileStimulus):
+        return {stimulus.source: _from_file(stimulus, _path(stimulus, folder))}
+    return stimulus.waveforms(stop)
+
+
+def _path(stimulus: FileStimulus, folder: Path) -> Path:
+    return folder / Path(stimulus.file).expanduser()
 
 
 def _kind(table: Any, where: str) -> type[Stimulus]:

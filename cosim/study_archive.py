@@ -13,6 +13,7 @@ from cosim.specification.readout_result import (
     ReadoutSpecification,
 )
 from cosim.specification.result import SPECIFICATION_KINDS, GateSpecification
+from cosim.train.result import TRAIN_KINDS, TrainResult
 
 # Classes by the tag that the archive keeps, of each study.
 STUDY_KINDS: dict[str, type] = {
@@ -21,10 +22,16 @@ STUDY_KINDS: dict[str, type] = {
     **SPECIFICATION_KINDS,
     **READOUT_SPECIFICATION_KINDS,
     **SENSITIVITY_KINDS,
+    **TRAIN_KINDS,
 }
 
 StudyResult = (
-    BudgetResult | CalibrationResult | GateSpecification | ReadoutSpecification | SensitivityResult
+    BudgetResult
+    | CalibrationResult
+    | GateSpecification
+    | ReadoutSpecification
+    | SensitivityResult
+    | TrainResult
 )
 
 

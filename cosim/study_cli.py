@@ -188,6 +188,47 @@ def _tell(line: str) -> None:
         typer.echo(line, err=True)
 
 
+def train(
+    testbench: TestbenchPath,
+    taps: Annotated[
+        Path | None, typer.Option(metavar="FILE.csv", help="Write the filter's taps as columns.")
+    ] = None,
+    archive: Annotated[
+        Path | None, typer.Option(metavar="FILE.h5", help="Add the train to this archive.")
+    ] = None,
+    plot: PlotOption = None,
+    json_output: JsonFlag = False,
+) -> None:
+    """Play a train of pulses: what each leaves to the next, and a filter against it."""
+    from cosim.study_archive import save_study
+    from cosim.testbench import load_testbench
+    from cosim.train.study import run_train
+    from cosim.train_figures import plot_train
+    from cosim.train_terminal import write_taps
+
+    check_output(taps, ".csv")
+    check_output(archive, ".h5")
+    check_output(plot, ".png", ".pdf", ".svg")
+    bench = load_testbench(testbench)
+    if taps is not None and "predistortion" not in bench.studies.get("train", {}):
+        raise InputError("--taps writes the filter of [train.predistortion], and there is none")
+
+    def report(what: str) -> None:
+        if sys.stderr.isatty():
+            typer.echo(what, err=True)
+
+    result = run_train(bench, progress=report)
+    show_study(result, json_output)
+    if archive is not None:
+        number = save_study(result, archive)
+        typer.echo(f"archived as run {number} of {archive}", err=True)
+    if taps is not None:
+        typer.echo(f"{write_taps(result, taps)} taps in {taps}", err=True)
+    if plot is not None:
+        plot_train(result, plot)
+        typer.echo(f"figure in {plot}", err=True)
+
+
 def show_study(result: "StudyResult", json_output: bool, *, log: bool = False) -> None:
     """Print the result of a study, as a table or as numbers for machines.
 
@@ -207,8 +248,17 @@ def show_study(result: "StudyResult", json_output: bool, *, log: bool = False) -
     from cosim.sensitivity_terminal import sensitivity_table
     from cosim.specification.result import GateSpecification
     from cosim.specification_terminal import readout_specification_table, specification_table
+    from cosim.train.result import TrainResult, train_numbers
+    from cosim.train_terminal import train_table
 
-    if isinstance(result, SensitivityResult):
+    if isinstance(result, TrainResult):
+        if log:
+            raise InputError("a train keeps no log of its runs")
+        if json_output:
+            typer.echo(json.dumps(train_numbers(result), indent=2))
+        else:
+            Console(highlight=False).print(train_table(result))
+    elif isinstance(result, SensitivityResult):
         if log:
             raise InputError("a study of sensitivities keeps no log of its runs")
         if json_output:
@@ -245,4 +295,5 @@ STUDY_COMMANDS: tuple[tuple[Callable[..., None], str], ...] = (
     (calibrate, "qcosim calibrate examples/calibrate_modulator.toml --plot trim.png"),
     (sensitivity, "qcosim sensitivity examples/x90_baseband.toml --plot tornado.png"),
     (specify, "qcosim specify examples/specify_x180.toml --plot specification.png"),
+    (train, "qcosim train examples/train_flux.toml --plot train.png --taps taps.csv"),
 )

@@ -39,6 +39,7 @@ SWEEPS = ("sweep_corners", *SWEPT_READOUTS)
 # of the readout all four of one, which share what is simulated.
 SHARES = 4
 CALIBRATIONS = ("calibrate_modulator",)
+TRAINS = ("train_flux",)
 SPECIFICATIONS = ("specify_readout", "specify_x180")
 # The script amplifier_bias runs this one; once more would take a minute and a half.
 WITHIN_SCRIPTS = ("readout_dispersive",)

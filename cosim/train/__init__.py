@@ -1,0 +1,1 @@
+"""What one pulse does to the next: trains of pulses through a netlist, and pre-distortion."""
