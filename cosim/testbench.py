@@ -160,6 +160,12 @@ class DesignBench(Bench):
     resonator: ResonatorTable | None = None
     readout: ReadoutTable | None = None
 
+    def to_toml(self) -> str:
+        """Write the testbench as a TOML text that gives the same specification again."""
+        tables = {name: getattr(self, name) for name in ("qubit", "gate", "resonator", "readout")}
+        given = {name: table for name, table in tables.items() if table is not None}
+        return write_tables(self.title, given | dict(self.studies))
+
 
 def load_testbench(path: str | os.PathLike[str]) -> Testbench | ReadoutBench | DesignBench:
     """Read a testbench file.
@@ -325,11 +331,8 @@ def _design_bench(tables: Mapping[str, Any], label: str, folder: str) -> DesignB
     check_keys(tables, ["title", *names, "specify"], label)
     for name in names:
         if name not in tables:
-            raise TestbenchError(
-                f"{label}: the table [{name}] is missing",
-                hint="without [netlist] and [waveform] a testbench with [specify] has [qubit] and "
-                "[gate], or [resonator] and [readout]",
-            )
+            hint = "[specify] goes with [qubit] and [gate], or with [resonator] and [readout]"
+            raise TestbenchError(f"{label}: the table [{name}] is missing", hint=hint)
     parts: dict[str, Any] = {
         name: read_table(tables[name], kinds[name], file=label, name=name) for name in names
     }

@@ -131,7 +131,7 @@ def make_task(pulse: ResonatorTable, table: ReadoutTable, rate: float | None) ->
         )
     resonator = pulse.resonator()
     step = _step(pulse, resonator, latest, rate)
-    count = math.ceil(latest / step - 1e-9) + 1
+    count = math.floor(latest / step + 1e-9) + 1
     drive = _drive(pulse, resonator, step, count)
     times = _jump_times(latest, table.decay_times if math.isfinite(table.t1) else 0)
     rises = times if table.thermal_population > 0.0 else times[:0]
@@ -377,7 +377,9 @@ def _drive(pulse: ResonatorTable, resonator: Resonator, step: float, count: int)
 def _step(pulse: ResonatorTable, resonator: Resonator, latest: float, rate: float | None) -> float:
     rates = [abs(complex(field_rate(resonator, state, pulse.drive))) for state in (0, 1)]
     step = min(1.0 / (FINE * max(rates)), latest / LEAST_SAMPLES)
-    if rate is not None:
+    if rate is None:
+        step = latest / math.ceil(latest / step)
+    else:
         # The filter in front of the converters needs a few samples in their interval.
         step = 1.0 / (rate * max(4, math.ceil(1.0 / (rate * step))))
     if latest / step > MOST_SAMPLES:
