@@ -130,6 +130,7 @@ def test_a_metric_that_there_is_not_is_named(swept: Path, qcosim: Cli) -> None:
     assert "no column 'leakage'" in err
 
 
+@pytest.mark.full
 def test_runs_one_by_one(swept: Path, qcosim: Cli, tmp_path: Path) -> None:
     errors = {row["id"]: row["assignment_error"] for row in rows(swept)}
     worst = max(errors, key=lambda number: errors[number])
@@ -183,6 +184,7 @@ def test_the_figure_of_a_sweep(swept: Path, qcosim: Cli, tmp_path: Path) -> None
     assert (imread(figure)[..., :3] < 0.5).any()
 
 
+@pytest.mark.full
 def test_slices_are_merged(swept: Path, qcosim: Cli, tmp_path: Path) -> None:
     toml, path = swept.with_name("bench.toml"), tmp_path / "b.h5"
     for part in ("1/2", "2/2"):

@@ -169,6 +169,7 @@ JUDGED: dict[str, Any] = {
 WEIGHTS = {"readout.weights": "matched"}
 
 
+@pytest.mark.full
 def test_what_is_done_with_the_records_is_shared_and_gives_the_same(tmp_path: Path) -> None:
     base = swept_bench(
         tmp_path,
@@ -312,6 +313,7 @@ def test_a_failed_readout_is_a_row_that_tells_why(sampled: Path) -> None:
         rerun(sampled / "a.h5", row["id"])
 
 
+@pytest.mark.full
 def test_shares_are_merged_and_what_is_missing_is_resumed(sampled: Path, tmp_path: Path) -> None:
     toml = sampled / "bench.toml"
     parts = [tmp_path / "one.h5", tmp_path / "two.h5"]
