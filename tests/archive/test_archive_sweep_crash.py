@@ -300,7 +300,7 @@ def list_again_and_again(path: Path, rounds: int, done: Event) -> None:
     done.set()
 
 
-@pytest.mark.parametrize("rounds", [40, pytest.param(400, marks=pytest.mark.full)])
+@pytest.mark.parametrize("rounds", [40, pytest.param(1000, marks=pytest.mark.full)])
 def test_listings_by_another_process(
     tmp_path: Path, monkeypatch: pytest.MonkeyPatch, rounds: int
 ) -> None:
