@@ -300,7 +300,8 @@ def with_number(bench: AnyBench, key: NumberKey, value: float) -> AnyBench:
     except InputError as error:
         where = bench.source or "the testbench"
         raise TestbenchError(
-            f"{where}, table [sweep], '{key.path}' = {value!r}: {error.message}", hint=error.hint
+            f"{where}, table [{key.table}], '{key.path}' = {value!r}: {error.message}",
+            hint=error.hint,
         ) from None
 
 

@@ -53,7 +53,11 @@ class _Ended:
 
 
 def calibrate(
-    bench: Bench, *, system: OperatorSystem | None = None, progress: Progress | None = None
+    bench: Bench,
+    *,
+    deck: Deck | None = None,
+    system: OperatorSystem | None = None,
+    progress: Progress | None = None,
 ) -> CalibrationResult:
     """Solve for the knobs of a testbench's [calibrate] by running its circuit again.
 
@@ -61,6 +65,8 @@ def calibrate(
     ----------
     bench : Testbench or ReadoutBench
         The testbench. Without `floor` in [accuracy] the last run at half the step is left out.
+    deck : Deck or None
+        Its deck as read; None reads it.
     system : OperatorSystem or None
         A user's own system, for a gate with kind = "operators" in [qubit].
     progress : callable or None
@@ -85,7 +91,8 @@ def calibrate(
         raise InputError(f"{bench.source or 'the testbench'} has no circuit and no waveform to run")
     if system is not None and not isinstance(bench, Testbench):
         raise InputError(f"{bench.source or 'the testbench'}: a readout takes no operators")
-    deck = None if bench.netlist is None else read_deck(bench)
+    if deck is None and bench.netlist is not None:
+        deck = read_deck(bench)
     table, knobs = read_calibrate(bench, deck)
 
     def report(point: Point) -> None:

@@ -7,7 +7,9 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-CORNER, SAMPLE, PERTURBED = "corner", "sample", "perturbed"
+CORNER, SAMPLE, PERTURBED, TRIM = "corner", "sample", "perturbed", "trim"
+# What the last holds: one calibration for all runs, or one for each die.
+FROZEN, EACH = "frozen", "each"
 
 Table = Mapping[str, npt.NDArray[Any]]
 IntArray = npt.NDArray[np.int64]

@@ -182,6 +182,44 @@ def identity_keys(
     return identity, waveform_key, deck_key
 
 
+def trim_key(identity: str, study: Mapping[str, Any]) -> str:
+    """Give the hash of all that determines a trim.
+
+    Parameters
+    ----------
+    identity : str
+        Of the testbench that is calibrated, without its knobs' table.
+    study : mapping
+        The table [calibrate] as given.
+
+    Returns
+    -------
+    str
+        In hexadecimal.
+    """
+    return _hash([identity, dict(study)])
+
+
+def with_trim(identity: str, waveform_key: str, mode: str, trim: str) -> tuple[str, str]:
+    """Make the hashes of a run with a trim.
+
+    Parameters
+    ----------
+    identity, waveform_key : str
+        Of the run without it.
+    mode : str
+        "frozen" or "each".
+    trim : str
+        From `trim_key`.
+
+    Returns
+    -------
+    tuple of (str, str)
+        Identity, and that of the waveform at the probe, which the knobs may change.
+    """
+    return _hash([identity, mode, trim]), _hash([waveform_key, trim])
+
+
 def bears_on_nothing(key: str) -> bool:
     """Tell whether a key of the flat testbench has no part in what a run is.
 

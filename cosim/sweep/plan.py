@@ -1,6 +1,6 @@
-"""The plan of a sweep: the product of corners, grid and samples, run by run."""
+"""The plan of a sweep: the product of trims, corners, grid and samples, run by run."""
 
-from collections.abc import Iterable, Iterator, Mapping
+from collections.abc import Iterable, Iterator, Sequence
 from dataclasses import dataclass, field, replace
 from typing import Any
 
@@ -13,7 +13,9 @@ from cosim.sweep.axes import (
     Corner,
     Perturbation,
 )
-from cosim.sweep.identity import identity_keys
+from cosim.sweep.columns import EACH, TRIM
+from cosim.sweep.identity import identity_keys, trim_key, with_trim
+from cosim.sweep.planned_run import SweepRun
 from cosim.sweep.samples import (
     Variation,
     draw_mismatch,
@@ -21,6 +23,7 @@ from cosim.sweep.samples import (
     sample_seed,
 )
 from cosim.sweep.table import SweepTable
+from cosim.sweep.trimming import Trimming
 from cosim.testbench import Bench, ReadoutBench
 from cosim.waveform import FloatArray
 
@@ -28,37 +31,6 @@ _SEED = NumberKey("netlist.seed", "netlist", "seed", whole=True)
 _MOST_KEPT = 64  # points of the grid and transistor lists that are kept for the next run
 
 Change = tuple[NumberKey, float]
-
-
-@dataclass(frozen=True, slots=True)
-class SweepRun:
-    """One run of a sweep.
-
-    Parameters
-    ----------
-    number : int
-        From 0, in the order of the plan.
-    identity : str
-        SHA-256 of all that determines its result, in hexadecimal: the same in every process, for
-        every sweep that holds the run.
-    seed : int
-        Its own seed, from the identity, 1 to 2^31 - 1.
-    values : mapping
-        "corner", dotted keys, "sample", "perturbed" -> name or number in SI units.
-    waveform_key : str
-        SHA-256 of what determines the circuit's waveform: runs that differ in the qubit, the line
-        behind the probe or the gate only share it; of a readout those that differ in what is done
-        with its records.
-    deck_key : str
-        SHA-256 of the deck as read, without its parameters.
-    """
-
-    number: int
-    identity: str
-    seed: int
-    values: Mapping[str, float | str]
-    waveform_key: str
-    deck_key: str
 
 
 @dataclass(frozen=True, slots=True)
@@ -84,6 +56,8 @@ class SweepPlan:
         What is moved one at a time in place of samples.
     seeded : bool
         Whether the deck has random functions of its own, which then get a seed per sample.
+    trimming : Trimming or None
+        What is trimmed before the runs, if anything is.
     """
 
     table: SweepTable
@@ -93,6 +67,7 @@ class SweepPlan:
     points: FloatArray
     perturbations: tuple[Perturbation, ...]
     seeded: bool
+    trimming: Trimming | None = None
     _kept: dict[Any, Any] = field(default_factory=dict, compare=False, repr=False)
 
     @property
@@ -122,6 +97,10 @@ class SweepPlan:
         return {name: units.get(name, "") for name in self.columns}
 
     def __len__(self) -> int:
+        return self._untrimmed * (len(self.trimming.modes) if self.trimming is not None else 1)
+
+    @property
+    def _untrimmed(self) -> int:
         count = len(self.corners) * self.samples
         for axis in self.axes:
             count *= len(axis.values)
@@ -151,22 +130,42 @@ class SweepPlan:
         """
         corner, grid, sample = self._place(number)
         changes = [*grid, *self._changes(corner, grid, sample)]
-        values: dict[str, float | str] = {"corner": corner.name} if self.table.corners else {}
+        mode = self._mode(number)
+        values: dict[str, float | str] = {TRIM: mode} if mode else {}
+        values |= {"corner": corner.name} if self.table.corners else {}
         if self.perturbations:
             centers = self._centers(corner, grid)
             values |= {item.key.path: centers[item.key.path] for item in self.perturbations}
             at = (sample - 1) // 2
             values["perturbed"] = self.perturbations[at].key.path if sample else ""
         values |= {key.path: value for key, value in changes}
-        mismatch: dict[str, Any] = {}
         if self.table.monte_carlo is not None:
             values["sample"] = sample
-            changes += self._seed(sample)
-            mismatch = self._mismatch(sample)
-        flat = {**corner.flat, **{key.path: value for key, value in changes}}
-        identity, waveform_key, deck_key = identity_keys(flat, corner.files, mismatch)
+        identity, waveform_key, deck_key = self._keys(corner, changes, sample)
+        trim = self._trim_key(corner, sample, mode) if mode else ""
+        if mode:
+            identity, waveform_key = with_trim(identity, waveform_key, mode, trim)
         seed = 1 + int(identity[:16], 16) % (2**31 - 1)
-        return SweepRun(number, identity, seed, values, waveform_key, deck_key)
+        return SweepRun(number, identity, seed, values, waveform_key, deck_key, mode, trim)
+
+    def _keys(self, corner: Corner, changes: Sequence[Change], sample: int) -> tuple[str, str, str]:
+        flat = {**corner.flat, **{key.path: value for key, value in changes}}
+        mismatch: dict[str, Any] = {}
+        if self.table.monte_carlo is not None:
+            flat |= {key.path: value for key, value in self._seed(sample)}
+            mismatch = self._mismatch(sample)
+        return identity_keys(flat, corner.files, mismatch)
+
+    def _trim_key(self, corner: Corner, sample: int, mode: str) -> str:
+        assert self.trimming is not None  # Without it there is no mode.
+        at = self.trimming.at
+        if mode == EACH:
+            identity, *_ = self._keys(corner, [*at, *self._changes(corner, at, sample)], sample)
+        else:
+            own = self.trimming.nominal
+            flat = {**own.flat, **{key.path: value for key, value in at}}
+            identity, *_ = identity_keys(flat, own.files, {})
+        return trim_key(identity, self.trimming.study)
 
     def testbench(self, run: SweepRun) -> Bench:
         """Give the testbench of one run, ready to be run.
@@ -179,7 +178,7 @@ class SweepPlan:
         Returns
         -------
         Bench
-            With everything set and drawn; without [sweep].
+            With everything set and drawn; without [sweep], and as it is before its trim.
 
         Raises
         ------
@@ -188,7 +187,38 @@ class SweepPlan:
         DeckError
             If the size of a transistor cannot be told.
         """
-        corner, grid, sample = self._place(run.number)
+        return self._bench(*self._place(run.number))
+
+    def trim_bench(self, run: SweepRun) -> Bench:
+        """Give the testbench whose calibration gives the trim of a run.
+
+        Parameters
+        ----------
+        run : SweepRun
+            One of a plan that trims.
+
+        Returns
+        -------
+        Bench
+            Of "each" the run's corner and sample, of "frozen" the testbench itself, at the
+            conditions of the trim; with [calibrate] and without a check at half the step.
+
+        Raises
+        ------
+        TestbenchError, DeckError
+            As `testbench`.
+        """
+        assert self.trimming is not None  # The caller has seen to it.
+        corner, _, sample = self._place(run.number)
+        if run.trim == EACH:
+            return self.trimming.ready(self._bench(corner, self.trimming.at, sample))
+        bench = self.trimming.nominal.bench
+        for key, value in self.trimming.at:
+            bench = with_number(bench, key, value)
+        return self.trimming.ready(bench)
+
+    def _bench(self, corner: Corner, grid: tuple[Change, ...], sample: int) -> Bench:
+        """Give the testbench of a corner and sample at some conditions."""
         changes = [*grid, *self._changes(corner, grid, sample)]
         if self.table.monte_carlo is not None:
             changes += self._seed(sample)
@@ -220,6 +250,22 @@ class SweepPlan:
         """
         return self._place(run.number)[0]
 
+    def trim_corner(self, run: SweepRun) -> Corner:
+        """Give the corner that the trim of a run is found at; as `corner` where it has none.
+
+        Parameters
+        ----------
+        run : SweepRun
+            One of this plan.
+
+        Returns
+        -------
+        Corner
+        """
+        if self.trimming is None or run.trim == EACH:
+            return self.corner(run)
+        return self.trimming.nominal
+
     def only(self, numbers: Iterable[int]) -> "SweepPlan":
         """Leave out the decks of other runs: what a worker needs for these.
 
@@ -237,7 +283,10 @@ class SweepPlan:
         corners = (
             corner if id(corner) in used else replace(corner, deck=None) for corner in self.corners
         )
-        return replace(self, corners=tuple(corners), _kept={})
+        trimming = self.trimming
+        if trimming is not None:
+            trimming = replace(trimming, nominal=replace(trimming.nominal, deck=None))
+        return replace(self, corners=tuple(corners), trimming=trimming, _kept={})
 
     def groups(self, size: int, numbers: Iterable[int] | None = None) -> Iterator[tuple[int, ...]]:
         """Put runs together that belong into one task.
@@ -252,16 +301,20 @@ class SweepPlan:
         Yields
         ------
         tuple of int
-            Numbers of runs that share a deck; those that share a waveform stand side by side, and
-            in one group unless they are more than `size`.
+            Numbers of runs that share a deck, and are all trimmed alone or none of them; those that
+            share a waveform, or a trim of their own, stand side by side, and in one group unless
+            they are more than `size`.
         """
-        decks: dict[str, dict[str, list[int]]] = {}
+        decks: dict[tuple[str, str], dict[str, dict[str, list[int]]]] = {}
         for number in range(len(self)) if numbers is None else numbers:
             run = self.run(number)
-            decks.setdefault(run.deck_key, {}).setdefault(run.waveform_key, []).append(number)
-        for waveforms in decks.values():
+            families = decks.setdefault((run.deck_key, run.trim), {})
+            waveforms = families.setdefault(run.family, {})
+            waveforms.setdefault(run.waveform_key, []).append(number)
+        for families in decks.values():
             group: list[int] = []
-            for members in waveforms.values():
+            for waveforms in families.values():
+                members = [number for found in waveforms.values() for number in found]
                 if group and len(group) + len(members) > size:
                     yield tuple(group)
                     group = []
@@ -277,12 +330,16 @@ class SweepPlan:
         """Give corner, values of the grid, and sample of a run."""
         if not 0 <= number < len(self):
             raise IndexError(f"the sweep has {len(self)} runs, there is no number {number}")
-        rest, sample = divmod(number, self.samples)
+        rest, sample = divmod(number % self._untrimmed, self.samples)
         grid: list[Change] = []
         for axis in reversed(self.axes):
             rest, at = divmod(rest, len(axis.values))
             grid.append((axis.key, axis.values[at]))
         return self.corners[rest], tuple(reversed(grid)), sample
+
+    def _mode(self, number: int) -> str:
+        """Give the trim of a run, which is the slowest axis; empty without one."""
+        return self.trimming.modes[number // self._untrimmed] if self.trimming is not None else ""
 
     def _changes(self, corner: Corner, grid: tuple[Change, ...], sample: int) -> list[Change]:
         """Give what a sample, or a perturbation, sets."""
@@ -310,7 +367,7 @@ class SweepPlan:
         keys += [item.key for item in self.variations if item.center is None]
         if not keys:
             return {}
-        point = (corner.name, tuple(value for _, value in grid))
+        point = (corner.name, tuple((key.path, value) for key, value in grid))
         if point not in self._kept:
             bench = corner.bench
             for key, value in grid:

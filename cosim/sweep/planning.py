@@ -16,6 +16,7 @@ from cosim.sweep.axes import (
 from cosim.sweep.plan import SweepPlan
 from cosim.sweep.samples import unit_samples
 from cosim.sweep.table import read_sweep
+from cosim.sweep.trimming import read_trimming
 from cosim.testbench import Bench, Testbench
 
 # Functions whose values ngspice draws from the deck's seed.
@@ -65,7 +66,8 @@ def make_sweep(bench: Bench) -> SweepPlan:
     points = np.empty((1 + 2 * len(perturbations), 0))
     if table.monte_carlo is not None:
         points = unit_samples(table.monte_carlo)
-    plan = SweepPlan(table, corners, axes, variations, points, perturbations, seeded)
+    trimming = read_trimming(bench, table, corners, axes, variations)
+    plan = SweepPlan(table, corners, axes, variations, points, perturbations, seeded, trimming)
     _check_extremes(plan)
     return plan
 

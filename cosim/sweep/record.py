@@ -17,6 +17,7 @@ from cosim.readout_pulse import pulse_source
 from cosim.readout_result import READOUT_KINDS
 from cosim.record import package_versions
 from cosim.result import KINDS
+from cosim.sweep.axes import Corner
 from cosim.sweep.identity import bears_on_nothing
 from cosim.sweep.plan import SweepPlan
 from cosim.testbench import Bench, ReadoutBench
@@ -201,17 +202,26 @@ def _content(plan: SweepPlan) -> str:
     own = asdict(plan.table)
     table = {name: own[name] for name in ("grid", "monte_carlo", "mismatch", "one_at_a_time")}
     table["corners"] = [corner.name for corner in plan.corners]
-    corners = {
-        corner.name or "testbench": {
-            "testbench": {
-                key: value for key, value in corner.flat.items() if not bears_on_nothing(key)
-            },
-            "files": {**dict(corner.files.waveform), "line": corner.files.line},
-        }
-        for corner in plan.corners
-    }
+    corners = {corner.name or "testbench": _corner_content(corner) for corner in plan.corners}
     whole = {"schema": SCHEMA_VERSION, "sweep": table, "corners": corners}
+    if plan.trimming is not None:
+        whole["trim"] = {
+            "runs": list(plan.trimming.modes),
+            "at": {key.path: value for key, value in plan.trimming.at},
+            "calibrate": dict(plan.trimming.study),
+            # What the frozen trim is made of may be no corner of the sweep.
+            "testbench": _corner_content(plan.trimming.nominal),
+        }
     return json.dumps(whole, sort_keys=True, separators=(",", ":"))
+
+
+def _corner_content(corner: Corner) -> dict[str, object]:
+    return {
+        "testbench": {
+            key: value for key, value in corner.flat.items() if not bears_on_nothing(key)
+        },
+        "files": {**dict(corner.files.waveform), "line": corner.files.line},
+    }
 
 
 def _flat(value: object, name: str = "") -> dict[str, object]:
@@ -225,7 +235,8 @@ def _flat(value: object, name: str = "") -> dict[str, object]:
 
 def _deck_files(plan: SweepPlan) -> tuple[DeckFile, ...]:
     found: dict[tuple[str, str], DeckFile] = {}
-    for corner in plan.corners:
+    nominal = () if plan.trimming is None else (plan.trimming.nominal,)
+    for corner in (*plan.corners, *nominal):
         for bench, deck in _decks(corner.bench, corner.deck):
             for file in kept_files(deck.files, roots_of(bench)):
                 # Jobs that share a plan may have named its testbench in different ways.

@@ -16,6 +16,7 @@ from cosim.sweep.plan import SweepPlan
 from cosim.sweep.planning import make_sweep
 from cosim.sweep.record import SWEEP_KINDS, SweepRecord, check_same_plan, make_sweep_record
 from cosim.sweep.simulated import AnyResult
+from cosim.sweep.trims import Trim, find_trim, trimmed_bench
 from cosim.testbench import load_testbench, make_testbench
 
 # Two computers round differently in their mathematical libraries; anything larger is a difference.
@@ -134,7 +135,7 @@ def rerun(
     path : path
         The archive.
     number : int
-        Number of the run, from 1; it need not have been made yet.
+        Number of the run, from 1; it need not have been made yet. Its trim is made again too.
     testbench : path or None
         As in `archived_plan`.
 
@@ -151,13 +152,16 @@ def rerun(
     SimulationError
         If the run fails.
     """
-    return _rerun(archived_plan(path, testbench), number)
+    return _rerun(archived_plan(path, testbench), number, {})
 
 
-def _rerun(plan: SweepPlan, number: int) -> AnyResult:
+def _rerun(plan: SweepPlan, number: int, trims: dict[str, Trim]) -> AnyResult:
     if not 1 <= number <= len(plan):
         raise InputError(f"the sweep has the runs 1 to {len(plan)}, there is no run {number}")
-    return run(plan.testbench(plan.run(number - 1)))
+    one = plan.run(number - 1)
+    if one.trim and one.trim_key not in trims:
+        trims[one.trim_key] = find_trim(plan, one)
+    return run(trimmed_bench(plan, one, trims))
 
 
 def repeat_sample(
@@ -204,13 +208,14 @@ def repeat_sample(
     what = "assignment errors" if plan.is_readout else "fidelities"
     bars = np.array([judged(table, goal)[1] for goal in goals])
     found = []
+    trims: dict[str, Trim] = {}
     for at in sorted(chosen.tolist()):
         number = int(table["id"][at])
         kept = [float(table[column][at]) for column in columns]
         rounding = READOUT_ROUNDING * kept[0] if plan.is_readout else ROUNDING
         wide = float(np.nanmax([ROUNDING, rounding, *bars[:, at]]))
         try:
-            cells, _ = archive.cells_of(_rerun(plan, number))
+            cells, _ = archive.cells_of(_rerun(plan, number, trims))
         except (InputError, SimulationError) as error:
             found.append(Repetition(number, math.nan, wide, str(error)))
             continue

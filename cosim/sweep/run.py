@@ -17,6 +17,7 @@ from cosim import archive
 from cosim.archive import Row
 from cosim.errors import ArchiveError
 from cosim.sweep.batches import DONE, Batch, Outcome, Task, take_slice
+from cosim.sweep.columns import EACH, FROZEN
 from cosim.sweep.engine import Engine, run_batches
 from cosim.sweep.goal import make_goal
 from cosim.sweep.keeping import keep_of, kept_whole, metric_of, read_ranks
@@ -24,6 +25,7 @@ from cosim.sweep.local import local_engine
 from cosim.sweep.plan import SweepPlan
 from cosim.sweep.planning import make_sweep
 from cosim.sweep.record import SWEEP_KINDS, SweepRecord, check_same_plan, make_sweep_record
+from cosim.sweep.trims import Trims, find_trim
 from cosim.sweep.work import ALL, Shared, failed_row, run_batch
 from cosim.testbench import Bench, load_testbench
 
@@ -213,6 +215,7 @@ class _Desk:
         self.planned = len(plan)
         self.waiting: list[Row] = []
         self.slots = 1
+        self.trims: Trims = {}
         self.began = self.flushed = time.monotonic()
         self.first = (0, self.began)  # Runs of the first writing, and when: starting up is slow.
 
@@ -274,9 +277,11 @@ class _Desk:
         return take_slice(chain.from_iterable(map(cut, families)), *part)
 
     def cut(self, size: int, group: tuple[int, ...]) -> Iterator[tuple[int, ...]]:
-        """Cut a group to a size, though never between runs that share a waveform."""
+        """Cut a group to a size, though never between runs that share a waveform or a trim."""
         piece: tuple[int, ...] = ()
-        for _, runs in groupby(group, lambda number: self.plan.run(number).waveform_key):
+        # A die's own trim takes longer than its runs: each die is a batch.
+        size = 1 if self.plan.run(group[0]).trim == EACH else size
+        for _, runs in groupby(group, lambda number: self.plan.run(number).family):
             members = tuple(runs)
             if piece and len(piece) + len(members) > size:
                 yield piece
@@ -295,8 +300,18 @@ class _Desk:
                     self.metric,
                     self.keep,
                     self.threshold(),
+                    self.frozen(numbers[0]),
                 )
                 yield Batch(run_batch, tuple(Task(number + 1) for number in numbers), shared)
+
+    def frozen(self, number: int) -> Trims:
+        """Give the trim that all runs share, found here with the first that needs it."""
+        run = self.plan.run(number)
+        if run.trim != FROZEN:
+            return {}
+        if not self.trims:
+            self.trims = {run.trim_key: find_trim(self.plan, run)}
+        return self.trims
 
     def threshold(self) -> float:
         """Give the metric from which a run is among the worst, as far as is known."""

@@ -20,9 +20,11 @@ from cosim.readout_input import GROUND
 from cosim.readout_output import ReadoutPlan, make_readout_plan
 from cosim.readout_result import ReadoutResult
 from cosim.result import GateResult
-from cosim.sweep.plan import SweepPlan, SweepRun
+from cosim.sweep.plan import SweepPlan
+from cosim.sweep.planned_run import SweepRun
 from cosim.sweep.record import FailedRun
-from cosim.testbench import Bench, ReadoutBench, gate_bench
+from cosim.sweep.trims import Trims, trimmed_bench
+from cosim.testbench import Bench, ReadoutBench, Testbench, gate_bench
 from cosim.waveform import FloatArray, Waveform
 
 AnyResult = GateResult | ReadoutResult | DecisionResult
@@ -56,7 +58,9 @@ class Simulated:
     wall_time: float = 0.0
 
 
-def simulate_groups(plan: SweepPlan, groups: Sequence[Sequence[SweepRun]]) -> Iterator[Simulated]:
+def simulate_groups(
+    plan: SweepPlan, groups: Sequence[Sequence[SweepRun]], trims: Trims
+) -> Iterator[Simulated]:
     """Simulate once for each group of runs.
 
     Parameters
@@ -65,6 +69,8 @@ def simulate_groups(plan: SweepPlan, groups: Sequence[Sequence[SweepRun]]) -> It
         The plan.
     groups : sequence of sequence of SweepRun
         Runs of it that share a waveform.
+    trims : mapping of Trim
+        Those of the runs, where the plan trims.
 
     Yields
     ------
@@ -72,9 +78,9 @@ def simulate_groups(plan: SweepPlan, groups: Sequence[Sequence[SweepRun]]) -> It
         In the order of the groups.
     """
     if plan.is_readout:
-        yield from (_simulate_readouts(plan, members) for members in groups)
+        yield from (_simulate_readouts(plan, members, trims) for members in groups)
         return
-    ready = [_ready(plan, members) for members in groups]
+    ready = [_ready(plan, members, trims) for members in groups]
     plans = [item.plan for item in ready if item.plan is not None]
     firsts = _Captures(plans)
     # The runs at half the step are a family of their own.
@@ -123,13 +129,13 @@ def _timed(
         began = time.perf_counter()
 
 
-def _ready(plan: SweepPlan, members: Sequence[SweepRun]) -> Simulated:
+def _ready(plan: SweepPlan, members: Sequence[SweepRun], trims: Trims) -> Simulated:
     """Plan the simulation of gates that share it, by the first whose testbench is in order."""
     began = time.perf_counter()
     found = Simulated(None)
     for run in members:
         try:
-            found = _planned(plan, run)
+            found = _planned(plan, run, trims)
         except CosimError as error:
             found = Simulated(None, error=error)
             continue
@@ -137,20 +143,20 @@ def _ready(plan: SweepPlan, members: Sequence[SweepRun]) -> Simulated:
     return replace(found, wall_time=time.perf_counter() - began)
 
 
-def _planned(plan: SweepPlan, run: SweepRun) -> Simulated:
-    bench = gate_bench(plan.testbench(run))
+def _planned(plan: SweepPlan, run: SweepRun, trims: Trims) -> Simulated:
+    bench = gate_bench(trimmed_bench(plan, run, trims))
     return Simulated(
         bench, None if bench.netlist is None else make_plan(bench, plan.corner(run).deck)
     )
 
 
-def _simulate_readouts(plan: SweepPlan, members: Sequence[SweepRun]) -> Simulated:
+def _simulate_readouts(plan: SweepPlan, members: Sequence[SweepRun], trims: Trims) -> Simulated:
     """Simulate for readouts that share it, by the first whose testbench is in order."""
     began = time.perf_counter()
     found = Simulated(None)
     for run in members:
         try:
-            bench = _readout_bench(plan, run)
+            bench = _readout_bench(plan, run, trims)
         except CosimError as error:
             found = Simulated(None, error=error)
             continue
@@ -165,8 +171,8 @@ def _simulate_readouts(plan: SweepPlan, members: Sequence[SweepRun]) -> Simulate
     return replace(found, wall_time=time.perf_counter() - began)
 
 
-def _readout_bench(plan: SweepPlan, run: SweepRun) -> ReadoutBench:
-    bench = plan.testbench(run)
+def _readout_bench(plan: SweepPlan, run: SweepRun, trims: Trims) -> ReadoutBench:
+    bench = trimmed_bench(plan, run, trims)
     assert isinstance(bench, ReadoutBench)  # The caller has seen to it.
     return bench
 
@@ -175,7 +181,7 @@ def _deck(plan: SweepPlan, run: SweepRun) -> Deck | None:
     return plan.corner(run).deck
 
 
-def make_result(plan: SweepPlan, run: SweepRun, found: Simulated) -> AnyResult:
+def make_result(plan: SweepPlan, run: SweepRun, found: Simulated, trims: Trims) -> AnyResult:
     """Make the result of one run from what was simulated for it.
 
     Parameters
@@ -186,6 +192,8 @@ def make_result(plan: SweepPlan, run: SweepRun, found: Simulated) -> AnyResult:
         One of the runs that share it.
     found : Simulated
         From `simulate_groups`.
+    trims : mapping of Trim
+        As there.
 
     Returns
     -------
@@ -198,8 +206,8 @@ def make_result(plan: SweepPlan, run: SweepRun, found: Simulated) -> AnyResult:
         If the run fails.
     """
     if found.bench is None and not plan.is_readout:
-        _planned(plan, run)  # Each of the runs has its own word to say on what is wrong.
-    bench = plan.testbench(run)
+        _planned(plan, run, trims)  # Each of the runs has its own word to say on what is wrong.
+    bench = trimmed_bench(plan, run, trims)
     if found.error is not None:
         raise found.error
     if isinstance(bench, ReadoutBench):
@@ -213,7 +221,7 @@ def make_result(plan: SweepPlan, run: SweepRun, found: Simulated) -> AnyResult:
 
 
 def what_is_known(
-    plan: SweepPlan, run: SweepRun, found: Simulated, error: BaseException
+    plan: SweepPlan, run: SweepRun, found: Simulated, trims: Trims, error: BaseException
 ) -> FailedRun:
     """Give what is known of a run that failed, without its status.
 
@@ -225,6 +233,9 @@ def what_is_known(
         The run.
     found : Simulated
         What was simulated for it.
+    trims : mapping of Trim
+        As for `simulate_groups`. Of a run whose trim failed the testbench and the deck are those
+        that the trim began with.
     error : exception
         What it raised.
 
@@ -233,9 +244,12 @@ def what_is_known(
     FailedRun
     """
     try:
-        bench = plan.testbench(run)
+        untrimmed = run.trim_key in trims and trims[run.trim_key].result is None
+        bench = plan.trim_bench(run) if untrimmed else trimmed_bench(plan, run, trims)
     except CosimError:
         return FailedRun("", "", (), "", "", {})
+    if untrimmed and isinstance(bench, Testbench) and bench.netlist is not None:
+        found = _at_trim(bench)
     asked = _asked(bench, plan.corner(run).deck, found)
     if asked is None:
         return FailedRun("", "", (), bench.to_toml(), "", {})
@@ -245,6 +259,13 @@ def what_is_known(
     elif isinstance(error, SimulationError):
         waves = dict(_partial(error.partial))
     return FailedRun("", "", (), bench.to_toml(), _sent(*asked, roots_of(bench)), waves)
+
+
+def _at_trim(bench: Testbench) -> Simulated:
+    try:
+        return Simulated(bench, make_plan(bench))
+    except CosimError:
+        return Simulated(bench)  # The trim failed by that, and its message says so.
 
 
 def _asked(

@@ -1,6 +1,6 @@
-"""The table [sweep] of a testbench: corners, grids, Monte Carlo, mismatch, perturbations."""
+"""The table [sweep] of a testbench: corners, grids, Monte Carlo, mismatch, perturbations, trims."""
 
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, fields
 from typing import Annotated, Any, Literal
 
@@ -11,6 +11,9 @@ from cosim.testbench import Bench, ReadoutBench
 
 Raw = float | int | str
 """A number or a text with a unit: which unit is due, the key beside it says."""
+
+# What a sweep may do about the knobs of [calibrate]; the first is the default.
+TRIMS = ("none", "frozen", "each", "both")
 
 # A corner's shorthands -> what they stand for.
 SHORTHANDS = {
@@ -242,6 +245,12 @@ class SweepTable:
         Drawn anew for each sample.
     one_at_a_time : tuple of PerturbationTable
         In place of samples: the nominal point, and two more for each of these.
+    trim : "none", "frozen", "each" or "both"
+        Whether the knobs of [calibrate] are set: to what one calibration of the testbench itself
+        has found, to what the calibration of each die finds, or runs of both kinds.
+    trim_at : tuple of (str, object)
+        Dotted key, and what the file says: the conditions of these calibrations where they are
+        not those of the testbench or the corner.
     report : ReportTable
         What is judged and kept; it bears on no run.
     """
@@ -252,6 +261,8 @@ class SweepTable:
     monte_carlo: MonteCarloTable | None = None
     mismatch: MismatchTable | None = None
     one_at_a_time: tuple[PerturbationTable, ...] = ()
+    trim: str = "none"
+    trim_at: tuple[tuple[str, object], ...] = ()
 
 
 def read_sweep(bench: Bench) -> SweepTable:
@@ -276,7 +287,7 @@ def read_sweep(bench: Bench) -> SweepTable:
     table = bench.studies.get("sweep", {})
     names = ["corners", "grid", "monte_carlo", "mismatch", "one_at_a_time"]
     own = [item.name for item in fields(ReportTable)]
-    check_keys(table, [*names, *own], f"{file}, table [sweep]")
+    check_keys(table, [*names, "trim", "trim_at", *own], f"{file}, table [sweep]")
     if not any(table.get(name) for name in names):
         raise TestbenchError(
             f"{file} has no table [sweep] that says what to run",
@@ -293,6 +304,8 @@ def read_sweep(bench: Bench) -> SweepTable:
             else None
         ),
         one_at_a_time=_array(table, "one_at_a_time", PerturbationTable, file),
+        trim=_trim(table.get("trim", TRIMS[0]), f"{file}, table [sweep]"),
+        trim_at=tuple(_dotted(table.get("trim_at", {}), f"{file}, table [sweep.trim_at]")),
         report=_report({name: table[name] for name in own if name in table}, bench, file),
     )
     if found.mismatch is not None and found.monte_carlo is None:
@@ -305,7 +318,38 @@ def read_sweep(bench: Bench) -> SweepTable:
             f"{file}: [sweep.monte_carlo] and [[sweep.one_at_a_time]] move the same "
             "point in two ways; give one of them"
         )
+    if found.one_at_a_time and found.trim != TRIMS[0]:
+        raise TestbenchError(
+            f"{file}, table [sweep], key 'trim': with [[sweep.one_at_a_time]] it is not said "
+            "whether a die is trimmed before or after a number is moved",
+            hint="move it by [[sweep.grid]], which comes after the trim, or by a corner, which "
+            "comes before",
+        )
+    if found.trim_at and found.trim == TRIMS[0]:
+        raise TestbenchError(
+            f"{file}, table [sweep]: 'trim_at' says where the trim is made, and there is none",
+            hint='add trim = "each" or "both"',
+        )
     return found
+
+
+def _trim(word: object, where: str) -> str:
+    if word not in TRIMS:
+        raise TestbenchError(
+            f"{where}, key 'trim': wanted {', '.join(repr(name) for name in TRIMS)}, got {word!r}"
+        )
+    return str(word)
+
+
+def _dotted(table: object, where: str, prefix: str = "") -> Iterator[tuple[str, object]]:
+    """Give keys and values; a key without quotes around its dots is a table within a table."""
+    if not isinstance(table, Mapping):
+        raise TestbenchError(f"{where}: wanted a table, got {table!r}")
+    for key, value in table.items():
+        if isinstance(value, Mapping):
+            yield from _dotted(value, where, f"{prefix}{key}.")
+        else:
+            yield f"{prefix}{key}", value
 
 
 def _array(

@@ -3,7 +3,7 @@
 import platform
 import time
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from datetime import datetime
 
 import numpy as np
@@ -16,9 +16,11 @@ from cosim.result import GateResult
 from cosim.sweep.batches import DONE, Batch, Outcome, failed
 from cosim.sweep.goal import make_goal
 from cosim.sweep.identity import files_of
-from cosim.sweep.plan import SweepPlan, SweepRun
+from cosim.sweep.plan import SweepPlan
+from cosim.sweep.planned_run import SweepRun
 from cosim.sweep.record import FailedRun
 from cosim.sweep.simulated import AnyResult, Simulated, make_result, simulate_groups, what_is_known
+from cosim.sweep.trims import Trim, Trims, find_trim, trim_cells
 from cosim.waveform import Envelope
 
 ALL = -1
@@ -40,19 +42,22 @@ class Shared:
     threshold : float
         Infidelity, or assignment error, that a run must reach to be among them, as far as known
         when the batch is sent.
+    trims : mapping of Trim
+        What has been found before by `SweepRun.trim_key`; the worker finds the others.
     """
 
     plan: SweepPlan
     metric: str
     keep: int
     threshold: float
+    trims: Trims = field(default_factory=dict)
 
 
 def run_batch(batch: Batch) -> tuple[Outcome, ...]:
     """Run a batch of a sweep: the work that the engines carry.
 
     Runs that share a waveform share one simulation, and those that differ in the parameters of
-    their deck share its load.
+    their deck share its load. A trim is found once for all runs of the batch that have it.
 
     Parameters
     ----------
@@ -73,16 +78,22 @@ def run_batch(batch: Batch) -> tuple[Outcome, ...]:
     plan = shared.plan
     runs = [plan.run(task.number - 1) for task in batch.tasks]
     check_files(plan, runs)
+    trims = dict(shared.trims)
+    taken: dict[int, float] = {}  # The time of a trim is that of the first of its runs.
     groups: dict[str, list[SweepRun]] = {}
     for run in runs:
+        if run.trim and run.trim_key not in trims:
+            trims[run.trim_key] = find_trim(plan, run)
+            taken[run.number] = trims[run.trim_key].wall_time
         groups.setdefault(run.waveform_key, []).append(run)
     outcomes: list[Outcome] = []
     results: dict[int, AnyResult] = {}
     shared_by = list(groups.values())
-    for members, found in zip(shared_by, simulate_groups(plan, shared_by), strict=True):
+    for members, found in zip(shared_by, simulate_groups(plan, shared_by, trims), strict=True):
         spent = found.wall_time
         for run in members:
-            outcome = _outcome(plan, run, found, spent, results)
+            spent += taken.get(run.number, 0.0)
+            outcome = _outcome(plan, run, found, trims, spent, results)
             outcomes.append(outcome)
             spent = 0.0
             # No more of them is held than is sent back.
@@ -144,25 +155,34 @@ def check_files(plan: SweepPlan, runs: Sequence[SweepRun]) -> None:
 
 
 def _outcome(
-    plan: SweepPlan, run: SweepRun, found: Simulated, spent: float, results: dict[int, AnyResult]
+    plan: SweepPlan,
+    run: SweepRun,
+    found: Simulated,
+    trims: Trims,
+    spent: float,
+    results: dict[int, AnyResult],
 ) -> Outcome:
     began = time.perf_counter()
     number = run.number + 1
+    trim = trims.get(run.trim_key)
     try:
-        result = make_result(plan, run, found)
+        result = make_result(plan, run, found, trims)
     # A library that calls sys.exit has failed; it must not end the worker.
     except (Exception, SystemExit) as error:
         outcome = failed(number, error, spent + time.perf_counter() - began)
-        known = what_is_known(plan, run, found, error)
-        return replace(outcome, result=_failed_row(plan, run, outcome, known))
+        known = what_is_known(plan, run, found, trims, error)
+        return replace(outcome, result=_failed_row(plan, run, outcome, known, trim))
     outcome = Outcome(number, DONE, wall_time=spent + time.perf_counter() - began)
     results[number] = result
-    return replace(outcome, result=_row(plan, run, outcome, result))
+    return replace(outcome, result=_row(plan, run, outcome, result, trim))
 
 
-def _row(plan: SweepPlan, run: SweepRun, outcome: Outcome, result: AnyResult) -> Row:
+def _row(
+    plan: SweepPlan, run: SweepRun, outcome: Outcome, result: AnyResult, trim: Trim | None
+) -> Row:
     cells, units = cells_of(result)
-    cells = {**_own_cells(run), **cells, "warnings": "\n".join(result.warnings)}
+    own, more = trim_cells(trim)
+    cells = {**_own_cells(run), **own, **cells, "warnings": "\n".join(result.warnings)}
     simulator = result.run.versions.get("ngspice", "")
     cells |= {"error": "", "host": platform.node(), "simulator": simulator}
     return Row(
@@ -170,7 +190,7 @@ def _row(plan: SweepPlan, run: SweepRun, outcome: Outcome, result: AnyResult) ->
         kind=type(result).__name__,
         info=RunInfo(outcome.status, result.run.started, outcome.wall_time),
         cells=cells,
-        units={**plan.units, **units},
+        units={**plan.units, **more, **units},
         series={"envelope": _series(result.envelope)} if isinstance(result, GateResult) else {},
     )
 
@@ -190,7 +210,10 @@ def _own_cells(run: SweepRun) -> dict[str, bool | int | float | str]:
     return {"identity": run.identity, "seed": run.seed, **run.values}
 
 
-def _failed_row(plan: SweepPlan, run: SweepRun, outcome: Outcome, known: FailedRun) -> Row:
+def _failed_row(
+    plan: SweepPlan, run: SweepRun, outcome: Outcome, known: FailedRun, trim: Trim | None = None
+) -> Row:
+    own, more = trim_cells(trim)
     roots = roots_of(plan.corner(run).bench)
     text = outcome.error
     if roots.folders:
@@ -204,8 +227,8 @@ def _failed_row(plan: SweepPlan, run: SweepRun, outcome: Outcome, known: FailedR
         number=outcome.number,
         kind="",
         info=RunInfo(outcome.status, started, outcome.wall_time),
-        cells={**_own_cells(run), "error": text, "host": platform.node()},
-        units=plan.units,
+        cells={**_own_cells(run), **own, "error": text, "host": platform.node()},
+        units={**plan.units, **more},
         series={},  # The default of a row does not pickle.
         run=record,
     )

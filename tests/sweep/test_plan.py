@@ -18,7 +18,8 @@ from scipy.stats import qmc
 import cosim
 from cosim.capture import make_plan
 from cosim.keys import flattened
-from cosim.sweep.plan import SweepPlan, SweepRun
+from cosim.sweep.plan import SweepPlan
+from cosim.sweep.planned_run import SweepRun
 from cosim.sweep.planning import make_sweep
 from cosim.sweep.samples import sample_seed, uniform, unit_samples
 from cosim.sweep.table import MonteCarloTable, VaryTable

@@ -180,11 +180,11 @@ time_unit = "s"
     original = work.simulate_groups
     calls = []
 
-    def change_then_simulate(plan: object, groups: Sequence[object]) -> object:
+    def change_then_simulate(plan: object, groups: Sequence[object], trims: object) -> object:
         calls.append(len(groups))
         if len(calls) == 2:
             (tmp_path / "gain.csv").write_bytes(text + b"\n26e-9,1\n")
-        return original(plan, groups)  # type: ignore[arg-type]
+        return original(plan, groups, trims)  # type: ignore[arg-type]
 
     monkeypatch.setattr(work, "simulate_groups", change_then_simulate)
     path = tmp_path / "a.h5"
