@@ -69,20 +69,29 @@ def advise(items: Sequence[BudgetItem], total: float, error_bar: float) -> str:
     first = able[0]
     left = max(0.0, total - first.removed)
     text = (
-        f"Change first {_remedy(first.name)} ({first.name}): without it the infidelity falls from "
+        f"Change first {_remedy(first.name)}: without it the infidelity falls from "
         f"{total:.2e} to {left:.2e}."
     )
     if first.absorbed:
         text += f" A {first.absorbed_by} absorbs it."
         staying = [item for item in able[1:] if not item.absorbed]
         if staying:
-            text += f" What stays then is led by {_remedy(staying[0].name)} ({staying[0].name})."
+            text += f" What stays then is led by {_remedy(staying[0].name)}."
+    if first.name == "decoherence":
+        own = [item for item in items if item.counted and item is not first and item.removed > 0.0]
+        if own:
+            text += (
+                f" Of what the circuit does, {_remedy(own[0].name)} costs most, "
+                f"{own[0].removed:.2e}."
+            )
     return text + beside
 
 
 def _remedy(name: str) -> str:
+    """Say what to change, and with the item's name where these words do not hold it."""
     if name.startswith("noise: "):
-        return f"the noise of {name.removeprefix('noise: ')}"
+        return f"the noise of '{name.removeprefix('noise: ')}'"
     if name.startswith("spur"):
-        return "the line beside the carrier"
-    return _REMEDIES.get(name, name)
+        return f"the line beside the carrier ({name})"
+    words = _REMEDIES.get(name, name)
+    return words if name in words else f"{words} ({name})"

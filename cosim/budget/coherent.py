@@ -18,6 +18,8 @@ LEAST_COST = 1e-10
 # Items of which pairs are looked at, and pairs that are told.
 _PAIRED = 6
 _TOLD = 5
+# Interactions below this are rounding.
+_NOTHING = 1e-11
 # Cosine of the angle between two error vectors from which on they add in amplitude, or cancel.
 _PARALLEL = 0.5
 
@@ -147,6 +149,7 @@ def strongest_pairs(case: Case, items: list[BudgetItem], view: str) -> tuple[Pai
                 one.name, two.name, together - one.alone - two.alone, together, relation
             )
         )
+    found = [pair for pair in found if abs(pair.interaction) > _NOTHING]
     found.sort(key=lambda pair: -abs(pair.interaction))
     return tuple(found[:_TOLD])
 
