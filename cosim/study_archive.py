@@ -6,6 +6,7 @@ from pathlib import Path
 from cosim import archive
 from cosim.budget.result import BUDGET_KINDS, BudgetResult
 from cosim.calibration.result import CALIBRATION_KINDS, CalibrationResult
+from cosim.drift.result import DRIFT_KINDS, DriftResult
 from cosim.errors import ArchiveError
 from cosim.sensitivity.result import SENSITIVITY_KINDS, SensitivityResult
 from cosim.specification.readout_result import (
@@ -22,6 +23,7 @@ STUDY_KINDS: dict[str, type] = {
     **SPECIFICATION_KINDS,
     **READOUT_SPECIFICATION_KINDS,
     **SENSITIVITY_KINDS,
+    **DRIFT_KINDS,
     **TRAIN_KINDS,
 }
 
@@ -31,6 +33,7 @@ StudyResult = (
     | GateSpecification
     | ReadoutSpecification
     | SensitivityResult
+    | DriftResult
     | TrainResult
 )
 

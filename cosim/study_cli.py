@@ -182,6 +182,32 @@ def sensitivity(
         typer.echo(f"figure in {plot}", err=True)
 
 
+def drift(
+    testbench: TestbenchPath,
+    archive: Annotated[
+        Path | None, typer.Option(metavar="FILE.h5", help="Add the study to this archive.")
+    ] = None,
+    plot: PlotOption = None,
+    json_output: JsonFlag = False,
+) -> None:
+    """Find how long a trim lasts with the sources of drift in \\[drift]."""
+    from cosim.drift.study import run_drift
+    from cosim.drift_figures import plot_drift
+    from cosim.study_archive import save_study
+    from cosim.testbench import gate_bench, load_testbench
+
+    check_output(archive, ".h5")
+    check_output(plot, ".png", ".pdf", ".svg")
+    result = run_drift(gate_bench(load_testbench(testbench)), progress=_tell)
+    show_study(result, json_output)
+    if archive is not None:
+        number = save_study(result, archive)
+        typer.echo(f"archived as run {number} of {archive}", err=True)
+    if plot is not None:
+        plot_drift(result, plot)
+        typer.echo(f"figure in {plot}", err=True)
+
+
 def _tell(line: str) -> None:
     """Say how far a study is, on a terminal."""
     if sys.stderr.isatty():
@@ -243,6 +269,8 @@ def show_study(result: "StudyResult", json_output: bool, *, log: bool = False) -
     from cosim.budget_terminal import budget_parts
     from cosim.calibration.result import CalibrationResult, calibration_numbers
     from cosim.calibration_terminal import calibration_table
+    from cosim.drift.result import DriftResult
+    from cosim.drift_terminal import drift_table
     from cosim.result import as_plain
     from cosim.sensitivity.result import SensitivityResult
     from cosim.sensitivity_terminal import sensitivity_table
@@ -258,11 +286,13 @@ def show_study(result: "StudyResult", json_output: bool, *, log: bool = False) -
             typer.echo(json.dumps(train_numbers(result), indent=2))
         else:
             Console(highlight=False).print(train_table(result))
-    elif isinstance(result, SensitivityResult):
+    elif isinstance(result, SensitivityResult | DriftResult):
         if log:
-            raise InputError("a study of sensitivities keeps no log of its runs")
+            raise InputError("a study of many runs keeps no log of them")
         if json_output:
             typer.echo(json.dumps(as_plain(result), indent=2))
+        elif isinstance(result, DriftResult):
+            Console(highlight=False).print(drift_table(result))
         else:
             Console(highlight=False).print(sensitivity_table(result))
     elif isinstance(result, CalibrationResult):
@@ -293,6 +323,7 @@ def show_study(result: "StudyResult", json_output: bool, *, log: bool = False) -
 STUDY_COMMANDS: tuple[tuple[Callable[..., None], str], ...] = (
     (budget, "qcosim budget examples/x180_noise.toml --plot budget.png"),
     (calibrate, "qcosim calibrate examples/calibrate_modulator.toml --plot trim.png"),
+    (drift, "qcosim drift examples/drift_x180.toml --plot drift.png"),
     (sensitivity, "qcosim sensitivity examples/x90_baseband.toml --plot tornado.png"),
     (specify, "qcosim specify examples/specify_x180.toml --plot specification.png"),
     (train, "qcosim train examples/train_flux.toml --plot train.png --taps taps.csv"),

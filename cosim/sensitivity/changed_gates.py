@@ -10,14 +10,17 @@ from cosim.captures import capture_probes
 from cosim.circuit.deck import Deck
 from cosim.dsp.demodulation import demodulate
 from cosim.errors import CosimError
+from cosim.gate import Shots, run_gate
 from cosim.imported import import_waveform
 from cosim.keys import NumberKey, with_number
 from cosim.line import through_line
 from cosim.noise_setup import line_of_noise
 from cosim.quantum.operators import OperatorSystem
 from cosim.qubit_drive import QubitDrive, couple
+from cosim.result import GateResult
 from cosim.testbench import Testbench
 from cosim.voltage_noises import NetlistNoise
+from cosim.waveform import ComplexArray
 
 Changes = tuple[tuple[NumberKey, float], ...]
 
@@ -58,6 +61,8 @@ class ChangedGates:
         A user's own system.
     report : callable or None
         Called with the number of a simulated waveform, from 1, and how many are under way.
+    before : ndarray of complex, shape (levels^2, levels^2), or None
+        What noise does, for all gates alike, where the testbench's own has been taken out of it.
     netlist_runs : int
         Waveforms simulated until now.
     """
@@ -66,6 +71,7 @@ class ChangedGates:
     deck: Deck | None
     system: OperatorSystem | None = None
     report: Callable[[int, int], None] | None = None
+    before: ComplexArray | None = None
     netlist_runs: int = 0
     _shots: dict[Changes, tuple[Plan | None, Capture | CosimError]] = field(default_factory=dict)
 
@@ -141,6 +147,32 @@ class ChangedGates:
             raise shot
         return plan, shot
 
+    def result(self, floor: bool) -> GateResult:
+        """Give the whole result of the testbench as it stands.
+
+        Parameters
+        ----------
+        floor : bool
+            Run once more at half the step, for the error bars.
+
+        Returns
+        -------
+        GateResult
+
+        Raises
+        ------
+        CosimError
+            If it cannot be simulated.
+        """
+        plan, shot = self.shot()
+        half = None
+        if floor and plan is not None:
+            half = capture_probe(plan.half_step())
+            self.netlist_runs += 1
+        bench = replace(self.bench, accuracy=replace(self.bench.accuracy, floor=floor))
+        shots = None if plan is None else Shots(plan, shot, half)
+        return run_gate(bench, system=self.system, shots=shots)
+
     def _bench(self, changes: Changes) -> Testbench | CosimError:
         bench = self.bench
         try:
@@ -182,7 +214,7 @@ class ChangedGates:
     def _coupled(self, bench: Testbench, plan: Plan | None, shot: Capture) -> ChangedGate:
         shot = through_line(bench, shot)
         drive = couple(bench, shot, self.system)
-        pulse = drive.pulse(shot.waveform)
+        pulse = replace(drive.pulse(shot.waveform), before=self.before)
         if bench.noise:
             envelope = demodulate(shot.waveform, drive.carrier_frequency)
             noisy = line_of_noise(bench, plan, drive.carrier_frequency, envelope).on(drive)

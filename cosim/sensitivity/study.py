@@ -9,10 +9,9 @@ from datetime import datetime
 import numpy as np
 
 from cosim.calibration.judgement import turn_of
-from cosim.capture import capture_probe
 from cosim.decks import read_deck
 from cosim.errors import CosimError, InputError
-from cosim.gate import Shots, best_calibration, gate_target, run_gate
+from cosim.gate import best_calibration, gate_target
 from cosim.quantum.channel import nearest_unitary
 from cosim.quantum.error_vector import error_vector
 from cosim.quantum.fidelity import average_gate_fidelity, rotation_of
@@ -114,16 +113,7 @@ def run_sensitivity(
 
 
 def _gate_centre(bench: Testbench, gates: ChangedGates, metric: str) -> _Centre:
-    plan, shot = gates.shot()
-    half = None
-    if bench.accuracy.floor and plan is not None:
-        half = capture_probe(plan.half_step())
-        gates.netlist_runs += 1
-    floored = replace(
-        gates.bench, accuracy=replace(gates.bench.accuracy, floor=bench.accuracy.floor)
-    )
-    shots = None if plan is None else Shots(plan, shot, half)
-    result = run_gate(floored, system=gates.system, shots=shots)
+    result = gates.result(bench.accuracy.floor)
 
     def run(variants: Sequence[Changes]) -> list[Outcome | CosimError]:
         found = gates.run(variants)
