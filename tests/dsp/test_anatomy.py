@@ -123,6 +123,19 @@ def test_a_spur(offset: float, modulated: bool) -> None:
     assert found.numbers[f"{spur.name}_frequency"] == pytest.approx(offset, abs=5e4)
 
 
+@pytest.mark.parametrize("family", ["gaussian", "raised cosine"])
+def test_a_spur_beside_a_pulse_without_a_plateau(family: str) -> None:
+    shape = Shape(family, 70e-9, 20e-9, 20e-9, 20e-9)
+    tone = 0.005 * LEVEL * np.exp(2j * math.pi * 83e6 * T + 0.4j)
+    found = taken_apart(LEVEL * sample_shape(shape, GRID).value + tone)
+    assert found.ideal.family == family
+    (spur,) = found.spurs
+    assert not spur.modulated
+    amplitude = complex(*(found.numbers[name] for name in spur.numbers))
+    assert amplitude == pytest.approx(0.005 * LEVEL * np.exp(0.4j), rel=0.02)
+    assert found.numbers["level"] == pytest.approx(LEVEL, rel=1e-4)
+
+
 def test_two_spurs_and_droop_at_once() -> None:
     tones = 0.004 * np.exp(2j * math.pi * 55e6 * T) + 0.02 * np.exp(-2j * math.pi * 140e6 * T)
     found = taken_apart(LEVEL * FLAT * (1.0 + 0.01 * PLACE + tones))

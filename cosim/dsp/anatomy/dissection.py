@@ -9,7 +9,7 @@ from cosim.dsp.anatomy.leaking import find_leakage
 from cosim.dsp.anatomy.lines import above
 from cosim.dsp.anatomy.outline import find_outline, outline_names
 from cosim.dsp.anatomy.parts import GROUPS, Anatomy, Spur, actual_shape, compose, phase_of
-from cosim.dsp.anatomy.plateau import fit_by_plateau, plateau_of
+from cosim.dsp.anatomy.plateau import fit_beside, fit_by_plateau, plateau_of
 from cosim.dsp.anatomy.shapes import FAMILIES, Grid, Shape, sample_shape
 from cosim.errors import InputError
 from cosim.waveform import ComplexArray
@@ -58,6 +58,7 @@ def dissect(grid: Grid, iq: ComplexArray, wanted: Wanted, *, offset: float = 0.0
         free = scales_of(work, numbers, [*outline_names(work, shape), *names])
         free |= spur_scales(numbers, spurs, frequencies=False)
         numbers = fit_numbers(work, numbers, shape, free, spurs)
+        numbers, spurs = fit_beside(work, numbers, shape, spurs, free)
     else:
         names = ["level", "phase", "frequency", "droop", *names]
         numbers, spurs = fit_by_plateau(work, numbers, shape, spurs, names, plateau)

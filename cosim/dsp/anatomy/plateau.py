@@ -229,6 +229,49 @@ def _lines(
     return begin, names, (*spurs, *added)
 
 
+def fit_beside(
+    work: Work,
+    numbers: dict[str, float],
+    shape: Shape,
+    spurs: tuple[Spur, ...],
+    free: dict[str, float],
+) -> tuple[dict[str, float], tuple[Spur, ...]]:
+    """Find lines that are there beside a pulse without a plateau, and fit everything once more.
+
+    Parameters
+    ----------
+    work : Work
+    numbers : dict of float
+        Fitted already.
+    shape : Shape
+        Whose family the pulse is of.
+    spurs : tuple of Spur
+        At multiples of the clock.
+    free : dict of float
+        Numbers that are free, with their scales.
+
+    Returns
+    -------
+    numbers : dict of float
+    spurs : tuple of Spur
+        With those that were found; one that comes and goes with such a pulse is not told from its
+        shape.
+    """
+    found = actual_shape(numbers, shape)
+    whole = slice(0, work.grid.t.size)
+    left = _left_over(work, numbers, shape, spurs, whole)
+    begin, _, beside = _lines(work, numbers, shape, spurs, whole, left)
+    steady = tuple(spur for spur in beside[len(spurs) :] if not spur.modulated)
+    if not steady:
+        return numbers, spurs
+    wider = free | spur_scales(begin, steady, frequencies=True)
+    wider |= scales_of(work, begin, [*_BESIDE])
+    trial = fit_numbers(work, begin, shape, wider, (*spurs, *steady))
+    if not _plausible(work, trial, found, steady):
+        return numbers, spurs
+    return trial, (*spurs, *steady)
+
+
 def _comes_and_goes(work: Work, size: FloatArray, tone: ComplexArray) -> bool:
     """Tell whether a line is there during the pulse only: it explains nothing outside of it."""
     middle = int(np.argmax(size))
