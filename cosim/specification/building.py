@@ -101,8 +101,8 @@ def fastest_offset(request: Request) -> float:
     return fastest
 
 
-def turned(x: float) -> ComplexArray:
-    """Give an amplitude at `PHASES` phases, shape (PHASES, 1)."""
+def _turned(x: float) -> ComplexArray:
+    """An amplitude at `PHASES` phases, shape (PHASES, 1)."""
     return np.asarray(x * np.exp(2j * math.pi * np.arange(PHASES) / PHASES)[:, None])
 
 
@@ -118,7 +118,7 @@ def _worst(name: str, request: Request, pulse: IdealPulse, base: float) -> Curve
             pulse,
             frame,
             base,
-            lambda x: Distortion(image=turned(x), image_offset=offset),
+            lambda x: Distortion(image=_turned(x), image_offset=offset),
             1e-3,
             1.0,
         )
@@ -129,7 +129,7 @@ def _worst(name: str, request: Request, pulse: IdealPulse, base: float) -> Curve
             pulse,
             frame,
             base,
-            lambda x: Distortion(leakage=turned(x), leakage_before=before, leakage_after=after),
+            lambda x: Distortion(leakage=_turned(x), leakage_before=before, leakage_after=after),
             1e-4,
             1.0,
         )

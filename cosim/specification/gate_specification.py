@@ -26,7 +26,7 @@ from cosim.specification.allocation import (
     share_for_power,
 )
 from cosim.specification.building import AnyCurve, curve_names, fastest_offset, make_curves
-from cosim.specification.curves import Curve, no_limit
+from cosim.specification.curves import no_limit
 from cosim.specification.masks import make_masks
 from cosim.specification.notes import describe
 from cosim.specification.pulse import (
@@ -389,30 +389,3 @@ def _warnings(
         if block.share == 0.0:
             found.append(f"{block.label}: costs this gate nothing at its limit")
     return tuple(found)
-
-
-def used_curve(bench: Bench, name: str) -> Curve:
-    """Give the exact curve of one block of a testbench.
-
-    Parameters
-    ----------
-    bench : DesignBench or Testbench
-        As in `specify_gate`.
-    name : str
-        Of a block whose errors are not in steps.
-
-    Returns
-    -------
-    Curve
-
-    Raises
-    ------
-    TestbenchError
-        If the testbench has no such block.
-    """
-    task = _task_of(bench)
-    curves = make_curves(task.request, task.pulse, task.rabi_per_volt, task.request.table.samples)
-    found = curves.get(name)
-    if not isinstance(found, Curve):
-        raise TestbenchError(f"[specify]: there is no curve of '{name}'")
-    return found

@@ -19,7 +19,12 @@ from cosim.specification.blocks import (
 )
 from cosim.specification.building import AnyCurve
 from cosim.specification.pulse import IdealPulse, base_infidelity
-from cosim.specification.small_errors import imbalance, integrated_phase, quantisation_snr
+from cosim.specification.small_errors import (
+    imbalance,
+    integrated_phase,
+    jitter_snr,
+    quantisation_snr,
+)
 from cosim.specification.spurs import spur_offsets, worst_offset
 from cosim.units import format_quantity
 
@@ -63,6 +68,8 @@ def describe(
         return f"{math.degrees(error):.3g}°"
     if name == "amplitude":
         return f"{20.0 * math.log10(1.0 + error):.3g} dB"
+    if name == "jitter":
+        return f"a sine of the qubit's frequency has {jitter_snr(frequency, error):.3g} dB with it"
     if name == "carrier":
         return f"{1e6 * error / frequency:.3g} ppm"
     if name == "leakage":

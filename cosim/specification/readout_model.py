@@ -1,7 +1,7 @@
 """A readout chain in closed form: resonator, loss, noise, a pole, converters, decisions.
 
-The field of the resonator is exact, and so is a single pole behind it for a signal of straight
-lines between samples. Time is counted from the start of the pulse.
+The field of the resonator is exact, and so is a pole behind it for straight lines between samples.
+Time is counted from the start of the pulse.
 """
 
 import math
@@ -32,10 +32,8 @@ from cosim.quantum.resonator_field import evolve_field, fields_with_jump
 from cosim.readout_schema import ReadoutTable, ResonatorTable
 from cosim.waveform import ComplexArray, FloatArray
 
-# Samples of a record in the time of the fastest of what happens.
-FINE = 40
-# Records have this many samples at least, and at most, in the pulse.
-LEAST_SAMPLES, MOST_SAMPLES = 256, 8192
+# Samples of a record in the time of the fastest of what happens, and in the whole of it.
+FINE, LEAST_SAMPLES, MOST_SAMPLES = 40, 256, 8192
 # A pole is followed up to this part of the rate of the records.
 FASTEST_POLE = 0.1
 # Steps of the density of noise behind a pole, in parts of the pole near the carrier and of the
@@ -112,7 +110,7 @@ def make_task(pulse: ResonatorTable, table: ReadoutTable, rate: float | None) ->
     table : ReadoutTable
         How it is judged.
     rate : float or None
-        Of the converters in Hz, into whose interval a whole number of samples goes.
+        Of the converters in Hz, whose interval is a whole number of samples.
 
     Returns
     -------
@@ -133,13 +131,14 @@ def make_task(pulse: ResonatorTable, table: ReadoutTable, rate: float | None) ->
     step = _step(pulse, resonator, latest, rate)
     count = math.floor(latest / step + 1e-9) + 1
     drive = _drive(pulse, resonator, step, count)
-    times = _jump_times(latest, table.decay_times if math.isfinite(table.t1) else 0)
+    jumping = table.decay_times if math.isfinite(table.t1) else 0
+    times = np.asarray(latest * (np.arange(jumping) + 0.5) / max(jumping, 1))
     rises = times if table.thermal_population > 0.0 else times[:0]
     line = _line(table, 0.0)
 
     def emf(outside: ComplexArray) -> ComplexArray:
-        # A sample of a record is the mean over its interval.
         volts = 0.5 * emf_envelope(outside, drive.frequency, line)
+        # A sample of a record is the mean over its interval.
         return np.asarray(0.5 * (volts[..., :-1] + volts[..., 1:]))
 
     def jumps(at: FloatArray, before: int, after: int) -> ComplexArray:
@@ -389,10 +388,6 @@ def _step(pulse: ResonatorTable, resonator: Resonator, latest: float, rate: floa
             hint="shorten the window, or lower the rate of the converters",
         )
     return step
-
-
-def _jump_times(latest: float, count: int) -> FloatArray:
-    return np.asarray(latest * (np.arange(count) + 0.5) / max(count, 1))
 
 
 def _pole_weights(bandwidth: float, step: float) -> tuple[float, float]:

@@ -87,29 +87,6 @@ def detuning_error(angle: float, duration: float, detuning: float, frame: str) -
     return abs(delta) * math.hypot(z, y)
 
 
-def image_rejection(gain: float, phase: float) -> float:
-    """Give the image rejection of a modulator whose I and Q differ.
-
-    Parameters
-    ----------
-    gain : float
-        Ratio of the amplitudes of I and Q.
-    phase : float
-        Deviation from quadrature in rad.
-
-    Returns
-    -------
-    float
-        Power of the signal over that of the image: (1 + g^2 + 2 g cos p)/(1 + g^2 - 2 g cos p).
-
-    Notes
-    -----
-    B. Razavi, RF Microelectronics, section on image-reject receivers.
-    """
-    cosine = 2.0 * gain * math.cos(phase)
-    return (1.0 + gain**2 + cosine) / (1.0 + gain**2 - cosine)
-
-
 def imbalance(image: float) -> tuple[float, float]:
     """Give the imbalance that alone makes an image.
 
@@ -124,29 +101,32 @@ def imbalance(image: float) -> tuple[float, float]:
         Ratio of the amplitudes of I and Q, with a phase that is right.
     phase : float
         Deviation from quadrature in rad, with a gain that is right.
+
+    Notes
+    -----
+    The power of the image over that of the signal is (1 + g^2 - 2 g cos p)/(1 + g^2 + 2 g cos p):
+    B. Razavi, RF Microelectronics, section on image-reject receivers.
     """
     return (1.0 + image) / (1.0 - image), 2.0 * math.atan(image)
 
 
-def quantisation_snr(bits: float, oversampling: float = 1.0) -> float:
+def quantisation_snr(bits: float) -> float:
     """Give the signal-to-noise ratio of a full-scale sine that is rounded.
 
     Parameters
     ----------
     bits : float
-    oversampling : float
-        Half the sampling rate over the band in which the noise counts.
 
     Returns
     -------
     float
-        20 log10(2^bits sqrt(3/2)) + 10 log10(oversampling) in dB: 6.02 bits + 1.76.
+        20 log10(2^bits sqrt(3/2)) in dB up to half the sampling rate: 6.02 bits + 1.76.
 
     Notes
     -----
     W. R. Bennett, "Spectra of quantized signals", Bell Syst. Tech. J. 27, 446 (1948).
     """
-    return 20.0 * math.log10(2.0**bits * math.sqrt(1.5)) + 10.0 * math.log10(oversampling)
+    return 20.0 * math.log10(2.0**bits * math.sqrt(1.5))
 
 
 def jitter_snr(frequency: float, jitter: float) -> float:

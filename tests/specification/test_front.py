@@ -122,3 +122,14 @@ def test_an_infeasible_target_exits_with_2_and_says_why(
     file.write_text(GATE.replace("1 ms", "10 us").replace("1e-3", "1e-4"), encoding="utf-8")
     assert run(monkeypatch, "specify", file) == 2
     assert "decoherence" in capsys.readouterr().err
+
+
+def test_a_testbench_with_a_circuit_is_specified_without_running_it() -> None:
+    path = Path(__file__).parents[2] / "examples" / "x180_transmon.toml"
+    with path.open("rb") as stream:
+        tables = tomllib.load(stream)
+    pulse = {"shape": "raised cosine", "duration": "50 ns", "drag": 0.5}
+    tables["specify"] = {"target": 2e-3, "pulse": pulse, "amplitude": {}}
+    tables["netlist"]["file"] = "there_is_no_such_deck.cir"
+    found = specify_gate(cosim.make_testbench(tables))
+    assert found.block("amplitude").share == pytest.approx(found.budget, rel=1e-3)
