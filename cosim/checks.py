@@ -10,6 +10,7 @@ from cosim.circuit.confidential import kept_lines
 from cosim.circuit.netlist import resolve_saves
 from cosim.circuit.preparation import prepare
 from cosim.circuit.simulator import simulate_prepared, simulator_version
+from cosim.decks import read_deck
 from cosim.gate import gate_target
 from cosim.imported import import_waveform
 from cosim.noisy_circuit import noise_settings
@@ -20,10 +21,11 @@ from cosim.readout_input import GROUND
 from cosim.readout_output import make_readout_plan, record_grid
 from cosim.readout_probe import estimate_readout, transients_of
 from cosim.readout_pulse import pulse_source, silent_pulse
+from cosim.study_checks import check_studies
 from cosim.sweep.estimate import estimate_sweep
 from cosim.sweep.plan import SweepPlan
 from cosim.sweep.planning import make_sweep
-from cosim.testbench import ReadoutBench, Testbench, gate_bench, load_testbench
+from cosim.testbench import Bench, ReadoutBench, Testbench, gate_bench, load_testbench
 from cosim.units import format_quantity
 from cosim.voltage_noises import NetlistNoise
 
@@ -88,6 +90,7 @@ def check_testbench(
         Finding("testbench", f"{path}: {bench.title}", "testbench", str(path)),
         Finding("target", target.name, "target", target.name),
     ]
+    found += _study_findings(bench)
     plan = make_sweep(bench) if bench.studies.get("sweep") else None
     if plan is not None:
         bench = gate_bench(plan.testbench(plan.run(0)))
@@ -106,6 +109,7 @@ def check_testbench(
 def _check_readout(
     bench: ReadoutBench, path: str | os.PathLike[str], probe: bool
 ) -> tuple[tuple[Finding, ...], tuple[str, ...]]:
+    studies = _study_findings(bench)
     sweep = make_sweep(bench) if bench.studies.get("sweep") else None
     if sweep is not None:
         first = sweep.testbench(sweep.run(0))
@@ -161,7 +165,10 @@ def _check_readout(
     if source is not None:
         found += _pulse_findings(source, bench.accuracy.floor)
     notices = (*prepared.notices, *plan.notices, *inquiry.notices)
-    found += [Finding("notice", text, f"notice_{k}", text) for k, text in _count(notices)]
+    found += [
+        *studies,
+        *(Finding("notice", text, f"notice_{k}", text) for k, text in _count(notices)),
+    ]
     if sweep is not None:
         found += _sweep_findings(sweep)
     elif probe:
@@ -170,6 +177,14 @@ def _check_readout(
     found.append(Finding("result", "ready to run", "ready", True))
     lines = kept_lines(prepared.lines, prepared.origins, plan.deck.files, plan.confidential)
     return tuple(found), lines
+
+
+def _study_findings(bench: Bench) -> list[Finding]:
+    names = check_studies(bench, None if bench.netlist is None else read_deck(bench))
+    if not names:
+        return []
+    text = f"{', '.join(names)}: keys and values in order"
+    return [Finding("studies", text, "studies", list(names))]
 
 
 def _pulse_findings(source: Testbench, floor: bool) -> list[Finding]:
@@ -188,7 +203,8 @@ def _pulse_findings(source: Testbench, floor: bool) -> list[Finding]:
 
 def _sweep_findings(plan: SweepPlan) -> list[Finding]:
     estimate = estimate_sweep(plan)
-    parts = [f"{len(plan.corners)} corners"] if plan.table.corners else []
+    parts = ["a frozen trim and each die's own"] if plan.table.trim == "both" else []
+    parts += [f"{len(plan.corners)} corners"] if plan.table.corners else []
     parts += [f"{len(axis.values)} values of {axis.key.path}" for axis in plan.axes]
     parts += [f"{plan.samples} samples"] if plan.table.monte_carlo is not None else []
     if plan.perturbations:
@@ -201,6 +217,10 @@ def _sweep_findings(plan: SweepPlan) -> list[Finding]:
         Finding("sweep", text, "runs", estimate.runs),
         Finding("waveforms", shared, "waveforms", estimate.waveforms),
     ]
+    if plan.trimming is not None:
+        most = plan.trimming.most_runs
+        many = f"{estimate.trims} calibrations, {most} runs of the circuit each at most"
+        found.append(Finding("trims", f"{many}, counted in the time", "trims", estimate.trims))
     return found + _estimates(estimate.time, estimate.memory, estimate.disk, " on one worker")
 
 

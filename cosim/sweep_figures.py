@@ -16,7 +16,7 @@ from matplotlib.figure import Figure
 from matplotlib.ticker import FuncFormatter, LogLocator, MaxNLocator, NullFormatter
 
 from cosim.errors import InputError
-from cosim.sweep.columns import CORNER, Table, encode
+from cosim.sweep.columns import CORNER, EACH, FROZEN, TRIM, Table, encode
 from cosim.sweep.goal import judged
 from cosim.sweep.statistics import SweepSummary
 from cosim.sweep_terminal import describe_inputs, format_input, short_names
@@ -108,7 +108,7 @@ def plot_sweep(
     FigureCanvasAgg(figure)
     for at, draw in enumerate(panels, start=1):
         draw(figure.add_subplot(rows, columns, at))
-    figure.suptitle(_title(summary))
+    figure.suptitle("each die trimmed, " * _both(table) + _title(summary))
     figure.text(0.995, 0.003, CAUTION, ha="right", va="bottom", fontsize=6, color="0.45")
     figure.get_layout_engine().set(  # type: ignore[union-attr]
         rect=(0, 0.025, 1, 0.975),
@@ -137,8 +137,13 @@ def _title(summary: SweepSummary) -> str:
 
 
 def _series(table: Table, summary: SweepSummary, metric: FloatArray) -> list[_Series]:
-    """Part the judged runs by corner, as far as there are colors."""
+    """Part the judged runs by trim, or else by corner as far as there are colors."""
     good = np.isfinite(metric)
+    if _both(table):
+        return [
+            _Series(f"trim: {name}", np.flatnonzero(good & (table[TRIM] == name)), at)
+            for at, name in enumerate((FROZEN, EACH))
+        ]
     if not 1 < len(summary.corners) <= len(COLORS):
         return [_Series("", np.flatnonzero(good), 0)]
     names, codes = encode(table[CORNER])
@@ -146,6 +151,11 @@ def _series(table: Table, summary: SweepSummary, metric: FloatArray) -> list[_Se
         _Series(name, np.flatnonzero(good & (codes == at)), at) for at, name in enumerate(names)
     ]
     return [part for part in parts if part.runs.size]
+
+
+def _both(table: Table) -> bool:
+    """Whether there are runs with a frozen trim and with one for each die."""
+    return TRIM in table and all((table[TRIM] == name).any() for name in (FROZEN, EACH))
 
 
 def _is_log(values: FloatArray, limit: float) -> bool:

@@ -18,15 +18,18 @@ from cosim.result import as_columns, as_plain
 from cosim.result_figures import plot_result
 from cosim.result_show import numbers_of, table_of
 from cosim.sweep.batches import DONE
+from cosim.sweep.columns import TRIM
 from cosim.sweep.csv_export import write_csv
-from cosim.sweep.goal import make_goal
+from cosim.sweep.goal import Goal, make_goal
 from cosim.sweep.keeping import metric_of
-from cosim.sweep.record import SWEEP_KINDS, FailedRun
+from cosim.sweep.record import SWEEP_KINDS, FailedRun, SweepRecord
 from cosim.sweep.repetition import read_record
 from cosim.sweep.statistics import SweepSummary, summarise
+from cosim.sweep.trim_comparison import TrimPart, compare_trims
 from cosim.sweep_figures import plot_sweep
 from cosim.sweep_terminal import describe_inputs, summary_table
 from cosim.terminal import failure_table, record_table, row_table
+from cosim.trim_terminal import trim_parts
 
 MOST_MESSAGES = 5  # of failed runs that are printed
 
@@ -64,27 +67,44 @@ def show_sweep(
     if columns and DONE not in columns["status"]:
         # Where no run has a result, the table has no column of it either.
         judged.setdefault(metric or own, np.full(len(columns["id"]), math.nan))
-    summary = summarise(
-        judged,
-        record.inputs,
-        make_goal(metric or own, bound),
-        planned=record.runs,
-        units=units,
-    )
+    goal = make_goal(metric or own, bound)
+    trims = _trims_of(record, judged, goal, units)
+    if trims:
+        # Dies that are trimmed and dies that are not are not counted together.
+        summary = trims[-1].summary
+    else:
+        summary = summarise(judged, record.inputs, goal, planned=record.runs, units=units)
     if json_output:
         numbers = summary_numbers(summary)
+        if trims:
+            numbers["trims"] = as_plain(trims)
         if table:
             numbers["table"] = as_columns(columns)
         typer.echo(json.dumps(numbers, indent=2))
     else:
         console = Console(highlight=False)
         console.print(f"[bold]{record.title or path}[/bold]")
-        console.print(summary_table(summary))
+        console.print(summary_table(summary, trim_parts(trims, units) if trims else ()))
         for line in failures(columns):
             console.print(line, markup=False, style="red")
     if plot is not None:
         plot_sweep(judged, units, summary, plot)
         typer.echo(f"figure in {plot}", err=True)
+
+
+def _trims_of(
+    record: SweepRecord,
+    table: Mapping[str, npt.NDArray[Any]],
+    goal: Goal,
+    units: Mapping[str, str],
+) -> tuple[TrimPart, ...]:
+    """Give the runs by their trims; empty where the sweep trims nothing."""
+    if TRIM not in record.inputs:
+        return ()
+    content = json.loads(record.content)["trim"]
+    modes = content["runs"]
+    planned = dict.fromkeys(modes, record.runs // len(modes))
+    return compare_trims(table, record.inputs, goal, content["knobs"], planned, units=units)
 
 
 def summary_numbers(summary: SweepSummary) -> dict[str, Any]:

@@ -18,13 +18,15 @@ _QUANTILES = {"0": "best", "50": "median", "100": "worst"}
 _RESOLVED = {True: "yes", False: "no", None: "-"}
 
 
-def summary_table(summary: SweepSummary) -> Group:
+def summary_table(summary: SweepSummary, above: Sequence[RenderableType] = ()) -> Group:
     """Lay out what a sweep tells.
 
     Parameters
     ----------
     summary : SweepSummary
         From `cosim.sweep.statistics.summarise`.
+    above : sequence
+        What stands below the heading, before all else.
 
     Returns
     -------
@@ -34,6 +36,7 @@ def summary_table(summary: SweepSummary) -> Group:
     """
     parts: list[RenderableType] = [
         Text(_with_unit(summary.metric, summary.unit), style="bold"),
+        *above,
         Text(_counts(summary)),
     ]
     if summary.finished:
@@ -136,18 +139,31 @@ def format_yield(found: Yield) -> str:
     str
         One line.
     """
-    text = f"{found.passed} of {found.total}, {_percent(found.fraction)}"
+    text = f"{found.passed} of {found.total}, {format_percent(found.fraction)}"
     if not found.random:
         return text + " of the runs, not a probability"
     exact, score = (
-        " to ".join(_percent(end) for end in ends) for ends in (found.clopper_pearson, found.wilson)
+        " to ".join(format_percent(end) for end in ends)
+        for ends in (found.clopper_pearson, found.wilson)
     )
     return (
         f"{text}; {100 * found.level:g} % confidence: {exact} (Clopper-Pearson), {score} (Wilson)"
     )
 
 
-def _percent(value: float) -> str:
+def format_percent(value: float) -> str:
+    """Write a fraction in percent.
+
+    Parameters
+    ----------
+    value : float
+        From 0 to 1.
+
+    Returns
+    -------
+    str
+        With as many digits as its distance from 0 or 1 asks for.
+    """
     # 99.97 % must not be rounded to 100 %: every failure counts.
     rest = 100 * min(value, 1.0 - value)
     digits = 1 - math.floor(math.log10(rest)) if 0.0 < rest < 1.0 else 1
@@ -204,10 +220,10 @@ def _corner_table(summary: SweepSummary) -> Table:
         ]
         if limited:
             found = row.limit_yield
-            cells.append("-" if found is None else _percent(found.fraction))
+            cells.append("-" if found is None else format_percent(found.fraction))
             interval = found is not None and found.random
             ends = found.clopper_pearson if found is not None else ()
-            cells.append(" to ".join(_percent(end) for end in ends) if interval else "-")
+            cells.append(" to ".join(format_percent(end) for end in ends) if interval else "-")
         table.add_row(*cells)
     return table
 

@@ -30,9 +30,12 @@ class SweepEstimate:
     waveforms : int
         How many simulations of the circuit: runs that differ in the qubit or the gate share one,
         readouts that differ in what is done with the records all that they simulate.
+    trims : int
+        How many calibrations: one for each die, and one if there is a frozen one.
     time : float
         Time of ngspice in s on one worker, both runs of each where there are two, of a readout
-        all of its runs; NaN for imported waveforms.
+        all of its runs, and the most runs that the calibrations may take; NaN for imported
+        waveforms.
     memory : float
         Memory for the vectors of one worker in byte, on top of the program's own.
     disk : float
@@ -41,6 +44,7 @@ class SweepEstimate:
 
     runs: int
     waveforms: int
+    trims: int
     time: float
     memory: float
     disk: float
@@ -66,17 +70,24 @@ def estimate_sweep(plan: SweepPlan) -> SweepEstimate:
     """
     runs = len(plan)
     waveforms = len({run.waveform_key for run in plan})
+    trims = len({run.trim_key for run in plan if run.trim})
     bench = plan.testbench(plan.run(0))
     rows = _ROW * runs
     if bench.netlist is None:
-        return SweepEstimate(runs, waveforms, float("nan"), 0.0, rows)
+        return SweepEstimate(runs, waveforms, trims, float("nan"), 0.0, rows)
     single, envelope = _of_run(bench, plan.corners[0].deck)
+    time = single.time * waveforms
+    if plan.trimming is not None:
+        ready = plan.trim_bench(plan.run(0))
+        trial, _ = _of_run(ready, plan.trim_corner(plan.run(0)).deck)
+        time += trial.time * trims * plan.trimming.most_runs
     keep = plan.table.report.keep
     whole = runs if keep == "all" else min(runs, keep)
     return SweepEstimate(
         runs,
         waveforms,
-        single.time * waveforms,
+        trims,
+        time,
         single.memory,
         rows + envelope * runs + single.disk * whole,
     )

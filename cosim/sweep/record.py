@@ -209,6 +209,7 @@ def _content(plan: SweepPlan) -> str:
             "runs": list(plan.trimming.modes),
             "at": {key.path: value for key, value in plan.trimming.at},
             "calibrate": dict(plan.trimming.study),
+            "knobs": [key.path for key in plan.trimming.knobs],
             # What the frozen trim is made of may be no corner of the sweep.
             "testbench": _corner_content(plan.trimming.nominal),
         }

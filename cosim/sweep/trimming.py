@@ -11,7 +11,7 @@ from cosim.sweep.axes import Axis, Corner, read_corners
 from cosim.sweep.columns import EACH, FROZEN
 from cosim.sweep.samples import Variation
 from cosim.sweep.table import SweepTable
-from cosim.testbench import Bench
+from cosim.testbench import Bench, ReadoutBench
 
 _MODES = {"frozen": (FROZEN,), "each": (EACH,), "both": (FROZEN, EACH)}
 
@@ -32,6 +32,8 @@ class Trimming:
         Conditions of the trims where they are not those of the testbench or the corner.
     nominal : Corner
         The testbench itself, which the frozen trim is made of.
+    most_runs : int
+        Runs of the circuit that one trim takes at most; of a readout each is many transients.
     """
 
     modes: tuple[str, ...]
@@ -39,9 +41,20 @@ class Trimming:
     knobs: tuple[NumberKey, ...]
     at: tuple[tuple[NumberKey, float], ...]
     nominal: Corner
+    most_runs: int
 
     def ready(self, bench: Bench) -> Bench:
-        """Make a testbench one to be calibrated, without a last run at half the step."""
+        """Make a testbench one to be calibrated, without a last run at half the step.
+
+        Parameters
+        ----------
+        bench : Bench
+            The testbench.
+
+        Returns
+        -------
+        Bench
+        """
         return replace(
             bench,
             studies={NAME: self.study},
@@ -93,13 +106,16 @@ def read_trimming(
     for text, raw in table.trim_at:
         key = number_key(own.bench, own.deck, text, where)
         at.append((key, key.read(raw, f"{where}, key '{text}'")))
-    found = Trimming(modes, bench.studies[NAME], (), tuple(at), own)
+    found = Trimming(modes, bench.studies[NAME], (), tuple(at), own, 0)
     for corner in (own, *corners):
         settled = corner.bench
         for key, value in at:
             settled = with_number(settled, key, value)
-        _, knobs = read_calibrate(found.ready(settled), corner.deck)
-    found = replace(found, knobs=tuple(knob.key for knob in knobs))
+        study, knobs = read_calibrate(found.ready(settled), corner.deck)
+    # Of a gate the circuit runs once where no knob is its own.
+    again = isinstance(bench, ReadoutBench) or any(knob.simulated for knob in knobs)
+    most = 0 if bench.netlist is None else study.max_runs if again else 1
+    found = replace(found, knobs=tuple(knob.key for knob in knobs), most_runs=most)
     _check_knobs(found, corners, axes, variations, file)
     _check_conditions(found, corners, axes, variations, where)
     return found

@@ -92,6 +92,7 @@ FLOORS = {
     "terminal": 7,
     "sweep_figures": 7,
     "sweep_terminal": 7,
+    "trim_terminal": 7,
     "figures": 7,
     "cli": 7,
     "command_options": 7,
