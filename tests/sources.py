@@ -12,6 +12,10 @@ ABAD = (
 )
 ABRAGAM = f"A. Abragam, The Principles of Nuclear Magnetism (1961), chapter II, {MEMORY}"
 ALGEBRA = "SU(2) algebra with F_avg = (2 F_pro + 1)/3, computed from the formula"
+ALLAN = (
+    'D. W. Allan, "Statistics of atomic frequency standards", Proc. IEEE 54, 221 (1966); IEEE Std '
+    f"1139, Allan variances of power laws, {MEMORY}"
+)
 ALLEN_EBERLY = (
     "L. Allen, J. H. Eberly, Optical Resonance and Two-Level Atoms (1975), area of a pulse, "
     f"{MEMORY}"
