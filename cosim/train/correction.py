@@ -1,6 +1,7 @@
 """The filter before the converter: measured on one pulse, designed, held to the full scale."""
 
 import math
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
@@ -8,7 +9,6 @@ import numpy as np
 from cosim.dsp.predistortion import (
     WORST_CONDITION,
     Design,
-    Fit,
     band_limited,
     factorise,
     filter_samples,
@@ -25,6 +25,7 @@ from cosim.waveform import ComplexArray, Envelope, FloatArray, Waveform
 STRIDE = 8
 # Regularisation beyond which nothing is left but plain delay.
 _MOST_REGULARISATION = 1e3
+_LEAST_REGULARISATION = 1e-12
 _BISECTIONS = 40
 # Delay is dear, and more of it is not worth a residual smaller by less than this.
 _NEAR_LEAST = 1.1
@@ -96,18 +97,12 @@ def measure_response(train: Train, envelope: Envelope) -> Response:
     Raises
     ------
     TestbenchError
-        If the netlist does not respond, or the taps last longer than the record.
+        If the netlist does not respond.
     """
     filtering = train.filtering
     assert filtering is not None
     rate = filtering.rate * STRIDE
     times = np.arange(math.floor(train.stop * rate)) / rate
-    if filtering.taps * STRIDE > times.size:
-        raise TestbenchError(
-            f"{train.bench.source or 'the testbench'}, table [{NAME}.{PREDISTORTION}], key "
-            f"'taps': {filtering.taps} of them last {filtering.taps / filtering.rate:.4g} s, "
-            f"longer than the record of {train.stop:.4g} s"
-        )
     played = filtering.level * train.factors[train.first]
     unit: ComplexArray = np.asarray(sampled(envelope, times) / played, dtype=np.complex128)
     if not np.any(np.abs(unit) > 0.0):
@@ -160,23 +155,39 @@ def design_filter(train: Train, response: Response) -> tuple[Filter, tuple[str, 
     Raises
     ------
     TestbenchError
-        If the fit is ill-conditioned and not regularised, or the train without a filter exceeds
-        the full scale by itself.
+        If the fit is ill-conditioned and not regularised.
     """
     filtering = train.filtering
     assert filtering is not None
-    where = f"{train.bench.source or 'the testbench'}, table [{NAME}.{PREDISTORTION}]"
     fit = factorise(response.unit, filtering.taps, STRIDE)
-    asked = filtering.regularisation
+    asked, limit = filtering.regularisation, filtering.full_scale.value
+    samples = tuple(train.samples(train.pulses()).values())
 
     def designed(late: int, regularisation: float) -> Design:
         prior = unit_tap(filtering.taps, (late - response.late) / STRIDE)
         return fit.solve(response.ideal(late), prior, regularisation)
 
-    try:
-        late = _best_delay(train, response, fit, asked)
+    def held(late: int) -> tuple[Design, float]:
+        """The least regularisation, from what is asked for, at which the peak fits."""
         design = designed(late, asked)
+        if _largest(samples, design.taps) <= limit:
+            return design, asked
+        low, high = math.log(max(asked, _LEAST_REGULARISATION)), math.log(_MOST_REGULARISATION)
+        for _ in range(_BISECTIONS):
+            middle = 0.5 * (low + high)
+            fits = _largest(samples, designed(late, math.exp(middle)).taps) <= limit
+            low, high = (low, middle) if fits else (middle, high)
+        return designed(late, math.exp(high)), math.exp(high)
+
+    try:
+        late = _best_delay(train, response, lambda late: designed(late, asked).residual)
+        design, regularisation = held(late)
+        if regularisation > asked:
+            # With the peak held, another delay may be the better one.
+            late = _best_delay(train, response, lambda late: held(late)[0].residual, STRIDE)
+            design, regularisation = held(late)
     except WaveformError as error:
+        where = f"{train.bench.source or 'the testbench'}, table [{NAME}.{PREDISTORTION}]"
         raise TestbenchError(f"{where}: {error.message}", hint=error.hint) from None
     notices: list[str] = []
     if fit.condition > WORST_CONDITION:
@@ -185,23 +196,7 @@ def design_filter(train: Train, response: Response) -> tuple[Filter, tuple[str, 
             f"{fit.condition:.1e}: the pulse does not excite {filtering.taps - design.rank} of "
             "their combinations, which the regularisation holds to plain delay"
         )
-    limit = filtering.full_scale.value
-    regularisation = asked
-    if largest_value(train, design.taps) > limit:
-        alone = largest_value(train, unit_tap(1, 0.0))
-        if alone > limit:
-            raise TestbenchError(
-                f"{where}, key 'full_scale': the train itself reaches {alone:.4g} "
-                f"{filtering.full_scale.unit}, more than {limit:.4g}",
-                hint="lower the pulse of [[stimulus]], or raise 'full_scale'",
-            )
-        low, high = math.log(max(asked, 1e-12)), math.log(_MOST_REGULARISATION)
-        for _ in range(_BISECTIONS):
-            middle = 0.5 * (low + high)
-            held = largest_value(train, designed(late, math.exp(middle)).taps) <= limit
-            low, high = (low, middle) if held else (middle, high)
-        regularisation = math.exp(high)
-        design = designed(late, regularisation)
+    if regularisation > asked:
         notices.append(
             f"the filter asked for would exceed the full scale of {limit:.4g} "
             f"{filtering.full_scale.unit}: its regularisation went from {asked:.1e} to "
@@ -210,21 +205,22 @@ def design_filter(train: Train, response: Response) -> tuple[Filter, tuple[str, 
     return Filter(design, late, regularisation), tuple(notices)
 
 
-def _best_delay(train: Train, response: Response, fit: Fit, regularisation: float) -> int:
+def _best_delay(
+    train: Train, response: Response, residual: Callable[[int], float], step: int = STRIDE // 4
+) -> int:
     """Give the shortest delay, in grid points, of nearly the least residual."""
     filtering = train.filtering
     assert filtering is not None
     if filtering.delay is not None:
         return round(filtering.delay * filtering.rate * STRIDE)
     last = min(response.late + filtering.taps * STRIDE, response.times.size // 2)
-
-    def residual(late: int) -> float:
-        prior = unit_tap(filtering.taps, (late - response.late) / STRIDE)
-        return fit.solve(response.ideal(late), prior, regularisation).residual
-
-    tried = {late: residual(late) for late in range(0, last + 1, STRIDE // 4)}
+    tried = {late: residual(late) for late in range(0, last + 1, step)}
     enough = _NEAR_LEAST * min(tried.values())
     return next(late for late, value in tried.items() if value <= enough)
+
+
+def _largest(samples: tuple[FloatArray, ...], taps: FloatArray) -> float:
+    return max(float(np.abs(filter_samples(item, taps)).max()) for item in samples)
 
 
 def largest_value(train: Train, taps: FloatArray) -> float:
@@ -242,8 +238,7 @@ def largest_value(train: Train, taps: FloatArray) -> float:
     float
         Of either sign, in the unit of the full scale.
     """
-    samples = train.samples(train.pulses()).values()
-    return max(float(np.abs(filter_samples(item, taps)).max()) for item in samples)
+    return _largest(tuple(train.samples(train.pulses()).values()), taps)
 
 
 def largest_departure(train: Train, taps: FloatArray) -> float:

@@ -326,7 +326,8 @@ def play(
     if bench.drive.probe is not None or bench.drive.line is not None:
         return shot, demodulate(shot.waveform, train.carrier)
     count = math.floor(train.stop / shot.step * (1.0 + 1e-9)) + 1
-    t = np.minimum(np.arange(count) * shot.step, train.stop)
+    ends = shot.extra["i"].t
+    t = np.clip(np.arange(count) * shot.step, ends[0], ends[-1])
     parts = [
         np.asarray(interpolant(shot.extra[name])(t)) for name in ("i", "q") if name in shot.extra
     ]

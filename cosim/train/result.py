@@ -103,7 +103,7 @@ class TrainResponse:
     leakage : ndarray, shape (slots,)
         L1.
     turn : ndarray, shape (slots, 3)
-        Coherent error of each slot about x, y, z in rad, as a small turn before the ideal gate.
+        Coherent error of each slot as a turn about x, y, z in rad before the ideal gate.
     amplitude_scale : float
         That of the first pulse, for all.
     detuning : float

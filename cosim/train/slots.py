@@ -13,7 +13,7 @@ from cosim.dsp.resampling import interpolant
 from cosim.errors import TestbenchError
 from cosim.gate import Target, gate_target
 from cosim.quantum.channel import nearest_unitary
-from cosim.quantum.error_vector import error_vector
+from cosim.quantum.error_vector import EXACT, error_vector
 from cosim.quantum.evolution import DriveSpline
 from cosim.quantum.fidelity import average_gate_fidelity, leakage, rotation_of, target_unitary
 from cosim.quantum.frame import free_frame, phase_frame
@@ -21,7 +21,7 @@ from cosim.qubit_drive import couple, make_qubit
 from cosim.train.playing import Train
 from cosim.waveform import ComplexArray, FloatArray
 
-# From an error vector's first three parts to a small turn in rad.
+# From an error vector's first three parts to twice the sine of half the angle of a turn.
 _TO_TURN = math.sqrt(6.0)
 
 
@@ -79,8 +79,16 @@ class Evolved:
         return np.array([error_vector(channel, target) for channel, target in pairs])
 
     def turns(self) -> FloatArray:
-        """Coherent error of each slot as a small turn in rad, shape (slots, 3)."""
-        return np.asarray(_TO_TURN * self.vectors()[:, :3])
+        """Coherent error of each slot as a turn before the ideal gate, in rad, shape (slots, 3)."""
+        found = 0.5 * _TO_TURN * self.vectors()[:, :3]
+        size = np.linalg.norm(found, axis=1, keepdims=True)
+        # The vector is the sine of half the angle, and goes on straight where that has no more to
+        # tell; turns by it add up as what causes them does.
+        beyond = EXACT + (size - math.sin(EXACT)) / math.cos(EXACT)
+        half = np.where(size <= math.sin(EXACT), np.arcsin(np.minimum(size, 1.0)), beyond)
+        return np.asarray(
+            2.0 * found * np.divide(half, size, out=np.ones_like(size), where=size > 0.0)
+        )
 
     def infidelities(self, *, raw: bool = False) -> FloatArray:
         """1 - F_avg of each slot, shape (slots,)."""

@@ -211,4 +211,12 @@ def read_train(bench: Testbench) -> tuple[TrainTable, PredistortionTable | None]
             "otherwise",
             hint=f"take rate = {told}, or another spacing",
         )
+    length = len(table.factors()) * table.spacing
+    if filtering.taps / filtering.rate > length:
+        raise TestbenchError(
+            f"{file}, table [{name}], key 'taps': {filtering.taps} of them last "
+            f"{filtering.taps / filtering.rate * 1e9:.9g} ns, longer than the train of "
+            f"{length * 1e9:.9g} ns that they are to shape",
+            hint="take fewer taps, or a longer train",
+        )
     return table, filtering

@@ -30,6 +30,8 @@ from cosim.sweep.local import local_engine
 from cosim.sweep.repetition import read_record
 from cosim.sweep.run import run_sweep
 from cosim.testbench import DesignBench
+from cosim.train.result import TrainResult
+from cosim.train.study import run_train
 
 TABLE = Path(__file__).with_name("expected.toml")
 EXAMPLES = Path(__file__).parents[2] / "examples"
@@ -173,6 +175,29 @@ def calibration_figures(result: CalibrationResult) -> dict[str, float]:
     }
 
 
+def train_example(name: str) -> TrainResult:
+    """Play a train."""
+    return run_train(cosim.load_testbench(EXAMPLES / f"{name}.toml"))
+
+
+def train_figures(result: TrainResult) -> dict[str, float]:
+    """Give the numbers of a train with a pre-distortion that are committed."""
+    found = result.predistortion
+    assert found is not None
+    idle = result.factors == 0.0
+    return {
+        "before.infidelity": float(result.before.infidelity.max()),
+        "before.sequence": result.before.sequence,
+        "before.residual": result.before.residual,
+        "after.infidelity": float(found.after.infidelity.max()),
+        "after.sequence": found.after.sequence,
+        "after.residual": found.after.residual,
+        "headroom": found.headroom,
+        "turn at rest": float(abs(result.before.turn[idle]).max()),
+        "netlist_runs": float(result.netlist_runs),
+    }
+
+
 def numbers(text: str) -> list[list[float]]:
     """The numbers of each line of a printed table; three or four digits are shown.
 
@@ -229,6 +254,8 @@ def write_expected() -> None:
         table[name] = calibration_figures(calibration_example(name))
     for name in SPECIFICATIONS:
         table[name] = specified(name)
+    for name in TRAINS:
+        table[name] = train_figures(train_example(name))
     for name in SCRIPTS:
         with tempfile.TemporaryDirectory() as folder:
             done = run_script(name, Path(folder))
