@@ -143,6 +143,7 @@ def test_the_table_fits_a_terminal_and_is_ranked(result: BudgetResult) -> None:
     assert "spur 1" in text
 
 
+@pytest.mark.full
 def test_figure(result: BudgetResult, tmp_path: Path) -> None:
     plot_budget(result, tmp_path / "budget.png")
     assert (tmp_path / "budget.png").stat().st_size > 20_000

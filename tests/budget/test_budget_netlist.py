@@ -1,6 +1,7 @@
 """Oracle: faults put into transistor decks on purpose, and what each costs by a run of its own."""
 
 import math
+from functools import cache
 from typing import Any
 
 import pytest
@@ -19,17 +20,28 @@ pytestmark = pytest.mark.ngspice
 # volt makes it a quarter turn at code 93.
 RATE = 400.84e6
 
+# What each makes wrong, and how it is put into the deck.
+FAULTS: dict[str, dict[str, dict[str, Any]]] = {
+    "mean amplitude": {"parameters": {"amp": 98}},
+    "phase": {"parameters": {"lo_phase": 34.42 + 6.0}},
+    "carrier leakage": {"mismatch": {"xmix.m1": {"current_factor": 0.7}}},
+}
 
-def modulator(
-    parameters: dict[str, Any] | None = None, mismatch: dict[str, Any] | None = None
-) -> tuple[GateResult, BudgetResult]:
+
+@cache
+def modulator(*faults: str) -> tuple[GateResult, BudgetResult]:
+    """Run the modulator with some of `FAULTS`, each choice once."""
+    changed: dict[str, Any] = {"parameters": {}, "mismatch": {}}
+    for fault in faults:
+        for table, values in FAULTS[fault].items():
+            changed[table] |= values
     tables = {
         "netlist": {
             "file": "netlists/pulse_modulator/pulse_modulator.cir",
             "stop": "45 ns",
             "steps_per_period": 80,
-            "parameters": {"t_stop": "30 ns", **(parameters or {})},
-            "mismatch": mismatch or {},
+            "parameters": {"t_stop": "30 ns", **changed["parameters"]},
+            "mismatch": changed["mismatch"],
         },
         "drive": {
             "probe": "v(rf_p) - v(rf_n)",
@@ -47,11 +59,6 @@ def modulator(
     return run, budget_of(run, bench)
 
 
-CODE = {"amp": 98}
-SKEW = {"lo_phase": 34.42 + 6.0}
-QUAD = {"xmix.m1": {"current_factor": 0.7}}
-
-
 @pytest.fixture(scope="module")
 def sound() -> BudgetResult:
     return modulator()[1]
@@ -63,7 +70,7 @@ def leader(result: BudgetResult) -> str:
 
 @pytest.mark.full
 def test_a_wrong_code(sound: BudgetResult) -> None:
-    run, result = modulator(CODE)
+    run, result = modulator("mean amplitude")
     found = item(result, "mean amplitude")
     assert leader(result) == "mean amplitude"
     assert "amplitude" in result.advice
@@ -77,7 +84,7 @@ def test_a_wrong_code(sound: BudgetResult) -> None:
 
 @pytest.mark.full
 def test_a_skewed_local_oscillator(sound: BudgetResult) -> None:
-    run, result = modulator(SKEW)
+    run, result = modulator("phase")
     found = item(result, "phase")
     assert leader(result) == "phase"
     off = math.degrees(found.value - item(sound, "phase").value)
@@ -91,7 +98,7 @@ def test_a_skewed_local_oscillator(sound: BudgetResult) -> None:
 
 @pytest.mark.full
 def test_a_mismatched_quad(sound: BudgetResult) -> None:
-    run, result = modulator(mismatch=QUAD)
+    run, result = modulator("carrier leakage")
     found = item(result, "carrier leakage")
     assert leader(result) == "carrier leakage"
     # The balance gone, the carrier stands there before the pulse: over 40 dB more than without.
@@ -105,16 +112,11 @@ def test_a_mismatched_quad(sound: BudgetResult) -> None:
 
 @pytest.mark.full
 def test_three_faults_at_once_are_ranked_by_what_each_costs(sound: BudgetResult) -> None:
-    run, result = modulator(CODE | SKEW, QUAD)
+    run, result = modulator(*FAULTS)
     names = [found.name for found in result.items if found.counted]
-    ranked = [name for name in names if name in ("mean amplitude", "phase", "carrier leakage")]
+    ranked = [name for name in names if name in FAULTS]
     # What each fault costs by itself, by runs with that fault alone.
-    single = {
-        "mean amplitude": modulator(CODE)[0],
-        "phase": modulator(SKEW)[0],
-        "carrier leakage": modulator(mismatch=QUAD)[0],
-    }
-    cost = {name: one.as_simulated.infidelity for name, one in single.items()}
+    cost = {name: modulator(name)[0].as_simulated.infidelity for name in FAULTS}
     assert ranked == sorted(cost, key=lambda name: -cost[name])
     assert set(names[:2]) == set(ranked[:2])
     for name in ("mean amplitude", "phase"):
@@ -129,14 +131,14 @@ def upconverter(skew: float) -> tuple[GateResult, BudgetResult]:
     tables = {
         "netlist": {
             "file": "netlists/iq_upconverter/iq_upconverter.cir",
-            "stop": "140 ns",
+            "stop": "90 ns",
             "steps_per_period": 80,
             "parameters": {
-                "amp": "0.1 V",
+                "amp": "0.2 V",
                 "drag": 0.0,
                 "bits": 16,
                 "t_rise": "10 ns",
-                "t_flat": "90 ns",
+                "t_flat": "40 ns",
                 "f_if": "50 MHz",
                 "phase_imbalance": skew,
             },
@@ -170,12 +172,15 @@ def test_a_skewed_quadrature_makes_an_image() -> None:
     assert "gain imbalance 1.000" in found.note
     assert "phase imbalance 10.0" in found.note
     assert not found.absorbed
-    # What it costs in the deck; the skew also changes the tone's amplitude by 0.4 %, which the
-    # calibration absorbs, and with it what counter-rotates, by some hundredths of the difference.
+    # What it costs in the deck. The budget removes it in the rotating wave, so that it lacks what
+    # the image and the counter-rotating part of a drive of 10 MHz at 5 GHz add to one another in
+    # amplitude: that part costs 1.6e-7 by itself, a sixth of the image.
     straight, _ = upconverter(0.0)
     gained = run.calibrated.infidelity - straight.calibrated.infidelity
-    assert found.removed == pytest.approx(gained, rel=0.2)
-    # Alone it costs a tenth of that: it adds in amplitude to what the filters do to the edges.
+    assert found.removed == pytest.approx(gained, rel=0.3)
+    # Alone it costs less: it adds in amplitude to what the filters do to the edges.
     (pair,) = (p for p in result.pairs if {p.first, p.second} == {"residual", "image"})
     assert pair.relation == "add in amplitude"
-    assert found.alone + pair.interaction == pytest.approx(found.removed, rel=0.05)
+    # The rest is what the image has with the edges' lengths and the carrier's offset, which only
+    # the real pulse holds.
+    assert found.alone + pair.interaction == pytest.approx(found.removed, rel=0.2)

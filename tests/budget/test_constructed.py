@@ -337,6 +337,7 @@ def test_a_perfect_pulse_has_no_false_items(
             assert np.abs(costs).max() < level, found.name
 
 
+@pytest.mark.full
 def test_what_a_calibration_absorbs_is_found_by_costing() -> None:
     def absorbers(result: BudgetResult) -> dict[str, str]:
         return {found.name: found.absorbed_by for found in result.items}
