@@ -26,7 +26,7 @@ class Aftermath:
     wait : float
         Time in s from there until `LEFT` photons are left.
     residual_stark_shift : float
-        Of the qubit's frequency by the photons at the end of the run, in Hz.
+        Of the qubit's frequency by these photons in Hz, for a gate that begins then: 2 chi for each.
     dephasing_rate : float
         By which the drive measures in steady state, in 1/s.
     purcell_time : float
@@ -73,11 +73,14 @@ def find_aftermath(
     resonator = pulse.resonator()
     fields = [answers.fields[name] for name in (GROUND, EXCITED)]
     ends = [complex(np.interp(stop, answers.drive.t, one.inside)) for one in fields]
-    photons = max(abs(end) ** 2 for end in ends)
+    left = max(ends, key=abs)
+    photons = abs(left) ** 2
     most = max(float(one.photons.max()) for one in fields)
     level = drive_level(pulse, resonator, answers.drive)
     steady = [steady_field(resonator, state, level, pulse.drive) for state in (0, 1)]
-    shift = float(stark_shift(resonator, ends[0], ends[1]))
+    # The readout has left the one state with its field, in which a gate then begins: to both states
+    # of the qubit belongs the same field, unlike in a superposition that is being read.
+    shift = float(stark_shift(resonator, left, left))
     guards = dispersive_numbers(pulse, most)
     return Aftermath(
         photons,

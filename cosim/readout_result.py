@@ -153,7 +153,7 @@ class ReadoutResult:
         Part of the information in the resonator's field that the chain leaves, 1/(1 + 2 n) of n
         added quanta; NaN as these.
     residual_stark_shift : float
-        Of the qubit's frequency by the photons at the end of the run in Hz; NaN for a sensor.
+        Of the qubit's frequency by `residual_photons` in Hz, 2 chi for each; NaN for a sensor.
     purcell_time : float
         In which the qubit decays through its resonator alone in s; NaN where the testbench gives
         no coupling.
