@@ -26,7 +26,7 @@ class Aftermath:
     wait : float
         Time in s from there until `LEFT` photons are left.
     residual_stark_shift : float
-        Of the qubit's frequency by these photons in Hz, for a gate that begins then: 2 chi for each.
+        Of the qubit's frequency in Hz by these photons, 2 chi for each, in a gate that begins then.
     dephasing_rate : float
         By which the drive measures in steady state, in 1/s.
     purcell_time : float
