@@ -89,8 +89,6 @@ class SourceTable:
     def __post_init__(self) -> None:
         if not any(getattr(self, name) not in (None, ()) for name in _KINDS):
             raise InputError(f"wanted one of {', '.join(_KINDS)}: how does '{self.key}' move?")
-        if self.high is not None and self.high <= self.low:
-            raise InputError(f"'high' must be above 'low', got {self.low:g} and {self.high:g} Hz")
 
 
 @dataclass(frozen=True, slots=True)
@@ -310,6 +308,10 @@ def _kelvin(raw: str) -> float:
 
 def _motion(source: SourceTable, read: Read, high: float, where: str) -> Motion:
     high = high if source.high is None else source.high
+    if high <= source.low:
+        raise TestbenchError(
+            f"{where}: 'high' must be above 'low', got {source.low:g} and {high:g} Hz"
+        )
     found: list[Fluctuation] = []
     if source.random_walk is not None:
         level = _read(lambda raw: read_walk(raw, read), source.random_walk, where, "random_walk")
