@@ -193,6 +193,8 @@ def _fixed_table(result: GateSpecification) -> Table:
     table.add_row("decoherence", f"{result.decoherence:.2e}")
     table.add_row("ideal pulse itself", f"{result.pulse_infidelity:.2e}")
     table.add_row("numerical floor", f"{result.numerical_floor:.1e}")
+    own = "the qubit's own" if result.frame == "qubit" else "that of the oscillator"
+    table.add_row("frame", f"{own}, for the carrier's frequency and phase noise")
     shared = "by weights" if result.allocation == "weights" else "at the least power"
     table.add_row("left for the blocks", f"{result.budget:.2e}, shared {shared}")
     return table

@@ -26,7 +26,7 @@ from cosim.specification.allocation import (
     share_for_power,
 )
 from cosim.specification.building import AnyCurve, curve_names, fastest_offset, make_curves
-from cosim.specification.curves import no_limit
+from cosim.specification.curves import Curve, no_limit
 from cosim.specification.masks import make_masks
 from cosim.specification.notes import describe
 from cosim.specification.pulse import (
@@ -94,6 +94,7 @@ def specify_gate(bench: Bench) -> GateSpecification:
     curves = make_curves(request, pulse, task.rabi_per_volt, samples)
     budget = request.table.target - task.decoherence - task.left - task.floor
     given = _given(request)
+    _check_given(curves, given)
     costs = {name: curves[name].cost(error) for name, error in given.items()}
     cosines = _cosines(curves)
     _check_feasible(task, budget, costs, cosines, list(curves))
@@ -218,6 +219,18 @@ def _given(request: Request) -> dict[str, float]:
         if block.value is not None:
             found[name] = BLOCKS[name].error(float(block.value))
     return found
+
+
+def _check_given(curves: Mapping[str, AnyCurve], given: Mapping[str, float]) -> None:
+    """Refuse a given limit that the curve of its block does not reach."""
+    for name, error in given.items():
+        curve = curves[name]
+        if isinstance(curve, Curve) and error > curve.most:
+            kind = BLOCKS[name]
+            raise TestbenchError(
+                f"table [specify.{name}], key 'value': followed up to {kind.value(curve.most):.4g} "
+                f"{kind.unit}, got {kind.value(error):.4g}"
+            )
 
 
 def _cosines(curves: Mapping[str, AnyCurve]) -> FloatArray:

@@ -68,8 +68,6 @@ def describe(
         return f"{math.degrees(error):.3g}°"
     if name == "amplitude":
         return f"{20.0 * math.log10(1.0 + error):.3g} dB"
-    if name == "jitter":
-        return f"a sine of the qubit's frequency has {jitter_snr(frequency, error):.3g} dB with it"
     if name == "carrier":
         return f"{1e6 * error / frequency:.3g} ppm"
     if name == "leakage":
@@ -96,9 +94,11 @@ def describe(
             f"{quantisation_snr(bits):.3g} dB"
         )
     if isinstance(block, DacRateTable):
-        rate = 1.0 / error
-        droop = 20.0 * math.log10(float(np.sinc(1.0 / (pulse.duration * rate))))
-        return f"{pulse.duration * rate:.4g} samples in the pulse; droop at 1/T {droop:.2f} dB"
+        samples = pulse.duration / error
+        text = f"{samples:.4g} samples in the pulse"
+        if samples < 2.0:
+            return text
+        return f"{text}; droop at 1/T {20.0 * math.log10(float(np.sinc(1.0 / samples))):.2f} dB"
     return ""
 
 
@@ -159,9 +159,10 @@ def _phase_noise(block: PhaseNoiseTable, error: float, band: float, frequency: f
     if block.low >= high:
         return f"at {at}"
     rms = error * integrated_phase(block, block.low, high)
-    jitter = format_quantity(rms / (2.0 * math.pi * frequency), "s", 3)
+    seconds = rms / (2.0 * math.pi * frequency)
+    jitter, snr = format_quantity(seconds, "s", 3), jitter_snr(frequency, seconds)
     low, top = format_quantity(block.low, "Hz"), format_quantity(high, "Hz")
-    return f"at {at}; {rms:.2e} rad or {jitter} rms from {low} to {top}"
+    return f"at {at}; {rms:.2e} rad, {jitter} or {snr:.3g} dB from {low} to {top}"
 
 
 def _wideband(block: WidebandTable, error: float, frequency: float) -> str:

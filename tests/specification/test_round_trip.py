@@ -201,6 +201,7 @@ class TestInfeasible:
                 r"the ideal pulse itself \(leakage",
             ),
             ({"jitter": {}, "image": {"value": "-20 dBc"}}, {}, r"given cost.*\[specify.image\]"),
+            ({"timing": {"value": "20 ns"}}, {}, r"\[specify.timing\].*followed up to"),
             ({"jitter": {}}, {"gate": "z"}, "axis of the xy-plane"),
         ],
     )
