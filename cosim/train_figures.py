@@ -14,6 +14,7 @@ from cosim.train.result import TrainResponse, TrainResult
 _COLOURS = ("C3", "C0")
 _MOST_POINTS = 6000
 _LEAST_ERROR = 1e-6
+_LEAST_INFIDELITY = 1e-12
 # In percent; the edge of a step may be far off.
 _MOST_STEP = 15.0
 
@@ -60,16 +61,18 @@ def _draw_envelopes(
         envelope, ideal = item.envelope, item.ideal
         every = max(1, envelope.iq.size // _MOST_POINTS)
         t = (envelope.t - item.late)[::every] * 1e9
-        turn = _turned(ideal.iq - ideal.iq[0])
-        wanted = ((ideal.iq - ideal.iq[0]) * turn).real[::every]
-        got = ((envelope.iq - envelope.iq[0]) * turn).real[::every]
+        # The ideal begins at rest.
+        rest = ideal.iq[0]
+        turn = _turned(ideal.iq - rest)
+        wanted = ((ideal.iq - rest) * turn).real[::every]
+        got = ((envelope.iq - rest) * turn).real[::every]
         if number == 0:
             what = "ideal" if len(responses) > 1 else "the first pulse in each slot"
             top.plot(t, 1e3 * wanted, color="0.55", lw=2.5, label=what)
         top.plot(t, 1e3 * got, color=_COLOURS[number], lw=0.9, label=name)
         label = f"{name}: {100.0 * item.residual:.2g} % rms"
-        off = np.abs((envelope.iq - envelope.iq[0]) - (ideal.iq - ideal.iq[0]))[::every]
-        peak = float(np.abs(ideal.iq - ideal.iq[0]).max())
+        off = np.abs(envelope.iq - ideal.iq)[::every]
+        peak = float(np.abs(ideal.iq - rest).max())
         below.semilogy(
             t, np.maximum(off / peak, _LEAST_ERROR), color=_COLOURS[number], lw=0.8, label=label
         )
@@ -94,12 +97,12 @@ def _draw_slots(axes: Axes, result: TrainResult, responses: dict[str, TrainRespo
     pulses = result.factors != 0.0
     for number, (name, item) in enumerate(responses.items()):
         colour = _COLOURS[number]
-        axes.semilogy(
-            slots[pulses], item.infidelity[pulses], "o", color=colour, label=f"pulse, {name}"
-        )
+        # The pulse that is calibrated may have none but rounding.
+        shown = np.maximum(item.infidelity, _LEAST_INFIDELITY)
+        axes.semilogy(slots[pulses], shown[pulses], "o", color=colour, label=f"pulse, {name}")
         axes.semilogy(
             slots[~pulses],
-            item.infidelity[~pulses],
+            shown[~pulses],
             "o",
             mfc="none",
             color=colour,

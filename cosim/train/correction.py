@@ -104,7 +104,7 @@ def measure_response(train: Train, envelope: Envelope) -> Response:
     rate = filtering.rate * STRIDE
     times = np.arange(math.floor(train.stop * rate)) / rate
     played = filtering.level * train.factors[train.first]
-    unit: ComplexArray = np.asarray(sampled(envelope, times) / played, dtype=np.complex128)
+    unit: ComplexArray = np.asarray(sampled(train, envelope, times) / played, dtype=np.complex128)
     if not np.any(np.abs(unit) > 0.0):
         raise TestbenchError(
             f"{train.bench.source or 'the testbench'}: the probe does not respond to the sources "
@@ -335,7 +335,7 @@ def unexplained(
         Root mean square over that of the ideal train.
     """
     wanted = superpose(response.unit, train_weights(train, taps).tolist(), STRIDE)
-    missed = sampled(envelope, response.times) - wanted
+    missed = sampled(train, envelope, response.times) - wanted
     size = float(np.sqrt(np.mean(np.abs(ideal) ** 2)))
     return float(np.sqrt(np.mean(np.abs(missed) ** 2))) / size
 

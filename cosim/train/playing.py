@@ -18,7 +18,7 @@ from cosim.dsp.resampling import interpolant
 from cosim.dsp.trains import hold_samples, pulse_span, repeat_shape, sample_waveform
 from cosim.errors import SimulatorTimeoutError, TestbenchError, WaveformError
 from cosim.line import through_line
-from cosim.stimuli import PointsStimulus, stimulus_waves
+from cosim.stimuli import PointsStimulus, Stimulus, stimulus_waves
 from cosim.testbench import Testbench
 from cosim.train.table import NAME, PredistortionTable, TrainTable, read_train
 from cosim.units import format_quantity
@@ -308,9 +308,14 @@ def play(
     """
     bench = train.bench
     played = {name.lower() for name in waves}
-    others = tuple(
-        item for item in bench.stimulus if not played & {name.lower() for name in item.driven}
-    )
+    others: list[Stimulus] = []
+    for item in bench.stimulus:
+        if not played & {name.lower() for name in item.driven}:
+            others.append(item)
+            continue
+        # Lines of a bus that the train does not move stay where they are.
+        still = stimulus_waves(item, folder=Path(bench.folder), stop=train.stop)
+        others += [_points(k, wave) for k, wave in still.items() if k.lower() not in played]
     own = tuple(_points(name, wave) for name, wave in waves.items())
     plan = make_plan(replace(bench, stimulus=(*others, *own)), train.deck)
     try:
@@ -345,11 +350,33 @@ def _points(name: str, wave: Waveform) -> PointsStimulus:
     return PointsStimulus(name, points)
 
 
-def sampled(envelope: Envelope, times: FloatArray) -> ComplexArray:
-    """Give an envelope's departure from where it stood at first, at other times.
+def rest_of(train: Train, envelope: Envelope) -> complex:
+    """Give what an envelope is before anything is played.
 
     Parameters
     ----------
+    train : Train
+        What was played.
+    envelope : Envelope
+        What came out.
+
+    Returns
+    -------
+    complex
+        When a pulse of the first slot leaves its rest: by then a carrier that leaks has started.
+    """
+    begin = min(pulse_span(shape)[0] for shape in train.shapes.values())
+    place = int((begin - envelope.t0) / envelope.dt)
+    return complex(envelope.iq[min(max(place, 0), envelope.iq.size - 1)])
+
+
+def sampled(train: Train, envelope: Envelope, times: FloatArray) -> ComplexArray:
+    """Give an envelope's departure from its rest at other times.
+
+    Parameters
+    ----------
+    train : Train
+        What was played.
     envelope : Envelope
         On its own grid.
     times : ndarray, shape (n,)
@@ -362,4 +389,4 @@ def sampled(envelope: Envelope, times: FloatArray) -> ComplexArray:
     """
     inside = np.clip(times, envelope.t0, envelope.t0 + envelope.dt * (envelope.iq.size - 1))
     values = CubicSpline(envelope.t, envelope.iq)(inside)
-    return np.asarray(values - envelope.iq[0], dtype=np.complex128)
+    return np.asarray(values - rest_of(train, envelope), dtype=np.complex128)
