@@ -9,16 +9,18 @@ from dataclasses import dataclass
 from typing import Protocol
 
 import numpy as np
-from scipy.integrate import quad
 from scipy.special import sici
 
-from cosim.dsp.noise.density import SpectralDensity
+from cosim.dsp.noise.density import PowerLaw, SpectralDensity
+from cosim.dsp.noise.terms import Term
+from cosim.waveform import FloatArray
 
 # Below this part of 1/t a density as steep as 1/f^2 has a millionth of the whole.
 _LOWEST = 1e-6
-# From here on, as a part of 1/t, the cosine is integrated apart from the density.
-_SPLIT = 0.5
-_NODES, _WEIGHTS = np.polynomial.legendre.leggauss(24)
+# From so many turns on the cosine is integrated apart from the density, by parts.
+_TURNS = 10.0
+# Per octave, of up to five turns.
+_NODES, _WEIGHTS = np.polynomial.legendre.leggauss(48)
 
 
 class Fluctuation(Protocol):
@@ -138,7 +140,7 @@ class Shaped:
     Parameters
     ----------
     density : SpectralDensity
-        One-sided; at low frequencies less steep than 1/f^3.
+        One-sided, of power laws; at low frequencies less steep than 1/f^3.
     low, high : float
         Band in Hz.
     """
@@ -161,31 +163,44 @@ class Shaped:
         """
         if t <= 0.0:
             return 0.0
-        middle = min(max(_SPLIT / t, self.low), self.high)
-        total = 0.0
-        for low, high in self._pieces(max(self.low, _LOWEST / t), middle):
-            u = 0.5 * math.log(high / low)
-            f = math.sqrt(low * high) * np.exp(u * _NODES)
-            moved = 4.0 * self.density.at(f) * np.sin(math.pi * f * t) ** 2
-            total += u * float(_WEIGHTS @ (moved * f))
+        middle = min(max(_TURNS / t, self.low), self.high)
+        edges = self._edges(max(self.low, _LOWEST / t), middle)
+        half = 0.5 * np.diff(np.log(edges))[:, None]
+        f = np.sqrt(edges[:-1] * edges[1:])[:, None] * np.exp(half * _NODES)
+        moved = 4.0 * self.density.at(f) * np.sin(math.pi * f * t) ** 2
+        total = float(np.sum(half * _WEIGHTS * moved * f))
         if middle < self.high:
             total += 2.0 * self.density.variance(middle, self.high)
-            for low, high in self._pieces(middle, self.high):
-                wave, _ = quad(self._at, low, high, weight="cos", wvar=2.0 * math.pi * t, limit=200)
-                total -= 2.0 * wave
+            total -= 2.0 * sum(self._wave(term, middle, t) for term in self.density.terms)
         return total
 
-    def _at(self, frequency: float) -> float:
-        return float(self.density.at(frequency))
+    def _wave(self, term: Term, middle: float, t: float) -> float:
+        """Integrate a power law times cos(2 pi f t) from `middle` on, by parts, three times.
 
-    def _pieces(self, low: float, high: float) -> list[tuple[float, float]]:
+        The next terms are less than the exponent over 2 pi _TURNS, to the third power, of the
+        first, which is itself a sixtieth of the integral without the cosine.
+        """
+        assert isinstance(term, PowerLaw)
+        low, high = max(term.low, middle), min(term.high, self.high)
+        if low >= high:
+            return 0.0
+        w, p = 2.0 * math.pi * t, term.exponent
+
+        def parts(f: float) -> float:
+            value = term.level * (f / term.reference) ** -p / w
+            slow = p / (w * f)
+            steep = slow * (p + 1.0) / (w * f)
+            return value * ((1.0 - steep) * math.sin(w * f) - slow * math.cos(w * f))
+
+        return parts(high) - parts(low)
+
+    def _edges(self, low: float, high: float) -> FloatArray:
         """Cut a band at the corners of the density, into pieces of an octave at most."""
         if low >= high:
-            return []
+            return np.array([high])
         count = math.ceil(math.log2(high / low) + 1e-9)
-        edges = {*np.geomspace(low, high, count + 1).tolist()[1:-1], *self.density.corners}
-        inner = sorted(edge for edge in edges if low < edge < high)
-        return list(zip([low, *inner], [*inner, high], strict=True))
+        inner = [edge for edge in self.density.corners if low < edge < high]
+        return np.unique([*np.geomspace(low, high, count + 1), *inner])
 
 
 @dataclass(frozen=True, slots=True)

@@ -1,5 +1,6 @@
 """Oracles: scipy's integrals of the definition, seeded paths, and published Allan deviations."""
 
+import itertools
 import math
 from collections.abc import Callable
 
@@ -29,7 +30,7 @@ def by_definition(density: Callable[[float], float], t: float, low: float, high:
     edges = np.unique([low, *edges[(edges > low) & (edges < high)], high])
     parts = [
         quad(lambda f: 4 * density(f) * math.sin(math.pi * f * t) ** 2, a, b, limit=200)[0]
-        for a, b in zip(edges[:-1], edges[1:], strict=True)
+        for a, b in itertools.pairwise(edges)
     ]
     return math.fsum(parts)
 
@@ -97,12 +98,14 @@ def test_allan_deviations(kind: str, validate: Validate) -> None:
 
     edges = np.concatenate([[1e-9], np.arange(1, 2000) / tau])
     total = 0.0
-    for a, b in zip(edges[:-1], edges[1:], strict=True):
+    for a, b in itertools.pairwise(edges):
         total += quad(
-            lambda f: 2
-            * density(f)
-            / deviation**2
-            * (math.sin(math.pi * f * tau) ** 2 / (math.pi * f * tau)) ** 2,
+            lambda f: (
+                2
+                * density(f)
+                / deviation**2
+                * (math.sin(math.pi * f * tau) ** 2 / (math.pi * f * tau)) ** 2
+            ),
             a,
             b,
         )[0]

@@ -80,9 +80,7 @@ def test_what_does_nothing_is_said_to(square_pulse: SensitivityResult) -> None:
     assert 0.0 < square_pulse.numerical_floor < 1e-6
 
 
-def test_a_study_is_archived_and_read_back(
-    square_pulse: SensitivityResult, tmp_path: Path
-) -> None:
+def test_a_study_is_archived_and_read_back(square_pulse: SensitivityResult, tmp_path: Path) -> None:
     info = archive.RunInfo("done", square_pulse.started, square_pulse.wall_time)
     archive.append(tmp_path / "a.h5", square_pulse, info=info)
     again = archive.read(tmp_path / "a.h5", SENSITIVITY_KINDS)
@@ -153,7 +151,7 @@ def test_in_the_free_frame_a_phase_has_no_cost_and_scale_none_where_calibrated(
     study = {"metric": "free_frame", "keys": ["netlist.parameters.phase"]}
     study["tolerances"] = {"netlist.parameters.phase": 1}
     (item,) = run_sensitivity(bench(tmp_path, sensitivity=study, **more)).items
-    # 1 degree costs 1e-4 as simulated; the free frame takes it, but for the other half of the drive.
+    # 1 degree costs 1e-4 as simulated; the free frame takes it, but for the drive's other half.
     assert item.largest < 1e-7
     study = {"metric": "calibrated", "keys": ["netlist.parameters.level"]}
     (item,) = run_sensitivity(bench(tmp_path, sensitivity=study, **more)).items
