@@ -192,7 +192,7 @@ class Shaped:
             steep = slow * (p + 1.0) / (w * f)
             return value * ((1.0 - steep) * math.sin(w * f) - slow * math.cos(w * f))
 
-        return parts(high) - parts(low)
+        return float(parts(high) - parts(low))
 
     def _edges(self, low: float, high: float) -> FloatArray:
         """Cut a band at the corners of the density, into pieces of an octave at most."""
