@@ -230,3 +230,21 @@ def test_least_squares_find_a_known_minimum() -> None:
     assert found["a"] == pytest.approx(2.0, rel=1e-6)
     assert found["tau"] == pytest.approx(0.3, rel=1e-6)
     assert found["unused"] == 5.0
+
+
+@pytest.mark.parametrize("kind", ["settling", "ringing"])
+def test_a_decay_is_found_beside_a_stronger_line(kind: str) -> None:
+    tone = 0.01 * np.exp(2j * math.pi * 60e6 * T)
+    u = np.maximum(T - START, 0.0)
+    wave = np.cos(2 * math.pi * 210e6 * u) if kind == "ringing" else 1.0
+    pulse = FLAT * (1.0 + 0.006 * fade(START, 8e-9) * wave + 0.01 * PLACE) + tone
+    found = taken_apart(LEVEL * pulse * np.exp(0.2j))
+    (spur,) = found.spurs
+    assert abs(complex(*(found.numbers[n] for n in spur.numbers))) == pytest.approx(
+        0.01 * LEVEL, rel=0.02
+    )
+    name = "settling_re" if kind == "settling" else "ringing_on_up_re"
+    size = found.numbers[name] * found.numbers["level"] / LEVEL
+    assert size == pytest.approx(0.006 if kind == "settling" else 0.003, rel=0.02)
+    # The droop is found beside a decay, which has a slope of its own.
+    assert found.numbers["droop"] == pytest.approx(0.01, rel=0.02)

@@ -17,7 +17,7 @@ _KEPT = 0.3
 # A line is told from amplitude, phase and droop from this many periods on the plateau on.
 _LEAST_PERIODS = 2.5
 # Lines are told from one another from this many periods of their distance on.
-_APART = 1.5
+APART = 1.5
 # Of the power that a decay explains, to be told from none.
 _EXPLAINED = 0.3
 
@@ -71,7 +71,7 @@ def find_lines(t: FloatArray, y: ComplexArray) -> tuple[Line, ...]:
         if frequency is None:
             break
         near = min((abs(frequency - other) for other in frequencies), default=math.inf)
-        if near * float(t[-1] - t[0]) < _APART:
+        if near * float(t[-1] - t[0]) < APART:
             break
         frequencies, amplitudes, rest = _together(t, left, [*frequencies, frequency])
     lines = [Line(*pair) for pair in zip(frequencies, amplitudes, strict=True)]

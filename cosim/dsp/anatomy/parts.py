@@ -72,6 +72,11 @@ class Spur:
         """Names of its real and imaginary part, those of its amplitude at t = 0."""
         return f"{self.name}_re", f"{self.name}_im"
 
+    @property
+    def all_numbers(self) -> tuple[str, str, str]:
+        """The same, and that of its frequency."""
+        return (*self.numbers, f"{self.name}_frequency")
+
 
 @dataclass(frozen=True, slots=True)
 class Anatomy:

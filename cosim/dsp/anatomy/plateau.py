@@ -6,7 +6,7 @@ import numpy as np
 
 from cosim.dsp.anatomy.fitting import OUTSIDE, Work, fit_numbers, scales_of, spur_scales
 from cosim.dsp.anatomy.leaking import find_leakage
-from cosim.dsp.anatomy.lines import LEAST, find_decay, find_lines
+from cosim.dsp.anatomy.lines import APART, LEAST, find_decay, find_lines
 from cosim.dsp.anatomy.outline import outline_names
 from cosim.dsp.anatomy.parts import GROUPS, Spur, actual_shape, compose, phase_of
 from cosim.dsp.anatomy.shapes import Grid, Shape, sample_shape
@@ -91,7 +91,8 @@ def fit_by_plateau(
     numbers = fit_numbers(work, numbers, shape, free, spurs, weights)
     plain = numbers, free, spurs
     tails: list[str] = []
-    for search in (_settling, _lines):
+    # Twice, for what is small shows only when what is large has been found.
+    for search in (_settling, _lines, _settling, _lines):
         left = _left_over(work, numbers, shape, spurs, plateau)
         if float(np.abs(left).max()) < LEAST:
             break
@@ -102,13 +103,25 @@ def fit_by_plateau(
         wider |= spur_scales(begin, beside[len(spurs) :], frequencies=True)
         trial = fit_numbers(work, begin, shape, wider, beside, weights)
         if _plausible(work, trial, found, beside):
-            numbers, free, spurs = trial, wider, beside
+            numbers, spurs = trial, _not_small(trial, beside)
+            dropped = {name for spur in beside if spur not in spurs for name in spur.all_numbers}
+            free = {name: scale for name, scale in wider.items() if name not in dropped}
             tails += [_TAILS[name] for name in more if name in _TAILS]
     if len(free) > len(plain[1]):
         numbers = _again(work, numbers, shape, spurs, free, weights, tails)
         if not _plausible(work, numbers, found, spurs):
             numbers, free, spurs = plain
-    return _with_edges(work, numbers, shape, spurs), spurs
+    return _with_edges(work, numbers, shape, spurs), _not_small(numbers, spurs)
+
+
+def _not_small(numbers: dict[str, float], spurs: tuple[Spur, ...]) -> tuple[Spur, ...]:
+    """Leave out lines that the fit has no use for."""
+    least = 0.5 * LEAST * numbers["level"]
+    return tuple(
+        spur
+        for spur in spurs
+        if spur.clock or abs(complex(*(numbers[name] for name in spur.numbers))) > least
+    )
 
 
 def _with_edges(
@@ -194,6 +207,8 @@ def _settling(
     left: ComplexArray,
 ) -> tuple[dict[str, float], list[str], tuple[Spur, ...]]:
     found = actual_shape(numbers, shape)
+    if numbers["settling_re"]:
+        return numbers, [], spurs
     time = find_decay(work.grid.t[part], left, found.start, found.duration)
     if time is None:
         return numbers, [], spurs
@@ -212,16 +227,25 @@ def _lines(
     size = sample_shape(actual_shape(numbers, shape), work.grid).size
     begin, names = dict(numbers), list[str]()
     added: list[Spur] = []
+    span = float(work.grid.t[part][-1] - work.grid.t[part][0])
+    rings = any(numbers[name] for name in GROUPS["ringing"])
+    count = sum(not spur.clock for spur in spurs)
     for line in find_lines(work.grid.t[part], left):
         if math.isfinite(line.decay_time):
+            if rings:
+                continue
             begin |= {"ringing_frequency": line.frequency, "ringing_time": line.decay_time}
             names += [name for name in GROUPS["ringing"] if "_on_" in name]
             names += ["ringing_frequency", "ringing_time"]
             continue
         amplitude = line.amplitude * numbers["level"] * np.exp(1j * numbers["phase"])
         frequency = line.frequency + numbers["frequency"]
+        known = [numbers[f"{spur.name}_frequency"] for spur in spurs if not spur.clock]
+        if any(abs(frequency - other) * span < APART for other in known):
+            # What is left of a line that was found is no line.
+            continue
         tone = amplitude * np.exp(2j * math.pi * frequency * work.grid.t)
-        spur = Spur(f"spur {len(added) + 1}", _comes_and_goes(work, size, tone))
+        spur = Spur(f"spur {count + len(added) + 1}", _comes_and_goes(work, size, tone))
         values = (float(amplitude.real), float(amplitude.imag))
         begin |= dict(zip(spur.numbers, values, strict=True))
         begin[f"{spur.name}_frequency"] = frequency
