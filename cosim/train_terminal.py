@@ -185,7 +185,7 @@ def _tail(response: TrainResponse) -> str:
 def _settled(step: StepSettling) -> str:
     if math.isnan(step.settled):
         return f"not in {format_quantity(float(step.t[-1]), 's')}"
-    return format_quantity(step.settled, "s")
+    return format_quantity(step.settled, "s") if step.settled else "at once"
 
 
 def _lag_table(responses: dict[str, TrainResponse]) -> Table:
