@@ -30,10 +30,7 @@ def drift_table(result: DriftResult) -> Group:
         The infidelity over time, the intervals, the sources, warnings and the caution.
     """
     parts: list[RenderableType] = [
-        Text(
-            f"{METRICS[result.metric]}; frame and scale stay those of the trim; "
-            f"{result.netlist_runs} netlist runs"
-        ),
+        Text(f"{METRICS[result.metric]}, {result.netlist_runs} netlist runs"),
         _number_table(result),
         Text(""),
         _curve_table(result),
@@ -70,15 +67,15 @@ def _number_table(result: DriftResult) -> Table:
     table.add_row("right after a trim", f"{result.right_after:.3e}, with the trim's own errors")
     if not math.isnan(result.limit):
         table.add_row("limit of the mean", f"{result.limit:.3e}")
-        for label, interval, lost in (
-            ("trim every", result.interval_end, result.duty_lost_end),
-            ("", result.interval_average, result.duty_lost_average),
+        for label, what, interval, lost in (
+            ("trim every", "the mean at its end", result.interval_end, result.duty_lost_end),
+            ("or every", "the mean over it", result.interval_average, result.duty_lost_average),
         ):
-            duty = "" if math.isnan(lost) else f", trims take {100.0 * lost:.2g} % of the time"
-            beyond = f"over {format_time(float(result.time[-1]))}"
-            told = f"{format_time(interval)}{duty}" if math.isfinite(interval) else beyond
-            what = "where the mean reaches it" if label else "where its average reaches it"
-            table.add_row(label, f"{told}: {what}")
+            duty = "" if math.isnan(lost) else f"; trims take {100.0 * lost:.2g} %"
+            told = format_time(interval)
+            if math.isinf(interval):
+                told, duty = f"over {format_time(float(result.time[-1]))}", ""
+            table.add_row(label, f"{told} by {what}{duty}")
     table.add_row("dominated by", result.dominant)
     table.add_row("check, all moved", f"the sum of effects is within {result.model_error:.1e}")
     return table

@@ -190,7 +190,7 @@ class Shaped:
             value = term.level * (f / term.reference) ** -p / w
             slow = p / (w * f)
             steep = slow * (p + 1.0) / (w * f)
-            return value * ((1.0 - steep) * math.sin(w * f) - slow * math.cos(w * f))
+            return float(value) * ((1.0 - steep) * math.sin(w * f) - slow * math.cos(w * f))
 
         return float(parts(high) - parts(low))
 

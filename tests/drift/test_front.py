@@ -102,8 +102,8 @@ def test_the_table_fits_a_terminal_and_says_what_matters() -> None:
     text = printed(made())
     for words in (
         "1.500e-04 ± 2.0e-10",
-        "11.85 h, trims take 0.012 % of the time",
-        "over 1 day",
+        "11.85 h by the mean at its end; trims take 0.012 %",
+        "over 1 day by the mean over it ",
         "0.247 K ± 1.03 K    +2.00e-05",
         "dominated by        rack",
         "warning: told",

@@ -21,6 +21,8 @@ import cosim
 from cosim.archive import read_table
 from cosim.calibration.result import CalibrationResult
 from cosim.calibration.trim import calibrate
+from cosim.drift.result import DriftResult
+from cosim.drift.study import run_drift
 from cosim.result import GateResult
 from cosim.specification.gate_specification import specify_gate
 from cosim.specification.readout_specification import specify_readout
@@ -29,7 +31,7 @@ from cosim.sweep.keeping import metric_of
 from cosim.sweep.local import local_engine
 from cosim.sweep.repetition import read_record
 from cosim.sweep.run import run_sweep
-from cosim.testbench import DesignBench
+from cosim.testbench import DesignBench, gate_bench
 from cosim.train.result import TrainResult
 from cosim.train.study import run_train
 
@@ -41,13 +43,14 @@ SWEEPS = ("sweep_corners", *SWEPT_READOUTS)
 # of the readout all four of one, which share what is simulated.
 SHARES = 4
 CALIBRATIONS = ("calibrate_modulator",)
+DRIFTS = ("drift_x180",)
 TRAINS = ("train_flux",)
 SPECIFICATIONS = ("specify_readout", "specify_x180")
 # The script amplifier_bias runs this one; once more would take a minute and a half.
 WITHIN_SCRIPTS = ("readout_dispersive",)
 BENCHES = sorted(
     {path.stem for path in EXAMPLES.glob("*.toml")}
-    - {*SWEEPS, *CALIBRATIONS, *SPECIFICATIONS, *WITHIN_SCRIPTS}
+    - {*SWEEPS, *CALIBRATIONS, *SPECIFICATIONS, *DRIFTS, *TRAINS, *WITHIN_SCRIPTS}
 )
 OF_TRANSISTORS = sorted(name for name in BENCHES if "bsim4" in name)
 # The check at half the step takes twice as long as the run. That of these decks is tried on a
@@ -175,6 +178,24 @@ def calibration_figures(result: CalibrationResult) -> dict[str, float]:
     }
 
 
+def drift_example(name: str) -> DriftResult:
+    """Run a study of drift."""
+    return run_drift(gate_bench(cosim.load_testbench(EXAMPLES / f"{name}.toml")))
+
+
+def drift_figures(result: DriftResult) -> dict[str, float]:
+    """Give the numbers of a study of drift that are committed."""
+    return {
+        "trimmed": result.trimmed,
+        "right_after": result.right_after,
+        "interval_end": result.interval_end,
+        "interval_average": result.interval_average,
+        "mean at the horizon": float(result.mean[-1]),
+        "95 % at the horizon": float(result.high[-1]),
+        **{source.name: source.cost for source in result.sources},
+    }
+
+
 def train_example(name: str) -> TrainResult:
     """Play a train."""
     return run_train(cosim.load_testbench(EXAMPLES / f"{name}.toml"))
@@ -254,6 +275,8 @@ def write_expected() -> None:
         table[name] = calibration_figures(calibration_example(name))
     for name in SPECIFICATIONS:
         table[name] = specified(name)
+    for name in DRIFTS:
+        table[name] = drift_figures(drift_example(name))
     for name in TRAINS:
         table[name] = train_figures(train_example(name))
     for name in SCRIPTS:
