@@ -18,6 +18,7 @@ from scipy.optimize import brentq, minimize
 from cosim.errors import TestbenchError
 from cosim.specification.addition import Alignment
 from cosim.specification.building import AnyCurve
+from cosim.specification.converters import RateCurve
 from cosim.waveform import FloatArray
 
 # Points of the table of each curve between which the least power is sought.
@@ -220,16 +221,23 @@ def _power_law(
 ) -> PchipInterpolator:
     """Give log(P/W) of a block as a function of log(share/budget), smooth between points."""
     a, n, at = law
-    z = np.linspace(math.log(LEAST_SHARE), 0.0, POINTS)
-    limits = np.array([curve.limit(budget * math.exp(value)) for value in z])
-    if not np.isfinite(limits).all():
+    top = curve.limit(budget)
+    if not math.isfinite(top):
         raise TestbenchError(
             f"[specify.{name}]: no error that can be followed costs the whole budget of "
             f"{budget:.3g}, so that the least power is none",
             hint="give this block a 'value', or leave its table out",
         )
-    if (np.diff(limits) <= 0.0).any():
-        # Converters sample a whole number of times: their limits go in steps.
-        limits = limits * np.exp(1e-9 * np.arange(POINTS))
-        limits = np.maximum.accumulate(limits)
-    return PchipInterpolator(z, math.log(a) - n * np.log(limits / at))
+    if isinstance(curve, RateCurve):
+        # Converters sample a whole number of times, so that their costs go in steps.
+        shares = np.exp(np.linspace(math.log(LEAST_SHARE), 0.0, POINTS))
+        limits = np.array([curve.limit(budget * float(share)) for share in shares])
+        limits = np.maximum.accumulate(limits * np.exp(1e-9 * np.arange(POINTS)))
+    else:
+        # The cost goes nearly with the square of the error.
+        limits = top * np.exp(0.5 * np.linspace(math.log(LEAST_SHARE) - 0.5, 0.0, POINTS))
+        costs = [curve.cost(float(limit)) for limit in limits[:-1]]
+        shares = np.maximum.accumulate(np.array([*costs, budget]) / budget)
+        kept = np.diff(shares, prepend=0.0) > 0.0
+        limits, shares = limits[kept], shares[kept]
+    return PchipInterpolator(np.log(shares), math.log(a) - n * np.log(limits / at))
