@@ -15,7 +15,6 @@ from cosim.dsp.predistortion import (
     superpose,
     unit_tap,
 )
-from cosim.dsp.trains import pulse_span
 from cosim.errors import TestbenchError, WaveformError
 from cosim.train.playing import Train, sampled
 from cosim.train.table import NAME, PREDISTORTION
@@ -373,9 +372,3 @@ def ideal_step(
         total += gain * away
         height += complex(gain) * float(wave.v[-1] - wave.v[0])
     return np.asarray((total / height).real), height
-
-
-def step_fits(train: Train) -> bool:
-    """Tell whether the step asked for lies within the run."""
-    begin = min(pulse_span(shape)[0] for shape in train.shapes.values())
-    return train.table.step is None or begin + train.table.step <= train.stop

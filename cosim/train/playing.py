@@ -73,6 +73,12 @@ class Train:
         """Number of the first slot with a pulse: before it there is rest only."""
         return next(slot for slot, factor in enumerate(self.factors) if factor)
 
+    @property
+    def step_fits(self) -> bool:
+        """Whether the step that is asked for lies within the run."""
+        begin = min(pulse_span(shape)[0] for shape in self.shapes.values())
+        return self.table.step is None or begin + self.table.step <= self.stop
+
     def span(self, slot: int, late: float = 0.0) -> tuple[float, float]:
         """Give start and end of a slot at the qubit in s, `late` by some s."""
         start = self.begin + late + slot * self.table.spacing

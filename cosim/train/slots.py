@@ -13,7 +13,7 @@ from cosim.dsp.resampling import interpolant
 from cosim.errors import TestbenchError
 from cosim.gate import Target, gate_target
 from cosim.quantum.channel import nearest_unitary
-from cosim.quantum.error_vector import EXACT, error_vector
+from cosim.quantum.coherent_error import EXACT, error_vector
 from cosim.quantum.evolution import DriveSpline
 from cosim.quantum.fidelity import average_gate_fidelity, leakage, rotation_of, target_unitary
 from cosim.quantum.frame import free_frame, phase_frame

@@ -23,7 +23,6 @@ from cosim.train.correction import (
     largest_departure,
     largest_value,
     measure_response,
-    step_fits,
     unexplained,
 )
 from cosim.train.playing import Train, converted, make_train, play
@@ -98,7 +97,7 @@ def run_train(bench: Bench, *, progress: Progress | None = None) -> TrainResult:
     started = datetime.now().astimezone().isoformat(timespec="seconds")
     bench = gate_bench(bench)
     train, notices = make_train(bench)
-    if not step_fits(train):
+    if not train.step_fits:
         raise TestbenchError(
             f"{bench.source or 'the testbench'}, table [{NAME}], key 'step': a step of "
             f"{format_quantity(train.table.step or 0.0, 's')} does not end within the run of "
