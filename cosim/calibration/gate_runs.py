@@ -15,7 +15,7 @@ from cosim.errors import CosimError, SimulationError
 from cosim.gate import Shots, gate_target, run_gate
 from cosim.imported import import_waveform
 from cosim.line import through_line
-from cosim.quantum.error_vector import error_vector
+from cosim.quantum.coherent_error import error_vector
 from cosim.quantum.fidelity import leakage
 from cosim.quantum.frame import phase_frame
 from cosim.quantum.operators import OperatorSystem

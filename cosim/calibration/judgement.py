@@ -12,7 +12,7 @@ from cosim.calibration.result import KnobResult, Limits
 from cosim.calibration.surrogate_search import GAIN, Surrogate
 from cosim.calibration.table import Knob
 from cosim.calibration.vector_search import tolerance
-from cosim.quantum.error_vector import ROOT
+from cosim.quantum.coherent_error import ROOT
 from cosim.waveform import FloatArray
 
 # How far beyond the bounds a model is asked, in parts of their distance: what is linear goes on.
@@ -240,7 +240,7 @@ def turn_of(vector: FloatArray) -> FloatArray:
     Parameters
     ----------
     vector : ndarray, shape (m,)
-        From `cosim.quantum.error_vector`; of no length for a readout.
+        From `cosim.quantum.coherent_error`; of no length for a readout.
 
     Returns
     -------

@@ -16,7 +16,7 @@ from scipy.stats import norm, qmc
 
 from cosim.drift.response import Response, cost_of
 from cosim.drift.table import Process
-from cosim.quantum.error_vector import EXACT, ROOT
+from cosim.quantum.coherent_error import EXACT, ROOT
 from cosim.sensitivity.response import Outcome
 from cosim.waveform import FloatArray
 

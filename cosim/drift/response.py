@@ -8,7 +8,7 @@ import numpy as np
 
 from cosim.drift.table import Process
 from cosim.errors import CosimError, InputError
-from cosim.quantum.error_vector import EXACT, ROOT, error_vector
+from cosim.quantum.coherent_error import EXACT, ROOT, error_vector
 from cosim.quantum.fidelity import average_gate_fidelity
 from cosim.quantum.frame import phase_frame
 from cosim.quantum.operators import OperatorSystem
@@ -192,7 +192,7 @@ def cost_of(vectors: FloatArray) -> FloatArray:
     Parameters
     ----------
     vectors : ndarray, shape (..., m)
-        As `cosim.quantum.error_vector.error_vector` gives them, or sums of such.
+        As `cosim.quantum.coherent_error.error_vector` gives them, or sums of such.
 
     Returns
     -------

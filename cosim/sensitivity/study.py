@@ -13,7 +13,7 @@ from cosim.decks import read_deck
 from cosim.errors import CosimError, InputError
 from cosim.gate import best_calibration, gate_target
 from cosim.quantum.channel import nearest_unitary
-from cosim.quantum.error_vector import error_vector
+from cosim.quantum.coherent_error import error_vector
 from cosim.quantum.fidelity import average_gate_fidelity, rotation_of
 from cosim.quantum.frame import free_frame, phase_frame
 from cosim.quantum.operators import OperatorSystem

@@ -175,7 +175,7 @@ def _by_drive(
         else phase_frame(channel, reference, -reference)
         for channel, factor in zip(adjusted, train.factors, strict=True)
     )
-    rest = _rest(pulses[0], spans[0])
+    rest = _rest(pulses[1], spans[1])
     return Evolved(raw, framed, targets, rest, frame)
 
 
@@ -224,8 +224,8 @@ def _by_shift(
         scale = min(max(scale, SCALE_RANGE[0]), SCALE_RANGE[1]) if adjusts else 1.0
         frame = Frame(float(scale), 0.0, 0.0, 0.0, -wanted)
     qubit = make_qubit(train.bench.qubit, train.carrier)
-    nothing = DriveSpline(np.array(spans[0]), np.zeros((4, 1)))
-    rest = _rest(Pulse(qubit, nothing, *spans[0]), spans[0])
+    nothing = DriveSpline(np.array(spans[1]), np.zeros((4, 1)))
+    rest = _rest(Pulse(qubit, nothing, *spans[1]), spans[1])
     about_z = replace(target, rotation=replace(target.rotation, axis=(0.0, 0.0, 1.0)))
     return Evolved(
         tuple(phase_frame(rest, phase, 0.0) for phase in phases),

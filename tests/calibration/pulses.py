@@ -13,7 +13,7 @@ from cosim.calibration.table import CalibrateTable, Knob
 from cosim.errors import SimulationError
 from cosim.keys import NumberKey
 from cosim.quantum.channel import PAULI, unitary_superoperator
-from cosim.quantum.error_vector import error_vector
+from cosim.quantum.coherent_error import error_vector
 from cosim.quantum.fidelity import average_gate_fidelity, target_unitary
 from cosim.testbench import Testbench, make_testbench
 

@@ -13,7 +13,7 @@ from cosim.drift.response import Response, cost_of
 from cosim.drift.structure import Motion, RandomWalk
 from cosim.drift.table import Process
 from cosim.quantum.channel import unitary_superoperator
-from cosim.quantum.error_vector import error_vector
+from cosim.quantum.coherent_error import error_vector
 from cosim.quantum.fidelity import average_gate_fidelity
 from cosim.quantum.quasistatic import gaussian_average
 from cosim.sensitivity.response import Outcome

@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 
 from cosim.quantum.channel import unitary_superoperator
-from cosim.quantum.error_vector import error_vector
+from cosim.quantum.coherent_error import error_vector
 from cosim.quantum.fidelity import average_gate_fidelity
 from cosim.sensitivity.response import (
     NO_EFFECT,

@@ -9,7 +9,7 @@ from scipy.stats import unitary_group
 
 from cosim.errors import InputError
 from cosim.quantum.channel import PAULI, unitary_superoperator
-from cosim.quantum.error_vector import error_vector
+from cosim.quantum.coherent_error import error_vector
 from cosim.quantum.fidelity import average_gate_fidelity, leakage, target_unitary
 
 X90 = target_unitary((1.0, 0.0, 0.0), math.pi / 2)
