@@ -38,9 +38,11 @@ from cosim.train.study import run_train
 TABLE = Path(__file__).with_name("expected.toml")
 EXAMPLES = Path(__file__).parents[2] / "examples"
 SWEPT_READOUTS = ("readout_corners",)
-SWEEPS = ("sweep_corners", *SWEPT_READOUTS)
-# One of so many shares of a sweep is run, as a job of an array would: two runs of each corner, and
-# of the readout all four of one, which share what is simulated.
+TRIMMED_SWEEPS = ("trim_per_die",)
+SWEEPS = ("sweep_corners", *SWEPT_READOUTS, *TRIMMED_SWEEPS)
+# One of so many shares of a sweep is run, as a job of an array would: two runs of each corner, of
+# the readout all four of one, which share what is simulated, and of the trims four runs of the
+# frozen one and the two of a die.
 SHARES = 4
 CALIBRATIONS = ("calibrate_modulator",)
 DRIFTS = ("drift_x180",)
@@ -152,11 +154,10 @@ def sweep_losses(name: str, path: Path) -> dict[str, float]:
     assert state.finished == state.planned
     table = read_table(path)
     losses, _ = judged(table, make_goal(metric_of(read_record(path))))
+    labels = table["trim" if name in TRIMMED_SWEEPS else "corner"]
     return {
-        f"{number} {corner}": loss
-        for number, corner, loss in zip(
-            table["id"].tolist(), table["corner"], losses.tolist(), strict=True
-        )
+        f"{number} {label}": loss
+        for number, label, loss in zip(table["id"].tolist(), labels, losses.tolist(), strict=True)
     }
 
 
