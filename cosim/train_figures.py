@@ -61,18 +61,16 @@ def _draw_envelopes(
         envelope, ideal = item.envelope, item.ideal
         every = max(1, envelope.iq.size // _MOST_POINTS)
         t = (envelope.t - item.late)[::every] * 1e9
-        # The ideal begins at rest.
-        rest = ideal.iq[0]
-        turn = _turned(ideal.iq - rest)
-        wanted = ((ideal.iq - rest) * turn).real[::every]
-        got = ((envelope.iq - rest) * turn).real[::every]
+        turn = _turned(ideal.iq)
+        wanted = (ideal.iq * turn).real[::every]
+        got = (envelope.iq * turn).real[::every]
         if number == 0:
             what = "ideal" if len(responses) > 1 else "the first pulse in each slot"
             top.plot(t, 1e3 * wanted, color="0.55", lw=2.5, label=what)
         top.plot(t, 1e3 * got, color=_COLOURS[number], lw=0.9, label=name)
         label = f"{name}: {100.0 * item.residual:.2g} % rms"
         off = np.abs(envelope.iq - ideal.iq)[::every]
-        peak = float(np.abs(ideal.iq - rest).max())
+        peak = float(np.abs(ideal.iq).max())
         below.semilogy(
             t, np.maximum(off / peak, _LEAST_ERROR), color=_COLOURS[number], lw=0.8, label=label
         )

@@ -103,7 +103,7 @@ def measure_response(train: Train, envelope: Envelope) -> Response:
     rate = filtering.rate * STRIDE
     times = np.arange(math.floor(train.stop * rate)) / rate
     played = filtering.level * train.factors[train.first]
-    unit: ComplexArray = np.asarray(sampled(train, envelope, times) / played, dtype=np.complex128)
+    unit: ComplexArray = np.asarray(sampled(envelope, times) / played, dtype=np.complex128)
     if not np.any(np.abs(unit) > 0.0):
         raise TestbenchError(
             f"{train.bench.source or 'the testbench'}: the probe does not respond to the sources "
@@ -210,9 +210,15 @@ def _best_delay(
     """Give the shortest delay, in grid points, of nearly the least residual."""
     filtering = train.filtering
     assert filtering is not None
-    if filtering.delay is not None:
-        return round(filtering.delay * filtering.rate * STRIDE)
     last = min(response.late + filtering.taps * STRIDE, response.times.size // 2)
+    if filtering.delay is not None:
+        late = round(filtering.delay * filtering.rate * STRIDE)
+        if not 0 <= late <= last:
+            raise WaveformError(
+                f"key 'delay': wanted 0 to {last / STRIDE / filtering.rate * 1e9:.4g} ns, what the "
+                f"line and the taps delay by, got {filtering.delay * 1e9:.4g} ns"
+            )
+        return late
     tried = {late: residual(late) for late in range(0, last + 1, step)}
     enough = _NEAR_LEAST * min(tried.values())
     return next(late for late, value in tried.items() if value <= enough)
@@ -334,7 +340,7 @@ def unexplained(
         Root mean square over that of the ideal train.
     """
     wanted = superpose(response.unit, train_weights(train, taps).tolist(), STRIDE)
-    missed = sampled(train, envelope, response.times) - wanted
+    missed = sampled(envelope, response.times) - wanted
     size = float(np.sqrt(np.mean(np.abs(ideal) ** 2)))
     return float(np.sqrt(np.mean(np.abs(missed) ** 2))) / size
 

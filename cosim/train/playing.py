@@ -26,6 +26,8 @@ from cosim.waveform import ComplexArray, Envelope, FloatArray, Waveform
 
 # A number of steps, samples or periods this close to a whole one is one.
 _WHOLE = 1e-6
+# Samples of the period from which a carrier at rest is read.
+_REST_SAMPLES = 160
 
 
 @dataclass(frozen=True, slots=True)
@@ -82,7 +84,8 @@ class Train:
     def span(self, slot: int, late: float = 0.0) -> tuple[float, float]:
         """Give start and end of a slot at the qubit in s, `late` by some s."""
         start = self.begin + late + slot * self.table.spacing
-        return start, start + self.table.spacing
+        # A slot that is early by the delay of the line loses a part in which there is rest.
+        return max(start, 0.0), start + self.table.spacing
 
     def samples(self, waves: Mapping[str, Waveform]) -> dict[str, FloatArray]:
         """Sample waveforms as the converter does, over the whole run."""
@@ -305,7 +308,8 @@ def play(
     Capture
         What is at the qubit's end of the line.
     Envelope
-        I + jQ of that; of a baseband pair without a line that of the circuit itself.
+        I + jQ of that, less what it is at rest, before anything is played; of a baseband pair
+        without a line that of the circuit itself.
 
     Raises
     ------
@@ -335,7 +339,8 @@ def play(
         ) from None
     shot = through_line(bench, shot)
     if bench.drive.probe is not None or bench.drive.line is not None:
-        return shot, demodulate(shot.waveform, train.carrier)
+        envelope = demodulate(shot.waveform, train.carrier)
+        return shot, replace(envelope, iq=envelope.iq - _rest(train, shot.waveform))
     count = math.floor(train.stop / shot.step * (1.0 + 1e-9)) + 1
     ends = shot.extra["i"].t
     t = np.clip(np.arange(count) * shot.step, ends[0], ends[-1])
@@ -344,7 +349,7 @@ def play(
     ]
     iq = parts[0] + (1j * parts[1] if len(parts) > 1 else 0.0)
     return shot, Envelope(
-        0.0, shot.step, iq.astype(np.complex128), train.carrier, shot.extra["i"].unit
+        0.0, shot.step, (iq - iq[0]).astype(np.complex128), train.carrier, shot.extra["i"].unit
     )
 
 
@@ -356,33 +361,25 @@ def _points(name: str, wave: Waveform) -> PointsStimulus:
     return PointsStimulus(name, points)
 
 
-def rest_of(train: Train, envelope: Envelope) -> complex:
-    """Give what an envelope is before anything is played.
+def _rest(train: Train, waveform: Waveform) -> complex:
+    """Give I + jQ of a carrier over its last period before anything is played.
 
-    Parameters
-    ----------
-    train : Train
-        What was played.
-    envelope : Envelope
-        What came out.
-
-    Returns
-    -------
-    complex
-        When a pulse of the first slot leaves its rest: by then a carrier that leaks has started.
+    The demodulator looks ahead by the length of its filter, and would see the pulse.
     """
     begin = min(pulse_span(shape)[0] for shape in train.shapes.values())
-    place = int((begin - envelope.t0) / envelope.dt)
-    return complex(envelope.iq[min(max(place, 0), envelope.iq.size - 1)])
+    period = 1.0 / train.carrier
+    if begin < waveform.t[0] + period:
+        return 0j
+    t = begin - period + period / _REST_SAMPLES * np.arange(_REST_SAMPLES)
+    turn = np.exp(-2j * np.pi * np.mod(train.carrier * t, 1.0))
+    return complex(2.0 * np.mean(interpolant(waveform)(t) * turn))
 
 
-def sampled(train: Train, envelope: Envelope, times: FloatArray) -> ComplexArray:
-    """Give an envelope's departure from its rest at other times.
+def sampled(envelope: Envelope, times: FloatArray) -> ComplexArray:
+    """Give an envelope at other times.
 
     Parameters
     ----------
-    train : Train
-        What was played.
     envelope : Envelope
         On its own grid.
     times : ndarray, shape (n,)
@@ -394,5 +391,4 @@ def sampled(train: Train, envelope: Envelope, times: FloatArray) -> ComplexArray
         In the envelope's unit.
     """
     inside = np.clip(times, envelope.t0, envelope.t0 + envelope.dt * (envelope.iq.size - 1))
-    values = CubicSpline(envelope.t, envelope.iq)(inside)
-    return np.asarray(values - rest_of(train, envelope), dtype=np.complex128)
+    return np.asarray(CubicSpline(envelope.t, envelope.iq)(inside), dtype=np.complex128)

@@ -9,7 +9,7 @@ from cosim.dsp.settling import Settling, fit_tail
 from cosim.dsp.trains import pulse_span
 from cosim.quantum.fidelity import channel_distance
 from cosim.train.memory import find_memory, find_settling, history_of, memory_floor
-from cosim.train.playing import Train, rest_of, sampled
+from cosim.train.playing import Train, sampled
 from cosim.train.result import History, StepSettling, Tail, TrainResponse
 from cosim.train.slots import Evolved, evolve_slots, shift_rate
 from cosim.waveform import ComplexArray, Envelope, FloatArray
@@ -72,8 +72,7 @@ def respond(
     worst = int(np.argmax(infidelity))
     first_kind = np.array(factors) == factors[train.first]
     turns = evolved.turns()
-    rest = rest_of(train, envelope)
-    departure = envelope.iq - rest
+    departure = envelope.iq
     wanted = _repeated(train, envelope, late) if ideal is None else ideal
     size = float(np.linalg.norm(wanted))
     length = min(max(memory.depth, 1), _LONGEST_HISTORY)
@@ -107,7 +106,7 @@ def respond(
         product=1.0 - float(np.prod(1.0 - infidelity)),
         memoryless=_memoryless(train, evolved),
         envelope=envelope,
-        ideal=Envelope(envelope.t0, envelope.dt, wanted + rest, train.carrier, envelope.unit),
+        ideal=Envelope(envelope.t0, envelope.dt, wanted, train.carrier, envelope.unit),
         residual=float(np.linalg.norm(departure - wanted)) / size if size > 0.0 else math.nan,
     )
 
@@ -151,7 +150,7 @@ def _repeated(train: Train, envelope: Envelope, late: float) -> ComplexArray:
         start, stop = train.span(slot, late)
         inside = (envelope.t >= start) & (envelope.t < stop)
         if factor != 0.0 and inside.any():
-            own = sampled(train, envelope, envelope.t[inside] - start + begin)
+            own = sampled(envelope, envelope.t[inside] - start + begin)
             wanted[inside] = factor / train.factors[train.first] * own
     return wanted
 
@@ -168,8 +167,7 @@ def _tail(train: Train, envelope: Envelope, late: float) -> Tail | None:
     begin = ends - slot * train.table.spacing + late
     stop = begins - slot * train.table.spacing + late + gap * train.table.spacing
     stop = min(stop, float(envelope.t[-1]))
-    rest = rest_of(train, envelope)
-    departure = envelope.iq - rest
+    departure = envelope.iq
     peak = float(np.abs(departure).max())
     inside = np.flatnonzero((envelope.t >= begin) & (envelope.t <= stop))
     size = np.abs(departure[inside]) / peak
@@ -231,7 +229,7 @@ def settle_step(
     begin = min(pulse_span(shape)[0] for shape in train.shapes.values()) + delay
     stop = begin + (train.table.step or 0.0)
     inside = (envelope.t >= begin) & (envelope.t <= stop)
-    departure = (envelope.iq - rest_of(train, envelope))[inside]
+    departure = envelope.iq[inside]
     t = envelope.t[inside] - begin
     top = departure[-1] if height is None else height
     wanted = np.ones(t.size) if ideal is None else ideal[inside]

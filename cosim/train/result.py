@@ -141,7 +141,7 @@ class TrainResponse:
     memoryless : float
         1 - F_avg of a train of which each pulse is like the first, and each rest at rest.
     envelope : Envelope
-        I + jQ.
+        I + jQ at the probe, less what it is at rest.
     ideal : Envelope
         What it is held against: the first pulse in each slot, or the ideal of a pre-distortion.
     residual : float

@@ -12,9 +12,10 @@ import numpy as np
 import pytest
 
 from cosim.dsp.predistortion import filter_samples
+from cosim.errors import TestbenchError
 from cosim.testbench import Testbench
 from cosim.train.study import run_train
-from tests.train.lines import BENT, LOW_PASS, bench
+from tests.train.lines import BENT, LOW_PASS, MIXED, bench
 from tests.validation import Validate
 
 pytestmark = pytest.mark.ngspice
@@ -130,3 +131,40 @@ def test_a_given_delay_is_kept(tmp_path: Path) -> None:
     rising = ideal.t < 15e-9
     crossing = np.interp(0.5, ideal.iq.real[rising] / ideal.iq.real[rising].max(), ideal.t[rising])
     assert crossing - edge == pytest.approx(5e-9, abs=0.05e-9)  # one time step
+
+
+def test_a_filter_before_a_mixer(tmp_path: Path) -> None:
+    """The same pole before an ideal mixer: all that it leaves to the next slot is undone."""
+    train = {
+        "spacing": "20 ns",
+        "pattern": "11010",
+        "predistortion": {**FILTER, "bandwidth": "150 MHz"},
+    }
+    result = run_train(
+        bench(
+            tmp_path,
+            MIXED,
+            train,
+            drive={"probe": "v(out)", "termination": "in deck", "carrier": "1 GHz"},
+            netlist={"file": "line.cir", "steps_per_period": 80},
+            qubit={"kind": "spin", "frequency": "1 GHz", "rabi_per_volt": "57 MHz/V"},
+            gate={"target": "x90"},
+        )
+    )
+    found = result.predistortion
+    assert found is not None
+    assert result.kind == "drive"
+    assert result.before.residual > 0.1
+    assert found.after.residual < 5e-3
+    # The demodulator looks ahead by 8.6 periods, and what it would see of the first pulse before
+    # t = 0 is not in the record: 1e-4 of the envelope.
+    assert found.nonlinear_after < 1e-3
+    assert found.after.spread < 2e-3 * result.before.spread
+    assert found.after.sequence < 1e-2 * result.before.sequence
+    # The ideal is earlier than what the line does by itself, and so are the slots.
+    assert found.after.late < 0.0
+
+
+def test_no_taps_reach_any_delay(tmp_path: Path) -> None:
+    with pytest.raises(TestbenchError, match=r"key 'delay': wanted 0 to .* ns, what the line and"):
+        run_train(filtered(tmp_path, delay="70 ns"))
