@@ -13,7 +13,8 @@ import cosim
 from cosim import archive
 from cosim.calibration.trim import calibrate, trimmed
 from cosim.errors import CosimError, TestbenchError
-from cosim.sweep import work
+from cosim.probe_run import Estimate
+from cosim.sweep import estimate, work
 from cosim.sweep.goal import make_goal
 from cosim.sweep.local import local_engine
 from cosim.sweep.plan import SweepPlan
@@ -153,6 +154,16 @@ class TestPlan:
             assert bench.netlist.parameters.get("vdd") == 0.95
             assert bench.netlist.parameters.get("gain") == gain
             assert not bench.accuracy.floor
+
+    @pytest.mark.parametrize(("mode", "trims"), [("none", 0), ("frozen", 1), ("each", 2)])
+    def test_an_estimate_counts_their_runs(
+        self, tmp_path: Path, monkeypatch: pytest.MonkeyPatch, mode: str, trims: int
+    ) -> None:
+        plan = plan_of(tmp_path, mode, AT if trims else "")
+        monkeypatch.setattr(estimate, "_of_run", lambda bench, deck: (Estimate(1.0, 1, 1), 0.0))
+        found = estimate.estimate_sweep(plan)
+        # Of 1 s each: four runs, and at most the twelve of `max_runs` for each calibration.
+        assert (found.trims, found.time) == (trims, 4.0 + 12.0 * trims)
 
     @pytest.mark.parametrize(
         ("change", "words"),
