@@ -16,7 +16,7 @@ part, and with three to seven times after local polynomials in frequency for gai
 
 import math
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 
@@ -28,6 +28,7 @@ from cosim.dsp.demodulation import demodulate
 from cosim.dsp.detection.band_levels import (
     BandLevels,
     averaged_levels,
+    carrier_ratio,
     explained_levels,
     noise_of_levels,
 )
@@ -214,11 +215,13 @@ def _put_together(
         values = values + beside.values
         error = math.hypot(error, float(beside.errors[0]))
     near = float(values[0])
+    # The parts are known as means over the first band; their ratio there stands for the carrier.
+    ratio = carrier_ratio(replace(own, values=values))
     return InjectedOutput(
-        noise_of_levels(own.frequencies, values, quadratures),
+        noise_of_levels(own.frequencies, np.array([ratio * near, *values[1:]]), quadratures),
         error / near if near > 0.0 else 0.0,
-        float(own.values[0]),
-        float(own.errors[0]),
+        ratio * float(own.values[0]),
+        ratio * float(own.errors[0]),
         bent,
     )
 

@@ -2,11 +2,17 @@
 of many draws against the errors that are stated."""
 
 import math
+from dataclasses import replace
 
 import numpy as np
 import pytest
 
-from cosim.dsp.detection.band_levels import averaged_levels, explained_levels, noise_of_levels
+from cosim.dsp.detection.band_levels import (
+    averaged_levels,
+    carrier_ratio,
+    explained_levels,
+    noise_of_levels,
+)
 from cosim.waveform import ComplexArray
 
 STEP, COUNT, BEFORE = 1e-9, 400, 600
@@ -83,6 +89,27 @@ def test_a_mirror_image_is_explained_too() -> None:
     np.testing.assert_allclose(found.values[inside], 5.25, rtol=1e-9)
     beyond = averaged_levels((2.0 + 1j) * x + 0.5j * np.conj(x), STEP, 2)
     np.testing.assert_array_equal(found.values[~inside][2:], beyond.values[~inside][2:])
+
+
+def test_the_density_at_the_carrier_behind_a_filter() -> None:
+    """The first band is five lines of 2.5 MHz, as wide as the filter: 0.85 of the density at 0."""
+    generator = np.random.default_rng(5)
+    found = []
+    for _ in range(SETS):
+        levels = averaged_levels(filtered(white(generator, 8))[:, BEFORE:], STEP, 2)
+        found.append(carrier_ratio(levels) * levels.values[0])
+    scatter = float(np.std(found)) / math.sqrt(SETS)
+    # Four standard errors, and 3 % for the inverse's parabola through means of bands.
+    assert np.mean(found) == pytest.approx(1.0, abs=4.0 * scatter + 0.03)
+    assert scatter < 0.025  # or the mean of the band would pass as well
+
+
+def test_white_noise_and_none_at_the_carrier() -> None:
+    flat = averaged_levels(white(np.random.default_rng(5), 400)[:, BEFORE:], STEP, 2)
+    # 0.08 of the scatter of the ratio of two bands of 400 records, which is 3 %, twice.
+    assert carrier_ratio(flat) == pytest.approx(1.0, abs=0.005)
+    assert carrier_ratio(averaged_levels(np.zeros((2, COUNT), complex), STEP, 2)) == 1.0
+    assert carrier_ratio(replace(flat, values=1.0 / flat.squares.clip(1.0) ** 2)) == 2.0
 
 
 def test_levels_as_noise_of_a_record() -> None:

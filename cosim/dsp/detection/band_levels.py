@@ -22,6 +22,9 @@ _EDGES = 0.25  # of a record, half of it at either end, where its taper rises an
 # Part of the rate of the records up to which the mean over their cells takes no more than 1 % of
 # known noise, the most that what folds down there can give back: (pi x)^2/3.
 _FLAT = 0.05
+_STEEPEST = (
+    2.0  # of the density at the carrier over the first band's: beyond, a record is too short
+)
 
 
 @dataclass(frozen=True, slots=True)
@@ -36,11 +39,14 @@ class BandLevels:
         Two-sided density in V^2/Hz, the mean of both sides.
     errors : ndarray, shape (n,)
         Standard errors of these.
+    squares : ndarray, shape (n,)
+        Mean of the squared offsets of each band in Hz^2.
     """
 
     frequencies: FloatArray = field(metadata={"unit": "Hz", "axes": ("band",)})
     values: FloatArray = field(metadata={"unit": "V^2/Hz", "axes": ("band",)})
     errors: FloatArray = field(metadata={"unit": "V^2/Hz", "axes": ("band",)})
+    squares: FloatArray = field(metadata={"unit": "Hz^2", "axes": ("band",)})
 
 
 def averaged_levels(records: ComplexArray, step: float, quadratures: int) -> BandLevels:
@@ -64,15 +70,19 @@ def averaged_levels(records: ComplexArray, step: float, quadratures: int) -> Ban
     Averaged tapered periodograms: P. D. Welch, IEEE Trans. Audio Electroacoust. 15, 70 (1967).
     """
     lines, alone = _lines(records, step)
-    middles, values, errors = [], [], []
+    number = _number(records.shape[1])
+    middles, values, errors, squares = [], [], [], []
     for middle, inside in _bands(records.shape[1]):
         powers = np.abs(lines[:, inside]) ** 2
         level = float(powers.mean())
         middles.append(middle)
+        squares.append(float(np.mean(number[inside] ** 2)))
         values.append(level)
         errors.append(level / math.sqrt(_free(powers, middle, quadratures, alone)))
     unit = 1.0 / (records.shape[1] * step)
-    return BandLevels(unit * np.array(middles), np.array(values), np.array(errors))
+    return BandLevels(
+        unit * np.array(middles), np.array(values), np.array(errors), unit**2 * np.array(squares)
+    )
 
 
 def explained_levels(
@@ -136,7 +146,31 @@ def explained_levels(
         spread = float((gains.conj() @ power @ inverse @ power @ gains).real)
         values[place] = max(0.0, explained - lucky) + rest
         errors[place] = math.sqrt(2.0 * rest * lost * spread + rest**2 / free)
-    return BandLevels(plain.frequencies, values, errors)
+    return BandLevels(plain.frequencies, values, errors, plain.squares)
+
+
+def carrier_ratio(levels: BandLevels) -> float:
+    """Give the density at the carrier over the mean of the first band, which lies around it.
+
+    Of a short record the first band is as wide as a filter of the chain: what tells the states
+    apart passes in its middle, where the density is more than its mean.
+
+    Parameters
+    ----------
+    levels : BandLevels
+        Of all noise together.
+
+    Returns
+    -------
+    float
+        From a density whose inverse is a parabola in the offset, as behind one resonance, through
+        the first two bands; at most 2. 1 where one of them is zero.
+    """
+    if levels.values.size < 2 or levels.values[:2].min() <= 0.0:
+        return 1.0
+    first, second = levels.values[0] / levels.values[:2]
+    reach = levels.squares[0] / (levels.squares[1] - levels.squares[0])
+    return float(1.0 / max(first - (second - first) * reach, 1.0 / _STEEPEST))
 
 
 def noise_of_levels(frequencies: FloatArray, values: FloatArray, quadratures: int) -> OutputNoise:
