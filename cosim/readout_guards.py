@@ -5,7 +5,6 @@ import math
 from cosim.dsp.detection.assignment import AssignmentSplit
 from cosim.dsp.detection.shots import ShotCounts
 from cosim.outgoing import least_added_quanta
-from cosim.quantum.qubit import Qubit
 from cosim.quantum.readout_limits import DispersiveGuards, dispersive_guards, transmon_pulls
 from cosim.readout_noise import ARRIVING, ChainNoise
 from cosim.readout_schema import ResonatorTable
@@ -40,10 +39,9 @@ def dispersive_numbers(pulse: ResonatorTable, photons: float) -> DispersiveGuard
     InputError
         If chi has another sign than coupling, detuning and anharmonicity make.
     """
-    if pulse.coupling is None or pulse.qubit_frequency is None:
+    qubit = pulse.qubit()
+    if qubit is None or pulse.coupling is None:
         return None
-    levels = 2 if pulse.anharmonicity is None else 3
-    qubit = Qubit(pulse.qubit_frequency, levels, pulse.anharmonicity or 0.0)
     coupling = 2.0 * math.pi * pulse.coupling
     return dispersive_guards(pulse.resonator(), qubit, coupling, photons, pulse.filter_quality)
 

@@ -96,7 +96,7 @@ def make_answers(
             f"at {1e9 * stop:g} ns",
             hint="shorten the pulse, or say a later 'stop' in [netlist]",
         )
-    check_readout_window(table, stop)
+    check_readout_window(table, pulse.start, stop)
     way = way_out(table, pulse.drive, folder)
     drive = incident_field(pulse, resonator, stop) if played is None else played.drive
     fields = {name: evolve_field(resonator, drive, level) for name, level in _levels(pulse)}
@@ -198,13 +198,15 @@ def answer_emf(answers: Answers, name: str) -> ComplexArray:
     return SMALL * answers.emf[whole] if whole != name else answers.emf[name]
 
 
-def check_readout_window(table: ReadoutTable, stop: float) -> None:
-    """Refuse a window of integration that does not lie within the run.
+def check_readout_window(table: ReadoutTable, begin: float, stop: float) -> None:
+    """Refuse a window of integration that does not lie within the run, or is over too early.
 
     Parameters
     ----------
     table : ReadoutTable
         The table [readout].
+    begin : float
+        Time in s from which on the state counts.
     stop : float
         End of the run in s.
 
@@ -218,6 +220,12 @@ def check_readout_window(table: ReadoutTable, stop: float) -> None:
         raise TestbenchError(
             f"table [readout], key 'window': {1e9 * first:g} ns to {1e9 * last:g} ns does not lie "
             f"within the run of 0 ns to {1e9 * stop:g} ns"
+        )
+    if last <= begin:
+        raise TestbenchError(
+            f"table [readout], key 'window': {1e9 * first:g} ns to {1e9 * last:g} ns is over "
+            f"before the state counts, from 'start' at {1e9 * begin:g} ns on",
+            hint="a later window, or an earlier 'start' in [resonator] or [sensor]",
         )
 
 

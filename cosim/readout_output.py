@@ -122,7 +122,8 @@ def make_readout_plan(
     check_roots(deck, roots)
     deck = altered_deck(bench, deck)
     stop = stop_of(table, deck)
-    check_readout_window(bench.readout, stop)
+    asked = bench.sensor or bench.resonator
+    check_readout_window(bench.readout, asked.start if asked else 0.0, stop)
     step, notices = time_step(table, deck, frequency, "in baseband")
     _check_carrier(bench, stop, step)
     if bench.stimulus:

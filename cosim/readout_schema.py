@@ -6,6 +6,8 @@ from typing import Annotated, Literal
 
 from cosim.config import Quantity
 from cosim.errors import InputError
+from cosim.quantum.qubit import Qubit
+from cosim.quantum.readout_limits import check_chi
 from cosim.quantum.resonator import Resonator
 from cosim.schema import (
     DecayTime,
@@ -94,7 +96,7 @@ class ResonatorTable:
     filter_quality: float | None = None
 
     def __post_init__(self) -> None:
-        self.resonator()
+        resonator = self.resonator()
         if sum(one is not None for one in (self.photons, self.power, self.pulse)) != 1:
             raise InputError("give one of 'photons', 'power' and 'pulse'")
         if self.pulse is not None and (self.boost_length or self.ring_down_length):
@@ -111,6 +113,9 @@ class ResonatorTable:
             raise InputError("'ring_down' and 'ring_down_length' go together")
         if (self.coupling is None) != (self.qubit_frequency is None):
             raise InputError("'qubit_frequency' and 'coupling' go together")
+        qubit = self.qubit()
+        if qubit is not None and self.coupling is not None:
+            check_chi(resonator, qubit, 2.0 * math.pi * self.coupling)
         if self.filter_quality is not None and self.coupling is None:
             raise InputError("'filter_quality' goes with 'qubit_frequency' and 'coupling'")
         if self.filter_quality is not None and not 0.0 < self.filter_quality < math.inf:
@@ -127,6 +132,13 @@ class ResonatorTable:
     def stop(self) -> float:
         """End of the pulse in s, the part that empties the resonator included."""
         return self.start + self.length + self.ring_down_length
+
+    def qubit(self) -> Qubit | None:
+        """Give the qubit that asks for its coupling to be judged; None without one."""
+        if self.qubit_frequency is None:
+            return None
+        levels = 2 if self.anharmonicity is None else 3
+        return Qubit(self.qubit_frequency, levels, self.anharmonicity or 0.0)
 
     def resonator(self) -> Resonator:
         """Give the resonator, with rates in rad/s."""

@@ -37,6 +37,8 @@ SENSOR = {
     "value_0": 1e-6,
     "value_1": 2e-6,
 }
+# Below its resonator: chi is negative.
+QUBIT = {"qubit_frequency": "5 GHz", "coupling": "80 MHz", "anharmonicity": "-300 MHz"}
 
 
 def altered(**tables: dict[str, Any] | None) -> dict[str, Any]:
@@ -100,6 +102,11 @@ def test_a_gate_is_insisted_on() -> None:
         ({"resonator": {"kappa_in": "1 MHz"}}, "kappa_in: wanted 0 for the geometry 'hanger'"),
         ({"resonator": {"power": "-120 dBm"}}, "'photons', 'power' and 'pulse'"),
         ({"resonator": {"coupling": "60 MHz"}}, "'qubit_frequency' and 'coupling'"),
+        (
+            {"resonator": {**QUBIT, "chi": "1 MHz"}},
+            r"table \[resonator\]: resonator chi: got 1e\+06 Hz",
+        ),
+        ({"resonator": {**QUBIT, "qubit_frequency": "6.5 GHz"}}, "at a transition of the qubit"),
         ({"resonator": {"boost": 2.0}}, "'boost' and 'boost_length' go together"),
         ({"resonator": {"boost": 2.0, "boost_length": "1 us"}}, "less than the pulse's 'length'"),
         ({"resonator": {"ring_down": -1.0}}, "'ring_down' and 'ring_down_length' go together"),

@@ -20,6 +20,14 @@ BENT = LINEAR.replace("e1 amp 0 in 0 20", "b1 amp 0 v={20*1m*tanh(v(in)/1m)}")
     [
         ({"readout": {"source": "vnone"}}, LINEAR, "vnone"),
         ({"readout": {"window": ["20 ns", "2 us"]}}, LINEAR, "does not lie within the run"),
+        (
+            {
+                "resonator": {"start": "50 ns", "length": "100 ns"},
+                "readout": {"window": ["0 ns", "40 ns"]},
+            },
+            LINEAR,
+            "0 ns to 40 ns is over before the state counts, from 'start' at 50 ns on",
+        ),
         ({"readout": {"window": ["20 ns", "460 ns"]}}, LINEAR, "half of the demodulator's filter"),
         (
             {"readout": {"output_frequency": "5 GHz"}},
