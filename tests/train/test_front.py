@@ -16,7 +16,7 @@ from typer.testing import CliRunner
 from cosim.cli import app
 from cosim.dsp.predistortion import filter_samples
 from cosim.errors import InputError
-from cosim.study_archive import load_study
+from cosim.study_archive import load_study, save_study
 from cosim.train.result import TrainResult
 from cosim.train.study import run_train
 from cosim.train_figures import plot_train
@@ -120,6 +120,12 @@ def test_tables_tell_of_a_driven_train(tmp_path: Path) -> None:
     assert tail.settling is not None
     # What the mixer gives behind the pulse decays with the pole before it.
     assert tail.settling.time_constants[0] == pytest.approx(4e-9, rel=0.02, abs=0.0)
+    assert save_study(result, tmp_path / "b.h5") == 1
+    again = load_study(tmp_path / "b.h5")
+    assert isinstance(again, TrainResult)
+    assert again.predistortion is None
+    assert again.before.infidelity.tolist() == result.before.infidelity.tolist()
+    assert again.warnings == result.warnings
     plot_train(result, tmp_path / "b.png")
     height, width, _ = imread(tmp_path / "b.png").shape
     assert min(height, width) > 500
