@@ -1,16 +1,19 @@
 """Oracles: closed forms of detuned pulses, seeded paths, and scipy's root of the closed form."""
 
 import math
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
 import pytest
 from scipy.optimize import brentq
 
+import cosim
 from cosim import archive
 from cosim.drift.result import DRIFT_KINDS, DriftResult
 from cosim.drift.study import run_drift
 from cosim.errors import InputError
+from cosim.noises import DetuningNoise
 from cosim.quantum.quasistatic import gaussian_average
 from tests.drift.pulses import THETA, detuned, drifting
 from tests.sources import ALGEBRA
@@ -145,6 +148,21 @@ def test_frame_and_scale_stay_those_of_the_trim(tmp_path: Path) -> None:
     level = {"key": "netlist.parameters.level", "rate": "1e-5 /s"}
     result = run_drift(drifting(tmp_path, level, metric="calibrated"))
     assert result.mean[-1] == pytest.approx((THETA * 0.01) ** 2 / 6, rel=0.01)
+
+
+def test_noise_stays_what_it_is_after_the_trim(tmp_path: Path) -> None:
+    """Slow noise of the same kind as the drift: variances of independent Gaussian offsets add."""
+    source = {"key": "detuning", "random_walk": "30 kHz/sqrt(s)"}
+    made = drifting(tmp_path, source)
+    noise = DetuningNoise(acts_on="detuning", deviation=0.4e6)
+    result = run_drift(replace(made, noise=(noise,)))
+    alone = cosim.run(replace(made, noise=(noise,)))
+    assert result.trimmed == pytest.approx(alone.as_simulated.infidelity, abs=1e-12)
+    still = run_drift(made).trimmed
+    spread = math.hypot(0.4e6, 30e3 * math.sqrt(100.0))
+    average = gaussian_average(lambda points: detuned(points[:, 0]), [spread], tolerance=1e-12)
+    # The noise is a channel before the gate as it stands: next to it the drift counts for 1 % less.
+    assert result.mean[-1] - still == pytest.approx(float(average.value), rel=0.02)
 
 
 def test_an_idle_qubit_loses_its_phase(tmp_path: Path, validate: Validate) -> None:
