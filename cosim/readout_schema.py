@@ -113,15 +113,15 @@ class ResonatorTable:
             raise InputError("'ring_down' and 'ring_down_length' go together")
         if (self.coupling is None) != (self.qubit_frequency is None):
             raise InputError("'qubit_frequency' and 'coupling' go together")
-        qubit = self.qubit()
-        if qubit is not None and self.coupling is not None:
-            check_chi(resonator, qubit, 2.0 * math.pi * self.coupling)
         if self.filter_quality is not None and self.coupling is None:
             raise InputError("'filter_quality' goes with 'qubit_frequency' and 'coupling'")
         if self.filter_quality is not None and not 0.0 < self.filter_quality < math.inf:
             raise InputError(
                 f"key 'filter_quality': wanted more than 0, got {self.filter_quality:g}"
             )
+        qubit = self.qubit()
+        if qubit is not None and self.coupling is not None:
+            check_chi(resonator, qubit, 2.0 * math.pi * self.coupling)
 
     @property
     def drive(self) -> float:
