@@ -76,10 +76,14 @@ class Train:
         return next(slot for slot, factor in enumerate(self.factors) if factor)
 
     @property
+    def pulse_begin(self) -> float:
+        """Time in s at which a pulse of the first slot leaves its rest; the circuit is at rest."""
+        return max(0.0, min(pulse_span(shape)[0] for shape in self.shapes.values()))
+
+    @property
     def step_fits(self) -> bool:
         """Whether the step that is asked for lies within the run."""
-        begin = min(pulse_span(shape)[0] for shape in self.shapes.values())
-        return self.table.step is None or begin + self.table.step <= self.stop
+        return self.table.step is None or self.pulse_begin + self.table.step <= self.stop
 
     def span(self, slot: int, late: float = 0.0) -> tuple[float, float]:
         """Give start and end of a slot at the qubit in s, `late` by some s."""
@@ -348,8 +352,9 @@ def play(
         np.asarray(interpolant(shot.extra[name])(t)) for name in ("i", "q") if name in shot.extra
     ]
     iq = parts[0] + (1j * parts[1] if len(parts) > 1 else 0.0)
+    rest = iq[min(int(train.pulse_begin / shot.step), iq.size - 1)]
     return shot, Envelope(
-        0.0, shot.step, (iq - iq[0]).astype(np.complex128), train.carrier, shot.extra["i"].unit
+        0.0, shot.step, (iq - rest).astype(np.complex128), train.carrier, shot.extra["i"].unit
     )
 
 
@@ -366,8 +371,7 @@ def _rest(train: Train, waveform: Waveform) -> complex:
 
     The demodulator looks ahead by the length of its filter, and would see the pulse.
     """
-    begin = min(pulse_span(shape)[0] for shape in train.shapes.values())
-    period = 1.0 / train.carrier
+    begin, period = train.pulse_begin, 1.0 / train.carrier
     if begin < waveform.t[0] + period:
         return 0j
     t = begin - period + period / _REST_SAMPLES * np.arange(_REST_SAMPLES)

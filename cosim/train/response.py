@@ -226,7 +226,7 @@ def settle_step(
     StepSettling
         From the step to the end of its length.
     """
-    begin = min(pulse_span(shape)[0] for shape in train.shapes.values()) + delay
+    begin = train.pulse_begin + delay
     stop = begin + (train.table.step or 0.0)
     inside = (envelope.t >= begin) & (envelope.t <= stop)
     departure = envelope.iq[inside]

@@ -251,13 +251,15 @@ def shift_phases(train: Train, shot: Capture, spans: list[tuple[float, float]]) 
     Returns
     -------
     ndarray, shape (slots,)
-        2 pi k times the integral of the probe's departure from where it stood at first, in rad.
+        2 pi k times the integral of the probe's departure from its rest, in rad.
     """
     wave = shot.extra["i"]
     integral = interpolant(wave).antiderivative()
     per_unit = shift_rate(train, wave.unit)
     edges = np.clip(np.array(spans), wave.t[0], wave.t[-1])
-    areas = integral(edges[:, 1]) - integral(edges[:, 0]) - wave.v[0] * np.diff(edges)[:, 0]
+    # The operating point is less exact than what the run settles to.
+    rest = np.interp(train.pulse_begin, wave.t, wave.v)
+    areas = integral(edges[:, 1]) - integral(edges[:, 0]) - rest * np.diff(edges)[:, 0]
     return np.asarray(per_unit * areas)
 
 
