@@ -19,7 +19,7 @@ def process(folder: Path, **study: object) -> Process:
 
 
 def test_the_carriers_sidebands_are_noise_of_its_frequency(tmp_path: Path) -> None:
-    # L = 1e-6/f^2, S_phi = 2 L, and f^2 of that in Hz^2/Hz: white, up to 1 Hz where no trim is told.
+    # L = 1e-6/f^2, S_phi = 2 L, and f^2 of that in Hz^2/Hz: white, up to 1 Hz by default.
     found = process(tmp_path, sidebands=[["1 Hz", "-60 dBc/Hz"], ["10 Hz", "-80 dBc/Hz"]])
     for t in (0.2, 30.0):
         wanted = White(2e-6, 1.0).structure(t)
