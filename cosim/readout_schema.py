@@ -264,7 +264,7 @@ class ReadoutTable:
     thermal_population : float
         Of |1> in equilibrium: excites |0> at thermal_population/t1.
     preparation_error : float
-        Probability that the state prepared is the other one.
+        Probability that the pulse which exchanges |0> and |1>, to prepare |1>, does not.
     decay_times : int
         Simulated times of decay.
     shots, records : int
