@@ -1,4 +1,4 @@
-"""What is in an archived run of a gate, written as files that other programs read."""
+"""What is in an archived run, written as files that other programs read."""
 
 import os
 from pathlib import Path
@@ -26,8 +26,8 @@ def export_deck(
 
     Parameters
     ----------
-    result : GateResult
-        A run that simulated a deck.
+    result : GateResult, ReadoutResult or DecisionResult
+        A run that simulated a deck; of a readout it is the deck for |1>.
     folder : path
         Made if it does not exist; it must be empty.
 
@@ -39,11 +39,11 @@ def export_deck(
     Raises
     ------
     InputError
-        If the run is of a readout, has no deck, or keeps it only in part since files of it are
+        If the result is of a study, has no deck, or keeps it only in part since files of it are
         confidential, or the folder is not empty or cannot be written.
     """
-    result = gate_result(result)
-    record = result.run
+    readout = isinstance(result, ReadoutResult | DecisionResult)
+    record = result.run if readout else gate_result(result).run
     if not record.deck_sent:
         raise InputError("the run imported a waveform: there is no deck to export")
     if record.withheld:
@@ -103,14 +103,15 @@ def export_csv(
 def export_envelope(
     result: GateResult | ReadoutResult | DecisionResult, path: str | os.PathLike[str]
 ) -> int:
-    """Write the demodulated envelope of a run as columns with units.
+    """Write the demodulated envelope of a run as columns with units, or the records of a readout.
 
     Parameters
     ----------
-    result : GateResult
+    result : GateResult or ReadoutResult
         The run.
     path : path
-        The file; columns are the time in s, I and Q as carrier peak amplitudes.
+        The file; columns are the time in s, I and Q as carrier peak amplitudes. Of a readout I and
+        Q of the mean record for |0> and for |1>.
 
     Returns
     -------
@@ -120,8 +121,17 @@ def export_envelope(
     Raises
     ------
     InputError
-        If the run is of a readout, or the file cannot be written.
+        If the run is of a comparator, or the file cannot be written.
     """
+    if isinstance(result, ReadoutResult):
+        traces = result.traces
+        states = {"0": traces.ground, "1": traces.excited}
+        parts = {
+            f"{name} of |{state}> (V)": np.asarray(part)
+            for state, record in states.items()
+            for name, part in (("I", record.real), ("Q", record.imag))
+        }
+        return _write({"time (s)": traces.time, **parts}, path)
     result = gate_result(result)
     envelope = result.envelope
     columns = {

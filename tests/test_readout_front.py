@@ -26,7 +26,7 @@ from cosim.dsp.detection.reception import ChainOutput, Detector
 from cosim.dsp.detection.records import Preparation, Records, relaxation
 from cosim.dsp.detection.shots import integrated_shots, record_shots, shot_points
 from cosim.errors import InputError
-from cosim.exporting import export_csv, export_deck, export_envelope
+from cosim.exporting import export_csv
 from cosim.readout_figures import plot_readout
 from cosim.readout_result import (
     READOUT_FIELDS,
@@ -443,22 +443,36 @@ class TestCommands:
         for words in (
             ("compare", archive, archive),
             ("export", archive, "--csv", tmp_path / "a.csv"),
-            ("export", archive, "--envelope", tmp_path / "a.csv"),
-            ("export", archive, "--deck", tmp_path / "deck"),
         ):
             code, out, err = qcosim(*words)
             assert (code, out) == (2, "")
             assert "result of a gate, got a ReadoutResult ('a resonator" in err
         assert not (tmp_path / "a.csv").exists()
-        assert not (tmp_path / "deck").exists()
+
+    def test_deck_and_records_are_exported(
+        self,
+        qcosim: Callable[..., tuple[int, str, str]],
+        archive: Path,
+        result: ReadoutResult,
+        tmp_path: Path,
+    ) -> None:
+        table, folder = tmp_path / "records.csv", tmp_path / "deck"
+        code, _, err = qcosim("export", archive, "--envelope", table, "--deck", folder)
+        assert (code, err.count("rows in")) == (0, 1)
+        assert table.read_text().startswith("time (s),I of |0> (V),Q of |0> (V),I of |1> (V),Q")
+        columns = np.loadtxt(table, delimiter=",", skiprows=1).T
+        np.testing.assert_array_equal(columns[0], result.traces.time)
+        np.testing.assert_array_equal(columns[1] + 1j * columns[2], result.traces.ground)
+        np.testing.assert_array_equal(columns[3] + 1j * columns[4], result.traces.excited)
+        title, rest = result.run.deck_sent.split("\n", 1)
+        sent = f"{title}\n.options seed={result.run.seed}\n{rest}"
+        assert (folder / "deck.cir").read_text() == sent
 
 
-def test_gates_alone_are_compared_and_exported(result: ReadoutResult, tmp_path: Path) -> None:
+def test_gates_alone_are_compared_and_have_waveforms(result: ReadoutResult, tmp_path: Path) -> None:
     for attempt in (
         lambda: compare_runs(result, result),
         lambda: export_csv(result, tmp_path / "a.csv"),
-        lambda: export_envelope(result, tmp_path / "a.csv"),
-        lambda: export_deck(result, tmp_path / "deck"),
         lambda: as_numbers(result),
     ):
         with pytest.raises(InputError, match="result of a gate, got a ReadoutResult"):
