@@ -26,6 +26,8 @@ from cosim.waveform import ComplexArray, Envelope, FloatArray, Waveform
 
 # A number of steps, samples or periods this close to a whole one is one.
 _WHOLE = 1e-6
+# Time steps by which a spline sees the corner at which a pulse begins.
+LOOK_AHEAD = 3
 # Samples of the period from which a carrier at rest is read.
 _REST_SAMPLES = 160
 
@@ -352,7 +354,7 @@ def play(
         np.asarray(interpolant(shot.extra[name])(t)) for name in ("i", "q") if name in shot.extra
     ]
     iq = parts[0] + (1j * parts[1] if len(parts) > 1 else 0.0)
-    rest = iq[min(int(train.pulse_begin / shot.step), iq.size - 1)]
+    rest = iq[min(max(int(train.pulse_begin / shot.step) - LOOK_AHEAD, 0), iq.size - 1)]
     return shot, Envelope(
         0.0, shot.step, (iq - rest).astype(np.complex128), train.carrier, shot.extra["i"].unit
     )

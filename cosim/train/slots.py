@@ -18,7 +18,7 @@ from cosim.quantum.evolution import DriveSpline
 from cosim.quantum.fidelity import average_gate_fidelity, leakage, rotation_of, target_unitary
 from cosim.quantum.frame import free_frame, phase_frame
 from cosim.qubit_drive import couple, make_qubit
-from cosim.train.playing import Train
+from cosim.train.playing import LOOK_AHEAD, Train
 from cosim.waveform import ComplexArray, FloatArray
 
 # From an error vector's first three parts to twice the sine of half the angle of a turn.
@@ -258,7 +258,8 @@ def shift_phases(train: Train, shot: Capture, spans: list[tuple[float, float]]) 
     per_unit = shift_rate(train, wave.unit)
     edges = np.clip(np.array(spans), wave.t[0], wave.t[-1])
     # The operating point is less exact than what the run settles to.
-    rest = np.interp(train.pulse_begin, wave.t, wave.v)
+    last = int(np.searchsorted(wave.t, train.pulse_begin - LOOK_AHEAD * shot.step, "right")) - 1
+    rest = wave.v[max(last, 0)]
     areas = integral(edges[:, 1]) - integral(edges[:, 0]) - rest * np.diff(edges)[:, 0]
     return np.asarray(per_unit * areas)
 
