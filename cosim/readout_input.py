@@ -14,7 +14,7 @@ from cosim.quantum.resonator import Resonator
 from cosim.quantum.resonator_field import Field, evolve_field, fields_with_jump
 from cosim.readout_line import emf_at_source, way_out
 from cosim.readout_pulse import PlayedPulse, incident_field
-from cosim.readout_schema import ReadoutTable, ResonatorTable
+from cosim.readout_schema import MOST_PHOTONS, ReadoutTable, ResonatorTable
 from cosim.waveform import ComplexArray, FloatArray, Waveform
 
 # Part of the answer with which the chain's response to small signals is found.
@@ -100,6 +100,7 @@ def make_answers(
     way = way_out(table, pulse.drive, folder)
     drive = incident_field(pulse, resonator, stop) if played is None else played.drive
     fields = {name: evolve_field(resonator, drive, level) for name, level in _levels(pulse)}
+    _check_photons(fields)
     first = pulse.start
     decays = inner_times(first, table.window[1], table.decay_times if _decays(table) else 0)
     rises = inner_times(
@@ -245,6 +246,18 @@ def inner_times(first: float, last: float, count: int) -> FloatArray:
         In s, the middles of equal parts.
     """
     return np.asarray(first + (last - first) * (np.arange(count) + 0.5) / max(count, 1))
+
+
+def _check_photons(fields: Mapping[str, Field]) -> None:
+    """Refuse a drive that no line attenuates: more photons than 'photons' may say."""
+    most = max(float(one.photons.max()) for one in fields.values())
+    if most > MOST_PHOTONS:
+        raise TestbenchError(
+            f"table [resonator]: the drive puts {most:.3g} photons into the resonator, wanted at "
+            f"most {MOST_PHOTONS:.0e}",
+            hint="'power' is that at the resonator, and a 'pulse' has its line's 'attenuation' in "
+            "the [drive] of its own testbench",
+        )
 
 
 def _levels(pulse: ResonatorTable) -> list[tuple[str, int]]:

@@ -24,6 +24,7 @@ Rate = Annotated[float, Quantity("Hz", least=0.0)]
 Ports = tuple[int, int] | tuple[tuple[int, int], tuple[int, int]]
 
 
+MOST_PHOTONS = 1e6  # far beyond any critical number
 ONE_OUTPUT = "give one of the outputs 'probe', 'i' with 'q', and 'decision'"
 
 
@@ -101,8 +102,11 @@ class ResonatorTable:
             raise InputError("give one of 'photons', 'power' and 'pulse'")
         if self.pulse is not None and (self.boost_length or self.ring_down_length):
             raise InputError("a 'pulse' of a file has its own steps: no 'boost', no 'ring_down'")
-        if self.photons is not None and not 0.0 < self.photons <= 1e6:
-            raise InputError(f"key 'photons': wanted more than 0, got {self.photons:g}")
+        if self.photons is not None and not 0.0 < self.photons <= MOST_PHOTONS:
+            raise InputError(
+                f"key 'photons': wanted more than 0 and at most {MOST_PHOTONS:.0e}, got "
+                f"{self.photons:g}"
+            )
         if not 0.0 < self.boost <= 100.0:
             raise InputError(f"key 'boost': wanted more than 0 and at most 100, got {self.boost:g}")
         if (self.boost != 1.0) != (self.boost_length > 0.0):

@@ -45,6 +45,11 @@ BENT = LINEAR.replace("e1 amp 0 in 0 20", "b1 amp 0 v={20*1m*tanh(v(in)/1m)}")
         ({"readout": {"probe": "i(vin)"}}, LINEAR, "wanted a voltage"),
         ({"resonator": {"length": "1 us"}}, LINEAR, "behind the run's end"),
         (
+            {"resonator": {"photons": None, "power": "-20 dBm"}},
+            LINEAR,
+            "photons into the resonator, wanted at most 1e+06",
+        ),
+        (
             {
                 "resonator": {
                     "qubit_frequency": "4.5 GHz",
