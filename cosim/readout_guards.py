@@ -14,6 +14,7 @@ UNEVEN = 0.05  # of the answers' sizes: beyond, the chain bends one state more t
 SLACK = 3.0  # standard errors between a count and the closed form
 COARSE = 0.05  # of the assignment error, that the interpolation of decays may be wrong by
 CLIPPED = 1e-3  # of the samples
+STEP = 2.0  # of the converter, over the noise of a sample
 NEAR_CRITICAL = 0.1  # of the critical photon number
 CHI_OFF = 0.2  # of chi, against what the coupling makes
 BENT = 0.1  # of the noise, by which a run of all of it may differ from the sum of its parts
@@ -157,6 +158,12 @@ def chain_warnings(
         warnings.append(
             f"{split.clipped:.2%} of the samples are outside the converter's range: a larger "
             "'adc_full_scale', or less gain"
+        )
+    if split.lsb_over_sigma > STEP:
+        warnings.append(
+            f"a step of the converter is {split.lsb_over_sigma:.3g} of the noise of a sample, so "
+            "that rounding is not like noise and the closed form does not hold: a smaller "
+            "'adc_full_scale', more 'adc_bits', or more gain"
         )
     if split.interpolation_error > COARSE * split.assignment_error:
         warnings.append(

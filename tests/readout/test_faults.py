@@ -110,3 +110,12 @@ def test_less_noise_than_there_can_be_is_named(tmp_path: Path) -> None:
     assert "0.2 quanta" in words
     assert result.added_noise_quanta == pytest.approx(0.2, rel=1e-3)
     assert kelvin(1.0) == pytest.approx(0.288, rel=1e-2)
+
+
+def test_a_converter_too_coarse_for_the_noise_is_named(tmp_path: Path) -> None:
+    """Of 8 bits over 50 V a step is 0.2 V, where the noise is of millivolts at most."""
+    adc = {"adc_bits": 8, "adc_full_scale": "50 V", "adc_rate": "100 MHz"}
+    result = run_readout(bench(tmp_path, readout={**FEW, **adc}))
+    (words,) = [text for text in result.warnings if "a step of the converter is" in text]
+    assert "of the noise of a sample, so that rounding is not like noise" in words
+    assert result.split.lsb_over_sigma > 100.0
