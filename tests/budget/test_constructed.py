@@ -303,6 +303,28 @@ def test_carrier_leakage_beside_a_sideband(validate: Validate) -> None:
     assert found.alone == pytest.approx(exact_cost(envelope, X), rel=0.05, abs=0.0)
 
 
+def test_a_steady_line_beside_a_sideband_with_image_and_leakage() -> None:
+    """Image and leaking oscillator turn beside the pulse, and are no lines of their own."""
+    image_part, leaks, line = 0.01 * np.exp(0.4j), 10.0**-1.75, 10.0**-2.25
+    baseband = 60e6
+
+    def envelope(t: FloatArray) -> ComplexArray:
+        pulse = LEVEL * flat_top(t) * np.exp(0.03j)
+        oscillator = np.exp(-2j * math.pi * baseband * t)
+        tone = line * np.exp(2j * math.pi * 37e6 * t)
+        added = image_part * pulse.conj() * oscillator**2
+        return pulse + added + LEVEL * (leaks * oscillator + tone)
+
+    result = budget(envelope, bench_of(budget={"baseband_frequency": f"{baseband} Hz"}))
+    assert [spur.modulated for spur in result.spurs] == [False]
+    assert result.spurs[0].offset == pytest.approx(37e6, rel=1e-3)
+    # 2 % of an amplitude.
+    within = 20.0 * math.log10(1.02)
+    assert result.spurs[0].level == pytest.approx(-45.0, abs=within)
+    assert item(result, "carrier leakage").value == pytest.approx(-35.0, abs=within)
+    assert item(result, "image").value == pytest.approx(-40.0, abs=within)
+
+
 def bell(t: FloatArray) -> FloatArray:
     """A Gaussian of 12 ns, which the record cuts at 5.8 standard deviations."""
     return np.exp(-0.5 * (along(t) * DURATION / 12e-9) ** 2)

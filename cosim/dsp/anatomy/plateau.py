@@ -230,6 +230,8 @@ def _lines(
     span = float(work.grid.t[part][-1] - work.grid.t[part][0])
     rings = any(numbers[name] for name in GROUPS["ringing"])
     count = sum(not spur.clock for spur in spurs)
+    made = compose(numbers, work.grid, shape, spurs, work.wanted.baseband_frequency)
+    named = _named_frequencies(work, numbers)
     for line in find_lines(work.grid.t[part], left):
         if math.isfinite(line.decay_time):
             if rings:
@@ -240,12 +242,12 @@ def _lines(
             continue
         amplitude = line.amplitude * numbers["level"] * np.exp(1j * numbers["phase"])
         frequency = line.frequency + numbers["frequency"]
-        known = [numbers[f"{spur.name}_frequency"] for spur in spurs if not spur.clock]
+        known = [numbers[f"{spur.name}_frequency"] for spur in spurs if not spur.clock] + named
         if any(abs(frequency - other) * span < APART for other in known):
-            # What is left of a line that was found is no line.
+            # What is left of a line that was found, of the image or of the oscillator is no line.
             continue
         tone = amplitude * np.exp(2j * math.pi * frequency * work.grid.t)
-        spur = Spur(f"spur {count + len(added) + 1}", _comes_and_goes(work, size, tone))
+        spur = Spur(f"spur {count + len(added) + 1}", _comes_and_goes(work.iq - made, size, tone))
         values = (float(amplitude.real), float(amplitude.imag))
         begin |= dict(zip(spur.numbers, values, strict=True))
         begin[f"{spur.name}_frequency"] = frequency
@@ -296,13 +298,24 @@ def fit_beside(
     return trial, (*spurs, *steady)
 
 
-def _comes_and_goes(work: Work, size: FloatArray, tone: ComplexArray) -> bool:
-    """Tell whether a line is there during the pulse only: it explains nothing outside of it."""
+def _named_frequencies(work: Work, numbers: dict[str, float]) -> list[float]:
+    """Give where image and leaking oscillator of a sideband lie, which are no lines beside them."""
+    baseband = work.wanted.baseband_frequency
+    if baseband == 0.0:
+        return []
+    return [numbers["frequency"] - baseband, numbers["frequency"] - 2.0 * baseband]
+
+
+def _comes_and_goes(left: ComplexArray, size: FloatArray, tone: ComplexArray) -> bool:
+    """Tell whether a line is there during the pulse only: it explains nothing outside of it.
+
+    `left` is without the carrier that leaks, which turns beside the pulse of a sideband, too.
+    """
     middle = int(np.argmax(size))
     with_it = without = 0.0
     for side in (slice(0, middle), slice(middle, None)):
         there = (size < OUTSIDE)[side]
-        for taken, sign in ((work.iq[side][there], 0), ((work.iq - tone)[side][there], 1)):
+        for taken, sign in ((left[side][there], 0), ((left - tone)[side][there], 1)):
             power = float(np.sum(np.abs(taken - taken.mean()) ** 2)) if taken.size else 0.0
             with_it, without = with_it + power * (1 - sign), without + power * sign
     return not without < 0.5 * with_it
