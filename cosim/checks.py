@@ -17,6 +17,7 @@ from cosim.noisy_circuit import noise_settings
 from cosim.probe_run import TRIAL_POINTS, estimate_run, try_deck
 from cosim.readout import readout_frequency
 from cosim.readout_chain import make_inquiry
+from cosim.readout_entry import readout_noise_tables
 from cosim.readout_input import GROUND
 from cosim.readout_output import make_readout_plan, record_grid
 from cosim.readout_probe import estimate_readout, transients_of
@@ -121,9 +122,8 @@ def _check_readout(
     if source is not None and bench.resonator is not None:
         played = silent_pulse(bench.resonator, plan.request.stop)
     inquiry = make_inquiry(bench, plan, played)
-    for noise in bench.noise:
-        if isinstance(noise, NetlistNoise):
-            noise_settings(noise, plan.deck)
+    for noise in readout_noise_tables(bench):
+        noise_settings(noise, plan.deck)
     grid = record_grid(bench.readout, inquiry.begin)
     request = plan.request
     resolve_saves(plan.deck, request.saves)

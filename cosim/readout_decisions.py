@@ -92,8 +92,6 @@ def run_decisions(
             "answers are scaled until the decision changes",
             hint="of a [sensor] take the output in front of the comparator as 'probe'",
         )
-    if table.adc_bits is not None:
-        raise TestbenchError(f"{where}: 'decision' and a converter do not go together")
     frequency = input_frequency_of(pulse, table)
     plan = make_readout_plan(bench, frequency, deck)
     plan = replace(plan, progress=RunProgress(progress))

@@ -375,6 +375,8 @@ class ReadoutTable:
         parts = (self.adc_bits, self.adc_full_scale, self.adc_rate)
         if any(part is None for part in parts) and any(part is not None for part in parts):
             raise InputError("'adc_bits', 'adc_full_scale' and 'adc_rate' go together")
+        if self.adc_bits is not None and self.decision is not None:
+            raise InputError("'decision' and a converter do not go together")
         if self.adc_bits is not None and not 1 <= self.adc_bits <= 32:
             raise InputError(f"key 'adc_bits': wanted 1 to 32, got {self.adc_bits}")
         if self.q is not None and self.output_frequency is not None and self.adc_rate is not None:

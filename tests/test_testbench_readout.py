@@ -39,6 +39,8 @@ SENSOR = {
 }
 # Below its resonator: chi is negative.
 QUBIT = {"qubit_frequency": "5 GHz", "coupling": "80 MHz", "anharmonicity": "-300 MHz"}
+DECISION = {"i": None, "q": None, "decision": "v(q)", "threshold": "0.5 V"}
+ADC = {"adc_bits": 8, "adc_full_scale": "1 V", "adc_rate": "1 GHz"}
 
 
 def altered(**tables: dict[str, Any] | None) -> dict[str, Any]:
@@ -119,6 +121,7 @@ def test_a_gate_is_insisted_on() -> None:
         ({"readout": {"probe": "v(if)"}}, "one of the outputs"),
         ({"readout": {"i": None}}, "'q' goes with 'i'"),
         ({"readout": {"adc_bits": 8}}, "go together"),
+        ({"readout": {**DECISION, **ADC}}, "'decision' and a converter do not go together"),
         ({"readout": {"window": ["2 us", "1 us"]}}, "the end must come after the start"),
         ({"readout": {"preparation_error": 0.7}}, "wanted 0 to 0.5"),
         ({"readout": {"shots": 3}}, "wanted 1000 to"),
