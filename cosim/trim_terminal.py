@@ -37,10 +37,14 @@ def trim_parts(parts: Sequence[TrimPart], units: Mapping[str, str]) -> list[Rend
     Returns
     -------
     list
-        The trims side by side, the corners and points of the grid where there are up to a dozen,
-        and a line on whose runs the tables after it are.
+        The trims side by side, what they warn of, the corners and points of the grid where there
+        are up to a dozen, and a line on whose runs the tables after it are.
     """
     found: list[RenderableType] = [_side_by_side(parts, units)]
+    for part in parts:
+        for words, count in part.warnings.items():
+            line = f"note: {count} of {part.trims} calibrations ({part.trim}) warn: {words}"
+            found.append(Text(line, style="yellow"))
     points = max((len(part.points) for part in parts), default=0)
     if 1 < points <= _MOST_POINTS:
         found += [Text(""), Text("by corner and point of the grid", style="bold")]

@@ -1,5 +1,6 @@
 """What the runs of a sweep tell of its trims: yields side by side, and what a trim leaves."""
 
+from collections import Counter
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
@@ -91,6 +92,8 @@ class TrimPart:
     left : dict of float
         Medians of the parts of it: "resolution" of the knobs, "bounds", "unreached" by any knob,
         and the "rest".
+    warnings : dict of int
+        What the trims warn of, by its first words, and how many do.
     points : tuple of TrimPoint
         At each corner and point of the grid.
     """
@@ -102,6 +105,7 @@ class TrimPart:
     knobs: tuple[KnobSpread, ...]
     after: float
     left: dict[str, float]
+    warnings: dict[str, int]
     points: tuple[TrimPoint, ...]
 
 
@@ -167,6 +171,7 @@ def compare_trims(
                     for name in PARTS
                     if (values := _finite(part, f"trim.{name}", first)).size
                 },
+                warnings=_warnings(part, first),
                 points=_points(part, others, goal, level),
             )
         )
@@ -206,6 +211,18 @@ def _first_of_trims(table: Table, inputs: Sequence[str], trim: str) -> npt.NDArr
 
 def _finite(table: Table, name: str, rows: npt.NDArray[np.int64]) -> npt.NDArray[np.float64]:
     return table[name][rows].astype(float) if name in table else np.zeros(0)
+
+
+def _warnings(table: Table, rows: npt.NDArray[np.int64]) -> dict[str, int]:
+    """Count the warnings of trims; what follows the first colon is of one die alone."""
+    if "trim.warnings" not in table:
+        return {}
+    counts: Counter[str] = Counter()
+    for text in table["trim.warnings"][rows].tolist():
+        heads = (line.partition(":")[0] for line in str(text).splitlines())
+        # What the run itself warns of stands in its row.
+        counts.update({head for head in heads if head != "the trimmed run"})
+    return dict(counts.most_common())
 
 
 def _spread(key: str, values: npt.NDArray[np.float64]) -> KnobSpread:

@@ -27,6 +27,7 @@ from cosim.sweep.trim_comparison import compare_trims, runs_of_trim
 from cosim.sweep.trims import Trim
 from cosim.sweep_show import show_sweep
 from cosim.testbench import Testbench, load_testbench
+from cosim.trim_terminal import trim_parts
 from tests.sweep.benches import HERE, differing, rows, write_bench
 from tests.sweep.readout_benches import ADC, swept_bench
 
@@ -335,6 +336,21 @@ class TestRuns:
         assert "one trim for all" in out
         assert "a trim for each die" in out
         assert "of the runs with a trim for each die" in out
+
+    def test_what_trims_warn_of_is_told_once(self, tmp_path: Path) -> None:
+        bounds = ("high = 0.16", "high = 0.125")
+        text = f'{KNOB}{SWEEP}trim = "each"\n{AT}{GRID}{DIES}'.replace(*bounds)
+        toml = write_bench(tmp_path, text, deck=DECK)
+        run_sweep(toml, tmp_path / "a.h5", engine=HERE)
+        table = archive.read_table(tmp_path / "a.h5")
+        goal, inputs = make_goal(FIDELITY), ("trim", VDD, GAIN, "sample")
+        (part,) = compare_trims(table, inputs, goal, (LEVEL,), {"each": 4})
+        # Of gains of 1.08 and 0.92 the second asks for 0.143.
+        assert part.warnings == {"the bounds exclude the optimum": 1}
+        assert part.knobs[0].high == 0.125
+        assert "note: 1 of 2 calibrations (each) warn: the bounds exclude the optimum" in [
+            str(item) for item in trim_parts((part,), {})
+        ]
 
     def test_no_runs_yet(self) -> None:
         goal = make_goal(FIDELITY, 1e-4)
