@@ -15,7 +15,7 @@ import numpy as np
 from cosim.quantum.batch import propagate_batch
 from cosim.quantum.batch_drive import BatchDrive
 from cosim.quantum.kernel import IndexArray
-from cosim.specification.pulse import Envelope, IdealPulse
+from cosim.specification.pulse import Envelope, IdealPulse, tone_factor
 from cosim.waveform import ComplexArray, FloatArray
 
 
@@ -215,7 +215,7 @@ def _rates(pulse: IdealPulse, what: Distortion) -> ComplexArray:
     level = np.diff(_stretched(pulse.envelope, pulse, what.stretch), axis=1) / pulse.step
     level = level + what.rounding * pulse.within
     mirrored = np.exp(-2j * math.pi * what.image_offset * middles)
-    mirrored = mirrored * np.sinc(what.image_offset * pulse.step)
+    mirrored = mirrored * tone_factor(pulse, np.array(-what.image_offset))
     level = level + what.image * mirrored * np.conj(level)
     level = level * (1.0 + what.gain) * np.exp(1j * what.turn)
     level = level + what.leakage * _leaking(pulse, what) + what.added * pulse.within

@@ -7,7 +7,7 @@ import numpy as np
 
 from cosim.specification.blocks import PhaseNoiseTable, SpursTable
 from cosim.specification.curves import cell_responses
-from cosim.specification.pulse import IdealPulse, base_infidelity
+from cosim.specification.pulse import IdealPulse, base_infidelity, tone_factor
 from cosim.specification.request import Request
 from cosim.specification.result import LimitMask
 from cosim.specification.spectra import mask_level
@@ -151,7 +151,7 @@ def noise_filter(pulse: IdealPulse, frame: str, offsets: FloatArray) -> FloatArr
     both = [cell_responses(pulse, frame, "added", unit) for unit in (1.0, 1j)]
     responses = both[0] - 1j * both[1]
     wave = np.exp(2j * math.pi * np.outer(offsets, pulse.middles))
-    wave = wave * np.sinc(offsets * pulse.step)[:, None]
+    wave = wave * tone_factor(pulse, offsets)[:, None]
     return np.asarray((np.abs(wave @ responses) ** 2).sum(axis=1))
 
 

@@ -23,7 +23,8 @@ from cosim.specification.request import PulseTable
 from cosim.waveform import ComplexArray, FloatArray
 
 # Cells of the pulse, and those in a turn of the third level against the drive: halving both changes
-# what an imperfection costs by less than a part in a thousand.
+# what an imperfection costs by less than a part in a thousand, white noise that reaches the third
+# level by 2 %.
 CELLS = 128
 PER_TURN = 10.0
 # Room before and after the pulse, for edges that come early or late, as part of the cells.
@@ -260,6 +261,32 @@ def clean_rate(pulse: IdealPulse) -> ComplexArray:
     level = np.diff(pulse.envelope.up_to(pulse.edges)) / pulse.step
     turn = np.exp(2j * math.pi * pulse.offset * pulse.middles)
     return np.asarray(pulse.peak * level * turn)
+
+
+def tone_factor(pulse: IdealPulse, offsets: FloatArray) -> FloatArray:
+    """Give the factor with which a tone in the middle of a cell stands for its course over it.
+
+    Parameters
+    ----------
+    pulse : IdealPulse
+    offsets : ndarray, any shape
+        From the carrier in Hz.
+
+    Returns
+    -------
+    ndarray, shape as `offsets`
+        For the transition next to the tone, the first or the second of the qubit.
+
+    Notes
+    -----
+    Over a cell the transition at an offset f_m turns against a drive that stands still, and takes
+    sinc(f_m step) of it, while of the tone itself it takes the mean, sinc((f - f_m) step).
+    """
+    near = np.zeros_like(offsets)
+    if pulse.qubit.levels > 2:
+        second = pulse.qubit.anharmonicity - pulse.offset
+        near = np.where(np.abs(offsets - second) < np.abs(offsets), second, 0.0)
+    return np.asarray(np.sinc((offsets - near) * pulse.step) / np.sinc(near * pulse.step))
 
 
 def base_infidelity(pulse: IdealPulse) -> float:

@@ -8,7 +8,7 @@ from cosim.dsp.noise.paths import generator
 from cosim.specification.blocks import SpursTable
 from cosim.specification.curves import SMALL_LOSS
 from cosim.specification.distortion import Distortion, distorted_losses
-from cosim.specification.pulse import IdealPulse
+from cosim.specification.pulse import IdealPulse, tone_factor
 from cosim.specification.spectra import paired
 from cosim.waveform import ComplexArray, FloatArray
 
@@ -58,7 +58,7 @@ def tones(pulse: IdealPulse, offset: float, count: int, seed: int, stream: int) 
     Returns
     -------
     ndarray of complex, shape (count, cells)
-        Of amplitude 1, the mean over each cell.
+        Of amplitude 1 for the transition next to it (`tone_factor`).
     """
     half = count // 2
     phases = math.pi * (generator(seed, stream, 0).permutation(half) + 0.5) / half
@@ -128,5 +128,5 @@ def _costs(
 
 def _tone(pulse: IdealPulse, offset: float, phases: FloatArray) -> ComplexArray:
     turn = 2.0 * math.pi * offset * pulse.middles
-    mean = float(np.sinc(offset * pulse.step))
-    return np.asarray(mean * np.exp(1j * (turn + phases[:, None])))
+    factor = float(tone_factor(pulse, np.array(offset)))
+    return np.asarray(factor * np.exp(1j * (turn + phases[:, None])))

@@ -17,7 +17,9 @@ from cosim.quantum.qubit import Qubit
 from cosim.specification.building import curve_names, make_curves
 from cosim.specification.distortion import distorted_losses
 from cosim.specification.gate_specification import specify_gate
-from cosim.specification.request import BLOCKS
+from cosim.specification.masks import noise_filter
+from cosim.specification.pulse import make_pulse
+from cosim.specification.request import BLOCKS, PulseTable
 from cosim.specification.result import GateSpecification
 from cosim.specification.verification import simulate_together
 from tests.specification.benches import (
@@ -32,6 +34,7 @@ from tests.specification.benches import (
 X = np.array([[0, 1], [1, 0]], dtype=complex)
 Y = np.array([[0, -1j], [1j, 0]])
 OMEGA = math.pi / DURATION
+TRANSMON_LEVELS = Qubit(5e9, levels=3, anharmonicity=-300e6)
 BLOCK_TABLES: dict[str, dict[str, Any]] = {
     "amplitude": {},
     "phase": {},
@@ -141,6 +144,47 @@ class TestLimitsSimulatedAgain:
         found, error = mean(OMEGA + scale * both)
         share = spin.block("wideband").share
         assert abs(found - share) < 4 * error + 1e-3 * share
+
+
+def test_a_tone_on_the_second_transition() -> None:
+    # A spur at the anharmonicity turns the second transition, which a cell has to follow.
+    table = {"shape": "raised cosine", "duration": "40 ns", "drag": 0.5}
+    blocks = {"spurs": {"offsets": ["-300 MHz", "60 MHz"]}}
+    qubit = {**TRANSMON, "kind": "transmon"}
+    found = specify_gate(design(blocks, target=2e-4, qubit=qubit, pulse=table))
+    pulse = make_pulse(PulseTable("raised cosine", 40e-9, drag=0.5), TRANSMON_LEVELS, math.pi)
+    steps = 2000
+    dt = 40e-9 / steps
+    t = dt * (np.arange(steps) + 0.5)
+    turn = 2 * math.pi * t / 40e-9
+    slope = math.pi * np.sin(turn) / 40e-9
+    envelope = 0.5 * (1 - np.cos(turn)) + 0.5j * slope / (2 * math.pi * -300e6)
+    lower = np.diag(np.sqrt([1.0, 2.0]), 1).astype(complex)
+    still = np.diag([0.0, 0.0, -2 * math.pi * 300e6]).astype(complex)
+    n = np.arange(3)
+
+    def lost(tone: np.ndarray) -> float:
+        drive = pulse.peak * (envelope + tone) * np.exp(2j * math.pi * pulse.offset * t)
+        u = np.eye(3, dtype=complex)
+        for rate in drive.tolist():
+            half = 0.5 * rate * lower
+            u = expm(-1j * dt * (still + half + half.conj().T)) @ u
+        u = np.exp(-1j * pulse.after * n)[:, None] * u * np.exp(-1j * pulse.before * n)
+        v = u[:2, :2]
+        overlap = abs(np.trace(expm(0.5j * math.pi * X) @ v)) ** 2
+        return float(1 - (overlap + np.sum(np.abs(v) ** 2)) / 6)
+
+    base = lost(np.zeros(steps))
+    mask = found.mask("spurs")
+    for offset, level in zip(mask.low.tolist(), mask.levels.tolist(), strict=True):
+        x = 10 ** (level / 20)
+        phases = 0.5 * math.pi * np.arange(4)
+        costs = [lost(x * np.exp(1j * (2 * math.pi * offset * t + psi))) - base for psi in phases]
+        # Cells of a tenth of a turn: 1e-3. Four phases beside the eight of the mask: 1e-3.
+        assert np.mean(costs) == pytest.approx(found.block("spurs").share, rel=2e-3, abs=0.0)
+        # To first order the filter says the same: the power of a tone is half its square.
+        filtered = noise_filter(pulse, "qubit", np.array([offset]))[0] * x**2 / 2
+        assert filtered == pytest.approx(np.mean(costs), rel=5e-3, abs=0.0)
 
 
 class TestTogether:
