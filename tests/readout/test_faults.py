@@ -5,6 +5,7 @@ from typing import Any
 
 import pytest
 
+from cosim.checks import check_testbench
 from cosim.errors import CosimError
 from cosim.readout import run_readout
 from tests.readout.benches import LINEAR, bench, kelvin
@@ -119,3 +120,10 @@ def test_a_converter_too_coarse_for_the_noise_is_named(tmp_path: Path) -> None:
     (words,) = [text for text in result.warnings if "a step of the converter is" in text]
     assert "of the noise of a sample, so that rounding is not like noise" in words
     assert result.split.lsb_over_sigma > 100.0
+
+
+def test_the_check_refuses_noise_that_is_not_the_netlists(tmp_path: Path) -> None:
+    made = bench(tmp_path, noise=[{"acts_on": "phase", "deviation": "1 deg"}])
+    (tmp_path / "testbench.toml").write_text(made.to_toml(), encoding="utf-8")
+    with pytest.raises(CosimError, match="a readout takes one table"):
+        check_testbench(tmp_path / "testbench.toml")
