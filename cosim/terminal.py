@@ -311,10 +311,10 @@ def comparison_table(comparison: Comparison) -> Group:
     """
     table = Table(box=None, pad_edge=False, header_style="bold")
     table.add_column("", style="bold", no_wrap=True)
-    for name in ("first", "second", "change", ""):
+    for name in ("first", "second", "change", "error bars"):
         table.add_column(name, justify="right", no_wrap=True)
     for item in comparison.numbers:
-        words = {None: "", True: "beyond the error bars", False: "within the error bars"}
+        words = {None: "", True: "beyond", False: "within"}
         verdict = words[item.resolved] if item.change != 0.0 else "equal"
         row = (f"{item.first:.8g}", f"{item.second:.8g}", f"{item.change:+.2e}", verdict)
         table.add_row(item.name.replace("average_gate", "avg"), *row)

@@ -440,14 +440,20 @@ class TestCommands:
     def test_what_takes_gates_refuses_readouts(
         self, qcosim: Callable[..., tuple[int, str, str]], archive: Path, tmp_path: Path
     ) -> None:
-        for words in (
-            ("compare", archive, archive),
-            ("export", archive, "--csv", tmp_path / "a.csv"),
-        ):
-            code, out, err = qcosim(*words)
-            assert (code, out) == (2, "")
-            assert "result of a gate, got a ReadoutResult ('a resonator" in err
+        code, out, err = qcosim("export", archive, "--csv", tmp_path / "a.csv")
+        assert (code, out) == (2, "")
+        assert "result of a gate, got a ReadoutResult ('a resonator" in err
         assert not (tmp_path / "a.csv").exists()
+
+    def test_two_runs_are_compared(
+        self, qcosim: Callable[..., tuple[int, str, str]], archive: Path
+    ) -> None:
+        code, out, _ = qcosim("compare", archive, archive)
+        lines = {line.split()[0]: line.split()[1:] for line in out.splitlines()[1:-1]}
+        assert code == 0
+        assert lines["assignment_error"][2:] == ["+0.00e+00", "equal"]
+        assert lines["errors.separation"][2:] == ["+0.00e+00", "equal"]
+        assert "…" not in out
 
     def test_deck_and_records_are_exported(
         self,
@@ -469,9 +475,24 @@ class TestCommands:
         assert (folder / "deck.cir").read_text() == sent
 
 
-def test_gates_alone_are_compared_and_have_waveforms(result: ReadoutResult, tmp_path: Path) -> None:
+def test_what_a_change_of_a_readout_is_worth(result: ReadoutResult) -> None:
+    traces = replace(result.traces, excited=1.5 * result.traces.excited)
+    bars = {"numerical_floor": 1e-4, "standard_error": 2e-4}
+    first = replace(result, **bars)
+    near = replace(first, assignment_error=first.assignment_error + 5e-4)
+    far = replace(first, assignment_error=first.assignment_error + 7e-4, traces=traces)
+    found = [compare_runs(first, other) for other in (near, far)]
+    errors = [one.numbers[0] for one in found]
+    assert [one.name for one in errors] == ["assignment_error"] * 2
+    # Both have bars of 3e-4.
+    assert [one.resolved for one in errors] == [False, True]
+    assert [one.bar for one in errors] == pytest.approx([6e-4, 6e-4], rel=1e-9)
+    assert found[0].waveform_difference == 0.0
+    assert found[1].waveform_difference == pytest.approx(0.5, rel=1e-12)
+
+
+def test_gates_alone_have_waveforms(result: ReadoutResult, tmp_path: Path) -> None:
     for attempt in (
-        lambda: compare_runs(result, result),
         lambda: export_csv(result, tmp_path / "a.csv"),
         lambda: as_numbers(result),
     ):
