@@ -307,7 +307,10 @@ def gate_result(result: object) -> GateResult:
     if not isinstance(result, GateResult):
         title = getattr(result, "title", "")
         named = f" ({title!r})" * bool(title)
-        raise InputError(f"this takes the result of a gate, got a {type(result).__name__}{named}")
+        raise InputError(
+            f"this takes the result of a gate, got a {type(result).__name__}{named}",
+            hint="of an archive with several runs say which one: --run",
+        )
     return result
 
 

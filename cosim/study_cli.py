@@ -87,13 +87,14 @@ def budget(
     from cosim.budget.study import budget_of, run_budget
     from cosim.dispatch import load
     from cosim.result import gate_result
-    from cosim.study_archive import save_study
+    from cosim.study_archive import load_study, save_study
     from cosim.testbench import gate_bench, load_testbench
 
     check_output(archive, ".h5")
     check_output(plot, ".png", ".pdf", ".svg")
     if source.suffix.lower() == ".h5":
-        result = budget_of(gate_result(load(source, run=run)), fidelity=fidelity)
+        archived = load_study(source, run) or load(source, run=run)
+        result = budget_of(gate_result(archived), fidelity=fidelity)
     elif run is not None:
         raise InputError(f"--run goes with an archive, and {source} is a testbench")
     else:

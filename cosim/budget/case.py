@@ -13,7 +13,7 @@ from cosim.coupling import rate_per_unit
 from cosim.dsp.anatomy.dissection import dissect
 from cosim.dsp.anatomy.parts import Anatomy
 from cosim.dsp.anatomy.shapes import make_grid, sample_shape
-from cosim.errors import InputError, TestbenchError
+from cosim.errors import InputError, TestbenchError, WaveformError
 from cosim.gate import Target, gate_target
 from cosim.quantum.operators import OperatorSystem
 from cosim.quantum.qubit import Qubit
@@ -23,6 +23,8 @@ from cosim.schema import SpectatorTable
 from cosim.testbench import Testbench
 from cosim.waveform import ComplexArray
 
+# Part of the whole record's peak below which a window holds no pulse: the filter's own ripple.
+_LEAST_PULSE = 1e-6
 # Samples of the window at most: a minute with four levels.
 _MOST_SAMPLES = 200_001
 
@@ -43,7 +45,7 @@ def check_gate(bench: Testbench) -> Target:
     ------
     InputError
         If the qubit is given by operators, the target is no turn or one about z, or the table
-        [budget] is wrong.
+        [budget] is wrong or wants DRAG of a spin.
     """
     if bench.qubit.kind == "operators":
         raise InputError(
@@ -63,7 +65,13 @@ def check_gate(bench: Testbench) -> Target:
         raise TestbenchError(
             f"{where}: one ideal pulse turns about an axis in the xy-plane, got '{target.name}'"
         )
-    budget_table(bench)
+    table = budget_table(bench)
+    if bench.qubit.kind == "spin" and (table.pulse == "drag" or table.drag):
+        raise TestbenchError(
+            f"{bench.source or 'the testbench'}, table [budget]: a DRAG quadrature is "
+            "(dI/dt)/alpha of a transmon's anharmonicity alpha, which a spin does not have",
+            hint="leave out 'drag' and pulse = \"drag\", or describe the qubit as a transmon",
+        )
     return target
 
 
@@ -146,6 +154,13 @@ def prepare(result: GateResult, bench: Testbench, table: BudgetTable, target: Ta
             hint="choose a shorter 'window' in [gate], or a carrier nearer to the qubit",
         )
     t = np.linspace(start, stop, count)
+    inside = np.abs(envelope.iq[(envelope.t >= start) & (envelope.t <= stop)])
+    if not inside.max(initial=0.0) > _LEAST_PULSE * float(np.abs(envelope.iq).max()):
+        raise WaveformError(
+            f"there is no pulse at {envelope.carrier_frequency:.6g} Hz within the window of the "
+            f"gate, {start:.4g} s to {stop:.4g} s",
+            hint="see the key 'window' in [gate]",
+        )
     turn = np.exp(2j * math.pi * offset * t)
     iq = np.asarray(CubicSpline(envelope.t, envelope.iq)(t) * turn)
     anharmonicity = 2.0 * math.pi * qubit.anharmonicity if qubit.levels > 2 else 0.0

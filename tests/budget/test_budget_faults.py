@@ -16,6 +16,19 @@ def test_a_waveform_without_a_pulse() -> None:
         budget(lambda t: 0.0 * t)
 
 
+def test_a_window_without_a_pulse() -> None:
+    bench = bench_of(gate={"window": ["0 ns", "10 ns"]})
+    with pytest.raises(WaveformError, match=r"no pulse at 5e\+09 Hz within the window"):
+        budget(lambda t: LEVEL * flat_top(t), bench)
+
+
+@pytest.mark.parametrize("table", [{"pulse": "drag"}, {"drag": 0.5}])
+def test_a_spin_has_no_drag(table: dict[str, object]) -> None:
+    with pytest.raises(TestbenchError, match=r"table \[budget\]: a DRAG quadrature") as error:
+        run_budget(bench_of(budget=table))
+    assert "transmon" in str(error.value)
+
+
 def test_a_target_that_wants_no_pulse() -> None:
     bench = bench_of("identity")
     with pytest.raises(TestbenchError, match="'identity' wants none") as error:

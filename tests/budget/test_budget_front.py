@@ -111,7 +111,8 @@ def test_show(
     assert "process fidelity" in out
     code, _, err = command(monkeypatch, capsys, "budget", str(archive))
     assert code == 2
-    assert "error" in err
+    assert "this takes the result of a gate, got a BudgetResult" in err
+    assert "--run" in err
 
 
 def test_wrong_words(
