@@ -13,6 +13,7 @@ import numpy as np
 
 from cosim.calibration.gate_runs import GateRuns
 from cosim.calibration.judgement import (
+    BEYOND,
     Judgement,
     judge_gate,
     judge_readout,
@@ -193,10 +194,12 @@ def _warnings(
                 f"bound {result.found:.6g}, where the metric changes by {result.slope:.3g} per unit"
             )
             if judgement.best.vector.size:  # What is linear can be followed beyond.
-                text += (
-                    f"; the best is expected at {knob.low + float(optimum) * knob.range:.4g}, for "
-                    f"{judgement.limits.bounds:.2g} less"
-                )
+                expected = f"{knob.low + float(optimum) * knob.range:.4g}"
+                less = f"{judgement.limits.bounds:.2g} less"
+                if abs(float(optimum) - 0.5) > 0.5 + BEYOND * (1.0 - 1e-9):
+                    # No model is asked farther away than that.
+                    expected, less = f"{expected} or beyond", f"at least {less}"
+                text += f"; the best is expected at {expected}, for {less}"
             found.append(text)
     if judgement.alike:
         names = " and ".join(f"'{knobs[at].key.path}'" for at in judgement.alike)

@@ -2,6 +2,7 @@
 
 import itertools
 import math
+import re
 from dataclasses import replace
 from pathlib import Path
 
@@ -101,6 +102,19 @@ def test_bounds_that_exclude_the_optimum(tmp_path: Path) -> None:
     assert result.knobs[0].found == 0.095
     assert result.knobs[0].slope < 0.0
     assert result.limited_by == "bounds"
+    found = re.search(r"the best is expected at ([\d.]+), for", warning)
+    assert found is not None
+    # Sines of half an error angle of up to 9 degrees, seen as a line.
+    assert float(found[1]) == pytest.approx(BEST_LEVEL, rel=0.01)
+
+
+def test_an_optimum_farther_away_than_the_model_is_asked_is_said_to_be_beyond(
+    tmp_path: Path,
+) -> None:
+    # The best is 0, nine times the distance of the bounds below them.
+    result = calibrate(bench(tmp_path, {**PHASE, "low": 9, "high": 10, "start": 9.5}))
+    (warning,) = [text for text in result.warnings if "bounds" in text]
+    assert "the best is expected at 8 or beyond, for at least" in warning
 
 
 def test_a_parameter_that_the_circuit_does_not_use_is_named(tmp_path: Path) -> None:
