@@ -101,7 +101,7 @@ def test_a_gate_is_insisted_on() -> None:
         ({"resonator": {"chi": "0 MHz"}}, "the same for both states"),
         ({"resonator": {"kappa_out": 5}}, r"table \[resonator\], key 'kappa_out'"),
         ({"resonator": {"geometry": "transmission"}}, "kappa_in: wanted more than 0"),
-        ({"resonator": {"kappa_in": "1 MHz"}}, "kappa_in: wanted 0 for the geometry 'hanger'"),
+        ({"resonator": {"kappa_in": "1 MHz"}}, "'hanger', got 1e\\+06 Hz over 2 pi"),
         ({"resonator": {"photons": 2e6}}, "more than 0 and at most 1e\\+06, got 2e\\+06"),
         ({"resonator": {"power": "-120 dBm"}}, "'photons', 'power' and 'pulse'"),
         ({"resonator": {"coupling": "60 MHz"}}, "'qubit_frequency' and 'coupling'"),

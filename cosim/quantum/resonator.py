@@ -79,9 +79,10 @@ class Resonator:
         }[self.geometry]
         for name in ("kappa_in", "kappa_out"):
             if (getattr(self, name) > 0) != (name in wanted):
+                rate = getattr(self, name) / (2.0 * math.pi)
                 raise InputError(
                     f"resonator {name}: wanted {'more than 0' if name in wanted else '0'} for the "
-                    f"geometry '{self.geometry}', got {getattr(self, name)!r} rad/s",
+                    f"geometry '{self.geometry}', got {rate:.6g} Hz over 2 pi",
                     hint=f"the ports of '{self.geometry}': {', '.join(wanted)}; loss elsewhere "
                     "belongs in kappa_internal",
                 )
