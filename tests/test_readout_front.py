@@ -342,6 +342,7 @@ class TestFigure:
         coloured = (np.ptp(picture[..., :3], axis=2) > 0.1).mean()
         assert 0.005 < coloured < 0.3
 
+    @pytest.mark.full
     def test_an_item_that_helps_and_another_format(
         self, result: ReadoutResult, tmp_path: Path
     ) -> None:

@@ -55,6 +55,7 @@ def command(
     return int(end.value.code or 0), out, err
 
 
+@pytest.mark.full
 def test_an_archived_run_is_not_simulated_again(
     archive: Path, result: BudgetResult, monkeypatch: pytest.MonkeyPatch
 ) -> None:

@@ -111,7 +111,9 @@ def test_a_run_is_told_in_a_line() -> None:
     assert run_line(runs[2], 3) == "run 3 (step): 99, 0: failed"
 
 
-@pytest.mark.parametrize("count", [1, 2, 5])
+@pytest.mark.parametrize(
+    "count", [2, *(pytest.param(count, marks=pytest.mark.full) for count in (1, 5))]
+)
 def test_the_figure_draws_any_number_of_knobs(tmp_path: Path, count: int) -> None:
     knobs = tuple(replace(knob_result(f"qubit.k{at}"), stiffness=5e-5 * at) for at in range(count))
     plot_calibration(made(knobs=knobs, numerical_floor=math.nan), tmp_path / "a.png")

@@ -112,7 +112,9 @@ class TestPairs:
         found = qutip.propagator(hamiltonian, edges[-1], collapse, piecewise_t=edges)
         return np.asarray(found.full())
 
-    @pytest.mark.parametrize(("levels", "samples"), [(2, 200), (3, 30)])
+    @pytest.mark.parametrize(
+        ("levels", "samples"), [pytest.param(2, 200, marks=pytest.mark.full), (3, 30)]
+    )
     def test_slices(self, levels: int, samples: int) -> None:
         a = np.diag(np.sqrt(np.arange(1.0, levels)), 1)
         one = np.eye(levels)

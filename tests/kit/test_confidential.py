@@ -87,6 +87,7 @@ def archived(result: GateResult, path: Path) -> str:
     return "\n".join(found)
 
 
+@pytest.mark.full
 def test_nothing_of_a_confidential_kit_is_archived(kit: Path, tmp_path: Path) -> None:
     open_text = archived(cosim.run(bench(kit)), tmp_path / "open.h5")
     assert all(mark in open_text for mark in MARKS)  # The marks would be found.
