@@ -21,6 +21,8 @@ from cosim.specification.building import AnyCurve
 from cosim.specification.converters import RateCurve
 from cosim.waveform import FloatArray
 
+PowerLaw = PchipInterpolator
+
 # Points of the table of each curve between which the least power is sought.
 POINTS = 9
 # A block may get between this part of the budget and nearly all of it.
@@ -127,8 +129,7 @@ def share_by_weights(
 
 def share_for_power(
     names: Sequence[str],
-    curves: Mapping[str, AnyCurve],
-    powers: Mapping[str, tuple[float, float, float]],
+    laws: Mapping[str, PowerLaw],
     given: Mapping[str, float],
     cosines: FloatArray,
     budget: float,
@@ -139,10 +140,8 @@ def share_for_power(
     ----------
     names : sequence of str
         Of all blocks.
-    curves : mapping
-        Of all blocks.
-    powers : mapping of str to (float, float, float)
-        Of the open ones: a in W, n, and the error at which they take a.
+    laws : mapping of str to callable
+        From `power_laws` for the same budget, of the open blocks at least.
     given, cosines, budget
         As in `share_by_weights`.
 
@@ -154,8 +153,7 @@ def share_for_power(
     Raises
     ------
     TestbenchError
-        If a block cannot cost anything, so that no power is too little for it, or no optimum is
-        found.
+        If no optimum is found.
 
     Notes
     -----
@@ -164,7 +162,7 @@ def share_for_power(
     Tucker is the minimum: H. W. Kuhn, A. W. Tucker, "Nonlinear programming" (1951).
     """
     open_names = [name for name in names if name not in given]
-    laws = [_power_law(name, curves[name], powers[name], budget) for name in open_names]
+    laws_open = [laws[name] for name in open_names]
     places = [names.index(name) for name in open_names]
     fixed = np.array([given.get(name, 0.0) for name in names])
 
@@ -174,14 +172,14 @@ def share_for_power(
         return found
 
     def power(z: FloatArray) -> float:
-        return sum(math.exp(float(law(value))) for law, value in zip(laws, z, strict=True))
+        return sum(math.exp(float(law(value))) for law, value in zip(laws_open, z, strict=True))
 
     def slopes(z: FloatArray) -> FloatArray:
         """Of each power over the logarithm of the share."""
         return np.array(
             [
                 math.exp(float(law(value))) * float(law(value, 1))
-                for law, value in zip(laws, z, strict=True)
+                for law, value in zip(laws_open, z, strict=True)
             ]
         )
 
@@ -216,9 +214,41 @@ def share_for_power(
     return Shares(tuple(names), costs(z), multiplier)
 
 
+def power_laws(
+    names: Sequence[str],
+    curves: Mapping[str, AnyCurve],
+    powers: Mapping[str, tuple[float, float, float]],
+    budget: float,
+) -> dict[str, PowerLaw]:
+    """Give the power of each block over its share.
+
+    Parameters
+    ----------
+    names : sequence of str
+        Of the open blocks.
+    curves : mapping
+        Of these at least.
+    powers : mapping of str to (float, float, float)
+        Of these: a in W, n, and the error at which they take a.
+    budget : float
+        To which shares are relative.
+
+    Returns
+    -------
+    dict of str to PchipInterpolator
+        log(P/W) as a function of log(share/budget).
+
+    Raises
+    ------
+    TestbenchError
+        If a block cannot cost the budget, so that no power is too little for it.
+    """
+    return {name: _power_law(name, curves[name], powers[name], budget) for name in names}
+
+
 def _power_law(
     name: str, curve: AnyCurve, law: tuple[float, float, float], budget: float
-) -> PchipInterpolator:
+) -> PowerLaw:
     """Give log(P/W) of a block as a function of log(share/budget), smooth between points."""
     a, n, at = law
     top = curve.limit(budget)

@@ -5,6 +5,7 @@ import time
 from collections.abc import Mapping
 from dataclasses import dataclass, replace
 from datetime import datetime
+from functools import cache
 
 from scipy.optimize import brentq
 
@@ -18,15 +19,9 @@ from cosim.qubit_drive import make_qubit
 from cosim.record import package_versions
 from cosim.schema import GateTable, QubitTable
 from cosim.specification.addition import alignment
-from cosim.specification.allocation import (
-    Shares,
-    all_cosines,
-    combined,
-    share_by_weights,
-    share_for_power,
-)
+from cosim.specification.allocation import all_cosines, combined
 from cosim.specification.building import AnyCurve, curve_names, fastest_offset, make_curves
-from cosim.specification.curves import Curve, no_limit
+from cosim.specification.curves import Curve
 from cosim.specification.masks import make_masks
 from cosim.specification.notes import describe
 from cosim.specification.pulse import (
@@ -38,6 +33,7 @@ from cosim.specification.pulse import (
 )
 from cosim.specification.request import BLOCKS, Request, read_request
 from cosim.specification.result import BlockLimit, GateSpecification, Verification
+from cosim.specification.sharing import powers_at, rounded, shared_errors
 from cosim.specification.small_errors import formula_coefficients
 from cosim.specification.verification import Together, simulate_together
 from cosim.testbench import Bench, DesignBench, Testbench
@@ -98,16 +94,24 @@ def specify_gate(bench: Bench) -> GateSpecification:
     costs = {name: curves[name].cost(error) for name, error in given.items()}
     cosines = _cosines(curves)
     _check_feasible(task, budget, costs, cosines, list(curves))
-    shares = _shares(request, curves, costs, cosines, budget)
-    errors = _errors(request, curves, given, shares)
+    errors, multiplier = shared_errors(request, curves, given, cosines, budget)
     errors, verified = _verified(task, curves, given, errors)
     final = {name: curves[name].cost(errors[name]) for name in curves}
     formulas = formula_coefficients(request, pulse, task.rabi_per_volt)
+    powers = powers_at(request, errors)
     blocks = tuple(
-        _block(task, name, curves[name], errors[name], final[name], formulas[name], name in given)
+        _block(
+            task,
+            name,
+            curves[name],
+            errors[name],
+            final[name],
+            formulas[name],
+            powers.get(name, math.nan),
+            name in given,
+        )
         for name in curves
     )
-    powers = [block.power for block in blocks if not math.isnan(block.power)]
     return GateSpecification(
         title=bench.title,
         target=task.target,
@@ -122,8 +126,8 @@ def specify_gate(bench: Bench) -> GateSpecification:
         blocks=blocks,
         masks=make_masks(request, pulse, task.rabi_per_volt, errors, final),
         verification=verified,
-        total_power=sum(powers) if powers else math.nan,
-        power_per_infidelity=shares.multiplier,
+        total_power=sum(powers.values()) if powers else math.nan,
+        power_per_infidelity=multiplier,
         peak_rabi=pulse.peak / (2.0 * math.pi),
         peak_voltage=pulse.peak / (2.0 * math.pi * task.rabi_per_volt),
         rule=RULE,
@@ -268,43 +272,6 @@ def _check_feasible(
         )
 
 
-def _shares(
-    request: Request,
-    curves: Mapping[str, AnyCurve],
-    given: Mapping[str, float],
-    cosines: FloatArray,
-    budget: float,
-) -> Shares:
-    names = list(curves)
-    if request.table.allocate == "power" and len(given) < len(names):
-        return share_for_power(names, curves, request.powers, given, cosines, budget)
-    weights = {name: request.blocks[name].weight for name in names if name not in given}
-    return share_by_weights(names, weights, given, cosines, budget)
-
-
-def _errors(
-    request: Request, curves: Mapping[str, AnyCurve], given: Mapping[str, float], shares: Shares
-) -> dict[str, float]:
-    """Turn shares into errors; bits are whole."""
-    found = {}
-    for name, share in zip(shares.names, shares.costs, strict=True):
-        found[name] = given[name] if name in given else curves[name].limit(float(share))
-        if math.isinf(found[name]) and name == "dac_rate":
-            # A single sample does.
-            found[name] = request.pulse.duration
-        if math.isinf(found[name]):
-            raise no_limit(BLOCKS[name].label, float(share))
-    return _whole(found, given)
-
-
-def _whole(errors: Mapping[str, float], given: Mapping[str, float]) -> dict[str, float]:
-    """Round the bits up: there are no parts of one."""
-    found = dict(errors)
-    if "dac_bits" in found and "dac_bits" not in given:
-        found["dac_bits"] = 2.0 ** -math.ceil(-math.log2(found["dac_bits"]) - 1e-9)
-    return found
-
-
 def _verified(
     task: _Task,
     curves: Mapping[str, AnyCurve],
@@ -316,36 +283,36 @@ def _verified(
     # What the cells leave out of account belongs to the infidelity as an error bar.
     allowed = table.target - task.floor
 
-    def shrunk(factor: float) -> dict[str, float]:
-        fixed = (*given, "dac_rate")
-        return _whole(
-            {name: x if name in fixed else factor * x for name, x in errors.items()}, given
-        )
+    kept = {*given, "dac_rate"}
+    if set(errors) - kept - {"dac_bits"}:
+        # A bit more would halve an error for the sake of a per cent.
+        kept.add("dac_bits")
 
+    def shrunk(factor: float) -> dict[str, float]:
+        return rounded({name: x if name in kept else factor * x for name, x in errors.items()})
+
+    @cache
     def together(factor: float) -> Together:
         return simulate_together(task.pulse, table.frame, curves, shrunk(factor), table.samples)
 
+    def excess(factor: float) -> float:
+        # What the samples leave open has to fit as well.
+        found = together(factor)
+        return found.infidelity + found.standard_error - allowed
+
     first = together(1.0)
     factor, last = 1.0, first
-    if first.infidelity > allowed:
-        if together(MOST_SHRINKING).infidelity > allowed:
+    if excess(1.0) > 0.0:
+        if excess(MOST_SHRINKING) > 0.0:
             raise TestbenchError(
                 f"[specify]: all blocks at {MOST_SHRINKING:g} of their limits still cost more than "
                 f"the target of {table.target:g} together",
                 hint="what is given may cost too much with the rest; give it less, or more room",
             )
-        factor = float(
-            brentq(
-                lambda one: together(one).infidelity - allowed,
-                MOST_SHRINKING,
-                1.0,
-                xtol=SHRINKING_ACCURACY,
-            )
-        )
-        last = together(factor)
-        while last.infidelity > allowed:
+        factor = float(brentq(excess, MOST_SHRINKING, 1.0, xtol=SHRINKING_ACCURACY))
+        while excess(factor) > 0.0:
             factor -= SHRINKING_ACCURACY
-            last = together(factor)
+        last = together(factor)
     return shrunk(factor), Verification(
         last.infidelity,
         last.standard_error,
@@ -363,10 +330,10 @@ def _block(
     error: float,
     share: float,
     formula: float,
+    power: float,
     given: bool,
 ) -> BlockLimit:
     kind = BLOCKS[name]
-    law = task.request.powers.get(name)
     beside = math.nan
     if formula > 0.0 and share > 0.0:
         beside = kind.value(math.sqrt(share / formula))
@@ -378,7 +345,7 @@ def _block(
         given=given,
         share=share,
         formula=beside,
-        power=math.nan if law is None else law[0] * (error / law[2]) ** -law[1],
+        power=power,
         note=describe(
             name, task.request.blocks[name], curve, task.pulse, error, task.pulse.qubit.frequency
         ),

@@ -122,7 +122,7 @@ def wideband_mask(pulse: IdealPulse, frame: str, rabi_per_volt: float, share: fl
     costs = _band_costs(pulse, frame, rabi_per_volt, bands)
     return LimitMask(
         "wideband",
-        "of noise in that band alone",
+        "noise in that band alone",
         "V^2/Hz",
         np.array([low for low, _ in bands]),
         np.array([high for _, high in bands]),

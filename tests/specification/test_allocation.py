@@ -1,5 +1,6 @@
 """Oracle: Lagrange's closed form for two blocks, and the conditions of Karush, Kuhn and Tucker."""
 
+import contextlib
 import math
 from dataclasses import dataclass
 
@@ -7,7 +8,12 @@ import numpy as np
 import pytest
 
 from cosim.errors import TestbenchError
-from cosim.specification.allocation import combined, share_by_weights, share_for_power
+from cosim.specification.allocation import (
+    combined,
+    power_laws,
+    share_by_weights,
+    share_for_power,
+)
 from cosim.specification.gate_specification import specify_gate
 from tests.specification.benches import design
 
@@ -51,7 +57,7 @@ def power(shares: np.ndarray) -> np.ndarray:
 def test_two_blocks_as_lagrange_has_them() -> None:
     # P = sum of a_i k_i at_i^2/e_i under e_1 + e_2 = B: e_i goes with sqrt(a_i k_i at_i^2).
     names, budget = ("a", "d"), 1e-4
-    found = share_for_power(names, CURVES, POWERS, {}, np.eye(2), budget)
+    found = share_for_power(names, power_laws(names, CURVES, POWERS, budget), {}, np.eye(2), budget)
     parts = np.array([math.sqrt(POWERS[n][0] * CURVES[n].k) * POWERS[n][2] for n in names])
     wanted = budget * parts / parts.sum()
     # The optimiser ends where the power no longer changes by 1e-13, about its flat minimum.
@@ -61,8 +67,9 @@ def test_two_blocks_as_lagrange_has_them() -> None:
 
 
 def test_the_optimum_meets_the_conditions() -> None:
-    budget, given = 3e-4, {}
-    found = share_for_power(NAMES, CURVES, POWERS, given, COSINES, budget)
+    budget = 3e-4
+    laws = power_laws(NAMES, CURVES, POWERS, budget)
+    found = share_for_power(NAMES, laws, {}, COSINES, budget)
     costs = found.costs
     assert combined(costs, COSINES) == pytest.approx(budget, rel=1e-9, abs=0.0)
     exponents = np.array([POWERS[name][1] for name in NAMES])
@@ -105,6 +112,41 @@ def test_least_power_through_the_exact_curves() -> None:
     assert found.total_power == pytest.approx(jitter.power + noise.power, rel=1e-12)
     equal = specify_gate(design(blocks))
     assert found.total_power < equal.total_power
+
+
+def test_whole_bits_of_least_power_and_the_rest_shared_anew() -> None:
+    # Oracle: all numbers of bits tried by hand, with a parabola for the other block.
+    law = {"a": "1 mW", "n": 2, "at": "20 ps"}
+    blocks = {
+        "jitter": {"power": law},
+        "dac_bits": {"rate": "1 GHz", "power": {"a": "2 mW", "n": 1, "at": 8}},
+    }
+    found = specify_gate(design(blocks, allocate="power"))
+    chosen = int(found.block("dac_bits").limit)
+    powers = {}
+    for bits in range(4, 12):
+        given = {**blocks, "dac_bits": {**blocks["dac_bits"], "value": bits}}
+        with contextlib.suppress(TestbenchError):  # Of few bits, which cost more than the target.
+            powers[bits] = specify_gate(design(given, allocate="power")).total_power
+    assert len(powers) > 4
+    assert chosen == min(powers, key=lambda bits: powers[bits])
+    # The same limits; what rounding left is spent, up to 1e-4 of an error and 1e-3 of shrinking.
+    assert found.total_power == pytest.approx(powers[chosen], rel=1e-6, abs=0.0)
+    assert found.verification.infidelity > 0.99 * found.target_infidelity
+
+
+def test_shrinking_takes_no_bit_more() -> None:
+    # The rule leaves out the product of two errors about one axis, so that the limits shrink.
+    blocks = {"amplitude": {}, "timing": {}, "dac_bits": {"rate": "1 GHz"}}
+    found = specify_gate(design(blocks, target=0.02))
+    assert 0.9 < found.verification.shrinking < 1.0
+    bits = found.block("dac_bits")
+    kept = specify_gate(
+        design({**blocks, "dac_bits": {"rate": "1 GHz", "value": int(bits.limit)}}, target=0.02)
+    )
+    assert kept.verification.shrinking == pytest.approx(found.verification.shrinking, rel=2e-3)
+    # A bit less would have cost more than its part of the target.
+    assert 4 * bits.share > 0.02 / 9
 
 
 @pytest.mark.parametrize(
