@@ -230,8 +230,11 @@ def _lines(
     span = float(work.grid.t[part][-1] - work.grid.t[part][0])
     rings = any(numbers[name] for name in GROUPS["ringing"])
     count = sum(not spur.clock for spur in spurs)
-    made = compose(numbers, work.grid, shape, spurs, work.wanted.baseband_frequency)
     named = _named_frequencies(work, numbers)
+    # What leaks stands still when it is turned back.
+    leaks = numbers["frequency"] - work.wanted.baseband_frequency
+    back = np.exp(-2j * math.pi * leaks * work.grid.t)
+    beside = work.iq - compose(numbers, work.grid, shape, spurs, work.wanted.baseband_frequency)
     for line in find_lines(work.grid.t[part], left):
         if math.isfinite(line.decay_time):
             if rings:
@@ -247,7 +250,10 @@ def _lines(
             # What is left of a line that was found, of the image or of the oscillator is no line.
             continue
         tone = amplitude * np.exp(2j * math.pi * frequency * work.grid.t)
-        spur = Spur(f"spur {count + len(added) + 1}", _comes_and_goes(work.iq - made, size, tone))
+        modulated = _comes_and_goes(beside * back, size, tone * back)
+        if not modulated:
+            beside = beside - tone
+        spur = Spur(f"spur {count + len(added) + 1}", modulated)
         values = (float(amplitude.real), float(amplitude.imag))
         begin |= dict(zip(spur.numbers, values, strict=True))
         begin[f"{spur.name}_frequency"] = frequency
@@ -309,7 +315,7 @@ def _named_frequencies(work: Work, numbers: dict[str, float]) -> list[float]:
 def _comes_and_goes(left: ComplexArray, size: FloatArray, tone: ComplexArray) -> bool:
     """Tell whether a line is there during the pulse only: it explains nothing outside of it.
 
-    `left` is without the carrier that leaks, which turns beside the pulse of a sideband, too.
+    A carrier that leaks is a constant in `left` on each side of the pulse, of any size.
     """
     middle = int(np.argmax(size))
     with_it = without = 0.0
