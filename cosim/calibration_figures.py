@@ -152,7 +152,8 @@ def _draw_knob(axes: Axes, result: CalibrationResult, knob: KnobResult) -> None:
     axes.set_ylim(bottom=0.0)
     axes.set_xlabel(f"{knob.key}{unit}", fontsize=8)
     axes.set_ylabel("metric, the others at rest", fontsize=8)
-    axes.legend(fontsize=7)
+    # Between the arms of the curve, and clear of what is written beside its foot.
+    axes.legend(fontsize=7, loc="upper center")
 
 
 def _scaled(knob: KnobResult) -> tuple[float, str]:
