@@ -86,6 +86,8 @@ def _draw_runs(axes: Axes, result: CalibrationResult) -> None:
 
 def _draw_limits(axes: Axes, result: CalibrationResult) -> None:
     limits = result.limits
+    # What is below a ten-thousandth of the whole need not be seen.
+    least = 1e-4 * result.after
     items = {
         name: value
         for name, value in (
@@ -94,19 +96,16 @@ def _draw_limits(axes: Axes, result: CalibrationResult) -> None:
             ("bounds", limits.bounds),
             ("unreached", limits.unreached),
         )
-        if value > 0.0
+        if value > least
     }
     names = list(items)
     colours = ["C3" if name == result.limited_by else "0.6" for name in names]
     axes.barh(range(len(names)), list(items.values()), color=colours, height=0.6)
     axes.set_xscale("log")
-    # What is below a ten-thousandth of the whole need not be seen.
-    least = 1e-4 * result.after
     axes.set_xlim(least, 10.0 * result.after)
     axes.set_yticks(range(len(names)), [limit_label(result, name) for name in names], fontsize=8)
     for at, value in enumerate(items.values()):
-        if value > least:
-            axes.text(value, at, f" {value:.1e}", va="center", fontsize=7)
+        axes.text(value, at, f" {value:.1e}", va="center", fontsize=7)
     if result.numerical_floor > least:
         axes.axvline(result.numerical_floor, color="0.4", lw=1, ls="--")
     axes.set_xlabel("part of the metric")
