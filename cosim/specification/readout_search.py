@@ -9,6 +9,7 @@ import numpy as np
 from scipy.optimize import brentq
 
 from cosim.dsp.detection.converter import Adc
+from cosim.dsp.detection.reception import receive
 from cosim.errors import TestbenchError
 from cosim.specification.readout_formulas import noise_temperature_of
 from cosim.specification.readout_model import (
@@ -17,6 +18,7 @@ from cosim.specification.readout_model import (
     ReadoutTask,
     best_stop,
     chain_output,
+    detector_of,
     error_of,
     judge,
     sample_interval,
@@ -127,18 +129,20 @@ def _search_noise(
         # The best length grows with the noise, so that the whole window is nearer to it than that
         # of a chain without noise; about the best the error is flat.
         chain = replace(chain, stop=task.latest)
-    found = _noise_at_length(task, chain, allowed)
+    found = _noise_at_length(task, request, chain, allowed)
     for _ in range(MOST_ROUNDS if free else 0):
         stop = best_stop(task, found.chain)
         if error_of(task, replace(found.chain, stop=stop)) > found.error * (1.0 - FLAT):
             break
-        found = _noise_at_length(task, replace(chain, stop=stop), allowed)
+        found = _noise_at_length(task, request, replace(chain, stop=stop), allowed)
     return found
 
 
-def _noise_at_length(task: ReadoutTask, chain: ChainLimits, allowed: float) -> Found:
+def _noise_at_length(
+    task: ReadoutTask, request: ReadoutRequest, chain: ChainLimits, allowed: float
+) -> Found:
     def at(temperature: float) -> Found:
-        one = replace(chain, noise_temperature=temperature)
+        one = _ranged(task, request, replace(chain, noise_temperature=temperature))
         return Found(one, error_of(task, one))
 
     high = 2.0 * noise_temperature_of(1.0, task.frequency)
@@ -173,11 +177,10 @@ def _search_integration(
 def _search_bandwidth(
     task: ReadoutTask, request: ReadoutRequest, chain: ChainLimits, allowed: float
 ) -> Found:
-    del request
     high = FASTEST_POLE / task.step
 
     def at(logarithm: float) -> Found:
-        one = replace(chain, bandwidth=math.exp(logarithm))
+        one = _ranged(task, request, replace(chain, bandwidth=math.exp(logarithm)))
         return Found(one, error_of(task, one))
 
     if at(math.log(high)).error > allowed:
@@ -284,6 +287,13 @@ def _with_bits(
     return replace(chain, adc=Adc(bits, 2.0 * (mean + REACH * sigma), rate))
 
 
+def _ranged(task: ReadoutTask, request: ReadoutRequest, chain: ChainLimits) -> ChainLimits:
+    """Let the range of given converters follow the noise of the chain, unless it is given too."""
+    if chain.adc is None:
+        return chain
+    return _with_bits(task, request, chain, chain.adc.bits)
+
+
 def at_converter(task: ReadoutTask, chain: ChainLimits, rate: float) -> tuple[float, float]:
     """Give what comes to the converters.
 
@@ -299,13 +309,13 @@ def at_converter(task: ReadoutTask, chain: ChainLimits, rate: float) -> tuple[fl
     tuple of two floats
         Largest mean of a quadrature, and standard deviation of a sample of it, in V.
     """
-    fine = Adc(24, 1.0, rate)
     output = chain_output(task, chain)
     means = np.concatenate([output.records.ground, output.records.excited])
     mean = float(max(np.abs(means.real).max(), np.abs(means.imag).max()))
-    wide = replace(fine, full_scale=1e3 * mean)
-    split = judge(task, replace(chain, adc=wide))
-    return mean, wide.lsb / split.lsb_over_sigma
+    # Neither bits nor range matter where nothing is rounded, but the filter of that rate does.
+    detector = detector_of(task, replace(chain, adc=Adc(1, mean, rate)))
+    sigmas = receive(output, detector, rounding=False).sample_sigmas
+    return mean, float(sigmas.max())
 
 
 def _just_within(at: Callable[[float], Found], place: float, allowed: float, step: float) -> Found:

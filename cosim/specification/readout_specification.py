@@ -8,6 +8,7 @@ closed form does.
 
 import math
 import time
+from collections.abc import Mapping
 from dataclasses import replace
 from datetime import datetime
 
@@ -53,6 +54,10 @@ from cosim.specification.result import BlockLimit
 from cosim.testbench import Bench, DesignBench, ReadoutBench
 from cosim.units import format_quantity
 
+# The bits keep what they took, and this part of what they might have: with other limits before
+# them they take a little more or less.
+ROUNDING_ROOM = 0.1
+
 
 def specify_readout(bench: Bench) -> ReadoutSpecification:
     """Work out what the blocks of a readout must meet.
@@ -89,24 +94,48 @@ def specify_readout(bench: Bench) -> ReadoutSpecification:
     error_given = judge(task, chain).assignment_error
     if error_given >= request.target:
         raise _given_too_bad(request, error_given, base.assignment_error)
-    weights = request.weights
-    unit = (request.target - error_given) / sum(weights.values())
+    founds = _switched_on(task, request, chain, error_given)
     blocks = []
     error = error_given
-    for name, weight in weights.items():
-        allowed = error + weight * unit
-        found = search_limit(name, task, request, chain, allowed)
+    for name, found in founds.items():
         limit = _limit_of(name, task, found.chain)
         beside = _formula(name, task, pulse, base, found, error)
         blocks.append(_block(name, task, found.chain, limit, found.error - error, beside, False))
         chain, error = found.chain, found.error
-    given = [name for name in LABELS if name not in weights and getattr(request, name) is not None]
+    given = [name for name in LABELS if name not in founds and getattr(request, name) is not None]
     share = error_given - base.assignment_error
     for name in given:
         # Those that are given were worked out together, so that each is told with all of them.
         limit = _limit_of(name, task, chain)
         blocks.append(_block(name, task, chain, limit, share, math.nan, True))
     return _result(bench, task, request, base, chain, blocks, started, clock)
+
+
+def _switched_on(
+    task: ReadoutTask, request: ReadoutRequest, chain: ChainLimits, error: float
+) -> dict[str, Found]:
+    """Switch the open blocks on one after the other, each with its part of the error."""
+
+    def found_with(parts: Mapping[str, float]) -> dict[str, Found]:
+        found: dict[str, Found] = {}
+        last = Found(chain, error)
+        for name, part in parts.items():
+            last = search_limit(name, task, request, last.chain, last.error + part)
+            found[name] = last
+        return found
+
+    weights = request.weights
+    left = request.target - error
+    parts = {name: left * weight / sum(weights.values()) for name, weight in weights.items()}
+    found = found_with(parts)
+    others = [name for name in weights if name != "adc"]
+    if "adc" not in weights or not others:
+        return found
+    # Bits are whole: what the others can have is all but what they take.
+    taken = max(0.0, found["adc"].error - found[others[-1]].error)
+    kept = min(taken + ROUNDING_ROOM * parts["adc"], parts["adc"])
+    unit = (left - kept) / sum(weights[name] for name in others)
+    return found_with({name: unit * weights[name] for name in others} | {"adc": kept})
 
 
 def readout_tables(bench: Bench) -> tuple[ResonatorTable, ReadoutTable]:

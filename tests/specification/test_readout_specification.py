@@ -171,12 +171,31 @@ class TestSpecification:
         total = whole.base_error + sum(block.share for block in whole.blocks)
         assert whole.assignment_error == pytest.approx(total, rel=1e-3, abs=0.0)
         assert whole.assignment_error <= whole.target_error
-        part = (whole.target_error - whole.base_error) / 4
+        # Whole bits are left what they take and a tenth of their part; the others share all else.
+        bits = whole.block("adc").share
+        left = whole.target_error - whole.base_error
+        assert 0.0 <= bits <= left / 4
+        part = (left - bits) / 3
+        spare = 0.1 * left / 4
         for name in ("noise", "integration", "bandwidth"):
             # A length ends on a sample of 4 ns; roots are on the side of what is allowed.
-            room = 0.05 if name == "integration" else 2e-3
+            room = spare / part + (0.05 if name == "integration" else 2e-3)
             assert part * (1 - room) < whole.block(name).share < part * (1 + 1e-3)
-        assert 0.0 <= whole.block("adc").share <= part
+        assert whole.assignment_error > 0.95 * whole.target_error
+
+    def test_the_range_of_given_bits_follows_the_noise(self) -> None:
+        # It holds the signal and four sigma of the chain's own noise, behind the pole that is
+        # found, not that of a chain without noise and without an end.
+        value = 5
+        given = {"noise": {}, "bandwidth": {}, "adc": {"rate": "250 MHz", "value": value}}
+        again = specify_readout(bench(given, target=0.02))
+        task = task_of(bench(given, target=0.02), 250e6)
+        chain = ChainLimits(quanta(1.0), task.latest, again.block("bandwidth").limit)
+        records = chain_output(task, chain).records
+        means = np.concatenate([records.ground, records.excited])
+        mean = max(np.abs(means.real).max(), np.abs(means.imag).max())
+        sigma = again.full_scale / 2**value / again.lsb_over_sigma
+        assert again.full_scale == pytest.approx(2 * (mean + 4 * sigma), rel=1e-6)
 
     def test_shots_say_the_same(self, whole: ReadoutSpecification) -> None:
         for counts in (whole.shots, whole.records):
