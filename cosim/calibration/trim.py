@@ -208,7 +208,10 @@ def _warnings(
             "among them is arbitrary"
         )
     if isinstance(bench, Testbench) and any(isinstance(n, NetlistNoise) for n in bench.noise):
-        found.append("the netlist's own noise is left out of the metric, since it moves no optimum")
+        found.append(
+            "the netlist's own noise has no part in the search, nor in the metric told here: run "
+            "the trimmed testbench for what it costs"
+        )
     gain = ended.start.value - judgement.best.value
     if 0.0 <= gain < ended.last.error_bar:
         found.append(

@@ -15,6 +15,7 @@ from cosim.calibration.result import CALIBRATION_KINDS, CalibrationResult, calib
 from cosim.calibration.trim import calibrate, moved, trimmed
 from cosim.errors import InputError, SimulationError
 from cosim.testbench import Testbench
+from cosim.voltage_noises import NetlistNoise
 from tests.calibration.pulses import LEVEL, PHASE, bench
 from tests.sources import ALLEN_EBERLY, KRANTZ
 from tests.validation import Validate
@@ -115,6 +116,15 @@ def test_an_optimum_farther_away_than_the_model_is_asked_is_said_to_be_beyond(
     result = calibrate(bench(tmp_path, {**PHASE, "low": 9, "high": 10, "start": 9.5}))
     (warning,) = [text for text in result.warnings if "bounds" in text]
     assert "the best is expected at 8 or beyond, for at least" in warning
+
+
+def test_the_netlists_own_noise_is_said_to_be_no_part_of_the_metric(tmp_path: Path) -> None:
+    made = bench(tmp_path, LEVEL)
+    noisy = replace(made, noise=(NetlistNoise("probe", "netlist", method="stationary"),))
+    quiet, result = calibrate(made), calibrate(noisy)
+    (warning,) = set(result.warnings) - set(quiet.warnings)
+    assert "nor in the metric told here: run the trimmed testbench" in warning
+    assert result.after == quiet.after
 
 
 def test_a_parameter_that_the_circuit_does_not_use_is_named(tmp_path: Path) -> None:
