@@ -34,10 +34,10 @@ class PowerTable:
 
     def __post_init__(self) -> None:
         if not 0.0 < self.a < math.inf:
-            raise InputError(f"'power': wanted a power 'a' above 0 W, got {self.a:g} W")
+            raise InputError(f"wanted a power 'a' above 0 W, got {self.a:g} W")
         if not 0.0 < self.n < math.inf:
             raise InputError(
-                f"'power': wanted an exponent 'n' above 0, got {self.n:g}",
+                f"wanted an exponent 'n' above 0, got {self.n:g}",
                 hint="P = a (x/at)^-n: a tighter limit must take more power, or the least power is "
                 "that of the tightest limit",
             )
