@@ -28,7 +28,7 @@ from cosim.command_options import (
     check_output,
 )
 from cosim.errors import CosimError, InputError, MissingDependencyError, SimulationError
-from cosim.study_cli import STUDY_COMMANDS, show_study
+from cosim.study_cli import STUDY_COMMANDS, draw_study, show_study, show_study_log
 from cosim.sweep_cli import (
     COMMANDS,
     LimitOption,
@@ -135,10 +135,7 @@ def run(
         number = save(result, archive)
         typer.echo(f"archived as run {number} of {archive}", err=True)
     if plot is not None:
-        from cosim.result_figures import plot_result
-
-        plot_result(result, plot)
-        typer.echo(f"figure in {plot}", err=True)
+        _plot_result(result, plot)
 
 
 @app.command(epilog="Example: qcosim show x90.h5 --run 1 --log")
@@ -178,11 +175,13 @@ def show(
                 archive, json_output=json_output, plot=plot, limit=limit, metric=metric, table=True
             )
         return
-    if limit is not None or metric is not None or plot is not None or testbench:
+    if limit is not None or metric is not None or testbench:
         raise InputError(
-            f"{archive} holds single runs and no sweep, which alone has --limit, --metric, "
-            "--plot and --testbench"
+            f"{archive} holds single runs and no sweep, which alone has --limit, --metric and "
+            "--testbench"
         )
+    if plot is not None and (run is None or log):
+        raise InputError(f"say which run of {archive} to draw: --run N")
     if run is None and not log:
         table = read_table(archive)
         if json_output:
@@ -191,8 +190,13 @@ def show(
             console.print(runs_table(table))
         return
     study = load_study(archive, run)
+    if study is not None and log:
+        show_study_log(study, json_output)
+        return
     if study is not None:
-        show_study(study, json_output, log=log)
+        show_study(study, json_output)
+        if plot is not None:
+            draw_study(study, plot)
         return
     result = load(archive, run=run)
     if log:
@@ -201,6 +205,8 @@ def show(
         _print_result(result, json_output)
         if not json_output:
             console.print(record_table(result))
+        if plot is not None:
+            _plot_result(result, plot)
 
 
 @app.command(epilog="Example: qcosim export x90.h5 --run 1 --deck x90_deck")
@@ -277,6 +283,13 @@ def _print_result(result: "GateResult | ReadoutResult | DecisionResult", json_ou
         typer.echo(json.dumps(numbers_of(result), indent=2))
     else:
         Console(highlight=False).print(table_of(result))
+
+
+def _plot_result(result: "GateResult | ReadoutResult | DecisionResult", path: Path) -> None:
+    from cosim.result_figures import plot_result
+
+    plot_result(result, path)
+    typer.echo(f"figure in {path}", err=True)
 
 
 def _refuse_failed(archive: Path, run: int | None) -> None:

@@ -90,6 +90,11 @@ def test_run_prints_archives_and_draws(qcosim: Cli, bench: Path, tmp_path: Path)
     assert json.loads(out, parse_constant=pytest.fail)["target"] == ["x90"]
     code, out, _ = qcosim("show", archive, "--run", 1, "--json")
     assert list(json.loads(out)) == list(GATE_FIELDS)
+    again = tmp_path / "again.png"
+    assert qcosim("show", archive, "--run", 1, "--plot", again)[0] == 0
+    assert again.read_bytes() == figure.read_bytes()
+    code, _, err = qcosim("show", archive, "--plot", again)
+    assert (code, "--run N" in err) == (2, True)
     code, _, err = qcosim("show", archive, "--run", 7)
     assert code == 2
     assert "7" in err

@@ -160,3 +160,9 @@ def test_the_command_prints_archives_and_draws(tmp_path: Path) -> None:
     assert (
         "dominated by" in runner.invoke(app, ["show", str(tmp_path / "a.h5"), "--run", "1"]).stdout
     )
+    drawn = runner.invoke(
+        app, ["show", str(tmp_path / "a.h5"), "--run", "1", "--plot", str(tmp_path / "b.png")]
+    )
+    assert drawn.exit_code == 0, drawn.output
+    assert (tmp_path / "b.png").read_bytes() == (tmp_path / "a.png").read_bytes()
+    assert runner.invoke(app, ["show", str(tmp_path / "a.h5"), "--log"]).exit_code == 1

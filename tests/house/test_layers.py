@@ -111,6 +111,8 @@ FLOORS = {
     "result_figures": 7,
     "sweep_cli": 7,
     "study_cli": 7,
+    "study_show": 7,
+    "study_figures": 7,
     "study_checks": 7,
     "calibration_terminal": 7,
     "calibration_figures": 7,
