@@ -8,7 +8,7 @@ import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.figure import Figure
-from matplotlib.ticker import FuncFormatter, NullFormatter, NullLocator
+from matplotlib.ticker import FuncFormatter, LogLocator, NullFormatter, NullLocator
 
 from cosim.calibration_terminal import METRICS
 from cosim.drift.result import DriftResult
@@ -21,6 +21,9 @@ _MARKS = (1e-6, 1e-3, 1.0, 10.0, 60.0, 600.0, 3600.0, 6 * 3600.0, 86400.0, 86400
 _DASHES: tuple[Any, ...] = ("-", "--", "-.", ":", (0, (5, 1)), (0, (1, 1)))
 # Sources that cost less than this part of the largest are not drawn.
 _LEAST_SHARE = 1e-5
+# Ratios of the ends of an axis, beyond which all levels between powers of ten, and even two of
+# them, would run into one another.
+_FEW, _MANY = 8.0, 300.0
 
 
 def plot_drift(result: DriftResult, path: str | os.PathLike[str]) -> None:
@@ -71,6 +74,17 @@ def _draw_mean(axes: Axes, result: DriftResult) -> None:
     axes.set_yscale("log")
     axes.set_ylabel(METRICS[result.metric].replace(" after ", "\nafter "))
     axes.legend(fontsize=7, loc="upper left")
+    _mark_levels(axes)
+
+
+def _mark_levels(axes: Axes) -> None:
+    """Label the levels between powers of ten as far as there is room for them."""
+    low, high = axes.get_ylim()
+    if high > _MANY * low:
+        axes.yaxis.set_minor_formatter(NullFormatter())
+        return
+    if high > _FEW * low:
+        axes.yaxis.set_minor_locator(LogLocator(subs=(2.0, 5.0)))
     axes.yaxis.set_minor_formatter(FuncFormatter(lambda value, _: f"{value:.1e}"))
     axes.tick_params(axis="y", which="minor", labelsize=7)
 

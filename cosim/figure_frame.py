@@ -29,7 +29,7 @@ def write_figure(
     InputError
         If the file cannot be written.
     """
-    figure.suptitle(title)
+    figure.suptitle(title, wrap=True)
     figure.text(0.995, 0.002, CAUTION, ha="right", va="bottom", fontsize=6, color="0.45")
     rect = (0, margin, 1, 1 - margin)
     figure.get_layout_engine().set(rect=rect)  # type: ignore[union-attr, call-arg]

@@ -108,7 +108,7 @@ def plot_sweep(
     FigureCanvasAgg(figure)
     for at, draw in enumerate(panels, start=1):
         draw(figure.add_subplot(rows, columns, at))
-    figure.suptitle("each die trimmed, " * _both(table) + _title(summary))
+    figure.suptitle("each die trimmed, " * _both(table) + _title(summary), wrap=True)
     figure.text(0.995, 0.003, CAUTION, ha="right", va="bottom", fontsize=6, color="0.45")
     figure.get_layout_engine().set(  # type: ignore[union-attr]
         rect=(0, 0.025, 1, 0.975),

@@ -68,6 +68,16 @@ def test_samples(monkeypatch: pytest.MonkeyPatch) -> None:
     assert any(text.get_text() == CAUTION for text in figure.texts)
 
 
+def test_a_title_is_not_cut(monkeypatch: pytest.MonkeyPatch) -> None:
+    table = samples()
+    table["status"][:1] = "failed"
+    title = draw(table, INPUTS, Goal(limit=1e-3), monkeypatch).texts[0]
+    assert "1 more failed" in title.get_text()
+    extent = title.get_window_extent()
+    assert extent.x0 >= 0.0
+    assert extent.x1 <= title.get_figure(root=True).bbox.width
+
+
 def test_one_at_a_time(monkeypatch: pytest.MonkeyPatch) -> None:
     table = {
         "id": np.arange(1, 4),
