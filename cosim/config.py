@@ -71,12 +71,13 @@ class Quantity:
         UnitError
             If it lies outside of them.
         """
+        unit = "" if self.unit == "1" else f" {self.unit}"
         if self.least is not None and number < self.least:
-            raise UnitError(f"wanted at least {self.least:g} {self.unit}, got {written}")
+            raise UnitError(f"wanted at least {self.least:g}{unit}, got {written}")
         if self.most is not None and number > self.most:
-            raise UnitError(f"wanted at most {self.most:g} {self.unit}, got {written}")
+            raise UnitError(f"wanted at most {self.most:g}{unit}, got {written}")
         if self.above is not None and number <= self.above:
-            raise UnitError(f"wanted more than {self.above:g} {self.unit}, got {written}")
+            raise UnitError(f"wanted more than {self.above:g}{unit}, got {written}")
 
     def __get_pydantic_core_schema__(
         self, source: object, handler: GetCoreSchemaHandler

@@ -185,7 +185,8 @@ def test_a_number_that_can_go_one_way_only_is_said(tmp_path: Path) -> None:
         ({"tolerances": {"qubit.t1": "1 Hz"}}, "'qubit.t1': wanted a time"),
         ({"tolerances": {"qubit.frequency": "-1 Hz"}}, "wanted more than zero"),
         ({"keys": ["qubit.t1"]}, "'qubit.t1' has no value"),
-        ({"tolerance": 0.0}, "wanted more than 0"),
+        ({"tolerance": 0.0}, "wanted more than 0, got 0.0"),
+        ({"tolerance": 0.9}, "wanted at most 0.5, got 0.9"),
         ({"tolerence": 0.01}, "unknown key 'tolerence'.*tolerance"),
         ({"skip": ["netlist", "qubit", "drive"]}, "no number is left"),
         (
