@@ -175,6 +175,23 @@ def test_a_number_that_can_go_one_way_only_is_said(tmp_path: Path) -> None:
     assert any("could not be moved on one side" in text for text in result.warnings)
 
 
+def test_a_derivative_is_not_bent_by_a_tolerance_that_goes_one_way_only(tmp_path: Path) -> None:
+    # T/(3 T1) again; T1 less 1.5 times itself is impossible, and the secant to the other side has
+    # 0.4 of the slope.
+    made = bench(
+        tmp_path,
+        sensitivity={"keys": ["qubit.t1"], "tolerances": {"qubit.t1": "150 us"}},
+        qubit={"t1": "100 us"},
+        accuracy={"floor": False},
+        **AT_BEST,
+    )
+    (item,) = run_sensitivity(made).items
+    assert math.isnan(item.cost_low)
+    # The next order is T/T1, and that of the difference the square of its relative step of 1.5 %.
+    assert item.first == pytest.approx(-24e-9 / (3 * 100e-6**2), rel=1e-3, abs=0.0)
+    assert item.second == pytest.approx(2 * 24e-9 / (3 * 100e-6**3), rel=2e-3, abs=0.0)
+
+
 @pytest.mark.parametrize(
     ("study", "message"),
     [
