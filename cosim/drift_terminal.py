@@ -64,7 +64,8 @@ def _number_table(result: DriftResult) -> Table:
     table = plain_table()
     bar = "" if math.isnan(result.numerical_floor) else f" ± {result.numerical_floor:.1e}"
     table.add_row("trimmed", f"{result.trimmed:.3e}{bar}")
-    table.add_row("right after a trim", f"{result.right_after:.3e}, with the trim's own errors")
+    if any(source.trim_error > 0.0 for source in result.sources):
+        table.add_row("right after a trim", f"{result.right_after:.3e}, with the trim's own errors")
     if not math.isnan(result.limit):
         table.add_row("limit of the mean", f"{result.limit:.3e}")
         for label, what, interval, lost in (
@@ -109,4 +110,5 @@ def _move(source: DriftSource) -> str:
     spread = f"± {format_value(float(f'{source.deviation:.3g}'), source.unit)}"
     if source.shift == 0.0:
         return spread
-    return f"{format_value(float(f'{source.shift:.3g}'), source.unit)} {spread}"
+    shift = format_value(float(f"{source.shift:.3g}"), source.unit)
+    return f"{shift} {spread}" if source.deviation > 0.0 else shift

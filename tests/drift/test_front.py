@@ -50,7 +50,7 @@ def source(name: str, size: float) -> DriftSource:
         name=name,
         keys=("drive.attenuation", "netlist.parameters.leakage_i"),
         unit="K",
-        trim_error=0.0,
+        trim_error=0.05,
         shift=0.247,
         deviation=1.03,
         cost=size,
@@ -121,6 +121,15 @@ def test_the_table_fits_a_terminal_and_says_what_matters() -> None:
     )
     assert "nan" not in printed(nothing)
     assert "trim every" not in printed(nothing)
+
+
+def test_only_what_a_trim_and_a_source_have_is_told() -> None:
+    steady = replace(source("rack", 2e-5), trim_error=0.0, deviation=0.0)
+    text = printed(made(sources=(steady,)))
+    assert "trim's own errors" not in text
+    assert "0.247 K " in text
+    assert "0.247 K ±" not in text
+    assert "trim's own errors" in printed(made(sources=(replace(steady, trim_error=0.1),)))
 
 
 def test_long_times_are_told_in_long_units() -> None:
