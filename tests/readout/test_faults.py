@@ -48,7 +48,7 @@ BENT = LINEAR.replace("e1 amp 0 in 0 20", "b1 amp 0 v={20*1m*tanh(v(in)/1m)}")
         (
             {"resonator": {"photons": None, "power": "-20 dBm"}},
             LINEAR,
-            "photons into the resonator, wanted at most 1e+06",
+            "photons into the resonator, wanted at most 4e+06",
         ),
         (
             {
