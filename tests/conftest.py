@@ -18,10 +18,20 @@ BenchMaker = Callable[..., Testbench]
 # Hundreds of CPU seconds in one file; a process that starts one of these last works on alone.
 LONGEST = ("tests/examples/", "tests/kit/")
 
+# Where the quick part starts ngspice, half of its time otherwise: the simulator's own tests, and
+# those of the commands from end to end.
+SIMULATING = ("tests/circuit/", "tests/test_")
+
 
 def pytest_collection_modifyitems(items: list[pytest.Item]) -> None:
-    """Begin with the files that take longest, so that all processes end at about one time."""
+    """Begin with the files that take longest, so that all processes end at about one time.
+
+    Of chains and studies the tests that start ngspice belong to the whole suite.
+    """
     long = {item.path for item in items if item.get_closest_marker("full")}
+    for item in items:
+        if item.get_closest_marker("ngspice") and not item.nodeid.startswith(SIMULATING):
+            item.add_marker(pytest.mark.full)
     items.sort(key=lambda item: (not item.nodeid.startswith(LONGEST), item.path not in long))
 
 

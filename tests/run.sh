@@ -1,5 +1,5 @@
 #!/usr/bin/env bash
-# Installs what is missing and runs all tests, some ten minutes; with "quick" two to three of them.
+# Installs what is missing and runs all tests, some thirteen minutes; with "quick" two of them.
 # Further words go to pytest. The whole suite, run without further words, writes VALIDATION.md.
 set -euo pipefail
 cd "$(dirname "$0")/.."

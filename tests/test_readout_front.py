@@ -333,6 +333,7 @@ class TestArchive:
 
 
 class TestFigure:
+    @pytest.mark.full
     @pytest.mark.parametrize("name", ["result", "sensor"])
     def test_it_is_drawn(self, name: str, request: pytest.FixtureRequest, tmp_path: Path) -> None:
         plot_readout(request.getfixturevalue(name), tmp_path / "a.png")
@@ -350,6 +351,7 @@ class TestFigure:
         plot_readout(helps, tmp_path / "a.pdf")
         assert (tmp_path / "a.pdf").read_bytes().startswith(b"%PDF")
 
+    @pytest.mark.full
     def test_extremes_are_drawn_without_complaint(
         self, result: ReadoutResult, tmp_path: Path
     ) -> None:

@@ -139,6 +139,7 @@ def test_one_imperfection_is_found_and_costed(made: Made) -> None:
     assert result.items[0].name in (made.name, "counter-rotating wave")
 
 
+@pytest.mark.full
 def test_costs_in_closed_form(validate: Validate) -> None:
     """Amplitude, phase and duration of a half turn and of a quarter turn."""
     algebra = sources.ALGEBRA
@@ -162,6 +163,7 @@ def test_costs_in_closed_form(validate: Validate) -> None:
         )
 
 
+@pytest.mark.full
 def test_errors_about_one_axis_add_and_orthogonal_ones_do_not(validate: Validate) -> None:
     """Two error angles of 10 mrad: length and amplitude about x, phase about z."""
     delta = 0.01

@@ -18,6 +18,7 @@ HEADERS = st.dictionaries(st.text(max_size=8), st.integers() | st.text(max_size=
 FRAMES = st.lists(st.tuples(HEADERS, st.binary(max_size=200)), max_size=6)
 
 
+@pytest.mark.full
 @settings(derandomize=True, deadline=None, max_examples=40)
 @given(frames=FRAMES, cuts=st.lists(st.integers(1, 60), min_size=1, max_size=20))
 def test_frames_survive_any_cutting(

@@ -137,6 +137,7 @@ def test_long_times_are_told_in_long_units() -> None:
     assert [format_time(value) for value in values] == ["10 µs", "59 s", "1.5 min", "2 h", "2 day"]
 
 
+@pytest.mark.full
 def test_the_figure_draws_with_and_without_a_limit(tmp_path: Path) -> None:
     plot_drift(made(), tmp_path / "a.png")
     assert imread(tmp_path / "a.png").shape[:2] == (690, 1440)

@@ -96,6 +96,7 @@ def test_the_offset_alone() -> None:
     assert 1 - found.frame.average_gate_fidelity < 1e-9
 
 
+@pytest.mark.full
 def test_a_quarter_turn_stays_at_resonance() -> None:
     """Scale and offset do the same to it when Z is free: the pair next to resonance is told."""
     found = calibrate_pulse(

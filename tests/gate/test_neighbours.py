@@ -77,6 +77,7 @@ def test_a_detuned_neighbour_is_flipped_as_rabi_has_it(ratio: float, validate: V
     )
 
 
+@pytest.mark.full
 def test_a_far_neighbour_turns_by_the_stark_shift(validate: Validate) -> None:
     drive, pulse, _ = played(40 * DURATION)
     offset = 40 * RABI

@@ -92,6 +92,7 @@ def result(folder: Path) -> GateResult:
     return run(folder, BASE + NOISE + SPECTATOR)
 
 
+@pytest.mark.full
 def test_a_spectrum_adds_up_to_what_its_source_costs(result: GateResult) -> None:
     assert result.noise is not None
     lo, output, slow = result.noise.sources

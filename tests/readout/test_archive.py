@@ -50,6 +50,7 @@ def check_round_trip(result: cosim.ReadoutResult, path: Path) -> None:
             assert found == value, name
 
 
+@pytest.mark.full
 def test_a_sensor_without_photons_or_quanta_comes_back(tmp_path: Path) -> None:
     result = run(tmp_path, 3e-6, seeds=2, tunnel_time="100 ns")
     # What such a result is made of, so that the comparison is not one of empty fields.

@@ -96,6 +96,7 @@ def test_what_is_archived_is_what_was_found(tmp_path: Path) -> None:
     assert repr(specify_gate(remade).blocks) == repr(gate.blocks)
 
 
+@pytest.mark.full
 def test_a_readouts_specification_on_the_terminal(
     tmp_path: Path, monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str]
 ) -> None:

@@ -161,6 +161,7 @@ class TestSpecification:
         # Ring-up is what the steady state leaves out.
         assert found.block("noise").formula > 1.5 * found.block("noise").limit
 
+    @pytest.mark.full
     def test_all_at_their_limits_meet_the_target(self, whole: ReadoutSpecification) -> None:
         assert [block.name for block in whole.blocks] == [
             "noise",

@@ -248,6 +248,7 @@ def test_a_sample_is_made_again_by_the_command(failing: Path, qcosim: Cli) -> No
     assert qcosim("verify", failing, "--repeat", -1)[0] == 2
 
 
+@pytest.mark.full
 def test_shares_are_merged_by_the_command(tmp_path: Path, qcosim: Cli) -> None:
     toml, path = write_bench(tmp_path, LEVELS), tmp_path / "a.h5"
     for part in (1, 2):
